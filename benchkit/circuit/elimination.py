@@ -1,0 +1,229 @@
+"""Sparse elimination along a unit axis: one pivot order, worked out once, serves every unit of a batch.
+
+Strategy
+--------
+The matrices of all units share their structure. Each entry that is not always zero has a *slot*; the values of a slot
+for all units lie beside each other, so that one elimination step is one vector operation over the units, whatever
+interpreter overhead it has.
+
+* `Structure` lists the slots that a circuit fills.
+* `choose_order` picks the pivots on the values of a few units: the lowest Markowitz count (entries that could fill in)
+  among entries that are no smaller than a threshold times the largest in their column, in *each* of those units.
+* `Order` is the outcome as a fixed program of slots: which to divide, which products to take off which slots.
+
+An order can be bad for a unit whose values are unlike those that it was chosen on. That shows in the residual of the
+linear equations; the caller checks it and tries another order, then `solve_dense`.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+Array = NDArray[np.float64]
+Index = NDArray[np.intp]
+
+PIVOT_THRESHOLD = 1e-3
+"""Smallest pivot, as a share of the largest entry left in its column."""
+
+
+class Structure:
+    """Which entries of an n-by-n matrix can differ from zero.
+
+    Slots are numbered row by row.
+    """
+
+    def __init__(self, size: int, entries: set[tuple[int, int]]) -> None:
+        self.size = size
+        self.entries = sorted(entries)
+        self.slot = {entry: k for k, entry in enumerate(self.entries)}
+        self.rows: Index = np.array([i for i, _ in self.entries], dtype=np.intp)
+        self.columns: Index = np.array([j for _, j in self.entries], dtype=np.intp)
+        self.row_starts: Index = np.searchsorted(self.rows, np.arange(size)).astype(np.intp)
+
+    @property
+    def slots(self) -> int:
+        """Number of slots."""
+        return len(self.entries)
+
+
+@dataclass(frozen=True)
+class PivotStep:
+    """One step: the pivot's slot, its row, and per row below (slot, row, products to take off)."""
+
+    slot: int
+    row: int
+    column: int
+    below: tuple[tuple[int, int, tuple[tuple[int, int], ...]], ...]
+    right: tuple[tuple[int, int], ...]
+
+
+@dataclass(frozen=True)
+class Order:
+    """A pivot order and the program that follows from it; ``slots`` counts the fill-in too."""
+
+    steps: tuple[PivotStep, ...]
+    slots: int
+
+
+def choose_order(structure: Structure, values: Array) -> Order:
+    """Choose pivots on the matrices of a few units.
+
+    Parameters
+    ----------
+    values : array, shape (slots, samples)
+        The entries' values in the units to choose on.
+
+    Raises
+    ------
+    numpy.linalg.LinAlgError
+        When the structure itself is singular.
+    """
+    slot = dict(structure.slot)
+    work: dict[tuple[int, int], Array] = {
+        entry: values[k].astype(np.float64, copy=True) for entry, k in structure.slot.items()
+    }
+    row_columns: dict[int, set[int]] = {i: set() for i in range(structure.size)}
+    column_rows: dict[int, set[int]] = {j: set() for j in range(structure.size)}
+    for i, j in structure.entries:
+        row_columns[i].add(j)
+        column_rows[j].add(i)
+    steps = []
+    with np.errstate(all="ignore"):
+        while row_columns:
+            i, j = _best_pivot(work, row_columns, column_rows)
+            pivot = work[i, j]
+            others = sorted(row_columns[i] - {j})
+            below = []
+            for r in sorted(column_rows[j] - {i}):
+                factor = work.pop((r, j)) / pivot
+                products = []
+                for c in others:
+                    target = slot.setdefault((r, c), len(slot))
+                    product = factor * work[i, c]
+                    work[r, c] = work[r, c] - product if (r, c) in work else -product
+                    row_columns[r].add(c)
+                    column_rows[c].add(r)
+                    products.append((target, slot[i, c]))
+                row_columns[r].discard(j)
+                below.append((slot[r, j], r, tuple(products)))
+            steps.append(PivotStep(slot[i, j], i, j, tuple(below), tuple((slot[i, c], c) for c in others)))
+            for c in others:
+                column_rows[c].discard(i)
+                del work[i, c]
+            del row_columns[i]
+            del column_rows[j]
+    return Order(tuple(steps), len(slot))
+
+
+def _best_pivot(
+    work: dict[tuple[int, int], Array], row_columns: dict[int, set[int]], column_rows: dict[int, set[int]]
+) -> tuple[int, int]:
+    best: tuple[float, float, int, int] | None = None
+    weakest: tuple[float, int, int] | None = None
+    for j, rows in column_rows.items():
+        if not rows:
+            raise np.linalg.LinAlgError("structurally singular")
+        listed = sorted(rows)
+        magnitude = np.abs(np.array([work[i, j] for i in listed]))
+        largest = magnitude.max(axis=0)
+        share = np.where(largest > 0.0, magnitude / np.where(largest > 0.0, largest, 1.0), 0.0)
+        share = np.nan_to_num(share.min(axis=1))
+        for i, smallest in zip(listed, share.tolist(), strict=True):
+            if weakest is None or smallest > weakest[0]:
+                weakest = (smallest, i, j)
+            if smallest < PIVOT_THRESHOLD:
+                continue
+            count = (len(row_columns[i]) - 1) * (len(rows) - 1)
+            key = (float(count), -smallest, i, j)
+            if best is None or key < best:
+                best = key
+    if best is not None:
+        return best[2], best[3]
+    if weakest is None:
+        raise np.linalg.LinAlgError("structurally singular")
+    return weakest[1], weakest[2]
+
+
+class Factors:
+    """A batch of factored matrices, for one or more right-hand sides.
+
+    Parameters
+    ----------
+    values : array, shape (structure.slots, units)
+        Left untouched.
+    """
+
+    def __init__(self, order: Order, values: Array) -> None:
+        self._order = order
+        units = values.shape[1]
+        work = np.empty((order.slots, units))
+        work[: len(values)] = values
+        work[len(values) :] = 0.0
+        self._slots = slots = list(work)
+        scratch = np.empty(units)
+        multiply, subtract, divide = np.multiply, np.subtract, np.divide
+        self._inverse = inverse = np.empty((len(order.steps), units))
+        for step, inverted in zip(order.steps, inverse, strict=True):
+            divide(1.0, slots[step.slot], inverted)
+            for slot, _, products in step.below:
+                factor = slots[slot]
+                multiply(factor, inverted, factor)
+                for target, source in products:
+                    multiply(factor, slots[source], scratch)
+                    subtract(slots[target], scratch, slots[target])
+
+    def solve(self, right: Array) -> Array:
+        """Solve for one right-hand side of shape (size, units)."""
+        work = right.copy()
+        rows = list(work)
+        result = np.empty_like(work)
+        columns = list(result)
+        scratch = np.empty(work.shape[1])
+        multiply, subtract = np.multiply, np.subtract
+        slots = self._slots
+        for step in self._order.steps:
+            source = rows[step.row]
+            for slot, row, _ in step.below:
+                multiply(slots[slot], source, scratch)
+                subtract(rows[row], scratch, rows[row])
+        for step, inverted in zip(reversed(self._order.steps), self._inverse[::-1], strict=True):
+            value = rows[step.row]
+            for slot, column in step.right:
+                multiply(slots[slot], columns[column], scratch)
+                subtract(value, scratch, value)
+            multiply(value, inverted, columns[step.column])
+        return result
+
+
+def linear_residual(structure: Structure, values: Array, solution: Array, right: Array) -> tuple[Array, Array]:
+    """Residual of A x = b, as (b - A x, sum of the magnitudes in each row), both of shape (size, units)."""
+    products = solution[structure.columns]
+    products *= values
+    residual = right - np.add.reduceat(products, structure.row_starts, axis=0)
+    np.abs(products, out=products)
+    return residual, np.add.reduceat(products, structure.row_starts, axis=0) + np.abs(right)
+
+
+def solve_dense(structure: Structure, values: Array, right: Array) -> Array:
+    """Solve every unit's matrix by LAPACK, rows scaled; a unit whose matrix is singular comes back as not a number."""
+    units = values.shape[1]
+    matrix = np.zeros((units, structure.size, structure.size))
+    matrix[:, structure.rows, structure.columns] = values.T
+    scale = np.abs(matrix).max(axis=2)
+    scale[~(scale > 0.0)] = 1.0
+    matrix /= scale[:, :, None]
+    vector = (right.T / scale)[:, :, None]
+    usable = np.isfinite(matrix).all(axis=(1, 2)) & np.isfinite(vector).all(axis=(1, 2))
+    result = np.full((units, structure.size), np.nan)
+    try:
+        result[usable] = np.linalg.solve(matrix[usable], vector[usable])[:, :, 0]
+    except np.linalg.LinAlgError:
+        for unit in np.flatnonzero(usable):
+            try:
+                result[unit] = np.linalg.solve(matrix[unit], vector[unit])[:, 0]
+            except np.linalg.LinAlgError:
+                continue
+    return np.ascontiguousarray(result.T)

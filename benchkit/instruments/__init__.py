@@ -1,0 +1,1 @@
+"""Meters and supplies over VISA: the link, the profiles, the bench file.  It knows no amplifier."""

@@ -1,0 +1,1 @@
+"""Limits, verdicts and the named rules."""

@@ -1,0 +1,306 @@
+"""Judging a file of readings: each against the model's limits for its condition, then the rules that apply.
+
+The limits hold what the tolerances of the parts explain. The verdict over all is the worst of the readings, and of the
+rules with one exception: a rule that is undecided only because nobody measured certain resistors doesn't lower it. Such
+a rule is named with what would decide it, and the limits have already allowed for those tolerances.
+
+Which rules apply to readings without a procedure:
+
+- offset before load, where the output was read and the model expects the stage to regulate at that condition;
+- emitter symmetry and pair sharing, where the model expects a drop of at least a quarter of the target's (at the
+  least-bias end the output devices barely conduct, and their microvolts say nothing about symmetry);
+- feed symmetry, divider stiffness and spreader ratio, where their points were read;
+- quiescent target, where the readings say that the trimmer is at the target, in the state that the target is for.
+
+Suspects, the next point to probe and the faults that the readings could not show are not part of this table.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
+from typing import Any, Final
+
+from benchkit.judge.entries import Entry, parse_entries
+from benchkit.judge.limits import Limits
+from benchkit.judge.rule_base import RuleFacts, RuleResult
+from benchkit.judge.rule_currents import emitter_points
+from benchkit.judge.rules import RULES, evaluate_each
+from benchkit.judge.verdicts import Judgement, Verdict, judge_reading, worst
+from benchkit.measure.accuracy import STATED_DEFAULT, Accuracy
+from benchkit.measure.readings import Reading
+from benchkit.stage.conditions import Condition, Unpowered
+from benchkit.stage.design import Design, target_drop_v
+
+LEAST_SHARE_OF_TARGET: Final = 0.25
+"""Share of the target's emitter drop that the model must expect before rules compare emitter currents."""
+
+SOURCE: Final = "the model"
+
+
+@dataclass(frozen=True)
+class JudgedReading:
+    """One reading with its limits and what came of it.
+
+    Attributes
+    ----------
+    entry : Entry
+    limits : Limits or None
+        None where the model expects nothing (a.c. readings).
+    judgement : Judgement
+    """
+
+    entry: Entry
+    limits: Limits | None
+    judgement: Judgement
+
+
+@dataclass(frozen=True)
+class Table:
+    """A judged file of readings.
+
+    Attributes
+    ----------
+    readings : tuple of JudgedReading
+        In the file's order.
+    rules : tuple of RuleResult
+    accuracy : Accuracy
+        What was assumed of a meter where a reading said nothing.
+    assumed : int
+        How many readings it was assumed for.
+    """
+
+    readings: tuple[JudgedReading, ...]
+    rules: tuple[RuleResult, ...]
+    accuracy: Accuracy
+    assumed: int
+
+    @property
+    def verdict(self) -> Verdict:
+        """The verdict over all; see the top of this module."""
+        return overall([judged.judgement.verdict for judged in self.readings], self.rules)
+
+    def as_json(self) -> dict[str, Any]:
+        """Give the object that ``benchkit judge --json`` prints; what is no number is None."""
+        return {
+            "verdict": self.verdict,
+            "readings": [
+                {
+                    "point": judged.entry.reading.point,
+                    "value": _number(judged.entry.reading.value),
+                    "low": _number(judged.limits.low if judged.limits else None),
+                    "high": _number(judged.limits.high if judged.limits else None),
+                    "verdict": judged.judgement.verdict,
+                }
+                for judged in self.readings
+            ],
+            "rules": [
+                {
+                    "rule": result.rule,
+                    "value": _number(result.value),
+                    "limit": [_number(end) for end in result.limit]
+                    if isinstance(result.limit, tuple)
+                    else _number(result.limit),
+                    "verdict": result.verdict,
+                }
+                for result in self.rules
+            ],
+        }
+
+
+def overall(readings: Sequence[Verdict], rules: Sequence[RuleResult]) -> Verdict:
+    """Sum up readings and rules.
+
+    Parameters
+    ----------
+    readings : sequence of Verdict
+    rules : sequence of RuleResult
+        One that is undecided because of unmeasured parts, or for want of anything to judge, doesn't count.
+
+    Returns
+    -------
+    Verdict
+        Never "pass" without a reading.
+    """
+    counted = [result.verdict for result in rules if result.verdict != "undecided" or result.cause == "meter"]
+    return worst([*readings, *counted]) if readings else "undecided"
+
+
+def judge_readings(
+    design: Design,
+    text: str,
+    *,
+    accuracy: Accuracy | None = None,
+    units: int | None = None,
+    seed: int = 0,
+    file_name: str = "readings",
+) -> dict[str, Any]:
+    """Judge a file of readings; parameters and errors are those of `judge_table`.
+
+    Returns
+    -------
+    dict
+        ``{"verdict", "readings": [{"point", "value", "low", "high", "verdict"}], "rules": [{"rule", "value", "limit",
+        "verdict"}]}``, with plain finite numbers or None.
+    """
+    table = judge_table(design, text, accuracy=accuracy, units=units, seed=seed, file_name=file_name)
+    return table.as_json()
+
+
+def judge_table(
+    design: Design,
+    text: str,
+    *,
+    accuracy: Accuracy | None = None,
+    units: int | None = None,
+    seed: int = 0,
+    file_name: str = "readings",
+) -> Table:
+    """Judge a file of readings.
+
+    Parameters
+    ----------
+    design : Design
+    text : str
+        The file's text (`benchkit.judge.entries`).
+    accuracy : Accuracy, optional
+        Of the meter, for readings without an uncertainty; otherwise `STATED_DEFAULT`.
+    units : int, optional
+        How many units the limits are made from; otherwise the model's own number.
+    seed : int
+        Of the draws.
+    file_name : str
+        For messages.
+
+    Returns
+    -------
+    Table
+
+    Raises
+    ------
+    FileError
+        When the file is wrong.
+    ModelError
+        When the model has no trustworthy answer for one of its conditions.
+    """
+    meter = STATED_DEFAULT if accuracy is None else accuracy
+    entries = parse_entries(text, design, meter, file_name)
+    limits = _limits(design, entries, units, seed)
+    judged = []
+    for entry, found in zip(entries, limits, strict=True):
+        if found is None:
+            why = f"The model expects nothing in particular of {entry.reading.point}."
+            judgement = Judgement("undecided", 0.0, 0.0, None, None, why)
+        else:
+            judgement = judge_reading(entry.reading, found)
+        judged.append(JudgedReading(entry, found, judgement))
+    assumed = sum(entry.reading.meter == meter.name and not entry.reading.overload for entry in entries)
+    return Table(tuple(judged), tuple(_rules(design, judged)), meter, assumed)
+
+
+def _limits(design: Design, entries: Sequence[Entry], units: int | None, seed: int) -> list[Limits | None]:
+    """Ask the model once for each condition, with all points that were read under it."""
+    from benchkit.stage.expected import DEFAULT_UNITS, expected, expected_unpowered
+
+    many = DEFAULT_UNITS if units is None else units
+    groups: dict[Condition | Unpowered, list[Entry]] = {}
+    for entry in entries:
+        groups.setdefault(entry.condition, []).append(entry)
+    found: dict[tuple[object, str], Limits | None] = {}
+    for condition, members in groups.items():
+        names = list(dict.fromkeys(member.point.name for member in members if member.point.modelled))
+        if not names:
+            continue
+        if isinstance(condition, Condition):
+            answer = expected(design, condition, units=many, seed=seed, points=names)
+        else:
+            answer = expected_unpowered(
+                design, names, trimmer=condition.trimmer, units=many, seed=seed, ambient_c=condition.ambient_c
+            )
+        for one in answer.points:
+            found[condition, one.point] = limits_of(one)
+    return [found.get((entry.condition, entry.point.name)) for entry in entries]
+
+
+def limits_of(predicted: Any) -> Limits | None:
+    """Take the limits from a predicted point; None when both ends are missing or not finite.
+
+    Parameters
+    ----------
+    predicted : PointLimits
+        With ``point``, ``unit``, ``nominal``, ``low`` and ``high``.
+    """
+    low, high = _number(predicted.low), _number(predicted.high)
+    if low is None and high is None:
+        return None
+    return Limits(low, high, _number(predicted.nominal), predicted.unit, SOURCE)
+
+
+def _rules(design: Design, judged: Sequence[JudgedReading]) -> list[RuleResult]:
+    """Ask the rules that apply, condition by condition."""
+    cold = {
+        one.entry.point.name.removeprefix("ohm."): one.entry.reading
+        for one in judged
+        if one.entry.point.name.startswith("ohm.emitter.")
+    }
+    groups: dict[Condition, dict[str, JudgedReading]] = {}
+    for one in judged:
+        if isinstance(one.entry.condition, Condition):
+            groups.setdefault(one.entry.condition, {})[one.entry.point.name] = one
+    results: list[RuleResult] = []
+    for condition, members in groups.items():
+        readings: Mapping[str, Reading] = {name: one.entry.reading for name, one in members.items()}
+        facts = RuleFacts(
+            design=design,
+            readings=readings,
+            cold=cold,
+            limits={name: one.limits for name, one in members.items() if one.limits is not None},
+            positive_v=condition.positive_v,
+            negative_v=condition.negative_v,
+        )
+        for name in _applicable(design, condition, facts):
+            results.extend(evaluate_each(name, None, facts))
+    return results
+
+
+def _applicable(design: Design, condition: Condition, facts: RuleFacts) -> list[str]:
+    names = []
+    output = facts.limits.get("output")
+    rule = RULES["offset before load"]
+    number = rule.number_for(design)
+    if "output" in facts.readings and output is not None and number is not None:
+        rest = facts.rest_v
+        if (
+            output.low is not None
+            and output.high is not None
+            and rest - number <= output.low <= output.high <= rest + number
+        ):
+            names.append(rule.name)
+    drops = emitter_points(design)
+    biased = [
+        facts.limits[point].nominal is not None
+        and abs(facts.limits[point].nominal or 0.0) >= LEAST_SHARE_OF_TARGET * target_drop_v(design)
+        for point in drops
+        if point in facts.limits
+    ]
+    if all(point in facts.readings for point in drops) and biased and all(biased):
+        names.append("emitter symmetry")
+        if design.output.pairs > 1:
+            names.append("pair sharing")
+    resistors = design.feed.upper.kind == "resistor" and design.feed.lower.kind == "resistor"
+    if resistors and {"feed.upper", "feed.lower"} <= facts.readings.keys():
+        names.append("feed symmetry")
+    if {"spread.upper", "spread.lower"} <= facts.readings.keys():
+        names.append("divider stiffness")
+    if {"spread", "spread.lower"} <= facts.readings.keys():
+        names.append("spreader ratio")
+    at_target = condition.trimmer == "target" and condition.target_share == 1.0 and condition.when == design.target.when
+    if at_target and any(point in facts.readings for point in drops):
+        names.append("quiescent target")
+    return names
+
+
+def _number(value: float | None) -> float | None:
+    """A finite plain number, or None."""
+    return None if value is None or not math.isfinite(value) else float(value)

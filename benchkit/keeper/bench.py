@@ -1,0 +1,98 @@
+"""The keeper's instruments: made from the plain table that the screen sends, and owned from then on.
+
+Importing this module pulls in PyVISA's users and the profiles' checks; the keeper does so after it has said hello.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from typing import Any
+
+from benchkit.errors import InstrumentError
+from benchkit.instruments.link import Link
+from benchkit.instruments.lockfile import ResourceLock
+from benchkit.instruments.meter import Meter
+from benchkit.instruments.numbers import visible
+from benchkit.instruments.profile import meter_profile, supply_profile
+from benchkit.instruments.supply import Supply
+from benchkit.instruments.traffic import TrafficLog
+
+CLOSE_WAIT_S = 0.2
+"""How long the keeper waits for an owner thread to close its instrument, s."""
+
+
+class OwnedMeter:
+    """A meter with its lock.
+
+    Parameters
+    ----------
+    table : mapping
+        ``address``, ``profile`` (a table or a shipped name), optional ``serial``.
+    log : TrafficLog
+    """
+
+    def __init__(self, table: Mapping[str, Any], log: TrafficLog) -> None:
+        profile = meter_profile(table.get("profile", "scpi-meter"), "the meter's profile")
+        self.serial = str(table.get("serial") or "")
+        self.lock = ResourceLock(str(table["address"]))
+        try:
+            self.meter = Meter(Link("the meter", str(table["address"]), profile.link.settings(), log), profile)
+        except InstrumentError:
+            self.lock.release()
+            raise
+
+    def close(self) -> None:
+        """Let go of it."""
+        self.meter.close(CLOSE_WAIT_S)
+        self.lock.release()
+
+
+class OwnedSupply:
+    """A supply with its lock.
+
+    Parameters
+    ----------
+    table : mapping
+        ``address``, ``profile`` (a table or a shipped name), optional ``serial``.
+    log : TrafficLog
+    locked : bool
+        False to go ahead although another process has the lock: only for switching off.
+    """
+
+    def __init__(self, table: Mapping[str, Any], log: TrafficLog, *, locked: bool = True) -> None:
+        profile = supply_profile(table.get("profile", "scpi-supply"), "the supply's profile")
+        self.serial = str(table.get("serial") or "")
+        self.lock = ResourceLock(str(table["address"])) if locked else None
+        try:
+            self.supply = Supply(Link("the supply", str(table["address"]), profile.link.settings(), log), profile)
+        except InstrumentError:
+            if self.lock is not None:
+                self.lock.release()
+            raise
+
+    def close(self) -> None:
+        """Let go of it; this switches nothing."""
+        self.supply.close(CLOSE_WAIT_S)
+        if self.lock is not None:
+            self.lock.release()
+
+
+def demand_serial(label: str, name: str, serial: str) -> None:
+    """Refuse an instrument that is not the one that the bench file names.
+
+    Raises
+    ------
+    InstrumentError
+        ``refused`` when the third field of its name is not the pinned serial number.
+    """
+    if not serial:
+        return
+    fields = [part.strip() for part in name.split(",")]
+    found = fields[2] if len(fields) > 2 else ""
+    if found != serial:
+        raise InstrumentError(
+            "refused",
+            f"{label[0].upper()}{label[1:]} names itself {visible(name)}",
+            f"the serial number {serial!r} of the bench file",
+            "Connect the right one, or correct the bench file if it was exchanged",
+        )

@@ -1,0 +1,1 @@
+"""Readings, the accuracy of meters, and the uncertainty that follows from it."""

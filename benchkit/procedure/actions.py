@@ -1,0 +1,175 @@
+"""What a walk asks for: frozen actions, carried out by whoever runs it.
+
+An action never reports back by itself: what came of it arrives at the walk as an event.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Literal
+
+from benchkit.events import Event
+from benchkit.stage.conditions import Condition, Unpowered
+
+QuestionKind = Literal["tell", "confirm", "text", "hold", "probes", "decide", "trim", "by hand"]
+
+
+@dataclass(frozen=True, kw_only=True)
+class Choice:
+    """One answer that a question takes.
+
+    Parameters
+    ----------
+    value : str
+        The word that comes back: ``done``, ``yes``, ``no``, ``again``, ``go on``, ``make safe``, ``take``, ``end``.
+    label : str
+        What the screen says.
+    wants_reason : bool
+        The operator has to say why.
+    """
+
+    value: str
+    label: str
+    wants_reason: bool = False
+
+
+@dataclass(frozen=True, kw_only=True)
+class Question:
+    """Everything that a person needs in order to act and answer.
+
+    Parameters
+    ----------
+    item : str
+        The item that it belongs to.
+    kind : str
+        ``tell`` (read, then done), ``confirm`` (yes or no), ``text`` (type something), ``hold`` (type yes),
+        ``probes`` (place them, then done), ``decide`` (after a result that is no pass), ``trim`` (turn the screw, then
+        take), ``by hand`` (something that no instrument does: set the supply, switch off).
+    title, do, why, caution, expected, red, black : str
+        The words of the step; empty where there is nothing to say.
+    point : str
+        The test point, where there is one.
+    choices : tuple of Choice
+        The first is the usual one.
+    """
+
+    item: str
+    kind: QuestionKind
+    title: str
+    do: str
+    why: str = ""
+    caution: str = ""
+    expected: str = ""
+    point: str = ""
+    red: str = ""
+    black: str = ""
+    choices: tuple[Choice, ...] = ()
+
+
+@dataclass(frozen=True, kw_only=True)
+class Action:
+    """Base of all actions; `item` names the item that it serves."""
+
+    item: str
+
+
+@dataclass(frozen=True, kw_only=True)
+class Connect(Action):
+    """Find the instruments of the bench and prove who they are.  Answer: BenchFound or BenchMissing."""
+
+
+@dataclass(frozen=True, kw_only=True)
+class Ask(Action):
+    """Put a question to the operator.  Answer: Answered or Decided."""
+
+    question: Question
+
+
+@dataclass(frozen=True, kw_only=True)
+class Predict(Action):
+    """Compute the limits of one condition.  Answer: Predicted or PredictionRefused.
+
+    For an unpowered condition `points` lists all the points that the plan reads under it.
+    """
+
+    key: str
+    condition: Condition | Unpowered
+    points: tuple[str, ...]
+
+
+@dataclass(frozen=True, kw_only=True)
+class Read(Action):
+    """Take one reading.  Answer: ReadingTaken or ReadingMissed."""
+
+    point: str
+    function: str
+    unit: str
+    samples: int = 1
+    settle_s: float = 0.0
+
+
+@dataclass(frozen=True, kw_only=True)
+class SetSupply(Action):
+    """Set both rails and the limit, ramping from where they are.  Answer: SupplySet or SupplyRefused.
+
+    Parameters
+    ----------
+    positive_v, negative_v : float
+        Where the rails go; `negative_v` is zero or negative.
+    limit_a : float
+        Current limit of each rail.
+    ramp_s : float
+        How long the way takes at least; both rails move together.
+    trip_on_limit : bool
+        A rail that stays in its limit longer than `grace_s` trips.
+    """
+
+    positive_v: float
+    negative_v: float
+    limit_a: float
+    ramp_s: float = 0.0
+    trip_on_limit: bool = True
+    grace_s: float = 0.5
+
+
+@dataclass(frozen=True, kw_only=True)
+class SwitchOff(Action):
+    """Switch the supply off and confirm it.  Answer: OutputOff."""
+
+    reason: str
+
+
+@dataclass(frozen=True, kw_only=True)
+class Wait(Action):
+    """Let time pass under watch.  Answer: Waited."""
+
+    seconds: float
+    reason: str
+
+
+@dataclass(frozen=True, kw_only=True)
+class Trim(Action):
+    """Show the reading live while the screw is turned.  Answer: ReadingTaken or TrimEnded."""
+
+    question: Question
+    point: str
+    function: str
+    unit: str
+    target: float
+    low: float
+    high: float
+
+
+@dataclass(frozen=True, kw_only=True)
+class Evaluate(Action):
+    """Judge a named rule on the readings so far.  Answer: Judged."""
+
+    rule: str
+    number: float | None
+
+
+@dataclass(frozen=True, kw_only=True)
+class Write(Action):
+    """Put an event of the walk's own into the record.  It comes back as that event."""
+
+    event: Event

@@ -1,0 +1,523 @@
+"""A procedure and a design make a plan: a flat tuple of items, one reading or one act each.
+
+Rules
+-----
+* Test points with a capital word in them stand for all that the design has: ``emitter.upper.N`` for every pair,
+  ``PART.vbe`` for every transistor, ``ohm.spreader.ARM`` for the arm that holds the trimmer.  A point or a rule that
+  this design doesn't have is left out.
+* A hold point stands before every item that raises a voltage or the limit.  Where the file has none, it is put in.
+* ``clip`` becomes: off, time to discharge, both rails seen low at the unit, clip, hold point, power as before.
+* Rails, limit and trimmer are followed from item to item, so that each reading knows its condition.
+"""
+
+from __future__ import annotations
+
+import math
+import re
+from collections.abc import Iterator
+from dataclasses import dataclass, replace
+from typing import Literal
+
+from benchkit import quantities
+from benchkit.errors import FileError
+from benchkit.judge.limits import Limits
+from benchkit.procedure.file import MADE_SAFE, PairText, Procedure, Section, Step
+from benchkit.stage.conditions import Condition, Unpowered
+from benchkit.stage.design import Design, target_drop_v
+from benchkit.stage.expected import least_regulating_rails
+from benchkit.stage.points import Point, points_of
+
+ItemKind = Literal[
+    "connect", "tell", "confirm", "text", "hold", "measure", "rule", "supply", "limit check", "trim", "wait", "off"
+]
+
+RAIL_LOW_V = 1.0
+"""A rail below this (V) counts as low; common practice."""
+
+TYPICAL_VBE_V = 0.7
+"""Used only to size current limits, never to judge; common practice."""
+
+
+@dataclass(frozen=True, kw_only=True)
+class Item:
+    """One reading or one act of a plan.
+
+    Parameters
+    ----------
+    id : str
+        ``section.step`` with the point or part of the act behind it; unique in the plan.
+    section, section_title : str
+    kind : ItemKind
+    title, do, why, caution, expected : str
+        The words, with everything filled in.
+    point : Point or None
+        What is measured or trimmed.
+    condition : Condition or Unpowered or None
+        What the reading is taken under; None where limits are stated and nothing is predicted.
+    limits : Limits or None
+        Stated limits; None where they come from the model.
+    rule : str
+        Name of the rule, with `number`, as the ratio or volts that the rule wants.
+    may_go_on : bool
+        A result that is no pass can be overridden with a reason.
+    positive_v, negative_v, limit_a, ramp_s : float
+        For ``supply`` and ``limit check``.
+    seconds : float
+        For ``wait``.
+    samples : int
+    act : str
+        What a told item does to the bench: "short the leads", "connect the unit", "trimmer to least", or "".
+    trimmer_end : bool
+        This reading checks that the trimmer is at its least-bias end.
+    powered : bool
+        The supply is on while this item runs.
+    raises : bool
+        It raises a voltage or the limit.
+    resume : bool
+        A walk that was cut off while or after the unit had power goes on here.
+    """
+
+    id: str
+    section: str
+    section_title: str
+    kind: ItemKind
+    title: str
+    do: str
+    why: str = ""
+    caution: str = ""
+    expected: str = ""
+    point: Point | None = None
+    condition: Condition | Unpowered | None = None
+    limits: Limits | None = None
+    rule: str = ""
+    number: float | None = None
+    may_go_on: bool = True
+    positive_v: float = 0.0
+    negative_v: float = 0.0
+    limit_a: float = 0.0
+    ramp_s: float = 0.0
+    seconds: float = 0.0
+    samples: int = 1
+    act: str = ""
+    trimmer_end: bool = False
+    powered: bool = False
+    raises: bool = False
+    resume: bool = False
+
+
+@dataclass(frozen=True, kw_only=True)
+class Plan:
+    """The items of one walk, in order, and where its way out begins."""
+
+    items: tuple[Item, ...]
+    made_safe: int
+    resume: int
+
+    def __len__(self) -> int:
+        return len(self.items)
+
+
+def condition_key(condition: Condition | Unpowered) -> str:
+    """A readable name of a condition; equal conditions have equal names."""
+    if isinstance(condition, Unpowered):
+        return f"no power, trimmer {condition.trimmer}"
+    share = f" at {condition.target_share:.0%}" if condition.trimmer == "target" else ""
+    limit = "" if condition.limit_a is None else f", limit {quantities.show(condition.limit_a, 'A')}"
+    rails = f"{condition.positive_v:+.4g} V {condition.negative_v:+.4g} V"
+    return f"{rails}{limit}, trimmer {condition.trimmer}{share}, {condition.when}"
+
+
+def make_plan(procedure: Procedure, design: Design) -> Plan:
+    """Turn a procedure into the items for one design.
+
+    Raises
+    ------
+    FileError
+        When the procedure asks for something that the design can't give, such as a trim without a trimmer.
+    ModelError
+        When the model finds no rails at which the stage regulates.
+    """
+    items = tuple(_Planner(procedure, design).items())
+    made_safe = next(number for number, item in enumerate(items) if item.section == MADE_SAFE)
+    resume = next(number for number, item in enumerate(items) if item.resume)
+    return Plan(items=items, made_safe=made_safe, resume=resume)
+
+
+def supply_limit_a(design: Design, positive_v: float, negative_v: float, *, share: float) -> float:
+    """Current limit per rail (A) that leaves room for a healthy unit and for little else.
+
+    One and a half times the estimated draw of the rails plus 10 mA, rounded up to 5 mA: feed, driver resistors, what
+    else hangs on the rails, and `share` of the target current of every pair.  Common practice; it judges nothing.
+    """
+    span_v = positive_v - negative_v
+    draws = [_feed_a(design, span_v), _driver_a(design)]
+    others = [part.value for part in (design.rails.other_positive, design.rails.other_negative) if part is not None]
+    draws.append(max(others, default=0.0))
+    per_pair_a = target_drop_v(design) / design.output.emitter_resistor.value
+    draws.append(share * design.output.pairs * per_pair_a)
+    return math.ceil((1.5 * sum(draws) + 0.01) / 0.005 - 1e-9) * 0.005
+
+
+def discharge_s(design: Design, from_v: float, to_v: float = RAIL_LOW_V) -> float | None:
+    """Time (s) for a rail to fall through the bleed resistor, t = R·C·ln(V0/V); None without a bleed resistor."""
+    capacitance_f = (design.rails.reservoir_f or 0.0) + (design.rails.local_capacitors_f or 0.0)
+    if not capacitance_f or from_v <= to_v:
+        return 0.0
+    if design.rails.bleed is None:
+        return None
+    return design.rails.bleed.value * capacitance_f * math.log(from_v / to_v)
+
+
+def _feed_a(design: Design, span_v: float) -> float:
+    feed = design.feed.upper
+    if feed.kind == "source":
+        return feed.value.value * (1 + feed.value.fraction)
+    if feed.kind == "resistor":
+        return 0.5 * span_v / feed.value.value
+    return design.servo_max_a
+
+
+def _driver_a(design: Design) -> float:
+    output = design.output
+    draw_a = 0.0
+    for resistor in (output.driver_resistor, output.predriver_resistor):
+        if resistor is not None:
+            draw_a += 2.0 * TYPICAL_VBE_V / resistor.value
+    return draw_a
+
+
+class _Planner:
+    """Follows rails, limit, trimmer and warmth from step to step."""
+
+    def __init__(self, procedure: Procedure, design: Design) -> None:
+        self.procedure = procedure
+        self.design = design
+        self.points = {point.name: point for point in points_of(design)}
+        self.positive_v = self.negative_v = self.limit_a = 0.0
+        self.on = False
+        self.trimmer: Literal["least", "target", "unknown"] = "unknown"
+        self.share = 1.0
+        self.lowest = least_regulating_rails(design)
+        self.section: Section
+        self.ready_hold = False
+
+    def items(self) -> Iterator[Item]:
+        yield Item(
+            id="bench",
+            section=self.procedure.sections[0].name,
+            section_title=self.procedure.sections[0].title,
+            kind="connect",
+            title="Find the bench",
+            do="The instruments are being asked who they are.",
+            may_go_on=False,
+        )
+        for section in self.procedure.sections:
+            self.section = section
+            first = True
+            for step in section.step:
+                for item in self._step(step):
+                    yield replace(item, resume=section.resume and first)
+                    first = False
+                    self.ready_hold = item.kind == "hold"
+
+    def _step(self, step: Step) -> Iterator[Item]:
+        match step.kind:
+            case "tell" | "confirm" | "text" | "hold":
+                if step.act == "trimmer to least":
+                    self._need_trimmer(step)
+                    self.trimmer = "least"
+                yield self._item(step, step.kind, act=step.act or "")
+            case "measure":
+                yield from self._measure(step)
+            case "rule":
+                if self._rule_fits(step):
+                    yield self._item(step, "rule", rule=step.rule or "", number=self._number(step))
+            case "supply":
+                yield from self._supply(step)
+            case "limit check":
+                yield from self._limit_check(step)
+            case "trim":
+                yield from self._trim(step)
+            case "wait":
+                yield self._item(step, "wait", seconds=quantities.parse(step.seconds or "", "s"))
+            case "clip":
+                yield from self._clip(step)
+            case "off":
+                self._off()
+                yield self._item(step, "off")
+
+    def _item(self, step: Step, kind: ItemKind, suffix: str = "", **more: object) -> Item:
+        words = self._words(more)
+        item = Item(
+            id=f"{self.section.name}.{step.name}{suffix}",
+            section=self.section.name,
+            section_title=self.section.title,
+            kind=kind,
+            title=_fill(step.title, words),
+            do=_fill(step.do, words),
+            why=_fill(step.why, words),
+            caution=_fill(step.caution, words),
+            expected=_fill(step.expected, words),
+            may_go_on=step.override,
+            powered=self.on,
+        )
+        return replace(item, **more)  # type: ignore[arg-type]
+
+    def _measure(self, step: Step) -> Iterator[Item]:
+        for name in step.points:
+            for point in self._expand(name):
+                yield self._reading(step, point)
+
+    def _reading(self, step: Step, point: Point) -> Item:
+        limits: Limits | None = None
+        condition: Condition | Unpowered | None = None
+        if isinstance(step.limits, PairText):
+            low = None if step.limits.low is None else quantities.parse(step.limits.low, point.unit)
+            high = None if step.limits.high is None else quantities.parse(step.limits.high, point.unit)
+            limits = Limits(low, high, None, point.unit, "stated in the procedure")
+        elif step.limits == "the target":
+            limits = self._target_limits(1.0, None)
+        elif point.powered:
+            condition = Condition(
+                positive_v=self.positive_v,
+                negative_v=self.negative_v,
+                limit_a=self.limit_a,
+                trimmer=self.trimmer,
+                target_share=self.share if self.trimmer == "target" else 1.0,
+                when=step.when or "cold",
+            )
+            if not self.on:
+                raise self._refuse(step, f"reads {point.name} against the model while the supply is off")
+        else:
+            if self.on:
+                raise self._refuse(step, f"reads {point.name} while the supply is on")
+            condition = Unpowered(point=point.name, trimmer=self.trimmer)
+        return self._item(
+            step,
+            "measure",
+            f".{point.name}",
+            title=f"{_fill(step.title, self._words({}))}: {point.name}",
+            point=point,
+            condition=condition,
+            limits=limits,
+            samples=step.samples,
+            trimmer_end=not point.powered and "ARM" in " ".join(step.points),
+        )
+
+    def _supply(self, step: Step) -> Iterator[Item]:
+        positive_v, negative_v = self._rails(step)
+        limit_a = self._limit(step, positive_v, negative_v)
+        if self.on and (positive_v, negative_v) == (self.positive_v, self.negative_v) and limit_a == self.limit_a:
+            return
+        if self.on and positive_v < self.positive_v:
+            return  # the lowest rails at which this stage regulates are above this step already
+        yield from self._power(step, "", positive_v, negative_v, limit_a, quantities.parse(step.ramp or "1 s", "s"))
+
+    def _power(
+        self, step: Step, suffix: str, positive_v: float, negative_v: float, limit_a: float, ramp_s: float
+    ) -> Iterator[Item]:
+        raises = not self.on or positive_v > self.positive_v or negative_v < self.negative_v or limit_a > self.limit_a
+        words = {"positive_v": positive_v, "negative_v": negative_v, "limit_a": limit_a}
+        if raises and not self.ready_hold:
+            rails = _rails_text(positive_v, negative_v)
+            yield self._item(
+                step,
+                "hold",
+                f"{suffix}.hold",
+                title=f"Go to {rails}?" if suffix == "" else f"Power on again, {rails}?",
+                do=f"Rails {rails}, limit {quantities.show(limit_a, 'A')}. Hands off the circuit; watch the current.",
+                why="Voltage and limit rise only after a plain yes.",
+            )
+        capacitance_f = (self.design.rails.reservoir_f or 0.0) + (self.design.rails.local_capacitors_f or 0.0)
+        rise_v = max(positive_v - (self.positive_v if self.on else 0.0), 0.0)
+        charging_s = capacitance_f * rise_v / (0.3 * limit_a)
+        self.positive_v, self.negative_v, self.limit_a, self.on = positive_v, negative_v, limit_a, True
+        yield self._item(
+            step,
+            "supply",
+            f"{suffix}.power" if suffix else "",
+            ramp_s=max(ramp_s, charging_s),
+            raises=raises,
+            may_go_on=False,
+            **words,
+        )
+
+    def _limit_check(self, step: Step) -> Iterator[Item]:
+        positive_v, negative_v = self._rails(step)
+        limit_a = self._limit(step, *self.lowest)
+        words: dict[str, object] = {"positive_v": positive_v, "negative_v": negative_v, "limit_a": limit_a}
+        yield self._item(
+            step, "hold", ".hold", title="Try the limit?", why="Current flows into the short from here.", **words
+        )
+        limits = Limits(0.9 * limit_a, 1.1 * limit_a, limit_a, "A", "the limit that was set, ±10 % (common practice)")
+        yield self._item(step, "limit check", "", limits=limits, raises=True, may_go_on=False, powered=True, **words)
+        yield self._item(
+            step, "off", ".off", title="Supply off again", do="The supply is switched off before the unit is connected."
+        )
+
+    def _trim(self, step: Step) -> Iterator[Item]:
+        self._need_trimmer(step)
+        if not self.on:
+            raise self._refuse(step, "trims while the supply is off")
+        share = quantities.parse(step.share or "100 %", "%") / 100.0
+        tolerance = None if step.tolerance is None else quantities.parse(step.tolerance, "%") / 100.0
+        for name in step.points:
+            for point in self._expand(name):
+                yield self._item(
+                    step,
+                    "trim",
+                    f".{point.name}",
+                    point=point,
+                    limits=self._target_limits(share, tolerance),
+                    samples=step.samples,
+                )
+        self.trimmer, self.share = "target", share
+
+    def _clip(self, step: Step) -> Iterator[Item]:
+        back = (self.positive_v, self.negative_v, self.limit_a)
+        was_on = self.on
+        (point,) = self._expand(step.points[0])
+        if was_on:
+            self._off()
+            yield self._item(
+                step, "off", ".off", title="Power off for the clips", do="The supply is switched off and read back."
+            )
+            seconds = discharge_s(self.design, back[0])
+            yield self._item(
+                step,
+                "wait",
+                ".discharge",
+                title="Let the rails fall",
+                do=f"Hands off. Expected time to {RAIL_LOW_V:g} V: {_time_text(seconds)}.",
+                seconds=max(5.0, min(300.0, 30.0 if seconds is None else 1.2 * seconds)),
+            )
+            for name in ("rail+", "rail-"):
+                yield self._item(
+                    step,
+                    "measure",
+                    f".{name}",
+                    title=f"Rail seen low at the unit: {name}",
+                    do="One tip on the rail at the unit's own capacitors, the other on 0 V.",
+                    why="Nobody touches the circuit before both rails have been seen low.",
+                    point=self.points[name],
+                    limits=Limits(-RAIL_LOW_V, RAIL_LOW_V, None, "V", "common practice"),
+                    may_go_on=False,
+                )
+        yield self._item(step, "tell", ".clip", point=point)
+        if was_on:
+            self.ready_hold = False
+            yield from self._power(step, ".again", *back, ramp_s=3.0)
+
+    def _off(self) -> None:
+        self.on = False
+
+    def _expand(self, name: str) -> tuple[Point, ...]:
+        trimmer = self.design.spreader.trimmer
+        if "ARM" in name:
+            arm = "lower" if trimmer is None or trimmer.arm == "between" else trimmer.arm
+            name = name.replace("ARM", arm)
+        if "N" not in name and "PART" not in name:
+            return (self.points[name],) if name in self.points else ()
+        pattern = re.escape(name).replace("PART", r"[a-z.0-9]+").replace("N", r"\d+")
+        return tuple(point for point in self.points.values() if re.fullmatch(pattern, point.name))
+
+    def _rule_fits(self, step: Step) -> bool:
+        if step.rule == "feed symmetry":
+            return "feed.upper" in self.points and "feed.lower" in self.points
+        if step.rule == "fail-safe trimmer":
+            return self.design.spreader.trimmer is not None
+        return True
+
+    def _number(self, step: Step) -> float | None:
+        if step.number is None:
+            return None
+        for unit, scale in (("%", 0.01), ("V", 1.0)):
+            if step.number.rstrip().endswith(unit):
+                return quantities.parse(step.number, unit) * scale
+        try:
+            return float(step.number)
+        except ValueError:
+            raise self._refuse(step, f"has the number {step.number!r}") from None
+
+    def _rails(self, step: Step) -> tuple[float, float]:
+        rails = self.design.rails
+        text = (step.rails or "").strip()
+        if text == "lowest":
+            return self.lowest
+        if text == "full":
+            return rails.positive_v, rails.negative_v
+        if text.endswith("%"):
+            share = quantities.parse(text, "%") / 100.0
+            return share * rails.positive_v, share * rails.negative_v
+        volts = quantities.parse(text, "V")
+        return volts, -volts if rails.negative_v else 0.0
+
+    def _limit(self, step: Step, positive_v: float, negative_v: float) -> float:
+        full = self.design.rails
+        if step.limit == "for least bias":
+            return supply_limit_a(self.design, full.positive_v, full.negative_v, share=0.0)
+        if step.limit == "for the target":
+            return supply_limit_a(self.design, positive_v, negative_v, share=1.0)
+        return quantities.parse(step.limit or "", "A")
+
+    def _target_limits(self, share: float, tolerance: float | None) -> Limits:
+        nominal_v = share * target_drop_v(self.design)
+        width = self.design.target.tolerance if tolerance is None else tolerance
+        source = "the target of the design" if share == 1.0 else f"{share:.0%} of the target"
+        return Limits(nominal_v * (1 - width), nominal_v * (1 + width), nominal_v, "V", source)
+
+    def _need_trimmer(self, step: Step) -> None:
+        if self.design.spreader.trimmer is None:
+            raise self._refuse(step, f"turns a trimmer, and {self.design.name} has none")
+
+    def _refuse(self, step: Step, came: str) -> FileError:
+        return FileError(self.procedure.file, f"section {self.section.name}, step {step.name}", came)
+
+    def _words(self, more: dict[str, object] | object) -> dict[str, str]:
+        given = more if isinstance(more, dict) else {}
+        trimmer = self.design.spreader.trimmer
+        positive_v = float(given.get("positive_v", self.positive_v or self.lowest[0]))
+        negative_v = float(given.get("negative_v", self.negative_v or self.lowest[1]))
+        full = self.design.rails
+        limit_a = float(given.get("limit_a", self.limit_a)) or supply_limit_a(
+            self.design, full.positive_v, full.negative_v, share=0.0
+        )
+        target_v = target_drop_v(self.design)
+        words = {
+            "design": self.design.name,
+            "limit": quantities.show(limit_a, "A"),
+            "rails": _rails_text(positive_v, negative_v),
+            "target": f"{quantities.show(target_v, 'V')} ± {self.design.target.tolerance:.0%}",
+            "discharge_time": _time_text(discharge_s(self.design, full.positive_v)),
+            "turns": "",
+            "arm": "",
+            "more_bias_way": "",
+            "less_bias_way": "",
+        }
+        if trimmer is not None:
+            ways = ("clockwise", "anticlockwise")
+            words["turns"] = f"{trimmer.turns:g}"
+            words["arm"] = "lower and upper" if trimmer.arm == "between" else trimmer.arm
+            words["more_bias_way"] = trimmer.raises_bias
+            words["less_bias_way"] = ways[1 - ways.index(trimmer.raises_bias)]
+        return words
+
+
+def _fill(text: str, words: dict[str, str]) -> str:
+    for word, value in words.items():
+        text = text.replace("{" + word + "}", value)
+    return text
+
+
+def _rails_text(positive_v: float, negative_v: float) -> str:
+    if negative_v == 0.0:
+        return f"{quantities.show(positive_v, 'V')}"
+    if math.isclose(positive_v, -negative_v):
+        return f"±{quantities.show(positive_v, 'V')}"
+    return f"{quantities.show(positive_v, 'V')} and {quantities.show(negative_v, 'V')}"
+
+
+def _time_text(seconds: float | None) -> str:
+    if seconds is None:
+        return "not known (the design names no bleed resistor)"
+    return "at once" if seconds < 0.5 else f"{seconds:.0f} s" if seconds < 120 else f"{seconds / 60:.1f} min"

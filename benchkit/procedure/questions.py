@@ -1,0 +1,133 @@
+"""The words of a walk: which question an item puts, with which answers."""
+
+from __future__ import annotations
+
+from benchkit import quantities
+from benchkit.events import Judged, PointLimits
+from benchkit.judge.limits import Limits
+from benchkit.procedure.actions import Choice, Question
+from benchkit.procedure.plan import Item
+
+DONE = Choice(value="done", label="Done")
+YES = Choice(value="yes", label="Yes")
+NO = Choice(value="no", label="No")
+AGAIN = Choice(value="again", label="Again")
+GO_ON = Choice(value="go on", label="Note a reason and go on", wants_reason=True)
+STOP = Choice(value="make safe", label="Make safe and stop")
+TAKE = Choice(value="take", label="Take this reading")
+END = Choice(value="end", label="It can't be reached")
+
+
+def question_for(item: Item) -> Question:
+    """The question of an item that is told, confirmed, typed or held."""
+    choices = {
+        "tell": (DONE, STOP),
+        "confirm": (YES, NO, STOP),
+        "text": (DONE, STOP),
+        "hold": (YES, STOP),
+    }[item.kind]
+    point = item.point
+    return Question(
+        item=item.id,
+        kind=item.kind,  # type: ignore[arg-type]
+        title=item.title,
+        do=item.do,
+        why=item.why,
+        caution=item.caution,
+        expected=item.expected,
+        point="" if point is None else point.name,
+        red="" if point is None else point.red,
+        black="" if point is None else point.black,
+        choices=choices,
+    )
+
+
+def placing(item: Item, limits: Limits) -> Question:
+    """Where the probes go for a reading, and what it should be."""
+    assert item.point is not None
+    return Question(
+        item=item.id,
+        kind="probes",
+        title=item.title,
+        do=item.do,
+        why=item.why,
+        caution=item.caution,
+        expected=expected_text(limits),
+        point=item.point.name,
+        red=item.point.red,
+        black=item.point.black,
+        choices=(DONE, STOP),
+    )
+
+
+def trimming(item: Item) -> Question:
+    """The question that stands while the screw is turned."""
+    assert item.point is not None
+    assert item.limits is not None
+    return Question(
+        item=item.id,
+        kind="trim",
+        title=item.title,
+        do=item.do,
+        why=item.why,
+        caution=item.caution,
+        expected=expected_text(item.limits),
+        point=item.point.name,
+        red=item.point.red,
+        black=item.point.black,
+        choices=(TAKE, END, STOP),
+    )
+
+
+def deciding(item: Item, result: Judged | None, problem: str, *, way_out: bool) -> Question:
+    """What to do after a result that is no pass, or none at all."""
+    if result is not None:
+        said = {"fail": "failed", "undecided": "is undecided", "pass": "passed"}[result.verdict]
+        what = f"{item.title} {said}."
+        why = result.why
+    else:
+        what, why = f"{item.title}: there is no result.", problem
+    choices = [AGAIN]
+    if item.may_go_on or way_out:
+        choices.append(GO_ON)
+    if not way_out:
+        choices.append(STOP)
+    caution = "" if item.may_go_on or way_out else "There is no way past this result but a better one."
+    return Question(
+        item=item.id,
+        kind="decide",
+        title=what,
+        do=why,
+        why=item.why,
+        caution=caution,
+        point="" if item.point is None else item.point.name,
+        red="" if item.point is None else item.point.red,
+        black="" if item.point is None else item.point.black,
+        choices=tuple(choices),
+    )
+
+
+def by_hand_off(item: Item, how: str) -> Question:
+    """Ask a person to do what could not be confirmed."""
+    return Question(
+        item=item.id,
+        kind="by hand",
+        title="Output state unknown: switch it off by hand",
+        do=f"{how} Switch the supply off by hand at its own switch, and pull its plug from the unit.",
+        why="Nothing that benchkit knows says that the output is off.",
+        caution="Treat the unit as live until both rails have been seen low.",
+        choices=(DONE,),
+    )
+
+
+def expected_text(limits: Limits) -> str:
+    """What a reading should be, in one line."""
+    text = str(limits)
+    if limits.nominal is not None:
+        text += f", nominal {quantities.show(limits.nominal, limits.unit)}"
+    return f"{text} ({limits.source})"
+
+
+def model_limits(limits: PointLimits, condition: str) -> Limits:
+    """Limits from a prediction."""
+    return Limits(limits.low, limits.high, limits.nominal, limits.unit, f"the model: {condition}")

@@ -1,0 +1,116 @@
+"""Where a walk stands: a frozen picture, made anew by every event."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+from typing import Literal
+
+from benchkit.events import Closed, Judged, PointLimits, SupplyState, WalkOpened
+from benchkit.measure.readings import Reading
+
+Phase = Literal[
+    "unopened",
+    "connecting",
+    "asking",
+    "predicting",
+    "placing",
+    "reading",
+    "judging",
+    "deciding",
+    "setting",
+    "waiting",
+    "trimming",
+    "switching off",
+    "by hand off",
+    "securing",
+    "closing",
+    "closed",
+]
+
+PHASES: tuple[Phase, ...] = Phase.__args__  # type: ignore[attr-defined]
+
+POWERED_PHASES = frozenset({"asking", "predicting", "placing", "reading", "judging", "deciding", "setting", "waiting",
+                            "trimming"})  # fmt: skip
+"""Phases in which the supply may be on."""
+
+
+@dataclass(frozen=True, kw_only=True)
+class State:
+    """Where a walk stands.
+
+    Parameters
+    ----------
+    phase : Phase
+    index : int
+        The item of the plan that is being done.
+    count : int
+        Events so far, which is the number of lines in the record.
+    since_s : float
+        When the phase began, in the session's time.
+    opened : WalkOpened or None
+    meter, supply_name : str
+        As the instruments named themselves.
+    limits : mapping
+        Condition's name to point's name to limits.
+    readings : mapping
+        Item's id to its latest reading.
+    results : tuple of Judged
+        The standing result of each item, in the order in which they came; a repetition replaces the earlier one.
+    attempts : mapping
+        Item's id to the number of results that it has had.
+    overrides : mapping
+        Item's id to the reason with which a result was passed over.
+    before : frozenset of str
+        Items whose results are from before the walk was resumed.
+    probes : str
+        The test point on which the probes are, "" when not known.
+    energised : {"off", "on", "unknown"}
+    supply : SupplyState or None
+        The last that was heard of it.
+    highest_v : float
+        The highest rail (V) that a supply reading has shown so far.
+    stopped : str
+        Why the walk is on its way out, "" when it isn't.
+    stopped_at : str
+        The item at which that happened.
+    stop_status : int
+        The exit status that the stop leads to; 0 while nothing has stopped the walk.
+    ever_on : bool
+        The supply has been on in this walk, or nobody knows.
+    unconfirmed : bool
+        The last "off" could not be confirmed, and nobody has said since that it is off by hand.
+    closed : Closed or None
+        The last event of a finished walk.
+    note : str
+        A sentence for the screen about the last thing that happened.
+    """
+
+    phase: Phase = "unopened"
+    index: int = 0
+    count: int = 0
+    since_s: float = 0.0
+    opened: WalkOpened | None = None
+    meter: str = ""
+    supply_name: str = ""
+    limits: Mapping[str, Mapping[str, PointLimits]] = field(default_factory=dict)
+    readings: Mapping[str, Reading] = field(default_factory=dict)
+    results: tuple[Judged, ...] = ()
+    attempts: Mapping[str, int] = field(default_factory=dict)
+    overrides: Mapping[str, str] = field(default_factory=dict)
+    before: frozenset[str] = frozenset()
+    probes: str = ""
+    energised: Literal["off", "on", "unknown"] = "off"
+    supply: SupplyState | None = None
+    highest_v: float = 0.0
+    stopped: str = ""
+    stopped_at: str = ""
+    stop_status: int = 0
+    ever_on: bool = False
+    unconfirmed: bool = False
+    closed: Closed | None = None
+    note: str = ""
+
+    def result(self, item: str) -> Judged | None:
+        """The standing result of an item."""
+        return next((result for result in self.results if result.item == item), None)

@@ -1,0 +1,102 @@
+"""The file name of a record, made from the unit's serial number.
+
+Rules
+-----
+* A serial number is whatever is typed or scanned: slashes, dots, control characters, 300 letters, the names that
+  Windows keeps for itself.  None of that reaches the file system: a name holds only ``a-z A-Z 0-9 -``, the suffix
+  aside, and never begins with a dash.
+* The readable part alone could make two units look like one (``A/1`` and ``A-1``, or ``a1`` and ``A1`` where the file
+  system doesn't tell them apart), so eight digits of the SHA-256 of the serial number follow it.  The same serial
+  number has the same beginning always.
+* Then the start of the walk in UTC, so that a folder lists a unit's walks in their order.
+* A name is at most ``LONGEST`` characters, far below what any file system in use allows.
+"""
+
+from __future__ import annotations
+
+import hashlib
+import re
+import unicodedata
+from datetime import UTC, datetime
+from pathlib import Path
+
+from benchkit.errors import FileError
+
+SUFFIX = ".jsonl"
+"""What the name of every record ends in."""
+
+READABLE = 40
+"""The most characters that the readable part has."""
+
+LONGEST = READABLE + len("-01234567-20260131T235959Z-999") + len(SUFFIX)
+"""The most characters that a whole name has."""
+
+_MOST_IN_ONE_SECOND = 999
+
+
+def slug(serial: str) -> str:
+    """Return the readable part of a name: letters without accents, digits, single dashes; ``unit`` if nothing is left.
+
+    It is not unique; see `unit_prefix`.
+    """
+    plain = unicodedata.normalize("NFKD", serial)
+    plain = "".join(letter for letter in plain if not unicodedata.combining(letter))
+    plain = re.sub(r"[^A-Za-z0-9]+", "-", plain).strip("-")
+    return plain[:READABLE].strip("-") or "unit"
+
+
+def unit_prefix(serial: str) -> str:
+    """Return what the names of all records of one unit begin with.
+
+    Parameters
+    ----------
+    serial : str
+        The serial number exactly as the record holds it; white space at its ends doesn't count.
+
+    Examples
+    --------
+    >>> unit_prefix("../T40 0017")
+    'T40-0017-a6ef3863'
+    """
+    serial = serial.strip()
+    digest = hashlib.sha256(serial.encode("utf-8", "surrogatepass")).hexdigest()[:8]
+    return f"{slug(serial)}-{digest}"
+
+
+def record_name(serial: str, begun: datetime) -> str:
+    """Return the file name of a walk on the unit `serial` that began at `begun`.
+
+    Raises
+    ------
+    ValueError
+        If `begun` has no time zone: a record's name never depends on where the computer stands.
+    """
+    if begun.tzinfo is None:
+        raise ValueError("the start of a walk needs a time zone")
+    return f"{unit_prefix(serial)}-{begun.astimezone(UTC):%Y%m%dT%H%M%SZ}{SUFFIX}"
+
+
+def free_path(folder: Path, serial: str, begun: datetime) -> Path:
+    """Return a path in `folder` for a new record that is not taken yet.
+
+    The folder need not exist.  Whoever creates the file has to do so exclusively; this only picks the name.
+
+    Raises
+    ------
+    FileError
+        If the folder holds 999 records of this unit from this very second.
+    """
+    first = folder / record_name(serial, begun)
+    if not first.exists():
+        return first
+    for number in range(2, _MOST_IN_ONE_SECOND + 1):
+        path = first.with_name(f"{first.name.removesuffix(SUFFIX)}-{number}{SUFFIX}")
+        if not path.exists():
+            return path
+    raise FileError(
+        str(folder),
+        "",
+        f"holds {_MOST_IN_ONE_SECOND} records of the unit {serial!r} from one second",
+        "at most that",
+        "Name another folder with --records",
+    )

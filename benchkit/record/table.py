@@ -1,0 +1,156 @@
+"""The readings of one or more records as a table: one row a reading, for a spreadsheet or a program.
+
+Rules
+-----
+* Columns are `COLUMNS`, always all of them, in this order; a new one is only ever added at the end.
+* Values stand in base units (V, A, ohm, degC), in full precision; an overload has no value and ``overload`` true.
+* A reading that was measured again later is in the table too, with ``replaced`` true.
+* A text that a spreadsheet would take for a formula (it begins with ``= + - @``, a tab or a carriage return) gets an
+  apostrophe in front.
+"""
+
+from __future__ import annotations
+
+import io
+import json
+from collections.abc import Iterable, Iterator
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+from benchkit.errors import FileError
+from benchkit.record.summary import Summary
+
+if TYPE_CHECKING:
+    import pandas as pd
+
+COLUMNS = (
+    "record",
+    "record_status",
+    "kind",
+    "unit",
+    "operator",
+    "design",
+    "design_sha256",
+    "procedure",
+    "line",
+    "at",
+    "section",
+    "step",
+    "point",
+    "value",
+    "value_unit",
+    "overload",
+    "standard_uncertainty",
+    "low",
+    "high",
+    "verdict",
+    "probability",
+    "why",
+    "condition",
+    "meter",
+    "function",
+    "samples",
+    "from_before",
+    "replaced",
+    "overridden",
+)
+
+_FORMULA = ("=", "+", "-", "@", "\t", "\r")
+_NUMBERS = ("value", "standard_uncertainty", "low", "high", "probability")
+
+
+def rows(summary: Summary) -> Iterator[dict[str, Any]]:
+    """Yield one mapping a reading, its keys `COLUMNS`; a value that is not there is None."""
+    opened, record = summary.opened, summary.record
+    for result in summary.results:
+        reading, judged = result.reading, result.judged
+        if reading is None:
+            continue
+        yield {
+            "record": record.path.name,
+            "record_status": record.word,
+            "kind": opened.kind,
+            "unit": opened.unit,
+            "operator": opened.operator,
+            "design": opened.design_name,
+            "design_sha256": opened.design_sha256,
+            "procedure": opened.procedure_name,
+            "line": result.seq,
+            "at": result.at,
+            "section": result.section,
+            "step": result.step,
+            "point": reading.point,
+            "value": reading.value,
+            "value_unit": reading.unit,
+            "overload": reading.overload,
+            "standard_uncertainty": reading.standard_uncertainty,
+            "low": judged.low if judged is not None else None,
+            "high": judged.high if judged is not None else None,
+            "verdict": result.verdict,
+            "probability": judged.probability if judged is not None else None,
+            "why": judged.why if judged is not None else "",
+            "condition": result.condition,
+            "meter": reading.meter,
+            "function": reading.function,
+            "samples": reading.samples,
+            "from_before": result.from_before,
+            "replaced": result.replaced,
+            "overridden": result.overridden,
+        }
+
+
+def frame(summaries: Iterable[Summary]) -> pd.DataFrame:
+    """Return the readings of several records as one data frame, columns `COLUMNS`, shape (readings, 29).
+
+    Numbers are floats with NaN where there is none; ``at`` is a time with its zone.
+    """
+    import pandas as pd
+
+    table = pd.DataFrame([row for summary in summaries for row in rows(summary)], columns=list(COLUMNS))
+    for name in _NUMBERS:
+        table[name] = table[name].astype(float)
+    table["at"] = pd.to_datetime(table["at"], utc=True, format="ISO8601")
+    return table
+
+
+def csv_text(summaries: Iterable[Summary]) -> str:
+    """Return the readings as CSV: a line of names, a comma between, line feeds, a full stop as decimal sign."""
+    table = frame(summaries)
+    for name in COLUMNS:
+        if name not in (*_NUMBERS, "at", "line", "overload", "samples", "from_before", "replaced"):
+            table[name] = table[name].map(_no_formula)
+    table["at"] = table["at"].dt.strftime("%Y-%m-%dT%H:%M:%S.%fZ")
+    text = io.StringIO()
+    table.to_csv(text, index=False, lineterminator="\n")
+    return text.getvalue()
+
+
+def write_csv(summaries: Iterable[Summary], path: Path) -> None:
+    """Write `csv_text` to a new file.
+
+    Raises
+    ------
+    FileError
+        If there is a file of that name already, or it can't be written.
+    """
+    text = csv_text(summaries)
+    try:
+        with path.open("x", encoding="utf-8", errors="backslashreplace", newline="") as file:
+            file.write(text)
+    except FileExistsError:
+        raise FileError(str(path), "", "is there already", "a name that is free", "Name another file") from None
+    except OSError as error:
+        raise FileError(
+            str(path), "", f"can't be written: {error.strerror}", "a place that can be written to", "Name another file"
+        ) from None
+
+
+def json_lines(summaries: Iterable[Summary]) -> Iterator[str]:
+    """Yield the rows as one JSON object each; None where there is no value."""
+    for summary in summaries:
+        for row in rows(summary):
+            yield json.dumps(row, ensure_ascii=False, allow_nan=False)
+
+
+def _no_formula(value: object) -> object:
+    return f"'{value}" if isinstance(value, str) and value.startswith(_FORMULA) else value

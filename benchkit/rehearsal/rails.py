@@ -1,0 +1,207 @@
+"""The two rails at the unit: capacitors that a current-limited supply charges and the unit discharges.
+
+How a step goes
+---------------
+Each rail's capacitor is a voltage that changes by (what the supply delivers - what the unit draws) / C.  The supply
+delivers its limit while the rail is below its set voltage, exactly what the unit draws while it is there, and nothing
+while the rail is above it: a supply of this kind can't sink.
+
+Time constants reach from microseconds (a short across 100 uF) to minutes (10 mF and a bleeder), so steps are chosen by
+voltage, not by time: a share of what is left to go, halved where the unit's current turns out to have changed too
+much on the way (Heun's rule against Euler's).
+
+The end of it is the unit's balance with supply and limit, the same solution that predictions use: when both rails are
+close to it, or nothing moves them any more, they are *settled* and follow it from then on.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field
+from typing import Final, Protocol
+
+STRAY_F: Final = 1e-6
+"""Capacitance of a rail without capacitors of its own: leads and the supply's own output."""
+EMPTY_V: Final = 0.002
+
+_NEAR_V = 0.02
+_NEAR_SHARE = 0.001
+_STALLED_SHARE = 0.01
+_RISING_SHARE = 0.34
+_FALLING_SHARE = 0.2
+_LEAST_STEP_V = 0.02
+_TOLERANCE = 0.1
+_HALVINGS = 8
+_MOST_STEPS = 400
+
+Pair = tuple[float, float]
+
+
+@dataclass(frozen=True)
+class Channel:
+    """What one channel of the supply truly delivers: magnitudes."""
+
+    volts: float = 0.0
+    limit_a: float = 0.0
+    on: bool = False
+
+
+class Load(Protocol):
+    """The unit as its rails see it; all magnitudes, positive rail first."""
+
+    def drawn(self, volts: Pair) -> Pair:
+        """Return the currents (A) drawn from stiff rails at `volts`."""
+        ...
+
+    def balance(self, volts: Pair, limit_a: float) -> Pair:
+        """Return the voltages (V) to which a supply at `volts` with a limit brings the rails."""
+        ...
+
+
+@dataclass
+class Rails:
+    """Voltages of both rails at the unit's own capacitors.
+
+    Parameters
+    ----------
+    capacitance_f : float
+        Of each rail.
+    """
+
+    capacitance_f: float
+    volts: Pair = (0.0, 0.0)
+    settled: bool = True
+    highest_v: Pair = (0.0, 0.0)
+    _delivered: Pair = (0.0, 0.0)
+    _rates: Pair | None = None
+    _goal: Pair = (0.0, 0.0)
+    _steps: int = 0
+    _channels: tuple[Channel, Channel] = field(default=(Channel(), Channel()))
+
+    def disturb(self, channels: tuple[Channel, Channel]) -> None:
+        """Take over new settings (or a change in the unit): the rails start moving from where they are."""
+        self._channels = channels
+        self._rates = None
+        self._steps = 0
+        self.settled = not any(_delivers(channel) for channel in channels) and max(self.volts) <= EMPTY_V
+
+    def go_on(self) -> None:
+        """Begin another stretch of time: the count of steps starts again."""
+        self._steps = 0
+
+    def empty(self) -> None:
+        """Take all charge away at once."""
+        self.volts = (0.0, 0.0)
+        self.disturb(self._channels)
+
+    @property
+    def delivered(self) -> Pair:
+        """Currents (A) that the supply delivers while the rails are moving."""
+        return self._delivered
+
+    def follow(self, volts: Pair) -> None:
+        """Note the voltages of settled rails."""
+        self.volts = volts
+        self._raise_marks()
+
+    def step(self, load: Load, most_s: float) -> float:
+        """Move unsettled rails by one step of at most `most_s`; return how long it was (s)."""
+        if self._rates is None:
+            self._goal = self._find_goal(load)
+            self._rates = self._find_rates(load.drawn(self.volts), self.volts)
+            if self._at_rest():
+                return 0.0
+        start, rates = self.volts, self._rates
+        seconds = min([most_s, *(self._time_s(rail, start[rail], rates[rail]) for rail in (0, 1))])
+        for _ in range(_HALVINGS):
+            there = self._moved(start, rates, seconds)
+            new_rates = self._find_rates(load.drawn(there), there)
+            wrong = [abs(new_rates[rail] - rates[rail]) * seconds / 2.0 for rail in (0, 1)]
+            allowed = [_TOLERANCE * max(abs(there[rail] - start[rail]), _LEAST_STEP_V) for rail in (0, 1)]
+            arrived = [abs(there[rail] - self._target(rail)) < 1e-9 for rail in (0, 1)]
+            if all(arrived[rail] or wrong[rail] <= allowed[rail] for rail in (0, 1)):
+                break
+            seconds /= 2.0
+        mean = tuple(
+            rates[rail] if arrived[rail] else (rates[rail] + new_rates[rail]) / 2.0 for rail in (0, 1)
+        )
+        self.volts = self._moved(start, (mean[0], mean[1]), seconds)
+        self._rates = new_rates
+        self._raise_marks()
+        self._steps += 1
+        self._at_rest()
+        return seconds
+
+    def _target(self, rail: int) -> float:
+        channel = self._channels[rail]
+        return channel.volts if _delivers(channel) else 0.0
+
+    def _find_goal(self, load: Load) -> Pair:
+        limits = [channel.limit_a for channel in self._channels if _delivers(channel)]
+        if not limits:
+            return (0.0, 0.0)
+        return load.balance((self._target(0), self._target(1)), min(limits))
+
+    def _find_rates(self, drawn: Pair, volts: Pair) -> Pair:
+        delivered, rates = [0.0, 0.0], [0.0, 0.0]
+        for rail, channel in enumerate(self._channels):
+            target = self._target(rail)
+            if target > 0.0 and volts[rail] < target - 1e-6:
+                delivered[rail] = channel.limit_a
+            elif target > 0.0 and volts[rail] <= target + 1e-6:
+                delivered[rail] = min(max(drawn[rail], 0.0), channel.limit_a)
+            rates[rail] = (delivered[rail] - drawn[rail]) / self.capacitance_f
+            if volts[rail] <= 0.0 and rates[rail] < 0.0:
+                rates[rail] = 0.0
+        self._delivered = (delivered[0], delivered[1])
+        return rates[0], rates[1]
+
+    def _time_s(self, rail: int, volts: float, rate: float) -> float:
+        """How long the rail may move at `rate` before the unit has to be asked again."""
+        if rate == 0.0:
+            return float("inf")
+        target = self._target(rail)
+        gap = target - volts
+        if rate > 0.0:
+            most_v = min(max(_RISING_SHARE * gap, 0.02 * target, _LEAST_STEP_V), max(gap, 1e-6))
+        else:
+            most_v = max(_FALLING_SHARE * volts, _LEAST_STEP_V)
+        return most_v / abs(rate)
+
+    def _moved(self, volts: Pair, rates: Pair, seconds: float) -> Pair:
+        result = []
+        for rail in (0, 1):
+            target = self._target(rail)
+            there = volts[rail] + rates[rail] * seconds
+            above = volts[rail] > target
+            # A rail stops at its set voltage from either side: below it the supply delivers again.
+            there = max(there, target) if above and target > 0.0 else there
+            there = min(there, target) if volts[rail] <= target else there
+            if abs(there - target) < 1e-6 * max(target, 1.0):
+                there = target
+            result.append(max(there, 0.0))
+        return result[0], result[1]
+
+    def _at_rest(self) -> bool:
+        """Settle when both rails are near their goal or stand still; return whether they have."""
+        assert self._rates is not None
+        rest = [self._rail_at_rest(rail, self._rates[rail]) for rail in (0, 1)]
+        if all(rest) or self._steps >= _MOST_STEPS:
+            self.settled = True
+            self.volts = self._goal
+            self._raise_marks()
+        return self.settled
+
+    def _rail_at_rest(self, rail: int, rate: float) -> bool:
+        volts, goal, channel = self.volts[rail], self._goal[rail], self._channels[rail]
+        if not _delivers(channel):
+            return volts <= EMPTY_V
+        if abs(volts - goal) <= max(_NEAR_V, _NEAR_SHARE * goal) and volts <= self._target(rail) + EMPTY_V:
+            return True
+        return volts <= channel.volts and abs(rate) * self.capacitance_f < _STALLED_SHARE * channel.limit_a
+
+    def _raise_marks(self) -> None:
+        self.highest_v = (max(self.highest_v[0], self.volts[0]), max(self.highest_v[1], self.volts[1]))
+
+
+def _delivers(channel: Channel) -> bool:
+    return channel.on and channel.volts > 0.0 and channel.limit_a > 0.0

@@ -1,0 +1,143 @@
+"""What the session and whoever faces the person say to each other.
+
+The session shows a `View` (a whole frozen picture of the walk, each time anything changed) and puts one `Question` at
+a time.  A front end only displays and returns a `Reply`; it decides nothing.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Literal, Protocol
+
+from benchkit.events import SupplyState, Verdict
+from benchkit.procedure.actions import Question
+
+Energised = Literal["off", "on", "unknown"]
+
+
+@dataclass(frozen=True, kw_only=True)
+class SectionView:
+    """One section of the procedure: how far it is and the worst verdict in it so far."""
+
+    name: str
+    title: str
+    done: int
+    total: int
+    current: bool
+    verdict: Verdict | None
+
+
+@dataclass(frozen=True, kw_only=True)
+class ResultView:
+    """One judged reading or rule, newest last.  Texts are ready to show, numbers are for drawing."""
+
+    item: str
+    title: str
+    value_text: str
+    low_text: str
+    high_text: str
+    verdict: Verdict
+    why: str
+    value: float | None = None
+    low: float | None = None
+    high: float | None = None
+    uncertainty: float | None = None
+    from_before: bool = False
+    overridden: str = ""
+
+
+@dataclass(frozen=True, kw_only=True)
+class SupplyView:
+    """What is known of the supply, in words that are never more certain than the knowledge."""
+
+    energised: Energised
+    words: str
+    by_hand: bool
+    state: SupplyState | None
+
+
+@dataclass(frozen=True, kw_only=True)
+class LiveView:
+    """A reading that is being watched: value in `unit`, limits and target, age, and the last of its trend.
+
+    `trend` holds (seconds, value) pairs, oldest first, at most a few hundred.
+    """
+
+    point: str
+    unit: str
+    value: float | None
+    text: str
+    low: float
+    high: float
+    target: float
+    age_s: float
+    inside: bool
+    trend: tuple[tuple[float, float], ...] = ()
+
+
+@dataclass(frozen=True, kw_only=True)
+class View:
+    """Everything that a screen shows, at one moment.
+
+    `busy` says what is being waited for ("" when the person is), with `busy_share` from 0 to 1 where it is known and
+    `remaining_s` where it can be counted down.  `kept` is how many lines of the record are on the disk.
+    """
+
+    kind: Literal["walk", "rehearsal"]
+    procedure: str
+    purpose: str
+    unit: str
+    operator: str
+    design: str
+    meter: str
+    record: str
+    sections: tuple[SectionView, ...]
+    section_title: str
+    item: str
+    item_title: str
+    item_number: int
+    item_count: int
+    results: tuple[ResultView, ...]
+    supply: SupplyView
+    live: LiveView | None
+    busy: str
+    busy_share: float | None
+    remaining_s: float | None
+    message: str
+    kept: int
+    verdict: Verdict | None
+    stopped: str
+    exit_status: int | None
+
+
+@dataclass(frozen=True, kw_only=True)
+class Reply:
+    """What the person answered.
+
+    Parameters
+    ----------
+    choice : str
+        The value of one of the question's choices.
+    text : str
+        What was typed: the entry, or the reason where the choice wants one.
+    turns : float
+        Only in a rehearsal's trim, with the choice ``turn``: turns of the screw, positive for more bias.
+    """
+
+    choice: str
+    text: str = ""
+    turns: float = 0.0
+
+
+class Front(Protocol):
+    """Whoever faces the person: a screen, plain lines, or a stand-in."""
+
+    def show(self, view: View) -> None:
+        """Display a picture of the walk.  Called on the event loop; must return at once."""
+
+    async def ask(self, question: Question, refused: str = "") -> Reply:
+        """Put a question and wait for the reply.
+
+        `refused` says why the last reply to the same question could not be used ("" at first).  The call is cancelled
+        when something else has happened meanwhile (a trip, off): then the question has gone.
+        """

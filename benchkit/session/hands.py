@@ -1,0 +1,83 @@
+"""What hands do at the bench.  At a real bench the operator's own do it; in a rehearsal they are simulated."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from typing import Any, Protocol
+
+from benchkit.session.threads import in_thread
+
+
+class SimulatedHands(Protocol):
+    """Blocking calls that move the simulated bench."""
+
+    def probe(self, point: str | None) -> Any:
+        """Put the probes on a test point."""
+
+    def turn(self, turns: float) -> Any:
+        """Turn the trimmer's screw, positive for more bias."""
+
+    def trimmer_to(self, position: str | float) -> Any:
+        """Turn the trimmer to an end or a travel."""
+
+    def connect(self, on: bool) -> Any:
+        """Plug the unit to the supply or pull it."""
+
+    def short(self, on: bool) -> Any:
+        """Short the supply's leads or open the short."""
+
+    def advance(self, seconds: float) -> Any:
+        """Let simulated time pass."""
+
+    def truth(self) -> dict[str, Any]:
+        """What really is, for the end of a rehearsal."""
+
+
+class Hands:
+    """Does nothing at a real bench, and moves the simulated one in a rehearsal."""
+
+    def __init__(self, simulated: SimulatedHands | None = None) -> None:
+        self._simulated = simulated
+
+    @property
+    def simulated(self) -> bool:
+        """True in a rehearsal."""
+        return self._simulated is not None
+
+    async def act(self, act: str) -> None:
+        """Do what a told item says: short the leads, connect the unit, turn the trimmer to its least-bias end."""
+        bench = self._simulated
+        if bench is None:
+            return
+        if act == "short the leads":
+            await self._do(lambda: bench.connect(False))
+            await self._do(lambda: bench.short(True))
+        elif act == "connect the unit":
+            await self._do(lambda: bench.short(False))
+            await self._do(lambda: bench.connect(True))
+
+    async def probe(self, point: str | None) -> None:
+        """Put the probes on a test point."""
+        bench = self._simulated
+        if bench is not None:
+            await self._do(lambda: bench.probe(point))
+
+    async def turn(self, turns: float) -> None:
+        """Turn the screw."""
+        bench = self._simulated
+        if bench is not None:
+            await self._do(lambda: bench.turn(turns))
+
+    async def advance(self, seconds: float) -> None:
+        """Let simulated time pass."""
+        bench = self._simulated
+        if bench is not None:
+            await self._do(lambda: bench.advance(seconds))
+
+    async def truth(self) -> dict[str, Any]:
+        """What really is; empty at a real bench."""
+        bench = self._simulated
+        return {} if bench is None else await self._do(bench.truth)
+
+    async def _do(self, call: Callable[[], Any]) -> Any:
+        return await in_thread(call, "benchkit-hands")

@@ -1,0 +1,155 @@
+"""The supply: ramps under watch, off, and the same words where a person sets it by hand."""
+
+from __future__ import annotations
+
+import asyncio
+import math
+from typing import TYPE_CHECKING
+
+from benchkit import quantities
+from benchkit.errors import EntryError, InstrumentError
+from benchkit.events import Event, OutputOff, SupplyRefused, SupplySet, SupplyState
+from benchkit.keeper.protocol import WatchLines
+from benchkit.procedure.actions import Choice, Question, SetSupply, SwitchOff
+from benchkit.procedure.questions import STOP
+
+if TYPE_CHECKING:
+    from benchkit.session.run import Session
+
+RAMP_SLICE_S = 0.25
+"""A ramp moves in steps of this length at most; each is watched."""
+
+OWN_WATCH_S = 0.2
+"""How often the keeper watches by itself at a real bench."""
+
+
+async def set_supply(session: Session, action: SetSupply) -> Event:
+    """Bring both rails to where they should be, together, under watch."""
+    if session.job.manual_supply:
+        return await _set_by_hand(session, action)
+    try:
+        return await _ramp(session, action)
+    except InstrumentError as error:
+        return SupplyRefused(item=action.item, problem=str(error))
+
+
+async def _ramp(session: Session, action: SetSupply) -> Event:
+    keeper = session.keeper
+    last = session.state.supply
+    on = last is not None and last.output_on is True and session.state.result(action.item) is None
+    from_v = (0.0, 0.0)
+    if on and last is not None and last.set_positive_v is not None and last.set_negative_v is not None:
+        from_v = (last.set_positive_v, last.set_negative_v)
+    await asyncio.wrap_future(keeper.watch(None))
+    if from_v == (0.0, 0.0):
+        await asyncio.wrap_future(keeper.supply_set(0.0, 0.0, action.limit_a, True))
+    if action.trip_on_limit:
+        await asyncio.wrap_future(keeper.watch(_lines(session, action.grace_s)))
+        session.watch_since = session.clock.now()
+    steps = max(1, math.ceil(action.ramp_s / RAMP_SLICE_S)) if action.trip_on_limit else 1
+    slice_s = max(action.ramp_s / steps, 0.05)
+    for step in range(1, steps + 1):
+        share = step / steps
+        rails = tuple(start + share * (end - start) for start, end in zip(from_v, _ends(action), strict=True))
+        state = await asyncio.wrap_future(keeper.supply_set(rails[0], rails[1], action.limit_a, True))
+        session.show_moment(busy="Both rails move together.", busy_share=share, supply=state)
+        await session.clock.spend(slice_s)
+        if action.trip_on_limit:
+            await session.sample()
+    await session.clock.spend(0.5)
+    state = await asyncio.wrap_future(keeper.supply_state())
+    return SupplySet(item=action.item, state=state)
+
+
+def _ends(action: SetSupply) -> tuple[float, float]:
+    return action.positive_v, action.negative_v
+
+
+def _lines(session: Session, grace_s: float) -> WatchLines:
+    return WatchLines(
+        trip_on_limit=True,
+        grace_s=grace_s,
+        own_interval_s=OWN_WATCH_S if session.clock.own_watch else None,
+    )
+
+
+async def switch_off(session: Session, action: SwitchOff) -> Event | None:
+    """Switch off; what comes of it arrives as the keeper's own event."""
+    if session.job.manual_supply:
+        session.busy("")
+        return OutputOff(reason=action.reason, confirmed=False, how="benchkit has no hand on this supply.", state=None)
+    session.busy("Switching the supply off and reading it back.")
+    await asyncio.wrap_future(session.keeper.off(action.reason))
+    await session.hands.advance(0.2)
+    return None
+
+
+async def _set_by_hand(session: Session, action: SetSupply) -> Event:
+    one = action.negative_v == 0.0
+    rails = quantities.show(action.positive_v, "V") if one else (
+        f"{quantities.show(action.positive_v, 'V')} and {quantities.show(action.negative_v, 'V')}"
+    )  # fmt: skip
+    limit = quantities.show(action.limit_a, "A")
+    item = session.job.walk.item(session.state)
+    example = "5.00 V 21 mA" if one else "5.00 V 21 mA -5.00 V 20 mA"
+    question = Question(
+        item=action.item,
+        kind="by hand",
+        title=f"Set the supply by hand: {rails}, limit {limit}",
+        do=(
+            f"Output off, limit {limit}, then the rails up from 0 V together to {rails}, eyes on the current. "
+            f"Then type what it shows, volts and amperes of each rail ({example}); add the word limit if a rail stands in it."
+        ),
+        why=item.why,
+        caution="Nothing switches this supply off but your hand. If the current jumps, switch off first and type later.",
+        choices=(Choice(value="done", label="Entered"), STOP),
+    )
+    _, state = await session.ask_entry(question, lambda text: typed_supply(text, action))
+    assert isinstance(state, SupplyState)
+    return SupplySet(item=action.item, state=state)
+
+
+def typed_supply(text: str, action: SetSupply) -> SupplyState:
+    """Read what a person says that the supply shows, such as ``5.00 V 21 mA -5.00 V 20 mA limit``.
+
+    Raises
+    ------
+    EntryError
+        When it isn't one or two pairs of volts and amperes.
+    """
+    words = text.replace(",", " ").split()
+    in_limit = any(word.lower() == "limit" for word in words)
+    words = [word for word in words if word.lower() not in ("limit", "in", "and", "on")]
+    quantities_found: list[tuple[float, str]] = []
+    number = 0
+    while number < len(words):
+        pair = " ".join(words[number : number + 2])
+        for candidate, width in ((pair, 2), (words[number], 1)):
+            unit = "V" if candidate.endswith(("V", "v")) else "A" if candidate.endswith(("A", "a")) else ""
+            if unit and number + width <= len(words):
+                quantities_found.append((quantities.parse(candidate, unit), unit))
+                number += width
+                break
+        else:
+            raise EntryError(f"{words[number]!r} has no unit", "volts and amperes, such as 5.00 V 21 mA")
+    volts = [value for value, unit in quantities_found if unit == "V"]
+    amps = [abs(value) for value, unit in quantities_found if unit == "A"]
+    rails = 1 if action.negative_v == 0.0 else 2
+    if len(volts) != rails or len(amps) != rails:
+        raise EntryError(
+            f"{len(volts)} voltages and {len(amps)} currents came",
+            f"{rails} of each, one pair for each rail",
+            "Type what the supply shows",
+        )
+    return SupplyState(
+        output_on=True,
+        positive_v=volts[0],
+        negative_v=-abs(volts[1]) if rails == 2 else 0.0,
+        positive_a=amps[0],
+        negative_a=amps[1] if rails == 2 else 0.0,
+        set_positive_v=action.positive_v,
+        set_negative_v=action.negative_v,
+        limit_a=action.limit_a,
+        positive_in_limit=in_limit,
+        negative_in_limit=in_limit and rails == 2,
+    )

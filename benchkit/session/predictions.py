@@ -1,0 +1,154 @@
+"""Limits and rules, worked out off the event loop.
+
+Everything here blocks for up to some seconds and touches nothing but its arguments; the session runs it in a thread.
+"""
+
+from __future__ import annotations
+
+import math
+
+from benchkit.errors import BenchkitError, ModelError
+from benchkit.events import Event, Judged, PointLimits, Predicted, PredictionRefused
+from benchkit.judge.rules import RuleFacts, evaluate
+from benchkit.measure.readings import Reading
+from benchkit.procedure.actions import Evaluate, Predict
+from benchkit.procedure.plan import Item
+from benchkit.procedure.state import State
+from benchkit.procedure.walk import Walk
+from benchkit.stage.conditions import Condition, Unpowered
+from benchkit.stage.design import Design
+
+
+def predict(design: Design, action: Predict, units: int | None, seed: int) -> Event:
+    """Work out the limits of one condition.
+
+    Parameters
+    ----------
+    design : Design
+    action : Predict
+    units : int or None
+        How many units are drawn; None for the model's own choice.
+    seed : int
+
+    Returns
+    -------
+    Predicted or PredictionRefused
+    """
+    from benchkit.stage.expected import DEFAULT_UNITS, expected, expected_unpowered
+
+    count = units or DEFAULT_UNITS
+    try:
+        if isinstance(action.condition, Unpowered):
+            found = expected_unpowered(design, action.points, trimmer=action.condition.trimmer, units=count, seed=seed)
+        else:
+            found = expected(design, action.condition, units=count, seed=seed, points=action.points)
+    except ModelError as error:
+        return PredictionRefused(item=action.item, condition=action.key, problem=str(error))
+    limits = tuple(
+        PointLimits(
+            point=one.point, unit=one.unit, nominal=_open(one.nominal), low=_open(one.low), high=_open(one.high)
+        )
+        for one in found.points
+    )
+    return Predicted(
+        item=action.item,
+        condition=action.key,
+        limits=limits,
+        units=found.units,
+        solved=found.solved,
+        seed=found.seed,
+        seconds=found.solve_seconds,
+    )
+
+
+def _open(value: float | None) -> float | None:
+    """Turn a limit that is not finite into an open side."""
+    return None if value is None or not math.isfinite(value) else value
+
+
+def evaluate_rule(design: Design, walk: Walk, state: State, action: Evaluate) -> Judged:
+    """Judge a named rule on the readings of the item's section and on the resistors that were measured cold."""
+    item = walk.item(state)
+    facts = rule_facts(design, walk, state, item)
+    try:
+        result = evaluate(action.rule, action.number, facts)
+    except BenchkitError as error:
+        return Judged(
+            item=item.id, subject=action.rule, verdict="undecided", value=None, unit="", low=None, high=None,
+            why=str(error),
+        )  # fmt: skip
+    low: float | None = None
+    high: float | None = None
+    if isinstance(result.limit, tuple):
+        low, high = result.limit
+    elif result.rule == "divider stiffness":
+        low = result.limit
+    else:
+        high = result.limit
+    why = result.why
+    if result.would_decide:
+        would = result.would_decide[0].lower() + result.would_decide[1:]
+        why = f"{why} What would decide it: {would}."
+    return Judged(
+        item=item.id, subject=f"{result.rule}: {result.subject}" if result.subject else result.rule,
+        verdict=result.verdict, value=result.value, unit=result.unit, low=low, high=high, why=why,
+        probability=result.conformance_probability,
+    )  # fmt: skip
+
+
+def rule_facts(design: Design, walk: Walk, state: State, item: Item) -> RuleFacts:
+    """Collect what a rule may know: readings of its own section, cold resistors, the model's limits there."""
+    readings: dict[str, Reading] = {}
+    cold: dict[str, Reading] = {}
+    limits = {}
+    rails: tuple[float, float] | None = None
+    for other in walk.plan.items:
+        reading = state.readings.get(other.id)
+        if reading is None or other.point is None or other.id in state.before:
+            continue
+        if not other.point.powered:
+            if other.point.name.startswith("ohm."):
+                cold[other.point.name.removeprefix("ohm.")] = reading
+        elif other.section == item.section:
+            readings[other.point.name] = reading
+            known = walk.limits_for(state, other)
+            if known is not None and other.condition is not None:
+                limits[other.point.name] = known
+            if isinstance(other.condition, Condition):
+                rails = (other.condition.positive_v, other.condition.negative_v)
+    return RuleFacts(
+        design=design,
+        readings=readings,
+        cold=cold,
+        limits=limits,
+        wiper_open=lambda: wiper_open(design),
+        positive_v=None if rails is None else rails[0],
+        negative_v=None if rails is None else rails[1],
+    )
+
+
+def wiper_open(design: Design) -> tuple[float, float]:
+    """Emitter drop (V) of the nominal unit at its target, and the same with the wiper open, on a limited supply.
+
+    Raises
+    ------
+    ModelError
+        When either has no solution.
+    """
+    from benchkit.procedure.plan import supply_limit_a
+    from benchkit.stage.draws import nominal
+    from benchkit.stage.faults import parse_fault
+    from benchkit.stage.operate import solve_units
+
+    rails = design.rails
+    limit_a = supply_limit_a(design, rails.positive_v, rails.negative_v, share=1.0)
+    condition = Condition(
+        positive_v=rails.positive_v, negative_v=rails.negative_v, limit_a=limit_a, trimmer="target", when="cold"
+    )
+    drops = []
+    for fault in (None, parse_fault("spreader.trimmer: wiper open")):
+        solved = solve_units(design, nominal(design), condition, fault)
+        if not bool(solved.converged.all()):
+            raise ModelError("The model found no operating point for the trimmer's wiper", "one", "Check the design")
+        drops.append(float(solved.points["emitter.upper.1"][0]))
+    return drops[0], drops[1]

@@ -1,0 +1,475 @@
+"""Runs one walk: actions out of the state machine, events back into it.
+
+Rules
+-----
+* One order.  An event is handled when it stands in the record.  The session hands an event to the keeper together with
+  the number of the line that it thinks is the last; when the keeper has written one of its own meanwhile (a trip, off),
+  it refuses, and the session handles that one first and thinks again.
+* An action that is still running lapses as soon as the walk has moved on.
+* Before an event is handed over, the walk is asked whether it would take it; one that it wouldn't never reaches the
+  record.
+* "Off now" never waits for anything in here: it goes straight to the keeper's urgent slot.
+* Whatever goes wrong in here, `run` asks the keeper to switch off before it lets the error out.
+"""
+
+from __future__ import annotations
+
+import asyncio
+import contextlib
+from collections import deque
+from collections.abc import Callable
+from dataclasses import dataclass, replace
+from pathlib import Path
+from typing import Any
+
+from benchkit.errors import BenchkitError, EntryError, IllegalEvent, InstrumentError
+from benchkit.events import (
+    Answered,
+    BenchFound,
+    BenchMissing,
+    Closed,
+    Decided,
+    Event,
+    Noted,
+    StopAsked,
+    SupplyState,
+    Waited,
+)
+from benchkit.keeper.client import KeeperClient
+from benchkit.keeper.protocol import KeeperDied, Push
+from benchkit.measure.accuracy import Accuracy
+from benchkit.procedure.actions import (
+    Action,
+    Ask,
+    Connect,
+    Evaluate,
+    Predict,
+    Question,
+    Read,
+    SetSupply,
+    SwitchOff,
+    Trim,
+    Wait,
+    Write,
+)
+from benchkit.procedure.file import Procedure
+from benchkit.procedure.state import State
+from benchkit.procedure.walk import Walk
+from benchkit.session import measuring, powering, predictions
+from benchkit.session.clock import Clock
+from benchkit.session.front import Front, Reply
+from benchkit.session.hands import Hands
+from benchkit.session.threads import in_thread
+from benchkit.session.views import Moment, make_view
+from benchkit.stage.design import Design
+
+HEARTBEAT_S = 0.2
+
+
+@dataclass(kw_only=True)
+class Job:
+    """What a walk needs, put together once.
+
+    Parameters
+    ----------
+    design, procedure : Design, Procedure
+    walk : Walk
+    record : Path
+        The journal's file.
+    setup : dict
+        Addresses and profiles for the keeper; an entry is None where a person reads or switches.
+    accuracy : Accuracy
+        Of the meter.
+    supply_accuracy : Accuracy
+        Of the supply's own current readings.
+    units : int or None
+        Units drawn for the limits.
+    seed : int
+    """
+
+    design: Design
+    procedure: Procedure
+    walk: Walk
+    record: Path
+    setup: dict[str, Any]
+    accuracy: Accuracy
+    supply_accuracy: Accuracy
+    units: int | None = None
+    seed: int = 0
+
+    @property
+    def manual_meter(self) -> bool:
+        """A person reads the meter."""
+        return self.setup.get("meter") is None
+
+    @property
+    def manual_supply(self) -> bool:
+        """A person sets the supply."""
+        return self.setup.get("supply") is None
+
+
+class Stopped(Exception):  # noqa: N818 (no error: the person chose it)
+    """The operator chose to make safe and stop; turned into an event where it is caught."""
+
+    def __init__(self, reason: str) -> None:
+        self.reason = reason
+        super().__init__(reason)
+
+
+class Session:
+    """One run of one walk, serving one front end."""
+
+    def __init__(self, job: Job, keeper: KeeperClient, front: Front, hands: Hands, clock: Clock) -> None:
+        self.job = job
+        self.keeper = keeper
+        self.front = front
+        self.hands = hands
+        self.clock = clock
+        self.state = State()
+        self.moment = Moment()
+        self.seq = 0
+        self._pushed: deque[Push | KeeperDied | _Asked] = deque()
+        self._woken = asyncio.Event()
+        self._loop = asyncio.get_running_loop()
+        self._truth_noted = False
+        self._off_asked = False
+        self.watch_since = 0.0
+        self._last_actions: tuple[Action, ...] = ()
+
+    # -- what the outside calls --------------------------------------------------------------------------------
+
+    def on_push(self, push: Push | KeeperDied) -> None:
+        """Take what the keeper says by itself.  Called from the keeper client's thread."""
+        with contextlib.suppress(RuntimeError):
+            self._loop.call_soon_threadsafe(self._take_push, push)
+
+    def off_now(self, reason: str = "the operator asked for it") -> None:
+        """Switch off at once, whatever is being done; called on the event loop, returns at once."""
+        if not self.job.manual_supply:
+            self.keeper.off(reason)
+        if not self._off_asked:
+            self._off_asked = True
+            self._pushed.append(_Asked(reason))
+            self._woken.set()
+
+    def heartbeat(self) -> None:
+        """Tell the keeper that the event loop turns."""
+        self.keeper.heartbeat()
+
+    async def run(self, first: Event) -> Closed:
+        """Run the walk to its end.
+
+        Parameters
+        ----------
+        first : Event
+            `WalkOpened`, which the keeper has written already as the first line, or `Resumed`, which is yet to be kept.
+
+        Raises
+        ------
+        BenchkitError
+            When the walk can't go on at all; the supply has been asked to switch off by then.
+        """
+        pulse = asyncio.create_task(self._pulse())
+        try:
+            self.keeper.arm()
+            return await self._run(first)
+        except BaseException as error:
+            if self.state.energised != "off" and not self.job.manual_supply:
+                with contextlib.suppress(Exception):
+                    await asyncio.wait_for(
+                        asyncio.wrap_future(self.keeper.off(f"an error of the session: {type(error).__name__}")), 3.0
+                    )
+            raise
+        finally:
+            pulse.cancel()
+
+    # -- the loop ----------------------------------------------------------------------------------------------
+
+    async def _pulse(self) -> None:
+        while True:
+            self.heartbeat()
+            await asyncio.sleep(HEARTBEAT_S)
+
+    async def _run(self, first: Event) -> Closed:
+        action = await self._begin(first)
+        running: asyncio.Task[Event | None] | None = None
+        try:
+            while self.state.closed is None:
+                if running is None and action is not None:
+                    running = asyncio.create_task(self._perform(action))
+                    action = None
+                woken = asyncio.create_task(self._woken.wait())
+                waiting = {woken} if running is None else {woken, running}
+                await asyncio.wait(waiting, return_when=asyncio.FIRST_COMPLETED)
+                woken.cancel()
+                before = (self.state.phase, self.state.index)
+                fresh: tuple[Action, ...] = ()
+                if self._pushed:
+                    self._woken.clear()
+                    fresh = await self._take_pushed()
+                elif running is not None and running.done():
+                    self._woken.clear()
+                    event = await self._result_of(running)
+                    running = None
+                    if event is not None:
+                        fresh = await self._keep(event)
+                else:
+                    self._woken.clear()
+                    continue
+                if fresh or (self.state.phase, self.state.index) != before:
+                    running = await _lapse(running)
+                    self.moment = Moment(message=self.moment.message)
+                    action = fresh[0] if fresh else None
+                self.show()
+        finally:
+            await _lapse(running)
+        return self.state.closed
+
+    async def _begin(self, first: Event) -> Action | None:
+        if first.name == "walk opened":
+            self.state, actions = self.job.walk.handle(self.state, first, self.clock.now())
+            self.seq = self.state.count
+        else:
+            actions = await self._keep(first)
+        self.show()
+        return actions[0] if actions else None
+
+    async def _keep(self, event: Event) -> tuple[Action, ...]:
+        """Have an event written and handle it; () when the chain had moved on."""
+        try:
+            after, actions = self.job.walk.handle(self.state, event, self.clock.now())
+        except IllegalEvent as error:
+            self.moment.message = str(error)
+            return self._again()
+        kept = await asyncio.wrap_future(self.keeper.append(event, after=self.seq))
+        if kept.moved_on:
+            return ()
+        self.seq = kept.seq
+        self.state = after
+        return actions
+
+    def _again(self) -> tuple[Action, ...]:
+        """Carry the last action out once more: nothing has been entered, nothing has changed."""
+        return self._last_actions
+
+    async def _take_pushed(self) -> tuple[Action, ...]:
+        fresh: tuple[Action, ...] = ()
+        while self._pushed:
+            push = self._pushed.popleft()
+            if isinstance(push, KeeperDied):
+                raise await self._keeper_died(push)
+            if isinstance(push, _Asked):
+                if self.state.phase in ("unopened", "closed"):
+                    continue
+                got = await self._keep(StopAsked(reason=push.reason))
+                if not got and self.state.stopped == "":
+                    self._pushed.append(push)  # the chain had moved on: what moved it comes first
+                    await asyncio.sleep(0.01)
+                    continue
+                fresh = got or fresh
+                continue
+            if push.seq is None:
+                self.moment.message = f"{push.event.name} could not be kept: {push.problem}"
+                raise InstrumentError("refused", self.moment.message, "a record that can be written", RESUME_HINT)
+            if push.seq <= self.seq:
+                continue
+            self.state, actions = self.job.walk.handle(self.state, push.event, self.clock.now())
+            self.seq = push.seq
+            fresh = actions or fresh
+        return fresh
+
+    def _take_push(self, push: Push | KeeperDied) -> None:
+        self._pushed.append(push)
+        self._woken.set()
+
+    async def _keeper_died(self, push: KeeperDied) -> BenchkitError:
+        if self.job.manual_supply:
+            return InstrumentError("link lost", f"The keeper of the record has ended: {push.problem}", "", RESUME_HINT)
+        off = await in_thread(lambda: self.keeper.after_death(self.job.setup))
+        words = (
+            "A second keeper switched the supply off and read it back as off."
+            if off.confirmed
+            else "OUTPUT STATE UNKNOWN: switch the supply off by hand."
+        )
+        return InstrumentError(
+            "link lost", f"The keeper of the instruments has ended: {push.problem}. {words}", "", RESUME_HINT
+        )
+
+    async def _result_of(self, task: asyncio.Task[Event | None]) -> Event | None:
+        try:
+            return task.result()
+        except Stopped as stopped:
+            return StopAsked(reason=stopped.reason)
+        except asyncio.CancelledError:
+            return None
+
+    # -- actions -----------------------------------------------------------------------------------------------
+
+    async def _perform(self, action: Action) -> Event | None:
+        self._last_actions = (action,)
+        match action:
+            case Connect():
+                return await self._connect(action)
+            case Ask():
+                return await self._ask(action)
+            case Predict():
+                self.busy("The model works out what this unit should read.")
+                design, units, seed = self.job.design, self.job.units, self.job.seed
+                return await in_thread(lambda: predictions.predict(design, action, units, seed), "benchkit-model")
+            case Evaluate():
+                design, walk, state = self.job.design, self.job.walk, self.state
+                return await in_thread(lambda: predictions.evaluate_rule(design, walk, state, action), "benchkit-model")
+            case Read():
+                return await measuring.read(self, action)
+            case Trim():
+                return await measuring.trim(self, action)
+            case SetSupply():
+                return await powering.set_supply(self, action)
+            case SwitchOff():
+                return await powering.switch_off(self, action)
+            case Wait():
+                await self._wait(action)
+                return Waited(item=action.item, seconds=action.seconds)
+            case Write():
+                return await self._write(action)
+        raise BenchkitError(f"There is no way to carry out {type(action).__name__}")
+
+    async def _connect(self, action: Connect) -> Event:
+        self.busy("The instruments are being asked who they are.")
+        try:
+            found = await asyncio.wrap_future(self.keeper.connect(self.job.setup))
+            state = None
+            if not self.job.manual_supply:
+                state = await asyncio.wrap_future(self.keeper.supply_state())
+        except InstrumentError as error:
+            return BenchMissing(problem=str(error))
+        return BenchFound(
+            meter=found.get("meter") or "read by hand", supply=found.get("supply") or "set by hand", supply_state=state
+        )
+
+    async def _ask(self, action: Ask) -> Event:
+        question = action.question
+        reply = await self.ask(question)
+        item = self.job.walk.item(self.state)
+        if question.kind == "decide":
+            if reply.choice == "go on" and not reply.text.strip():
+                raise BenchkitError("A front end passed on a choice without its reason")
+            return Decided(item=action.item, choice=reply.choice, reason=reply.text.strip())  # type: ignore[arg-type]
+        if reply.choice == "make safe":
+            raise Stopped(f"the operator chose it at: {question.title}")
+        if item.act and reply.choice == "done":
+            await self.hands.act(item.act)
+        if question.point and question.kind in ("probes", "tell"):
+            await self.hands.probe(question.point)
+            await self.clock.spend(1.0)
+        return Answered(item=action.item, choice=reply.choice, text=reply.text.strip())  # type: ignore[arg-type]
+
+    async def ask(self, question: Question) -> Reply:
+        """Put a question until the reply is one of its choices, with a reason where one is wanted."""
+        refused = ""
+        self.busy("")
+        while True:
+            reply = await self.front.ask(question, refused)
+            refused = _refusal(question, reply)
+            if not refused:
+                return reply
+
+    async def ask_entry(self, question: Question, parse: Callable[[str], Any]) -> tuple[Reply, Any]:
+        """Put a question that wants something typed, until it can be used."""
+        refused = ""
+        self.busy("")
+        while True:
+            reply = await self.front.ask(question, refused)
+            if reply.choice == "make safe":
+                raise Stopped(f"the operator chose it at: {question.title}")
+            if reply.choice not in ("done", "take"):
+                return reply, None
+            try:
+                return reply, parse(reply.text)
+            except EntryError as error:
+                refused = str(error)
+
+    async def _wait(self, action: Wait) -> None:
+        left_s = action.seconds
+        while left_s > 0:
+            self.busy(action.reason, share=1.0 - left_s / action.seconds, remaining_s=left_s)
+            slice_s = min(1.0, left_s)
+            await self.clock.spend(slice_s)
+            left_s -= slice_s
+            await self.sample()
+
+    async def sample(self) -> None:
+        """Take a sample of the watch where the keeper doesn't do so by itself, and show it."""
+        if self.job.manual_supply or self.state.energised == "off":
+            return
+        state = await asyncio.wrap_future(self.keeper.sample(self.clock.now() - self.watch_since))
+        self.note_supply(state)
+
+    def note_supply(self, state: SupplyState) -> None:
+        """Show a newer state of the supply than the record has."""
+        self.moment.supply = state
+        self.show()
+
+    async def _write(self, action: Write) -> Event | None:
+        if isinstance(action.event, Closed) and self.hands.simulated and not self._truth_noted:
+            self._truth_noted = True
+            truth = await self.hands.truth()
+            figures = {key: float(value) for key, value in truth.items() if isinstance(value, (int, float))}
+            return Noted(text="The simulated unit at the end of the walk.", figures=figures)
+        return action.event
+
+    # -- showing -----------------------------------------------------------------------------------------------
+
+    def busy(self, words: str, share: float | None = None, remaining_s: float | None = None) -> None:
+        """Say what is being waited for, "" when it is the person."""
+        self.moment = replace(self.moment, busy=words, busy_share=share, remaining_s=remaining_s)
+        self.show()
+
+    def show(self) -> None:
+        """Give the front end a new picture."""
+        job = self.job
+        self.front.show(
+            make_view(
+                job.walk,
+                self.state,
+                self.moment,
+                record=str(job.record),
+                design=f"{job.design.name} {job.design.revision}",
+                procedure=job.procedure.head.name,
+                purpose=job.procedure.head.purpose,
+            )
+        )
+
+    def show_moment(self, **changes: Any) -> None:
+        """Change what moves on the screen."""
+        self.moment = replace(self.moment, **changes)
+        self.show()
+
+
+RESUME_HINT = "Go on later with benchkit walk --resume and the record's name"
+
+
+class _Asked:
+    """The operator's wish for off, in the queue of what has come."""
+
+    def __init__(self, reason: str) -> None:
+        self.reason = reason
+
+
+async def _lapse(task: asyncio.Task[Event | None] | None) -> None:
+    if task is not None and not task.done():
+        task.cancel()
+        with contextlib.suppress(asyncio.CancelledError, Stopped, BenchkitError):
+            await task
+
+
+def _refusal(question: Question, reply: Reply) -> str:
+    choices = {choice.value: choice for choice in question.choices}
+    chosen = choices.get(reply.choice)
+    if chosen is None:
+        return f"{reply.choice!r} is no answer here. Answer {' or '.join(choices)}."
+    if chosen.wants_reason and not reply.text.strip():
+        return "A reason in words is needed to go on."
+    if question.kind == "hold" and reply.choice == "yes" and reply.text.strip().lower() != "yes":
+        return "This is a hold point: type the word yes."
+    return ""

@@ -1,0 +1,237 @@
+"""Puts a walk together and starts it, or goes on with one that was cut off.
+
+`Runner` is what a front end holds on to: it exists before the session does, so that "off" always has somewhere to go.
+"""
+
+from __future__ import annotations
+
+import asyncio
+import datetime
+import uuid
+from dataclasses import dataclass, field
+from pathlib import Path
+from typing import Any, Literal
+
+from benchkit import __version__
+from benchkit.errors import BenchkitError, FileError, RecordError
+from benchkit.events import Closed, Event, Resumed, WalkOpened, from_payload
+from benchkit.journal import reader
+from benchkit.keeper.client import KeeperClient
+from benchkit.measure.accuracy import Accuracy
+from benchkit.procedure.file import Procedure, parse_procedure
+from benchkit.procedure.plan import make_plan
+from benchkit.procedure.state import State
+from benchkit.procedure.walk import Walk
+from benchkit.record.names import free_path
+from benchkit.session.clock import Clock
+from benchkit.session.front import Front
+from benchkit.session.hands import Hands
+from benchkit.session.run import Job, Session
+from benchkit.session.threads import in_thread
+from benchkit.stage.design import Design, parse_design
+
+
+@dataclass(kw_only=True)
+class Setting:
+    """All that is known before a walk begins.
+
+    Parameters
+    ----------
+    kind : "walk" or "rehearsal"
+    design, procedure : Design, Procedure
+    setup : dict
+        For the keeper; ``meter`` and ``supply`` are None where a person reads or switches.
+    bench_text, bench_sha256 : str
+        The bench file as it goes into the record, "" without one.
+    accuracy, supply_accuracy : Accuracy
+    hands : Hands
+    clock : Clock
+    records : Path
+        The folder of records.
+    seed : int
+    plant : str
+        The fault planted in a rehearsal, "" without one.
+    units : int or None
+    cautions : tuple of str
+        What has to be said about this bench, such as a calibration that is overdue.
+    """
+
+    kind: Literal["walk", "rehearsal"]
+    design: Design
+    procedure: Procedure
+    setup: dict[str, Any]
+    bench_text: str
+    bench_sha256: str
+    accuracy: Accuracy
+    supply_accuracy: Accuracy
+    hands: Hands
+    clock: Clock
+    records: Path
+    seed: int = 0
+    plant: str = ""
+    units: int | None = None
+    cautions: tuple[str, ...] = field(default=())
+
+
+class Runner:
+    """Starts one walk and is the way to its session and its keeper."""
+
+    def __init__(self, setting: Setting) -> None:
+        self.setting = setting
+        self.session: Session | None = None
+        self.record: Path | None = None
+
+    def off_now(self, reason: str = "the operator asked for it") -> None:
+        """Switch off at once; harmless before the session exists."""
+        if self.session is not None:
+            self.session.off_now(reason)
+
+    async def begin(self, front: Front, unit: str, operator: str) -> Closed:
+        """Run a new walk to its end.
+
+        Raises
+        ------
+        BenchkitError
+        """
+        setting = self.setting
+        plan = await in_thread(lambda: make_plan(setting.procedure, setting.design))
+        self.record = free_path(setting.records, unit, datetime.datetime.now(datetime.UTC))
+        opened = WalkOpened(
+            version=__version__,
+            walk=uuid.uuid4().hex,
+            kind=setting.kind,
+            unit=unit,
+            operator=operator,
+            design_name=setting.design.name,
+            design_text=setting.design.text,
+            design_sha256=setting.design.sha256,
+            procedure_name=setting.procedure.head.name,
+            procedure_text=setting.procedure.text,
+            procedure_sha256=setting.procedure.sha256,
+            bench_text=setting.bench_text,
+            bench_sha256=setting.bench_sha256,
+            seed=setting.seed,
+            plant=setting.plant,
+            supply="manual" if setting.setup.get("supply") is None else "scpi",
+            meter="manual" if setting.setup.get("meter") is None else "scpi",
+            cautions=setting.cautions,
+        )
+        return await self._run(Walk(plan), State(), opened, front, new=True)
+
+    async def resume(self, front: Front, path: Path, operator: str) -> Closed:
+        """Go on with a walk that was cut off.
+
+        Raises
+        ------
+        BenchkitError
+        """
+        setting = self.setting
+        plan = await in_thread(lambda: make_plan(setting.procedure, setting.design))
+        walk = Walk(plan)
+        self.record = path
+        state = replayed(walk, path)
+        return await self._run(walk, state, Resumed(operator=operator), front, new=False)
+
+    async def _run(self, walk: Walk, state: State, first: Event, front: Front, *, new: bool) -> Closed:
+        setting, record = self.setting, self.record
+        assert record is not None
+        job = Job(
+            design=setting.design,
+            procedure=setting.procedure,
+            walk=walk,
+            record=record,
+            setup=setting.setup,
+            accuracy=setting.accuracy,
+            supply_accuracy=setting.supply_accuracy,
+            units=setting.units,
+            seed=setting.seed,
+        )
+        early: list[Any] = []
+        session: Session | None = None
+
+        def take(push: Any) -> None:
+            if session is None:
+                early.append(push)
+            else:
+                session.on_push(push)
+
+        keeper = await in_thread(lambda: KeeperClient.start(record.parent / "logs", take))
+        try:
+            if new:
+                await asyncio.wrap_future(keeper.open_journal(record, first))
+            else:
+                head = await asyncio.wrap_future(keeper.resume_journal(record))
+                assert isinstance(first, Resumed)
+                first = Resumed(operator=first.operator, torn=head.torn or "")
+            session = Session(job, keeper, front, setting.hands, setting.clock)
+            session.state = state
+            session.seq = state.count
+            self.session = session
+            for push in early:
+                session.on_push(push)
+            return await session.run(first)
+        finally:
+            await in_thread(keeper.close)
+
+
+def events_of(path: Path) -> list[tuple[Event, float]]:
+    """Read the events of a record with their times (s).
+
+    Raises
+    ------
+    RecordError
+        When the record is broken before its end.
+    """
+    journal = reader.read(path)
+    if journal.problem:
+        raise RecordError(str(path), f"line {journal.problem_line}", journal.problem, "", "A broken record can't go on")
+    return [(from_payload(line.event, line.payload), line.monotonic_s) for line in journal.lines]
+
+
+def replayed(walk: Walk, path: Path) -> State:
+    """Replay a record and return where its walk stands.
+
+    Raises
+    ------
+    RecordError
+        When it is finished, or doesn't fit this version's plan.
+    """
+    events = events_of(path)
+    try:
+        state, _ = walk.replay(events)
+    except BenchkitError as error:
+        raise RecordError(str(path), "", f"the record doesn't fit the plan: {error}") from None
+    if state.closed is not None:
+        raise RecordError(
+            str(path), "", "this walk is finished", "one that was cut off", "Look at it with benchkit record show"
+        )
+    return state
+
+
+def opened_of(path: Path) -> WalkOpened:
+    """Return the first event of a record.
+
+    Raises
+    ------
+    RecordError
+    """
+    events = events_of(path)
+    if not events or not isinstance(events[0][0], WalkOpened):
+        raise RecordError(str(path), "line 1", "this is not the beginning of a walk", "a record of benchkit")
+    return events[0][0]
+
+
+def design_and_procedure(opened: WalkOpened, path: Path) -> tuple[Design, Procedure]:
+    """Take design and procedure out of a record.
+
+    Raises
+    ------
+    FileError
+    """
+    try:
+        return (
+            parse_design(opened.design_text, f"{path.name} (design)"),
+            parse_procedure(opened.procedure_text, f"{path.name} (procedure)"),
+        )
+    except FileError as error:
+        raise RecordError(str(path), "line 1", str(error)) from None

@@ -1,0 +1,510 @@
+"""Design files, format 1: reading, checking, and what follows from them without solving anything.
+
+A design file is TOML. It is checked in three passes, each of which names the file and the dotted key:
+
+1. TOML itself (`tomllib`): the line and column of a syntax error.
+2. Shape and quantities (pydantic, unknown keys refused): every key has its unit, its sign and its range here.
+3. Sense: devices exist and have the polarity of their place, keys fit the topology, the trimmer has a track left.
+
+Last comes the question whether this version has a model of the topology (`benchkit.stage.topologies`).
+
+Attributes carry their unit (``rails.positive_v``); the keys in the file are those of the format (``rails.positive``).
+A value with a tolerance is a `Tolerance`: the marked value in the base unit and the half-width as a fraction.
+"""
+
+from __future__ import annotations
+
+import difflib
+import hashlib
+import tomllib
+from collections.abc import Callable, Mapping
+from pathlib import Path
+from typing import Annotated, Any, Literal, NamedTuple
+
+from pydantic import BaseModel, BeforeValidator, ConfigDict, Field, PrivateAttr, ValidationError
+from pydantic_core import PydanticCustomError
+
+from benchkit.errors import EntryError, FileError
+from benchkit.quantities import Tolerance, parse, parse_tolerance, quoted
+
+BOLTZMANN_J_PER_K = 1.380649e-23
+CHARGE_C = 1.602176634e-19
+ZERO_CELSIUS_K = 273.15
+
+DEVICE_PARAMETERS = (
+    "IS", "BF", "NF", "VAF", "IKF", "ISE", "NE", "BR", "NR", "VAR",
+    "IKR", "ISC", "NC", "RB", "RE", "RC", "XTI", "EG", "XTB",
+)  # fmt: skip
+"""Gummel-Poon d.c. parameters that a device table may set; an absent one has its published default."""
+
+_MAY_BE_ZERO = frozenset({"ISE", "ISC", "RB", "RE", "RC", "XTI", "XTB"})
+
+Topology = Literal[
+    "single-emitter-follower", "double-emitter-follower", "triple-emitter-follower", "complementary-feedback-pair"
+]
+
+
+class Rest(NamedTuple):
+    """Where the output rests: a voltage, or a share of the span between the rails (the other one is None)."""
+
+    volts: float | None
+    share: float | None
+
+
+class Feed(NamedTuple):
+    """One of the two feeds of the spreader.
+
+    Attributes
+    ----------
+    kind : str
+        "source", "resistor" or "servo".
+    value : Tolerance
+        Amperes of a source, ohms of a resistor; (0, 0) for a servo.
+    """
+
+    kind: Literal["source", "resistor", "servo"]
+    value: Tolerance
+
+
+def _refuse(came: str, expected: str, next_step: str = "") -> PydanticCustomError:
+    return PydanticCustomError("benchkit", "{came}", {"came": came, "expected": expected, "next_step": next_step})
+
+
+def _as_text(value: object, unit: str) -> str:
+    """TOML numbers are quantities in the base unit; anything but text and numbers is refused."""
+    if isinstance(value, bool) or not isinstance(value, (str, int, float)):
+        raise _refuse(f"{quoted(value)} came instead of a quantity", f'a quantity in {unit}, such as "1 {unit}"')
+    return value if isinstance(value, str) else repr(value)
+
+
+def _checked(read: Callable[[str, str], Any], value: object, unit: str) -> Any:
+    try:
+        return read(_as_text(value, unit), unit)
+    except EntryError as error:
+        raise _refuse(error.came, error.expected, error.next_step) from None
+
+
+def _quantity(
+    unit: str, *, above: float | None = None, least: float | None = None, most: float | None = None
+) -> BeforeValidator:
+    """Make a validator for a plain quantity within (above, most] or [least, most]."""
+
+    def validate(value: object) -> float:
+        number = float(_checked(parse, value, unit))
+        _within(number, value, unit, above, least, most)
+        return number
+
+    return BeforeValidator(validate)
+
+
+def _toleranced(unit: str, *, above: float = 0.0) -> BeforeValidator:
+    """Make a validator for a marked value with a tolerance."""
+
+    def validate(value: object) -> Tolerance:
+        marked: Tolerance = _checked(parse_tolerance, value, unit)
+        _within(marked.value, value, unit, above, None, None)
+        return marked
+
+    return BeforeValidator(validate)
+
+
+def _within(
+    number: float, shown: object, unit: str, above: float | None, least: float | None, most: float | None
+) -> None:
+    if above is not None and number <= above:
+        raise _refuse(f"{quoted(str(shown))} came", f"more than {above:g} {unit}")
+    if least is not None and number < least:
+        raise _refuse(f"{quoted(str(shown))} came", f"{least:g} {unit} or more")
+    if most is not None and number > most:
+        raise _refuse(f"{quoted(str(shown))} came", f"{most:g} {unit} or less")
+
+
+def _percent(value: object) -> float:
+    """Read "10 %" as the fraction 0.1; the sign % must be there, because 0.1 and 10 are easily mistaken."""
+    if not isinstance(value, str) or "%" not in value:
+        raise _refuse(f"{quoted(value)} came", 'a percentage, such as "10 %"')
+    number = float(_checked(parse, value, "%"))
+    _within(number, value, "%", 0.0, None, 1000.0)
+    return number / 100.0
+
+
+def _feed(value: object) -> Feed:
+    if value == "servo":
+        return Feed("servo", Tolerance(0.0, 0.0))
+    text = _as_text(value, "ohm")
+    found: list[Feed] = []
+    kinds: tuple[tuple[Literal["resistor", "source"], str], ...] = (("resistor", "ohm"), ("source", "A"))
+    for kind, unit in kinds:
+        try:
+            found.append(Feed(kind, parse_tolerance(text, unit)))
+        except EntryError:
+            continue
+    if len(found) != 1:
+        why = "is neither" if not found else "could be either"
+        raise _refuse(
+            f"{quoted(text)} {why}",
+            'a current such as "8 mA 5 %", a resistor such as "1 kohm 1 %", or "servo" (below only)',
+        )
+    _within(found[0].value.value, text, "ohm" if found[0].kind == "resistor" else "A", 0.0, None, None)
+    return found[0]
+
+
+def _rest(value: object) -> Rest:
+    if isinstance(value, str) and "%" in value:
+        share = float(_checked(parse, value, "%"))
+        _within(share, value, "%", 0.0, None, 99.0)
+        return Rest(None, share / 100.0)
+    return Rest(float(_checked(parse, value, "V")), None)
+
+
+Text = Annotated[str, Field(min_length=1, max_length=200)]
+Volts = Annotated[float, _quantity("V")]
+PositiveVolts = Annotated[float, _quantity("V", above=0.0)]
+NegativeVolts = Annotated[float, _quantity("V", most=0.0)]
+PositiveAmps = Annotated[float, _quantity("A", above=0.0)]
+PositiveFarads = Annotated[float, _quantity("F", above=0.0)]
+PositiveOhms = Annotated[float, _quantity("ohm", above=0.0)]
+Celsius = Annotated[float, _quantity("degC", least=-55.0, most=200.0)]
+KelvinPerWatt = Annotated[float, _quantity("K/W", least=0.0)]
+JoulePerKelvin = Annotated[float, _quantity("J/K", above=0.0)]
+Seconds = Annotated[float, _quantity("s", least=0.0)]
+PositiveWatts = Annotated[float, _quantity("W", above=0.0)]
+Fraction = Annotated[float, BeforeValidator(_percent)]
+Ohms = Annotated[Tolerance, _toleranced("ohm")]
+Amps = Annotated[Tolerance, _toleranced("A")]
+AnyFeed = Annotated[Feed, BeforeValidator(_feed)]
+AnyRest = Annotated[Rest, BeforeValidator(_rest)]
+Tracking = Annotated[float, Field(ge=0.0, le=1.5, strict=False)]
+
+
+class _Table(BaseModel):
+    model_config = ConfigDict(frozen=True, extra="forbid", populate_by_name=False, allow_inf_nan=False)
+
+
+class Head(_Table):
+    """``[design]``."""
+
+    format: Literal[1]
+    name: Text
+    revision: Text
+
+
+class Rails(_Table):
+    """``[rails]``: set values at full voltage and what else hangs on the rails."""
+
+    positive_v: PositiveVolts = Field(alias="positive")
+    negative_v: NegativeVolts = Field(alias="negative")
+    reservoir_f: PositiveFarads | None = Field(None, alias="reservoir")
+    bleed: Ohms | None = None
+    local_capacitors_f: PositiveFarads | None = Field(None, alias="local_capacitors")
+    other_positive: Amps | None = None
+    other_negative: Amps | None = None
+
+
+class Feeds(_Table):
+    """``[feed]``: what sends current through the spreader."""
+
+    upper: AnyFeed
+    lower: AnyFeed
+    max_current_a: PositiveAmps | None = Field(None, alias="max_current")
+    works_from_v: PositiveVolts | None = Field(None, alias="works_from")
+    settles_after_s: Seconds | None = Field(None, alias="settles_after")
+
+
+class Trimmer(_Table):
+    """``[spreader.trimmer]``."""
+
+    value: Ohms
+    arm: Literal["lower", "upper", "between"]
+    end_resistance_ohm: Annotated[float, _quantity("ohm", least=0.0)] = Field(0.0, alias="end_resistance")
+    turns: Annotated[float, Field(gt=0.0, le=100.0)]
+    raises_bias: Literal["clockwise", "anticlockwise"]
+    wiring: Literal["series", "tied"]
+
+
+class Spreader(_Table):
+    """``[spreader]``: the bias spreader between the two output-stage bases."""
+
+    transistor: Text
+    upper: Ohms
+    lower: Ohms
+    collector_resistor: Ohms | None = None
+    bypass_f: PositiveFarads | None = Field(None, alias="bypass")
+    trimmer: Trimmer | None = None
+
+
+class Output(_Table):
+    """``[output]``: the followers."""
+
+    topology: Topology
+    pairs: Annotated[int, Field(ge=1, le=12, strict=True)] = 1
+    upper: Text
+    lower: Text
+    driver_upper: Text | None = None
+    driver_lower: Text | None = None
+    driver_resistor: Ohms | None = None
+    driver_resistor_to: Literal["each other", "output"] = "each other"
+    predriver_upper: Text | None = None
+    predriver_lower: Text | None = None
+    predriver_resistor: Ohms | None = None
+    emitter_resistor: Ohms
+    base_stopper: Ohms | None = None
+    rest: AnyRest
+    offset_v: Annotated[float, _quantity("V", least=0.0)] = Field(0.02, alias="offset")
+
+
+class Target(_Table):
+    """``[target]``: one of emitter drop, quiescent current, or the optimum."""
+
+    emitter_drop_v: PositiveVolts | None = Field(None, alias="emitter_drop")
+    quiescent_current_a: PositiveAmps | None = Field(None, alias="quiescent_current")
+    optimum: Literal[True] | None = None
+    tolerance: Fraction
+    when: Literal["warm", "cold"]
+
+
+class Thermal(_Table):
+    """``[thermal]``."""
+
+    ambient_c: Celsius = Field(alias="ambient")
+    heatsink_k_per_w: KelvinPerWatt = Field(alias="heatsink")
+    heatsink_capacity_j_per_k: JoulePerKelvin = Field(alias="heatsink_capacity")
+    junction_to_heatsink_k_per_w: KelvinPerWatt = Field(alias="junction_to_heatsink")
+    spreader_tracking: Tracking
+    driver_tracking: Tracking | None = None
+    driver_to_ambient_k_per_w: KelvinPerWatt = Field(0.0, alias="driver_to_ambient")
+    spreader_to_ambient_k_per_w: KelvinPerWatt = Field(0.0, alias="spreader_to_ambient")
+    spreader_lag_s: Seconds = Field(0.0, alias="spreader_lag")
+    max_heatsink_c: Celsius = Field(alias="max_heatsink")
+
+
+class Rating(_Table):
+    """One entry of ``[ratings]``."""
+
+    power_w: PositiveWatts | None = Field(None, alias="power")
+    junction_c: Celsius | None = Field(None, alias="junction")
+    voltage_v: PositiveVolts | None = Field(None, alias="voltage")
+    current_a: PositiveAmps | None = Field(None, alias="current")
+
+
+class Device(_Table):
+    """``[device.NAME]``: Gummel-Poon parameters at 27 degC in SI units, and their spread."""
+
+    polarity: Literal["npn", "pnp"]
+    parameters: Mapping[str, float]
+    spread: Mapping[str, Fraction] = Field(default_factory=dict)
+
+
+class Design(_Table):
+    """A whole design file, checked.
+
+    Attributes
+    ----------
+    head, rails, feed, spreader, output, target, thermal, ratings, device
+        The tables of the file; ``head`` is ``[design]``.
+    """
+
+    head: Head = Field(alias="design")
+    rails: Rails
+    feed: Feeds
+    spreader: Spreader
+    output: Output
+    target: Target
+    thermal: Thermal
+    ratings: Mapping[str, Rating] = Field(default_factory=dict)
+    device: Mapping[str, Device]
+    _text: str = PrivateAttr("")
+    _file: str = PrivateAttr("")
+
+    @property
+    def name(self) -> str:
+        """Name of the design."""
+        return self.head.name
+
+    @property
+    def revision(self) -> str:
+        """Revision of the design."""
+        return self.head.revision
+
+    @property
+    def text(self) -> str:
+        """The file's own text, as read."""
+        return self._text
+
+    @property
+    def file(self) -> str:
+        """The file's name as the user gave it."""
+        return self._file
+
+    @property
+    def sha256(self) -> str:
+        """SHA-256 of the text in UTF-8, hexadecimal."""
+        return hashlib.sha256(self._text.encode("utf-8")).hexdigest()
+
+    def __hash__(self) -> int:
+        return int.from_bytes(hashlib.sha256(self._text.encode("utf-8")).digest()[:7], "big")
+
+    def __eq__(self, other: object) -> bool:
+        return isinstance(other, Design) and self._text == other._text and self._file == other._file
+
+    def rest_v(self, positive_v: float, negative_v: float) -> float:
+        """Rest voltage of the output (V) at the given rails (V)."""
+        if self.output.rest.share is None:
+            return float(self.output.rest.volts or 0.0)
+        return negative_v + self.output.rest.share * (positive_v - negative_v)
+
+    @property
+    def servo_max_a(self) -> float:
+        """Most current (A) that the servo can take; without ``max_current`` three times what the upper feed sends."""
+        if self.feed.max_current_a is not None:
+            return self.feed.max_current_a
+        if self.feed.upper.kind == "source":
+            return 3.0 * self.feed.upper.value.value
+        return 3.0 * self.rails.positive_v / self.feed.upper.value.value
+
+
+def load_design(path: str | Path) -> Design:
+    """Read and check a design file.
+
+    Parameters
+    ----------
+    path : str or Path
+        A TOML file in UTF-8.
+
+    Returns
+    -------
+    Design
+        Frozen; ``text`` and ``sha256`` are those of the file.
+
+    Raises
+    ------
+    FileError
+        With the file and the dotted key.
+    """
+    try:
+        text = Path(path).read_bytes().decode("utf-8")
+    except OSError as error:
+        reason = error.strerror or type(error).__name__
+        raise FileError(str(path), "", f"the file can't be read ({reason})", "a design file (TOML)") from None
+    except UnicodeDecodeError as error:
+        raise FileError(str(path), "", f"byte {error.start} is not UTF-8", "a text file in UTF-8") from None
+    return parse_design(text, str(path))
+
+
+def parse_design(text: str, file_name: str = "design") -> Design:
+    """Check the text of a design file.
+
+    Parameters
+    ----------
+    text : str
+        TOML, format 1.
+    file_name : str
+        What messages call the file.
+
+    Returns
+    -------
+    Design
+
+    Raises
+    ------
+    FileError
+        For broken TOML, a wrong or unknown key, or a topology without a model.
+    """
+    from benchkit.stage.design_checks import check_sense
+
+    try:
+        # A byte order mark at the start and Windows line ends are how some editors save; neither changes the meaning.
+        tables = tomllib.loads(text.removeprefix("\ufeff").replace("\r\n", "\n"))
+    except tomllib.TOMLDecodeError as error:
+        raise FileError(file_name, "", f"this is no valid TOML: {error}", "a design file, format 1") from None
+    head = tables.get("design")
+    if isinstance(head, dict) and "format" in head and (isinstance(head["format"], bool) or head["format"] != 1):
+        raise FileError(
+            file_name, "design.format", f"{quoted(str(head['format']))} came", "1, the format that this version reads"
+        )
+    try:
+        design = Design.model_validate(tables)
+    except ValidationError as error:
+        raise _file_error(error, file_name) from None
+    design._text = text
+    design._file = file_name
+    check_sense(design, file_name)
+    return design
+
+
+def target_drop_v(design: Design) -> float:
+    """Emitter drop (V) at the target, with every part at its nominal value.
+
+    Notes
+    -----
+    The optimum of emitter followers is I_Q*(R_E + re + rb/hFE) = VT at the ambient temperature, with the mean of the
+    two output devices' ohmic RE and RB/BF: B. M. Oliver, *Distortion in Complementary Pair Class B Amplifiers*,
+    Hewlett-Packard Journal, February 1971.
+    """
+    emitter_ohm = design.output.emitter_resistor.value
+    target = design.target
+    if target.emitter_drop_v is not None:
+        return target.emitter_drop_v
+    if target.quiescent_current_a is not None:
+        return target.quiescent_current_a / design.output.pairs * emitter_ohm
+    thermal_v = BOLTZMANN_J_PER_K * (design.thermal.ambient_c + ZERO_CELSIUS_K) / CHARGE_C
+    extra_ohm = 0.0
+    for name in (design.output.upper, design.output.lower):
+        parameters = design.device[name].parameters
+        extra_ohm += 0.5 * (parameters.get("RE", 0.0) + parameters.get("RB", 0.0) / parameters.get("BF", 100.0))
+    return emitter_ohm * thermal_v / (emitter_ohm + extra_ohm)
+
+
+def _file_error(error: ValidationError, file_name: str) -> FileError:
+    """Turn pydantic's findings into one message: the first in full, the others by their keys."""
+    findings = error.errors()
+    first = findings[0]
+    key = ".".join(str(part) for part in first["loc"])
+    came, expected, next_step = _in_words(first, key)
+    others = [".".join(str(part) for part in found["loc"]) for found in findings[1:]]
+    if others:
+        also = f"Also look at {', '.join(others[:6])}{' and others' if len(others) > 6 else ''}"
+        next_step = f"{next_step}. {also}" if next_step else also
+    return FileError(file_name, key, came, expected, next_step)
+
+
+def _in_words(finding: Any, key: str) -> tuple[str, str, str]:
+    kind = finding["type"]
+    context = finding.get("ctx", {})
+    found = quoted(finding["input"] if isinstance(finding["input"], str) else repr(finding["input"]))
+    if kind == "benchkit":
+        return context["came"], context["expected"], context["next_step"]
+    if kind == "missing":
+        return "the key is missing", "it, because the model needs its value", ""
+    if kind == "extra_forbidden":
+        known = known_keys(key.rpartition(".")[0])
+        near = difflib.get_close_matches(key.rpartition(".")[2], known, 1)
+        hint = f'Did you mean "{near[0]}"?' if near else ""
+        return "this key is not known", "one of " + ", ".join(known) if known else "no such key", hint
+    if kind == "literal_error":
+        return f"{found} came", str(context["expected"]), ""
+    if kind in {"model_type", "dict_type", "mapping_type"}:
+        return f"{found} came", "a table", ""
+    return f"{found} came", str(finding["msg"])[:1].lower() + str(finding["msg"])[1:], ""
+
+
+_TABLES: Mapping[str, type[BaseModel]] = {
+    "": Design,
+    "design": Head,
+    "rails": Rails,
+    "feed": Feeds,
+    "spreader": Spreader,
+    "spreader.trimmer": Trimmer,
+    "output": Output,
+    "target": Target,
+    "thermal": Thermal,
+}
+
+
+def known_keys(table: str) -> tuple[str, ...]:
+    """Keys that the dotted table may hold, as written in the file; empty where names are free."""
+    outer = table.partition(".")[0]
+    model = _TABLES.get(table)
+    if model is None and table.count(".") >= 1:
+        model = {"device": Device, "ratings": Rating}.get(outer)
+    return tuple(field.alias or name for name, field in model.model_fields.items()) if model else ()

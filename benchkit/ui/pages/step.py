@@ -1,0 +1,73 @@
+"""The usual moment: do this, then say so; below it the last reading against its limits."""
+
+from __future__ import annotations
+
+from typing import Any
+
+from benchkit.procedure.actions import Question
+from benchkit.session.front import View
+from benchkit.ui.pages.base import Page
+from benchkit.ui.widgets.outcome import Outcome
+from benchkit.ui.widgets.words import Words
+
+
+class StepPage(Page):
+    """Sheet, last result, answer."""
+
+    def __init__(self, guard_s: float, **more: Any) -> None:
+        super().__init__(guard_s, **more)
+        self._outcome = Outcome(classes="outcome")
+
+    def compose(self) -> Any:
+        """Lay out from what to do, over what came of the last, to the answer."""
+        yield self.card
+        yield self._outcome
+        yield self.answer
+
+    def say(self, view: View) -> None:
+        """Show the walk."""
+        super().say(view)
+        self._outcome.say(view.results)
+
+
+class HoldPage(Page):
+    """A point that nobody passes without typing yes; framed, so that it looks like nothing else."""
+
+    def __init__(self, guard_s: float, **more: Any) -> None:
+        super().__init__(guard_s, **more)
+        self._frame = Words(classes="hold-title")
+
+    def compose(self) -> Any:
+        """Lay out the frame's title, the sheet and the entry."""
+        yield self._frame
+        yield self.card
+        yield self.answer
+
+    def put(self, question: Question, refused: str) -> None:
+        """Put the question under its title."""
+        super().put(question, refused)
+        self._frame.say(f"HOLD POINT: {question.title}")
+
+
+class DecidePage(Page):
+    """A reading that did not pass: what it was, how far off, and what can be done; choices one a row."""
+
+    def __init__(self, guard_s: float, **more: Any) -> None:
+        super().__init__(guard_s, **more)
+        self._outcome = Outcome(classes="outcome deciding")
+
+    def compose(self) -> Any:
+        """Lay out the result first: it is what the decision is about."""
+        yield self._outcome
+        yield self.card
+        yield self.answer
+
+    def put(self, question: Question, refused: str) -> None:
+        """Put the question with its choices one under the other."""
+        super().put(question, refused)
+        self.answer.put(question, refused, stacked=True)
+
+    def say(self, view: View) -> None:
+        """Show the walk."""
+        super().say(view)
+        self._outcome.say(view.results)

@@ -1,0 +1,68 @@
+"""The end of a walk: the verdict in words, what did not pass, where the record is."""
+
+from __future__ import annotations
+
+from typing import Any
+
+from rich.text import Text
+from textual.containers import VerticalScroll
+
+from benchkit.procedure.actions import Choice, Question
+from benchkit.session.front import View
+from benchkit.ui.look import DEFERENCE, INK, QUIET, STRONG, VERDICT_COLOURS, safe
+from benchkit.ui.pages.base import Page
+from benchkit.ui.widgets.outcome import result_line, verdict_strip
+from benchkit.ui.widgets.summary_words import closing_sentence, still_open
+from benchkit.ui.widgets.trail_words import count_by_verdict
+from benchkit.ui.widgets.words import Words
+
+LEAVE = Question(
+    item="", kind="tell", title="Finished", do="", choices=(Choice(value="leave", label="leave benchkit"),)
+)
+
+
+class SummaryPage(Page):
+    """Verdict, sentence, results that did not pass, record."""
+
+    def __init__(self, guard_s: float, **more: Any) -> None:
+        super().__init__(guard_s, **more)
+        self._verdict = Words(classes="summary-verdict")
+        self._body = Words(classes="summary-body")
+        self._scroll = VerticalScroll(self._body, classes="summary-scroll", can_focus=False)
+        self._asked = False
+
+    def compose(self) -> Any:
+        """Lay out verdict, body, answer."""
+        yield self._verdict
+        yield self._scroll
+        yield self.answer
+
+    def put(self, question: Question, refused: str) -> None:
+        """Put the last question of all: leave."""
+        self.question = question
+        self.answer.put(question, refused)
+
+    def say(self, view: View) -> None:
+        """Show how the walk ended."""
+        sentence = closing_sentence(view)
+        self._verdict.say(Text.assemble(verdict_strip(view.verdict), "\n\n", (safe(sentence), f"bold {STRONG}")))
+        lines: list[Text] = [Text(count_by_verdict([result.verdict for result in view.results]) + ".", style=INK)]
+        open_results = still_open(view.results)
+        if open_results:
+            lines.append(Text(""))
+            for result in open_results:
+                lines.append(result_line(result))
+                if result.why:
+                    lines.append(Text(f"    {safe(result.why)}", style=VERDICT_COLOURS[result.verdict]))
+        lines.append(Text(""))
+        lines.append(Text(f"{safe(view.design)}, unit {safe(view.unit)}, by {safe(view.operator)}", style=INK))
+        lines.append(Text(f"The record holds {view.kept} lines: {safe(view.record)}", style=INK))
+        if view.kind == "rehearsal":
+            lines.append(Text("A rehearsal on a simulated unit: it says nothing about a real one.", style=INK))
+        lines.append(Text(""))
+        lines.append(Text(DEFERENCE, style=QUIET))
+        self._body.say(Text("\n").join(lines))
+
+    def turn_over(self, rows: int) -> None:
+        """Move the body."""
+        self._scroll.scroll_relative(y=rows, animate=False)

@@ -1,0 +1,176 @@
+"""Plain mode: the same walk in lines of text, for any terminal, a screen reader or a pipe.
+
+Each question is numbered answers and a prompt.  ``off`` at any prompt, or Ctrl+C at any moment, switches the supply off.
+"""
+
+from __future__ import annotations
+
+import asyncio
+import sys
+import textwrap
+import threading
+from collections.abc import Callable
+from typing import TextIO
+
+from benchkit.procedure.actions import Question
+from benchkit.session.front import Reply, View
+
+WIDTH = 78
+
+
+class PlainFront:
+    """Prints what a screen would show and reads lines.
+
+    Parameters
+    ----------
+    off_now : callable
+        Switches the supply off at once.
+    out, source : text streams
+    """
+
+    def __init__(
+        self, off_now: Callable[[str], None], *, out: TextIO | None = None, source: TextIO | None = None
+    ) -> None:
+        self._off_now = off_now
+        self._out = out or sys.stdout
+        self._source = source or sys.stdin
+        self._told: dict[str, str] = {}
+        self._busy = ""
+        self._supply = ""
+        self._section = ""
+        self._message = ""
+        self._view: View | None = None
+        self._lines: asyncio.Queue[str | None] = asyncio.Queue()
+        self._loop = asyncio.get_running_loop()
+        threading.Thread(target=self._listen, name="benchkit-lines", daemon=True).start()
+
+    def show(self, view: View) -> None:
+        """Print what has changed."""
+        self._view = view
+        if view.section_title != self._section:
+            self._section = view.section_title
+            self._print(f"\n== {view.section_title} ==")
+        for result in view.results:
+            line = f"{result.value_text} {result.verdict} {result.why}"
+            if self._told.get(result.item) != line:
+                self._told[result.item] = line
+                value = f" {result.value_text}" if result.value_text else ""
+                self._print(f"  [{result.verdict.upper()}] {result.title}{value}. {result.why}")
+        if view.busy and view.busy != self._busy:
+            self._print(f"  ... {view.busy}")
+        self._busy = view.busy
+        if view.supply.energised != self._supply:
+            self._supply = view.supply.energised
+            self._print(f"  {view.supply.words}")
+        if view.message and view.message != self._message:
+            self._message = view.message
+            self._print(f"  ! {view.message}")
+
+    async def ask(self, question: Question, refused: str = "") -> Reply:
+        """Print the question and read one line."""
+        if refused:
+            self._print(f"  ! {refused}")
+        else:
+            self._put(question)
+        while True:
+            self._out.write(self._prompt(question))
+            self._out.flush()
+            line = await self._lines.get()
+            if line is None:
+                self._off_now("the input of the terminal has ended")
+                await asyncio.sleep(3600)
+            assert line is not None
+            text = line.strip()
+            if text.lower() == "off":
+                self._off_now("the operator typed off")
+                await asyncio.sleep(3600)
+            reply = self._reply(question, text)
+            if reply is not None:
+                return reply
+            self._print("  ! Answer with a number, or type off to switch the supply off.")
+
+    def _put(self, question: Question) -> None:
+        view = self._view
+        where = f"({view.item_number} of {view.item_count}) " if view is not None else ""
+        self._print("")
+        self._wrapped(f"{where}{question.title}", "")
+        self._wrapped(question.do, "  ")
+        if question.red:
+            self._wrapped(f"Red: {question.red}.", "  ")
+        if question.black:
+            self._wrapped(f"Black: {question.black}.", "  ")
+        if question.expected:
+            self._wrapped(f"Expected: {question.expected}.", "  ")
+        if question.why:
+            self._wrapped(f"Why: {question.why}", "  ")
+        if question.caution:
+            self._wrapped(f"CAUTION: {question.caution}", "  ")
+        for number, choice in enumerate(question.choices, start=1):
+            reason = " (with the reason behind it)" if choice.wants_reason else ""
+            self._print(f"    {number} {choice.label}{reason}")
+        if question.kind == "trim" and view is not None and view.kind == "rehearsal":
+            self._print("    + or - and turns, such as +0.25, turns the simulated screw towards more or less bias")
+            if view.live is not None:
+                self._print(f"    now {view.live.text}")
+
+    def _prompt(self, question: Question) -> str:
+        live = self._view.live if self._view is not None and question.kind == "trim" else None
+        now = f" now {live.text}" if live is not None else ""
+        if question.kind == "hold":
+            return "  type yes, or 2 to make safe> "
+        return f" {now}> "
+
+    def _reply(self, question: Question, text: str) -> Reply | None:
+        first, _, rest = text.partition(" ")
+        if question.kind == "hold" and text.lower() == "yes":
+            return Reply(choice="yes", text="yes")
+        if question.kind == "trim" and first[:1] in ("+", "-") and self._view is not None:
+            try:
+                return Reply(choice="turn", turns=float(first))
+            except ValueError:
+                return None
+        if not text and question.kind in ("tell", "probes", "trim"):
+            if question.kind == "trim":
+                return Reply(choice="turn", turns=0.0) if self._view and self._view.kind == "rehearsal" else None
+            return Reply(choice=question.choices[0].value)
+        if question.kind in ("by hand", "text") and not _is_number_of(first, question) and text:
+            return Reply(choice=question.choices[0].value, text=text)
+        if question.kind == "by hand" and not text and len(question.choices) == 1:
+            return Reply(choice=question.choices[0].value)
+        for choice in question.choices:
+            if text.lower() == choice.value and not (question.kind == "hold" and choice.value == "yes"):
+                return Reply(choice=choice.value)
+        if _is_number_of(first, question):
+            chosen = question.choices[int(first) - 1]
+            if question.kind == "hold" and chosen.value == "yes":
+                return None
+            return Reply(choice=chosen.value, text=rest.strip())
+        return None
+
+    def _listen(self) -> None:
+        while True:
+            try:
+                line = self._source.readline()
+            except (OSError, ValueError):
+                line = ""
+            try:
+                self._loop.call_soon_threadsafe(self._lines.put_nowait, line or None)
+            except RuntimeError:
+                return
+            if not line:
+                return
+
+    def _wrapped(self, text: str, indent: str) -> None:
+        if text:
+            self._print(textwrap.fill(text, WIDTH, initial_indent=indent, subsequent_indent=indent + "  "))
+
+    def _print(self, text: str) -> None:
+        self._out.write(f"{text}\n")
+        self._out.flush()
+
+
+def _is_number_of(word: str, question: Question) -> bool:
+    """A bare whole number that is one of the choices; "2" for a by-hand entry is a choice, "2 V" is not."""
+    if not word.isascii() or not word.isdigit() or len(word) > 2:
+        return False
+    return 1 <= int(word) <= len(question.choices)

@@ -1,0 +1,1 @@
+"""Whole screens: the start, the walk, and the question before leaving."""

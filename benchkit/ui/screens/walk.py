@@ -1,0 +1,150 @@
+"""The screen of a walk: head, trail, the page of the moment, message, off line."""
+
+from __future__ import annotations
+
+from typing import Any, Final
+
+from rich.table import Table
+from rich.text import Text
+from textual.binding import Binding
+from textual.widgets import ContentSwitcher
+
+from benchkit.procedure.actions import Question
+from benchkit.session.front import View
+from benchkit.ui.look import CARE, INK, LINE, QUIET, STRONG, VERDICT_COLOURS, safe
+from benchkit.ui.pages.base import Page
+from benchkit.ui.pages.step import DecidePage, HoldPage, StepPage
+from benchkit.ui.pages.summary import LEAVE, SummaryPage
+from benchkit.ui.pages.trim import TrimPage
+from benchkit.ui.screens.base import BenchScreen
+from benchkit.ui.widgets.answer import Answer
+from benchkit.ui.widgets.trail_words import Role, trail
+from benchkit.ui.widgets.words import Words
+
+PAGE_FOR: Final[dict[str, str]] = {"hold": "hold", "decide": "decide", "trim": "trim"}
+"""Page of a kind of question; every other kind has the step page."""
+
+_ROLE_STYLES: Final[dict[Role, str]] = {
+    **{verdict: f"bold {colour}" for verdict, colour in VERDICT_COLOURS.items()},  # type: ignore[dict-item]
+    "here": f"bold reverse {INK}",
+    "coming": QUIET,
+    "line": LINE,
+}
+
+
+class WalkScreen(BenchScreen):
+    """Everything between the start and the end of a walk."""
+
+    BINDINGS = [
+        Binding("pageup", "turn_over(-6)", show=False),
+        Binding("pagedown", "turn_over(6)", show=False),
+        Binding("up", "turn_over(-1)", show=False),
+        Binding("down", "turn_over(1)", show=False),
+    ]
+
+    def __init__(self, guard_s: float, **more: Any) -> None:
+        super().__init__(**more)
+        self._head = Words(classes="walk-head")
+        self._trail = Words(classes="walk-trail")
+        self._message = Words(classes="walk-message")
+        self._pages: dict[str, Page] = {
+            "step": StepPage(guard_s, id="step"),
+            "hold": HoldPage(guard_s, id="hold"),
+            "decide": DecidePage(guard_s, id="decide"),
+            "trim": TrimPage(guard_s, id="trim"),
+            "summary": SummaryPage(guard_s, id="summary"),
+        }
+        self._switcher = ContentSwitcher(*self._pages.values(), initial="step", classes="walk-pages")
+        self._view: View | None = None
+
+    def compose_body(self) -> Any:
+        """Lay out from head to message."""
+        yield self._head
+        yield self._trail
+        yield self._switcher
+        yield self._message
+
+    @property
+    def page(self) -> Page:
+        """The page of the moment."""
+        return self._pages[self._switcher.current or "step"]
+
+    def put(self, question: Question, refused: str) -> None:
+        """Put a question on its page."""
+        self._turn_to(PAGE_FOR.get(question.kind, "step"))
+        self.page.put(question, refused)
+        if self._view is not None:
+            self.page.say(self._view)
+
+    def withdraw(self) -> None:
+        """Take the question away; a trim keeps its page until something else comes."""
+        self.page.withdraw()
+        if self._view is not None:
+            self.page.say(self._view)
+
+    def say(self, view: View) -> None:
+        """Show a picture of the walk."""
+        self._view = view
+        if view.exit_status is not None and self.page.id != "summary":
+            self._turn_to("summary")
+            self.page.put(LEAVE, "")
+        elif self.page.question is None and self.page.id not in ("step", "summary") and view.live is None:
+            self._turn_to("step")
+        self._say_head(view)
+        self._say_trail(view)
+        self.page.say(view)
+        self._message.say(view.message)
+        self.refresh_off_line()
+
+    def age(self) -> None:
+        """Let a watched reading grow old in sight."""
+        page = self.page
+        if isinstance(page, TrimPage):
+            page.age()
+
+    def arrange(self, width: int, height: int) -> None:
+        """Choose the layout; the trail has another form where there is room."""
+        super().arrange(width, height)
+        if self._view is not None and self.is_mounted:
+            self._say_trail(self._view)
+
+    def action_turn_over(self, rows: int) -> None:
+        """Move the sheet."""
+        self.page.turn_over(rows)
+
+    def on_answer_given(self, message: Answer.Given) -> None:
+        """Hand the answer on."""
+        message.stop()
+        if self.arrangement == "tiny":
+            return
+        if self.page.id == "summary":
+            self.bench.finish()
+        else:
+            self.bench.answered(message.reply)
+
+    def _turn_to(self, page: str) -> None:
+        if self._switcher.current != page:
+            self.page.withdraw()
+            self._switcher.current = page
+
+    def _say_head(self, view: View) -> None:
+        row = Table.grid(expand=True)
+        row.add_column(ratio=1, no_wrap=True, overflow="ellipsis")
+        row.add_column(justify="right", no_wrap=True)
+        left = Text.assemble(
+            (safe(view.design), f"bold {STRONG}"),
+            (f"  unit {safe(view.unit)}", INK),
+            (f"  {safe(view.operator)}", QUIET),
+        )
+        right = Text.assemble(
+            ("rehearsal  " if view.kind == "rehearsal" else "", f"bold {CARE}"), (f"{view.kept} lines kept", QUIET)
+        )
+        row.add_row(left, right)
+        self._head.say_drawn((left.plain, right.plain), row)
+
+    def _say_trail(self, view: View) -> None:
+        width = max(20, self.app.size.width - 2)
+        text = Text()
+        for piece in trail(view.sections, width, spelled=self.arrangement == "roomy"):
+            text.append(piece.text, style=_ROLE_STYLES[piece.role])
+        self._trail.say(text)

@@ -1,0 +1,236 @@
+"""How a person answers: choices by key, and an entry where something has to be typed."""
+
+from __future__ import annotations
+
+import time
+from collections.abc import Callable
+from typing import Any
+
+from rich.text import Text
+from textual import events
+from textual.containers import Vertical
+from textual.message import Message
+from textual.widgets import Input
+
+from benchkit.procedure.actions import Choice, Question
+from benchkit.session.front import Reply
+from benchkit.ui.look import CARE, INK, QUIET, STRONG, safe
+from benchkit.ui.widgets.answer_keys import keyed, typed_reply
+from benchkit.ui.widgets.words import Words
+
+GUARD_S = 0.3
+"""Keys pressed this soon after a question came up were meant for something else."""
+
+
+class Choices(Words, can_focus=True):
+    """The choices of a question: Enter takes the marked one, a letter takes its own, arrows move the mark."""
+
+    class Taken(Message):
+        """Posted when a choice was taken."""
+
+        def __init__(self, choice: Choice) -> None:
+            super().__init__()
+            self.choice = choice
+
+    def __init__(self, **more: Any) -> None:
+        super().__init__(**more)
+        self._choices: tuple[tuple[str, Choice], ...] = ()
+        self._marked = 0
+        self._stacked = False
+
+    def offer(self, choices: tuple[Choice, ...], *, stacked: bool = False, marked: int = 0) -> None:
+        """Offer `choices`, one a row when `stacked`."""
+        self._choices = keyed(choices)
+        self._marked = min(marked, max(0, len(choices) - 1))
+        self._stacked = stacked
+        self._draw()
+
+    def on_key(self, event: events.Key) -> None:
+        """Take or move."""
+        if not self._choices:
+            return
+        if event.key == "enter":
+            self.post_message(self.Taken(self._choices[self._marked][1]))
+        elif event.key in ("left", "right", "up", "down") and (self._stacked or event.key in ("left", "right")):
+            step = 1 if event.key in ("right", "down") else -1
+            self._marked = (self._marked + step) % len(self._choices)
+            self._draw()
+        else:
+            found = [choice for letter, choice in self._choices if event.character and event.character.lower() == letter]
+            if not found:
+                return
+            self.post_message(self.Taken(found[0]))
+        event.stop()
+        event.prevent_default()
+
+    def on_focus(self) -> None:
+        """Show the mark."""
+        self._draw()
+
+    def on_blur(self) -> None:
+        """Show that Enter goes elsewhere."""
+        self._draw()
+
+    def _draw(self) -> None:
+        text = Text()
+        for number, (letter, choice) in enumerate(self._choices):
+            if number:
+                text.append("\n" if self._stacked else "   ")
+            marked = number == self._marked and self.has_focus
+            key = "Enter" if marked else letter.upper()
+            text.append(f" {key} ", style=f"bold reverse {CARE}" if marked else f"bold {CARE}")
+            text.append(f" {safe(choice.label)}", style=f"bold {STRONG}" if marked else INK)
+            if marked and not self._stacked and letter != "enter":
+                text.append(f" ({letter.upper()})", style=QUIET)
+        self.say(text)
+
+
+class Answer(Vertical):
+    """The foot of every page: hint, entry, choices."""
+
+    class Given(Message):
+        """Posted when the person has answered."""
+
+        def __init__(self, reply: Reply) -> None:
+            super().__init__()
+            self.reply = reply
+
+    def __init__(self, *, clock: Callable[[], float] = time.monotonic, guard_s: float = GUARD_S, **more: Any) -> None:
+        super().__init__(**more)
+        self._clock = clock
+        self._guard_s = guard_s
+        self._question: Question | None = None
+        self._reason_for: Choice | None = None
+        self._since = 0.0
+        self._hint = Words(classes="answer-hint")
+        self._entry = Input(classes="answer-entry", compact=True, select_on_focus=False)
+        self._choices = Choices(classes="answer-choices")
+
+    def compose(self) -> Any:
+        """Lay out the three parts."""
+        yield self._hint
+        yield self._entry
+        yield self._choices
+
+    def on_mount(self) -> None:
+        """Begin without a question."""
+        self.withdraw()
+
+    @property
+    def typing(self) -> bool:
+        """Whether the entry is shown."""
+        return bool(self._entry.display)
+
+    def put(self, question: Question, refused: str = "", *, stacked: bool = False) -> None:
+        """Offer the answers of `question`; `refused` says why the last one could not be used."""
+        again = self._question is not None and self._question == question and bool(refused)
+        self._question = question
+        self._reason_for = None
+        self._since = self._clock()
+        self.display = True
+        types = wants_entry(question)
+        if not again:
+            self._entry.value = ""
+        self._hint.say(_hint(question, refused, types))
+        self._hint.set_class(bool(refused), "refused")
+        self._hint.display = bool(_hint(question, refused, types).plain)
+        self._entry.display = types
+        shown = question.choices
+        if types:
+            shown = tuple(choice for choice in question.choices if not _typed(question, choice))
+        self._choices.offer(shown, stacked=stacked)
+        self._choices.display = bool(shown)
+        self._focus()
+
+    def withdraw(self) -> None:
+        """Take everything away: there is nothing to answer."""
+        self._question = None
+        self._reason_for = None
+        self._entry.value = ""
+        self.display = False
+
+    def _focus(self) -> None:
+        (self._entry if self._entry.display else self._choices).focus(scroll_visible=False)
+
+    def _too_soon(self) -> bool:
+        return self._clock() - self._since < self._guard_s
+
+    def on_choices_taken(self, message: Choices.Taken) -> None:
+        """Answer, or ask why first."""
+        message.stop()
+        if self._question is None or self._too_soon():
+            return
+        if message.choice.wants_reason:
+            self._reason_for = message.choice
+            self._entry.value = ""
+            self._entry.display = True
+            self._choices.display = False
+            self._hint.display = True
+            self._hint.set_class(False, "refused")
+            self._hint.say(f"{message.choice.label}: why? Type the reason, Enter keeps it, Esc goes back.")
+            self._focus()
+            return
+        self._give(Reply(choice=message.choice.value))
+
+    def on_input_submitted(self, message: Input.Submitted) -> None:
+        """Answer with what was typed."""
+        message.stop()
+        question = self._question
+        if question is None or self._too_soon():
+            return
+        text = message.value.strip()
+        if self._reason_for is not None:
+            if text:
+                self._give(Reply(choice=self._reason_for.value, text=text))
+            else:
+                self._complain("A reason is needed; Esc goes back.")
+            return
+        reply = typed_reply(question, text)
+        if isinstance(reply, str):
+            self._complain(reply)
+        else:
+            self._give(reply)
+
+    def on_key(self, event: events.Key) -> None:
+        """Leave the reason again."""
+        if event.key == "escape" and self._reason_for is not None and self._question is not None:
+            event.stop()
+            self.put(self._question)
+
+    def _complain(self, words: str) -> None:
+        self._hint.display = True
+        self._hint.set_class(True, "refused")
+        self._hint.say(words)
+        self.app.bell()
+
+    def _give(self, reply: Reply) -> None:
+        self._question = None
+        self.withdraw()
+        self.post_message(self.Given(reply))
+
+
+def wants_entry(question: Question) -> bool:
+    """Return whether something is typed in answer to `question`."""
+    return question.kind in ("text", "hold", "by hand")
+
+
+def _typed(question: Question, choice: Choice) -> bool:
+    """Whether `choice` is given by typing instead of by key."""
+    if question.kind == "hold":
+        return choice.value == "yes"
+    return bool(question.choices) and choice == question.choices[0]
+
+
+def _hint(question: Question, refused: str, types: bool) -> Text:
+    if refused:
+        return Text(safe(refused))
+    if question.kind == "hold":
+        return Text("Type yes in full and press Enter. Nothing else passes this point.")
+    if not types:
+        return Text("")
+    label = safe(question.choices[0].label) if question.choices else "done"
+    if question.point:
+        return Text(f"Type what the meter shows, with its unit, then Enter ({label}).")
+    if question.kind == "by hand":
+        return Text(f"Type what is asked for, or nothing, then Enter ({label}).")
+    return Text(f"Type, then Enter ({label}).")

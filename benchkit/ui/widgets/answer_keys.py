@@ -1,0 +1,46 @@
+"""Which key takes which choice, and what a typed answer means: without a terminal."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+
+from benchkit.procedure.actions import Choice, Question
+from benchkit.session.front import Reply
+
+
+def keyed(choices: Sequence[Choice]) -> tuple[tuple[str, Choice], ...]:
+    """Return each choice with its letter: the first free letter of its value, else of its label, else a figure.
+
+    Examples
+    --------
+    >>> again, away = Choice(value="again", label="Read again"), Choice(value="away", label="Put it away")
+    >>> [letter for letter, _ in keyed([again, away])]
+    ['a', 'w']
+    """
+    taken: list[tuple[str, Choice]] = []
+    for number, choice in enumerate(choices, start=1):
+        used = {letter for letter, _ in taken}
+        letters = [letter for letter in (choice.value + choice.label).lower() if letter.isascii() and letter.isalpha()]
+        free = [letter for letter in letters if letter not in used]
+        taken.append((free[0] if free else str(number), choice))
+    return tuple(taken)
+
+
+def typed_reply(question: Question, text: str) -> Reply | str:
+    """Return the reply that `text` means, or in words why it means none.
+
+    At a hold point only the whole word ``yes`` passes; the other choices may be typed too.  Elsewhere the text goes to
+    the first choice as it is: whether it can be used is not for a screen to say.  What is done by hand without a test
+    point may be answered with nothing.
+    """
+    if question.kind == "hold":
+        word = text.casefold()
+        for choice in question.choices:
+            if word == choice.value.casefold() and not choice.wants_reason:
+                return Reply(choice=choice.value, text=text)
+        if not question.choices and word == "yes":
+            return Reply(choice="yes", text=text)
+        return f'"{text}" was typed. Only the whole word yes passes this point.' if text else "Nothing was typed yet."
+    if not text and (question.kind != "by hand" or question.point):
+        return "Nothing was typed yet."
+    return Reply(choice=question.choices[0].value if question.choices else "done", text=text)

@@ -1,0 +1,93 @@
+"""What to do now, where the probes go, what to expect and why, and what to beware of."""
+
+from __future__ import annotations
+
+from typing import Any
+
+from rich.table import Table
+from rich.text import Text
+from textual.containers import VerticalScroll
+
+from benchkit.procedure.actions import Question
+from benchkit.ui.look import BLOCK, CARE, INK, LIGHT_SHADE, QUIET, RED_LEAD, STRONG, UP, safe
+from benchkit.ui.widgets.words import Words
+
+
+def progress_words(share: float | None, remaining_s: float | None, width: int = 30) -> str:
+    """Return a bar with its share in words, and what remains.
+
+    Examples
+    --------
+    >>> progress_words(0.5, 90.0, width=4)
+    '██░░ 50 %, 1 min 30 s left'
+    """
+    parts = []
+    if share is not None:
+        share = min(1.0, max(0.0, share))
+        full = int(share * width + 0.5)
+        parts.append(f"{BLOCK * full}{LIGHT_SHADE * (width - full)} {share * 100:.0f} %")
+    if remaining_s is not None:
+        parts.append(f"{time_words(remaining_s)} left")
+    return ", ".join(parts)
+
+
+def time_words(seconds: float) -> str:
+    """Return a length of time in minutes and seconds.
+
+    Examples
+    --------
+    >>> time_words(75.2)
+    '1 min 16 s'
+    """
+    whole = max(0, int(-(-seconds // 1)))
+    return f"{whole // 60} min {whole % 60} s" if whole >= 60 else f"{whole} s"
+
+
+class Card(VerticalScroll):
+    """The sheet that lies before the person; arrow keys and page keys move it when it is longer than its room."""
+
+    def __init__(self, **more: Any) -> None:
+        super().__init__(**more)
+        self._do = Words(classes="card-do")
+        self._details = Words(classes="card-details")
+        self.can_focus = False
+
+    def compose(self) -> Any:
+        """Lay out the sentence and the details."""
+        yield self._do
+        yield self._details
+
+    def put(self, question: Question) -> None:
+        """Show a question."""
+        do = Text(safe(question.do or question.title), style=f"bold {STRONG}")
+        self._do.say(do)
+        self._do.remove_class("waiting")
+        rows: list[tuple[str, str, Text]] = []
+        if question.caution:
+            rows.append((f"{UP} care", f"bold {CARE}", Text(safe(question.caution), style=CARE)))
+        if question.red:
+            rows.append(("red probe", f"bold {RED_LEAD}", Text(safe(question.red), style=f"bold {INK}")))
+        if question.black:
+            rows.append(("black probe", f"bold {INK}", Text(safe(question.black), style=f"bold {INK}")))
+        if question.expected:
+            rows.append(("expect", QUIET, Text(safe(question.expected), style=INK)))
+        if question.why:
+            rows.append(("because", QUIET, Text(safe(question.why), style=QUIET)))
+        table = Table.grid(padding=(0, 2, 0, 0))
+        table.add_column(justify="right", no_wrap=True, min_width=6)
+        table.add_column(ratio=1)
+        for label, style, words in rows:
+            table.add_row(Text(label, style=style), words)
+        self._details.say_drawn((question, "details"), table)
+        self._details.display = bool(rows)
+        self.scroll_home(animate=False)
+
+    def wait(self, busy: str, share: float | None, remaining_s: float | None) -> None:
+        """Show that the person has to wait, and for what."""
+        text = Text(safe(busy or "One moment."), style=f"bold {STRONG}")
+        bar = progress_words(share, remaining_s)
+        if bar:
+            text.append(f"\n{bar}", style=INK)
+        self._do.say(text)
+        self._do.add_class("waiting")
+        self._details.display = False

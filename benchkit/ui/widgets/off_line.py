@@ -1,0 +1,71 @@
+"""The line that is on every screen and in every dialog: is the supply on, and how to switch it off."""
+
+from __future__ import annotations
+
+from typing import Any
+
+from rich.table import Table
+from rich.text import Text
+from textual.containers import Vertical
+
+from benchkit.session.front import SupplyView
+from benchkit.ui.look import SUPPLY_SHAPES, SUPPLY_WORDS, safe
+from benchkit.ui.widgets.words import Words
+
+
+def how_to_switch_off(supply: SupplyView | None, typing: bool) -> str:
+    """Return the words for the off key; the space bar belongs to the entry while somebody types.
+
+    Examples
+    --------
+    >>> how_to_switch_off(None, typing=True)
+    'F9: OFF at once'
+    """
+    if supply is not None and supply.by_hand:
+        return "switch off BY HAND, then F9"
+    return "F9: OFF at once" if typing else "F9 or space bar: OFF at once"
+
+
+class OffLine(Vertical):
+    """Two rows, never covered: the supply's state in words, and the key that switches it off."""
+
+    def __init__(self, **more: Any) -> None:
+        super().__init__(**more)
+        self._supply: SupplyView | None = None
+        self._typing = False
+        self._asked = False
+        self._first = Words(classes="off-first")
+        self._second = Words(classes="off-second")
+
+    def compose(self) -> Any:
+        """Lay out the two rows."""
+        yield self._first
+        yield self._second
+
+    def on_mount(self) -> None:
+        """Show that nothing is known yet."""
+        self._draw()
+
+    def say(self, supply: SupplyView | None, *, typing: bool, asked: bool) -> None:
+        """Show what is known; `typing`: an entry has the focus; `asked`: off was asked for and isn't confirmed yet."""
+        if (supply, typing, asked) == (self._supply, self._typing, self._asked):
+            return
+        self._supply, self._typing, self._asked = supply, typing, asked
+        self._draw()
+
+    def _draw(self) -> None:
+        supply = self._supply
+        energised = supply.energised if supply is not None else "off"
+        state = f"{SUPPLY_SHAPES[energised]} {SUPPLY_WORDS[energised]}"
+        hint = how_to_switch_off(supply, self._typing)
+        words = safe(supply.words) if supply is not None else "The walk has not begun; nothing has been switched on."
+        if self._asked and energised != "off":
+            words = "OFF HAS BEEN ASKED FOR; waiting until the supply confirms it. " + words
+        row = Table.grid(expand=True)
+        row.add_column(no_wrap=True)
+        row.add_column(justify="right", no_wrap=True)
+        row.add_row(Text(state, style="bold"), Text(hint, style="bold"))
+        self._first.say_drawn((state, hint), row)
+        self._second.say(Text(words, no_wrap=True, overflow="ellipsis"))
+        for name in ("off", "on", "unknown"):
+            self.set_class(name == energised, f"supply-{name}")

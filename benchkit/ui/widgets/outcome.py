@@ -1,0 +1,119 @@
+"""The last result against its limits, its verdict in its place, and the few before it."""
+
+from __future__ import annotations
+
+from typing import Any
+
+from rich.table import Table
+from rich.text import Text
+from textual.containers import Vertical
+
+from benchkit.events import Verdict
+from benchkit.session.front import ResultView
+from benchkit.ui.look import INK, QUIET, STRONG, VERDICT_COLOURS, VERDICT_ORDER, VERDICT_SHAPES, VERDICT_WORDS, safe
+from benchkit.ui.widgets.gauge import Gauge, Gauged
+from benchkit.ui.widgets.words import Words
+
+
+def verdict_strip(verdict: Verdict | None) -> Text:
+    """Return the three verdicts in their places, the one that holds with its shape, reversed."""
+    text = Text()
+    for place in VERDICT_ORDER:
+        if text:
+            text.append("│", style=QUIET)
+        if place == verdict:
+            style = f"bold reverse {VERDICT_COLOURS[place]}"
+            text.append(f" {VERDICT_SHAPES[place]} {VERDICT_WORDS[place].upper()} ", style=style)
+        else:
+            text.append(f"   {VERDICT_WORDS[place]} ", style=QUIET)
+    return text
+
+
+def result_line(result: ResultView) -> Text:
+    """Return one result in one line: shape, word, what, value, limits."""
+    colour = VERDICT_COLOURS[result.verdict]
+    text = Text(no_wrap=True, overflow="ellipsis")
+    text.append(f"{VERDICT_SHAPES[result.verdict]} {VERDICT_WORDS[result.verdict]:<10}", style=f"bold {colour}")
+    text.append(safe(result.title), style=INK)
+    text.append(f"  {safe(result.value_text)}", style=f"bold {STRONG}")
+    limits = limits_words(result)
+    if limits:
+        text.append(f"  ({limits})", style=QUIET)
+    for mark in marks_of(result):
+        text.append(f"  {mark}", style=QUIET)
+    return text
+
+
+def limits_words(result: ResultView) -> str:
+    """Return the limits of a result in words, "" when it has none."""
+    low, high = safe(result.low_text), safe(result.high_text)
+    if result.low is not None and result.high is not None:
+        return f"{low} to {high}"
+    if result.high is not None:
+        return f"at most {high}"
+    return f"at least {low}" if result.low is not None else ""
+
+
+def marks_of(result: ResultView) -> tuple[str, ...]:
+    """Return what else must be said of a result."""
+    marks = []
+    if result.from_before:
+        marks.append("from before the walk was cut off")
+    if result.overridden:
+        marks.append(f"went on although: {safe(result.overridden)}")
+    return tuple(marks)
+
+
+class Outcome(Vertical):
+    """The newest result, drawn; `earlier` rows of those before it where there is room."""
+
+    def __init__(self, **more: Any) -> None:
+        super().__init__(**more)
+        self._head = Words(classes="outcome-head")
+        self._gauge = Gauge(classes="outcome-gauge")
+        self._why = Words(classes="outcome-why")
+        self._earlier = Words(classes="outcome-earlier")
+
+    def compose(self) -> Any:
+        """Lay out head, gauge, why, and what came before."""
+        yield self._head
+        yield self._gauge
+        yield self._why
+        yield self._earlier
+
+    def say(self, results: tuple[ResultView, ...], *, heading: str = "last reading") -> None:
+        """Show the newest of `results`, and the few before it."""
+        self.display = bool(results)
+        if not results:
+            return
+        result = results[-1]
+        row = Table.grid(expand=True)
+        row.add_column(ratio=1)
+        row.add_column(justify="right", no_wrap=True)
+        words = Text(no_wrap=True, overflow="ellipsis")
+        words.append(f"{safe(result.title)}  ", style=INK)
+        words.append(safe(result.value_text), style=f"bold {STRONG}")
+        row.add_row(words, verdict_strip(result.verdict))
+        self._head.say_drawn((result, heading), row)
+        self._gauge.say(gauged(result))
+        self._gauge.display = result.low is not None or result.high is not None
+        why = Text(safe(result.why), style=INK)
+        for mark in marks_of(result):
+            why.append(f"  {mark}", style=QUIET)
+        self._why.say(why)
+        self._why.display = bool(why.plain)
+        lines = [result_line(earlier) for earlier in reversed(results[-9:-1])]
+        self._earlier.say_drawn(tuple(results[-9:-1]), Text("\n").join(lines))
+
+
+def gauged(result: ResultView) -> Gauged:
+    """Return what the gauge shows of a result."""
+    return Gauged(
+        value=result.value,
+        low=result.low,
+        high=result.high,
+        uncertainty=result.uncertainty,
+        low_text=result.low_text,
+        high_text=result.high_text,
+        verdict=result.verdict,
+    )

@@ -1,0 +1,25 @@
+"""How the end of a walk is put into words, without a terminal."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+
+from benchkit.session.front import ResultView, View
+
+
+def closing_sentence(view: View) -> str:
+    """Return one plain sentence about how the walk ended."""
+    where = "The simulated unit" if view.kind == "rehearsal" else f"Unit {view.unit}"
+    if view.stopped:
+        return f"The walk was stopped before its end: {view.stopped.rstrip('.')}. {where} is not proven."
+    if view.verdict == "pass":
+        return f"{where} passed {view.procedure}: every reading that was asked for lies inside its limits."
+    if view.verdict == "fail":
+        return f"{where} failed {view.procedure}. Do not put it into use; see below what was wrong."
+    return f"{where} is undecided: at least one reading is too close to its limit for this meter to say."
+
+
+def still_open(results: Sequence[ResultView]) -> tuple[ResultView, ...]:
+    """Return the results that did not pass, each item's newest only, in their order."""
+    newest = {result.item: result for result in results}
+    return tuple(result for result in newest.values() if result.verdict != "pass")

@@ -1,0 +1,43 @@
+"""Text that repaints only when it has changed."""
+
+from __future__ import annotations
+
+from typing import Any
+
+from rich.console import RenderableType
+from rich.text import Text
+from textual.widgets import Static
+
+from benchkit.ui import look
+
+
+class Words(Static):
+    """A static text that remembers what it shows; setting the same words again costs nothing."""
+
+    def __init__(self, words: str = "", **more: Any) -> None:
+        super().__init__("", markup=False, **more)
+        self._shown: object = None
+        if words:
+            self.say(words)
+
+    def say(self, words: str | Text) -> bool:
+        """Show `words`; returns whether anything changed."""
+        key: object = words if isinstance(words, str) else (words.plain, tuple(words.spans), words.style)
+        if key == self._shown:
+            return False
+        self._shown = key
+        self.update(look.safe(words) if isinstance(words, str) else words)
+        return True
+
+    def say_drawn(self, key: object, drawn: RenderableType) -> bool:
+        """Show something already laid out; `key` decides whether it is new."""
+        if key == self._shown:
+            return False
+        self._shown = key
+        self.update(drawn)
+        return True
+
+    def with_words(self, drawn: RenderableType) -> Words:
+        """Return itself showing `drawn`, for use while composing."""
+        self.say_drawn(id(drawn), drawn)
+        return self

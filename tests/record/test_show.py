@@ -1,0 +1,186 @@
+from __future__ import annotations
+
+import json
+from pathlib import Path
+
+import pytest
+from hypothesis import HealthCheck, given, settings
+from hypothesis import strategies as st
+
+from benchkit.events import Event, OutputOff, Resumed, StopAsked, Tripped
+from benchkit.record.show import DEFERENCE, as_json, as_text, clean
+from benchkit.record.summary import Summary, load_summary
+from tests.record.walks import closed, good_events, judged, opened, overridden_events, reading, write
+
+
+def gather(tmp_path: Path, events: list[Event]) -> Summary:
+    return load_summary(write(tmp_path / "r.jsonl", events))
+
+
+GOOD = """\
+RECORD OF A WALK
+================
+
+Verdict      PASS
+Unit         T40-0017
+Design       Tern 40 (SHA-256 {design})
+Procedure    short walk (SHA-256 {procedure})
+Operator     Mara
+Meter        Maker,Meter,123,1.0
+Supply       Maker,Supply,9,1.0
+Begun        2031-04-05T06:07:08.000000Z
+Last line    2031-04-05T06:07:19.000000Z
+Made by      benchkit 0.1.0
+Record       r.jsonl: whole. The record is whole and closed: 12 lines.
+Exit status  0
+
+What to know first
+------------------
+- Supply at the end: Off, and confirmed: OUTP? read 0,0.
+- Highest rails seen at the supply: 12.01 V and -12.00 V
+- Nothing failed, nothing was undecided, missed, overridden or interrupted.
+
+No power yet
+------------
+step, point                 value      lowest  highest  std. unc.  verdict
+Rail to rail, ohm.rails  overload  1.000 kohm        -          -  pass
+
+First power
+-----------
+step, point                 value     lowest   highest  std. unc.  verdict
+Output at rest, output   12.30 mV  -20.00 mV  20.00 mV     500 uV  pass
+
+Notes
+-----
+- Highest at the unit: highest_rail_v 12.02, energy_j 1.5
+
+Typed in
+--------
+- Rails up: yes
+"""
+
+
+def test_the_text_of_a_good_walk_is_exactly_this(tmp_path: Path) -> None:
+    text = as_text(gather(tmp_path, closed(good_events())))
+    first = opened()
+    wanted = GOOD.format(design=first.design_sha256[:16], procedure=first.procedure_sha256[:16])
+    head, _, tail = text.partition("\nBenchkit helps")
+    assert head.split("\n") == wanted.split("\n")
+    assert " ".join(("Benchkit helps" + tail).split()) == DEFERENCE
+
+
+def test_the_safety_sentence_stands_on_every_form(tmp_path: Path) -> None:
+    for sentence in (
+        "it is not a safety device, it certifies nothing",
+        "local codes, the maker's service data and licensed practice",
+        "Where they differ from the screen, they win.",
+    ):
+        assert sentence in DEFERENCE
+    summary = gather(tmp_path, good_events()[:1])
+    assert DEFERENCE in " ".join(as_text(summary).split())
+    assert as_json(summary)["deference"] == DEFERENCE
+
+
+def test_failures_and_overrides_come_before_the_readings(tmp_path: Path) -> None:
+    text = as_text(gather(tmp_path, closed(overridden_events(), "fail")))
+    assert "Verdict      FAIL" in text
+    first, _, rest = text.partition("No power yet")
+    assert "UNDECIDED: Output at rest, output: the uncertainty reaches over the limit. OVERRIDDEN, reason: the" in first
+    assert "the front end is not fitted" in " ".join(first.split())
+    assert "FAIL: first-power.offset-rule, offset before load" in first
+    assert "Nothing failed" not in text
+    assert "measured again later" in rest
+    assert "overridden" in rest
+
+
+def test_a_trip_says_why_where_and_that_the_supply_is_off(tmp_path: Path) -> None:
+    events = [
+        *good_events()[:9],
+        Tripped(reason="positive rail drew 0.2 A, more than 0.1 A"),
+        OutputOff(reason="trip", confirmed=True, how="OUTP? read 0,0"),
+    ]
+    text = as_text(gather(tmp_path, closed(events, "fail", stopped="safety trip", exit_status=4)))
+    assert "Verdict      FAIL, stopped: safety trip" in text
+    assert "safety trip: positive rail drew 0.2 A, more than 0.1 A (at: Output at rest)" in " ".join(text.split())
+    assert "Exit status  4" in text
+    assert "Off, and confirmed" in text
+
+
+def test_an_unconfirmed_off_is_the_first_thing_said(tmp_path: Path) -> None:
+    events = [*good_events()[:9], StopAsked(), OutputOff(reason="stop", confirmed=False, how="no answer in 2 s")]
+    lines = as_text(gather(tmp_path, events)).splitlines()
+    first = lines[lines.index("What to know first") + 2]
+    assert first.startswith("- Supply at the end: Output state unknown: switch it off by hand.")
+
+
+def test_an_unfinished_and_a_broken_record_have_no_verdict(tmp_path: Path) -> None:
+    path = write(tmp_path / "r.jsonl", closed(good_events()))
+    lines = path.read_bytes().splitlines(keepends=True)
+    path.write_bytes(b"".join(lines[:-1]))
+    assert "Verdict      NONE: the walk was not finished" in as_text(load_summary(path))
+    path.write_bytes(b"".join([*lines[:3], *lines[4:]]))
+    summary = load_summary(path)
+    text = as_text(summary)
+    assert text.splitlines()[2].startswith("BROKEN RECORD. Line 4")
+    assert "Verdict      NONE: the record is broken" in text
+    assert as_json(summary)["verdict"] is None
+
+
+def test_a_rehearsal_says_so_at_once_with_its_seed_and_fault(tmp_path: Path) -> None:
+    events = good_events()
+    events[0] = opened(kind="rehearsal", seed=7, plant="driver.upper: open")
+    text = as_text(gather(tmp_path, closed(events)))
+    assert text.startswith("RECORD OF A REHEARSAL\n")
+    assert "simulated (seed 7, with this fault in it: driver.upper: open). No real unit was measured." in " ".join(
+        text.split()
+    )
+
+
+def test_results_from_before_a_resume_are_marked(tmp_path: Path) -> None:
+    text = as_text(gather(tmp_path, [*good_events()[:9], Resumed(operator="Jo")]))
+    assert "2 results are from before the walk was resumed" in text
+    rows = [line for line in text.splitlines() if line.startswith(("Rail to rail", "Output at rest"))]
+    assert len(rows) == 2
+    for row in rows:
+        assert row.endswith("pass     from before")
+
+
+def test_control_characters_are_escaped() -> None:
+    assert clean("a\x1b[2Jb\n\u202e\ud800é") == "a\\x1b[2Jb\\n\\u202e\\ud800é"
+
+
+@settings(max_examples=40, deadline=None, suppress_health_check=[HealthCheck.function_scoped_fixture])
+@given(typed=st.text(max_size=60))
+def test_nothing_typed_reaches_the_terminal_raw(tmp_path: Path, typed: str) -> None:
+    path = tmp_path / "typed.jsonl"
+    path.unlink(missing_ok=True)
+    events = good_events()
+    events[0] = opened(unit=typed, operator=typed, plant=typed, design_name=typed)
+    events += [StopAsked(reason=typed), judged(typed, typed, "fail", 1.0, why=typed), reading("a.b", typed, 1.0)]
+    summary = load_summary(write(path, events))
+    text = as_text(summary)
+    assert all(letter.isprintable() or letter == "\n" for letter in text)
+    json.dumps(as_json(summary), allow_nan=False)
+
+
+def test_the_form_for_programs(tmp_path: Path) -> None:
+    data = as_json(gather(tmp_path, closed(good_events())))
+    assert json.loads(json.dumps(data, allow_nan=False)) == data
+    assert data["format"] == 1
+    assert data["verdict"] == "pass"
+    assert data["record"]["status"] == 0
+    assert data["supply_at_end"]["state"] == "off"
+    overload, output = data["results"]
+    assert (overload["value"], overload["overload"], overload["low"], overload["high"]) == (None, True, 1000.0, None)
+    assert output["value"] == 0.0123
+    assert output["standard_uncertainty"] == 0.0005
+    assert (output["section"], output["step"], output["subject"]) == ("first-power", "output", "output")
+    assert data["notes"] == [
+        {"text": "Highest at the unit", "figures": {"highest_rail_v": 12.02, "energy_j": 1.5}},
+    ]
+
+
+@pytest.mark.parametrize("unit", ["V", "%", "", "ratio"])
+def test_a_rule_may_have_any_unit(tmp_path: Path, unit: str) -> None:
+    events = [*good_events(), judged("first-power.rule", "divider stiffness", "fail", 8.5, unit=unit, low=10.0)]
+    assert "8.5" in as_text(gather(tmp_path, events))

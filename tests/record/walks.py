@@ -1,0 +1,179 @@
+"""Records made for the tests, through the real writer of journals."""
+
+from __future__ import annotations
+
+import hashlib
+from collections.abc import Sequence
+from datetime import UTC, datetime, timedelta
+from pathlib import Path
+from typing import Any
+
+from benchkit.events import (
+    Answered,
+    BenchFound,
+    Closed,
+    Decided,
+    Event,
+    Judged,
+    Noted,
+    OutputOff,
+    PointLimits,
+    Predicted,
+    ReadingTaken,
+    SupplySet,
+    SupplyState,
+    Verdict,
+    WalkOpened,
+    to_payload,
+)
+from benchkit.journal.writer import Writer
+from benchkit.measure.readings import FUNCTIONS, Reading
+
+START = datetime(2031, 4, 5, 6, 7, 8, tzinfo=UTC)
+
+PROCEDURE = """
+[procedure]
+format = 1
+name = "short walk"
+purpose = "for tests"
+
+[[section]]
+name = "cold"
+title = "No power yet"
+resume = true
+
+[[section.step]]
+name = "rails"
+kind = "measure"
+title = "Rail to rail"
+points = ["ohm.rails"]
+limits = "the model"
+
+[[section]]
+name = "first-power"
+title = "First power"
+
+[[section.step]]
+name = "up"
+kind = "supply"
+title = "Rails up"
+rails = "lowest"
+limit = "50 mA"
+
+[[section.step]]
+name = "output"
+kind = "measure"
+title = "Output at rest"
+points = ["output"]
+limits = "the model"
+
+[[section]]
+name = "made-safe"
+title = "The way out"
+
+[[section.step]]
+name = "off"
+kind = "off"
+title = "Supply off"
+"""
+
+ON = SupplyState(output_on=True, positive_v=12.01, negative_v=-12.0, set_positive_v=12.0, set_negative_v=-12.0)
+
+
+def sha(text: str) -> str:
+    return hashlib.sha256(text.encode()).hexdigest()
+
+
+def opened(**changes: Any) -> WalkOpened:
+    values: dict[str, Any] = {
+        "version": "0.1.0",
+        "walk": "w1",
+        "kind": "walk",
+        "unit": "T40-0017",
+        "operator": "Mara",
+        "design_name": "Tern 40",
+        "design_text": "name = 1\n",
+        "design_sha256": sha("name = 1\n"),
+        "procedure_name": "short walk",
+        "procedure_text": PROCEDURE,
+        "procedure_sha256": sha(PROCEDURE),
+        "bench_text": "",
+        "bench_sha256": sha(""),
+    }
+    return WalkOpened(**{**values, **changes})
+
+
+def reading(item: str, point: str, value: float | None, function: str = "dc volts") -> ReadingTaken:
+    return ReadingTaken(
+        item=item,
+        reading=Reading(
+            point=point,
+            value=value,
+            unit=FUNCTIONS[function],
+            overload=value is None,
+            standard_uncertainty=None if value is None else 0.0004,
+            meter="Maker,Meter,123,1.0",
+            function=function,
+        ),
+    )
+
+
+def judged(item: str, subject: str, verdict: Verdict, value: float | None, **more: Any) -> Judged:
+    values: dict[str, Any] = {"unit": "V", "low": -0.02, "high": 0.02, "uncertainty": 0.0005}
+    return Judged(item=item, subject=subject, verdict=verdict, value=value, **{**values, **more})
+
+
+def good_events() -> list[Event]:
+    """A short walk that passes: one cold reading, one powered, supply off and confirmed."""
+    return [
+        opened(),
+        BenchFound(meter="Maker,Meter,123,1.0", supply="Maker,Supply,9,1.0", supply_state=SupplyState(output_on=False)),
+        reading("cold.rails.ohm.rails", "ohm.rails", None, "ohms"),
+        judged("cold.rails.ohm.rails", "ohm.rails", "pass", None, unit="ohm", low=1000.0, high=None, uncertainty=None),
+        Answered(item="first-power.up.hold", choice="yes", text="yes"),
+        SupplySet(item="first-power.up", state=ON),
+        Predicted(
+            item="first-power.output.output",
+            condition="+12 V -12 V, trimmer least, cold",
+            limits=(PointLimits(point="output", unit="V", nominal=0.0, low=-0.02, high=0.02),),
+            units=2000,
+            solved=2000,
+            seed=1,
+            seconds=0.5,
+        ),
+        reading("first-power.output.output", "output", 0.0123),
+        judged("first-power.output.output", "output", "pass", 0.0123, probability=0.99),
+        OutputOff(reason="end of the walk", confirmed=True, how="OUTP? read 0,0"),
+        Noted(text="Highest at the unit", figures={"highest_rail_v": 12.02, "energy_j": 1.5}),
+    ]
+
+
+def overridden_events() -> list[Event]:
+    """The output fails, is measured again, is undecided, and somebody goes on with a reason."""
+    events = good_events()
+    item = "first-power.output.output"
+    events[7:9] = [
+        reading(item, "output", 0.5),
+        judged(item, "output", "fail", 0.5, why="0.5 V is above the limit"),
+        Decided(item=item, choice="again"),
+        reading(item, "output", 0.0199),
+        judged(item, "output", "undecided", 0.0199, why="the uncertainty reaches over the limit"),
+        Decided(item=item, choice="go on", reason="the front end is not fitted"),
+        judged("first-power.offset-rule", "offset before load", "fail", 0.0199),
+    ]
+    return events
+
+
+def closed(events: Sequence[Event], verdict: Verdict = "pass", **more: Any) -> list[Event]:
+    """Return the events with a closing one behind them."""
+    status = {"exit_status": 0 if verdict == "pass" else 1}
+    return [*events, Closed(count=len(events), verdict=verdict, **{**status, **more})]
+
+
+def write(path: Path, events: Sequence[Event]) -> Path:
+    """Write a record, one event a second."""
+    with Writer.create(path) as writer:
+        for number, event in enumerate(events):
+            at = (START + timedelta(seconds=number)).strftime("%Y-%m-%dT%H:%M:%S.%fZ")
+            writer.append(event.name, to_payload(event), float(number), at)
+    return path
