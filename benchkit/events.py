@@ -375,7 +375,7 @@ def from_payload(name: str, payload: Mapping[str, Any]) -> Event:
 
 
 @functools.cache
-def _adapter(kind: type[Event]) -> pydantic.TypeAdapter[Event]:
+def _adapter(kind: Any) -> pydantic.TypeAdapter[Any]:
     return pydantic.TypeAdapter(kind, config=pydantic.ConfigDict(extra="forbid", allow_inf_nan=False))
 
 

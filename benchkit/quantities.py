@@ -232,6 +232,34 @@ def parse_reading(text: str, unit: str) -> float | Overload:
     return parse(text, unit)
 
 
+def last_digit(text: str, unit: str) -> float:
+    """Worth of the last digit of a quantity as it was written: what its meter resolved at best.
+
+    Parameters
+    ----------
+    text, unit : str
+        As for `parse`.
+
+    Returns
+    -------
+    float
+        In `unit`: 1e-5 for "12.34 mV", 100.0 for "4k7".
+
+    Raises
+    ------
+    EntryError
+        As for `parse`.
+    """
+    parse(text, unit)
+    plain = _tidy(text, unit)
+    # Everything but the last digit of the mantissa becomes nought, and that one becomes one.
+    exponent = re.search(r"(?<=[0-9.])[eE](?=[+-]?[0-9])", plain)
+    mantissa, rest = (plain, "") if exponent is None else (plain[: exponent.start()], plain[exponent.start() :])
+    zeros = re.sub(r"[0-9]", "0", mantissa)
+    at = zeros.rindex("0")
+    return abs(parse(f"{zeros[:at]}1{zeros[at + 1 :]}{rest}".lstrip("+-"), unit))
+
+
 def parse_tolerance(text: str, unit: str) -> Tolerance:
     """Read a marked value with its tolerance.
 

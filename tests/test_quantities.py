@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from typing import Any
 
 import pytest
 from hypothesis import given
@@ -136,8 +137,8 @@ def test_refusals_say_what_to_write_instead() -> None:
     with pytest.raises(EntryError) as caught:
         parse("12,3 mV", "V")
     assert str(caught.value) == (
-        '"12,3 mV" holds a comma, which can mean a decimal point or thousands. Expected a voltage, such as "12.3 mV" or '
-        '"0.0123". Write the number with a point and without separators.'
+        '"12,3 mV" holds a comma, which can mean a decimal point or thousands. Expected a voltage, such as "12.3 mV" '
+        'or "0.0123". Write the number with a point and without separators.'
     )
 
 
@@ -246,7 +247,8 @@ def test_quoted_is_fit_for_a_line() -> None:
 def test_preferences_of_others_do_not_reach_us() -> None:
     from quantiphy import Quantity
 
-    with Quantity.prefs(spacer="", output_sf="", radix=",", map_sf={"m": "x"}):
+    others: Any = Quantity
+    with others.prefs(spacer="", output_sf="", radix=",", map_sf={"m": "x"}):
         assert show(0.0123, "V") == "12.30 mV"
         assert parse("12.3 mV", "V") == 0.0123
 

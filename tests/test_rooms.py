@@ -34,7 +34,7 @@ LEVELS: tuple[frozenset[str], ...] = tuple(
         {"stage"},
         {"circuit"},
         {"journal"},
-        {"measure", "events", "quantities", "errors"},
+        {"measure", "events", "quantities", "errors", "shipped"},
     )
 )
 """The rooms from the top to the bottom; a room may import its own level and those below it."""
@@ -293,7 +293,7 @@ def test_slow_libraries_are_not_imported_at_the_top_of_the_commands() -> None:
         ("benchkit.circuit.solve", "import importlib\nimportlib.import_module('benchkit.stage')\n", "points up"),
         ("benchkit.circuit.solve", "import importlib\nimportlib.import_module(name)\n", "can't see"),
         ("benchkit.session.run", "import benchkit.rehearsal.bench_client\n", "points up"),
-        ("benchkit.record.show", "from benchkit.rehearsal import stand_in\n", "only cli, rehearsal, ui"),
+        ("benchkit.record.show", "from benchkit.rehearsal import stand_in\n", "only __main__, cli, rehearsal, ui"),
         ("benchkit.procedure.walk", "import time\n", "never does"),
         ("benchkit.procedure.walk", "from asyncio import sleep\n", "never does"),
         ("benchkit.procedure.walk", "from textual.app import App\n", "never does"),

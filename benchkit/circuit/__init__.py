@@ -10,8 +10,10 @@ devices
     Junctions, the Gummel-Poon transistor at d.c., how both change with temperature, saturating laws.
 elimination
     Sparse elimination with one pivot order for all units.
+plan
+    The structure of the equations: which current goes where.
 equations
-    The circuit's equations: currents, derivatives, and where they go in the matrix.
+    Currents and derivatives of a batch of units.
 newton
     Newton's method for a batch of units, and what is tried on the units that it fails on.
 solve

@@ -81,70 +81,47 @@ def choose_order(structure: Structure, values: Array) -> Order:
     numpy.linalg.LinAlgError
         When the structure itself is singular.
     """
+    size, samples = structure.size, values.shape[1]
     slot = dict(structure.slot)
-    work: dict[tuple[int, int], Array] = {
-        entry: values[k].astype(np.float64, copy=True) for entry, k in structure.slot.items()
-    }
-    row_columns: dict[int, set[int]] = {i: set() for i in range(structure.size)}
-    column_rows: dict[int, set[int]] = {j: set() for j in range(structure.size)}
-    for i, j in structure.entries:
-        row_columns[i].add(j)
-        column_rows[j].add(i)
+    work = np.zeros((size, size, samples))
+    work[structure.rows, structure.columns] = values
+    filled = np.zeros((size, size), dtype=np.bool_)
+    filled[structure.rows, structure.columns] = True
     steps = []
     with np.errstate(all="ignore"):
-        while row_columns:
-            i, j = _best_pivot(work, row_columns, column_rows)
-            pivot = work[i, j]
-            others = sorted(row_columns[i] - {j})
-            below = []
-            for r in sorted(column_rows[j] - {i}):
-                factor = work.pop((r, j)) / pivot
-                products = []
-                for c in others:
-                    target = slot.setdefault((r, c), len(slot))
-                    product = factor * work[i, c]
-                    work[r, c] = work[r, c] - product if (r, c) in work else -product
-                    row_columns[r].add(c)
-                    column_rows[c].add(r)
-                    products.append((target, slot[i, c]))
-                row_columns[r].discard(j)
-                below.append((slot[r, j], r, tuple(products)))
-            steps.append(PivotStep(slot[i, j], i, j, tuple(below), tuple((slot[i, c], c) for c in others)))
-            for c in others:
-                column_rows[c].discard(i)
-                del work[i, c]
-            del row_columns[i]
-            del column_rows[j]
+        for _ in range(size):
+            i, j = _best_pivot(work, filled)
+            others = np.flatnonzero(filled[i])
+            others = others[others != j]
+            rows = np.flatnonzero(filled[:, j])
+            rows = rows[rows != i]
+            factor = work[rows, j] / work[i, j]
+            work[rows[:, None], others] -= factor[:, None, :] * work[i, others]
+            filled[rows[:, None], others] = True
+            right = tuple((slot[i, c], c) for c in others.tolist())
+            below = tuple(
+                (slot[r, j], r, tuple((slot.setdefault((r, c), len(slot)), source) for source, c in right))
+                for r in rows.tolist()
+            )
+            steps.append(PivotStep(slot[i, j], i, j, below, right))
+            filled[i, :] = filled[:, j] = False
+            work[i, :] = work[:, j] = 0.0
     return Order(tuple(steps), len(slot))
 
 
-def _best_pivot(
-    work: dict[tuple[int, int], Array], row_columns: dict[int, set[int]], column_rows: dict[int, set[int]]
-) -> tuple[int, int]:
-    best: tuple[float, float, int, int] | None = None
-    weakest: tuple[float, int, int] | None = None
-    for j, rows in column_rows.items():
-        if not rows:
-            raise np.linalg.LinAlgError("structurally singular")
-        listed = sorted(rows)
-        magnitude = np.abs(np.array([work[i, j] for i in listed]))
-        largest = magnitude.max(axis=0)
-        share = np.where(largest > 0.0, magnitude / np.where(largest > 0.0, largest, 1.0), 0.0)
-        share = np.nan_to_num(share.min(axis=1))
-        for i, smallest in zip(listed, share.tolist(), strict=True):
-            if weakest is None or smallest > weakest[0]:
-                weakest = (smallest, i, j)
-            if smallest < PIVOT_THRESHOLD:
-                continue
-            count = (len(row_columns[i]) - 1) * (len(rows) - 1)
-            key = (float(count), -smallest, i, j)
-            if best is None or key < best:
-                best = key
-    if best is not None:
-        return best[2], best[3]
-    if weakest is None:
+def _best_pivot(work: Array, filled: NDArray[np.bool_]) -> tuple[int, int]:
+    """Row and column of the lowest Markowitz count among entries above the threshold; the larger share wins a tie."""
+    if not filled.any():
         raise np.linalg.LinAlgError("structurally singular")
-    return weakest[1], weakest[2]
+    magnitude = np.abs(work)
+    largest = magnitude.max(axis=0)
+    share = np.nan_to_num(magnitude / np.where(largest > 0.0, largest, np.inf)).min(axis=2)
+    share[~filled] = -1.0
+    count = (filled.sum(axis=1)[:, None] - 1) * (filled.sum(axis=0) - 1)
+    key = np.where(share >= PIVOT_THRESHOLD, count - 0.5 * share, work.size * (2.0 - share))
+    key[~filled] = np.inf
+    i, j = np.unravel_index(int(key.argmin()), key.shape)
+    return int(i), int(j)
 
 
 class Factors:

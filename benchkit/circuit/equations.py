@@ -1,53 +1,32 @@
-"""The circuit's equations: every current, its derivatives, and where they go.
+"""The circuit's equations for a batch of units: every current and its derivatives.
 
 Strategy
 --------
-The unknowns x are the node voltages and the currents of unknown conductances; the equations are one sum of currents
-[A] per node, and one condition [V] per unknown conductance (modified nodal analysis: C.-W. Ho, A. E. Ruehli,
-P. A. Brennan, IEEE Transactions on Circuits and Systems 22 (1975), 504-509).
-
-* `Plan` is the structure: indices only, no values. A transistor's base, emitter or collector resistance gets an
-  internal node only if it is not zero in every unit.
-* `Batch` is a plan with the values of some units. Every array ends in the unit axis.
-* `Batch.evaluate` returns the currents of all branches *linearised at the limited arguments*, so that one Newton step
-  from them is exact where nothing was limited; and their slopes. `Plan.sum_currents` and `Plan.matrix` gather them.
+`Batch` is a `Plan` with the values of some units; every array ends in the unit axis. `Batch.evaluate` returns the
+currents of all branches *linearised at the limited arguments*, so that one Newton step from them is exact where nothing
+was limited; and their slopes. `Plan.sum_currents` and `Batch.matrix` gather them.
 
 Rules
 -----
-* Row ``plan.size`` of an extended x is the reference node, always 0.
-* A branch current is counted positive out of its first node.
-* From each node 1e-12 S lead to the reference. An island of nodes that no element ties to the reference is tied there
-  by 1 S at one node, which carries no current.
+* Supplies, sources and ohmmeters are one law: I = amps tanh((v - zero)/width) + leak (v - zero).
+* A servo's current is most/2 (1 + tanh(error/10 uV)) tanh(v/0.3 V): where it has hold, the sensed node stands within
+  some 30 uV of its rest voltage.
 * Resistors are held at or above 1 mohm, the internal resistances of transistors at or above 0.1 mohm.
 """
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Mapping
+from collections.abc import Mapping
 from dataclasses import dataclass
 
 import numpy as np
-from numpy.typing import NDArray
 
 from benchkit.circuit import devices
-from benchkit.circuit.devices import Array, Junctions, Mask
-from benchkit.circuit.elimination import Index, Structure
-from benchkit.circuit.netlist import (
-    GROUND,
-    TRANSISTOR_DEFAULTS,
-    Netlist,
-    Ohmmeter,
-    Resistor,
-    Servo,
-    Source,
-    Supply,
-    Transistor,
-    Unknown,
-    terminals,
-)
+from benchkit.circuit.devices import Array, Mask
+from benchkit.circuit.elimination import Index
+from benchkit.circuit.netlist import TRANSISTOR_DEFAULTS, Source, Supply
+from benchkit.circuit.plan import Plan
 
-NODE_GMIN_S = 1e-12
-ISLAND_TIE_S = 1.0
 LEAST_RESISTOR_OHM = 1e-3
 LEAST_INTERNAL_OHM = 1e-4
 SUPPLY_KNEE_OHM = 10e-3
@@ -58,9 +37,6 @@ SERVO_ERROR_V = 10e-6
 """Voltage error scale over which a servo's current goes from 0 to its most; its inverse is the servo's gain."""
 OHMMETER_KNEE_V = 0.05
 """Voltage scale on which a meter's test current gives way at its compliance voltage."""
-
-Signature = tuple[tuple[bool, bool, bool], ...]
-"""Per transistor: whether collector, base and emitter have an internal node."""
 
 
 @dataclass
@@ -96,177 +72,7 @@ class Linearised:
 
     def take(self, index: Index | Mask) -> Linearised:
         """Return some of the units."""
-        return Linearised(
-            self.currents[:, index], self.slopes[:, index], self.arguments.take(index), self.held[index]
-        )
-
-
-class Plan:
-    """The structure of a circuit's equations for one signature of internal nodes."""
-
-    def __init__(self, netlist: Netlist, signature: Signature) -> None:
-        elements = list(netlist.elements.values())
-        self.signature = signature
-        self.resistors = [e for e in elements if isinstance(e, Resistor)]
-        self.transistors = [e for e in elements if isinstance(e, Transistor)]
-        self.sigmoids = [e for e in elements if isinstance(e, (Supply, Source, Ohmmeter))]
-        self.servos = [e for e in elements if isinstance(e, Servo)]
-        self.unknowns = [e for e in elements if isinstance(e, Unknown)]
-
-        names = list(netlist.nodes())
-        self.internal: list[tuple[str, str, int]] = []  # (transistor, parameter, external node's index)
-        node = {name: k for k, name in enumerate(names)}
-        inner: list[list[int]] = []
-        for transistor, made in zip(self.transistors, signature, strict=True):
-            ends = []
-            outside = (transistor.collector, transistor.base, transistor.emitter)
-            for external, parameter, wanted in zip(outside, ("RC", "RB", "RE"), made, strict=True):
-                if wanted:
-                    name = f"{transistor.name}\x00{parameter}"
-                    node[name] = len(names)
-                    names.append(name)
-                    self.internal.append((transistor.name, parameter, node.get(external, -1)))
-                    ends.append(node[name])
-                else:
-                    ends.append(node.get(external, -1))
-            inner.append(ends)
-        self.nodes = len(names)
-        self.size = ground = self.nodes + len(self.unknowns)
-        self.names = names + [f"{e.name}\x00current" for e in self.unknowns]
-        self.index = {name: k for k, name in enumerate(self.names)} | {GROUND: ground}
-
-        def at(*columns: list[str]) -> list[Index]:
-            return [np.array([self.index[name] for name in column], dtype=np.intp) for column in columns]
-
-        first = self.nodes - len(self.internal)
-        outer = [ground if k < 0 else k for _, _, k in self.internal]
-        ra, rb = at([e.a for e in self.resistors], [e.b for e in self.resistors])
-        self.ra = np.concatenate([ra, np.array(outer, dtype=np.intp)])
-        self.rb = np.concatenate([rb, np.arange(first, self.nodes, dtype=np.intp)])
-        self.sa, self.sb = at([terminals(e)[0] for e in self.sigmoids], [terminals(e)[1] for e in self.sigmoids])
-        self.va, self.vb, self.vs, self.vr = at(*(list(c) for c in _columns([terminals(e) for e in self.servos], 4)))
-        self.ua, self.ub, self.up, self.uq = at(*(list(c) for c in _columns([terminals(e) for e in self.unknowns], 4)))
-        self.uk = np.arange(self.nodes, self.size, dtype=np.intp)
-        ends_array = np.array(inner, dtype=np.intp).reshape(-1, 3)
-        ends_array[ends_array < 0] = ground
-        self.tc, self.tb, self.te = (np.ascontiguousarray(ends_array[:, k]) for k in range(3))
-        self.senses = np.array([[-1.0 if e.senses == "to" else 1.0] for e in self.servos]).reshape(-1, 1)
-        self._lay_out()
-
-    def _lay_out(self) -> None:
-        """Number branches and slopes, and list which row or slot each goes to."""
-        r, s, k, u, t = len(self.ra), len(self.sa), len(self.va), len(self.ua), len(self.tc)
-        self.counts = (r, s, k, u, t)
-        starts = np.concatenate([[0], np.cumsum([r, s, k, u, t, t, t])]).tolist()
-        self.branch_starts = starts
-        self.branches = starts[-1]
-        self.current_terms: list[tuple[int, int, bool]] = []  # (row, branch, taken with minus sign)
-        pairs = [(self.ra, self.rb), (self.sa, self.sb), (self.va, self.vb), (self.ua, self.ub)]
-        for start, (a, b) in zip(starts[:4], pairs, strict=True):
-            for j in range(len(a)):
-                self._flow(start + j, int(a[j]), int(b[j]))
-        for start, ends in zip(starts[4:7], (self.tc, self.tb, self.te), strict=True):
-            for j in range(t):
-                self._flow(start + j, int(ends[j]), self.size)
-
-        fixed: list[tuple[int, int, int, float]] = []  # (row, column, resistor or -1, sign or value)
-        for j in range(r):
-            fixed += [(*where, j, sign) for where, sign in self._conductance(int(self.ra[j]), int(self.rb[j]))]
-        fixed += [(n, n, -1, NODE_GMIN_S) for n in range(self.nodes)]
-        fixed += [(n, n, -1, ISLAND_TIE_S) for n in self._islands()]
-        for j in range(u):
-            current = int(self.uk[j])
-            fixed += [(int(self.ua[j]), current, -1, 1.0), (int(self.ub[j]), current, -1, -1.0)]
-            fixed += [(current, int(self.up[j]), -1, 1.0), (current, int(self.uq[j]), -1, -1.0)]
-        self.ties = self._islands()
-
-        moving: list[tuple[int, int, int, bool]] = []  # (row, column, slope, taken with minus sign)
-        for j in range(s):
-            moving += [(*w, j, sign < 0) for w, sign in self._conductance(int(self.sa[j]), int(self.sb[j]))]
-        for j in range(k):
-            a, b, c, d = (int(n[j]) for n in (self.va, self.vb, self.vs, self.vr))
-            moving += [(*w, s + j, sign < 0) for w, sign in self._conductance(a, b)]
-            moving += [(a, c, s + k + j, False), (a, d, s + k + j, True)]
-            moving += [(b, c, s + k + j, True), (b, d, s + k + j, False)]
-        base = s + 2 * k
-        for j in range(t):
-            rows = (int(self.tc[j]), int(self.tb[j]), int(self.te[j]))
-            # slopes per transistor: 3 by 3, rows collector, base, emitter; columns the same
-            moving += [
-                (row, column, base + (3 * m + n) * t + j, False)
-                for m, row in enumerate(rows)
-                for n, column in enumerate(rows)
-            ]
-        self.slopes = base + 9 * t
-        inside = [e for e in fixed if e[0] < self.size and e[1] < self.size]
-        moving = [e for e in moving if e[0] < self.size and e[1] < self.size]
-        self.structure = Structure(self.size, {(e[0], e[1]) for e in inside} | {(e[0], e[1]) for e in moving})
-        slot = self.structure.slot
-        self.fixed_terms = [(slot[i, j], which, value) for i, j, which, value in inside]
-        self.slope_terms = [(slot[i, j], which, minus) for i, j, which, minus in moving]
-        self.diagonal: Index = np.array([slot[n, n] for n in range(self.nodes)], dtype=np.intp)
-
-    def _flow(self, branch: int, a: int, b: int) -> None:
-        if a < self.size:
-            self.current_terms.append((a, branch, False))
-        if b < self.size:
-            self.current_terms.append((b, branch, True))
-
-    @staticmethod
-    def _conductance(a: int, b: int) -> Iterator[tuple[tuple[int, int], float]]:
-        yield (a, a), 1.0
-        yield (b, b), 1.0
-        yield (a, b), -1.0
-        yield (b, a), -1.0
-
-    def _islands(self) -> list[int]:
-        """One node of each group that nothing ties to the reference."""
-        group = list(range(self.size + 1))
-
-        def root(n: int) -> int:
-            while group[n] != n:
-                n = group[n]
-            return n
-
-        pairs = [(self.ra, self.rb), (self.sa, self.sb), (self.va, self.vb), (self.ua, self.ub)]
-        pairs += [(self.tc, self.tb), (self.tb, self.te)]
-        for a, b in pairs:
-            for m, n in zip(a.tolist(), b.tolist(), strict=True):
-                group[root(m)] = root(n)
-        found: dict[int, int] = {}
-        for n in range(self.nodes):
-            if root(n) != root(self.size):
-                found.setdefault(root(n), n)
-        return sorted(found.values())
-
-    def sum_currents(self, linearised: Linearised, x: Array, volts: Array, magnitudes: bool = False) -> Array:
-        """Residual of each equation, shape (size, units): currents out of nodes [A], conditions [V].
-
-        With ``magnitudes``, the sum of the magnitudes of the terms instead.
-        """
-        currents = np.abs(linearised.currents) if magnitudes else linearised.currents
-        result = np.zeros((self.size, currents.shape[1]))
-        rows, branches = list(result), list(currents)
-        for row, branch, minus in self.current_terms:
-            if minus and not magnitudes:
-                rows[row] -= branches[branch]
-            else:
-                rows[row] += branches[branch]
-        if magnitudes:
-            x, volts = np.abs(x), np.abs(volts)
-        result[: self.nodes] += NODE_GMIN_S * x[: self.nodes]
-        for n in self.ties:
-            result[n] += ISLAND_TIE_S * x[n]
-        if len(self.uk):
-            if magnitudes:
-                result[self.uk] = x[self.up] + x[self.uq] + volts
-            else:
-                result[self.uk] = x[self.up] - x[self.uq] - volts
-        return result
-
-
-def _columns(rows: list[tuple[str, ...]], width: int) -> list[tuple[str, ...]]:
-    return list(zip(*rows, strict=True)) if rows else [()] * width
+        return Linearised(self.currents[:, index], self.slopes[:, index], self.arguments.take(index), self.held[index])
 
 
 class Batch:
@@ -308,7 +114,12 @@ class Batch:
     def _sigmoids(self, values: Mapping[str, Array]) -> None:
         """Bring supplies, sources and ohmmeters to one law: I = amps tanh((v - zero)/width) + leak (v - zero)."""
         shape = (len(self.plan.sigmoids), self.units)
-        self.amps, self.inv_width, self.zero, self.leak = np.empty(shape), np.empty(shape), np.empty(shape), np.zeros(shape)
+        self.amps, self.inv_width, self.zero, self.leak = (
+            np.empty(shape),
+            np.empty(shape),
+            np.empty(shape),
+            np.zeros(shape),
+        )
         for k, e in enumerate(self.plan.sigmoids):
             if isinstance(e, Supply):
                 self.amps[k] = values[f"{e.name}.limit_a"]
@@ -336,7 +147,10 @@ class Batch:
         return part
 
     def softened(self, softness: Array) -> Batch:
-        """Return the batch with wider knees: servos' errors by ``softness``, shape (units,), supplies' by its 0.6th power."""
+        """Return the batch with wider knees, by ``softness`` of shape (units,).
+
+        A servo's error gets that much wider, a supply's knee by the 0.6th power of it.
+        """
         part = self.take(slice(None))
         part.servo_gain = self.servo_gain / softness
         supplies = np.array([isinstance(e, Supply) for e in self.plan.sigmoids], dtype=np.bool_)
@@ -446,10 +260,10 @@ class Batch:
         sigmoid, s = devices.centre(actual.sigmoid, previous.sigmoid)
         error, r = devices.centre(actual.error, previous.error)
         compliance, v = devices.centre(actual.compliance, previous.compliance)
-        held = e.any(axis=0) | c.any(axis=0) | s.any(axis=0) | r.any(axis=0) | v.any(axis=0)
-        return Arguments(vbe, vbc, sigmoid, error, compliance), held
+        held = np.concatenate([e, c, s, r, v]).any(axis=0)
+        return Arguments(vbe, vbc, sigmoid, error, compliance), np.asarray(held)
 
-    def matrix(self, linearised: Linearised, shunt: NDArray[np.float64] | None) -> Array:
+    def matrix(self, linearised: Linearised, shunt: Array | None) -> Array:
         """Return the derivatives' slots, shape (slots, units); ``shunt`` [S] per unit from each node."""
         values = self.fixed.copy()
         slots, slopes = list(values), list(linearised.slopes)

@@ -136,7 +136,7 @@ def iterate(
     live: Index = np.arange(units)
     for iteration in range(most + 1):
         linear = batch.evaluate(x, arguments, start=iteration == 0)
-        residual = plan.sum_currents(linear, x, batch.volts)
+        residual = plan.sum_currents(linear.currents, x, batch.volts)
         if shunt is not None and anchor is not None:
             residual[: plan.nodes] += shunt * (x[: plan.nodes] - anchor[: plan.nodes])
         done, exact = _accepted(batch, linear, x, residual)
@@ -148,7 +148,13 @@ def iterate(
             break
         if exact.any():
             index = np.flatnonzero(~exact)
-            live, x, residual, done, batch = live[index], x[:, index], residual[:, index], done[index], batch.take(index)
+            live, x, residual, done, batch = (
+                live[index],
+                x[:, index],
+                residual[:, index],
+                done[index],
+                batch.take(index),
+            )
             linear = linear.take(index)
             shunt = None if shunt is None else shunt[index]
             anchor = None if anchor is None else anchor[:, index]
@@ -177,7 +183,7 @@ def _accepted(batch: Batch, linear: Linearised, x: Array, residual: Array) -> tu
     if not len(free):
         return done, exact
     left = np.abs(residual[:, free])
-    scale = plan.sum_currents(linear.take(free), x[:, free], batch.volts[:, free], magnitudes=True)
+    scale = plan.sum_currents(linear.currents[:, free], x[:, free], batch.volts[:, free], magnitudes=True)
     floor = np.full((plan.size, 1), CURRENT_FLOOR_A)
     floor[plan.nodes :] = CONDITION_TOLERANCE_V
     done[free] = (left <= CURRENT_TOLERANCE * scale + floor).all(axis=0)
@@ -199,7 +205,6 @@ def solve_by_softening(batch: Batch, solver: LinearSolver, cold: ColdStart) -> O
 
 def solve_by_gmin(batch: Batch, solver: LinearSolver) -> Outcome:
     """Let a conductance from every node of each unit go from 0.1 S to nothing, from zero volts."""
-
     zero = np.zeros((batch.plan.size, batch.units))
 
     def attempt(part: Batch, x: Array, exponent: Array) -> Outcome:

@@ -31,8 +31,6 @@ from benchkit.circuit.equations import (
     SUPPLY_LEAK_S,
     Arguments,
     Batch,
-    Plan,
-    Signature,
 )
 from benchkit.circuit.netlist import (
     GROUND,
@@ -48,6 +46,7 @@ from benchkit.circuit.netlist import (
     Unknown,
 )
 from benchkit.circuit.newton import Iterations, LinearSolver, first_attempts, rescue
+from benchkit.circuit.plan import Plan, Signature
 from benchkit.errors import ModelError
 
 Value = float | int | NDArray[Any]
@@ -157,7 +156,9 @@ class Compiled:
         for low in range(0, units, CHUNK_UNITS):
             part = slice(low, min(low + CHUNK_UNITS, units))
             batch, cold = _batch(plan, given, part, part.stop - low), _Cold(plan, _parts(rest, part))
-            first = None if guess is None else np.array(np.broadcast_to(_columns(guess, part), (plan.size, batch.units)))
+            first = (
+                None if guess is None else np.array(np.broadcast_to(_columns(guess, part), (plan.size, batch.units)))
+            )
             outcome = first_attempts(batch, solver, first, cold)
             x[:, part], converged[part] = outcome.x, outcome.done
             iterations[part], residual[part] = outcome.iterations, outcome.residual_a
@@ -192,13 +193,14 @@ class Compiled:
         return result
 
     def _plan(self, values: Mapping[str, Array]) -> Plan:
-        transistors = [e for e in self.netlist.elements.values() if isinstance(e, Transistor)]
-        signature = tuple(
-            tuple(bool((values[f"{e.name}.{key}"] > 0.0).any()) for key in ("RC", "RB", "RE")) for e in transistors
-        )
+        def made(name: str) -> tuple[bool, bool, bool]:
+            collector, base, emitter = (bool((values[f"{name}.{key}"] > 0.0).any()) for key in ("RC", "RB", "RE"))
+            return collector, base, emitter
+
+        signature = tuple(made(e.name) for e in self.netlist.elements.values() if isinstance(e, Transistor))
         if signature not in self._plans:
-            self._plans[signature] = Plan(self.netlist, signature)  # type: ignore[arg-type]
-        return self._plans[signature]  # type: ignore[index]
+            self._plans[signature] = Plan(self.netlist, signature)
+        return self._plans[signature]
 
     def _guess(self, plan: Plan, start: Mapping[str, Value] | Solution | None, units: int) -> Array | None:
         if start is None:

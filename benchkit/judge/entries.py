@@ -7,7 +7,9 @@ Columns ``point``, ``value``, ``unit``, and optionally ``positive``, ``negative`
   other bare number in V, A or degC.
 - An empty cell of a condition is the design's: its rails and ambient temperature; no current limit, trimmer unknown,
   cold.
-- ``uncertainty`` is a standard uncertainty; an empty one is worked out from the accuracy that the caller gives.
+- ``uncertainty`` is a standard uncertainty; an empty one is worked out from the accuracy that the caller gives. Where
+  that is only assumed, a count is the last digit written if that is finer than the assumed meter's step: a reading
+  written to a microvolt did not come from a meter that shows tenths of a millivolt.
 - ``OL`` is a meter's overload.
 
 Every refusal names the file, the line, the column, what came and what was expected.
@@ -25,10 +27,10 @@ from pathlib import Path
 from typing import Final, Literal, TypeVar
 
 from benchkit.errors import EntryError, FileError
-from benchkit.measure.accuracy import Accuracy
+from benchkit.measure.accuracy import FINEST_STEP, Accuracy
 from benchkit.measure.readings import Reading
 from benchkit.measure.uncertainty import make_reading
-from benchkit.quantities import Overload, parse, parse_reading, quoted
+from benchkit.quantities import Overload, last_digit, parse, parse_reading, quoted
 from benchkit.stage.conditions import Condition, Unpowered, parse_trimmer
 from benchkit.stage.design import Design
 from benchkit.stage.points import Point, find_point
@@ -36,6 +38,8 @@ from benchkit.stage.points import Point, find_point
 COLUMNS: Final = ("point", "value", "unit")
 OPTIONAL: Final = ("positive", "negative", "limit", "trimmer", "when", "ambient", "uncertainty")
 MOST_LINES: Final = 10_000
+LEAST_SENTINEL: Final = 1e30
+"""From here on a bare number is what an instrument sends for "overload" or "no number", whatever the unit."""
 STATED_METER: Final = "uncertainty as stated"
 
 _BARE = re.compile(r"[+\-\N{MINUS SIGN}]?(?:[0-9]+\.?[0-9]*|\.[0-9]+)(?:[eE][+-]?[0-9]+)?")
@@ -78,7 +82,9 @@ def read_text(path: str | Path) -> str:
         raise FileError(str(path), "", f"byte {error.start} is not UTF-8", "a text file in UTF-8") from None
 
 
-def parse_entries(text: str, design: Design, accuracy: Accuracy, file_name: str = "readings") -> tuple[Entry, ...]:
+def parse_entries(
+    text: str, design: Design, accuracy: Accuracy, file_name: str = "readings", *, assumed: bool = False
+) -> tuple[Entry, ...]:
     """Read the lines of a file of readings.
 
     Parameters
@@ -91,6 +97,8 @@ def parse_entries(text: str, design: Design, accuracy: Accuracy, file_name: str 
         For the readings without an uncertainty of their own.
     file_name : str
         For messages.
+    assumed : bool
+        Whether the accuracy is a mere assumption about a meter that nobody named.
 
     Returns
     -------
@@ -104,7 +112,7 @@ def parse_entries(text: str, design: Design, accuracy: Accuracy, file_name: str 
     """
     entries = []
     for line, cells in _lines(text, file_name):
-        entries.append(_Row(line, cells, file_name).entry(design, accuracy))
+        entries.append(_Row(line, cells, file_name).entry(design, accuracy, assumed))
         if len(entries) > MOST_LINES:
             raise FileError(file_name, f"line {line}", f"more than {MOST_LINES} readings", "the readings of one unit")
     if not entries:
@@ -166,7 +174,7 @@ class _Row:
     cells: Mapping[str, str]
     file_name: str
 
-    def entry(self, design: Design, accuracy: Accuracy) -> Entry:
+    def entry(self, design: Design, accuracy: Accuracy, assumed: bool) -> Entry:
         point = self._do("point", lambda: find_point(design, self._cell("point", required=True)))
         measured = self._do("value", lambda: self._quantity("value", point))
         uncertainty = self._uncertainty(point)
@@ -187,9 +195,10 @@ class _Row:
             if function == "ohms 4-wire" and function not in accuracy.rows:
                 function = "ohms"
             value = measured
+            step = max(FINEST_STEP, last_digit(self._with_unit("value", point), point.unit)) if assumed else None
             reading = self._do(
                 "value",
-                lambda: make_reading(point.name, value, point.unit, function=function, accuracy=accuracy),
+                lambda: make_reading(point.name, value, point.unit, function=function, accuracy=accuracy, step=step),
             )
         return Entry(self.line, point, reading, condition)
 
@@ -233,15 +242,17 @@ class _Row:
 
     def _quantity(self, column: str, point: Point) -> float | Overload:
         """Read a value or an uncertainty; a bare number is in the unit column's unit."""
-        text, unit = self._cell(column, required=True), self._cell("unit")
-        if unit:
+        if self._cell("unit"):
             # The unit must be one of the point's kind, also where the value carries its own.
-            self._do("unit", lambda: parse(f"1 {unit}", point.unit))
-            if _BARE.fullmatch(text):
-                if parse_reading(text, point.unit) in (Overload(True), Overload(False)):
-                    return parse_reading(text, point.unit)
-                return parse_reading(f"{text} {unit}", point.unit)
-        return parse_reading(text, point.unit)
+            self._do("unit", lambda: parse(f"1 {self._cell('unit')}", point.unit))
+        return parse_reading(self._with_unit(column, point), point.unit)
+
+    def _with_unit(self, column: str, point: Point) -> str:
+        """Give a cell's text, a bare number together with the unit column's unit."""
+        text, unit = self._cell(column, required=True), self._cell("unit")
+        if unit and _BARE.fullmatch(text) and abs(float(text.replace("\N{MINUS SIGN}", "-"))) < LEAST_SENTINEL:
+            return f"{text} {unit}"
+        return text
 
     def _optional(self, column: str, unit: str) -> float | None:
         text = self._cell(column)

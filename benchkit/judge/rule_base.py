@@ -22,6 +22,7 @@ from benchkit.judge.verdicts import Verdict, conformance_probability
 from benchkit.measure.readings import Reading
 from benchkit.measure.uncertainty import combine, coverage_factor, same_gain
 from benchkit.quantities import Tolerance, show
+from benchkit.stage.conditions import TrimmerPosition
 from benchkit.stage.design import Design
 
 Cause = Literal["", "parts", "meter", "parts and meter", "nothing to judge"]
@@ -54,6 +55,8 @@ class RuleFacts:
         Gives the emitter drop (V) now and with the trimmer's wiper open, both of the same nominal unit.
     positive_v, negative_v : float, optional
         Rails as set (V); the design's when left out.
+    trimmer : str or float
+        "least", "most", or a travel from 0 (least bias) to 1 where the trimmer's position is known.
     driven : mapping of str to Reading
         Readings with the stage driven, by test point.
     coverage : float
@@ -68,8 +71,16 @@ class RuleFacts:
     wiper_open: Callable[[], tuple[float, float]] | None = None
     positive_v: float | None = None
     negative_v: float | None = None
+    trimmer: TrimmerPosition = "unknown"
     driven: Mapping[str, Reading] = field(default_factory=dict)
     coverage: float = 0.95
+
+    @property
+    def travel(self) -> float | None:
+        """The trimmer's travel from the least-bias end, 0 to 1, or None where it is not known."""
+        if isinstance(self.trimmer, str):
+            return {"least": 0.0, "most": 1.0}.get(self.trimmer)
+        return float(self.trimmer)
 
     @property
     def rest_v(self) -> float:

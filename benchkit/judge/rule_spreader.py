@@ -24,12 +24,16 @@ SAME_DROP = 1e-3
 
 @dataclass(frozen=True)
 class _Arm:
-    """An arm of the spreader: its resistance as known, and the hard interval that it is in."""
+    """An arm of the spreader: its resistance as known, the hard interval that it is in, and whether that is a value.
+
+    An arm whose trimmer may stand anywhere is not settled.
+    """
 
     ohm: float
     low: float
     high: float
     reading: Reading | None
+    settled: bool = True
 
 
 def divider_stiffness(number: float, facts: RuleFacts) -> tuple[RuleResult, ...]:
@@ -58,13 +62,18 @@ def divider_stiffness(number: float, facts: RuleFacts) -> tuple[RuleResult, ...]
     parts = max(q - q_low, q_high - q)
     limit = 1.0 + 1.0 / number
     decided = decide(q, u, parts, low=None, high=limit, coverage=facts.coverage)
-    stiffness = 1.0 / (q - 1.0) if q > 1.0 else None
+    settled = arm_u.settled and arm_l.settled
+    stiffness = 1.0 / (q - 1.0) if q > 1.0 and settled else None
     base = f"I_L is {show(lower.value / arm_l.ohm, 'A')} and I_U - I_L {show((q - 1.0) * lower.value / arm_l.ohm, 'A')}"
     why = f"{base}; the rule wants a ratio of {number:g} or more."
     would_decide = ""
     if decided.verdict == "undecided":
         if "parts" in decided.cause:
-            why = f"{base}, but arms that nobody measured make that difference uncertain by as much as itself."
+            why = (
+                f"{base}, but arms that nobody measured make that difference uncertain by as much as itself."
+                if settled
+                else "The trimmer may stand anywhere in its arm, so nobody knows the divider's currents."
+            )
             would_decide = "Measure both arms of the spreader, trimmer included, with the power off and one end lifted"
         else:
             would_decide = "Read both arms with a better meter, on one range"
@@ -225,10 +234,15 @@ def _arm(facts: RuleFacts, arm: str) -> _Arm:
     ohm = marked.value
     trimmer = spreader.trimmer
     if trimmer is not None and trimmer.arm in (arm, "between"):
-        track = trimmer.value.value
-        low += trimmer.end_resistance_ohm
-        high += track * (1.0 + trimmer.value.fraction) + trimmer.end_resistance_ohm
-        ohm += track / 2.0
+        track, fraction = trimmer.value
+        # More bias: less resistance in the lower arm, more in the upper one.
+        least, most = 0.0, 1.0
+        if facts.travel is not None:
+            least = most = facts.travel if arm == "upper" else 1.0 - facts.travel
+        low += least * track * (1.0 - fraction)
+        high += most * track * (1.0 + fraction) + trimmer.end_resistance_ohm
+        ohm += (least + most) / 2.0 * track
+        return _Arm(ohm, low, high, None, settled=facts.travel is not None)
     return _Arm(ohm, low, high, None)
 
 

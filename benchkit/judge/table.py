@@ -4,6 +4,13 @@ The limits hold what the tolerances of the parts explain. The verdict over all i
 rules with one exception: a rule that is undecided only because nobody measured certain resistors doesn't lower it. Such
 a rule is named with what would decide it, and the limits have already allowed for those tolerances.
 
+Three allowances on top of the model's limits, for what is set by the bench and not by the unit:
+
+- a rail may be off its setting by 1 %, or 0.1 V where that is more (common practice for a bench supply);
+- the heat sink's reading may be off by 2 K, and by 10 K where the ambient temperature was not stated;
+- with the trimmer at the target the bias may be anywhere within the target's own tolerance, so the limits are the widest
+  of those at the target and at both ends of its tolerance.
+
 Which rules apply to readings without a procedure:
 
 - offset before load, where the output was read and the model expects the stage to regulate at that condition;
@@ -19,7 +26,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any, Final
 
 from benchkit.judge.entries import Entry, parse_entries
@@ -30,6 +37,7 @@ from benchkit.judge.rules import RULES, evaluate_each
 from benchkit.judge.verdicts import Judgement, Verdict, judge_reading, worst
 from benchkit.measure.accuracy import STATED_DEFAULT, Accuracy
 from benchkit.measure.readings import Reading
+from benchkit.quantities import show
 from benchkit.stage.conditions import Condition, Unpowered
 from benchkit.stage.design import Design, target_drop_v
 
@@ -37,6 +45,12 @@ LEAST_SHARE_OF_TARGET: Final = 0.25
 """Share of the target's emitter drop that the model must expect before rules compare emitter currents."""
 
 SOURCE: Final = "the model"
+RAIL_ALLOWANCE: Final = 0.01
+LEAST_RAIL_ALLOWANCE_V: Final = 0.1
+"""How far a rail may be off its setting: a share of it, and at least so many volts."""
+HEATSINK_ALLOWANCE_K: Final = 2.0
+UNSTATED_AMBIENT_ALLOWANCE_K: Final = 10.0
+"""How far a heat sink's reading may be off for the thermometer, and where nobody stated the ambient temperature."""
 
 
 @dataclass(frozen=True)
@@ -185,7 +199,7 @@ def judge_table(
         When the model has no trustworthy answer for one of its conditions.
     """
     meter = STATED_DEFAULT if accuracy is None else accuracy
-    entries = parse_entries(text, design, meter, file_name)
+    entries = parse_entries(text, design, meter, file_name, assumed=accuracy is None)
     limits = _limits(design, entries, units, seed)
     judged = []
     for entry, found in zip(entries, limits, strict=True):
@@ -201,7 +215,7 @@ def judge_table(
 
 def _limits(design: Design, entries: Sequence[Entry], units: int | None, seed: int) -> list[Limits | None]:
     """Ask the model once for each condition, with all points that were read under it."""
-    from benchkit.stage.expected import DEFAULT_UNITS, expected, expected_unpowered
+    from benchkit.stage.expected import DEFAULT_UNITS, expected_unpowered
 
     many = DEFAULT_UNITS if units is None else units
     groups: dict[Condition | Unpowered, list[Entry]] = {}
@@ -213,14 +227,60 @@ def _limits(design: Design, entries: Sequence[Entry], units: int | None, seed: i
         if not names:
             continue
         if isinstance(condition, Condition):
-            answer = expected(design, condition, units=many, seed=seed, points=names)
+            found |= _powered_limits(design, condition, names, many, seed)
         else:
             answer = expected_unpowered(
                 design, names, trimmer=condition.trimmer, units=many, seed=seed, ambient_c=condition.ambient_c
             )
-        for one in answer.points:
-            found[condition, one.point] = limits_of(one)
+            found |= {(condition, one.point): limits_of(one) for one in answer.points}
     return [found.get((entry.condition, entry.point.name)) for entry in entries]
+
+
+def _powered_limits(
+    design: Design, condition: Condition, names: Sequence[str], units: int, seed: int
+) -> dict[tuple[object, str], Limits | None]:
+    """Ask the model under a powered condition, and add the allowances for what the bench sets."""
+    from benchkit.stage.expected import expected
+
+    shares = [condition.target_share]
+    if condition.trimmer == "target":
+        tolerance = design.target.tolerance
+        shares += [condition.target_share * (1.0 - tolerance), condition.target_share * (1.0 + tolerance)]
+    widest: dict[tuple[object, str], Limits | None] = {}
+    for share in shares:
+        answer = expected(design, replace(condition, target_share=share), units=units, seed=seed, points=names)
+        for one in answer.points:
+            limits = limits_of(one)
+            if (condition, one.point) in widest:
+                limits = _union(widest[condition, one.point], limits)
+            widest[condition, one.point] = limits
+    return {key: _with_allowance(limits, key[1], condition) for key, limits in widest.items()}
+
+
+def _union(first: Limits | None, second: Limits | None) -> Limits | None:
+    if first is None or second is None:
+        return None
+    low = None if first.low is None or second.low is None else min(first.low, second.low)
+    high = None if first.high is None or second.high is None else max(first.high, second.high)
+    return replace(first, low=low, high=high)
+
+
+def _with_allowance(limits: Limits | None, point: str, condition: Condition) -> Limits | None:
+    """Widen the limits of what the bench sets: the rails, and the heat sink's ambient temperature."""
+    if limits is None:
+        return None
+    if point in ("rail+", "rail-"):
+        setting = condition.positive_v if point == "rail+" else condition.negative_v
+        allowance = max(RAIL_ALLOWANCE * abs(setting), LEAST_RAIL_ALLOWANCE_V)
+        source = f"{SOURCE}, and {show(allowance, 'V', 2)} for the supply's setting"
+    elif point == "heatsink":
+        allowance = HEATSINK_ALLOWANCE_K if condition.ambient_c is not None else UNSTATED_AMBIENT_ALLOWANCE_K
+        source = f"{SOURCE}, and {show(allowance, 'K', 2)} for the thermometer and the room"
+    else:
+        return limits
+    low = None if limits.low is None else limits.low - allowance
+    high = None if limits.high is None else limits.high + allowance
+    return replace(limits, low=low, high=high, source=source)
 
 
 def limits_of(predicted: Any) -> Limits | None:
@@ -258,6 +318,7 @@ def _rules(design: Design, judged: Sequence[JudgedReading]) -> list[RuleResult]:
             limits={name: one.limits for name, one in members.items() if one.limits is not None},
             positive_v=condition.positive_v,
             negative_v=condition.negative_v,
+            trimmer=condition.trimmer,
         )
         for name in _applicable(design, condition, facts):
             results.extend(evaluate_each(name, None, facts))

@@ -285,3 +285,6 @@ HANDHELD: Final = Accuracy(
 
 STATED_DEFAULT: Final = HANDHELD
 """The accuracy used where neither the reading nor a bench file gives one; its name is shown with every result."""
+
+FINEST_STEP: Final = 1e-6
+"""The finest step (V, A, ohm) that is believed of a meter that nobody named, however many digits were written."""

@@ -8,7 +8,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Callable, Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from statistics import NormalDist, fmean, stdev
 from typing import TYPE_CHECKING
 
@@ -255,6 +255,7 @@ def make_reading(
     accuracy: Accuracy,
     meter: str = "",
     range: float | None = None,
+    step: float | None = None,
 ) -> Reading:
     """Make a reading with its uncertainty: the meter's specification and, for repeated readings, their type A part.
 
@@ -270,6 +271,9 @@ def make_reading(
         The meter's name; the specification's name when left out.
     range : float, optional
         Full scale it was taken on; otherwise the smallest that holds it.
+    step : float, optional
+        The last digit that was written down, where it is finer than the specification's: then the meter has finer
+        steps than was assumed. A coarser one says nothing.
 
     Returns
     -------
@@ -284,6 +288,8 @@ def make_reading(
     values = [samples] if isinstance(samples, int | float) else list(samples)
     repeated = type_a(values)
     row = accuracy.row(function, repeated.mean, range)
+    if step is not None and step < row.resolution:
+        row = replace(row, resolution=step)
     return Reading(
         point=point,
         value=repeated.mean,

@@ -14,9 +14,9 @@ from __future__ import annotations
 
 import math
 import re
-from collections.abc import Iterator
+from collections.abc import Iterator, Mapping
 from dataclasses import dataclass, replace
-from typing import Literal
+from typing import Any, Literal
 
 from benchkit import quantities
 from benchkit.errors import FileError
@@ -24,8 +24,8 @@ from benchkit.judge.limits import Limits
 from benchkit.procedure.file import MADE_SAFE, PairText, Procedure, Section, Step
 from benchkit.stage.conditions import Condition, Unpowered
 from benchkit.stage.design import Design, target_drop_v
-from benchkit.stage.expected import least_regulating_rails
 from benchkit.stage.points import Point, points_of
+from benchkit.stage.reach import least_regulating_rails
 
 ItemKind = Literal[
     "connect", "tell", "confirm", "text", "hold", "measure", "rule", "supply", "limit check", "trim", "wait", "off"
@@ -246,7 +246,7 @@ class _Planner:
                 self._off()
                 yield self._item(step, "off")
 
-    def _item(self, step: Step, kind: ItemKind, suffix: str = "", **more: object) -> Item:
+    def _item(self, step: Step, kind: ItemKind, suffix: str = "", **more: Any) -> Item:
         words = self._words(more)
         item = Item(
             id=f"{self.section.name}.{step.name}{suffix}",
@@ -261,7 +261,7 @@ class _Planner:
             may_go_on=step.override,
             powered=self.on,
         )
-        return replace(item, **more)  # type: ignore[arg-type]
+        return replace(item, **more)
 
     def _measure(self, step: Step) -> Iterator[Item]:
         for name in step.points:
@@ -345,7 +345,7 @@ class _Planner:
     def _limit_check(self, step: Step) -> Iterator[Item]:
         positive_v, negative_v = self._rails(step)
         limit_a = self._limit(step, *self.lowest)
-        words: dict[str, object] = {"positive_v": positive_v, "negative_v": negative_v, "limit_a": limit_a}
+        words: dict[str, Any] = {"positive_v": positive_v, "negative_v": negative_v, "limit_a": limit_a}
         yield self._item(
             step, "hold", ".hold", title="Try the limit?", why="Current flows into the short from here.", **words
         )
@@ -473,8 +473,7 @@ class _Planner:
     def _refuse(self, step: Step, came: str) -> FileError:
         return FileError(self.procedure.file, f"section {self.section.name}, step {step.name}", came)
 
-    def _words(self, more: dict[str, object] | object) -> dict[str, str]:
-        given = more if isinstance(more, dict) else {}
+    def _words(self, given: Mapping[str, Any]) -> dict[str, str]:
         trimmer = self.design.spreader.trimmer
         positive_v = float(given.get("positive_v", self.positive_v or self.lowest[0]))
         negative_v = float(given.get("negative_v", self.negative_v or self.lowest[1]))

@@ -164,7 +164,8 @@ class Walk:
 
     def replay(self, events: Iterable[tuple[Event, float]]) -> Step:
         """Handle events from the beginning; returns the last state and the actions that still stand open."""
-        state, actions = State(), ()
+        state = State()
+        actions: tuple[Action, ...] = ()
         for event, now_s in events:
             state, actions = self.handle(state, event, now_s)
         return state, actions
@@ -503,9 +504,10 @@ class Walk:
             judged = self._limit_judged(item, event.state)
         else:
             problem = _rails_problem(item, event.state)
+            fine = "Both rails stand where they were set, none in its limit."
             judged = Judged(
                 item=item.id, subject="rails", verdict="fail" if problem else "pass", value=event.state.positive_v,
-                unit="V", low=None, high=None, why=problem or "Both rails stand where they were set, none in its limit.",
+                unit="V", low=None, high=None, why=problem or fine,
             )  # fmt: skip
         return replace(state, phase="judging"), (Write(item=item.id, event=judged),)
 

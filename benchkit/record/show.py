@@ -10,11 +10,13 @@ from __future__ import annotations
 
 import textwrap
 from collections.abc import Iterable, Iterator
+from pathlib import Path
 from typing import Any
 
 from benchkit.measure.readings import Reading
 from benchkit.quantities import Overload, show
-from benchkit.record.summary import Result, Summary
+from benchkit.record import verify
+from benchkit.record.summary import Result, Summary, load_summary
 
 DEFERENCE = (
     "Benchkit helps a qualified person; it is not a safety device, it certifies nothing, and it defers to local codes, "
@@ -26,12 +28,28 @@ WIDTH = 100
 """The most characters that a line of prose has; a table's line may be longer where a name is."""
 
 JSON_FORMAT = 1
-"""The number of the form that `as_json` returns."""
+"""The number of the form that `json_of` returns."""
 
 
-def as_text(summary: Summary) -> str:
-    """Return the whole summary as text; every line ends in a line feed."""
-    return "\n".join(line.rstrip() for line in _lines(summary)) + "\n"
+def as_text(path: str | Path) -> str:
+    """Return the record in `path` as text.
+
+    Raises
+    ------
+    RecordError
+        If the file can't be read, or does not even hold the first line of a record.
+    """
+    return text_of(load_summary(path))
+
+
+def as_json(path: str | Path) -> dict[str, Any]:
+    """Return the record in `path` for a program; raises as `as_text` does."""
+    return json_of(load_summary(path))
+
+
+def text_of(summary: Summary) -> str:
+    """Return the whole summary as text, without a line feed at the end."""
+    return "\n".join(line.rstrip() for line in _lines(summary))
 
 
 def _lines(summary: Summary) -> Iterator[str]:
@@ -206,12 +224,12 @@ def _quantity(value: float | Overload | None, unit: str, digits: int = 4) -> str
         return f"{value:.{digits}g} {unit}".strip() if isinstance(value, float) else "overload"
 
 
-def as_json(summary: Summary) -> dict[str, Any]:
+def json_of(summary: Summary) -> dict[str, Any]:
     """Return the facts for a program; every value is plain JSON, a number that is not there is None."""
     opened, closed = summary.opened, summary.closed
     return {
         "format": JSON_FORMAT,
-        "record": summary.record.as_json(),
+        "record": verify.as_json(summary.record.path, summary.record),
         "kind": opened.kind,
         "unit": opened.unit,
         "operator": opened.operator,

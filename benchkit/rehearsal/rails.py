@@ -21,15 +21,15 @@ from typing import Final, Protocol
 
 STRAY_F: Final = 1e-6
 """Capacitance of a rail without capacitors of its own: leads and the supply's own output."""
-EMPTY_V: Final = 0.002
+EMPTY_V: Final = 0.01
 
 _NEAR_V = 0.02
 _NEAR_SHARE = 0.001
 _STALLED_SHARE = 0.01
 _RISING_SHARE = 0.34
-_FALLING_SHARE = 0.2
+_FALLING_SHARE = 0.3
 _LEAST_STEP_V = 0.02
-_TOLERANCE = 0.1
+_TOLERANCE = 0.15
 _HALVINGS = 8
 _MOST_STEPS = 400
 
@@ -83,6 +83,8 @@ class Rails:
         self._rates = None
         self._steps = 0
         self.settled = not any(_delivers(channel) for channel in channels) and max(self.volts) <= EMPTY_V
+        if self.settled:
+            self.volts = (0.0, 0.0)
 
     def go_on(self) -> None:
         """Begin another stretch of time: the count of steps starts again."""
@@ -103,13 +105,19 @@ class Rails:
         self.volts = volts
         self._raise_marks()
 
-    def step(self, load: Load, most_s: float) -> float:
-        """Move unsettled rails by one step of at most `most_s`; return how long it was (s)."""
-        if self._rates is None:
+    def begin(self, load: Load) -> bool:
+        """Find out where disturbed rails are heading; return whether they are settled there already."""
+        if not self.settled and self._rates is None:
             self._goal = self._find_goal(load)
             self._rates = self._find_rates(load.drawn(self.volts), self.volts)
-            if self._at_rest():
-                return 0.0
+            self._at_rest()
+        return self.settled
+
+    def step(self, load: Load, most_s: float) -> float:
+        """Move unsettled rails by one step of at most `most_s`; return how long it was (s)."""
+        if self.begin(load):
+            return 0.0
+        assert self._rates is not None
         start, rates = self.volts, self._rates
         seconds = min([most_s, *(self._time_s(rail, start[rail], rates[rail]) for rail in (0, 1))])
         for _ in range(_HALVINGS):
@@ -121,9 +129,7 @@ class Rails:
             if all(arrived[rail] or wrong[rail] <= allowed[rail] for rail in (0, 1)):
                 break
             seconds /= 2.0
-        mean = tuple(
-            rates[rail] if arrived[rail] else (rates[rail] + new_rates[rail]) / 2.0 for rail in (0, 1)
-        )
+        mean = tuple(rates[rail] if arrived[rail] else (rates[rail] + new_rates[rail]) / 2.0 for rail in (0, 1))
         self.volts = self._moved(start, (mean[0], mean[1]), seconds)
         self._rates = new_rates
         self._raise_marks()
@@ -195,7 +201,7 @@ class Rails:
         volts, goal, channel = self.volts[rail], self._goal[rail], self._channels[rail]
         if not _delivers(channel):
             return volts <= EMPTY_V
-        if abs(volts - goal) <= max(_NEAR_V, _NEAR_SHARE * goal) and volts <= self._target(rail) + EMPTY_V:
+        if abs(volts - goal) <= max(_NEAR_V, _NEAR_SHARE * goal) and volts <= self._target(rail) + _NEAR_V:
             return True
         return volts <= channel.volts and abs(rate) * self.capacitance_f < _STALLED_SHARE * channel.limit_a
 

@@ -30,9 +30,9 @@ from benchkit.stage.conditions import Condition, Unpowered
 from benchkit.stage.design import Design, Rating
 from benchkit.stage.draws import Parameters, draw, seeds
 from benchkit.stage.faults import OPEN_FACTOR, SHORT_OHM, Fault
-from benchkit.stage.operate import Solved, solve_units
+from benchkit.stage.operate import Loading, Solved, solve_units
 from benchkit.stage.points import transistors_of
-from benchkit.stage.unpowered import DIODE_RANGE, OHMS_RANGES, TestCurrent, solve_unpowered
+from benchkit.stage.unpowered import DIODE_RANGE, OHMS_RANGES, MeterRange, solve_unpowered
 
 JUNCTION_MARGIN_K: Final = 25.0
 JUNCTION_C: Final = 150.0
@@ -73,6 +73,7 @@ class SimulatedUnit:
         self.warmth = Warmth(design)
         self.broken: tuple[str, ...] = ()
         self.unsolved = 0
+        self.highest_quiescent_a = 0.0
         self._parts = transistors_of(design)
         self._last: dict[_Key, tuple[Solved, dict[str, float]]] = {}
         self._newest: Solved | None = None
@@ -103,14 +104,14 @@ class SimulatedUnit:
         within_k : float
             How far junctions may have moved since a kept operating point for it to be good enough.
         """
-        key = _Key(volts, _NO_LIMIT if limit_a is None else limit_a, self.travel, len(self.broken))
+        key = self._key(volts, limit_a)
         temperatures = self.warmth.temperatures_c()
         kept = self._last.get(key)
         if kept is not None and max(abs(temperatures[name] - kept[1][name]) for name in temperatures) <= within_k:
             return kept[0]
-        solved = self._solve(key, limit_a, temperatures, self._newest)
+        solved = self._solve(key, temperatures, self._newest)
         if not bool(solved.converged[0]) and self._newest is not None:
-            solved = self._solve(key, limit_a, temperatures, None)
+            solved = self._solve(key, temperatures, None)
         if bool(solved.converged[0]):
             self._newest = solved
         else:
@@ -120,9 +121,19 @@ class SimulatedUnit:
         self._last[key] = solved, temperatures
         return solved
 
-    def _solve(self, key: _Key, limit_a: float | None, temperatures: dict[str, float], start: Solved | None) -> Solved:
+    def _key(self, volts: Pair, limit_a: float | None) -> _Key:
+        return _Key(volts, _NO_LIMIT if limit_a is None else limit_a, self.travel, len(self.broken))
+
+    def _solve(
+        self, key: _Key, temperatures: dict[str, float], start: Solved | None, loading: Loading = "none"
+    ) -> Solved:
         positive_v, negative_v = key.volts
-        condition = Condition(positive_v=positive_v, negative_v=-negative_v, limit_a=limit_a, trimmer=key.travel)
+        condition = Condition(
+            positive_v=positive_v,
+            negative_v=-negative_v,
+            limit_a=None if key.limit_a == _NO_LIMIT else key.limit_a,
+            trimmer=key.travel,
+        )
         return solve_units(
             self.design,
             self.parameters,
@@ -131,8 +142,18 @@ class SimulatedUnit:
             temperatures_c=temperatures,
             position=key.travel,
             start=start,
-            loading="none",
+            loading=loading,
         )
+
+    def loading(self, volts: Pair, limit_a: float | None, point: str) -> float:
+        """Return what a voltmeter at a point makes of the bare voltage there: the ratio of the two."""
+        bare = self.operate(volts, limit_a)
+        key = self._key(volts, limit_a)
+        loaded = self._solve(key, self.warmth.temperatures_c(), bare, "each")
+        bare_v = _first(bare, point)
+        if abs(bare_v) < 1e-9 or not bool(loaded.converged[0]):
+            return 1.0
+        return _first(loaded, point) / bare_v
 
     def drawn(self, volts: Pair) -> Pair:
         """Return the currents (A) drawn from stiff rails at these magnitudes."""
@@ -146,9 +167,14 @@ class SimulatedUnit:
 
     def heat(self, solved: Solved, seconds: float) -> None:
         """Let the operating point heat the unit for some time, and break what can't stand it."""
+        self.highest_quiescent_a = max(self.highest_quiescent_a, self.quiescent_a(solved))
         self.warmth.step(powers_w(solved), seconds)
         self._strain_junctions()
         self._strain_resistors(solved, seconds)
+
+    def heat_off(self, seconds: float) -> None:
+        """Let the unit cool for some time without any power."""
+        self.warmth.cool(seconds)
 
     def longest_step_s(self, solved: Solved) -> float:
         """Return how long the operating point may stand for while the temperatures move."""
@@ -164,12 +190,12 @@ class SimulatedUnit:
                 self.broken += (part.name,)
 
     def _strain_resistors(self, solved: Solved, seconds: float) -> None:
-        for name, average_w in self._resistor_w.items():
+        for name, before_w in self._resistor_w.items():
             rating = self._rating(name, "emitter")
             if rating is None or rating.power_w is None or name in self.broken:
                 continue
             power_w = abs(_first(solved, name) * float(solved.solution.current(name)[0]))
-            average_w += (power_w - average_w) * -math.expm1(-seconds / RESISTOR_LAG_S)
+            average_w = before_w + (power_w - before_w) * -math.expm1(-seconds / RESISTOR_LAG_S)
             self._resistor_w[name] = average_w
             if average_w > RESISTOR_MARGIN * rating.power_w:
                 self.parameters[name] = self.parameters[name] * OPEN_FACTOR
@@ -205,8 +231,10 @@ class SimulatedUnit:
 
     def _read_unpowered(self, point: str, full_scale: float | None) -> float:
         temperatures = self.warmth.temperatures_c()
-        condition = Unpowered(point=point, ambient_c=temperatures.get(point.removeprefix("diode."), temperatures["heatsink"]))
-        ranges: Sequence[TestCurrent] = OHMS_RANGES
+        condition = Unpowered(
+            point=point, ambient_c=temperatures.get(point.removeprefix("diode."), temperatures["heatsink"])
+        )
+        ranges: Sequence[MeterRange] = OHMS_RANGES
         if point.startswith("diode."):
             ranges = (DIODE_RANGE,)
         elif full_scale is not None:

@@ -64,6 +64,14 @@ class Warmth:
                 self._own_k[name] = min(self._own_k[name] + share * (goal - self._own_k[name]), HOTTEST_C)
         self.highest_sink_c = max(self.highest_sink_c, self._thermal.ambient_c + self._sink_k)
 
+    def cool(self, seconds: float) -> None:
+        """Move all nodes by `seconds` without any power."""
+        nothing = dict.fromkeys(self._own_k, 0.0)
+        while seconds > 0.0:
+            step_s = min(seconds, LONGEST_STEP_S)
+            self.step(nothing, step_s)
+            seconds -= step_s
+
     def longest_step_s(self, powers_w: Mapping[str, float]) -> float:
         """Return how long a step (s) may be, so that no node moves by more than `LARGEST_STEP_K`."""
         longest = LONGEST_STEP_S

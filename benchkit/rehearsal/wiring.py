@@ -17,14 +17,13 @@ What the meter finds
 from __future__ import annotations
 
 import math
-from dataclasses import replace
 from typing import Final
 
 from benchkit.errors import EntryError
 from benchkit.rehearsal.meter import Sensed
 from benchkit.rehearsal.rails import STRAY_F, Channel, Pair, Rails
 from benchkit.rehearsal.supply import Terminals
-from benchkit.rehearsal.unit import COARSE_K, FINE_K, SimulatedUnit, powers_w
+from benchkit.rehearsal.unit import COARSE_K, FINE_K, SimulatedUnit
 from benchkit.stage.operate import Solved
 from benchkit.stage.points import Point, find_point, points_of
 from benchkit.stage.topologies import build
@@ -122,7 +121,7 @@ class Table:
             return Terminals(amps * LEADS_OHM, amps, setting.on and amps >= setting.limit_a > 0.0)
         if not self.connected:
             return Terminals(setting.volts if setting.on else 0.0, 0.0, False)
-        if not self.rails.settled:
+        if not self._settled():
             amps = self.rails.delivered[rail] if setting.on else 0.0
             below = self.rails.volts[rail] < setting.volts - _KNEES_IN_LIMIT * setting.limit_a
             return Terminals(self.rails.volts[rail], amps, below and amps >= setting.limit_a > 0.0)
@@ -140,6 +139,11 @@ class Table:
         self._ratio = None
         on_leads = self.connected and not self.shorted
         self.rails.disturb(self._channels if on_leads else _NO_RAILS)
+
+    @property
+    def channels(self) -> tuple[Channel, Channel]:
+        """What the supply's two channels are set to deliver."""
+        return self._channels
 
     # -- time ----------------------------------------------------------------------------------------------------
 
@@ -164,13 +168,13 @@ class Table:
             if self._asleep():
                 self.unit.heat_off(left_s)
                 step_s = left_s
-            elif self.rails.settled:
+            elif self._settled():
                 step_s = self._settled_step(left_s)
             else:
                 step_s = self.rails.step(self.unit, left_s)
                 if step_s > 0.0:
                     self._account(step_s, self.rails.volts, self.rails.delivered)
-                    self.unit.heat(self.unit.operate(self.rails.volts, None, within_k=COARSE_K), step_s)
+                    self._heat(self.unit.operate(self.rails.volts, None, within_k=COARSE_K), step_s)
             left_s -= step_s
             self.sim_s += step_s
 
@@ -181,11 +185,17 @@ class Table:
         volts_1, amps_1 = self._settled_rail(solved, 1)
         self.rails.follow((volts_0, volts_1))
         self._account(step_s, (volts_0, volts_1), (amps_0, amps_1))
+        self._heat(solved, step_s)
+        return step_s
+
+    def _heat(self, solved: Solved, seconds: float) -> None:
         broken = len(self.unit.broken)
-        self.unit.heat(solved, step_s)
+        self.unit.heat(solved, seconds)
         if len(self.unit.broken) != broken:
             self._disturb()
-        return step_s
+
+    def _settled(self) -> bool:
+        return self.rails.settled or self.rails.begin(self.unit)
 
     def _account(self, seconds: float, volts: Pair, amps: Pair) -> None:
         if self.connected and not self.shorted:
@@ -201,12 +211,16 @@ class Table:
 
     def now(self, within_k: float = FINE_K) -> Solved:
         """Return the unit's operating point at this moment."""
-        if self.rails.settled and self._powered():
-            live = [channel for channel in self._channels if channel.on and channel.volts > 0.0]
-            volts = tuple(channel.volts if channel in live else 0.0 for channel in self._channels)
-            limit_a = min(channel.limit_a for channel in live)
-            return self.unit.operate((volts[0], volts[1]), limit_a, within_k=within_k)
-        return self.unit.operate(self.rails.volts, None, within_k=within_k)
+        return self.unit.operate(*self._feeding(), within_k=within_k)
+
+    def _feeding(self) -> tuple[Pair, float | None]:
+        """What feeds the unit: settings and limit of the supply when settled, else its own capacitors."""
+        if not (self._settled() and self._powered()):
+            return self.rails.volts, None
+        live = [channel.on and channel.volts > 0.0 and channel.limit_a > 0.0 for channel in self._channels]
+        volts = [channel.volts if on else 0.0 for channel, on in zip(self._channels, live, strict=True)]
+        limit_a = min(channel.limit_a for channel, on in zip(self._channels, live, strict=True) if on)
+        return (volts[0], volts[1]), limit_a
 
     # -- the meter's side ----------------------------------------------------------------------------------------
 
@@ -260,7 +274,7 @@ class Table:
         kept = self._ratio
         rail_v = max(self.rails.volts)
         if kept is None or kept[0] != name or not (_near(bare_v, kept[2]) and _near(rail_v, kept[3])):
-            kept = self._ratio = name, self.unit.loading(self.now(), name), bare_v, rail_v
+            kept = self._ratio = name, self.unit.loading(*self._feeding(), name), bare_v, rail_v
         return kept[1]
 
     def _ohms(self, point: Point, nodes: tuple[str, str], function: str, full_scale: float | None) -> float:
@@ -295,11 +309,6 @@ class Table:
             if known is not None and (diode or candidate.startswith("ohm.")):
                 return candidate
         return None
-
-
-def settings_off(channel: Channel) -> Channel:
-    """Return the channel with its output off."""
-    return replace(channel, on=False)
 
 
 def _long(name: str) -> str:

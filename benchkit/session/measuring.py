@@ -46,7 +46,7 @@ async def read(session: Session, action: Read) -> Event:
 
 
 async def _by_meter(session: Session, point: str, function: str, unit: str, samples: int) -> Reading:
-    raw = await asyncio.wrap_future(session.keeper.read(function, samples=samples, label=point))
+    raw = await asyncio.wrap_future(session.keeper.read(function, samples=samples))
     if raw.overload:
         return _overload(point, function, unit, raw.meter, negative=raw.negative)
     return make_reading(
@@ -131,10 +131,8 @@ async def trim(session: Session, action: Trim) -> Event:
             await session.sample()
             if asking is None:
                 asking = asyncio.create_task(session.front.ask(action.question, refused))
-            if session.clock.own_watch:
-                await asyncio.wait({asking}, timeout=TRIM_INTERVAL_S)
-            else:
-                await asyncio.wait({asking}, timeout=TRIM_INTERVAL_S)
+            await asyncio.wait({asking}, timeout=TRIM_INTERVAL_S)
+            if not session.clock.own_watch:
                 await session.clock.spend(TRIM_INTERVAL_S)
             if not asking.done():
                 continue
@@ -189,11 +187,13 @@ async def _trim_by_hand(session: Session, action: Trim) -> Event:
         do=f"{action.question.do} Type what the meter shows after each move, with its unit.",
         choices=(Choice(value="take", label="Enter"), END, STOP),
     )
+    accuracy = session.job.accuracy
+
+    def parse(text: str) -> Reading:
+        return _typed(text, action.point, action.function, action.unit, accuracy)
+
     while True:
-        accuracy = session.job.accuracy
-        reply, reading = await session.ask_entry(
-            question, lambda text: _typed(text, action.point, action.function, action.unit, accuracy)
-        )
+        reply, reading = await session.ask_entry(question, parse)
         if reply.choice == "end":
             return TrimEnded(item=action.item, problem=reply.text.strip() or "The screw is at its end.")
         if not isinstance(reading, Reading):

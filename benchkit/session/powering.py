@@ -98,10 +98,11 @@ async def _set_by_hand(session: Session, action: SetSupply) -> Event:
         title=f"Set the supply by hand: {rails}, limit {limit}",
         do=(
             f"Output off, limit {limit}, then the rails up from 0 V together to {rails}, eyes on the current. "
-            f"Then type what it shows, volts and amperes of each rail ({example}); add the word limit if a rail stands in it."
+            f"Then type what it shows, volts and amperes of each rail ({example}); add the word limit if a rail "
+            "stands in it."
         ),
         why=item.why,
-        caution="Nothing switches this supply off but your hand. If the current jumps, switch off first and type later.",
+        caution="Nothing switches this supply off but your hand. If the current jumps: off first, type later.",
         choices=(Choice(value="done", label="Entered"), STOP),
     )
     _, state = await session.ask_entry(question, lambda text: typed_supply(text, action))

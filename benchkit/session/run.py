@@ -217,7 +217,8 @@ class Session:
                     self._woken.clear()
                     continue
                 if fresh or (self.state.phase, self.state.index) != before:
-                    running = await _lapse(running)
+                    await _lapse(running)
+                    running = None
                     self.moment = Moment(message=self.moment.message)
                     action = fresh[0] if fresh else None
                 self.show()
@@ -285,7 +286,7 @@ class Session:
     async def _keeper_died(self, push: KeeperDied) -> BenchkitError:
         if self.job.manual_supply:
             return InstrumentError("link lost", f"The keeper of the record has ended: {push.problem}", "", RESUME_HINT)
-        off = await in_thread(lambda: self.keeper.after_death(self.job.setup))
+        off = await asyncio.wrap_future(self.keeper.after_death(self.job.setup))
         words = (
             "A second keeper switched the supply off and read it back as off."
             if off.confirmed

@@ -57,7 +57,9 @@ class Condition:
         if self.limit_a is not None:
             _require(0.0 < self.limit_a < math.inf, "limit", show(self.limit_a, "A"), "a current above zero")
         _check_trimmer(self.trimmer)
-        _require(0.0 < self.target_share <= 10.0, "target share", f"{self.target_share:g}", "a number above 0, at most 10")
+        _require(
+            0.0 < self.target_share <= 10.0, "target share", f"{self.target_share:g}", "a number above 0, at most 10"
+        )
         _require(self.when in ("cold", "warm"), "when", f'"{self.when}"', '"cold" or "warm"')
         if self.ambient_c is not None:
             _require(-55.0 <= self.ambient_c <= 200.0, "ambient", show(self.ambient_c, "degC"), "-55 degC to 200 degC")
@@ -97,7 +99,7 @@ def parse_trimmer(text: str) -> TrimmerPosition:
     word = text.strip().lower()
     for known in ("least", "most", "target", "unknown"):
         if word == known:
-            return known  # type: ignore[return-value]
+            return known
     try:
         position = parse(word, "%") / 100.0 if "%" in word else float(word)
     except (EntryError, ValueError):
@@ -110,8 +112,10 @@ def parse_trimmer(text: str) -> TrimmerPosition:
 
 
 def _check_trimmer(trimmer: object) -> None:
-    good = trimmer in ("least", "most", "target", "unknown") if isinstance(trimmer, str) else (
-        isinstance(trimmer, (int, float)) and not isinstance(trimmer, bool) and 0.0 <= trimmer <= 1.0
+    good = (
+        trimmer in ("least", "most", "target", "unknown")
+        if isinstance(trimmer, str)
+        else (isinstance(trimmer, (int, float)) and not isinstance(trimmer, bool) and 0.0 <= trimmer <= 1.0)
     )
     _require(good, "trimmer", f'"{trimmer}"', "least, most, target, unknown, or a travel from 0 (least bias) to 1")
 

@@ -17,15 +17,34 @@ from __future__ import annotations
 import difflib
 import hashlib
 import tomllib
-from collections.abc import Callable, Mapping
+from collections.abc import Mapping
 from pathlib import Path
-from typing import Annotated, Any, Literal, NamedTuple
+from typing import Annotated, Any, Literal
 
-from pydantic import BaseModel, BeforeValidator, ConfigDict, Field, PrivateAttr, ValidationError
-from pydantic_core import PydanticCustomError
+from pydantic import BaseModel, ConfigDict, Field, PrivateAttr, ValidationError
 
-from benchkit.errors import EntryError, FileError
-from benchkit.quantities import Tolerance, parse, parse_tolerance, quoted
+from benchkit.errors import FileError
+from benchkit.quantities import quoted
+from benchkit.stage.design_values import (
+    Amps,
+    AnyFeed,
+    AnyRest,
+    Celsius,
+    Fraction,
+    JoulePerKelvin,
+    KelvinPerWatt,
+    NegativeVolts,
+    OffsetVolts,
+    Ohms,
+    PlainOhms,
+    PositiveAmps,
+    PositiveFarads,
+    PositiveVolts,
+    PositiveWatts,
+    Seconds,
+    Text,
+    Tracking,
+)
 
 BOLTZMANN_J_PER_K = 1.380649e-23
 CHARGE_C = 1.602176634e-19
@@ -42,139 +61,6 @@ _MAY_BE_ZERO = frozenset({"ISE", "ISC", "RB", "RE", "RC", "XTI", "XTB"})
 Topology = Literal[
     "single-emitter-follower", "double-emitter-follower", "triple-emitter-follower", "complementary-feedback-pair"
 ]
-
-
-class Rest(NamedTuple):
-    """Where the output rests: a voltage, or a share of the span between the rails (the other one is None)."""
-
-    volts: float | None
-    share: float | None
-
-
-class Feed(NamedTuple):
-    """One of the two feeds of the spreader.
-
-    Attributes
-    ----------
-    kind : str
-        "source", "resistor" or "servo".
-    value : Tolerance
-        Amperes of a source, ohms of a resistor; (0, 0) for a servo.
-    """
-
-    kind: Literal["source", "resistor", "servo"]
-    value: Tolerance
-
-
-def _refuse(came: str, expected: str, next_step: str = "") -> PydanticCustomError:
-    return PydanticCustomError("benchkit", "{came}", {"came": came, "expected": expected, "next_step": next_step})
-
-
-def _as_text(value: object, unit: str) -> str:
-    """TOML numbers are quantities in the base unit; anything but text and numbers is refused."""
-    if isinstance(value, bool) or not isinstance(value, (str, int, float)):
-        raise _refuse(f"{quoted(value)} came instead of a quantity", f'a quantity in {unit}, such as "1 {unit}"')
-    return value if isinstance(value, str) else repr(value)
-
-
-def _checked(read: Callable[[str, str], Any], value: object, unit: str) -> Any:
-    try:
-        return read(_as_text(value, unit), unit)
-    except EntryError as error:
-        raise _refuse(error.came, error.expected, error.next_step) from None
-
-
-def _quantity(
-    unit: str, *, above: float | None = None, least: float | None = None, most: float | None = None
-) -> BeforeValidator:
-    """Make a validator for a plain quantity within (above, most] or [least, most]."""
-
-    def validate(value: object) -> float:
-        number = float(_checked(parse, value, unit))
-        _within(number, value, unit, above, least, most)
-        return number
-
-    return BeforeValidator(validate)
-
-
-def _toleranced(unit: str, *, above: float = 0.0) -> BeforeValidator:
-    """Make a validator for a marked value with a tolerance."""
-
-    def validate(value: object) -> Tolerance:
-        marked: Tolerance = _checked(parse_tolerance, value, unit)
-        _within(marked.value, value, unit, above, None, None)
-        return marked
-
-    return BeforeValidator(validate)
-
-
-def _within(
-    number: float, shown: object, unit: str, above: float | None, least: float | None, most: float | None
-) -> None:
-    if above is not None and number <= above:
-        raise _refuse(f"{quoted(str(shown))} came", f"more than {above:g} {unit}")
-    if least is not None and number < least:
-        raise _refuse(f"{quoted(str(shown))} came", f"{least:g} {unit} or more")
-    if most is not None and number > most:
-        raise _refuse(f"{quoted(str(shown))} came", f"{most:g} {unit} or less")
-
-
-def _percent(value: object) -> float:
-    """Read "10 %" as the fraction 0.1; the sign % must be there, because 0.1 and 10 are easily mistaken."""
-    if not isinstance(value, str) or "%" not in value:
-        raise _refuse(f"{quoted(value)} came", 'a percentage, such as "10 %"')
-    number = float(_checked(parse, value, "%"))
-    _within(number, value, "%", 0.0, None, 1000.0)
-    return number / 100.0
-
-
-def _feed(value: object) -> Feed:
-    if value == "servo":
-        return Feed("servo", Tolerance(0.0, 0.0))
-    text = _as_text(value, "ohm")
-    found: list[Feed] = []
-    kinds: tuple[tuple[Literal["resistor", "source"], str], ...] = (("resistor", "ohm"), ("source", "A"))
-    for kind, unit in kinds:
-        try:
-            found.append(Feed(kind, parse_tolerance(text, unit)))
-        except EntryError:
-            continue
-    if len(found) != 1:
-        why = "is neither" if not found else "could be either"
-        raise _refuse(
-            f"{quoted(text)} {why}",
-            'a current such as "8 mA 5 %", a resistor such as "1 kohm 1 %", or "servo" (below only)',
-        )
-    _within(found[0].value.value, text, "ohm" if found[0].kind == "resistor" else "A", 0.0, None, None)
-    return found[0]
-
-
-def _rest(value: object) -> Rest:
-    if isinstance(value, str) and "%" in value:
-        share = float(_checked(parse, value, "%"))
-        _within(share, value, "%", 0.0, None, 99.0)
-        return Rest(None, share / 100.0)
-    return Rest(float(_checked(parse, value, "V")), None)
-
-
-Text = Annotated[str, Field(min_length=1, max_length=200)]
-Volts = Annotated[float, _quantity("V")]
-PositiveVolts = Annotated[float, _quantity("V", above=0.0)]
-NegativeVolts = Annotated[float, _quantity("V", most=0.0)]
-PositiveAmps = Annotated[float, _quantity("A", above=0.0)]
-PositiveFarads = Annotated[float, _quantity("F", above=0.0)]
-PositiveOhms = Annotated[float, _quantity("ohm", above=0.0)]
-Celsius = Annotated[float, _quantity("degC", least=-55.0, most=200.0)]
-KelvinPerWatt = Annotated[float, _quantity("K/W", least=0.0)]
-JoulePerKelvin = Annotated[float, _quantity("J/K", above=0.0)]
-Seconds = Annotated[float, _quantity("s", least=0.0)]
-PositiveWatts = Annotated[float, _quantity("W", above=0.0)]
-Fraction = Annotated[float, BeforeValidator(_percent)]
-Ohms = Annotated[Tolerance, _toleranced("ohm")]
-Amps = Annotated[Tolerance, _toleranced("A")]
-AnyFeed = Annotated[Feed, BeforeValidator(_feed)]
-AnyRest = Annotated[Rest, BeforeValidator(_rest)]
-Tracking = Annotated[float, Field(ge=0.0, le=1.5, strict=False)]
 
 
 class _Table(BaseModel):
@@ -216,7 +102,7 @@ class Trimmer(_Table):
 
     value: Ohms
     arm: Literal["lower", "upper", "between"]
-    end_resistance_ohm: Annotated[float, _quantity("ohm", least=0.0)] = Field(0.0, alias="end_resistance")
+    end_resistance_ohm: PlainOhms = Field(0.0, alias="end_resistance")
     turns: Annotated[float, Field(gt=0.0, le=100.0)]
     raises_bias: Literal["clockwise", "anticlockwise"]
     wiring: Literal["series", "tied"]
@@ -250,7 +136,7 @@ class Output(_Table):
     emitter_resistor: Ohms
     base_stopper: Ohms | None = None
     rest: AnyRest
-    offset_v: Annotated[float, _quantity("V", least=0.0)] = Field(0.02, alias="offset")
+    offset_v: OffsetVolts = Field(0.02, alias="offset")
 
 
 class Target(_Table):
@@ -504,7 +390,6 @@ _TABLES: Mapping[str, type[BaseModel]] = {
 def known_keys(table: str) -> tuple[str, ...]:
     """Keys that the dotted table may hold, as written in the file; empty where names are free."""
     outer = table.partition(".")[0]
-    model = _TABLES.get(table)
-    if model is None and table.count(".") >= 1:
-        model = {"device": Device, "ratings": Rating}.get(outer)
+    named: Mapping[str, type[BaseModel]] = {"device": Device, "ratings": Rating}
+    model = _TABLES.get(table) or (named.get(outer) if "." in table else None)
     return tuple(field.alias or name for name, field in model.model_fields.items()) if model else ()

@@ -111,13 +111,26 @@ def _topology(design: Design) -> Iterator[_Finding]:
         if key in _NEEDED[topology] and not given:
             yield f"output.{key}", "the key is missing", f"it, because this is a {topology}", ""
         if key not in _NEEDED[topology] and given:
-            yield f"output.{key}", f"the key has no meaning in a {topology}", "a topology with that part, or no such key", ""
+            yield (
+                f"output.{key}",
+                f"the key has no meaning in a {topology}",
+                "a topology with that part, or no such key",
+                "",
+            )
     if topology == "complementary-feedback-pair" and design.output.pairs != 1:
         yield "output.pairs", f"{design.output.pairs} came", "1 in a complementary feedback pair", ""
-    if design.output.driver_resistor_to == "output" and topology in ("single-emitter-follower", "complementary-feedback-pair"):
+    if design.output.driver_resistor_to == "output" and topology in (
+        "single-emitter-follower",
+        "complementary-feedback-pair",
+    ):
         yield "output.driver_resistor_to", f"it has no meaning in a {topology}", "no such key", ""
     if design.thermal.driver_tracking is None and topology != "single-emitter-follower":
-        yield "thermal.driver_tracking", "the key is missing", "the share of the heat sink's rise that the drivers see", ""
+        yield (
+            "thermal.driver_tracking",
+            "the key is missing",
+            "the share of the heat sink's rise that the drivers see",
+            "",
+        )
     rest_v = design.rest_v(design.rails.positive_v, design.rails.negative_v)
     if not design.rails.negative_v < rest_v < design.rails.positive_v:
         yield "output.rest", f"{show(rest_v, 'V')} came", "a voltage between the rails", ""
@@ -144,7 +157,9 @@ def _feeds(design: Design) -> Iterator[_Finding]:
         yield "feed.lower", "a current source came", '"servo", or a resistor to the rail', ""
     if design.feed.lower.kind != "servo":
         for key in ("max_current", "works_from", "settles_after"):
-            given = getattr(design.feed, {"max_current": "max_current_a", "works_from": "works_from_v"}.get(key, f"{key}_s"))
+            given = getattr(
+                design.feed, {"max_current": "max_current_a", "works_from": "works_from_v"}.get(key, f"{key}_s")
+            )
             if given is not None:
                 yield f"feed.{key}", "the key belongs to a servo", 'feed.lower = "servo", or no such key', ""
         return
@@ -177,7 +192,12 @@ def _target(design: Design) -> Iterator[_Finding]:
         yield "target.optimum", "the formula holds for emitter followers", "emitter_drop or quiescent_current", ""
     if design.thermal.max_heatsink_c <= design.thermal.ambient_c:
         came = show(design.thermal.max_heatsink_c, "degC")
-        yield "thermal.max_heatsink", f"{came} came", f"more than the ambient {show(design.thermal.ambient_c, 'degC')}", ""
+        yield (
+            "thermal.max_heatsink",
+            f"{came} came",
+            f"more than the ambient {show(design.thermal.ambient_c, 'degC')}",
+            "",
+        )
 
 
 def _ratings(design: Design) -> Iterator[_Finding]:

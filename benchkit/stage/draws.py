@@ -1,8 +1,8 @@
 """Units: the nominal one, and units drawn from the tolerances of a design.
 
 A parameter set is a mapping from keys to arrays of shape ``(units,)``, or of shape ``()`` for what is the same in every
-unit. The keys are those of the netlist's values (``emitter.upper.1`` in ohm, ``output.upper.1.IS``, ``feed.upper.amps``)
-and a few of the stage's own:
+unit. The keys are those of the netlist's values (``emitter.upper.1`` in ohm, ``output.upper.1.IS``,
+``feed.upper.amps``) and a few of the stage's own:
 
 * ``spreader.trimmer.track`` (ohm, end to end), ``spreader.trimmer.position`` (0..1 from the least-bias end: where the
   trimmer stands when its position is unknown);

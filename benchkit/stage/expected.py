@@ -16,15 +16,31 @@ from dataclasses import asdict, dataclass
 
 import numpy as np
 
-from benchkit.errors import ModelError
+from benchkit.errors import EntryError, ModelError
 from benchkit.quantities import show
 from benchkit.stage.conditions import Condition, TrimmerPosition, Unpowered
 from benchkit.stage.design import Design
 from benchkit.stage.draws import Array, Parameters, draw, nominal, seeds
-from benchkit.stage.operate import Mask, Solved, solve_units
+from benchkit.stage.operate import Solved, solve_units
 from benchkit.stage.points import find_point, points_of
-from benchkit.stage.quantiles import interval
+from benchkit.stage.quantiles import LEAST_UNITS, interval
+from benchkit.stage.reach import least_regulating_rails
+from benchkit.stage.runs import Mask
 from benchkit.stage.unpowered import LEAST_INSULATION_OHM, OVER_RANGE, solve_unpowered
+
+__all__ = [
+    "DEFAULT_UNITS",
+    "Ensemble",
+    "Expected",
+    "PointLimits",
+    "ensemble",
+    "expected",
+    "expected_json",
+    "expected_unpowered",
+    "least_regulating_rails",
+    "share_inside",
+    "solve_units",
+]
 
 DEFAULT_UNITS = 6000
 """Units in an ensemble when nothing else is asked for.
@@ -296,9 +312,6 @@ def finite(value: object) -> object:
 
 
 def _check_units(units: int) -> None:
-    from benchkit.errors import EntryError
-    from benchkit.stage.quantiles import LEAST_UNITS
-
     if not LEAST_UNITS <= units <= 1_000_000:
         raise EntryError(f"units: {units} came", f"{LEAST_UNITS} to 1000000 units")
 

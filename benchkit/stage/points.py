@@ -120,9 +120,7 @@ def _parts(design: Design) -> Iterator[Part]:
         for side in SIDES:
             if output.base_stopper is not None:
                 yield _resistor(f"stopper.{side}.{number}", "stopper", output.base_stopper)
-            yield Part(
-                name=f"output.{side}.{number}", kind="transistor", role="output", device=getattr(output, side)
-            )
+            yield Part(name=f"output.{side}.{number}", kind="transistor", role="output", device=getattr(output, side))
             yield _resistor(f"emitter.{side}.{number}", "emitter", output.emitter_resistor)
 
 
@@ -241,8 +239,8 @@ def _unpowered(design: Design) -> Iterator[Point]:
     yield _ohms("spreader.lower", *((near, base) if npn else (base, near)))
     for number in range(1, design.output.pairs + 1):
         for side in SIDES:
-            ends = [f"emitter of output.{side}.{number}", "output"]
-            red, black = ends if side == "upper" else ends[::-1]
+            top, bottom = f"emitter of output.{side}.{number}", "output"
+            red, black = (top, bottom) if side == "upper" else (bottom, top)
             yield _ohms(f"emitter.{side}.{number}", red, black, "ohms 4-wire")
     for part in transistors_of(design):
         yield _ohms(f"heatsink.{part.name}", f"collector of {part.name}", "heat sink, its bond to 0 V open")

@@ -9,8 +9,8 @@ The range is the one that an automatic range would choose for the nominal unit, 
 reading that needs another range is an overload. In the circuit that search ends at 1 Mohm; the insulation to the heat
 sink is measured on the 10 Mohm range, where an overload is what one hopes for.
 
-Test currents per range are those of the usual 6 1/2-digit bench meter (34401A user's guide, from memory); the compliance
-of 8 V is common practice for that class.
+Test currents per range are those of the usual 6 1/2-digit bench meter (34401A user's guide, from memory); the
+compliance of 8 V is common practice for that class.
 """
 
 from __future__ import annotations
@@ -22,35 +22,34 @@ from typing import NamedTuple
 import numpy as np
 from numpy.typing import NDArray
 
+from benchkit.circuit.solve import Solution
 from benchkit.stage.conditions import Unpowered
 from benchkit.stage.design import ZERO_CELSIUS_K, Design
 from benchkit.stage.draws import Array, Parameters, nominal
-from benchkit.circuit.solve import Solution
 from benchkit.stage.faults import Fault, apply
-from benchkit.stage.operate import Faults, compiled, set_trimmer, trimmer_travel, units_in
+from benchkit.stage.operate import units_in
 from benchkit.stage.points import find_point, transistors_of
+from benchkit.stage.runs import Faults, compiled, set_trimmer, trimmer_travel
 from benchkit.stage.topologies import Variant, build
 
 
-class TestCurrent(NamedTuple):
+class MeterRange(NamedTuple):
     """One range of a meter: full scale (ohm or V), test current (A)."""
-
-    __test__ = False
 
     full_scale: float
     amps: float
 
 
 OHMS_RANGES = (
-    TestCurrent(100.0, 1e-3),
-    TestCurrent(1e3, 1e-3),
-    TestCurrent(10e3, 100e-6),
-    TestCurrent(100e3, 10e-6),
-    TestCurrent(1e6, 5e-6),
-    TestCurrent(10e6, 500e-9),
+    MeterRange(100.0, 1e-3),
+    MeterRange(1e3, 1e-3),
+    MeterRange(10e3, 100e-6),
+    MeterRange(100e3, 10e-6),
+    MeterRange(1e6, 5e-6),
+    MeterRange(10e6, 500e-9),
 )
 """Ohms ranges and their test currents."""
-DIODE_RANGE = TestCurrent(1.0, 1e-3)
+DIODE_RANGE = MeterRange(1.0, 1e-3)
 """The diode range: reads volts at 1 mA."""
 OVER_RANGE = 1.2
 """A range reads up to this multiple of its full scale."""
@@ -70,7 +69,7 @@ class UnpoweredReadings:
     values : array of shape (units,)
         Ohms or volts; infinity is an overload.
     converged : array of bool of shape (units,)
-    range : TestCurrent
+    range : MeterRange
         The range that was used.
     position : array or None
         The trimmer's travel from the least-bias end.
@@ -80,7 +79,7 @@ class UnpoweredReadings:
 
     values: Array
     converged: NDArray[np.bool_]
-    range: TestCurrent
+    range: MeterRange
     position: Array | None
     solution: Solution = field(repr=False)
 
@@ -92,7 +91,7 @@ def solve_unpowered(
     faults: Faults = None,
     *,
     position: Array | float | None = None,
-    on_range: TestCurrent | None = None,
+    on_range: MeterRange | None = None,
 ) -> UnpoweredReadings:
     """Read an unpowered point of every unit.
 
@@ -105,7 +104,7 @@ def solve_unpowered(
     faults : Fault, sequence of Fault or None per unit, or None
     position : array or float, optional
         The trimmer's travel of each unit, instead of the condition's.
-    on_range : TestCurrent, optional
+    on_range : MeterRange, optional
         Instead of the range that the nominal unit asks for.
 
     Returns
@@ -148,8 +147,8 @@ def solve_unpowered(
 
 @lru_cache(maxsize=256)
 def _nominal_unit(design: Design, condition: Unpowered) -> UnpoweredReadings:
-    """Read the nominal unit on the lowest range that it doesn't overload; on the search's highest when it always does."""
-    ranges: tuple[TestCurrent, ...] = _IN_CIRCUIT
+    """Read the nominal unit on the lowest range that it doesn't overload, or else on the last one."""
+    ranges: tuple[MeterRange, ...] = _IN_CIRCUIT
     if condition.point.startswith("diode."):
         ranges = (DIODE_RANGE,)
     elif condition.point.startswith("ohm.heatsink."):

@@ -103,8 +103,8 @@ def safe(text: str) -> str:
 
 
 _WRITTEN: Final = {
-    "Ω": "ohm",
-    "Ω": "ohm",
+    "\u03a9": "ohm",
+    "\u2126": "ohm",
     "μ": "µ",
     "–": "-",
     "—": "-",

@@ -1,6 +1,7 @@
 """Plain mode: the same walk in lines of text, for any terminal, a screen reader or a pipe.
 
-Each question is numbered answers and a prompt.  ``off`` at any prompt, or Ctrl+C at any moment, switches the supply off.
+Each question is numbered answers and a prompt.  ``off`` at any prompt, or Ctrl+C at any moment, switches the supply
+off.
 """
 
 from __future__ import annotations

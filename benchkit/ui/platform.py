@@ -17,7 +17,6 @@ import queue
 import signal
 import sys
 import threading
-import time
 from collections.abc import Callable, Iterator
 from typing import Any, Final
 
@@ -70,7 +69,8 @@ class Leaver:
     ) -> None:
         self._off = off
         self._leave = leave
-        self._exit_status = exit_status
+        self.exit_status = exit_status
+        self.last_words = ""
         self._hard_exit_s = hard_exit_s
         self._hard_exit = hard_exit
         self._asked: queue.SimpleQueue[str | None] = queue.SimpleQueue()
@@ -125,8 +125,8 @@ class Leaver:
     def _end_hard(self) -> None:
         if self._ended.is_set():
             return
-        _restore_terminal(self._terminal)
-        self._hard_exit(self._exit_status)
+        _restore_terminal(self._terminal, self.last_words)
+        self._hard_exit(self.exit_status)
 
 
 def _watch_hangup(descriptor: int, stop: threading.Event, ask: Callable[[str], None]) -> None:
@@ -158,7 +158,7 @@ def _terminal_state() -> object:
         return None
 
 
-def _restore_terminal(state: object) -> None:
+def _restore_terminal(state: object, last_words: str) -> None:
     """Give the terminal back as it was, as far as that goes without waiting for it."""
     if not POSIX or state is None or sys.__stdin__ is None or sys.__stderr__ is None:
         return
@@ -170,9 +170,9 @@ def _restore_terminal(state: object) -> None:
     with contextlib.suppress(Exception):
         output = sys.__stderr__.fileno()
         if select.select([], [output], [], 0)[1]:
-            os.write(output, b"\x1b[?1000l\x1b[?1003l\x1b[?1006l\x1b[?2004l\x1b[<u\x1b[?1049l\x1b[?25h\x1b[?7h\r\n")
-
-
-def now_s() -> float:
-    """Return a clock that never jumps back (s)."""
-    return time.monotonic()
+            os.write(
+                output,
+                b"\x1b[?1000l\x1b[?1003l\x1b[?1006l\x1b[?2004l\x1b[<u\x1b[?1049l\x1b[?25h\x1b[?7h\r\n"
+                + last_words.encode()
+                + b"\r\n",
+            )

@@ -44,14 +44,14 @@ class BenchScreen(Screen[Any]):
 
     def on_mount(self) -> None:
         """Take the state that is known."""
-        self.arrange(self.app.size.width, self.app.size.height)
+        self.lay_out(self.app.size.width, self.app.size.height)
         self.refresh_off_line()
 
     def on_resize(self, event: events.Resize) -> None:
         """Choose the layout."""
-        self.arrange(event.size.width, event.size.height)
+        self.lay_out(event.size.width, event.size.height)
 
-    def arrange(self, width: int, height: int) -> None:
+    def lay_out(self, width: int, height: int) -> None:
         """Choose the layout for a size."""
         self.arrangement = layout_for(width, height)
         for name in LAYOUTS:

@@ -2,9 +2,9 @@
 
 from __future__ import annotations
 
-from typing import Any
+from typing import Any, ClassVar
 
-from textual.binding import Binding
+from textual.binding import Binding, BindingType
 from textual.containers import Vertical
 from textual.screen import ModalScreen
 
@@ -20,7 +20,7 @@ LEAVE = Choice(value="yes", label="switch off and leave")
 class LeaveScreen(BenchScreen, ModalScreen[Any]):
     """Leaving means off first; staying is the usual answer."""
 
-    BINDINGS = [Binding("escape", "stay", show=False)]
+    BINDINGS: ClassVar[list[BindingType]] = [Binding("escape", "stay", show=False)]
 
     def __init__(self, words: str, **more: Any) -> None:
         super().__init__(**more)
@@ -35,7 +35,6 @@ class LeaveScreen(BenchScreen, ModalScreen[Any]):
 
     def on_mount(self) -> None:
         """Mark the safe answer."""
-        super().on_mount()
         self._choices.offer((STAY, LEAVE), marked=0)
         self._choices.focus()
 

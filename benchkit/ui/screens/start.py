@@ -41,7 +41,6 @@ class StartScreen(BenchScreen):
 
     def on_mount(self) -> None:
         """Begin at the first empty entry."""
-        super().on_mount()
         self._hint.say("Enter: next, then begin.  Tab: the other entry.  Ctrl+Q: leave.")
         empty = not self._unit.value.strip() and not self._opening.resumed
         (self._unit if empty else self._operator).focus()

@@ -2,11 +2,11 @@
 
 from __future__ import annotations
 
-from typing import Any, Final
+from typing import Any, ClassVar, Final
 
 from rich.table import Table
 from rich.text import Text
-from textual.binding import Binding
+from textual.binding import Binding, BindingType
 from textual.widgets import ContentSwitcher
 
 from benchkit.procedure.actions import Question
@@ -25,7 +25,7 @@ PAGE_FOR: Final[dict[str, str]] = {"hold": "hold", "decide": "decide", "trim": "
 """Page of a kind of question; every other kind has the step page."""
 
 _ROLE_STYLES: Final[dict[Role, str]] = {
-    **{verdict: f"bold {colour}" for verdict, colour in VERDICT_COLOURS.items()},  # type: ignore[dict-item]
+    **{verdict: f"bold {colour}" for verdict, colour in VERDICT_COLOURS.items()},
     "here": f"bold reverse {INK}",
     "coming": QUIET,
     "line": LINE,
@@ -35,7 +35,7 @@ _ROLE_STYLES: Final[dict[Role, str]] = {
 class WalkScreen(BenchScreen):
     """Everything between the start and the end of a walk."""
 
-    BINDINGS = [
+    BINDINGS: ClassVar[list[BindingType]] = [
         Binding("pageup", "turn_over(-6)", show=False),
         Binding("pagedown", "turn_over(6)", show=False),
         Binding("up", "turn_over(-1)", show=False),
@@ -102,9 +102,14 @@ class WalkScreen(BenchScreen):
         if isinstance(page, TrimPage):
             page.age()
 
-    def arrange(self, width: int, height: int) -> None:
+    def lay_out(self, width: int, height: int) -> None:
         """Choose the layout; the trail has another form where there is room."""
-        super().arrange(width, height)
+        before = self.arrangement
+        super().lay_out(width, height)
+        if self.arrangement == "tiny":
+            self.set_focus(None)  # nobody answers what can't be seen
+        elif before == "tiny":
+            self.page.answer.take_focus()
         if self._view is not None and self.is_mounted:
             self._say_trail(self._view)
 
@@ -115,8 +120,6 @@ class WalkScreen(BenchScreen):
     def on_answer_given(self, message: Answer.Given) -> None:
         """Hand the answer on."""
         message.stop()
-        if self.arrangement == "tiny":
-            return
         if self.page.id == "summary":
             self.bench.finish()
         else:

@@ -56,7 +56,9 @@ class Choices(Words, can_focus=True):
             self._marked = (self._marked + step) % len(self._choices)
             self._draw()
         else:
-            found = [choice for letter, choice in self._choices if event.character and event.character.lower() == letter]
+            found = [
+                choice for letter, choice in self._choices if event.character and event.character.lower() == letter
+            ]
             if not found:
                 return
             self.post_message(self.Taken(found[0]))
@@ -148,6 +150,11 @@ class Answer(Vertical):
         self._reason_for = None
         self._entry.value = ""
         self.display = False
+
+    def take_focus(self) -> None:
+        """Let the keys come here, if there is anything to answer."""
+        if self._question is not None:
+            self._focus()
 
     def _focus(self) -> None:
         (self._entry if self._entry.display else self._choices).focus(scroll_visible=False)

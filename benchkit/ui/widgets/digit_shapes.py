@@ -55,7 +55,7 @@ def fit(text: str, width: int, height: int) -> tuple[int, int] | None:
 
 
 def big_rows(text: str, across: int = 1, down: int = 1, ink: str = "█") -> tuple[str, ...]:
-    """Return `text` drawn large, as rows of equal width.
+    r"""Return `text` drawn large, as rows of equal width.
 
     Parameters
     ----------
@@ -71,7 +71,7 @@ def big_rows(text: str, across: int = 1, down: int = 1, ink: str = "█") -> tup
 
     Examples
     --------
-    >>> print("\\n".join(big_rows("-7", ink="#")))
+    >>> print("\n".join(big_rows("-7", ink="#")))
         ###
           #
     ###   #

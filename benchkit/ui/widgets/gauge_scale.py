@@ -118,7 +118,9 @@ def gauge_rows(
     return GaugeRows(
         needle=_needle(scale, value, uncertainty),
         band="".join(band),
-        figures=_figures(width, first if low is not None else None, low_text, last if high is not None else None, high_text),
+        figures=_figures(
+            width, first if low is not None else None, low_text, last if high is not None else None, high_text
+        ),
     )
 
 

@@ -1,0 +1,5 @@
+"""``python -m benchkit`` is the command ``benchkit``."""
+
+from benchkit.cli import main
+
+main()

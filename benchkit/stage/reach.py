@@ -1,0 +1,298 @@
+"""Questions to a whole design: does the trimmer reach the target, does an open wiper fail safe, where does it regulate.
+
+Each answer takes a nominal unit and a small ensemble, a second at most, so that ``check`` and the start of a walk can
+afford them.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from benchkit.errors import ModelError
+from benchkit.quantities import show
+from benchkit.stage.conditions import Condition
+from benchkit.stage.design import Design, target_drop_v
+from benchkit.stage.draws import Array, Parameters, draw, nominal, seeds
+from benchkit.stage.faults import Fault
+from benchkit.stage.operate import solve_units
+from benchkit.stage.runs import Mask
+
+AUTHORITY_UNITS = 400
+AUTHORITY_TRAVEL = (0.05, 0.95)
+"""Part of the travel within which a target counts as reached with something to spare (common practice)."""
+LEAST_AUTHORITY = 0.99
+"""Share of units that should reach the target there."""
+_RAIL_UNITS = 60
+_FULL_FEED = 0.98
+_SERVO_SHARE = (0.01, 0.95)
+
+
+@dataclass(frozen=True, kw_only=True)
+class Finding:
+    """Something about a design that a person should know.
+
+    Attributes
+    ----------
+    key : str
+        The dotted key of the design file that it hangs on.
+    came, expected, next_step : str
+        As in every message.
+    fatal : bool
+        Whether a walk with this design makes no sense.
+    """
+
+    key: str
+    came: str
+    expected: str
+    next_step: str
+    fatal: bool
+
+    def __str__(self) -> str:
+        return f"{self.key}: {self.came}. Expected {self.expected}. {self.next_step}."
+
+
+@dataclass(frozen=True, kw_only=True)
+class Authority:
+    """What the trimmer can do about the target.
+
+    Attributes
+    ----------
+    nominal_travel : float
+        Travel from the least-bias end at which the nominal unit meets the target; outside 0..1 when out of reach.
+    share : float
+        Share of units that reach the target inside 5 % to 95 % of the travel.
+    share_in_reach : float
+        Share of units that reach it at all.
+    drop_v_per_turn : float
+        Slope of one emitter drop at the target (V per turn), nominal unit.
+    """
+
+    nominal_travel: float
+    share: float
+    share_in_reach: float
+    drop_v_per_turn: float
+
+
+def full_rails(design: Design, **changes: object) -> Condition:
+    """Condition at the design's full rails, the trimmer at the target, cold or warm as the target asks."""
+    given: dict[str, object] = {
+        "positive_v": design.rails.positive_v,
+        "negative_v": design.rails.negative_v,
+        "trimmer": "target",
+        "when": design.target.when,
+    }
+    return Condition(**(given | changes))  # type: ignore[arg-type]
+
+
+def authority(design: Design, units: int = AUTHORITY_UNITS, seed: int = 0) -> Authority:
+    """Find out what the trimmer can do about the target.
+
+    Raises
+    ------
+    ModelError
+        Without a trimmer, or when the nominal unit has no solution at the target.
+    """
+    trimmer = design.spreader.trimmer
+    if trimmer is None:
+        raise ModelError(f"{design.name} has no trimmer", "a trimmer, where its authority is asked for")
+    condition = full_rails(design)
+    unit = solve_units(design, nominal(design), condition, loading="none")
+    if unit.unclipped is None or not unit.converged[0]:
+        raise ModelError(f"{design.name} has no operating point at its target", "one", "Check the design file")
+    travel = float(unit.unclipped[0])
+    drawn = solve_units(design, draw(design, units, seeds("limits", seed)), condition, start=unit, loading="none")
+    assert drawn.unclipped is not None
+    low, high = AUTHORITY_TRAVEL
+    inside = (drawn.unclipped >= low) & (drawn.unclipped <= high) & drawn.converged
+    step = 0.005
+    near = min(max(travel, step), 1.0 - step)
+    pair = np.array([near - step, near + step])
+    around = solve_units(
+        design, {key: np.broadcast_to(value, 2) for key, value in nominal(design).items()},
+        full_rails(design, trimmer=near), position=pair, start=unit, loading="none",
+    )  # fmt: skip
+    drops = around.points["emitter.pair.1"] / 2.0
+    return Authority(
+        nominal_travel=travel,
+        share=float(np.mean(inside)),
+        share_in_reach=float(np.mean(drawn.in_reach)),
+        drop_v_per_turn=float((drops[1] - drops[0]) / (2.0 * step * trimmer.turns)),
+    )
+
+
+def check_target(design: Design) -> list[Finding]:
+    """Look whether the design's target can be met.
+
+    Returns
+    -------
+    list of Finding
+        Empty when all is well. A target outside the trimmer's track in the nominal unit is fatal; less than 99 % of
+        units within 5 % to 95 % of the travel, and a trimmer that fails unsafe, are not.
+    """
+    key = "target." + (
+        "optimum" if design.target.optimum
+        else "emitter_drop" if design.target.emitter_drop_v is not None
+        else "quiescent_current"
+    )  # fmt: skip
+    drop_v = target_drop_v(design)
+    if design.spreader.trimmer is None:
+        return _fixed_bias(design, key, drop_v)
+    try:
+        found = authority(design)
+    except ModelError as error:
+        return [Finding(key=key, came=error.came, expected="an operating point", next_step=_LOOK, fatal=True)]
+    findings = []
+    if not 0.0 <= found.nominal_travel <= 1.0:
+        ends = [
+            float(solve_units(design, nominal(design), full_rails(design, trimmer=end)).points["emitter.upper.1"][0])
+            for end in ("least", "most")
+        ]
+        findings.append(
+            Finding(
+                key=key,
+                came=f"a drop of {show(drop_v, 'V')} is out of the trimmer's reach in the nominal unit",
+                expected=f"a target between {show(ends[0], 'V')} and {show(ends[1], 'V')}",
+                next_step=_LOOK,
+                fatal=True,
+            )
+        )
+    elif found.share < LEAST_AUTHORITY:
+        findings.append(
+            Finding(
+                key="spreader.trimmer",
+                came=f"{found.share:.1%} of units reach the target within 5 % to 95 % of the travel",
+                expected=f"{LEAST_AUTHORITY:.0%} or more",
+                next_step="Choose a larger trimmer or other fixed resistors",
+                fatal=found.share_in_reach < 0.5,
+            )
+        )
+    safe = open_wiper_lowers_bias(design)
+    if not safe:
+        findings.append(
+            Finding(
+                key="spreader.trimmer.wiring",
+                came="an open wiper raises the bias",
+                expected="a trimmer whose open wiper lowers it",
+                next_step="Put the trimmer into the base-emitter arm, where an open wiper leaves the least spread",
+                fatal=False,
+            )
+        )
+    return findings
+
+
+_LOOK = "Look at the spreader's resistors, its trimmer and the target in the design file"
+
+
+def require_target(design: Design) -> None:
+    """Raise on the first fatal finding of `check_target`.
+
+    Raises
+    ------
+    ModelError
+    """
+    for finding in check_target(design):
+        if finding.fatal:
+            raise ModelError(
+                f"{design.file or design.name}, {finding.key}: {finding.came}", finding.expected, finding.next_step
+            )
+
+
+def _fixed_bias(design: Design, key: str, drop_v: float) -> list[Finding]:
+    unit = solve_units(design, nominal(design), full_rails(design), loading="none")
+    reads_v = float(unit.points["emitter.pair.1"][0]) / 2.0
+    low_v, high_v = drop_v * (1.0 - design.target.tolerance), drop_v * (1.0 + design.target.tolerance)
+    if unit.converged[0] and low_v <= reads_v <= high_v:
+        return []
+    came = (
+        f"the nominal unit's drop is {show(reads_v, 'V')}" if unit.converged[0] else "the nominal unit has no solution"
+    )
+    expected = f"{show(low_v, 'V')} to {show(high_v, 'V')}, because there is no trimmer to correct it"
+    return [Finding(key=key, came=came, expected=expected, next_step=_LOOK, fatal=True)]
+
+
+def open_wiper_lowers_bias(design: Design) -> bool:
+    """Whether the spread with an open wiper is no more than at the trimmer's least-bias end, nominal unit, cold.
+
+    Notes
+    -----
+    The fail-safe rule is common practice: dirt under a wiper must not burn the output stage.
+    """
+    if design.spreader.trimmer is None:
+        return True
+    condition = full_rails(design, trimmer="least", when="cold")
+    healthy = solve_units(design, nominal(design), condition, loading="none")
+    opened = solve_units(
+        design, nominal(design), condition, Fault("spreader.trimmer", "wiper open"), start=healthy, loading="none"
+    )  # fmt: skip
+    least_v, open_v = float(healthy.points["spread"][0]), float(opened.points["spread"][0])
+    return bool(opened.converged[0]) and open_v <= least_v * 1.001
+
+
+def least_regulating_rails(design: Design) -> tuple[float, float]:
+    """Lowest rails (V) from which the stage regulates, in the ratio of the full ones.
+
+    Regulating means, in the nominal unit and in a small ensemble, trimmer at its least-bias end: a source feed sends
+    98 % of its current; a servo works (both rails at or above ``works_from``), its current lies between 1 % and 95 % of
+    its most, and the output is where it belongs; with resistor feeds the spreader's transistor takes at least as much
+    current as its lower arm, and the output lies within a tenth of the span of its rest.
+
+    Returns
+    -------
+    positive_v, negative_v : float
+        On a grid of 0.5 V of the positive rail.
+
+    Raises
+    ------
+    ModelError
+        When it doesn't regulate at full rails either.
+    """
+    full_v = design.rails.positive_v
+    ratio = design.rails.negative_v / full_v
+    grid = np.append(np.arange(1.0, full_v, 0.5 if full_v <= 50.0 else 1.0), full_v)
+    if design.feed.lower.kind == "servo":
+        grid = grid[grid * min(1.0, -ratio) >= (design.feed.works_from_v or 0.0) * (1.0 - 1e-12)]
+    units = _RAIL_UNITS + 1
+    drawn, unit = draw(design, _RAIL_UNITS, seeds("limits", 0)), nominal(design)
+    group: Parameters = {
+        key: value if value.ndim == 0 else np.tile(np.append(unit[key], value), grid.size)
+        for key, value in drawn.items()
+    }
+    positive = np.repeat(grid, units)
+    negative = positive * ratio
+    condition = full_rails(design, trimmer="least", when="cold")
+    solved = solve_units(design, group, condition, rails_v=(positive, negative), loading="none")
+    good = [solved.converged]
+    span_v = positive - negative
+    rest_v = np.array([design.rest_v(p, n) for p, n in zip(positive, negative, strict=True)])
+    off_v = np.abs(solved.points["output"] - rest_v)
+    circuit = solved.solution
+    if design.feed.upper.kind == "source":
+        good.append(circuit.current("feed.upper") >= _FULL_FEED * group["feed.upper.amps"])
+    if design.feed.lower.kind == "servo":
+        share = circuit.current("feed.lower") / group["feed.lower.max_a"]
+        good.append((share >= _SERVO_SHARE[0]) & (share <= _SERVO_SHARE[1]))
+        good.append(off_v <= design.output.offset_v + 1e-3)
+    else:
+        good.append(off_v <= 0.1 * span_v)
+    good.append(_spreader_conducts(solved.points, circuit.transistor("spreader.transistor").ic_a, group, design))
+    each = np.all(good, axis=0).reshape(grid.size, units).all(axis=1)
+    if not each[-1]:
+        raise ModelError(
+            f"{design.name} doesn't regulate at its full rails in a nominal unit or a small ensemble",
+            "feeds and servo within their currents, the spreader's transistor conducting",
+            "Check feeds and spreader in the design file",
+        )
+    bad = np.flatnonzero(~each)
+    first = int(bad[-1]) + 1 if bad.size else 0
+    positive_v = float(grid[first])
+    return positive_v, positive_v * ratio
+
+
+def _spreader_conducts(points: dict[str, Array], collector_a: Array, group: Parameters, design: Design) -> Mask:
+    arm_ohm = group["spreader.lower"]
+    trimmer = design.spreader.trimmer
+    if trimmer is not None and trimmer.arm in ("lower", "between"):
+        arm_ohm = arm_ohm + group["spreader.trimmer.track"]
+    return np.asarray(collector_a >= points["spread.lower"] / arm_ohm)

@@ -1,0 +1,424 @@
+"""The app around the screens: it puts the session's questions, keeps the heartbeat, and gets everybody out safely.
+
+Rules
+-----
+* *Off first.*  The off key, leaving, a signal, a terminal that has gone and an error of our own all ask for off before
+  anything else, through the one callable `off_now`; it must be quick, callable from any thread and more than once.
+* The heartbeat comes from the event loop that also handles keys: when the loop hangs, it stops, and the keeper acts.
+* No handler waits.  What takes time is a task of its own.
+* The session runs as a task of this loop; it sees a `Front` and nothing else.
+"""
+
+from __future__ import annotations
+
+import asyncio
+import contextlib
+import os
+import sys
+import tempfile
+import traceback
+from collections.abc import Callable, Coroutine
+from dataclasses import dataclass
+from datetime import UTC, datetime
+from pathlib import Path
+from typing import Any, ClassVar, Final
+
+from textual.app import App
+from textual.binding import Binding
+from textual.theme import Theme
+from textual.widgets import Input
+
+from benchkit.errors import BenchkitError
+from benchkit.events import Closed
+from benchkit.procedure.actions import Question
+from benchkit.session.front import Reply, SupplyView, View
+from benchkit.ui import look, platform
+from benchkit.ui.entry import Identity, Opening, Start
+from benchkit.ui.screens.base import BenchScreen
+from benchkit.ui.screens.leave import LeaveScreen
+from benchkit.ui.screens.start import StartScreen
+from benchkit.ui.screens.walk import WalkScreen
+from benchkit.ui.sheet import SHEET
+from benchkit.ui.widgets.answer import GUARD_S
+
+HEARTBEAT_S: Final = 0.2
+PAINT_S: Final = 0.1
+FLASH_S: Final = 0.7
+CLOSE_WITHIN_S: Final = 3.0
+"""How long leaving waits for the session to switch off and close its record (s)."""
+
+STOPPED: Final = 4
+OWN_ERROR: Final = 5
+
+
+@dataclass
+class _Pending:
+    question: Question
+    refused: str
+    reply: asyncio.Future[Reply]
+
+
+class ScreenFront:
+    """What the session sees of the screens (`benchkit.session.front.Front`)."""
+
+    def __init__(self, app: BenchApp) -> None:
+        self._app = app
+
+    def show(self, view: View) -> None:
+        """Display a picture of the walk, at the next repaint."""
+        self._app.take_view(view)
+
+    async def ask(self, question: Question, refused: str = "") -> Reply:
+        """Put a question and wait for the reply; when cancelled, the question goes away."""
+        return await self._app.put_question(question, refused)
+
+
+class BenchApp(App[int]):
+    """The screens of one walk or rehearsal.
+
+    Parameters
+    ----------
+    start : callable
+        Runs the walk before a front end, for a unit and an operator; called when the person begins.
+    off_now : callable
+        Switches the supply off; takes the reason; quick, idempotent, from any thread; harmless before the walk.
+    heartbeat : callable
+        Called every `HEARTBEAT_S` on the event loop.
+    opening : Opening
+        What the start screen shows.
+    identity : Identity or None
+        When given, the start screen is left out.
+    log_dir : Path or None
+        Where an error of our own is written down; None: the directory for temporary files.
+    guard_s : float
+        Keys this soon after a question came up are not taken for its answer (s).
+    """
+
+    CSS = SHEET
+    TITLE = "benchkit"
+    ENABLE_COMMAND_PALETTE = False
+    BINDINGS: ClassVar[list[Any]] = [
+        Binding("f9", "off_at_once", "off", show=False, priority=True),
+        Binding("space", "off_by_space", "off", show=False, priority=True),
+        Binding("ctrl+q", "quit", "leave", show=False, priority=True),
+        Binding("ctrl+c", "quit", "leave", show=False, priority=True),
+    ]
+
+    def __init__(
+        self,
+        start: Start,
+        *,
+        off_now: Callable[[str], object],
+        heartbeat: Callable[[], object],
+        opening: Opening,
+        identity: Identity | None = None,
+        log_dir: Path | None = None,
+        guard_s: float = GUARD_S,
+    ) -> None:
+        super().__init__(ansi_color=True if os.environ.get("NO_COLOR") is not None else None)
+        self.register_theme(_THEME)
+        self.theme = _THEME.name
+        self._start = start
+        self._off_now = off_now
+        self._heartbeat = heartbeat
+        self._opening = opening
+        self._identity = identity
+        self._log_dir = log_dir if log_dir is not None else Path(tempfile.gettempdir())
+        self._guard_s = guard_s
+        self._walk: WalkScreen | None = None
+        self._walk_task: asyncio.Task[None] | None = None
+        self._tasks: set[asyncio.Task[None]] = set()
+        self._pending: _Pending | None = None
+        self._view: View | None = None
+        self._painted: View | None = None
+        self._ending: Closed | None = None
+        self._leaving = False
+        self.off_asked = False
+        self.crash: BaseException | None = None
+        self.last_words = ""
+        self.leaver: platform.Leaver | None = None
+
+    # --- life ---------------------------------------------------------------------------------------------------
+
+    def on_mount(self) -> None:
+        """Start the clocks and the first screen."""
+        platform.ignore_stop_key()
+        self.set_interval(HEARTBEAT_S, self._beat)
+        self.set_interval(PAINT_S, self._paint)
+        if self._identity is not None:
+            self.begin(self._identity)
+        else:
+            self.push_screen(StartScreen(self._opening))
+
+    def on_unmount(self) -> None:
+        """Leave no walk running behind a screen that has gone; off has been asked for by then."""
+        if self._walk_task is not None:
+            self._walk_task.cancel()
+
+    def begin(self, identity: Identity) -> None:
+        """Begin the walk."""
+        if self._walk_task is not None:
+            return
+        self._walk = WalkScreen(self._guard_s)
+        self._run(self._begin(self._walk, identity))
+
+    async def _begin(self, screen: WalkScreen, identity: Identity) -> None:
+        if isinstance(self.screen, StartScreen):
+            await self.switch_screen(screen)
+        else:
+            await self.push_screen(screen)
+        self._walk_task = asyncio.create_task(self._walk_through(identity), name="walk")
+
+    async def _walk_through(self, identity: Identity) -> None:
+        try:
+            self._ending = await self._start(ScreenFront(self), identity)
+        except BenchkitError as error:
+            self.call_off("the walk can't go on")
+            self.last_words = error.message
+            self.exit(error.exit_status)
+        except Exception as error:
+            self._handle_exception(error)
+
+    def _beat(self) -> None:
+        self._heartbeat()
+
+    def _run(self, work: Coroutine[Any, Any, None]) -> None:
+        task = asyncio.get_running_loop().create_task(work)
+        self._tasks.add(task)
+        task.add_done_callback(self._ran)
+
+    def _ran(self, task: asyncio.Task[None]) -> None:
+        self._tasks.discard(task)
+        if not task.cancelled() and isinstance(error := task.exception(), Exception):
+            self._handle_exception(error)
+
+    # --- the session's side -------------------------------------------------------------------------------------
+
+    @property
+    def supply(self) -> SupplyView | None:
+        """What is known of the supply; None before the walk has begun."""
+        return self._view.supply if self._view is not None else None
+
+    def take_view(self, view: View) -> None:
+        """Keep the newest picture; a change of the supply is shown without waiting for the next repaint."""
+        earlier = self._view
+        self._view = view
+        if view.supply.energised == "off":
+            self.off_asked = False
+        if earlier is None or earlier.supply != view.supply or view.exit_status is not None:
+            self._paint()
+
+    async def put_question(self, question: Question, refused: str) -> Reply:
+        """Put a question on the screen and wait."""
+        pending = _Pending(question, refused, asyncio.get_running_loop().create_future())
+        self._pending = pending
+        self._paint()
+        if self._walk is not None:
+            self._walk.put(question, refused)
+        try:
+            return await pending.reply
+        finally:
+            if self._pending is pending:
+                self._pending = None
+                if self._walk is not None and self.is_running:
+                    self._walk.withdraw()
+
+    def answered(self, reply: Reply) -> None:
+        """Hand an answer to the session."""
+        if self._pending is not None and not self._pending.reply.done():
+            self._pending.reply.set_result(reply)
+
+    def finish(self) -> None:
+        """Leave after the end of the walk, with its exit status."""
+        self._run(self._leave("", self._status_of_end()))
+
+    def _status_of_end(self) -> int:
+        if self._ending is not None:
+            return self._ending.exit_status
+        status = self._view.exit_status if self._view is not None else None
+        return status if status is not None else STOPPED
+
+    def _paint(self) -> None:
+        walk, view = self._walk, self._view
+        if walk is None or not walk.is_mounted:
+            return
+        if view is not None and view is not self._painted:
+            earlier, self._painted = self._painted, view
+            walk.say(view)
+            self._attend(earlier, view)
+        walk.age()
+        for screen in self.screen_stack:
+            if isinstance(screen, BenchScreen):
+                screen.refresh_off_line()
+
+    def _attend(self, earlier: View | None, view: View) -> None:
+        """Ring and flash when something did not pass or the supply changed its state."""
+        fresh = view.results[len(earlier.results) if earlier is not None else 0 :]
+        changed = earlier is not None and earlier.supply.energised != view.supply.energised
+        if any(result.verdict != "pass" for result in fresh) or (changed and view.supply.energised == "unknown"):
+            self.bell()
+        if changed:
+            self._flash()
+
+    def _flash(self) -> None:
+        screen = self.screen
+        if isinstance(screen, BenchScreen):
+            screen.off_line.add_class("flash")
+            self.set_timer(FLASH_S, lambda: screen.off_line.remove_class("flash"))
+
+    # --- off and out --------------------------------------------------------------------------------------------
+
+    def call_off(self, reason: str) -> None:
+        """Ask for off; never fails, never waits."""
+        self.off_asked = self._view is not None and self._view.supply.energised != "off"
+        with contextlib.suppress(Exception):
+            self._off_now(reason)
+
+    def check_action(self, action: str, parameters: tuple[object, ...]) -> bool | None:
+        """Leave the space bar to an entry that has the focus."""
+        if action == "off_by_space":
+            return not isinstance(self.focused, Input)
+        return True
+
+    def action_off_at_once(self) -> None:
+        """Switch off at once."""
+        self.call_off("the operator asked for it")
+        for screen in self.screen_stack:
+            if isinstance(screen, BenchScreen):
+                screen.refresh_off_line()
+        self._flash()
+
+    def action_off_by_space(self) -> None:
+        """Switch off at once, when there is anything to switch off."""
+        if self.supply is not None and self.supply.energised != "off":
+            self.action_off_at_once()
+
+    async def action_quit(self) -> None:
+        """Leave; while the supply is on or may be, only after asking."""
+        if self._leaving or isinstance(self.screen, LeaveScreen):
+            return
+        supply = self.supply
+        if supply is None or supply.energised == "off":
+            self._begin_leaving()
+            return
+        words = "The supply is on." if supply.energised == "on" else "Nobody knows whether the supply is on."
+        words += (
+            " Nothing switches it off by itself: switch it off BY HAND before you leave."
+            if supply.by_hand
+            else " Leaving switches it off first."
+        )
+        self.push_screen(LeaveScreen(words + " The walk can be gone on with later."), self._on_leave)
+
+    def _on_leave(self, leave: bool | None) -> None:
+        if leave:
+            self._begin_leaving()
+
+    def _begin_leaving(self) -> None:
+        ended = self._ending is not None or (self._view is not None and self._view.exit_status is not None)
+        self._run(self._leave("the operator left", self._status_of_end() if ended else STOPPED))
+
+    async def _leave(self, reason: str, status: int) -> None:
+        """Off first, then give the session a moment to close its record, then go."""
+        if self._leaving:
+            return
+        self._leaving = True
+        if reason:
+            self.call_off(reason)
+        task = self._walk_task
+        if task is not None and not task.done():
+            _, waiting = await asyncio.wait({task}, timeout=CLOSE_WITHIN_S)
+            if waiting:
+                task.cancel()
+                await asyncio.wait({task}, timeout=1.0)
+        self.exit(status)
+
+    def leave_from_outside(self, reason: str) -> None:
+        """Leave because of a signal; called from another thread, off has been asked for already."""
+        self.last_words = self.last_words or f"Stopped from outside ({reason}); the supply was told to switch off."
+        loop = self._loop
+        if loop is not None:
+            loop.call_soon_threadsafe(self.exit, STOPPED)
+
+    def _handle_exception(self, error: Exception) -> None:
+        """Off first, then one plain sentence and a log; nothing that could fail in its turn."""
+        if self.crash is not None:
+            return
+        self.crash = error
+        self.call_off("an error of benchkit's own")
+        self._return_code = OWN_ERROR
+        if self._exception is None:
+            self._exception = error
+            self._exception_event.set()
+        where = write_log(self._log_dir, error)
+        self.last_words = (
+            f"benchkit made an error of its own ({type(error).__name__}); the supply was told to switch off: "
+            f"look whether it is off.{where}"
+        )
+        if self.leaver is not None:
+            self.leaver.last_words = self.last_words
+            self.leaver.exit_status = OWN_ERROR
+            self.leaver.ask("an error of benchkit's own")
+        self._close_messages_no_wait()
+
+    def panic(self, *renderables: Any) -> None:
+        """Treat what the toolkit calls a panic as an error of our own."""
+        self._handle_exception(RuntimeError("the screen failed"))
+
+    def exit_status(self) -> int:
+        """Return the exit status once the app has ended."""
+        if self.crash is not None:
+            return OWN_ERROR
+        return self.return_value if self.return_value is not None else STOPPED
+
+
+_THEME: Final = Theme(
+    name="bench",
+    primary=look.PASS,
+    foreground=look.INK,
+    background=look.GROUND,
+    surface=look.PANEL,
+    panel=look.PANEL,
+    dark=True,
+)
+
+
+def write_log(directory: Path, error: BaseException) -> str:
+    """Write the traceback of `error` into a file in `directory`; return a sentence that says where, or why not."""
+    name = f"benchkit-error-{datetime.now(UTC):%Y%m%dT%H%M%S}-{os.getpid()}.log"
+    try:
+        directory.mkdir(parents=True, exist_ok=True)
+        path = directory / name
+        path.write_text("".join(traceback.format_exception(error)), encoding="utf-8")
+    except OSError as problem:
+        return f" The details could not be written ({problem.strerror or problem})."
+    return f" The details are in {path}."
+
+
+def run_app(
+    start: Start,
+    *,
+    off_now: Callable[[str], object],
+    heartbeat: Callable[[], object],
+    opening: Opening,
+    identity: Identity | None = None,
+    log_dir: Path | None = None,
+) -> int:
+    """Run the screens until the person leaves, and return the exit status.
+
+    See `BenchApp` for the parameters.  Whatever ends the screens, `off_now` has been called unless the walk had come to
+    its own end.  What has to be said at the end goes to standard error as one line.
+    """
+    app = BenchApp(start, off_now=off_now, heartbeat=heartbeat, opening=opening, identity=identity, log_dir=log_dir)
+    leaver = platform.Leaver(off_now, app.leave_from_outside)
+    app.leaver = leaver
+    try:
+        with leaver.installed():
+            app.run(mouse=False)
+    finally:
+        if app.return_value is None:
+            with contextlib.suppress(Exception):
+                off_now("the screens have ended")
+    if app.last_words:
+        with contextlib.suppress(OSError, ValueError):
+            print(app.last_words, file=sys.stderr)
+    return app.exit_status()

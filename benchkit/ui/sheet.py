@@ -1,0 +1,119 @@
+"""The style sheet of the screens: sizes and colours, by layout."""
+
+from __future__ import annotations
+
+from typing import Final
+
+from benchkit.ui.look import CARE, FAIL, GROUND, INK, LINE, PANEL, QUIET, STRONG, SUPPLY_COLOURS
+
+SHEET: Final = f"""
+Screen {{ background: {GROUND}; color: {INK}; layout: vertical; overflow: hidden; }}
+.too-small {{ display: none; height: 1fr; padding: 0 1; text-style: bold; color: {CARE}; }}
+
+VerticalScroll {{ scrollbar-size-vertical: 1; scrollbar-color: {LINE}; scrollbar-background: {GROUND}; }}
+
+OffLine {{ dock: bottom; height: 2; padding: 0 1; background: {PANEL}; color: {INK}; }}
+OffLine Words {{ height: 1; width: 1fr; }}
+OffLine.supply-on {{ background: {SUPPLY_COLOURS["on"]}; color: #000000; text-style: bold; }}
+OffLine.supply-unknown {{ background: {SUPPLY_COLOURS["unknown"]}; color: #000000; text-style: bold; }}
+OffLine.flash {{ text-style: reverse bold; }}
+
+.walk-head {{ height: 1; padding: 0 1; background: {PANEL}; }}
+.walk-trail {{ height: 1; padding: 0 1; margin-bottom: 1; }}
+.walk-message {{ height: 1; padding: 0 1; color: {CARE}; }}
+.walk-pages {{ height: 1fr; }}
+Page {{ height: 1fr; width: 1fr; }}
+
+Card {{ height: 1fr; padding: 0 1; }}
+.card-do {{ height: auto; padding: 0 2; border-left: outer {CARE}; margin-bottom: 1; max-width: 76; }}
+.card-do.waiting {{ border-left: outer {LINE}; }}
+.card-details {{ height: auto; padding: 0 1; max-width: 100; }}
+
+Outcome {{ height: auto; padding: 0 1; border-top: solid {LINE}; }}
+.outcome-head {{ height: 1; }}
+.outcome-gauge {{ margin: 0 2; }}
+.outcome-why {{ height: auto; max-height: 2; }}
+.outcome-earlier {{ display: none; height: auto; margin-top: 1; }}
+
+Answer {{ height: auto; padding: 0 1; border-top: solid {LINE}; }}
+.answer-hint {{ height: auto; color: {INK}; }}
+.refused {{ color: {FAIL}; text-style: bold; }}
+Choices {{ height: auto; }}
+Input {{ background: {PANEL}; color: {STRONG}; }}
+Input:focus {{ background-tint: {STRONG} 6%; }}
+.answer-entry {{ width: 1fr; max-width: 50; }}
+
+.hold-title {{ height: auto; padding: 0 2; border-top: double {CARE}; color: {CARE}; text-style: bold; }}
+.hold-title {{ margin-bottom: 1; }}
+#hold {{ border-bottom: double {CARE}; }}
+.deciding {{ border-top: none; margin-bottom: 1; }}
+.deciding .outcome-why {{ max-height: 4; margin-top: 1; }}
+
+#trim .card {{ height: auto; max-height: 4; }}
+#trim .card-details {{ display: none; }}
+#trim .card-do {{ margin-bottom: 0; }}
+.trim-reading {{ margin: 1 2 0 2; width: 1fr; }}
+.trim-where {{ height: 1; padding: 0 1; margin-top: 1; }}
+.trim-gauge {{ margin: 0 2; }}
+.trim-trend {{ height: 1fr; margin: 0 2; min-height: 0; }}
+.trim-turns {{ height: 1; padding: 0 1; }}
+
+.summary-verdict {{ height: auto; padding: 0 1; margin-bottom: 1; }}
+.summary-scroll {{ height: 1fr; padding: 0 1; }}
+.summary-body {{ height: auto; }}
+
+.start-body {{ height: 1fr; padding: 1 2 0 2; }}
+.start-title {{ height: auto; margin-bottom: 1; }}
+.start-deference {{ height: auto; border-left: outer {CARE}; padding: 0 2; margin-bottom: 1; max-width: 100; }}
+.start-facts {{ height: auto; max-width: 100; }}
+.start-entries {{ layout: grid; grid-size: 2 2; grid-columns: 22 1fr; grid-rows: 1 1; height: 2; margin: 0 2; }}
+.start-label {{ height: 1; color: {INK}; }}
+.start-entries Input {{ max-width: 46; }}
+.start-hint {{ height: auto; margin: 1 2; color: {QUIET}; }}
+.start-hint.refused {{ color: {FAIL}; }}
+
+LeaveScreen {{ background: {GROUND}; align: center middle; }}
+.leave-box {{ width: 90%; max-width: 66; height: auto; margin: 1 0; padding: 0 2; border: double {CARE}; }}
+.leave-words {{ height: auto; margin-bottom: 1; }}
+
+.roomy .card-do {{ padding: 1 3; margin-bottom: 1; max-width: 100; background: {PANEL}; }}
+.roomy .walk-trail {{ height: auto; max-height: 3; margin-top: 1; }}
+.roomy .outcome-earlier {{ display: block; }}
+.roomy .outcome-why {{ max-height: 4; }}
+.roomy .start-title {{ margin-top: 2; margin-bottom: 2; }}
+.roomy #trim .card {{ max-height: 7; }}
+.roomy #trim .card-details {{ display: block; }}
+.roomy .trim-where {{ margin-top: 2; }}
+.roomy .trim-turns {{ margin-top: 1; }}
+
+.small .walk-head, .small .walk-trail, .small .walk-message {{ display: none; }}
+.small .card-do {{ margin-bottom: 0; padding: 0 1; }}
+.small Card, .small Outcome, .small Answer {{ padding: 0; }}
+.small .card-details {{ padding: 0; }}
+.small Outcome {{ border-top: none; }}
+.small .outcome-why {{ max-height: 1; }}
+.small .outcome-gauge {{ margin: 0; }}
+.small Answer {{ border-top: none; }}
+.small .hold-title {{ border-top: none; margin: 0; padding: 0 1; height: 1; }}
+.small #hold {{ border-bottom: none; }}
+.small .deciding {{ margin-bottom: 0; }}
+.small .deciding .outcome-why {{ max-height: 1; margin-top: 0; }}
+.small #trim .card {{ display: none; }}
+.small .trim-reading {{ margin: 0; }}
+.small .trim-where {{ margin-top: 0; padding: 0; }}
+.small .trim-gauge {{ margin: 0; height: 2; }}
+.small .trim-trend {{ display: none; }}
+.small .trim-turns {{ display: none; }}
+.small .summary-verdict {{ margin: 0; padding: 0; }}
+.small .start-body {{ padding: 0 1; }}
+.small .start-title {{ margin: 0; }}
+.small .start-deference {{ padding: 0 1; margin-bottom: 0; }}
+.small .start-entries {{ margin: 0 1; grid-columns: 20 1fr; }}
+.small .start-hint {{ margin: 0 1; max-height: 1; }}
+.small .leave-box {{ width: 100%; margin: 0; padding: 0 1; }}
+.small .leave-words {{ margin-bottom: 0; }}
+
+.tiny .too-small {{ display: block; }}
+.tiny .walk-head, .tiny .walk-trail, .tiny .walk-message, .tiny .walk-pages {{ display: none; }}
+.tiny .start-body, .tiny .start-entries, .tiny .start-hint, .tiny .leave-box {{ display: none; }}
+"""
