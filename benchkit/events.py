@@ -76,6 +76,7 @@ class Event:
     """Base of all events."""
 
     name: ClassVar[str] = ""
+    __pydantic_config__: ClassVar[pydantic.ConfigDict] = pydantic.ConfigDict(extra="forbid", allow_inf_nan=False)
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -376,7 +377,7 @@ def from_payload(name: str, payload: Mapping[str, Any]) -> Event:
 
 @functools.cache
 def _adapter(kind: Any) -> pydantic.TypeAdapter[Any]:
-    return pydantic.TypeAdapter(kind, config=pydantic.ConfigDict(extra="forbid", allow_inf_nan=False))
+    return pydantic.TypeAdapter(kind)
 
 
 def _plain(value: object) -> object:

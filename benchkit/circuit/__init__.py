@@ -17,5 +17,7 @@ equations
 newton
     Newton's method for a batch of units, and what is tried on the units that it fails on.
 solve
-    ``compile_netlist`` and the solution that it leads to.
+    ``compile_netlist``, and solving what it made.
+solution
+    What a solve found.
 """

@@ -60,6 +60,16 @@ class Arguments:
             self.compliance[:, index],
         )  # fmt: skip
 
+    def differ(self, other: Arguments) -> Mask:
+        """Which units have an argument that differs from the other's by more than rounding."""
+        pairs: tuple[tuple[Array, Array], ...] = (
+            (self.vbe, other.vbe),
+            (self.vbc, other.vbc),
+            (self.sigmoid, other.sigmoid),
+        )
+        pairs += ((self.error, other.error), (self.compliance, other.compliance))
+        return np.asarray(np.concatenate([np.abs(a - b) > 1e-9 * (1.0 + np.abs(b)) for a, b in pairs]).any(axis=0))
+
 
 @dataclass
 class Linearised:
@@ -75,7 +85,68 @@ class Linearised:
         return Linearised(self.currents[:, index], self.slopes[:, index], self.arguments.take(index), self.held[index])
 
 
-class Batch:
+def _stack(values: Mapping[str, Array], keys: list[str], units: int) -> Array:
+    result = np.empty((len(keys), units))
+    for row, key in zip(result, keys, strict=True):
+        row[:] = values[key]
+    return result
+
+
+class Saturating:
+    """The supplies, sources, ohmmeters and servos of some units.
+
+    The first three are brought to one law: I = amps tanh((v - zero)/width) + leak (v - zero).
+    """
+
+    def __init__(self, plan: Plan, values: Mapping[str, Array], units: int) -> None:
+        self.plan = plan
+        self.units = units
+        shape = (len(plan.sigmoids), units)
+        self.amps, self.inv_width = np.empty(shape), np.empty(shape)
+        self.zero, self.leak = np.zeros(shape), np.zeros(shape)
+        for k, e in enumerate(plan.sigmoids):
+            if isinstance(e, Supply):
+                self.amps[k] = values[f"{e.name}.limit_a"]
+                self.inv_width[k] = 1.0 / (self.amps[k] * SUPPLY_KNEE_OHM)
+                self.zero[k] = values[f"{e.name}.volts"]
+                self.leak[k] = SUPPLY_LEAK_S
+            elif isinstance(e, Source):
+                self.amps[k] = values[f"{e.name}.amps"]
+                self.inv_width[k] = 1.0 / COMPLIANCE_V
+            else:
+                self.amps[k] = values[f"{e.name}.amps"]
+                self.inv_width[k] = 1.0 / OHMMETER_KNEE_V
+                self.zero[k] = values[f"{e.name}.compliance_v"]
+        self.servo_most = _stack(values, [f"{e.name}.max_a" for e in plan.servos], units)
+        self.servo_gain = np.repeat(plan.senses / SERVO_ERROR_V, units, axis=1)
+        self.servo_rest = _stack(values, [f"{e.name}.rest_v" for e in plan.servos], units)
+
+    def knees(self, full: Array) -> tuple[Array, Array, Array]:
+        """Arguments of sigmoids, and of servos their errors and compliances, at an extended x."""
+        p = self.plan
+        return (
+            (full[p.sa] - full[p.sb] - self.zero) * self.inv_width,
+            (full[p.vs] - full[p.vr] - self.servo_rest) * self.servo_gain,
+            (full[p.va] - full[p.vb]) * (1.0 / COMPLIANCE_V),
+        )
+
+    def knees_by_name(self, x: Array) -> dict[str, tuple[Array, ...]]:
+        """Arguments of each element at x: one of a supply, source or ohmmeter, two of a servo."""
+        sigmoid, error, compliance = self.knees(extended(x))
+        found: dict[str, tuple[Array, ...]] = {}
+        for e, row in zip(self.plan.sigmoids, sigmoid, strict=True):
+            found[e.name] = (row,)
+        for servo, one, two in zip(self.plan.servos, error, compliance, strict=True):
+            found[servo.name] = (one, two)
+        return found
+
+
+def extended(x: Array) -> Array:
+    """Append the reference node's zeros to x."""
+    return np.concatenate([x, np.zeros((1, x.shape[1]))])
+
+
+class Batch(Saturating):
     """A plan with the values of some units.
 
     Parameters
@@ -85,22 +156,14 @@ class Batch:
     """
 
     def __init__(self, plan: Plan, values: Mapping[str, Array], units: int) -> None:
-        self.plan = plan
-        self.units = units
+        super().__init__(plan, values, units)
 
         def stack(keys: list[str]) -> Array:
-            result = np.empty((len(keys), units))
-            for row, key in zip(result, keys, strict=True):
-                row[:] = values[key]
-            return result
+            return _stack(values, keys, units)
 
         outside = np.maximum(stack([e.name for e in plan.resistors]), LEAST_RESISTOR_OHM)
         inside = np.maximum(stack([f"{name}.{parameter}" for name, parameter, _ in plan.internal]), LEAST_INTERNAL_OHM)
         self.conductance = 1.0 / np.concatenate([outside, inside])
-        self._sigmoids(values)
-        self.servo_most = stack([f"{e.name}.max_a" for e in plan.servos])
-        self.servo_gain = np.repeat(plan.senses / SERVO_ERROR_V, units, axis=1)
-        self.servo_rest = stack([f"{e.name}.rest_v" for e in plan.servos])
         self.volts = stack([f"{e.name}.volts" for e in plan.unknowns])
         parameters = {key: stack([f"{e.name}.{key}" for e in plan.transistors]) for key in TRANSISTOR_DEFAULTS}
         self.polarity = parameters["polarity"]
@@ -110,30 +173,6 @@ class Batch:
         self.fixed = np.zeros((plan.structure.slots, units))
         for slot, resistor, value in plan.fixed_terms:
             self.fixed[slot] += value if resistor < 0 else value * self.conductance[resistor]
-
-    def _sigmoids(self, values: Mapping[str, Array]) -> None:
-        """Bring supplies, sources and ohmmeters to one law: I = amps tanh((v - zero)/width) + leak (v - zero)."""
-        shape = (len(self.plan.sigmoids), self.units)
-        self.amps, self.inv_width, self.zero, self.leak = (
-            np.empty(shape),
-            np.empty(shape),
-            np.empty(shape),
-            np.zeros(shape),
-        )
-        for k, e in enumerate(self.plan.sigmoids):
-            if isinstance(e, Supply):
-                self.amps[k] = values[f"{e.name}.limit_a"]
-                self.inv_width[k] = 1.0 / (self.amps[k] * SUPPLY_KNEE_OHM)
-                self.zero[k] = values[f"{e.name}.volts"]
-                self.leak[k] = SUPPLY_LEAK_S
-            elif isinstance(e, Source):
-                self.amps[k] = values[f"{e.name}.amps"]
-                self.inv_width[k] = 1.0 / COMPLIANCE_V
-                self.zero[k] = 0.0
-            else:
-                self.amps[k] = values[f"{e.name}.amps"]
-                self.inv_width[k] = 1.0 / OHMMETER_KNEE_V
-                self.zero[k] = values[f"{e.name}.compliance_v"]
 
     def take(self, index: Index | Mask | slice) -> Batch:
         """Return the batch of some of the units."""
@@ -157,23 +196,16 @@ class Batch:
         part.inv_width = np.where(supplies[:, None], self.inv_width / softness**0.6, self.inv_width)
         return part
 
-    def extend(self, x: Array) -> Array:
-        """Append the reference node's zeros to x."""
-        return np.concatenate([x, np.zeros((1, x.shape[1]))])
-
     def arguments(self, x: Array) -> Arguments:
         """Return the arguments of the nonlinear laws at x, of shape (size, units)."""
-        return self._arguments(self.extend(x))
+        return self._arguments(extended(x))
 
     def _arguments(self, full: Array) -> Arguments:
-        p = self.plan
-        base = full[p.tb]
+        base = full[self.plan.tb]
         return Arguments(
-            vbe=self.polarity * (base - full[p.te]),
-            vbc=self.polarity * (base - full[p.tc]),
-            sigmoid=(full[p.sa] - full[p.sb] - self.zero) * self.inv_width,
-            error=(full[p.vs] - full[p.vr] - self.servo_rest) * self.servo_gain,
-            compliance=(full[p.va] - full[p.vb]) * (1.0 / COMPLIANCE_V),
+            self.polarity * (base - full[self.plan.te]),
+            self.polarity * (base - full[self.plan.tc]),
+            *self.knees(full),
         )
 
     def evaluate(self, x: Array, previous: Arguments | None, start: bool = False) -> Linearised:
@@ -187,13 +219,13 @@ class Batch:
         start : bool
             Linearise at ``previous`` itself.
         """
-        p, full = self.plan, self.extend(x)
+        p, full = self.plan, extended(x)
         actual = self._arguments(full)
         at = actual
         held = np.zeros(self.units, dtype=np.bool_)
         if start and previous is not None:
             at = previous
-            held[:] = True
+            held = actual.differ(at)
         elif previous is not None:
             at, held = self._limit(actual, previous)
         currents = np.empty((p.branches, self.units))

@@ -42,9 +42,10 @@ DENSE_UP_TO = 12
 EXACT_SHARE = 1e-3
 """A unit that passes the test this many times better is left as it is; another gets one more step."""
 _SAMPLES = 12
-_MOST_ROUNDS = 150
+_MOST_ROUNDS = 200
+_MOST_STEPS = 40
 _LAST_EXPONENT = -12.0
-_LEAST_STEP = 0.01
+_LEAST_STEP = 0.03
 _SOFTEST_EXPONENT = 6.0
 _INNER_ITERATIONS = 25
 _WARM_ITERATIONS = 15
@@ -229,7 +230,7 @@ def _continue(
     reached = np.full(batch.units, first)
     steps = np.full(batch.units, step)
     live = np.flatnonzero(begun.done)
-    for _ in range(_MOST_ROUNDS):
+    for _ in range(_MOST_STEPS):
         if not len(live):
             break
         aimed = np.maximum(reached[live] - steps[live], last)
@@ -282,15 +283,17 @@ def _keep(total: Outcome, where: Index, outcome: Outcome, which: Mask) -> None:
     total.residual_a[where] = outcome.residual_a[which]
 
 
-def first_attempts(batch: Batch, solver: LinearSolver, x: Array | None, cold: ColdStart) -> Outcome:
-    """Newton's method from ``x`` of shape (size, units), if there is one, and then from a cold start.
+def first_attempts(
+    batch: Batch, solver: LinearSolver, start: tuple[Array, Arguments | None] | None, cold: ColdStart
+) -> Outcome:
+    """Newton's method from a start, if there is one, and then from a cold start.
 
-    ``cold`` makes x and the first arguments of a cold start for a batch.
+    ``start`` and ``cold`` (of a batch) are x of shape (size, units) and the first arguments.
     """
     with np.errstate(all="ignore"):
-        if x is None:
+        if start is None:
             return iterate(batch, solver, *cold(batch))
-        total = iterate(batch, solver, x, most=_WARM_ITERATIONS)
+        total = iterate(batch, solver, *start, most=_WARM_ITERATIONS)
         _retry(batch, total, lambda part: iterate(part, solver, *cold(part)))
     return total
 

@@ -209,10 +209,11 @@ class Plan:
         for n in self.ties:
             result[n] += ISLAND_TIE_S * x[n]
         if len(self.uk):
+            full = np.concatenate([x, np.zeros((1, x.shape[1]))])
             if magnitudes:
-                result[self.uk] = x[self.up] + x[self.uq] + volts
+                result[self.uk] = full[self.up] + full[self.uq] + volts
             else:
-                result[self.uk] = x[self.up] - x[self.uq] - volts
+                result[self.uk] = full[self.up] - full[self.uq] - volts
         return result
 
 

@@ -12,30 +12,19 @@ Rules
 from __future__ import annotations
 
 import difflib
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
-from benchkit.circuit import devices
 from benchkit.circuit.devices import Array, Mask
 from benchkit.circuit.elimination import Index
-from benchkit.circuit.equations import (
-    COMPLIANCE_V,
-    LEAST_RESISTOR_OHM,
-    OHMMETER_KNEE_V,
-    SERVO_ERROR_V,
-    SUPPLY_KNEE_OHM,
-    SUPPLY_LEAK_S,
-    Arguments,
-    Batch,
-)
+from benchkit.circuit.equations import Arguments, Batch, Saturating
 from benchkit.circuit.netlist import (
     GROUND,
     TRANSISTOR_DEFAULTS,
-    Element,
     Netlist,
     Ohmmeter,
     Resistor,
@@ -47,9 +36,12 @@ from benchkit.circuit.netlist import (
 )
 from benchkit.circuit.newton import Iterations, LinearSolver, first_attempts, rescue
 from benchkit.circuit.plan import Plan, Signature
+from benchkit.circuit.solution import Operating, Solution
 from benchkit.errors import ModelError
 
-Value = float | int | NDArray[Any]
+__all__ = ["Compiled", "Operating", "Solution", "Value", "compile_netlist"]
+
+Value = float | int | Sequence[float] | NDArray[Any]
 
 CHUNK_UNITS = 1000
 """Units solved together: enough to outweigh the interpreter's overhead, few enough to stay in the cache."""
@@ -76,23 +68,6 @@ def compile_netlist(netlist: Netlist) -> Compiled:
         When the netlist has no node.
     """
     return Compiled(netlist)
-
-
-@dataclass(frozen=True)
-class Operating:
-    """A transistor's operating point, arrays of shape (units,).
-
-    Signs are the device's own, npn and pnp alike: voltages and currents are positive in normal conduction (collector
-    current into an npn's collector, out of a pnp's; ``ie_a`` = ``ic_a`` + ``ib_a``). ``vbe_v`` and ``vce_v`` are
-    between the external terminals. ``power_w`` is what heats the device.
-    """
-
-    ic_a: Array
-    ib_a: Array
-    ie_a: Array
-    vbe_v: Array
-    vce_v: Array
-    power_w: Array
 
 
 class Compiled:
@@ -156,10 +131,7 @@ class Compiled:
         for low in range(0, units, CHUNK_UNITS):
             part = slice(low, min(low + CHUNK_UNITS, units))
             batch, cold = _batch(plan, given, part, part.stop - low), _Cold(plan, _parts(rest, part))
-            first = (
-                None if guess is None else np.array(np.broadcast_to(_columns(guess, part), (plan.size, batch.units)))
-            )
-            outcome = first_attempts(batch, solver, first, cold)
+            outcome = first_attempts(batch, solver, None if guess is None else guess.of(part, batch), cold)
             x[:, part], converged[part] = outcome.x, outcome.done
             iterations[part], residual[part] = outcome.iterations, outcome.residual_a
         failed = np.flatnonzero(~converged)
@@ -169,7 +141,7 @@ class Compiled:
             x[:, some], converged[some] = outcome.x, outcome.done
             iterations[some] += outcome.iterations
             residual[some] = outcome.residual_a
-        return Solution(self, plan, given, x, converged, iterations, residual)
+        return Solution(self.netlist, plan, given, x, converged, iterations, residual)
 
     def _check(self, values: Mapping[str, Value], units: int) -> dict[str, Array]:
         if units < 1:
@@ -185,6 +157,10 @@ class Compiled:
             if np.isnan(array).any():
                 raise ModelError(f"{key} is not a number in {int(np.isnan(array).sum())} units", "a number")
             result[key] = array
+        for element in self.netlist.elements.values():
+            limit = result.get(f"{element.name}.limit_a")
+            if isinstance(element, Supply) and limit is not None and not (limit > 0.0).all():
+                raise ModelError(f"{element.name}.limit_a is {float(limit.min())!r} A", "a current above 0 A")
         for key, default in self.keys.items():
             if key not in result:
                 if default is None:
@@ -202,14 +178,16 @@ class Compiled:
             self._plans[signature] = Plan(self.netlist, signature)
         return self._plans[signature]
 
-    def _guess(self, plan: Plan, start: Mapping[str, Value] | Solution | None, units: int) -> Array | None:
+    def _guess(self, plan: Plan, start: Mapping[str, Value] | Solution | None, units: int) -> _Guess | None:
         if start is None:
             return None
+        held: dict[str, tuple[Array, ...]] = {}
         if isinstance(start, Solution):
             if start.units not in (1, units):
                 raise ModelError(f"the start has {start.units} units", f"one, or {units}")
+            held = Saturating(start.plan, start.values, start.units).knees_by_name(start.x)
             if start.plan.names == plan.names:
-                return start.x
+                return _Guess(start.x, held)
             start = {name: start.x[k] for name, k in start.plan.index.items() if k < start.plan.size}
         known = _checked_nodes(start, units)
         guess = np.zeros((plan.size, units))
@@ -219,14 +197,14 @@ class Compiled:
         for row, (name, parameter, outside) in enumerate(plan.internal, plan.nodes - len(plan.internal)):
             if f"{name}\x00{parameter}" not in known and outside >= 0:
                 guess[row] = guess[outside]
-        return guess
+        return _Guess(guess, held)
 
-    def _pilot(self, plan: Plan, values: Mapping[str, Array], rest: Mapping[str, Array]) -> Array | None:
+    def _pilot(self, plan: Plan, values: Mapping[str, Array], rest: Mapping[str, Array]) -> _Guess | None:
         """Solve a unit of median values, for the others to start from."""
         batch = Batch(plan, {key: np.array([np.median(v)]) for key, v in values.items()}, 1)
         cold = _Cold(plan, {key: np.array([np.median(v)]) for key, v in rest.items()})
         outcome = first_attempts(batch, LinearSolver(plan.structure), None, cold)
-        return outcome.x if outcome.done[0] else None
+        return _Guess(outcome.x, batch.knees_by_name(outcome.x)) if outcome.done[0] else None
 
 
 def _parts(arrays: Mapping[str, Array], part: slice | Index) -> dict[str, Array]:
@@ -237,8 +215,31 @@ def _batch(plan: Plan, values: Mapping[str, Array], part: slice | Index, units: 
     return Batch(plan, _parts(values, part), units)
 
 
-def _columns(array: Array, part: slice | Index) -> Array:
-    return array if array.shape[1] == 1 else array[:, part]
+@dataclass
+class _Guess:
+    """Where to start: x of shape (size, 1 or units), and where on its knee each saturating law stood there, if known.
+
+    A servo or a supply starts at the same place on its knee as in the solution that it starts from: at another rest
+    voltage or rail its new law, evaluated at the old voltages, has no slope to find the way by.
+    """
+
+    x: Array
+    knees: dict[str, tuple[Array, ...]]
+
+    def of(self, part: slice, batch: Batch) -> tuple[Array, Arguments | None]:
+        """Return the start of some units."""
+        one = self.x.shape[1] == 1
+        which = np.zeros(batch.units, dtype=np.intp) if one else np.arange(part.start, part.stop)
+        x = self.x[:, which]
+        if not self.knees:
+            return x, None
+        at = batch.arguments(x)
+        laws = [(e.name, (row,)) for e, row in zip(batch.plan.sigmoids, at.sigmoid, strict=True)]
+        servos = zip(batch.plan.servos, at.error, at.compliance, strict=True)
+        for name, rows in [*laws, *((e.name, (error, left)) for e, error, left in servos)]:
+            for row, known in zip(rows, self.knees.get(name, rows), strict=True):
+                row[:] = known if known is row else known[which if len(known) > 1 else 0]
+        return x, at
 
 
 def _checked_nodes(volts: Mapping[str, Value], units: int) -> dict[str, Array]:
@@ -277,110 +278,3 @@ class _Cold:
         arguments.vbe[:] = _START_VBE_V
         arguments.vbc[:] = _START_VBC_V
         return x, arguments
-
-
-class Solution:
-    """Operating points of all units.
-
-    Attributes
-    ----------
-    units : int
-    converged : array of bool, shape (units,)
-    iterations : array of int, shape (units,)
-        Newton iterations, those of failed attempts included.
-    residual_a : array, shape (units,)
-        Largest current left over at a node [A] when the unit was accepted (or given up).
-    """
-
-    def __init__(
-        self,
-        compiled: Compiled,
-        plan: Plan,
-        values: dict[str, Array],
-        x: Array,
-        converged: Mask,
-        iterations: Iterations,
-        residual_a: Array,
-    ) -> None:
-        self.compiled = compiled
-        self.plan = plan
-        self.values = values
-        self.x = x
-        self.units = x.shape[1]
-        self.converged = converged
-        self.iterations = iterations
-        self.residual_a = residual_a
-
-    def voltage(self, node: str) -> Array:
-        """Voltage [V] of a node to the reference, shape (units,)."""
-        if node == GROUND:
-            return np.zeros(self.units)
-        if node not in self.plan.index:
-            raise ModelError(f"the circuit has no node {node!r}", "one of " + ", ".join(self.compiled.netlist.nodes()))
-        return np.array(self.x[self.plan.index[node]])
-
-    def between(self, a: str, b: str) -> Array:
-        """Voltage [V] from ``b`` to ``a``, shape (units,)."""
-        return self.voltage(a) - self.voltage(b)
-
-    def current(self, name: str) -> Array:
-        """Current [A] of an element, shape (units,).
-
-        Supply and ohmmeter: delivered out of plus. Source and servo: from ``from_node`` to ``to_node``. Resistor and
-        unknown conductance: from ``a`` to ``b``.
-        """
-        e = self._element(name)
-        if isinstance(e, Resistor):
-            return self.between(e.a, e.b) / np.maximum(self.values[name], LEAST_RESISTOR_OHM)
-        if isinstance(e, Supply):
-            lack, limit = self.values[f"{name}.volts"] - self.between(e.plus, e.minus), self.values[f"{name}.limit_a"]
-            return np.asarray(limit * np.tanh(lack / (limit * SUPPLY_KNEE_OHM)) + SUPPLY_LEAK_S * lack)
-        if isinstance(e, Source):
-            return np.asarray(
-                self.values[f"{name}.amps"] * np.tanh(self.between(e.from_node, e.to_node) / COMPLIANCE_V)
-            )
-        if isinstance(e, Servo):
-            sign = -1.0 if e.senses == "to" else 1.0
-            error = sign * (self.between(e.sense, e.reference) - self.values[f"{name}.rest_v"]) / SERVO_ERROR_V
-            left = np.tanh(self.between(e.from_node, e.to_node) / COMPLIANCE_V)
-            return np.asarray(self.values[f"{name}.max_a"] * 0.5 * (1.0 + np.tanh(error)) * left)
-        if isinstance(e, Ohmmeter):
-            lack = self.values[f"{name}.compliance_v"] - self.between(e.plus, e.minus)
-            return np.asarray(self.values[f"{name}.amps"] * np.tanh(lack / OHMMETER_KNEE_V))
-        if isinstance(e, Unknown):
-            return np.array(self.x[self.plan.index[f"{name}\x00current"]])
-        raise ModelError(f"{name!r} is a transistor", "an element with two ends", "Ask for transistor(name)")
-
-    def conductance(self, name: str) -> Array:
-        """Conductance [S] that an unknown conductance came to, shape (units,); it may be negative."""
-        e = self._element(name)
-        if not isinstance(e, Unknown):
-            raise ModelError(f"{name!r} is no unknown conductance", "the name of one")
-        with np.errstate(divide="ignore", invalid="ignore"):
-            return np.asarray(self.current(name) / self.between(e.a, e.b))
-
-    def transistor(self, name: str) -> Operating:
-        """Operating point of a transistor."""
-        e = self._element(name)
-        if not isinstance(e, Transistor):
-            raise ModelError(f"{name!r} is no transistor", "the name of one")
-        parameters = {key: self.values[f"{name}.{key}"] for key in TRANSISTOR_DEFAULTS}
-        k = [t.name for t in self.plan.transistors].index(name)
-        full = np.concatenate([self.x, np.zeros((1, self.units))])
-        base = full[self.plan.tb[k]]
-        polarity = parameters["polarity"]
-        with np.errstate(all="ignore"):
-            g = devices.gummel_poon(
-                polarity * (base - full[self.plan.te[k]]),
-                polarity * (base - full[self.plan.tc[k]]),
-                devices.junctions_at_temperature(parameters),
-            )
-        vbe = polarity * self.between(e.base, e.emitter)
-        vce = polarity * self.between(e.collector, e.emitter)
-        return Operating(g.ic, g.ib, g.ic + g.ib, vbe, vce, vce * g.ic + vbe * g.ib)
-
-    def _element(self, name: str) -> Element:
-        try:
-            return self.compiled.netlist.elements[name]
-        except KeyError:
-            raise ModelError(f"the circuit has no element {name!r}", "one of its elements") from None

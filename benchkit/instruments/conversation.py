@@ -17,7 +17,8 @@ from __future__ import annotations
 
 import threading
 import time
-from collections.abc import Callable
+from collections.abc import Callable, Iterator
+from contextlib import contextmanager
 from dataclasses import dataclass, replace
 from typing import Protocol, TypeVar
 
@@ -115,6 +116,8 @@ class Conversation:
         How often it was opened: a change means that nothing is known about its settings.
     patience_s : float or None
         When set, no wait for an answer or an opening is longer than this, s.
+    repeats : bool
+        False: a failed question is not asked a second time.
     """
 
     def __init__(
@@ -133,6 +136,7 @@ class Conversation:
         self.idn = ""
         self.openings = 0
         self.patience_s: float | None = None
+        self.repeats = True
         self._log = log
         self._cancel = cancel
         self._opener = opener
@@ -145,6 +149,15 @@ class Conversation:
     def dirty(self) -> bool:
         """True when the next question has to get back into step first."""
         return self._dirty or self._transport is None
+
+    @contextmanager
+    def impatient(self, patience_s: float, *, repeats: bool) -> Iterator[None]:
+        """Cap every wait for the time of a block."""
+        self.patience_s, self.repeats = patience_s, repeats
+        try:
+            yield
+        finally:
+            self.patience_s, self.repeats = None, True
 
     @property
     def cancelled(self) -> bool:
@@ -190,8 +203,8 @@ class Conversation:
         self.idn = name
         return name
 
-    def ask(self, message: str, parse: Callable[[str], T], *, timeout_s: float | None = None, again: bool = True) -> T:
-        """Send a question and return its parsed answer.
+    def ask(self, message: str, parse: Callable[[str], T], *, timeout_s: float | None = None) -> T:
+        """Send a question and return its parsed answer; after a failure get back into step and ask once more.
 
         Parameters
         ----------
@@ -201,8 +214,6 @@ class Conversation:
             Turns the reply into a value or raises `InstrumentError`.
         timeout_s : float, optional
             For the reply; the settings' without it.
-        again : bool
-            Whether to ask once more after getting back into step.
 
         Raises
         ------
@@ -212,12 +223,7 @@ class Conversation:
         try:
             return self._ask_once(message, parse, timeout_s)
         except InstrumentError as error:
-            if (
-                not again
-                or self.cancelled
-                or self.patience_s is not None
-                or error.kind in {"refused", "unsupported", "bad address"}
-            ):
+            if not self.repeats or self.cancelled or error.kind in {"refused", "unsupported", "bad address"}:
                 raise
             self._log.note(self.label, f"asks again ({error.kind})")
             return self._ask_once(message, parse, timeout_s)

@@ -30,6 +30,9 @@ from benchkit.instruments.profile import SupplyProfile
 OFF_TIMEOUT_S = 0.6
 """How long each answer may take while "off" is being confirmed, s."""
 
+WATCH_TIMEOUT_S = 1.0
+"""How long each answer may take while the supply is watched, s; a silent one is given up after four times that."""
+
 UNKNOWN = "output state unknown: switch it off by hand"
 
 _OFF_TRIES = 2
@@ -104,8 +107,13 @@ class Supply:
         )
 
     def sample(self) -> Future[Sample]:
-        """Read the supply's outputs, settings and measurements."""
-        return self._link.submit(self._sample)
+        """Read the supply's outputs, settings and measurements; each answer may take `WATCH_TIMEOUT_S`."""
+
+        def job(conversation: Conversation) -> Sample:
+            with conversation.impatient(WATCH_TIMEOUT_S, repeats=True):
+                return self._sample(conversation)
+
+        return self._link.submit(job)
 
     def off(self) -> Future[OffOutcome]:
         """Switch both outputs off and confirm it, before anything else that waits.  The future never fails."""
@@ -242,11 +250,8 @@ class Supply:
     def _off(self, conversation: Conversation) -> OffOutcome:
         """Switch off and confirm; whatever happens becomes words, never an exception."""
         deadline_s = time.monotonic() + _OFF_BUDGET_S
-        conversation.patience_s = OFF_TIMEOUT_S
-        try:
+        with conversation.impatient(OFF_TIMEOUT_S, repeats=False):
             return self._off_within(conversation, deadline_s)
-        finally:
-            conversation.patience_s = None
 
     def _off_within(self, conversation: Conversation, deadline_s: float) -> OffOutcome:
         problem = ""

@@ -30,7 +30,7 @@ from benchkit.errors import EntryError, FileError
 from benchkit.measure.accuracy import FINEST_STEP, Accuracy
 from benchkit.measure.readings import Reading
 from benchkit.measure.uncertainty import make_reading
-from benchkit.quantities import Overload, last_digit, parse, parse_reading, quoted
+from benchkit.quantities import Overload, last_digit, parse, parse_reading, printable, quoted
 from benchkit.stage.conditions import Condition, Unpowered, parse_trimmer
 from benchkit.stage.design import Design
 from benchkit.stage.points import Point, find_point
@@ -275,4 +275,4 @@ class _Row:
 
     def _error(self, column: str, came: str, expected: str, next_step: str = "") -> FileError:
         where = f"line {self.line}, {column}" if column else f"line {self.line}"
-        return FileError(self.file_name, where, came, expected, next_step)
+        return FileError(self.file_name, where, printable(came), expected, next_step)

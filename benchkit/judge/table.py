@@ -8,7 +8,7 @@ Three allowances on top of the model's limits, for what is set by the bench and 
 
 - a rail may be off its setting by 1 %, or 0.1 V where that is more (common practice for a bench supply);
 - the heat sink's reading may be off by 2 K, and by 10 K where the ambient temperature was not stated;
-- with the trimmer at the target the bias may be anywhere within the target's own tolerance, so the limits are the widest
+- with the trimmer at the target the bias may be anywhere within the target's own tolerance: the limits are the widest
   of those at the target and at both ends of its tolerance.
 
 Which rules apply to readings without a procedure:

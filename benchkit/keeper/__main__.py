@@ -10,7 +10,12 @@ from benchkit.keeper.pipes import take_standard_streams
 
 
 def main() -> None:
-    """Run the process and end it, also when one of its threads is stuck."""
+    """Run the process and end it, also when one of its threads is stuck.
+
+    PyVISA imports numpy where it finds it, for transfers of whole arrays that nobody makes here.  That would be half of
+    the time that it takes to get the bench ready, so that in this process numpy can't be found.
+    """
+    sys.modules["numpy"] = None  # type: ignore[assignment]
     arguments = sys.argv[1:]
     if arguments and arguments[0] == "--off-only":
         from benchkit.keeper.off_only import switch_off

@@ -66,7 +66,7 @@ class KeeperClient:
         self._unanswered = 0
         self._closing = False
         self._dead = False
-        self._frozen = False
+        self._trouble = ""
         self._supply: Mapping[str, Any] | None = None
         self._after_death: Future[OutputOff] | None = None
         self._outbox: SimpleQueue[bytes | None] = SimpleQueue()
@@ -269,11 +269,16 @@ class KeeperClient:
     def _read(self) -> None:
         pipe = self._process.stdout
         assert pipe is not None
-        with suppress(OSError, ValueError):
+        try:
             for line in pipe:
                 self._hear(decode(line))
-        self._die()
-        pipe.close()
+        except Exception as error:
+            self._trouble = f"the keeper said something that can't be understood ({type(error).__name__}: {error})"
+            platform.kill_hard(self._process)
+        finally:
+            self._die()
+            with suppress(OSError):
+                pipe.close()
 
     def _hear(self, message: Mapping[str, Any]) -> None:
         if "beat" in message:
@@ -314,7 +319,7 @@ class KeeperClient:
                 waiting_s = 0.0 if self._oldest_beat_s is None else now_s - self._oldest_beat_s
             last_s = now_s
             if waiting_s > ANSWER_LIMIT_S:
-                self._frozen = True
+                self._trouble = f"the keeper had not answered for {ANSWER_LIMIT_S} s and was ended"
                 platform.kill_hard(self._process)
                 return
 
@@ -337,8 +342,8 @@ class KeeperClient:
             future.set_exception(_gone())
 
     def _how_it_died(self) -> str:
-        if self._frozen:
-            return f"the keeper had stopped answering for {ANSWER_LIMIT_S} s and was ended"
+        if self._trouble:
+            return self._trouble
         with suppress(subprocess.TimeoutExpired):
             status = self._process.wait(0.3)
             return f"the keeper ended by itself (status {status})"

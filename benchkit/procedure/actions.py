@@ -89,11 +89,18 @@ class Ask(Action):
 class Predict(Action):
     """Compute the limits of one condition.  Answer: Predicted or PredictionRefused.
 
-    For an unpowered condition `points` lists all the points that the plan reads under it.
+    Parameters
+    ----------
+    key : str
+        The condition's name in the record.
+    conditions : tuple of Condition or Unpowered
+        One, or several whose limits are joined: a reading is right when it is right under any of them.
+    points : tuple of str
+        All the points that the plan reads under it.
     """
 
     key: str
-    condition: Condition | Unpowered
+    conditions: tuple[Condition | Unpowered, ...]
     points: tuple[str, ...]
 
 
@@ -120,6 +127,8 @@ class SetSupply(Action):
         Current limit of each rail.
     ramp_s : float
         How long the way takes at least; both rails move together.
+    settle_s : float
+        How long the stage then has to come to rest before the supply is read back.
     trip_on_limit : bool
         A rail that stays in its limit longer than `grace_s` trips.
     """
@@ -128,6 +137,7 @@ class SetSupply(Action):
     negative_v: float
     limit_a: float
     ramp_s: float = 0.0
+    settle_s: float = 0.5
     trip_on_limit: bool = True
     grace_s: float = 0.5
 

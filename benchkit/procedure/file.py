@@ -22,6 +22,7 @@ Kinds of step
 from __future__ import annotations
 
 import hashlib
+import re
 import tomllib
 from dataclasses import dataclass
 from pathlib import Path
@@ -30,7 +31,8 @@ from typing import Annotated, Any, Literal
 import pydantic
 
 from benchkit import quantities
-from benchkit.errors import BenchkitError, FileError
+from benchkit.errors import BenchkitError, EntryError, FileError
+from benchkit.judge.rules import find_rule
 
 Kind = Literal[
     "tell", "confirm", "text", "measure", "rule", "supply", "limit check", "hold", "trim", "wait", "clip", "off"
@@ -49,6 +51,17 @@ PLACEHOLDERS = frozenset(
 
 _Name = Annotated[str, pydantic.StringConstraints(pattern=r"^[a-z0-9][a-z0-9-]*$", max_length=40)]
 _Text = Annotated[str, pydantic.StringConstraints(strip_whitespace=True, min_length=1)]
+
+
+_SIDE = r"\.(upper|lower)"
+_PART = rf"(spreader\.transistor|(predriver|driver){_SIDE}|output{_SIDE}\.\d+)"
+_POINT = re.compile(
+    rf"rail[+-](\.current|\.drop|\.ac)?|output(\.ac)?|spread({_SIDE})?|feed{_SIDE}|(pre)?driver\.resistor({_SIDE})?"
+    rf"|emitter\.(upper|lower|pair)\.\d+|stopper{_SIDE}\.\d+|{_PART}\.vbe|heatsink"
+    rf"|ohm\.(rails|rail[+-]|output|(spreader|feed){_SIDE}|(emitter|stopper){_SIDE}\.\d+|(pre)?driver\.resistor({_SIDE})?"
+    rf"|heatsink\.{_PART})|diode\.{_PART}"
+)
+"""Names of test points that some design has; a step may name one that this design lacks, but not one that none has."""
 
 
 class _Strict(pydantic.BaseModel):
@@ -84,6 +97,9 @@ class Step(_Strict):
     seconds: str | None = None
     act: Act | None = None
     when: Literal["cold", "warm"] | None = None
+    settle: str | None = None
+    allow: str | None = None
+    acceptance: Literal["guarded", "simple"] = "guarded"
     samples: int = pydantic.Field(default=1, ge=1, le=100)
     override: bool = True
 
@@ -98,6 +114,10 @@ class Step(_Strict):
                 raise ValueError(f"{key!r} belongs to steps of the kind {' or '.join(kinds)}, not {self.kind!r}")
         for text in (self.title, self.do, self.why, self.caution, self.expected):
             _check_placeholders(text)
+        for name in self.points:
+            _check_point(name)
+        if self.rule is not None:
+            _check_rule(self.rule)
         return self
 
 
@@ -128,6 +148,9 @@ _ONLY_FOR: dict[str, tuple[str, ...]] = {
     "seconds": ("wait",),
     "act": ("tell",),
     "samples": ("measure", "trim"),
+    "settle": ("measure",),
+    "acceptance": ("measure",),
+    "allow": ("measure",),
 }
 
 
@@ -240,6 +263,8 @@ def _check_quantities(file: str, section: Section, step: Step) -> None:
     checks: list[tuple[str, str | None, str]] = [("seconds", step.seconds, "s"), ("ramp", step.ramp, "s")]
     if step.rails is not None and step.rails not in ("lowest", "full") and not step.rails.rstrip().endswith("%"):
         checks.append(("rails", step.rails, "V"))
+    if step.settle is not None and step.settle != "the capacitors":
+        checks.append(("settle", step.settle, "s"))
     if step.limit is not None and step.limit not in ("for least bias", "for the target"):
         checks.append(("limit", step.limit, "A"))
     for key in ("share", "tolerance"):
@@ -249,12 +274,36 @@ def _check_quantities(file: str, section: Section, step: Step) -> None:
     for key, value, unit in checks:
         if value is None:
             continue
+        where = f"section {section.name}, step {step.name}, {key}"
         try:
-            quantities.parse(value, unit)
+            number = quantities.parse(value, unit)
         except BenchkitError as error:
-            raise FileError(
-                file, f"section {section.name}, step {step.name}, {key}", error.came, error.expected
-            ) from None
+            raise FileError(file, where, error.came, error.expected) from None
+        least, most = _RANGES.get((key, unit), (0.0, None))
+        if number <= least or (most is not None and number > most):
+            expected = f"more than {least:g} {unit}" + ("" if most is None else f", at most {most:g} {unit}")
+            raise FileError(file, where, f"found {value!r}", expected)
+
+
+_RANGES: dict[tuple[str, str], tuple[float, float | None]] = {
+    ("share", "%"): (0.0, 100.0),
+    ("tolerance", "%"): (0.0, 100.0),
+    ("rails", "%"): (0.0, 100.0),
+}
+"""What a quantity has to be above and may reach at most; all others are above zero."""
+
+
+def _check_point(name: str) -> None:
+    plain = name.replace("ARM", "lower").replace("PART", "output.upper.1").replace("N", "1")
+    if not _POINT.fullmatch(plain):
+        raise ValueError(f"{name!r} is no test point; the names stand in the list of test points")
+
+
+def _check_rule(name: str) -> None:
+    try:
+        find_rule(name)
+    except EntryError as error:
+        raise ValueError(f"{error.came}; expected {error.expected}") from None
 
 
 def _check_placeholders(text: str) -> None:

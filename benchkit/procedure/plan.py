@@ -19,7 +19,7 @@ from dataclasses import dataclass, replace
 from typing import Any, Literal
 
 from benchkit import quantities
-from benchkit.errors import FileError
+from benchkit.errors import EntryError, FileError
 from benchkit.judge.limits import Limits
 from benchkit.procedure.file import MADE_SAFE, PairText, Procedure, Section, Step
 from benchkit.stage.conditions import Condition, Unpowered
@@ -27,12 +27,33 @@ from benchkit.stage.design import Design, target_drop_v
 from benchkit.stage.points import Point, points_of
 from benchkit.stage.reach import least_regulating_rails
 
+
+@dataclass(frozen=True, kw_only=True)
+class Joined:
+    """Several conditions under any of which a reading may have been taken.
+
+    A stage that has been powered for a while is anywhere from cold to warm; one that was trimmed is anywhere inside the
+    target's tolerance.  `words` stand at the end of the condition's name.
+    """
+
+    conditions: tuple[Condition, ...]
+    words: str
+
+
+AnyCondition = Condition | Unpowered | Joined
+
 ItemKind = Literal[
     "connect", "tell", "confirm", "text", "hold", "measure", "rule", "supply", "limit check", "trim", "wait", "off"
 ]
 
+NEVER_PASSED_OVER = frozenset({"ohm.rails", "ohm.rail+", "ohm.rail-", "offset before load"})
+"""Points and rules whose result nobody overrides, whatever the file says; nor a limit check or the trimmer's end."""
+
 RAIL_LOW_V = 1.0
 """A rail below this (V) counts as low; common practice."""
+
+TRIMMED = "emitter.upper.1"
+"""The reading that the model takes a trimmed stage's target from."""
 
 TYPICAL_VBE_V = 0.7
 """Used only to size current limits, never to judge; common practice."""
@@ -52,7 +73,7 @@ class Item:
         The words, with everything filled in.
     point : Point or None
         What is measured or trimmed.
-    condition : Condition or Unpowered or None
+    condition : Condition, Unpowered, Joined or None
         What the reading is taken under; None where limits are stated and nothing is predicted.
     limits : Limits or None
         Stated limits; None where they come from the model.
@@ -64,7 +85,13 @@ class Item:
         For ``supply`` and ``limit check``.
     seconds : float
         For ``wait``.
+    settle_s : float
+        How long the reading has to come to rest after the probes are on, or the stage after its rails have moved.
     samples : int
+    acceptance : "guarded" or "simple"
+        How a reading is judged (JCGM 106): with a guard band as wide as its uncertainty, or without one.
+    allow : float
+        How much the model's limits are widened on either side, in the point's unit.
     act : str
         What a told item does to the bench: "short the leads", "connect the unit", "trimmer to least", or "".
     trimmer_end : bool
@@ -87,7 +114,7 @@ class Item:
     caution: str = ""
     expected: str = ""
     point: Point | None = None
-    condition: Condition | Unpowered | None = None
+    condition: AnyCondition | None = None
     limits: Limits | None = None
     rule: str = ""
     number: float | None = None
@@ -97,7 +124,10 @@ class Item:
     limit_a: float = 0.0
     ramp_s: float = 0.0
     seconds: float = 0.0
+    settle_s: float = 0.0
     samples: int = 1
+    acceptance: Literal["guarded", "simple"] = "guarded"
+    allow: float = 0.0
     act: str = ""
     trimmer_end: bool = False
     powered: bool = False
@@ -117,8 +147,11 @@ class Plan:
         return len(self.items)
 
 
-def condition_key(condition: Condition | Unpowered) -> str:
+def condition_key(condition: AnyCondition) -> str:
     """A readable name of a condition; equal conditions have equal names."""
+    if isinstance(condition, Joined):
+        first = condition.conditions[0]
+        return condition_key(first).removesuffix(first.when) + condition.words
     if isinstance(condition, Unpowered):
         return f"no power, trimmer {condition.trimmer}"
     share = f" at {condition.target_share:.0%}" if condition.trimmer == "target" else ""
@@ -197,7 +230,7 @@ class _Planner:
         self.on = False
         self.trimmer: Literal["least", "target", "unknown"] = "unknown"
         self.share = 1.0
-        self.lowest = least_regulating_rails(design)
+        self.lowest = _with_room(design, least_regulating_rails(design))
         self.section: Section
         self.ready_hold = False
 
@@ -231,7 +264,9 @@ class _Planner:
                 yield from self._measure(step)
             case "rule":
                 if self._rule_fits(step):
-                    yield self._item(step, "rule", rule=step.rule or "", number=self._number(step))
+                    may_go_on = step.override and step.rule not in NEVER_PASSED_OVER
+                    number = self._number(step)
+                    yield self._item(step, "rule", rule=step.rule or "", number=number, may_go_on=may_go_on)
             case "supply":
                 yield from self._supply(step)
             case "limit check":
@@ -270,24 +305,18 @@ class _Planner:
 
     def _reading(self, step: Step, point: Point) -> Item:
         limits: Limits | None = None
-        condition: Condition | Unpowered | None = None
+        condition: AnyCondition | None = None
+        trimmer_end = not point.powered and "ARM" in " ".join(step.points)
         if isinstance(step.limits, PairText):
-            low = None if step.limits.low is None else quantities.parse(step.limits.low, point.unit)
-            high = None if step.limits.high is None else quantities.parse(step.limits.high, point.unit)
-            limits = Limits(low, high, None, point.unit, "stated in the procedure")
+            limits = self._stated(step, step.limits, point)
         elif step.limits == "the target":
             limits = self._target_limits(1.0, None)
         elif point.powered:
-            condition = Condition(
-                positive_v=self.positive_v,
-                negative_v=self.negative_v,
-                limit_a=self.limit_a,
-                trimmer=self.trimmer,
-                target_share=self.share if self.trimmer == "target" else 1.0,
-                when=step.when or "cold",
-            )
             if not self.on:
                 raise self._refuse(step, f"reads {point.name} against the model while the supply is off")
+            condition = self._powered_condition(step)
+            if self.trimmer == "target" and point.name == TRIMMED:
+                condition, limits = None, self._target_limits(self.share, None)
         else:
             if self.on:
                 raise self._refuse(step, f"reads {point.name} while the supply is on")
@@ -301,15 +330,54 @@ class _Planner:
             condition=condition,
             limits=limits,
             samples=step.samples,
-            trimmer_end=not point.powered and "ARM" in " ".join(step.points),
+            settle_s=self._settle_s(step),
+            acceptance=step.acceptance,
+            allow=0.0 if step.allow is None else quantities.parse(step.allow, point.unit),
+            trimmer_end=trimmer_end,
+            may_go_on=step.override and not trimmer_end and point.name not in NEVER_PASSED_OVER,
         )
+
+    def _stated(self, step: Step, pair: PairText, point: Point) -> Limits:
+        try:
+            low = None if pair.low is None else quantities.parse(pair.low, point.unit)
+            high = None if pair.high is None else quantities.parse(pair.high, point.unit)
+            return Limits(low, high, None, point.unit, "stated in the procedure")
+        except (EntryError, ValueError) as error:
+            raise self._refuse(step, f"states limits for {point.name} that can't be used: {error}") from None
+
+    def _powered_condition(self, step: Step) -> Joined | Condition:
+        cold = Condition(
+            positive_v=self.positive_v, negative_v=self.negative_v, limit_a=self.limit_a, trimmer=self.trimmer
+        )
+        if self.trimmer == "target":
+            around = self.design.target.tolerance
+            shares = (self.share, self.share * (1.0 - around), self.share * (1.0 + around))
+            when = step.when or "warm"
+            trimmed = tuple(replace(cold, target_share=share, when=when) for share in shares)
+            return Joined(conditions=trimmed, words=f"±{around:.0%}, {when}")
+        warm = replace(cold, when="warm")
+        if step.when is not None:
+            return warm if step.when == "warm" else cold
+        return Joined(conditions=(cold, warm), words="cold to warm")
+
+    def _settle_s(self, step: Step) -> float:
+        if step.settle is None:
+            return 0.0
+        if step.settle != "the capacitors":
+            return quantities.parse(step.settle, "s")
+        capacitance_f = (self.design.rails.reservoir_f or 0.0) + (self.design.rails.local_capacitors_f or 0.0)
+        if not capacitance_f:
+            return 0.0
+        if self.design.rails.bleed is None:
+            return 30.0
+        return min(120.0, 8.0 * self.design.rails.bleed.value * capacitance_f)
 
     def _supply(self, step: Step) -> Iterator[Item]:
         positive_v, negative_v = self._rails(step)
         limit_a = self._limit(step, positive_v, negative_v)
         if self.on and (positive_v, negative_v) == (self.positive_v, self.negative_v) and limit_a == self.limit_a:
             return
-        if self.on and positive_v < self.positive_v:
+        if self.on and positive_v < min(self.positive_v, self.lowest[0]):
             return  # the lowest rails at which this stage regulates are above this step already
         yield from self._power(step, "", positive_v, negative_v, limit_a, quantities.parse(step.ramp or "1 s", "s"))
 
@@ -330,19 +398,22 @@ class _Planner:
             )
         capacitance_f = (self.design.rails.reservoir_f or 0.0) + (self.design.rails.local_capacitors_f or 0.0)
         rise_v = max(positive_v - (self.positive_v if self.on else 0.0), 0.0)
-        charging_s = capacitance_f * rise_v / (0.3 * limit_a)
+        charging_s = capacitance_f * rise_v / (0.15 * limit_a)
         self.positive_v, self.negative_v, self.limit_a, self.on = positive_v, negative_v, limit_a, True
         yield self._item(
             step,
             "supply",
             f"{suffix}.power" if suffix else "",
             ramp_s=max(ramp_s, charging_s),
+            settle_s=max(0.5, self.design.feed.settles_after_s or 0.0),
             raises=raises,
             may_go_on=False,
             **words,
         )
 
     def _limit_check(self, step: Step) -> Iterator[Item]:
+        if self.on:
+            raise self._refuse(step, "tries the limit while the unit has power")
         positive_v, negative_v = self._rails(step)
         limit_a = self._limit(step, *self.lowest)
         words: dict[str, Any] = {"positive_v": positive_v, "negative_v": negative_v, "limit_a": limit_a}
@@ -376,7 +447,10 @@ class _Planner:
     def _clip(self, step: Step) -> Iterator[Item]:
         back = (self.positive_v, self.negative_v, self.limit_a)
         was_on = self.on
-        (point,) = self._expand(step.points[0])
+        points = tuple(point for name in step.points for point in self._expand(name))
+        if len(points) != 1:
+            raise self._refuse(step, f"clips the probes to {len(points)} points of {self.design.name}, not to one")
+        (point,) = points
         if was_on:
             self._off()
             yield self._item(
@@ -431,13 +505,19 @@ class _Planner:
     def _number(self, step: Step) -> float | None:
         if step.number is None:
             return None
-        for unit, scale in (("%", 0.01), ("V", 1.0)):
-            if step.number.rstrip().endswith(unit):
-                return quantities.parse(step.number, unit) * scale
+        text = step.number.rstrip()
         try:
-            return float(step.number)
-        except ValueError:
-            raise self._refuse(step, f"has the number {step.number!r}") from None
+            for unit, scale in (("%", 0.01), ("V", 1.0)):
+                if text.endswith(unit):
+                    number = quantities.parse(text, unit) * scale
+                    break
+            else:
+                number = float(text)
+        except (EntryError, ValueError):
+            number = math.nan
+        if not (math.isfinite(number) and number > 0.0):
+            raise self._refuse(step, f"has the number {step.number!r}", "a number above zero, such as 10, 1 % or 50 mV")
+        return number
 
     def _rails(self, step: Step) -> tuple[float, float]:
         rails = self.design.rails
@@ -450,6 +530,10 @@ class _Planner:
             share = quantities.parse(text, "%") / 100.0
             return share * rails.positive_v, share * rails.negative_v
         volts = quantities.parse(text, "V")
+        most_v = min(rails.positive_v, -rails.negative_v or rails.positive_v)
+        if volts > most_v:
+            full = _rails_text(rails.positive_v, rails.negative_v)
+            raise self._refuse(step, f"sets the rails to {text}", f"no more than the design's {full}")
         return volts, -volts if rails.negative_v else 0.0
 
     def _limit(self, step: Step, positive_v: float, negative_v: float) -> float:
@@ -470,8 +554,8 @@ class _Planner:
         if self.design.spreader.trimmer is None:
             raise self._refuse(step, f"turns a trimmer, and {self.design.name} has none")
 
-    def _refuse(self, step: Step, came: str) -> FileError:
-        return FileError(self.procedure.file, f"section {self.section.name}, step {step.name}", came)
+    def _refuse(self, step: Step, came: str, expected: str = "") -> FileError:
+        return FileError(self.procedure.file, f"section {self.section.name}, step {step.name}", came, expected)
 
     def _words(self, given: Mapping[str, Any]) -> dict[str, str]:
         trimmer = self.design.spreader.trimmer
@@ -500,6 +584,16 @@ class _Planner:
             words["more_bias_way"] = trimmer.raises_bias
             words["less_bias_way"] = ways[1 - ways.index(trimmer.raises_bias)]
         return words
+
+
+def _with_room(design: Design, least: tuple[float, float]) -> tuple[float, float]:
+    """Go a tenth above the lowest rails that regulate, rounded up to half a volt, at most to the full ones.
+
+    At the very edge a supply that is a few millivolts low decides whether the stage regulates.
+    """
+    positive_v = min(design.rails.positive_v, math.ceil(2.0 * 1.1 * least[0]) / 2.0)
+    negative_v = max(design.rails.negative_v, math.floor(2.0 * 1.1 * least[1]) / 2.0)
+    return positive_v, negative_v
 
 
 def _fill(text: str, words: dict[str, str]) -> str:

@@ -93,6 +93,8 @@ def deciding(item: Item, result: Judged | None, problem: str, *, way_out: bool) 
     if not way_out:
         choices.append(STOP)
     caution = "" if item.may_go_on or way_out else "There is no way past this result but a better one."
+    if way_out and item.point is not None and item.point.name in ("rail+", "rail-"):
+        caution = "Hands off until both rails have been seen low. Going on ends the walk here: take the unit as live."
     return Question(
         item=item.id,
         kind="decide",
@@ -128,6 +130,11 @@ def expected_text(limits: Limits) -> str:
     return f"{text} ({limits.source})"
 
 
-def model_limits(limits: PointLimits, condition: str) -> Limits:
-    """Limits from a prediction."""
-    return Limits(limits.low, limits.high, limits.nominal, limits.unit, f"the model: {condition}")
+def model_limits(limits: PointLimits, condition: str, allow: float = 0.0) -> Limits:
+    """Limits from a prediction, widened by `allow` (in their unit) on either side."""
+    source = f"the model: {condition}"
+    if allow:
+        source += f", ±{quantities.show(allow, limits.unit)} allowed"
+    low = None if limits.low is None else limits.low - allow
+    high = None if limits.high is None else limits.high + allow
+    return Limits(low, high, limits.nominal, limits.unit, source)

@@ -100,7 +100,7 @@ class State:
     overrides: Mapping[str, str] = field(default_factory=dict)
     before: frozenset[str] = frozenset()
     probes: str = ""
-    energised: Literal["off", "on", "unknown"] = "off"
+    energised: Literal["off", "on", "unknown"] = "unknown"
     supply: SupplyState | None = None
     highest_v: float = 0.0
     stopped: str = ""

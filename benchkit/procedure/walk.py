@@ -10,7 +10,9 @@ Rules
   trips, contact is lost, the output went off.  They all lead to the first item of the last section, where the supply
   is switched off and read back, and from there to the end.
 * A verdict is an event too (`Judged`): the walk writes it and goes on when it stands in the record.
-* What was passed over stays what it was: an overridden failure makes the verdict of the walk a failure.
+* What was passed over stays what it was: an overridden failure makes the verdict of the walk a failure, and a reading
+  that was never taken leaves it undecided.
+* Nobody is told to touch the unit on the way out before both of its rails have been seen low.
 """
 
 from __future__ import annotations
@@ -63,10 +65,16 @@ from benchkit.procedure.actions import (
     Wait,
     Write,
 )
-from benchkit.procedure.plan import Item, Plan, condition_key
+from benchkit.procedure.plan import Item, Joined, Plan, condition_key
 from benchkit.procedure.state import PHASES, Phase, State
 
 Step = tuple[State, tuple[Action, ...]]
+
+JUDGED_KINDS: Final = frozenset({"confirm", "measure", "rule", "supply", "limit check", "trim"})
+"""Kinds of item that end in a result; a walk passes only when each of them has one."""
+
+AFTER_TRIP: Final = "Discharge, and find the cause: no second try at a higher limit."
+STILL_LIVE: Final = "Treat the unit as live: nobody has seen its rails low."
 
 _ALWAYS: Final[Mapping[type[Event], str]] = {
     StopAsked: "_stop_asked",
@@ -154,7 +162,7 @@ class Walk:
                 f"The walk is {state.phase} and was told {event.name!r}", "an event that this phase takes"
             )
         item = getattr(event, "item", None)
-        if item and not isinstance(event, Noted) and item != self.item(state).id:
+        if item is not None and not isinstance(event, Noted) and item != self.item(state).id:
             raise IllegalEvent(f"{event.name!r} came for {item}", f"one for {self.item(state).id}")
         handler: Callable[[State, Event], Step] = getattr(self, method)
         after, actions = handler(replace(state, count=state.count + 1), event)
@@ -180,7 +188,7 @@ class Walk:
             return item.limits
         key = condition_key(item.condition)
         found = state.limits.get(key, {}).get(item.point.name)
-        return None if found is None else questions.model_limits(found, key)
+        return None if found is None else questions.model_limits(found, key, item.allow)
 
     def way_out(self, state: State) -> bool:
         """True in the last section, the way out."""
@@ -211,6 +219,7 @@ class Walk:
                     negative_v=item.negative_v,
                     limit_a=item.limit_a,
                     ramp_s=item.ramp_s,
+                    settle_s=item.settle_s,
                     trip_on_limit=item.kind == "supply",
                 )
                 return state, (action,)
@@ -254,7 +263,10 @@ class Walk:
                     and condition_key(other.condition) == key
                 )
             )
-            predict = Predict(item=item.id, key=key, condition=item.condition, points=points)
+            conditions = (
+                item.condition.conditions if isinstance(item.condition, Joined) else (item.condition,)
+            )
+            predict = Predict(item=item.id, key=key, conditions=conditions, points=points)
             return replace(state, phase="predicting"), (predict,)
         if item.point.name == state.probes or item.point.function == "dc current":
             return self._read(state, item)
@@ -269,6 +281,7 @@ class Walk:
             function=item.point.function,
             unit=item.point.unit,
             samples=item.samples,
+            settle_s=item.settle_s,
         )
         return replace(state, phase="reading"), (read,)
 
@@ -279,13 +292,20 @@ class Walk:
 
     def _close(self, state: State) -> Step:
         state = replace(state, phase="closing")
-        verdicts = [result.verdict for result in state.results]
-        verdict = worst(verdicts)
+        verdict = worst([result.verdict for result in state.results])
+        if verdict == "pass" and any(self._is_open(state, item) for item in self.plan.items):
+            verdict = "undecided"
         if state.stopped and verdict == "pass":
             verdict = "undecided"
         status = state.stop_status or (0 if verdict == "pass" else 1)
         closed = Closed(count=state.count, verdict=verdict, stopped=state.stopped, exit_status=status)
         return state, (Write(item="", event=closed),)
+
+    def _is_open(self, state: State, item: Item) -> bool:
+        """An item that wants a result and has none, or only one from before that was passed over since."""
+        if item.kind not in JUDGED_KINDS:
+            return False
+        return state.result(item.id) is None or (item.id in state.before and item.id in state.overrides)
 
     def _make_safe(self, state: State, reason: str, status: int) -> Step:
         if not state.stopped:
@@ -312,7 +332,8 @@ class Walk:
         return self._make_safe(state, event.reason, 4)
 
     def _tripped(self, state: State, event: Tripped) -> Step:
-        return self._make_safe(_heard(state, event.state), f"tripped: {event.reason}", 4)
+        after, actions = self._make_safe(_heard(state, event.state), f"tripped: {event.reason}", 4)
+        return replace(after, note=f"Tripped: {event.reason}. {AFTER_TRIP}"), actions
 
     def _contact_lost(self, state: State, event: ContactLost) -> Step:
         return self._make_safe(state, f"contact with {event.who} was lost: {event.problem}", 3)
@@ -345,8 +366,10 @@ class Walk:
 
     def _bench_found(self, state: State, event: BenchFound) -> Step:
         state = _heard(replace(state, meter=event.meter, supply_name=event.supply), event.supply_state)
-        if state.energised == "on":
+        if event.supply_state is not None and state.energised != "off":
             note = "The supply's output was on when it was found."
+            if state.energised == "unknown":
+                note = "The supply did not say whether its output is on."
             return replace(state, phase="securing", ever_on=True, note=note), (
                 SwitchOff(item=self.item(state).id, reason=note),
             )
@@ -365,6 +388,8 @@ class Walk:
         return replace(state, note=event.problem), (Ask(item=self.item(state).id, question=question),)
 
     def _secure_decided(self, state: State, event: Decided) -> Step:
+        if event.choice == "go on":
+            raise IllegalEvent("Nobody knows whether the supply is off", "again, or make safe")
         if event.choice == "again":
             return state, (Connect(item=self.item(state).id),)
         stopped = replace(state, stopped=state.stopped or "the instruments did not answer", stop_status=3, ever_on=True)
@@ -377,7 +402,10 @@ class Walk:
         return self._go_back(state)
 
     def _secured_by_hand(self, state: State, event: Answered) -> Step:
-        return self._go_back(replace(state, unconfirmed=False))
+        _demand(event, "done")
+        if not state.unconfirmed:
+            raise IllegalEvent("The supply has not been asked to switch off yet", "its answer first")
+        return self._go_back(_off_by_word(state))
 
     def _go_back(self, state: State) -> Step:
         if self.item(state).kind == "connect":
@@ -390,6 +418,7 @@ class Walk:
 
     def _answered(self, state: State, event: Answered) -> Step:
         item = self.item(state)
+        _demand(event, *(("yes", "no") if item.kind in ("confirm", "hold") else ("done",)))
         if item.kind == "confirm":
             verdict = "pass" if event.choice == "yes" else "fail"
             judged = Judged(
@@ -404,6 +433,7 @@ class Walk:
         return self._next(state)
 
     def _placed(self, state: State, event: Answered) -> Step:
+        _demand(event, "done")
         item = self.item(state)
         assert item.point is not None
         return self._read(replace(state, probes=item.point.name), item)
@@ -417,7 +447,10 @@ class Walk:
                 raise IllegalEvent(f"{item.id} can't be passed over", "again, or make safe")
             if not event.reason.strip():
                 raise IllegalEvent(f"{item.id} was passed over without a reason", "a reason in words")
-            return self._next(replace(state, overrides={**state.overrides, item.id: event.reason}))
+            state = replace(state, overrides={**state.overrides, item.id: event.reason})
+            if self.way_out(state) and item.point is not None and item.point.name in ("rail+", "rail-"):
+                return self._close(replace(state, index=len(self.plan), note=STILL_LIVE))
+            return self._next(state)
         if self.way_out(state):
             raise IllegalEvent("The walk is on its way out already", "again, or a reason to go on")
         if item.kind == "connect":
@@ -460,7 +493,7 @@ class Walk:
         return state, (Write(item=item.id, event=judged),)
 
     def _verdict(self, item: Item, reading: Reading, limits: Limits) -> Judged:
-        judgement = judge_reading(reading, limits)
+        judgement = judge_reading(reading, limits, acceptance=item.acceptance)
         return Judged(
             item=item.id, subject=reading.point, verdict=judgement.verdict, value=reading.value, unit=reading.unit,
             low=limits.low, high=limits.high, uncertainty=reading.standard_uncertainty,
@@ -550,10 +583,20 @@ class Walk:
         return replace(state, phase="by hand off"), (ask,)
 
     def _off_by_hand(self, state: State, event: Answered) -> Step:
-        return self._next(replace(state, unconfirmed=False))
+        _demand(event, "done")
+        return self._next(_off_by_word(state))
 
     def _closed(self, state: State, event: Closed) -> Step:
+        lines_before = state.count - 1
+        if event.count != lines_before:
+            raise IllegalEvent(f"The last line counts {event.count} lines before it", f"{lines_before}")
         return replace(state, phase="closed", closed=event), ()
+
+
+def _demand(event: Answered, *choices: str) -> None:
+    """Take no answer for another: only a plain yes passes a hold point."""
+    if event.choice not in choices:
+        raise IllegalEvent(f"{event.item} was answered {event.choice!r}", " or ".join(choices))
 
 
 def _subject(item: Item) -> str:
@@ -579,10 +622,17 @@ def _off_heard(state: State, event: OutputOff) -> State:
     return state if event.state is None else replace(state, supply=event.state)
 
 
+def _off_by_word(state: State) -> State:
+    """Believe a person about a supply that only a person switches; of any other, nothing is known by that."""
+    by_hand = state.opened is not None and state.opened.supply == "manual"
+    return replace(state, unconfirmed=False, energised="off" if by_hand else "unknown", supply=None)
+
+
 def _rails_problem(item: Item, found: SupplyState) -> str:
     """Say what is wrong with the rails after they were set, "" when nothing is (5 % and 0.2 V, common practice)."""
-    if found.output_on is False:
-        return "The supply says that its output is off."
+    if found.output_on is not True:
+        said = "that its output is off" if found.output_on is False else "nothing about its output"
+        return f"The supply says {said}."
     limiting = [
         rail for rail, in_limit in (("rail+", found.positive_in_limit), ("rail-", found.negative_in_limit)) if in_limit
     ]

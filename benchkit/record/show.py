@@ -10,13 +10,12 @@ from __future__ import annotations
 
 import textwrap
 from collections.abc import Iterable, Iterator
-from pathlib import Path
 from typing import Any
 
+from benchkit.events import Answered
 from benchkit.measure.readings import Reading
 from benchkit.quantities import Overload, show
-from benchkit.record import verify
-from benchkit.record.summary import Result, Summary, load_summary
+from benchkit.record.summary import Result, Summary
 
 DEFERENCE = (
     "Benchkit helps a qualified person; it is not a safety device, it certifies nothing, and it defers to local codes, "
@@ -28,26 +27,10 @@ WIDTH = 100
 """The most characters that a line of prose has; a table's line may be longer where a name is."""
 
 JSON_FORMAT = 1
-"""The number of the form that `json_of` returns."""
+"""The number of the form that `as_json` returns."""
 
 
-def as_text(path: str | Path) -> str:
-    """Return the record in `path` as text.
-
-    Raises
-    ------
-    RecordError
-        If the file can't be read, or does not even hold the first line of a record.
-    """
-    return text_of(load_summary(path))
-
-
-def as_json(path: str | Path) -> dict[str, Any]:
-    """Return the record in `path` for a program; raises as `as_text` does."""
-    return json_of(load_summary(path))
-
-
-def text_of(summary: Summary) -> str:
+def as_text(summary: Summary) -> str:
     """Return the whole summary as text, without a line feed at the end."""
     return "\n".join(line.rstrip() for line in _lines(summary))
 
@@ -78,8 +61,9 @@ def _lines(summary: Summary) -> Iterator[str]:
         yield from _heading("Notes")
         for note in summary.notes:
             figures = ", ".join(f"{clean(key)} {value:.6g}" for key, value in note.figures.items())
-            yield from _wrapped(clean(note.text) + (f": {figures}" if figures else ""), "- ")
-    typed = [(where, answer) for where, answer in summary.answers if answer.text]
+            text = clean(note.text)
+            yield from _wrapped(f"{text.rstrip('.')}: {figures}" if figures else text, "- ")
+    typed = [(where, answer) for where, answer in summary.answers if _says_something(answer, opened.operator)]
     if typed:
         yield ""
         yield from _heading("Typed in")
@@ -141,12 +125,17 @@ def _first_things(summary: Summary) -> Iterator[str]:
         yield "- Nothing failed, nothing was undecided, missed, overridden or interrupted."
 
 
+def _says_something(answer: Answered, operator: str) -> bool:
+    """Tell whether more was typed than that a step is done."""
+    return answer.text.strip().casefold() not in ("", "yes", answer.choice, operator.strip().casefold())
+
+
 def _against(result: Result) -> str:
     what = "no reading" if result.missed else (result.verdict or "")
     line = f"{what.upper()}: {clean(result.title)}, {clean(result.subject)}"
     reason = result.missed or (result.judged.why if result.judged is not None else "")
     if reason:
-        line += f": {clean(reason)}"
+        line += f": {clean(reason).rstrip('.')}"
     if result.overridden is not None:
         line += f". OVERRIDDEN, reason: {clean(result.overridden) or 'none was given'}"
     return line
@@ -162,43 +151,44 @@ def _sections(summary: Summary) -> Iterator[tuple[str, str]]:
             yield result.section, seen[result.section]
 
 
-_COLUMNS = ("step, point", "value", "lowest", "highest", "std. unc.", "verdict", "")
+_COLUMNS = ("", "value", "lowest", "highest", "std. unc.", "verdict", "")
 
 
 def _table(results: Iterable[Result]) -> Iterator[str]:
-    rows = [_COLUMNS, *(_row(result) for result in results)]
-    widths = [max(len(row[column]) for row in rows) for column in range(len(_COLUMNS))]
+    """Yield a table: the title of each step on a line of its own, its points below it."""
+    rows: list[tuple[str, ...]] = [_COLUMNS]
+    title = ""
+    for result in results:
+        alone = clean(result.subject) in ("", clean(result.title))
+        if not alone and result.title != title:
+            rows.append((clean(result.title),))
+        title = "" if alone else result.title
+        rows.append(_row(result, clean(result.title) if alone else f"  {clean(result.subject)}"))
+    whole = [row for row in rows if len(row) > 1]
+    widths = [max(len(row[column]) for row in whole) for column in range(len(_COLUMNS))]
     for row in rows:
         cells = [row[0].ljust(widths[0])]
-        cells += [row[column].rjust(widths[column]) for column in range(1, 5)]
-        cells += [row[5].ljust(widths[5]), row[6]]
+        cells += [cell.rjust(width) for cell, width in zip(row[1:5], widths[1:5], strict=False)]
+        cells += [cell.ljust(width) for cell, width in zip(row[5:], widths[5:], strict=False)]
         yield "  ".join(cells).rstrip()
 
 
-def _row(result: Result) -> tuple[str, ...]:
+def _row(result: Result, name: str) -> tuple[str, ...]:
     judged = result.judged
     unit = judged.unit if judged is not None else (result.reading.unit if result.reading is not None else "")
-    value = "no reading" if result.missed else _quantity(_measured(result), unit)
-    low = _quantity(judged.low, unit) if judged is not None else ""
-    high = _quantity(judged.high, unit) if judged is not None else ""
-    uncertainty = _uncertainty(result)
-    flags = []
-    if result.from_before:
-        flags.append("from before")
-    if result.replaced:
-        flags.append("measured again later")
-    if result.overridden is not None:
-        flags.append("overridden")
-    title = clean(result.title)
-    subject = clean(result.subject)
+    flags = (
+        ("from before", result.from_before),
+        ("measured again later", result.replaced),
+        ("overridden", result.overridden is not None),
+    )
     return (
-        title if subject in ("", title) else f"{title}, {subject}",
-        value,
-        low,
-        high,
-        _quantity(uncertainty, unit, digits=2),
+        name,
+        "no reading" if result.missed else _quantity(_measured(result), unit),
+        _quantity(judged.low, unit) if judged is not None else "",
+        _quantity(judged.high, unit) if judged is not None else "",
+        _quantity(_uncertainty(result), unit, digits=2),
         result.verdict or ("missed" if result.missed else "not judged"),
-        "; ".join(flags),
+        "; ".join(words for words, true in flags if true),
     )
 
 
@@ -224,12 +214,12 @@ def _quantity(value: float | Overload | None, unit: str, digits: int = 4) -> str
         return f"{value:.{digits}g} {unit}".strip() if isinstance(value, float) else "overload"
 
 
-def json_of(summary: Summary) -> dict[str, Any]:
+def as_json(summary: Summary) -> dict[str, Any]:
     """Return the facts for a program; every value is plain JSON, a number that is not there is None."""
     opened, closed = summary.opened, summary.closed
     return {
         "format": JSON_FORMAT,
-        "record": verify.as_json(summary.record.path, summary.record),
+        "record": summary.record.as_json(),
         "kind": opened.kind,
         "unit": opened.unit,
         "operator": opened.operator,

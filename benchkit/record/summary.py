@@ -46,7 +46,7 @@ from benchkit.events import (
 )
 from benchkit.measure.readings import Reading
 from benchkit.procedure.file import Procedure, parse_procedure
-from benchkit.record.verify import Record, verify
+from benchkit.record.verify import Record, load
 
 _NAME = re.compile(r"[a-z0-9][a-z0-9-]*")
 
@@ -188,7 +188,7 @@ def load_summary(path: str | Path) -> Summary:
     RecordError
         If the file can't be read, or does not even hold the first line of a record.
     """
-    return summarise(verify(path))
+    return summarise(load(path))
 
 
 def summarise(record: Record) -> Summary:

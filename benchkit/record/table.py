@@ -18,7 +18,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 from benchkit.errors import FileError
-from benchkit.record.summary import Summary, load_summary
+from benchkit.record.summary import Summary
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -57,22 +57,6 @@ COLUMNS = (
 
 _FORMULA = ("=", "+", "-", "@", "\t", "\r")
 _NUMBERS = ("value", "standard_uncertainty", "low", "high", "probability")
-
-
-def as_csv(paths: Iterable[str | Path]) -> str:
-    """Return the readings of the records in `paths` as CSV; see `csv_text`.
-
-    Raises
-    ------
-    RecordError
-        If a file can't be read, or does not even hold the first line of a record.
-    """
-    return csv_text(load_summary(path) for path in paths)
-
-
-def as_json(paths: Iterable[str | Path]) -> str:
-    """Return the readings as JSON, one object a line; raises as `as_csv` does."""
-    return "".join(f"{line}\n" for line in json_lines(load_summary(path) for path in paths))
 
 
 def rows(summary: Summary) -> Iterator[dict[str, Any]]:

@@ -68,8 +68,23 @@ class Record:
         """``whole``, ``unfinished`` or ``broken``."""
         return STATUS_WORDS[self.status]
 
+    def as_json(self) -> dict[str, Any]:
+        """Return the finding for a program: file, status, word, line, message, whole lines."""
+        return {
+            "file": str(self.path),
+            "status": self.status,
+            "word": self.word,
+            "line": self.line,
+            "message": self.message,
+            "events": len(self.kept),
+        }
 
-def verify(path: str | Path) -> Record:
+    def as_text(self) -> str:
+        """Return the finding as one line."""
+        return f"{self.path}: {self.word}: {self.message}"
+
+
+def load(path: str | Path) -> Record:
     """Read and check a record; the file is only read.
 
     Raises
@@ -108,23 +123,6 @@ def verify(path: str | Path) -> Record:
 
 
 _EMPTY = "The record holds no whole line: the walk was cut off before it had begun."
-
-
-def as_json(path: str | Path, record: Record) -> dict[str, Any]:
-    """Return the finding on the file `path` for a program: file, status, word, line, message, whole lines."""
-    return {
-        "file": str(path),
-        "status": record.status,
-        "word": record.word,
-        "line": record.line,
-        "message": record.message,
-        "events": len(record.kept),
-    }
-
-
-def as_text(path: str | Path, record: Record) -> str:
-    """Return the finding on the file `path` as one line."""
-    return f"{path}: {record.word}: {record.message}"
 
 
 def worst(records: Sequence[Record]) -> int:

@@ -10,12 +10,14 @@ Time constants reach from microseconds (a short across 100 uF) to minutes (10 mF
 voltage, not by time: a share of what is left to go, halved where the unit's current turns out to have changed too
 much on the way (Heun's rule against Euler's).
 
-The end of it is the unit's balance with supply and limit, the same solution that predictions use: when both rails are
-close to it, or nothing moves them any more, they are *settled* and follow it from then on.
+The end of it is the unit's balance with supply and limit, the same solution that predictions use.  A rail that comes
+close to it waits there for the other one (a shorted rail is there in microseconds, the other one takes its time); when
+both are close, or nothing moves them any more, they are *settled* and follow the balance from then on.
 """
 
 from __future__ import annotations
 
+from collections.abc import Iterable
 from dataclasses import dataclass, field
 from typing import Final, Protocol
 
@@ -27,7 +29,7 @@ _NEAR_V = 0.02
 _NEAR_SHARE = 0.001
 _STALLED_SHARE = 0.01
 _RISING_SHARE = 0.34
-_FALLING_SHARE = 0.3
+_FALLING_SHARE = 0.2
 _LEAST_STEP_V = 0.02
 _TOLERANCE = 0.15
 _HALVINGS = 8
@@ -129,9 +131,16 @@ class Rails:
             if all(arrived[rail] or wrong[rail] <= allowed[rail] for rail in (0, 1)):
                 break
             seconds /= 2.0
-        mean = tuple(rates[rail] if arrived[rail] else (rates[rail] + new_rates[rail]) / 2.0 for rail in (0, 1))
-        self.volts = self._moved(start, (mean[0], mean[1]), seconds)
-        self._rates = new_rates
+        mean = _pair(rates[rail] if arrived[rail] else (rates[rail] + new_rates[rail]) / 2.0 for rail in (0, 1))
+        self.volts = self._moved(start, mean, seconds)
+        # The unit was asked at the end of Euler's step, not of Heun's: what changed on the way is taken as linear.
+        self._rates = _pair(
+            new_rates[rail]
+            if arrived[rail] or there[rail] == start[rail]
+            else rates[rail]
+            + (new_rates[rail] - rates[rail]) * (self.volts[rail] - start[rail]) / (there[rail] - start[rail])
+            for rail in (0, 1)
+        )
         self._raise_marks()
         self._steps += 1
         self._at_rest()
@@ -151,6 +160,9 @@ class Rails:
         delivered, rates = [0.0, 0.0], [0.0, 0.0]
         for rail, channel in enumerate(self._channels):
             target = self._target(rail)
+            if self._near_goal(rail, volts[rail]):
+                delivered[rail] = min(max(drawn[rail], 0.0), channel.limit_a)
+                continue
             if target > 0.0 and volts[rail] < target - 1e-6:
                 delivered[rail] = channel.limit_a
             elif target > 0.0 and volts[rail] <= target + 1e-6:
@@ -198,15 +210,27 @@ class Rails:
         return self.settled
 
     def _rail_at_rest(self, rail: int, rate: float) -> bool:
-        volts, goal, channel = self.volts[rail], self._goal[rail], self._channels[rail]
+        volts, channel = self.volts[rail], self._channels[rail]
         if not _delivers(channel):
             return volts <= EMPTY_V
-        if abs(volts - goal) <= max(_NEAR_V, _NEAR_SHARE * goal) and volts <= self._target(rail) + _NEAR_V:
+        if self._near_goal(rail, volts):
             return True
         return volts <= channel.volts and abs(rate) * self.capacitance_f < _STALLED_SHARE * channel.limit_a
 
+    def _near_goal(self, rail: int, volts: float) -> bool:
+        """Whether a supplied rail is where it is going; it then waits there for the other one."""
+        if not _delivers(self._channels[rail]) or volts > self._target(rail) + _NEAR_V:
+            return False
+        return abs(volts - self._goal[rail]) <= max(_NEAR_V, _NEAR_SHARE * self._goal[rail])
+
     def _raise_marks(self) -> None:
         self.highest_v = (max(self.highest_v[0], self.volts[0]), max(self.highest_v[1], self.volts[1]))
+
+
+def _pair(values: Iterable[float]) -> Pair:
+    """Return exactly two values as a pair."""
+    first, second = values
+    return first, second
 
 
 def _delivers(channel: Channel) -> bool:

@@ -20,6 +20,7 @@ Error numbers are those of SCPI-1999 volume 2, 21.8: -100...-199 command, -200..
 
 from __future__ import annotations
 
+import functools
 import itertools
 import math
 import re
@@ -291,8 +292,9 @@ class Arguments:
 Handler = Callable[[Arguments], str | None]
 
 
-def spellings(pattern: str) -> Iterator[tuple[str, ...]]:
-    """Yield every way to write a header given as ``MEASure[:SCALar]:VOLTage[:DC]``.
+@functools.cache
+def spellings(pattern: str) -> tuple[tuple[str, ...], ...]:
+    """Return every way to write a header given as ``MEASure[:SCALar]:VOLTage[:DC]``.
 
     Capitals are the short form, the whole word the long one, brackets mean that the word may be left out.
     """
@@ -301,8 +303,7 @@ def spellings(pattern: str) -> Iterator[tuple[str, ...]]:
         short = "".join(letter for letter in word if not letter.islower())
         forms: list[tuple[str, ...]] = [(form,) for form in sorted({word.upper(), short})]
         choices.append([(), *forms] if bracket else forms)
-    for combination in itertools.product(*choices):
-        yield tuple(itertools.chain.from_iterable(combination))
+    return tuple(tuple(itertools.chain.from_iterable(combination)) for combination in itertools.product(*choices))
 
 
 class Instrument:

@@ -26,8 +26,8 @@ READ_AMPS: Final = (0.0005, 0.0003)
 """Half-widths of setting and reading back: share of the value, and volts or amperes (our own figures)."""
 
 _RESET_LIMIT_A = 0.1
-_VOLT_STEP = 0.001
-_AMP_STEP = 0.0001
+VOLT_STEP = 0.001
+AMP_STEP = 0.0001
 
 
 @dataclass
@@ -125,13 +125,13 @@ class Supply(Instrument):
     def _set_volts(self, arguments: Arguments) -> None:
         volts = arguments.number("V", 0.0, MOST_VOLTS)
         for number in _only_channels(arguments):
-            self._channels[number].volts = round(volts / _VOLT_STEP) * _VOLT_STEP
+            self._channels[number].volts = round(volts / VOLT_STEP) * VOLT_STEP
             self._apply(number)
 
     def _set_limit(self, arguments: Arguments) -> None:
         limit_a = arguments.number("A", 0.0, MOST_AMPS)
         for number in _only_channels(arguments):
-            self._channels[number].limit_a = round(limit_a / _AMP_STEP) * _AMP_STEP
+            self._channels[number].limit_a = round(limit_a / AMP_STEP) * AMP_STEP
             self._apply(number)
 
     def _switch(self, arguments: Arguments) -> None:
@@ -147,10 +147,10 @@ class Supply(Instrument):
         return handler
 
     def _measure_volts(self, channel: _Channel, number: int) -> str:
-        return nr3(self._read(self._powered.terminals(number).volts, channel.read_volts, _VOLT_STEP))
+        return nr3(self._read(self._powered.terminals(number).volts, channel.read_volts, VOLT_STEP))
 
     def _measure_amps(self, channel: _Channel, number: int) -> str:
-        return nr3(self._read(self._powered.terminals(number).amps, channel.read_amps, _AMP_STEP))
+        return nr3(self._read(self._powered.terminals(number).amps, channel.read_amps, AMP_STEP))
 
     def _read(self, value: float, error: tuple[float, float], step: float) -> float:
         noise = 0.3 * step * float(self._rng.standard_normal())

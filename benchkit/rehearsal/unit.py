@@ -40,6 +40,7 @@ RESISTOR_MARGIN: Final = 4.0
 RESISTOR_LAG_S: Final = 4.0
 FINE_K: Final = 0.001
 COARSE_K: Final = 0.02
+HEATING_K: Final = 0.05
 
 _NO_LIMIT: Final = 0.0
 
@@ -120,6 +121,11 @@ class SimulatedUnit:
             self._last.clear()
         self._last[key] = solved, temperatures
         return solved
+
+    @property
+    def latest(self) -> Solved | None:
+        """The operating point that was found last, wherever the rails were then; None before the first."""
+        return self._newest
 
     def _key(self, volts: Pair, limit_a: float | None) -> _Key:
         return _Key(volts, _NO_LIMIT if limit_a is None else limit_a, self.travel, len(self.broken))

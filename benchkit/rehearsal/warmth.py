@@ -24,7 +24,7 @@ from benchkit.stage.points import transistors_of
 JUNCTION_LAG_S: Final = 1.0
 DRIVER_LAG_S: Final = 25.0
 SPREADER_LAG_S: Final = 15.0
-LARGEST_STEP_K: Final = 0.2
+LARGEST_STEP_K: Final = 0.4
 LONGEST_STEP_S: Final = 10.0
 HOTTEST_C: Final = 400.0
 

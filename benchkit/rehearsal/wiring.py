@@ -23,7 +23,7 @@ from benchkit.errors import EntryError
 from benchkit.rehearsal.meter import Sensed
 from benchkit.rehearsal.rails import STRAY_F, Channel, Pair, Rails
 from benchkit.rehearsal.supply import Terminals
-from benchkit.rehearsal.unit import COARSE_K, FINE_K, SimulatedUnit
+from benchkit.rehearsal.unit import COARSE_K, FINE_K, HEATING_K, SimulatedUnit
 from benchkit.stage.operate import Solved
 from benchkit.stage.points import Point, find_point, points_of
 from benchkit.stage.topologies import build
@@ -174,12 +174,13 @@ class Table:
                 step_s = self.rails.step(self.unit, left_s)
                 if step_s > 0.0:
                     self._account(step_s, self.rails.volts, self.rails.delivered)
-                    self._heat(self.unit.operate(self.rails.volts, None, within_k=COARSE_K), step_s)
+                    # Found at the step's end or close to it: good enough for heat.
+                    self._heat(self.unit.latest or self.now(HEATING_K), step_s)
             left_s -= step_s
             self.sim_s += step_s
 
     def _settled_step(self, left_s: float) -> float:
-        solved = self.now(COARSE_K)
+        solved = self.now(HEATING_K)
         step_s = min(left_s, self.unit.longest_step_s(solved))
         volts_0, amps_0 = self._settled_rail(solved, 0)
         volts_1, amps_1 = self._settled_rail(solved, 1)

@@ -37,12 +37,24 @@ async def read(session: Session, action: Read) -> Event:
         elif session.job.manual_meter:
             reading = await _by_hand(session, action.point, action.function, action.unit)
         else:
-            await session.clock.spend(max(action.settle_s, 1.0))
+            await _settle(session, action)
             reading = await _by_meter(session, action.point, action.function, action.unit, action.samples)
     except (InstrumentError, EntryError) as error:
         return ReadingMissed(item=action.item, point=action.point, problem=str(error))
     await session.sample()
     return ReadingTaken(item=action.item, reading=reading)
+
+
+async def _settle(session: Session, action: Read) -> None:
+    """Let the reading come to rest, second by second, so that a trip or off is never held up."""
+    whole_s = left_s = max(action.settle_s, 1.0)
+    while left_s > 0:
+        if action.settle_s:
+            words = f"{action.point}: letting the reading come to rest."
+            session.busy(words, share=1.0 - left_s / whole_s, remaining_s=left_s)
+        slice_s = min(1.0, left_s)
+        await session.clock.spend(slice_s)
+        left_s -= slice_s
 
 
 async def _by_meter(session: Session, point: str, function: str, unit: str, samples: int) -> Reading:

@@ -56,7 +56,12 @@ async def _ramp(session: Session, action: SetSupply) -> Event:
         await session.clock.spend(slice_s)
         if action.trip_on_limit:
             await session.sample()
-    await session.clock.spend(0.5)
+    left_s = max(action.settle_s, 0.5)
+    while left_s > 0:
+        await session.clock.spend(min(0.5, left_s))
+        left_s -= 0.5
+        if action.trip_on_limit:
+            await session.sample()
     state = await asyncio.wrap_future(keeper.supply_state())
     return SupplySet(item=action.item, state=state)
 
@@ -79,7 +84,8 @@ async def switch_off(session: Session, action: SwitchOff) -> Event | None:
         session.busy("")
         return OutputOff(reason=action.reason, confirmed=False, how="benchkit has no hand on this supply.", state=None)
     session.busy("Switching the supply off and reading it back.")
-    await asyncio.wrap_future(session.keeper.off(action.reason))
+    # Shielded: the walk may have moved on by the keeper's own event before the answer comes.
+    await asyncio.shield(asyncio.wrap_future(session.keeper.off(action.reason)))
     await session.hands.advance(0.2)
     return None
 
@@ -125,7 +131,7 @@ def typed_supply(text: str, action: SetSupply) -> SupplyState:
     number = 0
     while number < len(words):
         pair = " ".join(words[number : number + 2])
-        for candidate, width in ((pair, 2), (words[number], 1)):
+        for candidate, width in ((words[number], 1), (pair, 2)):
             unit = "V" if candidate.endswith(("V", "v")) else "A" if candidate.endswith(("A", "a")) else ""
             if unit and number + width <= len(words):
                 quantities_found.append((quantities.parse(candidate, unit), unit))
@@ -148,9 +154,6 @@ def typed_supply(text: str, action: SetSupply) -> SupplyState:
         negative_v=-abs(volts[1]) if rails == 2 else 0.0,
         positive_a=amps[0],
         negative_a=amps[1] if rails == 2 else 0.0,
-        set_positive_v=action.positive_v,
-        set_negative_v=action.negative_v,
-        limit_a=action.limit_a,
         positive_in_limit=in_limit,
         negative_in_limit=in_limit and rails == 2,
     )

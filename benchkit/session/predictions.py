@@ -12,7 +12,7 @@ from benchkit.events import Event, Judged, PointLimits, Predicted, PredictionRef
 from benchkit.judge.rules import RuleFacts, evaluate
 from benchkit.measure.readings import Reading
 from benchkit.procedure.actions import Evaluate, Predict
-from benchkit.procedure.plan import Item
+from benchkit.procedure.plan import Item, Joined
 from benchkit.procedure.state import State
 from benchkit.procedure.walk import Walk
 from benchkit.stage.conditions import Condition, Unpowered
@@ -37,27 +37,35 @@ def predict(design: Design, action: Predict, units: int | None, seed: int) -> Ev
     from benchkit.stage.expected import DEFAULT_UNITS, expected, expected_unpowered
 
     count = units or DEFAULT_UNITS
+    found = []
     try:
-        if isinstance(action.condition, Unpowered):
-            found = expected_unpowered(design, action.points, trimmer=action.condition.trimmer, units=count, seed=seed)
-        else:
-            found = expected(design, action.condition, units=count, seed=seed, points=action.points)
+        for condition in action.conditions:
+            if isinstance(condition, Unpowered):
+                found.append(
+                    expected_unpowered(design, action.points, trimmer=condition.trimmer, units=count, seed=seed)
+                )
+            else:
+                found.append(expected(design, condition, units=count, seed=seed, points=action.points))
     except ModelError as error:
         return PredictionRefused(item=action.item, condition=action.key, problem=str(error))
     limits = tuple(
         PointLimits(
-            point=one.point, unit=one.unit, nominal=_open(one.nominal), low=_open(one.low), high=_open(one.high)
+            point=one.point,
+            unit=one.unit,
+            nominal=_open(one.nominal),
+            low=_open(min(other[one.point].low for other in found)),
+            high=_open(max(other[one.point].high for other in found)),
         )
-        for one in found.points
+        for one in found[0].points
     )
     return Predicted(
         item=action.item,
         condition=action.key,
         limits=limits,
-        units=found.units,
-        solved=found.solved,
-        seed=found.seed,
-        seconds=found.solve_seconds,
+        units=count,
+        solved=min(one.solved for one in found),
+        seed=seed,
+        seconds=sum(one.solve_seconds for one in found),
     )
 
 
@@ -114,8 +122,9 @@ def rule_facts(design: Design, walk: Walk, state: State, item: Item) -> RuleFact
             known = walk.limits_for(state, other)
             if known is not None and other.condition is not None:
                 limits[other.point.name] = known
-            if isinstance(other.condition, Condition):
-                rails = (other.condition.positive_v, other.condition.negative_v)
+            condition = other.condition.conditions[0] if isinstance(other.condition, Joined) else other.condition
+            if isinstance(condition, Condition):
+                rails = (condition.positive_v, condition.negative_v)
     return RuleFacts(
         design=design,
         readings=readings,

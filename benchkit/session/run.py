@@ -53,7 +53,7 @@ from benchkit.procedure.actions import (
     Write,
 )
 from benchkit.procedure.file import Procedure
-from benchkit.procedure.state import State
+from benchkit.procedure.state import Phase, State
 from benchkit.procedure.walk import Walk
 from benchkit.session import measuring, powering, predictions
 from benchkit.session.clock import Clock
@@ -133,6 +133,7 @@ class Session:
         self._loop = asyncio.get_running_loop()
         self._truth_noted = False
         self._off_asked = False
+        self._moved_on = False
         self.watch_since = 0.0
         self._last_actions: tuple[Action, ...] = ()
 
@@ -207,6 +208,8 @@ class Session:
                 if self._pushed:
                     self._woken.clear()
                     fresh = await self._take_pushed()
+                    if running is None and not fresh and self._moved_on and self._stands(before):
+                        fresh = self._again()  # its event was not kept, and what came instead changed nothing
                 elif running is not None and running.done():
                     self._woken.clear()
                     event = await self._result_of(running)
@@ -216,7 +219,7 @@ class Session:
                 else:
                     self._woken.clear()
                     continue
-                if fresh or (self.state.phase, self.state.index) != before:
+                if fresh or not self._stands(before):
                     await _lapse(running)
                     running = None
                     self.moment = Moment(message=self.moment.message)
@@ -243,11 +246,16 @@ class Session:
             self.moment.message = str(error)
             return self._again()
         kept = await asyncio.wrap_future(self.keeper.append(event, after=self.seq))
+        self._moved_on = kept.moved_on
         if kept.moved_on:
             return ()
         self.seq = kept.seq
         self.state = after
         return actions
+
+    def _stands(self, before: tuple[Phase, int]) -> bool:
+        """Whether the walk is where it was."""
+        return (self.state.phase, self.state.index) == before
 
     def _again(self) -> tuple[Action, ...]:
         """Carry the last action out once more: nothing has been entered, nothing has changed."""
@@ -403,7 +411,10 @@ class Session:
         """Take a sample of the watch where the keeper doesn't do so by itself, and show it."""
         if self.job.manual_supply or self.state.energised == "off":
             return
-        state = await asyncio.wrap_future(self.keeper.sample(self.clock.now() - self.watch_since))
+        try:
+            state = await asyncio.wrap_future(self.keeper.sample(self.clock.now() - self.watch_since))
+        except InstrumentError:
+            return  # a supply that is lost while it is watched is the keeper's to tell; it switches off too
         self.note_supply(state)
 
     def note_supply(self, state: SupplyState) -> None:

@@ -36,7 +36,7 @@ from benchkit.circuit.solve import Solution
 from benchkit.stage.conditions import Condition
 from benchkit.stage.design import Design
 from benchkit.stage.draws import Array, Parameters, nominal
-from benchkit.stage.faults import HEALTHY
+from benchkit.stage.faults import HEALTHY, Fault
 from benchkit.stage.points import transistors_of
 from benchkit.stage.runs import Faults, Mask, Run, State, trimmer_travel
 
@@ -126,6 +126,7 @@ def solve_units(
     temperature = _given_temperatures(design, run.ambient_c, temperatures_c, units)
     if warm and start is not None and bool(start.converged.all()):
         temperature = {name: np.broadcast_to(v, units).copy() for name, v in start.temperatures_c.items()}
+    given = start is not None
     if start is None and units >= _LIFT_FROM:
         start = _nominal_start(design, replace(condition, when="cold"))
     first = start.solution if start is not None and bool(start.converged.all()) else None
@@ -142,11 +143,13 @@ def solve_units(
         final = state
         again = np.ones(units, np.bool_) if not healthy else ~in_reach
         if bool(again.any()):
-            final = run.fixed(travel, state.temperature, state.solution, warm)
+            beside = _beside(run, travel) if not healthy else None
+            final = run.fixed(travel, state.temperature, beside or state.solution, warm)
         place: Array | None = travel
     else:
         place = trimmer_travel(design, parameters, condition.trimmer if position is None else position, units)
-        final = run.fixed(place, temperature, first, warm)
+        beside = None if healthy or given else _beside(run, place)
+        final = run.fixed(place, temperature, beside or first, warm)
     points = run.readings(final)
     if loading != "none":
         ratios = loading_ratios(design, condition) if loading == "nominal" else run.own_ratios(place, final)
@@ -168,6 +171,21 @@ def solve_units(
 def units_in(parameters: Parameters) -> int:
     """Number of units in a parameter set (1 when nothing varies)."""
     return max((value.size for value in parameters.values()), default=1)
+
+
+def _beside(run: Run, travel: Array | None) -> dict[str, Array] | None:
+    """Start of faulty units: the nominal unit with each one's fault, at a typical travel; None when not worth it."""
+    if run.faults is None or isinstance(run.faults, Fault) or run.units < _LIFT_FROM:
+        return None
+    distinct = list(dict.fromkeys(run.faults))
+    if run.units < 4 * len(distinct):
+        return None
+    pilots = Run(run.design, nominal(run.design), replace(run.condition, when="cold"), distinct, len(distinct), None)
+    temperature = _given_temperatures(run.design, run.ambient_c, None, len(distinct))
+    middle = None if travel is None else np.full(len(distinct), np.median(travel))
+    solution = pilots.fixed(middle, temperature, None, False).solution
+    number = {fault: index for index, fault in enumerate(distinct)}
+    return run.lifted(solution, np.array([number[fault] for fault in run.faults], dtype=np.intp))
 
 
 @lru_cache(maxsize=256)

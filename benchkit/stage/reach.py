@@ -16,7 +16,7 @@ from benchkit.stage.conditions import Condition
 from benchkit.stage.design import Design, target_drop_v
 from benchkit.stage.draws import Array, Parameters, draw, nominal, seeds
 from benchkit.stage.faults import Fault
-from benchkit.stage.operate import solve_units
+from benchkit.stage.operate import Solved, solve_units
 from benchkit.stage.runs import Mask
 
 AUTHORITY_UNITS = 400
@@ -98,10 +98,7 @@ def authority(design: Design, units: int = AUTHORITY_UNITS, seed: int = 0) -> Au
     if trimmer is None:
         raise ModelError(f"{design.name} has no trimmer", "a trimmer, where its authority is asked for")
     condition = full_rails(design)
-    unit = solve_units(design, nominal(design), condition, loading="none")
-    if unit.unclipped is None or not unit.converged[0]:
-        raise ModelError(f"{design.name} has no operating point at its target", "one", "Check the design file")
-    travel = float(unit.unclipped[0])
+    unit, travel = _nominal_travel(design)
     drawn = solve_units(design, draw(design, units, seeds("limits", seed)), condition, start=unit, loading="none")
     assert drawn.unclipped is not None
     low, high = AUTHORITY_TRAVEL
@@ -122,6 +119,14 @@ def authority(design: Design, units: int = AUTHORITY_UNITS, seed: int = 0) -> Au
     )
 
 
+def _nominal_travel(design: Design) -> tuple[Solved, float]:
+    """Nominal unit at the target, and the travel that it takes, outside 0..1 when out of reach."""
+    unit = solve_units(design, nominal(design), full_rails(design), loading="none")
+    if unit.unclipped is None or (not unit.converged[0] and bool(unit.in_reach[0])):
+        raise ModelError(f"{design.name} has no operating point at its target", "one", "Check the design file")
+    return unit, float(unit.unclipped[0])
+
+
 def check_target(design: Design) -> list[Finding]:
     """Look whether the design's target can be met.
 
@@ -139,26 +144,15 @@ def check_target(design: Design) -> list[Finding]:
     drop_v = target_drop_v(design)
     if design.spreader.trimmer is None:
         return _fixed_bias(design, key, drop_v)
+    findings = []
     try:
+        _, travel = _nominal_travel(design)
+        if not 0.0 <= travel <= 1.0:
+            return [_out_of_reach(design, key, drop_v)]
         found = authority(design)
     except ModelError as error:
         return [Finding(key=key, came=error.came, expected="an operating point", next_step=_LOOK, fatal=True)]
-    findings = []
-    if not 0.0 <= found.nominal_travel <= 1.0:
-        ends = [
-            float(solve_units(design, nominal(design), full_rails(design, trimmer=end)).points["emitter.upper.1"][0])
-            for end in ("least", "most")
-        ]
-        findings.append(
-            Finding(
-                key=key,
-                came=f"a drop of {show(drop_v, 'V')} is out of the trimmer's reach in the nominal unit",
-                expected=f"a target between {show(ends[0], 'V')} and {show(ends[1], 'V')}",
-                next_step=_LOOK,
-                fatal=True,
-            )
-        )
-    elif found.share < LEAST_AUTHORITY:
+    if found.share < LEAST_AUTHORITY:
         findings.append(
             Finding(
                 key="spreader.trimmer",
@@ -180,6 +174,20 @@ def check_target(design: Design) -> list[Finding]:
             )
         )
     return findings
+
+
+def _out_of_reach(design: Design, key: str, drop_v: float) -> Finding:
+    ends_v = []
+    for end in ("least", "most"):
+        solved = solve_units(design, nominal(design), full_rails(design, trimmer=end, when="cold"), loading="none")
+        ends_v.append(float(solved.points["emitter.pair.1"][0]) / 2.0)
+    return Finding(
+        key=key,
+        came=f"a drop of {show(drop_v, 'V')} is out of the trimmer's reach in the nominal unit",
+        expected=f"a target within its travel (cold, it goes from {show(ends_v[0], 'V')} to {show(ends_v[1], 'V')})",
+        next_step=_LOOK,
+        fatal=True,
+    )
 
 
 _LOOK = "Look at the spreader's resistors, its trimmer and the target in the design file"

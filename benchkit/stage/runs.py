@@ -110,13 +110,36 @@ class Run:
             return np.asarray(rest.volts or 0.0)
         return np.asarray(self.negative_v + rest.share * (self.positive_v - self.negative_v))
 
-    def travel(self, section_ohm: Array) -> Array:
-        """Travel at which the trimmer (with arm "between": its upper section) has a resistance."""
+    def travel(self, found_ohm: Array) -> Array:
+        """Travel at which a trimmer in one arm has a resistance, outside 0..1 when it never has.
+
+        A negative resistance that leaves the arm positive asks for less than none. One that takes the whole arm below
+        zero has passed through infinity: it asks for more than any.
+        """
         trimmer = self.design.spreader.trimmer
         assert trimmer is not None
         end_ohm = trimmer.end_resistance_ohm
-        share = (section_ohm - end_ohm) / (self.parameters["spreader.trimmer.track"] - 2.0 * end_ohm)
+        share = (found_ohm - end_ohm) / (self.parameters["spreader.trimmer.track"] - 2.0 * end_ohm)
+        share = np.where(found_ohm <= -self.parameters[f"spreader.{trimmer.arm}"], np.inf, share)
         return np.asarray(1.0 - share if trimmer.arm == "lower" else share)
+
+    def divided(self, solution: Solution, found_ohm: Array, values: dict[str, Array]) -> Array:
+        """Travel of a trimmer that divides, from a solution whose upper section was free.
+
+        Voltages across the arms and the base current hardly depend on how the arms' sum T is divided, so V_U/R_U -
+        V_L/R_L = I_B with R_U + R_L = T is a quadratic equation for R_U.
+        """
+        trimmer = self.design.spreader.trimmer
+        assert trimmer is not None
+        between = self.netlist().between
+        upper_v, lower_v = (np.abs(solution.between(*between[f"spread.{arm}"])) for arm in ("upper", "lower"))
+        end_ohm, track_ohm = trimmer.end_resistance_ohm, values["spreader.trimmer.track"]
+        lower_ohm = values["spreader.lower"] + values["spreader.trimmer.lower"]
+        base_a = upper_v / (values["spreader.upper"] + found_ohm) - lower_v / lower_ohm
+        total_ohm = values["spreader.upper"] + values["spreader.lower"] + track_ohm
+        middle = upper_v + lower_v + base_a * total_ohm
+        upper_ohm = 2.0 * upper_v * total_ohm / (middle + np.sqrt(middle**2 - 4.0 * base_a * upper_v * total_ohm))
+        return np.asarray((upper_ohm - values["spreader.upper"] - end_ohm) / (track_ohm - 2.0 * end_ohm))
 
     def solve(self, values: dict[str, Array], start: Start, *, find: bool = False) -> Solution:
         """Solve the circuit from a start of one unit, of all units, or from rest."""
@@ -125,16 +148,26 @@ class Run:
         inner = [node for node in circuit.netlist.nodes() if not node.startswith("rail")]
         first = start
         if isinstance(start, Solution) and start.units == 1 and self.units > 1:
-            # One unit's solution, lifted to where each unit's output will be: a servo has no slope beside that place.
-            names = start.plan.names
-            shift = {name: 0.0 if name.startswith("rail") else rest_v - start.voltage("output") for name in names}
-            first = {name: np.asarray(start.x[k] + shift[name]) for k, name in enumerate(names)}
-            if self.positive_v.size > 1:
-                first |= {"rail+": self.positive_v, "rail-": self.negative_v}
+            first = self.lifted(start, np.zeros(self.units, dtype=np.intp))
         chosen = {key: value for key, value in values.items() if key in circuit.keys}
         return circuit.solve(chosen, self.units, first, dict.fromkeys(inner, rest_v))
 
-    def fixed(self, travel: Array | None, temperature: dict[str, Array], start: Solution | None, warm: bool) -> State:
+    def lifted(self, pilots: Solution, whose: Index) -> dict[str, Array]:
+        """Start of every unit from one of some solved ones, moved to where its own output will be.
+
+        A servo holds each unit's output at its own offset, and has no slope to find the way from another one's.
+        """
+        servo = self.design.feed.lower.kind == "servo"
+        offset_v = self.parameters["output.offset"] if servo else np.zeros(())
+        start: dict[str, Array] = {}
+        for name, row in zip(pilots.plan.names, pilots.x, strict=True):
+            held = name.startswith(("rail", "heatsink"))
+            start[name] = row[whose] + (0.0 if held else offset_v)
+        if self.positive_v.size > 1:
+            start |= {"rail+": self.positive_v, "rail-": self.negative_v}
+        return start
+
+    def fixed(self, travel: Array | None, temperature: dict[str, Array], start: Start, warm: bool) -> State:
         """Solve with the trimmer at a travel, faults included."""
 
         def once(run: Run, which: Index, at: dict[str, Array], previous: Start) -> tuple[Solution, Array]:
@@ -146,15 +179,13 @@ class Run:
 
         return self._settle(once, temperature, start, warm)
 
-    def find_trimmer(self, temperature: dict[str, Array], start: Solution | None, warm: bool) -> State:
+    def find_trimmer(self, temperature: dict[str, Array], start: Start, warm: bool) -> State:
         """Solve healthy units for the trimmer that meets the target."""
         drop_v = 2.0 * target_drop_v(self.design) * self.condition.target_share
         trimmer = self.design.spreader.trimmer
         assert trimmer is not None
         between = trimmer.arm == "between"
         section = "spreader.trimmer.upper" if between else "spreader.trimmer"
-        # A negative conductance asks for more than infinite resistance: out of reach at that end.
-        beyond = -np.inf if trimmer.arm == "lower" else np.inf
 
         def once(run: Run, which: Index, at: dict[str, Array], previous: Start) -> tuple[Solution, Array]:
             values = run.values(at)
@@ -162,12 +193,12 @@ class Run:
             travel = np.full(run.units, 0.5)
             for _ in range(_ROUNDS_BETWEEN if between else 1):
                 if between:
-                    set_trimmer(run.design, values, np.clip(travel, -2.0, 2.0))
+                    set_trimmer(run.design, values, np.clip(travel, 0.0, 1.0))
                     del values["spreader.trimmer.upper"]
                 solution = previous = run.solve(values, previous, find=True)
-                conductance = solution.conductance(section)
-                with np.errstate(divide="ignore"):
-                    travel = np.where(conductance <= 0.0, beyond, run.travel(1.0 / conductance))
+                with np.errstate(divide="ignore", invalid="ignore"):
+                    found_ohm = 1.0 / solution.conductance(section)
+                    travel = run.divided(solution, found_ohm, values) if between else run.travel(found_ohm)
             return solution, travel
 
         return self._settle(once, temperature, start, warm)
@@ -181,7 +212,7 @@ class Run:
         few = take(self.parameters, which)
         return Run(self.design, few, self.condition, faults, len(which), (rails[0], rails[1]))
 
-    def _settle(self, once: _Once, temperature: dict[str, Array], start: Solution | None, warm: bool) -> State:
+    def _settle(self, once: _Once, temperature: dict[str, Array], start: Start, warm: bool) -> State:
         """Solve, and with `warm` heat and solve again until the junctions are at rest.
 
         Units that are at rest leave; those that stay are solved on, and at the end all are solved once more.

@@ -40,12 +40,16 @@ from benchkit.ui.screens.start import StartScreen
 from benchkit.ui.screens.walk import WalkScreen
 from benchkit.ui.sheet import SHEET
 from benchkit.ui.widgets.answer import GUARD_S
+from benchkit.ui.widgets.scroll_bar import use_whole_cells
 
 HEARTBEAT_S: Final = 0.2
 PAINT_S: Final = 0.1
 FLASH_S: Final = 0.7
 CLOSE_WITHIN_S: Final = 3.0
 """How long leaving waits for the session to switch off and close its record (s)."""
+
+CLOSE_WHEN_TOLD_S: Final = 1.0
+"""The same when told to go from outside: well inside the hard exit (s)."""
 
 STOPPED: Final = 4
 OWN_ERROR: Final = 5
@@ -116,6 +120,7 @@ class BenchApp(App[int]):
         guard_s: float = GUARD_S,
     ) -> None:
         super().__init__(ansi_color=True if os.environ.get("NO_COLOR") is not None else None)
+        use_whole_cells()
         self.register_theme(_THEME)
         self.theme = _THEME.name
         self._start = start
@@ -317,7 +322,7 @@ class BenchApp(App[int]):
         ended = self._ending is not None or (self._view is not None and self._view.exit_status is not None)
         self._run(self._leave("the operator left", self._status_of_end() if ended else STOPPED))
 
-    async def _leave(self, reason: str, status: int) -> None:
+    async def _leave(self, reason: str, status: int, within_s: float | None = None) -> None:
         """Off first, then give the session a moment to close its record, then go."""
         if self._leaving:
             return
@@ -326,10 +331,10 @@ class BenchApp(App[int]):
             self.call_off(reason)
         task = self._walk_task
         if task is not None and not task.done():
-            _, waiting = await asyncio.wait({task}, timeout=CLOSE_WITHIN_S)
+            _, waiting = await asyncio.wait({task}, timeout=CLOSE_WITHIN_S if within_s is None else within_s)
             if waiting:
                 task.cancel()
-                await asyncio.wait({task}, timeout=1.0)
+                await asyncio.wait({task}, timeout=0.3)
         self.exit(status)
 
     def leave_from_outside(self, reason: str) -> None:
@@ -337,7 +342,7 @@ class BenchApp(App[int]):
         self.last_words = self.last_words or f"Stopped from outside ({reason}); the supply was told to switch off."
         loop = self._loop
         if loop is not None:
-            loop.call_soon_threadsafe(self.exit, STOPPED)
+            loop.call_soon_threadsafe(lambda: self._run(self._leave("", STOPPED, within_s=CLOSE_WHEN_TOLD_S)))
 
     def _handle_exception(self, error: Exception) -> None:
         """Off first, then one plain sentence and a log; nothing that could fail in its turn."""

@@ -253,7 +253,7 @@ def _finish(runner: Runner, run: Callable[[], Awaitable[Closed]]) -> int:
         click.echo(f"benchkit: {error}", err=True)
         _say_record(runner)
         return error.exit_status
-    except BenchkitError:
+    except (BenchkitError, click.Abort):
         _say_record(runner)
         raise
     words = f"The walk is closed: {closed.verdict.upper()}."

@@ -1,22 +1,29 @@
 """Plain mode: the same walk in lines of text, for any terminal, a screen reader or a pipe.
 
-Each question is numbered answers and a prompt.  ``off`` at any prompt, or Ctrl+C at any moment, switches the supply
-off.
+Each question is numbered answers and a prompt.  The word ``off`` and Enter, or Ctrl+C, switch the supply off at any
+moment, whether anything is asked or not.  So does the end of the input; after that nothing can be asked any more, and
+the walk is left where it is.
 """
 
 from __future__ import annotations
 
 import asyncio
+import math
 import sys
 import textwrap
 import threading
 from collections.abc import Callable
 from typing import TextIO
 
+import click
+
 from benchkit.procedure.actions import Question
 from benchkit.session.front import Reply, View
 
 WIDTH = 78
+
+END_S = 2.0
+"""So long is waited for the walk to take the question back when the input has ended, s."""
 
 
 class PlainFront:
@@ -42,6 +49,7 @@ class PlainFront:
         self._message = ""
         self._view: View | None = None
         self._lines: asyncio.Queue[str | None] = asyncio.Queue()
+        self._ended = False
         self._loop = asyncio.get_running_loop()
         threading.Thread(target=self._listen, name="benchkit-lines", daemon=True).start()
 
@@ -68,7 +76,15 @@ class PlainFront:
             self._print(f"  ! {view.message}")
 
     async def ask(self, question: Question, refused: str = "") -> Reply:
-        """Print the question and read one line."""
+        """Print the question and read one line.
+
+        Raises
+        ------
+        click.Abort
+            When the input has ended: nobody is there who could answer.
+        """
+        if self._ended and self._lines.empty():
+            raise click.Abort
         if refused:
             self._print(f"  ! {refused}")
         else:
@@ -79,13 +95,12 @@ class PlainFront:
             line = await self._lines.get()
             if line is None:
                 self._off_now("the input of the terminal has ended")
-                await asyncio.sleep(3600)
-            assert line is not None
-            text = line.strip()
-            if text.lower() == "off":
+                await asyncio.sleep(END_S)
+                raise click.Abort
+            if _is_off(line):
                 self._off_now("the operator typed off")
-                await asyncio.sleep(3600)
-            reply = self._reply(question, text)
+                continue
+            reply = self._reply(question, line.strip())
             if reply is not None:
                 return reply
             self._print("  ! Answer with a number, or type off to switch the supply off.")
@@ -127,9 +142,10 @@ class PlainFront:
             return Reply(choice="yes", text="yes")
         if question.kind == "trim" and first[:1] in ("+", "-") and self._view is not None:
             try:
-                return Reply(choice="turn", turns=float(first))
+                turns = float(first)
             except ValueError:
                 return None
+            return Reply(choice="turn", turns=turns) if math.isfinite(turns) else None
         if not text and question.kind in ("tell", "probes", "trim"):
             if question.kind == "trim":
                 return Reply(choice="turn", turns=0.0) if self._view and self._view.kind == "rehearsal" else None
@@ -155,11 +171,22 @@ class PlainFront:
             except (OSError, ValueError):
                 line = ""
             try:
-                self._loop.call_soon_threadsafe(self._lines.put_nowait, line or None)
+                self._loop.call_soon_threadsafe(self._take, line)
             except RuntimeError:
                 return
             if not line:
                 return
+
+    def _take(self, line: str) -> None:
+        """Take a line as it comes, asked for or not; "" is the end of the input.
+
+        Lines of a pipe keep their order; at a terminal, off overtakes whatever was typed before it.
+        """
+        if _is_off(line) and (self._lines.empty() or self._source.isatty()):
+            self._off_now("the operator typed off")
+            return
+        self._ended = self._ended or not line
+        self._lines.put_nowait(line or None)
 
     def _wrapped(self, text: str, indent: str) -> None:
         if text:
@@ -168,6 +195,10 @@ class PlainFront:
     def _print(self, text: str) -> None:
         self._out.write(f"{text}\n")
         self._out.flush()
+
+
+def _is_off(line: str) -> bool:
+    return line.strip().lower() == "off"
 
 
 def _is_number_of(word: str, question: Question) -> bool:

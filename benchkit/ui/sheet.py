@@ -12,8 +12,9 @@ Screen {{ background: {GROUND}; color: {INK}; layout: vertical; overflow: hidden
 
 VerticalScroll {{ scrollbar-size-vertical: 1; scrollbar-color: {LINE}; scrollbar-background: {GROUND}; }}
 
-OffLine {{ dock: bottom; height: 2; padding: 0 1; background: {PANEL}; color: {INK}; }}
+OffLine {{ dock: bottom; height: auto; max-height: 3; padding: 0 1; background: {PANEL}; color: {INK}; }}
 OffLine Words {{ height: 1; width: 1fr; }}
+OffLine .off-second {{ height: auto; max-height: 2; }}
 OffLine.supply-on {{ background: {SUPPLY_COLOURS["on"]}; color: #000000; text-style: bold; }}
 OffLine.supply-unknown {{ background: {SUPPLY_COLOURS["unknown"]}; color: #000000; text-style: bold; }}
 OffLine.flash {{ text-style: reverse bold; }}
@@ -25,8 +26,8 @@ OffLine.flash {{ text-style: reverse bold; }}
 Page {{ height: 1fr; width: 1fr; }}
 
 Card {{ height: 1fr; padding: 0 1; }}
-.card-do {{ height: auto; padding: 0 2; border-left: outer {CARE}; margin-bottom: 1; max-width: 76; }}
-.card-do.waiting {{ border-left: outer {LINE}; }}
+.card-do {{ height: auto; padding: 0 2; border-left: thick {CARE}; margin-bottom: 1; max-width: 76; }}
+.card-do.waiting {{ border-left: thick {LINE}; }}
 .card-details {{ height: auto; padding: 0 1; max-width: 100; }}
 
 Outcome {{ height: auto; padding: 0 1; border-top: solid {LINE}; }}
@@ -36,6 +37,7 @@ Outcome {{ height: auto; padding: 0 1; border-top: solid {LINE}; }}
 .outcome-earlier {{ display: none; height: auto; margin-top: 1; }}
 
 Answer {{ height: auto; padding: 0 1; border-top: solid {LINE}; }}
+Answer {{ border-title-color: {CARE}; border-title-align: right; }}
 .answer-hint {{ height: auto; color: {INK}; }}
 .refused {{ color: {FAIL}; text-style: bold; }}
 Choices {{ height: auto; }}
@@ -51,12 +53,15 @@ Input:focus {{ background-tint: {STRONG} 6%; }}
 
 #trim .card {{ height: auto; max-height: 4; }}
 #trim .card-details {{ display: none; }}
+.card-details.empty {{ display: none; }}
 #trim .card-do {{ margin-bottom: 0; }}
-.trim-reading {{ margin: 1 2 0 2; width: 1fr; }}
-.trim-where {{ height: 1; padding: 0 1; margin-top: 1; }}
+.trim-where {{ height: 1; padding: 0 1; margin: 1 0; }}
+.trim-figures {{ layout: horizontal; height: 5; margin: 0 2; }}
+.trim-reading {{ width: 56; }}
 .trim-gauge {{ margin: 0 2; }}
-.trim-trend {{ height: 1fr; margin: 0 2; min-height: 0; }}
+.trim-trend {{ height: 1fr; width: 1fr; }}
 .trim-turns {{ height: 1; padding: 0 1; }}
+.walking .trim-turns {{ display: none; }}
 
 .summary-verdict {{ height: auto; padding: 0 1; margin-bottom: 1; }}
 .summary-scroll {{ height: 1fr; padding: 0 1; }}
@@ -64,7 +69,7 @@ Input:focus {{ background-tint: {STRONG} 6%; }}
 
 .start-body {{ height: 1fr; padding: 1 2 0 2; }}
 .start-title {{ height: auto; margin-bottom: 1; }}
-.start-deference {{ height: auto; border-left: outer {CARE}; padding: 0 2; margin-bottom: 1; max-width: 100; }}
+.start-deference {{ height: auto; border-left: thick {CARE}; padding: 0 2; margin-bottom: 1; max-width: 100; }}
 .start-facts {{ height: auto; max-width: 100; }}
 .start-entries {{ layout: grid; grid-size: 2 2; grid-columns: 22 1fr; grid-rows: 1 1; height: 2; margin: 0 2; }}
 .start-label {{ height: 1; color: {INK}; }}
@@ -77,31 +82,34 @@ LeaveScreen {{ background: {GROUND}; align: center middle; }}
 .leave-words {{ height: auto; margin-bottom: 1; }}
 
 .roomy .card-do {{ padding: 1 3; margin-bottom: 1; max-width: 100; background: {PANEL}; }}
-.roomy .walk-trail {{ height: auto; max-height: 3; margin-top: 1; }}
+.roomy .walk-trail {{ height: auto; max-height: 3; margin: 1 0; }}
 .roomy .outcome-earlier {{ display: block; }}
 .roomy .outcome-why {{ max-height: 4; }}
 .roomy .start-title {{ margin-top: 2; margin-bottom: 2; }}
 .roomy #trim .card {{ max-height: 7; }}
 .roomy #trim .card-details {{ display: block; }}
-.roomy .trim-where {{ margin-top: 2; }}
+.roomy .trim-figures {{ layout: vertical; height: 1fr; }}
+.roomy .trim-reading {{ width: 1fr; margin-bottom: 1; }}
 .roomy .trim-turns {{ margin-top: 1; }}
 
 .small .walk-head, .small .walk-trail, .small .walk-message {{ display: none; }}
+.small OffLine .off-second {{ max-height: 1; }}
 .small .card-do {{ margin-bottom: 0; padding: 0 1; }}
 .small Card, .small Outcome, .small Answer {{ padding: 0; }}
 .small .card-details {{ padding: 0; }}
 .small Outcome {{ border-top: none; }}
-.small .outcome-why {{ max-height: 1; }}
+.small .outcome-why {{ display: none; }}
 .small .outcome-gauge {{ margin: 0; }}
 .small Answer {{ border-top: none; }}
 .small .hold-title {{ border-top: none; margin: 0; padding: 0 1; height: 1; }}
 .small #hold {{ border-bottom: none; }}
 .small .deciding {{ margin-bottom: 0; }}
-.small .deciding .outcome-why {{ max-height: 1; margin-top: 0; }}
+.small .deciding .outcome-why {{ display: block; max-height: 1; margin-top: 0; }}
 .small #trim .card {{ display: none; }}
-.small .trim-reading {{ margin: 0; }}
-.small .trim-where {{ margin-top: 0; padding: 0; }}
-.small .trim-gauge {{ margin: 0; height: 2; }}
+.small .trim-figures {{ margin: 0; }}
+.small .trim-reading {{ width: 1fr; }}
+.small .trim-where {{ margin: 0; padding: 0; }}
+.small .trim-gauge {{ margin: 0; }}
 .small .trim-trend {{ display: none; }}
 .small .trim-turns {{ display: none; }}
 .small .summary-verdict {{ margin: 0; padding: 0; }}

@@ -12,6 +12,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from benchkit.circuit.netlist import Netlist, Transistor
+from benchkit.circuit.solve import compile_netlist
 
 Array = NDArray[np.float64]
 Values = dict[str, Any]
@@ -92,15 +93,10 @@ def values_of(
         "spreader.upper": 2200.0, "spreader.lower": 680.0, "trimmer": trimmer, "driver.resistor": 220.0,
         "stopper.upper": 4.7, "stopper.lower": 4.7, "re.upper": 0.22, "re.lower": 0.22, "load": 1e7,
     }  # fmt: skip
-    keys = set(netlist.elements)
-    values = {k: v for k, v in values.items() if k in keys or k.rpartition(".")[0] in keys}
-    if "feed.lower.max_a" not in values:
-        values["spreader.upper"] = 1500.0 if "driver.upper" not in keys else 2200.0
-    else:
-        for key in ("feed.upper", "feed.lower"):
-            values.pop(key)
-    if "driver.upper" not in keys:
+    keys = compile_netlist(netlist).keys
+    if "driver.resistor" not in keys:
         values["spreader.upper"] = 680.0
+    values = {k: v for k, v in values.items() if k in keys}
     for name in transistors(netlist):
         kind = SMALL if name == "spreader" else DRIVER if name.startswith("driver") else POWER
         values.update({f"{name}.{key}": float(number) for key, number in kind.items()})
@@ -116,13 +112,13 @@ def spread(values: Values, units: int, seed: int) -> dict[str, Array]:
     """Give every unit its own resistors (2 %), saturation currents and current gains."""
     rng = np.random.default_rng(seed)
     result = {key: np.full(units, float(value)) for key, value in values.items()}
-    for key, array in result.items():
+    for key in result:
         if key.endswith(".IS"):
-            array *= np.exp(rng.normal(0.0, 0.1, units))
+            result[key] *= np.exp(rng.normal(0.0, 0.1, units))
         elif key.endswith(".BF"):
-            array *= np.exp(rng.normal(0.0, 0.2, units))
+            result[key] *= np.exp(rng.normal(0.0, 0.2, units))
         elif "." not in key or key.split(".")[0] in ("re", "stopper") or key in ("spreader.upper", "spreader.lower"):
-            array *= rng.uniform(0.98, 1.02, units)
+            result[key] *= rng.uniform(0.98, 1.02, units)
     return result
 
 
@@ -175,10 +171,35 @@ def faults(netlist: Netlist) -> dict[str, Callable[[dict[str, Array]], None]]:
 
         result[f"{t} reversed"] = reverse
     put("collector to heatsink", ["heatsink"], 0.05)
-    if "feed.upper" in netlist.elements and "feed.lower.max_a" in values_of(netlist):
+    if "feed.lower.max_a" in values_of(netlist):
         put("feed dead", ["feed.upper.amps"], 1e-9)
         put("feed stuck high", ["feed.upper.amps"], 0.1)
         put("servo dead", ["feed.lower.max_a"], 1e-9)
         put("servo stuck high", ["feed.lower.rest_v"], -1e3)
         put("servo stuck low", ["feed.lower.rest_v"], 1e3)
     return result
+
+
+def one_fault_each(netlist: Netlist, units: int, seed: int) -> tuple[dict[str, Array], list[str]]:
+    """Values of units that each have one random fault, random rails, current limit, temperature and trimmer."""
+    rng = np.random.default_rng(seed)
+    values = spread(values_of(netlist), units, seed)
+    # every key that a fault sets needs a value of its own in every unit
+    for name in transistors(netlist):
+        defaults = {"RB": 0.0, "RC": 0.0, "RE": 0.0, "VAR": np.inf, "IKR": np.inf, "ISC": 0.0, "NC": 2.0}
+        for key, default in defaults.items():
+            values.setdefault(f"{name}.{key}", np.full(units, default))
+        values[f"{name}.kelvin"] = rng.uniform(288.15, 348.15, units)
+    values["rail+.volts"] = rng.choice([5.0, 15.0, 35.0], units)
+    values["rail-.volts"] = values["rail+.volts"].copy()
+    values["rail+.limit_a"] = rng.choice([0.05, 0.1, 0.5, 3.0], units)
+    values["rail-.limit_a"] = values["rail+.limit_a"].copy()
+    values["trimmer"] = rng.uniform(2.0, 500.0, units)
+    table = faults(netlist)
+    names = [list(table)[k] for k in rng.integers(0, len(table), units)]
+    for unit, name in enumerate(names):
+        single = {key: array[unit : unit + 1].copy() for key, array in values.items()}
+        table[name](single)
+        for key, array in single.items():
+            values[key][unit] = array[0]
+    return values, names

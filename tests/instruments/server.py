@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import contextlib
 import re
 import socket
 import struct
@@ -54,19 +55,15 @@ class ScpiServer:
             for connection in self._open:
                 if reset:
                     connection.setsockopt(socket.SOL_SOCKET, socket.SO_LINGER, struct.pack("ii", 1, 0))
-                try:
+                with contextlib.suppress(OSError):
                     connection.shutdown(socket.SHUT_RDWR) if not reset else None
-                except OSError:
-                    pass
                 connection.close()
             self._open.clear()
 
     def close(self) -> None:
         self._closing = True
-        try:
+        with contextlib.suppress(OSError):
             self._listener.shutdown(socket.SHUT_RDWR)
-        except OSError:
-            pass
         self._listener.close()
         self.drop_connections()
 

@@ -80,12 +80,3 @@ def test_the_frame_has_numbers_as_numbers_and_times_with_a_zone(tmp_path: Path) 
     assert str(frame["value"].dtype) == "float64"
     assert str(frame["at"].dt.tz) == "UTC"
     assert frame["value"].isna().tolist() == [True, False]
-
-
-def test_files_are_tabulated_by_their_names(tmp_path: Path) -> None:
-    paths = [write(tmp_path / "a.jsonl", closed(good_events())), write(tmp_path / "b.jsonl", overridden_events())]
-    assert table.as_csv(paths) == table.csv_text([load_summary(path) for path in paths])
-    assert [json.loads(line)["record"] for line in table.as_json(paths).splitlines()] == ["a.jsonl"] * 2 + [
-        "b.jsonl"
-    ] * 3
-    assert table.as_json(paths).endswith("}\n")

@@ -19,7 +19,7 @@ def _whole(tmp_path: Path) -> Path:
 
 
 def test_a_finished_walk_is_whole(whole: Path) -> None:
-    record = verify.verify(whole)
+    record = verify.load(whole)
     assert (record.status, record.word, record.line) == (0, "whole", 12)
     assert [kept.event.name for kept in record.kept][:2] == ["walk opened", "bench found"]
     assert record.kept[0].event == opened()
@@ -28,14 +28,14 @@ def test_a_finished_walk_is_whole(whole: Path) -> None:
 def test_an_unfinished_walk_is_told_from_a_torn_and_a_broken_one(whole: Path) -> None:
     lines = whole.read_bytes().splitlines(keepends=True)
     whole.write_bytes(b"".join(lines[:-1]))
-    record = verify.verify(whole)
+    record = verify.load(whole)
     assert (record.status, record.line, len(record.kept)) == (1, 11, 11)
     whole.write_bytes(b"".join(lines[:-1]) + lines[-1][:40])
-    record = verify.verify(whole)
+    record = verify.load(whole)
     assert (record.status, record.line, len(record.kept)) == (1, 12, 11)
     assert record.torn == lines[-1][:40].decode()
     whole.write_bytes(b"".join(lines[:4] + lines[5:]))
-    record = verify.verify(whole)
+    record = verify.load(whole)
     assert (record.status, record.line, len(record.kept)) == (2, 5, 4)
     assert "5" in record.message
 
@@ -48,7 +48,7 @@ def test_any_changed_byte_of_a_closed_record_is_found_and_its_line_named(whole: 
     other = data.draw(st.integers(0, 255).filter(lambda byte: byte != original[place]))
     changed = whole.with_name("changed.jsonl")
     changed.write_bytes(original[:place] + bytes([other]) + original[place + 1 :])
-    record = verify.verify(changed)
+    record = verify.load(changed)
     line = original[:place].count(b"\n") + 1
     # the last byte is the last line feed: without it the last line is torn, unless something else stands there
     assert record.status in (1, 2)
@@ -72,7 +72,7 @@ def test_lines_in_a_right_chain_that_make_no_sense_are_found(tmp_path: Path) -> 
         with Writer.create(path) as writer:
             for event, payload in events:
                 writer.append(event, payload, 0.0, "2031-04-05T06:07:08Z")
-        record = verify.verify(path)
+        record = verify.load(path)
         assert (record.status, record.line) == (2, line), name
         assert word in record.message, name
         assert len(record.kept) == line - 1
@@ -86,14 +86,14 @@ def test_an_impossible_reading_is_a_broken_record_and_no_crash(tmp_path: Path) -
     with Writer.create(path) as writer:
         writer.append("walk opened", to_payload(opened()), 0.0, "2031-04-05T06:07:08Z")
         writer.append("reading taken", {"item": "a.b", "reading": reading}, 0.0, "2031-04-05T06:07:08Z")
-    record = verify.verify(path)
+    record = verify.load(path)
     assert (record.status, record.line) == (2, 2)
 
 
 def test_an_empty_file_is_unfinished(tmp_path: Path) -> None:
     path = tmp_path / "empty.jsonl"
     path.write_bytes(b"")
-    record = verify.verify(path)
+    record = verify.load(path)
     assert record.status == 1
     assert "no whole line" in record.message
 
@@ -101,25 +101,25 @@ def test_an_empty_file_is_unfinished(tmp_path: Path) -> None:
 def test_what_is_no_record_is_broken_and_what_is_no_file_is_refused(tmp_path: Path) -> None:
     path = tmp_path / "notes.txt"
     path.write_text("hello\nworld\n")
-    assert verify.verify(path).status == 2
+    assert verify.load(path).status == 2
     with pytest.raises(RecordError, match="can't be read"):
-        verify.verify(tmp_path / "missing.jsonl")
+        verify.load(tmp_path / "missing.jsonl")
     with pytest.raises(RecordError, match="it is a folder"):
-        verify.verify(tmp_path)
+        verify.load(tmp_path)
 
 
 def test_the_worst_of_several_counts(whole: Path, tmp_path: Path) -> None:
     unfinished = write(tmp_path / "u.jsonl", good_events())
-    records = [verify.verify(whole), verify.verify(unfinished)]
+    records = [verify.load(whole), verify.load(unfinished)]
     assert verify.worst(records) == 1
     assert verify.worst(records[:1]) == 0
     assert verify.worst([]) == 0
 
 
 def test_the_finding_as_text_and_for_a_program(whole: Path) -> None:
-    record = verify.verify(whole)
-    assert verify.as_text(whole, record) == f"{whole}: whole: The record is whole and closed: 12 lines."
-    assert verify.as_json(whole, record) == {
+    record = verify.load(whole)
+    assert record.as_text() == f"{whole}: whole: The record is whole and closed: 12 lines."
+    assert record.as_json() == {
         "file": str(whole),
         "status": 0,
         "word": "whole",

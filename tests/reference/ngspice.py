@@ -16,7 +16,6 @@ import re
 import shutil
 import subprocess
 import tempfile
-import time
 from collections.abc import Mapping, Sequence
 from pathlib import Path
 
@@ -39,7 +38,7 @@ COMMITTED = Path(__file__).parent / "data" / "ngspice.json"
 used_committed: list[str] = []
 """Digests of decks whose committed results stood in for a run."""
 
-_OPTIONS = ".options reltol=1e-9 abstol=1e-15 vntol=1e-12 gmin=1e-12 itl1=2000 itl2=2000 numdgt=15"
+OPTIONS = ".options reltol=1e-9 abstol=1e-15 vntol=1e-12 gmin=1e-12 itl1=2000 itl2=2000 numdgt=15"
 
 
 def installed() -> bool:
@@ -48,11 +47,20 @@ def installed() -> bool:
 
 
 def deck(
-    netlist: Netlist, copies: Sequence[Mapping[str, float]], unknown_amps: Mapping[str, float] | None = None
+    netlist: Netlist,
+    copies: Sequence[Mapping[str, float]],
+    unknown_amps: Mapping[str, float] | None = None,
+    start: Mapping[str, float] | None = None,
 ) -> tuple[str, dict[str, str]]:
     """Write copies of a netlist, each with its own values, as one deck.
 
-    ``unknown_amps`` holds the current to feed in for each unknown conductance, as our solution found it.
+    Parameters
+    ----------
+    unknown_amps : mapping
+        The current to feed in for each unknown conductance, as our solution found it.
+    start : mapping
+        Where ngspice's search starts, by node (10 mV steps): hard faults are beyond it otherwise. A start is let go
+        before the end; the solution is ngspice's own. Supply terminals start at their set voltage in any case.
 
     Returns
     -------
@@ -60,14 +68,27 @@ def deck(
         The text; and node name to ngspice's node name without the copy's number.
     """
     names = {node: f"n{k}" for k, node in enumerate(netlist.nodes())}
-    lines = ["circuit and values by our tests", _OPTIONS]
+    lines = ["circuit and values by our tests", OPTIONS]
     for number, values in enumerate(copies):
         lines += _copy(netlist, values, names, number, unknown_amps or {})
+        begin = _set_voltages(netlist, values) | dict(start or {})
+        lines += [f".nodeset v({names[node]}_{number})={volts:.2f}" for node, volts in begin.items() if node in names]
     # the control section prints every node of every copy in 16 digits
     lines += [".control", "set numdgt=16", "set width=200", "op"]
     lines += [f"print v({name}_{k})" for k in range(len(copies)) for name in names.values()]
     lines += [".endc", ".end"]
     return "\n".join(lines) + "\n", names
+
+
+def _set_voltages(netlist: Netlist, values: Mapping[str, float]) -> dict[str, float]:
+    supplies = [e for e in netlist.elements.values() if isinstance(e, Supply)]
+    plus = {e.plus: values[f"{e.name}.volts"] for e in supplies if e.minus == GROUND}
+    return plus | {e.minus: -values[f"{e.name}.volts"] for e in supplies if e.plus == GROUND}
+
+
+def _number(value: float) -> str:
+    """Twelve digits, so that another machine's last digit makes no other deck."""
+    return f"{float(value):.12g}"
 
 
 def _copy(
@@ -91,33 +112,39 @@ def _copy(
     for k, e in enumerate(netlist.elements.values()):
         tag = f"{k}_{number}"
         if isinstance(e, Resistor):
-            lines.append(f"R{tag} {at(e.a)} {at(e.b)} {max(values[e.name], 1e-3)!r}")
+            lines.append(f"R{tag} {at(e.a)} {at(e.b)} {_number(max(values[e.name], 1e-3))}")
         elif isinstance(e, Transistor):
             lines += _transistor(e, values, tag, (at(e.collector), at(e.base), at(e.emitter)))
         elif isinstance(e, Supply):
             limit, lack = (
                 float(values[f"{e.name}.limit_a"]),
-                f"({float(values[f'{e.name}.volts'])!r}-{volts(e.plus, e.minus)})",
+                f"({_number(values[f'{e.name}.volts'])}-{volts(e.plus, e.minus)})",
             )
-            lines.append(f"B{tag} {at(e.minus)} {at(e.plus)} I={limit!r}*tanh({lack}/{limit * 10e-3!r})+1e-6*{lack}")
+            lines.append(
+                f"B{tag} {at(e.minus)} {at(e.plus)} "
+                f"I={_number(limit)}*tanh({lack}/{_number(limit * 10e-3)})+1e-6*{lack}"
+            )
         elif isinstance(e, Source):
             amps = float(values[f"{e.name}.amps"])
             lines.append(
-                f"B{tag} {at(e.from_node)} {at(e.to_node)} I={amps!r}*tanh({volts(e.from_node, e.to_node)}/0.3)"
+                f"B{tag} {at(e.from_node)} {at(e.to_node)} I={_number(amps)}*tanh({volts(e.from_node, e.to_node)}/0.3)"
             )
         elif isinstance(e, Servo):
             sign = "-" if e.senses == "to" else ""
-            error = f"({sign}({volts(e.sense, e.reference)}-({float(values[f'{e.name}.rest_v'])!r}))/10e-6)"
+            error = f"({sign}({volts(e.sense, e.reference)}-({_number(values[f'{e.name}.rest_v'])}))/10e-6)"
             most = float(values[f"{e.name}.max_a"])
             lines.append(
                 f"B{tag} {at(e.from_node)} {at(e.to_node)} "
-                f"I={most!r}*0.5*(1+tanh({error}))*tanh({volts(e.from_node, e.to_node)}/0.3)"
+                f"I={_number(most)}*0.5*(1+tanh({error}))*tanh({volts(e.from_node, e.to_node)}/0.3)"
             )
         elif isinstance(e, Ohmmeter):
             amps, most = float(values[f"{e.name}.amps"]), float(values[f"{e.name}.compliance_v"])
-            lines.append(f"B{tag} {at(e.minus)} {at(e.plus)} I={amps!r}*tanh(({most!r}-{volts(e.plus, e.minus)})/0.05)")
+            lines.append(
+                f"B{tag} {at(e.minus)} {at(e.plus)} "
+                f"I={_number(amps)}*tanh(({_number(most)}-{volts(e.plus, e.minus)})/0.05)"
+            )
         elif isinstance(e, Unknown):
-            lines.append(f"I{tag} {at(e.a)} {at(e.b)} {float(unknown_amps[e.name])!r}")
+            lines.append(f"I{tag} {at(e.a)} {at(e.b)} {_number(unknown_amps[e.name])}")
     lines += [f"Rleak{k}_{number} {at(node)} 0 1e12" for k, node in enumerate(names)]
     return lines
 
@@ -126,15 +153,25 @@ def _transistor(e: Transistor, values: Mapping[str, float], tag: str, nodes: tup
     given = {key: float(values[f"{e.name}.{key}"]) for key in TRANSISTOR_DEFAULTS if f"{e.name}.{key}" in values}
     kind = "PNP" if given.pop("polarity", 1.0) < 0 else "NPN"
     celsius = given.pop("kelvin", 300.15) - 273.15
-    text = " ".join(f"{key}={value!r}" for key, value in given.items() if abs(value) != float("inf"))
-    return [f"Q{tag} {' '.join(nodes)} M{tag} temp={celsius!r}", f".model M{tag} {kind}({text})"]
+    text = " ".join(f"{key}={_number(value)}" for key, value in given.items() if abs(value) != float("inf"))
+    return [f"Q{tag} {' '.join(nodes)} M{tag} temp={_number(celsius)}", f".model M{tag} {kind}({text})"]
 
 
 def run_deck(
-    netlist: Netlist, values: Mapping[str, float], unknown_amps: Mapping[str, float] | None = None
+    netlist: Netlist,
+    values: Mapping[str, float],
+    unknown_amps: Mapping[str, float] | None = None,
+    start: Mapping[str, float] | None = None,
 ) -> dict[str, float]:
-    """Node voltages [V] of one unit by node name, by ngspice or from its committed results."""
+    """Node voltages [V] of one unit by node name, by ngspice or from its committed results.
+
+    ``start`` holds node voltages for ngspice's first iterations (``.nodeset``, rounded to 1 mV): it forces nothing, but
+    without it ngspice doesn't find into the narrow knee of a servo.
+    """
     text, names = deck(netlist, [values], unknown_amps)
+    if start is not None:
+        hints = "".join(f".nodeset v({names[node]}_0)={volts:.3f}\n" for node, volts in start.items())
+        text = text.replace(".control\n", hints + ".control\n", 1)
     digest = hashlib.sha256(text.encode()).hexdigest()
     committed: dict[str, dict[str, float]] = json.loads(COMMITTED.read_text()) if COMMITTED.exists() else {}
     if not installed():
@@ -151,16 +188,22 @@ def run_deck(
     return result
 
 
+def _child_seconds() -> float:
+    """Processor time [s] of all programs that were run and have ended."""
+    spent = os.times()
+    return spent.children_user + spent.children_system
+
+
 def run_text(text: str) -> tuple[dict[str, float], float]:
-    """Run a deck in batch; every printed node's voltage [V] by ngspice's name, and the seconds that it took."""
+    """Run a deck in batch; every printed node's voltage [V] by ngspice's name, and the processor seconds that it took."""
     with tempfile.TemporaryDirectory() as folder:
         path = Path(folder) / "deck.cir"
         path.write_text(text)
-        begun = time.perf_counter()
+        begun = _child_seconds()
         done = subprocess.run(
             ["ngspice", "-b", path.name], cwd=folder, capture_output=True, text=True, timeout=600, check=False
         )
-        seconds = time.perf_counter() - begun
+        seconds = _child_seconds() - begun
     found = {m[1]: float(m[2]) for m in re.finditer(r"^v\((\w+)\) = (\S+)\s*$", done.stdout, re.MULTILINE)}
     wanted = text.count("\nprint v(")
     trouble = re.search(

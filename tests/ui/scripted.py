@@ -40,7 +40,9 @@ def sections(current: int, verdicts: tuple[Verdict | None, ...] = ()) -> tuple[S
     )
 
 
-OFF = SupplyView(energised="off", words="Output off, confirmed; 0.0 V and 0.0 V at its terminals.", by_hand=False, state=None)
+OFF = SupplyView(
+    energised="off", words="Output off, confirmed; 0.0 V and 0.0 V at its terminals.", by_hand=False, state=None
+)
 ON = SupplyView(
     energised="on",
     words="+15.00 V and -15.00 V, limit 50 mA per rail; draws 21.4 mA and 21.6 mA.",
@@ -148,7 +150,8 @@ PROBES = Question(
     kind="probes",
     title="Upper emitter drop",
     do="Clip the meter across the upper emitter resistor of pair 1.",
-    why="At the least-bias end almost no current may flow yet; a drop here says that the spreader holds the bases too far apart, or that an output device leaks.",
+    why="At the least-bias end almost no current may flow yet; a drop here says that the spreader "
+    "holds the bases too far apart, or that an output device leaks.",
     caution="Clip on with the power off: a slip shorts a base to a rail and kills the stage.",
     expected="0.00 mV to 1.20 mV, typically 0.11 mV",
     point="emitter.upper.1",
@@ -187,7 +190,8 @@ HOLD = Question(
     kind="hold",
     title="First power",
     do="The rails go up to +15 V and -15 V now, with 50 mA at most per rail. Does nobody touch the unit?",
-    why="Everything before this point was measured without power. The trimmer stands at its least-bias end and the limit was proven into a short.",
+    why="Everything before this point was measured without power. "
+    "The trimmer stands at its least-bias end and the limit was proven into a short.",
     caution="More than 30 V from rail to rail. Heat sinks and emitter resistors burn.",
     expected="both rails out of their limit within 0.5 s",
     choices=(Choice(value="yes", label="yes"), Choice(value="make safe", label="make safe", wants_reason=True)),

@@ -2,14 +2,17 @@
 
 from __future__ import annotations
 
-from typing import Any
+from typing import Any, Final
 
-from textual.containers import Vertical
+from textual.containers import Vertical, VerticalScroll
 
 from benchkit.procedure.actions import Question
 from benchkit.session.front import View
+from benchkit.ui.look import DOWN, UP
 from benchkit.ui.widgets.answer import Answer
 from benchkit.ui.widgets.card import Card
+
+MORE: Final = f"{UP}{DOWN} arrow keys: more of the sheet"
 
 
 class Page(Vertical):
@@ -43,6 +46,17 @@ class Page(Vertical):
         if self.question is None:
             self.card.wait(view.busy, view.busy_share, view.remaining_s)
 
+    @property
+    def sheet(self) -> VerticalScroll:
+        """The part that may be longer than its room."""
+        return self.card
+
+    def mark_overflow(self) -> None:
+        """Say that there is more to read than fits, and how to come to it."""
+        title = MORE if self.sheet.max_scroll_y > 0 else ""
+        if self.answer.border_title != title:
+            self.answer.border_title = title
+
     def turn_over(self, rows: int) -> None:
         """Move what is longer than its room."""
-        self.card.scroll_relative(y=rows, animate=False)
+        self.sheet.scroll_relative(y=rows, animate=False)

@@ -63,6 +63,7 @@ class SummaryPage(Page):
         lines.append(Text(DEFERENCE, style=QUIET))
         self._body.say(Text("\n").join(lines))
 
-    def turn_over(self, rows: int) -> None:
-        """Move the body."""
-        self._scroll.scroll_relative(y=rows, animate=False)
+    @property
+    def sheet(self) -> VerticalScroll:
+        """The body."""
+        return self._scroll

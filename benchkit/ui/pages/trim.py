@@ -8,6 +8,7 @@ from typing import Any
 
 from rich.table import Table
 from rich.text import Text
+from textual.containers import Container
 
 from benchkit.procedure.actions import Question
 from benchkit.session.front import LiveView, Reply, View
@@ -39,10 +40,9 @@ class TrimPage(Page):
     def compose(self) -> Any:
         """Lay out from what to do to the answer."""
         yield self.card
-        yield self._reading
         yield self._where
+        yield Container(self._reading, self._trend, classes="trim-figures")
         yield self._gauge
-        yield self._trend
         yield self._turns
         yield self.answer
 
@@ -51,16 +51,14 @@ class TrimPage(Page):
         super().put(question, refused)
         shown = tuple(choice for choice in question.choices if choice.value != "turn")
         if shown != question.choices:
-            self.answer.put(Question(**{**question.__dict__, "choices": shown}), refused)
+            self.answer.put(Question(**{**question.__dict__, "choices": shown}), refused, arrows=False)
 
     def say(self, view: View) -> None:
         """Show the newest reading."""
         super().say(view)
         self._rehearsal = view.kind == "rehearsal"
-        self._turns.display = self._rehearsal
-        self._turns.say(
-            Text("the screw: arrow left/right a little, up/down a quarter turn, page keys a whole turn", style=QUIET)
-        )
+        self.set_class(not self._rehearsal, "walking")
+        self._turns.say(Text("screw: left/right 1/50 turn, up/down 1/4 turn, page keys a whole turn", style=QUIET))
         if view.live is not None and view.live is not self._live:
             self._live = view.live
             self._received_s = self._clock()
@@ -76,22 +74,24 @@ class TrimPage(Page):
         stale = age_s > STALE_AFTER_S
         self._reading.say(live.text, f"STALE {age_s:.0f} s" if stale else "", stale)
         row = Table.grid(expand=True)
-        row.add_column(ratio=1)
-        row.add_column(justify="right")
+        row.add_column(no_wrap=True, overflow="crop")
+        row.add_column(justify="right", no_wrap=True, overflow="crop")
         side = where(live)
         if stale:
-            words = Text(" no fresh reading: do not turn ", style=f"bold reverse {CARE}")
+            words = Text.assemble((" no fresh reading: do not turn ", f"bold reverse {CARE}"))
         elif side == "inside":
-            words = Text(f" {DISC} INSIDE the limits ", style=f"bold reverse {STRONG}")
+            words = Text.assemble((f" {DISC} INSIDE the limits ", f"bold reverse {STRONG}"))
         elif side == "below":
             words = Text(f" {UP} too low: MORE bias ", style=f"bold {CARE}")
         elif side == "above":
             words = Text(f" {DOWN} too high: LESS bias ", style=f"bold {CARE}")
         else:
             words = Text(" no number ", style=f"bold {CARE}")
-        target = Text(f"target {safe(figure(live.target, live.unit))}   at {safe(live.point)}", style=INK)
+        narrow = self.size.width < 70
+        point = "" if narrow else f"   at {safe(live.point)}"
+        target = Text(f"target {safe(figure(live.target, live.unit))}{point}", style=INK, no_wrap=True)
         row.add_row(words, target)
-        self._where.say_drawn((side, stale, live.target, live.point), row)
+        self._where.say_drawn((side, stale, live.target, live.point, narrow), row)
         self._gauge.say(
             Gauged(
                 value=live.value,

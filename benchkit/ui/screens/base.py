@@ -2,9 +2,10 @@
 
 from __future__ import annotations
 
-from typing import TYPE_CHECKING, Any, cast
+from typing import TYPE_CHECKING, Any, Final, cast
 
 from textual import events
+from textual.binding import Binding, BindingType
 from textual.screen import Screen
 from textual.widgets import Input
 
@@ -14,6 +15,15 @@ from benchkit.ui.widgets.words import Words
 
 if TYPE_CHECKING:
     from benchkit.ui.app import BenchApp
+
+
+TURN_OVER: Final[list[BindingType]] = [
+    Binding("pageup", "turn_over(-6)", show=False),
+    Binding("pagedown", "turn_over(6)", show=False),
+    Binding("up", "turn_over(-1)", show=False),
+    Binding("down", "turn_over(1)", show=False),
+]
+"""Keys that move a sheet which is longer than its room."""
 
 
 class BenchScreen(Screen[Any]):

@@ -2,21 +2,24 @@
 
 from __future__ import annotations
 
-from typing import Any
+from typing import Any, ClassVar
 
 from rich.table import Table
 from rich.text import Text
+from textual.binding import BindingType
 from textual.containers import Vertical, VerticalScroll
 from textual.widgets import Input
 
 from benchkit.ui.entry import Identity, Opening, entry_problem
 from benchkit.ui.look import CARE, DEFERENCE, INK, QUIET, STRONG, safe
-from benchkit.ui.screens.base import BenchScreen
+from benchkit.ui.screens.base import TURN_OVER, BenchScreen
 from benchkit.ui.widgets.words import Words
 
 
 class StartScreen(BenchScreen):
     """Two entries; Enter in the last one begins."""
+
+    BINDINGS: ClassVar[list[BindingType]] = TURN_OVER
 
     def __init__(self, opening: Opening, **more: Any) -> None:
         super().__init__(**more)
@@ -25,10 +28,11 @@ class StartScreen(BenchScreen):
         self._operator = Input(opening.operator, id="operator", compact=True, select_on_focus=False)
         self._hint = Words(classes="start-hint")
         self._begun = False
+        self._body = VerticalScroll(classes="start-body", can_focus=False)
 
     def compose_body(self) -> Any:
         """Lay out title, facts, entries."""
-        with VerticalScroll(classes="start-body", can_focus=False):
+        with self._body:
             yield Words(classes="start-title").with_words(_title(self._opening))
             yield Words(DEFERENCE, classes="start-deference")
             yield Words(classes="start-facts").with_words(_facts(self._opening))
@@ -41,9 +45,13 @@ class StartScreen(BenchScreen):
 
     def on_mount(self) -> None:
         """Begin at the first empty entry."""
-        self._hint.say("Enter: next, then begin.  Tab: the other entry.  Ctrl+Q: leave.")
+        self._hint.say("Enter: next, then begin.  Ctrl+Q: leave.  Tab: the other entry.")
         empty = not self._unit.value.strip() and not self._opening.resumed
         (self._unit if empty else self._operator).focus()
+
+    def action_turn_over(self, rows: int) -> None:
+        """Move what is longer than its room."""
+        self._body.scroll_relative(y=rows, animate=False)
 
     def on_input_submitted(self, message: Input.Submitted) -> None:
         """Go on to the other entry, or begin."""

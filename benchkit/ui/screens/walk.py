@@ -6,7 +6,7 @@ from typing import Any, ClassVar, Final
 
 from rich.table import Table
 from rich.text import Text
-from textual.binding import Binding, BindingType
+from textual.binding import BindingType
 from textual.widgets import ContentSwitcher
 
 from benchkit.procedure.actions import Question
@@ -16,7 +16,7 @@ from benchkit.ui.pages.base import Page
 from benchkit.ui.pages.step import DecidePage, HoldPage, StepPage
 from benchkit.ui.pages.summary import LEAVE, SummaryPage
 from benchkit.ui.pages.trim import TrimPage
-from benchkit.ui.screens.base import BenchScreen
+from benchkit.ui.screens.base import TURN_OVER, BenchScreen
 from benchkit.ui.widgets.answer import Answer
 from benchkit.ui.widgets.trail_words import Role, trail
 from benchkit.ui.widgets.words import Words
@@ -35,12 +35,7 @@ _ROLE_STYLES: Final[dict[Role, str]] = {
 class WalkScreen(BenchScreen):
     """Everything between the start and the end of a walk."""
 
-    BINDINGS: ClassVar[list[BindingType]] = [
-        Binding("pageup", "turn_over(-6)", show=False),
-        Binding("pagedown", "turn_over(6)", show=False),
-        Binding("up", "turn_over(-1)", show=False),
-        Binding("down", "turn_over(1)", show=False),
-    ]
+    BINDINGS: ClassVar[list[BindingType]] = TURN_OVER
 
     def __init__(self, guard_s: float, **more: Any) -> None:
         super().__init__(**more)
@@ -99,6 +94,7 @@ class WalkScreen(BenchScreen):
     def age(self) -> None:
         """Let a watched reading grow old in sight."""
         page = self.page
+        page.mark_overflow()
         if isinstance(page, TrimPage):
             page.age()
 
@@ -132,8 +128,8 @@ class WalkScreen(BenchScreen):
 
     def _say_head(self, view: View) -> None:
         row = Table.grid(expand=True)
-        row.add_column(ratio=1, no_wrap=True, overflow="ellipsis")
-        row.add_column(justify="right", no_wrap=True)
+        row.add_column(ratio=1, no_wrap=True, overflow="crop")
+        row.add_column(justify="right", no_wrap=True, overflow="crop")
         left = Text.assemble(
             (safe(view.design), f"bold {STRONG}"),
             (f"  unit {safe(view.unit)}", INK),

@@ -37,12 +37,16 @@ class Choices(Words, can_focus=True):
         self._choices: tuple[tuple[str, Choice], ...] = ()
         self._marked = 0
         self._stacked = False
+        self._arrows = True
 
-    def offer(self, choices: tuple[Choice, ...], *, stacked: bool = False, marked: int = 0) -> None:
-        """Offer `choices`, one a row when `stacked`."""
+    def offer(
+        self, choices: tuple[Choice, ...], *, stacked: bool = False, marked: int = 0, arrows: bool = True
+    ) -> None:
+        """Offer `choices`, one a row when `stacked`; without `arrows` these keys are left to others."""
         self._choices = keyed(choices)
         self._marked = min(marked, max(0, len(choices) - 1))
         self._stacked = stacked
+        self._arrows = arrows
         self._draw()
 
     def on_key(self, event: events.Key) -> None:
@@ -51,7 +55,7 @@ class Choices(Words, can_focus=True):
             return
         if event.key == "enter":
             self.post_message(self.Taken(self._choices[self._marked][1]))
-        elif event.key in ("left", "right", "up", "down") and (self._stacked or event.key in ("left", "right")):
+        elif self._arrows and event.key in (("left", "right", "up", "down") if self._stacked else ("left", "right")):
             step = 1 if event.key in ("right", "down") else -1
             self._marked = (self._marked + step) % len(self._choices)
             self._draw()
@@ -65,12 +69,9 @@ class Choices(Words, can_focus=True):
         event.stop()
         event.prevent_default()
 
-    def on_focus(self) -> None:
-        """Show the mark."""
-        self._draw()
-
-    def on_blur(self) -> None:
-        """Show that Enter goes elsewhere."""
+    def watch_has_focus(self, _has_focus: bool) -> None:
+        """Show the mark, or that Enter goes elsewhere."""
+        super().watch_has_focus(_has_focus)
         self._draw()
 
     def _draw(self) -> None:
@@ -123,7 +124,7 @@ class Answer(Vertical):
         """Whether the entry is shown."""
         return bool(self._entry.display)
 
-    def put(self, question: Question, refused: str = "", *, stacked: bool = False) -> None:
+    def put(self, question: Question, refused: str = "", *, stacked: bool = False, arrows: bool = True) -> None:
         """Offer the answers of `question`; `refused` says why the last one could not be used."""
         again = self._question is not None and self._question == question and bool(refused)
         self._question = question
@@ -140,7 +141,7 @@ class Answer(Vertical):
         shown = question.choices
         if types:
             shown = tuple(choice for choice in question.choices if not _typed(question, choice))
-        self._choices.offer(shown, stacked=stacked)
+        self._choices.offer(shown, stacked=stacked, arrows=arrows)
         self._choices.display = bool(shown)
         self._focus()
 
@@ -165,19 +166,21 @@ class Answer(Vertical):
     def on_choices_taken(self, message: Choices.Taken) -> None:
         """Answer, or ask why first."""
         message.stop()
-        if self._question is None or self._too_soon():
-            return
-        if message.choice.wants_reason:
-            self._reason_for = message.choice
+        if self._question is not None and not self._too_soon():
+            self._take(message.choice)
+
+    def _take(self, choice: Choice) -> None:
+        if choice.wants_reason:
+            self._reason_for = choice
             self._entry.value = ""
             self._entry.display = True
             self._choices.display = False
             self._hint.display = True
             self._hint.set_class(False, "refused")
-            self._hint.say(f"{message.choice.label}: why? Type the reason, Enter keeps it, Esc goes back.")
+            self._hint.say(f"{choice.label}: why? Type the reason, Enter keeps it, Esc goes back.")
             self._focus()
             return
-        self._give(Reply(choice=message.choice.value))
+        self._give(Reply(choice=choice.value))
 
     def on_input_submitted(self, message: Input.Submitted) -> None:
         """Answer with what was typed."""
@@ -195,6 +198,8 @@ class Answer(Vertical):
         reply = typed_reply(question, text)
         if isinstance(reply, str):
             self._complain(reply)
+        elif isinstance(reply, Choice):
+            self._take(reply)
         else:
             self._give(reply)
 
@@ -231,13 +236,14 @@ def _typed(question: Question, choice: Choice) -> bool:
 def _hint(question: Question, refused: str, types: bool) -> Text:
     if refused:
         return Text(safe(refused))
+    more = " Tab: other answers." if len(question.choices) > 1 else ""
     if question.kind == "hold":
-        return Text("Type yes in full and press Enter. Nothing else passes this point.")
+        return Text(f"Type yes in full, then Enter; nothing less passes.{more}")
     if not types:
         return Text("")
     label = safe(question.choices[0].label) if question.choices else "done"
     if question.point:
-        return Text(f"Type what the meter shows, with its unit, then Enter ({label}).")
+        return Text(f"Type what the meter shows, with its unit, then Enter ({label}).{more}")
     if question.kind == "by hand":
-        return Text(f"Type what is asked for, or nothing, then Enter ({label}).")
-    return Text(f"Type, then Enter ({label}).")
+        return Text(f"Type what is asked for, or nothing, then Enter ({label}).{more}")
+    return Text(f"Type, then Enter ({label}).{more}")

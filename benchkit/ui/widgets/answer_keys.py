@@ -26,8 +26,8 @@ def keyed(choices: Sequence[Choice]) -> tuple[tuple[str, Choice], ...]:
     return tuple(taken)
 
 
-def typed_reply(question: Question, text: str) -> Reply | str:
-    """Return the reply that `text` means, or in words why it means none.
+def typed_reply(question: Question, text: str) -> Reply | Choice | str:
+    """Return the reply that `text` means, the choice that it names where that wants a reason too, or why it means none.
 
     At a hold point only the whole word ``yes`` passes; the other choices may be typed too.  Elsewhere the text goes to
     the first choice as it is: whether it can be used is not for a screen to say.  What is done by hand without a test
@@ -36,8 +36,8 @@ def typed_reply(question: Question, text: str) -> Reply | str:
     if question.kind == "hold":
         word = text.casefold()
         for choice in question.choices:
-            if word == choice.value.casefold() and not choice.wants_reason:
-                return Reply(choice=choice.value, text=text)
+            if word == choice.value.casefold():
+                return choice if choice.wants_reason else Reply(choice=choice.value, text=text)
         if not question.choices and word == "yes":
             return Reply(choice="yes", text=text)
         return f'"{text}" was typed. Only the whole word yes passes this point.' if text else "Nothing was typed yet."

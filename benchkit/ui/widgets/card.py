@@ -79,7 +79,7 @@ class Card(VerticalScroll):
         for label, style, words in rows:
             table.add_row(Text(label, style=style), words)
         self._details.say_drawn((question, "details"), table)
-        self._details.display = bool(rows)
+        self._details.set_class(not rows, "empty")
         self.scroll_home(animate=False)
 
     def wait(self, busy: str, share: float | None, remaining_s: float | None) -> None:
@@ -90,4 +90,4 @@ class Card(VerticalScroll):
             text.append(f"\n{bar}", style=INK)
         self._do.say(text)
         self._do.add_class("waiting")
-        self._details.display = False
+        self._details.add_class("empty")

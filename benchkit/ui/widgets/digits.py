@@ -47,8 +47,8 @@ class BigReading(Widget):
         beside = max(len(unit), len(self._note), 1) + 2
         scale = fit(figures, max(1, width - beside), self.size.height)
         kind = "big-reading--stale" if self._stale else "big-reading--figures"
-        ink = self.get_component_rich_style(kind, partial=True)
-        unit_style = self.get_component_rich_style("big-reading--unit", partial=True)
+        ink = self.get_component_rich_style(kind)
+        unit_style = self.get_component_rich_style("big-reading--unit")
         if scale is None:
             text = self._text if y == 0 else (self._note if y == 1 else "")
             return Strip([Segment(text[:width].ljust(width), unit_style)], width)

@@ -75,16 +75,20 @@ class Gauge(Widget):
             high_text=safe(shown.high_text),
         )
         if rows is None:
-            return Strip.blank(width)
+            return Strip.blank(width, self.rich_style)
         if y == 0:
             kind = f"gauge--{shown.verdict}" if shown.verdict else "gauge--needle"
             return Strip([Segment(rows.needle, self._style(kind))], width)
         if y == 1:
             return Strip(self._band(rows.band), width)
-        return Strip([Segment(rows.figures, self._style("gauge--figures"))], width) if y == 2 else Strip.blank(width)
+        return (
+            Strip([Segment(rows.figures, self._style("gauge--figures"))], width)
+            if y == 2
+            else Strip.blank(width, self.rich_style)
+        )
 
     def _band(self, band: str) -> list[Segment]:
-        inside = self.get_component_rich_style("gauge--needle", partial=True)
+        inside = self.get_component_rich_style("gauge--needle")
         outside = self._style("gauge--outside")
         segments: list[Segment] = []
         for character in band:
@@ -96,4 +100,4 @@ class Gauge(Widget):
         return segments
 
     def _style(self, kind: str) -> Style:
-        return self.get_component_rich_style(kind, partial=True)
+        return self.get_component_rich_style(kind)

@@ -13,7 +13,7 @@ from benchkit.ui.look import SUPPLY_SHAPES, SUPPLY_WORDS, safe
 from benchkit.ui.widgets.words import Words
 
 
-def how_to_switch_off(supply: SupplyView | None, typing: bool) -> str:
+def how_to_switch_off(supply: SupplyView | None, typing: bool, narrow: bool = False, tiny: bool = False) -> str:
     """Return the words for the off key; the space bar belongs to the entry while somebody types.
 
     Examples
@@ -22,8 +22,12 @@ def how_to_switch_off(supply: SupplyView | None, typing: bool) -> str:
     'F9: OFF at once'
     """
     if supply is not None and supply.by_hand:
-        return "switch off BY HAND, then F9"
-    return "F9: OFF at once" if typing else "F9 or space bar: OFF at once"
+        return "BY HAND, then F9" if narrow else "switch off BY HAND, then F9"
+    if tiny:
+        return "F9: OFF"
+    if typing:
+        return "F9: OFF at once"
+    return "F9/space: OFF" if narrow else "F9 or space bar: OFF at once"
 
 
 class OffLine(Vertical):
@@ -53,19 +57,23 @@ class OffLine(Vertical):
         self._supply, self._typing, self._asked = supply, typing, asked
         self._draw()
 
+    def on_resize(self) -> None:
+        """A narrow terminal gets shorter words."""
+        self._draw()
+
     def _draw(self) -> None:
         supply = self._supply
         energised = supply.energised if supply is not None else "off"
         state = f"{SUPPLY_SHAPES[energised]} {SUPPLY_WORDS[energised]}"
-        hint = how_to_switch_off(supply, self._typing)
+        hint = how_to_switch_off(supply, self._typing, narrow=self.size.width < 50, tiny=self.size.width < 36)
         words = safe(supply.words) if supply is not None else "The walk has not begun; nothing has been switched on."
         if self._asked and energised != "off":
             words = "OFF HAS BEEN ASKED FOR; waiting until the supply confirms it. " + words
         row = Table.grid(expand=True)
-        row.add_column(no_wrap=True)
-        row.add_column(justify="right", no_wrap=True)
+        row.add_column(no_wrap=True, overflow="crop")
+        row.add_column(justify="right", no_wrap=True, overflow="crop")
         row.add_row(Text(state, style="bold"), Text(hint, style="bold"))
         self._first.say_drawn((state, hint), row)
-        self._second.say(Text(words, no_wrap=True, overflow="ellipsis"))
+        self._second.say(words)
         for name in ("off", "on", "unknown"):
             self.set_class(name == energised, f"supply-{name}")

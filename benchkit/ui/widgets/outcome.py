@@ -26,13 +26,13 @@ def verdict_strip(verdict: Verdict | None) -> Text:
             text.append(f" {VERDICT_SHAPES[place]} {VERDICT_WORDS[place].upper()} ", style=style)
         else:
             text.append(f"   {VERDICT_WORDS[place]} ", style=QUIET)
-    return text
+    return text.append("│", style=QUIET)
 
 
 def result_line(result: ResultView) -> Text:
     """Return one result in one line: shape, word, what, value, limits."""
     colour = VERDICT_COLOURS[result.verdict]
-    text = Text(no_wrap=True, overflow="ellipsis")
+    text = Text(no_wrap=True, overflow="crop")
     text.append(f"{VERDICT_SHAPES[result.verdict]} {VERDICT_WORDS[result.verdict]:<10}", style=f"bold {colour}")
     text.append(safe(result.title), style=INK)
     text.append(f"  {safe(result.value_text)}", style=f"bold {STRONG}")
@@ -89,10 +89,10 @@ class Outcome(Vertical):
         result = results[-1]
         row = Table.grid(expand=True)
         row.add_column(ratio=1)
-        row.add_column(justify="right", no_wrap=True)
-        words = Text(no_wrap=True, overflow="ellipsis")
-        words.append(f"{safe(result.title)}  ", style=INK)
+        row.add_column(justify="right", no_wrap=True, overflow="crop")
+        words = Text(no_wrap=True, overflow="crop")
         words.append(safe(result.value_text), style=f"bold {STRONG}")
+        words.append(f"  {safe(result.title)}", style=INK)
         row.add_row(words, verdict_strip(result.verdict))
         self._head.say_drawn((result, heading), row)
         self._gauge.say(gauged(result))

@@ -39,10 +39,10 @@ class Trend(Widget):
         width, height = self.size.width, self.size.height
         live = self._live
         if live is None:
-            return Strip.blank(width)
+            return Strip.blank(width, self.rich_style)
         wanted = (live, width, height)
         if self._drawn_for != wanted:
             self._rows = trend_rows(width, height, live.trend, live.low, live.high, target=live.target)
             self._drawn_for = wanted
-        style = self.get_component_rich_style("trend--marks", partial=True)
+        style = self.get_component_rich_style("trend--marks")
         return Strip([Segment(self._rows[y] if y < len(self._rows) else " " * width, style)], width)

@@ -1,120 +1,26 @@
-"""Reading and showing quantities: "12.3 mV", "4k7", "0R22", "8 mA 5 %", "OL".
-
-Rules of the entry line, in the order in which they are applied:
-
-1. At most 60 printable characters; typographic spaces, the minus sign (U+2212), both micro signs and both ohm signs
-   are taken as what they look like. Only the digits 0-9 are digits.
-2. A comma is refused: "1,234" is either one and a bit or more than a thousand, and the difference burns parts.
-3. A number, then at most one SI prefix and at most one unit. A bare number is in the base unit. The unit, when there
-   is one, must be the one that was asked for.
-4. ``m`` is milli and ``M`` is mega, always. Mega is taken for ohms (and Hz) only: "12 MV" is a slip of the shift key,
-   and is refused rather than believed. A bare ``m`` after ohms ("100m") is refused for the same reason.
-5. RKM codes (IEC 60062: the letter stands where the point would be) are taken for ohms and farads only: "4k7" is
-   4700 ohm, and "4k7" volts is refused.
-6. Not-a-number, infinities and values beyond anything on a bench are refused. A meter's overload is no number either:
-   `parse_reading` gives it a type of its own.
-
-The grammar is held here; what the parts of a quantity are worth is left to QuantiPhy and rkm_codes, which are imported
-at first use because a command's ``--help`` doesn't need them.
-"""
+"""Reading quantities as a person writes them; the rules stand at the top of the package."""
 
 from __future__ import annotations
 
 import math
 import re
-from dataclasses import dataclass
-from functools import cache
-from typing import Any, NamedTuple
 
 from benchkit.errors import EntryError
+from benchkit.quantities.showing import quoted
+from benchkit.quantities.units import (
+    SCPI_INFINITY,
+    SCPI_NOT_A_NUMBER,
+    UNITS,
+    Overload,
+    Tolerance,
+    Unit,
+    quantity_type,
+    unit_called,
+    wanted,
+)
 
 LONGEST_ENTRY = 60
-SCPI_INFINITY = 9.9e37
-"""What an instrument sends for +infinity, its overload (SCPI-1999 volume 1, 7.2.1.4)."""
-SCPI_NOT_A_NUMBER = 9.91e37
-"""What an instrument sends for "not a number" (SCPI-1999 volume 1, 7.2.1.5)."""
 
-
-@dataclass(frozen=True)
-class Overload:
-    """A meter's overload: beyond its range, and no number.
-
-    Parameters
-    ----------
-    positive : bool
-        Whether the meter went over at its positive end (the only end that ohms and diode ranges have).
-    """
-
-    positive: bool = True
-
-
-class Tolerance(NamedTuple):
-    """A marked value and how far a part may be from it.
-
-    Attributes
-    ----------
-    value : float
-        In the base unit.
-    fraction : float
-        Half-width relative to the value, 0.05 for "5 %"; 0.0 where nothing is marked.
-    """
-
-    value: float
-    fraction: float
-
-
-@dataclass(frozen=True)
-class _Unit:
-    """How one unit is written, and what is believable in it."""
-
-    spellings: tuple[str, ...]
-    prefixes: str
-    bare_prefixes: str
-    low: float
-    high: float
-    in_words: str
-    rkm: bool = False
-
-
-_UNITS: dict[str, _Unit] = {
-    "V": _Unit(("V", "volt", "volts", "v"), "numk", "um", -1e6, 1e6, "a voltage"),
-    "A": _Unit(("A", "amp", "amps", "ampere", "amperes", "a"), "pnumk", "um", -1e6, 1e6, "a current"),
-    "ohm": _Unit(
-        ("ohm", "Ohm", "OHM", "ohms", "Ohms", "OHMS", "Ω", "R", "r"),
-        "numkMGT",
-        "kMGT",
-        -1e15,
-        1e15,
-        "a resistance",
-        rkm=True,
-    ),
-    "F": _Unit(("F", "farad", "farads"), "pnum", "pnum", -1e6, 1e6, "a capacitance", rkm=True),
-    "degC": _Unit(("degC", "°C", "deg C", "degc", "C", "celsius", "Celsius"), "", "", -273.15, 1e4, "a temperature"),
-    "K": _Unit(("K", "kelvin"), "m", "", 0.0, 1e4, "a temperature in kelvin"),
-    "K/W": _Unit(("K/W", "degC/W", "°C/W", "C/W"), "m", "", -1e9, 1e9, "a thermal resistance"),
-    "J/K": _Unit(("J/K", "J/degC", "J/°C", "Ws/K"), "mk", "", -1e9, 1e9, "a heat capacity"),
-    "s": _Unit(("s", "sec", "second", "seconds"), "pnum", "", -1e9, 1e9, "a time"),
-    "W": _Unit(("W", "watt", "watts"), "numk", "", -1e9, 1e9, "a power"),
-    "Hz": _Unit(("Hz", "hz", "HZ"), "mkMG", "", -1e12, 1e12, "a frequency"),
-    "%": _Unit(("%", "percent", "per cent"), "", "", -1e6, 1e6, "a percentage"),
-}
-
-_EXAMPLES = {
-    "V": '"12.3 mV" or "0.0123"',
-    "A": '"50 mA" or "0.05"',
-    "ohm": '"4k7", "0R22", "4.7 kohm" or "4700"',
-    "F": '"100 uF" or "4n7"',
-    "degC": '"25 degC" or "25"',
-    "K": '"40 K"',
-    "K/W": '"1.2 K/W"',
-    "J/K": '"400 J/K"',
-    "s": '"3 s"',
-    "W": '"3 W"',
-    "Hz": '"1 kHz"',
-    "%": '"5 %"',
-}
-
-_PLAIN = frozenset({"degC", "K", "K/W", "J/K", "s", "%"})
 _NUMBER = re.compile(r"([+-]?)((?:[0-9]+\.?[0-9]*|\.[0-9]+)(?:[eE][+-]?[0-9]{1,4})?) ?(.*)", re.DOTALL)
 _RKM = re.compile(r"([+-]?)([0-9]*)([RrLkKMGT]|[munp])([0-9]*)")
 _RKM_OHM = frozenset("RrLkKMGT")
@@ -168,14 +74,14 @@ def parse(text: str, unit: str) -> float:
 
     Notes
     -----
-    RKM codes: IEC 60062:2016. The rules stand at the top of this module.
+    RKM codes: IEC 60062:2016. The rules stand at the top of the package.
     """
-    spec = _spec(unit)
+    spec = unit_called(unit)
     plain = _tidy(text, unit)
     if "," in plain:
         raise EntryError(
             f"{quoted(text)} holds a comma, which can mean a decimal point or thousands",
-            _wanted(unit),
+            wanted(unit),
             "Write the number with a point and without separators",
         )
     if spec.rkm:
@@ -213,7 +119,7 @@ def parse_reading(text: str, unit: str) -> float | Overload:
     -----
     Infinity 9.9E37 and not-a-number 9.91E37: SCPI-1999 volume 1, 7.2.1.
     """
-    _spec(unit)
+    unit_called(unit)
     plain = _tidy(text, unit)
     match = _OVERLOAD.fullmatch(plain)
     if match is not None:
@@ -226,7 +132,7 @@ def parse_reading(text: str, unit: str) -> float | Overload:
         if abs(value) == SCPI_NOT_A_NUMBER:
             raise EntryError(
                 f"{quoted(text)} is an instrument's way of saying that it has no number",
-                _wanted(unit),
+                wanted(unit),
                 "Take the reading again",
             )
     return parse(text, unit)
@@ -285,7 +191,7 @@ def parse_tolerance(text: str, unit: str) -> Tolerance:
     A letter after an RKM code of a resistor is its tolerance (IEC 60062: F 1 %, G 2 %, J 5 %, K 10 %, M 20 %,
     from memory).
     """
-    spec = _spec(unit)
+    spec = unit_called(unit)
     if unit == "%":
         raise ValueError("a percentage carries no tolerance in per cent")
     plain = _tidy(text, unit)
@@ -306,71 +212,6 @@ def parse_tolerance(text: str, unit: str) -> Tolerance:
     return Tolerance(value, percent / 100.0)
 
 
-def show(value: float | Overload | None, unit: str, digits: int = 4) -> str:
-    """Write a quantity for a person.
-
-    Parameters
-    ----------
-    value : float, Overload or None
-        In `unit`. None, and what is not finite, is "no number".
-    unit : str
-        As for `parse`; another unit is shown as it is.
-    digits : int
-        Significant digits, at least 1.
-
-    Returns
-    -------
-    str
-        Such as "12.30 mV". Ohms get no milli ("0.2200 ohm"), so that nobody takes it for mega; temperatures, times,
-        percentages and thermal figures get no prefix at all.
-    """
-    if isinstance(value, Overload):
-        return "overload" if value.positive else "overload, negative"
-    if value is None or not math.isfinite(value):
-        return "no number"
-    digits = max(1, digits)
-    if unit in _PLAIN or (unit == "ohm" and 1e-4 <= abs(float(f"{value:.{digits - 1}e}")) < 1.0) or value == 0:
-        return f"{_fixed(value, digits)} {unit}"
-    spec = _UNITS.get(unit)
-    shown = _quantity_type("".join(p for p in spec.prefixes if unit != "ohm" or p != "m") if spec else "")
-    return str(shown(value, unit).render(prec=digits - 1, strip_zeros=False))
-
-
-def quoted(text: object, longest: int = 40) -> str:
-    """Quote what came, fit for one line of a message: control characters escaped, the middle of a long text left out.
-
-    Parameters
-    ----------
-    text : object
-        What came; a string is quoted, anything else is named by its type and value.
-    longest : int
-        Characters that are kept.
-
-    Returns
-    -------
-    str
-        Printable, without line breaks.
-    """
-    if not isinstance(text, str):
-        return f"{type(text).__name__} {quoted(repr(text), longest)}"
-    safe = "".join(
-        character if character.isprintable() else character.encode("unicode_escape").decode("ascii")
-        for character in text[: longest + 1]
-    )
-    return f'"{safe}"' if len(text) <= longest else f'"{safe[:longest]}…"'
-
-
-def _spec(unit: str) -> _Unit:
-    try:
-        return _UNITS[unit]
-    except KeyError:
-        raise ValueError(f"{unit!r} is no unit of ours; known are {', '.join(_UNITS)}") from None
-
-
-def _wanted(unit: str) -> str:
-    return f"{_UNITS[unit].in_words}, such as {_EXAMPLES[unit]}"
-
-
 def _example_value(unit: str) -> str:
     return {"ohm": "1 kohm", "A": "8 mA", "V": "10 V", "F": "10 uF"}.get(unit, f"10 {unit}")
 
@@ -378,32 +219,32 @@ def _example_value(unit: str) -> str:
 def _tidy(text: object, unit: str) -> str:
     """Normalise the look-alikes; refuse what is too long, empty or not printable."""
     if not isinstance(text, str):
-        raise EntryError(f"{quoted(text)} came instead of text", _wanted(unit))
+        raise EntryError(f"{quoted(text)} came instead of text", wanted(unit))
     if len(text) > LONGEST_ENTRY:
-        raise EntryError(f"{quoted(text)} is {len(text)} characters long", _wanted(unit))
+        raise EntryError(f"{quoted(text)} is {len(text)} characters long", wanted(unit))
     plain = "".join(_LOOKALIKES.get(character, character) for character in text.strip(" \t\r\n"))
     if not plain.isprintable():
-        raise EntryError(f"{quoted(text)} holds a character that can't be printed", _wanted(unit))
+        raise EntryError(f"{quoted(text)} holds a character that can't be printed", wanted(unit))
     plain = re.sub(" {2,}", " ", plain).strip()
     if not plain:
-        raise EntryError("Nothing was entered", _wanted(unit))
+        raise EntryError("Nothing was entered", wanted(unit))
     return plain
 
 
 def _no_quantity(text: str, plain: str, unit: str) -> EntryError:
     """Say why a text without a leading number is refused, in the words that help most."""
     if re.fullmatch(r"[+-]?(?:nan|inf|infinity).*", plain, re.IGNORECASE):
-        return EntryError(f"{quoted(text)} is not a finite number", _wanted(unit))
+        return EntryError(f"{quoted(text)} is not a finite number", wanted(unit))
     if _OVERLOAD.fullmatch(plain):
-        return EntryError(f"{quoted(text)} is an overload, not a number", _wanted(unit))
+        return EntryError(f"{quoted(text)} is an overload, not a number", wanted(unit))
     if any(character.isdigit() and character not in "0123456789" for character in plain):
-        return EntryError(f"{quoted(text)} holds digits other than 0 to 9", _wanted(unit))
-    return EntryError(f"{quoted(text)} is not a quantity", _wanted(unit))
+        return EntryError(f"{quoted(text)} holds digits other than 0 to 9", wanted(unit))
+    return EntryError(f"{quoted(text)} is not a quantity", wanted(unit))
 
 
 def _prefix(suffix: str, text: str, unit: str) -> str:
     """Take apart what stands after the number; the SI prefix, or "" for none."""
-    spec = _UNITS[unit]
+    spec = UNITS[unit]
     if not suffix or suffix in spec.spellings:
         return ""
     for spelling in spec.spellings:
@@ -413,7 +254,7 @@ def _prefix(suffix: str, text: str, unit: str) -> str:
                 return letters
             if letters == "M":
                 raise EntryError(
-                    f"{quoted(text)} says mega", _wanted(unit), 'Write a small m for milli, as in "12.3 mV"'
+                    f"{quoted(text)} says mega", wanted(unit), 'Write a small m for milli, as in "12.3 mV"'
                 )
     letters = _canonical_prefix(suffix, unit)
     if letters and letters in spec.bare_prefixes:
@@ -421,21 +262,21 @@ def _prefix(suffix: str, text: str, unit: str) -> str:
     if unit == "ohm" and letters == "m":
         raise EntryError(
             f"{quoted(text)} could be milliohms or megohms",
-            _wanted(unit),
+            wanted(unit),
             'Write the unit too: "100 mohm" is 0.1 ohm, "100 Mohm" a hundred million',
         )
-    for other, other_spec in _UNITS.items():
+    for other, other_spec in UNITS.items():
         if other != unit and _fits(suffix, other_spec, other):
-            raise EntryError(f"{quoted(text)} is {other_spec.in_words}", _wanted(unit))
+            raise EntryError(f"{quoted(text)} is {other_spec.in_words}", wanted(unit))
     if unit != "ohm" and re.search(r"[0-9][RrkKMGT][0-9]", text):
         raise EntryError(
             f"{quoted(text)} is written like the code on a resistor",
-            f"{_wanted(unit)}; such codes are for resistors and capacitors only",
+            f"{wanted(unit)}; such codes are for resistors and capacitors only",
         )
-    raise EntryError(f"{quoted(text)} has {quoted(suffix)} where a unit belongs", _wanted(unit))
+    raise EntryError(f"{quoted(text)} has {quoted(suffix)} where a unit belongs", wanted(unit))
 
 
-def _fits(suffix: str, spec: _Unit, unit: str) -> bool:
+def _fits(suffix: str, spec: Unit, unit: str) -> bool:
     return any(
         suffix == spelling
         or (suffix.endswith(spelling) and _canonical_prefix(suffix[: -len(spelling)], unit) in set(spec.prefixes))
@@ -466,7 +307,7 @@ def _rkm(plain: str, unit: str) -> float | None:
     return _scaled(f"{sign}{whole or '0'}.{decimals}", prefix)
 
 
-def _without_unit(plain: str, spec: _Unit) -> str:
+def _without_unit(plain: str, spec: Unit) -> str:
     """Take the unit off "4k7 ohm" (but leave the R of "47R" alone: there it is the code)."""
     for spelling in sorted(spec.spellings, key=len, reverse=True):
         if plain.endswith(spelling if len(spelling) > 1 or not spelling.isascii() else f" {spelling}"):
@@ -485,57 +326,18 @@ def _scaled(number: str, prefix: str) -> float:
     """Give the number with its SI prefix, rounded once."""
     mantissa, _, exponent = number.lower().partition("e")
     if not exponent:
-        return float(_quantity_type("")(f"{mantissa}{prefix}", ""))
-    one = float(_quantity_type("")(f"1{prefix}", ""))
+        return float(quantity_type("")(f"{mantissa}{prefix}", ""))
+    one = float(quantity_type("")(f"1{prefix}", ""))
     return float(f"{mantissa}e{int(exponent) + round(math.log10(one))}")
 
 
 def _believable(value: float, text: str, unit: str) -> float:
-    spec = _UNITS[unit]
+    spec = UNITS[unit]
     if not math.isfinite(value):
-        raise EntryError(f"{quoted(text)} is not a finite number", _wanted(unit))
+        raise EntryError(f"{quoted(text)} is not a finite number", wanted(unit))
     if not spec.low <= value <= spec.high:
         raise EntryError(
             f"{quoted(text)} is beyond anything on this bench",
             f"{spec.in_words} between {spec.low:g} and {spec.high:g} {unit}",
         )
     return value
-
-
-def _fixed(value: float, digits: int) -> str:
-    """Fixed-point text with `digits` significant digits, exponents only far from one."""
-    if value == 0:
-        return f"{0.0:.{digits - 1}f}"
-    exponent = int(f"{value:.{digits - 1}e}".partition("e")[2])
-    if not -6 <= exponent <= 12:
-        return f"{value:.{digits - 1}e}"
-    return f"{value:.{max(0, digits - 1 - exponent)}f}"
-
-
-@cache
-def _quantity_type(prefixes: str) -> Any:
-    """Make a QuantiPhy type of our own, so that preferences set by anybody else don't reach us."""
-    from quantiphy import Quantity
-
-    kind = type("BenchQuantity", (Quantity,), {})
-    kind.set_prefs(  # type: ignore[attr-defined]
-        output_sf=prefixes,
-        input_sf="TGMkmunp",
-        map_sf={},
-        spacer=" ",
-        number_fmt=None,
-        show_label=False,
-        strip_radix=True,
-        known_units=[],
-        unity_sf="",
-        comma=",",
-        radix=".",
-        minus="-",
-        plus="+",
-        form="si",
-        inf="inf",
-        nan="nan",
-        keep_components=False,
-        ignore_sf=False,
-    )
-    return kind

@@ -1,0 +1,105 @@
+"""Bench files: what is read from them, and the key that each mistake is reported at."""
+
+from __future__ import annotations
+
+import datetime
+import re
+from pathlib import Path
+
+import pytest
+
+from benchkit.errors import FileError
+from benchkit.instruments.bench import load_bench, parse_bench
+from benchkit.measure.accuracy import STATED_DEFAULT
+
+TODAY = datetime.date(2031, 1, 1)
+
+GOOD = """
+[bench]
+format = 1
+name = "bench 2"
+
+[meter]
+address = "TCPIP::192.168.1.20::5025::SOCKET"
+profile = "scpi-meter"
+serial = "MY123"
+input_resistance = "1 Mohm"
+calibration_due = 2031-05-01
+
+[[meter.accuracy]]
+function = "dc volts"
+range = "1 V"
+percent_of_reading = 0.01
+percent_of_range = 0.001
+
+[supply]
+address = "TCPIP::192.168.1.21::5025::SOCKET"
+calibration_due = 2030-12-31
+"""
+
+
+def test_a_good_one(tmp_path: Path) -> None:
+    path = tmp_path / "bench.toml"
+    path.write_text(GOOD, encoding="utf-8")
+    bench = load_bench(path)
+    assert bench.text == GOOD
+    assert bench.meter is not None
+    assert bench.meter.input_resistance_ohm == 1e6
+    assert bench.accuracy.standard_uncertainty("dc volts", 0.5) == pytest.approx((0.5e-4 + 1e-5) / 3**0.5)
+    assert bench.supply_accuracy is STATED_DEFAULT
+    setup = bench.setup
+    assert setup["meter"]["address"] == "TCPIP::192.168.1.20::5025::SOCKET"
+    assert setup["meter"]["serial"] == "MY123"
+    assert setup["supply"]["profile"]["kind"] == "supply"
+
+
+def test_cautions_say_what_is_assumed_or_overdue() -> None:
+    cautions = parse_bench(GOOD, "bench.toml", today=TODAY).cautions
+    assert [caution for caution in cautions if "2030-12-31" in caution]
+    assert [caution for caution in cautions if "no accuracy for the supply" in caution]
+    assert len(cautions) == 2
+
+
+def test_a_bench_without_instruments_is_by_hand() -> None:
+    bench = parse_bench('[bench]\nformat = 1\nname = "hands"\n', "bench.toml")
+    assert bench.setup == {"meter": None, "supply": None}
+    assert bench.accuracy is bench.supply_accuracy is STATED_DEFAULT
+
+
+@pytest.mark.parametrize(
+    ("old", "new", "key"),
+    [
+        ("format = 1", "format = 2", "bench.format"),
+        ('name = "bench 2"', "", "bench.name"),
+        ('serial = "MY123"', "serial = 123", "meter.serial"),
+        ('serial = "MY123"', 'sreial = "MY123"', "meter.sreial"),
+        ("TCPIP::192.168.1.20::5025::SOCKET", "192.168.1.20", "meter.address"),
+        ("TCPIP::192.168.1.21::5025::SOCKET", "USB0::1::2::3::INSTR", "supply.address"),
+        ('"1 Mohm"', '"1 V"', "meter.input_resistance"),
+        ('"1 Mohm"', '"0 ohm"', "meter.input_resistance"),
+        ("2031-05-01", '"soon"', "meter.calibration_due"),
+        ('function = "dc volts"', 'function = "dc bolts"', "meter.accuracy"),
+        ('"scpi-meter"', '"scpi-supply"', "the profile scpi-supply"),
+        ('"scpi-meter"', '"mine.toml"', "mine.toml"),
+        ("[bench]", "[bench", "no TOML"),
+    ],
+)
+def test_each_mistake_names_its_key(old: str, new: str, key: str) -> None:
+    with pytest.raises(FileError, match=re.escape(key)):
+        parse_bench(GOOD.replace(old, new), "bench.toml")
+
+
+def test_a_profile_of_ones_own_stands_beside_the_bench_file(tmp_path: Path) -> None:
+    (tmp_path / "mine.toml").write_text(
+        'based_on = "scpi-meter"\n[functions]\n"dc volts" = "VAL1?"\n', encoding="utf-8"
+    )
+    path = tmp_path / "bench.toml"
+    path.write_text(GOOD.replace('"scpi-meter"', '"mine.toml"'), encoding="utf-8")
+    functions = load_bench(path).setup["meter"]["profile"]["functions"]
+    assert functions["dc volts"] == "VAL1?"
+    assert functions["ohms"] == "MEAS:RES?"
+
+
+def test_a_missing_file(tmp_path: Path) -> None:
+    with pytest.raises(FileError, match="can't be read"):
+        load_bench(tmp_path / "none.toml")

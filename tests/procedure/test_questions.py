@@ -1,0 +1,91 @@
+from __future__ import annotations
+
+import pytest
+
+from benchkit.events import PointLimits
+from benchkit.judge.limits import Limits
+from benchkit.procedure import questions
+from benchkit.procedure.plan import Item
+from tests.procedure.driver import item_of, judged, shipped, small
+
+
+def values(item: Item) -> list[str]:
+    return [choice.value for choice in questions.question_for(item).choices]
+
+
+@pytest.mark.parametrize(
+    ("item", "kind", "choices"),
+    [
+        ("cold.least", "tell", ["done", "make safe"]),
+        ("look.parts", "confirm", ["yes", "no", "make safe"]),
+        ("cold.remark", "text", ["done", "make safe"]),
+        ("power.ready", "hold", ["yes", "make safe"]),
+    ],
+)
+def test_each_kind_has_its_answers(item: str, kind: str, choices: list[str]) -> None:
+    found = item_of(small(), item)
+    assert questions.question_for(found).kind == kind
+    assert values(found) == choices
+
+
+def test_a_placing_says_where_the_probes_go_and_what_comes() -> None:
+    item = item_of(small(), "power.output-first.output")
+    question = questions.placing(item, Limits(-0.02, 0.02, 0.0, "V", "the model"))
+    assert (question.kind, question.point, question.black) == ("probes", "output", "0 V")
+    assert "-20.00 mV to 20.00 mV" in question.expected
+    assert "the model" in question.expected
+
+
+def test_expected_text_leaves_an_open_nominal_out() -> None:
+    text = questions.expected_text(Limits(100.0, None, None, "ohm", "stated in the procedure"))
+    assert text == "at least 100.0 ohm (stated in the procedure)"
+
+
+def test_a_trim_can_be_taken_given_up_or_stopped() -> None:
+    question = questions.trimming(item_of(small(), "bias.trim.emitter.upper.1"))
+    assert [choice.value for choice in question.choices] == ["take", "end", "make safe"]
+    assert question.red
+    assert question.black
+
+
+@pytest.mark.parametrize(
+    ("item", "way_out", "choices"),
+    [
+        ("power.current.rail+.current", False, ["again", "go on", "make safe"]),
+        ("power.output-first.output", False, ["again", "make safe"]),
+        ("cold.end.ohm.spreader.lower", False, ["again", "make safe"]),
+        ("made-safe.rails-low.rail+", True, ["again", "go on"]),
+    ],
+)
+def test_what_can_be_decided(item: str, way_out: bool, choices: list[str]) -> None:
+    question = questions.deciding(item_of(small(), item), judged(item, "fail"), "", way_out=way_out)
+    assert [choice.value for choice in question.choices] == choices
+    assert question.title.endswith("failed.")
+    assert all(choice.wants_reason == (choice.value == "go on") for choice in question.choices)
+    assert ("no way past" in question.caution) == ("go on" not in choices)
+
+
+def test_no_result_is_said_as_such() -> None:
+    question = questions.deciding(item_of(small(), "look.parts"), None, "no answer", way_out=False)
+    assert "no result" in question.title
+    assert question.do == "no answer"
+
+
+def test_off_by_hand_has_one_answer_and_treats_the_unit_as_live() -> None:
+    question = questions.by_hand_off(item_of(small(), "made-safe.off"), "No answer.")
+    assert [choice.value for choice in question.choices] == ["done"]
+    assert "live" in question.caution
+    assert question.do.startswith("No answer.")
+
+
+def test_model_limits_name_their_condition() -> None:
+    limits = questions.model_limits(PointLimits(point="output", unit="V", nominal=0.0, low=-1.0, high=None), "cold")
+    assert (limits.low, limits.high, limits.source) == (-1.0, None, "the model: cold")
+
+
+@pytest.mark.parametrize("name", ["tern-40", "breadboard"])
+def test_every_word_in_braces_is_filled_in(name: str) -> None:
+    for item in shipped(name).items:
+        for text in (item.title, item.do, item.why, item.caution, item.expected):
+            assert "{" not in text, item.id
+            assert "  " not in text, item.id

@@ -1,0 +1,580 @@
+"""The screens against a scripted walk: what is asked, answered, shown, and switched off."""
+
+from __future__ import annotations
+
+import asyncio
+import contextlib
+import time
+from collections.abc import AsyncIterator, Awaitable, Callable
+from dataclasses import replace
+from pathlib import Path
+
+import pytest
+from textual import events
+from textual.geometry import Size
+from textual.pilot import Pilot
+from textual.widgets import Input
+
+from benchkit.errors import InstrumentError
+from benchkit.events import Closed
+from benchkit.procedure.actions import Choice, Question
+from benchkit.session.front import Front, Reply, SupplyView
+from benchkit.ui import look
+from benchkit.ui.app import BenchApp
+from benchkit.ui.entry import Identity
+from benchkit.ui.screens.leave import LeaveScreen
+from benchkit.ui.screens.start import StartScreen
+from benchkit.ui.screens.walk import WalkScreen
+from benchkit.ui.widgets.answer import Answer
+from tests.ui import scripted
+from tests.ui.scripted import WHO, Bench, Script, app_for, asking
+
+QUESTIONS = (
+    scripted.PROBES,
+    scripted.CONFIRM,
+    scripted.TEXT,
+    scripted.BY_HAND_READING,
+    scripted.HOLD,
+    scripted.DECIDE,
+    scripted.TRIM,
+)
+LIVE = replace(scripted.TRIM_VIEW, results=scripted.END_VIEW.results)
+
+
+@pytest.fixture(autouse=True)
+def _plain_environment(monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setattr("benchkit.ui.app.CLOSE_WITHIN_S", 0.1)
+    for name in ("NO_COLOR", "TEXTUAL_THEME", "TEXTUAL", "TEXTUAL_PRESS"):
+        monkeypatch.delenv(name, raising=False)
+
+
+@contextlib.asynccontextmanager
+async def running(
+    script: Script,
+    *,
+    identity: Identity | None = WHO,
+    size: tuple[int, int] = (80, 24),
+    guard_s: float = 0.0,
+) -> AsyncIterator[tuple[BenchApp, Pilot[int], Bench]]:
+    bench = Bench()
+    app = app_for(script, bench, identity=identity, guard_s=guard_s)
+    async with app.run_test(size=size) as pilot:
+        if identity is not None:
+            await until(lambda: bench.front is not None)
+        await pilot.pause()
+        yield app, pilot, bench
+
+
+async def until(true: Callable[[], bool], timeout_s: float = 5.0) -> None:
+    deadline = time.monotonic() + timeout_s
+    while not true():
+        assert time.monotonic() < deadline, "it did not happen"
+        await asyncio.sleep(0.03)
+
+
+def run(test: Callable[[], Awaitable[None]]) -> None:
+    asyncio.run(test())  # type: ignore[arg-type]
+
+
+def drawn(app: BenchApp) -> list[str]:
+    """What stands on the screen, row by row."""
+    width, height = app.size
+    rows = [[" "] * width for _ in range(height)]
+    for y, strip in enumerate(app.screen._compositor.render_strips()):
+        text = "".join(segment.text for segment in strip)
+        rows[y][: len(text)] = text
+    return ["".join(row) for row in rows]
+
+
+def shows(app: BenchApp, words: str) -> bool:
+    return words in " ".join(" ".join(drawn(app)).replace("█", " ").split())
+
+
+# --- the way through -------------------------------------------------------------------------------------------------
+
+
+def test_the_start_takes_who_and_what_and_begins() -> None:
+    async def test() -> None:
+        async with running(asking(scripted.PROBES), identity=None) as (app, pilot, bench):
+            assert isinstance(app.screen, StartScreen)
+            assert shows(app, "it is not a safety device")
+            assert shows(app, "Where they differ from the screen, they win.")
+            assert shows(app, "Tern 40, revision C")
+            assert shows(app, "First power-on")
+            await pilot.press("enter")
+            assert shows(app, "The serial number is still empty.")
+            assert bench.front is None
+            await pilot.press(*"0042", "enter", *("R", "full_stop", "space"), *"Holm", "enter")
+            await until(lambda: bench.front is not None)
+            assert bench.identity == Identity(unit="0042", operator="R. Holm")
+            await until(lambda: isinstance(app.screen, WalkScreen) and shows(app, "Clip the meter across"))
+
+    run(test)
+
+
+def test_a_whole_walk_of_every_kind_of_question() -> None:
+    async def test() -> None:
+        async with running(asking(*QUESTIONS, view=LIVE)) as (app, pilot, bench):
+            answers: list[tuple[tuple[str, ...], Reply]] = [
+                (("enter",), Reply(choice="done")),
+                (("n",), Reply(choice="no")),
+                ((*"23.5", "enter"), Reply(choice="done", text="23.5")),
+                ((*"1.1", "space", *"mV", "enter"), Reply(choice="done", text="1.1 mV")),
+                (("y", "enter", "e", "s", "enter"), Reply(choice="yes", text="yes")),
+                (("g", *"lead", "enter"), Reply(choice="go on", text="lead")),
+                (("right",), Reply(choice="turn", turns=0.02)),
+            ]
+            for number, (keys, expected) in enumerate(answers):
+                await until(lambda: app._pending is not None and len(bench.replies) == number)  # noqa: B023
+                await pilot.pause()
+                await pilot.press(*keys)
+                await until(lambda: len(bench.replies) > number)  # noqa: B023
+                assert bench.replies[-1] == expected
+            await until(lambda: shows(app, "leave benchkit"))
+            assert bench.offs == []
+            await pilot.press("enter")
+            await until(lambda: app.return_value is not None)
+        assert app.exit_status() == 0
+
+    run(test)
+
+
+def test_a_step_shows_what_a_person_needs() -> None:
+    async def test() -> None:
+        async with running(asking(scripted.PROBES)) as (app, _, _bench):
+            question = scripted.PROBES
+            for words in (question.do, question.caution, question.red, question.black, question.expected, question.why):
+                assert shows(app, words), words
+            for words in (
+                "2.412 V",
+                "● PASS",
+                "2.310 V",
+                "2.520 V",
+                "── SUPPLY OFF",
+                "First volts 3/7",
+                "57 lines kept",
+            ):
+                assert shows(app, words), words
+
+    run(test)
+
+
+SCENES = (
+    (scripted.PROBES, replace(scripted.VIEW, results=(scripted.FAILED,))),
+    (scripted.HOLD, scripted.VIEW),
+    (scripted.DECIDE, replace(scripted.VIEW, results=scripted.END_VIEW.results, supply=scripted.ON)),
+    (scripted.TRIM, scripted.TRIM_VIEW),
+    (scripted.TRIM, replace(scripted.TRIM_VIEW, live=scripted.live(-0.5))),
+    (scripted.BY_HAND_READING, replace(scripted.VIEW, supply=scripted.UNKNOWN)),
+)
+
+
+@pytest.mark.parametrize("size", [(80, 24), (120, 40), (40, 12), (30, 8)])
+def test_only_characters_that_console_fonts_hold_and_the_off_line_always(size: tuple[int, int]) -> None:
+    async def script(front: Front, bench: Bench) -> Closed:
+        for question, view in SCENES:
+            front.show(view)
+            bench.replies.append(await front.ask(question))
+        return scripted.closed()
+
+    async def test() -> None:
+        async with running(script, size=size) as (app, pilot, bench):
+            for number, (_, view) in enumerate(SCENES):
+                await until(lambda: app._pending is not None and len(bench.replies) == number)  # noqa: B023
+                await pilot.pause(0.15)
+                rows = drawn(app)
+                odd = {character for row in rows for character in row if not character.isascii()} - look.SAFE
+                assert odd == set()
+                bottom = " ".join(rows[-3:])
+                assert look.SUPPLY_WORDS[view.supply.energised] in bottom
+                assert "F9" in bottom
+                assert "OFF" in bottom
+                assert ("too small" in " ".join(rows)) == (size == (30, 8))
+                app.answered(Reply(choice="done"))
+
+    run(test)
+
+
+def test_characters_of_start_leave_and_end() -> None:
+    async def test() -> None:
+        async def end(front: Front, bench: Bench) -> Closed:
+            front.show(scripted.END_VIEW)
+            return scripted.closed(1, "fail")
+
+        for size in ((80, 24), (40, 12)):
+            async with running(asking(scripted.PROBES), identity=None, size=size) as (app, _, _bench):
+                assert {c for row in drawn(app) for c in row if not c.isascii()} <= look.SAFE
+            on = replace(scripted.VIEW, supply=scripted.ON)
+            async with running(asking(scripted.PROBES, view=on), size=size) as (app, pilot, _bench):
+                await pilot.press("ctrl+q")
+                await until(lambda: isinstance(app.screen, LeaveScreen))
+                await pilot.pause()
+                assert "SUPPLY ON" in " ".join(drawn(app)[-3:])
+                assert {c for row in drawn(app) for c in row if not c.isascii()} <= look.SAFE
+            async with running(end, size=size) as (app, pilot, _bench):
+                await until(lambda: shows(app, "▼ FAIL"))
+                assert {c for row in drawn(app) for c in row if not c.isascii()} <= look.SAFE
+                await pilot.press("enter")
+                await until(lambda: app.return_value is not None)
+            assert app.exit_status() == 1
+
+    run(test)
+
+
+def test_a_question_that_is_refused_keeps_what_was_typed() -> None:
+    async def test() -> None:
+        async def script(front: Front, bench: Bench) -> Closed:
+            front.show(scripted.VIEW)
+            bench.replies.append(await front.ask(scripted.TEXT))
+            bench.replies.append(await front.ask(scripted.TEXT, "15 degC to 35 degC was expected."))
+            return scripted.closed()
+
+        async with running(script) as (app, pilot, bench):
+            await pilot.press(*"99", "enter")
+            await until(lambda: shows(app, "15 degC to 35 degC was expected."))
+            await pilot.press("backspace", "backspace", *"21", "enter")
+            await until(lambda: len(bench.replies) == 2)
+            assert [reply.text for reply in bench.replies] == ["99", "21"]
+
+    run(test)
+
+
+def test_a_cancelled_question_goes_away_and_its_keys_do_nothing() -> None:
+    async def test() -> None:
+        async def script(front: Front, bench: Bench) -> Closed:
+            front.show(scripted.VIEW)
+            asked = asyncio.ensure_future(front.ask(scripted.CONFIRM))
+            await bench.off_asked.wait()
+            asked.cancel()
+            await asyncio.wait({asked})
+            front.show(replace(scripted.VIEW, busy="Switching off."))
+            await asyncio.sleep(0.5)
+            bench.replies.append(await front.ask(scripted.TEXT))
+            return scripted.closed()
+
+        async with running(script) as (app, pilot, bench):
+            await until(lambda: shows(app, "protective earth"))
+            await pilot.press("f9")
+            await until(lambda: shows(app, "Switching off."))
+            assert not shows(app, "protective earth")
+            await pilot.press("y")
+            assert bench.replies == []
+            await until(lambda: shows(app, "How warm"))
+            await pilot.press("9", "enter")
+            await until(lambda: bench.replies == [Reply(choice="done", text="9")])
+
+    run(test)
+
+
+def test_keys_pressed_before_a_question_could_be_read_do_not_answer_it() -> None:
+    async def test() -> None:
+        async with running(asking(scripted.CONFIRM), guard_s=30.0) as (app, pilot, bench):
+            await until(lambda: app._pending is not None)
+            await pilot.press("y", "enter")
+            assert bench.replies == []
+            app.screen.query_one("#step Answer", Answer)._guard_s = 0.0
+            await pilot.press("y")
+            await until(lambda: bench.replies == [Reply(choice="yes")])
+
+    run(test)
+
+
+def test_a_reason_is_asked_for_and_can_be_taken_back() -> None:
+    async def test() -> None:
+        async with running(asking(scripted.DECIDE)) as (app, pilot, bench):
+            await pilot.press("g", "enter")
+            assert shows(app, "A reason is needed")
+            await pilot.press("escape")
+            await pilot.pause(0.2)
+            await pilot.press("a")
+            await until(lambda: bench.replies == [Reply(choice="again")])
+
+    run(test)
+
+
+# --- off and out -----------------------------------------------------------------------------------------------------
+
+
+def test_f9_switches_off_whatever_has_the_focus() -> None:
+    async def test() -> None:
+        view = replace(LIVE, supply=scripted.ON)
+        async with running(asking(*QUESTIONS, view=view)) as (app, pilot, bench):
+            for number, _ in enumerate(QUESTIONS):
+                await until(lambda: app._pending is not None and len(bench.replies) == number)  # noqa: B023
+                await pilot.press("f9")
+                assert bench.offs == ["the operator asked for it"] * (number + 1)
+                assert shows(app, "OFF HAS BEEN ASKED FOR")
+                assert len(bench.replies) == number
+                app.answered(Reply(choice="done"))
+
+    run(test)
+
+
+def test_f9_works_while_a_reason_is_typed_and_before_leaving_and_at_the_start() -> None:
+    async def test() -> None:
+        on = replace(scripted.VIEW, supply=scripted.ON)
+        async with running(asking(scripted.DECIDE, view=on)) as (app, pilot, bench):
+            await pilot.press("g", "x", "f9")
+            assert isinstance(app.focused, Input)
+            assert len(bench.offs) == 1
+            await pilot.press("ctrl+q")
+            await until(lambda: isinstance(app.screen, LeaveScreen))
+            await pilot.press("f9", "space")
+            assert len(bench.offs) == 3
+        async with running(asking(scripted.DECIDE), identity=None) as (app, pilot, bench):
+            await pilot.press("4", "f9")
+            assert len(bench.offs) == 1
+
+    run(test)
+
+
+def test_the_space_bar_switches_off_unless_somebody_types() -> None:
+    async def test() -> None:
+        on = replace(scripted.VIEW, supply=scripted.ON)
+        async with running(asking(scripted.CONFIRM, view=on)) as (app, pilot, bench):
+            assert "space bar" in drawn(app)[-2]
+            await pilot.press("space")
+            assert len(bench.offs) == 1
+            assert bench.replies == []
+        async with running(asking(scripted.TEXT, view=on)) as (app, pilot, bench):
+            await pilot.pause(0.15)
+            assert "space bar" not in drawn(app)[-2]
+            await pilot.press("2", "space", "5", "enter")
+            await until(lambda: bench.replies == [Reply(choice="done", text="2 5")])
+            assert bench.offs == []
+        async with running(asking(scripted.CONFIRM)) as (app, pilot, bench):
+            await pilot.press("space")
+            assert bench.offs == [], "there is nothing to switch off, and a slip must not end a walk"
+
+    run(test)
+
+
+@pytest.mark.parametrize(
+    ("supply", "key"), [(scripted.ON, "ctrl+q"), (scripted.UNKNOWN, "ctrl+c"), (scripted.BY_HAND, "ctrl+q")]
+)
+def test_leaving_asks_while_the_supply_may_be_on_and_stays_by_default(supply: SupplyView, key: str) -> None:
+    async def test() -> None:
+        async with running(asking(scripted.TEXT, view=replace(scripted.VIEW, supply=supply))) as (app, pilot, bench):
+            await pilot.press(key)
+            await until(lambda: isinstance(app.screen, LeaveScreen))
+            await pilot.press("enter")
+            await until(lambda: isinstance(app.screen, WalkScreen))
+            assert bench.offs == []
+            await pilot.press(key)
+            await until(lambda: isinstance(app.screen, LeaveScreen))
+            await pilot.press("escape")
+            await until(lambda: isinstance(app.screen, WalkScreen))
+            await pilot.press(key)
+            await until(lambda: isinstance(app.screen, LeaveScreen))
+            await pilot.press("y")
+            await until(lambda: bench.offs == ["the operator left"])
+            await until(lambda: app.return_value is not None)
+        assert app.exit_status() == 4
+
+    run(test)
+
+
+def test_leaving_while_off_needs_no_question_and_waits_for_the_record_to_close(
+    monkeypatch: pytest.MonkeyPatch,
+) -> None:
+    monkeypatch.setattr("benchkit.ui.app.CLOSE_WITHIN_S", 3.0)
+
+    async def test() -> None:
+        done: list[str] = []
+
+        async def script(front: Front, bench: Bench) -> Closed:
+            front.show(scripted.VIEW)
+            asked = asyncio.ensure_future(front.ask(scripted.CONFIRM))
+            await bench.off_asked.wait()
+            asked.cancel()
+            await asyncio.wait({asked})
+            await asyncio.sleep(0.3)
+            done.append("closed")
+            return scripted.closed(4)
+
+        async with running(script) as (app, pilot, bench):
+            await pilot.press("ctrl+q")
+            await until(lambda: app.return_value is not None)
+            assert bench.offs == ["the operator left"]
+            assert done == ["closed"]
+        assert app.exit_status() == 4
+
+    run(test)
+
+
+def test_a_walk_that_does_not_end_is_left_all_the_same() -> None:
+    async def test() -> None:
+        begun = time.monotonic()
+        async with running(asking(scripted.CONFIRM)) as (app, pilot, bench):
+            await pilot.press("ctrl+q")
+            await until(lambda: app.return_value is not None, 8.0)
+            assert bench.offs == ["the operator left"]
+        assert app.exit_status() == 4
+        assert time.monotonic() - begun < 6.0
+
+    run(test)
+
+
+def test_an_error_of_the_walk_switches_off_and_says_why() -> None:
+    async def test() -> None:
+        async def script(front: Front, bench: Bench) -> Closed:
+            raise InstrumentError("link lost", "The supply's link broke", "", "Switch it off by hand")
+
+        async with running(script) as (app, _, bench):
+            await until(lambda: app.return_value is not None)
+            assert bench.offs == ["the walk can't go on"]
+        assert app.exit_status() == 3
+        assert "Switch it off by hand." in app.last_words
+
+    run(test)
+
+
+@pytest.mark.parametrize("where", ["walk", "heartbeat", "show"])
+def test_an_error_of_our_own_switches_off_first_and_leaves_a_log(where: str, tmp_path: Path) -> None:
+    bench = Bench()
+
+    async def start(front: Front, identity: Identity) -> Closed:
+        if where == "walk":
+            raise RuntimeError("boom")
+        front.show(scripted.VIEW if where == "heartbeat" else replace(scripted.VIEW, sections=None))  # type: ignore[arg-type]
+        await front.ask(scripted.CONFIRM)
+        return scripted.closed()
+
+    def beat() -> None:
+        if where == "heartbeat":
+            raise RuntimeError("boom")
+
+    app = BenchApp(
+        start, off_now=bench.off_now, heartbeat=beat, opening=scripted.OPENING, identity=WHO, log_dir=tmp_path / "logs"
+    )
+
+    async def test() -> None:
+        with pytest.raises((RuntimeError, TypeError)):
+            async with app.run_test(size=(80, 24)):
+                await until(lambda: app.crash is not None)
+
+    run(test)
+    assert bench.offs[0] == "an error of benchkit's own"
+    assert app.exit_status() == 5
+    [log] = (tmp_path / "logs").iterdir()
+    assert "Traceback" in log.read_text(encoding="utf-8")
+    assert str(log) in app.last_words
+    assert "Traceback" not in app.last_words
+
+
+def test_an_off_that_fails_does_not_stop_the_way_out() -> None:
+    async def start(front: Front, identity: Identity) -> Closed:
+        front.show(scripted.VIEW)
+        await front.ask(scripted.CONFIRM)
+        return scripted.closed()
+
+    def off(reason: str) -> None:
+        raise OSError("pipe broken")
+
+    app = BenchApp(start, off_now=off, heartbeat=lambda: None, opening=scripted.OPENING, identity=WHO, guard_s=0.0)
+
+    async def test() -> None:
+        async with app.run_test(size=(80, 24)) as pilot:
+            await pilot.press("f9")
+            await pilot.press("ctrl+q")
+            await until(lambda: app.return_value is not None, 8.0)
+
+    run(test)
+    assert app.exit_status() == 4
+
+
+# --- time and size ---------------------------------------------------------------------------------------------------
+
+
+def test_the_heart_beats_at_least_four_times_a_second_while_readings_pour_in() -> None:
+    async def test() -> None:
+        async def script(front: Front, bench: Bench) -> Closed:
+            asked = asyncio.ensure_future(front.ask(scripted.TRIM))
+            for number in range(1000):
+                front.show(replace(scripted.TRIM_VIEW, live=scripted.live(0.01 + number * 1e-5), kept=number))
+                await asyncio.sleep(0.01)
+            asked.cancel()
+            return scripted.closed()
+
+        async with running(script) as (app, _, bench):
+            await asyncio.sleep(0.3)
+            lags = []
+            beats, begun = bench.beats, time.monotonic()
+            while time.monotonic() - begun < 2.0:
+                before = time.monotonic()
+                await asyncio.sleep(0.01)
+                lags.append(time.monotonic() - before - 0.01)
+            assert bench.beats - beats >= 8
+            lags.sort()
+            assert lags[len(lags) // 2] < 0.1
+            assert shows(app, "MORE bias") or shows(app, "INSIDE") or shows(app, "LESS bias")
+
+    run(test)
+
+
+def test_a_watched_reading_that_stops_coming_is_called_stale() -> None:
+    async def test() -> None:
+        async with running(asking(scripted.TRIM, view=scripted.TRIM_VIEW)) as (app, _, _bench):
+            assert shows(app, "INSIDE the limits")
+            await until(lambda: shows(app, "STALE") and shows(app, "no fresh reading: do not turn"), 4.0)
+            assert not shows(app, "INSIDE the limits")
+
+    run(test)
+
+
+def test_too_small_says_so_answers_nothing_and_comes_back() -> None:
+    async def test() -> None:
+        on = replace(scripted.VIEW, supply=scripted.ON)
+        async with running(asking(scripted.CONFIRM, view=on)) as (app, pilot, bench):
+            await pilot.resize_terminal(30, 8)
+            await until(lambda: shows(app, "too small"))
+            await pilot.press("y", "enter")
+            assert bench.replies == []
+            await pilot.press("f9")
+            assert len(bench.offs) == 1
+            await pilot.resize_terminal(80, 24)
+            await until(lambda: shows(app, "protective earth"))
+            await pilot.press("y")
+            await until(lambda: bench.replies == [Reply(choice="yes")])
+
+    run(test)
+
+
+def test_many_sizes_in_a_row() -> None:
+    async def test() -> None:
+        async with running(asking(scripted.TRIM, view=LIVE)) as (app, pilot, bench):
+            for number in range(25):
+                size = Size(20 + (number * 37) % 130, 5 + (number * 11) % 45)
+                app.post_message(events.Resize(size, size))
+                await asyncio.sleep(0.005)
+            await pilot.resize_terminal(80, 24)
+            await pilot.pause(0.2)
+            await pilot.press("t")
+            await until(lambda: bench.replies == [Reply(choice="take")])
+
+    run(test)
+
+
+def test_more_than_fits_is_said_and_can_be_reached() -> None:
+    async def test() -> None:
+        long = replace(scripted.PROBES, why="A very long reason. " * 60 + "The very end.")
+        async with running(asking(long)) as (app, pilot, bench):
+            await until(lambda: shows(app, "arrow keys: more of the sheet"))
+            assert not shows(app, "The very end.")
+            for _ in range(8):
+                await pilot.press("pagedown")
+            await until(lambda: shows(app, "The very end."))
+            await pilot.press("enter")
+            await until(lambda: bench.replies == [Reply(choice="done")])
+
+    run(test)
+
+
+def test_without_a_walk_of_choices_nothing_is_taken() -> None:
+    async def test() -> None:
+        bare = Question(item="x", kind="confirm", title="", do="Well?", choices=(Choice(value="yes", label="yes"),))
+        async with running(asking(bare)) as (_, pilot, bench):
+            await pilot.press("q", "1", "home", "f5")
+            assert bench.replies == []
+
+    run(test)

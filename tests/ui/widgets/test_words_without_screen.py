@@ -1,0 +1,168 @@
+from __future__ import annotations
+
+from dataclasses import replace
+
+import pytest
+from hypothesis import given
+from hypothesis import strategies as st
+
+from benchkit.procedure.actions import Choice, Question
+from benchkit.session.front import Reply
+from benchkit.ui.widgets.answer_keys import keyed, typed_reply
+from benchkit.ui.widgets.card import progress_words, time_words
+from benchkit.ui.widgets.off_line import how_to_switch_off
+from benchkit.ui.widgets.outcome import limits_words, marks_of, verdict_strip
+from benchkit.ui.widgets.summary_words import closing_sentence, still_open
+from benchkit.ui.widgets.trail_words import count_by_verdict, trail
+from benchkit.ui.widgets.trim_words import TURNS, where
+from tests.ui.scripted import (
+    BY_HAND,
+    BY_HAND_READING,
+    END_VIEW,
+    FAILED,
+    HOLD,
+    NEAR,
+    ON,
+    ONE_SIDED,
+    PASSED,
+    TEXT,
+    VIEW,
+    live,
+    sections,
+)
+
+
+@given(st.lists(st.builds(Choice, value=st.text(max_size=6), label=st.text(max_size=6)), max_size=6))
+def test_every_choice_has_a_key_of_its_own(choices: list[Choice]) -> None:
+    found = keyed(choices)
+    assert [choice for _, choice in found] == choices
+    assert len({letter for letter, _ in found}) == len(choices)
+    assert all(letter != " " for letter, _ in found), "the space bar belongs to the supply"
+
+
+def test_usual_words_have_their_first_letters() -> None:
+    words = ("again", "go on", "make safe")
+    assert [letter for letter, _ in keyed([Choice(value=word, label=word) for word in words])] == ["a", "g", "m"]
+
+
+@pytest.mark.parametrize("typed", ["yes", "YES", "Yes"])
+def test_a_hold_passes_with_the_whole_word(typed: str) -> None:
+    assert typed_reply(HOLD, typed) == Reply(choice="yes", text=typed)
+
+
+@pytest.mark.parametrize("typed", ["y", "ye", "yes.", "ja", "", "done", "ok", "1"])
+def test_a_hold_passes_with_nothing_less(typed: str) -> None:
+    assert isinstance(typed_reply(HOLD, typed), str)
+
+
+@given(st.text())
+def test_no_other_text_passes_a_hold(typed: str) -> None:
+    reply = typed_reply(HOLD, typed)
+    if typed.casefold() != "yes":
+        assert not isinstance(reply, Reply)
+
+
+def test_make_safe_typed_at_a_hold_still_wants_its_reason() -> None:
+    assert typed_reply(HOLD, "make safe") == HOLD.choices[1]
+
+
+def test_typed_text_goes_through_as_it_is() -> None:
+    assert typed_reply(TEXT, "23 degC") == Reply(choice="done", text="23 degC")
+    assert typed_reply(TEXT, "rubbish") == Reply(choice="done", text="rubbish")
+    assert isinstance(typed_reply(TEXT, ""), str)
+
+
+def test_by_hand_may_be_answered_with_nothing_only_without_a_point() -> None:
+    assert isinstance(typed_reply(BY_HAND_READING, ""), str)
+    switch = Question(item="x", kind="by hand", title="", do="Switch on.", choices=(Choice(value="done", label="on"),))
+    assert typed_reply(switch, "") == Reply(choice="done")
+
+
+def test_the_trail_spells_out_where_we_are() -> None:
+    pieces = trail(sections(3, ("pass", "fail", "undecided")), 80)
+    text = "".join(piece.text for piece in pieces)
+    assert len(text) <= 80
+    assert text == "●─▼─▒─ First volts 3/7 ─·─·─·─·"
+    assert [piece.role for piece in pieces if piece.role != "line"][:4] == ["pass", "fail", "undecided", "here"]
+
+
+def test_a_long_title_is_cut_to_the_line() -> None:
+    long = tuple(replace(section, title="A title " * 20) for section in sections(2))
+    assert len("".join(piece.text for piece in trail(long, 60))) <= 60
+
+
+def test_spelled_out_the_trail_names_every_section() -> None:
+    text = "".join(piece.text for piece in trail(sections(0), 200, spelled=True))
+    for section in sections(0):
+        assert section.title in text
+
+
+def test_counts() -> None:
+    assert count_by_verdict(["pass", "undecided"]) == "1 passed, 0 failed, 1 undecided"
+
+
+def test_the_verdicts_keep_their_places() -> None:
+    plain = {verdict: verdict_strip(verdict).plain for verdict in ("pass", "undecided", "fail")}
+    assert plain["pass"] == " ● PASS │   undecided │   fail │"
+    assert plain["undecided"] == "   pass │ ▒ UNDECIDED │   fail │"
+    assert plain["fail"] == "   pass │   undecided │ ▼ FAIL │"
+    assert verdict_strip(None).plain == "   pass │   undecided │   fail │"
+
+
+def test_limits_in_words() -> None:
+    assert limits_words(PASSED) == "2.310 V to 2.520 V"
+    assert limits_words(ONE_SIDED) == "at most 10 %"
+    assert limits_words(replace(PASSED, high=None)) == "at least 2.310 V"
+    assert limits_words(replace(PASSED, high=None, low=None)) == ""
+
+
+def test_marks_say_what_else_must_be_known() -> None:
+    marks = marks_of(replace(PASSED, from_before=True, overridden="known bad meter lead"))
+    assert "before" in marks[0]
+    assert "known bad meter lead" in marks[1]
+
+
+def test_progress() -> None:
+    assert progress_words(None, None) == ""
+    assert progress_words(1.7, None, width=4) == "████ 100 %"
+    assert progress_words(None, 0.2) == "1 s left"
+    assert time_words(-3.0) == "0 s"
+    assert time_words(120.0) == "2 min 0 s"
+
+
+def test_the_off_words_follow_the_focus_and_the_supply() -> None:
+    assert how_to_switch_off(ON, typing=False) == "F9 or space bar: OFF at once"
+    assert how_to_switch_off(ON, typing=True) == "F9: OFF at once"
+    assert "BY HAND" in how_to_switch_off(BY_HAND, typing=False)
+    assert len("▲▲ SUPPLY UNKNOWN " + how_to_switch_off(BY_HAND, typing=False, narrow=True)) <= 38
+    assert len("▲▲ SUPPLY UNKNOWN " + how_to_switch_off(ON, typing=False, narrow=True)) <= 38
+
+
+def test_where_a_watched_reading_lies() -> None:
+    assert where(live(0.02)) == "inside"
+    assert where(live(0.001)) == "below"
+    assert where(live(0.03)) == "above"
+    assert where(replace(live(0.03), value=None)) == "nowhere"
+
+
+def test_opposite_keys_turn_the_screw_back() -> None:
+    for one, other in (("left", "right"), ("down", "up"), ("pagedown", "pageup")):
+        assert TURNS[one] == -TURNS[other] < 0
+
+
+def test_the_end_says_what_it_means() -> None:
+    assert "failed" in closing_sentence(END_VIEW)
+    assert "passed" in closing_sentence(replace(END_VIEW, verdict="pass"))
+    assert "undecided" in closing_sentence(replace(END_VIEW, verdict="undecided"))
+    stopped = closing_sentence(replace(END_VIEW, verdict="pass", stopped="a rail stayed in its limit."))
+    assert "stopped" in stopped
+    assert "passed" not in stopped
+    assert "Unit 0042" in closing_sentence(replace(END_VIEW, kind="walk"))
+    assert "0042" not in closing_sentence(END_VIEW), "a rehearsal proves nothing about a unit with that number"
+
+
+def test_what_is_still_open_counts_only_the_newest_of_each_item() -> None:
+    again = replace(FAILED, verdict="pass")
+    assert still_open((FAILED, NEAR)) == (FAILED, NEAR)
+    assert still_open((FAILED, NEAR, again)) == (NEAR,)
+    assert still_open(VIEW.results) == ()
