@@ -108,8 +108,13 @@ class SupplyCommands(_Part):
 
 
 class SupplyQuestions(_Part):
-    """``[questions]``: each is answered by two values, the positive rail's first."""
+    """``[questions]``: each is answered by two values, the positive rail's first.
 
+    With ``joined`` the supply takes all questions of a sample in one message and joins its answers by semicolons, as
+    IEEE 488.2 has it; then a look at the supply is one question instead of six.
+    """
+
+    joined: bool = False
     set_volts: Message
     limits: Message
     output: Message

@@ -16,15 +16,24 @@ from __future__ import annotations
 
 import math
 import time
+from collections.abc import Callable
 from concurrent.futures import Future
 from contextlib import suppress
 from dataclasses import dataclass, replace
+from functools import partial
 
 from benchkit.errors import EntryError, InstrumentError
 from benchkit.events import SupplyState
 from benchkit.instruments.conversation import Conversation
 from benchkit.instruments.link import Link
-from benchkit.instruments.numbers import NumberRules, parse_flags, parse_numbers, parse_switches, visible
+from benchkit.instruments.numbers import (
+    NumberRules,
+    garbled,
+    parse_flags,
+    parse_numbers,
+    parse_switches,
+    visible,
+)
 from benchkit.instruments.profile import SupplyProfile
 
 OFF_TIMEOUT_S = 0.6
@@ -213,17 +222,9 @@ class Supply:
             )
 
     def _sample(self, conversation: Conversation) -> Sample:
-        questions = self._profile.questions
         sign = -1.0 if self._profile.negative_programmed_positive else 1.0
-        outputs = self._switches(conversation)
-        set_volts = self._pair(conversation, questions.set_volts)
-        limits = self._pair(conversation, questions.limits)
-        volts = self._pair(conversation, questions.volts)
-        amps = self._pair(conversation, questions.amps)
-        flags = (0, 0)
-        if questions.in_limit:
-            pair = conversation.ask(questions.in_limit, lambda text: parse_flags(text, 2))
-            flags = (pair[0] & self._profile.in_limit_bits, pair[1] & self._profile.in_limit_bits)
+        outputs, set_volts, limits, volts, amps, flags = self._answers(conversation)
+        bits = self._profile.in_limit_bits
         state = SupplyState(
             output_on=any(outputs),
             positive_v=volts[0],
@@ -233,10 +234,36 @@ class Supply:
             set_positive_v=set_volts[0],
             set_negative_v=sign * set_volts[1] + 0.0,
             limit_a=max(limits),
-            positive_in_limit=bool(flags[0]),
-            negative_in_limit=bool(flags[1]),
+            positive_in_limit=bool(int(flags[0]) & bits),
+            negative_in_limit=bool(int(flags[1]) & bits),
         )
-        return Sample(state=state, outputs=outputs)
+        return Sample(state=state, outputs=(bool(outputs[0]), bool(outputs[1])))
+
+    def _answers(self, conversation: Conversation) -> list[tuple[float, ...]]:
+        """Ask all questions of a sample, in one message if the profile says that the supply takes that."""
+        questions = self._profile.questions
+        numbers = partial(parse_numbers, count=2, rules=self._rules)
+        wanted: list[tuple[str, Callable[[str], tuple[float, ...]]]] = [
+            (questions.output, partial(parse_switches, count=2)),
+            (questions.set_volts, numbers),
+            (questions.limits, numbers),
+            (questions.volts, numbers),
+            (questions.amps, numbers),
+        ]
+        if questions.in_limit:
+            wanted.append((questions.in_limit, partial(parse_flags, count=2)))
+        if questions.joined:
+
+            def parse(text: str) -> list[tuple[float, ...]]:
+                parts = text.split(";")
+                if len(parts) != len(wanted):
+                    raise garbled(text, f"{len(wanted)} answers with semicolons between")
+                return [read(part) for part, (_, read) in zip(parts, wanted, strict=True)]
+
+            answers = conversation.ask(";:".join(question for question, _ in wanted), parse)
+        else:
+            answers = [conversation.ask(question, read) for question, read in wanted]
+        return answers if questions.in_limit else [*answers, (0, 0)]
 
     def _switches(self, conversation: Conversation) -> tuple[bool, bool]:
         pair = conversation.ask(self._profile.questions.output, lambda text: parse_switches(text, 2))

@@ -8,6 +8,7 @@ What is worked around here (pyvisa-py 0.8)
   there: a slice ends at the terminator or after `SLICE_S`, and the caller has its own deadline.
 * A peer that has closed looks like silence.  A look at the socket tells them apart after each slice.
 * ``TCP_NODELAY`` can't be set as an attribute, and without it an "output off" behind another message waits some 40 ms.
+* A host that nobody knows leaves an open socket behind there: names are looked up before.
 * The exceptions are not only VISA's: plain OSError, RuntimeError, TypeError, ValueError, Exception come through.
   `boundary` is the one place where they are caught.
 * There is one resource manager a process; closing it would close every session, so that it is never closed.
@@ -49,14 +50,17 @@ class VisaSocket:
     Parameters
     ----------
     address : SocketAddress
-    write_termination, read_termination : str
-        One character at the end of a reply; any text at the end of a message.
+        Where it is.
+    read_termination : str
+        The one character that ends a reply.
     open_timeout_s : float
+        So long may the connection take, s.
     """
 
     def __init__(self, address: SocketAddress, *, read_termination: str, open_timeout_s: float) -> None:
         self._address = address
         with boundary(address.text, "open"):
+            socket.getaddrinfo(address.host, address.port, socket.AF_INET)
             manager = resource_manager()
             self._resource: Any = manager.open_resource(
                 address.text,
@@ -146,7 +150,7 @@ def translate(error: Exception, address: str, doing: str) -> InstrumentError:
         return InstrumentError(
             "link lost", f"The connection to {address} broke ({text})", "", "Check the cable and the instrument"
         )
-    if "Name or service not known" in text or "getaddrinfo" in text or "name resolution" in text:
+    if isinstance(error, socket.gaierror):
         return InstrumentError(
             "bad address",
             f"Nobody knows the host in {address}",

@@ -111,6 +111,8 @@ class Keeper:
             status = 5
             self._own_failure(error)
         self._journal.finish(_DISK_WAIT_S)
+        if self._log is not None:
+            self._log.close(_PIPE_WAIT_S)
         self._writer.finish(_PIPE_WAIT_S)
         return status
 

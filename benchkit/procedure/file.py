@@ -107,7 +107,7 @@ class Step(_Strict):
     def _fits_its_kind(self) -> Step:
         wants = _WANTS.get(self.kind, ())
         for key in wants:
-            if getattr(self, key) in (None, ()):
+            if getattr(self, key) in (None, (), ""):
                 raise ValueError(f"a step of the kind {self.kind!r} needs {key!r}")
         for key, kinds in _ONLY_FOR.items():
             if key in self.model_fields_set and self.kind not in kinds:

@@ -332,7 +332,7 @@ class _Planner:
             samples=step.samples,
             settle_s=self._settle_s(step),
             acceptance=step.acceptance,
-            allow=0.0 if step.allow is None else quantities.parse(step.allow, point.unit),
+            allow=self._allow(step, point),
             trimmer_end=trimmer_end,
             may_go_on=step.override and not trimmer_end and point.name not in NEVER_PASSED_OVER,
         )
@@ -344,6 +344,17 @@ class _Planner:
             return Limits(low, high, None, point.unit, "stated in the procedure")
         except (EntryError, ValueError) as error:
             raise self._refuse(step, f"states limits for {point.name} that can't be used: {error}") from None
+
+    def _allow(self, step: Step, point: Point) -> float:
+        if step.allow is None:
+            return 0.0
+        try:
+            allow = quantities.parse(step.allow, point.unit)
+        except EntryError as error:
+            raise self._refuse(step, f"allows {step.allow!r} at {point.name}: {error.came}", error.expected) from None
+        if allow < 0.0:
+            raise self._refuse(step, f"allows {step.allow!r} at {point.name}", "zero or more")
+        return allow
 
     def _powered_condition(self, step: Step) -> Joined | Condition:
         cold = Condition(

@@ -12,7 +12,8 @@ much on the way (Heun's rule against Euler's).
 
 The end of it is the unit's balance with supply and limit, the same solution that predictions use.  A rail that comes
 close to it waits there for the other one (a shorted rail is there in microseconds, the other one takes its time); when
-both are close, or nothing moves them any more, they are *settled* and follow the balance from then on.
+both are close, or nothing moves them any more, they are *settled* and follow the balance from then on.  So they are too
+where a faulty unit is so stiff that steps have to be cut short again and again: there the balance comes a little early.
 """
 
 from __future__ import annotations
@@ -33,7 +34,8 @@ _FALLING_SHARE = 0.2
 _LEAST_STEP_V = 0.02
 _TOLERANCE = 0.15
 _HALVINGS = 8
-_MOST_STEPS = 400
+_MOST_STEPS = 150
+_MOST_STRUGGLES = 6
 
 Pair = tuple[float, float]
 
@@ -77,13 +79,14 @@ class Rails:
     _rates: Pair | None = None
     _goal: Pair = (0.0, 0.0)
     _steps: int = 0
+    _struggles: int = 0
     _channels: tuple[Channel, Channel] = field(default=(Channel(), Channel()))
 
     def disturb(self, channels: tuple[Channel, Channel]) -> None:
         """Take over new settings (or a change in the unit): the rails start moving from where they are."""
         self._channels = channels
         self._rates = None
-        self._steps = 0
+        self._steps = self._struggles = 0
         self.settled = not any(_delivers(channel) for channel in channels) and max(self.volts) <= EMPTY_V
         if self.settled:
             self.volts = (0.0, 0.0)
@@ -122,15 +125,19 @@ class Rails:
         assert self._rates is not None
         start, rates = self.volts, self._rates
         seconds = min([most_s, *(self._time_s(rail, start[rail], rates[rail]) for rail in (0, 1))])
-        for _ in range(_HALVINGS):
+        halvings = 0
+        while True:
             there = self._moved(start, rates, seconds)
             new_rates = self._find_rates(load.drawn(there), there)
             wrong = [abs(new_rates[rail] - rates[rail]) * seconds / 2.0 for rail in (0, 1)]
             allowed = [_TOLERANCE * max(abs(there[rail] - start[rail]), _LEAST_STEP_V) for rail in (0, 1)]
             arrived = [abs(there[rail] - self._target(rail)) < 1e-9 for rail in (0, 1)]
-            if all(arrived[rail] or wrong[rail] <= allowed[rail] for rail in (0, 1)):
+            if halvings == _HALVINGS or all(arrived[rail] or wrong[rail] <= allowed[rail] for rail in (0, 1)):
                 break
+            halvings += 1
             seconds /= 2.0
+        if any(_delivers(channel) for channel in self._channels):
+            self._struggles = self._struggles + 1 if halvings > 1 else max(self._struggles - 1, 0)
         mean = _pair(rates[rail] if arrived[rail] else (rates[rail] + new_rates[rail]) / 2.0 for rail in (0, 1))
         self.volts = self._moved(start, mean, seconds)
         # The unit was asked at the end of Euler's step, not of Heun's: what changed on the way is taken as linear.
@@ -203,7 +210,7 @@ class Rails:
         """Settle when both rails are near their goal or stand still; return whether they have."""
         assert self._rates is not None
         rest = [self._rail_at_rest(rail, self._rates[rail]) for rail in (0, 1)]
-        if all(rest) or self._steps >= _MOST_STEPS:
+        if all(rest) or self._steps >= _MOST_STEPS or self._struggles >= _MOST_STRUGGLES:
             self.settled = True
             self.volts = self._goal
             self._raise_marks()

@@ -16,7 +16,7 @@ from benchkit.procedure.questions import STOP
 if TYPE_CHECKING:
     from benchkit.session.run import Session
 
-RAMP_SLICE_S = 0.25
+RAMP_SLICE_S = 0.5
 """A ramp moves in steps of this length at most; each is watched."""
 
 OWN_WATCH_S = 0.2

@@ -145,13 +145,13 @@ class Session:
             self._loop.call_soon_threadsafe(self._take_push, push)
 
     def off_now(self, reason: str = "the operator asked for it") -> None:
-        """Switch off at once, whatever is being done; called on the event loop, returns at once."""
+        """Switch off at once, whatever is being done; any thread may call, and it returns at once."""
         if not self.job.manual_supply:
             self.keeper.off(reason)
         if not self._off_asked:
             self._off_asked = True
-            self._pushed.append(_Asked(reason))
-            self._woken.set()
+            with contextlib.suppress(RuntimeError):
+                self._loop.call_soon_threadsafe(self._take_push, _Asked(reason))
 
     def heartbeat(self) -> None:
         """Tell the keeper that the event loop turns."""
@@ -287,7 +287,7 @@ class Session:
             fresh = actions or fresh
         return fresh
 
-    def _take_push(self, push: Push | KeeperDied) -> None:
+    def _take_push(self, push: Push | KeeperDied | _Asked) -> None:
         self._pushed.append(push)
         self._woken.set()
 
@@ -426,7 +426,7 @@ class Session:
         if isinstance(action.event, Closed) and self.hands.simulated and not self._truth_noted:
             self._truth_noted = True
             truth = await self.hands.truth()
-            figures = {key: float(value) for key, value in truth.items() if isinstance(value, (int, float))}
+            figures = _figures(truth)
             return Noted(text="The simulated unit at the end of the walk.", figures=figures)
         return action.event
 
@@ -466,6 +466,20 @@ class _Asked:
 
     def __init__(self, reason: str) -> None:
         self.reason = reason
+
+
+def _figures(truth: dict[str, Any]) -> dict[str, float]:
+    """Keep the plain numbers of a rehearsal's truth; a pair of rails becomes two."""
+    figures: dict[str, float] = {}
+    for key, value in truth.items():
+        if isinstance(value, bool):
+            continue
+        if isinstance(value, (int, float)):
+            figures[key] = float(value)
+        elif isinstance(value, (list, tuple)) and len(value) == 2 and key.endswith("_v"):
+            stem = key.removesuffix("_v")
+            figures[f"{stem}_positive_v"], figures[f"{stem}_negative_v"] = float(value[0]), float(value[1])
+    return figures
 
 
 async def _lapse(task: asyncio.Task[Event | None] | None) -> None:

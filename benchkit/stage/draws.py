@@ -24,6 +24,7 @@ from typing import Literal
 import numpy as np
 from numpy.typing import NDArray
 
+from benchkit.errors import EntryError
 from benchkit.stage.design import Design
 from benchkit.stage.faults import healthy_values, transistor_defaults
 from benchkit.stage.points import Part, parts_of
@@ -53,7 +54,14 @@ def seeds(use: SeedUse, seed: int) -> np.random.Generator:
     -------
     numpy.random.Generator
         Independent of the other uses' generators.
+
+    Raises
+    ------
+    EntryError
+        For a negative seed.
     """
+    if seed < 0:
+        raise EntryError(f"seed: {seed} came", "a whole number, zero or more")
     children = np.random.SeedSequence(seed).spawn(len(SEED_USES))
     return np.random.default_rng(children[SEED_USES.index(use)])
 

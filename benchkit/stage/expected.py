@@ -46,12 +46,15 @@ DEFAULT_UNITS = 6000
 """Units in an ensemble when nothing else is asked for.
 
 So many that, of fresh healthy units, 99.4 % to 99.95 % lie within each reading's limits whatever the seed: the share
-outside scatters by 0.067 % (one sigma) around 0.27 %. Half as many would leave that band now and then.
+outside scatters by 0.05 % to 0.08 % (one sigma) around 0.27 %. In a study over both demonstration designs (the script
+``tests/benchmarks/default_units.py``; 64,000 fresh units, six seeds, four conditions) single readings left the band at
+1,000 and 2,000 units and none from 4,000 on; the worst one held 99.47 % at 4,000 units and 99.52 % at 6,000.
 """
 MOST_UNSOLVED = 1e-3
 """Share of units without a solution above which a prediction is refused."""
 LEAST_IN_REACH = 0.5
 """Share of units that must reach the target for limits at the target to mean anything."""
+_HELD_WIDTH = 1e-3
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -65,6 +68,10 @@ class PointLimits:
         Reading of the nominal unit; None for an overload.
     low, high : float
         Hold 99.73 % of healthy units; infinite where a healthy unit may read overload.
+    held : bool
+        The condition holds this reading, so that its limits are no prediction and have next to no width: a rail that a
+        supply holds at its set voltage, the heat sink of a cold unit, the drop that the trimmer was set by. A real
+        reading of it tells about supply, room or trim, not about the unit's parts.
     """
 
     point: str
@@ -72,6 +79,7 @@ class PointLimits:
     nominal: float | None
     low: float
     high: float
+    held: bool = False
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -197,7 +205,8 @@ def expected(
             continue
         low, high = interval(group.drawn.points[point.name][group.good])
         value = float(bare.points[point.name][0])
-        limits.append(PointLimits(point=point.name, unit=point.unit, nominal=value, low=low, high=high))
+        held = _held(point.name, condition, design, high - low)
+        limits.append(PointLimits(point=point.name, unit=point.unit, nominal=value, low=low, high=high, held=held))
     return Expected(
         points=tuple(limits),
         units=units,
@@ -302,8 +311,20 @@ def expected_json(
         "out_of_reach": found.out_of_reach,
         "seed": found.seed,
         "solve_seconds": finite(found.solve_seconds),
-        "points": [{key: finite(value) for key, value in asdict(limits).items()} for limits in found.points],
+        "points": [{key: finite(getattr(limits, key)) for key in _POINT_KEYS} for limits in found.points],
     }
+
+
+_POINT_KEYS = ("point", "unit", "nominal", "low", "high")
+
+
+def _held(point: str, condition: Condition, design: Design, width: float) -> bool:
+    if point in ("rail+", "rail-"):
+        set_v = condition.positive_v if point == "rail+" else -condition.negative_v
+        return width < _HELD_WIDTH * set_v
+    if point == "heatsink":
+        return condition.when == "cold"
+    return point == "emitter.pair.1" and condition.trimmer == "target" and design.spreader.trimmer is not None
 
 
 def finite(value: object) -> object:

@@ -35,7 +35,7 @@ _HOTTEST_C = 400.0
 _COLDEST_C = -60.0
 
 
-@lru_cache(maxsize=64)
+@lru_cache(maxsize=256)
 def compiled(design: Design, variant: Variant) -> Compiled:
     """Compile a design's netlist; cached."""
     return compile_netlist(build(design, variant).netlist)

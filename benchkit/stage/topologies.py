@@ -172,7 +172,7 @@ def check_modelled(design: Design, file_name: str) -> None:
         )  # fmt: skip
 
 
-@lru_cache(maxsize=64)
+@lru_cache(maxsize=256)
 def build(design: Design, variant: Variant = POWERED) -> StageNetlist:
     """Make the netlist of a design.
 

@@ -92,6 +92,7 @@ def solve_unpowered(
     *,
     position: Array | float | None = None,
     on_range: MeterRange | None = None,
+    start: Solution | None = None,
 ) -> UnpoweredReadings:
     """Read an unpowered point of every unit.
 
@@ -106,6 +107,8 @@ def solve_unpowered(
         The trimmer's travel of each unit, instead of the condition's.
     on_range : MeterRange, optional
         Instead of the range that the nominal unit asks for.
+    start : Solution, optional
+        Where to start: of one unit, or of as many.
 
     Returns
     -------
@@ -136,7 +139,7 @@ def solve_unpowered(
     variant = Variant(powered=False, probe=point.name)
     circuit = compiled(design, variant)
     chosen = {key: value for key, value in values.items() if key in circuit.keys}
-    solution = circuit.solve(chosen, units, None if unit is None else unit.solution)
+    solution = circuit.solve(chosen, units, start if unit is None else unit.solution)
     volts = solution.between(*build(design, variant).between[point.name])
     reading = volts if point.function == "diode" else volts / used.amps
     reading = np.where(reading > OVER_RANGE * used.full_scale, np.inf, reading)
@@ -153,8 +156,10 @@ def _nominal_unit(design: Design, condition: Unpowered) -> UnpoweredReadings:
         ranges = (DIODE_RANGE,)
     elif condition.point.startswith("ohm.heatsink."):
         ranges = (OHMS_RANGES[-1],)
+    start: Solution | None = None
     for candidate in ranges:
-        readings = solve_unpowered(design, nominal(design), condition, on_range=candidate)
+        readings = solve_unpowered(design, nominal(design), condition, on_range=candidate, start=start)
+        start = readings.solution
         if bool(readings.converged.all()) and bool(np.isfinite(readings.values).all()):
             break
     return readings

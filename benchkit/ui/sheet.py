@@ -53,7 +53,7 @@ Input:focus {{ background-tint: {STRONG} 6%; }}
 
 #trim .card {{ height: auto; max-height: 4; }}
 #trim .card-details {{ display: none; }}
-.card-details.empty {{ display: none; }}
+.empty {{ display: none; }}
 #trim .card-do {{ margin-bottom: 0; }}
 .trim-where {{ height: 1; padding: 0 1; margin: 1 0; }}
 .trim-figures {{ layout: horizontal; height: 5; margin: 0 2; }}
@@ -98,12 +98,12 @@ LeaveScreen {{ background: {GROUND}; align: center middle; }}
 .small Card, .small Outcome, .small Answer {{ padding: 0; }}
 .small .card-details {{ padding: 0; }}
 .small Outcome {{ border-top: none; }}
-.small .outcome-why {{ display: none; }}
 .small .outcome-gauge {{ margin: 0; }}
 .small Answer {{ border-top: none; }}
 .small .hold-title {{ border-top: none; margin: 0; padding: 0 1; height: 1; }}
 .small #hold {{ border-bottom: none; }}
 .small .deciding {{ margin-bottom: 0; }}
+.small .outcome-why {{ display: none; }}
 .small .deciding .outcome-why {{ display: block; max-height: 1; margin-top: 0; }}
 .small #trim .card {{ display: none; }}
 .small .trim-figures {{ margin: 0; }}

@@ -1,4 +1,4 @@
-"""Every fault of a link over a real socket: its kind, its sentence, how long it takes, and that the next answer is right.
+"""Every fault of a link over a real socket: kind, sentence, time taken, and that the next answer is right.
 
 The servers are on loopback.  Times are limits for a loaded machine, not measurements.
 """
@@ -9,10 +9,13 @@ import socket
 import threading
 import time
 from collections.abc import Callable, Iterator
+from contextlib import suppress
+from functools import partial
 
 import pytest
 
 from benchkit.errors import InstrumentError
+from benchkit.instruments.conversation import Conversation
 from benchkit.instruments.link import Link
 from benchkit.instruments.meter import Meter
 from benchkit.instruments.numbers import NumberRules, parse_number
@@ -52,10 +55,7 @@ class At:
         ).result(10)
 
     def ask_once(self) -> float | object:
-        def job(talk: object) -> float | object:
-            from benchkit.instruments.conversation import Conversation
-
-            assert isinstance(talk, Conversation)
+        def job(talk: Conversation) -> float | object:
             with talk.impatient(0.3, repeats=False):
                 return talk.ask(QUESTION, lambda text: parse_number(text, RULES))
 
@@ -112,7 +112,11 @@ def closes(data: bytes = b"", *, reset: bool = False) -> Fault:
 
 def late(data: bytes, seconds: float) -> Fault:
     def act(connection: socket.socket, message: str) -> bool:
-        threading.Timer(seconds, lambda: connection.sendall(data)).start()
+        def speak() -> None:
+            with suppress(OSError):
+                connection.sendall(data)
+
+        threading.Timer(seconds, speak).start()
         return True
 
     return act
@@ -197,10 +201,7 @@ def test_a_reply_in_pieces_is_one_reply(at: At) -> None:
 def test_a_setting_is_never_sent_twice(at: At) -> None:
     at.server.fault = lambda connection, message: message == "SET 1" and closes()(connection, message)
 
-    def job(talk: object) -> None:
-        from benchkit.instruments.conversation import Conversation
-
-        assert isinstance(talk, Conversation)
+    def job(talk: Conversation) -> None:
         talk.tell("SET 1")
         talk.ask(QUESTION, lambda text: parse_number(text, RULES))
 
@@ -289,10 +290,13 @@ def test_one_thread_owns_the_instrument_whoever_asks(at: At) -> None:
     at.server.answer = lambda message: message.partition(" ")[2] or None  # type: ignore[method-assign]
     wrong: list[str] = []
 
+    def echo(token: str, talk: Conversation) -> str:
+        return talk.ask(f"ECHO? {token}", str)
+
     def asks(name: int) -> None:
         for number in range(100):
             token = f"{name}-{number}"
-            got = at.link.submit(lambda talk, token=token: talk.ask(f"ECHO? {token}", str)).result(10)
+            got = at.link.submit(partial(echo, token)).result(10)
             if got != token:
                 wrong.append(f"{token}: {got}")
 
@@ -311,10 +315,7 @@ def test_messages_behind_each_other_are_not_held_back(at: At) -> None:
     for _ in range(15):
         before = len(at.server.messages())
 
-        def job(talk: object) -> float:
-            from benchkit.instruments.conversation import Conversation
-
-            assert isinstance(talk, Conversation)
+        def job(talk: Conversation) -> float:
             began = time.monotonic()
             talk.tell("SET 1")
             talk.ask(QUESTION, str)

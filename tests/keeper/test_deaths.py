@@ -14,9 +14,9 @@ from pathlib import Path
 
 import pytest
 
-from benchkit.events import Noted, OutputOff
+from benchkit.events import ContactLost, Noted, OutputOff
 from benchkit.journal import read, verify
-from benchkit.keeper.client import KeeperClient, KeeperDied, Push
+from benchkit.keeper.client import KeeperClient, KeeperDied, Push, WatchLines
 from tests.instruments.server import TestSupply
 from tests.keeper.helpers import Bench, bench, wait_until
 
@@ -245,3 +245,68 @@ def test_a_full_disk_does_not_delay_off(tmp_path: Path) -> None:
         assert "could not be kept" in push.problem
         assert at.kept() == ["noted"]
         assert verify(at.record).line == 1
+
+
+def keeper_with(monkeypatch: pytest.MonkeyPatch, change: str) -> None:
+    """Let the next keeper start with something in it changed."""
+
+    def spawn(arguments: list[str], log_dir: Path | None) -> subprocess.Popen[bytes]:
+        code = f"import sys\n{change}\nsys.argv[1:] = {arguments!r}\n"
+        code += "from benchkit.keeper.__main__ import main\nmain()"
+        return subprocess.Popen(
+            [sys.executable, "-c", code],
+            stdin=subprocess.PIPE,
+            stdout=subprocess.PIPE,
+            stderr=subprocess.DEVNULL,
+            cwd=ROOT,
+            start_new_session=True,
+        )
+
+    monkeypatch.setattr("benchkit.keeper.client._spawn", spawn)
+
+
+def test_a_computer_that_slept_wakes_to_an_output_that_goes_off(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """The clock that counts suspended time is put forward, because a test can't suspend the computer."""
+    flag = tmp_path / "slept"
+    keeper_with(
+        monkeypatch,
+        "import os, benchkit.keeper.platform as platform\n"
+        f"platform.slept_s = lambda: 3600.0 if os.path.exists({str(flag)!r}) else 0.0",
+    )
+    with bench(tmp_path) as at:
+        at.connect()
+        at.client.supply_set(5.0, -5.0, 0.05, True).result(5)
+        at.client.arm().result(5)
+        at.client.heartbeat()
+        flag.touch()
+        assert at.supply.wait_off(0.9)
+        at.wait_for(OutputOff)
+        lost, off = at.events()
+        assert isinstance(lost, ContactLost)
+        assert "slept for 3600 s" in lost.problem
+        assert isinstance(off, OutputOff)
+        assert off.confirmed
+        assert at.client.alive
+
+
+def test_an_error_of_the_keepers_own_switches_off_before_it_leaves(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    keeper_with(
+        monkeypatch,
+        "import benchkit.keeper.watch as watch\ndef look(*a): raise ZeroDivisionError('planted')\nwatch.look = look",
+    )
+    with bench(tmp_path) as at:
+        at.connect()
+        at.client.open_journal(at.record, Noted(text="begin")).result(5)
+        at.client.supply_set(5.0, -5.0, 0.05, True).result(5)
+        at.client.watch(WatchLines()).result(5)
+        at.client.sample(0.0)
+        assert at.supply.wait_off(1.0)
+        at.wait_for(KeeperDied)
+        assert at.kept() == ["noted", "contact lost", "output off"]
+        lost = at.events()[0]
+        assert isinstance(lost, ContactLost)
+        assert (lost.who, "planted" in lost.problem) == ("the keeper", True)

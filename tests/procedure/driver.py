@@ -105,6 +105,12 @@ do = "Anything to remark?"
 name = "limit"
 title = "Limit"
 [[section.step]]
+name = "short"
+kind = "tell"
+title = "Short the leads"
+do = "Join them."
+act = "short the leads"
+[[section.step]]
 name = "check"
 kind = "limit check"
 title = "Limit into a short"

@@ -190,12 +190,17 @@ def run_deck(
 
 def _child_seconds() -> float:
     """Processor time [s] of all programs that were run and have ended."""
-    spent = os.times()
-    return spent.children_user + spent.children_system
+    try:
+        import resource
+    except ImportError:  # not POSIX: hundredths of a second, or nothing
+        spent = os.times()
+        return spent.children_user + spent.children_system
+    usage = resource.getrusage(resource.RUSAGE_CHILDREN)
+    return usage.ru_utime + usage.ru_stime
 
 
 def run_text(text: str) -> tuple[dict[str, float], float]:
-    """Run a deck in batch; every printed node's voltage [V] by ngspice's name, and the processor seconds that it took."""
+    """Run a deck in batch; every printed node's voltage [V] by ngspice's name, and the processor seconds it took."""
     with tempfile.TemporaryDirectory() as folder:
         path = Path(folder) / "deck.cir"
         path.write_text(text)

@@ -2,6 +2,7 @@ from __future__ import annotations
 
 import hashlib
 import math
+import pickle
 from pathlib import Path
 
 import pytest
@@ -49,6 +50,12 @@ def test_designs_are_frozen_and_hashable() -> None:
     assert tern() != breadboard()
     with pytest.raises(ValueError, match="frozen"):
         tern().rails.positive_v = 3.0
+
+
+def test_designs_and_predictions_travel_to_another_process() -> None:
+    again = pickle.loads(pickle.dumps(tern()))
+    assert again == tern()
+    assert (again.text, again.file) == (tern().text, tern().file)
 
 
 # (a piece of the Tern, what it becomes, key, a word of the message)

@@ -3,6 +3,7 @@ from __future__ import annotations
 import numpy as np
 import pytest
 
+from benchkit.errors import EntryError
 from benchkit.stage.draws import SEED_USES, draw, nominal, seeds, take
 from tests.stage.designs import tern
 
@@ -15,6 +16,11 @@ def test_seeds_are_children_in_a_fixed_order() -> None:
     child = np.random.SeedSequence(7).spawn(4)[1]
     assert seeds("unit", 7).random() == np.random.default_rng(child).random()
     assert seeds("limits", 8).random() != first[0]
+
+
+def test_a_negative_seed_is_refused() -> None:
+    with pytest.raises(EntryError, match="zero or more"):
+        seeds("limits", -1)
 
 
 def test_nominal_is_the_marked_value() -> None:

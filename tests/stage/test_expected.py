@@ -66,6 +66,16 @@ def test_a_trimmed_drop_is_held_by_its_resistor() -> None:
     assert found.out_of_reach == 0
 
 
+def test_what_the_condition_holds_is_no_prediction() -> None:
+    cold = expected(tern(), LEAST, units=200)
+    assert {limits.point for limits in cold.points if limits.held} == {"rail+", "rail-", "heatsink"}
+    warm = expected(tern(), TARGET, units=200)
+    assert {limits.point for limits in warm.points if limits.held} == {"rail+", "rail-", "emitter.pair.1"}
+    collapsed = expected(tern(), Condition(positive_v=35, negative_v=-35, limit_a=0.018, trimmer="least"), units=200)
+    assert not collapsed["rail+"].held
+    assert collapsed["rail+"].high - collapsed["rail+"].low > 1.0
+
+
 def test_units_out_of_reach_are_left_out_and_counted() -> None:
     design = changed(TERN, ('value = "500 ohm 10 %"', 'value = "40 ohm 10 %"'), ('"560 ohm 1 %"', '"790 ohm 1 %"'))
     found = expected(design, TARGET, units=400)

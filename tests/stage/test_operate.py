@@ -31,7 +31,7 @@ def test_bench_figure_of_two_equal_arms() -> None:
     """
     text = changed_text(
         BREADBOARD,
-        ('upper = "1 kohm 1 %"', 'upper = "4.7 kohm 1 %"'),
+        ('upper = "910 ohm 1 %"', 'upper = "4.7 kohm 1 %"'),
         ('lower = "820 ohm 1 %"', 'lower = "4.7 kohm 1 %"'),
         ("BF = 180, NF = 1.0, VAF = 90, IKF = 0.2, ISE = 2e-14", "BF = 150, NF = 1.0, VAF = 90, IKF = 0.2, ISE = 0"),
     )
@@ -57,7 +57,7 @@ def _published_spreader(gain: float, milliamps: float) -> float:
         BREADBOARD,
         ('upper = "1 kohm 0.1 %"', f'upper = "{milliamps} mA"'),
         ('lower = "1 kohm 0.1 %"', 'lower = "servo"'),
-        ('upper = "1 kohm 1 %"', 'upper = "3.3 kohm"'),
+        ('upper = "910 ohm 1 %"', 'upper = "3.3 kohm"'),
         ('lower = "820 ohm 1 %"', 'lower = "1 kohm"'),
         ('emitter_resistor = "4.7 ohm 1 %"', 'emitter_resistor = "1 kohm"'),
     )

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import time
 from collections.abc import Callable
+from dataclasses import replace
 from typing import Any
 
 from rich.table import Table
@@ -51,7 +52,7 @@ class TrimPage(Page):
         super().put(question, refused)
         shown = tuple(choice for choice in question.choices if choice.value != "turn")
         if shown != question.choices:
-            self.answer.put(Question(**{**question.__dict__, "choices": shown}), refused, arrows=False)
+            self.answer.put(replace(question, choices=shown), refused, arrows=False)
 
     def say(self, view: View) -> None:
         """Show the newest reading."""

@@ -101,7 +101,7 @@ class Outcome(Vertical):
         for mark in marks_of(result):
             why.append(f"  {mark}", style=QUIET)
         self._why.say(why)
-        self._why.display = bool(why.plain)
+        self._why.set_class(not why.plain, "empty")
         lines = [result_line(earlier) for earlier in reversed(results[-9:-1])]
         self._earlier.say_drawn(tuple(results[-9:-1]), Text("\n").join(lines))
 
