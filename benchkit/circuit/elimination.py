@@ -41,7 +41,6 @@ class Structure:
         self.slot = {entry: k for k, entry in enumerate(self.entries)}
         self.rows: Index = np.array([i for i, _ in self.entries], dtype=np.intp)
         self.columns: Index = np.array([j for _, j in self.entries], dtype=np.intp)
-        self.row_starts: Index = np.searchsorted(self.rows, np.arange(size)).astype(np.intp)
 
     @property
     def slots(self) -> int:
@@ -177,11 +176,15 @@ class Factors:
 
 def linear_residual(structure: Structure, values: Array, solution: Array, right: Array) -> tuple[Array, Array]:
     """Residual of A x = b, as (b - A x, sum of the magnitudes in each row), both of shape (size, units)."""
-    products = solution[structure.columns]
-    products *= values
-    residual = right - np.add.reduceat(products, structure.row_starts, axis=0)
-    np.abs(products, out=products)
-    return residual, np.add.reduceat(products, structure.row_starts, axis=0) + np.abs(right)
+    residual, scale = right.copy(), np.abs(right)
+    rows, sizes, unknowns = list(residual), list(scale), list(solution)
+    product = np.empty(right.shape[1])
+    for (row, column), value in zip(structure.entries, values, strict=True):
+        np.multiply(value, unknowns[column], product)
+        np.subtract(rows[row], product, rows[row])
+        np.abs(product, product)
+        np.add(sizes[row], product, sizes[row])
+    return residual, scale
 
 
 def solve_dense(structure: Structure, values: Array, right: Array) -> Array:

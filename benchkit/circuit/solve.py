@@ -43,7 +43,7 @@ __all__ = ["Compiled", "Operating", "Solution", "Value", "compile_netlist"]
 
 Value = float | int | Sequence[float] | NDArray[Any]
 
-CHUNK_UNITS = 1000
+CHUNK_UNITS = 2000
 """Units solved together: enough to outweigh the interpreter's overhead, few enough to stay in the cache."""
 _PILOT_FROM = 32
 _START_VBE_V = 0.6

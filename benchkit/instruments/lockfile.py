@@ -47,7 +47,7 @@ class ResourceLock:
         if not try_lock(descriptor):
             holder = ""
             with suppress(OSError):
-                holder = os.pread(descriptor, 40, 0).decode("ascii", "replace").strip()
+                holder = os.read(descriptor, 40).decode("ascii", "replace").strip()
             os.close(descriptor)
             raise InstrumentError(
                 "refused",

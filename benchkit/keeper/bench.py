@@ -6,6 +6,8 @@ Importing this module pulls in PyVISA's users and the profiles' checks; the keep
 from __future__ import annotations
 
 from collections.abc import Mapping
+from concurrent.futures import Future
+from dataclasses import dataclass, field
 from typing import Any
 
 from benchkit.errors import InstrumentError
@@ -75,6 +77,60 @@ class OwnedSupply:
         self.supply.close(CLOSE_WAIT_S)
         if self.lock is not None:
             self.lock.release()
+
+
+@dataclass
+class Opened:
+    """A bench whose instruments are being asked for their names.
+
+    Parameters
+    ----------
+    supply, meter
+        What is owned now; also one that does not answer, so that "off" can be tried.
+    asked : list of (str, str, Future of str)
+        Label, pinned serial number, and the name to come.
+    problems : list of Exception
+        What could not even be begun.
+    """
+
+    supply: OwnedSupply | None = None
+    meter: OwnedMeter | None = None
+    asked: list[tuple[str, str, Future[str]]] = field(default_factory=list)
+    problems: list[Exception] = field(default_factory=list)
+
+    def names(self) -> dict[str, str | None]:
+        """Return the names, once all futures are done.
+
+        Raises
+        ------
+        Exception
+            The first problem there was.
+        """
+        if self.problems:
+            raise self.problems[0]
+        found: dict[str, str | None] = {"meter": None, "supply": None}
+        for label, serial, future in self.asked:
+            found[label] = future.result()
+            demand_serial(f"the {label}", future.result(), serial)
+        return found
+
+
+def open_bench(bench: Mapping[str, Any], log: TrafficLog) -> Opened:
+    """Own the instruments that a bench names and ask for their names, without waiting for them."""
+    opened = Opened()
+    if bench.get("supply") is not None:
+        try:
+            opened.supply = OwnedSupply(bench["supply"], log)
+            opened.asked.append(("supply", opened.supply.serial, opened.supply.supply.identify()))
+        except Exception as error:
+            opened.problems.append(error)
+    if bench.get("meter") is not None:
+        try:
+            opened.meter = OwnedMeter(bench["meter"], log)
+            opened.asked.append(("meter", opened.meter.serial, opened.meter.meter.identify()))
+        except Exception as error:
+            opened.problems.append(error)
+    return opened
 
 
 def demand_serial(label: str, name: str, serial: str) -> None:

@@ -13,9 +13,7 @@ Rules
 
 from __future__ import annotations
 
-import os
 import subprocess
-import sys
 import threading
 import time
 from collections.abc import Callable, Mapping
@@ -25,20 +23,17 @@ from pathlib import Path
 from queue import SimpleQueue
 from typing import Any, TypeVar
 
-import benchkit
 from benchkit.errors import BenchkitError, InstrumentError
 from benchkit.events import Event, OutputOff, SupplyState, from_payload, to_payload
 from benchkit.instruments.meter import RawReading
 from benchkit.keeper import platform
 from benchkit.keeper.protocol import JournalHead, KeeperDied, Kept, Push, WatchLines, decode, encode, error_from_wire
+from benchkit.keeper.spawning import spawn, switch_off_anew
 
 T = TypeVar("T")
 
 ANSWER_LIMIT_S = 1.5
 """So long may a heartbeat stay unanswered before the keeper counts as frozen, s."""
-
-STAND_BY_LIMIT_S = 10.0
-"""So long may the stand-by take to switch off, s."""
 
 OnPush = Callable[[Push | KeeperDied], None]
 
@@ -85,7 +80,7 @@ class KeeperClient:
             Called on the reader's thread with a `Push` or `KeeperDied`; it must not block.
         """
         arguments = [] if log_dir is None else ["--logs", str(log_dir)]
-        return cls(_spawn(arguments, log_dir), on_push)
+        return cls(spawn(arguments, log_dir), on_push)
 
     @property
     def pid(self) -> int:
@@ -355,50 +350,11 @@ class KeeperClient:
         future.set_running_or_notify_cancel()
 
         def work() -> None:
-            try:
-                future.set_result(self._switch_off_anew(reason))
-            except Exception as error:
-                how = f"output state unknown: switch it off by hand ({error})"
-                future.set_result(OutputOff(reason=reason, confirmed=False, how=how))
+            platform.kill_hard(self._process)
+            future.set_result(_output_off(switch_off_anew(self._supply, reason)))
 
         threading.Thread(target=work, name="stand-by", daemon=True).start()
         return future
-
-    def _switch_off_anew(self, reason: str) -> OutputOff:
-        if self._supply is None:
-            how = "benchkit has no supply that it could switch: switch it off by hand"
-            return OutputOff(reason=reason, confirmed=False, how=how)
-        platform.kill_hard(self._process)
-        process = _spawn(["--off-only"], None)
-        try:
-            answer, _ = process.communicate(encode({"supply": self._supply, "reason": reason}), STAND_BY_LIMIT_S)
-        finally:
-            platform.kill_hard(process)
-            process.wait()
-        return _output_off(decode(answer))
-
-
-def _spawn(arguments: list[str], log_dir: Path | None) -> subprocess.Popen[bytes]:
-    """Start a keeper's process in a group of its own, with the same benchkit as ours."""
-    home = str(Path(benchkit.__file__).resolve().parent.parent)
-    environment = dict(os.environ)
-    environment["PYTHONPATH"] = os.pathsep.join(filter(None, [home, environment.get("PYTHONPATH", "")]))
-    errors: Any = subprocess.DEVNULL
-    if log_dir is not None:
-        log_dir.mkdir(parents=True, exist_ok=True)
-        errors = (log_dir / "keeper.log").open("ab")
-    try:
-        return subprocess.Popen(
-            [sys.executable, "-m", "benchkit.keeper", *arguments],
-            stdin=subprocess.PIPE,
-            stdout=subprocess.PIPE,
-            stderr=errors,
-            env=environment,
-            **platform.own_group(),
-        )
-    finally:
-        if log_dir is not None:
-            errors.close()
 
 
 def _nothing(_wire: object) -> None:

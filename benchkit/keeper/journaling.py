@@ -26,10 +26,15 @@ class JournalThread:
     ----------
     send : callable
         Takes a message for the screen; must not block.
+    acknowledged : callable
+        Called with the number of an "off" when the screen has shown that it knows of it: it had an event kept behind
+        that line.  Called before the screen is told that this event is kept.  Without an open journal, at once.
     """
 
-    def __init__(self, send: Callable[[Mapping[str, Any]], None]) -> None:
+    def __init__(self, send: Callable[[Mapping[str, Any]], None], acknowledged: Callable[[int], None]) -> None:
         self._send = send
+        self._acknowledged = acknowledged
+        self._unknown_off: int | None = None
         self._queue: SimpleQueue[Callable[[], None] | None] = SimpleQueue()
         self._writer: Writer | None = None
         self._closed = False
@@ -48,9 +53,9 @@ class JournalThread:
         """Keep an event if the journal stands at `after`; the answer goes to the screen."""
         self._queue.put(lambda: self._answer(request, lambda: self._append(name, payload, after)))
 
-    def keep_own(self, name: str, payload: Mapping[str, Any]) -> None:
-        """Keep an event of the keeper's if a journal is open, and push it in any case."""
-        self._queue.put(lambda: self._keep_own(name, payload))
+    def keep_own(self, name: str, payload: Mapping[str, Any], off: int | None = None) -> None:
+        """Keep an event of the keeper's if a journal is open, and push it in any case; `off` numbers an "off"."""
+        self._queue.put(lambda: self._keep_own(name, payload, off))
 
     def finish(self, wait_s: float) -> bool:
         """Write what waits and close; return whether that was done within `wait_s`."""
@@ -94,9 +99,13 @@ class JournalThread:
             raise FileError("the journal", "", "no journal is open", "an open one", "Open or resume one first")
         if self._writer.seq != after:
             return {"seq": self._writer.seq, "moved_on": True}
-        return {"seq": self._write(self._writer, name, payload), "moved_on": False}
+        seq = self._write(self._writer, name, payload)
+        if self._unknown_off is not None:
+            self._acknowledged(self._unknown_off)
+            self._unknown_off = None
+        return {"seq": seq, "moved_on": False}
 
-    def _keep_own(self, name: str, payload: Mapping[str, Any]) -> None:
+    def _keep_own(self, name: str, payload: Mapping[str, Any], off: int | None) -> None:
         seq: int | None = None
         problem = ""
         if self._writer is not None and not self._closed:
@@ -104,6 +113,10 @@ class JournalThread:
                 seq = self._write(self._writer, name, payload)
             except Exception as error:
                 problem = str(error)
+        if off is not None and (self._writer is None or self._closed):
+            self._acknowledged(off)
+        elif off is not None:
+            self._unknown_off = off
         self._send({"push": {"event": name, "payload": payload, "seq": seq, "problem": problem}})
 
     def _write(self, writer: Writer, name: str, payload: Mapping[str, Any]) -> int:

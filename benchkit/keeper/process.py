@@ -19,6 +19,9 @@ What switches the supply off
 Each time the cause stands in the journal first (``tripped`` or ``contact lost``), then ``output off`` with what could
 be confirmed.  The "off" itself is under way before either is written.  It is given `OFF_LIMIT_S`; after that the
 output's state is unknown and is called so.
+
+After an "off" nothing is switched on before the screen has shown that it knows of it, by an event that was kept behind
+it: a "set" that was already on its way when a watch tripped must not bring the rails back.
 """
 
 from __future__ import annotations
@@ -31,7 +34,6 @@ import time
 from collections.abc import Callable, Mapping
 from concurrent.futures import Future
 from contextlib import suppress
-from functools import partial
 from pathlib import Path
 from queue import Empty, SimpleQueue
 from typing import TYPE_CHECKING, Any
@@ -69,7 +71,7 @@ class Keeper:
     def __init__(self, source: int, sink: int, log_dir: Path | None) -> None:
         self._inbox: SimpleQueue[Callable[[], None]] = SimpleQueue()
         self._writer = LineWriter(sink)
-        self._journal = JournalThread(self._writer.send)
+        self._journal = JournalThread(self._writer.send, self._acknowledge)
         self._log_dir = log_dir
         self._log: Any = None
         self._meter: OwnedMeter | None = None
@@ -87,6 +89,8 @@ class Keeper:
         self._off_deadline_s = math.inf
         self._off_reason = ""
         self._off_requests: list[int] = []
+        self._offs = 0
+        self._known_offs = 0
         self._leaving = False
         self._done = False
         self._source = source
@@ -170,54 +174,28 @@ class Keeper:
         self._journal.append(request, message["event"], message["payload"], int(message["after"]))
 
     def _do_connect(self, request: int, message: Mapping[str, Any]) -> None:
-        """Let go of what there was, then own what the bench names; each answers for itself with its name."""
-        from benchkit.keeper.bench import OwnedMeter, OwnedSupply
+        """Let go of what there was, then own what the bench names; answer when each has said its name."""
+        from benchkit.keeper.bench import open_bench
 
         self._let_go()
-        bench = message["bench"]
-        names: dict[str, str | None] = {"meter": None, "supply": None}
-        problems: list[Exception] = []
-        waiting: set[str] = set()
+        opened = open_bench(message["bench"], self._traffic())
+        self._supply, self._meter = opened.supply, opened.meter
+        waiting = len(opened.asked)
 
-        def named(label: str, serial: str, future: Future[str]) -> None:
-            from benchkit.keeper.bench import demand_serial
-
-            waiting.discard(label)
+        def named(_done: Future[str] | None) -> None:
+            nonlocal waiting
+            waiting -= 1
+            if waiting > 0:
+                return
             try:
-                names[label] = future.result()
-                demand_serial(f"the {label}", future.result(), serial)
+                self._ok(request, opened.names())
             except Exception as error:
-                problems.append(error)
-            if not waiting:
-                self._answer_connect(request, names, problems)
+                self._fail(request, error)
 
-        owners: list[tuple[str, str, Future[str]]] = []
-        for label, owner in (("supply", OwnedSupply), ("meter", OwnedMeter)):
-            table = bench.get(label)
-            if table is None:
-                continue
-            try:
-                owned = owner(table, self._traffic())
-            except Exception as error:
-                problems.append(error)
-                continue
-            if isinstance(owned, OwnedSupply):
-                self._supply = owned
-                owners.append((label, owned.serial, owned.supply.identify()))
-            else:
-                self._meter = owned
-                owners.append((label, owned.serial, owned.meter.identify()))
-        if not owners:
-            self._answer_connect(request, names, problems)
-        waiting.update(label for label, _, _ in owners)
-        for label, serial, future in owners:
-            self._when_done(future, partial(named, label, serial))
-
-    def _answer_connect(self, request: int, names: Mapping[str, str | None], problems: list[Exception]) -> None:
-        if problems:
-            self._fail(request, problems[0])
-        else:
-            self._ok(request, names)
+        if not opened.asked:
+            named(None)
+        for _, _, future in opened.asked:
+            self._when_done(future, named)
 
     def _do_read(self, request: int, message: Mapping[str, Any]) -> None:
         if self._meter is None:
@@ -230,6 +208,13 @@ class Keeper:
         if self._off_deadline_s < math.inf:
             raise InstrumentError("refused", "The output is being switched off", "nothing else at that time")
         output_on = bool(message["output_on"])
+        if output_on and self._known_offs < self._offs:
+            raise InstrumentError(
+                "refused",
+                "The output was switched off, and this was asked for without knowing that",
+                "an event kept behind that off first",
+                "Find out why it went off",
+            )
         future = supply.supply.set(
             float(message["positive_v"]), float(message["negative_v"]), float(message["limit_a"]), output_on
         )
@@ -365,6 +350,7 @@ class Keeper:
         self._next_look_s = math.inf
         if self._off_deadline_s < math.inf:
             return
+        self._offs += 1
         self._off_reason = reason
         self._off_deadline_s = time.monotonic() + OFF_LIMIT_S
         if self._supply is None:
@@ -372,6 +358,7 @@ class Keeper:
                 self._inbox.put(lambda: self._finish_off(None))
             else:
                 self._off_deadline_s = math.inf
+                self._known_offs = self._offs
             return
         self._when_done(self._supply.supply.off(), self._finish_off)
 
@@ -386,12 +373,20 @@ class Keeper:
         elif ready is not None:
             payload |= _outcome(ready)
         self._expected_on = False
-        self._keep("output off", payload)
+        self._journal.keep_own("output off", payload, self._offs)
         requests, self._off_requests = self._off_requests, []
         for request in requests:
             self._ok(request, payload)
         if self._leaving:
             self._done = True
+
+    def _acknowledge(self, off: int) -> None:
+        """Note that the screen knows of an "off"; called on the journal's thread."""
+
+        def know() -> None:
+            self._known_offs = max(self._known_offs, off)
+
+        self._inbox.put(know)
 
     def _own_failure(self, error: BaseException) -> None:
         """Something in this file is wrong: off first, then say so."""

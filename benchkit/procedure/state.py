@@ -74,6 +74,9 @@ class State:
         Why the walk is on its way out, "" when it isn't.
     stopped_at : str
         The item at which that happened.
+    cut_at : int or None
+        The item's number at which whoever ran the walk went away (the screen, its session, the keeper) while nothing else
+        had stopped it; such a walk can go on.
     stop_status : int
         The exit status that the stop leads to; 0 while nothing has stopped the walk.
     ever_on : bool
@@ -105,6 +108,7 @@ class State:
     highest_v: float = 0.0
     stopped: str = ""
     stopped_at: str = ""
+    cut_at: int | None = None
     stop_status: int = 0
     ever_on: bool = False
     unconfirmed: bool = False

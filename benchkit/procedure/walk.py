@@ -68,6 +68,12 @@ from benchkit.procedure.actions import (
 from benchkit.procedure.plan import Item, Joined, Plan, condition_key
 from benchkit.procedure.state import PHASES, Phase, State
 
+RUNNERS: Final = frozenset({"the screen", "the keeper"})
+"""Who runs a walk, as `ContactLost` calls them: when one of them goes, nothing is wrong with unit or bench."""
+
+RUNNER_GONE: Final = ("contact with the screen was lost", "the screen closed the bench", "an error of the session")
+"""How the reasons begin with which the supply is switched off when whoever ran the walk has gone."""
+
 Step = tuple[State, tuple[Action, ...]]
 
 JUDGED_KINDS: Final = frozenset({"confirm", "measure", "rule", "supply", "limit check", "trim"})
@@ -336,12 +342,16 @@ class Walk:
         return replace(after, note=f"Tripped: {event.reason}. {AFTER_TRIP}"), actions
 
     def _contact_lost(self, state: State, event: ContactLost) -> Step:
+        if event.who in RUNNERS:
+            state = _cut(state)
         return self._make_safe(state, f"contact with {event.who} was lost: {event.problem}", 3)
 
     def _output_went_off(self, state: State, event: OutputOff) -> Step:
         state = _off_heard(state, event)
         if self.way_out(state) or state.phase == "closing":
             return replace(state, note=event.how), self._open_actions(state)
+        if event.reason.startswith(RUNNER_GONE):
+            state = _cut(state)
         return self._make_safe(state, f"the supply was switched off: {event.reason}", 4)
 
     def _open_actions(self, state: State) -> tuple[Action, ...]:
@@ -353,6 +363,9 @@ class Walk:
 
     def _resumed(self, state: State, event: Resumed) -> Step:
         before = frozenset(result.item for result in state.results)
+        if state.cut_at is not None:
+            # Whoever ran the walk went away: the walk itself had not been stopped.
+            state = replace(state, index=state.cut_at, cut_at=None, stopped="", stopped_at="", stop_status=0)
         state = replace(
             state, phase="securing", before=before, probes="", energised="unknown", supply=None,
             note="Earlier readings are marked as from before.",
@@ -620,6 +633,10 @@ def _heard(state: State, supply: SupplyState | None) -> State:
 def _off_heard(state: State, event: OutputOff) -> State:
     state = replace(state, unconfirmed=not event.confirmed, energised="off" if event.confirmed else "unknown")
     return state if event.state is None else replace(state, supply=event.state)
+
+
+def _cut(state: State) -> State:
+    return state if state.stopped else replace(state, cut_at=state.index)
 
 
 def _off_by_word(state: State) -> State:

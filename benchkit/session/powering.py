@@ -42,7 +42,7 @@ async def _ramp(session: Session, action: SetSupply) -> Event:
         from_v = (last.set_positive_v, last.set_negative_v)
     await asyncio.wrap_future(keeper.watch(None))
     if from_v == (0.0, 0.0):
-        await asyncio.wrap_future(keeper.supply_set(0.0, 0.0, action.limit_a, True))
+        await session.supply_set(0.0, 0.0, action.limit_a)
     if action.trip_on_limit:
         await asyncio.wrap_future(keeper.watch(_lines(session, action.grace_s)))
         session.watch_since = session.clock.now()
@@ -51,7 +51,7 @@ async def _ramp(session: Session, action: SetSupply) -> Event:
     for step in range(1, steps + 1):
         share = step / steps
         rails = tuple(start + share * (end - start) for start, end in zip(from_v, _ends(action), strict=True))
-        state = await asyncio.wrap_future(keeper.supply_set(rails[0], rails[1], action.limit_a, True))
+        state = await session.supply_set(rails[0], rails[1], action.limit_a)
         session.show_moment(busy="Both rails move together.", busy_share=share, supply=state)
         await session.clock.spend(slice_s)
         if action.trip_on_limit:

@@ -417,6 +417,17 @@ class Session:
             return  # a supply that is lost while it is watched is the keeper's to tell; it switches off too
         self.note_supply(state)
 
+    async def supply_set(self, positive_v: float, negative_v: float, limit_a: float) -> SupplyState:
+        """Set the supply with its output on, unless something has come that the walk has yet to handle.
+
+        Raises
+        ------
+        InstrumentError
+        """
+        if self._pushed:
+            raise InstrumentError("refused", "Off or a trip came before the supply was set", "nothing after that")
+        return await asyncio.wrap_future(self.keeper.supply_set(positive_v, negative_v, limit_a, True))
+
     def note_supply(self, state: SupplyState) -> None:
         """Show a newer state of the supply than the record has."""
         self.moment.supply = state

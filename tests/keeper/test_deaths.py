@@ -262,7 +262,7 @@ def keeper_with(monkeypatch: pytest.MonkeyPatch, change: str) -> None:
             start_new_session=True,
         )
 
-    monkeypatch.setattr("benchkit.keeper.client._spawn", spawn)
+    monkeypatch.setattr("benchkit.keeper.client.spawn", spawn)
 
 
 def test_a_computer_that_slept_wakes_to_an_output_that_goes_off(

@@ -181,6 +181,23 @@ def test_without_a_watch_or_after_off_nothing_trips(at: Bench) -> None:
     assert at.pushes == []
 
 
+def test_a_set_that_was_on_its_way_when_a_watch_tripped_does_not_bring_the_rails_back(at: Bench) -> None:
+    open_and_on(at)
+    at.client.watch(WatchLines(positive_a=0.02)).result(5)
+    at.supply.load_ohm = 400.0
+    at.client.sample(0.0).result(5)
+    at.wait_for(OutputOff)
+    with pytest.raises(InstrumentError, match="without knowing"):
+        at.client.supply_set(11.0, -11.0, 0.05, True).result(5)
+    assert at.client.append(Noted(text="knows of nothing"), 1).result(5).moved_on
+    with pytest.raises(InstrumentError, match="without knowing"):
+        at.client.supply_set(11.0, -11.0, 0.05, True).result(5)
+    assert not at.supply.is_on
+    assert at.client.supply_set(0.0, 0.0, 0.05, False).result(5).output_on is False
+    assert at.client.append(Noted(text="knows of the trip and the off"), 3).result(5).seq == 4
+    assert at.client.supply_set(5.0, -5.0, 0.05, True).result(5).output_on
+
+
 @pytest.mark.parametrize("how", ["closed", "silent"])
 def test_a_supply_that_is_lost_while_watched_is_reported_and_off_is_tried(alone: Bench, how: str) -> None:
     open_and_on(alone)

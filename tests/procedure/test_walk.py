@@ -688,3 +688,42 @@ def test_closed_takes_nothing() -> None:
         with pytest.raises(IllegalEvent):
             drive.tell(event)
     assert isinstance(drive.state.closed, Closed)
+
+
+@pytest.mark.parametrize(
+    "gone",
+    [
+        [ContactLost(who="the screen", problem="its end of the pipe is closed"),
+         OutputOff(reason="contact with the screen was lost: x", confirmed=True, how="h", state=OFF)],
+        [OutputOff(reason="an error of the session: KeyError", confirmed=True, how="h", state=OFF),
+         OutputOff(reason="the screen closed the bench", confirmed=True, how="h", state=OFF)],
+        [ContactLost(who="the keeper", problem="the keeper failed")],
+    ],
+)  # fmt: skip
+@pytest.mark.parametrize("item", ["cold.rails.ohm.rails", "power.full", "bias.soak", "made-safe.unplug"])
+def test_a_walk_whose_screen_went_away_goes_on_when_it_is_resumed(item: str, gone: list[Event]) -> None:
+    walk = small()
+    drive = begun(walk).until(item)
+    index = drive.state.index
+    for event in gone:
+        drive.tell(event)
+    way_out = index >= walk.plan.made_safe
+    assert drive.state.stopped or way_out
+    drive.tell(Resumed(operator="Ida"))
+    assert (drive.state.stopped, drive.state.index, drive.state.cut_at) == ("", index, None)
+    drive.well()
+    assert isinstance(drive.open, SwitchOff)
+    drive.well()
+    assert drive.state.index == (walk.plan.made_safe if way_out else walk.plan.resume)
+    closed = drive.to_end()
+    assert (closed.verdict, closed.exit_status, closed.stopped) == ("pass", 0, "")
+
+
+@pytest.mark.parametrize("why", [StopAsked(), Tripped(reason="r"), ContactLost(who="the supply", problem="p")])
+def test_but_not_one_that_was_stopped_before(why: Event) -> None:
+    drive = begun(small()).until("bias.soak")
+    drive.tell(why)
+    drive.tell(ContactLost(who="the screen", problem="closed"))
+    drive.tell(Resumed(operator="Ida"))
+    assert drive.state.stopped
+    assert drive.to_end().exit_status in (3, 4)

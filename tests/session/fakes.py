@@ -273,6 +273,9 @@ class Run:
         self.session: Session
         self.hands = Hands(self.bench)
 
+    async def advance(self, seconds: float) -> None:
+        self.bench.advance(seconds)
+
     def make(self) -> Session:
         job = Job(
             design=breadboard(),
@@ -283,7 +286,7 @@ class Run:
             accuracy=STATED_DEFAULT,
             supply_accuracy=HANDHELD,
         )
-        clock = SimulatedClock(self.hands.advance, None)
+        clock = SimulatedClock(self.advance, None)
         self.session = Session(job, self.keeper, self.front, self.hands, clock)  # type: ignore[arg-type]
         self.keeper.on_push = self.session.on_push
         return self.session

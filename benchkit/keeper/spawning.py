@@ -1,0 +1,64 @@
+"""Starting the keeper's processes: the keeper itself, and the stand-by that can only switch off."""
+
+from __future__ import annotations
+
+import os
+import subprocess
+import sys
+from collections.abc import Mapping
+from pathlib import Path
+from typing import Any
+
+import benchkit
+from benchkit.keeper import platform
+from benchkit.keeper.protocol import decode, encode
+
+STAND_BY_LIMIT_S = 10.0
+"""So long may the stand-by take to switch off, s."""
+
+
+def spawn(arguments: list[str], log_dir: Path | None) -> subprocess.Popen[bytes]:
+    """Start a keeper's process in a group of its own, with the same benchkit as ours."""
+    home = str(Path(benchkit.__file__).resolve().parent.parent)
+    environment = dict(os.environ)
+    environment["PYTHONPATH"] = os.pathsep.join(filter(None, [home, environment.get("PYTHONPATH", "")]))
+    errors: Any = subprocess.DEVNULL
+    if log_dir is not None:
+        log_dir.mkdir(parents=True, exist_ok=True)
+        errors = (log_dir / "keeper.log").open("ab")
+    try:
+        return subprocess.Popen(
+            [sys.executable, "-m", "benchkit.keeper", *arguments],
+            stdin=subprocess.PIPE,
+            stdout=subprocess.PIPE,
+            stderr=errors,
+            env=environment,
+            **platform.own_group(),
+        )
+    finally:
+        if log_dir is not None:
+            errors.close()
+
+
+def switch_off_anew(supply: Mapping[str, Any] | None, reason: str) -> dict[str, Any]:
+    """Switch a supply off by a process of its own; return the fields of an ``output off`` event.  Never raises.
+
+    Parameters
+    ----------
+    supply : mapping or None
+        As in the table for ``connect``; None if there is none.
+    reason : str
+        Why, for the event.
+    """
+    result: dict[str, Any] = {"reason": reason, "confirmed": False, "state": None}
+    if supply is None:
+        return {**result, "how": "benchkit has no supply that it could switch: switch it off by hand"}
+    try:
+        with spawn(["--off-only"], None) as process:
+            try:
+                answer, _ = process.communicate(encode({"supply": supply, "reason": reason}), STAND_BY_LIMIT_S)
+            finally:
+                platform.kill_hard(process)
+        return decode(answer)
+    except Exception as error:
+        return {**result, "how": f"output state unknown: switch it off by hand ({error})"}
