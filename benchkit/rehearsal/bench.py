@@ -34,6 +34,8 @@ from benchkit.stage.design import Design, load_design, parse_design
 from benchkit.stage.draws import seeds
 from benchkit.stage.faults import parse_fault
 
+OUTLAST_S: Final = 4.0
+READ_BACK_S: Final = 1.0
 FOLLOW_EVERY_S: Final = 0.1
 LONGEST_CATCH_UP_S: Final = 1.0
 
@@ -211,8 +213,24 @@ async def run(bench: RehearsalBench, announce: Callable[[dict[str, Any]], None],
             await asyncio.wait_for(ended.wait(), FOLLOW_EVERY_S if bench.follow else None)
         except TimeoutError:
             bench.catch_up()
+    await _outlast(bench)
     for server in (meter, supply, side):
         server.close()
+
+
+async def _outlast(bench: RehearsalBench) -> None:
+    """Stay, as a real supply would, when whoever started it goes while an output is on: somebody has to switch it off."""
+    if not _output_on(bench):
+        return
+    left_s = OUTLAST_S
+    while left_s > 0.0 and _output_on(bench):
+        await asyncio.sleep(0.05)
+        left_s -= 0.05
+    await asyncio.sleep(READ_BACK_S)
+
+
+def _output_on(bench: RehearsalBench) -> bool:
+    return any(channel.on for channel in bench.table.channels)
 
 
 def _watch_input(loop: asyncio.AbstractEventLoop, ended: asyncio.Event) -> None:

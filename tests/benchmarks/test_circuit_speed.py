@@ -2,9 +2,9 @@
 
 Run with ``python -m pytest tests/benchmarks -o addopts= -s``. The circuit is a double emitter follower with the full
 Gummel-Poon d.c. model, current-limited supplies, a saturating feed and a servo; every unit has parts of its own.
-ngspice is best used with a deck of many copies: its start-up is shared out. How many is tried out: soon its sparse matrix
-is too large. Both times are processor time and the best of several, so that other work on the machine counts
-little; our processor time is that of all our threads.
+ngspice is best used with a deck of several copies: its start-up is shared out. How many is tried out: its sparse
+matrix is soon too large. Both times are processor time and the best of several, so that other work on the machine
+counts little; our processor time is that of all our threads.
 """
 
 from __future__ import annotations
