@@ -7,6 +7,9 @@ the uncertainty reaches over a limit, it is `undecided` (the non-binary statemen
 Simple acceptance, where a procedure asks for it: w = 0, inside is `pass` and outside is `fail`. Its risk at the limit
 is one half, so it is only taken while the whole of ±U fits between the limits; a meter that can't resolve them
 decides nothing.
+
+Guarded rejection (JCGM 106, 8.3.3), where a procedure looks for wrong parts: only what lies outside by more than U is
+rejected, so that a good part at the edge of its tolerance is never called bad; again only while ±U fits.
 """
 
 from __future__ import annotations
@@ -23,7 +26,7 @@ from benchkit.measure.uncertainty import coverage_factor
 from benchkit.quantities import Overload, show
 
 Verdict = Literal["pass", "fail", "undecided"]
-Acceptance = Literal["guarded", "simple"]
+Acceptance = Literal["guarded", "simple", "guarded rejection"]
 
 _SEVERITY: Final[dict[Verdict, int]] = {"pass": 0, "undecided": 1, "fail": 2}
 
@@ -93,7 +96,7 @@ def judge(
         Standard uncertainty; None when it is not known, and then nothing passes or fails.
     limits : Limits
         The interval, in the same unit as the value.
-    acceptance : {"guarded", "simple"}
+    acceptance : {"guarded", "simple", "guarded rejection"}
         The decision rule.
     coverage : float
         Coverage of the expanded uncertainty, 0 to 1.
@@ -102,8 +105,8 @@ def judge(
     -------
     Judgement
     """
-    if acceptance not in ("guarded", "simple"):
-        raise ValueError(f"{acceptance!r} is no decision rule; guarded and simple are")
+    if acceptance not in ("guarded", "simple", "guarded rejection"):
+        raise ValueError(f"{acceptance!r} is no decision rule; guarded, simple and guarded rejection are")
     k = coverage_factor(coverage)
     if isinstance(value, Overload):
         return _judge_overload(value, limits)
@@ -115,7 +118,7 @@ def judge(
     if not (math.isfinite(u) and u >= 0):
         raise ValueError(f"{u} is no standard uncertainty")
     expanded = k * u
-    guard = expanded if acceptance == "guarded" else 0.0
+    guard = {"guarded": expanded, "simple": 0.0, "guarded rejection": -expanded}[acceptance]
     accept_low = None if limits.low is None else limits.low + guard
     accept_high = None if limits.high is None else limits.high - guard
     probability = conformance_probability(value, u, limits.low, limits.high)
@@ -125,10 +128,11 @@ def judge(
     )
     shown = f"{show(value, limits.unit)} ± {show(expanded, limits.unit, 2)}"
     verdict: Verdict
-    if acceptance == "simple" and limits.width < 2.0 * expanded:
+    if acceptance != "guarded" and limits.width < 2.0 * expanded:
         verdict, why = "undecided", f"The meter's {shown} is wider than the limits, {limits}."
     elif inside:
-        verdict, why = "pass", f"{shown} lies within {limits}."
+        verdict = "pass"
+        why = f"{shown} {'lies within' if limits.hold(value) else 'reaches back into'} {limits}."
     elif outside:
         verdict, why = "fail", f"{shown} lies outside {limits}."
     else:

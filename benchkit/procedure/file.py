@@ -99,7 +99,7 @@ class Step(_Strict):
     when: Literal["cold", "warm"] | None = None
     settle: str | None = None
     allow: str | None = None
-    acceptance: Literal["guarded", "simple"] = "guarded"
+    acceptance: Literal["guarded", "simple", "guarded rejection"] = "guarded"
     samples: int = pydantic.Field(default=1, ge=1, le=100)
     override: bool = True
 

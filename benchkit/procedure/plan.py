@@ -88,8 +88,8 @@ class Item:
     settle_s : float
         How long the reading has to come to rest after the probes are on, or the stage after its rails have moved.
     samples : int
-    acceptance : "guarded" or "simple"
-        How a reading is judged (JCGM 106): with a guard band as wide as its uncertainty, or without one.
+    acceptance : "guarded", "simple" or "guarded rejection"
+        How a reading is judged (JCGM 106): with a guard band inside the limits, without one, or with one outside.
     allow : float
         How much the model's limits are widened on either side, in the point's unit.
     act : str
@@ -126,7 +126,7 @@ class Item:
     seconds: float = 0.0
     settle_s: float = 0.0
     samples: int = 1
-    acceptance: Literal["guarded", "simple"] = "guarded"
+    acceptance: Literal["guarded", "simple", "guarded rejection"] = "guarded"
     allow: float = 0.0
     act: str = ""
     trimmer_end: bool = False

@@ -142,3 +142,19 @@ def test_global_risks_by_drawing() -> None:
     assert closed.producer == pytest.approx(float(np.mean(good)), abs=2e-3)
     with pytest.raises(ValueError, match="global risks"):
         global_risks(1.5, 0.0, 0.1, LIMITS)
+
+
+@pytest.mark.parametrize(
+    ("value", "u", "verdict"),
+    [
+        (100.0, 0.1, "pass"),
+        (100.15, 0.1, "pass"),  # outside by less than U = 0.196: the meter may be wrong, the part need not be
+        (100.25, 0.1, "fail"),
+        (89.85, 0.1, "pass"),
+        (89.75, 0.1, "fail"),
+        (95.0, 3.0, "undecided"),  # ±U is wider than the limits: nothing can be said
+    ],
+)
+def test_guarded_rejection_rejects_only_beyond_the_uncertainty(value: float, u: float, verdict: str) -> None:
+    limits = Limits(90.0, 100.0, 95.0, "ohm", "a tolerance")
+    assert judge(value, u, limits, acceptance="guarded rejection").verdict == verdict
