@@ -278,8 +278,27 @@ def judge(
         if as_json:
             _print_json(found.as_json())
         else:
-            click.echo(found.as_text(str(path)))
+            click.echo(_judged_table(found, str(path)))
     return 0 if passed else 1
+
+
+def _judged_table(table: Any, name: str) -> str:
+    from benchkit.quantities import show
+
+    lines = [f"{name}: {table.verdict.upper()}", "", f"{'test point':30s} {'value':>12s} {'lowest':>12s} {'highest':>12s}"]
+    for judged in table.readings:
+        reading, limits = judged.entry.reading, judged.limits
+        low, high = (None, None) if limits is None else (limits.low, limits.high)
+        cells = ["-" if value is None else show(value, reading.unit) for value in (low, high)]
+        value = show(reading.measured, reading.unit)
+        verdict = judged.judgement.verdict
+        lines.append(f"{reading.point:30s} {value:>12s} {cells[0]:>12s} {cells[1]:>12s}  {verdict}")
+    for rule in table.rules:
+        lines += ["", f"{rule.rule}: {rule.verdict}. {rule.why}"]
+        if rule.would_decide:
+            lines.append(f"  What would decide it: {rule.would_decide}.")
+    lines += ["", f"Readings without an uncertainty were taken to be by: {table.accuracy.name}."]
+    return "\n".join(lines)
 
 
 def _text_of(path: Path) -> str:

@@ -14,10 +14,10 @@ from typing import get_args
 
 import click
 import pytest
-from benchkit.instruments.bench import parse_bench
 
 import benchkit
 from benchkit import cli, errors, shipped
+from benchkit.instruments.bench import parse_bench
 from benchkit.procedure import file as procedure_file
 from benchkit.record.show import DEFERENCE
 from benchkit.stage.design import parse_design

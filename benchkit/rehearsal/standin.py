@@ -25,7 +25,7 @@ WAIT_S = 30.0
 class Screw(Protocol):
     """What the stand-in's hands move by themselves."""
 
-    def trimmer_to(self, position: str | float) -> Any:
+    def trimmer_to(self, travel: Any) -> Any:
         """Turn the trimmer to an end."""
 
     def advance(self, seconds: float) -> Any:

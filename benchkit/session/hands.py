@@ -17,13 +17,13 @@ class SimulatedHands(Protocol):
     def turn(self, turns: float) -> Any:
         """Turn the trimmer's screw, positive for more bias."""
 
-    def trimmer_to(self, position: str | float) -> Any:
+    def trimmer_to(self, travel: Any) -> Any:
         """Turn the trimmer to an end or a travel."""
 
-    def connect(self, on: bool) -> Any:
+    def connect(self, connected: bool) -> Any:
         """Plug the unit to the supply or pull it."""
 
-    def short(self, on: bool) -> Any:
+    def short(self, shorted: bool) -> Any:
         """Short the supply's leads or open the short."""
 
     def advance(self, seconds: float) -> Any:

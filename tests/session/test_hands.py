@@ -1,0 +1,50 @@
+from __future__ import annotations
+
+import asyncio
+
+import pytest
+
+from benchkit.session.hands import Hands
+from tests.session.fakes import FakeBench
+
+
+def test_real_hands_are_the_operators_own() -> None:
+    async def whole() -> None:
+        hands = Hands()
+        assert not hands.simulated
+        await hands.act("short the leads")
+        await hands.probe("output")
+        await hands.turn(1.0)
+        await hands.advance(5.0)
+        assert await hands.truth() == {}
+
+    asyncio.run(whole())
+
+
+@pytest.mark.parametrize(
+    ("act", "moves"),
+    [
+        ("short the leads", [("connect", False), ("short", True)]),
+        ("connect the unit", [("short", False), ("connect", True)]),
+        ("trimmer to least", []),
+    ],
+)
+def test_acts_in_their_order(act: str, moves: list[tuple[str, bool]]) -> None:
+    bench = FakeBench()
+    asyncio.run(Hands(bench).act(act))
+    assert bench.acts == moves
+
+
+def test_the_rest_goes_through() -> None:
+    bench = FakeBench()
+
+    async def whole() -> None:
+        hands = Hands(bench)
+        assert hands.simulated
+        await hands.probe("output")
+        await hands.turn(-0.25)
+        await hands.advance(2.0)
+        assert (await hands.truth())["highest_rail_v"] == 10.0
+
+    asyncio.run(whole())
+    assert (bench.point, bench.turned, bench.seconds) == ("output", -0.25, 2.0)

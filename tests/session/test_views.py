@@ -1,0 +1,124 @@
+from __future__ import annotations
+
+from dataclasses import replace
+
+import pytest
+
+from benchkit.events import Decided, Resumed, SupplyState, Tripped
+from benchkit.procedure.state import State
+from benchkit.session.front import View
+from benchkit.session.views import Moment, make_view, supply_words
+from tests.procedure.driver import OPENED, Drive, begun, judged, small
+
+ON = SupplyState(
+    output_on=True, positive_v=10.0, negative_v=-10.0, positive_a=0.0124, negative_a=0.0121, limit_a=0.045
+)
+
+
+@pytest.mark.parametrize(
+    ("energised", "supply", "by_hand", "words"),
+    [
+        ("off", None, False, "SUPPLY OFF (read back as off)"),
+        ("off", None, True, "SUPPLY OFF (nothing here can switch it)"),
+        ("unknown", ON, False, "SUPPLY: OUTPUT STATE UNKNOWN - treat the unit as live"),
+        ("unknown", None, True, "SUPPLY AS SET BY HAND"),
+        ("on", ON, False, "SUPPLY ON  10.00 V 12.4 mA  -10.00 V 12.1 mA  limit 45.0 mA"),
+        ("on", replace(ON, negative_in_limit=True, limit_a=None), False, None),
+        ("on", None, False, "SUPPLY ON"),
+    ],
+)  # fmt: skip
+def test_supply_words(energised: str, supply: SupplyState | None, by_hand: bool, words: str | None) -> None:
+    found = supply_words(energised, supply, by_hand=by_hand)  # type: ignore[arg-type]
+    if words is None:
+        assert found.endswith("IN LIMIT")
+        assert "limit" not in found
+    else:
+        assert found == words
+
+
+def view(drive: Drive, moment: Moment | None = None) -> View:
+    return make_view(
+        drive.walk, drive.state, moment or Moment(), record="r.jsonl", design="d A", procedure="p", purpose="why"
+    )
+
+
+def test_nothing_is_said_to_be_off_before_it_was_read_back() -> None:
+    drive = begun(small())
+    assert "UNKNOWN" in view(drive).supply.words
+    drive.well()
+    assert "read back as off" in view(drive).supply.words
+
+
+def test_sections_count_up() -> None:
+    drive = begun(small()).until("power.current.rail+.current")
+    sections = {section.name: section for section in view(drive).sections}
+    assert list(sections) == ["look", "cold", "limit", "power", "bias", "made-safe"]
+    assert [section.name for section in sections.values() if section.current] == ["power"]
+    assert (sections["cold"].done, sections["cold"].total, sections["cold"].verdict) == (4, 4, "pass")
+    assert sections["bias"].done == 0
+    assert sections["bias"].verdict is None
+    assert 0 < sections["power"].done < sections["power"].total
+
+
+def test_the_end_shows_everything_done() -> None:
+    drive = begun(small())
+    drive.to_end()
+    found = view(drive)
+    assert all(section.done == section.total for section in found.sections)
+    assert (found.verdict, found.exit_status, found.kept) == ("pass", 0, len(drive.told))
+    assert found.item_number <= found.item_count
+
+
+def test_results_with_their_override_and_their_past() -> None:
+    drive = begun(small()).until("power.offset")
+    item = "look.parts"
+    before = view(drive).results[0]
+    assert (before.item, before.from_before, before.overridden) == (item, False, "")
+    drive.tell(Resumed(operator="Ida"))
+    assert all(result.from_before for result in view(drive).results)
+
+
+def test_an_override_is_shown_with_its_reason() -> None:
+    drive = begun(small()).until("look.parts")
+    drive.well()
+    drive.tell(judged("look.parts", "fail"))
+    drive.tell(Decided(item="look.parts", choice="go on", reason="a known spot"))
+    (result,) = view(drive).results
+    assert (result.verdict, result.overridden) == ("fail", "a known spot")
+
+
+def test_numbers_come_as_text_and_as_numbers() -> None:
+    drive = begun(small()).until("power.current.rail+.current")
+    result = next(one for one in view(drive).results if one.item == "power.output-first.output")
+    assert (result.value_text, result.low_text, result.high_text) == ("500.00 mV", "-10.000 V", "10.000 V")
+    assert (result.value, result.low, result.high) == (0.5, -10.0, 10.0)
+    confirmed = view(drive).results[0]
+    assert (confirmed.value_text, confirmed.value) == ("", None)
+
+
+def test_a_newer_sample_goes_before_the_record() -> None:
+    drive = begun(small()).until("bias.soak")
+    newer = SupplyState(output_on=True, positive_v=9.9)
+    assert view(drive, Moment(supply=newer)).supply.state is newer
+    assert view(drive).supply.state is drive.state.supply
+
+
+def test_a_message_goes_before_the_note() -> None:
+    drive = begun(small()).until("bias.soak")
+    drive.tell(Tripped(reason="rail+ in its limit"))
+    assert "no second try" in view(drive).message
+    assert view(drive, Moment(message="now this")).message == "now this"
+    assert view(drive).stopped == "tripped: rail+ in its limit"
+
+
+def test_a_supply_by_hand_is_shown_as_such_all_the_time() -> None:
+    drive = Drive(small())
+    drive.tell(replace(OPENED, supply="manual"))
+    found = view(drive).supply
+    assert found.by_hand
+    assert found.words == "SUPPLY AS SET BY HAND"
+
+
+def test_before_anything_is_opened_there_is_a_picture_too() -> None:
+    found = view(Drive(small(), State()))
+    assert (found.unit, found.operator, found.results) == ("", "", ())

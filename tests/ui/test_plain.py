@@ -1,0 +1,231 @@
+from __future__ import annotations
+
+import asyncio
+import io
+import threading
+from collections.abc import Awaitable, Callable
+from dataclasses import replace
+
+import click
+import pytest
+
+from benchkit.procedure.actions import Question
+from benchkit.session.front import Reply
+from benchkit.ui import plain
+from benchkit.ui.plain import PlainFront
+from tests.ui import scripted
+from tests.ui.scripted import CONFIRM, DECIDE, HOLD, PROBES, TEXT, TRIM, TRIM_VIEW, VIEW
+
+BY_HAND = replace(
+    scripted.BY_HAND_READING,
+    choices=(*scripted.BY_HAND_READING.choices, replace(PROBES.choices[1], label="Make safe")),
+)
+
+
+class Terminal:
+    """Lines that come one by one, as from a person; the end comes when it is closed."""
+
+    def __init__(self, *, tty: bool = True) -> None:
+        self._lines: list[str] = []
+        self._ready = threading.Condition()
+        self._closed = False
+        self._tty = tty
+
+    def type(self, *lines: str) -> None:
+        with self._ready:
+            self._lines += [f"{line}\n" for line in lines]
+            self._ready.notify()
+
+    def close(self) -> None:
+        with self._ready:
+            self._closed = True
+            self._ready.notify()
+
+    def readline(self) -> str:
+        with self._ready:
+            while not self._lines and not self._closed:
+                self._ready.wait(5.0)
+            return self._lines.pop(0) if self._lines else ""
+
+    def isatty(self) -> bool:
+        return self._tty
+
+
+Play = Callable[[PlainFront, Terminal, list[str]], Awaitable[None]]
+
+
+def play(script: Play, *, tty: bool = True) -> tuple[str, list[str]]:
+    out, offs, terminal = io.StringIO(), [], Terminal(tty=tty)
+
+    async def whole() -> None:
+        front = PlainFront(offs.append, out=out, source=terminal)  # type: ignore[arg-type]
+        try:
+            await asyncio.wait_for(script(front, terminal, offs), 10.0)
+        finally:
+            terminal.close()
+
+    asyncio.run(whole())
+    return out.getvalue(), offs
+
+
+def answer(question: Question, *lines: str, view: object = None, refused: str = "") -> tuple[Reply, str]:
+    replies: list[Reply] = []
+
+    async def script(front: PlainFront, terminal: Terminal, offs: list[str]) -> None:
+        front.show(view or VIEW)  # type: ignore[arg-type]
+        terminal.type(*lines)
+        replies.append(await front.ask(question, refused))
+
+    text, _ = play(script)
+    return replies[0], text
+
+
+@pytest.mark.parametrize(
+    ("question", "line", "reply"),
+    [
+        (CONFIRM, "1", Reply(choice="yes")),
+        (CONFIRM, "no", Reply(choice="no")),
+        (PROBES, "", Reply(choice="done")),
+        (PROBES, "2", Reply(choice="make safe")),
+        (HOLD, "yes", Reply(choice="yes", text="yes")),
+        (HOLD, "YES", Reply(choice="yes", text="yes")),
+        (HOLD, "2", Reply(choice="make safe")),
+        (DECIDE, "1", Reply(choice="again")),
+        (DECIDE, "2 a known spot", Reply(choice="go on", text="a known spot")),
+        (DECIDE, "make safe", Reply(choice="make safe")),
+        (TEXT, "23 degC", Reply(choice="done", text="23 degC")),
+        (BY_HAND, "12.3 mV", Reply(choice="done", text="12.3 mV")),
+        (BY_HAND, "OL", Reply(choice="done", text="OL")),
+        (BY_HAND, "2", Reply(choice="make safe")),
+        (TRIM, "+0.25", Reply(choice="turn", turns=0.25)),
+        (TRIM, "-1", Reply(choice="turn", turns=-1.0)),
+        (TRIM, "1", Reply(choice="take")),
+        (TRIM, "2 at its end", Reply(choice="end", text="at its end")),
+    ],
+)
+def test_answers(question: Question, line: str, reply: Reply) -> None:
+    assert answer(question, line)[0] == reply
+
+
+@pytest.mark.parametrize(
+    ("question", "lines"),
+    [
+        (HOLD, ["1", "y", "", "yes please", "yes"]),
+        (CONFIRM, ["", "maybe", "0", "3", "yes"]),
+        (TRIM, ["+nan", "-inf", "+much", "1"]),
+        (DECIDE, ["", "because", "again"]),
+    ],
+)
+def test_what_is_no_answer_is_asked_for_again(question: Question, lines: list[str]) -> None:
+    reply, text = answer(question, *lines)
+    assert reply.choice in {choice.value for choice in question.choices}
+    assert text.count("! Answer with a number") == len(lines) - 1
+
+
+def test_a_question_says_everything() -> None:
+    _, text = answer(PROBES, "1")
+    for words in (PROBES.title, "Red: the end of emitter.upper.1", "Black: output", "Expected: 0.00 mV", "Why:",
+                  "CAUTION: Clip on with the power off", "(3 of 7)", "1 done", "2 I can't: make safe"):  # fmt: skip
+        assert words in " ".join(text.split()), words
+    assert max(len(line) for line in text.splitlines()) <= plain.WIDTH
+
+
+def test_a_refusal_is_said_and_the_question_not_put_again() -> None:
+    _, text = answer(DECIDE, "1", refused="A reason in words is needed to go on.")
+    assert "! A reason in words is needed" in text
+    assert DECIDE.title not in text
+
+
+def test_a_trim_shows_where_it_is_and_how_to_turn_a_simulated_screw() -> None:
+    _, text = answer(TRIM, "1", view=TRIM_VIEW)
+    assert "now 19.31 mV" in text
+    assert "+0.25" in text
+    _, text = answer(TRIM, "1", view=replace(TRIM_VIEW, kind="walk"))
+    assert "+0.25" not in text
+
+
+def test_only_what_is_new_is_printed() -> None:
+    async def script(front: PlainFront, terminal: Terminal, offs: list[str]) -> None:
+        for _ in range(3):
+            front.show(replace(VIEW, busy="Reading.", message="A remark."))
+        front.show(replace(VIEW, results=(*VIEW.results, scripted.FAILED), message="A remark."))
+        front.show(replace(VIEW, supply=scripted.UNKNOWN, message="A remark."))
+
+    text, _ = play(script)
+    for words, times in (("[PASS]", 2), ("[FAIL]", 1), ("... Reading.", 1), ("! A remark.", 1),
+                         ("== First volts ==", 1), (scripted.UNKNOWN.words, 1), (scripted.OFF.words, 1)):  # fmt: skip
+        assert text.count(words) == times, words
+
+
+def test_off_switches_off_although_nothing_is_asked() -> None:
+    async def script(front: PlainFront, terminal: Terminal, offs: list[str]) -> None:
+        front.show(replace(VIEW, busy="Let it warm up"))
+        terminal.type("", "what is it doing", "off")
+        while not offs:
+            await asyncio.sleep(0.005)
+
+    _, offs = play(script)
+    assert offs == ["the operator typed off"]
+
+
+@pytest.mark.parametrize("word", ["off", "OFF", "  Off "])
+@pytest.mark.parametrize("question", [CONFIRM, HOLD, TEXT, BY_HAND, TRIM, DECIDE, PROBES])
+def test_off_at_every_prompt(word: str, question: Question) -> None:
+    async def script(front: PlainFront, terminal: Terminal, offs: list[str]) -> None:
+        front.show(VIEW)
+        asking = asyncio.create_task(front.ask(question))
+        await asyncio.sleep(0.01)
+        terminal.type(word)
+        while not offs:
+            await asyncio.sleep(0.005)
+        assert not asking.done()
+        asking.cancel()
+
+    assert play(script)[1] == ["the operator typed off"]
+
+
+def test_lines_of_a_pipe_keep_their_order() -> None:
+    async def script(front: PlainFront, terminal: Terminal, offs: list[str]) -> None:
+        front.show(VIEW)
+        terminal.type("1", "off", "2")
+        await asyncio.sleep(0.05)
+        assert (await front.ask(CONFIRM)).choice == "yes"
+        assert offs == []
+        assert (await front.ask(CONFIRM)).choice == "no"
+        assert offs == ["the operator typed off"]
+
+    play(script, tty=False)
+
+
+def test_the_end_of_the_input_switches_off_and_leaves(monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setattr(plain, "END_S", 0.05)
+
+    async def script(front: PlainFront, terminal: Terminal, offs: list[str]) -> None:
+        front.show(VIEW)
+        terminal.type("1")
+        terminal.close()
+        assert (await front.ask(CONFIRM)).choice == "yes"
+        for _ in range(2):
+            with pytest.raises(click.Abort):
+                await front.ask(CONFIRM)
+        assert offs == ["the input of the terminal has ended"]
+
+    play(script)
+
+
+def test_a_broken_terminal_is_an_end() -> None:
+    class Broken(Terminal):
+        def readline(self) -> str:
+            raise OSError("Input/output error")
+
+    offs: list[str] = []
+
+    async def whole() -> None:
+        front = PlainFront(offs.append, out=io.StringIO(), source=Broken())  # type: ignore[arg-type]
+        asking = asyncio.create_task(front.ask(HOLD))
+        while not offs:
+            await asyncio.sleep(0.005)
+        asking.cancel()
+
+    asyncio.run(whole())
+    assert offs
