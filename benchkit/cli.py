@@ -44,8 +44,8 @@ def cli() -> None:
     benchkit helps a qualified person; it is not a safety device, it certifies nothing, and it defers to local codes,
     the maker's service data and licensed practice. Where they differ from the screen, they win.
 
-    Exit status: 0 done and passed, 1 done and failed or undecided, 2 wrong input, 3 instrument trouble, 4 stopped by the
-    operator or by a safety trip, 5 an error of benchkit's own.
+    Exit status: 0 done and passed, 1 done and failed or undecided, 2 wrong input, 3 instrument trouble, 4 stopped by
+    the operator or by a safety trip, 5 an error of benchkit's own.
     """
 
 
@@ -93,6 +93,10 @@ def _own_error(error: Exception) -> str:
     return f"This is an error of benchkit's own: {type(error).__name__}: {error}. {where} Please report it."
 
 
+def _examples(*lines: str) -> str:
+    return "\n".join(["Example:", *(f"  {line}" for line in lines)])
+
+
 def _print_json(value: Any) -> None:
     click.echo(json.dumps(value, ensure_ascii=False, allow_nan=False))
 
@@ -113,7 +117,10 @@ def _records_option(function: Callable[..., Any]) -> Callable[..., Any]:
 
 
 @cli.command(
-    epilog='Example:\n  benchkit rehearse\n  benchkit rehearse --plain --stand-in --seed 7 --plant "emitter.upper.1: open"'
+    epilog=_examples(
+        "benchkit rehearse",
+        'benchkit rehearse --plain --stand-in --seed 7 --plant "emitter.upper.1: open"',
+    )
 )
 @_design_option
 @_procedure_option
@@ -142,7 +149,10 @@ def rehearse(**options: Any) -> int:
 
 
 @cli.command(
-    epilog="Example:\n  benchkit walk --design my-stage.toml --bench bench.toml\n  benchkit walk --resume records/T40-0017-a6ef3863-20260131T101500Z.jsonl"
+    epilog=_examples(
+        "benchkit walk --design my-stage.toml --bench bench.toml",
+        "benchkit walk --resume records/T40-0017-a6ef3863-20260131T101500Z.jsonl",
+    )
 )
 @_design_option
 @_procedure_option
@@ -170,7 +180,10 @@ def walk(**options: Any) -> int:
 
 
 @cli.command(
-    epilog="Example:\n  benchkit expect tern-40 --trimmer least --positive 15V --negative -15V\n  benchkit expect my-stage.toml --trimmer target --when warm --json"
+    epilog=_examples(
+        "benchkit expect tern-40 --trimmer least --positive 15V --negative -15V",
+        "benchkit expect my-stage.toml --trimmer target --when warm --json",
+    )
 )
 @click.argument("design", metavar="DESIGN")
 @click.option("--positive", default=None, metavar="V", help="Positive rail; the design's if left out.")
@@ -245,7 +258,10 @@ def _expected_table(found: dict[str, Any]) -> str:
 
 
 @cli.command(
-    epilog="Example:\n  benchkit judge tern-40 readings.csv\n  benchkit judge my-stage.toml a.csv b.csv --json"
+    epilog=_examples(
+        "benchkit judge tern-40 readings.csv",
+        "benchkit judge my-stage.toml a.csv b.csv --json",
+    )
 )
 @click.argument("design", metavar="DESIGN")
 @click.argument("readings", nargs=-1, required=True, type=click.Path(path_type=Path), metavar="READINGS.csv...")
@@ -285,7 +301,11 @@ def judge(
 def _judged_table(table: Any, name: str) -> str:
     from benchkit.quantities import show
 
-    lines = [f"{name}: {table.verdict.upper()}", "", f"{'test point':30s} {'value':>12s} {'lowest':>12s} {'highest':>12s}"]
+    lines = [
+        f"{name}: {table.verdict.upper()}",
+        "",
+        f"{'test point':30s} {'value':>12s} {'lowest':>12s} {'highest':>12s}",
+    ]
     for judged in table.readings:
         reading, limits = judged.entry.reading, judged.limits
         low, high = (None, None) if limits is None else (limits.low, limits.high)
@@ -317,7 +337,12 @@ def record() -> None:
     """Verify, show and tabulate records."""
 
 
-@record.command("verify", epilog="Example:\n  benchkit record verify records/*.jsonl")
+@record.command(
+    "verify",
+    epilog=_examples(
+        "benchkit record verify records/*.jsonl",
+    ),
+)
 @click.argument("records", nargs=-1, required=True, type=click.Path(path_type=Path), metavar="RECORD...")
 @click.option("--json", "as_json", is_flag=True, help="For programs: one object a line.")
 def record_verify(records: tuple[Path, ...], as_json: bool) -> int:
@@ -333,7 +358,12 @@ def record_verify(records: tuple[Path, ...], as_json: bool) -> int:
     return verify.worst(found)
 
 
-@record.command("show", epilog="Example:\n  benchkit record show records/T40-0017-a6ef3863-20260131T101500Z.jsonl")
+@record.command(
+    "show",
+    epilog=_examples(
+        "benchkit record show records/T40-0017-a6ef3863-20260131T101500Z.jsonl",
+    ),
+)
 @click.argument("record_path", type=click.Path(path_type=Path), metavar="RECORD")
 @click.option("--json", "as_json", is_flag=True, help="For programs.")
 def record_show(record_path: Path, as_json: bool) -> int:
@@ -348,7 +378,12 @@ def record_show(record_path: Path, as_json: bool) -> int:
     return 0
 
 
-@record.command("table", epilog="Example:\n  benchkit record table records/*.jsonl > readings.csv")
+@record.command(
+    "table",
+    epilog=_examples(
+        "benchkit record table records/*.jsonl > readings.csv",
+    ),
+)
 @click.argument("records", nargs=-1, required=True, type=click.Path(path_type=Path), metavar="RECORD...")
 @click.option("--json", "as_json", is_flag=True, help="For programs: one object a reading.")
 def record_table(records: tuple[Path, ...], as_json: bool) -> int:
@@ -365,7 +400,10 @@ def record_table(records: tuple[Path, ...], as_json: bool) -> int:
 
 
 @cli.command(
-    epilog="Example:\n  benchkit check my-stage.toml\n  benchkit check my-stage.toml --procedure my-steps.toml"
+    epilog=_examples(
+        "benchkit check my-stage.toml",
+        "benchkit check my-stage.toml --procedure my-steps.toml",
+    )
 )
 @click.argument("design", metavar="DESIGN")
 @_procedure_option

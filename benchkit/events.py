@@ -366,7 +366,7 @@ def from_payload(name: str, payload: Mapping[str, Any]) -> Event:
     if kind is None:
         raise BenchkitError(f"The record holds an event named {name!r}", "one that this version knows")
     try:
-        event = _adapter(kind).validate_python(dict(payload))
+        event = _adapter(name).validate_python(dict(payload))
     except pydantic.ValidationError as error:
         first = error.errors()[0]
         where = ".".join(str(part) for part in first["loc"])
@@ -376,8 +376,8 @@ def from_payload(name: str, payload: Mapping[str, Any]) -> Event:
 
 
 @functools.cache
-def _adapter(kind: Any) -> pydantic.TypeAdapter[Any]:
-    return pydantic.TypeAdapter(kind)
+def _adapter(name: str) -> pydantic.TypeAdapter[Event]:
+    return pydantic.TypeAdapter(KINDS[name])
 
 
 def _plain(value: object) -> object:

@@ -21,7 +21,6 @@ from benchkit.instruments.bench import parse_bench
 from benchkit.procedure import file as procedure_file
 from benchkit.record.show import DEFERENCE
 from benchkit.stage.design import parse_design
-from benchkit.ui import launch, look
 from tests.test_rooms import LEVELS, PACKAGE
 
 ROOT = Path(__file__).resolve().parent.parent
@@ -168,8 +167,6 @@ def test_the_readme_begins_with_the_job_and_the_two_ways_to_set_up() -> None:
 def test_the_safety_sentence_is_the_same_everywhere() -> None:
     plain = " ".join(README.replace("*", "").split())
     assert plain.count(DEFERENCE) == 2
-    assert look.DEFERENCE == DEFERENCE
-    assert DEFERENCE in launch.DEFERENCE.replace("benchkit helps", "Benchkit helps")
     assert DEFERENCE in " ".join(help_of("benchkit").split()).replace("benchkit helps", "Benchkit helps")
 
 

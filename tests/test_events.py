@@ -126,9 +126,7 @@ def test_a_reading_that_contradicts_itself_cannot_be_read() -> None:
         from_payload("reading taken", payload)
 
 
-@pytest.mark.parametrize(
-    ("positive", "negative", "limit"), [(0, 0, False), (1, 0, True), (0, 1, True), (1, 1, True)]
-)
+@pytest.mark.parametrize(("positive", "negative", "limit"), [(0, 0, False), (1, 0, True), (0, 1, True), (1, 1, True)])
 def test_either_rail_in_its_limit(positive: int, negative: int, limit: bool) -> None:
     state = SupplyState(positive_in_limit=bool(positive), negative_in_limit=bool(negative))
     assert state.in_limit is limit

@@ -50,9 +50,9 @@ def test_a_path_that_is_not_there(name: str, tmp_path: Path, monkeypatch: pytest
 
 def test_a_name_that_nothing_has_lists_those_that_are(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
     monkeypatch.chdir(tmp_path)
-    with pytest.raises(FileError, match="no design of that name.*breadboard, tern-40"):
+    with pytest.raises(FileError, match=r"no design of that name.*breadboard, tern-40"):
         shipped.find_design("stern")
-    with pytest.raises(FileError, match="no procedure of that name.*first-power-on"):
+    with pytest.raises(FileError, match=r"no procedure of that name.*first-power-on"):
         shipped.find_procedure("tern-40")
 
 

@@ -75,8 +75,8 @@ class State:
     stopped_at : str
         The item at which that happened.
     cut_at : int or None
-        The item's number at which whoever ran the walk went away (the screen, its session, the keeper) while nothing else
-        had stopped it; such a walk can go on.
+        The item's number at which whoever ran the walk went away (the screen, its session, the keeper) while nothing
+        else had stopped it; such a walk can go on.
     stop_status : int
         The exit status that the stop leads to; 0 while nothing has stopped the walk.
     ever_on : bool

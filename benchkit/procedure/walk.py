@@ -269,9 +269,7 @@ class Walk:
                     and condition_key(other.condition) == key
                 )
             )
-            conditions = (
-                item.condition.conditions if isinstance(item.condition, Joined) else (item.condition,)
-            )
+            conditions = item.condition.conditions if isinstance(item.condition, Joined) else (item.condition,)
             predict = Predict(item=item.id, key=key, conditions=conditions, points=points)
             return replace(state, phase="predicting"), (predict,)
         if item.point.name == state.probes or item.point.function == "dc current":

@@ -60,7 +60,7 @@ from benchkit.session.clock import Clock
 from benchkit.session.front import Front, Reply
 from benchkit.session.hands import Hands
 from benchkit.session.threads import in_thread
-from benchkit.session.views import Moment, make_view
+from benchkit.session.views import Headings, Moment, Painter
 from benchkit.stage.design import Design
 
 HEARTBEAT_S = 0.2
@@ -135,6 +135,15 @@ class Session:
         self._off_asked = False
         self._moved_on = False
         self.watch_since = 0.0
+        self._painter = Painter(
+            job.walk,
+            Headings(
+                record=str(job.record),
+                design=f"{job.design.name} {job.design.revision}",
+                procedure=job.procedure.head.name,
+                purpose=job.procedure.head.purpose,
+            ),
+        )
         self._last_actions: tuple[Action, ...] = ()
 
     # -- what the outside calls --------------------------------------------------------------------------------
@@ -450,18 +459,7 @@ class Session:
 
     def show(self) -> None:
         """Give the front end a new picture."""
-        job = self.job
-        self.front.show(
-            make_view(
-                job.walk,
-                self.state,
-                self.moment,
-                record=str(job.record),
-                design=f"{job.design.name} {job.design.revision}",
-                procedure=job.procedure.head.name,
-                purpose=job.procedure.head.purpose,
-            )
-        )
+        self.front.show(self._painter.paint(self.state, self.moment))
 
     def show_moment(self, **changes: Any) -> None:
         """Change what moves on the screen."""

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from dataclasses import dataclass
 
 from benchkit import quantities
@@ -38,39 +39,61 @@ class Moment:
     message: str = ""
 
 
-def make_view(
-    walk: Walk, state: State, moment: Moment, *, record: str, design: str, procedure: str, purpose: str
-) -> View:
-    """Draw the whole picture."""
-    opened = state.opened
-    item = walk.item(state)
-    return View(
-        kind="walk" if opened is None else opened.kind,
-        procedure=procedure,
-        purpose=purpose,
-        unit="" if opened is None else opened.unit,
-        operator="" if opened is None else opened.operator,
-        design=design,
-        meter=state.meter,
-        record=record,
-        sections=_sections(walk.plan, state),
-        section_title=item.section_title,
-        item=item.id,
-        item_title=item.title,
-        item_number=min(state.index + 1, len(walk.plan)),
-        item_count=len(walk.plan),
-        results=tuple(_result(walk.plan, state, judged) for judged in state.results),
-        supply=_supply(state, moment.supply or state.supply),
-        live=moment.live,
-        busy=moment.busy,
-        busy_share=moment.busy_share,
-        remaining_s=moment.remaining_s,
-        message=moment.message or state.note,
-        kept=state.count,
-        verdict=None if state.closed is None else state.closed.verdict,
-        stopped=state.stopped,
-        exit_status=None if state.closed is None else state.closed.exit_status,
-    )
+@dataclass(frozen=True, kw_only=True)
+class Headings:
+    """What a picture shows of the walk as a whole; the same from the first picture to the last."""
+
+    record: str
+    design: str
+    procedure: str
+    purpose: str
+
+
+class Painter:
+    """Draws pictures of one walk; what only a new event can change is drawn once for each state."""
+
+    def __init__(self, walk: Walk, headings: Headings) -> None:
+        self._walk = walk
+        self._headings = headings
+        self._titles = {item.id: item.title for item in walk.plan.items}
+        self._state: State | None = None
+        self._sections: tuple[SectionView, ...] = ()
+        self._results: tuple[ResultView, ...] = ()
+
+    def paint(self, state: State, moment: Moment) -> View:
+        """Draw the whole picture of one moment."""
+        if state is not self._state:
+            self._state = state
+            self._sections = _sections(self._walk.plan, state)
+            self._results = tuple(_result(self._titles, state, judged) for judged in state.results)
+        opened, item, headings = state.opened, self._walk.item(state), self._headings
+        return View(
+            kind="walk" if opened is None else opened.kind,
+            procedure=headings.procedure,
+            purpose=headings.purpose,
+            unit="" if opened is None else opened.unit,
+            operator="" if opened is None else opened.operator,
+            design=headings.design,
+            meter=state.meter,
+            record=headings.record,
+            sections=self._sections,
+            section_title=item.section_title,
+            item=item.id,
+            item_title=item.title,
+            item_number=min(state.index + 1, len(self._walk.plan)),
+            item_count=len(self._walk.plan),
+            results=self._results,
+            supply=_supply(state, moment.supply or state.supply),
+            live=moment.live,
+            busy=moment.busy,
+            busy_share=moment.busy_share,
+            remaining_s=moment.remaining_s,
+            message=moment.message or state.note,
+            kept=state.count,
+            verdict=None if state.closed is None else state.closed.verdict,
+            stopped=state.stopped,
+            exit_status=None if state.closed is None else state.closed.exit_status,
+        )
 
 
 def supply_words(energised: Energised, supply: SupplyState | None, *, by_hand: bool) -> str:
@@ -95,29 +118,30 @@ def supply_words(energised: Energised, supply: SupplyState | None, *, by_hand: b
 
 
 def _sections(plan: Plan, state: State) -> tuple[SectionView, ...]:
-    names = list(dict.fromkeys(item.section for item in plan.items))
+    found = {judged.item: judged.verdict for judged in state.results}
+    numbers: dict[str, list[int]] = {}
+    for number, item in enumerate(plan.items):
+        numbers.setdefault(item.section, []).append(number)
     views = []
-    for name in names:
-        numbers = [number for number, item in enumerate(plan.items) if item.section == name]
-        verdicts = [judged.verdict for number in numbers if (judged := state.result(plan.items[number].id)) is not None]
+    for name, own in numbers.items():
+        verdicts = [found[plan.items[number].id] for number in own if plan.items[number].id in found]
         views.append(
             SectionView(
                 name=name,
-                title=plan.items[numbers[0]].section_title,
-                done=sum(number < state.index for number in numbers),
-                total=len(numbers),
-                current=state.index in numbers,
+                title=plan.items[own[0]].section_title,
+                done=sum(number < state.index for number in own),
+                total=len(own),
+                current=own[0] <= state.index <= own[-1],
                 verdict=worst(verdicts) if verdicts else None,
             )
         )
     return tuple(views)
 
 
-def _result(plan: Plan, state: State, judged: Judged) -> ResultView:
-    title = next((item.title for item in plan.items if item.id == judged.item), judged.item)
+def _result(titles: Mapping[str, str], state: State, judged: Judged) -> ResultView:
     return ResultView(
         item=judged.item,
-        title=title,
+        title=titles.get(judged.item, judged.item),
         value_text=_number(judged.value, judged.unit),
         low_text=_number(judged.low, judged.unit),
         high_text=_number(judged.high, judged.unit),

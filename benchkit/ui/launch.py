@@ -29,11 +29,6 @@ if TYPE_CHECKING:
 PACE = 30.0
 """While a person waits in a rehearsal, so many simulated seconds pass in one."""
 
-DEFERENCE = (
-    "benchkit helps a qualified person; it is not a safety device, it certifies nothing, and it defers to local codes, "
-    "the maker's service data and licensed practice. Where they differ from the screen, they win."
-)
-
 
 def rehearse(
     *,
@@ -221,6 +216,7 @@ def _with_person(runner: Runner, unit: str, operator: str, *, plain: bool, resum
 
 
 def _in_lines(runner: Runner, unit: str, operator: str, resume: Path | None) -> int:
+    from benchkit.record.show import DEFERENCE
     from benchkit.ui.plain import PlainFront
 
     setting = runner.setting

@@ -39,11 +39,6 @@ SUPPLY_WORDS: Final[dict[Energised, str]] = {
 }
 SUPPLY_SHAPES: Final[dict[Energised, str]] = {"off": RULE * 2, "on": UP + UP, "unknown": SHADE * 2}
 
-DEFERENCE: Final = (
-    "Benchkit helps a qualified person; it is not a safety device, it certifies nothing, and it defers to local codes, "
-    "the maker's service data and licensed practice. Where they differ from the screen, they win."
-)
-
 GROUND: Final = "#10151b"
 PANEL: Final = "#1b232c"
 INK: Final = "#f2efe6"

@@ -92,7 +92,7 @@ def test_spreader_ratio_of_the_published_spreader() -> None:
         *WITHOUT_TRIMMER,
         ('upper = "2.0 kohm 1 %"', 'upper = "3.3 kohm"'),
         ('lower = "560 ohm 1 %"', 'lower = "1 kohm"'),
-        ("IS = 2e-14, BF = 180", "IS = 1e-14, BF = 200"),
+        ("IS = 2e-14, BF = 320", "IS = 1e-14, BF = 200"),
     )
     assert _ratio(3.1371001, 0.7016924, design).verdict == "pass"
 

@@ -173,7 +173,7 @@ def test_healthy_units_hardly_ever_fail() -> None:
     rng = np.random.default_rng(19)
     tables = [_judge(_file(_units_read(solved, unit, rng))) for unit in range(40)]
     assert [table.verdict for table in tables].count("fail") <= 4
-    assert [table.verdict for table in tables].count("pass") >= 20
+    assert [table.verdict for table in tables].count("pass") >= 10
     # What a good meter leaves undecided at the least-bias end is a few microvolts of emitter drop, and little else.
     undecided = [one for table in tables for one in table.readings if one.judgement.verdict == "undecided"]
     others = [one for one in undecided if not one.entry.point.name.startswith("emitter")]

@@ -245,7 +245,7 @@ RULE = 'name = "r"\nkind = "rule"\ntitle = "t"\nrule = "divider stiffness"\n'
     ],
 )
 def test_a_procedure_that_does_not_fit_the_design(steps: tuple[str, ...], words: str) -> None:
-    with pytest.raises(FileError, match="mine.toml, section s, step") as caught:
+    with pytest.raises(FileError, match=r"mine\.toml, section s, step") as caught:
         plan_of(*steps)
     assert words in str(caught.value)
 
@@ -360,7 +360,7 @@ def test_discharge_is_an_rc_decay() -> None:
 def test_equal_conditions_have_equal_keys() -> None:
     one = Condition(positive_v=8.0, negative_v=-8.0, limit_a=0.045, trimmer="least")
     assert condition_key(one) == condition_key(replace(one))
-    others = [
+    others: list[Condition | Unpowered | Joined] = [
         replace(one, positive_v=9.0),
         replace(one, negative_v=-9.0),
         replace(one, limit_a=0.05),

@@ -470,8 +470,9 @@ def test_the_output_may_be_on_from_the_moment_that_it_is_told() -> None:
     assert drive.state.energised == "off"
     drive.well()
     assert isinstance(drive.open, SetSupply)
-    assert drive.state.energised == "unknown"
-    assert drive.state.ever_on
+    state = drive.state
+    assert state.energised == "unknown"
+    assert state.ever_on
 
 
 @pytest.mark.parametrize("output_on", [True, None])

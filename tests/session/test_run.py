@@ -224,7 +224,11 @@ def test_make_safe_as_an_answer() -> None:
 def test_an_off_that_nobody_confirmed_is_asked_for_by_hand() -> None:
     run = Run()
     run.keeper.confirmed = False
-    run.front.answer = hang_at("power.ready", lambda: run.session.off_now())
+
+    def press() -> None:
+        run.session.off_now()
+
+    run.front.answer = hang_at("power.ready", press)
     run.go()
     titles = [question.title for question in run.front.questions if question.kind == "by hand"]
     assert titles
@@ -236,7 +240,7 @@ def test_an_off_that_nobody_confirmed_is_asked_for_by_hand() -> None:
 
 def test_a_trip_takes_the_question_back() -> None:
     run = Run()
-    run.front.answer = hang_at("bias.trim.emitter.upper.1", lambda: run.keeper.trip())
+    run.front.answer = hang_at("bias.trim.emitter.upper.1", run.keeper.trip)
     closed = run.go()
     assert closed.exit_status == 4
     assert closed.stopped == "tripped: rail+ in its limit"
@@ -461,7 +465,7 @@ def by_hand(run: Run, typed: dict[str, list[str]]) -> None:
     volts = {item.id: item for item in small().plan.items}
 
     async def answer(question: Question, refused: str) -> Reply | None:
-        if question.kind != "by hand" or "by hand" not in question.title and "Type what" not in question.title:
+        if question.kind != "by hand" or ("by hand" not in question.title and "Type what" not in question.title):
             if question.kind == "by hand":
                 return Reply(choice="take", text="47 mV")
             return None
@@ -562,4 +566,6 @@ def test_the_fake_front_answers_every_kind() -> None:
     run.go()
     kinds = {question.kind for question in run.front.questions}
     assert kinds == {"confirm", "tell", "text", "probes", "hold", "trim"}
-    assert all(well(question).choice in {choice.value for choice in question.choices} for question in run.front.questions)
+    assert all(
+        well(question).choice in {choice.value for choice in question.choices} for question in run.front.questions
+    )

@@ -11,6 +11,10 @@ from benchkit.session.threads import in_thread
 
 
 def test_the_result_comes_back_and_the_loop_turns_meanwhile() -> None:
+    def work() -> str:
+        time.sleep(0.05)
+        return threading.current_thread().name
+
     async def whole() -> tuple[str, int]:
         turns = 0
 
@@ -21,7 +25,7 @@ def test_the_result_comes_back_and_the_loop_turns_meanwhile() -> None:
                 await asyncio.sleep(0.001)
 
         turning = asyncio.create_task(turn())
-        result = await in_thread(lambda: time.sleep(0.05) or threading.current_thread().name, "a-name")
+        result = await in_thread(work, "a-name")
         turning.cancel()
         return result, turns
 

@@ -7,12 +7,10 @@ import pytest
 from benchkit.events import Decided, Resumed, SupplyState, Tripped
 from benchkit.procedure.state import State
 from benchkit.session.front import View
-from benchkit.session.views import Moment, make_view, supply_words
+from benchkit.session.views import Headings, Moment, Painter, supply_words
 from tests.procedure.driver import OPENED, Drive, begun, judged, small
 
-ON = SupplyState(
-    output_on=True, positive_v=10.0, negative_v=-10.0, positive_a=0.0124, negative_a=0.0121, limit_a=0.045
-)
+ON = SupplyState(output_on=True, positive_v=10.0, negative_v=-10.0, positive_a=0.0124, negative_a=0.0121, limit_a=0.045)
 
 
 @pytest.mark.parametrize(
@@ -36,10 +34,20 @@ def test_supply_words(energised: str, supply: SupplyState | None, by_hand: bool,
         assert found == words
 
 
+HEADINGS = Headings(record="r.jsonl", design="d A", procedure="p", purpose="why")
+
+
 def view(drive: Drive, moment: Moment | None = None) -> View:
-    return make_view(
-        drive.walk, drive.state, moment or Moment(), record="r.jsonl", design="d A", procedure="p", purpose="why"
-    )
+    return Painter(drive.walk, HEADINGS).paint(drive.state, moment or Moment())
+
+
+def test_one_painter_keeps_up_with_every_event() -> None:
+    drive = begun(small())
+    painter = Painter(drive.walk, HEADINGS)
+    while drive.state.closed is None:
+        drive.well()
+        assert painter.paint(drive.state, Moment()) == view(drive)
+        assert painter.paint(drive.state, Moment(busy="now")) == replace(view(drive), busy="now")
 
 
 def test_nothing_is_said_to_be_off_before_it_was_read_back() -> None:

@@ -60,8 +60,8 @@ def test_an_untracked_spreader_lets_the_bias_run_up() -> None:
     heard = changed(TERN, ('heatsink = "1.2', 'heatsink = "0.6'))
     for_both = []
     for design in (deaf, heard):
-        cold = solve_units(design, nominal(design), Condition(positive_v=35, negative_v=-35, trimmer=0.4))
-        warm = solve_units(design, nominal(design), Condition(positive_v=35, negative_v=-35, trimmer=0.4, when="warm"))
+        cold = solve_units(design, nominal(design), Condition(positive_v=35, negative_v=-35, trimmer=0.5))
+        warm = solve_units(design, nominal(design), Condition(positive_v=35, negative_v=-35, trimmer=0.5, when="warm"))
         assert warm.converged.all()
         for_both.append(warm.points["emitter.upper.1"][0] / cold.points["emitter.upper.1"][0])
     assert for_both[0] > 1.05 * for_both[1]

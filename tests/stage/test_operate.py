@@ -236,7 +236,7 @@ def test_collector_resistor_flattens_the_spread() -> None:
         return readings[1] - readings[0]
 
     plain = tern()
-    flat = changed(TERN, ('bypass = "10 uF"', 'bypass = "10 uF"\ncollector_resistor = "22 ohm 5 %"'))
+    flat = changed(TERN, ('bypass = "10 uF"', 'bypass = "10 uF"\ncollector_resistor = "18 ohm 5 %"'))
     assert moved(plain) > 0.0
     assert abs(moved(flat)) < 0.2 * moved(plain)
 

@@ -8,8 +8,9 @@ from rich.text import Text
 from textual.containers import VerticalScroll
 
 from benchkit.procedure.actions import Choice, Question
+from benchkit.record.show import DEFERENCE
 from benchkit.session.front import View
-from benchkit.ui.look import DEFERENCE, INK, QUIET, STRONG, VERDICT_COLOURS, safe
+from benchkit.ui.look import INK, QUIET, STRONG, VERDICT_COLOURS, safe
 from benchkit.ui.pages.base import Page
 from benchkit.ui.widgets.outcome import result_line, verdict_strip
 from benchkit.ui.widgets.summary_words import closing_sentence, still_open

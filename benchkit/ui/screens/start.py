@@ -10,8 +10,9 @@ from textual.binding import BindingType
 from textual.containers import Vertical, VerticalScroll
 from textual.widgets import Input
 
+from benchkit.record.show import DEFERENCE
 from benchkit.ui.entry import Identity, Opening, entry_problem
-from benchkit.ui.look import CARE, DEFERENCE, INK, QUIET, STRONG, safe
+from benchkit.ui.look import CARE, INK, QUIET, STRONG, safe
 from benchkit.ui.screens.base import TURN_OVER, BenchScreen
 from benchkit.ui.widgets.words import Words
 

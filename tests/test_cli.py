@@ -1,0 +1,312 @@
+"""The commands: help, exit statuses, and one clear sentence for whatever is wrong with what they are given."""
+
+from __future__ import annotations
+
+import json
+from collections.abc import Callable, Iterator
+from pathlib import Path
+
+import click
+import pytest
+
+from benchkit import __version__, cli
+from benchkit.errors import BenchkitError, EntryError, InstrumentError
+from tests.procedure.driver import SHIPPED, SMALL, begun, small
+from tests.record.walks import write
+from tests.stage.designs import BREADBOARD
+
+Run = Callable[..., tuple[int, str, str]]
+
+
+@pytest.fixture
+def run(capsys: pytest.CaptureFixture[str]) -> Run:
+    def call(*arguments: object) -> tuple[int, str, str]:
+        with pytest.raises(SystemExit) as caught:
+            cli.main([str(argument) for argument in arguments])
+        out, err = capsys.readouterr()
+        assert isinstance(caught.value.code, int)
+        return caught.value.code, out, err
+
+    return call
+
+
+def one_sentence(err: str) -> str:
+    """No traceback, no page of text: a line that says who speaks."""
+    assert "Traceback" not in err
+    lines = err.strip().splitlines()
+    assert len(lines) == 1, err
+    assert lines[0].startswith("benchkit: ")
+    return lines[0]
+
+
+def leaves(group: click.Group, path: tuple[str, ...] = ()) -> Iterator[tuple[str, ...]]:
+    for name, command in group.commands.items():
+        if isinstance(command, click.Group):
+            yield from leaves(command, (*path, name))
+        else:
+            yield (*path, name)
+
+
+COMMANDS = list(leaves(cli.cli))
+
+
+def changed(tmp_path: Path, old: str, new: str) -> Path:
+    text = BREADBOARD.read_text(encoding="utf-8")
+    assert text.count(old) == 1
+    path = tmp_path / "mine.toml"
+    path.write_text(text.replace(old, new), encoding="utf-8")
+    return path
+
+
+# -- help -----------------------------------------------------------------------------------------------------------
+
+
+@pytest.mark.parametrize("command", COMMANDS, ids=" ".join)
+def test_help_with_an_example(run: Run, command: tuple[str, ...]) -> None:
+    status, out, err = run(*command, "--help")
+    assert (status, err) == (0, "")
+    assert "Example:" in out
+    assert f"benchkit {' '.join(command)}" in out
+
+
+def test_the_whole_help_defers_and_names_the_statuses(run: Run) -> None:
+    status, out, _ = run("--help")
+    words = " ".join(out.split())
+    assert status == 0
+    assert "it is not a safety device, it certifies nothing" in words
+    assert "3 instrument trouble" in words
+
+
+def test_version(run: Run) -> None:
+    status, out, _ = run("--version")
+    assert status == 0
+    assert __version__ in out
+
+
+@pytest.mark.parametrize(
+    "arguments",
+    [("frobnicate",), ("check",), ("check", "tern-40", "--frob"), ("expect", "tern-40", "--units", "3"),
+     ("expect", "tern-40", "--seed", "-1"), ("expect", "tern-40", "--when", "hot"), ("judge", "tern-40")],
+)  # fmt: skip
+def test_wrong_usage_is_wrong_input(run: Run, arguments: tuple[str, ...]) -> None:
+    status, out, err = run(*arguments)
+    assert (status, out) == (2, "")
+    assert "Traceback" not in err
+    assert "Error" in err
+
+
+# -- what is wrong with a file --------------------------------------------------------------------------------------
+
+DESIGN_CASES = [
+    ('name = "Breadboard"', "name = ", ""),
+    ('revision = "A"', 'revision = "A"\ncolour = "red"', "design.colour"),
+    ('upper = "npn-medium"', 'upper = "npn-huge"', "npn-huge"),
+    ('emitter_resistor = "4.7 ohm 1 %"', 'emitter_resistor = "0 ohm 1 %"', "output.emitter_resistor"),
+    ('emitter_resistor = "4.7 ohm 1 %"', 'emitter_resistor = "4.7 V"', "output.emitter_resistor"),
+    ('transistor = "npn-small"\nupper = "', 'transistor = "npn-small"\nupper = "-', "spreader.upper"),
+    ("pairs = 1", "pairs = 0", "output.pairs"),
+    ('value = "500 ohm 10 %"', 'value = "500 ohm -10 %"', "spreader.trimmer.value"),
+    ('positive = "10 V"', 'positive = "-10 V"', "rails.positive"),
+    ('tolerance = "10 %"', 'tolerance = "-10 %"', "target.tolerance"),
+    ("format = 1", "format = 9", "design.format"),
+]
+
+
+@pytest.mark.parametrize(("old", "new", "key"), DESIGN_CASES)
+@pytest.mark.parametrize("command", ["check", "expect"])
+def test_a_wrong_design_names_file_and_key(
+    run: Run, tmp_path: Path, command: str, old: str, new: str, key: str
+) -> None:
+    path = changed(tmp_path, old, new)
+    status, out, err = run(command, path)
+    assert (status, out) == (2, "")
+    sentence = one_sentence(err)
+    assert str(path) in sentence
+    assert key in sentence
+
+
+def test_a_target_out_of_reach(run: Run, tmp_path: Path) -> None:
+    path = changed(tmp_path, 'quiescent_current = "10 mA"', 'quiescent_current = "4 A"')
+    status, out, err = run("check", path)
+    assert status in (1, 2)
+    said = out + err
+    assert "Traceback" not in said
+    assert "target" in said.lower()
+
+
+@pytest.mark.parametrize("command", ["check", "expect", "rehearse", "walk"])
+def test_a_design_that_is_not_there(run: Run, command: str) -> None:
+    arguments = ("--design", "none.toml") if command in ("rehearse", "walk") else ("none.toml",)
+    status, _, err = run(command, *arguments)
+    assert status == 2
+    assert "none.toml" in one_sentence(err)
+
+
+@pytest.mark.parametrize(
+    ("old", "new", "words"),
+    [
+        ('kind = "confirm"', 'kind = "ask"', "section 'look' step 'parts' kind"),
+        ('points = ["ohm.rails"]', 'points = ["ohm.rial"]', "ohm.rial"),
+        ('limits = { low = "100 ohm" }', 'limits = { low = "100 V" }', "step rails"),
+        ('rails = "2 V"', 'rails = "200 V"', "sets the rails to 200 V"),
+        ('share = "100 %"', 'share = "110 %"', "at most 100 %"),
+    ],
+)
+def test_a_wrong_procedure_names_file_and_step(run: Run, tmp_path: Path, old: str, new: str, words: str) -> None:
+    path = tmp_path / "steps.toml"
+    path.write_text(SMALL.replace(old, new, 1), encoding="utf-8")
+    status, out, err = run("check", "breadboard", "--procedure", path)
+    assert (status, out) == (2, "")
+    sentence = one_sentence(err)
+    assert str(path) in sentence
+    assert words in sentence
+
+
+def test_check_passes_what_is_shipped(run: Run) -> None:
+    status, out, err = run("check", "breadboard", "--procedure", SHIPPED)
+    assert (status, err) == (0, "")
+    assert "Nothing to object" in out
+    status, out, _ = run("check", "breadboard", "--json")
+    assert status == 0
+    assert json.loads(out)["findings"] == []
+
+
+def test_a_wrong_bench(run: Run, tmp_path: Path) -> None:
+    path = tmp_path / "bench.toml"
+    path.write_text('[bench]\nformat = 1\nname = "b"\n[meter]\naddress = 7\n', encoding="utf-8")
+    status, _, err = run("check", "breadboard", "--bench", path)
+    assert status == 2
+    assert "meter.address" in one_sentence(err)
+
+
+# -- what is wrong with an entry ------------------------------------------------------------------------------------
+
+
+@pytest.mark.parametrize(
+    ("arguments", "words"),
+    [
+        (("--positive", "fifteen"), "--positive"),
+        (("--positive", "15 ohm"), "--positive"),
+        (("--negative", "15V"), "negative"),
+        (("--limit", "0 A"), "limit"),
+        (("--limit", "nan"), "--limit"),
+        (("--trimmer", "middle"), "middle"),
+        (("--trimmer", "1.5"), "1.5"),
+        (("--ambient", "900 degC"), "ambient"),
+    ],
+)
+def test_a_wrong_entry(run: Run, arguments: tuple[str, ...], words: str) -> None:
+    status, out, err = run("expect", "breadboard", *arguments)
+    assert (status, out) == (2, "")
+    assert words in one_sentence(err)
+
+
+@pytest.mark.parametrize("plant", ["nothing", "emitter.upper.9: open", "emitter.upper.1: tired", "emitter.upper.1"])
+def test_a_fault_that_cannot_be_planted(run: Run, plant: str, tmp_path: Path) -> None:
+    status, _, err = run("rehearse", "--stand-in", "--plain", "--plant", plant, "--records", tmp_path)
+    assert status == 2
+    assert one_sentence(err)
+    assert list(tmp_path.iterdir()) == []
+
+
+def test_readings_that_cannot_be_read(run: Run, tmp_path: Path) -> None:
+    status, _, err = run("judge", "breadboard", tmp_path / "none.csv")
+    assert status == 2
+    assert "none.csv" in one_sentence(err)
+    for content, words in ((b"\xff\xfe", "UTF-8"), (b"", "point"), (b"point,value,unit\noutput,many,V\n", "many"),
+                           (b"point,value,unit\noutptu,1,V\n", "outptu")):  # fmt: skip
+        path = tmp_path / "r.csv"
+        path.write_bytes(content)
+        status, out, err = run("judge", "breadboard", path)
+        assert (status, out) == (2, "")
+        sentence = one_sentence(err)
+        assert str(path) in sentence
+        assert words in sentence
+
+
+# -- records --------------------------------------------------------------------------------------------------------
+
+
+def test_verify_has_statuses_of_its_own(run: Run, tmp_path: Path) -> None:
+    drive = begun(small())
+    drive.to_end()
+    path = write(tmp_path / "a.jsonl", [event for event, _ in drive.told])
+    assert run("record", "verify", path)[0] == 0
+    whole = path.read_bytes()
+    path.write_bytes(whole[:-3])
+    status, out, _ = run("record", "verify", path)
+    assert status == 1
+    assert str(len(drive.told)) in out
+    path.write_bytes(whole.replace(b"Mara", b"Nara", 1))
+    assert run("record", "verify", path)[0] == 2
+
+
+@pytest.mark.parametrize("command", ["show", "table"])
+def test_a_record_that_is_none(run: Run, tmp_path: Path, command: str) -> None:
+    path = tmp_path / "x.jsonl"
+    path.write_text("hello\n")
+    status, _, err = run("record", command, path)
+    assert status == 2
+    assert str(path) in one_sentence(err)
+
+
+@pytest.mark.parametrize("command", ["rehearse", "walk"])
+def test_what_cannot_be_resumed(run: Run, tmp_path: Path, command: str) -> None:
+    status, _, err = run(command, "--resume", tmp_path / "none.jsonl")
+    assert status == 2
+    assert "none.jsonl" in one_sentence(err)
+
+
+def test_a_real_walk_is_not_gone_on_with_as_a_rehearsal(run: Run, tmp_path: Path) -> None:
+    drive = begun(small()).until("power.full")
+    path = write(tmp_path / "a.jsonl", [event for event, _ in drive.told])
+    status, _, err = run("rehearse", "--resume", path)
+    assert status == 2
+    assert "real walk" in one_sentence(err)
+
+
+# -- statuses of what goes wrong inside -----------------------------------------------------------------------------
+
+
+@pytest.mark.parametrize(
+    ("error", "status", "words"),
+    [
+        (EntryError("'x' came", "a number"), 2, "Expected a number."),
+        (InstrumentError("timeout", "No answer"), 3, "No answer."),
+        (BenchkitError("Something of ours"), 5, "Something of ours."),
+        (ZeroDivisionError("division by zero"), 5, "an error of benchkit's own: ZeroDivisionError"),
+        (KeyboardInterrupt(), 4, "Stopped"),
+        (click.Abort(), 4, "Stopped at the prompt"),
+    ],
+)
+def test_each_error_has_its_status(
+    run: Run, monkeypatch: pytest.MonkeyPatch, tmp_path: Path, error: BaseException, status: int, words: str
+) -> None:
+    import tempfile
+
+    from benchkit import shipped
+
+    def fail(name: str) -> Path:
+        raise error
+
+    monkeypatch.setattr(shipped, "find_design", fail)
+    monkeypatch.setattr(tempfile, "tempdir", str(tmp_path))
+    found, out, err = run("check", "tern-40")
+    assert (found, out) == (status, "")
+    assert words in err
+    assert "Traceback" not in err
+    kept = list(tmp_path.iterdir())
+    assert len(kept) == (1 if isinstance(error, ZeroDivisionError) else 0)
+    if kept:
+        assert "Traceback" in kept[0].read_text()
+        assert str(kept[0]) in err
+
+
+def test_a_reader_that_has_left_is_no_error(run: Run, monkeypatch: pytest.MonkeyPatch) -> None:
+    from benchkit import shipped
+
+    def fail(name: str) -> Path:
+        raise BrokenPipeError
+
+    monkeypatch.setattr(shipped, "find_design", fail)
+    assert run("check", "tern-40")[0] == 0
