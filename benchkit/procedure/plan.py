@@ -15,149 +15,37 @@ from __future__ import annotations
 import math
 import re
 from collections.abc import Iterator, Mapping
-from dataclasses import dataclass, replace
+from dataclasses import replace
 from typing import Any, Literal
 
 from benchkit import quantities
 from benchkit.errors import EntryError, FileError
 from benchkit.judge.limits import Limits
 from benchkit.procedure.file import MADE_SAFE, PairText, Procedure, Section, Step
+from benchkit.procedure.items import (
+    NEVER_PASSED_OVER,
+    RAIL_LOW_V,
+    TRIMMED,
+    AnyCondition,
+    Item,
+    ItemKind,
+    Joined,
+    Plan,
+)
+from benchkit.procedure.sizing import (
+    capacitors_settle_s,
+    charging_s,
+    discharge_s,
+    discharge_text,
+    rails_text,
+    supply_limit_a,
+    time_text,
+    with_room,
+)
 from benchkit.stage.conditions import Condition, Unpowered
 from benchkit.stage.design import Design, target_drop_v
 from benchkit.stage.points import Point, points_of
 from benchkit.stage.reach import least_regulating_rails
-
-
-@dataclass(frozen=True, kw_only=True)
-class Joined:
-    """Several conditions under any of which a reading may have been taken.
-
-    A stage that has been powered for a while is anywhere from cold to warm; one that was trimmed is anywhere inside the
-    target's tolerance.  `words` stand at the end of the condition's name.
-    """
-
-    conditions: tuple[Condition, ...]
-    words: str
-
-
-AnyCondition = Condition | Unpowered | Joined
-
-ItemKind = Literal[
-    "connect", "tell", "confirm", "text", "hold", "measure", "rule", "supply", "limit check", "trim", "wait", "off"
-]
-
-NEVER_PASSED_OVER = frozenset({"ohm.rails", "ohm.rail+", "ohm.rail-", "offset before load"})
-"""Points and rules whose result nobody overrides, whatever the file says; nor a limit check or the trimmer's end."""
-
-RAIL_LOW_V = 1.0
-"""A rail below this (V) counts as low; common practice."""
-
-TRIMMED = "emitter.upper.1"
-"""The reading that the model takes a trimmed stage's target from."""
-
-TYPICAL_VBE_V = 0.7
-"""Used only to size current limits, never to judge; common practice."""
-
-
-@dataclass(frozen=True, kw_only=True)
-class Item:
-    """One reading or one act of a plan.
-
-    Parameters
-    ----------
-    id : str
-        ``section.step`` with the point or part of the act behind it; unique in the plan.
-    section, section_title : str
-    kind : ItemKind
-    title, do, why, caution, expected : str
-        The words, with everything filled in.
-    point : Point or None
-        What is measured or trimmed.
-    condition : Condition, Unpowered, Joined or None
-        What the reading is taken under; None where limits are stated and nothing is predicted.
-    limits : Limits or None
-        Stated limits; None where they come from the model.
-    rule : str
-        Name of the rule, with `number`, as the ratio or volts that the rule wants.
-    may_go_on : bool
-        A result that is no pass can be overridden with a reason.
-    positive_v, negative_v, limit_a, ramp_s : float
-        For ``supply`` and ``limit check``.
-    seconds : float
-        For ``wait``.
-    settle_s : float
-        How long the reading has to come to rest after the probes are on, or the stage after its rails have moved.
-    samples : int
-    acceptance : "guarded", "simple" or "guarded rejection"
-        How a reading is judged (JCGM 106): with a guard band inside the limits, without one, or with one outside.
-    allow : float
-        How much the model's limits are widened on either side, in the point's unit.
-    act : str
-        What a told item does to the bench: "short the leads", "connect the unit", "trimmer to least", or "".
-    trimmer_end : bool
-        This reading checks that the trimmer is at its least-bias end.
-    powered : bool
-        The supply is on while this item runs.
-    raises : bool
-        It raises a voltage or the limit.
-    resume : bool
-        A walk that was cut off while or after the unit had power goes on here.
-    """
-
-    id: str
-    section: str
-    section_title: str
-    kind: ItemKind
-    title: str
-    do: str
-    why: str = ""
-    caution: str = ""
-    expected: str = ""
-    point: Point | None = None
-    condition: AnyCondition | None = None
-    limits: Limits | None = None
-    rule: str = ""
-    number: float | None = None
-    may_go_on: bool = True
-    positive_v: float = 0.0
-    negative_v: float = 0.0
-    limit_a: float = 0.0
-    ramp_s: float = 0.0
-    seconds: float = 0.0
-    settle_s: float = 0.0
-    samples: int = 1
-    acceptance: Literal["guarded", "simple", "guarded rejection"] = "guarded"
-    allow: float = 0.0
-    act: str = ""
-    trimmer_end: bool = False
-    powered: bool = False
-    raises: bool = False
-    resume: bool = False
-
-
-@dataclass(frozen=True, kw_only=True)
-class Plan:
-    """The items of one walk, in order, and where its way out begins."""
-
-    items: tuple[Item, ...]
-    made_safe: int
-    resume: int
-
-    def __len__(self) -> int:
-        return len(self.items)
-
-
-def condition_key(condition: AnyCondition) -> str:
-    """A readable name of a condition; equal conditions have equal names."""
-    if isinstance(condition, Joined):
-        first = condition.conditions[0]
-        return condition_key(first).removesuffix(first.when) + condition.words
-    if isinstance(condition, Unpowered):
-        return f"no power, trimmer {condition.trimmer}"
-    share = f" at {condition.target_share:.0%}" if condition.trimmer == "target" else ""
-    limit = "" if condition.limit_a is None else f", limit {quantities.show(condition.limit_a, 'A')}"
-    rails = f"{condition.positive_v:+.4g} V {condition.negative_v:+.4g} V"
-    return f"{rails}{limit}, trimmer {condition.trimmer}{share}, {condition.when}"
 
 
 def make_plan(procedure: Procedure, design: Design) -> Plan:
@@ -171,52 +59,33 @@ def make_plan(procedure: Procedure, design: Design) -> Plan:
         When the model finds no rails at which the stage regulates.
     """
     items = tuple(_Planner(procedure, design).items())
+    _require_checks(procedure, design, items)
     made_safe = next(number for number, item in enumerate(items) if item.section == MADE_SAFE)
     resume = next(number for number, item in enumerate(items) if item.resume)
     return Plan(items=items, made_safe=made_safe, resume=resume)
 
 
-def supply_limit_a(design: Design, positive_v: float, negative_v: float, *, share: float) -> float:
-    """Current limit per rail (A) that leaves room for a healthy unit and for little else.
-
-    One and a half times the estimated draw of the rails plus 10 mA, rounded up to 5 mA: feed, driver resistors, what
-    else hangs on the rails, and `share` of the target current of every pair.  Common practice; it judges nothing.
-    """
-    span_v = positive_v - negative_v
-    draws = [_feed_a(design, span_v), _driver_a(design)]
-    others = [part.value for part in (design.rails.other_positive, design.rails.other_negative) if part is not None]
-    draws.append(max(others, default=0.0))
-    per_pair_a = target_drop_v(design) / design.output.emitter_resistor.value
-    draws.append(share * design.output.pairs * per_pair_a)
-    return math.ceil((1.5 * sum(draws) + 0.01) / 0.005 - 1e-9) * 0.005
-
-
-def discharge_s(design: Design, from_v: float, to_v: float = RAIL_LOW_V) -> float | None:
-    """Time (s) for a rail to fall through the bleed resistor, t = R·C·ln(V0/V); None without a bleed resistor."""
-    capacitance_f = (design.rails.reservoir_f or 0.0) + (design.rails.local_capacitors_f or 0.0)
-    if not capacitance_f or from_v <= to_v:
-        return 0.0
-    if design.rails.bleed is None:
-        return None
-    return design.rails.bleed.value * capacitance_f * math.log(from_v / to_v)
-
-
-def _feed_a(design: Design, span_v: float) -> float:
-    feed = design.feed.upper
-    if feed.kind == "source":
-        return feed.value.value * (1 + feed.value.fraction)
-    if feed.kind == "resistor":
-        return 0.5 * span_v / feed.value.value
-    return design.servo_max_a
-
-
-def _driver_a(design: Design) -> float:
-    output = design.output
-    draw_a = 0.0
-    for resistor in (output.driver_resistor, output.predriver_resistor):
-        if resistor is not None:
-            draw_a += 2.0 * TYPICAL_VBE_V / resistor.value
-    return draw_a
+def _require_checks(procedure: Procedure, design: Design, items: tuple[Item, ...]) -> None:
+    """Refuse a procedure that powers a unit before limit, rails and trimmer have been checked."""
+    first = next((number for number, item in enumerate(items) if item.kind == "supply"), None)
+    if first is None:
+        return
+    before = items[:first]
+    lacking = []
+    if not any(item.kind == "limit check" for item in before):
+        lacking.append("a step of the kind 'limit check'")
+    if not any(item.point is not None and item.point.name == "ohm.rails" for item in before):
+        lacking.append("a reading of ohm.rails")
+    if design.spreader.trimmer is not None and not any(item.trimmer_end for item in before):
+        lacking.append("a reading of ohm.spreader.ARM, which proves the trimmer's end")
+    if lacking:
+        raise FileError(
+            procedure.file,
+            f"section {items[first].section}",
+            "gives power before the unit is known to be safe for it",
+            f"{' and '.join(lacking)} before it",
+            "No procedure can leave these out",
+        )
 
 
 class _Planner:
@@ -230,7 +99,7 @@ class _Planner:
         self.on = False
         self.trimmer: Literal["least", "target", "unknown"] = "unknown"
         self.share = 1.0
-        self.lowest = _with_room(design, least_regulating_rails(design))
+        self.lowest = with_room(design, least_regulating_rails(design))
         self.section: Section
         self.ready_hold = False
 
@@ -376,12 +245,7 @@ class _Planner:
             return 0.0
         if step.settle != "the capacitors":
             return quantities.parse(step.settle, "s")
-        capacitance_f = (self.design.rails.reservoir_f or 0.0) + (self.design.rails.local_capacitors_f or 0.0)
-        if not capacitance_f:
-            return 0.0
-        if self.design.rails.bleed is None:
-            return 30.0
-        return min(120.0, 8.0 * self.design.rails.bleed.value * capacitance_f)
+        return capacitors_settle_s(self.design)
 
     def _supply(self, step: Step) -> Iterator[Item]:
         positive_v, negative_v = self._rails(step)
@@ -398,24 +262,25 @@ class _Planner:
         raises = not self.on or positive_v > self.positive_v or negative_v < self.negative_v or limit_a > self.limit_a
         words = {"positive_v": positive_v, "negative_v": negative_v, "limit_a": limit_a}
         if raises and not self.ready_hold:
-            rails = _rails_text(positive_v, negative_v)
+            rails = rails_text(positive_v, negative_v)
+            title = f"Power on again, {rails}?" if suffix else f"Go to {rails}?"
+            if self.on and (positive_v, negative_v) == (self.positive_v, self.negative_v):
+                title = f"Raise the limit to {quantities.show(limit_a, 'A')}?"
             yield self._item(
                 step,
                 "hold",
                 f"{suffix}.hold",
-                title=f"Go to {rails}?" if suffix == "" else f"Power on again, {rails}?",
+                title=title,
                 do=f"Rails {rails}, limit {quantities.show(limit_a, 'A')}. Hands off the circuit; watch the current.",
                 why="Voltage and limit rise only after a plain yes.",
             )
-        capacitance_f = (self.design.rails.reservoir_f or 0.0) + (self.design.rails.local_capacitors_f or 0.0)
-        rise_v = max(positive_v - (self.positive_v if self.on else 0.0), 0.0)
-        charging_s = capacitance_f * rise_v / (0.15 * limit_a)
+        rise_v = positive_v - (self.positive_v if self.on else 0.0)
         self.positive_v, self.negative_v, self.limit_a, self.on = positive_v, negative_v, limit_a, True
         yield self._item(
             step,
             "supply",
             f"{suffix}.power" if suffix else "",
-            ramp_s=max(ramp_s, charging_s),
+            ramp_s=max(ramp_s, charging_s(self.design, rise_v, limit_a)),
             settle_s=max(0.5, self.design.feed.settles_after_s or 0.0),
             raises=raises,
             may_go_on=False,
@@ -473,7 +338,7 @@ class _Planner:
                 "wait",
                 ".discharge",
                 title="Let the rails fall",
-                do=f"Hands off. Expected time to {RAIL_LOW_V:g} V: {_time_text(seconds)}.",
+                do=f"Hands off. Expected time to {RAIL_LOW_V:g} V: {time_text(seconds)}.",
                 seconds=max(5.0, min(300.0, 30.0 if seconds is None else 1.2 * seconds)),
             )
             for name in ("rail+", "rail-"):
@@ -543,7 +408,7 @@ class _Planner:
         volts = quantities.parse(text, "V")
         most_v = min(rails.positive_v, -rails.negative_v or rails.positive_v)
         if volts > most_v:
-            full = _rails_text(rails.positive_v, rails.negative_v)
+            full = rails_text(rails.positive_v, rails.negative_v)
             raise self._refuse(step, f"sets the rails to {text}", f"no more than the design's {full}")
         return volts, -volts if rails.negative_v else 0.0
 
@@ -580,9 +445,9 @@ class _Planner:
         words = {
             "design": self.design.name,
             "limit": quantities.show(limit_a, "A"),
-            "rails": _rails_text(positive_v, negative_v),
+            "rails": rails_text(positive_v, negative_v),
             "target": f"{quantities.show(target_v, 'V')} ± {self.design.target.tolerance:.0%}",
-            "discharge_time": _time_text(discharge_s(self.design, full.positive_v)),
+            "discharge_time": discharge_text(self.design),
             "turns": "",
             "arm": "",
             "more_bias_way": "",
@@ -597,31 +462,7 @@ class _Planner:
         return words
 
 
-def _with_room(design: Design, least: tuple[float, float]) -> tuple[float, float]:
-    """Go a tenth above the lowest rails that regulate, rounded up to half a volt, at most to the full ones.
-
-    At the very edge a supply that is a few millivolts low decides whether the stage regulates.
-    """
-    positive_v = min(design.rails.positive_v, math.ceil(2.0 * 1.1 * least[0]) / 2.0)
-    negative_v = max(design.rails.negative_v, math.floor(2.0 * 1.1 * least[1]) / 2.0)
-    return positive_v, negative_v
-
-
 def _fill(text: str, words: dict[str, str]) -> str:
     for word, value in words.items():
         text = text.replace("{" + word + "}", value)
     return text
-
-
-def _rails_text(positive_v: float, negative_v: float) -> str:
-    if negative_v == 0.0:
-        return f"{quantities.show(positive_v, 'V')}"
-    if math.isclose(positive_v, -negative_v):
-        return f"±{quantities.show(positive_v, 'V')}"
-    return f"{quantities.show(positive_v, 'V')} and {quantities.show(negative_v, 'V')}"
-
-
-def _time_text(seconds: float | None) -> str:
-    if seconds is None:
-        return "not known (the design names no bleed resistor)"
-    return "at once" if seconds < 0.5 else f"{seconds:.0f} s" if seconds < 120 else f"{seconds / 60:.1f} min"

@@ -6,7 +6,7 @@ from benchkit import quantities
 from benchkit.events import Judged, PointLimits
 from benchkit.judge.limits import Limits
 from benchkit.procedure.actions import Choice, Question
-from benchkit.procedure.plan import Item
+from benchkit.procedure.items import Item
 
 DONE = Choice(value="done", label="Done")
 YES = Choice(value="yes", label="Yes")

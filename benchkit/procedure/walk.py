@@ -65,7 +65,7 @@ from benchkit.procedure.actions import (
     Wait,
     Write,
 )
-from benchkit.procedure.plan import Item, Joined, Plan, condition_key
+from benchkit.procedure.items import Item, Joined, Plan, condition_key
 from benchkit.procedure.state import PHASES, Phase, State
 
 RUNNERS: Final = frozenset({"the screen", "the keeper"})
@@ -247,7 +247,8 @@ class Walk:
                 )
                 return replace(state, phase="trimming"), (trim,)
             case "wait":
-                wait = Wait(item=item.id, seconds=item.seconds, reason=item.title)
+                words = f"{item.title}. {item.do} {item.caution}".strip()
+                wait = Wait(item=item.id, seconds=item.seconds, reason=words)
                 return replace(state, phase="waiting"), (wait,)
             case "off":
                 reason = state.stopped or "a step of the procedure"
@@ -364,8 +365,9 @@ class Walk:
         if state.cut_at is not None:
             # Whoever ran the walk went away: the walk itself had not been stopped.
             state = replace(state, index=state.cut_at, cut_at=None, stopped="", stopped_at="", stop_status=0)
+        index = min(state.index, len(self.plan) - 1)
         state = replace(
-            state, phase="securing", before=before, probes="", energised="unknown", supply=None,
+            state, phase="securing", index=index, before=before, probes="", energised="unknown", supply=None,
             note="Earlier readings are marked as from before.",
         )  # fmt: skip
         return state, (Connect(item=self.item(state).id),)

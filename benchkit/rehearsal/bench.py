@@ -219,7 +219,7 @@ async def run(bench: RehearsalBench, announce: Callable[[dict[str, Any]], None],
 
 
 async def _outlast(bench: RehearsalBench) -> None:
-    """Stay, as a real supply would, when whoever started it goes while an output is on: somebody has to switch it off."""
+    """Stay, as a real supply would, when whoever started it goes while an output is on, until that is off."""
     if not _output_on(bench):
         return
     left_s = OUTLAST_S

@@ -12,7 +12,7 @@ from benchkit.events import Event, Judged, PointLimits, Predicted, PredictionRef
 from benchkit.judge.rules import RuleFacts, evaluate
 from benchkit.measure.readings import Reading
 from benchkit.procedure.actions import Evaluate, Predict
-from benchkit.procedure.plan import Item, Joined
+from benchkit.procedure.items import Item, Joined
 from benchkit.procedure.state import State
 from benchkit.procedure.walk import Walk
 from benchkit.stage.conditions import Condition, Unpowered
@@ -144,7 +144,7 @@ def wiper_open(design: Design) -> tuple[float, float]:
     ModelError
         When either has no solution.
     """
-    from benchkit.procedure.plan import supply_limit_a
+    from benchkit.procedure.sizing import supply_limit_a
     from benchkit.stage.draws import nominal
     from benchkit.stage.faults import parse_fault
     from benchkit.stage.operate import solve_units

@@ -8,7 +8,7 @@ from dataclasses import dataclass
 from benchkit import quantities
 from benchkit.events import Judged, SupplyState
 from benchkit.judge.verdicts import worst
-from benchkit.procedure.plan import Plan
+from benchkit.procedure.items import Plan
 from benchkit.procedure.state import State
 from benchkit.procedure.walk import Walk
 from benchkit.session.front import Energised, LiveView, ResultView, SectionView, SupplyView, View

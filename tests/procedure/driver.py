@@ -51,7 +51,8 @@ from benchkit.procedure.actions import (
     Write,
 )
 from benchkit.procedure.file import load_procedure, parse_procedure
-from benchkit.procedure.plan import Item, Plan, make_plan
+from benchkit.procedure.items import Item, Plan
+from benchkit.procedure.plan import make_plan
 from benchkit.procedure.state import State
 from benchkit.procedure.walk import Walk
 from tests.stage.designs import breadboard, tern

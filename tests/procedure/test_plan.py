@@ -7,17 +7,9 @@ import pytest
 
 from benchkit.errors import FileError
 from benchkit.procedure.file import parse_procedure
-from benchkit.procedure.plan import (
-    NEVER_PASSED_OVER,
-    RAIL_LOW_V,
-    Item,
-    Joined,
-    Plan,
-    condition_key,
-    discharge_s,
-    make_plan,
-    supply_limit_a,
-)
+from benchkit.procedure.items import NEVER_PASSED_OVER, RAIL_LOW_V, Item, Joined, Plan, condition_key
+from benchkit.procedure.plan import make_plan
+from benchkit.procedure.sizing import discharge_s, rails_text, supply_limit_a
 from benchkit.stage.conditions import Condition, Unpowered
 from benchkit.stage.design import Design
 from tests.procedure.driver import SHIPPED, SMALL, item_of, shipped, small
@@ -40,14 +32,56 @@ name = "off"
 kind = "off"
 title = "t"
 """
+CHECKS = """
+[[section]]
+name = "checks"
+title = "t"
+[[section.step]]
+name = "least"
+kind = "tell"
+title = "t"
+do = "d"
+act = "trimmer to least"
+[[section.step]]
+name = "ohms"
+kind = "measure"
+title = "t"
+points = ["ohm.spreader.ARM"]
+limits = "the model"
+[[section.step]]
+name = "rails"
+kind = "measure"
+title = "t"
+points = ["ohm.rails"]
+limits = "the model"
+[[section.step]]
+name = "limit"
+kind = "limit check"
+title = "t"
+rails = "2 V"
+limit = "20 mA"
+"""
 POWER = 'name = "on"\nkind = "supply"\ntitle = "t"\nrails = "full"\nlimit = "20 mA"'
 
 
 def plan_of(*steps: str, design: Design | None = None) -> Plan:
     """The plan of a procedure with these steps in one section."""
     body = "".join(f"[[section.step]]\n{step}\n" for step in steps)
-    text = f'{HEAD}\n[[section]]\nname = "s"\ntitle = "t"\nresume = true\n{body}{SAFE}'
+    checks = CHECKS if 'kind = "supply"' in body and (design is None or design.spreader.trimmer is not None) else ""
+    text = f'{HEAD}\n{checks}\n[[section]]\nname = "s"\ntitle = "t"\nresume = true\n{body}{SAFE}'
     return make_plan(parse_procedure(text, "mine.toml"), design or breadboard())
+
+
+@pytest.mark.parametrize(
+    ("gone", "words"), [("limit", "limit check"), ("rails", "ohm.rails"), ("ohms", "ohm.spreader.ARM")]
+)
+def test_no_procedure_gives_power_before_the_checks(gone: str, words: str) -> None:
+    steps = CHECKS.split("[[section.step]]")
+    kept = "[[section.step]]".join(step for step in steps if f'name = "{gone}"' not in step)
+    text = f'{HEAD}\n{kept}\n[[section]]\nname = "s"\ntitle = "t"\nresume = true\n[[section.step]]\n{POWER}\n{SAFE}'
+    with pytest.raises(FileError, match="before the unit is known to be safe") as caught:
+        make_plan(parse_procedure(text, "mine.toml"), breadboard())
+    assert words in caught.value.expected
 
 
 # -- the whole ------------------------------------------------------------------------------------------------------
@@ -273,6 +307,11 @@ def test_a_step_below_the_lowest_rails_is_left_out_on_the_way_up() -> None:
     assert [item.positive_v for item in found] == [2.5, 9.0]
 
 
+def own(plan: Plan) -> list[Item]:
+    """The items of the section that a test wrote itself."""
+    return [item for item in plan.items if item.section == "s"]
+
+
 def test_rails_and_limit_can_be_lowered_without_a_hold_point() -> None:
     down = POWER.replace('"on"', '"down"').replace('"full"', '"5 V"').replace("20 mA", "15 mA")
     plan = plan_of(POWER, down)
@@ -280,13 +319,13 @@ def test_rails_and_limit_can_be_lowered_without_a_hold_point() -> None:
         (10.0, 0.02, True),
         (5.0, 0.015, False),
     ]
-    assert [item.kind for item in plan.items].count("hold") == 1
+    assert [item.kind for item in own(plan)].count("hold") == 1
 
 
 def test_only_the_limit_rising_has_its_hold_point() -> None:
     plan = plan_of(POWER, POWER.replace('"on"', '"more"').replace("20 mA", "50 mA"))
-    assert [item.kind for item in plan.items[1:5]] == ["hold", "supply", "hold", "supply"]
-    assert "50.00 mA" in plan.items[3].do
+    assert [item.kind for item in own(plan)[0:4]] == ["hold", "supply", "hold", "supply"]
+    assert "50.00 mA" in own(plan)[2].do
 
 
 def test_the_same_again_is_no_item() -> None:
@@ -296,9 +335,9 @@ def test_the_same_again_is_no_item() -> None:
 def test_a_written_hold_point_serves_only_the_step_behind_it() -> None:
     hold = 'name = "h"\nkind = "hold"\ntitle = "t"\ndo = "d"'
     plan = plan_of(hold, 'name = "w"\nkind = "wait"\ntitle = "t"\nseconds = "1 s"', POWER)
-    assert [item.kind for item in plan.items[1:5]] == ["hold", "wait", "hold", "supply"]
+    assert [item.kind for item in own(plan)[0:4]] == ["hold", "wait", "hold", "supply"]
     plan = plan_of(hold, POWER)
-    assert [item.kind for item in plan.items[1:3]] == ["hold", "supply"]
+    assert [item.kind for item in own(plan)[0:2]] == ["hold", "supply"]
 
 
 def test_a_clip_takes_the_power_off_and_gives_it_back_after_a_yes() -> None:
@@ -386,11 +425,9 @@ def test_words_of_the_design_are_in_the_steps() -> None:
 
 
 def test_a_single_supply_design_has_one_rail_in_words() -> None:
-    from benchkit.procedure.plan import _rails_text
-
-    assert _rails_text(24.0, 0.0) == "24.00 V"
-    assert _rails_text(35.0, -35.0) == "±35.00 V"
-    assert _rails_text(35.0, -30.0) == "35.00 V and -30.00 V"
+    assert rails_text(24.0, 0.0) == "24.00 V"
+    assert rails_text(35.0, -35.0) == "±35.00 V"
+    assert rails_text(35.0, -30.0) == "35.00 V and -30.00 V"
 
 
 def test_the_shipped_files_are_the_ones_tested() -> None:

@@ -5,7 +5,7 @@ import pytest
 from benchkit.events import PointLimits
 from benchkit.judge.limits import Limits
 from benchkit.procedure import questions
-from benchkit.procedure.plan import Item
+from benchkit.procedure.items import Item
 from tests.procedure.driver import item_of, judged, shipped, small
 
 

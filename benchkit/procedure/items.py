@@ -1,0 +1,140 @@
+"""What a plan is made of: items, and the conditions that their readings are taken under."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Literal
+
+from benchkit import quantities
+from benchkit.judge.limits import Limits
+from benchkit.stage.conditions import Condition, Unpowered
+from benchkit.stage.points import Point
+
+
+@dataclass(frozen=True, kw_only=True)
+class Joined:
+    """Several conditions under any of which a reading may have been taken.
+
+    A stage that has been powered for a while is anywhere from cold to warm; one that was trimmed is anywhere inside the
+    target's tolerance.  `words` stand at the end of the condition's name.
+    """
+
+    conditions: tuple[Condition, ...]
+    words: str
+
+
+AnyCondition = Condition | Unpowered | Joined
+
+ItemKind = Literal[
+    "connect", "tell", "confirm", "text", "hold", "measure", "rule", "supply", "limit check", "trim", "wait", "off"
+]
+
+NEVER_PASSED_OVER = frozenset({"ohm.rails", "ohm.rail+", "ohm.rail-", "offset before load"})
+"""Points and rules whose result nobody overrides, whatever the file says; nor a limit check or the trimmer's end."""
+
+RAIL_LOW_V = 1.0
+"""A rail below this (V) counts as low; common practice."""
+
+TRIMMED = "emitter.upper.1"
+"""The reading that the model takes a trimmed stage's target from."""
+
+
+@dataclass(frozen=True, kw_only=True)
+class Item:
+    """One reading or one act of a plan.
+
+    Parameters
+    ----------
+    id : str
+        ``section.step`` with the point or part of the act behind it; unique in the plan.
+    section, section_title : str
+    kind : ItemKind
+    title, do, why, caution, expected : str
+        The words, with everything filled in.
+    point : Point or None
+        What is measured or trimmed.
+    condition : Condition, Unpowered, Joined or None
+        What the reading is taken under; None where limits are stated and nothing is predicted.
+    limits : Limits or None
+        Stated limits; None where they come from the model.
+    rule : str
+        Name of the rule, with `number`, as the ratio or volts that the rule wants.
+    may_go_on : bool
+        A result that is no pass can be overridden with a reason.
+    positive_v, negative_v, limit_a, ramp_s : float
+        For ``supply`` and ``limit check``.
+    seconds : float
+        For ``wait``.
+    settle_s : float
+        How long the reading has to come to rest after the probes are on, or the stage after its rails have moved.
+    samples : int
+    acceptance : "guarded", "simple" or "guarded rejection"
+        How a reading is judged (JCGM 106): with a guard band inside the limits, without one, or with one outside.
+    allow : float
+        How much the model's limits are widened on either side, in the point's unit.
+    act : str
+        What a told item does to the bench: "short the leads", "connect the unit", "trimmer to least", or "".
+    trimmer_end : bool
+        This reading checks that the trimmer is at its least-bias end.
+    powered : bool
+        The supply is on while this item runs.
+    raises : bool
+        It raises a voltage or the limit.
+    resume : bool
+        A walk that was cut off while or after the unit had power goes on here.
+    """
+
+    id: str
+    section: str
+    section_title: str
+    kind: ItemKind
+    title: str
+    do: str
+    why: str = ""
+    caution: str = ""
+    expected: str = ""
+    point: Point | None = None
+    condition: AnyCondition | None = None
+    limits: Limits | None = None
+    rule: str = ""
+    number: float | None = None
+    may_go_on: bool = True
+    positive_v: float = 0.0
+    negative_v: float = 0.0
+    limit_a: float = 0.0
+    ramp_s: float = 0.0
+    seconds: float = 0.0
+    settle_s: float = 0.0
+    samples: int = 1
+    acceptance: Literal["guarded", "simple", "guarded rejection"] = "guarded"
+    allow: float = 0.0
+    act: str = ""
+    trimmer_end: bool = False
+    powered: bool = False
+    raises: bool = False
+    resume: bool = False
+
+
+@dataclass(frozen=True, kw_only=True)
+class Plan:
+    """The items of one walk, in order, and where its way out begins."""
+
+    items: tuple[Item, ...]
+    made_safe: int
+    resume: int
+
+    def __len__(self) -> int:
+        return len(self.items)
+
+
+def condition_key(condition: AnyCondition) -> str:
+    """A readable name of a condition; equal conditions have equal names."""
+    if isinstance(condition, Joined):
+        first = condition.conditions[0]
+        return condition_key(first).removesuffix(first.when) + condition.words
+    if isinstance(condition, Unpowered):
+        return f"no power, trimmer {condition.trimmer}"
+    share = f" at {condition.target_share:.0%}" if condition.trimmer == "target" else ""
+    limit = "" if condition.limit_a is None else f", limit {quantities.show(condition.limit_a, 'A')}"
+    rails = f"{condition.positive_v:+.4g} V {condition.negative_v:+.4g} V"
+    return f"{rails}{limit}, trimmer {condition.trimmer}{share}, {condition.when}"
