@@ -17,13 +17,12 @@ Rules
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterable, Mapping
+from collections.abc import Callable, Iterable
 from dataclasses import dataclass, replace
 from typing import Final
 
 from benchkit.errors import IllegalEvent
 from benchkit.events import (
-    EVENT_KINDS,
     Answered,
     BenchFound,
     BenchMissing,
@@ -42,7 +41,6 @@ from benchkit.events import (
     StopAsked,
     SupplyRefused,
     SupplySet,
-    SupplyState,
     TrimEnded,
     Tripped,
     Waited,
@@ -65,8 +63,10 @@ from benchkit.procedure.actions import (
     Wait,
     Write,
 )
+from benchkit.procedure.hearing import cut, heard, limit_judged, off_by_word, off_heard, rails_judged
 from benchkit.procedure.items import Item, Joined, Plan, condition_key
-from benchkit.procedure.state import PHASES, Phase, State
+from benchkit.procedure.state import State
+from benchkit.procedure.table import TABLE
 
 RUNNERS: Final = frozenset({"the screen", "the keeper"})
 """Who runs a walk, as `ContactLost` calls them: when one of them goes, nothing is wrong with unit or bench."""
@@ -81,56 +81,6 @@ JUDGED_KINDS: Final = frozenset({"confirm", "measure", "rule", "supply", "limit 
 
 AFTER_TRIP: Final = "Discharge, and find the cause: no second try at a higher limit."
 STILL_LIVE: Final = "Treat the unit as live: nobody has seen its rails low."
-
-_ALWAYS: Final[Mapping[type[Event], str]] = {
-    StopAsked: "_stop_asked",
-    Tripped: "_tripped",
-    ContactLost: "_contact_lost",
-    OutputOff: "_output_went_off",
-    Noted: "_noted",
-    Resumed: "_resumed",
-}
-
-_OWN: Final[Mapping[Phase, Mapping[type[Event], str]]] = {
-    "unopened": {WalkOpened: "_opened"},
-    "connecting": {BenchFound: "_bench_found", BenchMissing: "_bench_missing"},
-    "asking": {Answered: "_answered"},
-    "predicting": {Predicted: "_predicted", PredictionRefused: "_prediction_refused"},
-    "placing": {Answered: "_placed"},
-    "reading": {ReadingTaken: "_reading_taken", ReadingMissed: "_reading_missed"},
-    "judging": {Judged: "_judged"},
-    "deciding": {Decided: "_decided"},
-    "setting": {SupplySet: "_supply_set", SupplyRefused: "_supply_refused"},
-    "waiting": {Waited: "_waited"},
-    "trimming": {ReadingTaken: "_reading_taken", ReadingMissed: "_reading_missed", TrimEnded: "_trim_ended"},
-    "switching off": {OutputOff: "_off"},
-    "by hand off": {Answered: "_off_by_hand"},
-    "securing": {
-        BenchFound: "_secure_found",
-        BenchMissing: "_secure_missing",
-        Decided: "_secure_decided",
-        OutputOff: "_secured",
-        Answered: "_secured_by_hand",
-    },
-    "closing": {Closed: "_closed"},
-    "closed": {},
-}
-
-TABLE: Final[Mapping[tuple[Phase, type[Event]], str]] = {
-    (phase, kind): method
-    for phase in PHASES
-    for kind, method in {**({} if phase in ("unopened", "closed") else _ALWAYS), **_OWN[phase]}.items()
-}
-"""Phase and kind of event to the name of the method that handles it."""
-
-
-def table_text() -> str:
-    """The table of transitions as text, a line for each phase."""
-    lines = []
-    for phase in PHASES:
-        kinds = [kind.name for kind in EVENT_KINDS if (phase, kind) in TABLE]
-        lines.append(f"{phase}: {', '.join(kinds) if kinds else 'takes nothing'}")
-    return "\n".join(lines)
 
 
 @dataclass(frozen=True)
@@ -337,20 +287,20 @@ class Walk:
         return self._make_safe(state, event.reason, 4)
 
     def _tripped(self, state: State, event: Tripped) -> Step:
-        after, actions = self._make_safe(_heard(state, event.state), f"tripped: {event.reason}", 4)
+        after, actions = self._make_safe(heard(state, event.state), f"tripped: {event.reason}", 4)
         return replace(after, note=f"Tripped: {event.reason}. {AFTER_TRIP}"), actions
 
     def _contact_lost(self, state: State, event: ContactLost) -> Step:
         if event.who in RUNNERS:
-            state = _cut(state)
+            state = cut(state)
         return self._make_safe(state, f"contact with {event.who} was lost: {event.problem}", 3)
 
     def _output_went_off(self, state: State, event: OutputOff) -> Step:
-        state = _off_heard(state, event)
+        state = off_heard(state, event)
         if self.way_out(state) or state.phase == "closing":
             return replace(state, note=event.how), self._open_actions(state)
         if event.reason.startswith(RUNNER_GONE):
-            state = _cut(state)
+            state = cut(state)
         return self._make_safe(state, f"the supply was switched off: {event.reason}", 4)
 
     def _open_actions(self, state: State) -> tuple[Action, ...]:
@@ -378,7 +328,7 @@ class Walk:
         return self._enter(replace(state, opened=event), 0)
 
     def _bench_found(self, state: State, event: BenchFound) -> Step:
-        state = _heard(replace(state, meter=event.meter, supply_name=event.supply), event.supply_state)
+        state = heard(replace(state, meter=event.meter, supply_name=event.supply), event.supply_state)
         if event.supply_state is not None and state.energised != "off":
             note = "The supply's output was on when it was found."
             if state.energised == "unknown":
@@ -392,7 +342,7 @@ class Walk:
         return self._decide(state, None, event.problem)
 
     def _secure_found(self, state: State, event: BenchFound) -> Step:
-        state = _heard(replace(state, meter=event.meter, supply_name=event.supply), event.supply_state)
+        state = heard(replace(state, meter=event.meter, supply_name=event.supply), event.supply_state)
         return state, (SwitchOff(item=self.item(state).id, reason="the walk goes on after it was cut off"),)
 
     def _secure_missing(self, state: State, event: BenchMissing) -> Step:
@@ -409,7 +359,7 @@ class Walk:
         return self._enter(stopped, self.plan.made_safe)
 
     def _secured(self, state: State, event: OutputOff) -> Step:
-        state = _off_heard(state, event)
+        state = off_heard(state, event)
         if not event.confirmed:
             return state, (Ask(item=self.item(state).id, question=questions.by_hand_off(self.item(state), event.how)),)
         return self._go_back(state)
@@ -418,7 +368,7 @@ class Walk:
         _demand(event, "done")
         if not state.unconfirmed:
             raise IllegalEvent("The supply has not been asked to switch off yet", "its answer first")
-        return self._go_back(_off_by_word(state))
+        return self._go_back(off_by_word(state))
 
     def _go_back(self, state: State) -> Step:
         if self.item(state).kind == "connect":
@@ -545,41 +495,10 @@ class Walk:
 
     def _supply_set(self, state: State, event: SupplySet) -> Step:
         item = self.item(state)
-        state = _heard(state, event.state)
-        if item.kind == "limit check":
-            judged = self._limit_judged(item, event.state)
-        else:
-            problem = _rails_problem(item, event.state)
-            fine = "Both rails stand where they were set, none in its limit."
-            judged = Judged(
-                item=item.id, subject="rails", verdict="fail" if problem else "pass", value=event.state.positive_v,
-                unit="V", low=None, high=None, why=problem or fine,
-            )  # fmt: skip
+        state = heard(state, event.state)
+        judge = limit_judged if item.kind == "limit check" else rails_judged
+        judged = judge(item, event.state)
         return replace(state, phase="judging"), (Write(item=item.id, event=judged),)
-
-    def _limit_judged(self, item: Item, found: SupplyState) -> Judged:
-        assert item.limits is not None
-        assert item.limits.low is not None
-        assert item.limits.high is not None
-        currents = {
-            "rail+": (found.positive_a, found.positive_in_limit),
-            "rail-": (found.negative_a, found.negative_in_limit),
-        }
-        if item.negative_v == 0.0:
-            del currents["rail-"]
-        why, verdict = f"Every rail stands in its limit, {item.limits}.", "pass"
-        value = max((amps for amps, _ in currents.values() if amps is not None), default=None)
-        for rail, (amps, limiting) in currents.items():
-            if amps is None:
-                why, verdict = f"{rail} gave no current.", "undecided"
-            elif not limiting or not item.limits.low <= amps <= item.limits.high:
-                words = "is in its limit" if limiting else "is not in its limit"
-                why, verdict, value = f"{rail} {words} and carries {amps:.4g} A; {item.limits} is right.", "fail", amps
-                break
-        return Judged(
-            item=item.id, subject="current limit", verdict=verdict, value=value, unit="A",  # type: ignore[arg-type]
-            low=item.limits.low, high=item.limits.high, why=why,
-        )  # fmt: skip
 
     def _supply_refused(self, state: State, event: SupplyRefused) -> Step:
         return self._make_safe(state, event.problem, 3)
@@ -588,7 +507,7 @@ class Walk:
         return self._next(state)
 
     def _off(self, state: State, event: OutputOff) -> Step:
-        state = _off_heard(state, event)
+        state = off_heard(state, event)
         if event.confirmed:
             return self._next(state)
         item = self.item(state)
@@ -597,7 +516,7 @@ class Walk:
 
     def _off_by_hand(self, state: State, event: Answered) -> Step:
         _demand(event, "done")
-        return self._next(_off_by_word(state))
+        return self._next(off_by_word(state))
 
     def _closed(self, state: State, event: Closed) -> Step:
         lines_before = state.count - 1
@@ -614,53 +533,3 @@ def _demand(event: Answered, *choices: str) -> None:
 
 def _subject(item: Item) -> str:
     return item.title if item.point is None else item.point.name
-
-
-def _heard(state: State, supply: SupplyState | None) -> State:
-    if supply is None:
-        return state
-    energised = {True: "on", False: "off", None: "unknown"}[supply.output_on]
-    rails = [abs(volts) for volts in (supply.positive_v, supply.negative_v) if volts is not None]
-    return replace(
-        state,
-        supply=supply,
-        energised=energised,  # type: ignore[arg-type]
-        highest_v=max(state.highest_v, *rails) if rails else state.highest_v,
-        ever_on=state.ever_on or supply.output_on is not False,
-    )
-
-
-def _off_heard(state: State, event: OutputOff) -> State:
-    state = replace(state, unconfirmed=not event.confirmed, energised="off" if event.confirmed else "unknown")
-    return state if event.state is None else replace(state, supply=event.state)
-
-
-def _cut(state: State) -> State:
-    return state if state.stopped else replace(state, cut_at=state.index)
-
-
-def _off_by_word(state: State) -> State:
-    """Believe a person about a supply that only a person switches; of any other, nothing is known by that."""
-    by_hand = state.opened is not None and state.opened.supply == "manual"
-    return replace(state, unconfirmed=False, energised="off" if by_hand else "unknown", supply=None)
-
-
-def _rails_problem(item: Item, found: SupplyState) -> str:
-    """Say what is wrong with the rails after they were set, "" when nothing is (5 % and 0.2 V, common practice)."""
-    if found.output_on is not True:
-        said = "that its output is off" if found.output_on is False else "nothing about its output"
-        return f"The supply says {said}."
-    limiting = [
-        rail for rail, in_limit in (("rail+", found.positive_in_limit), ("rail-", found.negative_in_limit)) if in_limit
-    ]
-    if limiting:
-        return f"{' and '.join(limiting)} stands in the current limit of {item.limit_a:.3g} A."
-    for rail, wanted_v, found_v in (
-        ("rail+", item.positive_v, found.positive_v),
-        ("rail-", item.negative_v, found.negative_v),
-    ):
-        if found_v is None:
-            return f"The supply gave no voltage for {rail}."
-        if abs(found_v - wanted_v) > 0.05 * abs(wanted_v) + 0.2:
-            return f"{rail} was set to {wanted_v:.4g} V and stands at {found_v:.4g} V."
-    return ""

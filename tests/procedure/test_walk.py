@@ -39,7 +39,8 @@ from benchkit.procedure.actions import (
     Write,
 )
 from benchkit.procedure.state import PHASES, State
-from benchkit.procedure.walk import TABLE, Walk, table_text
+from benchkit.procedure.table import TABLE, table_text
+from benchkit.procedure.walk import Walk
 from tests.procedure.driver import (
     OFF,
     OPENED,

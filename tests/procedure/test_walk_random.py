@@ -13,7 +13,8 @@ from benchkit.errors import IllegalEvent
 from benchkit.events import Answered, Closed, Decided, Event, Judged, PredictionRefused, SupplySet
 from benchkit.judge.verdicts import worst
 from benchkit.procedure.actions import Ask, SetSupply, SwitchOff, Write
-from benchkit.procedure.walk import JUDGED_KINDS, TABLE
+from benchkit.procedure.table import TABLE
+from benchkit.procedure.walk import JUDGED_KINDS
 from tests.procedure.driver import Drive, bad, begun, every_event, small, sudden
 
 NEVER = {"cold.end.ohm.spreader.lower", "cold.rails.ohm.rails", "power.output-first.output", "power.offset"}
