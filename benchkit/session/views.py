@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
 from dataclasses import dataclass
 
 from benchkit import quantities
@@ -59,13 +58,14 @@ class Painter:
         self._state: State | None = None
         self._sections: tuple[SectionView, ...] = ()
         self._results: tuple[ResultView, ...] = ()
+        self._drawn: dict[tuple[Judged, bool, str], ResultView] = {}
 
     def paint(self, state: State, moment: Moment) -> View:
         """Draw the whole picture of one moment."""
         if state is not self._state:
             self._state = state
             self._sections = _sections(self._walk.plan, state)
-            self._results = tuple(_result(self._titles, state, judged) for judged in state.results)
+            self._results = tuple(self._result(state, judged) for judged in state.results)
         opened, item, headings = state.opened, self._walk.item(state), self._headings
         return View(
             kind="walk" if opened is None else opened.kind,
@@ -94,6 +94,30 @@ class Painter:
             stopped=state.stopped,
             exit_status=None if state.closed is None else state.closed.exit_status,
         )
+
+    def _result(self, state: State, judged: Judged) -> ResultView:
+        key = judged, judged.item in state.before, state.overrides.get(judged.item, "")
+        if key not in self._drawn:
+            self._drawn[key] = _result(self._titles.get(judged.item, judged.item), *key)
+        return self._drawn[key]
+
+
+def _result(title: str, judged: Judged, from_before: bool, overridden: str) -> ResultView:
+    return ResultView(
+        item=judged.item,
+        title=title,
+        value_text=_number(judged.value, judged.unit),
+        low_text=_number(judged.low, judged.unit),
+        high_text=_number(judged.high, judged.unit),
+        verdict=judged.verdict,
+        why=judged.why,
+        value=judged.value,
+        low=judged.low,
+        high=judged.high,
+        uncertainty=judged.uncertainty,
+        from_before=from_before,
+        overridden=overridden,
+    )
 
 
 def supply_words(energised: Energised, supply: SupplyState | None, *, by_hand: bool) -> str:
@@ -136,24 +160,6 @@ def _sections(plan: Plan, state: State) -> tuple[SectionView, ...]:
             )
         )
     return tuple(views)
-
-
-def _result(titles: Mapping[str, str], state: State, judged: Judged) -> ResultView:
-    return ResultView(
-        item=judged.item,
-        title=titles.get(judged.item, judged.item),
-        value_text=_number(judged.value, judged.unit),
-        low_text=_number(judged.low, judged.unit),
-        high_text=_number(judged.high, judged.unit),
-        verdict=judged.verdict,
-        why=judged.why,
-        value=judged.value,
-        low=judged.low,
-        high=judged.high,
-        uncertainty=judged.uncertainty,
-        from_before=judged.item in state.before,
-        overridden=state.overrides.get(judged.item, ""),
-    )
 
 
 def _number(value: float | None, unit: str) -> str:

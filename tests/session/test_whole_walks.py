@@ -1,4 +1,4 @@
-"""Whole walks with nothing faked but the person: a real keeper process, real files, and where it says so real sockets."""
+"""Whole walks, nothing faked but the person: a real keeper, real files, and where it says so real sockets."""
 
 from __future__ import annotations
 
