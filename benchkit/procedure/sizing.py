@@ -86,12 +86,14 @@ def discharge_text(design: Design) -> str:
     farads = capacitance_f(design)
     if not farads:
         return "at once (the design names no capacitors on the rails)"
-    energy = quantities.show(0.5 * farads * volts**2, "J", 2)
-    text = time_text(discharge_s(design, volts))
+    joules = 0.5 * farads * volts**2
+    held = f"each rail holds {joules:.2g} J" if joules >= 0.1 else f"each rail holds {1000.0 * joules:.2g} mJ"
+    seconds = discharge_s(design, volts)
+    alone = "no bleed resistor is named" if seconds is None else f"{time_text(seconds)} through the bleed resistor"
     ohms = 1000.0
-    by_hand_s = ohms * farads * math.log(volts / RAIL_LOW_V)
-    power = quantities.show(volts**2 / ohms, "W", 2)
-    return f"{text}; each rail holds {energy}, and 1 kohm for {power} takes {time_text(by_hand_s)} for it"
+    by_hand = time_text(ohms * farads * math.log(volts / RAIL_LOW_V))
+    by_hand = by_hand if by_hand == "at once" else f"in {by_hand}"
+    return f"{alone}; {held}; a 1 kohm resistor for {volts**2 / ohms:.2g} W empties it {by_hand}"
 
 
 def with_room(design: Design, least: tuple[float, float]) -> tuple[float, float]:
