@@ -380,7 +380,7 @@ def _output_off(wire: Mapping[str, Any]) -> OutputOff:
 
 
 def _gone() -> InstrumentError:
-    return InstrumentError("link lost", "The keeper is gone", "", "Look at the supply; start the walk again to go on")
+    return InstrumentError("link lost", "The keeper of the instruments has gone")
 
 
 def _pass_on(done: Future[T], future: Future[T]) -> None:

@@ -142,7 +142,7 @@ class Keeper:
         act = self._ACTS.get(str(what))
         try:
             if self._leaving:
-                raise BenchkitError("The keeper is switching off and leaving", "", "Start a new one")
+                raise InstrumentError("link lost", "The keeper of the instruments is switching off and leaving")
             if act is None:
                 raise BenchkitError(f"The keeper was asked to {what!r}", "one of " + ", ".join(self._ACTS))
             act(self, request, message)

@@ -10,6 +10,7 @@ from pathlib import Path
 from typing import Any
 
 import benchkit
+from benchkit.errors import FileError
 from benchkit.keeper import platform
 from benchkit.keeper.protocol import decode, encode
 
@@ -24,8 +25,14 @@ def spawn(arguments: list[str], log_dir: Path | None) -> subprocess.Popen[bytes]
     environment["PYTHONPATH"] = os.pathsep.join(filter(None, [home, environment.get("PYTHONPATH", "")]))
     errors: Any = subprocess.DEVNULL
     if log_dir is not None:
-        log_dir.mkdir(parents=True, exist_ok=True)
-        errors = (log_dir / "keeper.log").open("ab")
+        try:
+            log_dir.mkdir(parents=True, exist_ok=True)
+            errors = (log_dir / "keeper.log").open("ab")
+        except OSError as error:
+            reason = error.strerror or type(error).__name__
+            raise FileError(
+                str(log_dir), "", f"can't be made or written to: {reason}", "a folder for records", "Name another one"
+            ) from None
     try:
         return subprocess.Popen(
             [sys.executable, "-m", "benchkit.keeper", *arguments],

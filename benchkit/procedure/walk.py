@@ -63,6 +63,7 @@ from benchkit.procedure.actions import (
     Wait,
     Write,
 )
+from benchkit.procedure.file import MADE_SAFE
 from benchkit.procedure.hearing import cut, heard, limit_judged, off_by_word, off_heard, rails_judged
 from benchkit.procedure.items import Item, Joined, Plan, condition_key
 from benchkit.procedure.state import State
@@ -73,6 +74,9 @@ RUNNERS: Final = frozenset({"the screen", "the keeper"})
 
 RUNNER_GONE: Final = ("contact with the screen was lost", "the screen closed the bench", "an error of the session")
 """How the reasons begin with which the supply is switched off when whoever ran the walk has gone."""
+
+NOT_CONFIRMED: Final = "the supply did not confirm that its output is off"
+"""Why a walk goes no further with a supply that doesn't obey."""
 
 Step = tuple[State, tuple[Action, ...]]
 
@@ -368,7 +372,14 @@ class Walk:
         _demand(event, "done")
         if not state.unconfirmed:
             raise IllegalEvent("The supply has not been asked to switch off yet", "its answer first")
+        if self._switched_here(state):
+            stopped = state if state.stopped else replace(state, stopped=NOT_CONFIRMED, stopped_at=self.item(state).id)
+            return self._enter(replace(off_by_word(stopped), stop_status=3, ever_on=True), self.plan.made_safe)
         return self._go_back(off_by_word(state))
+
+    def _switched_here(self, state: State) -> bool:
+        """Whether benchkit itself switches the supply, so that an off that it can't confirm means trouble."""
+        return state.opened is not None and state.opened.supply == "scpi"
 
     def _go_back(self, state: State) -> Step:
         if self.item(state).kind == "connect":
@@ -452,6 +463,9 @@ class Walk:
         limits = self.limits_for(state, item)
         assert limits is not None
         judged = self._verdict(item, event.reading, limits)
+        if judged.verdict == "pass" and item.section == MADE_SAFE and state.energised == "on":
+            why = "The supply itself says that its output is on: the reading can't be of a unit that is off."
+            judged = replace(judged, verdict="fail", why=why)
         state = replace(state, phase="judging", readings={**state.readings, item.id: event.reading})
         return state, (Write(item=item.id, event=judged),)
 
@@ -516,6 +530,11 @@ class Walk:
 
     def _off_by_hand(self, state: State, event: Answered) -> Step:
         _demand(event, "done")
+        if self._switched_here(state):
+            stopped = state if state.stopped else replace(state, stopped=NOT_CONFIRMED, stopped_at=self.item(state).id)
+            state = replace(stopped, stop_status=3, ever_on=True)
+            if not self.way_out(state):
+                return self._enter(off_by_word(state), self.plan.made_safe)
         return self._next(off_by_word(state))
 
     def _closed(self, state: State, event: Closed) -> Step:

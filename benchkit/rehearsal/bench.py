@@ -34,6 +34,8 @@ from benchkit.stage.design import Design, load_design, parse_design
 from benchkit.stage.draws import seeds
 from benchkit.stage.faults import parse_fault
 
+LEAVE: Final = b"leave"
+"""The line on standard input that ends a bench at once."""
 OUTLAST_S: Final = 4.0
 READ_BACK_S: Final = 1.0
 FOLLOW_EVERY_S: Final = 0.1
@@ -196,8 +198,16 @@ class SideTalker:
         """Take note of a line that was too long; nothing is kept."""
 
 
-async def run(bench: RehearsalBench, announce: Callable[[dict[str, Any]], None], ended: asyncio.Event) -> None:
-    """Serve `bench` until `ended` is set; `announce` gets the addresses once everything listens."""
+class Ending:
+    """When a bench ends, and whether it was told to (`hurried`) or whoever started it has just gone."""
+
+    def __init__(self) -> None:
+        self.reached = asyncio.Event()
+        self.hurried = False
+
+
+async def run(bench: RehearsalBench, announce: Callable[[dict[str, Any]], None], ending: Ending) -> None:
+    """Serve `bench` until `ending` is reached; `announce` gets the addresses once everything listens."""
     meter, meter_port = await serve(bench.meter, bench.catch_up)
     supply, supply_port = await serve(bench.supply, bench.catch_up)
     side, side_port = await serve(SideTalker(bench), bench.catch_up)
@@ -208,20 +218,19 @@ async def run(bench: RehearsalBench, announce: Callable[[dict[str, Any]], None],
             "side": side_port,
         }
     )
-    while not ended.is_set():
+    while not ending.reached.is_set():
         try:
-            await asyncio.wait_for(ended.wait(), FOLLOW_EVERY_S if bench.follow else None)
+            await asyncio.wait_for(ending.reached.wait(), FOLLOW_EVERY_S if bench.follow else None)
         except TimeoutError:
             bench.catch_up()
-    await _outlast(bench)
+    if not ending.hurried:
+        await _outlast(bench)
     for server in (meter, supply, side):
         server.close()
 
 
 async def _outlast(bench: RehearsalBench) -> None:
-    """Stay, as a real supply would, when whoever started it goes while an output is on, until that is off."""
-    if not _output_on(bench):
-        return
+    """Stay for a while, as a real supply would, when whoever started the bench has gone without a word."""
     left_s = OUTLAST_S
     while left_s > 0.0 and _output_on(bench):
         await asyncio.sleep(0.05)
@@ -233,21 +242,23 @@ def _output_on(bench: RehearsalBench) -> bool:
     return any(channel.on for channel in bench.table.channels)
 
 
-def _watch_input(loop: asyncio.AbstractEventLoop, ended: asyncio.Event) -> None:
-    """Read standard input to its end on a thread of its own, then let the bench end."""
+def _watch_input(loop: asyncio.AbstractEventLoop, ending: Ending) -> None:
+    """Read standard input to its end, or to the word that ends it, on a thread of its own; then let the bench end."""
 
     def read() -> None:
-        while sys.stdin.buffer.read(4096):
-            pass
-        loop.call_soon_threadsafe(ended.set)
+        for line in sys.stdin.buffer:
+            if line.strip() == LEAVE:
+                ending.hurried = True
+                break
+        loop.call_soon_threadsafe(ending.reached.set)
 
     threading.Thread(target=read, name="standard input", daemon=True).start()
 
 
 async def _main(bench: RehearsalBench) -> None:
-    ended = asyncio.Event()
-    _watch_input(asyncio.get_running_loop(), ended)
-    await run(bench, lambda addresses: print(json.dumps(addresses), flush=True), ended)
+    ending = Ending()
+    _watch_input(asyncio.get_running_loop(), ending)
+    await run(bench, lambda addresses: print(json.dumps(addresses), flush=True), ending)
 
 
 def read_design(name: str) -> Design:

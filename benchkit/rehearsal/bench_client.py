@@ -228,6 +228,9 @@ def _addresses(process: subprocess.Popen[bytes], log: IO[bytes]) -> dict[str, An
 
 def _end(process: subprocess.Popen[bytes]) -> None:
     if process.stdin is not None:
+        with contextlib.suppress(OSError, ValueError):
+            process.stdin.write(b"leave\n")
+            process.stdin.flush()
         with contextlib.suppress(OSError):
             process.stdin.close()
     try:

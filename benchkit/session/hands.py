@@ -34,10 +34,19 @@ class SimulatedHands(Protocol):
 
 
 class Hands:
-    """Does nothing at a real bench, and moves the simulated one in a rehearsal."""
+    """Does nothing at a real bench, and moves the simulated one in a rehearsal.
 
-    def __init__(self, simulated: SimulatedHands | None = None) -> None:
+    Parameters
+    ----------
+    simulated : SimulatedHands, optional
+        The simulated bench; none at a real one.
+    own_screwdriver : bool
+        Whoever answers turns the trimmer to its end themselves (the stand-in does, and may err).
+    """
+
+    def __init__(self, simulated: SimulatedHands | None = None, *, own_screwdriver: bool = False) -> None:
         self._simulated = simulated
+        self._own_screwdriver = own_screwdriver
 
     @property
     def simulated(self) -> bool:
@@ -55,6 +64,8 @@ class Hands:
         elif act == "connect the unit":
             await self._do(lambda: bench.short(False))
             await self._do(lambda: bench.connect(True))
+        elif act == "trimmer to least" and not self._own_screwdriver:
+            await self._do(lambda: bench.trimmer_to("least"))
 
     async def probe(self, point: str | None) -> None:
         """Put the probes on a test point."""

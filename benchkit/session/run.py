@@ -18,6 +18,7 @@ import asyncio
 import contextlib
 from collections import deque
 from collections.abc import Callable
+from concurrent.futures import Future
 from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any
@@ -31,6 +32,7 @@ from benchkit.events import (
     Decided,
     Event,
     Noted,
+    OutputOff,
     StopAsked,
     SupplyState,
     Waited,
@@ -64,6 +66,9 @@ from benchkit.session.views import Headings, Moment, Painter
 from benchkit.stage.design import Design
 
 HEARTBEAT_S = 0.2
+
+OFF_S = 6.0
+"""How long "off" may take altogether before the words are that nothing is known (s)."""
 
 
 @dataclass(kw_only=True)
@@ -135,6 +140,7 @@ class Session:
         self._off_asked = False
         self._moved_on = False
         self.watch_since = 0.0
+        self.last_off: OutputOff | None = None
         self._painter = Painter(
             job.walk,
             Headings(
@@ -184,14 +190,29 @@ class Session:
             self.keeper.arm()
             return await self._run(first)
         except BaseException as error:
-            if self.state.energised != "off" and not self.job.manual_supply:
-                with contextlib.suppress(Exception):
-                    await asyncio.wait_for(
-                        asyncio.wrap_future(self.keeper.off(f"an error of the session: {type(error).__name__}")), 3.0
-                    )
+            if not self.job.manual_supply:
+                await self._secure(f"an error of the session: {type(error).__name__}")
             raise
         finally:
             pulse.cancel()
+
+    async def _secure(self, reason: str) -> None:
+        """Switch off on the way out of an error, by the keeper or, if that has gone, by a second one."""
+        asks: tuple[Callable[[], Future[OutputOff]], ...] = (
+            lambda: self.keeper.off(reason),
+            lambda: self.keeper.after_death(self.job.setup),
+        )
+        for ask in asks:
+            if self.state.energised == "off" and self.keeper.alive:
+                return
+            with contextlib.suppress(Exception):
+                off: asyncio.Future[OutputOff] = asyncio.wrap_future(ask())
+                self.last_off = await asyncio.wait_for(off, OFF_S)
+            for push in self._pushed:
+                if isinstance(push, Push) and isinstance(push.event, OutputOff):
+                    self.last_off = push.event
+            if self.last_off is not None and self.last_off.confirmed:
+                return
 
     # -- the loop ----------------------------------------------------------------------------------------------
 
@@ -291,6 +312,8 @@ class Session:
                 raise InstrumentError("refused", self.moment.message, "a record that can be written", RESUME_HINT)
             if push.seq <= self.seq:
                 continue
+            if isinstance(push.event, OutputOff):
+                self.last_off = push.event
             self.state, actions = self.job.walk.handle(self.state, push.event, self.clock.now())
             self.seq = push.seq
             fresh = actions or fresh
@@ -303,7 +326,7 @@ class Session:
     async def _keeper_died(self, push: KeeperDied) -> BenchkitError:
         if self.job.manual_supply:
             return InstrumentError("link lost", f"The keeper of the record has ended: {push.problem}", "", RESUME_HINT)
-        off = await asyncio.wrap_future(self.keeper.after_death(self.job.setup))
+        off = self.last_off = await asyncio.wrap_future(self.keeper.after_death(self.job.setup))
         words = (
             "A second keeper switched the supply off and read it back as off."
             if off.confirmed
@@ -435,6 +458,7 @@ class Session:
         """
         if self._pushed:
             raise InstrumentError("refused", "Off or a trip came before the supply was set", "nothing after that")
+        self.last_off = None
         return await asyncio.wrap_future(self.keeper.supply_set(positive_v, negative_v, limit_a, True))
 
     def note_supply(self, state: SupplyState) -> None:
@@ -492,10 +516,13 @@ def _figures(truth: dict[str, Any]) -> dict[str, float]:
 
 
 async def _lapse(task: asyncio.Task[Event | None] | None) -> None:
-    if task is not None and not task.done():
+    """Let an action go that nobody waits for any more, whatever came or would have come of it."""
+    if task is None:
+        return
+    if not task.done():
         task.cancel()
-        with contextlib.suppress(asyncio.CancelledError, Stopped, BenchkitError):
-            await task
+    with contextlib.suppress(asyncio.CancelledError, Stopped, BenchkitError):
+        await task
 
 
 def _refusal(question: Question, reply: Reply) -> str:

@@ -14,7 +14,7 @@ from typing import Any, Literal
 
 from benchkit import __version__
 from benchkit.errors import BenchkitError, FileError, RecordError
-from benchkit.events import Closed, Event, Resumed, WalkOpened, from_payload
+from benchkit.events import Closed, Event, OutputOff, Resumed, WalkOpened, from_payload
 from benchkit.journal import reader
 from benchkit.keeper.client import KeeperClient
 from benchkit.measure.accuracy import Accuracy
@@ -80,11 +80,28 @@ class Runner:
         self.setting = setting
         self.session: Session | None = None
         self.record: Path | None = None
+        self.last_off: OutputOff | None = None
 
     def off_now(self, reason: str = "the operator asked for it") -> None:
         """Switch off at once; harmless before the session exists."""
         if self.session is not None:
             self.session.off_now(reason)
+
+    def last_words(self) -> str:
+        """Say what is known of the supply at the end; "" when this walk never had anything to do with it."""
+        session = self.session
+        if session is None:
+            return ""
+        if session.job.manual_supply:
+            if session.state.energised == "off" or not session.state.ever_on:
+                return ""
+            return "The supply is in your hands and may be on: SWITCH IT OFF BY HAND."
+        off = self.last_off or session.last_off
+        if off is not None and off.confirmed:
+            return f"Supply off, and confirmed: {off.how}."
+        if off is None and not session.state.ever_on:
+            return ""
+        return "OUTPUT STATE UNKNOWN: SWITCH THE SUPPLY OFF BY HAND, and treat the unit as live."
 
     async def begin(self, front: Front, unit: str, operator: str) -> Closed:
         """Run a new walk to its end.
@@ -129,8 +146,8 @@ class Runner:
         plan = await in_thread(lambda: make_plan(setting.procedure, setting.design))
         walk = Walk(plan)
         self.record = path
-        state = replayed(walk, path)
-        return await self._run(walk, state, Resumed(operator=operator), front, new=False)
+        replayed(walk, path)  # what can't go on is refused before anything is started
+        return await self._run(walk, State(), Resumed(operator=operator), front, new=False)
 
     async def _run(self, walk: Walk, state: State, first: Event, front: Front, *, new: bool) -> Closed:
         setting, record = self.setting, self.record
@@ -163,6 +180,8 @@ class Runner:
                 head = await asyncio.wrap_future(keeper.resume_journal(record))
                 assert isinstance(first, Resumed)
                 first = Resumed(operator=first.operator, torn=head.torn or "")
+                # Only now nobody else can write a line any more: a keeper may have been switching off until just now.
+                state = replayed(walk, record)
             session = Session(job, keeper, front, setting.hands, setting.clock)
             session.state = state
             session.seq = state.count
@@ -171,7 +190,7 @@ class Runner:
                 session.on_push(push)
             return await session.run(first)
         finally:
-            await in_thread(keeper.close)
+            self.last_off = await in_thread(keeper.close) or (session.last_off if session is not None else None)
 
 
 def events_of(path: Path) -> list[tuple[Event, float]]:

@@ -15,7 +15,7 @@ from typing import TYPE_CHECKING, Any
 import click
 
 from benchkit import shipped
-from benchkit.errors import BenchkitError, EntryError, InstrumentError
+from benchkit.errors import BenchkitError, EntryError
 from benchkit.events import Closed
 from benchkit.session.clock import SimulatedClock, WallClock
 from benchkit.session.front import Front
@@ -68,7 +68,7 @@ def rehearse(
         parse_fault(plant, loaded)
     bench = start_bench(loaded.text, seed=seed, plant=plant, clock="manual" if stand_in else "follow")
     try:
-        hands = Hands(bench.hands)
+        hands = Hands(bench.hands, own_screwdriver=stand_in)
         clock = SimulatedClock(hands.advance, None if stand_in else PACE)
         setting = Setting(
             kind="rehearsal",
@@ -226,8 +226,10 @@ def _in_lines(runner: Runner, unit: str, operator: str, resume: Path | None) -> 
         click.echo(f"CAUTION: {caution}")
     if setting.kind == "rehearsal":
         click.echo(f"This is a rehearsal: no real unit is touched. Seed {setting.seed}.")
-    unit = unit or click.prompt("Serial number of the unit")
-    operator = operator or click.prompt("Operator")
+    while not unit.strip():
+        unit = click.prompt("Serial number of the unit")
+    while not operator.strip():
+        operator = click.prompt("Operator")
 
     async def run() -> Closed:
         front = PlainFront(runner.off_now)
@@ -245,22 +247,27 @@ def _finish(runner: Runner, run: Callable[[], Awaitable[Closed]]) -> int:
 
     try:
         closed = asyncio.run(whole())
-    except InstrumentError as error:
+    except BenchkitError as error:
         click.echo(f"benchkit: {error}", err=True)
-        _say_record(runner)
+        _say_end(runner)
         return error.exit_status
-    except (BenchkitError, click.Abort):
-        _say_record(runner)
-        raise
+    except (click.Abort, KeyboardInterrupt):
+        click.echo("The walk was left before its end.")
+        _say_end(runner)
+        return 4
     words = f"The walk is closed: {closed.verdict.upper()}."
     if closed.stopped:
-        words += f" It was stopped: {closed.stopped}."
+        words += f" It was stopped: {closed.stopped.rstrip('.')}."
     click.echo(words)
-    _say_record(runner)
+    _say_end(runner)
     return closed.exit_status
 
 
-def _say_record(runner: Runner) -> None:
+def _say_end(runner: Runner) -> None:
+    """Last lines of every way out: what is known of the supply, and where the record is."""
+    words = runner.last_words()
+    if words:
+        click.echo(words)
     if runner.record is not None and runner.record.exists():
         click.echo(f"record: {runner.record}")
 
@@ -271,7 +278,7 @@ def _stop_on_signals(loop: asyncio.AbstractEventLoop, runner: Runner) -> None:
 
     def stop(number: int, _frame: object) -> None:
         nonlocal told
-        if told:
+        if told or runner.session is None:
             raise KeyboardInterrupt
         told = True
         loop.call_soon_threadsafe(runner.off_now, f"the operator pressed stop (signal {number})")
@@ -310,7 +317,7 @@ def _on_screen(runner: Runner, unit: str, operator: str, resume: Path | None) ->
         resumed=resume is not None,
     )
     status = run_app(start, off_now=runner.off_now, heartbeat=beat, opening=opening, log_dir=setting.records / "logs")
-    _say_record(runner)
+    _say_end(runner)
     return status
 
 

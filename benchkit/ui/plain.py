@@ -22,7 +22,7 @@ from benchkit.session.front import Reply, View
 
 WIDTH = 78
 
-END_S = 2.0
+END_S = 6.0
 """So long is waited for the walk to take the question back when the input has ended, s."""
 
 
@@ -85,6 +85,7 @@ class PlainFront:
         """
         if self._ended and self._lines.empty():
             raise click.Abort
+        self._forget_typed_ahead()
         if refused:
             self._print(f"  ! {refused}")
         else:
@@ -104,6 +105,16 @@ class PlainFront:
             if reply is not None:
                 return reply
             self._print("  ! Answer with a number, or type off to switch the supply off.")
+
+    def _forget_typed_ahead(self) -> None:
+        """At a terminal, drop what was typed before the question stood there: it can't be an answer to it."""
+        if not self._source.isatty():
+            return
+        ended = False
+        while not self._lines.empty():
+            ended = self._lines.get_nowait() is None or ended
+        if ended:
+            self._lines.put_nowait(None)
 
     def _put(self, question: Question) -> None:
         view = self._view

@@ -148,7 +148,7 @@ def test_a_keeper_that_is_killed_is_noticed_and_a_stand_by_switches_off(tmp_path
         at.wait_for(KeeperDied, 1.0)
         assert time.monotonic() - began < 1.0
         assert not at.client.alive
-        with pytest.raises(Exception, match="keeper is gone"):
+        with pytest.raises(Exception, match="keeper of the instruments has gone"):
             reading.result(1)
         off = at.client.after_death().result(10)
         assert off.confirmed

@@ -633,7 +633,24 @@ def test_a_resumed_walk_waits_for_the_supply_before_it_believes_a_hand() -> None
     drive.tell(OutputOff(reason="r", confirmed=False, how="no answer"))
     assert isinstance(drive.open, Ask)
     drive.well()
-    assert drive.walk.item(drive.state).id == "cold.least"
+    # A supply that does not confirm "off" is not walked on with: once more off, and out.
+    assert drive.walk.item(drive.state).id == "made-safe.off"
+    assert isinstance(drive.open, SwitchOff)
+    closed = drive.to_end()
+    assert closed.exit_status == 3
+    assert "did not confirm" in closed.stopped
+
+
+def test_a_supply_that_ignores_off_leads_only_out() -> None:
+    drive = begun(small()).until("limit.check")
+    while not isinstance(drive.open, SwitchOff):
+        drive.well()
+    drive.tell(OutputOff(reason="r", confirmed=False, how="the output still reads as on"))
+    assert isinstance(drive.open, Ask)
+    assert [choice.value for choice in drive.open.question.choices] == ["done"]
+    drive.well()
+    assert drive.walk.way_out(drive.state)
+    assert drive.to_end().exit_status == 3
 
 
 def test_a_resumed_walk_without_instruments_is_made_safe() -> None:

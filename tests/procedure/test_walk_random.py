@@ -81,7 +81,7 @@ class Walks(RuleBasedStateMachine):
         choices = {choice.value for choice in question.choices}
         if question.kind == "decide" and action.item in NEVER:
             assert "go on" not in choices
-        if action.item == "made-safe.unplug" and question.kind != "by hand":
+        if action.item == "made-safe.unplug" and question.kind == "tell":
             for rail in ("rail+", "rail-"):
                 result = drive.state.result(f"made-safe.rails-low.{rail}")
                 assert result is not None

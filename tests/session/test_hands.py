@@ -26,13 +26,19 @@ def test_real_hands_are_the_operators_own() -> None:
     [
         ("short the leads", [("connect", False), ("short", True)]),
         ("connect the unit", [("short", False), ("connect", True)]),
-        ("trimmer to least", []),
+        ("trimmer to least", [("trimmer", "least")]),
     ],
 )
-def test_acts_in_their_order(act: str, moves: list[tuple[str, bool]]) -> None:
+def test_acts_in_their_order(act: str, moves: list[tuple[str, object]]) -> None:
     bench = FakeBench()
     asyncio.run(Hands(bench).act(act))
     assert bench.acts == moves
+
+
+def test_whoever_has_a_screwdriver_turns_the_trimmer_themselves() -> None:
+    bench = FakeBench()
+    asyncio.run(Hands(bench, own_screwdriver=True).act("trimmer to least"))
+    assert bench.acts == []
 
 
 def test_the_rest_goes_through() -> None:

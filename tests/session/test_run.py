@@ -87,7 +87,8 @@ def test_what_is_shown_is_kept() -> None:
 def test_hands_do_what_they_are_told() -> None:
     run = Run()
     run.go()
-    assert run.bench.acts == [("connect", False), ("short", True), ("short", False), ("connect", True)]
+    leads = [("connect", False), ("short", True), ("short", False), ("connect", True)]
+    assert run.bench.acts == [("trimmer", "least"), *leads]
     assert run.bench.seconds > 60.0
 
 
@@ -299,8 +300,12 @@ def test_an_event_that_could_not_be_kept_ends_the_run_with_off() -> None:
 @pytest.mark.parametrize(("confirmed", "words"), [(True, "read it back as off"), (False, "OUTPUT STATE UNKNOWN")])
 def test_a_keeper_that_dies(confirmed: bool, words: str) -> None:
     run = Run()
-    run.keeper.confirmed = confirmed
-    run.front.answer = hang_at("power.output-first.output", lambda: run.session.on_push(KeeperDied(problem="gone")))
+
+    def die() -> None:
+        run.keeper.confirmed = confirmed
+        run.session.on_push(KeeperDied(problem="gone"))
+
+    run.front.answer = hang_at("power.output-first.output", die)
     with pytest.raises(InstrumentError, match=words) as caught:
         run.go()
     assert "after death" in run.keeper.log
