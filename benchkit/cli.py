@@ -154,7 +154,7 @@ def rehearse(**options: Any) -> int:
         "benchkit walk --resume records/T40-0017-a6ef3863-20260131T101500Z.jsonl",
     )
 )
-@_design_option
+@click.option("--design", "-d", default="", metavar="FILE", help="Design file of the unit on the bench.")
 @_procedure_option
 @_records_option
 @click.option("--bench", "bench_path", type=click.Path(path_type=Path), default=None, metavar="FILE",

@@ -44,6 +44,8 @@ def _find(name: str, place: Path, what: str) -> Path:
     if path.suffix == ".toml" or len(path.parts) > 1:
         if path.is_file():
             return path
+        if path.is_dir():
+            raise FileError(name, "", "this is a folder", f"{what} file", "Name a file in it")
         raise FileError(name, "", "there is no such file", f"{what} file", "Check the name and the folder")
     known = sorted(file.stem for file in place.glob("*.toml"))
     if name in known:

@@ -36,7 +36,7 @@ from benchkit.instruments.numbers import (
 )
 from benchkit.instruments.profile import SupplyProfile
 
-OFF_TIMEOUT_S = 0.6
+OFF_TIMEOUT_S = 1.2
 """How long each answer may take while "off" is being confirmed, s."""
 
 WATCH_TIMEOUT_S = 1.0

@@ -283,6 +283,7 @@ class _Planner:
             ramp_s=max(ramp_s, charging_s(self.design, rise_v, limit_a)),
             settle_s=max(0.5, self.design.feed.settles_after_s or 0.0),
             raises=raises,
+            **({"title": f"Rails at {rails_text(positive_v, negative_v)} again"} if suffix else {}),
             may_go_on=False,
             **words,
         )

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import asyncio
+import re
 from collections import deque
 from dataclasses import replace
 from typing import TYPE_CHECKING
@@ -111,9 +112,17 @@ async def _by_hand(session: Session, point: str, function: str, unit: str) -> Re
 
 
 def _typed(text: str, point: str, function: str, unit: str, accuracy: Accuracy) -> Reading:
+    if re.fullmatch(r"[-+]?[\d.,]+(e[-+]?\d+)?", text.strip(), re.IGNORECASE):
+        raise EntryError(f"{text.strip()} came without a unit", f"the unit too, such as {_example(unit)}")
     value = quantities.parse_reading(text, unit)
     if isinstance(value, Overload):
         return _overload(point, function, unit, f"by hand, {accuracy.name}", negative=not value.positive)
+    if function not in accuracy.rows:
+        # Nothing is known of how well this meter does that: the reading is kept, and decides nothing.
+        return Reading(
+            point=point, value=value, unit=unit, standard_uncertainty=None, meter=f"by hand, {accuracy.name}",
+            function=function,
+        )  # fmt: skip
     return make_reading(point, value, unit, function=function, accuracy=accuracy, meter=f"by hand, {accuracy.name}")
 
 

@@ -67,6 +67,9 @@ from benchkit.stage.design import Design
 
 HEARTBEAT_S = 0.2
 
+LOOK_S = 1.0
+"""How often the supply is looked at while a question stands (s)."""
+
 OFF_S = 6.0
 """How long "off" may take altogether before the words are that nothing is known (s)."""
 
@@ -410,17 +413,30 @@ class Session:
         refused = ""
         self.busy("")
         while True:
-            reply = await self.front.ask(question, refused)
+            reply = await self._asked(question, refused)
             refused = _refusal(question, reply)
             if not refused:
                 return reply
+
+    async def _asked(self, question: Question, refused: str) -> Reply:
+        """Put a question, and keep looking at the supply while the person thinks."""
+        asking = asyncio.ensure_future(self.front.ask(question, refused))
+        try:
+            while True:
+                done, _ = await asyncio.wait({asking}, timeout=LOOK_S)
+                if done:
+                    return asking.result()
+                if self.state.energised == "on":
+                    await self.sample()
+        finally:
+            asking.cancel()
 
     async def ask_entry(self, question: Question, parse: Callable[[str], Any]) -> tuple[Reply, Any]:
         """Put a question that wants something typed, until it can be used."""
         refused = ""
         self.busy("")
         while True:
-            reply = await self.front.ask(question, refused)
+            reply = await self._asked(question, refused)
             if reply.choice == "make safe":
                 raise Stopped(f"the operator chose it at: {question.title}")
             if reply.choice not in ("done", "take"):

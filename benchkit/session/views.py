@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 from benchkit import quantities
 from benchkit.events import Judged, SupplyState
@@ -11,6 +11,9 @@ from benchkit.procedure.items import Plan
 from benchkit.procedure.state import State
 from benchkit.procedure.walk import Walk
 from benchkit.session.front import Energised, LiveView, ResultView, SectionView, SupplyView, View
+
+OVERLOAD = "The meter reads overload"
+"""How a verdict on an overload begins; such a result has no number."""
 
 
 @dataclass(kw_only=True)
@@ -106,7 +109,7 @@ def _result(title: str, judged: Judged, from_before: bool, overridden: str) -> R
     return ResultView(
         item=judged.item,
         title=title,
-        value_text=_number(judged.value, judged.unit),
+        value_text="overload" if OVERLOAD in judged.why else _number(judged.value, judged.unit),
         low_text=_number(judged.low, judged.unit),
         high_text=_number(judged.high, judged.unit),
         verdict=judged.verdict,
@@ -127,7 +130,7 @@ def supply_words(energised: Energised, supply: SupplyState | None, *, by_hand: b
     if energised == "off":
         rest = "nothing here can switch it" if by_hand else "read back as off"
         return f"SUPPLY OFF ({rest})"
-    parts = ["SUPPLY ON" if energised == "on" else "SUPPLY AS SET BY HAND"]
+    parts = ["SUPPLY IN YOUR HANDS, nothing here switches it off" if by_hand else "SUPPLY ON"]
     if supply is not None:
         for volts, amps in ((supply.positive_v, supply.positive_a), (supply.negative_v, supply.negative_a)):
             if volts is not None:
@@ -165,11 +168,13 @@ def _sections(plan: Plan, state: State) -> tuple[SectionView, ...]:
 def _number(value: float | None, unit: str) -> str:
     if value is None:
         return ""
-    return quantities.show(value, unit, 5) if unit else f"{value:.5g}"
+    return quantities.show(value, unit, 5) if unit else f"{value:.3g}"
 
 
 def _supply(state: State, supply: SupplyState | None) -> SupplyView:
     by_hand = state.opened is not None and state.opened.supply == "manual"
+    if state.phase == "setting" and supply is not None and supply is not state.supply and supply.output_on is not None:
+        state = replace(state, energised="on" if supply.output_on else "off")  # read back while it is being set
     return SupplyView(
         energised=state.energised,
         words=supply_words(state.energised, supply, by_hand=by_hand),

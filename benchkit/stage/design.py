@@ -42,6 +42,7 @@ from benchkit.stage.design_values import (
     PositiveVolts,
     PositiveWatts,
     Seconds,
+    TargetTolerance,
     Text,
     Tracking,
 )
@@ -145,7 +146,7 @@ class Target(_Table):
     emitter_drop_v: PositiveVolts | None = Field(None, alias="emitter_drop")
     quiescent_current_a: PositiveAmps | None = Field(None, alias="quiescent_current")
     optimum: Literal[True] | None = None
-    tolerance: Fraction
+    tolerance: TargetTolerance
     when: Literal["warm", "cold"]
 
 

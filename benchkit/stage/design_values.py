@@ -9,7 +9,7 @@ from __future__ import annotations
 from collections.abc import Callable
 from typing import Annotated, Any, Literal, NamedTuple
 
-from pydantic import BeforeValidator, Field
+from pydantic import AfterValidator, BeforeValidator, Field
 from pydantic_core import PydanticCustomError
 
 from benchkit.errors import EntryError
@@ -129,7 +129,19 @@ def _rest(value: object) -> Rest:
     return Rest(float(_checked(parse, value, "V")), None)
 
 
-Text = Annotated[str, Field(min_length=1, max_length=200)]
+def _printable(value: str) -> str:
+    if not value.isprintable():
+        raise _refuse(f"{quoted(value)} came", "a name of characters that can be printed")
+    return value
+
+
+def _below_all(value: float) -> float:
+    if value >= 1.0:
+        raise _refuse(f"{100.0 * value:g} % came", "less than 100 %, or the lower limit would be below nothing")
+    return value
+
+
+Text = Annotated[str, Field(min_length=1, max_length=200), AfterValidator(_printable)]
 Volts = Annotated[float, _quantity("V")]
 PositiveVolts = Annotated[float, _quantity("V", above=0.0)]
 NegativeVolts = Annotated[float, _quantity("V", most=0.0)]
@@ -143,6 +155,7 @@ OffsetVolts = Annotated[float, _quantity("V", least=0.0)]
 Seconds = Annotated[float, _quantity("s", least=0.0)]
 PositiveWatts = Annotated[float, _quantity("W", above=0.0)]
 Fraction = Annotated[float, BeforeValidator(_percent)]
+TargetTolerance = Annotated[float, BeforeValidator(_percent), AfterValidator(_below_all)]
 Ohms = Annotated[Tolerance, _toleranced("ohm")]
 Amps = Annotated[Tolerance, _toleranced("A")]
 AnyFeed = Annotated[Feed, BeforeValidator(_feed)]

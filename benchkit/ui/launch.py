@@ -122,6 +122,8 @@ def walk(
             text = _text_of(bench_path)
         parts = _bench_parts(text, str(bench_path or resume_path)) if text else _by_hand()
     else:
+        if not design:
+            raise EntryError("No design was named", "the design file of this unit", "Name it with --design")
         loaded = load_design(shipped.find_design(design))
         steps = load_procedure(shipped.find_procedure(procedure))
         parts = _bench_parts(_text_of(bench_path), str(bench_path)) if bench_path is not None else _by_hand()
@@ -136,7 +138,7 @@ def walk(
         units=units,
         **parts,
     )
-    return _with_person(Runner(setting), unit, operator or _login(), plain=plain, resume=resume_path)
+    return _with_person(Runner(setting), unit, operator, plain=plain, resume=resume_path)
 
 
 STAND_IN = "stand-in"
@@ -229,7 +231,7 @@ def _in_lines(runner: Runner, unit: str, operator: str, resume: Path | None) -> 
     while not unit.strip():
         unit = click.prompt("Serial number of the unit")
     while not operator.strip():
-        operator = click.prompt("Operator")
+        operator = click.prompt("Operator", default=_login() or None)
 
     async def run() -> Closed:
         front = PlainFront(runner.off_now)
@@ -313,7 +315,7 @@ def _on_screen(runner: Runner, unit: str, operator: str, resume: Path | None) ->
         supply=_named(setting.setup.get("supply")),
         record=str(resume or setting.records),
         unit=unit,
-        operator=operator,
+        operator=operator or _login(),
         resumed=resume is not None,
     )
     status = run_app(start, off_now=runner.off_now, heartbeat=beat, opening=opening, log_dir=setting.records / "logs")

@@ -104,7 +104,9 @@ class PlainFront:
             reply = self._reply(question, line.strip())
             if reply is not None:
                 return reply
-            self._print("  ! Answer with a number, or type off to switch the supply off.")
+            by_hand = self._view is not None and self._view.supply.by_hand
+            off = "off to stop (the supply is yours to switch)" if by_hand else "off to switch the supply off"
+            self._print(f"  ! That is no answer here. Take one of those above, or type {off}.")
 
     def _forget_typed_ahead(self) -> None:
         """At a terminal, drop what was typed before the question stood there: it can't be an answer to it."""
@@ -132,7 +134,10 @@ class PlainFront:
             self._wrapped(f"Why: {question.why}", "  ")
         if question.caution:
             self._wrapped(f"CAUTION: {question.caution}", "  ")
-        for number, choice in enumerate(question.choices, start=1):
+        if question.kind in ("by hand", "text"):
+            for choice in question.choices[1:]:
+                self._print(f"    or the words {choice.value}: {choice.label}")
+        for number, choice in enumerate(() if question.kind in ("by hand", "text") else question.choices, start=1):
             reason = " (with the reason behind it)" if choice.wants_reason else ""
             self._print(f"    {number} {choice.label}{reason}")
         if question.kind == "trim" and view is not None and view.kind == "rehearsal":
@@ -149,6 +154,7 @@ class PlainFront:
 
     def _reply(self, question: Question, text: str) -> Reply | None:
         first, _, rest = text.partition(" ")
+        words = {choice.value for choice in question.choices[1:]}
         if question.kind == "hold" and text.lower() == "yes":
             return Reply(choice="yes", text="yes")
         if question.kind == "trim" and first[:1] in ("+", "-") and self._view is not None:
@@ -161,7 +167,7 @@ class PlainFront:
             if question.kind == "trim":
                 return Reply(choice="turn", turns=0.0) if self._view and self._view.kind == "rehearsal" else None
             return Reply(choice=question.choices[0].value)
-        if question.kind in ("by hand", "text") and not _is_number_of(first, question) and text:
+        if question.kind in ("by hand", "text") and text and text.lower() not in words:
             return Reply(choice=question.choices[0].value, text=text)
         if question.kind == "by hand" and not text and len(question.choices) == 1:
             return Reply(choice=question.choices[0].value)

@@ -19,7 +19,7 @@ ON = SupplyState(output_on=True, positive_v=10.0, negative_v=-10.0, positive_a=0
         ("off", None, False, "SUPPLY OFF (read back as off)"),
         ("off", None, True, "SUPPLY OFF (nothing here can switch it)"),
         ("unknown", ON, False, "SUPPLY: OUTPUT STATE UNKNOWN - treat the unit as live"),
-        ("unknown", None, True, "SUPPLY AS SET BY HAND"),
+        ("unknown", None, True, "SUPPLY IN YOUR HANDS, nothing here switches it off"),
         ("on", ON, False, "SUPPLY ON  10.00 V 12.4 mA  -10.00 V 12.1 mA  limit 45.0 mA"),
         ("on", replace(ON, negative_in_limit=True, limit_a=None), False, None),
         ("on", None, False, "SUPPLY ON"),
@@ -124,7 +124,7 @@ def test_a_supply_by_hand_is_shown_as_such_all_the_time() -> None:
     drive.tell(replace(OPENED, supply="manual"))
     found = view(drive).supply
     assert found.by_hand
-    assert found.words == "SUPPLY AS SET BY HAND"
+    assert found.words == "SUPPLY IN YOUR HANDS, nothing here switches it off"
 
 
 def test_before_anything_is_opened_there_is_a_picture_too() -> None:

@@ -45,10 +45,9 @@ class StartScreen(BenchScreen):
         yield self._hint
 
     def on_mount(self) -> None:
-        """Begin at the first empty entry."""
+        """Begin at the serial number."""
         self._hint.say("Enter: next, then begin.  Ctrl+Q: leave.  Tab: the other entry.")
-        empty = not self._unit.value.strip() and not self._opening.resumed
-        (self._unit if empty else self._operator).focus()
+        (self._operator if self._unit.disabled else self._unit).focus()
 
     def action_turn_over(self, rows: int) -> None:
         """Move what is longer than its room."""

@@ -38,11 +38,22 @@ class Choices(Words, can_focus=True):
         self._marked = 0
         self._stacked = False
         self._arrows = True
+        self._usual = True
 
     def offer(
-        self, choices: tuple[Choice, ...], *, stacked: bool = False, marked: int = 0, arrows: bool = True
+        self,
+        choices: tuple[Choice, ...],
+        *,
+        stacked: bool = False,
+        marked: int = 0,
+        arrows: bool = True,
+        usual: bool = True,
     ) -> None:
-        """Offer `choices`, one a row when `stacked`; without `arrows` these keys are left to others."""
+        """Offer `choices`, one a row when `stacked`; without `arrows` these keys are left to others.
+
+        Without a `usual` one Enter takes none of them: a confirmation wants its own key.
+        """
+        self._usual = usual
         self._choices = keyed(choices)
         self._marked = min(marked, max(0, len(choices) - 1))
         self._stacked = stacked
@@ -53,7 +64,9 @@ class Choices(Words, can_focus=True):
         """Take or move."""
         if not self._choices:
             return
-        if event.key == "enter":
+        if event.key == "enter" and not self._usual:
+            self.app.bell()
+        elif event.key == "enter":
             self.post_message(self.Taken(self._choices[self._marked][1]))
         elif self._arrows and event.key in (("left", "right", "up", "down") if self._stacked else ("left", "right")):
             step = 1 if event.key in ("right", "down") else -1
@@ -79,13 +92,18 @@ class Choices(Words, can_focus=True):
         for number, (letter, choice) in enumerate(self._choices):
             if number:
                 text.append("\n" if self._stacked else "   ")
-            marked = number == self._marked and self.has_focus
+            marked = self._usual and number == self._marked and self.has_focus
             key = "Enter" if marked else letter.upper()
             text.append(f" {key} ", style=f"bold reverse {CARE}" if marked else f"bold {CARE}")
             text.append(f" {safe(choice.label)}", style=f"bold {STRONG}" if marked else INK)
             if marked and not self._stacked and letter != "enter":
                 text.append(f" ({letter.upper()})", style=QUIET)
         self.say(text)
+
+
+def _ends(choices: tuple[Choice, ...]) -> bool:
+    """Whether one of them ends the walk: then no arrow may bring Enter onto it."""
+    return any(choice.value == "make safe" for choice in choices)
 
 
 class Answer(Vertical):
@@ -132,7 +150,7 @@ class Answer(Vertical):
         self._since = self._clock()
         self.display = True
         types = wants_entry(question)
-        if not again:
+        if not again or question.kind == "hold":
             self._entry.value = ""
         self._hint.say(_hint(question, refused, types))
         self._hint.set_class(bool(refused), "refused")
@@ -141,7 +159,8 @@ class Answer(Vertical):
         shown = question.choices
         if types:
             shown = tuple(choice for choice in question.choices if not _typed(question, choice))
-        self._choices.offer(shown, stacked=stacked, arrows=arrows)
+        usual = question.kind != "confirm"
+        self._choices.offer(shown, stacked=stacked, arrows=arrows and usual and not _ends(shown), usual=usual)
         self._choices.display = bool(shown)
         self._focus()
 
