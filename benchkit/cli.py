@@ -368,14 +368,14 @@ def record_verify(records: tuple[Path, ...], as_json: bool) -> int:
 @click.option("--json", "as_json", is_flag=True, help="For programs.")
 def record_show(record_path: Path, as_json: bool) -> int:
     """Show a record as a readable summary."""
-    from benchkit.record import show, summary
+    from benchkit.record import show, summary, verify
 
     found = summary.load_summary(record_path)
     if as_json:
         _print_json(show.as_json(found))
     else:
         click.echo(show.as_text(found))
-    return 0
+    return 2 if verify.load(record_path).status == 2 else 0
 
 
 @record.command(

@@ -147,7 +147,7 @@ def test_a_design_that_is_not_there(run: Run, command: str) -> None:
     [
         ('kind = "confirm"', 'kind = "ask"', "section 'look' step 'parts' kind"),
         ('points = ["ohm.rails"]', 'points = ["ohm.rial"]', "ohm.rial"),
-        ('limits = { low = "100 ohm" }', 'limits = { low = "100 V" }', "step rails"),
+        ('limits = { low = "-1 V", high = "1 V" }', 'limits = { low = "-1 ohm", high = "1 V" }', "step rails-low"),
         ('rails = "2 V"', 'rails = "200 V"', "sets the rails to 200 V"),
         ('share = "100 %"', 'share = "110 %"', "at most 100 %"),
     ],

@@ -32,6 +32,9 @@ ItemKind = Literal[
 NEVER_PASSED_OVER = frozenset({"ohm.rails", "ohm.rail+", "ohm.rail-", "offset before load"})
 """Points and rules whose result nobody overrides, whatever the file says; nor a limit check or the trimmer's end."""
 
+MOST_OFFSET_V = 0.05
+"""The most d.c. (V) at the output before a load is connected that a procedure may allow; common practice."""
+
 RAIL_LOW_V = 1.0
 """A rail below this (V) counts as low; common practice."""
 

@@ -23,6 +23,7 @@ from benchkit.errors import EntryError, FileError
 from benchkit.judge.limits import Limits
 from benchkit.procedure.file import MADE_SAFE, PairText, Procedure, Section, Step
 from benchkit.procedure.items import (
+    MOST_OFFSET_V,
     NEVER_PASSED_OVER,
     RAIL_LOW_V,
     TRIMMED,
@@ -58,11 +59,24 @@ def make_plan(procedure: Procedure, design: Design) -> Plan:
     ModelError
         When the model finds no rails at which the stage regulates.
     """
-    items = tuple(_Planner(procedure, design).items())
+    items = _with_facts(tuple(_Planner(procedure, design).items()))
     _require_checks(procedure, design, items)
     made_safe = next(number for number, item in enumerate(items) if item.section == MADE_SAFE)
     resume = next(number for number, item in enumerate(items) if item.resume)
     return Plan(items=items, made_safe=made_safe, resume=resume)
+
+
+def _with_facts(items: tuple[Item, ...]) -> tuple[Item, ...]:
+    """Make every hold point say what rises behind it, whatever words the file gave it."""
+    told = list(items)
+    for number, item in enumerate(items[1:], start=1):
+        hold = told[number - 1]
+        if not item.raises or hold.kind != "hold":
+            continue
+        rails, limit = rails_text(item.positive_v, item.negative_v), quantities.show(item.limit_a, "A")
+        if rails not in hold.do or limit not in hold.do:
+            told[number - 1] = replace(hold, do=f"{hold.do} Behind this yes: rails {rails}, limit {limit}.")
+    return tuple(told)
 
 
 def _require_checks(procedure: Procedure, design: Design, items: tuple[Item, ...]) -> None:
@@ -85,6 +99,23 @@ def _require_checks(procedure: Procedure, design: Design, items: tuple[Item, ...
             "gives power before the unit is known to be safe for it",
             f"{' and '.join(lacking)} before it",
             "No procedure can leave these out",
+        )
+    checks = [number for number, item in enumerate(before) if item.kind == "limit check" or item.trimmer_end]
+    resume = next(number for number, item in enumerate(items) if item.resume)
+    if checks and resume > min(checks):
+        raise FileError(
+            procedure.file,
+            f"section {items[resume].section}, resume",
+            "a walk that was cut off would go on behind the checks of limit and trimmer",
+            "resume = true in the section of the first of them, or before it",
+        )
+    seen = {item.point.name for item in items if item.section == MADE_SAFE and item.point is not None}
+    if not {"rail+", "rail-"} <= seen:
+        raise FileError(
+            procedure.file,
+            f"section {MADE_SAFE}",
+            "nobody sees the rails low at the end",
+            "readings of rail+ and rail-",
         )
 
 
@@ -175,7 +206,9 @@ class _Planner:
     def _reading(self, step: Step, point: Point) -> Item:
         limits: Limits | None = None
         condition: AnyCondition | None = None
-        trimmer_end = not point.powered and "ARM" in " ".join(step.points)
+        trimmer_end = self.trimmer == "least" and point.name in {one.name for one in self._expand("ohm.spreader.ARM")}
+        if (trimmer_end or point.name in NEVER_PASSED_OVER) and (step.limits != "the model" or step.allow is not None):
+            raise self._refuse(step, f"judges {point.name} by limits of its own", "the model's limits, as they are")
         if isinstance(step.limits, PairText):
             limits = self._stated(step, step.limits, point)
         elif step.limits == "the target":
@@ -252,8 +285,8 @@ class _Planner:
         limit_a = self._limit(step, positive_v, negative_v)
         if self.on and (positive_v, negative_v) == (self.positive_v, self.negative_v) and limit_a == self.limit_a:
             return
-        if self.on and positive_v < min(self.positive_v, self.lowest[0]):
-            return  # the lowest rails at which this stage regulates are above this step already
+        if self.on and positive_v < self.positive_v == self.lowest[0]:
+            return  # on the way up: the lowest rails at which this stage regulates are above this step already
         yield from self._power(step, "", positive_v, negative_v, limit_a, quantities.parse(step.ramp or "1 s", "s"))
 
     def _power(
@@ -392,6 +425,8 @@ class _Planner:
                 number = float(text)
         except (EntryError, ValueError):
             number = math.nan
+        if step.rule in NEVER_PASSED_OVER and number > MOST_OFFSET_V:
+            raise self._refuse(step, f"allows an offset of {text}", f"{MOST_OFFSET_V * 1e3:.0f} mV or less")
         if not (math.isfinite(number) and number > 0.0):
             raise self._refuse(step, f"has the number {step.number!r}", "a number above zero, such as 10, 1 % or 50 mV")
         return number
@@ -419,7 +454,12 @@ class _Planner:
             return supply_limit_a(self.design, full.positive_v, full.negative_v, share=0.0)
         if step.limit == "for the target":
             return supply_limit_a(self.design, positive_v, negative_v, share=1.0)
-        return quantities.parse(step.limit or "", "A")
+        limit_a = quantities.parse(step.limit or "", "A")
+        most_a = 2.0 * supply_limit_a(self.design, full.positive_v, full.negative_v, share=1.0)
+        if limit_a > most_a:
+            most = quantities.show(most_a, "A", 3)
+            raise self._refuse(step, f"sets a limit of {step.limit}", f"{most} or less, twice what the target needs")
+        return limit_a
 
     def _target_limits(self, share: float, tolerance: float | None) -> Limits:
         nominal_v = share * target_drop_v(self.design)

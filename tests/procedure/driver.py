@@ -95,7 +95,7 @@ name = "rails"
 kind = "measure"
 title = "Rail to rail"
 points = ["ohm.rails"]
-limits = { low = "100 ohm" }
+limits = "the model"
 [[section.step]]
 name = "remark"
 kind = "text"

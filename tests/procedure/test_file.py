@@ -23,6 +23,10 @@ def test_the_shipped_procedure_is_good() -> None:
     assert len(procedure.head.cautions) >= 4
 
 
+MODEL = 'limits = "the model"'
+OHMS = f'points = ["ohm.rails"]\n{MODEL}'
+
+
 def changed(old: str, new: str) -> str:
     assert SMALL.count(old) >= 1
     return SMALL.replace(old, new, 1)
@@ -58,8 +62,8 @@ CASES = [
     (changed('limit = "50 mA"', 'limit = "50 mV"'), "section limit, step check, limit", "50 mV"),
     (changed('limit = "50 mA"', 'limit = "0 A"'), "section limit, step check, limit", "more than 0 A"),
     (changed('rails = "lowest"', 'rails = "low"'), "section power, step on, rails", "low"),
-    (changed('limits = { low = "100 ohm" }', 'limits = "what I like"'), "step 'rails' limits", "what I like"),
-    (changed('limits = { low = "100 ohm" }', 'limits = { least = "1 ohm" }'), "step 'rails' limits", ""),
+    (changed(OHMS, f'{OHMS[: -len(MODEL)]}limits = "what I like"'), "step 'rails' limits", "what I like"),
+    (changed(OHMS, OHMS[: -len(MODEL)] + 'limits = { least = "1 ohm" }'), "step 'rails' limits", ""),
     (changed('title = "Rail to rail"', 'title = "t"\nsamples = 0'), "step 'rails' samples", "found 0"),
 ]
 

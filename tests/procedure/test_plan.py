@@ -31,11 +31,18 @@ title = "t"
 name = "off"
 kind = "off"
 title = "t"
+[[section.step]]
+name = "low"
+kind = "measure"
+title = "t"
+points = ["rail+", "rail-"]
+limits = { low = "-1 V", high = "1 V" }
 """
 CHECKS = """
 [[section]]
 name = "checks"
 title = "t"
+resume = true
 [[section.step]]
 name = "least"
 kind = "tell"
@@ -220,7 +227,8 @@ def test_two_pairs_have_two_readings() -> None:
 def test_the_arm_is_the_trimmers(arm: str, expected: str) -> None:
     design = changed(BREADBOARD, ('arm = "lower"', f'arm = "{arm}"'))
     step = 'name = "m"\nkind = "measure"\ntitle = "t"\npoints = ["ohm.spreader.ARM"]\nlimits = "the model"'
-    plan = plan_of(step, design=design)
+    least = 'name = "least"\nkind = "tell"\ntitle = "t"\ndo = "d"\nact = "trimmer to least"'
+    plan = plan_of(least, step, design=design)
     assert points(plan, "s.m") == [expected]
     (item,) = [one for one in plan.items if one.trimmer_end]
     assert not item.may_go_on
@@ -238,7 +246,8 @@ def test_a_rule_that_the_design_cannot_have_is_left_out() -> None:
 @pytest.mark.parametrize("point", ["ohm.spreader.ARM", *sorted(NEVER_PASSED_OVER - {"offset before load"})])
 def test_a_file_cannot_allow_what_nobody_passes_over(point: str) -> None:
     step = f'name = "m"\nkind = "measure"\ntitle = "t"\npoints = ["{point}"]\nlimits = "the model"\noverride = true'
-    (item,) = [one for one in plan_of(step).items if one.kind == "measure"]
+    least = 'name = "least"\nkind = "tell"\ntitle = "t"\ndo = "d"\nact = "trimmer to least"'
+    (item,) = [one for one in own(plan_of(least, step)) if one.kind == "measure"]
     assert not item.may_go_on
 
 
@@ -260,10 +269,12 @@ RULE = 'name = "r"\nkind = "rule"\ntitle = "t"\nrule = "divider stiffness"\n'
         ((f'{MEASURE}points = ["output"]\nlimits = "the model"',), "output against the model while the supply is off"),
         ((POWER, f'{MEASURE}points = ["ohm.rails"]\nlimits = "the model"'), "ohm.rails while the supply is on"),
         ((TRIM,), "trims while the supply is off"),
-        ((f'{MEASURE}points = ["ohm.rails"]\nlimits = {{ low = "1 V" }}',), "ohm.rails"),
-        ((f'{MEASURE}points = ["ohm.rails"]\nlimits = {{ low = "2 ohm", high = "1 ohm" }}',), "upside down"),
+        ((f'{MEASURE}points = ["ohm.rails"]\nlimits = {{ low = "1 ohm" }}',), "limits of its own"),
+        ((f'{MEASURE}points = ["ohm.output"]\nlimits = {{ low = "2 ohm", high = "1 ohm" }}',), "upside down"),
         ((POWER.replace('"full"', '"36 V"'),), "sets the rails to 36 V"),
         ((f'{RULE}number = "many"',), "has the number 'many'"),
+        ((POWER.replace("20 mA", "5 A"),), "twice what the target needs"),
+        ((POWER, f'{RULE}number = "1 V"'.replace("divider stiffness", "offset before load")), "an offset of 1 V"),
         ((f'{RULE}number = "0"',), "has the number '0'"),
         ((f'{RULE}number = "-1 %"',), "has the number '-1 %'"),
         ((f'{RULE}number = "nan"',), "has the number 'nan'"),

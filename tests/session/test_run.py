@@ -482,7 +482,7 @@ def by_hand(run: Run, typed: dict[str, list[str]]) -> None:
             else:
                 text = f"{item.positive_v} V 12 mA {item.negative_v} V 12 mA"
         if text is None:
-            text = {"ohm.rails": "1 Mohm", "ohm.spreader.lower": "0.5 ohm"}.get(
+            text = {"ohm.rails": "0.5 ohm", "ohm.spreader.lower": "0.5 ohm"}.get(
                 question.point, "12 mA" if "current" in question.point else "0 V"
             )
         return Reply(choice="done", text=text)
@@ -507,7 +507,7 @@ def test_a_walk_by_hand() -> None:
 
 def test_a_wrong_entry_is_asked_for_again() -> None:
     run = Run(manual=True, opened=replace(OPENED, supply="manual", meter="manual"))
-    by_hand(run, {"cold.rails.ohm.rails": ["many", "5 V", "1 Mohm"], "power.full": ["10 V", "10 V 12 mA -10 V 12 mA"]})
+    by_hand(run, {"cold.rails.ohm.rails": ["many", "5 V", "0.5 ohm"], "power.full": ["10 V", "10 V 12 mA -10 V 12 mA"]})
     assert run.go().exit_status == 0
     assert len(run.front.refused) == 3
     assert "many" in run.front.refused[0]
