@@ -57,6 +57,11 @@ class JournalThread:
         """Keep an event of the keeper's if a journal is open, and push it in any case; `off` numbers an "off"."""
         self._queue.put(lambda: self._keep_own(name, payload, off))
 
+    @property
+    def keeps(self) -> bool:
+        """Whether a journal is open."""
+        return self._writer is not None and not self._closed
+
     def finish(self, wait_s: float) -> bool:
         """Write what waits and close; return whether that was done within `wait_s`."""
         self._queue.put(None)

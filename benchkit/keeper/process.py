@@ -373,6 +373,8 @@ class Keeper:
         elif ready is not None:
             payload |= _outcome(ready)
         self._expected_on = False
+        if not self._journal.keeps:
+            self._known_offs = self._offs  # there is no record in which anybody could have missed it
         self._journal.keep_own("output off", payload, self._offs)
         requests, self._off_requests = self._off_requests, []
         for request in requests:

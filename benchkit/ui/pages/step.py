@@ -70,4 +70,4 @@ class DecidePage(Page):
     def say(self, view: View) -> None:
         """Show the walk."""
         super().say(view)
-        self._outcome.say(view.results)
+        self._outcome.say(view.results, heading="this reading")

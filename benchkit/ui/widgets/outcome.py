@@ -81,7 +81,7 @@ class Outcome(Vertical):
         yield self._why
         yield self._earlier
 
-    def say(self, results: tuple[ResultView, ...], *, heading: str = "last reading") -> None:
+    def say(self, results: tuple[ResultView, ...], *, heading: str = "before this") -> None:
         """Show the newest of `results`, and the few before it."""
         self.display = bool(results)
         if not results:
@@ -91,6 +91,7 @@ class Outcome(Vertical):
         row.add_column(ratio=1)
         row.add_column(justify="right", no_wrap=True, overflow="crop")
         words = Text(no_wrap=True, overflow="crop")
+        words.append(f" {heading}: ", style=QUIET)
         words.append(safe(result.value_text), style=f"bold {STRONG}")
         words.append(f"  {safe(result.title)}", style=INK)
         row.add_row(words, verdict_strip(result.verdict))
