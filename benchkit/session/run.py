@@ -67,6 +67,7 @@ from benchkit.stage.design import Design
 
 HEARTBEAT_S = 0.2
 
+FIRST_LOOK_S = 0.2
 LOOK_S = 1.0
 """How often the supply is looked at while a question stands (s)."""
 
@@ -236,7 +237,7 @@ class Session:
                 waiting = {woken} if running is None else {woken, running}
                 await asyncio.wait(waiting, return_when=asyncio.FIRST_COMPLETED)
                 woken.cancel()
-                before = (self.state.phase, self.state.index)
+                before, heard = (self.state.phase, self.state.index), self.state.supply
                 fresh: tuple[Action, ...] = ()
                 if self._pushed:
                     self._woken.clear()
@@ -255,7 +256,8 @@ class Session:
                 if fresh or not self._stands(before):
                     await _lapse(running)
                     running = None
-                    self.moment = Moment(message=self.moment.message)
+                    newest = self.moment.supply if self.state.supply is heard else None
+                    self.moment = Moment(message=self.moment.message, supply=newest)
                     action = fresh[0] if fresh else None
                 self.show()
         finally:
@@ -422,10 +424,12 @@ class Session:
         """Put a question, and keep looking at the supply while the person thinks."""
         asking = asyncio.ensure_future(self.front.ask(question, refused))
         try:
+            look_s = FIRST_LOOK_S
             while True:
-                done, _ = await asyncio.wait({asking}, timeout=LOOK_S)
+                done, _ = await asyncio.wait({asking}, timeout=look_s)
                 if done:
                     return asking.result()
+                look_s = LOOK_S
                 if self.state.energised == "on":
                     await self.sample()
         finally:
