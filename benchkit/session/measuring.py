@@ -18,6 +18,7 @@ from benchkit.procedure.actions import Choice, Question, Read, Trim
 from benchkit.procedure.questions import END, STOP
 from benchkit.quantities import Overload
 from benchkit.session.front import LiveView
+from benchkit.session.job import Stopped
 
 if TYPE_CHECKING:
     from benchkit.session.run import Session
@@ -166,8 +167,6 @@ async def trim(session: Session, action: Trim) -> Event:
                 case "end":
                     return TrimEnded(item=action.item, problem=reply.text.strip() or "The screw is at its end.")
                 case "make safe":
-                    from benchkit.session.run import Stopped
-
                     raise Stopped(f"the operator chose it at: {action.question.title}")
                 case "turn" if session.hands.simulated:
                     await session.hands.turn(reply.turns)

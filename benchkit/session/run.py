@@ -19,8 +19,7 @@ import contextlib
 from collections import deque
 from collections.abc import Callable
 from concurrent.futures import Future
-from dataclasses import dataclass, replace
-from pathlib import Path
+from dataclasses import replace
 from typing import Any
 
 from benchkit.errors import BenchkitError, EntryError, IllegalEvent, InstrumentError
@@ -39,7 +38,6 @@ from benchkit.events import (
 )
 from benchkit.keeper.client import KeeperClient
 from benchkit.keeper.protocol import KeeperDied, Push
-from benchkit.measure.accuracy import Accuracy
 from benchkit.procedure.actions import (
     Action,
     Ask,
@@ -54,16 +52,14 @@ from benchkit.procedure.actions import (
     Wait,
     Write,
 )
-from benchkit.procedure.file import Procedure
 from benchkit.procedure.state import Phase, State
-from benchkit.procedure.walk import Walk
 from benchkit.session import measuring, powering, predictions
 from benchkit.session.clock import Clock
 from benchkit.session.front import Front, Reply
 from benchkit.session.hands import Hands
+from benchkit.session.job import Job, Stopped, figures_of, refusal
 from benchkit.session.threads import in_thread
 from benchkit.session.views import Headings, Moment, Painter
-from benchkit.stage.design import Design
 
 HEARTBEAT_S = 0.2
 
@@ -73,56 +69,6 @@ LOOK_S = 1.0
 
 OFF_S = 6.0
 """How long "off" may take altogether before the words are that nothing is known (s)."""
-
-
-@dataclass(kw_only=True)
-class Job:
-    """What a walk needs, put together once.
-
-    Parameters
-    ----------
-    design, procedure : Design, Procedure
-    walk : Walk
-    record : Path
-        The journal's file.
-    setup : dict
-        Addresses and profiles for the keeper; an entry is None where a person reads or switches.
-    accuracy : Accuracy
-        Of the meter.
-    supply_accuracy : Accuracy
-        Of the supply's own current readings.
-    units : int or None
-        Units drawn for the limits.
-    seed : int
-    """
-
-    design: Design
-    procedure: Procedure
-    walk: Walk
-    record: Path
-    setup: dict[str, Any]
-    accuracy: Accuracy
-    supply_accuracy: Accuracy
-    units: int | None = None
-    seed: int = 0
-
-    @property
-    def manual_meter(self) -> bool:
-        """A person reads the meter."""
-        return self.setup.get("meter") is None
-
-    @property
-    def manual_supply(self) -> bool:
-        """A person sets the supply."""
-        return self.setup.get("supply") is None
-
-
-class Stopped(Exception):  # noqa: N818 (no error: the person chose it)
-    """The operator chose to make safe and stop; turned into an event where it is caught."""
-
-    def __init__(self, reason: str) -> None:
-        self.reason = reason
-        super().__init__(reason)
 
 
 class Session:
@@ -416,7 +362,7 @@ class Session:
         self.busy("")
         while True:
             reply = await self._asked(question, refused)
-            refused = _refusal(question, reply)
+            refused = refusal(question, reply)
             if not refused:
                 return reply
 
@@ -490,7 +436,7 @@ class Session:
         if isinstance(action.event, Closed) and self.hands.simulated and not self._truth_noted:
             self._truth_noted = True
             truth = await self.hands.truth()
-            figures = _figures(truth)
+            figures = figures_of(truth)
             return Noted(text="The simulated unit at the end of the walk.", figures=figures)
         return action.event
 
@@ -521,20 +467,6 @@ class _Asked:
         self.reason = reason
 
 
-def _figures(truth: dict[str, Any]) -> dict[str, float]:
-    """Keep the plain numbers of a rehearsal's truth; a pair of rails becomes two."""
-    figures: dict[str, float] = {}
-    for key, value in truth.items():
-        if isinstance(value, bool):
-            continue
-        if isinstance(value, (int, float)):
-            figures[key] = float(value)
-        elif isinstance(value, (list, tuple)) and len(value) == 2 and key.endswith("_v"):
-            stem = key.removesuffix("_v")
-            figures[f"{stem}_positive_v"], figures[f"{stem}_negative_v"] = float(value[0]), float(value[1])
-    return figures
-
-
 async def _lapse(task: asyncio.Task[Event | None] | None) -> None:
     """Let an action go that nobody waits for any more, whatever came or would have come of it."""
     if task is None:
@@ -543,15 +475,3 @@ async def _lapse(task: asyncio.Task[Event | None] | None) -> None:
         task.cancel()
     with contextlib.suppress(asyncio.CancelledError, Stopped, BenchkitError):
         await task
-
-
-def _refusal(question: Question, reply: Reply) -> str:
-    choices = {choice.value: choice for choice in question.choices}
-    chosen = choices.get(reply.choice)
-    if chosen is None:
-        return f"{reply.choice!r} is no answer here. Answer {' or '.join(choices)}."
-    if chosen.wants_reason and not reply.text.strip():
-        return "A reason in words is needed to go on."
-    if question.kind == "hold" and reply.choice == "yes" and reply.text.strip().lower() != "yes":
-        return "This is a hold point: type the word yes."
-    return ""

@@ -26,7 +26,8 @@ from benchkit.record.names import free_path
 from benchkit.session.clock import Clock
 from benchkit.session.front import Front
 from benchkit.session.hands import Hands
-from benchkit.session.run import Job, Session
+from benchkit.session.job import Job
+from benchkit.session.run import Session
 from benchkit.session.threads import in_thread
 from benchkit.stage.design import Design, parse_design
 

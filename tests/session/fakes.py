@@ -20,7 +20,8 @@ from benchkit.session import predictions
 from benchkit.session.clock import SimulatedClock
 from benchkit.session.front import Reply, View
 from benchkit.session.hands import Hands
-from benchkit.session.run import Job, Session
+from benchkit.session.job import Job
+from benchkit.session.run import Session
 from benchkit.stage.design import Design
 from tests.procedure.driver import OPENED, SMALL, judged, limits_of, small
 from tests.stage.designs import breadboard
