@@ -240,10 +240,6 @@ class Conversation:
         else:
             self._send(message, hurry=True)
 
-    def mark_dirty(self) -> None:
-        """Say that an answer may be on its way."""
-        self._dirty = True
-
     def close(self) -> None:
         """Close the link; the next question opens a new one."""
         if self._transport is not None:
