@@ -31,6 +31,8 @@ class Scale:
         if not math.isfinite(value):
             return 0 if value == -math.inf else self.width - 1
         share = (value - self.start) / (self.end - self.start)
+        if not math.isfinite(share * self.width):  # far beyond an end of a very narrow scale
+            return 0 if value < self.start else self.width - 1
         return min(self.width - 1, max(0, math.floor(share * (self.width - 1) + 0.5)))
 
     def beyond(self, value: float) -> int:

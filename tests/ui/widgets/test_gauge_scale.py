@@ -1,6 +1,6 @@
 from __future__ import annotations
 
-from hypothesis import assume, given
+from hypothesis import assume, example, given
 from hypothesis import strategies as st
 
 from benchkit.ui.look import SAFE
@@ -10,6 +10,7 @@ NUMBERS = st.floats(-1e6, 1e6, allow_nan=False)
 WIDTHS = st.integers(20, 200)
 
 
+@example(width=20, value=0.0, low=0.0, high=1.1125369292536007e-308, u=1.0)
 @given(WIDTHS, NUMBERS, NUMBERS, NUMBERS, st.floats(0, 1e5))
 def test_rows_are_as_wide_as_asked_and_drawable(width: int, value: float, low: float, high: float, u: float) -> None:
     assume(low < high)
