@@ -12,7 +12,7 @@ The recipe, in the order in which a unit meets it
 5. Then with a conductance from every node: from zero volts, 0.1 S, a decade less each time, a third of that step after
    a failure, and a last solve without. (What step 4 can't begin on, it begins on so.)
 6. Then by pseudo-transient continuation: 0.01 S from every node to its last accepted voltage, a quarter of that after a
-   success, four times that after a failure, and a last solve without.
+   success, four times that after a failure, a dozen failures at most, and a last solve without.
 
 A solution counts only when every law was linearised where it is evaluated, and each node's currents add up to less than
 1e-7 of the sum of their magnitudes + 10 pA. Units are done one by one; those that are done leave the batch. Each
@@ -37,7 +37,7 @@ LINEAR_TOLERANCE = 1e-9
 CURRENT_TOLERANCE = 1e-7
 CURRENT_FLOOR_A = 10e-12
 CONDITION_TOLERANCE_V = 1e-9
-DENSE_UP_TO = 12
+DENSE_UP_TO = 40
 """Batches of so few units are solved densely: the interpreter's overhead outweighs the elimination's economy."""
 EXACT_SHARE = 1e-3
 """A unit that passes the test this many times better is left as it is; another gets one more step."""
@@ -50,6 +50,7 @@ _SOFTEST_EXPONENT = 6.0
 _INNER_ITERATIONS = 25
 _WARM_ITERATIONS = 15
 _MOST_SHUNT_S = 1e3
+_MOST_FAILURES = 12
 _FINAL_STEP_V = 1e-3
 
 Iterations = NDArray[np.int64]
@@ -252,6 +253,7 @@ def solve_by_pseudo_transient(batch: Batch, solver: LinearSolver) -> Outcome:
     plan, units = batch.plan, batch.units
     total = _nothing(plan.size, units)
     shunt = np.full(units, 0.01)
+    failures = np.zeros(units, np.int64)
     live: Index = np.arange(units)
     for _ in range(_MOST_ROUNDS):
         if not len(live):
@@ -267,7 +269,8 @@ def solve_by_pseudo_transient(batch: Batch, solver: LinearSolver) -> Outcome:
         total.done[good] = last[outcome.done]
         shunt[good] /= 4.0
         shunt[failed] *= 4.0
-        live = live[~total.done[live] & (shunt[live] < _MOST_SHUNT_S)]
+        failures[failed] += 1
+        live = live[~total.done[live] & (shunt[live] < _MOST_SHUNT_S) & (failures[live] < _MOST_FAILURES)]
     return total
 
 
@@ -284,17 +287,18 @@ def _keep(total: Outcome, where: Index, outcome: Outcome, which: Mask) -> None:
 
 
 def first_attempts(
-    batch: Batch, solver: LinearSolver, start: tuple[Array, Arguments | None] | None, cold: ColdStart
+    batch: Batch, solver: LinearSolver, start: tuple[Array, Arguments | None] | None, cold: ColdStart | None
 ) -> Outcome:
-    """Newton's method from a start, if there is one, and then from a cold start.
+    """Newton's method from a start, if there is one, and then from a cold start, if there is one.
 
     ``start`` and ``cold`` (of a batch) are x of shape (size, units) and the first arguments.
     """
     with np.errstate(all="ignore"):
         if start is None:
-            return iterate(batch, solver, *cold(batch))
+            return iterate(batch, solver, *cold(batch)) if cold else _nothing(batch.plan.size, batch.units)
         total = iterate(batch, solver, *start, most=_WARM_ITERATIONS)
-        _retry(batch, total, lambda part: iterate(part, solver, *cold(part)))
+        if cold:
+            _retry(batch, total, lambda part: iterate(part, solver, *cold(part)))
     return total
 
 

@@ -8,6 +8,7 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
+from numpy.typing import NDArray
 
 from benchkit.circuit import devices
 from benchkit.circuit.devices import Array, Mask
@@ -85,6 +86,44 @@ class Solution:
         self.converged = converged
         self.iterations = iterations
         self.residual_a = residual_a
+
+    def take(self, index: NDArray[np.intp]) -> Solution:
+        """Return some of the units."""
+        values = {key: value if value.size == 1 else value[index] for key, value in self.values.items()}
+        return Solution(
+            self.netlist, self.plan, values, self.x[:, index], self.converged[index], self.iterations[index],
+            self.residual_a[index],
+        )  # fmt: skip
+
+    def joined(self, other: Solution) -> Solution:
+        """Return the units of this solution and then those of another one of the same circuit."""
+        values = {}
+        for key, value in self.values.items():
+            theirs = other.values[key]
+            if value.size == 1 and theirs.size == 1 and value[0] == theirs[0]:
+                values[key] = value
+            else:
+                values[key] = np.concatenate([np.broadcast_to(value, self.units), np.broadcast_to(theirs, other.units)])
+        return Solution(
+            self.netlist, self.plan, values, np.concatenate([self.x, other.x], axis=1),
+            np.concatenate([self.converged, other.converged]), np.concatenate([self.iterations, other.iterations]),
+            np.concatenate([self.residual_a, other.residual_a]),
+        )  # fmt: skip
+
+    def put(self, where: NDArray[np.intp], other: Solution, which: NDArray[np.intp]) -> None:
+        """Take units over from another solution of the same circuit, in place."""
+        for key, value in other.values.items():
+            mine = self.values[key]
+            if value.size > 1 or mine.size > 1:
+                if mine.size == 1:
+                    mine = np.repeat(mine, self.units)
+                self.values[key] = mine = mine.copy() if not mine.flags.writeable else mine
+                mine[where] = value[which] if value.size > 1 else value[0]
+        for own, theirs in (
+            (self.converged, other.converged), (self.iterations, other.iterations), (self.residual_a, other.residual_a),
+        ):  # fmt: skip
+            own[where] = theirs[which]
+        self.x[:, where] = other.x[:, which]
 
     def voltage(self, node: str) -> Array:
         """Voltage [V] of a node to the reference, shape (units,)."""

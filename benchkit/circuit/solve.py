@@ -14,7 +14,7 @@ from __future__ import annotations
 import difflib
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
-from typing import Any
+from typing import Any, Literal
 
 import numpy as np
 from numpy.typing import NDArray
@@ -34,7 +34,7 @@ from benchkit.circuit.netlist import (
     Transistor,
     Unknown,
 )
-from benchkit.circuit.newton import Iterations, LinearSolver, first_attempts, rescue
+from benchkit.circuit.newton import Iterations, LinearSolver, first_attempts, iterate, rescue
 from benchkit.circuit.plan import Plan, Signature
 from benchkit.circuit.solution import Operating, Solution
 from benchkit.errors import ModelError
@@ -43,9 +43,16 @@ __all__ = ["Compiled", "Operating", "Solution", "Value", "compile_netlist"]
 
 Value = float | int | Sequence[float] | NDArray[Any]
 
+Effort = Literal["start", "borrow", "full"]
+
 CHUNK_UNITS = 2000
 """Units solved together: enough to outweigh the interpreter's overhead, few enough to stay in the cache."""
 _PILOT_FROM = 32
+_LENDERS = 10
+_NEIGHBOURS = 2
+_TURNS = 4
+_BORROWERS = 100
+_LENT_ITERATIONS = 25
 _START_VBE_V = 0.6
 _START_VBC_V = -1.0
 
@@ -92,6 +99,7 @@ class Compiled:
         units: int = 1,
         start: Mapping[str, Value] | Solution | None = None,
         initial: Mapping[str, Value] | None = None,
+        effort: Effort = "full",
     ) -> Solution:
         """Find every unit's operating point.
 
@@ -107,6 +115,9 @@ class Compiled:
         initial : mapping, optional
             Rest voltages [V] of nodes for a cold start; without, supply terminals stand at their set voltage and
             others at 0 V.
+        effort : "start", "borrow" or "full"
+            What is done for units that are hard: Newton's method from their start and no more; from their start, from
+            rest and from other units' solutions; or the whole recipe, which can be slow.
 
         Returns
         -------
@@ -131,10 +142,14 @@ class Compiled:
         for low in range(0, units, CHUNK_UNITS):
             part = slice(low, min(low + CHUNK_UNITS, units))
             batch, cold = _batch(plan, given, part, part.stop - low), _Cold(plan, _parts(rest, part))
-            outcome = first_attempts(batch, solver, None if guess is None else guess.of(part, batch), cold)
+            outcome = first_attempts(
+                batch, solver, None if guess is None else guess.of(part, batch), None if effort == "start" else cold
+            )
             x[:, part], converged[part] = outcome.x, outcome.done
             iterations[part], residual[part] = outcome.iterations, outcome.residual_a
-        failed = np.flatnonzero(~converged)
+        if effort != "start":
+            self._borrow(plan, given, solver, x, converged, iterations, residual)
+        failed = np.flatnonzero(~converged & (effort == "full"))
         for low in range(0, len(failed), CHUNK_UNITS):
             some = failed[low : low + CHUNK_UNITS]
             outcome = rescue(_batch(plan, given, some, len(some)), solver, _Cold(plan, _parts(rest, some)))
@@ -142,6 +157,43 @@ class Compiled:
             iterations[some] += outcome.iterations
             residual[some] = outcome.residual_a
         return Solution(self.netlist, plan, given, x, converged, iterations, residual)
+
+    def _borrow(
+        self, plan: Plan, given: Mapping[str, Array], solver: LinearSolver, x: Array, converged: Mask,
+        iterations: Iterations, residual: Array,
+    ) -> None:  # fmt: skip
+        """Let units that failed start from the solutions of others, many of them at once; what succeeds is kept.
+
+        Units with different faults stand in different states, and one of those is often near; so may a neighbour be, when
+        units of a kind stand beside each other.
+        """
+        solved, failed = np.flatnonzero(converged), np.flatnonzero(~converged)
+        if not len(solved):
+            return
+        step = -(-len(solved) // _LENDERS)
+        for turn in range(_TURNS):
+            # each turn, the nearest units of the rest and some from everywhere
+            everywhere = solved[turn * step // _TURNS :: step]
+            for low in range(0, len(failed), _BORROWERS):
+                some = failed[low : low + _BORROWERS]
+                near = np.array([
+                    solved[np.argsort(np.abs(solved - unit), kind="stable")[turn::_TURNS][:_NEIGHBOURS]] for unit in some
+                ])  # fmt: skip
+                lenders = np.concatenate([np.tile(everywhere, (len(some), 1)), near], axis=1)
+                many = lenders.shape[1]
+                batch = _batch(plan, given, np.repeat(some, many), len(some) * many)
+                with np.errstate(all="ignore"):
+                    outcome = iterate(batch, solver, x[:, lenders.ravel()], most=_LENT_ITERATIONS)
+                iterations[some] += outcome.iterations.reshape(len(some), many).max(axis=1)
+                found = outcome.done.reshape(len(some), many)
+                first = np.arange(len(some)) * many + found.argmax(axis=1)
+                good = found.any(axis=1)
+                x[:, some[good]] = outcome.x[:, first[good]]
+                residual[some[good]] = outcome.residual_a[first[good]]
+                converged[some[good]] = True
+            failed = failed[~converged[failed]]
+            if not len(failed):
+                return
 
     def _check(self, values: Mapping[str, Value], units: int) -> dict[str, Array]:
         if units < 1:

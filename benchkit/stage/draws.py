@@ -73,7 +73,7 @@ def nominal(design: Design) -> Parameters:
     -------
     dict of str to arrays of shape ()
     """
-    return {key: np.asarray(value, dtype=np.float64) for key, value, _ in _entries(design)}
+    return {key: np.asarray(value, dtype=np.float64) for key, value, _ in spreads(design)}
 
 
 def draw(design: Design, units: int, rng: np.random.Generator) -> Parameters:
@@ -92,7 +92,7 @@ def draw(design: Design, units: int, rng: np.random.Generator) -> Parameters:
         Shape () for what has no tolerance.
     """
     drawn: Parameters = {}
-    for key, value, spread in _entries(design):
+    for key, value, spread in spreads(design):
         kind, size = spread
         if kind == "uniform":
             drawn[key] = value * (1.0 + size * rng.uniform(-1.0, 1.0, units))
@@ -110,15 +110,23 @@ def take(parameters: Parameters, which: NDArray[np.bool_] | NDArray[np.intp]) ->
     return {key: value if value.ndim == 0 else value[which] for key, value in parameters.items()}
 
 
-_Entry = tuple[str, float, tuple[str, float]]
+Entry = tuple[str, float, tuple[str, float]]
 _EXACT = ("exact", 0.0)
 
 
-def _entries(design: Design) -> Iterator[_Entry]:
+def spreads(design: Design) -> Iterator[Entry]:
+    """Every parameter with its marked value and how it varies, in the fixed order of the draws.
+
+    Yields
+    ------
+    key, value, (kind, size)
+        ``kind`` is "exact", "uniform" (value*(1 + size*u), u from -1 to 1), "log-normal" (95 % between value/(1 + size)
+        and value*(1 + size)) or "either way" (value + size*u).
+    """
     for part in parts_of(design):
         yield from _part(design, part)
     rails = design.rails
-    for sign in ("positive", "negative"):
+    for sign in ("positive",) if design.single_supply else ("positive", "negative"):
         if rails.bleed is not None:
             yield f"bleed.{sign}", rails.bleed.value, ("uniform", rails.bleed.fraction)
         other = getattr(rails, f"other_{sign}")
@@ -128,7 +136,7 @@ def _entries(design: Design) -> Iterator[_Entry]:
     yield "output.offset", 0.0, ("either way", design.output.offset_v)
 
 
-def _part(design: Design, part: Part) -> Iterator[_Entry]:
+def _part(design: Design, part: Part) -> Iterator[Entry]:
     tolerance = ("uniform", part.fraction) if part.fraction else _EXACT
     if part.kind == "resistor":
         yield part.name, part.nominal, tolerance

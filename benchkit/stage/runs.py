@@ -12,14 +12,15 @@ from functools import lru_cache
 import numpy as np
 from numpy.typing import NDArray
 
-from benchkit.circuit.solve import Compiled, Solution, compile_netlist
+from benchkit.circuit.solve import Compiled, Effort, Solution, compile_netlist
+from benchkit.stage.balance import settle
 from benchkit.stage.conditions import NO_LIMIT_A, Condition, TrimmerPosition
 from benchkit.stage.design import ZERO_CELSIUS_K, Design, target_drop_v
 from benchkit.stage.draws import Array, Parameters, take
 from benchkit.stage.faults import SERVO_OFF_A, Fault, apply
 from benchkit.stage.heat import Heat, heat
 from benchkit.stage.points import points_of, transistors_of
-from benchkit.stage.topologies import VOLTMETER_OHM, StageNetlist, Variant, build
+from benchkit.stage.topologies import VOLTMETER_OHM, StageNetlist, Variant, build, free_section, tied_divider
 
 Faults = Fault | Sequence[Fault | None] | None
 Mask = NDArray[np.bool_]
@@ -27,12 +28,8 @@ Index = NDArray[np.intp]
 Start = Solution | dict[str, Array] | None
 
 NO_METER_OHM = 1e15
-WARM_K = 1e-3
-"""Junctions that move by less than this (K) are at rest."""
 _ROUNDS_BETWEEN = 4
-_MOST_ROUNDS = 40
-_HOTTEST_C = 400.0
-_COLDEST_C = -60.0
+_SAME_TRAVEL = 1e-9
 
 
 @lru_cache(maxsize=256)
@@ -64,16 +61,23 @@ class Run:
         faults: Faults,
         units: int,
         rails_v: tuple[Array, Array] | None,
+        ambient_c: Array | None = None,
     ) -> None:
         self.design = design
         self.parameters = parameters
         self.condition = condition
         self.faults = faults
         self.units = units
-        self.ambient_c = design.thermal.ambient_c if condition.ambient_c is None else condition.ambient_c
+        self.ambient_c: Array | float
+        if ambient_c is not None:
+            self.ambient_c = ambient_c
+        else:
+            self.ambient_c = design.thermal.ambient_c if condition.ambient_c is None else condition.ambient_c
         self.positive_v = np.asarray(condition.positive_v if rails_v is None else rails_v[0], dtype=np.float64)
         self.negative_v = np.asarray(condition.negative_v if rails_v is None else rails_v[1], dtype=np.float64)
         self.transistors = transistors_of(design)
+        self.effort: Effort = "full"
+        """What the solver does for units that are hard."""
 
     def variant(self, find: bool = False, meters: bool = False) -> Variant:
         """Form of the netlist for this condition."""
@@ -95,7 +99,8 @@ class Run:
         if design.feed.lower.kind == "servo":
             values["feed.lower.rest_v"] = self.rest_v() + values["output.offset"]
             works_from_v = design.feed.works_from_v or 0.0
-            idle = np.minimum(self.positive_v, -self.negative_v) < works_from_v
+            lowest_v = self.positive_v if design.single_supply else np.minimum(self.positive_v, -self.negative_v)
+            idle = lowest_v < works_from_v
             most_a = values["feed.lower.max_a"]
             values["feed.lower.stuck.amps"] = np.where(idle, values["feed.lower.idle"] * most_a, 0.0)
             values["feed.lower.max_a"] = np.where(idle, SERVO_OFF_A, most_a)
@@ -111,7 +116,7 @@ class Run:
         return np.asarray(self.negative_v + rest.share * (self.positive_v - self.negative_v))
 
     def travel(self, found_ohm: Array) -> Array:
-        """Travel at which a trimmer in one arm has a resistance, outside 0..1 when it never has.
+        """Travel at which a trimmer in one arm (a tied divider works in the lower one) has a resistance, outside 0..1 when it never has.
 
         A negative resistance that leaves the arm positive asks for less than none. One that takes the whole arm below
         zero has passed through infinity: it asks for more than any.
@@ -120,8 +125,9 @@ class Run:
         assert trimmer is not None
         end_ohm = trimmer.end_resistance_ohm
         share = (found_ohm - end_ohm) / (self.parameters["spreader.trimmer.track"] - 2.0 * end_ohm)
-        share = np.where(found_ohm <= -self.parameters[f"spreader.{trimmer.arm}"], np.inf, share)
-        return np.asarray(1.0 - share if trimmer.arm == "lower" else share)
+        arm = "upper" if trimmer.arm == "upper" else "lower"
+        share = np.where(found_ohm <= -self.parameters[f"spreader.{arm}"], np.inf, share)
+        return np.asarray(share if trimmer.arm == "upper" else 1.0 - share)
 
     def divided(self, solution: Solution, found_ohm: Array, values: dict[str, Array]) -> Array:
         """Travel of a trimmer that divides, from a solution whose upper section was free.
@@ -150,15 +156,17 @@ class Run:
         if isinstance(start, Solution) and start.units == 1 and self.units > 1:
             first = self.lifted(start, np.zeros(self.units, dtype=np.intp))
         chosen = {key: value for key, value in values.items() if key in circuit.keys}
-        return circuit.solve(chosen, self.units, first, dict.fromkeys(inner, rest_v))
+        return circuit.solve(chosen, self.units, first, dict.fromkeys(inner, rest_v), effort=self.effort)
 
     def lifted(self, pilots: Solution, whose: Index) -> dict[str, Array]:
         """Start of every unit from one of some solved ones, moved to where its own output will be.
 
-        A servo holds each unit's output at its own offset, and has no slope to find the way from another one's.
+        A servo holds each unit's output at its own rest and offset, and has no slope to find the way from another one's.
         """
-        servo = self.design.feed.lower.kind == "servo"
-        offset_v = self.parameters["output.offset"] if servo else np.zeros(())
+        offset_v = np.zeros(())
+        if self.design.feed.lower.kind == "servo":
+            held_v = pilots.values["feed.lower.rest_v"]
+            offset_v = self.rest_v() + self.parameters["output.offset"] - (held_v[whose] if held_v.size > 1 else held_v)
         start: dict[str, Array] = {}
         for name, row in zip(pilots.plan.names, pilots.x, strict=True):
             held = name.startswith(("rail", "heatsink"))
@@ -184,21 +192,26 @@ class Run:
         drop_v = 2.0 * target_drop_v(self.design) * self.condition.target_share
         trimmer = self.design.spreader.trimmer
         assert trimmer is not None
-        between = trimmer.arm == "between"
-        section = "spreader.trimmer.upper" if between else "spreader.trimmer"
+        divides = trimmer.arm == "between" and not tied_divider(self.design)
+        section = free_section(self.design)
+        latest = np.full(self.units, 0.5)
 
         def once(run: Run, which: Index, at: dict[str, Array], previous: Start) -> tuple[Solution, Array]:
             values = run.values(at)
             values[f"{section}.volts"] = np.asarray(drop_v)
-            travel = np.full(run.units, 0.5)
-            for _ in range(_ROUNDS_BETWEEN if between else 1):
-                if between:
+            travel = latest[which]
+            for _ in range(_ROUNDS_BETWEEN if divides else 1):
+                before = travel
+                if trimmer.arm == "between":
                     set_trimmer(run.design, values, np.clip(travel, 0.0, 1.0))
-                    del values["spreader.trimmer.upper"]
+                    del values[section]
                 solution = previous = run.solve(values, previous, find=True)
                 with np.errstate(divide="ignore", invalid="ignore"):
                     found_ohm = 1.0 / solution.conductance(section)
-                    travel = run.divided(solution, found_ohm, values) if between else run.travel(found_ohm)
+                    travel = run.divided(solution, found_ohm, values) if divides else run.travel(found_ohm)
+                    if not (np.abs(travel - before) > _SAME_TRAVEL).any():
+                        break
+            latest[which] = np.where(np.isfinite(travel), travel, 0.5)
             return solution, travel
 
         return self._settle(once, temperature, start, warm)
@@ -210,10 +223,14 @@ class Run:
             faults = [faults[index] for index in which]
         rails = [v if v.size == 1 else v[which] for v in (self.positive_v, self.negative_v)]
         few = take(self.parameters, which)
-        return Run(self.design, few, self.condition, faults, len(which), (rails[0], rails[1]))
+        ambient_c = np.asarray(self.ambient_c)
+        own_c = ambient_c[which] if ambient_c.size > 1 else ambient_c
+        part = Run(self.design, few, self.condition, faults, len(which), (rails[0], rails[1]), own_c)
+        part.effort = self.effort
+        return part
 
     def _settle(self, once: _Once, temperature: dict[str, Array], start: Start, warm: bool) -> State:
-        """Solve, and with `warm` heat and solve again until the junctions are at rest.
+        """Solve, and with `warm` heat and solve again until the junctions are at rest (see `benchkit.stage.balance`).
 
         Units that are at rest leave; those that stay are solved on, and at the end all are solved once more.
         """
@@ -221,42 +238,24 @@ class Run:
         solution, travel = once(self, everyone, temperature, start)
         if not warm:
             return self._state(solution, temperature, solution.converged, travel)
-        temperature = {name: value.copy() for name, value in temperature.items()}
-        at_rest = np.zeros(self.units, np.bool_)
-        run, live, latest = self, everyone, solution
-        now = {name: value.copy() for name, value in temperature.items()}
+        names = list(temperature)
         best = dict(zip(solution.plan.names, solution.x.copy(), strict=True))
-        before: tuple[Array, Array] | None = None
-        slope = np.zeros(self.units)
-        for _ in range(_MOST_ROUNDS):
-            hot = run._heat(latest)
-            change = {name: hot.temperatures_c[name] - now[name] for name in now}
-            moved = np.max([np.abs(array) for array in change.values()], axis=0)
-            resting = moved < WARM_K
-            rise, rise_change = now["heatsink"].copy(), change["heatsink"]
-            if before is not None:
-                step = rise - before[0]
-                with np.errstate(divide="ignore", invalid="ignore"):
-                    found = np.clip(1.0 + (rise_change - before[1]) / step, -2.0, 0.95)
-                slope = np.where((np.abs(step) > 1e-6) & np.isfinite(found), found, slope)
-            before = (rise, rise_change)
-            gain = np.where(resting, 1.0, 1.0 / (1.0 - slope))
-            now = {name: np.clip(at + gain * change[name], _COLDEST_C, _HOTTEST_C) for name, at in now.items()}
-            for name, at in now.items():
-                temperature[name][live] = at
-            at_rest[live] = resting
-            keep = np.flatnonzero(~resting & latest.converged & (now["heatsink"] < _HOTTEST_C))
-            if not len(keep):
-                break
+        run, live, latest = self, everyone, solution
+
+        def following(which: Index, at: Array) -> tuple[Array, Mask]:
+            nonlocal run, live, latest
             next_start: Start = latest
-            if len(keep) < 0.7 * len(live):
-                live = live[keep]
-                next_start = {name: column[live] for name, column in best.items()}
-                run, now = self.subset(live), {name: value[keep] for name, value in now.items()}
-                before, slope = (before[0][keep], before[1][keep]), slope[keep]
-            latest, _ = once(run, live, now, next_start)
+            if len(which) < len(live):
+                live, run = which, self.subset(which)
+                next_start = {name: column[which] for name, column in best.items()}
+            latest, _ = once(run, which, dict(zip(names, at, strict=True)), next_start)
             for name, row in zip(latest.plan.names, latest.x, strict=True):
-                best[name][live] = np.where(latest.converged, row, best[name][live])
+                best[name][which] = np.where(latest.converged, row, best[name][which])
+            return _stacked(run._heat(latest), names), latest.converged
+
+        began = np.array([temperature[name] for name in names])
+        at, at_rest = settle(began, _stacked(self._heat(solution), names), solution.converged, following)
+        temperature = dict(zip(names, at, strict=True))
         solution, travel = once(self, everyone, temperature, best)
         return self._state(solution, temperature, solution.converged & at_rest, travel)
 
@@ -317,6 +316,11 @@ class Run:
             with np.errstate(divide="ignore", invalid="ignore"):
                 ratios[name] = np.where(good, reading / bare[name], 1.0)
         return ratios
+
+
+def _stacked(hot: Heat, names: Sequence[str]) -> Array:
+    """Temperatures as one array of shape (names, units)."""
+    return np.array([hot.temperatures_c[name] for name in names])
 
 
 _Once = Callable[[Run, Index, dict[str, Array], Start], tuple[Solution, Array]]

@@ -1,0 +1,153 @@
+"""Suspects: which single fault would explain the readings of a unit, how probable each is, and what to probe next.
+
+How it is done
+--------------
+1. Hypotheses: the healthy unit and every row of the fault table (`benchkit.stage.faults`), each with its prior.
+2. For each, a few units drawn once for the layout of the readings are solved (`Library`); every unit that is judged
+   starts from the one whose readings come nearest.
+3. Each hypothesis is fitted to the readings (`benchkit.stage.fitting`): its likeliest unit, and the evidence. The
+   values of all parts are open within their tolerances, and are the same under every condition.
+4. Posterior probability = prior * evidence, normalised over all hypotheses.
+
+Alike: two hypotheses between which readings like these don't decide. From the likeliest unit of each, readings with
+fresh noise are expected; the expected Bayes factor against the other one is below 3, both ways round.
+
+Unseen: faults that these readings could not have shown. A unit with this unit's values and the fault is expected to give
+readings whose Bayes factor against healthy is below 3.
+
+Probe next: of the readings that could still be taken, the ones with the largest expected information about which
+hypothesis holds (mutual information, in bits), from what each hypothesis's likeliest unit would read there and how
+uncertain that still is.
+"""
+
+from __future__ import annotations
+
+import time
+from collections.abc import Sequence
+from dataclasses import replace
+
+import numpy as np
+
+from benchkit.stage.conditions import Condition, Unpowered
+from benchkit.stage.design import Design
+from benchkit.stage.faults import HEALTHY, faults_of, prior_of
+from benchkit.stage.fitting import Data
+from benchkit.stage.hypotheses import Library, library
+from benchkit.stage.observations import Conditions, Observation
+from benchkit.stage.points import points_of
+from benchkit.stage.suspicion import Evidence, Probe, Suspect, Suspicion
+from benchkit.stage.telling import Report
+from benchkit.stage.unit_model import layout_of
+
+__all__ = [
+    "Evidence", "Observation", "Probe", "Suspect", "Suspicion", "default_candidates", "suspect", "suspect_many",
+]  # fmt: skip
+
+
+def suspect(
+    design: Design, observations: Sequence[Observation], *, candidates: Sequence[tuple[Conditions, str]] = ()
+) -> Suspicion:
+    """Say which faults would explain the readings of one unit; see `suspect_many`."""
+    return suspect_many(design, [observations], candidates=candidates)[0]
+
+
+def suspect_many(
+    design: Design,
+    sets: Sequence[Sequence[Observation]],
+    *,
+    candidates: Sequence[tuple[Conditions, str]] = (),
+) -> list[Suspicion]:
+    """Say for each of several units which faults would explain its readings.
+
+    Parameters
+    ----------
+    design : Design
+    sets : sequence of sequences of Observation
+        Readings of one unit each; of points that the model has an answer for. Units that were read at the same points
+        under the same conditions are worked out together.
+    candidates : sequence of (Conditions, str)
+        Readings that could still be taken, for `Suspicion.probe_next`. Without: the other points of the powered
+        conditions that were read under, and the unpowered points.
+
+    Returns
+    -------
+    list of Suspicion
+        In the order of ``sets``. A set without readings gives the priors.
+
+    Raises
+    ------
+    ModelError
+        When no hypothesis has a solution.
+    """
+    found: list[Suspicion | None] = [None] * len(sets)
+    groups: dict[tuple[tuple[Conditions, str], ...], list[int]] = {}
+    for number, observations in enumerate(sets):
+        keys = dict.fromkeys((one.conditions, one.point) for one in observations)
+        groups.setdefault(tuple(keys), []).append(number)
+    for readings, members in groups.items():
+        began = time.perf_counter()
+        wanted = tuple(candidates) or default_candidates(design, readings)
+        told = tuple(pair for pair in wanted if pair not in readings)
+        if not readings:
+            answers = [_priors_only(design)] * len(members)
+        else:
+            lib = library(design, layout_of(readings))
+            data = _data(lib, [sets[number] for number in members])
+            answers = Report(lib, data, told).suspicions()
+        each = (time.perf_counter() - began) / len(members)
+        for number, answer in zip(members, answers, strict=True):
+            found[number] = replace(answer, seconds=each)
+    return [one for one in found if one is not None]
+
+
+def _priors_only(design: Design) -> Suspicion:
+    faults = (HEALTHY, *faults_of(design))
+    odds = np.array([1.0, *(prior_of(design, fault) for fault in faults[1:])])
+    order = np.argsort(-odds, kind="stable")
+    suspects = tuple(Suspect(fault=faults[k], probability=float(odds[k] / odds.sum())) for k in order)
+    return Suspicion(suspects=suspects, probe_next=(), unseen=faults[1:], hypotheses=len(faults), unsolved=(), seconds=0)
+
+
+def default_candidates(
+    design: Design, readings: Sequence[tuple[Conditions, str]]
+) -> tuple[tuple[Conditions, str], ...]:
+    """Readings that could be taken without another set-up: other points of the conditions, and the unpowered ones."""
+    result: list[tuple[Conditions, str]] = []
+    points = points_of(design)
+    for conditions in dict.fromkeys(conditions for conditions, _ in readings):
+        first = conditions[0]
+        if isinstance(first, Condition):
+            drops = ("rail+.drop", "rail-.drop") if first.fuse_ohm is None else ()
+            result += [
+                (conditions, point.name)
+                for point in points
+                if point.powered and point.modelled and point.name not in (*drops, "heatsink")
+            ]
+    trimmers = [conditions[0].trimmer for conditions, _ in readings if isinstance(conditions[0], Unpowered)]
+    trimmer = trimmers[0] if trimmers else "unknown"
+    ambients = [conditions[0].ambient_c for conditions, _ in readings]
+    for point in points:
+        if not point.powered:
+            result.append(((Unpowered(point=point.name, trimmer=trimmer, ambient_c=ambients[0]),), point.name))
+    return tuple(result)
+
+
+def _data(lib: Library, sets: Sequence[Sequence[Observation]]) -> Data:
+    """Readings of several units, in the order of the library's layout; repeated ones are averaged."""
+    shape = (len(sets), len(lib.model.readings))
+    y, u = np.empty(shape), np.empty(shape)
+    column = {_key(*reading): number for number, reading in enumerate(lib.model.readings)}
+    for row, observations in enumerate(sets):
+        values: dict[int, list[Observation]] = {}
+        for one in observations:
+            values.setdefault(column[_key(one.conditions, one.point)], []).append(one)
+        for number, several in values.items():
+            read = [one.value for one in several]
+            y[row, number] = float(np.mean(read)) if np.isfinite(read).all() else read[-1]
+            u[row, number] = max(several[-1].standard_uncertainty, 1e-12)
+    return Data(y, u)
+
+
+def _key(conditions: Conditions, point: str) -> tuple[object, str]:
+    first = conditions[0]
+    return ((first.trimmer, first.ambient_c) if isinstance(first, Unpowered) else conditions, point)

@@ -1,0 +1,187 @@
+"""All readings of one unit in one model: several conditions, one set of unknown values.
+
+A *layout* says what was read: conditions (or pairs of conditions between which readings were taken), each with its
+points. `UnitModel` lays the readings of all of them side by side and answers for any hypothesis what they would be at z
+and how they move with z, so that a resistor measured cold bears on a drop measured under power.
+
+Coordinates beside those of parts and bench (`benchkit.stage.latent`):
+
+* where the trimmer stands, when it stands at the target: a healthy unit's travel there, widened, because a faulty unit
+  may have been brought to the target by another travel. An unknown position is a coordinate of the unit itself: it is
+  the same under every condition that calls it unknown.
+* the place between two conditions.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from benchkit.circuit.solution import Solution
+from benchkit.circuit.solve import Effort
+from benchkit.stage.conditions import Condition, Unpowered
+from benchkit.stage.design import Design
+from benchkit.stage.draws import Array
+from benchkit.stage.faults import Fault
+from benchkit.stage.latent import Coordinates
+from benchkit.stage.observations import Conditions
+from benchkit.stage.readouts import Index, Linear, Mask, Matrix, Powered, UnpoweredPoints
+
+Layout = tuple[tuple[Conditions, tuple[str, ...]], ...]
+POSITION = "spreader.trimmer.position"
+
+
+@dataclass
+class Joint:
+    """Readings of units under all conditions, side by side.
+
+    Attributes
+    ----------
+    f : array of shape (units, readings)
+    slope : array of shape (units, readings, coordinates)
+    good : array of bool of shape (units,)
+    solutions : tuple of Solution
+        One a solved condition.
+    """
+
+    f: Matrix
+    slope: Matrix
+    good: Mask
+    solutions: tuple[Solution, ...]
+
+    def take(self, index: Index) -> Joint:
+        """Return some of the units."""
+        units = len(self.good)
+        taken = []
+        for solution in self.solutions:
+            repeats = solution.units // units
+            taken.append(solution.take(np.concatenate([index + k * units for k in range(repeats)])))
+        return Joint(self.f[index], self.slope[index], self.good[index], tuple(taken))
+
+
+@dataclass(frozen=True)
+class _Block:
+    """Readings under the same conditions: one readout, or two and the place between them."""
+
+    readouts: tuple[Powered | UnpoweredPoints, ...]
+    place: str
+
+
+class UnitModel:
+    """Hypotheses about one design's units, for one layout of readings.
+
+    Attributes
+    ----------
+    coordinates : Coordinates
+    readings : tuple of (Conditions, str)
+        What each column of the readings is.
+    most : array of shape (readings,)
+        Readings above these show as an overload; infinite where there is no such end.
+    """
+
+    def __init__(self, design: Design, layout: Layout) -> None:
+        self.design = design
+        self.layout = layout
+        self.readings = tuple((conditions, point) for conditions, points in layout for point in points)
+        extra: list[str] = []
+        plan = []
+        for number, (conditions, _) in enumerate(layout):
+            travel = _travel_of(conditions, number)
+            if travel and travel != POSITION:
+                extra.append(travel)
+            ends = _ends(conditions)
+            place = f"place {number}" if len(ends) > 1 else ""
+            if place:
+                extra.append(place)
+            plan.append((ends, travel, place))
+        self.coordinates = Coordinates(design, tuple(extra))
+        self._blocks = []
+        most = []
+        for (ends, travel, place), (_, points) in zip(plan, layout, strict=True):
+            readouts: list[Powered | UnpoweredPoints] = []
+            for end in ends:
+                if isinstance(end, Condition):
+                    readouts.append(Powered(design, self.coordinates, end, points, travel))
+                else:
+                    trimmer = "unknown" if end.trimmer == "target" else end.trimmer
+                    readouts.append(
+                        UnpoweredPoints(design, self.coordinates, trimmer, end.ambient_c, points, travel)
+                    )
+            self._blocks.append(_Block(tuple(readouts), place))
+            first = readouts[0]
+            most.append(first.most if isinstance(first, UnpoweredPoints) else np.full(len(points), np.inf))
+        self.most = np.concatenate(most)
+
+    def at(
+        self, z: Array, faults: Sequence[Fault], start: Joint | None = None, effort: Effort = "borrow"
+    ) -> Joint:
+        """Readings of units at z, of shape (coordinates, units), each with its fault.
+
+        Parameters
+        ----------
+        start : Joint, optional
+            Earlier readings of the same units, to start from.
+        effort : "start", "borrow" or "full"
+            What the solver does for units that are hard.
+        """
+        f, slopes, solutions = [], [], []
+        good = np.ones(z.shape[1], np.bool_)
+        kept = iter(() if start is None else start.solutions)
+        for block in self._blocks:
+            ends: list[Linear] = []
+            for readout in block.readouts:
+                ends.append(readout.at(z, faults, next(kept, None), effort))
+                solutions.append(ends[-1].solution)
+                good &= ends[-1].good
+            if len(ends) == 1:
+                f.append(ends[0].f)
+                slopes.append(ends[0].slope)
+                continue
+            first, last = ends
+            share, by_z = self.coordinates.place_and_slope(z, block.place)
+            f.append(first.f + share[:, None] * (last.f - first.f))
+            slope = first.slope + share[:, None, None] * (last.slope - first.slope)
+            slope[:, :, self.coordinates.index[block.place]] += (last.f - first.f) * by_z[:, None]
+            slopes.append(slope)
+        return Joint(np.concatenate(f, axis=1), np.concatenate(slopes, axis=1), good, tuple(solutions))
+
+
+def layout_of(readings: Sequence[tuple[Conditions, str]]) -> Layout:
+    """Put readings into a layout: conditions in their first order; unpowered points of one trimmer position together."""
+    groups: dict[object, tuple[Conditions, list[str]]] = {}
+    for conditions, point in readings:
+        first = conditions[0]
+        key: object = conditions
+        if isinstance(first, Unpowered):
+            key = (first.trimmer, first.ambient_c)
+        points = groups.setdefault(key, (conditions, []))[1]
+        if point not in points:
+            points.append(point)
+    return tuple((conditions, tuple(points)) for conditions, points in groups.values())
+
+
+def _ends(conditions: Conditions) -> Conditions:
+    """First and last condition, as far as they differ in more than where a target lies within its tolerance."""
+    first, last = conditions[0], conditions[-1]
+    if isinstance(first, Condition) and isinstance(last, Condition):
+        if first == last:
+            return (first,)
+        if first.trimmer == last.trimmer == "target" and first.when == last.when:
+            return (conditions[len(conditions) // 2],)
+        return (first, last)
+    return (first,)
+
+
+def _travel_of(conditions: Conditions, number: int) -> str:
+    trimmer = conditions[0].trimmer
+    if isinstance(conditions[0], Unpowered) and trimmer == "target":
+        return POSITION
+    if trimmer == "unknown":
+        return POSITION
+    return f"travel {number}" if trimmer == "target" else ""
+
+
+Readings = NDArray[np.float64]
