@@ -50,15 +50,19 @@ class RuleFacts:
     limits : mapping of str to Limits
         The model's limits at this condition, by test point.
     figures : mapping of str to ModelFigure
-        Figures from the model for the rules that judge the design itself, by rule.
+        Figures from the model for the rules that judge the design itself, by rule; without one
+        "trimmer authority", "device dissipation" and "runaway margin" ask the model themselves.
     wiper_open : callable, optional
-        Gives the emitter drop (V) now and with the trimmer's wiper open, both of the same nominal unit.
+        Gives the emitter drop (V) now and with the trimmer's wiper open, both of the same nominal unit; without it the
+        rule asks the model at the target on full rails.
     positive_v, negative_v : float, optional
         Rails as set (V); the design's when left out.
     trimmer : str or float
         "least", "most", or a travel from 0 (least bias) to 1 where the trimmer's position is known.
     driven : mapping of str to Reading
         Readings with the stage driven, by test point.
+    seen : mapping of str to bool
+        What a person looked for and saw or did not see, by rule.
     coverage : float
         Coverage of the expanded uncertainty.
     """
@@ -73,6 +77,7 @@ class RuleFacts:
     negative_v: float | None = None
     trimmer: TrimmerPosition = "unknown"
     driven: Mapping[str, Reading] = field(default_factory=dict)
+    seen: Mapping[str, bool] = field(default_factory=dict)
     coverage: float = 0.95
 
     @property

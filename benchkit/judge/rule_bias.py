@@ -6,6 +6,7 @@ import math
 from collections.abc import Sequence
 from dataclasses import replace
 
+from benchkit.errors import ModelError
 from benchkit.judge.limits import Limits
 from benchkit.judge.rule_base import (
     Current,
@@ -25,7 +26,8 @@ from benchkit.judge.verdicts import judge, judge_reading
 from benchkit.measure.readings import Reading
 from benchkit.measure.uncertainty import combine
 from benchkit.quantities import show
-from benchkit.stage.design import BOLTZMANN_J_PER_K, CHARGE_C, ZERO_CELSIUS_K, Design, target_drop_v
+from benchkit.stage.crossover import least_ripple_drop_v, ohmic_ohm, oliver_current_a, setting_at
+from benchkit.stage.design import ZERO_CELSIUS_K, Design, target_drop_v
 
 JUNCTION_BELOW_V, JUNCTION_ABOVE_V = 0.35, 0.2
 """How far a conducting silicon junction may read below and above the usual 0.7 V when the model was not asked.
@@ -169,22 +171,17 @@ def quiescent_target(number: float, facts: RuleFacts) -> tuple[RuleResult, ...]:
 
 
 def optimum_bias(number: float, facts: RuleFacts) -> tuple[RuleResult, ...]:
-    """Whether an emitter follower idles where its gain ripples least.
+    """Whether the stage idles where its gain ripples least.
 
-    |I_Q·(R_E + re + rb/hFE) / VT - 1| ≤ number; I_Q in A from the emitter drops, R_E the emitter resistor, re and
-    rb/hFE the output devices' own ohmic resistances (ohm, the mean of both halves), VT = kT/q (V). Usual number: 0.20.
-    Source: B. M. Oliver, Distortion in Complementary Pair Class B Amplifiers, Hewlett-Packard Journal, February 1971.
+    Emitter followers: |I_Q·(R_E + re + rb/hFE) / VT - 1| ≤ number; I_Q in A from the emitter drops, R_E the emitter
+    resistor, re and rb/hFE the output devices' own ohmic resistances (ohm, the mean of both halves), VT = kT/q (V).
+    Feedback pair: |I_Q / (the model's current of least gain ripple) - 1| ≤ number. Usual number: 0.20. Source: B. M.
+    Oliver, Distortion in Complementary Pair Class B Amplifiers, Hewlett-Packard Journal, February 1971; the model.
 
-    T is the heat sink's reading, otherwise the design's ambient, and may be 15 K off. For a feedback pair the rule says
-    nothing: its best bias comes from the model's gain ripple.
+    T is the heat sink's reading, otherwise the design's ambient, and may be 15 K off.
     """
     rule = "optimum bias"
     design = facts.design
-    if design.output.topology == "complementary-feedback-pair":
-        why = "The formula is for emitter followers."
-        return (
-            nothing_to_judge(rule, "", number, "", why=why, needs="Take the bias of least gain ripple from the model"),
-        )
     found = _emitter_readings(facts)
     if not found:
         return (
@@ -193,21 +190,29 @@ def optimum_bias(number: float, facts: RuleFacts) -> tuple[RuleResult, ...]:
     sink = number_of(facts, "heatsink")
     celsius = design.thermal.ambient_c if sink is None or sink.value is None else sink.value
     kelvin = celsius + ZERO_CELSIUS_K
-    thermal_v = BOLTZMANN_J_PER_K * kelvin / CHARGE_C
-    extra = 0.0
-    for name in (design.output.upper, design.output.lower):
-        parameters = design.device[name].parameters
-        extra += 0.5 * (parameters.get("RE", 0.0) + parameters.get("RB", 0.0) / parameters.get("BF", 100.0))
+    feedback = design.output.topology == "complementary-feedback-pair"
+    marked_ohm = design.output.emitter_resistor.value
+    try:
+        best_a = least_ripple_drop_v(design, setting_at(design, round(celsius, 1))) / marked_ohm if feedback else 0.0
+    except ModelError as error:
+        why = f"The model has no answer: {error.came}."
+        return (nothing_to_judge(rule, "", number, "", why=why, needs=error.next_step),)
+    extra = ohmic_ohm(design)
     ratios, us, doubts = [], [], []
     for current in found:
-        total = current.resistance.ohm + extra
-        ratios.append(current.amps * total / thermal_v)
+        wanted_a = best_a if feedback else oliver_current_a(kelvin, current.resistance.ohm, extra)
+        ratios.append(current.amps / wanted_a)
         u = current.uncertainty(drop_shared=False, resistance_shared=False)
-        us.append(None if u is None else u * total / thermal_v)
+        us.append(None if u is None else u / wanted_a)
         doubts.append(current.resistance.tolerance + JUNCTION_TEMPERATURE_DOUBT_K / kelvin)
     ratio = math.fsum(ratios) / len(ratios)
     # The meter's gain is common to all of them: the mean is no better known than one.
     u_ratio = None if any(u is None for u in us) else max(u for u in us if u is not None)
+    told = (
+        f"The current is {ratio:.3f} of the {show(best_a, 'A', 3)} at which the gain ripples least by the model,"
+        if feedback
+        else f"I_Q·(R_E + re + rb/hFE) is {ratio:.3f} of VT"
+    )
     decided = decide(ratio - 1.0, u_ratio, ratio * max(doubts), low=-number, high=number, coverage=facts.coverage)
     return (
         RuleResult(
@@ -217,7 +222,7 @@ def optimum_bias(number: float, facts: RuleFacts) -> tuple[RuleResult, ...]:
             limit=(1.0 - number, 1.0 + number),
             unit="",
             verdict=decided.verdict,
-            why=f"I_Q·(R_E + re + rb/hFE) is {ratio:.3f} of VT at {show(celsius, 'degC', 3)}.",
+            why=f"{told} at {show(celsius, 'degC', 3)}.",
             would_decide="Measure the emitter resistors cold, and the heat sink's temperature"
             if decided.verdict == "undecided"
             else "",

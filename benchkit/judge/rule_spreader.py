@@ -7,6 +7,7 @@ from dataclasses import dataclass
 
 from benchkit.errors import ModelError
 from benchkit.judge.rule_base import (
+    ModelFigure,
     RuleFacts,
     RuleResult,
     decide,
@@ -17,6 +18,7 @@ from benchkit.judge.rule_base import (
 from benchkit.measure.readings import Reading
 from benchkit.measure.uncertainty import combine, relative_uncertainty_of_ratio
 from benchkit.quantities import show
+from benchkit.stage.trimmer import authority, open_wiper, trimmer_report
 
 SAME_DROP = 1e-3
 """Relative difference of two predicted drops below which they count as the same."""
@@ -148,8 +150,9 @@ def spreader_ratio(number: float, facts: RuleFacts) -> tuple[RuleResult, ...]:
 def fail_safe_trimmer(number: float, facts: RuleFacts) -> tuple[RuleResult, ...]:
     """Whether a trimmer whose wiper opens lowers the bias.
 
-    The nominal emitter drop (V) with the wiper open over the same now, below `number`. Usual number: 1 (any rise is a
-    failure). Source: common practice; both drops from the model.
+    The nominal emitter drop (V) with the wiper open over the same now, below `number`; a supply that comes into its
+    limit fails too. Usual number: 1 (any rise is a failure). Source: common practice; both drops from the model, at the
+    target on full rails unless others are given.
     """
     rule, subject = "fail-safe trimmer", "spreader.trimmer"
     if facts.design.spreader.trimmer is None:
@@ -164,11 +167,14 @@ def fail_safe_trimmer(number: float, facts: RuleFacts) -> tuple[RuleResult, ...]
                 why="The design has no trimmer whose wiper could open.",
             ),
         )
-    if facts.wiper_open is None:
-        why = "Nothing was predicted for an open wiper."
-        return (nothing_to_judge(rule, subject, number, "", why=why, needs="Let the model solve the open wiper"),)
+    limited = ""
     try:
-        now_v, open_v = facts.wiper_open()
+        if facts.wiper_open is not None:
+            now_v, open_v = facts.wiper_open()
+        else:
+            opened = open_wiper(facts.design)
+            now_v, open_v = opened.before.drop_v, opened.after.drop_v
+            limited = f"only the supply's limit of {show(opened.limit_a, 'A', 3)} holds it" if opened.in_limit else ""
     except ModelError as error:
         why = f"The model has no answer for an open wiper: {error.came}"
         return (nothing_to_judge(rule, subject, number, "", why=why, needs=error.next_step),)
@@ -177,10 +183,11 @@ def fail_safe_trimmer(number: float, facts: RuleFacts) -> tuple[RuleResult, ...]
         return (nothing_to_judge(rule, subject, number, "", why=why, needs="Ask at the target's trimmer position"),)
     ratio = open_v / now_v
     told = f"With the wiper open the emitter drop goes from {show(now_v, 'V')} to {show(open_v, 'V')}"
-    if abs(ratio - number) <= SAME_DROP:
+    if abs(ratio - number) <= SAME_DROP and not limited:
         why = f"{told}: no difference at this trimmer position."
         return (nothing_to_judge(rule, subject, number, "", why=why, needs="Ask at the target's trimmer position"),)
-    good = ratio < number
+    good = ratio < number and not limited
+    became = limited or ("the bias falls" if good else "the bias rises, and a bad contact burns devices")
     return (
         RuleResult(
             rule=rule,
@@ -189,7 +196,7 @@ def fail_safe_trimmer(number: float, facts: RuleFacts) -> tuple[RuleResult, ...]
             limit=number,
             unit="",
             verdict="pass" if good else "fail",
-            why=f"{told}: {'the bias falls' if good else 'the bias rises, and a bad contact burns devices'}.",
+            why=f"{told}: {became}.",
         ),
     )
 
@@ -198,14 +205,22 @@ def trimmer_authority(number: float, facts: RuleFacts) -> tuple[RuleResult, ...]
     """Whether nearly every unit reaches its target with the trimmer away from its ends.
 
     Share of units whose target lies inside 5 % to 95 % of travel ≥ number. Usual number: 0.99. Source: the model.
+
+    Without a trimmer: share of units whose fixed bias is within the target's tolerance.
     """
     rule, subject = "trimmer authority", "spreader.trimmer"
+    told = "reach the target inside 5 % to 95 % of travel"
     figure = facts.figures.get(rule)
-    if figure is None:
-        why = "The model was not asked for it."
-        return (
-            nothing_to_judge(rule, subject, number, "", why=why, needs="Let the model solve the trim of many units"),
-        )
+    try:
+        if figure is None and facts.design.spreader.trimmer is None:
+            share = trimmer_report(facts.design).share_at_target
+            figure, told = ModelFigure(share or 0.0), "have a fixed bias within the target's tolerance"
+        elif figure is None:
+            found = authority(facts.design)
+            figure = ModelFigure(found.share, found.standard_uncertainty)
+    except ModelError as error:
+        why = f"The model has no answer: {error.came}."
+        return (nothing_to_judge(rule, subject, number, "", why=why, needs=error.next_step),)
     decided = decide(figure.value, figure.standard_uncertainty, 0.0, low=number, high=None, coverage=facts.coverage)
     return (
         RuleResult(
@@ -215,7 +230,7 @@ def trimmer_authority(number: float, facts: RuleFacts) -> tuple[RuleResult, ...]
             limit=number,
             unit="",
             verdict=decided.verdict,
-            why=f"{100 * figure.value:.4g} % of units reach the target inside 5 % to 95 % of travel.",
+            why=f"{100 * figure.value:.4g} % of units {told}.",
             would_decide="Solve more units" if decided.verdict == "undecided" else "",
             cause=decided.cause,
             conformance_probability=decided.conformance_probability,

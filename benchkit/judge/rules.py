@@ -14,7 +14,7 @@ from dataclasses import dataclass
 from typing import Final
 
 from benchkit.errors import EntryError
-from benchkit.judge import rule_bias, rule_currents, rule_heat, rule_spreader
+from benchkit.judge import rule_bias, rule_currents, rule_heat, rule_oscillation, rule_spreader
 from benchkit.judge.rule_base import ModelFigure, RuleFacts, RuleResult
 from benchkit.quantities import quoted
 from benchkit.stage.design import Design
@@ -136,7 +136,7 @@ _TABLE: Final = (
         title="The bias is where the gain ripples least",
         number=0.20,
         unit="",
-        source="B. M. Oliver, Hewlett-Packard Journal, February 1971",
+        source="B. M. Oliver, Hewlett-Packard Journal, February 1971; for a feedback pair the model",
         needs=lambda design: rule_currents.emitter_points(design)[:1],
         check=rule_bias.optimum_bias,
     ),
@@ -220,6 +220,15 @@ _TABLE: Final = (
         source="common practice; the procedure states the number",
         needs=_points("output.ac"),
         check=rule_bias.hum_at_rest,
+    ),
+    Rule(
+        name="oscillation",
+        title="Nobody sees an oscillation",
+        number=1.0,
+        unit="",
+        source="common practice",
+        needs=_points(),
+        check=rule_oscillation.oscillation,
     ),
 )
 

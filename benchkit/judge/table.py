@@ -19,7 +19,11 @@ Which rules apply to readings without a procedure:
 - feed symmetry, divider stiffness and spreader ratio, where their points were read;
 - quiescent target, where the readings say that the trimmer is at the target, in the state that the target is for.
 
-Suspects, the next point to probe and the faults that the readings could not show are not part of this table.
+Then the suspects (`benchkit.stage.suspects`): which single fault would explain the readings, what to probe next, and what
+the readings could not show. When every reading passes but some fault is likelier than a healthy unit, the verdict over
+all is undecided: the limits of single readings can't see what all of them together say.
+
+Files of several units are judged together: what was read under the same conditions shares its limits and hypotheses.
 """
 
 from __future__ import annotations
@@ -40,11 +44,17 @@ from benchkit.measure.readings import Reading
 from benchkit.quantities import show
 from benchkit.stage.conditions import Condition, Unpowered
 from benchkit.stage.design import Design, target_drop_v
+from benchkit.stage.faults import HEALTHY, Fault
+from benchkit.stage.observations import Observation
+from benchkit.stage.suspicion import Suspicion
+from benchkit.stage.unit_model import answers
 
 LEAST_SHARE_OF_TARGET: Final = 0.25
 """Share of the target's emitter drop that the model must expect before rules compare emitter currents."""
 
 SOURCE: Final = "the model"
+REJECTION_COVERAGE: Final = 0.9973
+"""A reading fails only when it lies outside its limits by its uncertainty at this coverage; nearer, it is undecided."""
 RAIL_ALLOWANCE: Final = 0.01
 LEAST_RAIL_ALLOWANCE_V: Final = 0.1
 """How far a rail may be off its setting: a share of it, and at least so many volts."""
@@ -83,17 +93,21 @@ class Table:
         What was assumed of a meter where a reading said nothing.
     assumed : int
         How many readings it was assumed for.
+    suspicion : Suspicion
+        Which faults would explain the readings.
     """
 
     readings: tuple[JudgedReading, ...]
     rules: tuple[RuleResult, ...]
     accuracy: Accuracy
     assumed: int
+    suspicion: Suspicion
 
     @property
     def verdict(self) -> Verdict:
         """The verdict over all; see the top of this module."""
-        return overall([judged.judgement.verdict for judged in self.readings], self.rules)
+        verdict = overall([judged.judgement.verdict for judged in self.readings], self.rules)
+        return "undecided" if verdict == "pass" and self.suspicion.suspects[0].fault != HEALTHY else verdict
 
     def as_json(self) -> dict[str, Any]:
         """Give the object that ``benchkit judge --json`` prints; what is no number is None."""
@@ -120,7 +134,18 @@ class Table:
                 }
                 for result in self.rules
             ],
+            "suspects": [
+                _fault(one.fault)
+                | {"probability": one.probability, "alike": [_fault(other) for other in one.alike]}
+                for one in self.suspicion.suspects
+            ],
+            "probe_next": [{"point": probe.point, "why": probe.why} for probe in self.suspicion.probe_next],
+            "unseen": [_fault(fault) for fault in self.suspicion.unseen],
         }
+
+
+def _fault(fault: Fault) -> dict[str, Any]:
+    return {"part": fault.part, "fault": fault.fault}
 
 
 def overall(readings: Sequence[Verdict], rules: Sequence[RuleResult]) -> Verdict:
@@ -141,27 +166,6 @@ def overall(readings: Sequence[Verdict], rules: Sequence[RuleResult]) -> Verdict
     return worst([*readings, *counted]) if readings else "undecided"
 
 
-def judge_readings(
-    design: Design,
-    text: str,
-    *,
-    accuracy: Accuracy | None = None,
-    units: int | None = None,
-    seed: int = 0,
-    file_name: str = "readings",
-) -> dict[str, Any]:
-    """Judge a file of readings; parameters and errors are those of `judge_table`.
-
-    Returns
-    -------
-    dict
-        ``{"verdict", "readings": [{"point", "value", "low", "high", "verdict"}], "rules": [{"rule", "value", "limit",
-        "verdict"}]}``, with plain finite numbers or None.
-    """
-    table = judge_table(design, text, accuracy=accuracy, units=units, seed=seed, file_name=file_name)
-    return table.as_json()
-
-
 def judge_table(
     design: Design,
     text: str,
@@ -171,49 +175,87 @@ def judge_table(
     seed: int = 0,
     file_name: str = "readings",
 ) -> Table:
-    """Judge a file of readings.
+    """Judge one file of readings; see `judge_files`."""
+    return judge_files(design, [(file_name, text)], accuracy=accuracy, units=units, seed=seed)[0]
+
+
+def judge_files(
+    design: Design,
+    files: Sequence[tuple[str, str]],
+    *,
+    accuracy: Accuracy | None = None,
+    units: int | None = None,
+    seed: int = 0,
+) -> list[Table]:
+    """Judge files of readings, one unit each.
 
     Parameters
     ----------
     design : Design
-    text : str
-        The file's text (`benchkit.judge.entries`).
+    files : sequence of (str, str)
+        Each file's name, for messages, and its text (`benchkit.judge.entries`).
     accuracy : Accuracy, optional
         Of the meter, for readings without an uncertainty; otherwise `STATED_DEFAULT`.
     units : int, optional
         How many units the limits are made from; otherwise the model's own number.
     seed : int
         Of the draws.
-    file_name : str
-        For messages.
 
     Returns
     -------
-    Table
+    list of Table
+        In the order of the files.
 
     Raises
     ------
     FileError
-        When the file is wrong.
+        When a file is wrong.
     ModelError
-        When the model has no trustworthy answer for one of its conditions.
+        When the model has no trustworthy answer for one of the conditions.
     """
+    from benchkit.stage.suspects import suspect_many
+
     meter = STATED_DEFAULT if accuracy is None else accuracy
-    entries = parse_entries(text, design, meter, file_name, assumed=accuracy is None)
-    limits = _limits(design, entries, units, seed)
-    judged = []
-    for entry, found in zip(entries, limits, strict=True):
-        if found is None:
-            why = f"The model expects nothing in particular of {entry.reading.point}."
-            judgement = Judgement("undecided", 0.0, 0.0, None, None, why)
-        else:
-            judgement = judge_reading(entry.reading, found)
-        judged.append(JudgedReading(entry, found, judgement))
-    assumed = sum(entry.reading.meter == meter.name and not entry.reading.overload for entry in entries)
-    return Table(tuple(judged), tuple(_rules(design, judged)), meter, assumed)
+    sets = [parse_entries(text, design, meter, name, assumed=accuracy is None) for name, text in files]
+    limits = _limits(design, [entry for entries in sets for entry in entries], units, seed)
+    suspicions = suspect_many(design, [observations(design, entries) for entries in sets])
+    tables = []
+    for entries, suspicion in zip(sets, suspicions, strict=True):
+        judged = []
+        for entry in entries:
+            found = limits.get((entry.condition, entry.point.name))
+            if found is None:
+                why = f"The model expects nothing in particular of {entry.reading.point}."
+                judgement = Judgement("undecided", 0.0, 0.0, None, None, why)
+            else:
+                judgement = judge_reading(entry.reading, found, rejection_coverage=REJECTION_COVERAGE)
+            judged.append(JudgedReading(entry, found, judgement))
+        assumed = sum(entry.reading.meter == meter.name and not entry.reading.overload for entry in entries)
+        tables.append(Table(tuple(judged), tuple(_rules(design, judged)), meter, assumed, suspicion))
+    return tables
 
 
-def _limits(design: Design, entries: Sequence[Entry], units: int | None, seed: int) -> list[Limits | None]:
+def observations(design: Design, entries: Sequence[Entry]) -> list[Observation]:
+    """Readings as the model takes them; those that it has no answer for are left out."""
+    result = []
+    for entry in entries:
+        reading, condition = entry.reading, entry.condition
+        if not entry.point.modelled or not answers(design, condition, entry.point.name):
+            continue
+        value = (-math.inf if reading.negative else math.inf) if reading.value is None else reading.value
+        u = reading.standard_uncertainty
+        result.append(
+            Observation(
+                conditions=(condition,), point=entry.point.name, value=value,
+                standard_uncertainty=0.0 if u is None or not math.isfinite(u) else u,
+            )
+        )  # fmt: skip
+    return result
+
+
+def _limits(
+    design: Design, entries: Sequence[Entry], units: int | None, seed: int
+) -> dict[tuple[object, str], Limits | None]:
     """Ask the model once for each condition, with all points that were read under it."""
     from benchkit.stage.expected import DEFAULT_UNITS, expected_unpowered
 
@@ -233,7 +275,7 @@ def _limits(design: Design, entries: Sequence[Entry], units: int | None, seed: i
                 design, names, trimmer=condition.trimmer, units=many, seed=seed, ambient_c=condition.ambient_c
             )
             found |= {(condition, one.point): limits_of(one) for one in answer.points}
-    return [found.get((entry.condition, entry.point.name)) for entry in entries]
+    return found
 
 
 def _powered_limits(

@@ -85,6 +85,7 @@ def judge(
     *,
     acceptance: Acceptance = "guarded",
     coverage: float = 0.95,
+    rejection_coverage: float | None = None,
 ) -> Judgement:
     """Judge a value against limits.
 
@@ -100,6 +101,9 @@ def judge(
         The decision rule.
     coverage : float
         Coverage of the expanded uncertainty, 0 to 1.
+    rejection_coverage : float, optional
+        Of the one that a guarded rejection keeps away from the limits, where that is another: of dozens of readings of
+        a healthy unit whose drops are smaller than the meter's noise, one in twenty would be rejected at 95 %.
 
     Returns
     -------
@@ -123,8 +127,11 @@ def judge(
     accept_high = None if limits.high is None else limits.high - guard
     probability = conformance_probability(value, u, limits.low, limits.high)
     inside = (accept_low is None or value >= accept_low) and (accept_high is None or value <= accept_high)
-    outside = (limits.low is not None and value < limits.low - guard) or (
-        limits.high is not None and value > limits.high + guard
+    away = guard
+    if rejection_coverage is not None and acceptance == "guarded":
+        away = coverage_factor(rejection_coverage) * u
+    outside = (limits.low is not None and value < limits.low - away) or (
+        limits.high is not None and value > limits.high + away
     )
     shown = f"{show(value, limits.unit)} ± {show(expanded, limits.unit, 2)}"
     verdict: Verdict
@@ -141,7 +148,12 @@ def judge(
 
 
 def judge_reading(
-    reading: Reading, limits: Limits, *, acceptance: Acceptance = "guarded", coverage: float = 0.95
+    reading: Reading,
+    limits: Limits,
+    *,
+    acceptance: Acceptance = "guarded",
+    coverage: float = 0.95,
+    rejection_coverage: float | None = None,
 ) -> Judgement:
     """Judge a reading with the uncertainty that it carries; see `judge`.
 
@@ -152,7 +164,10 @@ def judge_reading(
     """
     if reading.unit != limits.unit:
         raise ValueError(f"{reading.point} is in {reading.unit}, its limits in {limits.unit}")
-    return judge(reading.measured, reading.standard_uncertainty, limits, acceptance=acceptance, coverage=coverage)
+    return judge(
+        reading.measured, reading.standard_uncertainty, limits, acceptance=acceptance, coverage=coverage,
+        rejection_coverage=rejection_coverage,
+    )  # fmt: skip
 
 
 @dataclass(frozen=True)

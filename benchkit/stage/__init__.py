@@ -22,6 +22,12 @@ heat
     Junction temperatures in balance.
 quantiles, expected
     Limits that hold 99.73 % of healthy units.
+trimmer
+    What the trimmer can do: authority, slope, an open wiper, cold to warm.
+crossover
+    What a bias error costs: gain and output resistance against output current, the best bias.
+more_expected
+    Heat, trimmer and bias of a condition as plain data.
 reach
-    Trimmer authority, fail-safe wiring, lowest rails; what a check says about a design.
+    Lowest rails; what a check says about a design.
 """

@@ -202,6 +202,7 @@ class Design(_Table):
     device: Mapping[str, Device]
     _text: str = PrivateAttr("")
     _file: str = PrivateAttr("")
+    _hash: int = PrivateAttr(0)
 
     @property
     def name(self) -> str:
@@ -229,7 +230,7 @@ class Design(_Table):
         return hashlib.sha256(self._text.encode("utf-8")).hexdigest()
 
     def __hash__(self) -> int:
-        return int.from_bytes(hashlib.sha256(self._text.encode("utf-8")).digest()[:7], "big")
+        return self._hash
 
     def __eq__(self, other: object) -> bool:
         return isinstance(other, Design) and self._text == other._text and self._file == other._file
@@ -239,6 +240,11 @@ class Design(_Table):
         if self.output.rest.share is None:
             return float(self.output.rest.volts or 0.0)
         return negative_v + self.output.rest.share * (positive_v - negative_v)
+
+    @property
+    def single_supply(self) -> bool:
+        """Whether the negative rail is 0 V: the stage has one supply, and `output` rests between rail and 0 V."""
+        return self.rails.negative_v == 0.0
 
     @property
     def servo_max_a(self) -> float:
@@ -315,6 +321,7 @@ def parse_design(text: str, file_name: str = "design") -> Design:
         raise _file_error(error, file_name) from None
     design._text = text
     design._file = file_name
+    design._hash = hash((text, file_name))
     check_sense(design, file_name)
     return design
 
@@ -326,7 +333,8 @@ def target_drop_v(design: Design) -> float:
     -----
     The optimum of emitter followers is I_Q*(R_E + re + rb/hFE) = VT at the ambient temperature, with the mean of the
     two output devices' ohmic RE and RB/BF: B. M. Oliver, *Distortion in Complementary Pair Class B Amplifiers*,
-    Hewlett-Packard Journal, February 1971.
+    Hewlett-Packard Journal, February 1971. That of a feedback pair is the bias of least gain ripple by the model, at
+    the ambient temperature too; the stage is solved for it once.
     """
     emitter_ohm = design.output.emitter_resistor.value
     target = design.target
@@ -334,12 +342,11 @@ def target_drop_v(design: Design) -> float:
         return target.emitter_drop_v
     if target.quiescent_current_a is not None:
         return target.quiescent_current_a / design.output.pairs * emitter_ohm
-    thermal_v = BOLTZMANN_J_PER_K * (design.thermal.ambient_c + ZERO_CELSIUS_K) / CHARGE_C
-    extra_ohm = 0.0
-    for name in (design.output.upper, design.output.lower):
-        parameters = design.device[name].parameters
-        extra_ohm += 0.5 * (parameters.get("RE", 0.0) + parameters.get("RB", 0.0) / parameters.get("BF", 100.0))
-    return emitter_ohm * thermal_v / (emitter_ohm + extra_ohm)
+    from benchkit.stage.crossover import least_ripple_drop_v, oliver_drop_v, setting_at
+
+    if design.output.topology == "complementary-feedback-pair":
+        return least_ripple_drop_v(design, setting_at(design, design.thermal.ambient_c))
+    return oliver_drop_v(design, design.thermal.ambient_c)
 
 
 def _file_error(error: ValidationError, file_name: str) -> FileError:

@@ -13,7 +13,6 @@ from benchkit.errors import FileError
 from benchkit.quantities import show
 from benchkit.stage.design import _MAY_BE_ZERO, DEVICE_PARAMETERS, Design, Device
 
-_FOLLOWERS = ("single-emitter-follower", "double-emitter-follower", "triple-emitter-follower")
 _NEEDED = {
     "single-emitter-follower": (),
     "double-emitter-follower": ("driver_upper", "driver_lower", "driver_resistor"),
@@ -131,6 +130,8 @@ def _topology(design: Design) -> Iterator[_Finding]:
             "the share of the heat sink's rise that the drivers see",
             "",
         )
+    if design.single_supply and design.rails.other_negative is not None:
+        yield "rails.other_negative", "a single-supply stage has no negative rail", "no such key", ""
     rest_v = design.rest_v(design.rails.positive_v, design.rails.negative_v)
     if not design.rails.negative_v < rest_v < design.rails.positive_v:
         yield "output.rest", f"{show(rest_v, 'V')} came", "a voltage between the rails", ""
@@ -188,8 +189,6 @@ def _target(design: Design) -> Iterator[_Finding]:
     if len(given) != 1:
         came = " and ".join(given) if given else "no target"
         yield "target", f"{came} came", "exactly one of emitter_drop, quiescent_current, optimum", ""
-    if target.optimum and design.output.topology not in _FOLLOWERS:
-        yield "target.optimum", "the formula holds for emitter followers", "emitter_drop or quiescent_current", ""
     if design.thermal.max_heatsink_c <= design.thermal.ambient_c:
         came = show(design.thermal.max_heatsink_c, "degC")
         yield (

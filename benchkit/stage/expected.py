@@ -21,12 +21,14 @@ from benchkit.quantities import show
 from benchkit.stage.conditions import Condition, TrimmerPosition, Unpowered
 from benchkit.stage.design import Design
 from benchkit.stage.draws import Array, Parameters, draw, nominal, seeds
+from benchkit.stage.electrothermal import is_stable
 from benchkit.stage.operate import Solved, solve_units
 from benchkit.stage.points import find_point, points_of
 from benchkit.stage.quantiles import LEAST_UNITS, interval
 from benchkit.stage.reach import least_regulating_rails
 from benchkit.stage.runs import Mask
 from benchkit.stage.unpowered import LEAST_INSULATION_OHM, OVER_RANGE, solve_unpowered
+from benchkit.stage.warming import STEADIER
 
 __all__ = [
     "DEFAULT_UNITS",
@@ -148,6 +150,14 @@ def ensemble(design: Design, condition: Condition, units: int = DEFAULT_UNITS, s
     unit = solve_units(design, nominal(design), condition, loading="none")
     if not unit.converged[0]:
         raise _unsolved(design, condition, 1, 1)
+    trimmed_warm = condition.when == "warm" and condition.trimmer == "target"
+    if trimmed_warm and not bool(is_stable(design, nominal(design), condition, unit)[0]):
+        raise ModelError(
+            f"{design.name}: trimmed to its target warm, the nominal unit has no stable warm state; it leaves that "
+            "balance by itself, running up or falling back",
+            "a state of rest that a unit stays in",
+            STEADIER,
+        )
     parameters = draw(design, units, seeds("limits", seed))
     parameters = {key: value.reshape(-1) if units == 1 else value for key, value in parameters.items()}
     drawn = solve_units(design, parameters, condition, start=unit)

@@ -18,6 +18,7 @@ from __future__ import annotations
 
 from collections.abc import Callable, MutableMapping, Sequence
 from dataclasses import dataclass
+from functools import lru_cache
 
 import numpy as np
 from numpy.typing import NDArray
@@ -150,7 +151,8 @@ def _stuck_servo(share_of_most: float, share_of_feed: float) -> Callable[[Values
     def apply(values: Values, part: str, design: Design, where: Where) -> None:
         feed_a = design.feed.upper.value.value
         if design.feed.upper.kind == "resistor":
-            feed_a = design.rails.positive_v / design.feed.upper.value.value
+            rails = design.rails
+            feed_a = (rails.positive_v - design.rest_v(rails.positive_v, rails.negative_v)) / design.feed.upper.value.value
         stuck_a = share_of_most * values[f"{part}.max_a"] + share_of_feed * feed_a
         values[f"{part}.stuck.amps"] = np.where(where, stuck_a, values[f"{part}.stuck.amps"])
         values[f"{part}.max_a"] = np.where(where, SERVO_OFF_A, values[f"{part}.max_a"])
@@ -272,9 +274,11 @@ def apply(values: Values, fault: Fault | Sequence[Fault | None] | None, design: 
         return
     if len(fault) != units:
         raise ValueError(f"{len(fault)} faults for {units} units")
-    for one in dict.fromkeys(f for f in fault if f is not None and f != HEALTHY):
-        where = np.array([f == one for f in fault], dtype=np.bool_)
-        _look_up(design, one)[1].apply(values, one.part, design, where)
+    number = {one: k for k, one in enumerate(dict.fromkeys(fault))}
+    whose = np.array([number[one] for one in fault], dtype=np.intp)
+    for one, k in number.items():
+        if one is not None and one != HEALTHY:
+            _look_up(design, one)[1].apply(values, one.part, design, whose == k)
 
 
 def healthy_values(part: Part) -> dict[str, float]:
@@ -282,7 +286,7 @@ def healthy_values(part: Part) -> dict[str, float]:
     if part.kind == "transistor":
         return {f"{part.name}.{suffix}": ABSENT_OHM for suffix in BESIDE_TRANSISTOR}
     if part.kind == "trimmer":
-        return {f"{part.name}.wiper": CONTACT_OHM}
+        return {f"{part.name}.wiper": CONTACT_OHM, f"{part.name}.tie": CONTACT_OHM}
     if part.kind == "servo":
         return {f"{part.name}.stuck.amps": 0.0}
     return {}
@@ -301,6 +305,7 @@ def _rows(part: Part) -> tuple[FaultRow, ...]:
     )
 
 
+@lru_cache(maxsize=4096)
 def _look_up(design: Design, fault: Fault) -> tuple[Part, FaultRow]:
     parts = {part.name: part for part in parts_of(design)}
     part = parts.get(fault.part)

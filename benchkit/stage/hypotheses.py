@@ -97,8 +97,8 @@ PURSUED = 16
 """Hypotheses that are fitted in any case: so many of those that, to first order, explain the readings best."""
 WITHIN = 50.0
 """Others are fitted when, to first order, they come this near to the best one's cost."""
-EXPLAINED = 3.0
-"""A cost above so many a reading explains nothing: then the others are fitted too."""
+EXPLAINED = 2.0
+"""Costs above so many a reading (and 10) explain nothing: then the others are fitted too, and from other members."""
 
 
 @dataclass
@@ -128,43 +128,82 @@ def fit_hypotheses(lib: Library, data: Data) -> Fitted:
         One row a set.
     """
     sets, many = len(data.y), len(lib.faults)
+    starts, promised, evidence = _first_order(lib, data)
+    order = promised.argsort(axis=1)
+    pursue = promised <= promised.min(axis=1, keepdims=True) + WITHIN
+    np.put_along_axis(pursue, order[:, :PURSUED], True, axis=1)
+    best = _Best(np.full((sets, many), np.inf), np.full((sets, many), -1, np.intp), [])
+    solvable = np.isfinite(promised)
+    best.add(*_fit(lib, data, starts[:, 0], pursue & solvable))
+    for turn in range(starts.shape[1]):
+        unexplained = best.cost.min(axis=1, keepdims=True) > EXPLAINED * data.y.shape[1] + 10.0
+        chosen = solvable & unexplained & lib.joint.good[starts[:, turn]]
+        if not turn:
+            chosen &= ~pursue
+        if chosen.any():
+            best.add(*_fit(lib, data, starts[:, turn], chosen))
+    whole = best.fit()
+    evidence[best.row >= 0] = whole.log_evidence[best.row[best.row >= 0]]
+    posterior = evidence + lib.log_prior
+    return Fitted(posterior - posterior.max(axis=1, keepdims=True), best.row, whole)
+
+
+@dataclass
+class _Best:
+    """The best fit so far of every hypothesis to every set, among all that were made."""
+
+    cost: Array
+    row: Index
+    fits: list[Fit]
+
+    def add(self, fit: Fit, which_set: Index, which: Index) -> None:
+        """Take over the fits that are better."""
+        before = sum(len(one.cost) for one in self.fits)
+        better = fit.cost < self.cost[which_set, which]
+        self.cost[which_set[better], which[better]] = fit.cost[better]
+        self.row[which_set[better], which[better]] = before + np.flatnonzero(better)
+        self.fits.append(fit)
+
+    def fit(self) -> Fit:
+        """Give all fits in one."""
+        whole = self.fits[0]
+        for one in self.fits[1:]:
+            whole = Fit(
+                np.concatenate([whole.z, one.z], axis=1), joined(whole.joint, one.joint),
+                np.concatenate([whole.cost, one.cost]), np.concatenate([whole.log_evidence, one.log_evidence]),
+            )  # fmt: skip
+        return whole
+
+
+def _first_order(lib: Library, data: Data) -> tuple[Index, Array, Array]:
+    """What each member of the library promises.
+
+    Returns
+    -------
+    starts : array of int of shape (sets, members, hypotheses)
+        Members, the one first from which the unit would have the least far to go for the least that is left then.
+    promised, evidence : arrays of shape (sets, hypotheses)
+        Cost and log evidence that the first one of them promises.
+    """
+    sets, many = len(data.y), len(lib.faults)
     members = len(lib.whose) // many
-    nearest, promised, evidence = np.empty((sets, many), np.intp), np.empty((sets, many)), np.empty((sets, many))
+    starts = np.empty((sets, members, many), np.intp)
+    promised, evidence = np.empty((sets, many)), np.empty((sets, many))
     for number in range(sets):
-        # How far the unit would have to go from each member, and what would be left then: the nearest member starts.
         one = data.take(np.full(many * members, number))
         aim, cost, log_determinant = step_from(one, lib.z, lib.joint, lib.model.most)
         away = ((np.clip(aim, -6.0, 6.0) - lib.z) ** 2).sum(axis=0)
         score = np.where(lib.joint.good, cost + away, np.inf).reshape(members, many)
-        best = score.argmin(axis=0) * many + np.arange(many)
-        nearest[number], promised[number] = best, np.where(lib.joint.good[best], cost[best], np.inf)
-        evidence[number] = -0.5 * (promised[number] + log_determinant[best])
-    order = promised.argsort(axis=1)
-    pursue = promised <= promised.min(axis=1, keepdims=True) + WITHIN
-    np.put_along_axis(pursue, order[:, :PURSUED], True, axis=1)
-    pursue &= np.isfinite(promised)
-    first = _fit(lib, data, nearest, pursue)
-    costs = np.full((sets, many), np.inf)
-    costs[pursue] = first.cost
-    unexplained = costs.min(axis=1) > EXPLAINED * data.y.shape[1]
-    rest = ~pursue & unexplained[:, None] & np.isfinite(promised)
-    row = np.full((sets, many), -1, np.intp)
-    row[pursue] = np.arange(len(first.cost))
-    whole = first
-    if rest.any():
-        second = _fit(lib, data, nearest, rest)
-        row[rest] = len(first.cost) + np.arange(len(second.cost))
-        whole = Fit(
-            np.concatenate([first.z, second.z], axis=1), joined(first.joint, second.joint),
-            np.concatenate([first.cost, second.cost]), np.concatenate([first.log_evidence, second.log_evidence]),
-        )  # fmt: skip
-    evidence[row >= 0] = whole.log_evidence[row[row >= 0]]
-    posterior = evidence + lib.log_prior
-    return Fitted(posterior - posterior.max(axis=1, keepdims=True), row, whole)
+        starts[number] = score.argsort(axis=0, kind="stable") * many + np.arange(many)
+        first = starts[number, 0]
+        promised[number] = np.where(lib.joint.good[first], cost[first], np.inf)
+        evidence[number] = -0.5 * (promised[number] + log_determinant[first])
+    return starts, promised, evidence
 
 
-def _fit(lib: Library, data: Data, nearest: Index, pursue: Mask) -> Fit:
+def _fit(lib: Library, data: Data, start: Index, pursue: Mask) -> tuple[Fit, Index, Index]:
     which_set, which = np.nonzero(pursue)
-    index = nearest[which_set, which]
+    index = start[which_set, which]
     faults = [lib.faults[k] for k in which]
-    return fit(lib.model, data.take(which_set), faults, lib.z[:, index], lib.joint.take(index))
+    found = fit(lib.model, data.take(which_set), faults, lib.z[:, index], lib.joint.take(index))
+    return found, which_set, which

@@ -9,8 +9,8 @@ How a powered condition is solved
    the solution, for every unit at once. A unit whose resistance lies outside its track is out of reach: it is clipped
    to the track's end and solved again. A trimmer that divides (arm "between") has two sections of one sum: one is
    unknown, the other follows, four times over.
-3. Warm: solve, heat, solve again, until no junction moves. The step is that of a secant on the heat sink's rise, so a
-   stage near its runaway margin takes few rounds too; a unit that doesn't come to rest is one that did not converge.
+3. Warm: solve, heat, solve again, until no junction moves (`benchkit.stage.balance`), so that a stage near its runaway
+   margin takes few rounds too; a unit that doesn't come to rest is one that did not converge.
 4. Faults come last and are values: a unit that was trimmed is trimmed healthy and then has its fault.
 
 The trimmer's law: the section from the wiper to an end is end resistance + travel * (track - 2 * end resistance).
@@ -88,6 +88,7 @@ def solve_units(
     temperatures_c: Mapping[str, float | Array] | None = None,
     rails_v: tuple[Array, Array] | None = None,
     position: Array | float | None = None,
+    room_c: Array | None = None,
     start: Solved | None = None,
     loading: Loading = "nominal",
 ) -> Solved:
@@ -107,6 +108,8 @@ def solve_units(
         Rails of each unit (V), instead of the condition's.
     position : array or float, optional
         The trimmer's travel of each unit, instead of the condition's.
+    room_c : array, optional
+        Ambient temperature of each unit (degC), instead of the condition's.
     start : Solved, optional
         Where to start: of one unit, or of as many.
     loading : "nominal", "each" or "none"
@@ -121,7 +124,7 @@ def solve_units(
         units = max(units, len(faults))
     for array in (rails_v or ()) if position is None else (*(rails_v or ()), np.asarray(position)):
         units = max(units, np.asarray(array).size)
-    run = Run(design, parameters, condition, faults, units, rails_v)
+    run = Run(design, parameters, condition, faults, units, rails_v, room_c)
     warm = condition.when == "warm" and temperatures_c is None
     temperature = _given_temperatures(design, run.ambient_c, temperatures_c, units)
     if warm and start is not None and bool(start.converged.all()):
@@ -206,7 +209,7 @@ def loading_ratios(design: Design, condition: Condition) -> dict[str, float]:
 
 
 def _given_temperatures(
-    design: Design, ambient_c: float, given: Mapping[str, float | Array] | None, units: int
+    design: Design, ambient_c: Array | float, given: Mapping[str, float | Array] | None, units: int
 ) -> dict[str, Array]:
     names = [part.name for part in transistors_of(design)] + ["heatsink"]
     given = given or {}

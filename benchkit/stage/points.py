@@ -6,12 +6,16 @@ A point's sign follows from its probes: reading = V(red) - V(black). Powered dro
 Unpowered points fix the polarity too, because a meter's test current sees junctions: for resistances red and black are
 chosen so that junctions beside the part are reverse biased where that is possible (red at the more positive end of the
 working stage keeps collector-base junctions off; at the base-emitter arm red goes to the *emitter*).
+
+A single-supply stage has no points of a negative rail: ``rail-`` and all that begins with it, ``ohm.rail-``. Its
+``ohm.rails`` goes from the rail to 0 V, like ``ohm.rail+``, because 0 V is the other end of the stage.
 """
 
 from __future__ import annotations
 
 from collections.abc import Iterator
 from dataclasses import dataclass
+from functools import lru_cache
 from typing import Literal
 
 from benchkit.errors import EntryError
@@ -80,6 +84,7 @@ class Part:
 SIDES: tuple[Literal["upper", "lower"], Literal["upper", "lower"]] = ("upper", "lower")
 
 
+@lru_cache(maxsize=64)
 def parts_of(design: Design) -> tuple[Part, ...]:
     """All parts of a design, in the fixed order in which their values are drawn."""
     return tuple(_parts(design))
@@ -131,9 +136,10 @@ def _driver_resistors(design: Design) -> tuple[str, ...]:
     return ("driver.resistor",)
 
 
+@lru_cache(maxsize=64)
 def points_of(design: Design) -> tuple[Point, ...]:
     """All test points of a design: powered d.c., powered a.c., unpowered; in a fixed order."""
-    return (*_powered(design), *_alternating(), *_unpowered(design))
+    return (*_powered(design), *_alternating(design), *_unpowered(design))
 
 
 def find_point(design: Design, name: str) -> Point:
@@ -167,16 +173,19 @@ def _across(name: str, part: str, plus: str, minus: str) -> Point:
 def _powered(design: Design) -> Iterator[Point]:
     output = design.output
     yield _volts("rail+", "positive rail", "0 V")
-    yield _volts("rail-", "negative rail", "0 V")
-    yield _volts("output", "output, before coil and relay", "0 V")
-    for rail in ("rail+", "rail-"):
+    if not design.single_supply:
+        yield _volts("rail-", "negative rail", "0 V")
+    single = "output, before coil, relay and output capacitor"
+    yield _volts("output", single if design.single_supply else "output, before coil and relay", "0 V")
+    for rail in ("rail+",) if design.single_supply else ("rail+", "rail-"):
         sign = "positive" if rail == "rail+" else "negative"
         yield Point(
             name=f"{rail}.current", unit="A", function="dc current", red=f"{sign} supply's own display", black="",
             powered=True,
         )  # fmt: skip
     yield _across("rail+.drop", "resistor in the positive fuse's place", "the supply", "the stage")
-    yield _across("rail-.drop", "resistor in the negative fuse's place", "the stage", "the supply")
+    if not design.single_supply:
+        yield _across("rail-.drop", "resistor in the negative fuse's place", "the stage", "the supply")
     yield _volts("spread", "upper base line (collector side of the spreader)", "lower base line")
     npn = design.device[design.spreader.transistor].polarity == "npn"
     upper = ("collector end of the upper arm", "base of spreader.transistor")
@@ -188,25 +197,30 @@ def _powered(design: Design) -> Iterator[Point]:
     if design.feed.upper.kind == "resistor":
         yield _across("feed.upper", "upper feed resistor", "rail+", "the spreader")
     if design.feed.lower.kind == "resistor":
-        yield _across("feed.lower", "lower feed resistor", "the spreader", "rail-")
+        yield _across("feed.lower", "lower feed resistor", "the spreader", lower_rail(design))
     if output.predriver_resistor is not None:
         yield _across("predriver.resistor", "predriver.resistor", "predriver.upper", "predriver.lower")
     if output.driver_resistor is not None:
         for name in _driver_resistors(design):
             end = ("driver.upper", "driver.lower")
-            if name.endswith(".upper"):
+            if output.topology == "complementary-feedback-pair":
+                upper = name.endswith(".upper")
+                end = ("rail+", "driver.upper") if upper else ("driver.lower", lower_rail(design))
+            elif name.endswith(".upper"):
                 end = ("driver.upper", "output")
             elif name.endswith(".lower"):
                 end = ("output", "driver.lower")
             yield _across(name, name, *end)
     for number in range(1, output.pairs + 1):
-        top, bottom = f"emitter of output.upper.{number}", f"emitter of output.lower.{number}"
+        top, bottom = (_pair_end(design, side, number) for side in SIDES)
         yield _volts(f"emitter.upper.{number}", top, "output")
         yield _volts(f"emitter.lower.{number}", "output", bottom)
         yield _volts(f"emitter.pair.{number}", top, bottom)
         if output.base_stopper is not None:
-            yield _across(f"stopper.upper.{number}", f"stopper.upper.{number}", "the driver", "the base")
-            yield _across(f"stopper.lower.{number}", f"stopper.lower.{number}", "the base", "the driver")
+            for side in SIDES:
+                npn = design.device[getattr(output, side)].polarity == "npn"
+                name, ends = f"stopper.{side}.{number}", ("the driver", "the base")
+                yield _across(name, name, *(ends if npn else ends[::-1]))
     for part in transistors_of(design):
         ends = (f"base of {part.name}", f"emitter of {part.name}")
         red, black = ends if design.device[part.device].polarity == "npn" else ends[::-1]
@@ -217,8 +231,21 @@ def _powered(design: Design) -> Iterator[Point]:
     )  # fmt: skip
 
 
-def _alternating() -> Iterator[Point]:
+def lower_rail(design: Design) -> str:
+    """What the lower end of the stage is called: ``rail-``, or 0 V in a single-supply stage."""
+    return "0 V" if design.single_supply else "rail-"
+
+
+def _pair_end(design: Design, side: str, number: int) -> str:
+    """The end of an emitter resistor away from the output, in words."""
+    end = "collector" if design.output.topology == "complementary-feedback-pair" else "emitter"
+    return f"{end} of output.{side}.{number}"
+
+
+def _alternating(design: Design) -> Iterator[Point]:
     for name, red in (("output.ac", "output"), ("rail+.ac", "positive rail"), ("rail-.ac", "negative rail")):
+        if design.single_supply and name.startswith("rail-"):
+            continue
         yield Point(
             name=name, unit="V", function="ac volts", red=red, black="0 V", powered=True, modelled=False
         )  # fmt: skip
@@ -229,9 +256,10 @@ def _ohms(name: str, red: str, black: str, function: str = "ohms") -> Point:
 
 
 def _unpowered(design: Design) -> Iterator[Point]:
-    yield _ohms("rails", "positive rail", "negative rail")
+    yield _ohms("rails", "positive rail", "0 V" if design.single_supply else "negative rail")
     yield _ohms("rail+", "positive rail", "0 V")
-    yield _ohms("rail-", "0 V", "negative rail")
+    if not design.single_supply:
+        yield _ohms("rail-", "0 V", "negative rail")
     yield _ohms("output", "output", "0 V")
     npn = design.device[design.spreader.transistor].polarity == "npn"
     base, far, near = "base of spreader.transistor", "collector end of the upper arm", "emitter of spreader.transistor"
@@ -239,7 +267,7 @@ def _unpowered(design: Design) -> Iterator[Point]:
     yield _ohms("spreader.lower", *((near, base) if npn else (base, near)))
     for number in range(1, design.output.pairs + 1):
         for side in SIDES:
-            top, bottom = f"emitter of output.{side}.{number}", "output"
+            top, bottom = _pair_end(design, side, number), "output"
             red, black = (top, bottom) if side == "upper" else (bottom, top)
             yield _ohms(f"emitter.{side}.{number}", red, black, "ohms 4-wire")
     for part in transistors_of(design):

@@ -31,13 +31,15 @@ LEAST_UNITS = 50
 """Fewer units than this give no limits."""
 
 
-def interval(values: Array) -> tuple[float, float]:
+def interval(values: Array, outside_each_side: float = OUTSIDE_EACH_SIDE) -> tuple[float, float]:
     """Lower and upper limit of a reading.
 
     Parameters
     ----------
     values : array of shape (units,)
         At least `LEAST_UNITS`; infinities are overloads.
+    outside_each_side : float
+        Share of units beyond each limit.
 
     Returns
     -------
@@ -54,13 +56,13 @@ def interval(values: Array) -> tuple[float, float]:
     if np.isnan(values).any():
         raise ValueError("a reading is not a number")
     ordered = np.sort(values)
-    return _tail(ordered), -_tail(-ordered[::-1])
+    return _tail(ordered, outside_each_side), -_tail(-ordered[::-1], outside_each_side)
 
 
-def _tail(ordered: Array) -> float:
-    """The quantile at `OUTSIDE_EACH_SIDE` of ascending values."""
+def _tail(ordered: Array, share: float) -> float:
+    """The quantile at a share of ascending values."""
     units = ordered.size
-    place = OUTSIDE_EACH_SIDE * (units + 1) - 1.0
+    place = share * (units + 1) - 1.0
     if place >= 0.0:
         below = math.floor(place)
         first, second = float(ordered[below]), float(ordered[below + 1])
@@ -71,5 +73,5 @@ def _tail(ordered: Array) -> float:
     if math.isinf(outermost) or math.isinf(inner):
         return outermost
     normal = NormalDist()
-    aim, first_z, inner_z = (normal.inv_cdf(p) for p in (OUTSIDE_EACH_SIDE, 1 / (units + 1), 10 / (units + 1)))
+    aim, first_z, inner_z = (normal.inv_cdf(p) for p in (share, 1 / (units + 1), 10 / (units + 1)))
     return outermost + (aim - first_z) * (inner - outermost) / (inner_z - first_z)

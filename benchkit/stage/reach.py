@@ -1,7 +1,7 @@
-"""Questions to a whole design: does the trimmer reach the target, does an open wiper fail safe, where does it regulate.
+"""Questions to a whole design: can its target be met, and from which rails does it regulate.
 
 Each answer takes a nominal unit and a small ensemble, a second at most, so that ``check`` and the start of a walk can
-afford them.
+afford them. What the trimmer can do stands in `benchkit.stage.trimmer`.
 """
 
 from __future__ import annotations
@@ -12,18 +12,21 @@ import numpy as np
 
 from benchkit.errors import ModelError
 from benchkit.quantities import show
-from benchkit.stage.conditions import Condition
 from benchkit.stage.design import Design, target_drop_v
 from benchkit.stage.draws import Array, Parameters, draw, nominal, seeds
-from benchkit.stage.faults import Fault
-from benchkit.stage.operate import Solved, solve_units
+from benchkit.stage.operate import solve_units
 from benchkit.stage.runs import Mask
+from benchkit.stage.trimmer import LEAST_AUTHORITY, OpenWiper, at_target, authority, full_rails, open_wiper
 
-AUTHORITY_UNITS = 400
-AUTHORITY_TRAVEL = (0.05, 0.95)
-"""Part of the travel within which a target counts as reached with something to spare (common practice)."""
-LEAST_AUTHORITY = 0.99
-"""Share of units that should reach the target there."""
+__all__ = [
+    "Finding",
+    "check_target",
+    "full_rails",
+    "least_regulating_rails",
+    "open_wiper_lowers_bias",
+    "require_target",
+]
+
 _RAIL_UNITS = 60
 _FULL_FEED = 0.98
 _SERVO_SHARE = (0.01, 0.95)
@@ -53,80 +56,6 @@ class Finding:
         return f"{self.key}: {self.came}. Expected {self.expected}. {self.next_step}."
 
 
-@dataclass(frozen=True, kw_only=True)
-class Authority:
-    """What the trimmer can do about the target.
-
-    Attributes
-    ----------
-    nominal_travel : float
-        Travel from the least-bias end at which the nominal unit meets the target; outside 0..1 when out of reach.
-    share : float
-        Share of units that reach the target inside 5 % to 95 % of the travel.
-    share_in_reach : float
-        Share of units that reach it at all.
-    drop_v_per_turn : float
-        Slope of one emitter drop at the target (V per turn), nominal unit.
-    """
-
-    nominal_travel: float
-    share: float
-    share_in_reach: float
-    drop_v_per_turn: float
-
-
-def full_rails(design: Design, **changes: object) -> Condition:
-    """Condition at the design's full rails, the trimmer at the target, cold or warm as the target asks."""
-    given: dict[str, object] = {
-        "positive_v": design.rails.positive_v,
-        "negative_v": design.rails.negative_v,
-        "trimmer": "target",
-        "when": design.target.when,
-    }
-    return Condition(**(given | changes))  # type: ignore[arg-type]
-
-
-def authority(design: Design, units: int = AUTHORITY_UNITS, seed: int = 0) -> Authority:
-    """Find out what the trimmer can do about the target.
-
-    Raises
-    ------
-    ModelError
-        Without a trimmer, or when the nominal unit has no solution at the target.
-    """
-    trimmer = design.spreader.trimmer
-    if trimmer is None:
-        raise ModelError(f"{design.name} has no trimmer", "a trimmer, where its authority is asked for")
-    condition = full_rails(design)
-    unit, travel = _nominal_travel(design)
-    drawn = solve_units(design, draw(design, units, seeds("limits", seed)), condition, start=unit, loading="none")
-    assert drawn.unclipped is not None
-    low, high = AUTHORITY_TRAVEL
-    inside = (drawn.unclipped >= low) & (drawn.unclipped <= high) & drawn.converged
-    step = 0.005
-    near = min(max(travel, step), 1.0 - step)
-    pair = np.array([near - step, near + step])
-    around = solve_units(
-        design, {key: np.broadcast_to(value, 2) for key, value in nominal(design).items()},
-        full_rails(design, trimmer=near), position=pair, start=unit, loading="none",
-    )  # fmt: skip
-    drops = around.points["emitter.pair.1"] / 2.0
-    return Authority(
-        nominal_travel=travel,
-        share=float(np.mean(inside)),
-        share_in_reach=float(np.mean(drawn.in_reach)),
-        drop_v_per_turn=float((drops[1] - drops[0]) / (2.0 * step * trimmer.turns)),
-    )
-
-
-def _nominal_travel(design: Design) -> tuple[Solved, float]:
-    """Nominal unit at the target, and the travel that it takes, outside 0..1 when out of reach."""
-    unit = solve_units(design, nominal(design), full_rails(design), loading="none")
-    if unit.unclipped is None or (not unit.converged[0] and bool(unit.in_reach[0])):
-        raise ModelError(f"{design.name} has no operating point at its target", "one", "Check the design file")
-    return unit, float(unit.unclipped[0])
-
-
 def check_target(design: Design) -> list[Finding]:
     """Look whether the design's target can be met.
 
@@ -146,7 +75,7 @@ def check_target(design: Design) -> list[Finding]:
         return _fixed_bias(design, key, drop_v)
     findings = []
     try:
-        _, travel = _nominal_travel(design)
+        _, travel = at_target(design)
         if not 0.0 <= travel <= 1.0:
             return [_out_of_reach(design, key, drop_v)]
         found = authority(design)
@@ -162,18 +91,36 @@ def check_target(design: Design) -> list[Finding]:
                 fatal=found.share_in_reach < 0.5,
             )
         )
-    safe = open_wiper_lowers_bias(design)
-    if not safe:
-        findings.append(
-            Finding(
-                key="spreader.trimmer.wiring",
-                came="an open wiper raises the bias",
-                expected="a trimmer whose open wiper lowers it",
-                next_step="Put the trimmer into the base-emitter arm, where an open wiper leaves the least spread",
-                fatal=False,
-            )
-        )
+    findings += _wiper(design)
     return findings
+
+
+def _wiper(design: Design) -> list[Finding]:
+    try:
+        opened = open_wiper(design)
+    except ModelError as error:
+        came = error.came
+    else:
+        if opened.safe:
+            return []
+        came = f"an open wiper raises the bias: {_told(opened)}"
+    return [
+        Finding(
+            key="spreader.trimmer.wiring",
+            came=came,
+            expected="a trimmer whose open wiper lowers it",
+            next_step="Put the trimmer into the base-emitter arm, where an open wiper leaves the least spread",
+            fatal=False,
+        )
+    ]
+
+
+def _told(opened: OpenWiper) -> str:
+    before, after = opened.before, opened.after
+    told = f"the drop goes from {show(before.drop_v, 'V', 3)} to {show(after.drop_v, 'V', 3)}"
+    if opened.in_limit:
+        told += f", and only the supply's limit of {show(opened.limit_a, 'A', 3)} holds the current"
+    return told
 
 
 def _out_of_reach(design: Design, key: str, drop_v: float) -> Finding:
@@ -221,28 +168,25 @@ def _fixed_bias(design: Design, key: str, drop_v: float) -> list[Finding]:
 
 
 def open_wiper_lowers_bias(design: Design) -> bool:
-    """Whether the spread with an open wiper is no more than at the trimmer's least-bias end, nominal unit, cold.
+    """Whether an open wiper lowers the bias of the nominal unit at its target (or there is no trimmer).
+
+    Raises
+    ------
+    ModelError
+        When there is no solution at the target, or none with the wiper open.
 
     Notes
     -----
     The fail-safe rule is common practice: dirt under a wiper must not burn the output stage.
     """
-    if design.spreader.trimmer is None:
-        return True
-    condition = full_rails(design, trimmer="least", when="cold")
-    healthy = solve_units(design, nominal(design), condition, loading="none")
-    opened = solve_units(
-        design, nominal(design), condition, Fault("spreader.trimmer", "wiper open"), start=healthy, loading="none"
-    )  # fmt: skip
-    least_v, open_v = float(healthy.points["spread"][0]), float(opened.points["spread"][0])
-    return bool(opened.converged[0]) and open_v <= least_v * 1.001
+    return design.spreader.trimmer is None or open_wiper(design).safe
 
 
 def least_regulating_rails(design: Design) -> tuple[float, float]:
     """Lowest rails (V) from which the stage regulates, in the ratio of the full ones.
 
     Regulating means, in the nominal unit and in a small ensemble, trimmer at its least-bias end: a source feed sends
-    98 % of its current; a servo works (both rails at or above ``works_from``), its current lies between 1 % and 95 % of
+    98 % of its current; a servo works (every rail at or above ``works_from``), its current lies between 1 % and 95 % of
     its most, and the output is where it belongs; with resistor feeds the spreader's transistor takes at least as much
     current as its lower arm, and the output lies within a tenth of the span of its rest.
 
@@ -260,7 +204,8 @@ def least_regulating_rails(design: Design) -> tuple[float, float]:
     ratio = design.rails.negative_v / full_v
     grid = np.append(np.arange(1.0, full_v, 0.5 if full_v <= 50.0 else 1.0), full_v)
     if design.feed.lower.kind == "servo":
-        grid = grid[grid * min(1.0, -ratio) >= (design.feed.works_from_v or 0.0) * (1.0 - 1e-12)]
+        least = 1.0 if design.single_supply else min(1.0, -ratio)
+        grid = grid[grid * least >= (design.feed.works_from_v or 0.0) * (1.0 - 1e-12)]
     units = _RAIL_UNITS + 1
     drawn, unit = draw(design, _RAIL_UNITS, seeds("limits", 0)), nominal(design)
     group: Parameters = {

@@ -122,11 +122,12 @@ class Report:
                 Suspect(fault=faults[k], probability=float(probability[k]), alike=others, evidence=evidence)
             )
         log_posterior = self.fitted.log_posterior[number] - self.lib.log_prior
-        refuted = log_posterior[0] - log_posterior > WELL_REFUTED
+        # against a unit that can't be healthy, nothing can be said about what healthy would be told from
+        refuted = (log_posterior[0] - log_posterior > WELL_REFUTED) & (probability[0] > LEAST_COMPARED)
         unseen = tuple(
             faults[k]
             for k in range(1, len(faults))
-            if hidden[k] and not refuted[k] and probability[k] < probability[0] and self.solved[k]
+            if hidden[k] and not refuted[k] and k != order[0] and self.solved[k]
         )
         unsolved = tuple(faults[k] for k in np.flatnonzero(~self.solved))
         return Suspicion(

@@ -18,7 +18,6 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
-from numpy.typing import NDArray
 
 from benchkit.circuit.solution import Solution
 from benchkit.circuit.solve import Effort
@@ -29,6 +28,7 @@ from benchkit.stage.faults import Fault
 from benchkit.stage.latent import Coordinates
 from benchkit.stage.observations import Conditions
 from benchkit.stage.readouts import Index, Linear, Mask, Matrix, Powered, UnpoweredPoints
+from benchkit.stage.topologies import Variant, build
 
 Layout = tuple[tuple[Conditions, tuple[str, ...]], ...]
 POSITION = "spreader.trimmer.position"
@@ -149,6 +149,14 @@ class UnitModel:
         return Joint(np.concatenate(f, axis=1), np.concatenate(slopes, axis=1), good, tuple(solutions))
 
 
+def answers(design: Design, condition: Condition | Unpowered, point: str) -> bool:
+    """Whether the model has an answer for a point under a condition (a fuse's drop needs a resistor in its place)."""
+    if isinstance(condition, Unpowered):
+        return True
+    stage = build(design, Variant(fuses=condition.fuse_ohm is not None))
+    return point == "heatsink" or point in stage.currents or point in stage.between
+
+
 def layout_of(readings: Sequence[tuple[Conditions, str]]) -> Layout:
     """Put readings into a layout: conditions in their first order; unpowered points of one trimmer position together."""
     groups: dict[object, tuple[Conditions, list[str]]] = {}
@@ -183,5 +191,3 @@ def _travel_of(conditions: Conditions, number: int) -> str:
         return POSITION
     return f"travel {number}" if trimmer == "target" else ""
 
-
-Readings = NDArray[np.float64]

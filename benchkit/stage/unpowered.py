@@ -91,6 +91,7 @@ def solve_unpowered(
     faults: Faults = None,
     *,
     position: Array | float | None = None,
+    room_c: Array | None = None,
     on_range: MeterRange | None = None,
     start: Solution | None = None,
 ) -> UnpoweredReadings:
@@ -105,6 +106,8 @@ def solve_unpowered(
     faults : Fault, sequence of Fault or None per unit, or None
     position : array or float, optional
         The trimmer's travel of each unit, instead of the condition's.
+    room_c : array, optional
+        Ambient temperature of each unit (degC), instead of the condition's.
     on_range : MeterRange, optional
         Instead of the range that the nominal unit asks for.
     start : Solution, optional
@@ -131,7 +134,7 @@ def solve_unpowered(
     ambient_c = design.thermal.ambient_c if condition.ambient_c is None else condition.ambient_c
     values = dict(parameters)
     for part in transistors_of(design):
-        values[f"{part.name}.kelvin"] = np.asarray(ambient_c + ZERO_CELSIUS_K)
+        values[f"{part.name}.kelvin"] = np.asarray(ambient_c if room_c is None else room_c) + ZERO_CELSIUS_K
     values["meter.amps"], values["meter.compliance_v"] = np.asarray(used.amps), np.asarray(COMPLIANCE_V)
     set_trimmer(design, values, travel)
     values |= {key: np.broadcast_to(value, units) for key, value in values.items() if faults is not None}
@@ -146,6 +149,11 @@ def solve_unpowered(
     return UnpoweredReadings(
         values=reading, converged=solution.converged, range=used, position=travel, solution=solution
     )  # fmt: skip
+
+
+def nominal_range(design: Design, point: str) -> MeterRange:
+    """Range that an unpowered point is read on: what the nominal unit, its trimmer in the middle, asks for."""
+    return _nominal_unit(design, Unpowered(point=point, trimmer=0.5)).range
 
 
 @lru_cache(maxsize=256)

@@ -1,0 +1,514 @@
+"""What a design's trimmer can do: reach, slope, an open wiper, and how far the target moves from cold to warm.
+
+How it is found out
+-------------------
+* Reach: the trimmer is replaced by an unknown conductance that meets the target, in every unit of an ensemble at once
+  (`benchkit.stage.operate`), and its travel is read off. A unit without a solution, or a warm state, reaches nothing.
+* Slope: the nominal unit's own first-order response (`benchkit.circuit.response`) to a small turn. *At once* is with
+  all junctions as warm as they were; *settled* adds what the temperatures make of it: dT = rest * dP is solved together
+  with dP = (dP/dtravel) + (dP/dT) dT, by the same heat equations as everywhere (`benchkit.stage.heat`).
+* Open wiper: the nominal unit is trimmed and then its wiper opens, on full rails with a current limit. It is safe when
+  the bias does not rise and the supply stays out of its limit. Junctions keep their temperature: the first moment.
+* Cold pre-set: each unit is trimmed in the state that the target is for; the other state of the same unit, its trimmer
+  left alone, tells what to set cold so that the warm drop is the target.
+
+A drop is that of pair 1: half of what lies across both its emitter resistors, as the target is.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass, replace
+from functools import lru_cache
+
+import numpy as np
+
+from benchkit.circuit.response import Response
+from benchkit.errors import ModelError
+from benchkit.stage.conditions import Condition
+from benchkit.stage.design import Design, target_drop_v
+from benchkit.stage.draws import Array, Parameters, draw, nominal, seeds, take
+from benchkit.stage.faults import Fault
+from benchkit.stage.heat import heat_nodes
+from benchkit.stage.operate import Solved, solve_units
+from benchkit.stage.runs import Mask, Run, set_trimmer
+from benchkit.stage.topologies import build
+
+REPORT_UNITS = 400
+AUTHORITY_TRAVEL = (0.05, 0.95)
+"""Part of the travel within which a target counts as reached with something to spare (common practice)."""
+LEAST_AUTHORITY = 0.99
+"""Share of units that should reach the target there."""
+LIMIT_FACTOR = 2.0
+"""Current limit for the open wiper, as a multiple of what the larger rail current is at the target."""
+SAME_DROP = 1e-3
+"""Relative difference of two drops below which they count as the same."""
+_OUTSIDE = (0.05, 0.95)
+_TURN = 1e-6
+_WARMER_K = 1e-4
+_IN_LIMIT = 0.98
+
+
+@dataclass(frozen=True, kw_only=True)
+class Span:
+    """A figure of the nominal unit, and between which values 90 % of units lie (5 % below, 5 % above)."""
+
+    nominal: float
+    low: float
+    high: float
+
+
+@dataclass(frozen=True, kw_only=True)
+class Authority:
+    """Whether the trimmer reaches the target.
+
+    Attributes
+    ----------
+    travel : Span
+        Travel from the least-bias end at which the target lies; outside 0..1 when out of reach.
+    share : float
+        Share of units that reach the target inside 5 % to 95 % of the travel.
+    share_in_reach : float
+        Share of units that reach it at all.
+    units : int
+    """
+
+    travel: Span
+    share: float
+    share_in_reach: float
+    units: int
+
+    @property
+    def standard_uncertainty(self) -> float:
+        """Standard uncertainty of `share`, from the number of units (with one more of each kind, so never zero)."""
+        share = (self.share * self.units + 1.0) / (self.units + 2.0)
+        return float(np.sqrt(share * (1.0 - share) / (self.units + 2.0)))
+
+
+@dataclass(frozen=True, kw_only=True)
+class Slope:
+    """What a turn of the screw towards more bias does to the nominal unit at the target.
+
+    Attributes
+    ----------
+    travel : float
+        Where it was taken: at the target, or at the end of the track that is nearest to it.
+    drop_v_per_turn, current_a_per_turn : float
+        Change of one emitter drop (V) and of the quiescent current of all pairs together (A), temperatures held.
+    settled_drop_v_per_turn, settled_current_a_per_turn : float or None
+        The same when all has come to rest again; None for a target that is set cold, or where nothing comes to rest.
+    """
+
+    travel: float
+    drop_v_per_turn: float
+    current_a_per_turn: float
+    settled_drop_v_per_turn: float | None
+    settled_current_a_per_turn: float | None
+
+
+@dataclass(frozen=True, kw_only=True)
+class Idle:
+    """A unit at rest: spread, emitter drop and rails (V), quiescent current of all pairs, larger rail current (A)."""
+
+    spread_v: float
+    drop_v: float
+    quiescent_a: float
+    positive_v: float
+    negative_v: float
+    supply_a: float
+
+
+@dataclass(frozen=True, kw_only=True)
+class OpenWiper:
+    """What an open wiper does to a unit at its target on full rails.
+
+    Attributes
+    ----------
+    limit_a : float
+        The supply's current limit per rail.
+    before, after : Idle
+    in_limit : bool
+        Whether the supply came into its limit, so that only the limit holds the current.
+    safe : bool
+        Whether the bias does not rise and the limit is not needed.
+    """
+
+    limit_a: float
+    before: Idle
+    after: Idle
+    in_limit: bool
+    safe: bool
+
+
+@dataclass(frozen=True, kw_only=True)
+class ColdToWarm:
+    """One trimmer position, cold and warm.
+
+    Attributes
+    ----------
+    cold_v, warm_v : Span
+        Emitter drop; that of the target's own state is the target in every unit.
+    held : "cold" or "warm"
+        The state that the target is for.
+    share_without : float
+        Share of units in reach that have no warm state (or no solution) at that position.
+    """
+
+    cold_v: Span
+    warm_v: Span
+    held: str
+    share_without: float
+
+
+@dataclass(frozen=True, kw_only=True)
+class TrimmerReport:
+    """All about a design's trimmer; every part is None where the design has none, or the model no answer.
+
+    Attributes
+    ----------
+    target_v : float
+        Emitter drop at the target.
+    present : bool
+        Whether there is a trimmer.
+    authority, slope, open_wiper, cold_to_warm
+    fixed_v : Span or None
+        Without a trimmer: the emitter drop that the parts alone make.
+    share_at_target : float or None
+        Without a trimmer: share of units within the target's tolerance.
+    """
+
+    target_v: float
+    present: bool
+    authority: Authority | None = None
+    slope: Slope | None = None
+    open_wiper: OpenWiper | None = None
+    cold_to_warm: ColdToWarm | None = None
+    fixed_v: Span | None = None
+    share_at_target: float | None = None
+
+
+def full_rails(design: Design, **changes: object) -> Condition:
+    """Condition at the design's full rails, the trimmer at the target, cold or warm as the target asks."""
+    given: dict[str, object] = {
+        "positive_v": design.rails.positive_v,
+        "negative_v": design.rails.negative_v,
+        "trimmer": "target",
+        "when": design.target.when,
+    }
+    return Condition(**(given | changes))  # type: ignore[arg-type]
+
+
+def drop_v(solved: Solved) -> Array:
+    """Emitter drop (V) of pair 1, shape (units,)."""
+    return solved.points["emitter.pair.1"] / 2.0
+
+
+def quiescent_a(design: Design, solved: Solved) -> Array:
+    """Quiescent current (A) of all pairs together, shape (units,): what flows through the upper emitter resistors."""
+    currents = [solved.solution.current(f"emitter.upper.{n}") for n in range(1, design.output.pairs + 1)]
+    return np.asarray(np.sum(currents, axis=0))
+
+
+@lru_cache(maxsize=32)
+def at_target(design: Design) -> tuple[Solved, float]:
+    """Nominal unit at the target on full rails, and the travel that it takes, outside 0..1 when out of reach.
+
+    Raises
+    ------
+    ModelError
+        Without a trimmer, or without an operating point.
+    """
+    if design.spreader.trimmer is None:
+        raise ModelError(f"{design.name} has no trimmer", "a trimmer, where its reach is asked for")
+    unit = solve_units(design, nominal(design), full_rails(design), loading="none")
+    if unit.unclipped is None or (not unit.converged[0] and bool(unit.in_reach[0])):
+        raise ModelError(f"{design.name} has no operating point at its target", "one", "Check the design file")
+    return unit, float(unit.unclipped[0])
+
+
+@dataclass(frozen=True, kw_only=True)
+class _Group:
+    """Drawn units, each with the travel that meets the target (outside 0..1 when out of reach)."""
+
+    parameters: Parameters
+    travel: Array
+    reached: Mask
+
+
+@lru_cache(maxsize=8)
+def _drawn(design: Design, units: int, seed: int) -> _Group:
+    unit, travel = at_target(design)
+    if not np.isfinite(travel):
+        raise ModelError(f"{design.name}: no trimmer would meet the target", "a target that the spreader can make")
+    condition = full_rails(design)
+    parameters = draw(design, units, seeds("limits", seed))
+    run = Run(design, parameters, condition, None, units, None)
+    settled = bool(unit.converged[0])
+    temperature = {
+        name: np.broadcast_to(celsius if settled else run.ambient_c, units).astype(np.float64)
+        for name, celsius in unit.temperatures_c.items()
+    }
+    # Units out of reach are not solved again at the ends of their tracks: nothing here is asked of them.
+    state = run.find_trimmer(temperature, unit.solution if settled else None, condition.when == "warm")
+    reached = state.converged & (state.position >= 0.0) & (state.position <= 1.0)
+    return _Group(parameters=parameters, travel=np.where(state.converged, state.position, np.nan), reached=reached)
+
+
+def authority(design: Design, units: int = REPORT_UNITS, seed: int = 0) -> Authority:
+    """Find out in how many units the trimmer reaches the target.
+
+    Raises
+    ------
+    ModelError
+        As `at_target`; when no trimmer whatever would meet the target.
+    """
+    _, travel = at_target(design)
+    group = _drawn(design, units, seed)
+    low, high = AUTHORITY_TRAVEL
+    return Authority(
+        travel=_span(travel, group.travel[~np.isnan(group.travel)]),
+        share=float(np.mean((group.travel >= low) & (group.travel <= high))),
+        share_in_reach=float(np.mean(group.reached)),
+        units=units,
+    )
+
+
+def slope(design: Design) -> Slope:
+    """Work out what a turn does to the nominal unit at the target.
+
+    Raises
+    ------
+    ModelError
+        As `at_target`, or when the nominal unit has no state at the end that is nearest to its target.
+    """
+    unit, travel = at_target(design)
+    if not unit.converged[0]:
+        raise ModelError(f"{design.name} has no operating point where its trimmer is nearest to the target", "one")
+    return slope_at(design, min(max(travel, 0.0), 1.0), unit.temperatures_c, warm=design.target.when == "warm")
+
+
+def slope_at(
+    design: Design, travel: float, temperatures_c: Mapping[str, float | Array] | None = None, *, warm: bool = False
+) -> Slope:
+    """Work out what a turn does to the nominal unit on full rails, anywhere on the track.
+
+    Parameters
+    ----------
+    design : Design
+    travel : float
+        From the least-bias end, 0 to 1.
+    temperatures_c : mapping, optional
+        As for `solve_units`; without, all is at the ambient temperature.
+    warm : bool
+        Whether these are temperatures at rest, so that there is a slope when all has come to rest again.
+
+    Raises
+    ------
+    ModelError
+        Without a trimmer, or without an operating point there.
+    """
+    trimmer = design.spreader.trimmer
+    if trimmer is None:
+        raise ModelError(f"{design.name} has no trimmer", "a trimmer, where its slope is asked for")
+    condition = full_rails(design, trimmer=travel, when="cold")
+    here = solve_units(design, nominal(design), condition, temperatures_c=temperatures_c, loading="none")
+    if not here.converged[0]:
+        raise ModelError(f"{design.name} has no operating point at {travel:.0%} of its trimmer's travel", "one")
+    turned = _derivatives(design, here, travel)
+    per_turn = 1.0 / trimmer.turns
+    settled_v, settled_a = turned.settled(design) if warm else (None, None)
+    return Slope(
+        travel=travel,
+        drop_v_per_turn=float(turned.drop[0]) * per_turn,
+        current_a_per_turn=float(turned.current[0]) * per_turn,
+        settled_drop_v_per_turn=None if settled_v is None else settled_v * per_turn,
+        settled_current_a_per_turn=None if settled_a is None else settled_a * per_turn,
+    )
+
+
+@dataclass(frozen=True)
+class _Derivatives:
+    """First-order changes by the travel (first) and by each transistor's temperature (1/K).
+
+    Shapes: drop and current (1 + parts,), power (parts, 1 + parts).
+    """
+
+    drop: Array
+    current: Array
+    power: Array
+
+    def settled(self, design: Design) -> tuple[float | None, float | None]:
+        """Change of drop and current by the travel with the temperatures following; None where they run away."""
+        parts = len(heat_nodes(design).parts)
+        rest = heat_nodes(design).rest[:parts]
+        loop = rest @ self.power[:, 1:]
+        if float(np.max(np.linalg.eigvals(loop).real)) >= 1.0:
+            return None, None
+        warmer = np.linalg.solve(np.eye(parts) - loop, rest @ self.power[:, 0])
+        return (
+            float(self.drop[0] + self.drop[1:] @ warmer), float(self.current[0] + self.current[1:] @ warmer),
+        )  # fmt: skip
+
+
+def _derivatives(design: Design, here: Solved, place: float) -> _Derivatives:
+    parts = heat_nodes(design).parts
+    step = _TURN if place < 0.5 else -_TURN
+    directions = len(parts) + 2
+    values = dict(here.solution.values)
+    sections = {"spreader.trimmer.track": nominal(design)["spreader.trimmer.track"]}
+    travel = np.full(directions, place)
+    travel[0] += step
+    set_trimmer(design, sections, travel)
+    values |= {key: array for key, array in sections.items() if key in values}
+    for index, part in enumerate(parts, 1):
+        kelvin = np.repeat(values[f"{part}.kelvin"], directions)
+        kelvin[index] += _WARMER_K
+        values[f"{part}.kelvin"] = kelvin
+    moved = Response(here.solution).moved(values, directions)
+    steps = np.array([step, *[_WARMER_K] * len(parts)])
+
+    def change(array: Array) -> Array:
+        return np.asarray((array[:-1] - array[-1]) / steps)
+
+    upper, lower = (moved.voltage(node) for node in build(design).between["emitter.pair.1"])
+    currents = [moved.current(f"emitter.upper.{n}") for n in range(1, design.output.pairs + 1)]
+    return _Derivatives(
+        drop=change((upper - lower) / 2.0),
+        current=change(np.asarray(np.sum(currents, axis=0))),
+        power=np.array([change(moved.transistor(part).power_w) for part in parts]),
+    )
+
+
+def open_wiper(design: Design, limit_a: float | None = None) -> OpenWiper:
+    """Find out what an open wiper does to the nominal unit at its target (or at the end nearest to it).
+
+    Parameters
+    ----------
+    design : Design
+    limit_a : float, optional
+        The supply's current limit per rail (A); without, twice the larger rail current at the target.
+
+    Raises
+    ------
+    ModelError
+        As `at_target`, or when there is no solution with the wiper open.
+    """
+    unit, travel = at_target(design)
+    if not unit.converged[0]:
+        raise ModelError(f"{design.name} has no operating point where its trimmer is nearest to the target", "one")
+    before = _idle(design, unit)
+    limit = LIMIT_FACTOR * before.supply_a if limit_a is None else limit_a
+    condition = full_rails(design, trimmer=min(max(travel, 0.0), 1.0), limit_a=limit)
+    opened = solve_units(
+        design, nominal(design), condition, Fault("spreader.trimmer", "wiper open"),
+        temperatures_c=unit.temperatures_c, loading="none",
+    )  # fmt: skip
+    if not opened.converged[0]:
+        raise ModelError(f"{design.name}: no operating point with the trimmer's wiper open", "one", "Check the design")
+    after = _idle(design, opened)
+    in_limit = after.supply_a >= _IN_LIMIT * limit
+    falls = after.drop_v <= before.drop_v * (1.0 + SAME_DROP)
+    return OpenWiper(limit_a=limit, before=before, after=after, in_limit=in_limit, safe=falls and not in_limit)
+
+
+def _idle(design: Design, solved: Solved) -> Idle:
+    points = {name: float(value[0]) for name, value in solved.points.items()}
+    return Idle(
+        spread_v=points["spread"],
+        drop_v=float(drop_v(solved)[0]),
+        quiescent_a=float(quiescent_a(design, solved)[0]),
+        positive_v=points["rail+"],
+        negative_v=points.get("rail-", 0.0),
+        supply_a=max(points["rail+.current"], points.get("rail-.current", 0.0)),
+    )
+
+
+def cold_to_warm(design: Design, units: int = REPORT_UNITS, seed: int = 0) -> ColdToWarm:
+    """Find out what the target's trimmer position reads cold, and what warm.
+
+    Raises
+    ------
+    ModelError
+        As `at_target`; when the nominal unit does not reach its target, or has no warm state there.
+    """
+    unit, travel = at_target(design)
+    if not 0.0 <= travel <= 1.0:
+        raise ModelError(f"{design.name}: the target is out of the trimmer's reach", "a target within its travel")
+    held = design.target.when
+    other = "cold" if held == "warm" else "warm"
+    condition = full_rails(design, trimmer=travel, when=other)
+    away = solve_units(design, nominal(design), condition, loading="none")
+    if not away.converged[0]:
+        raise ModelError(
+            f"{design.name} has no {other} state with the trimmer where its {held} target is", "a state of rest",
+            "Look at heat sink and tracking in the design file",
+        )  # fmt: skip
+    group = _drawn(design, units, seed)
+    which = np.flatnonzero(group.reached)
+    drops = np.zeros(0)
+    if which.size:
+        found = solve_units(
+            design, take(group.parameters, which), condition, position=group.travel[which], start=away, loading="none"
+        )
+        drops = drop_v(found)[found.converged]
+    target_v = float(drop_v(unit)[0])
+    at = Span(nominal=target_v, low=target_v, high=target_v)
+    moved = _span(float(drop_v(away)[0]), drops)
+    return ColdToWarm(
+        cold_v=at if held == "cold" else moved,
+        warm_v=at if held == "warm" else moved,
+        held=held,
+        share_without=1.0 - drops.size / max(1, which.size),
+    )
+
+
+@lru_cache(maxsize=16)
+def trimmer_report(design: Design, units: int = REPORT_UNITS, seed: int = 0) -> TrimmerReport:
+    """Collect all about a design's trimmer; what the model has no answer to is None. Cached.
+
+    Raises
+    ------
+    ModelError
+        When the nominal unit has no operating point at its target.
+    """
+    target_v = target_drop_v(design)
+    if design.spreader.trimmer is None:
+        return _fixed(design, target_v, units, seed)
+    at_target(design)
+    report = TrimmerReport(target_v=target_v, present=True)
+    for part in ("authority", "slope", "open_wiper", "cold_to_warm"):
+        try:
+            if part == "authority":
+                report = replace(report, authority=authority(design, units, seed))
+            elif part == "slope":
+                report = replace(report, slope=slope(design))
+            elif part == "open_wiper":
+                report = replace(report, open_wiper=open_wiper(design))
+            else:
+                report = replace(report, cold_to_warm=cold_to_warm(design, units, seed))
+        except ModelError:
+            continue
+    return report
+
+
+def _fixed(design: Design, target_v: float, units: int, seed: int) -> TrimmerReport:
+    condition = full_rails(design)
+    unit = solve_units(design, nominal(design), condition, loading="none")
+    if not unit.converged[0]:
+        raise ModelError(f"{design.name} has no operating point at full rails", "one", "Check the design file")
+    drawn = solve_units(design, draw(design, units, seeds("limits", seed)), condition, start=unit, loading="none")
+    drops = drop_v(drawn)
+    within = drawn.converged & (np.abs(drops - target_v) <= design.target.tolerance * target_v)
+    return TrimmerReport(
+        target_v=target_v,
+        present=False,
+        fixed_v=_span(float(drop_v(unit)[0]), drops[drawn.converged]),
+        share_at_target=float(np.mean(within)),
+    )
+
+
+def _span(value: float, values: Array) -> Span:
+    if not values.size:
+        return Span(nominal=value, low=float("nan"), high=float("nan"))
+    low, high = np.quantile(values, _OUTSIDE, method="nearest")
+    return Span(nominal=value, low=float(low), high=float(high))
