@@ -474,7 +474,8 @@ def bias_report(design: Design, condition: Condition, loads_ohm: Sequence[float]
     ----------
     design : Design
     condition : Condition
-        Gives the rails, the present bias and how warm the junctions are, all of the nominal unit.
+        Gives the present bias and how warm the junctions are, both of the nominal unit. The rails are always the
+        design's full ones: on lower ones the output current hardly leaves what both halves conduct at rest.
     loads_ohm : sequence of float
 
     Raises
@@ -486,8 +487,8 @@ def bias_report(design: Design, condition: Condition, loads_ohm: Sequence[float]
     if not unit.converged[0]:
         raise ModelError(f"{design.name}: the nominal unit found no state of rest", "one, for its bias to be looked at")
     setting = Setting(
-        positive_v=condition.positive_v,
-        negative_v=condition.negative_v,
+        positive_v=design.rails.positive_v,
+        negative_v=design.rails.negative_v,
         temperatures_c=tuple(float(unit.temperatures_c[part.name][0]) for part in transistors_of(design)),
     )
     target_v, present_v = target_drop_v(design), float(unit.points["emitter.pair.1"][0]) / 2.0

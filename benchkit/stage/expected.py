@@ -13,6 +13,7 @@ import math
 import time
 from collections.abc import Sequence
 from dataclasses import asdict, dataclass
+from functools import lru_cache
 
 import numpy as np
 
@@ -139,8 +140,9 @@ class Ensemble:
     good: Mask
 
 
+@lru_cache(maxsize=4)
 def ensemble(design: Design, condition: Condition, units: int = DEFAULT_UNITS, seed: int = 0) -> Ensemble:
-    """Draw and solve healthy units under a powered condition.
+    """Draw and solve healthy units under a powered condition; the last few are kept, and nobody changes them.
 
     Raises
     ------
@@ -263,28 +265,13 @@ def expected_unpowered(
     names = [points] if isinstance(points, str) else points
     if names is None:
         names = [point.name for point in points_of(design) if not point.powered]
-    parameters = draw(design, units, seeds("limits", seed))
     limits = []
     solved = units
-    condition = Unpowered(point=names[0], trimmer=trimmer, ambient_c=ambient_c)
     for name in names:
-        condition = Unpowered(point=find_point(design, name).name, trimmer=trimmer, ambient_c=ambient_c)
-        unit = solve_unpowered(design, nominal(design), condition)
-        drawn = solve_unpowered(design, parameters, condition)
-        good = np.broadcast_to(drawn.converged, units)
-        failed = int(np.count_nonzero(~good))
-        if failed > MOST_UNSOLVED * units or not unit.converged[0]:
-            raise _unsolved(design, condition, failed, units)
+        one, failed = _unpowered_limits(design, find_point(design, name).name, trimmer, units, seed, ambient_c)
+        limits.append(one)
         solved = min(solved, units - failed)
-        value: float | None = float(unit.values[0])
-        low, high = interval(np.broadcast_to(drawn.values, units)[good])
-        if name.startswith("ohm.heatsink."):
-            low = LEAST_INSULATION_OHM
-        elif math.isinf(low):
-            low = OVER_RANGE * drawn.range.full_scale
-        if value is not None and math.isinf(value):
-            value = None
-        limits.append(PointLimits(point=name, unit=find_point(design, name).unit, nominal=value, low=low, high=high))
+    condition = Unpowered(point=limits[-1].point, trimmer=trimmer, ambient_c=ambient_c)
     return Expected(
         points=tuple(limits),
         units=units,
@@ -294,6 +281,34 @@ def expected_unpowered(
         solve_seconds=time.perf_counter() - began,
         condition=condition,
     )
+
+
+@lru_cache(maxsize=128)
+def _unpowered_limits(
+    design: Design, name: str, trimmer: TrimmerPosition, units: int, seed: int, ambient_c: float | None
+) -> tuple[PointLimits, int]:
+    """Limits of one unpowered reading, and how many units have no solution; kept for whoever asks next."""
+    condition = Unpowered(point=name, trimmer=trimmer, ambient_c=ambient_c)
+    unit = solve_unpowered(design, nominal(design), condition)
+    drawn = solve_unpowered(design, _limits_draw(design, units, seed), condition)
+    good = np.broadcast_to(drawn.converged, units)
+    failed = int(np.count_nonzero(~good))
+    if failed > MOST_UNSOLVED * units or not unit.converged[0]:
+        raise _unsolved(design, condition, failed, units)
+    value: float | None = float(unit.values[0])
+    low, high = interval(np.broadcast_to(drawn.values, units)[good])
+    if name.startswith("ohm.heatsink."):
+        low = LEAST_INSULATION_OHM
+    elif math.isinf(low):
+        low = OVER_RANGE * drawn.range.full_scale
+    if value is not None and math.isinf(value):
+        value = None
+    return PointLimits(point=name, unit=find_point(design, name).unit, nominal=value, low=low, high=high), failed
+
+
+@lru_cache(maxsize=2)
+def _limits_draw(design: Design, units: int, seed: int) -> Parameters:
+    return draw(design, units, seeds("limits", seed))
 
 
 def expected_json(

@@ -41,7 +41,7 @@ from benchkit.stage.latent import (
     tiled,
 )
 from benchkit.stage.points import find_point, transistors_of
-from benchkit.stage.runs import Run, set_trimmer
+from benchkit.stage.runs import NO_METER_OHM, Run, State, compiled, set_trimmer
 from benchkit.stage.topologies import VOLTMETER_OHM, Variant, build
 from benchkit.stage.unpowered import COMPLIANCE_V, OVER_RANGE, nominal_range
 
@@ -51,6 +51,8 @@ Matrix = NDArray[np.float64]
 
 STEP = 1e-6
 """How far a coordinate is moved for a derivative (K for a temperature)."""
+SLIGHT_LOAD = 0.99
+"""A voltmeter that leaves less than this share of the bare voltage is put into the circuit."""
 SECTION_UNITS = 12_000
 """Units that are evaluated together for derivatives: few enough to stay in the cache."""
 
@@ -119,7 +121,38 @@ class Powered:
         for low in range(0, units, step):
             part = slice(low, min(low + step, units))
             slope[part] = self._slope(z[:, part], faults[part], state.temperature, response, part)
-        return _finished(f, slope * shares[:, :, None], state.converged, state.solution)
+        slope *= shares[:, :, None]
+        loaded = np.argwhere((shares < SLIGHT_LOAD) & state.converged[:, None])
+        if len(loaded):
+            self._load(z, faults, state, loaded, f, slope)
+        return _finished(f, slope, state.converged, state.solution)
+
+    def _load(
+        self, z: Array, faults: Sequence[Fault], state: State, loaded: Index, f: Matrix, slope: Matrix
+    ) -> None:
+        """Solve again, with the voltmeter there, what it loads by more than a little; pairs of unit and point."""
+        unit, row = loaded[:, 0], loaded[:, 1]
+        fuses = self.condition.fuse_ohm is not None
+        circuit = compiled(self.design, Variant(fuses=fuses, meters=True))
+        bare = state.solution.take(unit)
+        meters = [key for key in circuit.keys if key.startswith("meter.")]
+        own = np.array([f"meter.{self.points[k]}" for k in row])
+        added = {key: np.where(own == key, VOLTMETER_OHM, NO_METER_OHM) for key in meters}
+        values = {key: value for key, value in bare.values.items() if key in circuit.keys} | added
+        solution = circuit.solve(values, len(unit), dict(zip(bare.plan.names, bare.x, strict=True)), effort="borrow")
+        with np.errstate(all="ignore"):
+            response = Response(solution)
+            reads = self._read(solution, state.temperature["heatsink"][unit])
+            temperature = {name: value[unit] for name, value in state.temperature.items()}
+            step = max(1, SECTION_UNITS // (len(z) + 1))
+            for low in range(0, len(unit), step):
+                part = slice(low, min(low + step, len(unit)))
+                moves = self._slope(
+                    z[:, unit[part]], [faults[k] for k in unit[part]], temperature, response, part,
+                    {key: value[part] for key, value in added.items()},
+                )  # fmt: skip
+                slope[unit[part], row[part]] = moves[np.arange(len(row[part])), row[part]]
+        f[unit, row] = np.where(solution.converged, reads[np.arange(len(row)), row], f[unit, row])
 
     def _run(self, z: Array, faults: Sequence[Fault]) -> Run:
         condition, row = self.condition, self.coordinates.row
@@ -140,28 +173,35 @@ class Powered:
         return np.full(z.shape[1], float(wanted))
 
     def _slope(
-        self, z: Array, faults: Sequence[Fault], temperature: dict[str, Array], response: Response, part: slice
+        self,
+        z: Array,
+        faults: Sequence[Fault],
+        temperature: dict[str, Array],
+        response: Response,
+        part: slice,
+        meters: dict[str, Array] | None = None,
     ) -> Matrix:
-        """Derivatives of the bare readings of a part of the units."""
+        """Derivatives of the bare readings of a part of the units; with meters, at fixed temperatures."""
         count, units = z.shape
-        extra = len(self._names) if self._warm else 0
+        close = self._warm and meters is None
+        extra = len(self._names) if close else 0
         many = count + extra + 1
         moved_z = tiled(z, STEP, extra)
         run = self._run(moved_z, list(faults) * many)
         own = {name: np.tile(temperature[name][part], many) for name in (*self._names, "heatsink")}
-        if self._warm:
+        if close:
             for number, name in enumerate(self._names):
                 own[name][(count + number) * units : (count + number + 1) * units] += STEP
-        else:
+        elif not self._warm:
             own = dict.fromkeys(own, np.asarray(run.ambient_c))
-        values = run.values(own)
+        values = run.values(own) | {key: np.tile(value, many) for key, value in (meters or {}).items()}
         set_trimmer(self.design, values, self._travel(moved_z))
         apply(values, run.faults, self.design)
         keys = response.solution.values
         moved = response.moved({key: values.get(key, keys[key]) for key in keys}, many, part)
         reads = self._read(moved, own["heatsink"]).reshape(many, units, -1)
         slope = np.moveaxis(reads[:-1] - reads[-1:], 0, 2) / STEP
-        if not self._warm:
+        if not close:
             return slope
         return self._closed(slope, moved, run, count)
 
@@ -240,7 +280,7 @@ class UnpoweredPoints:
         self._circuit = _bench_circuit(design, self.points)
         self._between = build(design, Variant(powered=False)).between
         self._names = tuple(part.name for part in transistors_of(design))
-        ranges = [nominal_range(design, point) for point in points]
+        ranges = [nominal_range(design, point, trimmer) for point in points]  # type: ignore[arg-type]
         self._amps = np.array([one.amps for one in ranges])
         self._divisor = np.array([
             1.0 if find_point(design, point).function == "diode" else one.amps

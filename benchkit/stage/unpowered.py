@@ -23,7 +23,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from benchkit.circuit.solve import Solution
-from benchkit.stage.conditions import Unpowered
+from benchkit.stage.conditions import TrimmerPosition, Unpowered
 from benchkit.stage.design import ZERO_CELSIUS_K, Design
 from benchkit.stage.draws import Array, Parameters, nominal
 from benchkit.stage.faults import Fault, apply
@@ -151,9 +151,9 @@ def solve_unpowered(
     )  # fmt: skip
 
 
-def nominal_range(design: Design, point: str) -> MeterRange:
-    """Range that an unpowered point is read on: what the nominal unit, its trimmer in the middle, asks for."""
-    return _nominal_unit(design, Unpowered(point=point, trimmer=0.5)).range
+def nominal_range(design: Design, point: str, trimmer: TrimmerPosition = "unknown") -> MeterRange:
+    """Range that an unpowered point is read on: what the nominal unit asks for, its trimmer in the middle if unknown."""
+    return _nominal_unit(design, Unpowered(point=point, trimmer="unknown" if trimmer == "target" else trimmer)).range
 
 
 @lru_cache(maxsize=256)

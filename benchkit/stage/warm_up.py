@@ -164,6 +164,7 @@ class WarmUp:
     def _cubic(self, times_s: Array) -> Array:
         left = np.clip(np.searchsorted(self.times_s, times_s, side="right") - 1, 0, len(self.times_s) - 2)
         step = self.times_s[left + 1] - self.times_s[left]
+        step[step <= 0.0] = 1.0  # a stage that is at rest from the start has one moment only
         u = (times_s - self.times_s[left]) / step
         slopes = [self.drop_slope[:, k] * step for k in (left, left + 1)]
         return _hermite(u, self.drop_v[:, left], self.drop_v[:, left + 1], *slopes)
