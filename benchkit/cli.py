@@ -194,20 +194,54 @@ def walk(**options: Any) -> int:
 @click.option("--ambient", default=None, metavar="degC", help="Ambient temperature; the design's if left out.")
 @click.option("--units", type=click.IntRange(min=50), default=None, metavar="N", help="Units drawn for the limits.")
 @click.option("--seed", type=click.IntRange(min=0), default=0, show_default=True, metavar="N")
+@click.option("--load", "loads", multiple=True, metavar="OHM", default=("8 ohm", "4 ohm"), show_default=True,
+              help="Load at the output for what a bias error costs; at most two.")  # fmt: skip
 @click.option("--json", "as_json", is_flag=True, help="For programs.")
-def expect(design: str, as_json: bool, units: int | None, seed: int, **given: Any) -> int:
-    """Say what every test point of a design should read, with limits that hold 99.73 % of units."""
+@click.option(
+    "--full", is_flag=True, help="With --json: heat, trimmer and what a bias error costs too, as the text has."
+)
+def expect(
+    design: str, as_json: bool, full: bool, units: int | None, seed: int, loads: tuple[str, ...], **given: Any
+) -> int:
+    """Say what every test point of a design should read, with limits that hold 99.73 % of units.
+
+    Below the table: heat, what the trimmer can do, and what a wrong bias costs.
+    """
     from benchkit import shipped
     from benchkit.stage.design import load_design
     from benchkit.stage.expected import DEFAULT_UNITS, expected_json
 
     loaded = load_design(shipped.find_design(design))
-    found = expected_json(loaded, _condition(loaded, given), units or DEFAULT_UNITS, seed)
-    if as_json:
-        _print_json(found)
-    else:
-        click.echo(_expected_table(found))
+    condition, loads_ohm = _condition(loaded, given), _loads(loads)
+    found = expected_json(loaded, condition, units or DEFAULT_UNITS, seed)
+    if not as_json:
+        from benchkit.ui.expect_text import expect_lines
+
+        click.echo("\n".join(expect_lines(loaded, condition, found, loads_ohm)))
+        return 0
+    if full:
+        from benchkit.stage.more_expected import more_json
+
+        found |= more_json(loaded, condition, loads_ohm)
+    _print_json(found)
     return 0
+
+
+def _loads(texts: tuple[str, ...]) -> tuple[float, ...]:
+    from benchkit import quantities
+
+    if len(texts) > 2:
+        raise EntryError(f"--load: {len(texts)} loads came", "one or two")
+    loads = []
+    for text in texts:
+        try:
+            ohm = quantities.parse(text, "ohm")
+        except EntryError as error:
+            raise EntryError(f"--load: {error.came}", error.expected, error.next_step) from None
+        if not 0.5 <= ohm <= 1000.0:
+            raise EntryError(f"--load: {quantities.show(ohm, 'ohm')} came", "0.5 ohm to 1 kohm")
+        loads.append(ohm)
+    return tuple(loads)
 
 
 def _condition(design: Any, given: dict[str, Any]) -> Any:
@@ -237,26 +271,6 @@ def _condition(design: Any, given: dict[str, Any]) -> Any:
     )
 
 
-def _expected_table(found: dict[str, Any]) -> str:
-    from benchkit.quantities import show
-
-    conditions, design = found["conditions"], found["design"]
-    rails = f"{show(conditions['positive_v'], 'V')} and {show(conditions['negative_v'], 'V')}"
-    lines = [
-        f"{design['name']} {design['revision']}, rails {rails}, trimmer {conditions['trimmer']}, {conditions['when']}",
-        f"{found['solved']} of {found['units']} units solved, seed {found['seed']}",
-        "",
-        f"{'test point':30s} {'nominal':>12s} {'lowest':>12s} {'highest':>12s}",
-    ]
-    for point in found["points"]:
-        cells = [
-            show(point[key], point["unit"]) if point[key] is not None else "-" for key in ("nominal", "low", "high")
-        ]
-        lines.append(f"{point['point']:30s} {cells[0]:>12s} {cells[1]:>12s} {cells[2]:>12s}")
-    lines += ["", "99.73 % of healthy units of this design read between lowest and highest."]
-    return "\n".join(lines)
-
-
 @cli.command(
     epilog=_examples(
         "benchkit judge tern-40 readings.csv",
@@ -273,52 +287,28 @@ def _expected_table(found: dict[str, Any]) -> str:
 def judge(
     design: str, readings: tuple[Path, ...], bench_path: Path | None, units: int | None, seed: int, as_json: bool
 ) -> int:
-    """Judge readings in CSV files against the limits of a design and the named rules."""
+    """Judge readings in CSV files, one unit a file: limits, named rules, suspects, what to read next."""
     from benchkit import shipped
     from benchkit.judge import table
-    from benchkit.measure.accuracy import STATED_DEFAULT
     from benchkit.stage.design import load_design
 
     loaded = load_design(shipped.find_design(design))
-    accuracy = STATED_DEFAULT
+    accuracy = None
     if bench_path is not None:
         from benchkit.instruments.bench import load_bench
 
         accuracy = load_bench(bench_path).accuracy
-    passed = True
-    for path in readings:
-        found = table.judge_table(
-            loaded, _text_of(path), accuracy=accuracy, units=units, seed=seed, file_name=str(path)
-        )
-        passed = passed and found.verdict == "pass"
+    tables = table.judge_files(
+        loaded, [(str(path), _text_of(path)) for path in readings], accuracy=accuracy, units=units, seed=seed
+    )
+    for path, found in zip(readings, tables, strict=True):
         if as_json:
             _print_json(found.as_json())
         else:
-            click.echo(_judged_table(found, str(path)))
-    return 0 if passed else 1
+            from benchkit.ui.judge_text import judged_text
 
-
-def _judged_table(table: Any, name: str) -> str:
-    from benchkit.quantities import show
-
-    lines = [
-        f"{name}: {table.verdict.upper()}",
-        "",
-        f"{'test point':30s} {'value':>12s} {'lowest':>12s} {'highest':>12s}",
-    ]
-    for judged in table.readings:
-        reading, limits = judged.entry.reading, judged.limits
-        low, high = (None, None) if limits is None else (limits.low, limits.high)
-        cells = ["-" if value is None else show(value, reading.unit) for value in (low, high)]
-        value = show(reading.measured, reading.unit)
-        verdict = judged.judgement.verdict
-        lines.append(f"{reading.point:30s} {value:>12s} {cells[0]:>12s} {cells[1]:>12s}  {verdict}")
-    for rule in table.rules:
-        lines += ["", f"{rule.rule}: {rule.verdict}. {rule.why}"]
-        if rule.would_decide:
-            lines.append(f"  What would decide it: {rule.would_decide}.")
-    lines += ["", f"Readings without an uncertainty were taken to be by: {table.accuracy.name}."]
-    return "\n".join(lines)
+            click.echo(judged_text(found, str(path)))
+    return 0 if all(found.verdict == "pass" for found in tables) else 1
 
 
 def _text_of(path: Path) -> str:
@@ -422,11 +412,12 @@ def check(design: str, procedure: str, bench_path: Path | None, as_json: bool) -
     from benchkit.procedure.file import load_procedure
     from benchkit.procedure.plan import make_plan
     from benchkit.stage.design import load_design
+    from benchkit.stage.heat_checks import check_heat
     from benchkit.stage.reach import check_target
 
     loaded = load_design(shipped.find_design(design))
     steps = load_procedure(shipped.find_procedure(procedure))
-    findings = [str(finding) for finding in check_target(loaded)]
+    findings = [str(finding) for finding in (*check_target(loaded), *check_heat(loaded))]
     plan = make_plan(steps, loaded)
     if bench_path is not None:
         from benchkit.instruments.bench import load_bench

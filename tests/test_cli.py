@@ -193,12 +193,31 @@ def test_a_wrong_bench(run: Run, tmp_path: Path) -> None:
         (("--trimmer", "middle"), "middle"),
         (("--trimmer", "1.5"), "1.5"),
         (("--ambient", "900 degC"), "ambient"),
+        (("--load", "eight"), "--load"),
+        (("--load", "8 V"), "--load"),
+        (("--load", "0 ohm"), "--load"),
+        (("--load", "8 ohm", "--load", "4 ohm", "--load", "2 ohm"), "3 loads"),
     ],
 )
 def test_a_wrong_entry(run: Run, arguments: tuple[str, ...], words: str) -> None:
     status, out, err = run("expect", "breadboard", *arguments)
     assert (status, out) == (2, "")
     assert words in one_sentence(err)
+
+
+def test_expect_for_people_and_for_programs(run: Run) -> None:
+    status, out, _ = run("expect", "breadboard", "--units", "60", "--load", "6 ohm")
+    assert status == 0
+    assert max(len(line) for line in out.splitlines()) <= 80
+    assert "Gain into 6 ohm" in out
+    status, out, _ = run("expect", "breadboard", "--units", "60", "--json")
+    found = json.loads(out)
+    fixed = ["format", "design", "conditions", "units", "solved", "out_of_reach", "seed", "solve_seconds", "points"]
+    assert (status, list(found)) == (0, fixed)
+    full = json.loads(run("expect", "breadboard", "--units", "60", "--json", "--full", "--load", "6 ohm")[1])
+    assert list(full) == [*fixed, "heat", "trimmer", "bias"]
+    assert full["bias"]["loads_ohm"] == [6.0]
+    assert full["points"] == found["points"]
 
 
 @pytest.mark.parametrize("plant", ["nothing", "emitter.upper.9: open", "emitter.upper.1: tired", "emitter.upper.1"])

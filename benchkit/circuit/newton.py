@@ -13,10 +13,13 @@ The recipe, in the order in which a unit meets it
    a failure, and a last solve without. (What step 4 can't begin on, it begins on so.)
 6. Then by pseudo-transient continuation: 0.01 S from every node to its last accepted voltage, a quarter of that after a
    success, four times that after a failure, a dozen failures at most, and a last solve without.
+7. Then as in step 4 from knees of other widths: which of them a unit finds its way from is a matter of luck.
 
 A solution counts only when every law was linearised where it is evaluated, and each node's currents add up to less than
-1e-7 of the sum of their magnitudes + 10 pA. Units are done one by one; those that are done leave the batch. Each
-accepted unit still gets the step that was computed for the others beside it.
+1e-7 of the sum of their magnitudes + 10 pA. Units are done one by one; those that are done leave the batch. An accepted
+unit still goes on until it passes with 0.01 pA in place of 10 pA and a step moves no node by more than `_FINAL_STEP_V`,
+or by next to nothing: 10 pA are millivolts at a node that hardly anything holds. After `_MOST_POLISHING` steps it is left
+as it is.
 """
 
 from __future__ import annotations
@@ -41,17 +44,23 @@ DENSE_UP_TO = 40
 """Batches of so few units are solved densely: the interpreter's overhead outweighs the elimination's economy."""
 EXACT_SHARE = 1e-3
 """A unit that passes the test this many times better is left as it is; another gets one more step."""
+FINE_FLOOR_A = 1e-14
+EXACT_FLOOR_A = 1e-17
+"""What counts as no current there: 10 uV across the 1e-12 S that may be all that holds a node."""
 _SAMPLES = 12
 _MOST_ROUNDS = 200
 _MOST_STEPS = 40
 _LAST_EXPONENT = -12.0
 _LEAST_STEP = 0.03
 _SOFTEST_EXPONENT = 6.0
+_OTHER_EXPONENTS = (5.0, 7.0, 4.0)
 _INNER_ITERATIONS = 25
 _WARM_ITERATIONS = 15
 _MOST_SHUNT_S = 1e3
 _MOST_FAILURES = 12
-_FINAL_STEP_V = 1e-3
+_FINAL_STEP_V = 2e-4
+_NO_STEP_V = 1e-7
+_MOST_POLISHING = 8
 
 Iterations = NDArray[np.int64]
 
@@ -136,25 +145,28 @@ def iterate(
     plan, units = batch.plan, batch.units
     outcome = Outcome(x.copy(), np.zeros(units, np.bool_), np.zeros(units, np.int64), np.full(units, np.inf))
     live: Index = np.arange(units)
-    for iteration in range(most + 1):
+    since = np.zeros(units, np.int64)  # steps since a unit was accepted
+    for iteration in range(most + 1 + _MOST_POLISHING):
         linear = batch.evaluate(x, arguments, start=iteration == 0)
         residual = plan.sum_currents(linear.currents, x, batch.volts)
         if shunt is not None and anchor is not None:
             residual[: plan.nodes] += shunt * (x[: plan.nodes] - anchor[: plan.nodes])
-        done, exact = _accepted(batch, linear, x, residual)
+        done, fine, exact = _accepted(batch, linear, x, residual)
         outcome.iterations[live] = iteration
         outcome.residual_a[live] = np.abs(residual[: plan.nodes]).max(axis=0)
-        outcome.done[live] = done
-        outcome.x[:, live] = x
-        if exact.all() or (iteration == most and not done.any()):
+        kept = done | ~outcome.done[live]
+        outcome.done[live] |= done
+        outcome.x[:, live[kept]] = x[:, kept]
+        if exact.all() or (iteration >= most and not outcome.done[live].any()):
             break
         if exact.any():
             index = np.flatnonzero(~exact)
-            live, x, residual, done, batch = (
+            live, x, residual, done, fine, batch = (
                 live[index],
                 x[:, index],
                 residual[:, index],
                 done[index],
+                fine[index],
                 batch.take(index),
             )
             linear = linear.take(index)
@@ -163,10 +175,13 @@ def iterate(
         step = solver.solve(batch.matrix(linear, shunt), -residual)
         finite = np.isfinite(step).all(axis=0)
         x = x + step
-        polished = done & finite & (np.abs(step[: plan.nodes]) < _FINAL_STEP_V).all(axis=0)
+        longest_v = np.abs(step[: plan.nodes]).max(axis=0)
+        polished = done & finite & (longest_v < _FINAL_STEP_V)
         outcome.x[:, live[polished]] = x[:, polished]
-        index = np.flatnonzero(finite & ~done)
-        if not len(index) or iteration == most:
+        since[live] += outcome.done[live]
+        stays = finite & ~(polished & (fine | (longest_v < _NO_STEP_V))) & (since[live] < _MOST_POLISHING)
+        index = np.flatnonzero(stays if iteration < most else stays & outcome.done[live])
+        if not len(index):
             break
         arguments = linear.arguments
         if len(index) < len(live):
@@ -176,33 +191,38 @@ def iterate(
     return outcome
 
 
-def _accepted(batch: Batch, linear: Linearised, x: Array, residual: Array) -> tuple[Mask, Mask]:
-    """Which units pass the test, and which so well that another step has nothing to add."""
+def _accepted(batch: Batch, linear: Linearised, x: Array, residual: Array) -> tuple[Mask, Mask, Mask]:
+    """Which units pass the test, which at nodes without current too, and which so well that a step has nothing to add."""
     plan = batch.plan
     done = ~linear.held
-    exact = np.zeros_like(done)
+    fine, exact = np.zeros_like(done), np.zeros_like(done)
     free = np.flatnonzero(done)
     if not len(free):
-        return done, exact
+        return done, fine, exact
     left = np.abs(residual[:, free])
     scale = plan.sum_currents(linear.currents[:, free], x[:, free], batch.volts[:, free], magnitudes=True)
     floor = np.full((plan.size, 1), CURRENT_FLOOR_A)
     floor[plan.nodes :] = CONDITION_TOLERANCE_V
     done[free] = (left <= CURRENT_TOLERANCE * scale + floor).all(axis=0)
+    floor[: plan.nodes] = FINE_FLOOR_A
+    fine[free] = (left <= CURRENT_TOLERANCE * scale + floor).all(axis=0)
+    floor[: plan.nodes] = EXACT_FLOOR_A / EXACT_SHARE
     exact[free] = (left <= EXACT_SHARE * (CURRENT_TOLERANCE * scale + floor)).all(axis=0)
-    return done, exact
+    return done, fine, exact
 
 
-def solve_by_softening(batch: Batch, solver: LinearSolver, cold: ColdStart) -> Outcome:
-    """Start each unit with wide knees of servos and supplies, and let them narrow to what they are."""
-    soft = batch.softened(np.full(batch.units, 10.0**_SOFTEST_EXPONENT))
+def solve_by_softening(
+    batch: Batch, solver: LinearSolver, cold: ColdStart, softest: float = _SOFTEST_EXPONENT
+) -> Outcome:  # fmt: skip
+    """Start each unit with wide knees of servos and supplies, 10**softest times, and let them narrow to what they are."""
+    soft = batch.softened(np.full(batch.units, 10.0**softest))
     begun = iterate(soft, solver, *cold(soft), most=_INNER_ITERATIONS)
     _retry(soft, begun, lambda part: solve_by_gmin(part, solver))
 
     def attempt(part: Batch, x: Array, exponent: Array) -> Outcome:
         return iterate(part.softened(10.0**exponent), solver, x, most=_INNER_ITERATIONS)
 
-    return _continue(batch, attempt, begun, _SOFTEST_EXPONENT, last=0.0, step=0.5)
+    return _continue(batch, attempt, begun, softest, last=0.0, step=0.5)
 
 
 def solve_by_gmin(batch: Batch, solver: LinearSolver) -> Outcome:
@@ -308,6 +328,8 @@ def rescue(batch: Batch, solver: LinearSolver, cold: ColdStart) -> Outcome:
         total = solve_by_softening(batch, solver, cold)
         _retry(batch, total, lambda part: solve_by_gmin(part, solver))
         _retry(batch, total, lambda part: solve_by_pseudo_transient(part, solver))
+        for softest in _OTHER_EXPONENTS:
+            _retry(batch, total, lambda part, softest=softest: solve_by_softening(part, solver, cold, softest))  # type: ignore[misc]
     return total
 
 

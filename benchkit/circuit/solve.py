@@ -164,8 +164,8 @@ class Compiled:
     ) -> None:  # fmt: skip
         """Let units that failed start from the solutions of others, many of them at once; what succeeds is kept.
 
-        Units with different faults stand in different states, and one of those is often near; so may a neighbour be, when
-        units of a kind stand beside each other.
+        Units with different faults stand in different states, and one of those is often near; so may a neighbour be,
+        when units of a kind stand beside each other.
         """
         solved, failed = np.flatnonzero(converged), np.flatnonzero(~converged)
         if not len(solved):
@@ -176,9 +176,8 @@ class Compiled:
             everywhere = solved[turn * step // _TURNS :: step]
             for low in range(0, len(failed), _BORROWERS):
                 some = failed[low : low + _BORROWERS]
-                near = np.array([
-                    solved[np.argsort(np.abs(solved - unit), kind="stable")[turn::_TURNS][:_NEIGHBOURS]] for unit in some
-                ])  # fmt: skip
+                nearest = [np.argsort(np.abs(solved - unit), kind="stable") for unit in some]
+                near = np.array([solved[order[turn::_TURNS][:_NEIGHBOURS]] for order in nearest])
                 lenders = np.concatenate([np.tile(everywhere, (len(some), 1)), near], axis=1)
                 many = lenders.shape[1]
                 batch = _batch(plan, given, np.repeat(some, many), len(some) * many)

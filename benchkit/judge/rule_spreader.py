@@ -18,7 +18,8 @@ from benchkit.judge.rule_base import (
 from benchkit.measure.readings import Reading
 from benchkit.measure.uncertainty import combine, relative_uncertainty_of_ratio
 from benchkit.quantities import show
-from benchkit.stage.trimmer import authority, open_wiper, trimmer_report
+from benchkit.stage.trimmer import authority, open_wiper
+from benchkit.stage.trimmer_report import trimmer_report
 
 SAME_DROP = 1e-3
 """Relative difference of two predicted drops below which they count as the same."""

@@ -19,9 +19,9 @@ Which rules apply to readings without a procedure:
 - feed symmetry, divider stiffness and spreader ratio, where their points were read;
 - quiescent target, where the readings say that the trimmer is at the target, in the state that the target is for.
 
-Then the suspects (`benchkit.stage.suspects`): which single fault would explain the readings, what to probe next, and what
-the readings could not show. When every reading passes but some fault is likelier than a healthy unit, the verdict over
-all is undecided: the limits of single readings can't see what all of them together say.
+Then the suspects (`benchkit.stage.suspects`): which single fault would explain the readings, what to probe next, and
+what the readings could not show. When every reading passes but some fault is likelier than a healthy unit, the verdict
+over all is undecided: the limits of single readings can't see what all of them together say.
 
 Files of several units are judged together: what was read under the same conditions shares its limits and hypotheses.
 """
@@ -135,8 +135,7 @@ class Table:
                 for result in self.rules
             ],
             "suspects": [
-                _fault(one.fault)
-                | {"probability": one.probability, "alike": [_fault(other) for other in one.alike]}
+                _fault(one.fault) | {"probability": one.probability, "alike": [_fault(other) for other in one.alike]}
                 for one in self.suspicion.suspects
             ],
             "probe_next": [{"point": probe.point, "why": probe.why} for probe in self.suspicion.probe_next],

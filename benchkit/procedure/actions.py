@@ -6,10 +6,11 @@ An action never reports back by itself: what came of it arrives at the walk as a
 from __future__ import annotations
 
 from dataclasses import dataclass
-from typing import Literal
+from typing import ClassVar, Literal
 
 from benchkit.events import Event
 from benchkit.stage.conditions import Condition, Unpowered
+from benchkit.stage.observations import Conditions, Observation
 
 QuestionKind = Literal["tell", "confirm", "text", "hold", "probes", "decide", "trim", "by hand"]
 
@@ -21,7 +22,8 @@ class Choice:
     Parameters
     ----------
     value : str
-        The word that comes back: ``done``, ``yes``, ``no``, ``again``, ``go on``, ``make safe``, ``take``, ``end``.
+        The word that comes back: ``done``, ``yes``, ``no``, ``again``, ``go on``, ``make safe``, ``probe``, ``take``,
+        ``end``.
     label : str
         What the screen says.
     wants_reason : bool
@@ -43,8 +45,9 @@ class Question:
         The item that it belongs to.
     kind : str
         ``tell`` (read, then done), ``confirm`` (yes or no), ``text`` (type something), ``hold`` (type yes),
-        ``probes`` (place them, then done), ``decide`` (after a result that is no pass), ``trim`` (turn the screw, then
-        take), ``by hand`` (something that no instrument does: set the supply, switch off).
+        ``probes`` (place them, then done), ``decide`` (after a result that is no pass, or a reading that is odd),
+        ``trim`` (turn the screw, then take), ``by hand`` (something that no instrument does: set the supply, switch
+        off).
     title, do, why, caution, expected, red, black : str
         The words of the step; empty where there is nothing to say.
     point : str
@@ -68,9 +71,14 @@ class Question:
 
 @dataclass(frozen=True, kw_only=True)
 class Action:
-    """Base of all actions; `item` names the item that it serves."""
+    """Base of all actions; `item` names the item that it serves.
+
+    An action that is `aside` is carried out beside whatever else is being done and never held up for: readings go on
+    meanwhile, and its event may come while the walk is at another item.  A newer one of its kind supersedes it.
+    """
 
     item: str
+    aside: ClassVar[bool] = False
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -102,6 +110,66 @@ class Predict(Action):
     key: str
     conditions: tuple[Condition | Unpowered, ...]
     points: tuple[str, ...]
+
+
+@dataclass(frozen=True, kw_only=True)
+class CheckWarm(Action):
+    """See whether the design comes to rest warm, before anything else.  Answer: Judged."""
+
+    conditions: tuple[Condition, ...]
+
+
+@dataclass(frozen=True, kw_only=True)
+class Target:
+    """A reading that the model is asked about: condition's name and the conditions, point, its unit."""
+
+    key: str
+    conditions: Conditions
+    point: str
+    unit: str
+
+
+@dataclass(frozen=True, kw_only=True)
+class Narrow(Action):
+    """Narrow the limits of readings still to come by those that were kept.  Answer: Narrowed, or nothing.
+
+    Parameters
+    ----------
+    after : int
+        Lines in the record when it was asked.
+    known : tuple of Observation
+        This unit's readings so far.
+    near, later : tuple of Target
+        Readings still to come: in this section, and in those after it.
+    """
+
+    aside: ClassVar[bool] = True
+    after: int
+    known: tuple[Observation, ...]
+    near: tuple[Target, ...]
+    later: tuple[Target, ...] = ()
+
+
+@dataclass(frozen=True, kw_only=True)
+class Suspect(Action):
+    """Work out what would explain this unit's readings.  Answer: Suspected, or nothing.
+
+    Parameters
+    ----------
+    after : int
+        Lines in the record when it was asked.
+    known : tuple of Observation
+    candidates : tuple of Target
+        Readings that could be taken next, from which the most telling are named.
+    names : tuple of (conditions, name)
+        How those of `known` are called in the record.
+    """
+
+    aside: ClassVar[bool] = True
+    after: int
+    known: tuple[Observation, ...]
+    candidates: tuple[Target, ...]
+    names: tuple[tuple[Conditions, str], ...]
 
 
 @dataclass(frozen=True, kw_only=True)

@@ -2,12 +2,13 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from typing import Literal
 
 from benchkit import quantities
 from benchkit.judge.limits import Limits
 from benchkit.stage.conditions import Condition, Unpowered
+from benchkit.stage.observations import Conditions
 from benchkit.stage.points import Point
 
 
@@ -16,18 +17,39 @@ class Joined:
     """Several conditions under any of which a reading may have been taken.
 
     A stage that has been powered for a while is anywhere from cold to warm; one that was trimmed is anywhere inside the
-    target's tolerance.  `words` stand at the end of the condition's name.
+    target's tolerance.  `words` stand at the end of the condition's name.  The first of three conditions lies between
+    the other two.
     """
 
     conditions: tuple[Condition, ...]
     words: str
 
+    @property
+    def ends(self) -> tuple[Condition, ...]:
+        """The ends between which a reading was taken."""
+        return self.conditions[-2:]
+
 
 AnyCondition = Condition | Unpowered | Joined
 
 ItemKind = Literal[
-    "connect", "tell", "confirm", "text", "hold", "measure", "rule", "supply", "limit check", "trim", "wait", "off"
+    "connect",
+    "warm state",
+    "tell",
+    "confirm",
+    "text",
+    "hold",
+    "measure",
+    "rule",
+    "supply",
+    "limit check",
+    "trim",
+    "wait",
+    "off",
 ]
+
+JUDGED_KINDS = frozenset({"warm state", "confirm", "measure", "rule", "supply", "limit check", "trim"})
+"""Kinds of item that end in a result; a walk passes only when each of them has one."""
 
 NEVER_PASSED_OVER = frozenset({"ohm.rails", "ohm.rail+", "ohm.rail-", "offset before load"})
 """Points and rules whose result nobody overrides, whatever the file says; nor a limit check or the trimmer's end."""
@@ -60,6 +82,11 @@ class Item:
         What the reading is taken under; None where limits are stated and nothing is predicted.
     limits : Limits or None
         Stated limits; None where they come from the model.
+    held_under : Condition, Unpowered, Joined or None
+        What the reading is taken under where its limits are stated: the trimmed drop, which tells how the unit was
+        trimmed.
+    warm : tuple of Condition
+        For ``warm state``: under these the design has to come to rest.
     rule : str
         Name of the rule, with `number`, as the ratio or volts that the rule wants.
     may_go_on : bool
@@ -85,6 +112,8 @@ class Item:
         It raises a voltage or the limit.
     resume : bool
         A walk that was cut off while or after the unit had power goes on here.
+    host : str
+        For an extra reading: the plan's item that it is to explain.
     """
 
     id: str
@@ -99,6 +128,8 @@ class Item:
     point: Point | None = None
     condition: AnyCondition | None = None
     limits: Limits | None = None
+    held_under: AnyCondition | None = None
+    warm: tuple[Condition, ...] = ()
     rule: str = ""
     number: float | None = None
     may_go_on: bool = True
@@ -116,18 +147,25 @@ class Item:
     powered: bool = False
     raises: bool = False
     resume: bool = False
+    host: str = ""
 
 
 @dataclass(frozen=True, kw_only=True)
 class Plan:
-    """The items of one walk, in order, and where its way out begins."""
+    """The items of one walk, in order, where its way out begins, and every test point that the design has."""
 
     items: tuple[Item, ...]
     made_safe: int
     resume: int
+    points: tuple[Point, ...] = field(default=(), repr=False)
 
     def __len__(self) -> int:
         return len(self.items)
+
+
+def conditions_of(condition: AnyCondition) -> Conditions:
+    """The conditions of a reading, as the model takes them: one, or the ends between which it was taken."""
+    return condition.ends if isinstance(condition, Joined) else (condition,)
 
 
 def condition_key(condition: AnyCondition) -> str:

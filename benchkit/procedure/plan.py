@@ -12,41 +12,24 @@ Rules
 
 from __future__ import annotations
 
-import math
-import re
-from collections.abc import Iterator, Mapping
 from dataclasses import replace
-from typing import Any, Literal
+from typing import Any
 
 from benchkit import quantities
-from benchkit.errors import EntryError, FileError
-from benchkit.judge.limits import Limits
-from benchkit.procedure.file import MADE_SAFE, PairText, Procedure, Section, Step
+from benchkit.errors import FileError
+from benchkit.procedure.file import MADE_SAFE, Procedure
 from benchkit.procedure.items import (
-    MOST_OFFSET_V,
-    NEVER_PASSED_OVER,
-    RAIL_LOW_V,
-    TRIMMED,
-    AnyCondition,
     Item,
-    ItemKind,
     Joined,
     Plan,
 )
+from benchkit.procedure.planner import Planner
 from benchkit.procedure.sizing import (
-    capacitors_settle_s,
-    charging_s,
-    discharge_s,
-    discharge_text,
     rails_text,
-    supply_limit_a,
-    time_text,
-    with_room,
 )
 from benchkit.stage.conditions import Condition, Unpowered
-from benchkit.stage.design import Design, target_drop_v
-from benchkit.stage.points import Point, points_of
-from benchkit.stage.reach import least_regulating_rails
+from benchkit.stage.design import Design
+from benchkit.stage.points import points_of
 
 
 def make_plan(procedure: Procedure, design: Design) -> Plan:
@@ -59,11 +42,45 @@ def make_plan(procedure: Procedure, design: Design) -> Plan:
     ModelError
         When the model finds no rails at which the stage regulates.
     """
-    items = _with_facts(tuple(_Planner(procedure, design).items()))
+    items = _with_warm_state(_with_facts(tuple(Planner(procedure, design).items())))
     _require_checks(procedure, design, items)
     made_safe = next(number for number, item in enumerate(items) if item.section == MADE_SAFE)
     resume = next(number for number, item in enumerate(items) if item.resume)
-    return Plan(items=items, made_safe=made_safe, resume=resume)
+    return Plan(items=items, made_safe=made_safe, resume=resume, points=points_of(design))
+
+
+def _with_warm_state(items: tuple[Item, ...]) -> tuple[Item, ...]:
+    """Put a check behind the bench's: whether the design comes to rest under the warm conditions of this plan.
+
+    Of the conditions with the trimmer at one place the one with the highest rails is enough, and of the shares of the
+    target the largest: more of either is more heat and less margin.
+    """
+    most: dict[Any, Condition] = {}
+    for item in items:
+        if item.condition is None or isinstance(item.condition, Unpowered):
+            continue
+        for condition in item.condition.conditions if isinstance(item.condition, Joined) else (item.condition,):
+            known = most.get(condition.trimmer)
+            if condition.when == "warm" and (known is None or _heat(condition) > _heat(known)):
+                most[condition.trimmer] = condition
+    if not most:
+        return items
+    first = items[0]
+    check = Item(
+        id=f"{first.section}.warm-state",
+        section=first.section,
+        section_title=first.section_title,
+        kind="warm state",
+        title="The design comes to rest warm",
+        do="The model works out whether the design comes to rest when it warms up.",
+        why="A design without a warm state heats itself until something breaks, however well the unit is built.",
+        warm=tuple(most.values()),
+    )
+    return (first, check, *items[1:])
+
+
+def _heat(condition: Condition) -> tuple[float, float]:
+    return condition.positive_v - condition.negative_v, condition.target_share
 
 
 def _with_facts(items: tuple[Item, ...]) -> tuple[Item, ...]:
@@ -117,393 +134,3 @@ def _require_checks(procedure: Procedure, design: Design, items: tuple[Item, ...
             "nobody sees the rails low at the end",
             "readings of rail+ and rail-",
         )
-
-
-class _Planner:
-    """Follows rails, limit, trimmer and warmth from step to step."""
-
-    def __init__(self, procedure: Procedure, design: Design) -> None:
-        self.procedure = procedure
-        self.design = design
-        self.points = {point.name: point for point in points_of(design)}
-        self.positive_v = self.negative_v = self.limit_a = 0.0
-        self.on = False
-        self.trimmer: Literal["least", "target", "unknown"] = "unknown"
-        self.share = 1.0
-        self.lowest = with_room(design, least_regulating_rails(design))
-        self.section: Section
-        self.ready_hold = False
-
-    def items(self) -> Iterator[Item]:
-        yield Item(
-            id="bench",
-            section=self.procedure.sections[0].name,
-            section_title=self.procedure.sections[0].title,
-            kind="connect",
-            title="Find the bench",
-            do="The instruments are being asked who they are.",
-            may_go_on=False,
-        )
-        for section in self.procedure.sections:
-            self.section = section
-            first = True
-            for step in section.step:
-                for item in self._step(step):
-                    yield replace(item, resume=section.resume and first)
-                    first = False
-                    self.ready_hold = item.kind == "hold"
-
-    def _step(self, step: Step) -> Iterator[Item]:
-        match step.kind:
-            case "tell" | "confirm" | "text" | "hold":
-                if step.act == "trimmer to least":
-                    self._need_trimmer(step)
-                    self.trimmer = "least"
-                yield self._item(step, step.kind, act=step.act or "")
-            case "measure":
-                yield from self._measure(step)
-            case "rule":
-                if self._rule_fits(step):
-                    may_go_on = step.override and step.rule not in NEVER_PASSED_OVER
-                    number = self._number(step)
-                    yield self._item(step, "rule", rule=step.rule or "", number=number, may_go_on=may_go_on)
-            case "supply":
-                yield from self._supply(step)
-            case "limit check":
-                yield from self._limit_check(step)
-            case "trim":
-                yield from self._trim(step)
-            case "wait":
-                yield self._item(step, "wait", seconds=quantities.parse(step.seconds or "", "s"))
-            case "clip":
-                yield from self._clip(step)
-            case "off":
-                self._off()
-                yield self._item(step, "off")
-
-    def _item(self, step: Step, kind: ItemKind, suffix: str = "", **more: Any) -> Item:
-        words = self._words(more)
-        item = Item(
-            id=f"{self.section.name}.{step.name}{suffix}",
-            section=self.section.name,
-            section_title=self.section.title,
-            kind=kind,
-            title=_fill(step.title, words),
-            do=_fill(step.do, words),
-            why=_fill(step.why, words),
-            caution=_fill(step.caution, words),
-            expected=_fill(step.expected, words),
-            may_go_on=step.override,
-            powered=self.on,
-        )
-        return replace(item, **more)
-
-    def _measure(self, step: Step) -> Iterator[Item]:
-        for name in step.points:
-            for point in self._expand(name):
-                yield self._reading(step, point)
-
-    def _reading(self, step: Step, point: Point) -> Item:
-        limits: Limits | None = None
-        condition: AnyCondition | None = None
-        trimmer_end = self.trimmer == "least" and point.name in {one.name for one in self._expand("ohm.spreader.ARM")}
-        if (trimmer_end or point.name in NEVER_PASSED_OVER) and (step.limits != "the model" or step.allow is not None):
-            raise self._refuse(step, f"judges {point.name} by limits of its own", "the model's limits, as they are")
-        if isinstance(step.limits, PairText):
-            limits = self._stated(step, step.limits, point)
-        elif step.limits == "the target":
-            limits = self._target_limits(1.0, None)
-        elif point.powered:
-            if not self.on:
-                raise self._refuse(step, f"reads {point.name} against the model while the supply is off")
-            condition = self._powered_condition(step)
-            if self.trimmer == "target" and point.name == TRIMMED:
-                condition, limits = None, self._target_limits(self.share, None)
-        else:
-            if self.on:
-                raise self._refuse(step, f"reads {point.name} while the supply is on")
-            condition = Unpowered(point=point.name, trimmer=self.trimmer)
-        return self._item(
-            step,
-            "measure",
-            f".{point.name}",
-            title=f"{_fill(step.title, self._words({}))}: {point.name}",
-            point=point,
-            condition=condition,
-            limits=limits,
-            samples=step.samples,
-            settle_s=self._settle_s(step),
-            acceptance=step.acceptance,
-            allow=self._allow(step, point),
-            trimmer_end=trimmer_end,
-            may_go_on=step.override and not trimmer_end and point.name not in NEVER_PASSED_OVER,
-        )
-
-    def _stated(self, step: Step, pair: PairText, point: Point) -> Limits:
-        try:
-            low = None if pair.low is None else quantities.parse(pair.low, point.unit)
-            high = None if pair.high is None else quantities.parse(pair.high, point.unit)
-            return Limits(low, high, None, point.unit, "stated in the procedure")
-        except (EntryError, ValueError) as error:
-            raise self._refuse(step, f"states limits for {point.name} that can't be used: {error}") from None
-
-    def _allow(self, step: Step, point: Point) -> float:
-        if step.allow is None:
-            return 0.0
-        try:
-            allow = quantities.parse(step.allow, point.unit)
-        except EntryError as error:
-            raise self._refuse(step, f"allows {step.allow!r} at {point.name}: {error.came}", error.expected) from None
-        if allow < 0.0:
-            raise self._refuse(step, f"allows {step.allow!r} at {point.name}", "zero or more")
-        return allow
-
-    def _powered_condition(self, step: Step) -> Joined | Condition:
-        cold = Condition(
-            positive_v=self.positive_v, negative_v=self.negative_v, limit_a=self.limit_a, trimmer=self.trimmer
-        )
-        if self.trimmer == "target":
-            around = self.design.target.tolerance
-            shares = (self.share, self.share * (1.0 - around), self.share * (1.0 + around))
-            when = step.when or "warm"
-            trimmed = tuple(replace(cold, target_share=share, when=when) for share in shares)
-            return Joined(conditions=trimmed, words=f"±{around:.0%}, {when}")
-        warm = replace(cold, when="warm")
-        if step.when is not None:
-            return warm if step.when == "warm" else cold
-        return Joined(conditions=(cold, warm), words="cold to warm")
-
-    def _settle_s(self, step: Step) -> float:
-        if step.settle is None:
-            return 0.0
-        if step.settle != "the capacitors":
-            return quantities.parse(step.settle, "s")
-        return capacitors_settle_s(self.design)
-
-    def _supply(self, step: Step) -> Iterator[Item]:
-        positive_v, negative_v = self._rails(step)
-        limit_a = self._limit(step, positive_v, negative_v)
-        if self.on and (positive_v, negative_v) == (self.positive_v, self.negative_v) and limit_a == self.limit_a:
-            return
-        if self.on and positive_v < self.positive_v == self.lowest[0]:
-            return  # on the way up: the lowest rails at which this stage regulates are above this step already
-        yield from self._power(step, "", positive_v, negative_v, limit_a, quantities.parse(step.ramp or "1 s", "s"))
-
-    def _power(
-        self, step: Step, suffix: str, positive_v: float, negative_v: float, limit_a: float, ramp_s: float
-    ) -> Iterator[Item]:
-        raises = not self.on or positive_v > self.positive_v or negative_v < self.negative_v or limit_a > self.limit_a
-        words = {"positive_v": positive_v, "negative_v": negative_v, "limit_a": limit_a}
-        if raises and not self.ready_hold:
-            rails = rails_text(positive_v, negative_v)
-            title = f"Power on again, {rails}?" if suffix else f"Go to {rails}?"
-            if self.on and (positive_v, negative_v) == (self.positive_v, self.negative_v):
-                title = f"Raise the limit to {quantities.show(limit_a, 'A')}?"
-            yield self._item(
-                step,
-                "hold",
-                f"{suffix}.hold",
-                title=title,
-                do=f"Rails {rails}, limit {quantities.show(limit_a, 'A')}. Hands off the circuit; watch the current.",
-                why="Voltage and limit rise only after a plain yes.",
-            )
-        rise_v = positive_v - (self.positive_v if self.on else 0.0)
-        self.positive_v, self.negative_v, self.limit_a, self.on = positive_v, negative_v, limit_a, True
-        yield self._item(
-            step,
-            "supply",
-            f"{suffix}.power" if suffix else "",
-            ramp_s=max(ramp_s, charging_s(self.design, rise_v, limit_a)),
-            settle_s=max(0.5, self.design.feed.settles_after_s or 0.0),
-            raises=raises,
-            **({"title": f"Rails at {rails_text(positive_v, negative_v)} again"} if suffix else {}),
-            may_go_on=False,
-            **words,
-        )
-
-    def _limit_check(self, step: Step) -> Iterator[Item]:
-        if self.on:
-            raise self._refuse(step, "tries the limit while the unit has power")
-        positive_v, negative_v = self._rails(step)
-        limit_a = self._limit(step, *self.lowest)
-        words: dict[str, Any] = {"positive_v": positive_v, "negative_v": negative_v, "limit_a": limit_a}
-        yield self._item(
-            step, "hold", ".hold", title="Try the limit?", why="Current flows into the short from here.", **words
-        )
-        limits = Limits(0.9 * limit_a, 1.1 * limit_a, limit_a, "A", "the limit that was set, ±10 % (common practice)")
-        yield self._item(step, "limit check", "", limits=limits, raises=True, may_go_on=False, powered=True, **words)
-        yield self._item(
-            step, "off", ".off", title="Supply off again", do="The supply is switched off before the unit is connected."
-        )
-
-    def _trim(self, step: Step) -> Iterator[Item]:
-        self._need_trimmer(step)
-        if not self.on:
-            raise self._refuse(step, "trims while the supply is off")
-        share = quantities.parse(step.share or "100 %", "%") / 100.0
-        tolerance = None if step.tolerance is None else quantities.parse(step.tolerance, "%") / 100.0
-        for name in step.points:
-            for point in self._expand(name):
-                yield self._item(
-                    step,
-                    "trim",
-                    f".{point.name}",
-                    point=point,
-                    limits=self._target_limits(share, tolerance),
-                    samples=step.samples,
-                )
-        self.trimmer, self.share = "target", share
-
-    def _clip(self, step: Step) -> Iterator[Item]:
-        back = (self.positive_v, self.negative_v, self.limit_a)
-        was_on = self.on
-        points = tuple(point for name in step.points for point in self._expand(name))
-        if len(points) != 1:
-            raise self._refuse(step, f"clips the probes to {len(points)} points of {self.design.name}, not to one")
-        (point,) = points
-        if was_on:
-            self._off()
-            yield self._item(
-                step, "off", ".off", title="Power off for the clips", do="The supply is switched off and read back."
-            )
-            seconds = discharge_s(self.design, back[0])
-            yield self._item(
-                step,
-                "wait",
-                ".discharge",
-                title="Let the rails fall",
-                do=f"Hands off. Expected time to {RAIL_LOW_V:g} V: {time_text(seconds)}.",
-                seconds=max(5.0, min(300.0, 30.0 if seconds is None else 1.2 * seconds)),
-            )
-            for name in ("rail+", "rail-"):
-                yield self._item(
-                    step,
-                    "measure",
-                    f".{name}",
-                    title=f"Rail seen low at the unit: {name}",
-                    do="One tip on the rail at the unit's own capacitors, the other on 0 V.",
-                    why="Nobody touches the circuit before both rails have been seen low.",
-                    point=self.points[name],
-                    limits=Limits(-RAIL_LOW_V, RAIL_LOW_V, None, "V", "common practice"),
-                    may_go_on=False,
-                )
-        yield self._item(step, "tell", ".clip", point=point)
-        if was_on:
-            self.ready_hold = False
-            yield from self._power(step, ".again", *back, ramp_s=3.0)
-
-    def _off(self) -> None:
-        self.on = False
-
-    def _expand(self, name: str) -> tuple[Point, ...]:
-        trimmer = self.design.spreader.trimmer
-        if "ARM" in name:
-            arm = "lower" if trimmer is None or trimmer.arm == "between" else trimmer.arm
-            name = name.replace("ARM", arm)
-        if "N" not in name and "PART" not in name:
-            return (self.points[name],) if name in self.points else ()
-        pattern = re.escape(name).replace("PART", r"[a-z.0-9]+").replace("N", r"\d+")
-        return tuple(point for point in self.points.values() if re.fullmatch(pattern, point.name))
-
-    def _rule_fits(self, step: Step) -> bool:
-        if step.rule == "feed symmetry":
-            return "feed.upper" in self.points and "feed.lower" in self.points
-        if step.rule == "fail-safe trimmer":
-            return self.design.spreader.trimmer is not None
-        return True
-
-    def _number(self, step: Step) -> float | None:
-        if step.number is None:
-            return None
-        text = step.number.rstrip()
-        try:
-            for unit, scale in (("%", 0.01), ("V", 1.0)):
-                if text.endswith(unit):
-                    number = quantities.parse(text, unit) * scale
-                    break
-            else:
-                number = float(text)
-        except (EntryError, ValueError):
-            number = math.nan
-        if step.rule in NEVER_PASSED_OVER and number > MOST_OFFSET_V:
-            raise self._refuse(step, f"allows an offset of {text}", f"{MOST_OFFSET_V * 1e3:.0f} mV or less")
-        if not (math.isfinite(number) and number > 0.0):
-            raise self._refuse(step, f"has the number {step.number!r}", "a number above zero, such as 10, 1 % or 50 mV")
-        return number
-
-    def _rails(self, step: Step) -> tuple[float, float]:
-        rails = self.design.rails
-        text = (step.rails or "").strip()
-        if text == "lowest":
-            return self.lowest
-        if text == "full":
-            return rails.positive_v, rails.negative_v
-        if text.endswith("%"):
-            share = quantities.parse(text, "%") / 100.0
-            return share * rails.positive_v, share * rails.negative_v
-        volts = quantities.parse(text, "V")
-        most_v = min(rails.positive_v, -rails.negative_v or rails.positive_v)
-        if volts > most_v:
-            full = rails_text(rails.positive_v, rails.negative_v)
-            raise self._refuse(step, f"sets the rails to {text}", f"no more than the design's {full}")
-        return volts, -volts if rails.negative_v else 0.0
-
-    def _limit(self, step: Step, positive_v: float, negative_v: float) -> float:
-        full = self.design.rails
-        if step.limit == "for least bias":
-            return supply_limit_a(self.design, full.positive_v, full.negative_v, share=0.0)
-        if step.limit == "for the target":
-            return supply_limit_a(self.design, positive_v, negative_v, share=1.0)
-        limit_a = quantities.parse(step.limit or "", "A")
-        most_a = 2.0 * supply_limit_a(self.design, full.positive_v, full.negative_v, share=1.0)
-        if limit_a > most_a:
-            most = quantities.show(most_a, "A", 3)
-            raise self._refuse(step, f"sets a limit of {step.limit}", f"{most} or less, twice what the target needs")
-        return limit_a
-
-    def _target_limits(self, share: float, tolerance: float | None) -> Limits:
-        nominal_v = share * target_drop_v(self.design)
-        width = self.design.target.tolerance if tolerance is None else tolerance
-        source = "the target of the design" if share == 1.0 else f"{share:.0%} of the target"
-        return Limits(nominal_v * (1 - width), nominal_v * (1 + width), nominal_v, "V", source)
-
-    def _need_trimmer(self, step: Step) -> None:
-        if self.design.spreader.trimmer is None:
-            raise self._refuse(step, f"turns a trimmer, and {self.design.name} has none")
-
-    def _refuse(self, step: Step, came: str, expected: str = "") -> FileError:
-        return FileError(self.procedure.file, f"section {self.section.name}, step {step.name}", came, expected)
-
-    def _words(self, given: Mapping[str, Any]) -> dict[str, str]:
-        trimmer = self.design.spreader.trimmer
-        positive_v = float(given.get("positive_v", self.positive_v or self.lowest[0]))
-        negative_v = float(given.get("negative_v", self.negative_v or self.lowest[1]))
-        full = self.design.rails
-        limit_a = float(given.get("limit_a", self.limit_a)) or supply_limit_a(
-            self.design, full.positive_v, full.negative_v, share=0.0
-        )
-        target_v = target_drop_v(self.design)
-        words = {
-            "design": self.design.name,
-            "limit": quantities.show(limit_a, "A"),
-            "rails": rails_text(positive_v, negative_v),
-            "target": f"{quantities.show(target_v, 'V')} ± {self.design.target.tolerance:.0%}",
-            "discharge_time": discharge_text(self.design),
-            "turns": "",
-            "arm": "",
-            "more_bias_way": "",
-            "less_bias_way": "",
-        }
-        if trimmer is not None:
-            ways = ("clockwise", "anticlockwise")
-            words["turns"] = f"{trimmer.turns:g}"
-            words["arm"] = "lower and upper" if trimmer.arm == "between" else trimmer.arm
-            words["more_bias_way"] = trimmer.raises_bias
-            words["less_bias_way"] = ways[1 - ways.index(trimmer.raises_bias)]
-        return words
-
-
-def _fill(text: str, words: dict[str, str]) -> str:
-    for word, value in words.items():
-        text = text.replace("{" + word + "}", value)
-    return text

@@ -2,17 +2,22 @@
 
 from __future__ import annotations
 
+from typing import Final
+
 from benchkit import quantities
-from benchkit.events import Judged, PointLimits
+from benchkit.events import Judged, NarrowedLimits, PointLimits
 from benchkit.judge.limits import Limits
 from benchkit.procedure.actions import Choice, Question
 from benchkit.procedure.items import Item
+from benchkit.stage.points import Point
 
 DONE = Choice(value="done", label="Done")
 YES = Choice(value="yes", label="Yes")
 NO = Choice(value="no", label="No")
 AGAIN = Choice(value="again", label="Again")
 GO_ON = Choice(value="go on", label="Note a reason and go on", wants_reason=True)
+ON = Choice(value="go on", label="Go on")
+LEAVE = Choice(value="go on", label="Leave it, go on with making safe")
 STOP = Choice(value="make safe", label="Make safe and stop")
 TAKE = Choice(value="take", label="Take this reading")
 END = Choice(value="end", label="It can't be reached")
@@ -79,20 +84,28 @@ def trimming(item: Item) -> Question:
     )
 
 
-def deciding(item: Item, result: Judged | None, problem: str, *, way_out: bool) -> Question:
-    """What to do after a result that is no pass, or none at all."""
+def deciding(item: Item, result: Judged | None, problem: str, *, way_out: bool, offer: Point | None = None) -> Question:
+    """What to do after a result that is no pass, an odd reading, or no result at all.
+
+    `offer` is a test point that would tell more; it is one answer more, never the first.
+    """
+    odd = result is not None and result.verdict == "pass"
     if result is not None:
-        said = {"fail": "failed", "undecided": "is undecided", "pass": "passed"}[result.verdict]
+        said = {"fail": "failed", "undecided": "is undecided", "pass": "is odd for this unit"}[result.verdict]
         what = f"{item.title} {said}."
         why = result.why
     else:
         what, why = f"{item.title}: there is no result.", problem
-    choices = [AGAIN]
-    if item.may_go_on or way_out:
+    choices = [ON, AGAIN] if odd else [AGAIN]
+    if not odd and (item.may_go_on or way_out):
         choices.append(GO_ON)
+    if offer is not None:
+        choices.append(probing(offer))
     if not way_out:
         choices.append(STOP)
-    caution = "" if item.may_go_on or way_out else "There is no way past this result but a better one."
+    caution = "" if odd or item.may_go_on or way_out else "There is no way past this result but a better one."
+    if odd:
+        caution = "Inside the design's limits, so no failure: see what the other readings say."
     if way_out and item.point is not None and item.point.name in ("rail+", "rail-"):
         caution = "Hands off until both rails have been seen low. Going on ends the walk here: take the unit as live."
     return Question(
@@ -107,6 +120,28 @@ def deciding(item: Item, result: Judged | None, problem: str, *, way_out: bool) 
         black="" if item.point is None else item.point.black,
         choices=tuple(choices),
     )
+
+
+def offering(item: Item, offer: Point | None) -> Question:
+    """Whether to take one more reading now that the unit is safe."""
+    do = (
+        f"The unit has no power now. A reading of {offer.name} would tell most about what is wrong."
+        if offer is not None
+        else "The unit has no power now. No further reading is asked for at the moment."
+    )
+    return Question(
+        item=item.id,
+        kind="decide",
+        title="One more reading before the end?",
+        do=do,
+        why="The suspects are those of the readings so far; an extra reading is kept and judged like any other.",
+        choices=(LEAVE,) if offer is None else (probing(offer), LEAVE),
+    )
+
+
+def probing(point: Point) -> Choice:
+    """The answer that takes an extra reading."""
+    return Choice(value="probe", label=f"Read {point.name} next")
 
 
 def by_hand_off(item: Item, how: str) -> Question:
@@ -138,3 +173,22 @@ def model_limits(limits: PointLimits, condition: str, allow: float = 0.0) -> Lim
     low = None if limits.low is None else limits.low - allow
     high = None if limits.high is None else limits.high + allow
     return Limits(low, high, limits.nominal, limits.unit, source)
+
+
+THIS_UNIT: Final = "this unit"
+"""Where narrowed limits come from, in words; those that are not narrowed are the design's."""
+
+
+def unit_limits(limits: NarrowedLimits, design: Limits, allow: float = 0.0) -> Limits | None:
+    """Narrowed limits of a reading, widened by `allow` and never wider than the design's; None where they are those."""
+    if limits.low is None and limits.high is None:
+        return None
+    low = None if limits.low is None else limits.low - allow
+    high = None if limits.high is None else limits.high + allow
+    if design.low is not None:
+        low = design.low if low is None else max(low, design.low)
+    if design.high is not None:
+        high = design.high if high is None else min(high, design.high)
+    if (low, high) == (design.low, design.high) or (low is not None and high is not None and low > high):
+        return None
+    return Limits(low, high, None, design.unit, THIS_UNIT)

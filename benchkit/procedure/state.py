@@ -6,8 +6,9 @@ from collections.abc import Mapping
 from dataclasses import dataclass, field
 from typing import Literal
 
-from benchkit.events import Closed, Judged, PointLimits, SupplyState, WalkOpened
+from benchkit.events import Closed, Judged, NarrowedLimits, PointLimits, SupplyState, Suspected, WalkOpened
 from benchkit.measure.readings import Reading
+from benchkit.procedure.items import Item
 
 Phase = Literal[
     "unopened",
@@ -18,6 +19,7 @@ Phase = Literal[
     "reading",
     "judging",
     "deciding",
+    "offering",
     "setting",
     "waiting",
     "trimming",
@@ -53,6 +55,8 @@ class State:
         As the instruments named themselves.
     limits : mapping
         Condition's name to point's name to limits.
+    narrowed : mapping
+        The same for this very unit, narrowed by its readings.
     readings : mapping
         Item's id to its latest reading.
     results : tuple of Judged
@@ -63,6 +67,18 @@ class State:
         Item's id to the reason with which a result was passed over.
     before : frozenset of str
         Items whose results are from before the walk was resumed.
+    extras : tuple of Item
+        Extra readings that were offered and taken up, in their order; they are items like the plan's.
+    extra : str
+        The id of the one that is being taken, "" when none is.
+    suspecting : int
+        The line of the record at which suspects were asked for and not answered yet; 0 when none are awaited.
+    suspicion : Suspected or None
+        The last answer about suspects.
+    offers_left : bool
+        On the way out, the operator took no more extra readings.
+    resumed_at : int
+        The line at which the walk was last resumed; what the model was asked before that lapses.
     probes : str
         The test point on which the probes are, "" when not known.
     energised : {"off", "on", "unknown"}
@@ -85,6 +101,8 @@ class State:
         The last "off" could not be confirmed, and nobody has said since that it is off by hand.
     closed : Closed or None
         The last event of a finished walk.
+    missing : str
+        Why the item that is being decided has no result, "" when it has one.
     note : str
         A sentence for the screen about the last thing that happened.
     """
@@ -97,11 +115,18 @@ class State:
     meter: str = ""
     supply_name: str = ""
     limits: Mapping[str, Mapping[str, PointLimits]] = field(default_factory=dict)
+    narrowed: Mapping[str, Mapping[str, NarrowedLimits]] = field(default_factory=dict)
     readings: Mapping[str, Reading] = field(default_factory=dict)
     results: tuple[Judged, ...] = ()
     attempts: Mapping[str, int] = field(default_factory=dict)
     overrides: Mapping[str, str] = field(default_factory=dict)
     before: frozenset[str] = frozenset()
+    extras: tuple[Item, ...] = ()
+    extra: str = ""
+    suspecting: int = 0
+    suspicion: Suspected | None = None
+    offers_left: bool = False
+    resumed_at: int = 0
     probes: str = ""
     energised: Literal["off", "on", "unknown"] = "unknown"
     supply: SupplyState | None = None
@@ -113,6 +138,7 @@ class State:
     ever_on: bool = False
     unconfirmed: bool = False
     closed: Closed | None = None
+    missing: str = ""
     note: str = ""
 
     def result(self, item: str) -> Judged | None:

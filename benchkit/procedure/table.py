@@ -1,7 +1,7 @@
 """The table of transitions: which events each phase of a walk takes, and which method of the walk handles them.
 
 A pair that isn't here is illegal: it raises and changes nothing.  Every phase but ``unopened`` and ``closed`` takes the
-events that end in *made safe*.
+events that end in *made safe*, and what the model says of this unit, which it was asked aside.
 """
 
 from __future__ import annotations
@@ -19,6 +19,7 @@ from benchkit.events import (
     Decided,
     Event,
     Judged,
+    Narrowed,
     Noted,
     OutputOff,
     Predicted,
@@ -29,6 +30,7 @@ from benchkit.events import (
     StopAsked,
     SupplyRefused,
     SupplySet,
+    Suspected,
     TrimEnded,
     Tripped,
     Waited,
@@ -43,6 +45,8 @@ _ALWAYS: Final[Mapping[type[Event], str]] = {
     OutputOff: "_output_went_off",
     Noted: "_noted",
     Resumed: "_resumed",
+    Narrowed: "_narrowed",
+    Suspected: "_suspected",
 }
 
 _OWN: Final[Mapping[Phase, Mapping[type[Event], str]]] = {
@@ -54,6 +58,7 @@ _OWN: Final[Mapping[Phase, Mapping[type[Event], str]]] = {
     "reading": {ReadingTaken: "_reading_taken", ReadingMissed: "_reading_missed"},
     "judging": {Judged: "_judged"},
     "deciding": {Decided: "_decided"},
+    "offering": {Decided: "_offered"},
     "setting": {SupplySet: "_supply_set", SupplyRefused: "_supply_refused"},
     "waiting": {Waited: "_waited"},
     "trimming": {ReadingTaken: "_reading_taken", ReadingMissed: "_reading_missed", TrimEnded: "_trim_ended"},

@@ -12,10 +12,11 @@ import textwrap
 from collections.abc import Iterable, Iterator
 from typing import Any
 
-from benchkit.events import Answered
+from benchkit.events import Answered, to_payload
 from benchkit.measure.readings import Reading
+from benchkit.procedure import suspect_words
 from benchkit.quantities import Overload, show
-from benchkit.record.summary import Result, Summary
+from benchkit.record.summary import Result, Summary, Suspicion
 
 DEFERENCE = (
     "Benchkit helps a qualified person; it is not a safety device, it certifies nothing, and it defers to local codes, "
@@ -56,6 +57,11 @@ def _lines(summary: Summary) -> Iterator[str]:
             yield ""
             yield from _heading(clean(heading))
             yield from _table(results)
+    if summary.suspicions:
+        yield ""
+        yield from _heading("Suspects")
+        for suspicion in summary.suspicions:
+            yield from _suspicion(suspicion)
     if summary.notes:
         yield ""
         yield from _heading("Notes")
@@ -114,6 +120,11 @@ def _first_things(summary: Summary) -> Iterator[str]:
     for incident in summary.incidents:
         where = f" (at: {clean(incident.where)})" if incident.where else ""
         yield from _wrapped(f"{incident.at}: {clean(incident.what)}{where}", "- ")
+    odd = [result for result in summary.results if not result.replaced and result.odd]
+    for result in odd:
+        yield from _wrapped(f"ODD FOR THIS UNIT: {clean(result.title)}, {clean(result.subject)}: {_why(result)}", "- ")
+    if summary.closed is not None and summary.closed.why:
+        yield from _wrapped(f"The verdict: {clean(summary.closed.why)}", "- ")
     before = sum(result.from_before for result in summary.results)
     if before:
         yield from _wrapped(
@@ -121,8 +132,27 @@ def _first_things(summary: Summary) -> Iterator[str]:
             "changed since.",
             "- ",
         )
-    if not against and not summary.incidents:
+    if not against and not odd and not summary.incidents:
         yield "- Nothing failed, nothing was undecided, missed, overridden or interrupted."
+
+
+def _why(result: Result) -> str:
+    return clean(result.judged.why) if result.judged is not None else ""
+
+
+def _suspicion(suspicion: Suspicion) -> Iterator[str]:
+    answer = suspicion.answer
+    heading = suspect_words.heading_words(answer)
+    yield from _wrapped(f"Line {suspicion.seq}, {clean(suspicion.where)}: {clean(heading)}", "- ")
+    for one in suspect_words.shown_suspects(answer):
+        name = clean(suspect_words.fault_words(one.fault))
+        yield from _wrapped(f"{suspect_words.chance_words(one.probability)}  {name}", "    ")
+        for line in (suspect_words.alike_words(one), *suspect_words.evidence_for(one)):
+            if line:
+                yield from _wrapped(clean(line), "        ")
+    unseen = suspect_words.unseen_words(answer, names=6)
+    if unseen:
+        yield from _wrapped(clean(unseen), "    ")
 
 
 def _says_something(answer: Answered, operator: str) -> bool:
@@ -151,11 +181,16 @@ def _sections(summary: Summary) -> Iterator[tuple[str, str]]:
             yield result.section, seen[result.section]
 
 
-_COLUMNS = ("", "value", "lowest", "highest", "std. unc.", "verdict", "")
+_COLUMNS = ("", "value", "lowest", "highest", "this unit", "std. unc.", "verdict", "")
 
 
 def _table(results: Iterable[Result]) -> Iterator[str]:
-    """Yield a table: the title of each step on a line of its own, its points below it."""
+    """Yield a table: the title of each step on a line of its own, its points below it.
+
+    Lowest and highest are the design's limits; those of this very unit stand beside them where there are any.
+    """
+    results = list(results)
+    own = any(_unit_limits(result) for result in results)
     rows: list[tuple[str, ...]] = [_COLUMNS]
     title = ""
     for result in results:
@@ -168,9 +203,22 @@ def _table(results: Iterable[Result]) -> Iterator[str]:
     widths = [max(len(row[column]) for row in whole) for column in range(len(_COLUMNS))]
     for row in rows:
         cells = [row[0].ljust(widths[0])]
-        cells += [cell.rjust(width) for cell, width in zip(row[1:5], widths[1:5], strict=False)]
-        cells += [cell.ljust(width) for cell, width in zip(row[5:], widths[5:], strict=False)]
+        cells += [cell.rjust(width) for cell, width in zip(row[1:6], widths[1:6], strict=False)]
+        cells += [cell.ljust(width) for cell, width in zip(row[6:], widths[6:], strict=False)]
+        if len(row) > 1 and not own:
+            del cells[4]
         yield "  ".join(cells).rstrip()
+
+
+def _unit_limits(result: Result) -> str:
+    """Return the limits of this very unit in words, "" where there are none."""
+    judged = result.judged
+    if judged is None or (judged.unit_low is None and judged.unit_high is None):
+        return ""
+    low, high = _quantity(judged.unit_low, judged.unit), _quantity(judged.unit_high, judged.unit)
+    if judged.unit_low is None:
+        return f"at most {high}"
+    return f"at least {low}" if judged.unit_high is None else f"{low} to {high}"
 
 
 def _row(result: Result, name: str) -> tuple[str, ...]:
@@ -180,12 +228,14 @@ def _row(result: Result, name: str) -> tuple[str, ...]:
         ("from before", result.from_before),
         ("measured again later", result.replaced),
         ("overridden", result.overridden is not None),
+        ("odd for this unit", result.odd),
     )
     return (
         name,
         "no reading" if result.missed else _quantity(_measured(result), unit),
         _quantity(judged.low, unit) if judged is not None else "",
         _quantity(judged.high, unit) if judged is not None else "",
+        _unit_limits(result),
         _quantity(_uncertainty(result), unit, digits=2),
         result.verdict or ("missed" if result.missed else "not judged"),
         "; ".join(words for words, true in flags if true),
@@ -241,6 +291,8 @@ def as_json(summary: Summary) -> dict[str, Any]:
             {"line": incident.seq, "at": incident.at, "where": incident.where, "what": incident.what}
             for incident in summary.incidents
         ],
+        "suspicions": [_suspicion_json(suspicion) for suspicion in summary.suspicions],
+        "verdict_why": closed.why if closed is not None else "",
         "notes": [{"text": note.text, "figures": dict(note.figures)} for note in summary.notes],
         "deference": DEFERENCE,
     }
@@ -261,6 +313,9 @@ def _result_json(result: Result) -> dict[str, Any]:
         "unit": reading.unit if reading is not None else (judged.unit if judged is not None else ""),
         "low": judged.low if judged is not None else None,
         "high": judged.high if judged is not None else None,
+        "unit_low": judged.unit_low if judged is not None else None,
+        "unit_high": judged.unit_high if judged is not None else None,
+        "odd": result.odd,
         "standard_uncertainty": _uncertainty(result),
         "probability": judged.probability if judged is not None else None,
         "verdict": result.verdict,
@@ -270,6 +325,10 @@ def _result_json(result: Result) -> dict[str, Any]:
         "replaced": result.replaced,
         "overridden": result.overridden,
     }
+
+
+def _suspicion_json(suspicion: Suspicion) -> dict[str, Any]:
+    return {"line": suspicion.seq, "at": suspicion.at, **to_payload(suspicion.answer)}
 
 
 def clean(text: str) -> str:

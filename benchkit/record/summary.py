@@ -6,6 +6,7 @@ Rules
 * A result whose item was measured again is *replaced*: it stays in the summary, and the later one counts.
 * ``go on`` after a result that is no pass makes it *overridden*, with the reason that was given.  It stays what it was.
 * Everything before a resume is *from before*: trimmer and warmth may have changed since.
+* An odd reading passed: it is none that counts against the unit, and still one to know of.
 * What the supply is at the end is never said with more certainty than the record has.
 * Which section an item belongs to is read from the item's name: the names of the section and of the step are its first
   two words.  Titles come from the procedure that the record holds; where it can't be read, the names stand for them.
@@ -28,6 +29,7 @@ from benchkit.events import (
     Decided,
     Event,
     Judged,
+    Narrowed,
     Noted,
     OutputOff,
     Predicted,
@@ -39,6 +41,7 @@ from benchkit.events import (
     SupplyRefused,
     SupplySet,
     SupplyState,
+    Suspected,
     TrimEnded,
     Tripped,
     Verdict,
@@ -99,9 +102,24 @@ class Result:
         return self.judged.verdict if self.judged is not None else None
 
     @property
+    def odd(self) -> bool:
+        """True for a reading outside what this unit's other readings lead to."""
+        return self.judged is not None and self.judged.odd
+
+    @property
     def counts_against(self) -> bool:
         """True for what still stands and is no pass."""
         return not self.replaced and (bool(self.missed) or self.verdict in ("fail", "undecided"))
+
+
+@dataclass(frozen=True, kw_only=True)
+class Suspicion:
+    """What the model said would explain the readings: line, time, the step that it was asked at, and the answer."""
+
+    seq: int
+    at: str
+    where: str
+    answer: Suspected
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -151,6 +169,10 @@ class Summary:
     answers : tuple of (title of the step, Answered)
     incidents : tuple of Incident
     notes : tuple of Noted
+    suspicions : tuple of Suspicion
+        In their order; the last one says most.
+    narrowings : tuple of Narrowed
+        In their order.
     highest_v : tuple of float or None
         The largest magnitudes, V, of the positive and the negative rail that the supply was set to or measured at.
     ending : Ending
@@ -173,6 +195,8 @@ class Summary:
     highest_v: tuple[float, float] | None
     ending: Ending
     closed: Closed | None
+    suspicions: tuple[Suspicion, ...] = ()
+    narrowings: tuple[Narrowed, ...] = ()
 
     @property
     def verdict(self) -> Verdict | None:
@@ -215,6 +239,8 @@ def summarise(record: Record) -> Summary:
         highest_v=gathered.highest,
         ending=_ending(gathered.ever_on, gathered.may_be_on, gathered.off),
         closed=gathered.closed,
+        suspicions=tuple(gathered.suspicions),
+        narrowings=tuple(gathered.narrowings),
     )
 
 
@@ -229,6 +255,8 @@ class _Gathering:
     answers: list[tuple[str, Answered]] = field(default_factory=list)
     incidents: list[Incident] = field(default_factory=list)
     notes: list[Noted] = field(default_factory=list)
+    suspicions: list[Suspicion] = field(default_factory=list)
+    narrowings: list[Narrowed] = field(default_factory=list)
     highest: tuple[float, float] | None = None
     ever_on: bool = False
     may_be_on: bool = False
@@ -243,7 +271,7 @@ class _Gathering:
     def take(self, seq: int, at: str, event: Event) -> None:
         """Add one event."""
         item = getattr(event, "item", "")
-        if item:
+        if item and not isinstance(event, (Narrowed, Suspected)):
             self.where = self._title(item)
         match event:
             case BenchFound():
@@ -257,6 +285,10 @@ class _Gathering:
                 self._add(seq, at, item, event.point, missed=event.problem)
             case Judged():
                 self._judge(seq, at, event)
+            case Narrowed():
+                self.narrowings.append(event)
+            case Suspected():
+                self.suspicions.append(Suspicion(seq=seq, at=at, where=self._title(item), answer=event))
             case Decided():
                 self._decide(seq, at, event)
             case Answered():
@@ -332,7 +364,8 @@ class _Gathering:
             if result.item == event.item and result.counts_against:
                 self.results[index] = replace(result, overridden=event.reason)
                 return
-        self._incident(seq, at, f"went on in spite of it: {event.reason}")
+        if event.reason:  # going on after an odd reading needs none, nor does leaving an extra reading that is offered
+            self._incident(seq, at, f"went on in spite of it: {event.reason}")
 
     def _look_at(self, state: SupplyState | None) -> None:
         if state is None:
@@ -353,6 +386,10 @@ class _Gathering:
 
     def _title(self, item: str) -> str:
         section, step = _parts(item)
+        if step.startswith("extra-"):
+            return f"Extra reading {step.removeprefix('extra-')}"
+        if step == "warm-state":
+            return "The design comes to rest warm"
         return self._titles.get((section, step), item)
 
 

@@ -5,6 +5,8 @@ Rules
 * Columns are `COLUMNS`, always all of them, in this order; a new one is only ever added at the end.
 * Values stand in base units (V, A, ohm, degC), in full precision; an overload has no value and ``overload`` true.
 * A reading that was measured again later is in the table too, with ``replaced`` true.
+* ``low`` and ``high`` are the design's limits, ``unit_low`` and ``unit_high`` this unit's inside them; ``suspects`` is
+  the last answer about suspects in the whole walk, the same in each of its rows.
 * A text that a spreadsheet would take for a formula (it begins with ``= + - @``, a tab or a carriage return) gets an
   apostrophe in front.
 """
@@ -53,15 +55,20 @@ COLUMNS = (
     "from_before",
     "replaced",
     "overridden",
+    "unit_low",
+    "unit_high",
+    "odd",
+    "suspects",
 )
 
 _FORMULA = ("=", "+", "-", "@", "\t", "\r")
-_NUMBERS = ("value", "standard_uncertainty", "low", "high", "probability")
+_NUMBERS = ("value", "standard_uncertainty", "low", "high", "probability", "unit_low", "unit_high")
 
 
 def rows(summary: Summary) -> Iterator[dict[str, Any]]:
     """Yield one mapping a reading, its keys `COLUMNS`; a value that is not there is None."""
     opened, record = summary.opened, summary.record
+    suspects = _suspects(summary)
     for result in summary.results:
         reading, judged = result.reading, result.judged
         if reading is None:
@@ -96,11 +103,25 @@ def rows(summary: Summary) -> Iterator[dict[str, Any]]:
             "from_before": result.from_before,
             "replaced": result.replaced,
             "overridden": result.overridden,
+            "unit_low": judged.unit_low if judged is not None else None,
+            "unit_high": judged.unit_high if judged is not None else None,
+            "odd": result.odd,
+            "suspects": suspects,
         }
 
 
+def _suspects(summary: Summary) -> str:
+    """Return the last answer about suspects in one line, likeliest first; "" where nobody asked."""
+    if not summary.suspicions:
+        return ""
+    answer = summary.suspicions[-1].answer
+    if answer.problem:
+        return f"no answer: {answer.problem}"
+    return "; ".join(f"{one.fault} {one.probability:.3f}" for one in answer.suspects)
+
+
 def frame(summaries: Iterable[Summary]) -> pd.DataFrame:
-    """Return the readings of several records as one data frame, columns `COLUMNS`, shape (readings, 29).
+    """Return the readings of several records as one data frame, columns `COLUMNS`, shape (readings, 33).
 
     Numbers are floats with NaN where there is none; ``at`` is a time with its zone.
     """
@@ -117,7 +138,7 @@ def csv_text(summaries: Iterable[Summary]) -> str:
     """Return the readings as CSV: a line of names, a comma between, line feeds, a full stop as decimal sign."""
     table = frame(summaries)
     for name in COLUMNS:
-        if name not in (*_NUMBERS, "at", "line", "overload", "samples", "from_before", "replaced"):
+        if name not in (*_NUMBERS, "at", "line", "overload", "samples", "from_before", "replaced", "odd"):
             table[name] = table[name].map(_no_formula)
     table["at"] = table["at"].dt.strftime("%Y-%m-%dT%H:%M:%S.%fZ")
     text = io.StringIO()

@@ -1,12 +1,15 @@
 """The stand-in: a simulated technician who answers, moves probes and turns the trimmer.
 
 It is careful and obedient, not clever: it does what the screen says, tries once more when a reading is no pass, notes a
-reason where a result stays undecided, and makes safe where one fails.  When the trimmer's end is wrong, it turns the
+reason where a result stays undecided, and makes safe where one fails.  Before it places the
+probes it waits for narrowed limits that are being worked out, before it decides for the suspects; it takes the extra
+readings that are offered.  When the trimmer's end is wrong, it turns the
 screw the other way and measures again.  When a rail is still up, it waits.
 """
 
 from __future__ import annotations
 
+import asyncio
 import math
 from collections import Counter
 from collections.abc import Callable
@@ -15,8 +18,11 @@ from typing import Any, Protocol
 import numpy as np
 
 from benchkit.procedure.actions import Question
-from benchkit.session.front import Reply, View
+from benchkit.session.front import Reply, SuspectsView, View
 from benchkit.session.threads import in_thread
+
+MOST_PATIENCE_S = 60.0
+"""How long it waits for narrowed limits or suspects (s)."""
 
 MOST_WAITS = 20
 WAIT_S = 30.0
@@ -68,10 +74,15 @@ class StandIn:
         self._position: Counter[str] = Counter()
         self._view: View | None = None
         self._told = 0
+        self._suspects: SuspectsView | None = None
 
     def show(self, view: View) -> None:
         """Look at the picture; say each new result."""
         self._view = view
+        suspects = view.suspects
+        if suspects is not None and not suspects.working and suspects != self._suspects:
+            self._suspects = suspects
+            self._say(f"          {suspects.heading}")
         for result in view.results[self._told :] if len(view.results) > self._told else ():
             self._say(f"{result.verdict:9s} {result.title}  {result.value_text}")
         self._told = max(self._told, len(view.results))
@@ -89,6 +100,9 @@ class StandIn:
                 return self._trim(question)
             case "decide":
                 return await self._decide(question)
+            case "probes":
+                await self._wait_while(lambda view: view.narrowing)
+                return Reply(choice="done")
             case "tell":
                 if "least-bias end" in question.title:
                     await self._turn_to("most" if self._wrong_end else "least")
@@ -101,9 +115,18 @@ class StandIn:
             await in_thread(lambda: self._hands.trimmer_to(end))
 
     async def _decide(self, question: Question) -> Reply:
+        choices = {choice.value: choice for choice in question.choices}
+        free = "go on" in choices and not choices["go on"].wants_reason
+        if self._tries[question.item] or free or "again" not in choices:
+            if "probe" in choices:
+                self._say(f"          {choices['probe'].label}")
+                return Reply(choice="probe")
+            # The question is put anew when an extra reading is offered.
+            await self._wait_while(lambda view: view.suspects is not None and view.suspects.working)
+        if free:
+            return Reply(choice="go on")
         self._tries[question.item] += 1
         tries = self._tries[question.item]
-        choices = {choice.value for choice in question.choices}
         if question.point in ("rail+", "rail-") and tries <= MOST_WAITS:
             await in_thread(lambda: self._hands.advance(WAIT_S))
             return Reply(choice="again")
@@ -119,6 +142,13 @@ class StandIn:
         if verdict == "undecided" and "go on" in choices:
             return Reply(choice="go on", text="undecided twice; noted by the stand-in")
         return Reply(choice="make safe")
+
+    async def _wait_while(self, worked_on: Callable[[View], bool]) -> None:
+        """Give the model the time that a person takes: whoever has simulated hands is quicker than any."""
+        left_s = MOST_PATIENCE_S
+        while left_s > 0 and self._view is not None and worked_on(self._view):
+            await asyncio.sleep(0.02)
+            left_s -= 0.02
 
     def _trim(self, question: Question) -> Reply:
         live = self._view.live if self._view is not None else None

@@ -29,7 +29,10 @@ class SectionView:
 
 @dataclass(frozen=True, kw_only=True)
 class ResultView:
-    """One judged reading or rule, newest last.  Texts are ready to show, numbers are for drawing."""
+    """One judged reading or rule, newest last.  Texts are ready to show, numbers are for drawing.
+
+    `low` and `high` are the design's limits, `unit_low` and `unit_high` this unit's inside them, where there are any.
+    """
 
     item: str
     title: str
@@ -44,6 +47,11 @@ class ResultView:
     uncertainty: float | None = None
     from_before: bool = False
     overridden: str = ""
+    unit_low: float | None = None
+    unit_high: float | None = None
+    unit_low_text: str = ""
+    unit_high_text: str = ""
+    odd: bool = False
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -76,11 +84,65 @@ class LiveView:
 
 
 @dataclass(frozen=True, kw_only=True)
+class AimView:
+    """What the reading that is to be taken should be: the design's limits, and this unit's inside them.
+
+    `unit_text` is "" as long as nothing narrows the design's.
+    """
+
+    point: str
+    design_text: str
+    unit_text: str = ""
+
+
+@dataclass(frozen=True, kw_only=True)
+class SuspectView:
+    """One suspect: name, share of the probability (0 to 1, and in words), what else fits, what speaks for it."""
+
+    title: str
+    share: float
+    share_text: str
+    alike: str = ""
+    evidence: tuple[str, ...] = ()
+
+
+@dataclass(frozen=True, kw_only=True)
+class SuspectsView:
+    """What would explain the readings.
+
+    Parameters
+    ----------
+    item : str
+        The item that it was asked about.
+    working : bool
+        It is being worked out; nothing waits for it.
+    heading : str
+        The answer in a sentence.
+    suspects : tuple of SuspectView
+        The few likeliest.
+    unseen, next_step : str
+        What the readings could not have shown, and which reading would tell most.
+    accuses : bool
+        Something is put before a healthy unit.
+    """
+
+    item: str
+    working: bool
+    heading: str
+    suspects: tuple[SuspectView, ...] = ()
+    unseen: str = ""
+    next_step: str = ""
+    accuses: bool = False
+
+
+@dataclass(frozen=True, kw_only=True)
 class View:
     """Everything that a screen shows, at one moment.
 
     `busy` says what is being waited for ("" when the person is), with `busy_share` from 0 to 1 where it is known and
-    `remaining_s` where it can be counted down.  `kept` is how many lines of the record are on the disk.
+    `remaining_s` where it can be counted down. `kept` is how many lines of the record are on the disk. `narrowing`
+    says that limits of this unit are being worked out, for which nobody has to wait. `aim` and `suspects` are None
+    where there is nothing to say. `why` says what kept the verdict from being better.
     """
 
     kind: Literal["walk", "rehearsal"]
@@ -108,6 +170,10 @@ class View:
     verdict: Verdict | None
     stopped: str
     exit_status: int | None
+    narrowing: bool = False
+    aim: AimView | None = None
+    suspects: SuspectsView | None = None
+    why: str = ""
 
 
 @dataclass(frozen=True, kw_only=True)

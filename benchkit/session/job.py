@@ -33,6 +33,9 @@ class Job:
     units : int or None
         Units drawn for the limits.
     seed : int
+    narrow_rarely : bool
+        Limits are narrowed once for each condition, before its first reading, instead of after each reading: for
+        whoever reads faster than the model thinks.
     """
 
     design: Design
@@ -44,6 +47,7 @@ class Job:
     supply_accuracy: Accuracy
     units: int | None = None
     seed: int = 0
+    narrow_rarely: bool = False
 
     @property
     def manual_meter(self) -> bool:

@@ -11,7 +11,7 @@ from benchkit.errors import BenchkitError, ModelError
 from benchkit.events import Event, Judged, PointLimits, Predicted, PredictionRefused
 from benchkit.judge.rules import RuleFacts, evaluate
 from benchkit.measure.readings import Reading
-from benchkit.procedure.actions import Evaluate, Predict
+from benchkit.procedure.actions import CheckWarm, Evaluate, Predict
 from benchkit.procedure.items import Item, Joined
 from benchkit.procedure.state import State
 from benchkit.procedure.walk import Walk
@@ -74,6 +74,34 @@ def _open(value: float | None) -> float | None:
     return None if value is None or not math.isfinite(value) else value
 
 
+def check_warm(design: Design, action: CheckWarm, seed: int) -> Judged:
+    """Judge whether a design comes to rest warm under the conditions of its plan.
+
+    Returns
+    -------
+    Judged
+        ``fail`` when it has no warm state under one of them, ``undecided`` when the model can't tell; the value is the
+        largest loop gain from temperature to power and back, which has to stay below 1.
+    """
+    from benchkit.stage.warming import warm_report
+
+    worst, why, verdict = 0.0, "", "pass"
+    try:
+        for condition in action.conditions:
+            report = warm_report(design, condition, seed=seed)
+            if not report.has_warm_state:
+                why, verdict, worst = f"{report.sentence} {report.next_step}.", "fail", report.gain
+                break
+            if not why or report.worst_gain >= worst:
+                worst, why = report.worst_gain, report.sentence
+    except ModelError as error:
+        why, verdict, worst = str(error), "undecided", math.nan
+    return Judged(
+        item=action.item, subject="warm state", verdict=verdict, value=_open(float(worst)), unit="",  # type: ignore[arg-type]
+        low=None, high=1.0, why=why,
+    )  # fmt: skip
+
+
 def evaluate_rule(design: Design, walk: Walk, state: State, action: Evaluate) -> Judged:
     """Judge a named rule on the readings of the item's section and on the resistors that were measured cold."""
     item = walk.item(state)
@@ -130,34 +158,6 @@ def rule_facts(design: Design, walk: Walk, state: State, item: Item) -> RuleFact
         readings=readings,
         cold=cold,
         limits=limits,
-        wiper_open=lambda: wiper_open(design),
         positive_v=None if rails is None else rails[0],
         negative_v=None if rails is None else rails[1],
     )
-
-
-def wiper_open(design: Design) -> tuple[float, float]:
-    """Emitter drop (V) of the nominal unit at its target, and the same with the wiper open, on a limited supply.
-
-    Raises
-    ------
-    ModelError
-        When either has no solution.
-    """
-    from benchkit.procedure.sizing import supply_limit_a
-    from benchkit.stage.draws import nominal
-    from benchkit.stage.faults import parse_fault
-    from benchkit.stage.operate import solve_units
-
-    rails = design.rails
-    limit_a = supply_limit_a(design, rails.positive_v, rails.negative_v, share=1.0)
-    condition = Condition(
-        positive_v=rails.positive_v, negative_v=rails.negative_v, limit_a=limit_a, trimmer="target", when="cold"
-    )
-    drops = []
-    for fault in (None, parse_fault("spreader.trimmer: wiper open")):
-        solved = solve_units(design, nominal(design), condition, fault)
-        if not bool(solved.converged.all()):
-            raise ModelError("The model found no operating point for the trimmer's wiper", "one", "Check the design")
-        drops.append(float(solved.points["emitter.upper.1"][0]))
-    return drops[0], drops[1]

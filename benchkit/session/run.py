@@ -22,14 +22,11 @@ from concurrent.futures import Future
 from dataclasses import replace
 from typing import Any
 
-from benchkit.errors import BenchkitError, EntryError, IllegalEvent, InstrumentError
+from benchkit.errors import BenchkitError, IllegalEvent, InstrumentError
 from benchkit.events import (
-    Answered,
-    BenchFound,
-    BenchMissing,
     Closed,
-    Decided,
     Event,
+    Narrowed,
     Noted,
     OutputOff,
     StopAsked,
@@ -41,6 +38,7 @@ from benchkit.keeper.protocol import KeeperDied, Push
 from benchkit.procedure.actions import (
     Action,
     Ask,
+    CheckWarm,
     Connect,
     Evaluate,
     Predict,
@@ -53,22 +51,22 @@ from benchkit.procedure.actions import (
     Write,
 )
 from benchkit.procedure.state import Phase, State
-from benchkit.session import measuring, powering, predictions
+from benchkit.session import asking, measuring, powering, predictions
+from benchkit.session.aside import Aside
 from benchkit.session.clock import Clock
 from benchkit.session.front import Front, Reply
 from benchkit.session.hands import Hands
-from benchkit.session.job import Job, Stopped, figures_of, refusal
+from benchkit.session.job import Job, Stopped, figures_of
 from benchkit.session.threads import in_thread
 from benchkit.session.views import Headings, Moment, Painter
 
 HEARTBEAT_S = 0.2
 
-FIRST_LOOK_S = 0.2
-LOOK_S = 1.0
-"""How often the supply is looked at while a question stands (s)."""
-
 OFF_S = 6.0
 """How long "off" may take altogether before the words are that nothing is known (s)."""
+
+SUSPECTS_S = 30.0
+"""How long the end of a walk waits for suspects that are still being worked out; the supply is off by then (s)."""
 
 
 class Session:
@@ -101,6 +99,7 @@ class Session:
             ),
         )
         self._last_actions: tuple[Action, ...] = ()
+        self._aside = Aside(job, self._woken.set)
 
     # -- what the outside calls --------------------------------------------------------------------------------
 
@@ -196,9 +195,15 @@ class Session:
                     running = None
                     if event is not None:
                         fresh = await self._keep(event)
+                elif self._aside.ready:
+                    self._woken.clear()
+                    fresh = await self._keep_aside(self._aside.ready.popleft())
                 else:
                     self._woken.clear()
                     continue
+                if self._pushed or self._aside.ready:
+                    self._woken.set()
+                fresh = self._ask_aside(fresh)
                 if fresh or not self._stands(before):
                     await _lapse(running)
                     running = None
@@ -207,6 +212,7 @@ class Session:
                     action = fresh[0] if fresh else None
                 self.show()
         finally:
+            self._aside.stop()
             await _lapse(running)
         return self.state.closed
 
@@ -233,6 +239,29 @@ class Session:
         self.seq = kept.seq
         self.state = after
         return actions
+
+    async def _keep_aside(self, event: Event) -> tuple[Action, ...]:
+        """Keep what the model says of this unit; what the walk no longer wants is dropped."""
+        if self.state.phase == "closing" and isinstance(event, Narrowed):
+            return ()
+        try:
+            after, actions = self.job.walk.handle(self.state, event, self.clock.now())
+        except IllegalEvent:
+            return ()
+        kept = await asyncio.wrap_future(self.keeper.append(event, after=self.seq))
+        if kept.moved_on:
+            self._aside.ready.appendleft(event)  # what moved the record on comes first
+            await asyncio.sleep(0.01)
+            return ()
+        self.seq, self.state = kept.seq, after
+        return actions
+
+    def _ask_aside(self, actions: tuple[Action, ...]) -> tuple[Action, ...]:
+        """Ask the model what it is asked aside; returns what is left to be carried out."""
+        for action in actions:
+            if action.aside:
+                self._aside.ask(action)
+        return tuple(action for action in actions if not action.aside)
 
     def _stands(self, before: tuple[Phase, int]) -> bool:
         """Whether the walk is where it was."""
@@ -301,13 +330,17 @@ class Session:
         self._last_actions = (action,)
         match action:
             case Connect():
-                return await self._connect(action)
+                return await asking.connect(self)
             case Ask():
-                return await self._ask(action)
+                return await asking.ask(self, action)
             case Predict():
                 self.busy("The model works out what this unit should read.")
                 design, units, seed = self.job.design, self.job.units, self.job.seed
                 return await in_thread(lambda: predictions.predict(design, action, units, seed), "benchkit-model")
+            case CheckWarm():
+                self.busy("The model works out whether this design comes to rest when it warms up.")
+                design, seed = self.job.design, self.job.seed
+                return await in_thread(lambda: predictions.check_warm(design, action, seed), "benchkit-model")
             case Evaluate():
                 design, walk, state = self.job.design, self.job.walk, self.state
                 return await in_thread(lambda: predictions.evaluate_rule(design, walk, state, action), "benchkit-model")
@@ -320,90 +353,11 @@ class Session:
             case SwitchOff():
                 return await powering.switch_off(self, action)
             case Wait():
-                await self._wait(action)
+                await asking.wait(self, action)
                 return Waited(item=action.item, seconds=action.seconds)
             case Write():
                 return await self._write(action)
         raise BenchkitError(f"There is no way to carry out {type(action).__name__}")
-
-    async def _connect(self, action: Connect) -> Event:
-        self.busy("The instruments are being asked who they are.")
-        try:
-            found = await asyncio.wrap_future(self.keeper.connect(self.job.setup))
-            state = None
-            if not self.job.manual_supply:
-                state = await asyncio.wrap_future(self.keeper.supply_state())
-        except InstrumentError as error:
-            return BenchMissing(problem=str(error))
-        return BenchFound(
-            meter=found.get("meter") or "read by hand", supply=found.get("supply") or "set by hand", supply_state=state
-        )
-
-    async def _ask(self, action: Ask) -> Event:
-        question = action.question
-        reply = await self.ask(question)
-        item = self.job.walk.item(self.state)
-        if question.kind == "decide":
-            if reply.choice == "go on" and not reply.text.strip():
-                raise BenchkitError("A front end passed on a choice without its reason")
-            return Decided(item=action.item, choice=reply.choice, reason=reply.text.strip())  # type: ignore[arg-type]
-        if reply.choice == "make safe":
-            raise Stopped(f"the operator chose it at: {question.title}")
-        if item.act and reply.choice == "done":
-            await self.hands.act(item.act)
-        if question.point and question.kind in ("probes", "tell"):
-            await self.hands.probe(question.point)
-            await self.clock.spend(1.0)
-        return Answered(item=action.item, choice=reply.choice, text=reply.text.strip())  # type: ignore[arg-type]
-
-    async def ask(self, question: Question) -> Reply:
-        """Put a question until the reply is one of its choices, with a reason where one is wanted."""
-        refused = ""
-        self.busy("")
-        while True:
-            reply = await self._asked(question, refused)
-            refused = refusal(question, reply)
-            if not refused:
-                return reply
-
-    async def _asked(self, question: Question, refused: str) -> Reply:
-        """Put a question, and keep looking at the supply while the person thinks."""
-        asking = asyncio.ensure_future(self.front.ask(question, refused))
-        try:
-            look_s = FIRST_LOOK_S
-            while True:
-                done, _ = await asyncio.wait({asking}, timeout=look_s)
-                if done:
-                    return asking.result()
-                look_s = LOOK_S
-                if self.state.energised == "on":
-                    await self.sample()
-        finally:
-            asking.cancel()
-
-    async def ask_entry(self, question: Question, parse: Callable[[str], Any]) -> tuple[Reply, Any]:
-        """Put a question that wants something typed, until it can be used."""
-        refused = ""
-        self.busy("")
-        while True:
-            reply = await self._asked(question, refused)
-            if reply.choice == "make safe":
-                raise Stopped(f"the operator chose it at: {question.title}")
-            if reply.choice not in ("done", "take"):
-                return reply, None
-            try:
-                return reply, parse(reply.text)
-            except EntryError as error:
-                refused = str(error)
-
-    async def _wait(self, action: Wait) -> None:
-        left_s = action.seconds
-        while left_s > 0:
-            self.busy(action.reason, share=1.0 - left_s / action.seconds, remaining_s=left_s)
-            slice_s = min(1.0, left_s)
-            await self.clock.spend(slice_s)
-            left_s -= slice_s
-            await self.sample()
 
     async def sample(self) -> None:
         """Take a sample of the watch where the keeper doesn't do so by itself, and show it."""
@@ -432,7 +386,15 @@ class Session:
         self.moment.supply = state
         self.show()
 
+    async def ask_entry(self, question: Question, parse: Callable[[str], Any]) -> tuple[Reply, Any]:
+        """Put a question that wants something typed, until it can be used."""
+        return await asking.put_entry(self, question, parse)
+
     async def _write(self, action: Write) -> Event | None:
+        if isinstance(action.event, Closed) and self.state.suspecting:
+            self.busy("The model still works out what would explain the readings.")
+            await self._aside.settled(SUSPECTS_S)
+            await asyncio.sleep(0.05)  # an answer that is there by now makes the walk close anew
         if isinstance(action.event, Closed) and self.hands.simulated and not self._truth_noted:
             self._truth_noted = True
             truth = await self.hands.truth()
@@ -449,6 +411,7 @@ class Session:
 
     def show(self) -> None:
         """Give the front end a new picture."""
+        self.moment.narrowing = self._aside.narrowing
         self.front.show(self._painter.paint(self.state, self.moment))
 
     def show_moment(self, **changes: Any) -> None:

@@ -53,6 +53,8 @@ class Setting:
     plant : str
         The fault planted in a rehearsal, "" without one.
     units : int or None
+    narrow_rarely : bool
+        See `benchkit.session.job.Job`.
     cautions : tuple of str
         What has to be said about this bench, such as a calibration that is overdue.
     """
@@ -71,6 +73,7 @@ class Setting:
     seed: int = 0
     plant: str = ""
     units: int | None = None
+    narrow_rarely: bool = False
     cautions: tuple[str, ...] = field(default=())
 
 
@@ -163,6 +166,7 @@ class Runner:
             supply_accuracy=setting.supply_accuracy,
             units=setting.units,
             seed=setting.seed,
+            narrow_rarely=setting.narrow_rarely,
         )
         early: list[Any] = []
         session: Session | None = None

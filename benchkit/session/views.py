@@ -7,10 +7,21 @@ from dataclasses import dataclass, replace
 from benchkit import quantities
 from benchkit.events import Judged, SupplyState
 from benchkit.judge.verdicts import worst
-from benchkit.procedure.items import Plan
+from benchkit.procedure import knowledge, suspect_words
+from benchkit.procedure.items import Item, Plan, condition_key
 from benchkit.procedure.state import State
 from benchkit.procedure.walk import Walk
-from benchkit.session.front import Energised, LiveView, ResultView, SectionView, SupplyView, View
+from benchkit.session.front import (
+    AimView,
+    Energised,
+    LiveView,
+    ResultView,
+    SectionView,
+    SupplyView,
+    SuspectsView,
+    SuspectView,
+    View,
+)
 
 OVERLOAD = "The meter reads overload"
 """How a verdict on an overload begins; such a result has no number."""
@@ -31,6 +42,8 @@ class Moment:
         The newest sample of a watch, newer than the state's.
     message : str
         The last sentence for the person.
+    narrowing : bool
+        Limits of this unit are being worked out.
     """
 
     busy: str = ""
@@ -39,6 +52,7 @@ class Moment:
     live: LiveView | None = None
     supply: SupplyState | None = None
     message: str = ""
+    narrowing: bool = False
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -61,6 +75,8 @@ class Painter:
         self._state: State | None = None
         self._sections: tuple[SectionView, ...] = ()
         self._results: tuple[ResultView, ...] = ()
+        self._aim: AimView | None = None
+        self._suspects: SuspectsView | None = None
         self._drawn: dict[tuple[Judged, bool, str], ResultView] = {}
 
     def paint(self, state: State, moment: Moment) -> View:
@@ -69,6 +85,8 @@ class Painter:
             self._state = state
             self._sections = _sections(self._walk.plan, state)
             self._results = tuple(self._result(state, judged) for judged in state.results)
+            self._aim = _aim(self._walk, state)
+            self._suspects = _suspects(self._walk, state)
         opened, item, headings = state.opened, self._walk.item(state), self._headings
         return View(
             kind="walk" if opened is None else opened.kind,
@@ -91,17 +109,22 @@ class Painter:
             busy=moment.busy,
             busy_share=moment.busy_share,
             remaining_s=moment.remaining_s,
-            message=moment.message or state.note,
+            message=moment.message or state.note or _remark(self._suspects, self._walk.host(state)),
             kept=state.count,
             verdict=None if state.closed is None else state.closed.verdict,
             stopped=state.stopped,
             exit_status=None if state.closed is None else state.closed.exit_status,
+            narrowing=moment.narrowing,
+            aim=self._aim,
+            suspects=self._suspects,
+            why="" if state.closed is None else state.closed.why,
         )
 
     def _result(self, state: State, judged: Judged) -> ResultView:
         key = judged, judged.item in state.before, state.overrides.get(judged.item, "")
         if key not in self._drawn:
-            self._drawn[key] = _result(self._titles.get(judged.item, judged.item), *key)
+            extras = {item.id: item.title for item in state.extras}
+            self._drawn[key] = _result(self._titles.get(judged.item) or extras.get(judged.item, judged.item), *key)
         return self._drawn[key]
 
 
@@ -120,7 +143,77 @@ def _result(title: str, judged: Judged, from_before: bool, overridden: str) -> R
         uncertainty=judged.uncertainty,
         from_before=from_before,
         overridden=overridden,
+        unit_low=judged.unit_low,
+        unit_high=judged.unit_high,
+        unit_low_text=_number(judged.unit_low, judged.unit),
+        unit_high_text=_number(judged.unit_high, judged.unit),
+        odd=judged.odd,
     )
+
+
+def _aim(walk: Walk, state: State) -> AimView | None:
+    """Say what the reading that is to be taken should be, as soon as that is known."""
+    item = walk.item(state)
+    if item.kind != "measure" or item.point is None or state.phase not in ("placing", "reading"):
+        return None
+    design, unit = walk.limits_for(state, item), walk.unit_limits_for(state, item)
+    if design is None:
+        return None
+    return AimView(point=item.point.name, design_text=str(design), unit_text="" if unit is None else str(unit))
+
+
+def _suspects(walk: Walk, state: State) -> SuspectsView | None:
+    """Put the last answer about suspects into words; while a newer one is being worked out, only that."""
+    if state.suspecting:
+        heading = "The model works out what would explain the readings. Nothing waits for it."
+        return SuspectsView(item=walk.asked_at(state), working=True, heading=heading)
+    suspicion = state.suspicion
+    if suspicion is None:
+        return None
+    return SuspectsView(
+        item=suspicion.item,
+        working=False,
+        heading=suspect_words.heading_words(suspicion),
+        suspects=tuple(
+            SuspectView(
+                title=suspect_words.fault_words(one.fault),
+                share=one.probability,
+                share_text=suspect_words.chance_words(one.probability),
+                alike=suspect_words.alike_words(one),
+                evidence=suspect_words.evidence_for(one),
+            )
+            for one in suspect_words.shown_suspects(suspicion)
+        ),
+        unseen=suspect_words.unseen_words(suspicion, names=2),
+        next_step=_next_step(walk, state),
+        accuses=walk.suspects_a_fault(state),
+    )
+
+
+def _next_step(walk: Walk, state: State) -> str:
+    """Say which reading would tell most: the one that is offered, else one that can be had after off."""
+    suspicion, offered = state.suspicion, walk.offer(state)
+    if suspicion is None or state.closed is not None:
+        return ""
+    if offered is not None:
+        (condition, point), _ = offered
+        key = condition_key(condition)
+        found = (probe for probe in suspicion.probe_next if (probe.point, probe.condition) == (point.name, key))
+        return suspect_words.probe_words(next(found), now=True)
+    later = {(condition_key(condition), point.name) for condition, point in knowledge.unpowered(walk.plan, state)}
+    if not walk.suspects_a_fault(state) or walk.way_out(state) or not walk.host(state).powered:
+        return ""
+    for probe in suspicion.probe_next:
+        if (probe.condition, probe.point) in later:
+            return suspect_words.probe_words(probe, now=False)
+    return ""
+
+
+def _remark(suspects: SuspectsView | None, host: Item) -> str:
+    """Say in one line what was asked about an earlier item: its answer may come when the walk has gone on."""
+    if suspects is None or suspects.item == host.id:
+        return ""
+    return suspects.heading if suspects.working or suspects.accuses else ""
 
 
 def supply_words(energised: Energised, supply: SupplyState | None, *, by_hand: bool) -> str:

@@ -22,10 +22,10 @@ heat
     Junction temperatures in balance.
 quantiles, expected
     Limits that hold 99.73 % of healthy units.
-trimmer
-    What the trimmer can do: authority, slope, an open wiper, cold to warm.
-crossover
-    What a bias error costs: gain and output resistance against output current, the best bias.
+trimmer, trimmer_slope, trimmer_report
+    What the trimmer can do: authority, an open wiper, cold to warm; slope; all of it together.
+crossover, bias_cost
+    Gain and output resistance against output current, the best bias; what a bias error costs.
 more_expected
     Heat, trimmer and bias of a condition as plain data.
 reach

@@ -41,10 +41,9 @@ from benchkit.circuit.response import Response
 from benchkit.circuit.solve import Compiled, Solution, compile_netlist
 from benchkit.errors import ModelError
 from benchkit.quantities import show
-from benchkit.stage.conditions import NO_LIMIT_A, Condition
-from benchkit.stage.design import ZERO_CELSIUS_K, Design, target_drop_v
+from benchkit.stage.conditions import NO_LIMIT_A
+from benchkit.stage.design import ZERO_CELSIUS_K, Design
 from benchkit.stage.draws import Array, nominal
-from benchkit.stage.operate import solve_units
 from benchkit.stage.points import transistors_of
 from benchkit.stage.topologies import POWERED, TOPOLOGIES, Builder, pair_nodes
 
@@ -63,8 +62,6 @@ _FINE: Final = 7
 _PLACES: Final = 801
 _NO_LOAD_OHM: Final = 1e-3
 _SEARCH_EACH_SIDE: Final = 18
-_LEAST_SHARE: Final = 1e-3
-_SAME: Final = 0.01
 
 
 @dataclass(frozen=True, kw_only=True, eq=False)
@@ -350,12 +347,12 @@ def _at_rest(design: Design, drops_v: Array, values: Mapping[str, Array], rest_v
 def region(design: Design, load_ohm: float, setting: Setting) -> float:
     """Largest output current (A) of the crossover region; see the top of this module."""
     emitter_ohm = design.output.emitter_resistor.value
-    kelvin = _junction_c(design, setting) + ZERO_CELSIUS_K
+    kelvin = junction_c(design, setting) + ZERO_CELSIUS_K
     wanted_a = REGION * design.output.pairs * oliver_current_a(kelvin, emitter_ohm)
     return min(wanted_a, SWING * _room_v(design, setting) / load_ohm)
 
 
-def _junction_c(design: Design, setting: Setting) -> float:
+def junction_c(design: Design, setting: Setting) -> float:
     """Mean temperature (degC) of the output junctions."""
     pairs = zip(transistors_of(design), setting.temperatures_c, strict=True)
     return float(np.mean([celsius for part, celsius in pairs if part.role == "output"]))
@@ -376,7 +373,7 @@ def least_ripple_drop_v(
     ModelError
         When a point has no solution.
     """
-    middle_v = float(thermal_voltage(_junction_c(design, setting) + ZERO_CELSIUS_K))
+    middle_v = float(thermal_voltage(junction_c(design, setting) + ZERO_CELSIUS_K))
     if region_a is None:
         region_a = region(design, _NO_LOAD_OHM if load_ohm is None else load_ohm, setting)
     most_a = region_a
@@ -403,125 +400,3 @@ def _room_v(design: Design, setting: Setting) -> float:
     """Swing (V) that the nearer rail allows."""
     rest_v = design.rest_v(setting.positive_v, setting.negative_v)
     return min(setting.positive_v - rest_v, rest_v - setting.negative_v)
-
-
-@dataclass(frozen=True, kw_only=True)
-class Bias:
-    """What one bias costs and gives.
-
-    Attributes
-    ----------
-    name : str
-        "half", "target", "double"; "present" and "least ripple" where they differ from the target.
-    drop_v, current_a : float
-        Emitter drop, and quiescent current of all pairs.
-    idle_w : float
-        What that current turns into heat between the rails.
-    gain, output_ohm : float
-        At rest, into the first load.
-    ripples : tuple of float
-        Gain ripple into each load.
-    """
-
-    name: str
-    drop_v: float
-    current_a: float
-    idle_w: float
-    gain: float
-    output_ohm: float
-    ripples: tuple[float, ...]
-
-
-@dataclass(frozen=True, kw_only=True, eq=False)
-class BiasReport:
-    """What a bias error costs a design under a condition; see the top of this module.
-
-    Attributes
-    ----------
-    loads_ohm, regions_a : tuple of float
-        Loads, and how far the output current goes either way for each.
-    junction_c : float
-        Temperature of the output junctions.
-    target_v, present_v, least_ripple_v : float
-        Emitter drops: the target, what the nominal unit has, and where by the model the gain into the first load
-        ripples least.
-    oliver_v : float or None
-        By Oliver's condition with the devices' own resistances; None for a feedback pair.
-    biases : tuple of Bias
-        From the least to the greatest drop.
-    sweeps : dict of str to Sweep
-        Into the first load, by the name of the bias.
-    """
-
-    loads_ohm: tuple[float, ...]
-    regions_a: tuple[float, ...]
-    junction_c: float
-    target_v: float
-    present_v: float
-    least_ripple_v: float
-    oliver_v: float | None
-    biases: tuple[Bias, ...]
-    sweeps: dict[str, Sweep]
-
-    def __getitem__(self, name: str) -> Bias:
-        return next(bias for bias in self.biases if bias.name == name)
-
-
-def bias_report(design: Design, condition: Condition, loads_ohm: Sequence[float] = LOADS_OHM) -> BiasReport:
-    """Say what a bias error costs a design.
-
-    Parameters
-    ----------
-    design : Design
-    condition : Condition
-        Gives the present bias and how warm the junctions are, both of the nominal unit. The rails are always the
-        design's full ones: on lower ones the output current hardly leaves what both halves conduct at rest.
-    loads_ohm : sequence of float
-
-    Raises
-    ------
-    ModelError
-        When the nominal unit has no operating point under the condition, or the stage none at some output current.
-    """
-    unit = solve_units(design, nominal(design), condition, loading="none")
-    if not unit.converged[0]:
-        raise ModelError(f"{design.name}: the nominal unit found no state of rest", "one, for its bias to be looked at")
-    setting = Setting(
-        positive_v=design.rails.positive_v,
-        negative_v=design.rails.negative_v,
-        temperatures_c=tuple(float(unit.temperatures_c[part.name][0]) for part in transistors_of(design)),
-    )
-    target_v, present_v = target_drop_v(design), float(unit.points["emitter.pair.1"][0]) / 2.0
-    loads = tuple(loads_ohm)
-    best_v = least_ripple_drop_v(design, setting, loads[0])
-    drops = {"half": 0.5 * target_v, "target": target_v, "double": 2.0 * target_v}
-    if abs(best_v / target_v - 1.0) > _SAME:
-        drops["least ripple"] = best_v
-    if present_v > _LEAST_SHARE * target_v and abs(present_v / target_v - 1.0) > _SAME:
-        drops["present"] = present_v
-    names = sorted(drops, key=lambda name: drops[name])
-    found = [sweeps(design, tuple(drops[name] for name in names), load, setting) for load in loads]
-    biases = []
-    for index, name in enumerate(names):
-        first = found[0][index]
-        gain, output_ohm = first.at_rest
-        biases.append(
-            Bias(
-                name=name, drop_v=first.drop_v, current_a=first.current_a,
-                idle_w=(setting.positive_v - setting.negative_v) * first.current_a,
-                gain=gain, output_ohm=output_ohm, ripples=tuple(each[index].ripple for each in found),
-            )
-        )  # fmt: skip
-    celsius = _junction_c(design, setting)
-    followers = design.output.topology != "complementary-feedback-pair"
-    return BiasReport(
-        loads_ohm=loads,
-        regions_a=tuple(region(design, load, setting) for load in loads),
-        junction_c=celsius,
-        target_v=target_v,
-        present_v=present_v,
-        least_ripple_v=best_v,
-        oliver_v=oliver_drop_v(design, celsius) if followers else None,
-        biases=tuple(biases),
-        sweeps=dict(zip(names, found[0], strict=True)),
-    )

@@ -20,6 +20,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from benchkit.circuit.solve import Effort
 from benchkit.stage.draws import Array
 from benchkit.stage.faults import Fault
 from benchkit.stage.readouts import Index, Matrix
@@ -28,7 +29,7 @@ from benchkit.stage.unit_model import Joint, UnitModel
 MOST_STEPS = 12
 FARTHEST = 4.5
 """No coordinate is moved farther out than this: beyond lies less than one unit in 100,000."""
-ENOUGH = 0.02
+ENOUGH = 0.2
 """A step that would lower J by less than this is not taken."""
 OVERLOAD_SHARE = 0.01
 """Standard uncertainty of where an overload begins, as a share of it."""
@@ -78,14 +79,15 @@ class Fit:
     log_evidence: Array
 
 
-def residual(data: Data, f: Matrix, most: Array) -> tuple[Matrix, Matrix]:
-    """What f leaves of the readings, and the standard uncertainties that count.
+def residual(data: Data, joint: Joint, most: Array) -> tuple[Matrix, Matrix]:
+    """What the model leaves of the readings, and the standard uncertainties that count.
 
     An overload is taken as a reading at the range's end while f lies below it, and as no reading otherwise.
     """
+    f = joint.f
     over = ~np.isfinite(data.y)
     left = np.where(over, 0.0, data.y) - f
-    u = np.hypot(data.u, MODEL_SHARE * np.abs(f) + MODEL_FLOOR)
+    u = np.sqrt(data.u**2 + joint.doubt**2 + (MODEL_SHARE * np.abs(f) + MODEL_FLOOR) ** 2)
     if over.any():
         ends = np.broadcast_to(np.where(np.isfinite(most), most, 0.0), f.shape)
         short = over & np.isfinite(most) & (data.y > 0.0) & (f < ends)
@@ -96,7 +98,7 @@ def residual(data: Data, f: Matrix, most: Array) -> tuple[Matrix, Matrix]:
 
 def cost_of(data: Data, z: Array, joint: Joint, most: Array) -> Array:
     """J of units at z; infinite where they have no readings."""
-    left, u = residual(data, joint.f, most)
+    left, u = residual(data, joint, most)
     return np.where(joint.good, (z**2).sum(axis=0) + ((left / u) ** 2).sum(axis=1), np.inf)
 
 
@@ -111,7 +113,7 @@ def step_from(data: Data, z: Array, joint: Joint, most: Array) -> tuple[Array, A
     log_determinant : array of shape (units,)
         Of S S^T + R.
     """
-    left, u = residual(data, joint.f, most)
+    left, u = residual(data, joint, most)
     scaled = joint.slope / u[:, :, None]
     gram = scaled @ np.swapaxes(scaled, 1, 2)
     gram[:, range(gram.shape[1]), range(gram.shape[1])] += 1.0
@@ -135,6 +137,7 @@ def fit(
     faults: Sequence[Fault],
     z: Array,
     joint: Joint,
+    effort: Effort = "start",
     most_steps: int = MOST_STEPS,
 ) -> Fit:
     """Find the best z of every unit from where it stands.
@@ -147,18 +150,21 @@ def fit(
         Each unit's hypothesis.
     z, joint : array, Joint
         Where to start and the readings there.
+    effort : "start" or "borrow"
+        What the solver does for units that are hard; a step that it can't solve is halved.
     """
     most = model.most
     z = z.copy()
     cost = cost_of(data, z, joint, most)
-    f, slope, good = joint.f.copy(), joint.slope.copy(), joint.good.copy()
+    f, slope, doubt, good = joint.f.copy(), joint.slope.copy(), joint.doubt.copy(), joint.good.copy()
+    straight_at = joint.straight_at.copy()
     solutions = joint.solutions
     live = np.flatnonzero(good)
     share = np.ones(len(good))
     for _ in range(most_steps):
         if not len(live):
             break
-        here = Joint(f[live], slope[live], good[live], ())
+        here = Joint(f[live], slope[live], doubt[live], good[live], straight_at[:, live], ())
         aim, promised, _ = step_from(data.take(live), z[:, live], here, most)
         aim = np.clip(aim, -FARTHEST, FARTHEST)
         going = (cost[live] - promised > ENOUGH) & (share[live] > 0.02)
@@ -166,18 +172,19 @@ def fit(
         if not len(live):
             break
         trial = z[:, live] + share[live] * (aim - z[:, live])
-        start = Joint(f, slope, good, solutions).take(live)
-        found = model.at(trial, [faults[k] for k in live], start, "start")
+        start = Joint(f, slope, doubt, good, straight_at, solutions).take(live)
+        found = model.at(trial, [faults[k] for k in live.tolist()], start, effort)
         now = cost_of(data.take(live), trial, found, most)
         better = now < cost[live]
         won = live[better]
         taken = np.flatnonzero(better)
         z[:, won], cost[won] = trial[:, better], now[better]
-        f[won], slope[won] = found.f[taken], found.slope[taken]
+        f[won], slope[won], doubt[won] = found.f[taken], found.slope[taken], found.doubt[taken]
+        straight_at[:, won] = found.straight_at[:, taken]
         _put(solutions, won, found, taken, len(good))
         share[won] = np.minimum(1.0, share[won] * 2.0)
         share[live[~better]] *= 0.3
-    end = Joint(f, slope, good, solutions)
+    end = Joint(f, slope, doubt, good, straight_at, solutions)
     return Fit(z, end, cost, log_evidence(data, z, end, most))
 
 
@@ -187,9 +194,3 @@ def _put(solutions: Sequence[object], where: Index, found: Joint, which: Index, 
         to = np.concatenate([where + k * units for k in range(repeats)])
         of = np.concatenate([which + k * len(found.good) for k in range(repeats)])
         mine.put(to, theirs, of)  # type: ignore[attr-defined]
-
-
-def marginal_sd(joint: Joint) -> Matrix:
-    """Standard deviation of each reading before anything was read, to first order; shape (units, readings)."""
-    return np.sqrt((joint.slope**2).sum(axis=2))
-

@@ -1,9 +1,9 @@
 """Hypotheses about units: every fault of the table, solved for a layout of readings and fitted to them.
 
-A `Library` holds, for one layout, each hypothesis's nominal unit and a few drawn ones with their readings and slopes. It
-is made once and serves every unit that is read in the same way. A unit's readings start each hypothesis from the member
-that comes nearest; hypotheses that are hopeless even to first order are not pursued, unless nothing else explains the
-readings.
+A `Library` holds, for one layout, each hypothesis's nominal unit and a few drawn ones with their readings and slopes.
+It is made once and serves every unit that is read in the same way. A unit's readings start each hypothesis from the
+member that comes nearest; hypotheses that are hopeless even to first order are not pursued, unless nothing else
+explains the readings.
 """
 
 from __future__ import annotations
@@ -13,6 +13,7 @@ from functools import lru_cache
 
 import numpy as np
 
+from benchkit.circuit.solve import Effort
 from benchkit.stage.design import Design
 from benchkit.stage.draws import Array
 from benchkit.stage.faults import HEALTHY, faults_of, prior_of
@@ -81,7 +82,9 @@ def joined(first: Joint, second: Joint) -> Joint:
         solutions.append(both.take(order))
     return Joint(
         np.concatenate([first.f, second.f]), np.concatenate([first.slope, second.slope]),
-        np.concatenate([first.good, second.good]), tuple(solutions),
+        np.concatenate([first.doubt, second.doubt]),
+        np.concatenate([first.good, second.good]),
+        np.concatenate([first.straight_at, second.straight_at], axis=1), tuple(solutions),
     )  # fmt: skip
 
 
@@ -93,10 +96,12 @@ def _replaced(joint: Joint, where: Index, other: Joint) -> Joint:
     return both.take(index)
 
 
-PURSUED = 16
+PURSUED = 8
 """Hypotheses that are fitted in any case: so many of those that, to first order, explain the readings best."""
 WITHIN = 50.0
 """Others are fitted when, to first order, they come this near to the best one's cost."""
+AGAIN = 8
+"""So many of the best hypotheses are fitted from other members of the library when nothing explains the readings."""
 EXPLAINED = 2.0
 """Costs above so many a reading (and 10) explain nothing: then the others are fitted too, and from other members."""
 
@@ -140,8 +145,13 @@ def fit_hypotheses(lib: Library, data: Data) -> Fitted:
         chosen = solvable & unexplained & lib.joint.good[starts[:, turn]]
         if not turn:
             chosen &= ~pursue
+        else:
+            near = np.zeros_like(chosen)
+            for measure in (promised, best.cost):
+                np.put_along_axis(near, measure.argsort(axis=1)[:, :AGAIN], True, axis=1)
+            chosen &= near
         if chosen.any():
-            best.add(*_fit(lib, data, starts[:, turn], chosen))
+            best.add(*_fit(lib, data, starts[:, turn], chosen, "borrow" if turn else "start"))
     whole = best.fit()
     evidence[best.row >= 0] = whole.log_evidence[best.row[best.row >= 0]]
     posterior = evidence + lib.log_prior
@@ -201,9 +211,11 @@ def _first_order(lib: Library, data: Data) -> tuple[Index, Array, Array]:
     return starts, promised, evidence
 
 
-def _fit(lib: Library, data: Data, start: Index, pursue: Mask) -> tuple[Fit, Index, Index]:
+def _fit(
+    lib: Library, data: Data, start: Index, pursue: Mask, effort: Effort = "start"
+) -> tuple[Fit, Index, Index]:
     which_set, which = np.nonzero(pursue)
     index = start[which_set, which]
     faults = [lib.faults[k] for k in which]
-    found = fit(lib.model, data.take(which_set), faults, lib.z[:, index], lib.joint.take(index))
+    found = fit(lib.model, data.take(which_set), faults, lib.z[:, index], lib.joint.take(index), effort)
     return found, which_set, which

@@ -2,9 +2,10 @@
 
 A hypothesis about a unit ("healthy", "emitter.upper.1 open") leaves the values of its parts open within their
 tolerances. Every value that can vary is written as a function of one coordinate z with a standard normal prior, so that
-|z|^2/2 is what a value costs: a marked tolerance is value*(1 + p*(2*Phi(z) - 1)), uniform over +-p; a device's spread is
-log-normal. Beside the parts there is what the bench leaves open: how far the rails stand off their setting, how far the
-room is from the stated temperature, where between two conditions a reading was taken, where an unknown trimmer stands.
+|z|^2/2 is what a value costs: a marked tolerance is value*(1 + p*(2*Phi(z) - 1)), uniform over +-p; a device's spread
+is log-normal. Beside the parts there is what the bench leaves open: how far the rails stand off their setting, how far
+the room is from the stated temperature, where between two conditions a reading was taken, where an unknown trimmer
+stands.
 """
 
 from __future__ import annotations
@@ -30,7 +31,7 @@ _SHARE = np.array([NormalDist().cdf(z) for z in _GRID])
 
 def share_below(z: Array) -> Array:
     """Standard normal distribution function, linear between points 0.005 apart (within 1e-6)."""
-    return np.interp(z, _GRID, _SHARE)
+    return np.asarray(np.interp(z, _GRID, _SHARE))
 
 
 class Coordinates:
@@ -71,7 +72,7 @@ class Coordinates:
 
     def row(self, z: Array, name: str) -> Array:
         """One coordinate of every unit, shape (units,)."""
-        return z[self.index[name]]
+        return np.asarray(z[self.index[name]])
 
     def place_and_slope(self, z: Array, name: str) -> tuple[Array, Array]:
         """A coordinate as a share, uniform from 0 to 1, and its derivative."""

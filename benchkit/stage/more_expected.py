@@ -11,11 +11,12 @@ from dataclasses import asdict
 from typing import Any
 
 from benchkit.errors import ModelError
+from benchkit.stage.bias_cost import bias_report
 from benchkit.stage.conditions import Condition
-from benchkit.stage.crossover import LOADS_OHM, Sweep, bias_report
+from benchkit.stage.crossover import LOADS_OHM, Sweep
 from benchkit.stage.design import Design
 from benchkit.stage.expected import finite
-from benchkit.stage.trimmer import trimmer_report
+from benchkit.stage.trimmer_report import trimmer_report
 from benchkit.stage.warming import warm_report
 
 _DIGITS = 7

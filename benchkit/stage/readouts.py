@@ -53,6 +53,8 @@ STEP = 1e-6
 """How far a coordinate is moved for a derivative (K for a temperature)."""
 SLIGHT_LOAD = 0.99
 """A voltmeter that leaves less than this share of the bare voltage is put into the circuit."""
+STRAIGHT = 0.7
+"""How far a coordinate may move before the slopes of unpowered readings are worked out again."""
 SECTION_UNITS = 12_000
 """Units that are evaluated together for derivatives: few enough to stay in the cache."""
 
@@ -104,10 +106,8 @@ class Powered:
         self._warm = condition.when == "warm"
         self._stage = build(design, Variant(fuses=condition.fuse_ohm is not None))
 
-    def at(
-        self, z: Array, faults: Sequence[Fault], start: Solution | None = None, effort: Effort = "borrow"
-    ) -> Linear:
-        """Solve units at z, of shape (coordinates, units), each with its fault, from an earlier solution or from rest."""
+    def at(self, z: Array, faults: Sequence[Fault], start: Solution | None = None, effort: Effort = "borrow") -> Linear:
+        """Solve units at z, of shape (coordinates, units), each with its fault; ``start`` is an earlier solution."""
         units = z.shape[1]
         run = self._run(z, faults)
         run.effort = effort
@@ -127,9 +127,7 @@ class Powered:
             self._load(z, faults, state, loaded, f, slope)
         return _finished(f, slope, state.converged, state.solution)
 
-    def _load(
-        self, z: Array, faults: Sequence[Fault], state: State, loaded: Index, f: Matrix, slope: Matrix
-    ) -> None:
+    def _load(self, z: Array, faults: Sequence[Fault], state: State, loaded: Index, f: Matrix, slope: Matrix) -> None:
         """Solve again, with the voltmeter there, what it loads by more than a little; pairs of unit and point."""
         unit, row = loaded[:, 0], loaded[:, 1]
         fuses = self.condition.fuse_ohm is not None
@@ -289,32 +287,54 @@ class UnpoweredPoints:
         self.most = np.array([OVER_RANGE * one.full_scale for one in ranges])
         """Readings above these show as an overload."""
 
-    def at(
-        self, z: Array, faults: Sequence[Fault], start: Solution | None = None, effort: Effort = "borrow"
+    def at(self, z: Array, faults: Sequence[Fault], start: Solution | None = None, effort: Effort = "borrow") -> Linear:
+        """Solve units at z, of shape (coordinates, units), each with its fault; ``start`` is an earlier solution."""
+        return self.near(z, faults, start, effort, None, None)
+
+    def near(
+        self,
+        z: Array,
+        faults: Sequence[Fault],
+        start: Solution | None,
+        effort: Effort,
+        known: Matrix | None,
+        at: Array | None,
     ) -> Linear:
-        """Solve units at z, of shape (coordinates, units), each with its fault, from an earlier solution or from rest."""
+        """Solve units at z; slopes that are known are kept for units that have hardly moved since.
+
+        Parameters
+        ----------
+        known, at : arrays of shape (units, points, coordinates) and (coordinates, units), optional
+            Slopes, and where they were worked out: unpowered readings are nearly straight.
+        """
         units, many = z.shape[1], len(self.points)
         whose = np.tile(np.arange(units), many)
         meter = np.repeat(np.arange(many), units)
         values = self._values(z[:, whose], list(faults) * many, meter)
         chosen = {key: value for key, value in values.items() if key in self._circuit.keys}
         solution = self._circuit.solve(chosen, units * many, start, effort=effort)
-        response = Response(solution)
         f = self._read(solution, meter).reshape(many, units).T
+        again = np.ones(units, np.bool_)
         slope = np.empty((units * many, len(self.coordinates)))
+        if known is not None and at is not None:
+            again = (np.abs(z - at) > STRAIGHT).any(axis=0)
+            slope = np.moveaxis(known, 1, 0).reshape(units * many, -1).copy()
+        rows = np.flatnonzero(again[whose])
+        response = Response(solution.take(rows)) if len(rows) else None
         step = max(1, SECTION_UNITS // (len(z) + 1))
         directions = len(z) + 1
-        for low in range(0, units * many, step):
-            part = slice(low, min(low + step, units * many))
-            own = whose[part]
+        for low in range(0, len(rows), step):
+            assert response is not None
+            part = slice(low, min(low + step, len(rows)))
+            own = whose[rows[part]]
             moved_z = tiled(z[:, own], STEP)
-            awake = np.tile(meter[part], directions)
+            awake = np.tile(meter[rows[part]], directions)
             values = self._values(moved_z, [faults[k] for k in own] * directions, awake)
             keys = response.solution.values
             moved = response.moved({key: values.get(key, keys[key]) for key in keys}, directions, part)
             reads = self._read(moved, awake).reshape(directions, len(own))
-            slope[part] = ((reads[:-1] - reads[-1:]) / STEP).T
-        converged = solution.converged.reshape(many, units).all(axis=0)
+            slope[rows[part]] = ((reads[:-1] - reads[-1:]) / STEP).T
+        converged = np.asarray(solution.converged.reshape(many, units).all(axis=0))
         return _finished(f, np.moveaxis(slope.reshape(many, units, -1), 0, 1), converged, solution)
 
     def _values(self, z: Array, faults: list[Fault], meter: Index) -> Parameters:

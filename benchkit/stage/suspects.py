@@ -12,8 +12,8 @@ How it is done
 Alike: two hypotheses between which readings like these don't decide. From the likeliest unit of each, readings with
 fresh noise are expected; the expected Bayes factor against the other one is below 3, both ways round.
 
-Unseen: faults that these readings could not have shown. A unit with this unit's values and the fault is expected to give
-readings whose Bayes factor against healthy is below 3.
+Unseen: faults that these readings could not have shown. Units with the fault are expected to give readings whose Bayes
+factor against healthy is below 3 (the median over the units of the library).
 
 Probe next: of the readings that could still be taken, the ones with the largest expected information about which
 hypothesis holds (mutual information, in bits), from what each hypothesis's likeliest unit would read there and how
@@ -105,7 +105,9 @@ def _priors_only(design: Design) -> Suspicion:
     odds = np.array([1.0, *(prior_of(design, fault) for fault in faults[1:])])
     order = np.argsort(-odds, kind="stable")
     suspects = tuple(Suspect(fault=faults[k], probability=float(odds[k] / odds.sum())) for k in order)
-    return Suspicion(suspects=suspects, probe_next=(), unseen=faults[1:], hypotheses=len(faults), unsolved=(), seconds=0)
+    return Suspicion(
+        suspects=suspects, probe_next=(), unseen=faults[1:], hypotheses=len(faults), unsolved=(), seconds=0.0
+    )
 
 
 def default_candidates(

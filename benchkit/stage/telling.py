@@ -2,8 +2,8 @@
 
 `benchkit.stage.suspects` says what the words mean; this is how they are worked out: from the fits, and to first order
 around them. Around its fit a hypothesis k expects readings y ~ N(m_k, G_k) before anything was read, with m_k = f_k -
-S_k z_k and G_k = S_k S_k^T + R. From the likeliest unit of i, readings f_i + n with fresh noise n ~ N(0, R) are expected;
-the expected evidence of k for them is
+S_k z_k and G_k = S_k S_k^T + R. From the likeliest unit of i, readings f_i + n with fresh noise n ~ N(0, R) are
+expected; the expected evidence of k for them is
 
     E_i[log p_k] = -(f_i - m_k)^T G_k^-1 (f_i - m_k)/2 - tr(G_k^-1 R)/2 - log det(G_k)/2,
 
@@ -29,7 +29,7 @@ from benchkit.stage.observations import Conditions
 from benchkit.stage.points import find_point
 from benchkit.stage.readouts import Index, Matrix
 from benchkit.stage.suspicion import Evidence, Probe, Suspect, Suspicion
-from benchkit.stage.unit_model import UnitModel, layout_of
+from benchkit.stage.unit_model import Joint, UnitModel, layout_of
 
 BAYES_FACTOR = 3.0
 """Below this expected Bayes factor two hypotheses can't be told apart."""
@@ -67,7 +67,7 @@ class _Views:
         scaled = slope / u[:, :, None]
         gram = scaled @ np.swapaxes(scaled, 1, 2)
         gram[:, range(gram.shape[1]), range(gram.shape[1])] += 1.0
-        inverse = np.linalg.inv(gram)
+        inverse = np.asarray(np.linalg.inv(gram), dtype=np.float64)
         _, log_determinant = np.linalg.slogdet(gram)
         return cls(
             f=f / u, mean=(f - np.einsum("hrk,kh->hr", slope, z)) / u, inverse=inverse,
@@ -143,7 +143,7 @@ class Report:
 
     def _views(self, number: int, which: list[int]) -> _Views:
         fit, rows = self.fitted.fit, self.fitted.row[number][which]
-        _, u = residual(self.data.take(np.full(len(rows), number)), fit.joint.f[rows], self.lib.model.most)
+        _, u = residual(self.data.take(np.full(len(rows), number)), fit.joint.take(rows), self.lib.model.most)
         return _Views.of(fit.joint.f[rows], fit.joint.slope[rows], fit.z[:, rows], u.mean(axis=0, keepdims=True))
 
     def _alike(self, number: int, order: Index) -> dict[int, list[int]]:
@@ -228,7 +228,8 @@ class Report:
         at = {key: column for column, key in enumerate(model.readings)}
         columns = [at[key] for key in lib.model.readings]
         wanted = [at[key] for key in self.candidates if key in at]
-        _, u = residual(self.data.take(np.full(len(top), number)), there.f[:, columns], lib.model.most)
+        read = Joint(there.f[:, columns], there.slope[:, columns], there.doubt[:, columns], usable, z, ())
+        _, u = residual(self.data.take(np.full(len(top), number)), read, lib.model.most)
         scaled = there.slope[:, columns] / u[:, :, None]
         gram = scaled @ np.swapaxes(scaled, 1, 2)
         gram[:, range(known), range(known)] += 1.0

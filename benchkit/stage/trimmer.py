@@ -1,12 +1,9 @@
-"""What a design's trimmer can do: reach, slope, an open wiper, and how far the target moves from cold to warm.
+"""What a design's trimmer can do: reach, an open wiper, and how far the target moves from cold to warm.
 
 How it is found out
 -------------------
 * Reach: the trimmer is replaced by an unknown conductance that meets the target, in every unit of an ensemble at once
   (`benchkit.stage.operate`), and its travel is read off. A unit without a solution, or a warm state, reaches nothing.
-* Slope: the nominal unit's own first-order response (`benchkit.circuit.response`) to a small turn. *At once* is with
-  all junctions as warm as they were; *settled* adds what the temperatures make of it: dT = rest * dP is solved together
-  with dP = (dP/dtravel) + (dP/dT) dT, by the same heat equations as everywhere (`benchkit.stage.heat`).
 * Open wiper: the nominal unit is trimmed and then its wiper opens, on full rails with a current limit. It is safe when
   the bias does not rise and the supply stays out of its limit. Junctions keep their temperature: the first moment.
 * Cold pre-set: each unit is trimmed in the state that the target is for; the other state of the same unit, its trimmer
@@ -17,22 +14,18 @@ A drop is that of pair 1: half of what lies across both its emitter resistors, a
 
 from __future__ import annotations
 
-from collections.abc import Mapping
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 from functools import lru_cache
 
 import numpy as np
 
-from benchkit.circuit.response import Response
 from benchkit.errors import ModelError
 from benchkit.stage.conditions import Condition
-from benchkit.stage.design import Design, target_drop_v
+from benchkit.stage.design import Design
 from benchkit.stage.draws import Array, Parameters, draw, nominal, seeds, take
 from benchkit.stage.faults import Fault
-from benchkit.stage.heat import heat_nodes
 from benchkit.stage.operate import Solved, solve_units
-from benchkit.stage.runs import Mask, Run, set_trimmer
-from benchkit.stage.topologies import build
+from benchkit.stage.runs import Mask, Run
 
 REPORT_UNITS = 400
 AUTHORITY_TRAVEL = (0.05, 0.95)
@@ -44,8 +37,6 @@ LIMIT_FACTOR = 2.0
 SAME_DROP = 1e-3
 """Relative difference of two drops below which they count as the same."""
 _OUTSIDE = (0.05, 0.95)
-_TURN = 1e-6
-_WARMER_K = 1e-4
 _IN_LIMIT = 0.98
 
 
@@ -83,27 +74,6 @@ class Authority:
         """Standard uncertainty of `share`, from the number of units (with one more of each kind, so never zero)."""
         share = (self.share * self.units + 1.0) / (self.units + 2.0)
         return float(np.sqrt(share * (1.0 - share) / (self.units + 2.0)))
-
-
-@dataclass(frozen=True, kw_only=True)
-class Slope:
-    """What a turn of the screw towards more bias does to the nominal unit at the target.
-
-    Attributes
-    ----------
-    travel : float
-        Where it was taken: at the target, or at the end of the track that is nearest to it.
-    drop_v_per_turn, current_a_per_turn : float
-        Change of one emitter drop (V) and of the quiescent current of all pairs together (A), temperatures held.
-    settled_drop_v_per_turn, settled_current_a_per_turn : float or None
-        The same when all has come to rest again; None for a target that is set cold, or where nothing comes to rest.
-    """
-
-    travel: float
-    drop_v_per_turn: float
-    current_a_per_turn: float
-    settled_drop_v_per_turn: float | None
-    settled_current_a_per_turn: float | None
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -158,33 +128,6 @@ class ColdToWarm:
     warm_v: Span
     held: str
     share_without: float
-
-
-@dataclass(frozen=True, kw_only=True)
-class TrimmerReport:
-    """All about a design's trimmer; every part is None where the design has none, or the model no answer.
-
-    Attributes
-    ----------
-    target_v : float
-        Emitter drop at the target.
-    present : bool
-        Whether there is a trimmer.
-    authority, slope, open_wiper, cold_to_warm
-    fixed_v : Span or None
-        Without a trimmer: the emitter drop that the parts alone make.
-    share_at_target : float or None
-        Without a trimmer: share of units within the target's tolerance.
-    """
-
-    target_v: float
-    present: bool
-    authority: Authority | None = None
-    slope: Slope | None = None
-    open_wiper: OpenWiper | None = None
-    cold_to_warm: ColdToWarm | None = None
-    fixed_v: Span | None = None
-    share_at_target: float | None = None
 
 
 def full_rails(design: Design, **changes: object) -> Condition:
@@ -266,116 +209,10 @@ def authority(design: Design, units: int = REPORT_UNITS, seed: int = 0) -> Autho
     group = _drawn(design, units, seed)
     low, high = AUTHORITY_TRAVEL
     return Authority(
-        travel=_span(travel, group.travel[~np.isnan(group.travel)]),
+        travel=span_of(travel, group.travel[~np.isnan(group.travel)]),
         share=float(np.mean((group.travel >= low) & (group.travel <= high))),
         share_in_reach=float(np.mean(group.reached)),
         units=units,
-    )
-
-
-def slope(design: Design) -> Slope:
-    """Work out what a turn does to the nominal unit at the target.
-
-    Raises
-    ------
-    ModelError
-        As `at_target`, or when the nominal unit has no state at the end that is nearest to its target.
-    """
-    unit, travel = at_target(design)
-    if not unit.converged[0]:
-        raise ModelError(f"{design.name} has no operating point where its trimmer is nearest to the target", "one")
-    return slope_at(design, min(max(travel, 0.0), 1.0), unit.temperatures_c, warm=design.target.when == "warm")
-
-
-def slope_at(
-    design: Design, travel: float, temperatures_c: Mapping[str, float | Array] | None = None, *, warm: bool = False
-) -> Slope:
-    """Work out what a turn does to the nominal unit on full rails, anywhere on the track.
-
-    Parameters
-    ----------
-    design : Design
-    travel : float
-        From the least-bias end, 0 to 1.
-    temperatures_c : mapping, optional
-        As for `solve_units`; without, all is at the ambient temperature.
-    warm : bool
-        Whether these are temperatures at rest, so that there is a slope when all has come to rest again.
-
-    Raises
-    ------
-    ModelError
-        Without a trimmer, or without an operating point there.
-    """
-    trimmer = design.spreader.trimmer
-    if trimmer is None:
-        raise ModelError(f"{design.name} has no trimmer", "a trimmer, where its slope is asked for")
-    condition = full_rails(design, trimmer=travel, when="cold")
-    here = solve_units(design, nominal(design), condition, temperatures_c=temperatures_c, loading="none")
-    if not here.converged[0]:
-        raise ModelError(f"{design.name} has no operating point at {travel:.0%} of its trimmer's travel", "one")
-    turned = _derivatives(design, here, travel)
-    per_turn = 1.0 / trimmer.turns
-    settled_v, settled_a = turned.settled(design) if warm else (None, None)
-    return Slope(
-        travel=travel,
-        drop_v_per_turn=float(turned.drop[0]) * per_turn,
-        current_a_per_turn=float(turned.current[0]) * per_turn,
-        settled_drop_v_per_turn=None if settled_v is None else settled_v * per_turn,
-        settled_current_a_per_turn=None if settled_a is None else settled_a * per_turn,
-    )
-
-
-@dataclass(frozen=True)
-class _Derivatives:
-    """First-order changes by the travel (first) and by each transistor's temperature (1/K).
-
-    Shapes: drop and current (1 + parts,), power (parts, 1 + parts).
-    """
-
-    drop: Array
-    current: Array
-    power: Array
-
-    def settled(self, design: Design) -> tuple[float | None, float | None]:
-        """Change of drop and current by the travel with the temperatures following; None where they run away."""
-        parts = len(heat_nodes(design).parts)
-        rest = heat_nodes(design).rest[:parts]
-        loop = rest @ self.power[:, 1:]
-        if float(np.max(np.linalg.eigvals(loop).real)) >= 1.0:
-            return None, None
-        warmer = np.linalg.solve(np.eye(parts) - loop, rest @ self.power[:, 0])
-        return (
-            float(self.drop[0] + self.drop[1:] @ warmer), float(self.current[0] + self.current[1:] @ warmer),
-        )  # fmt: skip
-
-
-def _derivatives(design: Design, here: Solved, place: float) -> _Derivatives:
-    parts = heat_nodes(design).parts
-    step = _TURN if place < 0.5 else -_TURN
-    directions = len(parts) + 2
-    values = dict(here.solution.values)
-    sections = {"spreader.trimmer.track": nominal(design)["spreader.trimmer.track"]}
-    travel = np.full(directions, place)
-    travel[0] += step
-    set_trimmer(design, sections, travel)
-    values |= {key: array for key, array in sections.items() if key in values}
-    for index, part in enumerate(parts, 1):
-        kelvin = np.repeat(values[f"{part}.kelvin"], directions)
-        kelvin[index] += _WARMER_K
-        values[f"{part}.kelvin"] = kelvin
-    moved = Response(here.solution).moved(values, directions)
-    steps = np.array([step, *[_WARMER_K] * len(parts)])
-
-    def change(array: Array) -> Array:
-        return np.asarray((array[:-1] - array[-1]) / steps)
-
-    upper, lower = (moved.voltage(node) for node in build(design).between["emitter.pair.1"])
-    currents = [moved.current(f"emitter.upper.{n}") for n in range(1, design.output.pairs + 1)]
-    return _Derivatives(
-        drop=change((upper - lower) / 2.0),
-        current=change(np.asarray(np.sum(currents, axis=0))),
-        power=np.array([change(moved.transistor(part).power_w) for part in parts]),
     )
 
 
@@ -453,7 +290,7 @@ def cold_to_warm(design: Design, units: int = REPORT_UNITS, seed: int = 0) -> Co
         drops = drop_v(found)[found.converged]
     target_v = float(drop_v(unit)[0])
     at = Span(nominal=target_v, low=target_v, high=target_v)
-    moved = _span(float(drop_v(away)[0]), drops)
+    moved = span_of(float(drop_v(away)[0]), drops)
     return ColdToWarm(
         cold_v=at if held == "cold" else moved,
         warm_v=at if held == "warm" else moved,
@@ -462,52 +299,8 @@ def cold_to_warm(design: Design, units: int = REPORT_UNITS, seed: int = 0) -> Co
     )
 
 
-@lru_cache(maxsize=16)
-def trimmer_report(design: Design, units: int = REPORT_UNITS, seed: int = 0) -> TrimmerReport:
-    """Collect all about a design's trimmer; what the model has no answer to is None. Cached.
-
-    Raises
-    ------
-    ModelError
-        When the nominal unit has no operating point at its target.
-    """
-    target_v = target_drop_v(design)
-    if design.spreader.trimmer is None:
-        return _fixed(design, target_v, units, seed)
-    at_target(design)
-    report = TrimmerReport(target_v=target_v, present=True)
-    for part in ("authority", "slope", "open_wiper", "cold_to_warm"):
-        try:
-            if part == "authority":
-                report = replace(report, authority=authority(design, units, seed))
-            elif part == "slope":
-                report = replace(report, slope=slope(design))
-            elif part == "open_wiper":
-                report = replace(report, open_wiper=open_wiper(design))
-            else:
-                report = replace(report, cold_to_warm=cold_to_warm(design, units, seed))
-        except ModelError:
-            continue
-    return report
-
-
-def _fixed(design: Design, target_v: float, units: int, seed: int) -> TrimmerReport:
-    condition = full_rails(design)
-    unit = solve_units(design, nominal(design), condition, loading="none")
-    if not unit.converged[0]:
-        raise ModelError(f"{design.name} has no operating point at full rails", "one", "Check the design file")
-    drawn = solve_units(design, draw(design, units, seeds("limits", seed)), condition, start=unit, loading="none")
-    drops = drop_v(drawn)
-    within = drawn.converged & (np.abs(drops - target_v) <= design.target.tolerance * target_v)
-    return TrimmerReport(
-        target_v=target_v,
-        present=False,
-        fixed_v=_span(float(drop_v(unit)[0]), drops[drawn.converged]),
-        share_at_target=float(np.mean(within)),
-    )
-
-
-def _span(value: float, values: Array) -> Span:
+def span_of(value: float, values: Array) -> Span:
+    """Make the span of the nominal unit's value and those of drawn units, shape (units,)."""
     if not values.size:
         return Span(nominal=value, low=float("nan"), high=float("nan"))
     low, high = np.quantile(values, _OUTSIDE, method="nearest")

@@ -9,7 +9,7 @@ Coordinates beside those of parts and bench (`benchkit.stage.latent`):
 * where the trimmer stands, when it stands at the target: a healthy unit's travel there, widened, because a faulty unit
   may have been brought to the target by another travel. An unknown position is a coordinate of the unit itself: it is
   the same under every condition that calls it unknown.
-* the place between two conditions.
+* the place between two conditions. A stage drifts while it is read: each reading is allowed `DRIFT_SHARE` of the way.
 """
 
 from __future__ import annotations
@@ -27,11 +27,13 @@ from benchkit.stage.draws import Array
 from benchkit.stage.faults import Fault
 from benchkit.stage.latent import Coordinates
 from benchkit.stage.observations import Conditions
-from benchkit.stage.readouts import Index, Linear, Mask, Matrix, Powered, UnpoweredPoints
+from benchkit.stage.readouts import STRAIGHT, Index, Linear, Mask, Matrix, Powered, UnpoweredPoints
 from benchkit.stage.topologies import Variant, build
 
 Layout = tuple[tuple[Conditions, tuple[str, ...]], ...]
 POSITION = "spreader.trimmer.position"
+DRIFT_SHARE = 0.15
+"""How far a reading may stand off the common place between two conditions (standard deviation, share of the way)."""
 
 
 @dataclass
@@ -42,14 +44,20 @@ class Joint:
     ----------
     f : array of shape (units, readings)
     slope : array of shape (units, readings, coordinates)
+    doubt : array of shape (units, readings)
+        Standard deviation of a reading that was taken while the stage was on its way between two conditions.
     good : array of bool of shape (units,)
+    straight_at : array of shape (coordinates, units)
+        Where the slopes of unpowered readings were worked out.
     solutions : tuple of Solution
         One a solved condition.
     """
 
     f: Matrix
     slope: Matrix
+    doubt: Matrix
     good: Mask
+    straight_at: Array
     solutions: tuple[Solution, ...]
 
     def take(self, index: Index) -> Joint:
@@ -59,7 +67,10 @@ class Joint:
         for solution in self.solutions:
             repeats = solution.units // units
             taken.append(solution.take(np.concatenate([index + k * units for k in range(repeats)])))
-        return Joint(self.f[index], self.slope[index], self.good[index], tuple(taken))
+        return Joint(
+            self.f[index], self.slope[index], self.doubt[index], self.good[index], self.straight_at[:, index],
+            tuple(taken),
+        )  # fmt: skip
 
 
 @dataclass(frozen=True)
@@ -107,17 +118,13 @@ class UnitModel:
                     readouts.append(Powered(design, self.coordinates, end, points, travel))
                 else:
                     trimmer = "unknown" if end.trimmer == "target" else end.trimmer
-                    readouts.append(
-                        UnpoweredPoints(design, self.coordinates, trimmer, end.ambient_c, points, travel)
-                    )
+                    readouts.append(UnpoweredPoints(design, self.coordinates, trimmer, end.ambient_c, points, travel))
             self._blocks.append(_Block(tuple(readouts), place))
             first = readouts[0]
             most.append(first.most if isinstance(first, UnpoweredPoints) else np.full(len(points), np.inf))
         self.most = np.concatenate(most)
 
-    def at(
-        self, z: Array, faults: Sequence[Fault], start: Joint | None = None, effort: Effort = "borrow"
-    ) -> Joint:
+    def at(self, z: Array, faults: Sequence[Fault], start: Joint | None = None, effort: Effort = "borrow") -> Joint:
         """Readings of units at z, of shape (coordinates, units), each with its fault.
 
         Parameters
@@ -127,18 +134,26 @@ class UnitModel:
         effort : "start", "borrow" or "full"
             What the solver does for units that are hard.
         """
-        f, slopes, solutions = [], [], []
+        f, slopes, doubts, solutions = [], [], [], []
         good = np.ones(z.shape[1], np.bool_)
+        column = 0
         kept = iter(() if start is None else start.solutions)
         for block in self._blocks:
             ends: list[Linear] = []
             for readout in block.readouts:
-                ends.append(readout.at(z, faults, next(kept, None), effort))
+                before = next(kept, None)
+                if isinstance(readout, UnpoweredPoints) and start is not None:
+                    known = start.slope[:, column : column + len(readout.points)]
+                    ends.append(readout.near(z, faults, before, effort, known, start.straight_at))
+                else:
+                    ends.append(readout.at(z, faults, before, effort))
                 solutions.append(ends[-1].solution)
                 good &= ends[-1].good
+            column += len(block.readouts[0].points)
             if len(ends) == 1:
                 f.append(ends[0].f)
                 slopes.append(ends[0].slope)
+                doubts.append(np.zeros_like(ends[0].f))
                 continue
             first, last = ends
             share, by_z = self.coordinates.place_and_slope(z, block.place)
@@ -146,7 +161,15 @@ class UnitModel:
             slope = first.slope + share[:, None, None] * (last.slope - first.slope)
             slope[:, :, self.coordinates.index[block.place]] += (last.f - first.f) * by_z[:, None]
             slopes.append(slope)
-        return Joint(np.concatenate(f, axis=1), np.concatenate(slopes, axis=1), good, tuple(solutions))
+            doubts.append(DRIFT_SHARE * np.abs(last.f - first.f))
+        straight_at = z.copy()
+        if start is not None:
+            near = (np.abs(z - start.straight_at) <= STRAIGHT).all(axis=0)
+            straight_at[:, near] = start.straight_at[:, near]
+        return Joint(
+            np.concatenate(f, axis=1), np.concatenate(slopes, axis=1), np.concatenate(doubts, axis=1), good,
+            straight_at, tuple(solutions),
+        )  # fmt: skip
 
 
 def answers(design: Design, condition: Condition | Unpowered, point: str) -> bool:
@@ -158,7 +181,7 @@ def answers(design: Design, condition: Condition | Unpowered, point: str) -> boo
 
 
 def layout_of(readings: Sequence[tuple[Conditions, str]]) -> Layout:
-    """Put readings into a layout: conditions in their first order; unpowered points of one trimmer position together."""
+    """Put readings into a layout: conditions in first order; unpowered points of one trimmer position together."""
     groups: dict[object, tuple[Conditions, list[str]]] = {}
     for conditions, point in readings:
         first = conditions[0]
@@ -190,4 +213,3 @@ def _travel_of(conditions: Conditions, number: int) -> str:
     if trimmer == "unknown":
         return POSITION
     return f"travel {number}" if trimmer == "target" else ""
-

@@ -80,6 +80,7 @@ def rehearse(
             seed=seed,
             plant=plant,
             units=units,
+            narrow_rarely=stand_in,
             **_bench_parts(bench.bench_text, "the rehearsal's bench"),
         )
         runner = Runner(setting)

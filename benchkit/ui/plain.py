@@ -18,7 +18,7 @@ from typing import TextIO
 import click
 
 from benchkit.procedure.actions import Question
-from benchkit.session.front import Reply, View
+from benchkit.session.front import AimView, Reply, SuspectsView, View
 
 WIDTH = 78
 
@@ -47,6 +47,9 @@ class PlainFront:
         self._supply = ""
         self._section = ""
         self._message = ""
+        self._aim = ""
+        self._asked = ""
+        self._suspects: SuspectsView | None = None
         self._view: View | None = None
         self._lines: asyncio.Queue[str | None] = asyncio.Queue()
         self._ended = False
@@ -65,6 +68,11 @@ class PlainFront:
                 self._told[result.item] = line
                 value = f" {result.value_text}" if result.value_text else ""
                 self._print(f"  [{result.verdict.upper()}] {result.title}{value}. {result.why}")
+        if view.suspects is not None and view.suspects != self._suspects:
+            self._tell_suspects(view.suspects)
+        self._suspects = view.suspects
+        if view.aim is not None and view.aim.unit_text and self._asked == view.item:
+            self._tell_aim(view.aim)
         if view.busy and view.busy != self._busy:
             self._print(f"  ... {view.busy}")
         self._busy = view.busy
@@ -74,6 +82,22 @@ class PlainFront:
         if view.message and view.message != self._message:
             self._message = view.message
             self._print(f"  ! {view.message}")
+
+    def _tell_suspects(self, suspects: SuspectsView) -> None:
+        self._print("")
+        self._wrapped(suspects.heading, "  ")
+        for suspect in suspects.suspects:
+            self._wrapped(f"{suspect.share_text}  {suspect.title}", "    ")
+            for line in (suspect.alike, *suspect.evidence):
+                self._wrapped(line, "        ")
+        self._wrapped(suspects.unseen, "  ")
+        self._wrapped(suspects.next_step, "  ")
+
+    def _tell_aim(self, aim: AimView) -> None:
+        """Print this unit's limits once for a question, whether they are known before it or come while it stands."""
+        if self._aim != aim.unit_text:
+            self._aim = aim.unit_text
+            self._wrapped(f"This unit: {aim.unit_text}.", "  ")
 
     async def ask(self, question: Question, refused: str = "") -> Reply:
         """Print the question and read one line.
@@ -120,6 +144,7 @@ class PlainFront:
 
     def _put(self, question: Question) -> None:
         view = self._view
+        self._asked, self._aim = question.item, ""
         where = f"({view.item_number} of {view.item_count}) " if view is not None else ""
         self._print("")
         self._wrapped(f"{where}{question.title}", "")
@@ -130,6 +155,8 @@ class PlainFront:
             self._wrapped(f"Black: {question.black}.", "  ")
         if question.expected:
             self._wrapped(f"Expected: {question.expected}.", "  ")
+        if view is not None and view.aim is not None and view.aim.point == question.point and view.aim.unit_text:
+            self._tell_aim(view.aim)
         if question.why:
             self._wrapped(f"Why: {question.why}", "  ")
         if question.caution:

@@ -29,6 +29,9 @@ Card {{ height: 1fr; padding: 0 1; }}
 .card-do {{ height: auto; padding: 0 2; border-left: thick {CARE}; margin-bottom: 1; max-width: 76; }}
 .card-do.waiting {{ border-left: thick {LINE}; }}
 .card-details {{ height: auto; padding: 0 1; max-width: 100; }}
+.card-suspects {{ height: auto; padding: 0 1; margin-bottom: 1; max-width: 100; }}
+.explained .card-do {{ display: none; }}
+.explained .outcome-why {{ max-height: 2; margin-top: 0; }}
 
 Outcome {{ height: auto; padding: 0 1; border-top: solid {LINE}; }}
 .outcome-head {{ height: 1; }}
@@ -53,7 +56,6 @@ Input:focus {{ background-tint: {STRONG} 6%; }}
 
 #trim .card {{ height: auto; max-height: 4; }}
 #trim .card-details {{ display: none; }}
-.empty {{ display: none; }}
 #trim .card-do {{ margin-bottom: 0; }}
 .trim-where {{ height: 1; padding: 0 1; margin: 1 0; }}
 .trim-figures {{ layout: horizontal; height: 5; margin: 0 2; }}
@@ -62,6 +64,8 @@ Input:focus {{ background-tint: {STRONG} 6%; }}
 .trim-trend {{ height: 1fr; width: 1fr; }}
 .trim-turns {{ height: 1; padding: 0 1; }}
 .walking .trim-turns {{ display: none; }}
+
+.empty {{ display: none; }}
 
 .summary-verdict {{ height: auto; padding: 0 1; margin-bottom: 1; }}
 .summary-scroll {{ height: 1fr; padding: 0 1; }}

@@ -12,7 +12,6 @@ from benchkit.stage.design import Design
 from tests.judge.designs import by_point, taken, tern
 
 AS_CURRENT = (('emitter_drop = "22 mV"', 'quiescent_current = "100 mA"'),)
-FEEDBACK_PAIR = "complementary-feedback-pair"
 
 
 def _facts(*readings: Reading, design: Design | None = None, **more: object) -> RuleFacts:
@@ -144,3 +143,17 @@ def test_hum() -> None:
 def test_every_junction_has_its_own_result() -> None:
     readings = [taken(f"{part}.vbe", 0.6) for part in ("driver.upper", "driver.lower", "spreader.transistor")]
     assert len(evaluate_each("junction drop", None, _facts(*readings))) == 3
+
+
+def test_optimum_bias_of_a_feedback_pair_is_the_models() -> None:
+    """The formula is for followers: 20 mV is near their optimum and far above that of a feedback pair."""
+    from benchkit.stage.crossover import least_ripple_drop_v, setting_at
+    from tests.stage.catalogue import few
+
+    design = next(d for d in few().values() if d.output.topology == "complementary-feedback-pair")
+    best_v = least_ripple_drop_v(design, setting_at(design, design.thermal.ambient_c))
+    for share, verdict in ((1.0, "pass"), (1.5, "fail"), (0.5, "fail"), (0.02 / best_v, "fail")):
+        result = evaluate("optimum bias", None, _facts(taken("emitter.upper.1", share * best_v, u=0.0), design=design))
+        assert result.verdict == verdict
+        assert result.value == pytest.approx(share, rel=1e-6)
+        assert "ripples least" in result.why

@@ -157,3 +157,31 @@ def test_fail_safe_trimmer_from_the_model() -> None:
 def test_trimmer_authority(share: float, u: float, verdict: str) -> None:
     facts = RuleFacts(design=tern(), readings={}, figures={"trimmer authority": ModelFigure(share, u)})
     assert evaluate("trimmer authority", None, facts).verdict == verdict
+
+
+def test_both_trimmer_rules_ask_the_model_themselves() -> None:
+    """Without figures of others: the demonstration's trimmer is safe and reaches; in the upper arm it is not safe."""
+    facts = RuleFacts(design=tern(), readings={})
+    assert evaluate("fail-safe trimmer", None, facts).verdict == "pass"
+    found = evaluate("trimmer authority", None, facts)
+    assert found.verdict == "pass"
+    assert found.value == pytest.approx(1.0, abs=0.01)
+    upper = tern(
+        ('arm = "lower"', 'arm = "upper"'),
+        ('upper = "2.0 kohm 1 %"', 'upper = "1.8 kohm 1 %"'),
+        ('lower = "560 ohm 1 %"', 'lower = "820 ohm 1 %"'),
+    )
+    unsafe = evaluate("fail-safe trimmer", None, RuleFacts(design=upper, readings={}))
+    assert unsafe.verdict == "fail"
+    assert "only the supply's limit" in unsafe.why
+
+
+def test_authority_of_a_small_trimmer_fails() -> None:
+    small = tern(('value = "500 ohm 10 %"', 'value = "50 ohm 10 %"'), ('"560 ohm 1 %"', '"787 ohm 1 %"'))
+    assert evaluate("trimmer authority", None, RuleFacts(design=small, readings={})).verdict == "fail"
+
+
+def test_authority_without_a_trimmer_is_the_share_that_is_right_by_itself() -> None:
+    result = evaluate("trimmer authority", None, RuleFacts(design=tern(*WITHOUT_TRIMMER), readings={}))
+    assert result.verdict == "fail"
+    assert "fixed bias" in result.why

@@ -33,9 +33,13 @@ def test_rules_need_points_of_the_design() -> None:
         assert set(rule.needs(design)) <= known
 
 
+ASK_THE_MODEL = {"fail-safe trimmer", "trimmer authority", "device dissipation", "runaway margin"}
+"""Rules that judge the design and need no reading."""
+
+
 def test_every_rule_is_undecided_when_nothing_is_known() -> None:
     facts = RuleFacts(design=tern(), readings={})
-    for name in RULES:
+    for name in RULES.keys() - ASK_THE_MODEL:
         for result in evaluate_each(name, 1.0, facts):
             assert result.verdict == "undecided", name
             assert result.cause == "nothing to judge"

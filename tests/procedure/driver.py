@@ -19,11 +19,14 @@ from benchkit.events import (
     Decided,
     Event,
     Judged,
+    Narrowed,
+    NarrowedLimits,
     Noted,
     OutputOff,
     PointLimits,
     Predicted,
     PredictionRefused,
+    ProbeNamed,
     ReadingMissed,
     ReadingTaken,
     Resumed,
@@ -31,6 +34,9 @@ from benchkit.events import (
     SupplyRefused,
     SupplySet,
     SupplyState,
+    Suspected,
+    SuspectEvidence,
+    SuspectNamed,
     TrimEnded,
     Tripped,
     Waited,
@@ -40,11 +46,14 @@ from benchkit.measure.readings import Reading
 from benchkit.procedure.actions import (
     Action,
     Ask,
+    CheckWarm,
     Connect,
     Evaluate,
+    Narrow,
     Predict,
     Read,
     SetSupply,
+    Suspect,
     SwitchOff,
     Trim,
     Wait,
@@ -260,7 +269,7 @@ def reading(item: Item, value: float | None, u: float | None = 1e-6) -> ReadingT
 
 
 def limits_of(walk: Walk, action: Predict) -> tuple[PointLimits, ...]:
-    units = {item.point.name: item.point.unit for item in walk.plan.items if item.point is not None}
+    units = {point.name: point.unit for point in walk.plan.points}
     return tuple(
         PointLimits(point=point, unit=units[point], nominal=0.5, low=-10.0, high=10.0) for point in action.points
     )
@@ -291,7 +300,8 @@ def good(walk: Walk, state: State, action: Action) -> Event:
             return BenchFound(meter="a meter", supply="a supply", supply_state=OFF)
         case Ask(question=question):
             if question.kind == "decide":
-                return Decided(item=action.item, choice="again")
+                usual = {choice.value for choice in question.choices if not choice.wants_reason}
+                return Decided(item=action.item, choice="go on" if "go on" in usual else "again")
             yes = question.kind in ("confirm", "hold")
             return Answered(item=action.item, choice="yes" if yes else "done")
         case Predict():
@@ -312,7 +322,7 @@ def good(walk: Walk, state: State, action: Action) -> Event:
             return OutputOff(reason=action.reason, confirmed=True, how="read back as off", state=OFF)
         case Wait():
             return Waited(item=action.item, seconds=action.seconds)
-        case Evaluate():
+        case Evaluate() | CheckWarm():
             return judged(action.item, "pass")
         case Write():
             return action.event
@@ -366,8 +376,73 @@ def bad(walk: Walk, state: State, action: Action) -> list[Event]:
             ]  # fmt: skip
         case SwitchOff():
             return [OutputOff(reason=action.reason, confirmed=False, how="no answer")]
-        case Evaluate():
+        case Evaluate() | CheckWarm():
             return [judged(action.item, "fail"), judged(action.item, "undecided")]
+    return []
+
+
+def suspected(
+    action: Suspect, *faults: str, probes: Sequence[str] = (), gain_bits: float = 0.5, **more: object
+) -> Suspected:
+    """An answer about suspects: likeliest first, healthy last unless it is named, and the probes that it asks for."""
+    named = [*faults, *(() if "healthy" in faults else ("healthy",))]
+    evidence = SuspectEvidence(
+        point="output", condition="c", unit="V", read=0.5, expected=None, healthy=0.0, weight=3.0
+    )
+    keys = {target.point: target.key for target in action.candidates}
+    return Suspected(
+        item=action.item,
+        after=action.after,
+        suspects=tuple(
+            SuspectNamed(fault=fault, probability=0.6 / 2**number, alike=("driver.upper: open",), evidence=(evidence,))
+            for number, fault in enumerate(named)
+        ),
+        probe_next=tuple(
+            ProbeNamed(point=point, condition=keys[point], gain_bits=gain_bits, why="it tells them apart")
+            for point in probes
+        ),
+        unseen_count=2,
+        unseen=("driver.upper: leaky", "feed.upper: dead"),
+        hypotheses=90,
+        readings=len(action.known),
+        seconds=1.0,
+        **more,  # type: ignore[arg-type]
+    )
+
+
+def narrowed(action: Narrow, low: float | None = -1.0, high: float | None = 1.0) -> Narrowed:
+    """The same narrowed limits for everything that was asked for."""
+    return Narrowed(
+        item=action.item,
+        after=action.after,
+        limits=tuple(
+            NarrowedLimits(point=target.point, condition=target.key, unit=target.unit, low=low, high=high)
+            for target in (*action.near, *action.later)
+        ),
+        readings=len(action.known),
+        units=9,
+        seed=1,
+        seconds=0.1,
+    )
+
+
+def aside(action: Action) -> list[Event]:
+    """Answers to what the model is asked aside."""
+    match action:
+        case Narrow():
+            return [
+                narrowed(action),
+                narrowed(action, 2.0, 3.0),
+                Narrowed(item=action.item, after=action.after, problem="p"),
+            ]
+        case Suspect():
+            points = [target.point for target in action.candidates]
+            answers: list[Event] = [
+                suspected(action, "output.upper.1: open", probes=points[:1]),
+                suspected(action, "healthy", "output.upper.1: open", probes=points[-1:]),
+                Suspected(item=action.item, after=action.after, problem="unsolved"),
+            ]
+            return answers
     return []
 
 
@@ -399,6 +474,8 @@ def every_event(walk: Walk, state: State) -> list[Event]:
         ReadingTaken(item=item, reading=volts),
         ReadingMissed(item=item, point="output", problem="p"),
         judged(item, "pass"),
+        Narrowed(item=item, after=state.count),
+        Suspected(item=item, after=state.count),
         Decided(item=item, choice="again"),
         SupplySet(item=item, state=supply),
         SupplyRefused(item=item, problem="p"),
@@ -424,6 +501,7 @@ class Drive:
     open: Action | None = None
     told: list[tuple[Event, float]] = field(default_factory=list)
     asked: list[Action] = field(default_factory=list)
+    asides: list[Action] = field(default_factory=list)
 
     def tell(self, event: Event) -> tuple[Action, ...]:
         now_s = float(len(self.told))
@@ -431,12 +509,18 @@ class Drive:
         self.state, actions = self.walk.handle(self.state, event, now_s)
         self.told.append((event, now_s))
         self.asked += actions
-        if actions:
-            self.open = actions[-1]
+        self.asides += [action for action in actions if action.aside]
+        fore = [action for action in actions if not action.aside]
+        if fore:
+            (self.open,) = fore
         elif (self.state.phase, self.state.index) != before:
             self.open = None
         self.actions = actions
         return actions
+
+    def newest(self, kind: type[Action]) -> Action:
+        """The last thing that the model was asked aside."""
+        return next(action for action in reversed(self.asides) if isinstance(action, kind))
 
     def well(self) -> Event:
         """Answer the open action as if everything were well; an item that has no result yet is tried again."""
@@ -458,6 +542,10 @@ class Drive:
         for _ in range(limit):
             if self.state.closed is not None:
                 return self.state.closed
+            if self.state.phase == "closing" and self.state.suspecting:
+                asked = self.newest(Suspect)
+                assert isinstance(asked, Suspect)
+                self.tell(suspected(asked, "healthy"))
             self.well()
         raise AssertionError("the walk doesn't end")
 

@@ -59,7 +59,7 @@ from tests.procedure.driver import (
     supply_state,
 )
 
-Node = tuple[str, int, bool, str]
+Node = tuple[str, int, str, bool, str]
 
 
 def node(state: State, action: Action | None) -> Node:
@@ -68,7 +68,7 @@ def node(state: State, action: Action | None) -> Node:
         waits_for += f" {action.event.verdict}"
     if isinstance(action, Ask):
         waits_for += f" {[choice.value for choice in action.question.choices]}"
-    return state.phase, state.index, bool(state.stopped), waits_for
+    return state.phase, state.index, state.extra, bool(state.stopped), waits_for
 
 
 def explored(walk: Walk) -> tuple[dict[Node, State], dict[Node, set[Node]]]:
@@ -91,7 +91,8 @@ def explored(walk: Walk) -> tuple[dict[Node, State], dict[Node, set[Node]]]:
         for event in events:
             after, actions = walk.handle(state, event, 0.0)
             same = (after.phase, after.index) == (state.phase, state.index)
-            then = actions[-1] if actions else (action if same else None)
+            fore = [one for one in actions if not one.aside]
+            then = fore[-1] if fore else (action if same else None)
             there = node(after, then)
             edges[here].add(there)
             if there not in found:
@@ -125,7 +126,7 @@ def reach(edges: dict[Node, set[Node]], goals: set[Node]) -> set[Node]:
 
 def test_every_phase_is_reached(graph: tuple[dict[Node, State], dict[Node, set[Node]]]) -> None:
     found, _ = graph
-    assert {state.phase for state in found.values()} == set(PHASES)
+    assert {state.phase for state in found.values()} == set(PHASES) - {"offering"}, "offering: test_modelling.py"
 
 
 def test_every_phase_times_every_event(graph: tuple[dict[Node, State], dict[Node, set[Node]]]) -> None:
@@ -483,7 +484,7 @@ def test_a_supply_found_on_or_mute_is_switched_off_first(output_on: bool | None)
     assert kinds(drive.actions) == ["SwitchOff"]
     assert drive.state.phase == "securing"
     drive.well()
-    assert drive.walk.item(drive.state).id == "look.parts"
+    assert drive.walk.item(drive.state).id == "look.warm-state"
     assert drive.state.energised == "off"
 
 
@@ -621,7 +622,7 @@ def test_resume_secures_and_goes_back(item: str) -> None:
     drive.until("cold.end.ohm.spreader.lower")
     closed = drive.to_end()
     assert (closed.verdict, closed.exit_status) == ("pass", 0)
-    assert drive.state.before <= {"look.parts"}
+    assert drive.state.before <= {"look.parts", "look.warm-state"}
 
 
 def test_a_resumed_walk_waits_for_the_supply_before_it_believes_a_hand() -> None:

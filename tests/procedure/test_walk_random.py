@@ -15,7 +15,7 @@ from benchkit.judge.verdicts import worst
 from benchkit.procedure.actions import Ask, SetSupply, SwitchOff, Write
 from benchkit.procedure.table import TABLE
 from benchkit.procedure.walk import JUDGED_KINDS
-from tests.procedure.driver import Drive, bad, begun, every_event, small, sudden
+from tests.procedure.driver import Drive, aside, bad, begun, every_event, small, sudden
 
 NEVER = {"cold.end.ohm.spreader.lower", "cold.rails.ohm.rails", "power.output-first.output", "power.offset"}
 
@@ -39,6 +39,7 @@ class Walks(RuleBasedStateMachine):
         assert drive.state.count == len(drive.told)
         if not before.stopped and drive.state.stopped:
             self.off_since_stop = before.phase in ("switching off", "by hand off", "closing")
+        assert all(action.aside for action in actions[1:]), "one thing at a time, whatever the model is asked aside"
         for action in actions:
             if isinstance(action, SetSupply):
                 self.energises(before.index, event, action)
@@ -61,6 +62,9 @@ class Walks(RuleBasedStateMachine):
         drive = self.drive
         item = drive.walk.item(drive.state)
         if drive.state.phase != "deciding" or item.may_go_on or drive.walk.way_out(drive.state):
+            return
+        result = drive.state.result(item.id)
+        if result is not None and result.odd and not drive.state.missing:
             return
         for reason in ("", "because"):
             with pytest.raises(IllegalEvent):
@@ -96,6 +100,8 @@ class Walks(RuleBasedStateMachine):
             for item in self.drive.walk.plan.items:
                 assert item.kind not in JUDGED_KINDS or verdicts[item.id] == "pass"
             assert not state.stopped
+            assert not state.suspecting
+            assert not self.drive.walk.suspects_a_fault(state)
         assert event.verdict == "undecided" or event.verdict == worst(verdicts.values())
         assert event.exit_status in (0, 1, 3, 4)
         assert (event.exit_status == 0) == (event.verdict == "pass" and not event.stopped)
@@ -135,7 +141,33 @@ class Walks(RuleBasedStateMachine):
     def happens(self, number: int) -> None:
         self.tell(sudden()[number])
 
-    @rule(number=st.integers(0, 20))
+    @precondition(lambda self: not self.over and self.drive.asides)
+    @rule(back=st.integers(1, 4), number=st.integers(0, 5))
+    def the_model_answers(self, back: int, number: int) -> None:
+        """An answer to what was asked of the model, lately or long ago, moves nothing and never stops the walk."""
+        drive = self.drive
+        asked = drive.asides[-min(back, len(drive.asides))]
+        answers = aside(asked)
+        before = drive.state
+        try:
+            self.tell(answers[number % len(answers)])
+        except IllegalEvent:
+            assert drive.state is before
+            return
+        assert (drive.state.index, drive.state.phase, drive.state.extra) == (before.index, before.phase, before.extra)
+        assert drive.state.results == before.results
+
+    @precondition(lambda self: not self.over)
+    @rule()
+    def takes_the_extra_reading(self) -> None:
+        drive = self.drive
+        if isinstance(drive.open, Ask) and any(choice.value == "probe" for choice in drive.open.question.choices):
+            assert drive.walk.offer(drive.state) is not None
+            self.tell(Decided(item=drive.open.item, choice="probe"))
+            assert drive.state.extra == drive.state.extras[-1].id
+            assert drive.walk.item(drive.state).powered <= drive.walk.host(drive.state).powered
+
+    @rule(number=st.integers(0, 22))
     def says_what_is_not_taken(self, number: int) -> None:
         drive = self.drive
         event = every_event(drive.walk, drive.state)[number]

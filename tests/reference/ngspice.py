@@ -51,6 +51,8 @@ def deck(
     copies: Sequence[Mapping[str, float]],
     unknown_amps: Mapping[str, float] | None = None,
     start: Mapping[str, float] | None = None,
+    *,
+    plain_junctions: bool = False,
 ) -> tuple[str, dict[str, str]]:
     """Write copies of a netlist, each with its own values, as one deck.
 
@@ -61,6 +63,10 @@ def deck(
     start : mapping
         Where ngspice's search starts, by node (10 mV steps): hard faults are beyond it otherwise. A start is let go
         before the end; the solution is ngspice's own. Supply terminals start at their set voltage in any case.
+    plain_junctions : bool
+        State what ngspice adds to a transistor by itself as elements of the deck: RB, RC and RE (which hide the inner
+        nodes) and 1e-12 S beside each junction. ngspice counts that conductance to the transport current too, which
+        shows where nothing else flows; with these options it adds a millionth of it.
 
     Returns
     -------
@@ -68,9 +74,10 @@ def deck(
         The text; and node name to ngspice's node name without the copy's number.
     """
     names = {node: f"n{k}" for k, node in enumerate(netlist.nodes())}
-    lines = ["circuit and values by our tests", OPTIONS]
+    options = OPTIONS.replace("gmin=1e-12", "gmin=1e-18") if plain_junctions else OPTIONS
+    lines = ["circuit and values by our tests", options]
     for number, values in enumerate(copies):
-        lines += _copy(netlist, values, names, number, unknown_amps or {})
+        lines += _copy(netlist, values, names, number, unknown_amps or {}, plain_junctions)
         begin = _set_voltages(netlist, values) | dict(start or {})
         lines += [f".nodeset v({names[node]}_{number})={volts:.2f}" for node, volts in begin.items() if node in names]
     # the control section prints every node of every copy in 16 digits
@@ -97,6 +104,7 @@ def _copy(
     names: Mapping[str, str],
     number: int,
     unknown_amps: Mapping[str, float],
+    plain_junctions: bool,
 ) -> list[str]:
     def at(node: str) -> str:
         return "0" if node == GROUND else f"{names[node]}_{number}"
@@ -114,7 +122,8 @@ def _copy(
         if isinstance(e, Resistor):
             lines.append(f"R{tag} {at(e.a)} {at(e.b)} {_number(max(values[e.name], 1e-3))}")
         elif isinstance(e, Transistor):
-            lines += _transistor(e, values, tag, (at(e.collector), at(e.base), at(e.emitter)))
+            made = _plain_transistor if plain_junctions else _transistor
+            lines += made(e, values, tag, (at(e.collector), at(e.base), at(e.emitter)))
         elif isinstance(e, Supply):
             limit, lack = (
                 float(values[f"{e.name}.limit_a"]),
@@ -155,6 +164,20 @@ def _transistor(e: Transistor, values: Mapping[str, float], tag: str, nodes: tup
     celsius = given.pop("kelvin", 300.15) - 273.15
     text = " ".join(f"{key}={_number(value)}" for key, value in given.items() if abs(value) != float("inf"))
     return [f"Q{tag} {' '.join(nodes)} M{tag} temp={_number(celsius)}", f".model M{tag} {kind}({text})"]
+
+
+def _plain_transistor(
+    e: Transistor, values: Mapping[str, float], tag: str, nodes: tuple[str, str, str]
+) -> list[str]:  # fmt: skip
+    inside, lines, own = list(nodes), [], dict(values)
+    for k, key in enumerate(("RC", "RB", "RE")):
+        ohm = own.pop(f"{e.name}.{key}", 0.0)
+        if ohm > 0.0:
+            inside[k] = f"i{key}{tag}"
+            lines += [f"R{key}{tag} {nodes[k]} {inside[k]} {_number(max(ohm, 1e-4))}", f"Rleak{key}{tag} {inside[k]} 0 1e12"]
+    collector, base, emitter = inside
+    lines += [f"Rbe{tag} {base} {emitter} 1e12", f"Rbc{tag} {base} {collector} 1e12"]
+    return lines + _transistor(e, own, tag, (collector, base, emitter))
 
 
 def run_deck(
@@ -199,14 +222,14 @@ def _child_seconds() -> float:
     return usage.ru_utime + usage.ru_stime
 
 
-def run_text(text: str) -> tuple[dict[str, float], float]:
+def run_text(text: str, timeout_s: float = 600.0) -> tuple[dict[str, float], float]:
     """Run a deck in batch; every printed node's voltage [V] by ngspice's name, and the processor seconds it took."""
     with tempfile.TemporaryDirectory() as folder:
         path = Path(folder) / "deck.cir"
         path.write_text(text)
         begun = _child_seconds()
         done = subprocess.run(
-            ["ngspice", "-b", path.name], cwd=folder, capture_output=True, text=True, timeout=600, check=False
+            ["ngspice", "-b", path.name], cwd=folder, capture_output=True, text=True, timeout=timeout_s, check=False
         )
         seconds = _child_seconds() - begun
     found = {m[1]: float(m[2]) for m in re.finditer(r"^v\((\w+)\) = (\S+)\s*$", done.stdout, re.MULTILINE)}

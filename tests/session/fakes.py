@@ -4,26 +4,36 @@ from __future__ import annotations
 
 import asyncio
 import itertools
-from collections.abc import Awaitable, Callable
+from collections.abc import Awaitable, Callable, Sequence
 from concurrent.futures import Future
 from pathlib import Path
 from typing import Any
 
 from benchkit.errors import InstrumentError
-from benchkit.events import Closed, ContactLost, Event, OutputOff, Predicted, SupplyState, Tripped, WalkOpened
+from benchkit.events import (
+    Closed,
+    ContactLost,
+    Event,
+    Narrowed,
+    OutputOff,
+    Predicted,
+    SupplyState,
+    Tripped,
+    WalkOpened,
+)
 from benchkit.instruments.meter import RawReading
 from benchkit.keeper.protocol import KeeperDied, Kept, Push, WatchLines
 from benchkit.measure.accuracy import HANDHELD, STATED_DEFAULT
-from benchkit.procedure.actions import Predict, Question
+from benchkit.procedure.actions import Narrow, Predict, Question, Target
 from benchkit.procedure.file import parse_procedure
-from benchkit.session import predictions
+from benchkit.session import predictions, this_unit
 from benchkit.session.clock import SimulatedClock
 from benchkit.session.front import Reply, View
 from benchkit.session.hands import Hands
 from benchkit.session.job import Job
 from benchkit.session.run import Session
 from benchkit.stage.design import Design
-from tests.procedure.driver import OPENED, SMALL, judged, limits_of, small
+from tests.procedure.driver import OPENED, SMALL, judged, limits_of, small, suspected
 from tests.stage.designs import breadboard
 
 GOOD_VALUES = {
@@ -257,7 +267,13 @@ def quick_predictions(monkeypatch: Any) -> None:
             seconds=0.0,
         )  # fmt: skip
 
+    def narrow(self: object, action: Narrow, targets: Sequence[Target]) -> Narrowed:
+        return Narrowed(item=action.item, after=action.after, readings=len(action.known))
+
     monkeypatch.setattr(predictions, "predict", predict)
+    monkeypatch.setattr(predictions, "check_warm", lambda design, action, seed: judged(action.item, "pass"))
+    monkeypatch.setattr(this_unit.Narrower, "narrow", narrow)
+    monkeypatch.setattr(this_unit, "suspect", lambda design, action: suspected(action, "healthy"))
     monkeypatch.setattr(predictions, "evaluate_rule", lambda design, walk, state, action: judged(action.item, "pass"))
 
 

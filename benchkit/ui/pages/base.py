@@ -45,6 +45,8 @@ class Page(Vertical):
         """Show a picture of the walk."""
         if self.question is None:
             self.card.wait(view.busy, view.busy_share, view.remaining_s)
+        else:
+            self.card.aim(view.aim)
 
     @property
     def sheet(self) -> VerticalScroll:

@@ -5,7 +5,7 @@ from __future__ import annotations
 from typing import Any
 
 from benchkit.procedure.actions import Question
-from benchkit.session.front import View
+from benchkit.session.front import ResultView, View
 from benchkit.ui.pages.base import Page
 from benchkit.ui.widgets.outcome import Outcome
 from benchkit.ui.widgets.words import Words
@@ -70,4 +70,14 @@ class DecidePage(Page):
     def say(self, view: View) -> None:
         """Show the walk."""
         super().say(view)
-        self._outcome.say(view.results, heading="this reading")
+        suspects = view.suspects
+        about = suspects is not None and self.question is not None
+        self.set_class(about, "explained")
+        self.card.suspect(suspects if about else None)
+        self._outcome.say(_of_item_last(view.results, view.item), heading="this reading")
+
+
+def _of_item_last(results: tuple[ResultView, ...], item: str) -> tuple[ResultView, ...]:
+    """Put the result that the decision is about last, behind the extra readings that were taken to explain it."""
+    own = tuple(result for result in results if result.item == item)
+    return (*(result for result in results if result.item != item), *own)

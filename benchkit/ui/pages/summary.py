@@ -14,6 +14,7 @@ from benchkit.ui.look import INK, QUIET, STRONG, VERDICT_COLOURS, safe
 from benchkit.ui.pages.base import Page
 from benchkit.ui.widgets.outcome import result_line, verdict_strip
 from benchkit.ui.widgets.summary_words import closing_sentence, still_open
+from benchkit.ui.widgets.suspects_text import suspects_text
 from benchkit.ui.widgets.trail_words import count_by_verdict
 from benchkit.ui.widgets.words import Words
 
@@ -55,6 +56,8 @@ class SummaryPage(Page):
                 lines.append(result_line(result))
                 if result.why:
                     lines.append(Text(f"    {safe(result.why)}", style=VERDICT_COLOURS[result.verdict]))
+        if view.suspects is not None and not view.suspects.working:
+            lines += [Text(""), suspects_text(view.suspects, max(40, self.size.width - 4))]
         lines.append(Text(""))
         lines.append(Text(f"{safe(view.design)}, unit {safe(view.unit)}, by {safe(view.operator)}", style=INK))
         lines.append(Text(f"The record holds {view.kept} lines: {safe(view.record)}", style=INK))

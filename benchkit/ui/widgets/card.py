@@ -9,7 +9,10 @@ from rich.text import Text
 from textual.containers import VerticalScroll
 
 from benchkit.procedure.actions import Question
+from benchkit.session.front import AimView, SuspectsView
 from benchkit.ui.look import BLOCK, CARE, INK, LIGHT_SHADE, QUIET, RED_LEAD, STRONG, UP, safe
+from benchkit.ui.widgets.gauge_scale import DESIGN, THIS_UNIT
+from benchkit.ui.widgets.suspects_text import suspects_text
 from benchkit.ui.widgets.words import Words
 
 
@@ -49,19 +52,43 @@ class Card(VerticalScroll):
     def __init__(self, **more: Any) -> None:
         super().__init__(**more)
         self._do = Words(classes="card-do")
+        self._suspects = Words(classes="card-suspects empty")
         self._details = Words(classes="card-details")
+        self._question: Question | None = None
+        self._aim: AimView | None = None
         self.can_focus = False
 
     def compose(self) -> Any:
         """Lay out the sentence and the details."""
         yield self._do
+        yield self._suspects
         yield self._details
 
     def put(self, question: Question) -> None:
         """Show a question."""
+        self._question, self._aim = question, None
         do = Text(safe(question.do or question.title), style=f"bold {STRONG}")
         self._do.say(do)
         self._do.remove_class("waiting")
+        self._draw_details(question)
+        self.suspect(None)
+        self.scroll_home(animate=False)
+
+    def aim(self, aim: AimView | None) -> None:
+        """Show this unit's own limits beside the design's, as soon as they are known."""
+        question = self._question
+        if question is None or aim == self._aim or (aim is not None and aim.point != question.point):
+            return
+        self._aim = aim
+        self._draw_details(question)
+
+    def suspect(self, suspects: SuspectsView | None) -> None:
+        """Show what would explain the readings."""
+        self._suspects.set_class(suspects is None, "empty")
+        if suspects is not None:
+            self._suspects.say(suspects_text(suspects, max(40, self.size.width - 4)))
+
+    def _draw_details(self, question: Question) -> None:
         rows: list[tuple[str, str, Text]] = []
         if question.caution:
             rows.append((f"{UP} care", f"bold {CARE}", Text(safe(question.caution), style=CARE)))
@@ -69,8 +96,11 @@ class Card(VerticalScroll):
             rows.append(("red probe", f"bold {RED_LEAD}", Text(safe(question.red), style=f"bold {INK}")))
         if question.black:
             rows.append(("black probe", f"bold {INK}", Text(safe(question.black), style=f"bold {INK}")))
+        unit = self._aim.unit_text if self._aim is not None else ""
         if question.expected:
-            rows.append(("expect", QUIET, Text(safe(question.expected), style=INK)))
+            rows.append((DESIGN if unit else "expect", QUIET, Text(safe(question.expected), style=INK)))
+        if unit:
+            rows.append((THIS_UNIT, f"bold {INK}", Text(safe(unit), style=f"bold {INK}")))
         if question.why:
             rows.append(("because", QUIET, Text(safe(question.why), style=QUIET)))
         table = Table.grid(padding=(0, 2, 0, 0))
@@ -78,12 +108,13 @@ class Card(VerticalScroll):
         table.add_column(ratio=1)
         for label, style, words in rows:
             table.add_row(Text(label, style=style), words)
-        self._details.say_drawn((question, "details"), table)
+        self._details.say_drawn((question, unit, "details"), table)
         self._details.set_class(not rows, "empty")
-        self.scroll_home(animate=False)
 
     def wait(self, busy: str, share: float | None, remaining_s: float | None) -> None:
         """Show that the person has to wait, and for what."""
+        self._question = None
+        self.suspect(None)
         text = Text(safe(busy or "One moment."), style=f"bold {STRONG}")
         bar = progress_words(share, remaining_s)
         if bar:

@@ -11,7 +11,7 @@ from textual.strip import Strip
 from textual.widget import Widget
 
 from benchkit.events import Verdict
-from benchkit.ui.look import FAIL, LINE, PASS, QUIET, STRONG, UNDECIDED, safe
+from benchkit.ui.look import FAIL, INK, LINE, PASS, QUIET, STRONG, UNDECIDED, safe
 from benchkit.ui.widgets.gauge_scale import gauge_rows
 
 
@@ -26,11 +26,14 @@ class Gauged:
     target: float | None = None
     low_text: str = ""
     high_text: str = ""
+    unit_low: float | None = None
+    unit_high: float | None = None
+    unit_text: str = ""
     verdict: Verdict | None = None
 
 
 class Gauge(Widget):
-    """Three rows: needle with its uncertainty, band of the limits, and the limits' figures."""
+    """Needle with its uncertainty, band of the limits, the limits' figures, and this unit's where it has its own."""
 
     COMPONENT_CLASSES: ClassVar[set[str]] = {
         "gauge--needle",
@@ -39,6 +42,7 @@ class Gauge(Widget):
         "gauge--undecided",
         "gauge--outside",
         "gauge--figures",
+        "gauge--unit",
     }
     DEFAULT_CSS = f"""
     Gauge {{ height: 3; }}
@@ -48,6 +52,7 @@ class Gauge(Widget):
     Gauge > .gauge--undecided {{ color: {UNDECIDED}; text-style: bold; }}
     Gauge > .gauge--outside {{ color: {LINE}; }}
     Gauge > .gauge--figures {{ color: {QUIET}; }}
+    Gauge > .gauge--unit {{ color: {INK}; }}
     """
 
     def __init__(self, **more: Any) -> None:
@@ -58,6 +63,7 @@ class Gauge(Widget):
         """Show `gauged`."""
         if gauged != self._gauged:
             self._gauged = gauged
+            self.styles.height = 4 if gauged.unit_text else 3
             self.refresh()
 
     def render_line(self, y: int) -> Strip:
@@ -73,6 +79,9 @@ class Gauge(Widget):
             target=shown.target,
             low_text=safe(shown.low_text),
             high_text=safe(shown.high_text),
+            unit_low=shown.unit_low,
+            unit_high=shown.unit_high,
+            unit_text=safe(shown.unit_text),
         )
         if rows is None:
             return Strip.blank(width, self.rich_style)
@@ -81,11 +90,10 @@ class Gauge(Widget):
             return Strip([Segment(rows.needle, self._style(kind))], width)
         if y == 1:
             return Strip(self._band(rows.band), width)
-        return (
-            Strip([Segment(rows.figures, self._style("gauge--figures"))], width)
-            if y == 2
-            else Strip.blank(width, self.rich_style)
-        )
+        row = {2: rows.figures, 3: rows.unit}.get(y, "")
+        if not row:
+            return Strip.blank(width, self.rich_style)
+        return Strip([Segment(row, self._style("gauge--figures" if y == 2 else "gauge--unit"))], width)
 
     def _band(self, band: str) -> list[Segment]:
         inside = self.get_component_rich_style("gauge--needle")

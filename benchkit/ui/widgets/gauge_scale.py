@@ -14,6 +14,10 @@ from typing import Final
 MARGIN: Final = 1.0 / 3.0
 """What is shown beyond each limit, as a share of the distance between them: puts the limits at 1/5 and 4/5."""
 
+DESIGN: Final = "design"
+THIS_UNIT: Final = "this unit"
+"""What the two kinds of limits are called wherever both are shown."""
+
 COVERAGE: Final = 2.0
 """Standard uncertainties that the drawn line reaches to each side of the reading."""
 
@@ -45,11 +49,15 @@ class Scale:
 
 @dataclass(frozen=True, kw_only=True)
 class GaugeRows:
-    """Three rows of equal width: needle, band, and the figures of the limits under their marks."""
+    """Rows of equal width: needle, band, the figures of the limits under their marks, and those of this unit.
+
+    `unit` is "" where this unit has no limits of its own.
+    """
 
     needle: str
     band: str
     figures: str
+    unit: str = ""
 
 
 def scale_for(width: int, low: float | None, high: float | None, value: float | None = None) -> Scale | None:
@@ -83,6 +91,9 @@ def gauge_rows(
     target: float | None = None,
     low_text: str = "",
     high_text: str = "",
+    unit_low: float | None = None,
+    unit_high: float | None = None,
+    unit_text: str = "",
 ) -> GaugeRows | None:
     """Return the gauge as text, or None when there is nothing to draw it against.
 
@@ -94,6 +105,8 @@ def gauge_rows(
         In one unit; `uncertainty` is the standard one, drawn `COVERAGE` times to each side.
     low_text, high_text : str
         Figures to put under the limits.
+    unit_low, unit_high, unit_text : float or None, str
+        This unit's limits inside the design's: shaded in the band, and named in a row of their own.
 
     Examples
     --------
@@ -113,17 +126,32 @@ def gauge_rows(
         band[at] = "═"
     if target is not None and not scale.beyond(target):
         band[scale.cell(target)] = "┼"
-    if low is not None:
+    if unit_low is not None or unit_high is not None:
+        inner_first = first if unit_low is None else scale.cell(unit_low)
+        inner_last = last if unit_high is None else scale.cell(unit_high)
+        for at in range(inner_first, inner_last + 1):
+            band[at] = "█"
+    if low is not None and band[first] != "█":
         band[first] = "├"
-    if high is not None:
+    if high is not None and band[last] != "█":
         band[last] = "┤"
+    figures = _figures(
+        width, first if low is not None else None, low_text, last if high is not None else None, high_text
+    )
+    if unit_text:
+        figures = _named(figures, DESIGN)
     return GaugeRows(
         needle=_needle(scale, value, uncertainty),
         band="".join(band),
-        figures=_figures(
-            width, first if low is not None else None, low_text, last if high is not None else None, high_text
-        ),
+        figures=figures,
+        unit=f"{THIS_UNIT}  {unit_text}"[:width].ljust(width) if unit_text else "",
     )
+
+
+def _named(figures: str, name: str) -> str:
+    """Put a name before the figures where they leave room for it."""
+    room = len(figures) - len(figures.lstrip())
+    return name + figures[len(name) :] if room > len(name) else figures
 
 
 def _needle(scale: Scale, value: float | None, uncertainty: float | None) -> str:

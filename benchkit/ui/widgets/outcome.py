@@ -54,9 +54,25 @@ def limits_words(result: ResultView) -> str:
     return f"at least {low}" if result.low is not None else ""
 
 
+def unit_words(result: ResultView) -> str:
+    """Return this unit's own limits of a result in words, "" where it has none."""
+    low, high = safe(result.unit_low_text), safe(result.unit_high_text)
+    if result.unit_low is not None and result.unit_high is not None:
+        words = f"{low} to {high}"
+    elif result.unit_high is not None:
+        words = f"at most {high}"
+    elif result.unit_low is not None:
+        words = f"at least {low}"
+    else:
+        return ""
+    return f"{words}: ODD, it reads outside" if result.odd else words
+
+
 def marks_of(result: ResultView) -> tuple[str, ...]:
     """Return what else must be said of a result."""
     marks = []
+    if result.odd:
+        marks.append("odd for this unit")
     if result.from_before:
         marks.append("from before the walk was cut off")
     if result.overridden:
@@ -99,7 +115,7 @@ class Outcome(Vertical):
         self._gauge.say(gauged(result))
         self._gauge.display = result.low is not None or result.high is not None
         why = Text(safe(result.why), style=INK)
-        for mark in marks_of(result):
+        for mark in marks_of(result)[1 if result.odd else 0 :]:
             why.append(f"  {mark}", style=QUIET)
         self._why.say(why)
         self._why.set_class(not why.plain, "empty")
@@ -116,5 +132,8 @@ def gauged(result: ResultView) -> Gauged:
         uncertainty=result.uncertainty,
         low_text=result.low_text,
         high_text=result.high_text,
+        unit_low=result.unit_low,
+        unit_high=result.unit_high,
+        unit_text=unit_words(result),
         verdict=result.verdict,
     )

@@ -16,6 +16,8 @@ def closing_sentence(view: View) -> str:
         return f"{where} passed {view.procedure}: every reading that was asked for lies inside its limits."
     if view.verdict == "fail":
         return f"{where} failed {view.procedure}. Do not put it into use; see below what was wrong."
+    if view.why:
+        return f"{where} is undecided. {view.why}"
     return f"{where} is undecided: at least one reading is too close to its limit for this meter to say."
 
 

@@ -1,0 +1,234 @@
+"""What a walk knows of its unit, put as the model takes it: readings kept, to come, and those that could be had.
+
+Rules
+-----
+* Readings from before a resume don't count: trimmer and warmth may have changed since.
+* Of a point that was read more than once under the same conditions the latest reading counts, and it is not narrowed
+  again: what has been read is known.
+* Nobody is sent to a live board for an extra reading where more than `HAZARDOUS_V` lies from rail to rail; there only
+  what the supply itself reads is offered, and the rest once the rails have been seen low.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Iterator
+from typing import Final
+
+from benchkit.measure.readings import Reading
+from benchkit.procedure.actions import Target
+from benchkit.procedure.file import MADE_SAFE
+from benchkit.procedure.items import AnyCondition, Item, Joined, Plan, condition_key, conditions_of
+from benchkit.procedure.state import State
+from benchkit.stage.conditions import Condition, TrimmerPosition, Unpowered
+from benchkit.stage.observations import Conditions, Observation
+from benchkit.stage.points import Point
+
+HAZARDOUS_V: Final = 60.0
+"""Direct voltage (V) above which a part is treated as hazardous live (IEC 61010-1, IEC 62368-1)."""
+
+READABLE: Final = frozenset({"dc volts", "dc current", "ohms", "ohms 4-wire", "diode"})
+"""Functions of a meter that an extra reading may need."""
+
+HELD: Final = frozenset({"rail+", "rail-", "rail+.drop", "rail-.drop"})
+"""Points that the supply holds: they tell nothing of the unit."""
+
+Named = tuple[AnyCondition, Point]
+
+
+def model_condition(item: Item) -> AnyCondition | None:
+    """What the model takes an item's reading to be made under; None where it has nothing to do with it."""
+    return item.condition or item.held_under
+
+
+def readings_kept(plan: Plan, state: State) -> Iterator[tuple[Item, AnyCondition, Reading]]:
+    """Yield every kept reading that the model can use."""
+    for item in (*plan.items, *state.extras):
+        reading, condition = state.readings.get(item.id), model_condition(item)
+        if item.kind == "measure" and reading is not None and condition is not None and item.id not in state.before:
+            yield item, condition, reading
+
+
+def observations(plan: Plan, state: State) -> tuple[Observation, ...]:
+    """Return this unit's readings so far; one without a known uncertainty is left out."""
+    found: dict[tuple[Conditions, str], Observation] = {}
+    for _, condition, reading in readings_kept(plan, state):
+        value, uncertainty = reading.value, reading.standard_uncertainty
+        if reading.overload:
+            value, uncertainty = (-math.inf if reading.negative else math.inf), 0.0
+        if value is None or uncertainty is None:
+            continue
+        key = conditions_of(condition), reading.point
+        found.pop(key, None)
+        found[key] = Observation(conditions=key[0], point=reading.point, value=value, standard_uncertainty=uncertainty)
+    return tuple(found.values())
+
+
+def names_of_conditions(plan: Plan, state: State) -> tuple[tuple[Conditions, str], ...]:
+    """Return how the record calls the conditions of the kept readings, an unpowered one by its own name."""
+    return tuple(
+        {conditions_of(condition): condition_key(condition) for _, condition, _ in readings_kept(plan, state)}.items()
+    )
+
+
+def still_to_come(plan: Plan, state: State) -> tuple[tuple[Target, ...], tuple[Target, ...]]:
+    """Return the modelled readings that the plan has yet to take: of this section, and of those after it."""
+    read = {(condition_key(condition), reading.point) for _, condition, reading in readings_kept(plan, state)}
+    section = plan.items[min(state.index, len(plan) - 1)].section
+    near: dict[tuple[str, str], Target] = {}
+    later: dict[tuple[str, str], Target] = {}
+    for item in plan.items[state.index :]:
+        if item.kind != "measure" or item.point is None or item.condition is None:
+            continue
+        key = condition_key(item.condition), item.point.name
+        if key in read or key in near:
+            continue
+        target = target_of(item.condition, item.point)
+        (near if item.section == section else later).setdefault(key, target)
+    return tuple(near.values()), tuple(later.values())
+
+
+def target_of(condition: AnyCondition, point: Point) -> Target:
+    """Return a reading as the model is asked about it."""
+    return Target(key=condition_key(condition), conditions=conditions_of(condition), point=point.name, unit=point.unit)
+
+
+def rails_seen_low(plan: Plan, state: State) -> bool:
+    """Tell whether the way out has come past all its readings of the rails, each of them low."""
+    looks = [
+        (number, item)
+        for number, item in enumerate(plan.items)
+        if item.section == MADE_SAFE and item.point is not None and item.point.name in ("rail+", "rail-")
+    ]
+    for number, item in looks:
+        result = state.result(item.id)
+        if number >= state.index or result is None or result.verdict != "pass" or item.id in state.before:
+            return False
+    return True
+
+
+def possible_now(plan: Plan, state: State) -> tuple[Named, ...]:
+    """Return the extra readings that can be taken as things stand: the present power condition, or none at all."""
+    item = plan.items[min(state.index, len(plan) - 1)]
+    if item.section == MADE_SAFE:
+        return unpowered(plan, state) if rails_seen_low(plan, state) else ()
+    return powered(plan, state) if item.powered else unpowered(plan, state)
+
+
+def candidates(plan: Plan, state: State) -> tuple[Named, ...]:
+    """Return every extra reading worth asking the model about: those possible now, and those possible after off."""
+    now = possible_now(plan, state)
+    read_now = {point.name for _, point in now}
+    return (*now, *(one for one in unpowered(plan, state) if one[1].name not in read_now))
+
+
+def powered(plan: Plan, state: State) -> tuple[Named, ...]:
+    """Return the powered points that have not been read under the present condition."""
+    condition = present_condition(plan, state.index)
+    if condition is None:
+        return ()
+    first = condition.conditions[0] if isinstance(condition, Joined) else condition
+    assert isinstance(first, Condition)
+    live = first.positive_v - first.negative_v > HAZARDOUS_V
+    return tuple(
+        (condition, point)
+        for point in _unread(plan, state, condition)
+        if point.powered and (not live or point.function == "dc current" or point.name == state.probes)
+    )
+
+
+def unpowered(plan: Plan, state: State) -> tuple[Named, ...]:
+    """Return the unpowered points that have not been read with the trimmer where it is."""
+    trimmer = trimmer_now(plan, _came_to(plan, state))
+    points = _unread(plan, state, Unpowered(point="ohm.rails", trimmer=trimmer))
+    return tuple((Unpowered(point=point.name, trimmer=trimmer), point) for point in points if not point.powered)
+
+
+def _came_to(plan: Plan, state: State) -> int:
+    """Return how far the walk came: on the way out, the item that led there."""
+    return next((number for number, item in enumerate(plan.items) if item.id == state.stopped_at), state.index)
+
+
+def _unread(plan: Plan, state: State, condition: AnyCondition) -> tuple[Point, ...]:
+    key = condition_key(condition)
+    read = {reading.point for _, known, reading in readings_kept(plan, state) if condition_key(known) == key}
+    return tuple(
+        point
+        for point in plan.points
+        if point.modelled and point.function in READABLE and point.name not in HELD and point.name not in read
+    )
+
+
+def present_condition(plan: Plan, index: int) -> Condition | Joined | None:
+    """Return what a powered reading at this place in the plan is taken under, as the readings around it are."""
+    for number in _around(plan, index):
+        condition = model_condition(plan.items[number])
+        if isinstance(condition, (Condition, Joined)):
+            return condition
+    return None
+
+
+def _around(plan: Plan, index: int) -> Iterator[int]:
+    """Yield the items about `index` between which supply and trimmer stay as they are: itself, before, after."""
+    moves = ("supply", "off", "trim", "limit check")
+    yield index
+    for number in range(index - 1, -1, -1):
+        if plan.items[number].kind in moves:
+            break
+        yield number
+    for number in range(index + 1, len(plan)):
+        if plan.items[number].kind in moves:
+            break
+        yield number
+
+
+def trimmer_now(plan: Plan, index: int) -> TrimmerPosition:
+    """Return where the trimmer is, as far as the plan knows; a trimmed one is anywhere."""
+    for item in reversed(plan.items[: index + 1]):
+        if item.kind == "trim":
+            return "unknown"
+        if item.act == "trimmer to least":
+            return "least"
+        if isinstance(item.condition, Unpowered):
+            return item.condition.trimmer
+    return "unknown"
+
+
+def extra_item(plan: Plan, state: State, named: Named, why: str, asked_at: str) -> Item:
+    """Make the item of an extra reading: as the plan reads such a point, if it does, at the place where the walk is."""
+    condition, point = named
+    host = plan.items[min(state.index, len(plan) - 1)]
+    like = next(
+        (item for item in plan.items if item.kind == "measure" and item.point == point and item.condition is not None),
+        None,
+    )
+    on = point.powered
+    do = f"{_METER[point.function]} Red and black as below." if point.black else "Read from the supply."
+    caution = "The unit is powered: one hand, rest it before you touch, needle tips." if on else "No power on the unit."
+    return Item(
+        id=f"{host.section}.extra-{len(state.extras) + 1}.{point.name}",
+        section=host.section,
+        section_title=host.section_title,
+        kind="measure",
+        title=f"Extra reading: {point.name}",
+        do=like.do if like is not None and like.do else do,
+        why=f"Asked for by the model: {why}" if why else "Asked for by the model.",
+        caution=like.caution if like is not None and like.caution else caution,
+        point=point,
+        condition=condition,
+        samples=1 if like is None else like.samples,
+        settle_s=0.0 if like is None else like.settle_s,
+        acceptance="guarded" if like is None else like.acceptance,
+        allow=0.0 if like is None else like.allow,
+        powered=on,
+        host=asked_at,
+    )
+
+
+_METER: Final = {
+    "dc volts": "Meter on d.c. volts.",
+    "dc current": "Read from the supply.",
+    "ohms": "Meter on ohms.",
+    "ohms 4-wire": "Four-wire ohms.",
+    "diode": "Meter on its diode range.",
+}

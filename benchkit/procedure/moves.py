@@ -1,0 +1,271 @@
+"""How a walk gets from item to item: what each kind of item begins with, and how it ends.
+
+The parts of `benchkit.procedure.walk` that handle events stand on this.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+from typing import Final
+
+from benchkit.events import Closed, Judged
+from benchkit.judge.limits import Limits
+from benchkit.judge.verdicts import worst
+from benchkit.procedure import knowledge, questions
+from benchkit.procedure.actions import (
+    Action,
+    Ask,
+    CheckWarm,
+    Connect,
+    Evaluate,
+    Predict,
+    Read,
+    SetSupply,
+    SwitchOff,
+    Trim,
+    Wait,
+    Write,
+)
+from benchkit.procedure.items import JUDGED_KINDS, Item, Joined, Plan, condition_key
+from benchkit.procedure.state import State
+
+Step = tuple[State, tuple[Action, ...]]
+
+HEALTHY: Final = "healthy"
+"""The hypothesis that nothing is wrong, as the record calls it."""
+
+MOST_EXTRAS: Final = 3
+"""Extra readings that are offered at one item."""
+
+LEAST_GAIN_BITS: Final = 0.02
+"""A reading that is expected to tell less than this is not worth the way."""
+
+
+@dataclass(frozen=True)
+class Moves:
+    """The plan, and how a walk moves through it."""
+
+    plan: Plan
+
+    def item(self, state: State) -> Item:
+        """The item that is being done: an extra reading, or the plan's item (the last one when all are done)."""
+        if state.extra:
+            return next(item for item in state.extras if item.id == state.extra)
+        return self.host(state)
+
+    def host(self, state: State) -> Item:
+        """The plan's item at which the walk is, whatever extra reading is being taken there."""
+        return self.plan.items[min(state.index, len(self.plan) - 1)]
+
+    def limits_for(self, state: State, item: Item) -> Limits | None:
+        """The limits of an item's reading, as far as they are known."""
+        if item.limits is not None or item.condition is None or item.point is None:
+            return item.limits
+        key = condition_key(item.condition)
+        found = state.limits.get(key, {}).get(item.point.name)
+        return None if found is None else questions.model_limits(found, key, item.allow)
+
+    def unit_limits_for(self, state: State, item: Item) -> Limits | None:
+        """Return an item's limits for this very unit; None where they are the design's or not known."""
+        design = self.limits_for(state, item)
+        if design is None or item.condition is None or item.point is None or item.limits is not None:
+            return None
+        found = state.narrowed.get(condition_key(item.condition), {}).get(item.point.name)
+        return None if found is None else questions.unit_limits(found, design, item.allow)
+
+    def offer(self, state: State) -> tuple[knowledge.Named, str] | None:
+        """The extra reading that is offered as things stand, with why; None when there is none to offer."""
+        suspicion, asked_at = state.suspicion, self.asked_at(state)
+        if suspicion is None or state.suspecting or state.extra or suspicion.item != asked_at:
+            return None
+        if sum(item.host == asked_at for item in state.extras) >= MOST_EXTRAS:
+            return None
+        result = state.result(asked_at)
+        failed = result is not None and result.verdict == "fail" and not self.way_out(state)
+        if not failed and not self.suspects_a_fault(state):
+            return None
+        possible = {
+            (condition_key(one), point.name): (one, point) for one, point in knowledge.possible_now(self.plan, state)
+        }
+        for probe in suspicion.probe_next:
+            found = possible.get((probe.condition, probe.point))
+            if found is not None and probe.gain_bits >= LEAST_GAIN_BITS:
+                return found, probe.why
+        return None
+
+    def suspects_a_fault(self, state: State) -> bool:
+        """Whether the last answer about suspects puts something before healthy."""
+        suspicion = state.suspicion
+        return suspicion is not None and bool(suspicion.suspects) and suspicion.suspects[0].fault != HEALTHY
+
+    def asked_at(self, state: State) -> str:
+        """The item that suspects are asked about: the present one; on the way out, the one that led there."""
+        return state.stopped_at if self.way_out(state) else self.host(state).id
+
+    def way_out(self, state: State) -> bool:
+        """True in the last section, the way out."""
+        return state.index >= self.plan.made_safe
+
+    # -- entering items ----------------------------------------------------------------------------------------
+
+    def _enter(self, state: State, index: int) -> Step:
+        state = replace(state, index=index, note="", missing="", extra="")
+        if index >= len(self.plan):
+            return self._close(state)
+        if self._offers_on_the_way_out(state):
+            return self._offer_again(state)
+        item = self.plan.items[index]
+        match item.kind:
+            case "connect":
+                return replace(state, phase="connecting"), (Connect(item=item.id),)
+            case "warm state":
+                return replace(state, phase="judging"), (CheckWarm(item=item.id, conditions=item.warm),)
+            case "tell" | "confirm" | "text" | "hold":
+                return replace(state, phase="asking"), (Ask(item=item.id, question=questions.question_for(item)),)
+            case "measure":
+                return self._enter_measure(state, item)
+            case "rule":
+                return replace(state, phase="judging"), (Evaluate(item=item.id, rule=item.rule, number=item.number),)
+            case "supply" | "limit check":
+                # From the moment that it is told to switch on, the output may be on.
+                state = replace(state, phase="setting", energised="unknown", ever_on=True)
+                action = SetSupply(
+                    item=item.id,
+                    positive_v=item.positive_v,
+                    negative_v=item.negative_v,
+                    limit_a=item.limit_a,
+                    ramp_s=item.ramp_s,
+                    settle_s=item.settle_s,
+                    trip_on_limit=item.kind == "supply",
+                )
+                return state, (action,)
+            case "trim":
+                assert item.point is not None
+                assert item.limits is not None
+                assert item.limits.low is not None
+                assert item.limits.high is not None
+                assert item.limits.nominal is not None
+                trim = Trim(
+                    item=item.id,
+                    question=questions.trimming(item),
+                    point=item.point.name,
+                    function=item.point.function,
+                    unit=item.point.unit,
+                    target=item.limits.nominal,
+                    low=item.limits.low,
+                    high=item.limits.high,
+                )
+                return replace(state, phase="trimming"), (trim,)
+            case "wait":
+                words = f"{item.title}. {item.do} {item.caution}".strip()
+                wait = Wait(item=item.id, seconds=item.seconds, reason=words)
+                return replace(state, phase="waiting"), (wait,)
+            case "off":
+                reason = state.stopped or "a step of the procedure"
+                return replace(state, phase="switching off"), (SwitchOff(item=item.id, reason=reason),)
+
+    def _enter_measure(self, state: State, item: Item) -> Step:
+        assert item.point is not None
+        limits = self.limits_for(state, item)
+        if limits is None:
+            assert item.condition is not None
+            key = condition_key(item.condition)
+            points = (item.point.name,) if state.extra else self._points_under(key)
+            conditions = item.condition.conditions if isinstance(item.condition, Joined) else (item.condition,)
+            predict = Predict(item=item.id, key=key, conditions=conditions, points=points)
+            return replace(state, phase="predicting"), (predict,)
+        if item.point.name == state.probes or item.point.function == "dc current":
+            return self._read(state, item)
+        ask = Ask(item=item.id, question=questions.placing(item, limits))
+        return replace(state, phase="placing"), (ask,)
+
+    def _points_under(self, key: str) -> tuple[str, ...]:
+        """All the points that the plan reads under a condition."""
+        names = (
+            item.point.name
+            for item in self.plan.items
+            if item.kind == "measure"
+            and item.point is not None
+            and item.condition is not None
+            and condition_key(item.condition) == key
+        )
+        return tuple(dict.fromkeys(names))
+
+    def _read(self, state: State, item: Item) -> Step:
+        assert item.point is not None
+        read = Read(
+            item=item.id,
+            point=item.point.name,
+            function=item.point.function,
+            unit=item.point.unit,
+            samples=item.samples,
+            settle_s=item.settle_s,
+        )
+        return replace(state, phase="reading"), (read,)
+
+    def _next(self, state: State) -> Step:
+        if state.stopped and not state.ever_on and self.item(state).kind == "off":
+            return self._close(replace(state, index=len(self.plan)))
+        return self._enter(state, state.index + 1)
+
+    def _close(self, state: State) -> Step:
+        state = replace(state, phase="closing", extra="")
+        verdict = worst([result.verdict for result in state.results])
+        why = ""
+        if verdict == "pass" and any(self._is_open(state, item) for item in self.plan.items):
+            verdict, why = "undecided", "A reading that was asked for is missing."
+        if state.stopped and verdict == "pass":
+            verdict = "undecided"
+        if verdict == "pass" and state.suspecting:
+            verdict, why = "undecided", "The model had not said yet what would explain a reading that was odd."
+        if verdict == "pass" and self.suspects_a_fault(state):
+            assert state.suspicion is not None
+            first = state.suspicion.suspects[0].fault
+            verdict, why = "undecided", f"Every reading passed, but together they fit {first} better than a good unit."
+        status = state.stop_status or (0 if verdict == "pass" else 1)
+        closed = Closed(count=state.count, verdict=verdict, stopped=state.stopped, exit_status=status, why=why)
+        return state, (Write(item="", event=closed),)
+
+    def _is_open(self, state: State, item: Item) -> bool:
+        """An item that wants a result and has none, or only one from before that was passed over since."""
+        if item.kind not in JUDGED_KINDS:
+            return False
+        return state.result(item.id) is None or (item.id in state.before and item.id in state.overrides)
+
+    def _make_safe(self, state: State, reason: str, status: int) -> Step:
+        if not state.stopped:
+            state = replace(
+                state, stopped=reason, stopped_at=self.host(state).id if state.phase != "closing" else "",
+                stop_status=status,
+            )  # fmt: skip
+        state = replace(state, probes="")
+        if state.phase in ("closing",):
+            return self._close(state)
+        if self.way_out(state) and state.phase in ("switching off", "by hand off"):
+            return replace(state, note=reason), ()
+        after, actions = self._enter(state, self.plan.made_safe)
+        return replace(after, note=reason), actions
+
+    def _decide(self, state: State, result: Judged | None, problem: str = "") -> Step:
+        """Let the operator choose what to do about the plan's item; `problem` is why it has no result."""
+        item, offer = self.host(state), self.offer(state)
+        question = questions.deciding(
+            item, result, problem, way_out=self.way_out(state), offer=None if offer is None else offer[0][1]
+        )
+        state = replace(state, phase="deciding", note=problem, missing="" if result is not None else problem)
+        return state, (Ask(item=item.id, question=question),)
+
+    def _decide_again(self, state: State) -> Step:
+        """Put the question anew: there is more, or less, to choose from."""
+        return self._decide(state, None if state.missing else state.result(self.host(state).id), state.missing)
+
+    def _offers_on_the_way_out(self, state: State) -> bool:
+        """An extra reading can be offered now that the unit has no power and its rails have been seen low."""
+        if not (self.way_out(state) and state.stopped) or state.offers_left:
+            return False
+        return knowledge.rails_seen_low(self.plan, state) and self.offer(state) is not None
+
+    def _offer_again(self, state: State) -> Step:
+        item, offer = self.host(state), self.offer(state)
+        question = questions.offering(item, None if offer is None else offer[0][1])
+        return replace(state, phase="offering", extra=""), (Ask(item=item.id, question=question),)

@@ -1,0 +1,154 @@
+"""What may come at any time, and how a walk finds its bench and makes sure of the supply.
+
+Whatever stops a walk leads to the first item of the last section, where the supply is switched off and read back.
+"""
+
+from __future__ import annotations
+
+from dataclasses import replace
+from typing import Final
+
+from benchkit.errors import IllegalEvent
+from benchkit.events import (
+    Answered,
+    BenchFound,
+    BenchMissing,
+    ContactLost,
+    Decided,
+    Noted,
+    OutputOff,
+    Resumed,
+    StopAsked,
+    Tripped,
+    WalkOpened,
+)
+from benchkit.procedure import questions
+from benchkit.procedure.actions import Action, Ask, Connect, SwitchOff
+from benchkit.procedure.hearing import cut, heard, off_by_word, off_heard
+from benchkit.procedure.moves import Moves, Step
+from benchkit.procedure.state import State
+
+RUNNERS: Final = frozenset({"the screen", "the keeper"})
+"""Who runs a walk, as `ContactLost` calls them: when one of them goes, nothing is wrong with unit or bench."""
+
+RUNNER_GONE: Final = ("contact with the screen was lost", "the screen closed the bench", "an error of the session")
+"""How the reasons begin with which the supply is switched off when whoever ran the walk has gone."""
+
+NOT_CONFIRMED: Final = "the supply did not confirm that its output is off"
+"""Why a walk goes no further with a supply that doesn't obey."""
+
+AFTER_TRIP: Final = "Discharge, and find the cause: no second try at a higher limit."
+
+
+class Securing(Moves):
+    """Stops, the way out, the bench, the supply's state."""
+
+    # -- what may come at any time -----------------------------------------------------------------------------
+
+    def _stop_asked(self, state: State, event: StopAsked) -> Step:
+        return self._make_safe(state, event.reason, 4)
+
+    def _tripped(self, state: State, event: Tripped) -> Step:
+        after, actions = self._make_safe(heard(state, event.state), f"tripped: {event.reason}", 4)
+        return replace(after, note=f"Tripped: {event.reason}. {AFTER_TRIP}"), actions
+
+    def _contact_lost(self, state: State, event: ContactLost) -> Step:
+        if event.who in RUNNERS:
+            state = cut(state)
+        return self._make_safe(state, f"contact with {event.who} was lost: {event.problem}", 3)
+
+    def _output_went_off(self, state: State, event: OutputOff) -> Step:
+        state = off_heard(state, event)
+        if self.way_out(state) or state.phase == "closing":
+            return replace(state, note=event.how), self._open_actions(state)
+        if event.reason.startswith(RUNNER_GONE):
+            state = cut(state)
+        return self._make_safe(state, f"the supply was switched off: {event.reason}", 4)
+
+    def _open_actions(self, state: State) -> tuple[Action, ...]:
+        """Only a closing walk has to be asked anew: its last line counts the lines before it."""
+        return self._close(state)[1] if state.phase == "closing" else ()
+
+    def _noted(self, state: State, event: Noted) -> Step:
+        return state, self._open_actions(state)
+
+    def _resumed(self, state: State, event: Resumed) -> Step:
+        before = frozenset(result.item for result in state.results)
+        if state.cut_at is not None:
+            # Whoever ran the walk went away: the walk itself had not been stopped.
+            state = replace(state, index=state.cut_at, cut_at=None, stopped="", stopped_at="", stop_status=0)
+        index = min(state.index, len(self.plan) - 1)
+        state = replace(
+            state, phase="securing", index=index, before=before, probes="", energised="unknown", supply=None,
+            extra="", missing="", suspecting=0, narrowed={}, resumed_at=state.count,
+            note="Earlier readings are marked as from before.",
+        )  # fmt: skip
+        return state, (Connect(item=self.item(state).id),)
+
+    # -- opening, connecting, securing -------------------------------------------------------------------------
+
+    def _opened(self, state: State, event: WalkOpened) -> Step:
+        return self._enter(replace(state, opened=event), 0)
+
+    def _bench_found(self, state: State, event: BenchFound) -> Step:
+        state = heard(replace(state, meter=event.meter, supply_name=event.supply), event.supply_state)
+        if event.supply_state is not None and state.energised != "off":
+            note = "The supply's output was on when it was found."
+            if state.energised == "unknown":
+                note = "The supply did not say whether its output is on."
+            return replace(state, phase="securing", ever_on=True, note=note), (
+                SwitchOff(item=self.item(state).id, reason=note),
+            )
+        return self._next(state)
+
+    def _bench_missing(self, state: State, event: BenchMissing) -> Step:
+        return self._decide(state, None, event.problem)
+
+    def _secure_found(self, state: State, event: BenchFound) -> Step:
+        state = heard(replace(state, meter=event.meter, supply_name=event.supply), event.supply_state)
+        return state, (SwitchOff(item=self.item(state).id, reason="the walk goes on after it was cut off"),)
+
+    def _secure_missing(self, state: State, event: BenchMissing) -> Step:
+        question = questions.deciding(self.item(state), None, event.problem, way_out=False)
+        question = replace(question, choices=(questions.AGAIN, questions.STOP))
+        return replace(state, note=event.problem), (Ask(item=self.item(state).id, question=question),)
+
+    def _secure_decided(self, state: State, event: Decided) -> Step:
+        if event.choice not in ("again", "make safe"):
+            raise IllegalEvent("Nobody knows whether the supply is off", "again, or make safe")
+        if event.choice == "again":
+            return state, (Connect(item=self.item(state).id),)
+        stopped = replace(state, stopped=state.stopped or "the instruments did not answer", stop_status=3, ever_on=True)
+        return self._enter(stopped, self.plan.made_safe)
+
+    def _secured(self, state: State, event: OutputOff) -> Step:
+        state = off_heard(state, event)
+        if not event.confirmed:
+            return state, (Ask(item=self.item(state).id, question=questions.by_hand_off(self.item(state), event.how)),)
+        return self._go_back(state)
+
+    def _secured_by_hand(self, state: State, event: Answered) -> Step:
+        demand(event, "done")
+        if not state.unconfirmed:
+            raise IllegalEvent("The supply has not been asked to switch off yet", "its answer first")
+        if self._switched_here(state):
+            stopped = state if state.stopped else replace(state, stopped=NOT_CONFIRMED, stopped_at=self.item(state).id)
+            return self._enter(replace(off_by_word(stopped), stop_status=3, ever_on=True), self.plan.made_safe)
+        return self._go_back(off_by_word(state))
+
+    def _switched_here(self, state: State) -> bool:
+        """Whether benchkit itself switches the supply, so that an off that it can't confirm means trouble."""
+        return state.opened is not None and state.opened.supply == "scpi"
+
+    def _go_back(self, state: State) -> Step:
+        if self.item(state).kind == "connect":
+            return self._next(state)
+        if state.stopped or self.way_out(state):
+            return self._enter(state, self.plan.made_safe)
+        return self._enter(state, min(state.index, self.plan.resume))
+
+
+def demand(event: Answered, *choices: str) -> None:
+    """Take no answer for another: only a plain yes passes a hold point."""
+    if event.choice not in choices:
+        raise IllegalEvent(f"{event.item} was answered {event.choice!r}", " or ".join(choices))
