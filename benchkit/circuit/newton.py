@@ -18,8 +18,8 @@ The recipe, in the order in which a unit meets it
 A solution counts only when every law was linearised where it is evaluated, and each node's currents add up to less than
 1e-7 of the sum of their magnitudes + 10 pA. Units are done one by one; those that are done leave the batch. An accepted
 unit still goes on until it passes with 0.01 pA in place of 10 pA and a step moves no node by more than `_FINAL_STEP_V`,
-or by next to nothing: 10 pA are millivolts at a node that hardly anything holds. After `_MOST_POLISHING` steps it is left
-as it is.
+or by next to nothing: 10 pA are millivolts at a node that hardly anything holds. After `_MOST_POLISHING` steps it is
+left as it is.
 """
 
 from __future__ import annotations
@@ -192,7 +192,7 @@ def iterate(
 
 
 def _accepted(batch: Batch, linear: Linearised, x: Array, residual: Array) -> tuple[Mask, Mask, Mask]:
-    """Which units pass the test, which at nodes without current too, and which so well that a step has nothing to add."""
+    """Which units pass the test, which do at nodes without current too, and to which a step has nothing to add."""
     plan = batch.plan
     done = ~linear.held
     fine, exact = np.zeros_like(done), np.zeros_like(done)
@@ -214,7 +214,7 @@ def _accepted(batch: Batch, linear: Linearised, x: Array, residual: Array) -> tu
 def solve_by_softening(
     batch: Batch, solver: LinearSolver, cold: ColdStart, softest: float = _SOFTEST_EXPONENT
 ) -> Outcome:  # fmt: skip
-    """Start each unit with wide knees of servos and supplies, 10**softest times, and let them narrow to what they are."""
+    """Start each unit with knees of servos and supplies that are 10**softest times as wide, and let them narrow."""
     soft = batch.softened(np.full(batch.units, 10.0**softest))
     begun = iterate(soft, solver, *cold(soft), most=_INNER_ITERATIONS)
     _retry(soft, begun, lambda part: solve_by_gmin(part, solver))

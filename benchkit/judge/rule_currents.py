@@ -141,7 +141,7 @@ def idle_against_driven(number: float, facts: RuleFacts) -> tuple[RuleResult, ..
     """
     rule = "idle against driven"
     results = []
-    for point in ("rail+.current", "rail-.current"):
+    for point in ("rail+.current",) if facts.design.single_supply else ("rail+.current", "rail-.current"):
         rest, driven = facts.readings.get(point), facts.driven.get(point)
         if rest is None or driven is None or not rest.value or not driven.value or driven.value <= 0:
             why = f"There are not two currents of {point} to compare."

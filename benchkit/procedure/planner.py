@@ -299,7 +299,7 @@ class Planner:
                 do=f"Hands off. Expected time to {RAIL_LOW_V:g} V: {time_text(seconds)}.",
                 seconds=max(5.0, min(300.0, 30.0 if seconds is None else 1.2 * seconds)),
             )
-            for name in ("rail+", "rail-"):
+            for name in (name for name in ("rail+", "rail-") if name in self.points):
                 yield self._item(
                     step,
                     "measure",

@@ -87,7 +87,8 @@ def trimming(item: Item) -> Question:
 def deciding(item: Item, result: Judged | None, problem: str, *, way_out: bool, offer: Point | None = None) -> Question:
     """What to do after a result that is no pass, an odd reading, or no result at all.
 
-    `offer` is a test point that would tell more; it is one answer more, never the first.
+    `offer` is a test point that would tell more; it is one answer more, the
+    last: the numbers and places of the others stay when it comes.
     """
     odd = result is not None and result.verdict == "pass"
     if result is not None:
@@ -99,10 +100,10 @@ def deciding(item: Item, result: Judged | None, problem: str, *, way_out: bool, 
     choices = [ON, AGAIN] if odd else [AGAIN]
     if not odd and (item.may_go_on or way_out):
         choices.append(GO_ON)
-    if offer is not None:
-        choices.append(probing(offer))
     if not way_out:
         choices.append(STOP)
+    if offer is not None:
+        choices.append(probing(offer))
     caution = "" if odd or item.may_go_on or way_out else "There is no way past this result but a better one."
     if odd:
         caution = "Inside the design's limits, so no failure: see what the other readings say."

@@ -50,11 +50,14 @@ def _feed_a(design: Design, span_v: float) -> float:
 
 
 def _driver_a(design: Design) -> float:
+    """What drivers and pre-drivers draw (A): so many junctions' voltage across each of their resistors."""
     output = design.output
     draw_a = 0.0
-    for resistor in (output.driver_resistor, output.predriver_resistor):
-        if resistor is not None:
-            draw_a += 2.0 * TYPICAL_VBE_V / resistor.value
+    if output.driver_resistor is not None:
+        own = output.topology == "complementary-feedback-pair" or output.driver_resistor_to == "output"
+        draw_a += (1.0 if own else 2.0) * TYPICAL_VBE_V / output.driver_resistor.value
+    if output.predriver_resistor is not None:
+        draw_a += 4.0 * TYPICAL_VBE_V / output.predriver_resistor.value
     return draw_a
 
 

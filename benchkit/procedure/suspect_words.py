@@ -60,10 +60,10 @@ def _value(value: float | None, unit: str) -> str:
 
 
 def alike_words(suspect: SuspectNamed) -> str:
-    """Name the faults that these readings can't tell from the suspect; "" where there are none."""
+    """Name the faults that these readings can't tell from the suspect, all equally likely; "" where there are none."""
     if not suspect.alike:
         return ""
-    return "or " + ", ".join(fault_words(fault) for fault in suspect.alike) + ": not to be told apart so far"
+    return "or " + " or ".join(fault_words(fault) for fault in suspect.alike)
 
 
 def evidence_for(suspect: SuspectNamed) -> tuple[str, ...]:
@@ -90,7 +90,7 @@ def heading_words(suspected: Suspected) -> str:
             f"No single fault explains the {readings} better than chance does ({chance_words(first.probability)}). "
             "That proves nothing healthy."
         )
-    return f"Likeliest, of {suspected.hypotheses} explanations of {readings}: {fault_words(first.fault)}."
+    return f"{suspected.hypotheses} explanations of {readings}, likeliest first: {fault_words(first.fault)}."
 
 
 def unseen_words(suspected: Suspected, names: int = 0) -> str:

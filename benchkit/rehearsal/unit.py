@@ -266,4 +266,5 @@ def powers_w(solved: Solved) -> dict[str, float]:
 
 
 def _first(solved: Solved, point: str) -> float:
-    return float(solved.points[point][0])
+    """The unit's reading; 0 for a point of the rail that a single-supply stage hasn't."""
+    return float(solved.points[point][0]) if point in solved.points else 0.0

@@ -132,6 +132,8 @@ class Table:
 
     def _settled_rail(self, solved: Solved, rail: int) -> tuple[float, float]:
         name = ("rail+", "rail-")[rail]
+        if name not in solved.points:  # nothing hangs on the second output
+            return self._channels[rail].volts, 0.0
         volts = float(solved.points[name][0]) * (1.0, -1.0)[rail]
         return max(volts, 0.0), float(solved.points[f"{name}.current"][0])
 

@@ -152,7 +152,9 @@ def _stuck_servo(share_of_most: float, share_of_feed: float) -> Callable[[Values
         feed_a = design.feed.upper.value.value
         if design.feed.upper.kind == "resistor":
             rails = design.rails
-            feed_a = (rails.positive_v - design.rest_v(rails.positive_v, rails.negative_v)) / design.feed.upper.value.value
+            feed_a = (
+                rails.positive_v - design.rest_v(rails.positive_v, rails.negative_v)
+            ) / design.feed.upper.value.value
         stuck_a = share_of_most * values[f"{part}.max_a"] + share_of_feed * feed_a
         values[f"{part}.stuck.amps"] = np.where(where, stuck_a, values[f"{part}.stuck.amps"])
         values[f"{part}.max_a"] = np.where(where, SERVO_OFF_A, values[f"{part}.max_a"])

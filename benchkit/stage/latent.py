@@ -18,7 +18,6 @@ from benchkit.stage.design import Design
 from benchkit.stage.draws import NORMAL_95, Array, Parameters, spreads
 
 AMBIENT = "ambient"
-RAILS = ("rail+", "rail-")
 RAIL_SHARE = 2e-3
 """Standard deviation of a rail from its setting, as a share: a bench supply's setting (common practice)."""
 STATED_AMBIENT_K = 0.5
@@ -41,19 +40,19 @@ class Coordinates:
     ----------
     design : Design
     extra : sequence of str
-        Names of coordinates beside parts, rails and room: places and travels, read by `place`.
+        Names of coordinates beside parts and room: rails, and places and travels, which `place` reads.
 
     Attributes
     ----------
     names : tuple of str
-        One a coordinate: keys of the parameter set, then `AMBIENT`, `RAILS`, then the extra ones.
+        One a coordinate: keys of the parameter set, then `AMBIENT`, then the extra ones.
     """
 
     def __init__(self, design: Design, extra: tuple[str, ...] = ()) -> None:
         entries = tuple(spreads(design))
         self._fixed = {key: np.asarray(value, dtype=np.float64) for key, value, _ in entries}
         self._varying = tuple((key, value, *spread) for key, value, spread in entries if spread[0] != "exact")
-        self.names = (*(entry[0] for entry in self._varying), AMBIENT, *RAILS, *extra)
+        self.names = (*(entry[0] for entry in self._varying), AMBIENT, *extra)
         self.index = {name: number for number, name in enumerate(self.names)}
 
     def __len__(self) -> int:

@@ -204,8 +204,9 @@ def _powered(design: Design) -> Iterator[Point]:
         for name in _driver_resistors(design):
             end = ("driver.upper", "driver.lower")
             if output.topology == "complementary-feedback-pair":
-                upper = name.endswith(".upper")
-                end = ("rail+", "driver.upper") if upper else ("driver.lower", lower_rail(design))
+                end = ("driver.lower", lower_rail(design))
+                if name.endswith(".upper"):
+                    end = ("rail+", "driver.upper")
             elif name.endswith(".upper"):
                 end = ("driver.upper", "output")
             elif name.endswith(".lower"):
@@ -218,9 +219,9 @@ def _powered(design: Design) -> Iterator[Point]:
         yield _volts(f"emitter.pair.{number}", top, bottom)
         if output.base_stopper is not None:
             for side in SIDES:
-                npn = design.device[getattr(output, side)].polarity == "npn"
                 name, ends = f"stopper.{side}.{number}", ("the driver", "the base")
-                yield _across(name, name, *(ends if npn else ends[::-1]))
+                into_base = design.device[getattr(output, side)].polarity == "npn"
+                yield _across(name, name, *(ends if into_base else ends[::-1]))
     for part in transistors_of(design):
         ends = (f"base of {part.name}", f"emitter of {part.name}")
         red, black = ends if design.device[part.device].polarity == "npn" else ends[::-1]

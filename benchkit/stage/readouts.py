@@ -30,11 +30,11 @@ from benchkit.stage.conditions import Condition
 from benchkit.stage.design import ZERO_CELSIUS_K, Design
 from benchkit.stage.draws import Array, Parameters
 from benchkit.stage.faults import Fault, apply
+from benchkit.stage.forcing import Held
 from benchkit.stage.heat import heat
 from benchkit.stage.latent import (
     AMBIENT,
     RAIL_SHARE,
-    RAILS,
     STATED_AMBIENT_K,
     UNSTATED_AMBIENT_K,
     Coordinates,
@@ -94,11 +94,20 @@ class Powered:
     points : sequence of str
     travel : str
         Coordinate that says where the trimmer stands; empty where the condition states it.
+    rails : two of str
+        Coordinates that say how far the rails stand off their settings.
     """
 
     def __init__(
-        self, design: Design, coordinates: Coordinates, condition: Condition, points: Sequence[str], travel: str = ""
+        self,
+        design: Design,
+        coordinates: Coordinates,
+        condition: Condition,
+        points: Sequence[str],
+        travel: str,
+        rails: tuple[str, str],
     ) -> None:
+        self._rails = rails
         self.design, self.coordinates, self.condition = design, coordinates, condition
         self.points = tuple(points)
         self._travel_name = travel
@@ -157,10 +166,15 @@ class Powered:
         stated = condition.ambient_c is not None
         ambient_c = condition.ambient_c if condition.ambient_c is not None else self.design.thermal.ambient_c
         room_c = ambient_c + (STATED_AMBIENT_K if stated else UNSTATED_AMBIENT_K) * row(z, AMBIENT)
-        positive_v = condition.positive_v * (1.0 + RAIL_SHARE * row(z, RAILS[0]))
-        negative_v = condition.negative_v * (1.0 + RAIL_SHARE * row(z, RAILS[1]))
+        rails_v = condition.held_v if isinstance(condition, Held) else (condition.positive_v, condition.negative_v)
+        positive_v, negative_v = (
+            volts * (1.0 + RAIL_SHARE * row(z, name)) for volts, name in zip(rails_v, self._rails, strict=True)
+        )
         parameters = self.coordinates.parameters(z)
-        return Run(self.design, parameters, condition, list(faults), z.shape[1], (positive_v, negative_v), room_c)
+        run = Run(self.design, parameters, condition, list(faults), z.shape[1], (positive_v, negative_v), room_c)
+        if isinstance(condition, Held):
+            run.set_v = np.asarray(condition.positive_v), np.asarray(condition.negative_v)
+        return run
 
     def _travel(self, z: Array) -> Array | None:
         if self.design.spreader.trimmer is None:

@@ -76,6 +76,8 @@ class Run:
         self.positive_v = np.asarray(condition.positive_v if rails_v is None else rails_v[0], dtype=np.float64)
         self.negative_v = np.asarray(condition.negative_v if rails_v is None else rails_v[1], dtype=np.float64)
         self.transistors = transistors_of(design)
+        self.set_v = self.positive_v, self.negative_v
+        """What the rails are set to: that decides whether and where a servo regulates."""
         self.effort: Effort = "full"
         """What the solver does for units that are hard."""
 
@@ -99,7 +101,8 @@ class Run:
         if design.feed.lower.kind == "servo":
             values["feed.lower.rest_v"] = self.rest_v() + values["output.offset"]
             works_from_v = design.feed.works_from_v or 0.0
-            lowest_v = self.positive_v if design.single_supply else np.minimum(self.positive_v, -self.negative_v)
+            positive_v, negative_v = self.set_v
+            lowest_v = positive_v if design.single_supply else np.minimum(positive_v, -negative_v)
             idle = lowest_v < works_from_v
             most_a = values["feed.lower.max_a"]
             values["feed.lower.stuck.amps"] = np.where(idle, values["feed.lower.idle"] * most_a, 0.0)
@@ -113,10 +116,13 @@ class Run:
         rest = self.design.output.rest
         if rest.share is None:
             return np.asarray(rest.volts or 0.0)
-        return np.asarray(self.negative_v + rest.share * (self.positive_v - self.negative_v))
+        positive_v, negative_v = self.set_v
+        return np.asarray(negative_v + rest.share * (positive_v - negative_v))
 
     def travel(self, found_ohm: Array) -> Array:
-        """Travel at which a trimmer in one arm (a tied divider works in the lower one) has a resistance, outside 0..1 when it never has.
+        """Travel at which a trimmer in one arm has a resistance, outside 0..1 when it never has.
+
+        A tied divider is one: it works in the lower arm.
 
         A negative resistance that leaves the arm positive asks for less than none. One that takes the whole arm below
         zero has passed through infinity: it asks for more than any.
@@ -161,7 +167,8 @@ class Run:
     def lifted(self, pilots: Solution, whose: Index) -> dict[str, Array]:
         """Start of every unit from one of some solved ones, moved to where its own output will be.
 
-        A servo holds each unit's output at its own rest and offset, and has no slope to find the way from another one's.
+        A servo holds each unit's output at a rest and an offset of its own, and has no slope to find the way from
+        another one's.
         """
         offset_v = np.zeros(())
         if self.design.feed.lower.kind == "servo":
@@ -227,6 +234,8 @@ class Run:
         own_c = ambient_c[which] if ambient_c.size > 1 else ambient_c
         part = Run(self.design, few, self.condition, faults, len(which), (rails[0], rails[1]), own_c)
         part.effort = self.effort
+        if self.set_v[0] is not self.positive_v:
+            part.set_v = self.set_v
         return part
 
     def _settle(self, once: _Once, temperature: dict[str, Array], start: Start, warm: bool) -> State:

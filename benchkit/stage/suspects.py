@@ -32,6 +32,7 @@ from benchkit.stage.conditions import Condition, Unpowered
 from benchkit.stage.design import Design
 from benchkit.stage.faults import HEALTHY, faults_of, prior_of
 from benchkit.stage.fitting import Data
+from benchkit.stage.forcing import held_at_readings
 from benchkit.stage.hypotheses import Library, library
 from benchkit.stage.observations import Conditions, Observation
 from benchkit.stage.points import points_of
@@ -81,19 +82,23 @@ def suspect_many(
     """
     found: list[Suspicion | None] = [None] * len(sets)
     groups: dict[tuple[tuple[Conditions, str], ...], list[int]] = {}
-    for number, observations in enumerate(sets):
+    held = [held_at_readings(observations) for observations in sets]
+    for number, (observations, _) in enumerate(held):
         keys = dict.fromkeys((one.conditions, one.point) for one in observations)
         groups.setdefault(tuple(keys), []).append(number)
     for readings, members in groups.items():
         began = time.perf_counter()
-        wanted = tuple(candidates) or default_candidates(design, readings)
-        told = tuple(pair for pair in wanted if pair not in readings)
+        original = held[members[0]][1]
+        stated = [(original.get(conditions, conditions), point) for conditions, point in readings]
+        wanted = tuple(candidates) or default_candidates(design, stated)
+        told = tuple(pair for pair in wanted if pair not in stated)
         if not readings:
             answers = [_priors_only(design)] * len(members)
         else:
-            lib = library(design, layout_of(readings))
-            data = _data(lib, [sets[number] for number in members])
-            answers = Report(lib, data, told).suspicions()
+            # conditions with rails held at one unit's readings will not come again
+            lib = Library(design, layout_of(readings)) if original else library(design, layout_of(readings))
+            data = _data(lib, [held[number][0] for number in members])
+            answers = Report(lib, data, told, original).suspicions()
         each = (time.perf_counter() - began) / len(members)
         for number, answer in zip(members, answers, strict=True):
             found[number] = replace(answer, seconds=each)

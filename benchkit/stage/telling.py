@@ -13,7 +13,7 @@ log 3 both ways.
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -84,8 +84,16 @@ class _Views:
 class Report:
     """Everything that is said about some units that were read in the same way."""
 
-    def __init__(self, lib: Library, data: Data, candidates: Sequence[tuple[Conditions, str]]) -> None:
+    def __init__(
+        self,
+        lib: Library,
+        data: Data,
+        candidates: Sequence[tuple[Conditions, str]],
+        original: Mapping[Conditions, Conditions] | None = None,
+    ) -> None:
         self.lib, self.data, self.candidates = lib, data, tuple(candidates)
+        self.original = original or {}
+        self._nominal: tuple[Array, Array] | None = None
         self.solved = np.array([bool(lib.joint.good[lib.whose == k].any()) for k in range(len(lib.faults))])
         if not self.solved.any():
             raise ModelError(
@@ -186,22 +194,43 @@ class Report:
             mean = np.nanmedian(np.array(factors), axis=0)
         return np.asarray(np.nan_to_num(mean, nan=np.inf) < np.log(BAYES_FACTOR))
 
+    def _stated(self, conditions: Conditions) -> Conditions:
+        return self.original.get(conditions, conditions)
+
+    def _healthy(self) -> tuple[Array, Array]:
+        """What the nominal healthy unit reads under the conditions that were stated, and how far units spread."""
+        joint = self.lib.joint
+        if self.original:
+            if self._nominal is None:
+                stated = [(self._stated(conditions), point) for conditions, point in self.lib.model.readings]
+                model = UnitModel(self.lib.model.design, layout_of(stated))
+                found = model.at(np.zeros((len(model.coordinates), 1)), [HEALTHY], effort="full")
+                at = {key: column for column, key in enumerate(model.readings)}
+                columns = [at[key] for key in stated]
+                self._nominal = found.f[0, columns], np.sqrt((found.slope[0, columns] ** 2).sum(axis=1))
+            return self._nominal
+        return joint.f[0], np.sqrt((joint.slope[0] ** 2).sum(axis=1))
+
     def _evidence(self, number: int, k: int) -> tuple[Evidence, ...]:
         """What speaks most for a suspect, reading by reading."""
         row = self.fitted.row[number, k]
         if row < 0 or not self.lib.joint.good[0]:
             return ()
         y, u = self.data.y[number], self.data.u[number]
-        read = np.where(np.isfinite(y), y, np.minimum(self.lib.model.most, 1e30))
-        healthy, spread = self.lib.joint.f[0], np.sqrt((self.lib.joint.slope[0] ** 2).sum(axis=1) + u**2)
-        mine = self.fitted.fit.joint.f[row]
+        most = np.minimum(self.lib.model.most, 1e30)
+        read = np.where(np.isfinite(y), y, most)
+        healthy, spread = self._healthy()
+        healthy = np.minimum(healthy, most)
+        spread = np.hypot(spread, u)
+        mine = np.minimum(self.fitted.fit.joint.f[row], most)
         own = np.hypot(u, 1e-4 * np.abs(mine))
         weight = 0.5 * (((read - healthy) / spread) ** 2 - np.minimum(((read - mine) / own) ** 2, 50.0))
         best = [int(r) for r in np.argsort(-weight)[:MOST_EVIDENCE] if weight[r] > 0.5]
         return tuple(
             Evidence(
-                point=self.lib.model.readings[r][1], conditions=self.lib.model.readings[r][0], read=float(y[r]),
-                expected=float(mine[r]), healthy=float(healthy[r]), weight=float(weight[r]),
+                point=self.lib.model.readings[r][1],
+                conditions=self._stated(self.lib.model.readings[r][0]), read=float(y[r]), expected=_shown(mine[r], most[r]),
+                healthy=_shown(healthy[r], most[r]), weight=float(weight[r]),
             )
             for r in best
         )  # fmt: skip
@@ -217,7 +246,9 @@ class Report:
             return ()
         row = self.fitted.row[number][top]
         known = len(lib.model.readings)
-        model = wider(lib, self.candidates)
+        held = {stated: now for now, stated in self.original.items()}
+        candidates = [(held.get(conditions, conditions), point) for conditions, point in self.candidates]
+        model = wider(lib, candidates)
         z = np.zeros((len(model.coordinates), len(top)))
         z[: len(lib.model.coordinates)] = self.fitted.fit.z[:, row]
         faults = [lib.faults[k] for k in top]
@@ -227,7 +258,7 @@ class Report:
             return ()
         at = {key: column for column, key in enumerate(model.readings)}
         columns = [at[key] for key in lib.model.readings]
-        wanted = [at[key] for key in self.candidates if key in at]
+        wanted = [at[key] for key in candidates if key in at and at[key] not in columns]
         read = Joint(there.f[:, columns], there.slope[:, columns], there.doubt[:, columns], usable, z, ())
         _, u = residual(self.data.take(np.full(len(top), number)), read, lib.model.most)
         scaled = there.slope[:, columns] / u[:, :, None]
@@ -250,10 +281,15 @@ class Report:
                 break
             conditions, point = model.readings[wanted[q]]
             why = _why(faults, weight / weight.sum(), mean[:, q], sd[:, q], most[q], units[q])
+            conditions = self._stated(conditions)
             if isinstance(conditions[0], Unpowered):
                 conditions = (replace_point(conditions[0], point),)
             probes.append(Probe(point=point, conditions=conditions, gain_bits=float(gains[q]), why=why))
         return tuple(probes)
+
+
+def _shown(value: float, most: float) -> float:
+    return float("inf") if value >= most else float(value)
 
 
 def wider(lib: Library, candidates: Sequence[tuple[Conditions, str]]) -> UnitModel:

@@ -133,7 +133,7 @@ class Builder:
         return base
 
     def output_pairs(self, upper: str, lower: str) -> None:
-        """Add all pairs of output devices as followers, driven from the nodes `upper` and `lower`, and their resistors."""
+        """Add all pairs of output devices as followers on the nodes `upper` and `lower`, and their resistors."""
         output = self.design.output
         for number in range(1, output.pairs + 1):
             for side, drive in (("upper", upper), ("lower", lower)):
@@ -183,7 +183,9 @@ def complementary_feedback_pair(builder: Builder) -> None:
     device, on the near side of its stopper.
     """
     output = builder.design.output
-    for side, drive, emitter in zip(("upper", "lower"), ("drive+", "drive-"), pair_nodes(builder.design, 1), strict=True):
+    for side, drive, emitter in zip(
+        ("upper", "lower"), ("drive+", "drive-"), pair_nodes(builder.design, 1), strict=True
+    ):
         collector, rail = f"driver.{side}.c", builder.rail(side)
         builder.transistor(f"driver.{side}", str(getattr(output, f"driver_{side}")), collector, drive, emitter)
         name = f"driver.resistor.{side}"

@@ -107,15 +107,18 @@ class UnitModel:
             place = f"place {number}" if len(ends) > 1 else ""
             if place:
                 extra.append(place)
-            plan.append((ends, travel, place))
+            # each powered condition has its own setting errors: a supply that is set anew, or a rail held at a reading
+            rails = (f"rail+ {number}", f"rail- {number}") if isinstance(ends[0], Condition) else ("", "")
+            extra += [rail for rail in rails if rail]
+            plan.append((ends, travel, place, rails))
         self.coordinates = Coordinates(design, tuple(extra))
         self._blocks = []
         most = []
-        for (ends, travel, place), (_, points) in zip(plan, layout, strict=True):
+        for (ends, travel, place, rails), (_, points) in zip(plan, layout, strict=True):
             readouts: list[Powered | UnpoweredPoints] = []
             for end in ends:
                 if isinstance(end, Condition):
-                    readouts.append(Powered(design, self.coordinates, end, points, travel))
+                    readouts.append(Powered(design, self.coordinates, end, points, travel, rails))
                 else:
                     trimmer = "unknown" if end.trimmer == "target" else end.trimmer
                     readouts.append(UnpoweredPoints(design, self.coordinates, trimmer, end.ambient_c, points, travel))

@@ -185,7 +185,7 @@ def waiting_time_s(design: Design, point: str) -> float:
     if point not in ("ohm.rails", "ohm.rail+", "ohm.rail-"):
         return 0.0
     farad = (design.rails.reservoir_f or 0.0) + (design.rails.local_capacitors_f or 0.0)
-    if point == "ohm.rails":
+    if point == "ohm.rails" and not design.single_supply:
         farad /= 2.0
     condition = Unpowered(point=point, trimmer="least")
     readings = solve_unpowered(design, nominal(design), condition)

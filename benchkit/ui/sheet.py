@@ -31,7 +31,7 @@ Card {{ height: 1fr; padding: 0 1; }}
 .card-details {{ height: auto; padding: 0 1; max-width: 100; }}
 .card-suspects {{ height: auto; padding: 0 1; margin-bottom: 1; max-width: 100; }}
 .explained .card-do {{ display: none; }}
-.explained .outcome-why {{ max-height: 2; margin-top: 0; }}
+.explained .outcome-why {{ display: none; }}
 
 Outcome {{ height: auto; padding: 0 1; border-top: solid {LINE}; }}
 .outcome-head {{ height: 1; }}
@@ -85,6 +85,7 @@ LeaveScreen {{ background: {GROUND}; align: center middle; }}
 .leave-box {{ width: 90%; max-width: 66; height: auto; margin: 1 0; padding: 0 2; border: double {CARE}; }}
 .leave-words {{ height: auto; margin-bottom: 1; }}
 
+.roomy .explained .outcome-why {{ display: block; }}
 .roomy .card-do {{ padding: 1 3; margin-bottom: 1; max-width: 100; background: {PANEL}; }}
 .roomy .walk-trail {{ height: auto; max-height: 3; margin: 1 0; }}
 .roomy .outcome-earlier {{ display: block; }}

@@ -1,7 +1,7 @@
 """How well suspects are named, on units that ngspice solved and our solver did not.
 
 Run as ``python -m tests.benchmarks.suspects_study [FOLDER]``, with ``--designs demo,few`` (or ``catalogue``, or names),
-``--per-fault``, ``--healthy``, ``--probed``, ``--seed``, ``--jobs``. The units (`tests.benchmarks.suspects_units`) are
+``--per-fault``, ``--healthy``, ``--sampled``, ``--probed``, ``--seed``, ``--jobs``. The units (`tests.benchmarks.suspects_units`) are
 kept in the folder and found there again, so that an evaluation can be repeated without ngspice.
 
 What is counted
@@ -248,6 +248,7 @@ def study(
     *,
     per_fault: int,
     healthy: int,
+    sampled: int,
     probed: int,
     seed: int,
     jobs: int = 1,
@@ -272,11 +273,11 @@ def study(
         if "one condition" in questions or "probes" in questions:
             tallies["one condition"], answers = evaluate(units, ("least",), ask)
         if "two and unpowered" in questions:
-            tallies["two and unpowered"], _ = evaluate(units, ("least", "trimmed", "unpowered"), ask)
+            tallies["two and unpowered"], _ = evaluate(
+                units, ("least", "trimmed", "unpowered"), ask, select=_sample(units, sampled, sampled // 4, seed)
+            )
         if "probes" in questions:
-            faulty = [unit for unit in answers if units.faults[unit] != HEALTHY]
-            order = np.random.default_rng(seed).permutation(len(faulty))[:probed]
-            tallies["probes"] = follow_probes(units, [faulty[k] for k in np.sort(order)], answers, ask)
+            tallies["probes"] = follow_probes(units, _sample(units, probed, 0, seed), answers, ask)
         for question in totals:
             totals[question] += tallies[question]
             say("\n".join(f"  {question}: {line}" for line in tallies[question].lines()))
@@ -284,6 +285,16 @@ def study(
     for question, tally in totals.items():
         say("\n".join(f"  {question}: {line}" for line in tally.lines()))
     return totals
+
+
+def _sample(units: Units, faulty: int, healthy: int, seed: int) -> list[int]:
+    """Some of the units, drawn at random; none is left out where there are no more."""
+    rng = np.random.default_rng(seed)
+    chosen: list[int] = []
+    for number, is_healthy in ((faulty, False), (healthy, True)):
+        of = [unit for unit, fault in enumerate(units.faults) if (fault == HEALTHY) == is_healthy]
+        chosen += [of[k] for k in rng.permutation(len(of))[:number]]
+    return sorted(chosen)
 
 
 def shortfalls(totals: dict[str, Tally]) -> list[str]:
@@ -321,12 +332,14 @@ def main() -> None:
     parser.add_argument("--questions", default=",".join(QUESTIONS))
     parser.add_argument("--per-fault", type=int, default=1)
     parser.add_argument("--healthy", type=int, default=20)
-    parser.add_argument("--probed", type=int, default=25)
+    parser.add_argument("--sampled", type=int, default=10_000, help="faulty units a design read under everything")
+    parser.add_argument("--probed", type=int, default=25, help="faulty units a design whose probes are followed")
     parser.add_argument("--seed", type=int, default=101)
     parser.add_argument("--jobs", type=int, default=1)
     given = parser.parse_args()
     totals = study(
         chosen_designs(given.designs), given.folder, suspect_many, per_fault=given.per_fault, healthy=given.healthy,
+        sampled=given.sampled,
         probed=given.probed, seed=given.seed, jobs=given.jobs, questions=tuple(given.questions.split(",")),
     )  # fmt: skip
     for question, tally in totals.items():

@@ -16,15 +16,15 @@ The values (parts, trimmer, fault) are ours; the voltages are ngspice's. A start
 nothing.
 
 * Healthy units are many copies in a deck, which begins at our solution rounded to 1 mV. A servo's knee of 10 uV is too
-  narrow to be found from there, so a first run has a knee of 10 mV; the stage is moved to where the servo sends the same
-  current in the narrow knee, and the second run solves the circuit as it is. A deck that fails is halved until the copy
-  stands alone, and is tried with all that ngspice has.
+  narrow to be found from there, so a first run has a knee of 10 mV; the stage is moved to where the servo sends the
+  same current in the narrow knee, and the second run solves the circuit as it is. A deck that fails is halved until the
+  copy stands alone, and is tried with all that ngspice has.
 * A faulty unit is a deck of its own, its junctions plain (see `tests.reference.ngspice.deck`): `ATTEMPTS` says from
   where and with which tolerances it is tried, in turn, until one has a solution. What none can solve is listed.
 
 ``python -m tests.reference.agreement`` runs all of it (a quarter of an hour on two cores) and writes the results anew:
-``data/agreement.bin``, ``data/unsolved_by_ngspice.txt`` and ``data/read_with_a_meter.txt``. ``python -m tests.reference.agreement check`` compares the
-whole catalogue with what is committed, and prints the worst differences.
+``data/agreement.bin``, ``data/unsolved_by_ngspice.txt`` and ``data/read_with_a_meter.txt``. With ``check`` it compares
+the whole catalogue with what is committed, and prints the worst differences.
 """
 
 from __future__ import annotations
@@ -78,11 +78,16 @@ WIDE_KNEE, KNEE = "10e-3", "10e-6"
 _OPTIONS = ".options reltol=1e-9 abstol=1e-15 vntol=1e-12 gmin=1e-12 itl1={most} itl2={most} numdgt=15"
 _QUICK, _PATIENT = 60, 2000
 TIGHT, LOOSE, LOOSEST = (
-    f".options reltol={relative} abstol={amps} vntol={volts} gmin=1e-18 itl1=200 itl2=200 numdgt=15"
+    f".options reltol={relative} abstol={amps} vntol={volts} gmin=1e-18 itl1=100 itl2=200 numdgt=15"
     for relative, amps, volts in (("1e-9", "1e-15", "1e-12"), ("1e-7", "1e-12", "1e-9"), ("1e-6", "1e-12", "1e-6"))
 )
-ATTEMPTS = ((3, TIGHT), (13, TIGHT), (3, LOOSE), (13, LOOSE), (13, LOOSEST), (None, LOOSEST))
-"""Digits (after the point) of our solution that a faulty unit's deck begins at, None for no start, and tolerances."""
+DIRECTLY = " gminsteps=0 srcsteps=0"
+"""Newton's method alone; without it ngspice goes on to steps of conductance, of sources and of time."""
+ATTEMPTS = (
+    (3, TIGHT + DIRECTLY), (13, TIGHT + DIRECTLY), (3, LOOSE + DIRECTLY), (13, LOOSE + DIRECTLY),
+    (13, LOOSEST + DIRECTLY), (13, LOOSE), (None, LOOSEST),
+)  # fmt: skip
+"""Digits (after the point) of our solution that a faulty unit's deck begins at, None for no start, and options."""
 _NOTHING = np.iinfo(np.int32).min
 """In place of a rounded voltage that ngspice has not."""
 
@@ -161,6 +166,8 @@ def _alone(netlist: Netlist, values: Mapping[str, float], start: Mapping[str, fl
             lines = [line for line in lines if not line.startswith(".nodeset")]
             at = lines.index(".control")
             lines[at:at] = [f".nodeset v({names[node]}_0)={volts:.{digits}f}" for node, volts in start.items()]
+        if DIRECTLY in options:
+            lines.insert(lines.index(".control") + 1, "optran 1 0 0 0 0 0")
         try:
             found, _ = ngspice.run_text("\n".join(lines) + "\n", timeout_s=10.0)
         except (RuntimeError, subprocess.TimeoutExpired):
@@ -169,7 +176,9 @@ def _alone(netlist: Netlist, values: Mapping[str, float], start: Mapping[str, fl
     return None
 
 
-def _metered(design: Design, broken: Solved, unit: int, point: str) -> tuple[Netlist, dict[str, float], dict[str, float]]:
+def _metered(
+    design: Design, broken: Solved, unit: int, point: str
+) -> tuple[Netlist, dict[str, float], dict[str, float]]:
     """The circuit with a voltmeter across one point: netlist, values, and our bare voltages to begin at."""
     netlist = build(design, WITH_METERS).netlist
     values = {key: float(value[unit if value.size > 1 else 0]) for key, value in broken.solution.values.items()}
@@ -326,10 +335,14 @@ def write(references: Mapping[str, Reference]) -> None:
     arrays: dict[str, NDArray[np.generic]] = {}
     for name, one in references.items():
         arrays[f"{name}/fingerprints"] = np.array(one.fingerprints)
-        arrays[f"{name}/metered"] = np.array([f"{unit} {point} {volts:.9g}" for (unit, point), volts in one.metered.items()])
+        arrays[f"{name}/metered"] = np.array(
+            [f"{unit} {point} {volts:.9g}" for (unit, point), volts in one.metered.items()]
+        )
         for key, step in _STEPS.items():
             whole = _rounded(getattr(one, key), step)
-            arrays[f"{name}/{key}"] = np.stack([whole.view(np.uint8).reshape(*whole.shape, 4)[..., k] for k in range(4)])
+            arrays[f"{name}/{key}"] = np.stack(
+                [whole.view(np.uint8).reshape(*whole.shape, 4)[..., k] for k in range(4)]
+            )
     buffer = io.BytesIO()
     np.savez(buffer, **arrays)  # type: ignore[arg-type]
     COMMITTED.write_bytes(lzma.compress(buffer.getvalue(), preset=9))
@@ -461,7 +474,7 @@ def main() -> None:
         write(references)
         lines = unsolved_in(references)
         total = sum(one.healthy_v.shape[1] + one.faulty_v.shape[1] for one in references.values())
-        head = f"# What ngspice has no solution of: {len(lines)} of {total} circuits (made by tests/reference/agreement.py)"
+        head = f"# What ngspice has no solution of: {len(lines)} of {total} circuits"
         UNSOLVED.write_text("\n".join([head, *lines]) + "\n", encoding="utf-8")
         read = metered_in(references)
         count = sum(one.faulty_v.shape[1] * len(_points_of(catalogue()[name])) for name, one in references.items())
@@ -474,8 +487,8 @@ def main() -> None:
         one = references[name]
         good = compare_healthy(design, ours, one.healthy_v)
         bad = compare_faulty(design, faults, broken, one)
-        failed = np.count_nonzero(~ours.converged), np.count_nonzero(~broken.converged)
-        print(f"{name}: healthy {good.share:.3f} ({good.where}); faulty {bad.share:.3f} ({bad.where}); ours unsolved {failed}")
+        left = np.count_nonzero(~ours.converged), np.count_nonzero(~broken.converged)
+        print(f"{name}: healthy {good.share:.3f} ({good.where}); faulty {bad.share:.3f} ({bad.where}); unsolved {left}")
 
 
 if __name__ == "__main__":

@@ -174,7 +174,10 @@ def _plain_transistor(
         ohm = own.pop(f"{e.name}.{key}", 0.0)
         if ohm > 0.0:
             inside[k] = f"i{key}{tag}"
-            lines += [f"R{key}{tag} {nodes[k]} {inside[k]} {_number(max(ohm, 1e-4))}", f"Rleak{key}{tag} {inside[k]} 0 1e12"]
+            lines += [
+                f"R{key}{tag} {nodes[k]} {inside[k]} {_number(max(ohm, 1e-4))}",
+                f"Rleak{key}{tag} {inside[k]} 0 1e12",
+            ]
     collector, base, emitter = inside
     lines += [f"Rbe{tag} {base} {emitter} 1e12", f"Rbc{tag} {base} {collector} 1e12"]
     return lines + _transistor(e, own, tag, (collector, base, emitter))

@@ -10,7 +10,9 @@ How
 * Starts (`.nodeset`) force nothing. A servo's knee of 10 uV is too narrow to be found from far away: a first round with
   a knee of 1 mV finds the stage, is moved to where the servo stands in the narrow knee, and the second round solves the
   circuit as it is.
-* A meter of 10 Mohm lies across the point that is read: every reading is a solution of its own, from the bare stage's.
+* A meter of 10 Mohm lies across the point that is read. Three times the stage is solved with meters of various resistances
+  at all points (equal ones could cancel each other). A point that moves by less than a twentieth of the noise each time
+  is read as it is; every other one is solved once more with its own meter alone.
 * The range of an ohms reading is the instrument's setting and is asked of the stage; that a reading beyond it is an
   overload is applied to ngspice's voltage here.
 * Noise: 0.03 % of the reading and 20 uV, standard deviations that add up; on an ohms range the 20 uV are those of the
@@ -53,6 +55,7 @@ WIDE_KNEE, KNEE = "1e-3", "10e-6"
 TOLERANCES = "reltol=1e-4 abstol=1e-10 vntol=1e-6 gmin=1e-12"
 """Of ngspice's last step: Newton's next step would be far smaller, so the voltages are good to far less."""
 _QUICK, _PATIENT = 60, 400
+_SCREENS, _MATTERS = 3, 0.05
 
 
 @dataclass
@@ -336,8 +339,13 @@ def _bare(
     if len(left):
         ours = solve_units(design, run.parameters, run.condition, list(faults), position=travel, loading="none")
         again = deck.solve({node: ours.solution.voltage(node) for node in deck.nodes}, KNEE, left)
-        found = {node: np.where(np.isnan(volts), again[node], volts) for node, volts in found.items()}
-    return found
+        found = _either(found, again)
+    # once more from there: a supply's current hangs on its last microvolts
+    return _either(deck.solve({node: volts for node, volts in found.items() if node != GROUND}), found)
+
+
+def _either(first: Mapping[str, Array], second: Mapping[str, Array]) -> dict[str, Array]:
+    return {node: np.where(np.isnan(volts), second[node], volts) for node, volts in first.items()}
 
 
 def _narrowed(run: Run, deck: Deck, wide: dict[str, Array], which: NDArray[np.intp]) -> dict[str, Array]:
@@ -364,7 +372,17 @@ def _load(
     known = _known(values, design, variant)
     names = [name for name in found if f"meter.{name}" in netlist.elements]
     starts = {node: volts for node, volts in bare.items() if node != GROUND}
-    pairs = [(int(unit), name) for unit in np.flatnonzero(solved) for name in names]
+    rng = np.random.default_rng(0)
+    matters = np.zeros((len(names), deck.copies), np.bool_)
+    for _ in range(_SCREENS):
+        many = known | {f"meter.{name}": VOLTMETER_OHM * np.exp(rng.uniform(-1.0, 1.0, deck.copies)) for name in names}
+        screen = Deck(netlist, many, deck.copies, deck.spent, jobs=deck.jobs)
+        loaded = screen.solve(starts, KNEE, np.flatnonzero(solved))
+        for row, name in enumerate(names):
+            red, black = between[name]
+            moved = np.abs(loaded[red] - loaded[black] - found[name])
+            matters[row] |= ~(moved < _MATTERS * (SHARE * np.abs(found[name]) + FLOOR_V))
+    pairs = [(int(unit), names[row]) for unit, row in np.argwhere(matters.T) if solved[unit]]
     if not pairs:
         return
     index = np.array([unit for unit, _ in pairs])

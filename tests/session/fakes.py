@@ -230,7 +230,8 @@ def well(question: Question) -> Reply:
         case "trim":
             return Reply(choice="take")
         case "decide":
-            return Reply(choice="again")
+            free = {choice.value for choice in question.choices if not choice.wants_reason}
+            return Reply(choice="go on" if "go on" in free else "again")
     return Reply(choice=question.choices[0].value, text="typed")
 
 

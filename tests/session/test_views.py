@@ -1,14 +1,16 @@
 from __future__ import annotations
 
 from dataclasses import replace
+from typing import Any
 
 import pytest
 
-from benchkit.events import Decided, Resumed, SupplyState, Tripped
+from benchkit.events import Decided, Resumed, SupplyState, Suspected, Tripped
+from benchkit.procedure.actions import Narrow, Read, Suspect
 from benchkit.procedure.state import State
 from benchkit.session.front import View
 from benchkit.session.views import Headings, Moment, Painter, supply_words
-from tests.procedure.driver import OPENED, Drive, begun, judged, small
+from tests.procedure.driver import OPENED, Drive, begun, judged, narrowed, reading, small, suspected
 
 ON = SupplyState(output_on=True, positive_v=10.0, negative_v=-10.0, positive_a=0.0124, negative_a=0.0121, limit_a=0.045)
 
@@ -80,7 +82,7 @@ def test_the_end_shows_everything_done() -> None:
 def test_results_with_their_override_and_their_past() -> None:
     drive = begun(small()).until("power.offset")
     item = "look.parts"
-    before = view(drive).results[0]
+    before = view(drive).results[1]
     assert (before.item, before.from_before, before.overridden) == (item, False, "")
     drive.tell(Resumed(operator="Ida"))
     assert all(result.from_before for result in view(drive).results)
@@ -91,7 +93,7 @@ def test_an_override_is_shown_with_its_reason() -> None:
     drive.well()
     drive.tell(judged("look.parts", "fail"))
     drive.tell(Decided(item="look.parts", choice="go on", reason="a known spot"))
-    (result,) = view(drive).results
+    _, result = view(drive).results
     assert (result.verdict, result.overridden) == ("fail", "a known spot")
 
 
@@ -100,7 +102,7 @@ def test_numbers_come_as_text_and_as_numbers() -> None:
     result = next(one for one in view(drive).results if one.item == "power.output-first.output")
     assert (result.value_text, result.low_text, result.high_text) == ("500.00 mV", "-10.000 V", "10.000 V")
     assert (result.value, result.low, result.high) == (0.5, -10.0, 10.0)
-    confirmed = view(drive).results[0]
+    confirmed = view(drive).results[1]
     assert (confirmed.value_text, confirmed.value) == ("", None)
 
 
@@ -130,3 +132,111 @@ def test_a_supply_by_hand_is_shown_as_such_all_the_time() -> None:
 def test_before_anything_is_opened_there_is_a_picture_too() -> None:
     found = view(Drive(small(), State()))
     assert (found.unit, found.operator, found.results) == ("", "", ())
+
+
+# -- what the model says of this unit -------------------------------------------------------------------------------
+
+CURRENT = "power.current.rail+.current"
+
+
+def at_current() -> Drive:
+    drive = begun(small()).until(CURRENT)
+    while not isinstance(drive.open, Read):
+        drive.well()
+    return drive
+
+
+def asked(drive: Drive, kind: type[Narrow] | type[Suspect]) -> Any:
+    return drive.newest(kind)
+
+
+def failed() -> Drive:
+    drive = at_current()
+    drive.tell(reading(drive.walk.item(drive.state), -1e9))
+    drive.well()
+    return drive
+
+
+def test_the_reading_to_come_is_shown_with_both_limits() -> None:
+    drive = at_current()
+    aim = view(drive).aim
+    assert aim is not None
+    assert (aim.point, aim.design_text, aim.unit_text) == ("rail+.current", "-10.00 A to 10.00 A", "")
+    drive.tell(narrowed(asked(drive, Narrow), 0.4, 0.6))
+    aim = view(drive).aim
+    assert aim is not None
+    assert (aim.design_text, aim.unit_text) == ("-10.00 A to 10.00 A", "400.0 mA to 600.0 mA")
+    drive.well()
+    drive.well()
+    assert view(drive).aim is None
+    result = next(one for one in view(drive).results if one.item == CURRENT)
+    assert (result.unit_low, result.unit_high, result.odd) == (0.4, 0.6, False)
+    assert (result.unit_low_text, result.unit_high_text) == ("400.00 mA", "600.00 mA")
+
+
+def test_suspects_are_said_to_be_worked_out_and_then_shown() -> None:
+    drive = failed()
+    suspects = view(drive).suspects
+    assert suspects is not None
+    assert suspects.working
+    assert suspects.suspects == ()
+    drive.tell(suspected(asked(drive, Suspect), "output.upper.1: open", probes=["spread"]))
+    suspects = view(drive).suspects
+    assert suspects is not None
+    assert not suspects.working
+    assert suspects.accuses
+    assert [one.title for one in suspects.suspects] == ["output.upper.1 open", "no single fault"]
+    assert suspects.suspects[0].evidence == ("output reads 500.0 mV, expected overload; healthy would read 0.000 V",)
+    assert "driver.upper open" in suspects.suspects[0].alike
+    assert suspects.next_step.startswith("Most telling next: spread (")
+    assert "2 faults could not have shown" in suspects.unseen
+
+
+def test_what_can_be_had_only_after_off_says_so() -> None:
+    drive = failed()
+    drive.tell(suspected(asked(drive, Suspect), "output.upper.1: open", probes=["diode.output.upper.1"]))
+    suspects = view(drive).suspects
+    assert suspects is not None
+    assert "make safe first" in suspects.next_step
+    drive.tell(Decided(item=CURRENT, choice="go on", reason="known"))
+    assert "output.upper.1 open" in view(drive).message, "it is not forgotten when the walk goes on"
+
+
+def test_a_healthy_unit_is_never_proven() -> None:
+    drive = failed()
+    drive.tell(suspected(asked(drive, Suspect), "healthy"))
+    suspects = view(drive).suspects
+    assert suspects is not None
+    assert not suspects.accuses
+    assert "proves nothing" in suspects.heading
+    assert suspects.unseen
+
+
+def test_plain_words_when_there_was_no_answer() -> None:
+    drive = failed()
+    action = asked(drive, Suspect)
+    drive.tell(Suspected(item=action.item, after=action.after, problem="31 of 90 hypotheses have no solution"))
+    suspects = view(drive).suspects
+    assert suspects is not None
+    assert suspects.heading == "The model has no answer about suspects: 31 of 90 hypotheses have no solution"
+    assert (suspects.suspects, suspects.unseen, suspects.next_step) == ((), "", "")
+
+
+def test_an_extra_reading_has_its_own_title_among_the_results() -> None:
+    drive = failed()
+    drive.tell(suspected(asked(drive, Suspect), "output.upper.1: open", probes=["spread"]))
+    drive.tell(Decided(item=CURRENT, choice="probe"))
+    assert view(drive).item_title == "Extra reading: spread"
+    while drive.state.extra:
+        drive.well()
+    assert view(drive).results[-1].title == "Extra reading: spread"
+
+
+def test_why_a_verdict_is_no_better_is_shown_at_the_end() -> None:
+    drive = at_current()
+    drive.tell(narrowed(asked(drive, Narrow), 2.0, 3.0))
+    drive.well()
+    drive.well()
+    drive.tell(suspected(asked(drive, Suspect), "output.upper.1: open"))
+    drive.to_end()
+    assert "output.upper.1: open" in view(drive).why

@@ -2,9 +2,9 @@
 
 Every design is a design file's text, put together from the tables below, and passes the same checks as any file. The
 values are invented, of the size that such stages have: about 8 mA through the spreader (20 mA in a single follower),
-some 20 mV across each emitter resistor when warm. The collector-base arm of each (`ARMS`) was found by the model itself,
-as the resistance at which the nominal unit, warm, meets its target; the arms with a trimmer are divided so that this
-lies in the middle of its travel. `python -m tests.stage.catalogue` prints the table again.
+some 20 mV across each emitter resistor when warm. The collector-base arm of each (`ARMS`) was found by the model
+itself, as the resistance at which the nominal unit, warm, meets its target; the arms with a trimmer are divided so that
+this lies in the middle of its travel. `python -m tests.stage.catalogue` prints the table again.
 """
 
 from __future__ import annotations
@@ -12,6 +12,7 @@ from __future__ import annotations
 from collections.abc import Iterator
 from dataclasses import dataclass, replace
 from functools import cache
+from pathlib import Path
 
 from benchkit.stage.design import Design, parse_design
 from tests.stage.catalogue_arms import ARMS
@@ -69,7 +70,7 @@ def text(wanted: Wanted, arm_ohm: float | None = None) -> str:
         _feed(wanted, feed_ohm, 0.02 if single else 0.008),
         _spreader(wanted, upper_ohm),
         _output(wanted),
-        f'[target]\nemitter_drop = "20 mV"\ntolerance = "{"30 %" if wanted.trimmer == "none" else "10 %"}"\nwhen = "warm"\n',
+        f'[target]\nemitter_drop = "20 mV"\ntolerance = "{30 if wanted.trimmer == "none" else 10} %"\nwhen = "warm"\n',
         THERMAL if not single else THERMAL.replace('driver_tracking = 0.4\ndriver_to_ambient = "60 K/W"\n', ""),
         DEVICES,
     ]
@@ -78,7 +79,10 @@ def text(wanted: Wanted, arm_ohm: float | None = None) -> str:
 
 def _rails(wanted: Wanted, full_v: float) -> str:
     if wanted.single_supply:
-        return f'[rails]\npositive = "{2.0 * full_v:g} V"\nnegative = "0 V"\nbleed = "15 kohm 5 %"\nother_positive = "4 mA 10 %"\n'
+        return (
+            f'[rails]\npositive = "{2.0 * full_v:g} V"\nnegative = "0 V"\nbleed = "15 kohm 5 %"\n'
+            'other_positive = "4 mA 10 %"\n'
+        )
     return (
         f'[rails]\npositive = "{full_v:g} V"\nnegative = "-{full_v:g} V"\nlocal_capacitors = "100 uF"\n'
         'bleed = "10 kohm 5 %"\nother_positive = "4 mA 10 %"\nother_negative = "4 mA 10 %"\n'
@@ -150,46 +154,7 @@ spreader_lag = "30 s"
 max_heatsink = "70 degC"
 """
 
-DEVICES = """[device.npn-small]
-polarity = "npn"
-parameters = { IS = 2e-14, BF = 320, VAF = 90, IKF = 0.2, ISE = 5e-15, NE = 1.5, BR = 4, VAR = 20, RB = 15, RE = 0.25, RC = 1.0, XTI = 3, EG = 1.11, XTB = 1.5 }
-spread = { IS = "20 %", BF = "40 %" }
-
-[device.pnp-small]
-polarity = "pnp"
-parameters = { IS = 2.5e-14, BF = 260, VAF = 60, IKF = 0.15, ISE = 6e-15, NE = 1.5, BR = 4, VAR = 15, RB = 15, RE = 0.3, RC = 1.2, XTI = 3, EG = 1.11, XTB = 1.5 }
-spread = { IS = "20 %", BF = "40 %" }
-
-[device.npn-driver]
-polarity = "npn"
-parameters = { IS = 1.5e-13, BF = 140, VAF = 150, IKF = 0.9, ISE = 1e-13, NE = 1.5, BR = 6, VAR = 20, RB = 6, RE = 0.06, RC = 0.2, XTI = 3, EG = 1.11, XTB = 1.5 }
-spread = { IS = "20 %", BF = "50 %" }
-
-[device.pnp-driver]
-polarity = "pnp"
-parameters = { IS = 1.2e-13, BF = 120, VAF = 110, IKF = 0.7, ISE = 1e-13, NE = 1.5, BR = 6, VAR = 15, RB = 6, RE = 0.07, RC = 0.25, XTI = 3, EG = 1.11, XTB = 1.5 }
-spread = { IS = "20 %", BF = "50 %" }
-
-[device.npn-medium]
-polarity = "npn"
-parameters = { IS = 1.5e-13, BF = 140, VAF = 150, IKF = 0.9, ISE = 1e-13, NE = 1.5, BR = 6, VAR = 20, RB = 6, RE = 0.06, RC = 0.2, XTI = 3, EG = 1.11, XTB = 1.5 }
-spread = { IS = "20 %", BF = "40 %" }
-
-[device.pnp-medium]
-polarity = "pnp"
-parameters = { IS = 1.2e-13, BF = 120, VAF = 110, IKF = 0.7, ISE = 1e-13, NE = 1.5, BR = 6, VAR = 15, RB = 6, RE = 0.07, RC = 0.25, XTI = 3, EG = 1.11, XTB = 1.5 }
-spread = { IS = "20 %", BF = "40 %" }
-
-[device.npn-power]
-polarity = "npn"
-parameters = { IS = 5e-12, BF = 110, VAF = 120, IKF = 9.0, ISE = 1e-12, NE = 1.6, BR = 5, VAR = 15, RB = 1.5, RE = 0.012, RC = 0.04, XTI = 3, EG = 1.11, XTB = 1.6 }
-spread = { IS = "20 %", BF = "40 %" }
-
-[device.pnp-power]
-polarity = "pnp"
-parameters = { IS = 6e-12, BF = 95, VAF = 90, IKF = 8.0, ISE = 1e-12, NE = 1.6, BR = 5, VAR = 12, RB = 1.3, RE = 0.014, RC = 0.05, XTI = 3, EG = 1.11, XTB = 1.6 }
-spread = { IS = "20 %", BF = "40 %" }
-"""
+DEVICES = (Path(__file__).parent / "catalogue_devices.toml").read_text(encoding="utf-8")
 
 
 def wanted() -> Iterator[Wanted]:
@@ -208,11 +173,15 @@ def wanted() -> Iterator[Wanted]:
                     number += 1
     for topology in TOPOLOGIES:
         for trimmer, feed in zip(TRIMMERS, (*FEEDS, FEEDS[1]), strict=True):
-            yield Wanted(topology=topology, feed=feed, trimmer=trimmer, wiring="tied" if trimmer == "upper" else "series",
-                         single_supply=True, stopper=trimmer != "none")  # fmt: skip
+            yield Wanted(
+                topology=topology, feed=feed, trimmer=trimmer, wiring="tied" if trimmer == "upper" else "series",
+                single_supply=True, stopper=trimmer != "none",
+            )  # fmt: skip
     for trimmer in TRIMMERS[:3]:
-        yield Wanted(topology=TOPOLOGIES[1], feed="resistor servo", trimmer=trimmer, pnp_spreader=True,
-                     wiring="tied" if trimmer == "between" else "series", collector_resistor=trimmer == "upper")  # fmt: skip
+        yield Wanted(
+            topology=TOPOLOGIES[1], feed="resistor servo", trimmer=trimmer, pnp_spreader=True,
+            wiring="tied" if trimmer == "between" else "series", collector_resistor=trimmer == "upper",
+        )  # fmt: skip
     yield Wanted(topology=TOPOLOGIES[3], feed="source servo", trimmer="upper", wiring="tied", pnp_spreader=True)
 
 
@@ -231,12 +200,12 @@ FEW = (
 
 def catalogue() -> dict[str, Design]:
     """Every design by its name."""
-    return {one.name: _made(one) for one in wanted()}
+    return {one.name: _made(one) for one in (*wanted(), *_extra())}
 
 
 def few() -> dict[str, Design]:
     """Eight designs that hold every topology, feed, trimmer arm and wiring, one to three pairs, once or more."""
-    known = {one.name: one for one in wanted()} | {one.name: one for one in _extra()}
+    known = {one.name: one for one in (*wanted(), *_extra())}
     return {name: _made(known[name]) for name in FEW}
 
 
@@ -281,7 +250,8 @@ def found_arm(one: Wanted) -> float:
     )
     design = parse_design(probe[:begin] + spreader + probe[end:])
     solved = solve_units(design, nominal(design), full_rails(design), loading="none")
-    assert solved.converged[0] and solved.unclipped is not None, one.name
+    assert solved.converged[0], one.name
+    assert solved.unclipped is not None
     return float(f"{fixed_ohm + track_ohm * float(solved.unclipped[0]):.5g}")
 
 

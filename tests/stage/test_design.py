@@ -183,35 +183,18 @@ def test_windows_line_ends_and_byte_order_mark(tmp_path: Path) -> None:
     assert design.sha256 == hashlib.sha256(path.read_bytes()).hexdigest()
 
 
-@pytest.mark.parametrize(
-    "changes",
-    [
-        (
-            ('topology = "double-emitter-follower"', 'topology = "triple-emitter-follower"'),
-            (
-                "pairs = 1",
-                'pairs = 1\npredriver_upper = "npn-driver"\npredriver_lower = "pnp-driver"\n'
-                'predriver_resistor = "470 ohm"',
-            ),
-        ),
-        (
-            ('topology = "double-emitter-follower"', 'topology = "complementary-feedback-pair"'),
-            ('upper = "npn-power"', 'upper = "pnp-power"'),
-            ('lower = "pnp-power"', 'lower = "npn-power"'),
-        ),
-    ],
-    ids=["triple", "feedback pair"],
-)
-def test_topologies_without_a_model_are_read_and_then_refused(changes: tuple[tuple[str, str], ...]) -> None:
-    with pytest.raises(FileError, match="no model of a") as caught:
-        changed(TERN, *changes)
-    assert caught.value.key == "output.topology"
-    assert "keep it" in caught.value.next_step
-
-
-def test_single_supply_with_a_share_of_the_span() -> None:
-    with pytest.raises(FileError, match="single-supply stage yet"):
-        changed(TERN, ('negative = "-35 V"', 'negative = "0 V"'), ('rest = "0 V"', 'rest = "50 %"'))
+def test_single_supply() -> None:
+    one = (('negative = "-35 V"', 'negative = "0 V"'), ('other_negative = "6 mA 10 %"', ""))
+    design = changed(TERN, *one, ('rest = "0 V"', 'rest = "50 %"'))
+    assert design.single_supply
+    assert design.rest_v(30.0, 0.0) == pytest.approx(15.0)
+    assert not tern().single_supply
+    with pytest.raises(FileError, match="between the rails") as caught:
+        changed(TERN, *one)
+    assert caught.value.key == "output.rest"
+    with pytest.raises(FileError, match="no negative rail") as caught:
+        changed(TERN, one[0], ('rest = "0 V"', 'rest = "50 %"'))
+    assert caught.value.key == "rails.other_negative"
 
 
 def test_rest_as_a_share_of_the_span() -> None:

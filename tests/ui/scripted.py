@@ -9,7 +9,19 @@ from dataclasses import replace
 
 from benchkit.events import Closed, SupplyState, Verdict
 from benchkit.procedure.actions import Choice, Question
-from benchkit.session.front import Energised, Front, LiveView, Reply, ResultView, SectionView, SupplyView, View
+from benchkit.session.front import (
+    AimView,
+    Energised,
+    Front,
+    LiveView,
+    Reply,
+    ResultView,
+    SectionView,
+    SupplyView,
+    SuspectsView,
+    SuspectView,
+    View,
+)
 from benchkit.ui.app import BenchApp
 from benchkit.ui.entry import Identity, Opening
 
@@ -311,3 +323,59 @@ def asking(*questions: Question, view: View = VIEW) -> Script:
         return closed()
 
     return script
+
+
+# -- what the model says of this unit -------------------------------------------------------------------------------
+
+SUSPECTED = SuspectsView(
+    item="upper",
+    working=False,
+    heading="92 explanations of 21 readings, likeliest first: emitter.upper.1 open.",
+    suspects=(
+        SuspectView(
+            title="emitter.upper.1 open",
+            share=0.83,
+            share_text="83 %",
+            alike="or output.upper.1 emitter open",
+            evidence=(
+                "emitter.upper.1 reads 0.000 V, expected 0.000 V; healthy would read 12.10 mV",
+                "output.upper.1.vbe reads 612.0 mV, expected 611.4 mV; healthy would read 542.0 mV",
+            ),
+        ),
+        SuspectView(
+            title="driver.upper collector open",
+            share=0.11,
+            share_text="11 %",
+            evidence=("driver.resistor reads 1.130 V, expected 1.105 V; healthy would read 773.0 mV",),
+        ),
+        SuspectView(title="no single fault", share=0.02, share_text="2 %"),
+    ),
+    unseen="14 faults could not have shown yet: output.lower.1 leaky, feed.upper stuck low, and more.",
+    next_step="Most telling next: driver.upper.vbe (+9 V -9 V, limit 45.00 mA, trimmer least, cold to warm). It tells "
+    "emitter.upper.1 open from driver.upper collector open.",
+    accuses=True,
+)
+WORKING = SuspectsView(
+    item="upper", working=True, heading="The model works out what would explain the readings. Nothing waits for it."
+)
+PROBE = Choice(value="probe", label="Read driver.upper.vbe next")
+SUSPECTING = replace(DECIDE, choices=(*DECIDE.choices, PROBE))
+ODD = replace(
+    PASSED,
+    unit_low=2.42,
+    unit_high=2.47,
+    unit_low_text="2.420 V",
+    unit_high_text="2.470 V",
+    odd=True,
+    why="2.412 V ± 0.2 mV lies within 2.310 V to 2.520 V. Odd for this unit: its readings so far lead to 2.420 V to "
+    "2.470 V.",
+)
+ODD_QUESTION = Question(
+    item="spread",
+    kind="decide",
+    title="The spreader: spread is odd for this unit.",
+    do=ODD.why,
+    caution="Inside the design's limits, so no failure: see what the other readings say.",
+    choices=(Choice(value="go on", label="Go on"), DECIDE.choices[0], DECIDE.choices[2]),
+)
+AIM = AimView(point="emitter.upper.1", design_text="0.00 mV to 1.20 mV", unit_text="80.00 uV to 140.0 uV")

@@ -578,3 +578,112 @@ def test_without_a_walk_of_choices_nothing_is_taken() -> None:
             assert bench.replies == []
 
     run(test)
+
+
+# --- what the model says of this unit --------------------------------------------------------------------------------
+
+FAILED_VIEW = replace(scripted.VIEW, results=(scripted.PASSED, scripted.FAILED), item="upper", supply=scripted.ON)
+
+
+def test_suspects_come_while_the_question_stands_and_a_half_typed_reason_stays() -> None:
+    async def test() -> None:
+        arrived = asyncio.Event()
+
+        async def script(front: Front, bench: Bench) -> Closed:
+            front.show(replace(FAILED_VIEW, suspects=scripted.WORKING))
+            asking = asyncio.ensure_future(front.ask(scripted.DECIDE))
+            await arrived.wait()
+            asking.cancel()
+            front.show(replace(FAILED_VIEW, suspects=scripted.SUSPECTED))
+            bench.replies.append(await front.ask(scripted.SUSPECTING))
+            await asyncio.sleep(60)
+            return scripted.closed()
+
+        async with running(script) as (app, pilot, bench):
+            await until(lambda: shows(app, "The model works out what would explain the readings."))
+            assert shows(app, "read it again")
+            await pilot.press("g", *"known")
+            arrived.set()
+            await until(lambda: shows(app, "emitter.upper.1 open"))
+            assert shows(app, "83 %")
+            assert shows(app, "reads 0.000 V, expected 0.000 V; healthy would read 12.10 mV")
+            entry = app.screen.query_one("#decide Input", Input)
+            assert (entry.value, entry.has_focus) == ("known", True)
+            await pilot.press("1", "enter")
+            await until(lambda: bool(bench.replies))
+            assert bench.replies == [Reply(choice="go on", text="known1")]
+
+    run(test)
+
+
+def test_the_extra_reading_is_one_key() -> None:
+    async def test() -> None:
+        view = replace(FAILED_VIEW, suspects=scripted.SUSPECTED)
+        async with running(asking(scripted.SUSPECTING, view=view), size=(120, 40)) as (app, pilot, bench):
+            await until(lambda: shows(app, "Read driver.upper.vbe next"))
+            for words in (
+                "Most telling next: driver.upper.vbe",
+                "14 faults could not have shown yet",
+                "no single fault",
+            ):
+                assert shows(app, words), words
+            await pilot.press("p")
+            await until(lambda: bool(bench.replies))
+            assert bench.replies == [Reply(choice="probe")]
+
+    run(test)
+
+
+@pytest.mark.parametrize("size", [(80, 24), (120, 40), (40, 12)])
+def test_off_is_one_key_while_suspects_are_worked_out(size: tuple[int, int]) -> None:
+    async def test() -> None:
+        view = replace(FAILED_VIEW, suspects=scripted.WORKING)
+        async with running(asking(scripted.DECIDE, view=view), size=size) as (_, pilot, bench):
+            await pilot.press("f9")
+            await until(lambda: bool(bench.offs))
+
+    run(test)
+
+
+def test_an_odd_reading_shows_both_limits_in_words_and_goes_on_by_enter() -> None:
+    async def test() -> None:
+        view = replace(scripted.VIEW, results=(scripted.ONE_SIDED, scripted.ODD), item="spread")
+        async with running(asking(scripted.ODD_QUESTION, view=view)) as (app, pilot, bench):
+            await until(lambda: shows(app, "this unit 2.420 V to 2.470 V: ODD, it reads outside"))
+            assert shows(app, "design 2.310 V")
+            await pilot.press("enter")
+            await until(lambda: bool(bench.replies))
+            assert bench.replies == [Reply(choice="go on")]
+
+    run(test)
+
+
+def test_the_reading_to_come_shows_both_limits_when_they_come() -> None:
+    async def test() -> None:
+        async with running(asking(scripted.PROBES)) as (app, _, bench):
+            assert bench.front is not None
+            await until(lambda: shows(app, "expect 0.00 mV to 1.20 mV"))
+            bench.front.show(replace(scripted.VIEW, aim=scripted.AIM))
+            await until(lambda: shows(app, "this unit 80.00 uV to 140.0 uV"))
+            assert shows(app, "design 0.00 mV to 1.20 mV")
+
+    run(test)
+
+
+def test_the_end_says_why_it_is_undecided_and_who_is_suspected() -> None:
+    async def test() -> None:
+        view = replace(
+            scripted.VIEW, results=(scripted.PASSED,), suspects=scripted.SUSPECTED, verdict="undecided", exit_status=1,
+            why="Every reading passed, but together they fit emitter.upper.1: open better than a good unit.",
+        )  # fmt: skip
+
+        async def script(front: Front, bench: Bench) -> Closed:
+            front.show(view)
+            await asyncio.sleep(60)
+            return scripted.closed(1, "undecided")
+
+        async with running(script, size=(120, 40)) as (app, _, _):
+            await until(lambda: shows(app, "is undecided. Every reading passed"))
+            assert shows(app, "83 % emitter.upper.1 open")
+
+    run(test)

@@ -14,7 +14,21 @@ from benchkit.session.front import Reply
 from benchkit.ui import plain
 from benchkit.ui.plain import PlainFront
 from tests.ui import scripted
-from tests.ui.scripted import CONFIRM, DECIDE, HOLD, PROBES, TEXT, TRIM, TRIM_VIEW, VIEW
+from tests.ui.scripted import (
+    AIM,
+    CONFIRM,
+    DECIDE,
+    HOLD,
+    ODD_QUESTION,
+    PROBES,
+    SUSPECTED,
+    SUSPECTING,
+    TEXT,
+    TRIM,
+    TRIM_VIEW,
+    VIEW,
+    WORKING,
+)
 
 BY_HAND = replace(
     scripted.BY_HAND_READING,
@@ -232,3 +246,52 @@ def test_a_broken_terminal_is_an_end() -> None:
 
     asyncio.run(whole())
     assert offs
+
+
+# -- what the model says of this unit -------------------------------------------------------------------------------
+
+
+def test_suspects_are_told_in_lines_once() -> None:
+    async def script(front: PlainFront, terminal: Terminal, offs: list[str]) -> None:
+        for suspects in (None, WORKING, SUSPECTED, SUSPECTED):
+            front.show(replace(VIEW, suspects=suspects))
+
+    text, _ = play(script)
+    assert text.count("The model works out what would explain") == 1
+    assert text.count("83 %  emitter.upper.1 open") == 1
+    assert "healthy would read" in text
+    assert "or output.upper.1 emitter open" in text
+    assert "14 faults could not have shown yet" in text
+    assert "Most telling next: driver.upper.vbe" in text
+    assert max(len(line) for line in text.splitlines()) <= plain.WIDTH
+
+
+@pytest.mark.parametrize("line", ["4", "probe"])
+def test_an_extra_reading_is_taken_up_in_lines(line: str) -> None:
+    reply, text = answer(SUSPECTING, line)
+    assert reply == Reply(choice="probe")
+    assert "4 Read driver.upper.vbe next" in text
+
+
+def test_an_odd_reading_needs_no_reason_to_go_on() -> None:
+    reply, text = answer(ODD_QUESTION, "1")
+    assert reply == Reply(choice="go on")
+    assert "1 Go on\n" in text
+
+
+def test_this_units_limits_stand_under_the_designs_whenever_they_come() -> None:
+    _, text = answer(PROBES, "", view=replace(VIEW, aim=AIM))
+    assert "Expected: 0.00 mV to 1.20 mV" in text
+    assert text.count("This unit: 80.00 uV to 140.0 uV.") == 1
+
+    async def script(front: PlainFront, terminal: Terminal, offs: list[str]) -> None:
+        front.show(VIEW)
+        asking = asyncio.create_task(front.ask(PROBES))
+        await asyncio.sleep(0.05)
+        front.show(replace(VIEW, aim=AIM))
+        front.show(replace(VIEW, aim=AIM))
+        terminal.type("")
+        await asking
+
+    text, _ = play(script)
+    assert text.count("This unit: 80.00 uV to 140.0 uV.") == 1

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from typing import Any
 
+from rich.console import Group
 from rich.text import Text
 from textual.containers import VerticalScroll
 
@@ -14,7 +15,7 @@ from benchkit.ui.look import INK, QUIET, STRONG, VERDICT_COLOURS, safe
 from benchkit.ui.pages.base import Page
 from benchkit.ui.widgets.outcome import result_line, verdict_strip
 from benchkit.ui.widgets.summary_words import closing_sentence, still_open
-from benchkit.ui.widgets.suspects_text import suspects_text
+from benchkit.ui.widgets.suspects_text import suspects_drawn
 from benchkit.ui.widgets.trail_words import count_by_verdict
 from benchkit.ui.widgets.words import Words
 
@@ -57,7 +58,8 @@ class SummaryPage(Page):
                 if result.why:
                     lines.append(Text(f"    {safe(result.why)}", style=VERDICT_COLOURS[result.verdict]))
         if view.suspects is not None and not view.suspects.working:
-            lines += [Text(""), suspects_text(view.suspects, max(40, self.size.width - 4))]
+            lines.append(Text(""))
+        explained = len(lines)
         lines.append(Text(""))
         lines.append(Text(f"{safe(view.design)}, unit {safe(view.unit)}, by {safe(view.operator)}", style=INK))
         lines.append(Text(f"The record holds {view.kept} lines: {safe(view.record)}", style=INK))
@@ -65,7 +67,12 @@ class SummaryPage(Page):
             lines.append(Text("A rehearsal on a simulated unit: it says nothing about a real one.", style=INK))
         lines.append(Text(""))
         lines.append(Text(DEFERENCE, style=QUIET))
-        self._body.say(Text("\n").join(lines))
+        body = Text("\n").join(lines)
+        if view.suspects is None or view.suspects.working:
+            self._body.say(body)
+            return
+        parts = (Text("\n").join(lines[:explained]), suspects_drawn(view.suspects), Text("\n").join(lines[explained:]))
+        self._body.say_drawn((body.plain, view.suspects), Group(*parts))
 
     @property
     def sheet(self) -> VerticalScroll:

@@ -122,6 +122,7 @@ class Answer(Vertical):
         self._guard_s = guard_s
         self._question: Question | None = None
         self._reason_for: Choice | None = None
+        self._half_typed: tuple[str, str, str] | None = None
         self._since = 0.0
         self._hint = Words(classes="answer-hint")
         self._entry = Input(classes="answer-entry", compact=True, select_on_focus=False)
@@ -163,9 +164,24 @@ class Answer(Vertical):
         self._choices.offer(shown, stacked=stacked, arrows=arrows and usual and not _ends(shown), usual=usual)
         self._choices.display = bool(shown)
         self._focus()
+        if not refused:
+            self._go_on_typing(question)
+
+    def _go_on_typing(self, question: Question) -> None:
+        """Keep a reason that is half typed when the same question comes anew with more to choose from."""
+        item, value, text = self._half_typed or ("", "", "")
+        choice = next((choice for choice in question.choices if choice.value == value and choice.wants_reason), None)
+        if choice is None or item != question.item or question.kind != "decide":
+            self._half_typed = None
+            return
+        self._take(choice)
+        self._entry.value = text
+        self._entry.cursor_position = len(text)
 
     def withdraw(self) -> None:
         """Take everything away: there is nothing to answer."""
+        if self._question is not None and self._reason_for is not None:
+            self._half_typed = (self._question.item, self._reason_for.value, self._entry.value)
         self._question = None
         self._reason_for = None
         self._entry.value = ""
@@ -226,6 +242,7 @@ class Answer(Vertical):
         """Leave the reason again."""
         if event.key == "escape" and self._reason_for is not None and self._question is not None:
             event.stop()
+            self._half_typed = None
             self.put(self._question)
 
     def _complain(self, words: str) -> None:
@@ -236,6 +253,7 @@ class Answer(Vertical):
 
     def _give(self, reply: Reply) -> None:
         self._question = None
+        self._half_typed = None
         self.withdraw()
         self.post_message(self.Given(reply))
 

@@ -12,7 +12,7 @@ from benchkit.procedure.actions import Question
 from benchkit.session.front import AimView, SuspectsView
 from benchkit.ui.look import BLOCK, CARE, INK, LIGHT_SHADE, QUIET, RED_LEAD, STRONG, UP, safe
 from benchkit.ui.widgets.gauge_scale import DESIGN, THIS_UNIT
-from benchkit.ui.widgets.suspects_text import suspects_text
+from benchkit.ui.widgets.suspects_text import suspects_drawn
 from benchkit.ui.widgets.words import Words
 
 
@@ -86,7 +86,7 @@ class Card(VerticalScroll):
         """Show what would explain the readings."""
         self._suspects.set_class(suspects is None, "empty")
         if suspects is not None:
-            self._suspects.say(suspects_text(suspects, max(40, self.size.width - 4)))
+            self._suspects.say_drawn(suspects, suspects_drawn(suspects))
 
     def _draw_details(self, question: Question) -> None:
         rows: list[tuple[str, str, Text]] = []

@@ -2,9 +2,10 @@
 
 from __future__ import annotations
 
-import textwrap
 from typing import Final
 
+from rich.console import Group
+from rich.padding import Padding
 from rich.text import Text
 
 from benchkit.session.front import SuspectsView, SuspectView
@@ -16,25 +17,24 @@ BAR: Final = 8
 INDENT: Final = BAR + 2
 
 
-def suspects_text(suspects: SuspectsView, width: int) -> Text:
-    """Return the suspects for a column of `width` cells.
+def suspects_drawn(suspects: SuspectsView) -> Group:
+    """Return the suspects as lines that wrap to the room that they get.
 
-    The answer in a sentence; for each suspect a bar with its share in words, its name, and below it what speaks for it;
-    then what could not have shown, and which reading would tell most.
+    The answer in a sentence; for each suspect a bar with its share in words, its name, and below it what speaks for it,
+    most for the first; then which reading would tell most, and what could not have shown.
     """
-    text = Text()
-    _add(text, suspects.heading, width, QUIET if suspects.working else f"bold {INK}")
-    for suspect in suspects.suspects:
-        _suspect(text, suspect, width)
-    if suspects.unseen:
-        _add(text, suspects.unseen, width, QUIET)
+    rows: list[Text | Padding] = [Text(safe(suspects.heading), style=QUIET if suspects.working else INK)]
+    for number, suspect in enumerate(suspects.suspects):
+        rows += _suspect(suspect, evidence=1 if number else 2)
     if suspects.next_step:
-        _add(text, suspects.next_step, width, f"bold {CARE}")
-    return text
+        rows.append(Text(safe(suspects.next_step), style=f"bold {CARE}"))
+    if suspects.unseen:
+        rows.append(Text(safe(suspects.unseen), style=QUIET))
+    return Group(*rows)
 
 
 def share_bar(share: float, width: int = BAR) -> str:
-    """Return a bar; even the smallest share has one cell, and only what is nearly certain fills it.
+    """Return a bar; even the smallest share has one cell.
 
     Examples
     --------
@@ -45,19 +45,13 @@ def share_bar(share: float, width: int = BAR) -> str:
     return BLOCK * full + LIGHT_SHADE * (width - full)
 
 
-def _suspect(text: Text, suspect: SuspectView, width: int) -> None:
-    if text:
-        text.append("\n")
-    text.append(f"{share_bar(suspect.share)}  ", style=INK)
-    text.append(f"{suspect.share_text}  ", style=INK)
-    text.append(safe(suspect.title), style=f"bold {STRONG}")
-    for line in (suspect.alike, *suspect.evidence):
-        if line:
-            _add(text, line, width, QUIET if line == suspect.alike else INK, INDENT)
-
-
-def _add(text: Text, words: str, width: int, style: str, indent: int = 0) -> None:
-    for line in textwrap.wrap(safe(words), max(20, width - indent), break_on_hyphens=False):
-        if text:
-            text.append("\n")
-        text.append(" " * indent + line, style=style)
+def _suspect(suspect: SuspectView, evidence: int) -> list[Text | Padding]:
+    title = Text.assemble(
+        (f"{share_bar(suspect.share)}  ", INK),
+        (f"{suspect.share_text}  ", INK),
+        (safe(suspect.title), f"bold {STRONG}"),
+    )
+    if suspect.alike:
+        title.append(f", {safe(suspect.alike)}", style=QUIET)
+    below = [Padding(Text(safe(line), style=INK), (0, 0, 0, INDENT)) for line in suspect.evidence[:evidence]]
+    return [title, *below]

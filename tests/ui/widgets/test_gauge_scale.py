@@ -87,3 +87,43 @@ def test_equal_limits_still_give_a_scale(width: int, limit: float) -> None:
     rows = gauge_rows(width, limit, limit, limit)
     assert rows is not None
     assert len(rows.band) == width
+
+
+def test_this_units_limits_are_shaded_inside_the_designs_and_both_are_named() -> None:
+    rows = gauge_rows(
+        61, 0.0, -3.0, 3.0, low_text="-3 V", high_text="3 V", unit_low=-0.5, unit_high=1.0, unit_text="-0.5 V to 1 V"
+    )
+    assert rows is not None
+    assert rows.band.index("├") < rows.band.index("█") < rows.needle.index("▼") < rows.band.rindex("█")
+    assert rows.band.rindex("█") < rows.band.index("┤")
+    assert rows.figures.startswith("design")
+    assert rows.unit.split() == ["this", "unit", "-0.5", "V", "to", "1", "V"]
+    assert len(rows.unit) == 61
+
+
+@given(WIDTHS, st.floats(-1e3, 1e3), st.floats(1e-3, 1e3), st.floats(0, 1), st.floats(0, 1))
+def test_narrowed_limits_of_any_width_are_drawn(width: int, low: float, span: float, first: float, last: float) -> None:
+    assume(first <= last)
+    high = low + span
+    assume(high > low)
+    rows = gauge_rows(
+        width, low, low, high, unit_low=low + first * span, unit_high=low + last * span, unit_text="x" * 300
+    )
+    assert rows is not None
+    assert "█" in rows.band
+    assert all(len(row) == width for row in (rows.band, rows.figures, rows.unit))
+
+
+def test_without_limits_of_its_own_a_unit_has_no_row() -> None:
+    rows = gauge_rows(40, 0.0, -3.0, 3.0, low_text="-3 V", high_text="3 V")
+    assert rows is not None
+    assert rows.unit == ""
+    assert "design" not in rows.figures
+    assert "█" not in rows.band
+
+
+def test_open_sides_reach_to_the_designs() -> None:
+    rows = gauge_rows(40, 0.0, None, 3.0, high_text="3 V", unit_high=1.0, unit_text="at most 1 V")
+    assert rows is not None
+    assert rows.band[0] == "█"
+    assert rows.band.rindex("█") < rows.band.index("┤")

@@ -1,0 +1,92 @@
+"""A supply in its current limit: the rail is taken at the voltage that was read there.
+
+Against its limit a supply is a current source, and what voltage its rail falls to hangs on microamperes: the search for
+the likeliest unit would go along the edge of a knife. Read the other way round the same circuit is well behaved: with
+the rail at the voltage that was read, the current must be the limit. So, where a rail was read clearly below its
+setting, every hypothesis is solved with that rail held at the reading, and has to explain the current: the one that was
+read, or else the limit, which a supply keeps within a percent or so (common practice).
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Sequence
+from dataclasses import dataclass, fields, replace
+
+from benchkit.stage.conditions import Condition
+from benchkit.stage.observations import Conditions, Observation
+
+FALLEN_SHARE = 0.97
+FALLEN_V = 0.05
+"""A rail that reads below this share of its setting less this voltage has fallen: the supply limits."""
+LIMIT_SHARE = 0.01
+"""Standard uncertainty of a supply's limit, as a share."""
+FREE_FACTOR = 50.0
+"""By how much the limit is raised for a rail that is held."""
+LEAST_HELD_V = 1e-3
+
+
+@dataclass(frozen=True, kw_only=True)
+class Held(Condition):
+    """A condition whose rails stand at other voltages than they were set to.
+
+    Parameters
+    ----------
+    held_v : (float, float)
+        Positive and negative rail (V).
+    """
+
+    held_v: tuple[float, float] = (0.0, 0.0)
+
+
+def held_at_readings(observations: Sequence[Observation]) -> tuple[list[Observation], dict[Conditions, Conditions]]:
+    """Take rails that have fallen at their readings.
+
+    Returns
+    -------
+    observations : list of Observation
+        With changed conditions where a rail was held, and the limit as a reading where no current was read.
+    original : dict
+        Changed conditions to those that were stated.
+    """
+    fallen: dict[Conditions, dict[str, float]] = {}
+    for one in observations:
+        first = one.conditions[0]
+        if not isinstance(first, Condition) or first.limit_a is None or one.point not in ("rail+", "rail-"):
+            continue
+        set_v = first.positive_v if one.point == "rail+" else -first.negative_v
+        read_v = one.value if one.point == "rail+" else -one.value
+        if math.isfinite(read_v) and read_v < FALLEN_SHARE * set_v - FALLEN_V:
+            fallen.setdefault(one.conditions, {})[one.point] = max(read_v, LEAST_HELD_V)
+    if not fallen:
+        return list(observations), {}
+    changed = {conditions: _held(conditions, rails) for conditions, rails in fallen.items()}
+    result = [
+        replace(one, conditions=changed[one.conditions]) if one.conditions in changed else one for one in observations
+    ]
+    read = {(one.conditions, one.point) for one in observations}
+    for conditions, rails in fallen.items():
+        limit_a = conditions[0].limit_a  # type: ignore[union-attr]
+        assert limit_a is not None
+        for rail in rails:
+            if (conditions, f"{rail}.current") not in read:
+                result.append(
+                    Observation(
+                        conditions=changed[conditions], point=f"{rail}.current", value=limit_a,
+                        standard_uncertainty=LIMIT_SHARE * limit_a,
+                    )
+                )  # fmt: skip
+    return result, {new: old for old, new in changed.items()}
+
+
+def _held(conditions: Conditions, rails: dict[str, float]) -> Conditions:
+    """The same conditions with some rails at other voltages and a limit that is out of the way."""
+    result = []
+    for one in conditions:
+        assert isinstance(one, Condition)
+        assert one.limit_a is not None
+        stated = {field.name: getattr(one, field.name) for field in fields(one)}
+        stated["limit_a"] = FREE_FACTOR * one.limit_a
+        negative_v = -rails["rail-"] if "rail-" in rails else one.negative_v
+        result.append(Held(**stated, held_v=(rails.get("rail+", one.positive_v), negative_v)))
+    return tuple(result)
