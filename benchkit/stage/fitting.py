@@ -20,6 +20,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from benchkit.circuit.solution import Solution
 from benchkit.circuit.solve import Effort
 from benchkit.stage.draws import Array
 from benchkit.stage.faults import Fault
@@ -188,9 +189,9 @@ def fit(
     return Fit(z, end, cost, log_evidence(data, z, end, most))
 
 
-def _put(solutions: Sequence[object], where: Index, found: Joint, which: Index, units: int) -> None:
+def _put(solutions: Sequence[Solution], where: Index, found: Joint, which: Index, units: int) -> None:
     for mine, theirs in zip(solutions, found.solutions, strict=True):
         repeats = theirs.units // len(found.good)
         to = np.concatenate([where + k * units for k in range(repeats)])
         of = np.concatenate([which + k * len(found.good) for k in range(repeats)])
-        mine.put(to, theirs, of)  # type: ignore[attr-defined]
+        mine.put(to, theirs, of)

@@ -66,8 +66,10 @@ def held_at_readings(observations: Sequence[Observation]) -> tuple[list[Observat
     ]
     read = {(one.conditions, one.point) for one in observations}
     for conditions, rails in fallen.items():
-        limit_a = conditions[0].limit_a  # type: ignore[union-attr]
-        assert limit_a is not None
+        first = conditions[0]
+        assert isinstance(first, Condition)
+        assert first.limit_a is not None
+        limit_a = first.limit_a
         for rail in rails:
             if (conditions, f"{rail}.current") not in read:
                 result.append(

@@ -21,8 +21,9 @@ from benchkit.stage.fitting import Data, Fit, fit, step_from
 from benchkit.stage.readouts import Index, Mask
 from benchkit.stage.unit_model import Joint, Layout, UnitModel
 
-DRAWN = 3
-"""Units drawn for each hypothesis, beside its nominal one, to start from."""
+DRAWN = 2
+"""Units drawn for each hypothesis, beside its nominal one, to start from; half of them where several conditions share
+the work of telling hypotheses apart."""
 LIBRARY_SEED = 20261
 
 
@@ -48,19 +49,20 @@ class Library:
         priors[1:] /= 1.0 - priors[1:]
         self.log_prior = np.log(priors / priors.sum())
         many = len(self.faults)
+        drawn_units = DRAWN if len(layout) == 1 else DRAWN // 2
         count = len(self.model.coordinates)
         centre = np.zeros((count, many))
         first = self.model.at(centre, self.faults)
         rng = np.random.default_rng(LIBRARY_SEED)
-        drawn = np.repeat(rng.standard_normal((count, DRAWN)), many, axis=1)
+        drawn = np.repeat(rng.standard_normal((count, drawn_units)), many, axis=1)
         again = np.flatnonzero(~first.good)
         z = np.concatenate([drawn, centre[:, again]], axis=1)
-        whose = np.concatenate([np.tile(np.arange(many), DRAWN), again])
+        whose = np.concatenate([np.tile(np.arange(many), drawn_units), again])
         rest = self.model.at(z, [self.faults[k] for k in whose], first.take(whose))
         self.z = np.concatenate([centre, drawn], axis=1)
-        nominal = _replaced(first, again, rest.take(np.arange(DRAWN * many, len(whose))))
-        self.joint = joined(nominal, rest.take(np.arange(DRAWN * many)))
-        self.whose = np.tile(np.arange(many), DRAWN + 1)
+        nominal = _replaced(first, again, rest.take(np.arange(drawn_units * many, len(whose))))
+        self.joint = joined(nominal, rest.take(np.arange(drawn_units * many)))
+        self.whose = np.tile(np.arange(many), drawn_units + 1)
 
 
 @lru_cache(maxsize=8)

@@ -26,7 +26,7 @@ from benchkit.circuit.netlist import Netlist
 from benchkit.circuit.response import Response
 from benchkit.circuit.solution import Solution
 from benchkit.circuit.solve import Compiled, Effort, compile_netlist
-from benchkit.stage.conditions import Condition
+from benchkit.stage.conditions import Condition, TrimmerPosition
 from benchkit.stage.design import ZERO_CELSIUS_K, Design
 from benchkit.stage.draws import Array, Parameters
 from benchkit.stage.faults import Fault, apply
@@ -181,8 +181,7 @@ class Powered:
             return None
         if self._travel_name:
             return self.coordinates.place(z, self._travel_name)
-        wanted = {"least": 0.0, "most": 1.0}.get(self.condition.trimmer, self.condition.trimmer)  # type: ignore[arg-type]
-        return np.full(z.shape[1], float(wanted))
+        return np.full(z.shape[1], _stated_travel(self.condition.trimmer))
 
     def _slope(
         self,
@@ -260,6 +259,11 @@ class Powered:
         return shares
 
 
+def _stated_travel(trimmer: TrimmerPosition) -> float:
+    """Travel from the least-bias end of a trimmer whose position is stated."""
+    return {"least": 0.0, "most": 1.0}[trimmer] if isinstance(trimmer, str) else float(trimmer)
+
+
 @lru_cache(maxsize=32)
 def _bench_circuit(design: Design, points: tuple[str, ...]) -> Compiled:
     """The unpowered stage with a meter at every one of some points."""
@@ -281,7 +285,7 @@ class UnpoweredPoints:
         self,
         design: Design,
         coordinates: Coordinates,
-        trimmer: str | float,
+        trimmer: TrimmerPosition,
         ambient_c: float | None,
         points: Sequence[str],
         travel: str = "",
@@ -292,7 +296,7 @@ class UnpoweredPoints:
         self._circuit = _bench_circuit(design, self.points)
         self._between = build(design, Variant(powered=False)).between
         self._names = tuple(part.name for part in transistors_of(design))
-        ranges = [nominal_range(design, point, trimmer) for point in points]  # type: ignore[arg-type]
+        ranges = [nominal_range(design, point, trimmer) for point in points]
         self._amps = np.array([one.amps for one in ranges])
         self._divisor = np.array([
             1.0 if find_point(design, point).function == "diode" else one.amps
@@ -328,10 +332,10 @@ class UnpoweredPoints:
         chosen = {key: value for key, value in values.items() if key in self._circuit.keys}
         solution = self._circuit.solve(chosen, units * many, start, effort=effort)
         f = self._read(solution, meter).reshape(many, units).T
-        again = np.ones(units, np.bool_)
+        again: Mask = np.ones(units, np.bool_)
         slope = np.empty((units * many, len(self.coordinates)))
         if known is not None and at is not None:
-            again = (np.abs(z - at) > STRAIGHT).any(axis=0)
+            again = np.asarray((np.abs(z - at) > STRAIGHT).any(axis=0))
             slope = np.moveaxis(known, 1, 0).reshape(units * many, -1).copy()
         rows = np.flatnonzero(again[whose])
         response = Response(solution.take(rows)) if len(rows) else None
@@ -365,8 +369,7 @@ class UnpoweredPoints:
             if self._travel_name:
                 travel = self.coordinates.place(z, self._travel_name)
             else:
-                known = {"least": 0.0, "most": 1.0}
-                travel = np.full(z.shape[1], float(known.get(self._trimmer, self._trimmer)))  # type: ignore[arg-type]
+                travel = np.full(z.shape[1], _stated_travel(self._trimmer))
             set_trimmer(self.design, values, travel)
         apply(values, faults, self.design)
         return values

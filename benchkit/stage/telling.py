@@ -190,9 +190,8 @@ class Report:
             factors.append(np.where(good, np.diag(expected) - expected[:, 0], np.nan))
         if not factors:
             return np.zeros(many, dtype=np.bool_)
-        with np.errstate(all="ignore"):
-            mean = np.nanmedian(np.array(factors), axis=0)
-        return np.asarray(np.nan_to_num(mean, nan=np.inf) < np.log(BAYES_FACTOR))
+        far = np.median(np.nan_to_num(np.array(factors), nan=np.inf), axis=0)
+        return np.asarray(far < np.log(BAYES_FACTOR))
 
     def _stated(self, conditions: Conditions) -> Conditions:
         return self.original.get(conditions, conditions)
@@ -229,8 +228,8 @@ class Report:
         return tuple(
             Evidence(
                 point=self.lib.model.readings[r][1],
-                conditions=self._stated(self.lib.model.readings[r][0]), read=float(y[r]), expected=_shown(mine[r], most[r]),
-                healthy=_shown(healthy[r], most[r]), weight=float(weight[r]),
+                conditions=self._stated(self.lib.model.readings[r][0]), read=float(y[r]),
+                expected=_shown(mine[r], most[r]), healthy=_shown(healthy[r], most[r]), weight=float(weight[r]),
             )
             for r in best
         )  # fmt: skip

@@ -21,7 +21,7 @@ import numpy as np
 
 from benchkit.circuit.solution import Solution
 from benchkit.circuit.solve import Effort
-from benchkit.stage.conditions import Condition, Unpowered
+from benchkit.stage.conditions import Condition, TrimmerPosition, Unpowered
 from benchkit.stage.design import Design
 from benchkit.stage.draws import Array
 from benchkit.stage.faults import Fault
@@ -120,7 +120,7 @@ class UnitModel:
                 if isinstance(end, Condition):
                     readouts.append(Powered(design, self.coordinates, end, points, travel, rails))
                 else:
-                    trimmer = "unknown" if end.trimmer == "target" else end.trimmer
+                    trimmer: TrimmerPosition = "unknown" if end.trimmer == "target" else end.trimmer
                     readouts.append(UnpoweredPoints(design, self.coordinates, trimmer, end.ambient_c, points, travel))
             self._blocks.append(_Block(tuple(readouts), place))
             first = readouts[0]

@@ -145,6 +145,7 @@ class Answer(Vertical):
 
     def put(self, question: Question, refused: str = "", *, stacked: bool = False, arrows: bool = True) -> None:
         """Offer the answers of `question`; `refused` says why the last one could not be used."""
+        self._keep_half_typed()
         again = self._question is not None and self._question == question and bool(refused)
         self._question = question
         self._reason_for = None
@@ -167,6 +168,10 @@ class Answer(Vertical):
         if not refused:
             self._go_on_typing(question)
 
+    def _keep_half_typed(self) -> None:
+        if self._question is not None and self._reason_for is not None:
+            self._half_typed = (self._question.item, self._reason_for.value, self._entry.value)
+
     def _go_on_typing(self, question: Question) -> None:
         """Keep a reason that is half typed when the same question comes anew with more to choose from."""
         item, value, text = self._half_typed or ("", "", "")
@@ -180,8 +185,7 @@ class Answer(Vertical):
 
     def withdraw(self) -> None:
         """Take everything away: there is nothing to answer."""
-        if self._question is not None and self._reason_for is not None:
-            self._half_typed = (self._question.item, self._reason_for.value, self._entry.value)
+        self._keep_half_typed()
         self._question = None
         self._reason_for = None
         self._entry.value = ""
@@ -242,7 +246,7 @@ class Answer(Vertical):
         """Leave the reason again."""
         if event.key == "escape" and self._reason_for is not None and self._question is not None:
             event.stop()
-            self._half_typed = None
+            self._half_typed = self._reason_for = None
             self.put(self._question)
 
     def _complain(self, words: str) -> None:
