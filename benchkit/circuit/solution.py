@@ -114,7 +114,7 @@ class Solution:
         """Take units over from another solution of the same circuit, in place."""
         for key, value in other.values.items():
             mine = self.values[key]
-            if value.size > 1 or mine.size > 1:
+            if value.size > 1 or mine.size > 1 or value[0] != mine[0]:
                 if mine.size == 1:
                     mine = np.repeat(mine, self.units)
                 self.values[key] = mine = mine.copy() if not mine.flags.writeable else mine

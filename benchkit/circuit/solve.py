@@ -48,11 +48,12 @@ Effort = Literal["start", "borrow", "full"]
 CHUNK_UNITS = 2000
 """Units solved together: enough to outweigh the interpreter's overhead, few enough to stay in the cache."""
 _PILOT_FROM = 32
-_LENDERS = 10
+_LENDERS = 4
 _NEIGHBOURS = 2
-_TURNS = 4
+_TURNS = {"start": 0, "borrow": 5, "full": 1}
+"""How often units that failed try others' solutions."""
 _BORROWERS = 100
-_LENT_ITERATIONS = 25
+_LENT_ITERATIONS = 18
 _START_VBE_V = 0.6
 _START_VBC_V = -1.0
 
@@ -147,8 +148,7 @@ class Compiled:
             )
             x[:, part], converged[part] = outcome.x, outcome.done
             iterations[part], residual[part] = outcome.iterations, outcome.residual_a
-        if effort != "start":
-            self._borrow(plan, given, solver, x, converged, iterations, residual)
+        self._borrow(plan, given, solver, x, converged, iterations, residual, _TURNS[effort])
         failed = np.flatnonzero(~converged & (effort == "full"))
         for low in range(0, len(failed), CHUNK_UNITS):
             some = failed[low : low + CHUNK_UNITS]
@@ -160,7 +160,7 @@ class Compiled:
 
     def _borrow(
         self, plan: Plan, given: Mapping[str, Array], solver: LinearSolver, x: Array, converged: Mask,
-        iterations: Iterations, residual: Array,
+        iterations: Iterations, residual: Array, turns: int,
     ) -> None:  # fmt: skip
         """Let units that failed start from the solutions of others, many of them at once; what succeeds is kept.
 
@@ -168,16 +168,16 @@ class Compiled:
         when units of a kind stand beside each other.
         """
         solved, failed = np.flatnonzero(converged), np.flatnonzero(~converged)
-        if not len(solved):
+        if not len(solved) or not len(failed):
             return
         step = -(-len(solved) // _LENDERS)
-        for turn in range(_TURNS):
+        for turn in range(turns):
             # each turn, the nearest units of the rest and some from everywhere
-            everywhere = solved[turn * step // _TURNS :: step]
+            everywhere = solved[turn * step // turns :: step]
             for low in range(0, len(failed), _BORROWERS):
                 some = failed[low : low + _BORROWERS]
                 nearest = [np.argsort(np.abs(solved - unit), kind="stable") for unit in some]
-                near = np.array([solved[order[turn::_TURNS][:_NEIGHBOURS]] for order in nearest])
+                near = np.array([solved[order[turn::turns][:_NEIGHBOURS]] for order in nearest])
                 lenders = np.concatenate([np.tile(everywhere, (len(some), 1)), near], axis=1)
                 many = lenders.shape[1]
                 batch = _batch(plan, given, np.repeat(some, many), len(some) * many)

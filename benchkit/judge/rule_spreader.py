@@ -18,6 +18,7 @@ from benchkit.judge.rule_base import (
 from benchkit.measure.readings import Reading
 from benchkit.measure.uncertainty import combine, relative_uncertainty_of_ratio
 from benchkit.quantities import show
+from benchkit.stage.topologies import tied_divider
 from benchkit.stage.trimmer import authority, open_wiper
 from benchkit.stage.trimmer_report import trimmer_report
 
@@ -249,7 +250,9 @@ def _arm(facts: RuleFacts, arm: str) -> _Arm:
     low, high = marked.value * (1.0 - marked.fraction), marked.value * (1.0 + marked.fraction)
     ohm = marked.value
     trimmer = spreader.trimmer
-    if trimmer is not None and trimmer.arm in (arm, "between"):
+    # A tied divider's upper section is bridged: it works in the lower arm alone.
+    works_in = "lower" if tied_divider(facts.design) else None if trimmer is None else trimmer.arm
+    if trimmer is not None and works_in in (arm, "between"):
         track, fraction = trimmer.value
         # More bias: less resistance in the lower arm, more in the upper one.
         least, most = 0.0, 1.0

@@ -33,6 +33,9 @@ READABLE: Final = frozenset({"dc volts", "dc current", "ohms", "ohms 4-wire", "d
 HELD: Final = frozenset({"rail+", "rail-", "rail+.drop", "rail-.drop"})
 """Points that the supply holds: they tell nothing of the unit."""
 
+OVERLOAD_UNCERTAINTY: Final = 1e-3
+"""How sharp the end of a meter's range is taken to be where it reads overload, in the point's unit."""
+
 Named = tuple[AnyCondition, Point]
 
 
@@ -55,7 +58,7 @@ def observations(plan: Plan, state: State) -> tuple[Observation, ...]:
     for _, condition, reading in readings_kept(plan, state):
         value, uncertainty = reading.value, reading.standard_uncertainty
         if reading.overload:
-            value, uncertainty = (-math.inf if reading.negative else math.inf), 0.0
+            value, uncertainty = (-math.inf if reading.negative else math.inf), OVERLOAD_UNCERTAINTY
         if value is None or uncertainty is None:
             continue
         key = conditions_of(condition), reading.point

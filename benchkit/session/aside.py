@@ -50,7 +50,7 @@ class Aside:
         self._suspect: Suspect | None = None
         self._narrowing: asyncio.Task[None] | None = None
         self._suspecting: asyncio.Task[None] | None = None
-        self._keys: set[str] = set()
+        self._sections: set[str] = set()
         self.narrowing = False
         self.ready: deque[Event] = deque()
 
@@ -71,10 +71,12 @@ class Aside:
                 self._narrowing = asyncio.create_task(self._find_limits(), name="narrowing")
 
     def _only_if_new(self, action: Narrow) -> Narrow:
-        """Leave of a question what is about to be read, if no limits were ever narrowed under its condition."""
-        key = action.near[0].key if action.near else ""
-        near = () if key in self._keys else tuple(target for target in action.near if target.key == key)
-        self._keys.add(key)
+        """Leave of a question what is about to be read, if no limits were ever narrowed in its section."""
+        section, _, _ = action.item.partition(".")
+        near: tuple[Target, ...] = ()
+        if action.near and section not in self._sections:
+            self._sections.add(section)
+            near = tuple(target for target in action.near if target.key == action.near[0].key)
         return replace(action, near=near, later=())
 
     async def settled(self, timeout_s: float) -> None:

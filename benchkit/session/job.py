@@ -34,8 +34,8 @@ class Job:
         Units drawn for the limits.
     seed : int
     narrow_rarely : bool
-        Limits are narrowed once for each condition, before its first reading, instead of after each reading: for
-        whoever reads faster than the model thinks.
+        Limits are narrowed once for each section, after its first reading, for what is read under the condition that
+        comes next, instead of after each reading: for whoever reads faster than the model thinks.
     """
 
     design: Design

@@ -150,7 +150,7 @@ def fit(
     faults : sequence of Fault
         Each unit's hypothesis.
     z, joint : array, Joint
-        Where to start and the readings there.
+        Where to start and the readings there; the solutions in ``joint`` are taken over and altered.
     effort : "start" or "borrow"
         What the solver does for units that are hard; a step that it can't solve is halved.
     """

@@ -213,9 +213,7 @@ def _first_order(lib: Library, data: Data) -> tuple[Index, Array, Array]:
     return starts, promised, evidence
 
 
-def _fit(
-    lib: Library, data: Data, start: Index, pursue: Mask, effort: Effort = "start"
-) -> tuple[Fit, Index, Index]:
+def _fit(lib: Library, data: Data, start: Index, pursue: Mask, effort: Effort = "start") -> tuple[Fit, Index, Index]:
     which_set, which = np.nonzero(pursue)
     index = start[which_set, which]
     faults = [lib.faults[k] for k in which]

@@ -38,7 +38,7 @@ from benchkit.stage.observations import Conditions, Observation
 from benchkit.stage.points import points_of
 from benchkit.stage.suspicion import Evidence, Probe, Suspect, Suspicion
 from benchkit.stage.telling import Report
-from benchkit.stage.unit_model import layout_of
+from benchkit.stage.unit_model import layout_of, own
 
 __all__ = [
     "Evidence", "Observation", "Probe", "Suspect", "Suspicion", "default_candidates", "suspect", "suspect_many",
@@ -90,11 +90,11 @@ def suspect_many(
         began = time.perf_counter()
         original = held[members[0]][1]
         stated = [(original.get(conditions, conditions), point) for conditions, point in readings]
-        wanted = tuple(candidates) or default_candidates(design, stated)
-        told = tuple(pair for pair in wanted if pair not in stated)
         if not readings:
             answers = [_priors_only(design)] * len(members)
         else:
+            wanted = tuple(candidates) or default_candidates(design, stated)
+            told = tuple(pair for pair in wanted if pair not in stated)
             # conditions with rails held at one unit's readings will not come again
             lib = Library(design, layout_of(readings)) if original else library(design, layout_of(readings))
             data = _data(lib, [held[number][0] for number in members])
@@ -143,18 +143,13 @@ def _data(lib: Library, sets: Sequence[Sequence[Observation]]) -> Data:
     """Readings of several units, in the order of the library's layout; repeated ones are averaged."""
     shape = (len(sets), len(lib.model.readings))
     y, u = np.empty(shape), np.empty(shape)
-    column = {_key(*reading): number for number, reading in enumerate(lib.model.readings)}
+    column = {reading: number for number, reading in enumerate(lib.model.readings)}
     for row, observations in enumerate(sets):
         values: dict[int, list[Observation]] = {}
         for one in observations:
-            values.setdefault(column[_key(one.conditions, one.point)], []).append(one)
+            values.setdefault(column[own(one.conditions, one.point), one.point], []).append(one)
         for number, several in values.items():
             read = [one.value for one in several]
             y[row, number] = float(np.mean(read)) if np.isfinite(read).all() else read[-1]
             u[row, number] = max(several[-1].standard_uncertainty, 1e-12)
     return Data(y, u)
-
-
-def _key(conditions: Conditions, point: str) -> tuple[object, str]:
-    first = conditions[0]
-    return ((first.trimmer, first.ambient_c) if isinstance(first, Unpowered) else conditions, point)

@@ -96,7 +96,7 @@ class UnitModel:
     def __init__(self, design: Design, layout: Layout) -> None:
         self.design = design
         self.layout = layout
-        self.readings = tuple((conditions, point) for conditions, points in layout for point in points)
+        self.readings = tuple((own(conditions, point), point) for conditions, points in layout for point in points)
         extra: list[str] = []
         plan = []
         for number, (conditions, _) in enumerate(layout):
@@ -181,6 +181,14 @@ def answers(design: Design, condition: Condition | Unpowered, point: str) -> boo
         return True
     stage = build(design, Variant(fuses=condition.fuse_ohm is not None))
     return point == "heatsink" or point in stage.currents or point in stage.between
+
+
+def own(conditions: Conditions, point: str) -> Conditions:
+    """The conditions of one point's reading: unpowered points that share a circuit each name themselves."""
+    first = conditions[0]
+    if not isinstance(first, Unpowered):
+        return conditions
+    return (Unpowered(point=point, trimmer=first.trimmer, ambient_c=first.ambient_c),)
 
 
 def layout_of(readings: Sequence[tuple[Conditions, str]]) -> Layout:

@@ -1,8 +1,8 @@
 """How well suspects are named, on units that ngspice solved and our solver did not.
 
-Run as ``python -m tests.benchmarks.suspects_study [FOLDER]``, with ``--designs demo,few`` (or ``catalogue``, or names),
-``--per-fault``, ``--healthy``, ``--sampled``, ``--probed``, ``--seed``, ``--jobs``. The units (`tests.benchmarks.suspects_units`) are
-kept in the folder and found there again, so that an evaluation can be repeated without ngspice.
+Run as ``python -m tests.benchmarks.suspects_study [FOLDER]``; ``--help`` has the options; ``--designs`` takes "demo",
+"few", "catalogue" and names. The units (`tests.benchmarks.suspects_units`) are kept in the folder and found there, so
+that an evaluation can be repeated without ngspice. Figures to report come from a seed that nothing was tuned on.
 
 What is counted
 ---------------
@@ -241,6 +241,10 @@ def follow_probes(
 QUESTIONS = ("one condition", "two and unpowered", "probes")
 
 
+def _say(text: str) -> None:
+    print(text, flush=True)
+
+
 def study(
     designs: Sequence[Design],
     folder: Path,
@@ -253,7 +257,7 @@ def study(
     seed: int,
     jobs: int = 1,
     questions: Sequence[str] = QUESTIONS,
-    say: Callable[[str], None] = print,
+    say: Callable[[str], None] = _say,
 ) -> dict[str, Tally]:
     """Make or read the units of every design, ask, print what came out; returns the sums by question."""
     totals = {question: Tally() for question in questions}

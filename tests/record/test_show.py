@@ -10,7 +10,16 @@ from hypothesis import strategies as st
 from benchkit.events import Event, OutputOff, Resumed, StopAsked, Tripped
 from benchkit.record.show import DEFERENCE, as_json, as_text, clean
 from benchkit.record.summary import Summary, load_summary
-from tests.record.walks import closed, good_events, judged, opened, overridden_events, reading, write
+from tests.record.walks import (
+    closed,
+    good_events,
+    judged,
+    opened,
+    overridden_events,
+    reading,
+    suspicious_events,
+    write,
+)
 
 
 def gather(tmp_path: Path, events: list[Event]) -> Summary:
@@ -182,3 +191,54 @@ def test_the_form_for_programs(tmp_path: Path) -> None:
 def test_a_rule_may_have_any_unit(tmp_path: Path, unit: str) -> None:
     events = [*good_events(), judged("first-power.rule", "divider stiffness", "fail", 8.5, unit=unit, low=10.0)]
     assert "8.5" in as_text(gather(tmp_path, events))
+
+
+# -- what the model said of this unit -------------------------------------------------------------------------------
+
+WHY = "Every reading passed, but together they fit feed.upper: stuck low better than a good unit."
+
+
+def suspicious(tmp_path: Path) -> Summary:
+    return gather(tmp_path, closed(suspicious_events(), "undecided", why=WHY))
+
+
+def test_both_limits_stand_in_the_table_and_an_odd_reading_is_said_first(tmp_path: Path) -> None:
+    text = as_text(suspicious(tmp_path))
+    lines = text.splitlines()
+    heads = next(line for line in lines if "this unit" in line and "lowest" in line)
+    row = next(line for line in lines if line.startswith("  output"))
+    assert heads.index("lowest") < heads.index("highest") < heads.index("this unit") < heads.index("std. unc.")
+    assert "-20.00 mV" in row
+    assert "-1.000 mV to 2.000 mV" in row
+    assert row.endswith("odd for this unit")
+    first = text.split("What to know first")[1].split("No power yet")[0]
+    assert "ODD FOR THIS UNIT: Output at rest, output" in first
+    assert WHY in " ".join(first.split())
+    assert "Nothing failed" not in first
+    assert "in spite of it" not in text, "going on after an odd reading is no incident"
+    cold = text.split("No power yet")[1].split("First power")[0]
+    assert "this unit" not in cold, "no column where no reading has limits of its own"
+
+
+def test_the_suspects_stand_in_words_with_what_speaks_for_them(tmp_path: Path) -> None:
+    text = as_text(suspicious(tmp_path))
+    told = text.split("Suspects\n--------")[1]
+    assert "92 explanations of 2 readings, likeliest first: feed.upper stuck low." in told
+    assert "90 %  feed.upper stuck low" in told
+    assert "or feed.lower dead" in told
+    assert "output reads 12.30 mV, expected 12.00 mV; healthy would read 400.0 uV" in told
+    assert "1 fault could not have shown yet: driver.upper leaky." in told
+    assert "Extra reading 1" in text
+    assert "spread" in text
+
+
+def test_a_program_gets_them_too(tmp_path: Path) -> None:
+    found = json.loads(json.dumps(as_json(suspicious(tmp_path))))
+    result = next(one for one in found["results"] if one["subject"] == "output")
+    assert (result["low"], result["high"]) == (-0.02, 0.02)
+    assert (result["unit_low"], result["unit_high"], result["odd"]) == (-0.001, 0.002, True)
+    (suspicion,) = found["suspicions"]
+    assert suspicion["suspects"][0]["fault"] == "feed.upper: stuck low"
+    assert suspicion["unseen"] == ["driver.upper: leaky"]
+    assert suspicion["line"] == 11
+    assert found["verdict_why"] == WHY

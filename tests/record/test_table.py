@@ -10,7 +10,7 @@ import pytest
 from benchkit.errors import FileError
 from benchkit.record import table
 from benchkit.record.summary import load_summary
-from tests.record.walks import closed, good_events, opened, overridden_events, write
+from tests.record.walks import closed, good_events, opened, overridden_events, suspicious_events, write
 
 
 def read_back(text: str) -> list[dict[str, str]]:
@@ -80,3 +80,19 @@ def test_the_frame_has_numbers_as_numbers_and_times_with_a_zone(tmp_path: Path) 
     assert str(frame["value"].dtype) == "float64"
     assert str(frame["at"].dt.tz) == "UTC"
     assert frame["value"].isna().tolist() == [True, False]
+
+
+def test_this_units_limits_oddness_and_the_last_suspects_are_columns_at_the_end(tmp_path: Path) -> None:
+    assert table.COLUMNS[-4:] == ("unit_low", "unit_high", "odd", "suspects")
+    found = [
+        load_summary(write(tmp_path / "a.jsonl", closed(suspicious_events(), "undecided"))),
+        load_summary(write(tmp_path / "b.jsonl", closed(good_events()))),
+    ]
+    rows = read_back(table.csv_text(found))
+    output = next(row for row in rows if row["record"] == "a.jsonl" and row["point"] == "output")
+    assert (output["low"], output["high"], output["unit_low"], output["unit_high"], output["odd"]) == (
+        "-0.02", "0.02", "-0.001", "0.002", "True",
+    )  # fmt: skip
+    assert output["suspects"] == "feed.upper: stuck low 0.900; healthy 0.080"
+    other = next(row for row in rows if row["record"] == "b.jsonl" and row["point"] == "output")
+    assert (other["unit_low"], other["odd"], other["suspects"]) == ("", "False", "")

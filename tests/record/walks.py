@@ -15,13 +15,19 @@ from benchkit.events import (
     Decided,
     Event,
     Judged,
+    Narrowed,
+    NarrowedLimits,
     Noted,
     OutputOff,
     PointLimits,
     Predicted,
+    ProbeNamed,
     ReadingTaken,
     SupplySet,
     SupplyState,
+    Suspected,
+    SuspectEvidence,
+    SuspectNamed,
     Verdict,
     WalkOpened,
     to_payload,
@@ -161,6 +167,46 @@ def overridden_events() -> list[Event]:
         Decided(item=item, choice="go on", reason="the front end is not fitted"),
         judged("first-power.offset-rule", "offset before load", "fail", 0.0199),
     ]
+    return events
+
+
+def suspicious_events() -> list[Event]:
+    """The output is odd for this unit, suspects are asked, an extra reading is taken, and the operator goes on."""
+    events = good_events()
+    item = "first-power.output.output"
+    condition = "+12 V -12 V, trimmer least, cold"
+    limits = NarrowedLimits(point="output", condition=condition, unit="V", low=-0.001, high=0.002)
+    evidence = SuspectEvidence(
+        point="output", condition=condition, unit="V", read=0.0123, expected=0.012, healthy=0.0004, weight=4.2
+    )
+    events[7:9] = [
+        Narrowed(item="cold.rails.ohm.rails", after=4, limits=(limits,), readings=1, units=2000, seed=1, seconds=0.2),
+        reading(item, "output", 0.0123),
+        judged(
+            item, "output", "pass", 0.0123, probability=0.99, unit_low=-0.001, unit_high=0.002, odd=True,
+            why="Inside. Odd for this unit: its readings so far lead to -1.000 mV to 2.000 mV.",
+        ),
+        Suspected(
+            item=item,
+            after=10,
+            suspects=(
+                SuspectNamed(
+                    fault="feed.upper: stuck low", probability=0.9, alike=("feed.lower: dead",), evidence=(evidence,)
+                ),
+                SuspectNamed(fault="healthy", probability=0.08),
+            ),
+            probe_next=(ProbeNamed(point="spread", condition=condition, gain_bits=0.4, why="It tells."),),
+            unseen_count=1,
+            unseen=("driver.upper: leaky",),
+            hypotheses=92,
+            readings=2,
+            seconds=2.0,
+        ),
+        Decided(item=item, choice="probe"),
+        reading("first-power.extra-1.spread", "spread", 1.9),
+        judged("first-power.extra-1.spread", "spread", "pass", 1.9, low=1.8, high=2.1),
+        Decided(item=item, choice="go on"),
+    ]  # fmt: skip
     return events
 
 

@@ -12,15 +12,7 @@ reading rests on picoamperes, and both programs' sixteen digits show: 12 V acros
 A reading on which bare voltages differ by more than half of what is allowed is therefore taken as a technician would
 take it, with the 10 Mohm of a voltmeter across that point, by both programs. These are listed too.
 
-The values (parts, trimmer, fault) are ours; the voltages are ngspice's. A start (`.nodeset`) forces
-nothing.
-
-* Healthy units are many copies in a deck, which begins at our solution rounded to 1 mV. A servo's knee of 10 uV is too
-  narrow to be found from there, so a first run has a knee of 10 mV; the stage is moved to where the servo sends the
-  same current in the narrow knee, and the second run solves the circuit as it is. A deck that fails is halved until the
-  copy stands alone, and is tried with all that ngspice has.
-* A faulty unit is a deck of its own, its junctions plain (see `tests.reference.ngspice.deck`): `ATTEMPTS` says from
-  where and with which tolerances it is tried, in turn, until one has a solution. What none can solve is listed.
+The values (parts, trimmer, fault) are ours; the voltages are ngspice's (`tests.reference.asking`).
 
 ``python -m tests.reference.agreement`` runs all of it (a quarter of an hour on two cores) and writes the results anew:
 ``data/agreement.bin``, ``data/unsolved_by_ngspice.txt`` and ``data/read_with_a_meter.txt``. With ``check`` it compares
@@ -32,7 +24,6 @@ from __future__ import annotations
 import argparse
 import io
 import lzma
-import subprocess
 import time
 from collections.abc import Mapping, Sequence
 from concurrent.futures import ProcessPoolExecutor
@@ -45,7 +36,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from benchkit.circuit.equations import SUPPLY_KNEE_OHM, SUPPLY_LEAK_S
-from benchkit.circuit.netlist import GROUND, Netlist, Supply
+from benchkit.circuit.netlist import GROUND, Supply
 from benchkit.stage.conditions import Condition
 from benchkit.stage.design import Design
 from benchkit.stage.draws import draw, nominal, seeds
@@ -53,9 +44,8 @@ from benchkit.stage.faults import Fault, faults_of
 from benchkit.stage.operate import Solved, solve_units
 from benchkit.stage.points import points_of
 from benchkit.stage.reach import full_rails
-from benchkit.stage.runs import NO_METER_OHM, compiled
-from benchkit.stage.topologies import VOLTMETER_OHM, Variant, build
-from tests.reference import ngspice
+from benchkit.stage.topologies import build
+from tests.reference.asking import Answer, ask, ask_one_by_one, our_reading, their_reading
 from tests.stage.catalogue import catalogue
 
 Array = NDArray[np.float64]
@@ -65,29 +55,12 @@ UNSOLVED = Path(__file__).parent / "data" / "unsolved_by_ngspice.txt"
 METERED = Path(__file__).parent / "data" / "read_with_a_meter.txt"
 UNITS = 50
 SEED = 3
-COPIES = 40
-"""Copies in a deck at first."""
 HEALTHY_V, FAULTY_V, FAULTY_A = 0.2e-6, 2e-6, 20e-9
 """What committed results are rounded to."""
 RELATIVE, ABSOLUTE_V = 1e-6, 1e-6
 FAULTY_RELATIVE, FAULTY_ABSOLUTE_V, FAULTY_ABSOLUTE_A = 1e-4, 20e-6, 2e-6
 LIMIT_A = 0.05
 RAILS_SHARE = 0.4
-WITH_METERS = Variant(meters=True)
-WIDE_KNEE, KNEE = "10e-3", "10e-6"
-_OPTIONS = ".options reltol=1e-9 abstol=1e-15 vntol=1e-12 gmin=1e-12 itl1={most} itl2={most} numdgt=15"
-_QUICK, _PATIENT = 60, 2000
-TIGHT, LOOSE, LOOSEST = (
-    f".options reltol={relative} abstol={amps} vntol={volts} gmin=1e-18 itl1=100 itl2=200 numdgt=15"
-    for relative, amps, volts in (("1e-9", "1e-15", "1e-12"), ("1e-7", "1e-12", "1e-9"), ("1e-6", "1e-12", "1e-6"))
-)
-DIRECTLY = " gminsteps=0 srcsteps=0"
-"""Newton's method alone; without it ngspice goes on to steps of conductance, of sources and of time."""
-ATTEMPTS = (
-    (3, TIGHT + DIRECTLY), (13, TIGHT + DIRECTLY), (3, LOOSE + DIRECTLY), (13, LOOSE + DIRECTLY),
-    (13, LOOSEST + DIRECTLY), (13, LOOSE), (None, LOOSEST),
-)  # fmt: skip
-"""Digits (after the point) of our solution that a faulty unit's deck begins at, None for no start, and options."""
 _NOTHING = np.iinfo(np.int32).min
 """In place of a rounded voltage that ngspice has not."""
 
@@ -111,146 +84,6 @@ def limited(design: Design) -> Condition:
 def faulty(design: Design, faults: Sequence[Fault]) -> Solved:
     """Our solution of the nominal unit with each of some faults."""
     return solve_units(design, nominal(design), limited(design), list(faults), loading="none")
-
-
-@dataclass(frozen=True)
-class Answer:
-    """ngspice's answer: voltages by node, shape (copies,), NaN where it has none."""
-
-    volts: dict[str, Array]
-
-    @property
-    def solved(self) -> NDArray[np.bool_]:
-        """Who has a solution."""
-        return np.isfinite(next(iter(self.volts.values())))
-
-
-def ask(design: Design, ours: Solved) -> Answer:
-    """Let ngspice solve the units of a solution of ours."""
-    netlist = build(design).netlist
-    values = {key: np.broadcast_to(value, ours.units) for key, value in ours.solution.values.items()}
-    start = {node: np.round(ours.solution.voltage(node), 3) for node in netlist.nodes()}
-    everyone = np.arange(ours.units)
-    if design.feed.lower.kind != "servo":
-        return Answer(_solve(netlist, values, start, KNEE, everyone))
-    wide = _solve(netlist, values, start, WIDE_KNEE, everyone)
-    off_v = wide["output"] - values["feed.lower.rest_v"]
-    near = np.abs(off_v) < 5.0 * float(WIDE_KNEE)
-    move_v = np.where(near, (float(KNEE) / float(WIDE_KNEE) - 1.0) * off_v, 0.0)
-    start = {
-        node: np.where(np.isfinite(volts), volts + (0.0 if node.startswith(("rail", "heatsink")) else move_v), at)
-        for (node, volts), at in zip(wide.items(), start.values(), strict=True)
-    }
-    return Answer(_solve(netlist, values, start, KNEE, everyone))
-
-
-def ask_one_by_one(design: Design, ours: Solved, which: Sequence[int] | None = None) -> Answer:
-    """Let ngspice solve units of a solution of ours, each in a deck of its own with plain junctions."""
-    nodes = build(design).netlist.nodes()
-    table = np.full((len(nodes), ours.units), np.nan)
-    for unit in range(ours.units) if which is None else which:
-        values = {key: float(value[unit if value.size > 1 else 0]) for key, value in ours.solution.values.items()}
-        start = {node: float(ours.solution.voltage(node)[unit]) for node in nodes}
-        found = _alone(build(design).netlist, values, start)
-        if found is not None:
-            table[:, unit] = [found[node] for node in nodes]
-    return Answer(dict(zip(nodes, table, strict=True)))
-
-
-def _alone(netlist: Netlist, values: Mapping[str, float], start: Mapping[str, float]) -> dict[str, float] | None:
-    """Voltages of one circuit in a deck of its own, by the first attempt that has a solution."""
-    text, names = ngspice.deck(netlist, [values], plain_junctions=True)
-    for digits, options in ATTEMPTS:
-        lines = [options if line.startswith(".options") else line for line in text.splitlines()]
-        if digits is not None:
-            lines = [line for line in lines if not line.startswith(".nodeset")]
-            at = lines.index(".control")
-            lines[at:at] = [f".nodeset v({names[node]}_0)={volts:.{digits}f}" for node, volts in start.items()]
-        if DIRECTLY in options:
-            lines.insert(lines.index(".control") + 1, "optran 1 0 0 0 0 0")
-        try:
-            found, _ = ngspice.run_text("\n".join(lines) + "\n", timeout_s=10.0)
-        except (RuntimeError, subprocess.TimeoutExpired):
-            continue
-        return {node: found[f"{name}_0"] for node, name in names.items()}
-    return None
-
-
-def _metered(
-    design: Design, broken: Solved, unit: int, point: str
-) -> tuple[Netlist, dict[str, float], dict[str, float]]:
-    """The circuit with a voltmeter across one point: netlist, values, and our bare voltages to begin at."""
-    netlist = build(design, WITH_METERS).netlist
-    values = {key: float(value[unit if value.size > 1 else 0]) for key, value in broken.solution.values.items()}
-    values |= {name: NO_METER_OHM for name in netlist.elements if name.startswith("meter.")}
-    values[f"meter.{point}"] = VOLTMETER_OHM
-    return netlist, values, {node: float(broken.solution.voltage(node)[unit]) for node in netlist.nodes()}
-
-
-def their_reading(design: Design, broken: Solved, unit: int, point: str) -> float:
-    """What a voltmeter shows across a point of a unit, by ngspice; NaN where it has no solution."""
-    found = _alone(*_metered(design, broken, unit, point))
-    if found is None:
-        return float("nan")
-    red, black = build(design).between[point]
-    return found.get(red, 0.0) - found.get(black, 0.0)
-
-
-def our_reading(design: Design, broken: Solved, unit: int, point: str) -> float:
-    """What a voltmeter shows across a point of a unit, by us; NaN where we have no solution."""
-    _, values, start = _metered(design, broken, unit, point)
-    solution = compiled(design, WITH_METERS).solve(values, 1, start)
-    return float(solution.between(*build(design).between[point])[0]) if solution.converged[0] else float("nan")
-
-
-def _solve(
-    netlist: Netlist, values: Mapping[str, Array], start: Mapping[str, Array], knee: str, which: NDArray[np.intp]
-) -> dict[str, Array]:
-    nodes = netlist.nodes()
-    table = np.full((len(nodes), len(which)), np.nan)
-
-    def halved(some: NDArray[np.intp]) -> None:
-        found = _run(netlist, values, start, knee, some, _QUICK)
-        if found is None and len(some) > 1:
-            halved(some[: len(some) // 2])
-            halved(some[len(some) // 2 :])
-            return
-        if found is None:
-            found = _run(netlist, values, start, knee, some, _PATIENT)
-        if found is None:
-            found = _run(netlist, values, {}, knee, some, _PATIENT)
-        if found is not None:
-            table[:, some] = found
-
-    for low in range(0, len(which), COPIES):
-        halved(which[low : low + COPIES])
-    return dict(zip(nodes, table, strict=True))
-
-
-def _run(
-    netlist: Netlist, values: Mapping[str, Array], start: Mapping[str, Array], knee: str, some: NDArray[np.intp],
-    most: int,
-) -> Array | None:  # fmt: skip
-    copies = [{key: float(value[copy]) for key, value in values.items()} for copy in some]
-    text, names = ngspice.deck(netlist, copies)
-    lines = text.splitlines()
-    if start:
-        lines = [line for line in lines if not line.startswith(".nodeset")]
-    begin = [
-        f".nodeset v({names[node]}_{k})={volts[copy]:.13g}"
-        for k, copy in enumerate(some)
-        for node, volts in start.items()
-    ]
-    at = lines.index(".control")
-    # What takes long (time steps instead of conductance and source steps) only for a copy that stands alone.
-    quick = ["optran 1 0 0 0 0 0"] if most == _QUICK else []
-    text = "\n".join([*lines[:at], *begin, lines[at], *quick, *lines[at + 1 :]]) + "\n"
-    text = text.replace(ngspice.OPTIONS, _OPTIONS.format(most=most), 1).replace("/10e-6))", f"/{knee}))")
-    try:
-        found, _ = ngspice.run_text(text, timeout_s=60.0)
-    except (RuntimeError, subprocess.TimeoutExpired):
-        return None
-    return np.array([[found[f"{names[node]}_{k}"] for k in range(len(some))] for node in netlist.nodes()])
 
 
 def points(design: Design, ours: Solved, answer: Answer) -> dict[str, Array]:
@@ -460,10 +293,14 @@ def main() -> None:
     parser = argparse.ArgumentParser(description=main.__doc__)
     parser.add_argument("what", choices=["make", "check"], nargs="?", default="make")
     parser.add_argument("--jobs", type=int, default=2)
-    parser.add_argument("--only", help="make designs whose name has this in it, and keep the others")
+    parser.add_argument("--only", help="designs whose name has this in it; the others are kept")
+    parser.add_argument("--unsolved", action="store_true", help="designs that have a line in the list of the unsolved")
     given = parser.parse_args()
     names = [name for name in catalogue() if given.only is None or given.only in name]
-    references = dict(committed()) if given.what == "check" or given.only else {}
+    if given.unsolved:
+        listed_now = {line.split(":")[0] for line in listed(UNSOLVED)}
+        names = [name for name in names if name in listed_now]
+    references = dict(committed()) if given.what == "check" or given.only or given.unsolved else {}
     if given.what == "make":
         with ProcessPoolExecutor(given.jobs) as pool:
             for name, reference, seconds in pool.map(_made, names):

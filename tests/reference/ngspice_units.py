@@ -10,9 +10,9 @@ How
 * Starts (`.nodeset`) force nothing. A servo's knee of 10 uV is too narrow to be found from far away: a first round with
   a knee of 1 mV finds the stage, is moved to where the servo stands in the narrow knee, and the second round solves the
   circuit as it is.
-* A meter of 10 Mohm lies across the point that is read. Three times the stage is solved with meters of various resistances
-  at all points (equal ones could cancel each other). A point that moves by less than a twentieth of the noise each time
-  is read as it is; every other one is solved once more with its own meter alone.
+* A meter of 10 Mohm lies across the point that is read. Three times the stage is solved with meters of various
+  resistances at all points (equal ones could cancel each other). A point that moves by less than a twentieth of the
+  noise each time is read as it is; every other one is solved once more with its own meter alone.
 * The range of an ohms reading is the instrument's setting and is asked of the stage; that a reading beyond it is an
   overload is applied to ngspice's voltage here.
 * Noise: 0.03 % of the reading and 20 uV, standard deviations that add up; on an ohms range the 20 uV are those of the

@@ -145,7 +145,7 @@ def _broken(*arguments: object) -> None:
     raise ZeroDivisionError
 
 
-def test_who_reads_faster_than_the_model_thinks_is_told_once_for_each_condition() -> None:
+def test_who_reads_faster_than_the_model_thinks_is_told_once_for_each_section() -> None:
     run = Run()
     session = run_made(run)
     answers: list[str] = []
@@ -161,7 +161,7 @@ def test_who_reads_faster_than_the_model_thinks_is_told_once_for_each_condition(
 
     session.job.narrow_rarely = True
     asyncio.run(script())
-    assert answers == ["a", "c"]
+    assert answers == ["a.1", "b.2"]
 
 
 def run_made(run: Run) -> Any:
@@ -176,10 +176,10 @@ def _target(key: str, point: str) -> Target:
 
 
 NARROWS = (
-    Narrow(item="a", after=1, known=(), near=(_target("k", "x"), _target("l", "x")), later=(_target("m", "x"),)),
-    Narrow(item="b", after=2, known=(), near=(_target("k", "y"), _target("l", "x"))),
-    Narrow(item="c", after=3, known=(), near=(_target("l", "x"),)),
-    Narrow(item="d", after=4, known=(), near=(), later=(_target("m", "x"),)),
+    Narrow(item="a.1", after=1, known=(), near=(_target("k", "x"), _target("l", "x")), later=(_target("m", "x"),)),
+    Narrow(item="a.2", after=2, known=(), near=(_target("l", "x"),)),
+    Narrow(item="b.1", after=3, known=(), near=(), later=(_target("m", "x"),)),
+    Narrow(item="b.2", after=4, known=(), near=(_target("m", "x"),)),
 )
 
 
