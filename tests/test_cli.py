@@ -243,6 +243,61 @@ def test_readings_that_cannot_be_read(run: Run, tmp_path: Path) -> None:
         assert words in sentence
 
 
+SPREADS = {"healthy.csv": "1.149", "open.csv": "0.6866"}
+"""What the spread of the small demonstration reads, whole and with its lower arm open."""
+
+
+def _readings(tmp_path: Path) -> list[Path]:
+    paths = []
+    for name, volts in SPREADS.items():
+        paths.append(tmp_path / name)
+        paths[-1].write_text(
+            "point,value,unit,positive,negative,limit,trimmer\n"
+            f"spread,{volts},V,4,-4,50 mA,least\noutput,3.1 mV,V,4,-4,50 mA,least\n",
+            encoding="utf-8",
+        )
+    return paths
+
+
+def test_judging_several_files_for_programs(run: Run, tmp_path: Path) -> None:
+    """One object a line, in the files' order; any file that doesn't pass decides the status."""
+    paths = _readings(tmp_path)
+    status, out, err = run("judge", "breadboard", *paths, "--json", "--units", "200")
+    assert (status, err) == (1, "")
+    lines = out.splitlines()
+    assert len(lines) == len(paths)
+    healthy, opened = (json.loads(line) for line in lines)
+    for found in (healthy, opened):
+        assert list(found) == ["verdict", "readings", "rules", "suspects", "probe_next", "unseen"]
+        assert sum(one["probability"] for one in found["suspects"]) == pytest.approx(1.0)
+    assert [found["readings"][0]["value"] for found in (healthy, opened)] == [float(v) for v in SPREADS.values()]
+    assert (healthy["verdict"], opened["verdict"]) == ("pass", "fail")
+    assert {key: healthy["suspects"][0][key] for key in ("part", "fault")} == {"part": "healthy", "fault": "none"}
+    first = opened["suspects"][0]
+    assert {"part": "spreader.lower", "fault": "open"} in [
+        {"part": first["part"], "fault": first["fault"]}, *first["alike"],
+    ]  # fmt: skip
+    assert run("judge", "breadboard", paths[0], "--json", "--units", "200")[0] == 0
+
+
+def test_judging_several_files_for_people(run: Run, tmp_path: Path) -> None:
+    paths = _readings(tmp_path)
+    status, out, _ = run("judge", "breadboard", *paths, "--units", "200")
+    assert status == 1
+    heads = [f"{paths[0]}: PASS", f"{paths[1]}: FAIL"]
+    assert [line for line in out.splitlines() if line in heads] == heads
+    assert "spreader.lower open" in out
+    assert out.count("Not tested") == 2
+
+
+def test_one_wrong_file_among_several_judges_none(run: Run, tmp_path: Path) -> None:
+    paths = _readings(tmp_path)
+    paths[1].write_text("point,value,unit\nspread,many,V\n", encoding="utf-8")
+    status, out, err = run("judge", "breadboard", *paths, "--json")
+    assert (status, out) == (2, "")
+    assert str(paths[1]) in one_sentence(err)
+
+
 # -- records --------------------------------------------------------------------------------------------------------
 
 

@@ -17,10 +17,16 @@ from benchkit.events import (
     Answered,
     Event,
     Judged,
+    Narrowed,
+    NarrowedLimits,
     Noted,
     Predicted,
+    ProbeNamed,
     ReadingTaken,
     SupplyState,
+    Suspected,
+    SuspectEvidence,
+    SuspectNamed,
     Tripped,
     from_payload,
     to_payload,
@@ -151,3 +157,52 @@ def test_any_payload_is_an_event_or_an_error_of_ours(payload: dict[str, Any]) ->
         except BenchkitError:
             continue
         assert event.name == name
+
+
+NUMBERS = st.floats(allow_nan=False, allow_infinity=False)
+OPEN = st.none() | NUMBERS
+
+
+@given(st.lists(st.tuples(st.text(), st.text(), OPEN, OPEN), max_size=4), st.integers(0, 10**6), st.text())
+def test_narrowed_limits_come_back(parts: list[Any], after: int, problem: str) -> None:
+    limits = tuple(
+        NarrowedLimits(point=point, condition=condition, unit="V", low=low, high=high)
+        for point, condition, low, high in parts
+    )
+    event = Narrowed(item="i", after=after, limits=limits, readings=3, units=9, seed=1, seconds=0.5, problem=problem)
+    assert through_json(event) == event
+
+
+@given(st.lists(st.tuples(st.text(), st.floats(0.0, 1.0), OPEN, OPEN, NUMBERS), max_size=4), st.lists(st.text()))
+def test_suspects_come_back(parts: list[Any], unseen: list[str]) -> None:
+    suspects = tuple(
+        SuspectNamed(
+            fault=fault,
+            probability=probability,
+            alike=(fault,),
+            evidence=(
+                SuspectEvidence(
+                    point="p", condition="c", unit="V", read=read, expected=expected, healthy=None, weight=weight
+                ),
+            ),
+        )
+        for fault, probability, read, expected, weight in parts
+    )
+    event = Suspected(
+        item="i",
+        after=3,
+        suspects=suspects,
+        probe_next=(ProbeNamed(point="p", condition="c", gain_bits=0.5, why="w"),),
+        unseen_count=len(unseen),
+        unseen=tuple(unseen),
+    )
+    assert through_json(event) == event
+
+
+def test_a_verdict_from_before_there_were_narrowed_limits_can_be_read() -> None:
+    payload = to_payload(Judged(item="i", subject="s", verdict="pass", value=1.0, unit="V", low=None, high=None))
+    for newer in ("unit_low", "unit_high", "odd"):
+        del payload[newer]
+    read = from_payload("judged", payload)
+    assert isinstance(read, Judged)
+    assert (read.unit_low, read.unit_high, read.odd) == (None, None, False)

@@ -18,8 +18,8 @@ The recipe, in the order in which a unit meets it
 A solution counts only when every law was linearised where it is evaluated, and each node's currents add up to less than
 1e-7 of the sum of their magnitudes + 10 pA. Units are done one by one; those that are done leave the batch. An accepted
 unit still goes on until it passes with 0.01 pA in place of 10 pA and a step moves no node by more than `_FINAL_STEP_V`,
-or by next to nothing: 10 pA are millivolts at a node that hardly anything holds. After `_MOST_POLISHING` steps it is
-left as it is.
+or by next to nothing: 10 pA are millivolts at a node that hardly anything holds. After `_MOST_POLISHING` steps, or
+`_MOST_WANDERING` on which it doesn't pass, it is left as it was.
 """
 
 from __future__ import annotations
@@ -61,6 +61,7 @@ _MOST_FAILURES = 12
 _FINAL_STEP_V = 2e-4
 _NO_STEP_V = 1e-7
 _MOST_POLISHING = 8
+_MOST_WANDERING = 32
 
 Iterations = NDArray[np.int64]
 
@@ -145,16 +146,16 @@ def iterate(
     plan, units = batch.plan, batch.units
     outcome = Outcome(x.copy(), np.zeros(units, np.bool_), np.zeros(units, np.int64), np.full(units, np.inf))
     live: Index = np.arange(units)
-    since = np.zeros(units, np.int64)  # steps since a unit was accepted
-    for iteration in range(most + 1 + _MOST_POLISHING):
+    spent = np.zeros(units, np.int64)  # on a unit since it was first accepted
+    for iteration in range(most + 1 + _MOST_WANDERING):
         linear = batch.evaluate(x, arguments, start=iteration == 0)
         residual = plan.sum_currents(linear.currents, x, batch.volts)
         if shunt is not None and anchor is not None:
             residual[: plan.nodes] += shunt * (x[: plan.nodes] - anchor[: plan.nodes])
         done, fine, exact = _accepted(batch, linear, x, residual)
         outcome.iterations[live] = iteration
-        outcome.residual_a[live] = np.abs(residual[: plan.nodes]).max(axis=0)
         kept = done | ~outcome.done[live]
+        outcome.residual_a[live[kept]] = np.abs(residual[: plan.nodes, kept]).max(axis=0)
         outcome.done[live] |= done
         outcome.x[:, live[kept]] = x[:, kept]
         if exact.all() or (iteration >= most and not outcome.done[live].any()):
@@ -178,8 +179,8 @@ def iterate(
         longest_v = np.abs(step[: plan.nodes]).max(axis=0)
         polished = done & finite & (longest_v < _FINAL_STEP_V)
         outcome.x[:, live[polished]] = x[:, polished]
-        since[live] += outcome.done[live]
-        stays = finite & ~(polished & (fine | (longest_v < _NO_STEP_V))) & (since[live] < _MOST_POLISHING)
+        spent[live] += outcome.done[live] * np.where(done, _MOST_WANDERING // _MOST_POLISHING, 1)
+        stays = finite & ~(polished & (fine | (longest_v < _NO_STEP_V))) & (spent[live] < _MOST_WANDERING)
         index = np.flatnonzero(stays if iteration < most else stays & outcome.done[live])
         if not len(index):
             break

@@ -5,6 +5,7 @@ A healthy unit never sounds proven: whatever is said of it names what the readin
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from typing import Final
 
 from benchkit import quantities
@@ -59,11 +60,12 @@ def _value(value: float | None, unit: str) -> str:
     return "overload" if value is None else quantities.show(value, unit)
 
 
-def alike_words(suspect: SuspectNamed) -> str:
-    """Name the faults that these readings can't tell from the suspect, all equally likely; "" where there are none."""
+def alike_words(suspect: SuspectNamed, among: Sequence[SuspectNamed] = ()) -> str:
+    """Name the faults that these readings can't tell from the suspect, with their chances where `among` has them."""
+    chances = {one.fault: f" ({chance_words(one.probability)})" for one in among}
     if not suspect.alike:
         return ""
-    return "or " + " or ".join(fault_words(fault) for fault in suspect.alike)
+    return "or " + " or ".join(fault_words(fault) + chances.get(fault, "") for fault in suspect.alike)
 
 
 def evidence_for(suspect: SuspectNamed) -> tuple[str, ...]:
@@ -73,8 +75,14 @@ def evidence_for(suspect: SuspectNamed) -> tuple[str, ...]:
 
 
 def shown_suspects(suspected: Suspected) -> tuple[SuspectNamed, ...]:
-    """Return the few suspects that are worth a line."""
-    return tuple(one for one in suspected.suspects[:SHOWN] if one.probability >= LEAST_SHARE) or suspected.suspects[:1]
+    """Return the few suspects that are worth a line; one that was named with an earlier one needs none of its own."""
+    shown: list[SuspectNamed] = []
+    named: set[str] = set()
+    for one in suspected.suspects:
+        if one.probability >= LEAST_SHARE and one.fault not in named and len(shown) < SHOWN:
+            shown.append(one)
+            named.update(one.alike)
+    return tuple(shown) or suspected.suspects[:1]
 
 
 def heading_words(suspected: Suspected) -> str:

@@ -147,7 +147,7 @@ def _suspicion(suspicion: Suspicion) -> Iterator[str]:
     for one in suspect_words.shown_suspects(answer):
         name = clean(suspect_words.fault_words(one.fault))
         yield from _wrapped(f"{suspect_words.chance_words(one.probability)}  {name}", "    ")
-        for line in (suspect_words.alike_words(one), *suspect_words.evidence_for(one)):
+        for line in (suspect_words.alike_words(one, answer.suspects), *suspect_words.evidence_for(one)):
             if line:
                 yield from _wrapped(clean(line), "        ")
     unseen = suspect_words.unseen_words(answer, names=6)

@@ -23,6 +23,8 @@ from benchkit.procedure.actions import Action, Narrow, Suspect, Target
 from benchkit.session import this_unit
 from benchkit.session.job import Job
 from benchkit.session.threads import in_thread
+from benchkit.stage.conditions import Unpowered
+from benchkit.stage.observations import Conditions
 
 
 class Aside:
@@ -51,6 +53,7 @@ class Aside:
         self._narrowing: asyncio.Task[None] | None = None
         self._suspecting: asyncio.Task[None] | None = None
         self._sections: set[str] = set()
+        self._conditions: set[Conditions] = set()
         self.narrowing = False
         self.ready: deque[Event] = deque()
 
@@ -71,13 +74,21 @@ class Aside:
                 self._narrowing = asyncio.create_task(self._find_limits(), name="narrowing")
 
     def _only_if_new(self, action: Narrow) -> Narrow:
-        """Leave of a question what is about to be read, if no limits were ever narrowed in its section."""
+        """Leave of a question what is about to be read, if no limits were ever narrowed in its section.
+
+        Readings under conditions that nothing was narrowed under are left out: each would cost ensembles of its own.
+        """
         section, _, _ = action.item.partition(".")
         near: tuple[Target, ...] = ()
         if action.near and section not in self._sections:
             self._sections.add(section)
             near = tuple(target for target in action.near if target.key == action.near[0].key)
-        return replace(action, near=near, later=())
+            self._conditions |= {target.conditions for target in near}
+        known = tuple(
+            one for one in action.known
+            if isinstance(one.conditions[0], Unpowered) or one.conditions in self._conditions
+        )  # fmt: skip
+        return replace(action, known=known, near=near, later=())
 
     async def settled(self, timeout_s: float) -> None:
         """Wait until no suspects are being worked out, or until the time is over."""

@@ -18,7 +18,6 @@ import asyncio
 import contextlib
 from collections import deque
 from collections.abc import Callable
-from concurrent.futures import Future
 from dataclasses import replace
 from typing import Any
 
@@ -51,7 +50,7 @@ from benchkit.procedure.actions import (
     Write,
 )
 from benchkit.procedure.state import Phase, State
-from benchkit.session import asking, measuring, powering, predictions
+from benchkit.session import asking, ending, measuring, powering, predictions
 from benchkit.session.aside import Aside
 from benchkit.session.clock import Clock
 from benchkit.session.front import Front, Reply
@@ -61,9 +60,6 @@ from benchkit.session.threads import in_thread
 from benchkit.session.views import Headings, Moment, Painter
 
 HEARTBEAT_S = 0.2
-
-OFF_S = 6.0
-"""How long "off" may take altogether before the words are that nothing is known (s)."""
 
 SUSPECTS_S = 30.0
 """How long the end of a walk waits for suspects that are still being worked out; the supply is off by then (s)."""
@@ -81,7 +77,7 @@ class Session:
         self.state = State()
         self.moment = Moment()
         self.seq = 0
-        self._pushed: deque[Push | KeeperDied | _Asked] = deque()
+        self.pushed: deque[Push | KeeperDied | _Asked] = deque()
         self._woken = asyncio.Event()
         self._loop = asyncio.get_running_loop()
         self._truth_noted = False
@@ -140,28 +136,10 @@ class Session:
             return await self._run(first)
         except BaseException as error:
             if not self.job.manual_supply:
-                await self._secure(f"an error of the session: {type(error).__name__}")
+                await ending.secure(self, f"an error of the session: {type(error).__name__}")
             raise
         finally:
             pulse.cancel()
-
-    async def _secure(self, reason: str) -> None:
-        """Switch off on the way out of an error, by the keeper or, if that has gone, by a second one."""
-        asks: tuple[Callable[[], Future[OutputOff]], ...] = (
-            lambda: self.keeper.off(reason),
-            lambda: self.keeper.after_death(self.job.setup),
-        )
-        for ask in asks:
-            if self.state.energised == "off" and self.keeper.alive:
-                return
-            with contextlib.suppress(Exception):
-                off: asyncio.Future[OutputOff] = asyncio.wrap_future(ask())
-                self.last_off = await asyncio.wait_for(off, OFF_S)
-            for push in self._pushed:
-                if isinstance(push, Push) and isinstance(push.event, OutputOff):
-                    self.last_off = push.event
-            if self.last_off is not None and self.last_off.confirmed:
-                return
 
     # -- the loop ----------------------------------------------------------------------------------------------
 
@@ -184,7 +162,7 @@ class Session:
                 woken.cancel()
                 before, heard = (self.state.phase, self.state.index), self.state.supply
                 fresh: tuple[Action, ...] = ()
-                if self._pushed:
+                if self.pushed:
                     self._woken.clear()
                     fresh = await self._take_pushed()
                     if running is None and not fresh and self._moved_on and self._stands(before):
@@ -201,7 +179,7 @@ class Session:
                 else:
                     self._woken.clear()
                     continue
-                if self._pushed or self._aside.ready:
+                if self.pushed or self._aside.ready:
                     self._woken.set()
                 fresh = self._ask_aside(fresh)
                 if fresh or not self._stands(before):
@@ -273,23 +251,25 @@ class Session:
 
     async def _take_pushed(self) -> tuple[Action, ...]:
         fresh: tuple[Action, ...] = ()
-        while self._pushed:
-            push = self._pushed.popleft()
+        while self.pushed:
+            push = self.pushed.popleft()
             if isinstance(push, KeeperDied):
-                raise await self._keeper_died(push)
+                raise await ending.keeper_died(self, push)
             if isinstance(push, _Asked):
                 if self.state.phase in ("unopened", "closed"):
                     continue
                 got = await self._keep(StopAsked(reason=push.reason))
                 if not got and self.state.stopped == "":
-                    self._pushed.append(push)  # the chain had moved on: what moved it comes first
+                    self.pushed.append(push)  # the chain had moved on: what moved it comes first
                     await asyncio.sleep(0.01)
                     continue
                 fresh = got or fresh
                 continue
             if push.seq is None:
                 self.moment.message = f"{push.event.name} could not be kept: {push.problem}"
-                raise InstrumentError("refused", self.moment.message, "a record that can be written", RESUME_HINT)
+                raise InstrumentError(
+                    "refused", self.moment.message, "a record that can be written", ending.RESUME_HINT
+                )
             if push.seq <= self.seq:
                 continue
             if isinstance(push.event, OutputOff):
@@ -300,21 +280,8 @@ class Session:
         return fresh
 
     def _take_push(self, push: Push | KeeperDied | _Asked) -> None:
-        self._pushed.append(push)
+        self.pushed.append(push)
         self._woken.set()
-
-    async def _keeper_died(self, push: KeeperDied) -> BenchkitError:
-        if self.job.manual_supply:
-            return InstrumentError("link lost", f"The keeper of the record has ended: {push.problem}", "", RESUME_HINT)
-        off = self.last_off = await asyncio.wrap_future(self.keeper.after_death(self.job.setup))
-        words = (
-            "A second keeper switched the supply off and read it back as off."
-            if off.confirmed
-            else "OUTPUT STATE UNKNOWN: switch the supply off by hand."
-        )
-        return InstrumentError(
-            "link lost", f"The keeper of the instruments has ended: {push.problem}. {words}", "", RESUME_HINT
-        )
 
     async def _result_of(self, task: asyncio.Task[Event | None]) -> Event | None:
         try:
@@ -376,7 +343,7 @@ class Session:
         ------
         InstrumentError
         """
-        if self._pushed:
+        if self.pushed:
             raise InstrumentError("refused", "Off or a trip came before the supply was set", "nothing after that")
         self.last_off = None
         return await asyncio.wrap_future(self.keeper.supply_set(positive_v, negative_v, limit_a, True))
@@ -418,9 +385,6 @@ class Session:
         """Change what moves on the screen."""
         self.moment = replace(self.moment, **changes)
         self.show()
-
-
-RESUME_HINT = "Go on later with benchkit walk --resume and the record's name"
 
 
 class _Asked:

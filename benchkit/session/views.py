@@ -179,7 +179,7 @@ def _suspects(walk: Walk, state: State) -> SuspectsView | None:
                 title=suspect_words.fault_words(one.fault),
                 share=one.probability,
                 share_text=suspect_words.chance_words(one.probability),
-                alike=suspect_words.alike_words(one),
+                alike=suspect_words.alike_words(one, suspicion.suspects),
                 evidence=suspect_words.evidence_for(one),
             )
             for one in suspect_words.shown_suspects(suspicion)

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 import textwrap
 from collections.abc import Iterator, Sequence
 
@@ -70,7 +71,7 @@ def suspect_lines(suspects: Sequence[Suspect]) -> list[str]:
     lines = ["What would explain these readings, if one part is at fault at most:"]
     shown = [one for one in suspects[:_SHOWN_SUSPECTS] if one.probability >= _LEAST_SHOWN] or list(suspects[:1])
     for one in shown:
-        lines += _wrapped(f"  {one.probability:6.1%}  {_name(one.fault)}", " " * 10)
+        lines += _wrapped(f"  {_share(one.probability):>6s}  {_name(one.fault)}", " " * 10)
         if one.alike:
             names = ", ".join(_name(other) for other in one.alike)
             lines += _wrapped(f"{'':10s}these readings can't tell it from: {names}", " " * 12)
@@ -78,8 +79,8 @@ def suspect_lines(suspects: Sequence[Suspect]) -> list[str]:
             unit = "ohm" if evidence.point.startswith("ohm.") else "A" if evidence.point.endswith(".current") else "V"
             unit = "degC" if evidence.point == "heatsink" else unit
             lines += _wrapped(
-                f"{'':10s}{evidence.point} reads {show(evidence.read, unit, 4)}; with this fault"
-                f" {show(evidence.expected, unit, 4)}, healthy {show(evidence.healthy, unit, 4)}",
+                f"{'':10s}{evidence.point} reads {_reading(evidence.read, unit)}; with this fault"
+                f" {_reading(evidence.expected, unit)}, healthy {_reading(evidence.healthy, unit)}",
                 " " * 12,
             )
     return lines
@@ -98,12 +99,22 @@ def probe_lines(probes: Sequence[Probe]) -> Iterator[str]:
 def unseen_lines(unseen: Sequence[Fault]) -> list[str]:
     """The faults that the readings could not have shown, part by part."""
     if not unseen:
-        return ["", "Every single fault of the table would have shown in these readings."]
+        words = "Every single fault of the table would have shown in these readings. Not tested: faults that are not in"
+        return ["", *_wrapped(f"{words} the table, two faults at once, and what no d.c. reading shows.", "  ")]
     parts: dict[str, list[str]] = {}
     for fault in unseen:
         parts.setdefault(fault.part, []).append(fault.fault)
     names = "; ".join(f"{part}: {', '.join(faults)}" for part, faults in parts.items())
     return ["", *_wrapped(f"Not tested ({len(unseen)} faults these readings could not have shown): {names}.", "  ")]
+
+
+def _reading(value: float, unit: str) -> str:
+    return show(value, unit, 4) if math.isfinite(value) else "overload"
+
+
+def _share(probability: float) -> str:
+    """A probability in percent; nothing that was worked out from readings is certain."""
+    return ">99.9%" if probability >= 1.0 - _LEAST_SHOWN else f"{probability:.1%}"
 
 
 def _name(fault: Fault) -> str:

@@ -3,21 +3,28 @@
 from __future__ import annotations
 
 import json
-from collections.abc import Iterable
+import math
+from collections.abc import Iterable, Sequence
+from dataclasses import replace
 
 import numpy as np
 import pytest
 
 from benchkit.judge.rule_base import Cause, RuleResult
-from benchkit.judge.table import Table, judge_readings, judge_table, overall
+from benchkit.judge.table import Table, judge_files, judge_table, observations, overall
 from benchkit.judge.verdicts import Verdict
 from benchkit.measure.accuracy import BENCH_METER
+from benchkit.stage import suspects
 from benchkit.stage.conditions import Condition
+from benchkit.stage.design import Design, load_design
 from benchkit.stage.draws import draw, nominal, seeds
 from benchkit.stage.expected import expected
-from benchkit.stage.faults import parse_fault
+from benchkit.stage.faults import HEALTHY, Fault, faults_of, parse_fault
+from benchkit.stage.observations import Observation
 from benchkit.stage.operate import Solved, solve_units
-from tests.judge.designs import TERN, tern
+from benchkit.stage.suspicion import Suspect, Suspicion
+from tests.judge.designs import tern
+from tests.stage.designs import BREADBOARD
 
 UNITS = 1500
 POINTS = (
@@ -43,6 +50,18 @@ def _judge(text: str) -> Table:
     return judge_table(tern(), text, accuracy=BENCH_METER, units=UNITS, seed=3)
 
 
+@pytest.fixture
+def limits_only(monkeypatch: pytest.MonkeyPatch) -> None:
+    """For tests of limits and rules alone: the suspects are the table's priors, whatever was read."""
+
+    ask = suspects.suspect_many
+
+    def priors(design: Design, sets: Sequence[Sequence[Observation]]) -> list[Suspicion]:
+        return ask(design, [[] for _ in sets])
+
+    monkeypatch.setattr(suspects, "suspect_many", priors)
+
+
 def test_a_nominal_unit_passes() -> None:
     table = _judge(_file(NOMINAL_AT_LEAST))
     assert table.verdict == "pass", [(one.entry.point.name, one.judgement.why) for one in table.readings]
@@ -50,8 +69,8 @@ def test_a_nominal_unit_passes() -> None:
 
 
 def test_the_object_that_is_printed() -> None:
-    printed = judge_readings(tern(), _file(NOMINAL_AT_LEAST), accuracy=BENCH_METER, units=UNITS, seed=3)
-    assert list(printed) == ["verdict", "readings", "rules"]
+    printed = _judge(_file(NOMINAL_AT_LEAST)).as_json()
+    assert list(printed) == ["verdict", "readings", "rules", "suspects", "probe_next", "unseen"]
     assert json.loads(json.dumps(printed, allow_nan=False)) == printed
     assert [reading["point"] for reading in printed["readings"]] == list(POINTS)
     for reading in printed["readings"]:
@@ -60,8 +79,19 @@ def test_the_object_that_is_printed() -> None:
     assert {rule["rule"] for rule in printed["rules"]} == {"offset before load", "divider stiffness", "spreader ratio"}
     for rule in printed["rules"]:
         assert list(rule) == ["rule", "value", "limit", "verdict"]
+    assert printed["suspects"][0]["part"] == "healthy"
+    assert {"part": "healthy", "fault": "none"} not in printed["unseen"]
+    assert len(printed["suspects"]) == 1 + len(faults_of(tern()))
+    assert sum(suspect["probability"] for suspect in printed["suspects"]) == pytest.approx(1.0)
+    for suspect in printed["suspects"]:
+        assert list(suspect) == ["part", "fault", "probability", "alike"]
+        assert len(suspect["alike"]) <= 3
+        assert all(list(other) == ["part", "fault"] for other in suspect["alike"])
+    assert all(list(probe) == ["point", "why"] for probe in printed["probe_next"])
+    assert all(list(fault) == ["part", "fault"] for fault in printed["unseen"])
 
 
+@pytest.mark.usefixtures("limits_only")
 def test_limits_are_those_of_the_model_for_that_condition() -> None:
     model = expected(tern(), LEAST, units=UNITS, seed=3)
     for judged in _judge(_file(NOMINAL_AT_LEAST)).readings:
@@ -75,6 +105,7 @@ def test_limits_are_those_of_the_model_for_that_condition() -> None:
             assert (judged.limits.low, judged.limits.high) == (model[name].low, model[name].high)
 
 
+@pytest.mark.usefixtures("limits_only")
 def test_each_line_is_judged_under_its_own_condition() -> None:
     spread = f"spread,{NOMINAL_AT_LEAST['spread']},V"
     text = f"{HEADER}\n{spread},{LEAST_CELLS}\n{spread},15,-15,,most\n"
@@ -82,16 +113,19 @@ def test_each_line_is_judged_under_its_own_condition() -> None:
     assert (least.judgement.verdict, most.judgement.verdict) == ("pass", "fail")
 
 
+@pytest.mark.usefixtures("limits_only")
 def test_a_reading_outside_fails_the_file() -> None:
     table = _judge(_file(NOMINAL_AT_LEAST | {"spread": 9.1}))
     assert table.verdict == "fail"
     assert [one.entry.point.name for one in table.readings if one.judgement.verdict == "fail"] == ["spread"]
 
 
+@pytest.mark.usefixtures("limits_only")
 def test_overload_fails() -> None:
     assert _judge(f"{HEADER}\nspread,OL,V,{LEAST_CELLS}\n").verdict == "fail"
 
 
+@pytest.mark.usefixtures("limits_only")
 def test_unpowered_readings() -> None:
     table = _judge("point,value,unit\nohm.spreader.lower,1000,ohm\nohm.heatsink.output.upper.1,OL,ohm\n")
     assert [one.judgement.verdict for one in table.readings] == ["pass", "pass"]
@@ -99,13 +133,17 @@ def test_unpowered_readings() -> None:
 
 
 def test_a_reading_without_a_model_is_undecided() -> None:
-    printed = judge_readings(tern(), "point,value,unit\noutput.ac,1,mV\n", units=UNITS)
+    printed = judge_table(tern(), "point,value,unit\noutput.ac,1,mV\n", units=UNITS).as_json()
     assert printed["verdict"] == "undecided"
+    # nothing that the model knows was read: the suspects are the table's priors, and no fault was tested
+    assert len(printed["unseen"]) == len(faults_of(tern()))
+    assert printed["probe_next"] == []
     assert printed["readings"] == [
         {"point": "output.ac", "value": 0.001, "low": None, "high": None, "verdict": "undecided"}
     ]
 
 
+@pytest.mark.usefixtures("limits_only")
 def test_the_target_may_be_anywhere_within_its_tolerance() -> None:
     cells = "35,-35,,target,warm,25"
     model = expected(tern(), Condition(positive_v=35.0, negative_v=-35.0, trimmer="target", when="warm"), units=200)
@@ -121,6 +159,7 @@ def test_the_target_may_be_anywhere_within_its_tolerance() -> None:
     assert rules["emitter symmetry"] == "undecided"
 
 
+@pytest.mark.usefixtures("limits_only")
 def test_cold_readings_of_the_emitter_resistors_decide_the_symmetry() -> None:
     cells = "35,-35,,target,warm,25"
     values = {"emitter.upper.1": 0.0221, "emitter.lower.1": 0.0219}
@@ -171,20 +210,23 @@ def test_healthy_units_hardly_ever_fail() -> None:
     solved = solve_units(design, parameters, LEAST)
     assert solved.converged.all()
     rng = np.random.default_rng(19)
-    tables = [_judge(_file(_units_read(solved, unit, rng))) for unit in range(40)]
+    files = [(f"unit {unit}", _file(_units_read(solved, unit, rng))) for unit in range(40)]
+    tables = judge_files(design, files, accuracy=BENCH_METER, units=UNITS, seed=3)
     assert [table.verdict for table in tables].count("fail") <= 4
     assert [table.verdict for table in tables].count("pass") >= 10
     # What a good meter leaves undecided at the least-bias end is a few microvolts of emitter drop, and little else.
     undecided = [one for table in tables for one in table.readings if one.judgement.verdict == "undecided"]
     others = [one for one in undecided if not one.entry.point.name.startswith("emitter")]
     assert len(others) <= 3
+    # the suspects: something before healthy in at most one of these forty
+    assert sum(table.suspicion.suspects[0].fault != HEALTHY for table in tables) <= 1
+    assert all(table.suspicion.unseen for table in tables)
 
 
+@pytest.mark.usefixtures("limits_only")
 def test_a_stage_between_two_feed_resistors() -> None:
     """The other demonstration design, at its own rails: nominal readings pass, and its feeds are compared."""
-    from benchkit.stage.design import load_design
-
-    design = load_design(TERN.with_name("breadboard.toml"))
+    design = load_design(BREADBOARD)
     model = expected(design, Condition(positive_v=10.0, negative_v=-10.0, trimmer="least"), units=200)
     names = ("output", "spread", "spread.lower", "feed.upper", "feed.lower")
     lines = [f"{name},{model[name].nominal:.7g},V,least" for name in names]
@@ -195,18 +237,102 @@ def test_a_stage_between_two_feed_resistors() -> None:
     assert "feed symmetry" in {result.rule for result in table.rules}
 
 
-@pytest.mark.parametrize(
-    "fault",
-    [
-        "spreader.upper: ten times high",
-        "spreader.transistor: collector-emitter short",
-        "driver.upper: base-emitter short",
-        "output.upper.1: collector-emitter short",
-        "feed.upper: dead",
-        "spreader.upper: open",
-    ],
+FAULTY = (
+    "spreader.upper: ten times high",
+    "spreader.transistor: collector-emitter short",
+    "driver.upper: base-emitter short",
+    "output.upper.1: collector-emitter short",
+    "feed.upper: dead",
+    "spreader.upper: open",
 )
-def test_faulty_units_fail(fault: str) -> None:
+
+
+def _faulty(names: Sequence[str]) -> list[Table]:
+    """Nominal units with a fault each, read by a bench meter and judged together."""
     design = tern()
-    solved = solve_units(design, nominal(design), LEAST, parse_fault(fault, design))
-    assert _judge(_file(_units_read(solved, 0, np.random.default_rng(2)))).verdict == "fail"
+    faults = [parse_fault(name, design) for name in names]
+    solved = solve_units(design, nominal(design), LEAST, faults, loading="each")
+    rng = np.random.default_rng(2)
+    files = [(name, _file(_units_read(solved, unit, rng))) for unit, name in enumerate(names)]
+    return judge_files(design, files, accuracy=BENCH_METER, units=UNITS, seed=3)
+
+
+@pytest.mark.usefixtures("limits_only")
+def test_faulty_units_fail() -> None:
+    assert [table.verdict for table in _faulty(FAULTY)] == ["fail"] * len(FAULTY)
+
+
+def test_the_fault_of_a_faulty_unit_is_suspected() -> None:
+    """It is first, or named together with the first."""
+    for name, table in zip(FAULTY[4:5], _faulty(FAULTY[4:5]), strict=True):
+        fault, first = parse_fault(name), table.suspicion.suspects[0]
+        assert fault in (first.fault, *first.alike), (name, str(first.fault))
+        assert fault not in table.suspicion.unseen
+
+
+def test_files_judged_together_are_as_each_alone() -> None:
+    """In the files' order, whether they were read alike or not."""
+    small = load_design(BREADBOARD)
+    texts = [
+        "point,value,unit,trimmer\nspread,1.5,V,least\n",
+        "point,value,unit\nohm.spreader.lower,1 kohm,ohm\n",
+        "point,value,unit,trimmer\nspread,0.68,V,least\n",
+    ]
+    together = judge_files(small, [(f"{number}.csv", text) for number, text in enumerate(texts)], units=300)
+    for text, table in zip(texts, together, strict=True):
+        alone = judge_table(small, text, units=300)
+        assert [one.limits for one in table.readings] == [one.limits for one in alone.readings]
+        assert table.verdict == alone.verdict
+        likely = [(one.fault, one.probability) for one in alone.suspicion.suspects[:3]]
+        assert [one.fault for one in table.suspicion.suspects[:3]] == [fault for fault, _ in likely]
+        for one, (_, probability) in zip(table.suspicion.suspects, likely, strict=False):
+            assert one.probability == pytest.approx(probability, abs=0.02)
+
+
+MIXED = """point,value,unit,positive,negative,limit,trimmer,when,ambient,uncertainty
+spread,1.149,V,4,-4,50 mA,least,cold,25,
+output,3 mV,V,4,-4,50 mA,least,cold,25,0.0001
+emitter.upper.1,47 mV,V,10,-10,,target,warm,25,
+heatsink,29,degC,10,-10,,target,warm,25,
+ohm.spreader.lower,OL,ohm,,,,target,,,
+ohm.rails,7.7 kohm,ohm,,,,unknown,,,
+diode.output.upper.1,OL,V,,,,unknown,,,
+output.ac,1,mV,,,,,,,
+"""
+
+
+def test_conditions_of_every_kind_in_one_file() -> None:
+    """Powered and unpowered, cold and warm, target and unknown, overloads, and a point without a model."""
+    small = load_design(BREADBOARD)
+    table = judge_table(small, MIXED, accuracy=BENCH_METER, units=300)
+    printed = table.as_json()
+    assert json.loads(json.dumps(printed, allow_nan=False)) == printed
+    assert len(printed["readings"]) == MIXED.count("\n") - 1
+    assert [one["value"] for one in printed["readings"]].count(None) == 2
+    assert sum(suspect["probability"] for suspect in printed["suspects"]) == pytest.approx(1.0)
+    taken = observations(small, [one.entry for one in table.readings])
+    assert [one.point for one in taken] == [one["point"] for one in printed["readings"] if one["point"] != "output.ac"]
+    assert [one.value for one in taken].count(math.inf) == 2
+    assert all(math.isfinite(one.standard_uncertainty) and one.standard_uncertainty >= 0.0 for one in taken)
+
+
+@pytest.mark.usefixtures("limits_only")
+def test_a_negative_overload_is_below_everything() -> None:
+    entries = judge_table(tern(), f"{HEADER}\nspread,-OL,V,{LEAST_CELLS}\n", units=300).readings
+    assert [one.value for one in observations(tern(), [one.entry for one in entries])] == [-math.inf]
+
+
+def _table(first: Fault, verdict: Verdict) -> Table:
+    """A table of one reading with a made-up verdict and first suspect."""
+    table = judge_table(tern(), "point,value,unit\noutput.ac,1,mV\n", units=300)
+    judged = replace(table.readings[0], judgement=replace(table.readings[0].judgement, verdict=verdict))
+    said = replace(table.suspicion, suspects=(Suspect(fault=first, probability=0.9),))
+    return replace(table, readings=(judged,), suspicion=said)
+
+
+def test_a_suspect_before_healthy_leaves_a_pass_undecided() -> None:
+    """Single readings that pass may together speak of a fault; a failure stays a failure."""
+    fault = faults_of(tern())[0]
+    assert _table(HEALTHY, "pass").verdict == "pass"
+    assert _table(fault, "pass").verdict == "undecided"
+    assert _table(fault, "fail").verdict == _table(HEALTHY, "fail").verdict == "fail"

@@ -73,7 +73,7 @@ def test_the_unlikely_are_left_out_but_never_all() -> None:
     tiny = replace(GOOD, probability=0.001)
     assert words.shown_suspects(replace(ANSWER, suspects=(OPEN, tiny))) == (OPEN,)
     assert words.shown_suspects(replace(ANSWER, suspects=(tiny, tiny))) == (tiny,)
-    many = replace(ANSWER, suspects=(OPEN,) * 5)
+    many = replace(ANSWER, suspects=tuple(replace(OPEN, fault=f"p{number}: open") for number in range(5)))
     assert len(words.shown_suspects(many)) == words.SHOWN
 
 
@@ -86,3 +86,11 @@ def test_the_next_reading() -> None:
 def test_what_is_alike() -> None:
     assert words.alike_words(OPEN) == ""
     assert words.alike_words(replace(OPEN, alike=("a: open", "b: short"))) == ("or a open or b short")
+
+
+def test_what_was_named_with_an_earlier_one_needs_no_line_of_its_own() -> None:
+    first = replace(OPEN, fault="a: open", alike=("b: open", "c: open"))
+    second = replace(OPEN, fault="b: open", probability=0.12, alike=("a: open", "c: open"))
+    answer = replace(ANSWER, suspects=(first, second, GOOD))
+    assert words.shown_suspects(answer) == (first, GOOD)
+    assert words.alike_words(first, answer.suspects) == "or b open (12 %) or c open"

@@ -293,14 +293,10 @@ def main() -> None:
     parser = argparse.ArgumentParser(description=main.__doc__)
     parser.add_argument("what", choices=["make", "check"], nargs="?", default="make")
     parser.add_argument("--jobs", type=int, default=2)
-    parser.add_argument("--only", help="designs whose name has this in it; the others are kept")
-    parser.add_argument("--unsolved", action="store_true", help="designs that have a line in the list of the unsolved")
+    parser.add_argument("--only", action="append", help="a design's name (again and again); the others are kept")
     given = parser.parse_args()
-    names = [name for name in catalogue() if given.only is None or given.only in name]
-    if given.unsolved:
-        listed_now = {line.split(":")[0] for line in listed(UNSOLVED)}
-        names = [name for name in names if name in listed_now]
-    references = dict(committed()) if given.what == "check" or given.only or given.unsolved else {}
+    names = [name for name in catalogue() if not given.only or name in given.only]
+    references = dict(committed()) if given.what == "check" or given.only else {}
     if given.what == "make":
         with ProcessPoolExecutor(given.jobs) as pool:
             for name, reference, seconds in pool.map(_made, names):

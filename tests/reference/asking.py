@@ -32,7 +32,10 @@ COPIES = 40
 """Copies in a deck at first."""
 WITH_METERS = Variant(meters=True)
 WIDE_KNEE, KNEE = "10e-3", "10e-6"
-_OPTIONS = ".options reltol=1e-9 abstol=1e-15 vntol=1e-12 gmin=1e-12 itl1={most} itl2={most} numdgt=15"
+_OPTIONS, _LOOSER_OPTIONS = (
+    f".options reltol={relative} abstol={amps} vntol={volts} gmin=1e-12 itl1={{most}} itl2={{most}} numdgt=15"
+    for relative, amps, volts in (("1e-9", "1e-15", "1e-12"), ("1e-7", "1e-12", "1e-9"))
+)
 _QUICK, _PATIENT = 60, 2000
 TIGHT, LOOSE, LOOSER, LOOSEST = (
     f".options reltol={relative} abstol={amps} vntol={volts} gmin=1e-18 itl1=100 itl2=200 numdgt=15"
@@ -105,12 +108,25 @@ def _alone(netlist: Netlist, values: Mapping[str, float], start: Mapping[str, fl
             lines[at:at] = [f".nodeset v({names[node]}_0)={volts:.{digits}f}" for node, volts in start.items()]
         if DIRECTLY in options:
             lines.insert(lines.index(".control") + 1, "optran 1 0 0 0 0 0")
-        try:
-            found, _ = ngspice.run_text("\n".join(lines) + "\n", timeout_s=10.0)
-        except (RuntimeError, subprocess.TimeoutExpired):
+        found = _voltages(lines, names)
+        if found is None:
             continue
-        return {node: found[f"{name}_0"] for node, name in names.items()}
+        if TIGHT in options:
+            return found
+        # Once more from its own solution: what a loose tolerance left of the way, Newton's method goes now.
+        again = [line for line in lines if not line.startswith(".nodeset")]
+        at = again.index(".control")
+        again[at:at] = [f".nodeset v({names[node]}_0)={volts:.15g}" for node, volts in found.items()]
+        return _voltages(again, names) or found
     return None
+
+
+def _voltages(lines: Sequence[str], names: Mapping[str, str]) -> dict[str, float] | None:
+    try:
+        found, _ = ngspice.run_text("\n".join(lines) + "\n", timeout_s=20.0)
+    except (RuntimeError, subprocess.TimeoutExpired):
+        return None
+    return {node: found[f"{name}_0"] for node, name in names.items()}
 
 
 def _metered(
@@ -148,6 +164,13 @@ def _solve(
 
     def halved(some: NDArray[np.intp]) -> None:
         found = _run(netlist, values, start, knee, some, _QUICK)
+        if found is None:
+            found = _run(netlist, values, start, knee, some, _QUICK, _LOOSER_OPTIONS)
+            if found is not None:  # once more from its own solution: see `_alone`
+                own = {node: np.full(len(which), np.nan) for node in nodes}
+                for node, row in zip(nodes, found, strict=True):
+                    own[node][some] = row
+                found = _run(netlist, values, own, knee, some, _QUICK, _LOOSER_OPTIONS)
         if found is None and len(some) > 1:
             halved(some[: len(some) // 2])
             halved(some[len(some) // 2 :])
@@ -166,7 +189,7 @@ def _solve(
 
 def _run(
     netlist: Netlist, values: Mapping[str, Array], start: Mapping[str, Array], knee: str, some: NDArray[np.intp],
-    most: int,
+    most: int, options: str = _OPTIONS,
 ) -> Array | None:  # fmt: skip
     copies = [{key: float(value[copy]) for key, value in values.items()} for copy in some]
     text, names = ngspice.deck(netlist, copies)
@@ -182,7 +205,7 @@ def _run(
     # What takes long (time steps instead of conductance and source steps) only for a copy that stands alone.
     quick = ["optran 1 0 0 0 0 0"] if most == _QUICK else []
     text = "\n".join([*lines[:at], *begin, lines[at], *quick, *lines[at + 1 :]]) + "\n"
-    text = text.replace(ngspice.OPTIONS, _OPTIONS.format(most=most), 1).replace("/10e-6))", f"/{knee}))")
+    text = text.replace(ngspice.OPTIONS, options.format(most=most), 1).replace("/10e-6))", f"/{knee}))")
     try:
         found, _ = ngspice.run_text(text, timeout_s=60.0)
     except (RuntimeError, subprocess.TimeoutExpired):

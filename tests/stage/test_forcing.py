@@ -34,9 +34,7 @@ def test_what_is_no_number_says_nothing() -> None:
 
 
 @pytest.mark.parametrize(("rail", "read_v", "held_v"), [("rail+", 3.0, (3.0, -15.0)), ("rail-", -4.0, (15.0, -4.0))])
-def test_a_fallen_rail_is_held_and_the_limit_is_a_reading(
-    rail: str, read_v: float, held_v: tuple[float, float]
-) -> None:
+def test_a_fallen_rail_is_held_at_its_reading(rail: str, read_v: float, held_v: tuple[float, float]) -> None:
     other = observed(replace(LIMITED, trimmer="most"), "spread", 2.0)
     unpowered = observed(Unpowered(point="ohm.rails"), "ohm.rails", 3e3)
     some = [observed(LIMITED, "spread", 1.0), observed(LIMITED, rail, read_v), other, unpowered]

@@ -5,6 +5,8 @@ from __future__ import annotations
 import numpy as np
 import pytest
 
+from benchkit.circuit.equations import Batch
+from benchkit.circuit.newton import LinearSolver
 from benchkit.stage.conditions import Condition
 from benchkit.stage.design import Design
 from benchkit.stage.draws import draw, nominal, seeds
@@ -190,3 +192,20 @@ def test_every_fault_has_a_solution_at_a_limited_supply(name: str) -> None:
     many = {key: v if v.ndim == 0 else np.tile(v, len(faults) // units) for key, v in drawn.items()}
     solved = solve_units(design, many, condition, faults, loading="none")
     assert solved.converged.all(), {str(faults[k]) for k in np.flatnonzero(~solved.converged)}
+
+
+@pytest.mark.parametrize("name", [FEEDBACK, "double source servo lower tied 2 stopper"])
+def test_another_step_moves_no_node(name: str) -> None:
+    """Also where picoamperes decide about millivolts, and a limited rail hangs on 1 uS."""
+    design = few()[name]
+    rails, faults = design.rails, list(faults_of(design))
+    condition = Condition(
+        positive_v=0.4 * rails.positive_v, negative_v=0.4 * rails.negative_v, limit_a=0.05, trimmer="least"
+    )
+    solution = solve_units(design, nominal(design), condition, faults, loading="none").solution
+    batch = Batch(solution.plan, solution.values, solution.units)
+    linear = batch.evaluate(solution.x, None)
+    left_a = solution.plan.sum_currents(linear.currents, solution.x, batch.volts)
+    step = LinearSolver(solution.plan.structure).solve(batch.matrix(linear, None), -left_a)
+    longest_v = np.abs(step[: solution.plan.nodes]).max(axis=0)
+    assert longest_v.max() < 0.2e-3, {str(faults[k]): longest_v[k] for k in np.flatnonzero(longest_v > 0.2e-3)}

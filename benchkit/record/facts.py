@@ -1,0 +1,168 @@
+"""What a summary of a record is made of."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+from benchkit.events import (
+    Answered,
+    Closed,
+    Judged,
+    Narrowed,
+    Noted,
+    Suspected,
+    Verdict,
+    WalkOpened,
+)
+from benchkit.measure.readings import Reading
+from benchkit.record.verify import Record
+
+
+@dataclass(frozen=True, kw_only=True)
+class Result:
+    """One reading or rule with what became of it.
+
+    Parameters
+    ----------
+    seq, at : int, str
+        Line and time (UTC) of the reading, or of the verdict where there is no reading.
+    item, section, step : str
+        Where it belongs; names as the procedure has them.
+    title : str
+        The step's title.
+    subject : str
+        The test point or the rule.
+    reading : Reading or None
+        None for a rule and for a missed reading.
+    judged : Judged or None
+        None when no verdict was given.
+    missed : str
+        Why there was no reading.
+    condition : str
+        What the limits were made for, where the model made them.
+    from_before, replaced : bool
+    overridden : str or None
+        The reason, when somebody went on in spite of it (may be empty).
+    """
+
+    seq: int
+    at: str
+    item: str
+    section: str
+    step: str
+    title: str
+    subject: str
+    reading: Reading | None = None
+    judged: Judged | None = None
+    missed: str = ""
+    condition: str = ""
+    from_before: bool = False
+    replaced: bool = False
+    overridden: str | None = None
+
+    @property
+    def verdict(self) -> Verdict | None:
+        """The verdict that was given, if one was."""
+        return self.judged.verdict if self.judged is not None else None
+
+    @property
+    def odd(self) -> bool:
+        """True for a reading outside what this unit's other readings lead to."""
+        return self.judged is not None and self.judged.odd
+
+    @property
+    def counts_against(self) -> bool:
+        """True for what still stands and is no pass."""
+        return not self.replaced and (bool(self.missed) or self.verdict in ("fail", "undecided"))
+
+
+@dataclass(frozen=True, kw_only=True)
+class Suspicion:
+    """What the model said would explain the readings: line, time, the step that it was asked at, and the answer."""
+
+    seq: int
+    at: str
+    where: str
+    answer: Suspected
+
+
+@dataclass(frozen=True, kw_only=True)
+class Incident:
+    """Something that ended or disturbed the walk: line, time, the step that it was at, and words."""
+
+    seq: int
+    at: str
+    where: str
+    what: str
+
+
+@dataclass(frozen=True, kw_only=True)
+class Ending:
+    """What the record says of the supply at its end.
+
+    Parameters
+    ----------
+    state : str
+        ``off`` (confirmed), ``unknown``, ``on`` (last seen so), or ``never on``.
+    words : str
+        The same for a person.
+    """
+
+    state: str
+    words: str
+
+
+@dataclass(frozen=True, kw_only=True)
+class Summary:
+    """Everything that a reader of a record wants to know.
+
+    Parameters
+    ----------
+    record : Record
+        The file and whether it is whole.
+    opened : WalkOpened
+        The first event: who, what, with which files.
+    begun, ended : str
+        Times of the first and the last line, UTC, ISO 8601.
+    meter, supply : str
+        As they named themselves; empty if they were never found.
+    sections : tuple of (name, title)
+        Of the procedure, in its order; empty where the procedure's text can't be read.
+    results : tuple of Result
+        In the order in which they were taken.
+    answers : tuple of (title of the step, Answered)
+    incidents : tuple of Incident
+    notes : tuple of Noted
+    suspicions : tuple of Suspicion
+        In their order; the last one says most.
+    narrowings : tuple of Narrowed
+        In their order.
+    highest_v : tuple of float or None
+        The largest magnitudes, V, of the positive and the negative rail that the supply was set to or measured at.
+    ending : Ending
+        The supply at the end.
+    closed : Closed or None
+        None for a walk that was not closed.
+    """
+
+    record: Record
+    opened: WalkOpened
+    begun: str
+    ended: str
+    meter: str
+    supply: str
+    sections: tuple[tuple[str, str], ...]
+    results: tuple[Result, ...]
+    answers: tuple[tuple[str, Answered], ...]
+    incidents: tuple[Incident, ...]
+    notes: tuple[Noted, ...]
+    highest_v: tuple[float, float] | None
+    ending: Ending
+    closed: Closed | None
+    suspicions: tuple[Suspicion, ...] = ()
+    narrowings: tuple[Narrowed, ...] = ()
+
+    @property
+    def verdict(self) -> Verdict | None:
+        """The verdict that the walk was closed with; None for one that was not closed."""
+        return self.closed.verdict if self.closed is not None else None

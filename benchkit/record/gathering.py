@@ -1,0 +1,246 @@
+"""Gathers the facts of a walk from its events, one after the other; the rules stand in `benchkit.record.summary`."""
+
+from __future__ import annotations
+
+import re
+from collections.abc import Iterable, Mapping
+from dataclasses import dataclass, field, replace
+
+from benchkit.errors import BenchkitError
+from benchkit.events import (
+    Answered,
+    BenchFound,
+    BenchMissing,
+    Closed,
+    ContactLost,
+    Decided,
+    Event,
+    Judged,
+    Narrowed,
+    Noted,
+    OutputOff,
+    Predicted,
+    PredictionRefused,
+    ReadingMissed,
+    ReadingTaken,
+    Resumed,
+    StopAsked,
+    SupplyRefused,
+    SupplySet,
+    SupplyState,
+    Suspected,
+    TrimEnded,
+    Tripped,
+    WalkOpened,
+)
+from benchkit.measure.readings import Reading
+from benchkit.procedure.file import Procedure, parse_procedure
+from benchkit.record.facts import Ending, Incident, Result, Suspicion
+
+_NAME = re.compile(r"[a-z0-9][a-z0-9-]*")
+
+
+@dataclass
+class Gathering:
+    """What has been gathered so far; `take` adds one event."""
+
+    opened: WalkOpened
+    meter: str = ""
+    supply: str = ""
+    results: list[Result] = field(default_factory=list)
+    answers: list[tuple[str, Answered]] = field(default_factory=list)
+    incidents: list[Incident] = field(default_factory=list)
+    notes: list[Noted] = field(default_factory=list)
+    suspicions: list[Suspicion] = field(default_factory=list)
+    narrowings: list[Narrowed] = field(default_factory=list)
+    highest: tuple[float, float] | None = None
+    ever_on: bool = False
+    may_be_on: bool = False
+    off: OutputOff | None = None
+    closed: Closed | None = None
+    where: str = ""
+
+    def __post_init__(self) -> None:
+        self.sections, self._titles = _titles(self.opened)
+        self._conditions: dict[str, str] = {}
+
+    def take(self, seq: int, at: str, event: Event) -> None:
+        """Add one event."""
+        item = getattr(event, "item", "")
+        if item and not isinstance(event, (Narrowed, Suspected)):
+            self.where = self._title(item)
+        match event:
+            case BenchFound():
+                self.meter, self.supply = event.meter, event.supply
+                self._look_at(event.supply_state)
+            case Predicted():
+                self._conditions.update(dict.fromkeys((limits.point for limits in event.limits), event.condition))
+            case ReadingTaken():
+                self._add(seq, at, item, event.reading.point, reading=event.reading)
+            case ReadingMissed():
+                self._add(seq, at, item, event.point, missed=event.problem)
+            case Judged():
+                self._judge(seq, at, event)
+            case Narrowed():
+                self.narrowings.append(event)
+            case Suspected():
+                self.suspicions.append(Suspicion(seq=seq, at=at, where=self._title(item), answer=event))
+            case Decided():
+                self._decide(seq, at, event)
+            case Answered():
+                self.answers.append((self.where, event))
+                if event.choice == "no":
+                    self._incident(seq, at, "answered no" + (f": {event.text}" if event.text else ""))
+            case SupplySet():
+                self._look_at(event.state)
+            case OutputOff():
+                self.off = event
+                self.may_be_on = not event.confirmed
+                if not event.confirmed:
+                    self._incident(seq, at, f"the supply did not confirm that its output is off ({event.how})")
+            case Resumed():
+                self.results = [replace(result, from_before=True) for result in self.results]
+                torn = "; the last line before it was torn and is lost" if event.torn else ""
+                self._incident(seq, at, f"resumed by {event.operator}{torn}")
+            case Noted():
+                self.notes.append(event)
+            case Closed():
+                self.closed = event
+            case Tripped() | ContactLost() | StopAsked() | SupplyRefused() | BenchMissing() | TrimEnded():
+                self._incident(seq, at, _disturbance(event))
+            case PredictionRefused():
+                self._incident(seq, at, f"no limits from the model for {event.condition}: {event.problem}")
+
+    def _add(
+        self, seq: int, at: str, item: str, subject: str, *, reading: Reading | None = None, missed: str = ""
+    ) -> None:
+        self._replace_earlier(item, subject)
+        section, step = _parts(item)
+        self.results.append(
+            Result(
+                seq=seq,
+                at=at,
+                item=item,
+                section=section,
+                step=step,
+                title=self._title(item),
+                subject=subject,
+                reading=reading,
+                missed=missed,
+                condition=self._conditions.get(subject, ""),
+            )
+        )
+
+    def _judge(self, seq: int, at: str, event: Judged) -> None:
+        for index in range(len(self.results) - 1, -1, -1):
+            result = self.results[index]
+            if (
+                result.item == event.item
+                and not result.replaced
+                and result.judged is None
+                and (result.reading is not None or result.missed)
+                and result.subject == event.subject
+            ):
+                self.results[index] = replace(result, judged=event)
+                return
+        self._add(seq, at, event.item, event.subject)
+        self.results[-1] = replace(self.results[-1], judged=event)
+
+    def _replace_earlier(self, item: str, subject: str) -> None:
+        for index, result in enumerate(self.results):
+            if result.item == item and result.subject == subject and not result.replaced:
+                self.results[index] = replace(result, replaced=True)
+
+    def _decide(self, seq: int, at: str, event: Decided) -> None:
+        if event.choice == "make safe":
+            self._incident(seq, at, "made safe by the operator" + (f": {event.reason}" if event.reason else ""))
+        if event.choice != "go on":
+            return
+        for index, result in enumerate(self.results):
+            if result.item == event.item and result.counts_against:
+                self.results[index] = replace(result, overridden=event.reason)
+                return
+        if event.reason:  # going on after an odd reading needs none, nor does leaving an extra reading that is offered
+            self._incident(seq, at, f"went on in spite of it: {event.reason}")
+
+    def _look_at(self, state: SupplyState | None) -> None:
+        if state is None:
+            return
+        if state.output_on is not False:
+            old = self.highest or (0.0, 0.0)
+            self.highest = (
+                max(old[0], _largest(state.set_positive_v, state.positive_v)),
+                max(old[1], _largest(state.set_negative_v, state.negative_v)),
+            )
+            self.ever_on = True
+            self.may_be_on = True
+        elif self.off is None or self.off.confirmed:
+            self.may_be_on = False
+
+    def _incident(self, seq: int, at: str, what: str) -> None:
+        self.incidents.append(Incident(seq=seq, at=at, where=self.where, what=what))
+
+    def _title(self, item: str) -> str:
+        section, step = _parts(item)
+        if step.startswith("extra-"):
+            return f"Extra reading {step.removeprefix('extra-')}"
+        if step == "warm-state":
+            return "The design comes to rest warm"
+        return self._titles.get((section, step), item)
+
+
+def _largest(*volts: float | None) -> float:
+    return max((abs(value) for value in volts if value is not None), default=0.0)
+
+
+def _parts(item: str) -> tuple[str, str]:
+    names = _NAME.findall(item)
+    return (names[0] if names else "", names[1] if len(names) > 1 else "")
+
+
+def _titles(opened: WalkOpened) -> tuple[dict[str, str], Mapping[tuple[str, str], str]]:
+    """Return the sections' titles by name, in order, and the steps' titles by section and step."""
+    try:
+        procedure: Procedure = parse_procedure(opened.procedure_text, opened.procedure_name)
+    except BenchkitError:
+        return {}, {}
+    steps: Iterable[tuple[tuple[str, str], str]] = (
+        ((section.name, step.name), step.title) for section in procedure.sections for step in section.step
+    )
+    return {section.name: section.title for section in procedure.sections}, dict(steps)
+
+
+def _disturbance(event: Event) -> str:
+    match event:
+        case Tripped():
+            return f"safety trip: {event.reason}"
+        case ContactLost():
+            return f"contact lost with {event.who}: {event.problem}"
+        case StopAsked():
+            return f"stopped: {event.reason}"
+        case SupplyRefused():
+            return f"the supply did not do what it was told: {event.problem}"
+        case BenchMissing():
+            return f"an instrument is missing: {event.problem}"
+        case TrimEnded():
+            return f"the trim ended without reaching the target: {event.problem}"
+    return event.name
+
+
+def ending_of(ever_on: bool, may_be_on: bool, off: OutputOff | None) -> Ending:
+    """Say what the record shows of the supply at its end."""
+    if off is not None and not off.confirmed:
+        return Ending(
+            state="unknown",
+            words=f"Output state unknown: switch it off by hand. It did not confirm off ({off.how}).",
+        )
+    if may_be_on:
+        return Ending(
+            state="on",
+            words="No line says that the supply is off after it was last on. Take it as on until you have seen it off.",
+        )
+    if off is not None:
+        return Ending(state="off", words=f"Off, and confirmed: {off.how}.")
+    if ever_on:
+        return Ending(state="off", words="Off, as the supply said when it was last asked.")
+    return Ending(state="never on", words="Never switched on during this walk.")
