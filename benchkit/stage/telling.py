@@ -23,7 +23,7 @@ from benchkit.errors import ModelError
 from benchkit.quantities import show
 from benchkit.stage.draws import Array
 from benchkit.stage.faults import HEALTHY, Fault
-from benchkit.stage.fitting import Data, residual
+from benchkit.stage.fitting import OVERLOAD_SHARE, UNREAD, Data, residual
 from benchkit.stage.hypotheses import Fitted, Library, fit_hypotheses
 from benchkit.stage.observations import Conditions
 from benchkit.stage.points import find_point
@@ -155,7 +155,13 @@ class Report:
     def _views(self, number: int, which: list[int]) -> _Views:
         fit, rows = self.fitted.fit, self.fitted.row[number][which]
         _, u = residual(self.data.take(np.full(len(rows), number)), fit.joint.take(rows), self.lib.model.most)
-        return _Views.of(fit.joint.f[rows], fit.joint.slope[rows], fit.z[:, rows], u.mean(axis=0, keepdims=True))
+        f, slope = self._within(fit.joint.f[rows], fit.joint.slope[rows])
+        return _Views.of(f, slope, fit.z[:, rows], u.mean(axis=0, keepdims=True))
+
+    def _within(self, f: Matrix, slope: Matrix) -> tuple[Matrix, Matrix]:
+        """Readings as far as the meter shows them: beyond its range they all look alike."""
+        over = f >= self.lib.model.most
+        return np.minimum(f, self.lib.model.most), np.where(over[:, :, None], 0.0, slope)
 
     def _alike(self, number: int, order: Index) -> dict[int, list[int]]:
         """Faults that can't be told from each other, nearest first, at most three each, both ways."""
@@ -181,14 +187,15 @@ class Report:
         """Which faults readings like these can't show, averaged over the members of the library."""
         lib = self.lib
         many = len(lib.faults)
-        u = np.hypot(np.median(self.data.u, axis=0), 1e-12)
+        ends = np.where(np.isfinite(lib.model.most), OVERLOAD_SHARE * lib.model.most, UNREAD)
+        u = np.median(np.where(np.isfinite(self.data.y), self.data.u, ends), axis=0)
         factors = []
         for low in range(0, len(lib.whose), many):
             part = slice(low, low + many)
             joint_f, good = lib.joint.f[part], lib.joint.good[part]
             if not good[0]:
                 continue
-            views = _Views.of(joint_f, lib.joint.slope[part], lib.z[:, part], u[None])
+            views = _Views.of(*self._within(joint_f, lib.joint.slope[part]), lib.z[:, part], u[None])
             expected = views.expected(views.f)
             factors.append(np.where(good, np.diag(expected) - expected[:, 0], np.nan))
         if not factors:

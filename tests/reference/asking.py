@@ -32,10 +32,12 @@ COPIES = 40
 """Copies in a deck at first."""
 WITH_METERS = Variant(meters=True)
 WIDE_KNEE, KNEE = "10e-3", "10e-6"
-_OPTIONS, _LOOSER_OPTIONS = (
+_OPTIONS, *_LOOSER_OPTIONS = (
     f".options reltol={relative} abstol={amps} vntol={volts} gmin=1e-12 itl1={{most}} itl2={{most}} numdgt=15"
-    for relative, amps, volts in (("1e-9", "1e-15", "1e-12"), ("1e-7", "1e-12", "1e-9"))
-)
+    for relative, amps, volts in (
+        ("1e-9", "1e-15", "1e-12"), ("1e-7", "1e-12", "1e-9"), ("1e-6", "1e-12", "1e-6"),
+    )
+)  # fmt: skip
 _QUICK, _PATIENT = 60, 2000
 TIGHT, LOOSE, LOOSER, LOOSEST = (
     f".options reltol={relative} abstol={amps} vntol={volts} gmin=1e-18 itl1=100 itl2=200 numdgt=15"
@@ -164,13 +166,14 @@ def _solve(
 
     def halved(some: NDArray[np.intp]) -> None:
         found = _run(netlist, values, start, knee, some, _QUICK)
-        if found is None:
-            found = _run(netlist, values, start, knee, some, _QUICK, _LOOSER_OPTIONS)
-            if found is not None:  # once more from its own solution: see `_alone`
-                own = {node: np.full(len(which), np.nan) for node in nodes}
-                for node, row in zip(nodes, found, strict=True):
-                    own[node][some] = row
-                found = _run(netlist, values, own, knee, some, _QUICK, _LOOSER_OPTIONS)
+        for options in _LOOSER_OPTIONS:
+            if found is None:
+                found = _run(netlist, values, start, knee, some, _QUICK, options)
+                if found is not None:  # once more from its own solution: see `_alone`
+                    own = {node: np.full(len(which), np.nan) for node in nodes}
+                    for node, row in zip(nodes, found, strict=True):
+                        own[node][some] = row
+                    found = _run(netlist, values, own, knee, some, _QUICK, options)
         if found is None and len(some) > 1:
             halved(some[: len(some) // 2])
             halved(some[len(some) // 2 :])
