@@ -18,8 +18,8 @@ The recipe, in the order in which a unit meets it
 A solution counts only when every law was linearised where it is evaluated, and each node's currents add up to less than
 1e-7 of the sum of their magnitudes + 10 pA. Units are done one by one; those that are done leave the batch. An accepted
 unit still goes on until it passes with 0.01 pA in place of 10 pA and a step moves no node by more than `_FINAL_STEP_V`,
-or by next to nothing: 10 pA are millivolts at a node that hardly anything holds. After `_MOST_POLISHING` steps, or
-`_MOST_WANDERING` on which it doesn't pass, it is left as it was.
+or by next to nothing: 10 pA are millivolts at a node that hardly anything holds. After `_MOST_POLISHING` short steps,
+or `_MOST_WANDERING` longer ones, it is left as it is; one that strayed to where it doesn't pass counts as failed.
 """
 
 from __future__ import annotations
@@ -147,6 +147,7 @@ def iterate(
     outcome = Outcome(x.copy(), np.zeros(units, np.bool_), np.zeros(units, np.int64), np.full(units, np.inf))
     live: Index = np.arange(units)
     spent = np.zeros(units, np.int64)  # on a unit since it was first accepted
+    strays = np.zeros(units, np.bool_)
     for iteration in range(most + 1 + _MOST_WANDERING):
         linear = batch.evaluate(x, arguments, start=iteration == 0)
         residual = plan.sum_currents(linear.currents, x, batch.volts)
@@ -154,6 +155,7 @@ def iterate(
             residual[: plan.nodes] += shunt * (x[: plan.nodes] - anchor[: plan.nodes])
         done, fine, exact = _accepted(batch, linear, x, residual)
         outcome.iterations[live] = iteration
+        strays[live] |= outcome.done[live] & ~done
         kept = done | ~outcome.done[live]
         outcome.residual_a[live[kept]] = np.abs(residual[: plan.nodes, kept]).max(axis=0)
         outcome.done[live] |= done
@@ -179,7 +181,8 @@ def iterate(
         longest_v = np.abs(step[: plan.nodes]).max(axis=0)
         polished = done & finite & (longest_v < _FINAL_STEP_V)
         outcome.x[:, live[polished]] = x[:, polished]
-        spent[live] += outcome.done[live] * np.where(done, _MOST_WANDERING // _MOST_POLISHING, 1)
+        strays[live[polished]] = False
+        spent[live] += outcome.done[live] * np.where(polished, _MOST_WANDERING // _MOST_POLISHING, 1)
         stays = finite & ~(polished & (fine | (longest_v < _NO_STEP_V))) & (spent[live] < _MOST_WANDERING)
         index = np.flatnonzero(stays if iteration < most else stays & outcome.done[live])
         if not len(index):
@@ -189,6 +192,7 @@ def iterate(
             live, x, batch, arguments = live[index], x[:, index], batch.take(index), arguments.take(index)
             shunt = None if shunt is None else shunt[index]
             anchor = None if anchor is None else anchor[:, index]
+    outcome.done &= ~strays
     return outcome
 
 

@@ -138,6 +138,8 @@ class Suspected(Event):
     seconds : float
     problem : str
         Why the model had no answer at all; "" when it had one.
+    explained : bool
+        Whether at least one explanation fits; otherwise bad ones were compared.
     """
 
     name: ClassVar[str] = "suspected"
@@ -152,3 +154,4 @@ class Suspected(Event):
     unsolved: tuple[str, ...] = ()
     seconds: float = 0.0
     problem: str = ""
+    explained: bool = True

@@ -93,6 +93,11 @@ def heading_words(suspected: Suspected) -> str:
         return "The model has no answer about suspects."
     first = suspected.suspects[0]
     readings = f"{suspected.readings} reading" + ("" if suspected.readings == 1 else "s")
+    if not suspected.explained:
+        return (
+            f"No single fault explains the {readings} well: look for more than one, or for a probe in the wrong place. "
+            f"Least bad: {fault_words(first.fault)}."
+        )
     if first.fault == HEALTHY:
         return (
             f"No single fault explains the {readings} better than chance does ({chance_words(first.probability)}). "

@@ -155,6 +155,7 @@ def _told(design: Design, action: Suspect, suspicion: Suspicion) -> Suspected:
         readings=len(action.known),
         unsolved=tuple(name(fault) for fault in suspicion.unsolved),
         seconds=suspicion.seconds,
+        explained=suspicion.explained,
     )
 
 

@@ -119,11 +119,14 @@ class Fitted:
     row : array of int of shape (sets, hypotheses)
         Where a hypothesis stands in ``fit``; -1 when it was not pursued.
     fit : Fit
+    misfit : array of shape (sets,)
+        Cost of the best explanation over what it should be at most; 1 when it is no more than that.
     """
 
     log_posterior: Array
     row: Index
     fit: Fit
+    misfit: Array
 
 
 def fit_hypotheses(lib: Library, data: Data) -> Fitted:
@@ -156,8 +159,13 @@ def fit_hypotheses(lib: Library, data: Data) -> Fitted:
             best.add(*_fit(lib, data, starts[:, turn], chosen, "borrow" if turn else "start"))
     whole = best.fit()
     evidence[best.row >= 0] = whole.log_evidence[best.row[best.row >= 0]]
-    posterior = evidence + lib.log_prior
-    return Fitted(posterior - posterior.max(axis=1, keepdims=True), best.row, whole)
+    # When even the best explanation leaves far more than the uncertainties allow, something is not in the model: then
+    # all uncertainties are taken to be too small by one factor, as is usual for a fit that is too bad.
+    count = data.y.shape[1]
+    misfit = np.maximum(best.cost.min(axis=1) / (count + 3.0 * np.sqrt(2.0 * count)), 1.0)
+    misfit[~np.isfinite(misfit)] = 1.0
+    posterior = evidence / misfit[:, None] + lib.log_prior
+    return Fitted(posterior - posterior.max(axis=1, keepdims=True), best.row, whole, misfit)
 
 
 @dataclass

@@ -65,6 +65,8 @@ class Suspicion:
     unsolved : tuple of Fault
         Hypotheses that have no solution; they have probability 0.
     seconds : float
+    explained : bool
+        Whether at least one hypothesis explains the readings; otherwise the probabilities compare bad explanations.
     """
 
     suspects: tuple[Suspect, ...]
@@ -73,3 +75,4 @@ class Suspicion:
     hypotheses: int
     unsolved: tuple[Fault, ...]
     seconds: float
+    explained: bool = True

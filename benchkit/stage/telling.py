@@ -39,6 +39,9 @@ LEAST_COMPARED = 1e-5
 """Hypotheses of at least this probability are compared with each other."""
 WELL_REFUTED = 3.0
 """A fault is not unseen when the readings speak against it by more than this (nats)."""
+SURELY_HEALTHY = 0.9
+WELL_EXPLAINED = 3.0
+"""A best fit that costs more than so many times what it should explains the readings badly."""
 MOST_PROBES = 5
 LEAST_GAIN_BITS = 0.01
 PROBED_HYPOTHESES = 10
@@ -110,15 +113,16 @@ class Report:
 
     def suspicions(self) -> list[Suspicion]:
         """Give one answer a set of readings."""
-        hidden = self._hidden()
-        healthy_probes: tuple[Probe, ...] | None = None
+        typical: tuple[Probe, ...] | None = None
         answers = []
         for number in range(len(self.data.y)):
-            sure = self.probability[number, 0] > 0.9
-            if sure and healthy_probes is None:
-                healthy_probes = self._probes(number, hidden)
-            probes = healthy_probes if sure and healthy_probes is not None else self._probes(number, hidden)
-            answers.append(self._one(number, hidden, probes))
+            if self.probability[number, 0] > SURELY_HEALTHY:
+                # What would tell most about a healthy unit hardly hangs on its readings: worked out once for all.
+                typical = self._typical_probes() if typical is None else typical
+                probes = typical
+            else:
+                probes = self._probes(number)
+            answers.append(self._one(number, self._hidden(self.data.take(np.array([number]))), probes))
         return answers
 
     def _one(self, number: int, hidden: Array, probes: tuple[Probe, ...]) -> Suspicion:
@@ -143,7 +147,7 @@ class Report:
         unsolved = tuple(faults[k] for k in np.flatnonzero(~self.solved))
         return Suspicion(
             suspects=tuple(suspects), probe_next=probes, unseen=unseen, hypotheses=len(faults), unsolved=unsolved,
-            seconds=0.0,
+            seconds=0.0, explained=bool(self.fitted.misfit[number] <= WELL_EXPLAINED),
         )  # fmt: skip
 
     def _compared(self, number: int, order: Index, most: int) -> list[int]:
@@ -183,12 +187,12 @@ class Report:
                 second.append(top[i])
         return result
 
-    def _hidden(self) -> Array:
-        """Which faults readings like these can't show, averaged over the members of the library."""
+    def _hidden(self, data: Data) -> Array:
+        """Which faults one unit's readings can't show: the median over the members of the library."""
         lib = self.lib
         many = len(lib.faults)
         ends = np.where(np.isfinite(lib.model.most), OVERLOAD_SHARE * lib.model.most, UNREAD)
-        u = np.median(np.where(np.isfinite(self.data.y), self.data.u, ends), axis=0)
+        u = np.where(np.isfinite(data.y[0]), data.u[0], ends)
         factors = []
         for low in range(0, len(lib.whose), many):
             part = slice(low, low + many)
@@ -246,16 +250,30 @@ class Report:
             for r in best
         )  # fmt: skip
 
-    def _probes(self, number: int, hidden: Array) -> tuple[Probe, ...]:
-        """The readings that are expected to tell most, of those that could still be taken."""
-        lib, probability = self.lib, self.probability[number]
-        if not self.candidates:
+    def _probes(self, number: int) -> tuple[Probe, ...]:
+        """The readings that are expected to tell most about one unit, of those that could still be taken."""
+        probability = self.probability[number]
+        top = self._compared(number, np.argsort(-probability, kind="stable"), PROBED_HYPOTHESES)
+        z = self.fitted.fit.z[:, self.fitted.row[number][top]]
+        return self._most_telling(top, z, probability[top], self.data.take(np.full(len(top), number)))
+
+    def _typical_probes(self) -> tuple[Probe, ...]:
+        """The same for a nominal healthy unit: what tells it from the likeliest of the faults that are not seen yet."""
+        lib = self.lib
+        f = np.minimum(lib.joint.f[0], lib.model.most)
+        floor = np.array([PROBE_FLOOR[find_point(lib.model.design, point).unit] for _, point in lib.model.readings])
+        data = Data(f[None], np.hypot(PROBE_SHARE * np.abs(f), floor)[None])
+        hidden = self._hidden(data)
+        order = np.argsort(-lib.log_prior, kind="stable")
+        top = [0, *(k for k in order.tolist() if k and hidden[k] and self.solved[k])][:PROBED_HYPOTHESES]
+        z = np.zeros((len(lib.model.coordinates), len(top)))
+        return self._most_telling(top, z, np.exp(lib.log_prior[top]), data.take(np.zeros(len(top), np.intp)))
+
+    def _most_telling(self, top: list[int], fitted_z: Array, probability: Array, data: Data) -> tuple[Probe, ...]:
+        """The readings that tell most about which of some hypotheses holds, each with its unit and its readings."""
+        lib = self.lib
+        if not self.candidates or len(top) < 2:
             return ()
-        order = np.argsort(-probability, kind="stable")
-        top = self._compared(number, order, PROBED_HYPOTHESES)
-        if len(top) < 2:
-            return ()
-        row = self.fitted.row[number][top]
         known = len(lib.model.readings)
         held = {stated: now for now, stated in self.original.items()}
         candidates = list(dict.fromkeys(
@@ -263,7 +281,7 @@ class Report:
         ))  # fmt: skip
         model = wider(lib, candidates)
         z = np.zeros((len(model.coordinates), len(top)))
-        z[: len(lib.model.coordinates)] = self.fitted.fit.z[:, row]
+        z[: len(lib.model.coordinates)] = fitted_z
         faults = [lib.faults[k] for k in top]
         there = model.at(z, faults)
         usable = there.good
@@ -273,7 +291,7 @@ class Report:
         columns = [at[key] for key in lib.model.readings]
         wanted = [at[key] for key in candidates if key in at and at[key] not in columns]
         read = Joint(there.f[:, columns], there.slope[:, columns], there.doubt[:, columns], usable, z, ())
-        _, u = residual(self.data.take(np.full(len(top), number)), read, lib.model.most)
+        _, u = residual(data, read, lib.model.most)
         scaled = there.slope[:, columns] / u[:, :, None]
         gram = scaled @ np.swapaxes(scaled, 1, 2)
         gram[:, range(known), range(known)] += 1.0
@@ -286,7 +304,7 @@ class Report:
         floor = np.array([PROBE_FLOOR[unit] for unit in units])
         mean = np.minimum(there.f[:, wanted], most)
         sd = np.sqrt(variance + np.hypot(PROBE_SHARE * np.abs(mean), floor) ** 2)
-        weight = probability[top] * usable
+        weight = probability * usable
         gains = information_bits(weight / weight.sum(), mean, sd)
         probes = []
         for q in np.argsort(-gains, kind="stable")[:MOST_PROBES].tolist():

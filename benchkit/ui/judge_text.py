@@ -33,7 +33,7 @@ def judged_text(table: Table, name: str) -> str:
         lines += ["", *_wrapped(f"{rule.rule}: {rule.verdict}. {rule.why}", "  ")]
         if rule.would_decide:
             lines += _wrapped(f"  What would decide it: {rule.would_decide}.", "  ")
-    lines += ["", *suspect_lines(table.suspicion.suspects)]
+    lines += ["", *suspect_lines(table.suspicion.suspects, table.suspicion.explained)]
     lines += probe_lines(table.suspicion.probe_next)
     lines += unseen_lines(table.suspicion.unseen)
     lines += ["", *_wrapped(f"Readings without an uncertainty were taken to be by: {table.accuracy.name}.", "  ")]
@@ -66,9 +66,15 @@ def condition_words(condition: Condition | Unpowered) -> str:
     return f"rails {rails}, {limit}, {where}, {condition.when}"
 
 
-def suspect_lines(suspects: Sequence[Suspect]) -> list[str]:
+def suspect_lines(suspects: Sequence[Suspect], explained: bool = True) -> list[str]:
     """The few likeliest suspects, with what speaks for each."""
     lines = ["What would explain these readings, if one part is at fault at most:"]
+    if not explained:
+        lines = _wrapped(
+            "No single fault of the table explains these readings well: look for more than one fault, a probe in the"
+            " wrong place, or a condition that was not as stated. The least bad explanations:",
+            "  ",
+        )
     shown = [one for one in suspects[:_SHOWN_SUSPECTS] if one.probability >= _LEAST_SHOWN] or list(suspects[:1])
     for one in shown:
         lines += _wrapped(f"  {_share(one.probability):>6s}  {_name(one.fault)}", " " * 10)

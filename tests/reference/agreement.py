@@ -35,8 +35,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from benchkit.circuit.equations import SUPPLY_KNEE_OHM, SUPPLY_LEAK_S
-from benchkit.circuit.netlist import GROUND, Supply
+from benchkit.circuit.netlist import GROUND
 from benchkit.stage.conditions import Condition
 from benchkit.stage.design import Design
 from benchkit.stage.draws import draw, nominal, seeds
@@ -95,20 +94,13 @@ def points(design: Design, ours: Solved, answer: Answer) -> dict[str, Array]:
         for name, (red, black) in stage.between.items()
         if name in ours.points and name not in stage.currents
     }
-    return found | rail_currents(design, ours, answer)
+    return found | rail_currents(design, answer)
 
 
-def rail_currents(design: Design, ours: Solved, answer: Answer) -> dict[str, Array]:
-    """Rail currents (A): what the supplies deliver by their law at ngspice's voltages."""
-    stage, found = build(design), {}
-    volts = answer.volts | {GROUND: np.zeros(ours.units)}
-    for name, element in stage.currents.items():
-        supply = stage.netlist.elements[element]
-        assert isinstance(supply, Supply)
-        lack_v = ours.solution.values[f"{element}.volts"] - (volts[supply.plus] - volts[supply.minus])
-        limit_a = ours.solution.values[f"{element}.limit_a"]
-        found[name] = limit_a * np.tanh(lack_v / (limit_a * SUPPLY_KNEE_OHM)) + SUPPLY_LEAK_S * lack_v
-    return found
+def rail_currents(design: Design, answer: Answer) -> dict[str, Array]:
+    """Rail currents (A), by ngspice's ammeters; none when there are none."""
+    currents = build(design).currents
+    return {point: answer.amps[element] for point, element in currents.items() if element in answer.amps}
 
 
 def fingerprint(ours: Solved) -> float:
@@ -150,7 +142,7 @@ def make(design: Design) -> Reference:
         fingerprints=(fingerprint(ours), fingerprint(broken)),
         healthy_v=np.array(list(well.volts.values())),
         faulty_v=np.array(list(ill.volts.values())),
-        faulty_a=np.array(list(rail_currents(design, broken, ill).values())),
+        faulty_a=np.array(list(rail_currents(design, ill).values())),
         metered=metered,
     )
 

@@ -14,12 +14,12 @@ from __future__ import annotations
 
 import subprocess
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 
 import numpy as np
 from numpy.typing import NDArray
 
-from benchkit.circuit.netlist import Netlist
+from benchkit.circuit.netlist import Netlist, Supply
 from benchkit.stage.design import Design
 from benchkit.stage.operate import Solved
 from benchkit.stage.runs import NO_METER_OHM, compiled
@@ -57,9 +57,10 @@ ATTEMPTS = (
 
 @dataclass(frozen=True)
 class Answer:
-    """ngspice's answer: voltages by node, shape (copies,), NaN where it has none."""
+    """ngspice's answer: voltages by node and supplies' currents, shape (copies,), NaN where it has none."""
 
     volts: dict[str, Array]
+    amps: dict[str, Array] = field(default_factory=dict)
 
     @property
     def solved(self) -> NDArray[np.bool_]:
@@ -89,19 +90,23 @@ def ask(design: Design, ours: Solved) -> Answer:
 def ask_one_by_one(design: Design, ours: Solved, which: Sequence[int] | None = None) -> Answer:
     """Let ngspice solve units of a solution of ours, each in a deck of its own with plain junctions."""
     nodes = build(design).netlist.nodes()
-    table = np.full((len(nodes), ours.units), np.nan)
+    elements = build(design).netlist.elements
+    supplies = [name for name in elements if isinstance(elements[name], Supply)]
+    table = np.full((len(nodes) + len(supplies), ours.units), np.nan)
     for unit in range(ours.units) if which is None else which:
         values = {key: float(value[unit if value.size > 1 else 0]) for key, value in ours.solution.values.items()}
         start = {node: float(ours.solution.voltage(node)[unit]) for node in nodes}
         found = _alone(build(design).netlist, values, start)
         if found is not None:
-            table[:, unit] = [found[node] for node in nodes]
-    return Answer(dict(zip(nodes, table, strict=True)))
+            table[:, unit] = [found[name] for name in (*nodes, *supplies)]
+    return Answer(dict(zip(nodes, table, strict=False)), dict(zip(supplies, table[len(nodes) :], strict=True)))
 
 
 def _alone(netlist: Netlist, values: Mapping[str, float], start: Mapping[str, float]) -> dict[str, float] | None:
-    """Voltages of one circuit in a deck of its own, by the first attempt that has a solution."""
+    """Voltages by node and currents by supply in a deck of its own, by the first attempt that has a solution."""
     text, names = ngspice.deck(netlist, [values], plain_junctions=True)
+    supplies = {f"i_{k}_0": name for k, (name, e) in enumerate(netlist.elements.items()) if isinstance(e, Supply)}
+    shown = {f"{short}_0": node for node, short in names.items()} | supplies
     for digits, options in ATTEMPTS:
         lines = [options if line.startswith(".options") else line for line in text.splitlines()]
         if digits is not None:
@@ -110,7 +115,7 @@ def _alone(netlist: Netlist, values: Mapping[str, float], start: Mapping[str, fl
             lines[at:at] = [f".nodeset v({names[node]}_0)={volts:.{digits}f}" for node, volts in start.items()]
         if DIRECTLY in options:
             lines.insert(lines.index(".control") + 1, "optran 1 0 0 0 0 0")
-        found = _voltages(lines, names)
+        found = _results(lines, shown)
         if found is None:
             continue
         if TIGHT in options:
@@ -118,17 +123,17 @@ def _alone(netlist: Netlist, values: Mapping[str, float], start: Mapping[str, fl
         # Once more from its own solution: what a loose tolerance left of the way, Newton's method goes now.
         again = [line for line in lines if not line.startswith(".nodeset")]
         at = again.index(".control")
-        again[at:at] = [f".nodeset v({names[node]}_0)={volts:.15g}" for node, volts in found.items()]
-        return _voltages(again, names) or found
+        again[at:at] = [f".nodeset v({names[node]}_0)={volts:.15g}" for node, volts in found.items() if node in names]
+        return _results(again, shown) or found
     return None
 
 
-def _voltages(lines: Sequence[str], names: Mapping[str, str]) -> dict[str, float] | None:
+def _results(lines: Sequence[str], shown: Mapping[str, str]) -> dict[str, float] | None:
     try:
         found, _ = ngspice.run_text("\n".join(lines) + "\n", timeout_s=20.0)
     except (RuntimeError, subprocess.TimeoutExpired):
         return None
-    return {node: found[f"{name}_0"] for node, name in names.items()}
+    return {name: found[key] for key, name in shown.items()}
 
 
 def _metered(
