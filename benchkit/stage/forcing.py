@@ -4,7 +4,8 @@ Against its limit a supply is a current source, and what voltage its rail falls 
 the likeliest unit would go along the edge of a knife. Read the other way round the same circuit is well behaved: with
 the rail at the voltage that was read, the current must be the limit. So, where a rail was read clearly below its
 setting, every hypothesis is solved with that rail held at the reading, and has to explain the current: the one that was
-read, or else the limit, which a supply keeps within a percent or so (common practice).
+read, or else the limit, which a supply keeps within a percent or so (common practice). Both rails must have been read: one that nobody looked at
+may stand against its own limit.
 """
 
 from __future__ import annotations
@@ -58,6 +59,12 @@ def held_at_readings(observations: Sequence[Observation]) -> tuple[list[Observat
         read_v = one.value if one.point == "rail+" else -one.value
         if math.isfinite(read_v) and read_v < FALLEN_SHARE * set_v - FALLEN_V:
             fallen.setdefault(one.conditions, {})[one.point] = max(read_v, LEAST_HELD_V)
+    seen = {(one.conditions, one.point) for one in observations if math.isfinite(one.value)}
+    fallen = {
+        conditions: rails
+        for conditions, rails in fallen.items()
+        if all((conditions, rail) in seen for rail in _rails_of(conditions))
+    }
     if not fallen:
         return list(observations), {}
     changed = {conditions: _held(conditions, rails) for conditions, rails in fallen.items()}
@@ -79,6 +86,12 @@ def held_at_readings(observations: Sequence[Observation]) -> tuple[list[Observat
                     )
                 )  # fmt: skip
     return result, {new: old for old, new in changed.items()}
+
+
+def _rails_of(conditions: Conditions) -> tuple[str, ...]:
+    first = conditions[0]
+    assert isinstance(first, Condition)
+    return ("rail+",) if first.negative_v == 0.0 else ("rail+", "rail-")
 
 
 def _held(conditions: Conditions, rails: dict[str, float]) -> Conditions:

@@ -152,7 +152,7 @@ def solve_unpowered(
 
 
 def nominal_range(design: Design, point: str, trimmer: TrimmerPosition = "unknown") -> MeterRange:
-    """Range that an unpowered point is read on: what the nominal unit asks for, its trimmer in the middle if unknown."""
+    """Range for an unpowered point: what the nominal unit asks for, its trimmer in the middle if unknown."""
     return _nominal_unit(design, Unpowered(point=point, trimmer="unknown" if trimmer == "target" else trimmer)).range
 
 

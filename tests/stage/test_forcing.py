@@ -33,11 +33,19 @@ def test_what_is_no_number_says_nothing() -> None:
     assert held_at_readings(some) == (some, {})
 
 
+def test_one_rail_that_nobody_read_may_limit_too() -> None:
+    some = [observed(LIMITED, "rail+", 3.0)]
+    assert held_at_readings(some) == (some, {})
+    single = [observed(replace(LIMITED, negative_v=0.0), "rail+", 3.0)]
+    assert held_at_readings(single)[1]
+
+
 @pytest.mark.parametrize(("rail", "read_v", "held_v"), [("rail+", 3.0, (3.0, -15.0)), ("rail-", -4.0, (15.0, -4.0))])
 def test_a_fallen_rail_is_held_at_its_reading(rail: str, read_v: float, held_v: tuple[float, float]) -> None:
+    standing = ("rail-", -15.0) if rail == "rail+" else ("rail+", 15.0)
     other = observed(replace(LIMITED, trimmer="most"), "spread", 2.0)
     unpowered = observed(Unpowered(point="ohm.rails"), "ohm.rails", 3e3)
-    some = [observed(LIMITED, "spread", 1.0), observed(LIMITED, rail, read_v), other, unpowered]
+    some = [observed(LIMITED, "spread", 1.0), observed(LIMITED, rail, read_v), other, unpowered, observed(LIMITED, *standing)]
     result, original = held_at_readings(some)
     changed = result[0].conditions[0]
     assert isinstance(changed, Held)
@@ -45,22 +53,28 @@ def test_a_fallen_rail_is_held_at_its_reading(rail: str, read_v: float, held_v: 
     assert (changed.positive_v, changed.negative_v, changed.trimmer) == (15.0, -15.0, "least")
     assert changed.limit_a is not None
     assert changed.limit_a > 1.0
-    assert [one.point for one in result] == ["spread", rail, "spread", "ohm.rails", f"{rail}.current"]
-    assert [one.value for one in result[:4]] == [one.value for one in some]
+    assert [one.point for one in result] == ["spread", rail, "spread", "ohm.rails", standing[0], f"{rail}.current"]
+    assert [one.value for one in result[:5]] == [one.value for one in some]
     assert result[2:4] == [other, unpowered]
-    assert result[4].value == 0.05
-    assert result[4].standard_uncertainty == pytest.approx(LIMIT_SHARE * 0.05)
+    assert result[5].value == 0.05
+    assert result[5].standard_uncertainty == pytest.approx(LIMIT_SHARE * 0.05)
     assert original == {(changed,): (LIMITED,)}
 
 
 def test_a_current_that_was_read_is_not_made_up() -> None:
-    result, _ = held_at_readings([observed(LIMITED, "rail+", 3.0), observed(LIMITED, "rail+.current", 0.0493)])
-    assert [(one.point, one.value) for one in result] == [("rail+", 3.0), ("rail+.current", 0.0493)]
+    some = [
+        observed(LIMITED, "rail+", 3.0),
+        observed(LIMITED, "rail+.current", 0.0493),
+        observed(LIMITED, "rail-", -15.0),
+    ]
+    result, original = held_at_readings(some)
+    assert original
+    assert [(one.point, one.value) for one in result] == [(one.point, one.value) for one in some]
     assert result[0].conditions == result[1].conditions
 
 
 def test_a_rail_at_nothing_is_still_a_rail() -> None:
-    result, _ = held_at_readings([observed(LIMITED, "rail+", -0.001)])
+    result, _ = held_at_readings([observed(LIMITED, "rail+", -0.001), observed(LIMITED, "rail-", -15.0)])
     held = result[0].conditions[0]
     assert isinstance(held, Held)
     assert 0.0 < held.held_v[0] < 0.01
@@ -68,7 +82,9 @@ def test_a_rail_at_nothing_is_still_a_rail() -> None:
 
 def test_every_end_of_the_conditions_is_held() -> None:
     ends: Conditions = (LIMITED, replace(LIMITED, when="warm"))
-    some = [replace(observed(LIMITED, "rail+", 3.0), conditions=ends)]
+    some = [
+        replace(observed(LIMITED, point, volts), conditions=ends) for point, volts in (("rail+", 3.0), ("rail-", -15.0))
+    ]
     result, original = held_at_readings(some)
     assert all(isinstance(one, Held) and one.held_v == (3.0, -15.0) for one in result[0].conditions)
     assert [getattr(one, "when", "") for one in result[0].conditions] == ["cold", "warm"]

@@ -52,7 +52,9 @@ def test_the_whole_text(table: Table) -> None:
         row = next(line for line in lines if line.startswith(judged.entry.reading.point + " "))
         assert row.endswith(judged.judgement.verdict)
     assert "overload" in told
-    assert "What would explain these readings, if one part is at fault at most:" in told
+    heading = "What would explain these readings, if one part is at fault at most:"
+    assert (heading in told) == table.suspicion.explained
+    assert ("explains these readings well" in told) != table.suspicion.explained
     assert "Not tested" in told
     assert "rails 4.00 V and -4.00 V, current limit 50.0 mA, trimmer at its least-bias end, cold" in told
     assert "unpowered, trimmer at its least-bias end" in told
