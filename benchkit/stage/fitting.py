@@ -35,6 +35,7 @@ ENOUGH = 0.2
 OVERLOAD_SHARE = 0.01
 """Standard uncertainty of where an overload begins, as a share of it."""
 UNREAD = 1e6
+STEEPEST = 1e6
 MODEL_SHARE = 1e-5
 MODEL_FLOOR = 2e-6
 """What the solver itself may be off, as a share and at least (in the reading's unit)."""
@@ -103,6 +104,15 @@ def cost_of(data: Data, z: Array, joint: Joint, most: Array) -> Array:
     return np.where(joint.good, (z**2).sum(axis=0) + ((left / u) ** 2).sum(axis=1), np.inf)
 
 
+def in_uncertainties(slope: Matrix, u: Matrix) -> Matrix:
+    """Slopes in units of the readings' uncertainties.
+
+    They are held below a million, as where a supply is just about to let go of a rail: beyond it a first order means
+    nothing, and the matrices could not be told from singular ones.
+    """
+    return np.clip(slope / u[:, :, None], -STEEPEST, STEEPEST)
+
+
 def step_from(data: Data, z: Array, joint: Joint, most: Array) -> tuple[Array, Array, Array]:
     """Gauss-Newton step of every unit.
 
@@ -115,7 +125,7 @@ def step_from(data: Data, z: Array, joint: Joint, most: Array) -> tuple[Array, A
         Of S S^T + R.
     """
     left, u = residual(data, joint, most)
-    scaled = joint.slope / u[:, :, None]
+    scaled = in_uncertainties(joint.slope, u)
     gram = scaled @ np.swapaxes(scaled, 1, 2)
     gram[:, range(gram.shape[1]), range(gram.shape[1])] += 1.0
     aim = (left + np.einsum("urk,ku->ur", joint.slope, z)) / u

@@ -23,7 +23,7 @@ from benchkit.errors import ModelError
 from benchkit.quantities import show
 from benchkit.stage.draws import Array
 from benchkit.stage.faults import HEALTHY, Fault
-from benchkit.stage.fitting import OVERLOAD_SHARE, UNREAD, Data, residual
+from benchkit.stage.fitting import OVERLOAD_SHARE, UNREAD, Data, in_uncertainties, residual
 from benchkit.stage.hypotheses import Fitted, Library, fit_hypotheses
 from benchkit.stage.observations import Conditions
 from benchkit.stage.points import find_point
@@ -70,7 +70,7 @@ class _Views:
 
     @classmethod
     def of(cls, f: Matrix, slope: Matrix, z: Array, u: Matrix) -> _Views:
-        scaled = slope / u[:, :, None]
+        scaled = in_uncertainties(slope, u)
         gram = scaled @ np.swapaxes(scaled, 1, 2)
         gram[:, range(gram.shape[1]), range(gram.shape[1])] += 1.0
         inverse = np.asarray(np.linalg.inv(gram), dtype=np.float64)
@@ -292,7 +292,7 @@ class Report:
         wanted = [at[key] for key in candidates if key in at and at[key] not in columns]
         read = Joint(there.f[:, columns], there.slope[:, columns], there.doubt[:, columns], usable, z, ())
         _, u = residual(data, read, lib.model.most)
-        scaled = there.slope[:, columns] / u[:, :, None]
+        scaled = in_uncertainties(there.slope[:, columns], u)
         gram = scaled @ np.swapaxes(scaled, 1, 2)
         gram[:, range(known), range(known)] += 1.0
         slope = there.slope[:, wanted]
