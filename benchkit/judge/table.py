@@ -21,7 +21,8 @@ Which rules apply to readings without a procedure:
 
 Then the suspects (`benchkit.stage.suspects`): which single fault would explain the readings, what to probe next, and
 what the readings could not show. When every reading passes but some fault is likelier than a healthy unit, the verdict
-over all is undecided: the limits of single readings can't see what all of them together say.
+over all is undecided: the limits of single readings can't see what all of them together say. The same when nothing
+explains the readings, or when a point was read twice under one condition with values that contradict each other.
 
 Files of several units are judged together: what was read under the same conditions shares its limits and hypotheses.
 """
@@ -55,6 +56,8 @@ LEAST_SHARE_OF_TARGET: Final = 0.25
 SOURCE: Final = "the model"
 REJECTION_COVERAGE: Final = 0.9973
 """A reading fails only when it lies outside its limits by its uncertainty at this coverage; nearer, it is undecided."""
+DISAGREEING: Final = 5.0
+"""Readings of one point under one condition that differ by more than so many standard uncertainties contradict."""
 RAIL_ALLOWANCE: Final = 0.01
 LEAST_RAIL_ALLOWANCE_V: Final = 0.1
 """How far a rail may be off its setting: a share of it, and at least so many volts."""
@@ -107,7 +110,23 @@ class Table:
     def verdict(self) -> Verdict:
         """The verdict over all; see the top of this module."""
         verdict = overall([judged.judgement.verdict for judged in self.readings], self.rules)
-        return "undecided" if verdict == "pass" and self.suspicion.suspects[0].fault != HEALTHY else verdict
+        sound = self.suspicion.suspects[0].fault == HEALTHY and self.suspicion.explained and not self.contradictions
+        return verdict if verdict != "pass" or sound else "undecided"
+
+    @property
+    def contradictions(self) -> tuple[str, ...]:
+        """Points that were read more than once under the same condition, with values that can't be the same."""
+        groups: dict[tuple[object, str], list[Reading]] = {}
+        for judged in self.readings:
+            groups.setdefault((judged.entry.condition, judged.entry.reading.point), []).append(judged.entry.reading)
+        found = []
+        for (_, point), several in groups.items():
+            values = [one.value for one in several if one.value is not None]
+            u = max((one.standard_uncertainty or 0.0) for one in several)
+            mixed = bool(values) and len(values) < len(several)
+            if mixed or (len(values) > 1 and max(values) - min(values) > DISAGREEING * u):
+                found.append(point)
+        return tuple(dict.fromkeys(found))
 
     def as_json(self) -> dict[str, Any]:
         """Give the object that ``benchkit judge --json`` prints; what is no number is None."""
@@ -140,6 +159,7 @@ class Table:
             ],
             "probe_next": [{"point": probe.point, "why": probe.why} for probe in self.suspicion.probe_next],
             "unseen": [_fault(fault) for fault in self.suspicion.unseen],
+            "explained": self.suspicion.explained,
         }
 
 

@@ -139,7 +139,12 @@ def judge(
         verdict, why = "undecided", f"The meter's {shown} is wider than the limits, {limits}."
     elif inside:
         verdict = "pass"
-        why = f"{shown} {'lies within' if limits.hold(value) else 'reaches back into'} {limits}."
+        if limits.hold(value - expanded) and limits.hold(value + expanded):
+            why = f"{shown} lies within {limits}."
+        elif limits.hold(value):
+            why = f"{shown}: the value lies within {limits}; its uncertainty reaches over, which this rule accepts."
+        else:
+            why = f"{shown} reaches back into {limits}, which this rule accepts."
     elif outside:
         verdict, why = "fail", f"{shown} lies outside {limits}."
     else:

@@ -171,7 +171,8 @@ def ensemble(design: Design, condition: Condition, units: int = DEFAULT_UNITS, s
         raise ModelError(
             f"The trimmer of {design.name} reaches the target in {np.count_nonzero(good)} of {units} units",
             "a target within the trimmer's travel in most units",
-            "Check the spreader's resistors and the target in the design file",
+            "Check the rails, limit and temperature that were asked for, or the spreader's resistors and the target in"
+            " the design file",
         )
     return Ensemble(nominal=unit, drawn=drawn, parameters=parameters, good=good)
 

@@ -10,7 +10,8 @@ falls. The evidence is Laplace's approximation at the best z,
 
 so that no ensemble limits how finely readings are weighed: thirty of them at 0.03 % are taken at their worth.
 
-A reading beyond the meter's range says only that f lies beyond it: it has no part in J while f does.
+A reading beyond the meter's range says only that f lies beyond it: it has no part in J while f does. It is an event and
+no number, so that it has no density and no part in the determinant of R either.
 """
 
 from __future__ import annotations
@@ -132,7 +133,9 @@ def step_from(data: Data, z: Array, joint: Joint, most: Array) -> tuple[Array, A
     lower = np.linalg.cholesky(gram)
     solved = np.linalg.solve(gram, aim[:, :, None])[:, :, 0]
     moved = np.einsum("urk,ur->ku", scaled, solved)
-    log_determinant = 2.0 * np.log(np.diagonal(lower, axis1=1, axis2=2)).sum(axis=1) + 2.0 * np.log(u).sum(axis=1)
+    log_determinant = 2.0 * np.log(np.diagonal(lower, axis1=1, axis2=2)).sum(axis=1) + 2.0 * (
+        np.log(u) * np.isfinite(data.y)
+    ).sum(axis=1)
     return moved, (aim * solved).sum(axis=1), log_determinant
 
 

@@ -4,8 +4,8 @@ Against its limit a supply is a current source, and what voltage its rail falls 
 the likeliest unit would go along the edge of a knife. Read the other way round the same circuit is well behaved: with
 the rail at the voltage that was read, the current must be the limit. So, where a rail was read clearly below its
 setting, every hypothesis is solved with that rail held at the reading, and has to explain the current: the one that was
-read, or else the limit, which a supply keeps within a percent or so (common practice). Both rails must have been read: one that nobody looked at
-may stand against its own limit.
+read, or else the limit, which a supply keeps within a percent or so (common practice). Both rails must have been read:
+one that nobody looked at may stand against its own limit.
 """
 
 from __future__ import annotations

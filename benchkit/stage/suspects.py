@@ -22,6 +22,7 @@ uncertain that still is.
 
 from __future__ import annotations
 
+import math
 import time
 from collections.abc import Sequence
 from dataclasses import replace
@@ -29,13 +30,14 @@ from dataclasses import replace
 import numpy as np
 
 from benchkit.stage.conditions import Condition, Unpowered
-from benchkit.stage.design import Design
+from benchkit.stage.design import Design, target_drop_v
 from benchkit.stage.faults import HEALTHY, faults_of, prior_of
 from benchkit.stage.fitting import Data
 from benchkit.stage.forcing import held_at_readings
 from benchkit.stage.hypotheses import Library, library
 from benchkit.stage.observations import Conditions, Observation
 from benchkit.stage.points import points_of
+from benchkit.stage.readouts import Matrix
 from benchkit.stage.suspicion import Evidence, Probe, Suspect, Suspicion
 from benchkit.stage.telling import Report
 from benchkit.stage.unit_model import layout_of, own
@@ -82,7 +84,7 @@ def suspect_many(
     """
     found: list[Suspicion | None] = [None] * len(sets)
     groups: dict[tuple[tuple[Conditions, str], ...], list[int]] = {}
-    held = [held_at_readings(observations) for observations in sets]
+    held = [held_at_readings([*observations, *at_target(design, observations)]) for observations in sets]
     for number, (observations, _) in enumerate(held):
         keys = dict.fromkeys((one.conditions, one.point) for one in observations)
         groups.setdefault(tuple(keys), []).append(number)
@@ -97,12 +99,33 @@ def suspect_many(
             told = tuple(pair for pair in wanted if pair not in stated)
             # conditions with rails held at one unit's readings will not come again
             lib = Library(design, layout_of(readings)) if original else library(design, layout_of(readings))
-            data = _data(lib, [held[number][0] for number in members])
-            answers = Report(lib, data, told, original).suspicions()
+            data, shown = _data(lib, [held[number][0] for number in members])
+            answers = Report(lib, data, told, original, shown).suspicions()
         each = (time.perf_counter() - began) / len(members)
         for number, answer in zip(members, answers, strict=True):
             found[number] = replace(answer, seconds=each)
     return [one for one in found if one is not None]
+
+
+def at_target(design: Design, observations: Sequence[Observation]) -> list[Observation]:
+    """What a condition says that was trimmed to the target, where nobody read the drop: it is within its tolerance."""
+    read = {one.conditions for one in observations if one.point.startswith("emitter.") and one.point.endswith(".1")}
+    trimmed = [
+        conditions
+        for conditions in dict.fromkeys(one.conditions for one in observations)
+        if isinstance(conditions[0], Condition) and conditions[0].trimmer == "target" and conditions not in read
+    ]
+    if not trimmed or design.spreader.trimmer is None:
+        return []
+    drop_v = 2.0 * target_drop_v(design)
+    result = []
+    for conditions in trimmed:
+        first = conditions[0]
+        assert isinstance(first, Condition)
+        value = drop_v * first.target_share
+        u = value * design.target.tolerance / math.sqrt(3.0)
+        result.append(Observation(conditions=conditions, point="emitter.pair.1", value=value, standard_uncertainty=u))
+    return result
 
 
 def _priors_only(design: Design) -> Suspicion:
@@ -139,10 +162,17 @@ def default_candidates(
     return tuple(result)
 
 
-def _data(lib: Library, sets: Sequence[Sequence[Observation]]) -> Data:
-    """Readings of several units, in the order of the library's layout; repeated ones are averaged."""
+def _data(lib: Library, sets: Sequence[Sequence[Observation]]) -> tuple[Data, Matrix]:
+    """Readings of several units, in the order of the library's layout; repeated ones are averaged.
+
+    Returns
+    -------
+    data : Data
+    shown : array of shape (sets, readings)
+        The readings as they were, where ``data`` has an overload of the model's range instead.
+    """
     shape = (len(sets), len(lib.model.readings))
-    y, u = np.empty(shape), np.empty(shape)
+    y, u, shown = np.empty(shape), np.empty(shape), np.empty(shape)
     column = {reading: number for number, reading in enumerate(lib.model.readings)}
     for row, observations in enumerate(sets):
         values: dict[int, list[Observation]] = {}
@@ -151,5 +181,9 @@ def _data(lib: Library, sets: Sequence[Sequence[Observation]]) -> Data:
         for number, several in values.items():
             read = [one.value for one in several]
             y[row, number] = float(np.mean(read)) if np.isfinite(read).all() else read[-1]
+            shown[row, number] = y[row, number]
+            if y[row, number] > lib.model.most[number]:
+                # A meter that went on to a higher range by itself: on the range of the model this is an overload.
+                y[row, number] = np.inf
             u[row, number] = max(several[-1].standard_uncertainty, 1e-12)
-    return Data(y, u)
+    return Data(y, u), shown

@@ -96,7 +96,9 @@ class Report:
         data: Data,
         candidates: Sequence[tuple[Conditions, str]],
         original: Mapping[Conditions, Conditions] | None = None,
+        shown: Matrix | None = None,
     ) -> None:
+        self.shown = data.y if shown is None else shown
         self.lib, self.data, self.candidates = lib, data, tuple(candidates)
         self.original = original or {}
         self._nominal: tuple[Array, Array] | None = None
@@ -116,7 +118,7 @@ class Report:
         typical: tuple[Probe, ...] | None = None
         answers = []
         for number in range(len(self.data.y)):
-            if self.probability[number, 0] > SURELY_HEALTHY:
+            if self.probability[number, 0] > SURELY_HEALTHY and self.lib.model.stated:
                 # What would tell most about a healthy unit hardly hangs on its readings: worked out once for all.
                 typical = self._typical_probes() if typical is None else typical
                 probes = typical
@@ -147,8 +149,13 @@ class Report:
         unsolved = tuple(faults[k] for k in np.flatnonzero(~self.solved))
         return Suspicion(
             suspects=tuple(suspects), probe_next=probes, unseen=unseen, hypotheses=len(faults), unsolved=unsolved,
-            seconds=0.0, explained=bool(self.fitted.misfit[number] <= WELL_EXPLAINED),
+            seconds=0.0, explained=self._explained(number),
         )  # fmt: skip
+
+    def _explained(self, number: int) -> bool:
+        """Whether the best hypothesis fits, and no reading under power is beyond every number."""
+        beyond = ~np.isfinite(self.data.y[number]) & ~np.isfinite(self.lib.model.most)
+        return bool(self.fitted.misfit[number] <= WELL_EXPLAINED) and not beyond.any()
 
     def _compared(self, number: int, order: Index, most: int) -> list[int]:
         """Fitted hypotheses that are probable enough to compare, likeliest first."""
@@ -244,7 +251,7 @@ class Report:
         return tuple(
             Evidence(
                 point=self.lib.model.readings[r][1],
-                conditions=self._stated(self.lib.model.readings[r][0]), read=float(y[r]),
+                conditions=self._stated(self.lib.model.readings[r][0]), read=float(self.shown[number, r]),
                 expected=_shown(mine[r], most[r]), healthy=_shown(healthy[r], most[r]), weight=float(weight[r]),
             )
             for r in best

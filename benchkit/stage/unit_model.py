@@ -89,6 +89,8 @@ class UnitModel:
     coordinates : Coordinates
     readings : tuple of (Conditions, str)
         What each column of the readings is.
+    stated : bool
+        Whether every condition states where the trimmer stands.
     most : array of shape (readings,)
         Readings above these show as an overload; infinite where there is no such end.
     """
@@ -111,6 +113,7 @@ class UnitModel:
             rails = (f"rail+ {number}", f"rail- {number}") if isinstance(ends[0], Condition) else ("", "")
             extra += [rail for rail in rails if rail]
             plan.append((ends, travel, place, rails))
+        self.stated = not any(travel for _, travel, _, _ in plan)
         self.coordinates = Coordinates(design, tuple(extra))
         self._blocks = []
         most = []

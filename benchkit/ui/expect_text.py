@@ -47,11 +47,29 @@ def expect_lines(
     loads_ohm : sequence of float
         For the bias block.
     """
-    lines = table_lines(found)
+    lines = [*_cold_target(design, condition), *table_lines(found)]
+    if condition.trimmer == "target" and design.spreader.trimmer is not None:
+        lines += _wrapped(
+            "That is with the trimmer exactly at the target; a real trim may be anywhere within the target's"
+            f" tolerance of {design.target.tolerance:.0%}, and judge allows for it."
+        )
     lines += ["", *_block("Heat", lambda: heat_lines(design, condition))]
     lines += ["", *_block("Trimmer", lambda: trimmer_lines(design, trimmer_report(design)))]
     lines += ["", *_block(_COST, lambda: bias_lines(bias_report(design, condition, loads_ohm)))]
     return lines
+
+
+def _cold_target(design: Design, condition: Condition) -> list[str]:
+    """A warning where somebody might set a cold unit to what is meant for a warm one."""
+    if condition.trimmer != "target" or condition.when != "cold" or design.target.when != "warm":
+        return []
+    return [
+        *_wrapped(
+            "The target of this design is for a WARM unit. The table is about a unit that stands at it while cold: do"
+            ' not set a cold unit so; "Set cold" below says what to set. --when warm shows the warm unit.'
+        ),
+        "",
+    ]
 
 
 _COST: Final = "What a bias error costs"

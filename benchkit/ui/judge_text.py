@@ -33,6 +33,11 @@ def judged_text(table: Table, name: str) -> str:
         lines += ["", *_wrapped(f"{rule.rule}: {rule.verdict}. {rule.why}", "  ")]
         if rule.would_decide:
             lines += _wrapped(f"  What would decide it: {rule.would_decide}.", "  ")
+    if table.contradictions:
+        lines += ["", *_wrapped(
+            f"Read more than once under the same condition, with values that contradict each other:"
+            f" {', '.join(table.contradictions)}. The suspects below rest on the mean.", "  ",
+        )]  # fmt: skip
     lines += ["", *suspect_lines(table.suspicion.suspects, table.suspicion.explained)]
     lines += probe_lines(table.suspicion.probe_next)
     lines += unseen_lines(table.suspicion.unseen)
@@ -99,7 +104,7 @@ def probe_lines(probes: Sequence[Probe]) -> Iterator[str]:
     yield ""
     yield "What to read next:"
     for probe in probes[:3]:
-        yield from _wrapped(f"  {probe.point}: {probe.why}", "    ")
+        yield from _wrapped(f"  {probe.point} ({condition_words(probe.conditions[0])}): {probe.why}", "    ")
 
 
 def unseen_lines(unseen: Sequence[Fault]) -> list[str]:

@@ -45,7 +45,13 @@ def test_a_fallen_rail_is_held_at_its_reading(rail: str, read_v: float, held_v: 
     standing = ("rail-", -15.0) if rail == "rail+" else ("rail+", 15.0)
     other = observed(replace(LIMITED, trimmer="most"), "spread", 2.0)
     unpowered = observed(Unpowered(point="ohm.rails"), "ohm.rails", 3e3)
-    some = [observed(LIMITED, "spread", 1.0), observed(LIMITED, rail, read_v), other, unpowered, observed(LIMITED, *standing)]
+    some = [
+        observed(LIMITED, "spread", 1.0),
+        observed(LIMITED, rail, read_v),
+        other,
+        unpowered,
+        observed(LIMITED, *standing),
+    ]
     result, original = held_at_readings(some)
     changed = result[0].conditions[0]
     assert isinstance(changed, Held)

@@ -19,7 +19,7 @@ from benchkit.ui.widgets.answer import Answer
 from benchkit.ui.widgets.digits import BigReading
 from benchkit.ui.widgets.gauge import Gauge, Gauged
 from benchkit.ui.widgets.trend import Trend
-from benchkit.ui.widgets.trim_words import STALE_AFTER_S, TURNS, figure, where
+from benchkit.ui.widgets.trim_words import STALE_AFTER_S, TURNS, figure, in_step, where
 from benchkit.ui.widgets.words import Words
 
 
@@ -73,7 +73,8 @@ class TrimPage(Page):
             return
         age_s = live.age_s + self._clock() - self._received_s
         stale = age_s > STALE_AFTER_S
-        self._reading.say(live.text, f"STALE {age_s:.0f} s" if stale else "", stale)
+        figures = live.text if live.value is None else in_step(live.value, live.target, live.unit)
+        self._reading.say(figures, f"STALE {age_s:.0f} s" if stale else "", stale)
         row = Table.grid(expand=True)
         row.add_column(no_wrap=True, overflow="crop")
         row.add_column(justify="right", no_wrap=True, overflow="crop")

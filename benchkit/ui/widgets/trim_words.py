@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from typing import Final, Literal
 
 from benchkit.quantities import show
@@ -28,6 +29,18 @@ def where(live: LiveView) -> Literal["inside", "below", "above", "nowhere"]:
     if live.value is None:
         return "nowhere"
     return "below" if live.value < live.target else "above"
+
+
+def in_step(value: float, target: float, unit: str) -> str:
+    """Return a reading in the unit and to the decimals in which its target is written.
+
+    A large "5.720" must not mean microvolts beside a target of 5.500 mV.
+    """
+    prefixes = ((1.0, ""), (1e-3, "m"), (1e-6, "u"))
+    size = abs(target) or 1.0
+    factor, prefix = next(((f, p) for f, p in prefixes if size >= f * (1.0 - 1e-9)), prefixes[-1])
+    decimals = max(0, 3 - math.floor(math.log10(size / factor)))
+    return f"{value / factor:.{decimals}f} {prefix}{unit}"
 
 
 def figure(value: float, unit: str) -> str:

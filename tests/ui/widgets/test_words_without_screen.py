@@ -14,7 +14,7 @@ from benchkit.ui.widgets.off_line import how_to_switch_off
 from benchkit.ui.widgets.outcome import limits_words, marks_of, verdict_strip
 from benchkit.ui.widgets.summary_words import closing_sentence, still_open
 from benchkit.ui.widgets.trail_words import count_by_verdict, trail
-from benchkit.ui.widgets.trim_words import TURNS, where
+from benchkit.ui.widgets.trim_words import TURNS, in_step, where
 from tests.ui.scripted import (
     BY_HAND,
     BY_HAND_READING,
@@ -166,3 +166,18 @@ def test_what_is_still_open_counts_only_the_newest_of_each_item() -> None:
     assert still_open((FAILED, NEAR)) == (FAILED, NEAR)
     assert still_open((FAILED, NEAR, again)) == (NEAR,)
     assert still_open(VIEW.results) == ()
+
+
+@pytest.mark.parametrize(
+    ("value", "target", "text"),
+    [
+        (5.72e-6, 5.5e-3, "0.006 mV"),
+        (21.876e-3, 22e-3, "21.88 mV"),
+        (-1.2e-3, 22e-3, "-1.20 mV"),
+        (0.4, 22e-3, "400.00 mV"),
+        (1.5, 1.0, "1.500 V"),
+        (2.5e-4, 3e-4, "250.0 uV"),
+    ],
+)
+def test_a_reading_keeps_the_unit_of_its_target(value: float, target: float, text: str) -> None:
+    assert in_step(value, target, "V") == text
