@@ -159,7 +159,6 @@ class Table:
             ],
             "probe_next": [{"point": probe.point, "why": probe.why} for probe in self.suspicion.probe_next],
             "unseen": [_fault(fault) for fault in self.suspicion.unseen],
-            "explained": self.suspicion.explained,
         }
 
 

@@ -128,7 +128,7 @@ def test_probes_and_their_reasons() -> None:
     lines = list(probe_lines([replace(one, point=f"p{number}") for number in range(5)]))
     assert max(len(line) for line in lines) <= WIDTH
     told = joined(lines)
-    assert [f"p{number}:" in told for number in range(5)] == [True] * 3 + [False] * 2
+    assert [f"p{number} (rails" in told for number in range(5)] == [True] * 3 + [False] * 2
     assert "this would read 1 V" in told
 
 
