@@ -12,7 +12,7 @@ import pytest
 
 from benchkit.stage.faults import faults_of
 from benchkit.stage.topologies import build
-from tests.reference import agreement, ngspice
+from tests.reference import agreement, asking, ngspice
 from tests.stage.catalogue import FEW, catalogue, few
 
 LIVE = ("single resistor resistor lower series 1", "feedback source servo lower series 1 stopper")
@@ -75,13 +75,13 @@ def test_live(name: str) -> None:
     """ngspice, asked now: five healthy units and every ninth fault; and it says what was committed."""
     design, reference = few()[name], agreement.committed()[name]
     ours = agreement.healthy(design, units=4)
-    answer = agreement.ask(design, ours)
+    answer = asking.ask(design, ours)
     assert answer.solved.all()
     table = np.array(list(answer.volts.values()))
     assert agreement.compare_healthy(design, ours, table).share < 1.0
     which = list(range(0, len(faults_of(design)), 9))
     broken = agreement.faulty(design, faults_of(design))
-    answer = agreement.ask_one_by_one(design, broken, which)
+    answer = asking.ask_one_by_one(design, broken, which)
     found = {point: values[which] for point, values in agreement.points(design, broken, answer).items()}
     assert np.isfinite(next(iter(found.values()))).all()
     shares = agreement.faulty_shares(design, broken, agreement.points(design, broken, answer))
