@@ -50,10 +50,10 @@ CHUNK_UNITS = 2000
 _PILOT_FROM = 32
 _LENDERS = 4
 _NEIGHBOURS = 2
-_TURNS = {"start": 0, "borrow": 5, "full": 1}
+_TURNS = {"start": 0, "borrow": 3, "full": 1}
 """How often units that failed try others' solutions."""
 _BORROWERS = 100
-_LENT_ITERATIONS = 18
+_LENT_ITERATIONS = 15
 _START_VBE_V = 0.6
 _START_VBC_V = -1.0
 

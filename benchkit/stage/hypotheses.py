@@ -21,9 +21,8 @@ from benchkit.stage.fitting import Data, Fit, fit, step_from
 from benchkit.stage.readouts import Index, Mask
 from benchkit.stage.unit_model import Joint, Layout, UnitModel
 
-DRAWN = 2
-"""Units drawn for each hypothesis, beside its nominal one, to start from; half of them where several conditions share
-the work of telling hypotheses apart."""
+DRAWN = 1
+"""Units drawn for each hypothesis, beside its nominal one, to start from."""
 LIBRARY_SEED = 20261
 
 
@@ -49,7 +48,7 @@ class Library:
         priors[1:] /= 1.0 - priors[1:]
         self.log_prior = np.log(priors / priors.sum())
         many = len(self.faults)
-        drawn_units = DRAWN if len(layout) == 1 else DRAWN // 2
+        drawn_units = DRAWN
         count = len(self.model.coordinates)
         centre = np.zeros((count, many))
         first = self.model.at(centre, self.faults)
@@ -145,12 +144,13 @@ def fit_hypotheses(lib: Library, data: Data) -> Fitted:
     best = _Best(np.full((sets, many), np.inf), np.full((sets, many), -1, np.intp), [])
     solvable = np.isfinite(promised)
     best.add(*_fit(lib, data, starts[:, 0], pursue & solvable))
-    for turn in range(starts.shape[1]):
+    # a warm state takes ten solves: there only the most promising are tried, and from one member
+    for turn in range(1 if lib.model.warm else starts.shape[1]):
         unexplained = best.cost.min(axis=1, keepdims=True) > EXPLAINED * data.y.shape[1] + 10.0
         chosen = solvable & unexplained & lib.joint.good[starts[:, turn]]
         if not turn:
             chosen &= ~pursue
-        else:
+        if turn or lib.model.warm:
             near = np.zeros_like(chosen)
             for measure in (promised, best.cost):
                 np.put_along_axis(near, measure.argsort(axis=1)[:, :AGAIN], True, axis=1)

@@ -28,7 +28,7 @@ from benchkit.circuit.solution import Solution
 from benchkit.circuit.solve import Compiled, Effort, compile_netlist
 from benchkit.stage.conditions import Condition, TrimmerPosition
 from benchkit.stage.design import ZERO_CELSIUS_K, Design
-from benchkit.stage.draws import Array, Parameters
+from benchkit.stage.draws import Array, Parameters, nominal
 from benchkit.stage.faults import Fault, apply
 from benchkit.stage.forcing import Held
 from benchkit.stage.heat import heat
@@ -41,9 +41,9 @@ from benchkit.stage.latent import (
     tiled,
 )
 from benchkit.stage.points import find_point, transistors_of
-from benchkit.stage.runs import NO_METER_OHM, Run, State, compiled, set_trimmer
+from benchkit.stage.runs import NO_METER_OHM, Run, State, compiled, set_trimmer, trimmer_travel
 from benchkit.stage.topologies import VOLTMETER_OHM, Variant, build
-from benchkit.stage.unpowered import COMPLIANCE_V, OVER_RANGE, nominal_range
+from benchkit.stage.unpowered import COMPLIANCE_V, OVER_RANGE, MeterRange, ranges_of
 
 Index = NDArray[np.intp]
 Mask = NDArray[np.bool_]
@@ -275,6 +275,31 @@ def _bench_circuit(design: Design, points: tuple[str, ...]) -> Compiled:
     return compile_netlist(netlist)
 
 
+@lru_cache(maxsize=32)
+def _nominal_ranges(design: Design, points: tuple[str, ...], trimmer: TrimmerPosition) -> tuple[MeterRange, ...]:
+    """What `benchkit.stage.unpowered.nominal_range` says of each point, from one solve of all ranges at all points."""
+    circuit = _bench_circuit(design, points)
+    tries = [(number, one) for number, point in enumerate(points) for one in ranges_of(point)]
+    units = len(tries)
+    values: Parameters = dict(nominal(design))
+    for part in transistors_of(design):
+        values[f"{part.name}.kelvin"] = np.asarray(design.thermal.ambient_c + ZERO_CELSIUS_K)
+    for number, point in enumerate(points):
+        amps = [one.amps if mine == number else 0.0 for mine, one in tries]
+        values[f"meter.{point}.amps"] = np.array(amps)
+        values[f"meter.{point}.compliance_v"] = np.asarray(COMPLIANCE_V)
+    set_trimmer(design, values, trimmer_travel(design, values, "unknown" if trimmer == "target" else trimmer, units))
+    solution = circuit.solve({key: value for key, value in values.items() if key in circuit.keys}, units)
+    between = build(design, Variant(powered=False)).between
+    chosen: dict[int, MeterRange] = {}
+    for unit, (number, one) in enumerate(tries):
+        volts = float(solution.between(*between[points[number]])[unit])
+        reading = volts if find_point(design, points[number]).function == "diode" else volts / one.amps
+        if reading <= OVER_RANGE * one.full_scale and number not in chosen and bool(solution.converged[unit]):
+            chosen[number] = one
+    return tuple(chosen.get(number, ranges_of(point)[-1]) for number, point in enumerate(points))
+
+
 class UnpoweredPoints:
     """Unpowered readings under one trimmer position and room temperature; a reading beyond the range is infinite.
 
@@ -296,7 +321,7 @@ class UnpoweredPoints:
         self._circuit = _bench_circuit(design, self.points)
         self._between = build(design, Variant(powered=False)).between
         self._names = tuple(part.name for part in transistors_of(design))
-        ranges = [nominal_range(design, point, trimmer) for point in points]
+        ranges = _nominal_ranges(design, self.points, trimmer)
         self._amps = np.array([one.amps for one in ranges])
         self._divisor = np.array([
             1.0 if find_point(design, point).function == "diode" else one.amps

@@ -45,6 +45,7 @@ WELL_EXPLAINED = 3.0
 MOST_PROBES = 5
 LEAST_GAIN_BITS = 0.01
 PROBED_HYPOTHESES = 10
+TYPICAL_HYPOTHESES = 6
 MOST_EVIDENCE = 3
 
 PROBE_SHARE = 5e-4
@@ -79,6 +80,13 @@ class _Views:
             f=f / u, mean=(f - np.einsum("hrk,kh->hr", slope, z)) / u, inverse=inverse,
             log_determinant=log_determinant, noise=np.trace(inverse, axis1=1, axis2=2),
         )  # fmt: skip
+
+    def over_the_first(self) -> Array:
+        """Logarithm of the expected Bayes factor of each hypothesis, were it true, against the first one."""
+        own, other = self.f - self.mean, self.f - self.mean[0]
+        mine = np.einsum("ks,kst,kt->k", own, self.inverse, own) + self.noise + self.log_determinant
+        first = np.einsum("ks,st,kt->k", other, self.inverse[0], other) + self.noise[0] + self.log_determinant[0]
+        return np.asarray(0.5 * (first - mine))
 
     def expected(self, readings: Matrix) -> Matrix:
         """E[log p_k] for readings (scaled, of shape (units, readings)) with fresh noise; shape (units, hypotheses)."""
@@ -207,8 +215,7 @@ class Report:
             if not good[0]:
                 continue
             views = _Views.of(*self._within(joint_f, lib.joint.slope[part]), lib.z[:, part], u[None])
-            expected = views.expected(views.f)
-            factors.append(np.where(good, np.diag(expected) - expected[:, 0], np.nan))
+            factors.append(np.where(good, views.over_the_first(), np.nan))
         if not factors:
             return np.zeros(many, dtype=np.bool_)
         far = np.median(np.nan_to_num(np.array(factors), nan=np.inf), axis=0)
@@ -272,7 +279,7 @@ class Report:
         data = Data(f[None], np.hypot(PROBE_SHARE * np.abs(f), floor)[None])
         hidden = self._hidden(data)
         order = np.argsort(-lib.log_prior, kind="stable")
-        top = [0, *(k for k in order.tolist() if k and hidden[k] and self.solved[k])][:PROBED_HYPOTHESES]
+        top = [0, *(k for k in order.tolist() if k and hidden[k] and self.solved[k])][:TYPICAL_HYPOTHESES]
         z = np.zeros((len(lib.model.coordinates), len(top)))
         return self._most_telling(top, z, np.exp(lib.log_prior[top]), data.take(np.zeros(len(top), np.intp)))
 

@@ -91,6 +91,8 @@ class UnitModel:
         What each column of the readings is.
     stated : bool
         Whether every condition states where the trimmer stands.
+    warm : bool
+        Whether a condition is a warm one.
     most : array of shape (readings,)
         Readings above these show as an overload; infinite where there is no such end.
     """
@@ -113,6 +115,7 @@ class UnitModel:
             rails = (f"rail+ {number}", f"rail- {number}") if isinstance(ends[0], Condition) else ("", "")
             extra += [rail for rail in rails if rail]
             plan.append((ends, travel, place, rails))
+        self.warm = any(isinstance(one, Condition) and one.when == "warm" for ends, *_ in plan for one in ends)
         self.stated = not any(travel for _, travel, _, _ in plan)
         self.coordinates = Coordinates(design, tuple(extra))
         self._blocks = []

@@ -159,18 +159,20 @@ def nominal_range(design: Design, point: str, trimmer: TrimmerPosition = "unknow
 @lru_cache(maxsize=256)
 def _nominal_unit(design: Design, condition: Unpowered) -> UnpoweredReadings:
     """Read the nominal unit on the lowest range that it doesn't overload, or else on the last one."""
-    ranges: tuple[MeterRange, ...] = _IN_CIRCUIT
-    if condition.point.startswith("diode."):
-        ranges = (DIODE_RANGE,)
-    elif condition.point.startswith("ohm.heatsink."):
-        ranges = (OHMS_RANGES[-1],)
     start: Solution | None = None
-    for candidate in ranges:
+    for candidate in ranges_of(condition.point):
         readings = solve_unpowered(design, nominal(design), condition, on_range=candidate, start=start)
         start = readings.solution
         if bool(readings.converged.all()) and bool(np.isfinite(readings.values).all()):
             break
     return readings
+
+
+def ranges_of(point: str) -> tuple[MeterRange, ...]:
+    """Ranges that an automatic range goes through at a point, the lowest first."""
+    if point.startswith("diode."):
+        return (DIODE_RANGE,)
+    return (OHMS_RANGES[-1],) if point.startswith("ohm.heatsink.") else _IN_CIRCUIT
 
 
 def waiting_time_s(design: Design, point: str) -> float:
