@@ -13,7 +13,8 @@ The recipe, in the order in which a unit meets it
    a failure, and a last solve without. (What step 4 can't begin on, it begins on so.)
 6. Then by pseudo-transient continuation: 0.01 S from every node to its last accepted voltage, a quarter of that after a
    success, four times that after a failure, a dozen failures at most, and a last solve without.
-7. Then as in step 4 from knees of other widths: which of them a unit finds its way from is a matter of luck.
+7. Then as in step 4 from knees of other widths and in other steps: which of them a unit finds its way by is a matter of
+   luck.
 
 A solution counts only when every law was linearised where it is evaluated, and each node's currents add up to less than
 1e-7 of the sum of their magnitudes + 10 pA. Units are done one by one; those that are done leave the batch. An accepted
@@ -26,6 +27,7 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import dataclass
+from functools import partial
 
 import numpy as np
 from numpy.typing import NDArray
@@ -52,8 +54,7 @@ _MOST_ROUNDS = 200
 _MOST_STEPS = 40
 _LAST_EXPONENT = -12.0
 _LEAST_STEP = 0.03
-_SOFTEST_EXPONENT = 6.0
-_OTHER_EXPONENTS = (5.0, 7.0, 4.0)
+_OTHER_SOFTENINGS = ((5.0, 1.0), (4.5, 1.5), (7.0, 0.25), (5.5, 2.0), (6.5, 0.5))
 _INNER_ITERATIONS = 25
 _WARM_ITERATIONS = 15
 _MOST_SHUNT_S = 1e3
@@ -217,7 +218,7 @@ def _accepted(batch: Batch, linear: Linearised, x: Array, residual: Array) -> tu
 
 
 def solve_by_softening(
-    batch: Batch, solver: LinearSolver, cold: ColdStart, softest: float = _SOFTEST_EXPONENT
+    batch: Batch, solver: LinearSolver, cold: ColdStart, softest: float = 6.0, step: float = 0.5
 ) -> Outcome:  # fmt: skip
     """Start each unit with knees of servos and supplies that are 10**softest times as wide, and let them narrow."""
     soft = batch.softened(np.full(batch.units, 10.0**softest))
@@ -227,7 +228,7 @@ def solve_by_softening(
     def attempt(part: Batch, x: Array, exponent: Array) -> Outcome:
         return iterate(part.softened(10.0**exponent), solver, x, most=_INNER_ITERATIONS)
 
-    return _continue(batch, attempt, begun, softest, last=0.0, step=0.5)
+    return _continue(batch, attempt, begun, softest, last=0.0, step=step)
 
 
 def solve_by_gmin(batch: Batch, solver: LinearSolver) -> Outcome:
@@ -333,8 +334,8 @@ def rescue(batch: Batch, solver: LinearSolver, cold: ColdStart) -> Outcome:
         total = solve_by_softening(batch, solver, cold)
         _retry(batch, total, lambda part: solve_by_gmin(part, solver))
         _retry(batch, total, lambda part: solve_by_pseudo_transient(part, solver))
-        for softest in _OTHER_EXPONENTS:
-            _retry(batch, total, lambda part, softest=softest: solve_by_softening(part, solver, cold, softest))  # type: ignore[misc]
+        for softest, step in _OTHER_SOFTENINGS:
+            _retry(batch, total, partial(solve_by_softening, solver=solver, cold=cold, softest=softest, step=step))
     return total
 
 

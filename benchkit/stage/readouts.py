@@ -133,10 +133,19 @@ class Powered:
         slope *= shares[:, :, None]
         loaded = np.argwhere((shares < SLIGHT_LOAD) & state.converged[:, None])
         if len(loaded):
-            self._load(z, faults, state, loaded, f, slope)
+            self._load(z, faults, state, loaded, f, slope, effort)
         return _finished(f, slope, state.converged, state.solution)
 
-    def _load(self, z: Array, faults: Sequence[Fault], state: State, loaded: Index, f: Matrix, slope: Matrix) -> None:
+    def _load(
+        self,
+        z: Array,
+        faults: Sequence[Fault],
+        state: State,
+        loaded: Index,
+        f: Matrix,
+        slope: Matrix,
+        effort: Effort,
+    ) -> None:
         """Solve again, with the voltmeter there, what it loads by more than a little; pairs of unit and point."""
         unit, row = loaded[:, 0], loaded[:, 1]
         fuses = self.condition.fuse_ohm is not None
@@ -146,7 +155,7 @@ class Powered:
         own = np.array([f"meter.{self.points[k]}" for k in row])
         added = {key: np.where(own == key, VOLTMETER_OHM, NO_METER_OHM) for key in meters}
         values = {key: value for key, value in bare.values.items() if key in circuit.keys} | added
-        solution = circuit.solve(values, len(unit), dict(zip(bare.plan.names, bare.x, strict=True)), effort="borrow")
+        solution = circuit.solve(values, len(unit), dict(zip(bare.plan.names, bare.x, strict=True)), effort=effort)
         with np.errstate(all="ignore"):
             response = Response(solution)
             reads = self._read(solution, state.temperature["heatsink"][unit])

@@ -102,12 +102,17 @@ def ask_one_by_one(design: Design, ours: Solved, which: Sequence[int] | None = N
     return Answer(dict(zip(nodes, table, strict=False)), dict(zip(supplies, table[len(nodes) :], strict=True)))
 
 
-def _alone(netlist: Netlist, values: Mapping[str, float], start: Mapping[str, float]) -> dict[str, float] | None:
+def _alone(
+    netlist: Netlist,
+    values: Mapping[str, float],
+    start: Mapping[str, float],
+    attempts: Sequence[tuple[int | None, str]] = ATTEMPTS,
+) -> dict[str, float] | None:
     """Voltages by node and currents by supply in a deck of its own, by the first attempt that has a solution."""
     text, names = ngspice.deck(netlist, [values], plain_junctions=True)
     supplies = {f"i_{k}_0": name for k, (name, e) in enumerate(netlist.elements.items()) if isinstance(e, Supply)}
     shown = {f"{short}_0": node for node, short in names.items()} | supplies
-    for digits, options in ATTEMPTS:
+    for digits, options in attempts:
         lines = [options if line.startswith(".options") else line for line in text.splitlines()]
         if digits is not None:
             lines = [line for line in lines if not line.startswith(".nodeset")]
@@ -147,13 +152,23 @@ def _metered(
     return netlist, values, {node: float(broken.solution.voltage(node)[unit]) for node in netlist.nodes()}
 
 
-def their_reading(design: Design, broken: Solved, unit: int, point: str) -> float:
-    """What a voltmeter shows across a point of a unit, by ngspice; NaN where it has no solution."""
-    found = _alone(*_metered(design, broken, unit, point))
-    if found is None:
-        return float("nan")
+def their_reading(design: Design, broken: Solved, unit: int, point: str, allowed_v: float) -> float:
+    """What a voltmeter shows across a point of a unit, by ngspice: the median of its answers from several starts.
+
+    Where picoamperes decide, each start has an answer of its own, in steps of what the last bit of 24 V is across a
+    milliohm. When those differ among each other by more than is allowed between two programs, there is none: NaN.
+    """
+    netlist, values, start = _metered(design, broken, unit, point)
     red, black = build(design).between[point]
-    return found.get(red, 0.0) - found.get(black, 0.0)
+    answers: list[float] = []
+    for attempt in ATTEMPTS:
+        if answers and DIRECTLY not in attempt[1]:
+            break
+        found = _alone(netlist, values, start, (attempt,))
+        if found is not None:
+            answers.append(found.get(red, 0.0) - found.get(black, 0.0))
+    scatters = not answers or max(answers) - min(answers) > allowed_v
+    return float("nan") if scatters else float(np.median(answers))
 
 
 def our_reading(design: Design, broken: Solved, unit: int, point: str) -> float:
