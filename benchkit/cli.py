@@ -6,6 +6,7 @@ Heavy imports stand inside the commands, so that ``benchkit --help`` answers at 
 from __future__ import annotations
 
 import json
+import os
 import sys
 from collections.abc import Callable, Sequence
 from pathlib import Path
@@ -51,6 +52,9 @@ def cli() -> None:
 
 def main(arguments: Sequence[str] | None = None) -> NoReturn:
     """Run a command and leave with its exit status; never with a traceback."""
+    # The model's matrices are small: threads that share one out cost more than they save.
+    for variable in ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "MKL_NUM_THREADS"):
+        os.environ.setdefault(variable, "1")
     try:
         status = cli.main(args=None if arguments is None else list(arguments), standalone_mode=False)
         sys.exit(status if isinstance(status, int) else 0)

@@ -50,7 +50,7 @@ CHUNK_UNITS = 2000
 _PILOT_FROM = 32
 _LENDERS = 4
 _NEIGHBOURS = 2
-_TURNS = {"start": 0, "borrow": 3, "full": 1}
+_TURNS = {"start": 0, "borrow": 2, "full": 1}
 """How often units that failed try others' solutions."""
 _BORROWERS = 100
 _LENT_ITERATIONS = 15
