@@ -63,8 +63,8 @@ LIMIT_A = 0.05
 RAILS_SHARE = 0.4
 UNDECIDED = (("single resistor servo none 1 one supply", "output.upper.1: wrong polarity"),)
 """Units whose readings with a meter are not compared, because neither program can be right: nothing but leakage holds
-this one's output, and for each 5 uV there the servo sends e times the current through the spreader. 0.2 mV of spread are
-5 nV at 8 V."""
+this one's output, and for each 5 uV there the servo sends e times the current through the spreader. 0.2 mV of spread
+are 5 nV at 8 V."""
 SCATTERS = " (ngspice's own answers scatter)"
 _NOTHING = np.iinfo(np.int32).min
 """In place of a rounded voltage that ngspice has not."""
