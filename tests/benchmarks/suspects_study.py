@@ -32,7 +32,7 @@ import numpy as np
 from benchkit.shipped import find_design
 from benchkit.stage.conditions import Condition
 from benchkit.stage.design import Design, load_design
-from benchkit.stage.expected import PointLimits, expected, expected_unpowered
+from benchkit.stage.expected import DEFAULT_UNITS, PointLimits, expected, expected_unpowered
 from benchkit.stage.faults import HEALTHY, Fault
 from benchkit.stage.observations import Conditions, Observation
 from benchkit.stage.suspects import Suspicion, suspect_many
@@ -41,7 +41,7 @@ from tests.stage.catalogue import catalogue, few
 
 MOST_ALIKE = 4
 PROBES = 3
-LIMITS_UNITS = 4000
+LIMITS_UNITS = DEFAULT_UNITS
 LIMITS_COVERAGE = 3.0
 DEMONSTRATIONS = ("breadboard", "tern-40")
 TARGETS = (
