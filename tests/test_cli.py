@@ -147,13 +147,18 @@ def test_a_design_that_is_not_there(run: Run, command: str) -> None:
     [
         ('kind = "confirm"', 'kind = "ask"', "section 'look' step 'parts' kind"),
         ('points = ["ohm.rails"]', 'points = ["ohm.rial"]', "ohm.rial"),
-        ('limits = { low = "-1 V", high = "1 V" }', 'limits = { low = "-1 ohm", high = "1 V" }', "step rails-low"),
+        (
+            'points = ["output"]\nlimits = "the model"',
+            'points = ["output"]\nlimits = { low = "-1 ohm", high = "1 V" }',
+            "step output-first",
+        ),
         ('rails = "2 V"', 'rails = "200 V"', "sets the rails to 200 V"),
         ('share = "100 %"', 'share = "110 %"', "at most 100 %"),
     ],
 )
 def test_a_wrong_procedure_names_file_and_step(run: Run, tmp_path: Path, old: str, new: str, words: str) -> None:
     path = tmp_path / "steps.toml"
+    assert old in SMALL
     path.write_text(SMALL.replace(old, new, 1), encoding="utf-8")
     status, out, err = run("check", "breadboard", "--procedure", path)
     assert (status, out) == (2, "")
@@ -384,3 +389,17 @@ def test_a_reader_that_has_left_is_no_error(run: Run, monkeypatch: pytest.Monkey
 
     monkeypatch.setattr(shipped, "find_design", fail)
     assert run("check", "tern-40")[0] == 0
+
+
+def test_full_is_no_word_of_its_own(run: Run) -> None:
+    status, _, err = run("expect", "breadboard", "--full")
+    assert status == 2
+    assert "--full came without --json" in one_sentence(err)
+
+
+def test_a_design_without_a_trimmer_can_be_checked(run: Run, tmp_path: Path) -> None:
+    text = BREADBOARD.read_text(encoding="utf-8")
+    design = changed(tmp_path, text[text.index("[spreader.trimmer]") : text.index("[output]")], "")
+    status, out, _ = run("check", design, "--json")
+    assert status in (0, 1)
+    assert json.loads(out)["items"] > 40

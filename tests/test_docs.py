@@ -18,6 +18,7 @@ import pytest
 import benchkit
 from benchkit import cli, errors, shipped
 from benchkit.instruments.bench import parse_bench
+from benchkit.instruments.profile import meter_profile, profile_table, shipped_names
 from benchkit.procedure import file as procedure_file
 from benchkit.record.show import DEFERENCE
 from benchkit.stage.design import parse_design
@@ -183,16 +184,24 @@ def test_the_exit_statuses_are_those_of_the_errors() -> None:
     assert {kind: kind.exit_status for kind in by_kind} == by_kind
 
 
-def test_the_files_in_the_readme_can_be_read() -> None:
-    design, procedure, bench = blocks(README, "toml")
+def test_the_files_in_the_readme_can_be_read(tmp_path: Path) -> None:
+    design, procedure, bench, profile = blocks(README, "toml")
     assert parse_design(design, "README").name == "My stage"
     assert procedure_file.parse_procedure(procedure, "README").head.name == "look at the rails"
     assert set(parse_bench(bench, "README").setup) == {"meter", "supply"}
+    own = tmp_path / "my-meter.toml"
+    own.write_text(profile, encoding="utf-8")
+    assert meter_profile(profile_table(own.name, tmp_path)).title == "my meter"
 
 
 def test_what_comes_along_is_named() -> None:
     for path in (*shipped.folder().glob("*.toml"), *(shipped.folder() / "designs").glob("*.toml")):
         assert f"`{path.stem}`" in README, path.name
+
+
+def test_every_profile_that_comes_along_is_named() -> None:
+    for name in shipped_names():
+        assert f"`{name}`" in README, name
 
 
 def test_every_kind_of_step_is_named() -> None:

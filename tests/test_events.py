@@ -23,6 +23,7 @@ from benchkit.events import (
     Predicted,
     ProbeNamed,
     ReadingTaken,
+    SupplySet,
     SupplyState,
     Suspected,
     SuspectEvidence,
@@ -31,6 +32,7 @@ from benchkit.events import (
     from_payload,
     to_payload,
 )
+from benchkit.measure.readings import Reading
 from tests.procedure.driver import begun, every_event, limits_of, small
 
 SAMPLES = every_event(small(), begun(small()).state)
@@ -206,3 +208,35 @@ def test_a_verdict_from_before_there_were_narrowed_limits_can_be_read() -> None:
     read = from_payload("judged", payload)
     assert isinstance(read, Judged)
     assert (read.unit_low, read.unit_high, read.odd) == (None, None, False)
+
+
+def test_lines_from_before_these_fields_were_there_are_read() -> None:
+    """A record of an earlier version says nothing of protection, of a rail's fall or of burnt parts."""
+    cases: list[tuple[Event, tuple[str, ...]]] = [
+        (
+            SupplySet(item="i", state=SupplyState(output_on=True, positive_v=5.0)),
+            ("positive_tripped", "negative_tripped", "protection_positive_v", "protection_negative_v"),
+        ),
+        (
+            ReadingTaken(
+                item="i",
+                reading=Reading(
+                    point="rail+", value=0.1, unit="V", standard_uncertainty=1e-3, meter="m", function="dc volts"
+                ),
+            ),
+            ("fell_from_v", "fell_s", "fell_slowly"),
+        ),
+        (Noted(text="t"), ("broken",)),
+    ]
+    for event, added in cases:
+        payload = to_payload(event)
+        holder = payload["state"] if isinstance(event, SupplySet) else payload
+        for name in added:
+            del holder[name]
+        assert from_payload(event.name, payload) == event
+
+
+def test_a_supply_is_tripped_when_either_rail_is() -> None:
+    assert not SupplyState().tripped
+    assert SupplyState(positive_tripped=True).tripped
+    assert SupplyState(negative_tripped=True).tripped

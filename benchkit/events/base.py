@@ -24,6 +24,10 @@ class SupplyState:
         As read back from its settings.
     positive_in_limit, negative_in_limit : bool
         The rail is held by its current limit instead of its voltage.
+    positive_tripped, negative_tripped : bool
+        The supply's own protection has switched that output off.
+    protection_positive_v, protection_negative_v : float or None
+        Its over-voltage protection as read back, as magnitudes; ``None`` when it has none or could not be read.
     """
 
     output_on: bool | None = None
@@ -36,11 +40,20 @@ class SupplyState:
     limit_a: float | None = None
     positive_in_limit: bool = False
     negative_in_limit: bool = False
+    positive_tripped: bool = False
+    negative_tripped: bool = False
+    protection_positive_v: float | None = None
+    protection_negative_v: float | None = None
 
     @property
     def in_limit(self) -> bool:
         """True when either rail is held by its current limit."""
         return self.positive_in_limit or self.negative_in_limit
+
+    @property
+    def tripped(self) -> bool:
+        """True when the supply's own protection has switched either output off."""
+        return self.positive_tripped or self.negative_tripped
 
 
 @dataclass(frozen=True, kw_only=True)

@@ -66,11 +66,18 @@ class Answered(Event):
 
 @dataclass(frozen=True, kw_only=True)
 class ReadingTaken(Event):
-    """One reading, by an instrument or typed in."""
+    """One reading, by an instrument or typed in.
+
+    A rail that was watched down says from where it fell (V), how long that took (s), and whether that was slower than
+    the design explains.
+    """
 
     name: ClassVar[str] = "reading taken"
     item: str
     reading: Reading
+    fell_from_v: float | None = None
+    fell_s: float | None = None
+    fell_slowly: bool = False
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -208,12 +215,17 @@ class Resumed(Event):
 
 @dataclass(frozen=True, kw_only=True)
 class Noted(Event):
-    """Something worth keeping that changes nothing: a remark, the highest values seen, a caution."""
+    """Something worth keeping that changes nothing: a remark, the highest values seen, a caution.
+
+    At the end of a rehearsal `broken` names the parts of the simulated unit that have failed, each with how; empty when
+    none has, None where the note says nothing of it.
+    """
 
     name: ClassVar[str] = "noted"
     item: str = ""
     text: str
     figures: Mapping[str, float] = field(default_factory=dict)
+    broken: tuple[str, ...] | None = None
 
 
 @dataclass(frozen=True, kw_only=True)

@@ -5,6 +5,8 @@ TOML, with these tables; ``[meter]`` or ``[supply]`` may be absent, and then a p
     [bench]
     format = 1
     name = "bench 2"
+    mains = "50 Hz"                        # optional: what the meter integrates over
+    visa = "@py"                           # optional: another VISA library, as PyVISA names it
 
     [meter]
     address = "TCPIP::192.168.1.20::5025::SOCKET"
@@ -12,6 +14,9 @@ TOML, with these tables; ``[meter]`` or ``[supply]`` may be absent, and then a p
     serial = "MY123"                       # optional: another serial number stops the walk
     input_resistance = "10 Mohm"           # optional
     calibration_due = 2031-05-01           # optional
+
+    [meter.line]                           # optional, for a serial address: what differs from the profile's line
+    baud = 19200
 
     [[meter.accuracy]]                     # one for each function and range; see `accuracy_from_rows`
     function = "dc volts"
@@ -22,27 +27,43 @@ TOML, with these tables; ``[meter]`` or ``[supply]`` may be absent, and then a p
     [supply]                               # the same keys, without input_resistance
     address = "TCPIP::192.168.1.21::5025::SOCKET"
     profile = "scpi-supply"
+
+There is one meter, and one supply with two outputs; two supplies with one output each are not taken.
 """
 
 from __future__ import annotations
 
 import datetime
 import hashlib
-import tomllib
+from collections.abc import Mapping
 from dataclasses import dataclass
 from pathlib import Path
-from typing import Any, Literal
+from typing import Annotated, Any
 
-from pydantic import BaseModel, ConfigDict, Field, ValidationError
+from pydantic import Field, PlainValidator
+from pydantic_core import PydanticCustomError
 
 from benchkit.errors import BenchkitError, FileError
 from benchkit.instruments.address import parse_address
-from benchkit.instruments.profile import meter_profile, profile_table, supply_profile
+from benchkit.instruments.mistakes import checked, near, one_of, read_toml
+from benchkit.instruments.profile import (
+    MeterProfile,
+    SupplyProfile,
+    meter_profile,
+    profile_table,
+    shipped,
+    shipped_names,
+    supply_profile,
+)
+from benchkit.instruments.profile_parts import Date, Format, LinePart, Part, Text
+from benchkit.instruments.settings import PURE_LIBRARY, LinkSettings
 from benchkit.measure.accuracy import STATED_DEFAULT, Accuracy, accuracy_from_rows
 from benchkit.quantities import parse
 
 DEFAULT_INPUT_RESISTANCE_OHM = 10e6
 """What is assumed of a meter that doesn't state it; common practice for meters of all prices."""
+
+_LEAST_MAINS_HZ, _MOST_MAINS_HZ = 40.0, 440.0
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -54,7 +75,8 @@ class BenchInstrument:
     address : str
         As VISA writes it.
     profile : dict
-        The whole profile as a plain table, so that a record stands alone.
+        The whole profile as a plain table, with what the bench file says of line and mains in its place, so that a
+        record stands alone.
     serial : str
         The pinned serial number; empty if any will do.
     accuracy : Accuracy
@@ -62,6 +84,8 @@ class BenchInstrument:
     calibration_due : date or None
     input_resistance_ohm : float
         Of a meter, ohm.
+    library : str
+        The VISA library that it is reached through.
     """
 
     address: str
@@ -70,11 +94,12 @@ class BenchInstrument:
     accuracy: Accuracy
     calibration_due: datetime.date | None
     input_resistance_ohm: float = DEFAULT_INPUT_RESISTANCE_OHM
+    library: str = PURE_LIBRARY
 
     @property
     def setup(self) -> dict[str, Any]:
-        """What the keeper needs to own it."""
-        return {"address": self.address, "profile": self.profile, "serial": self.serial}
+        """What the keeper needs to own it, as plain values."""
+        return {"address": self.address, "profile": self.profile, "serial": self.serial, "library": self.library}
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -89,7 +114,7 @@ class Bench:
     meter, supply : BenchInstrument or None
         None where a person reads or switches.
     cautions : tuple of str
-        What a careful person would object to: calibration overdue, accuracy assumed.
+        What a careful person would object to: calibration overdue, accuracy assumed, no protection in the supply.
     """
 
     name: str
@@ -118,40 +143,74 @@ class Bench:
         }
 
 
-class _Table(BaseModel):
-    model_config = ConfigDict(extra="forbid", frozen=True)
+def link_settings(profile: MeterProfile | SupplyProfile, setup: Mapping[str, Any]) -> LinkSettings:
+    """Return how to speak with an instrument, from its profile and its `BenchInstrument.setup`."""
+    return profile.link.settings(str(setup.get("library") or PURE_LIBRARY))
 
 
-class _Head(_Table):
-    format: Literal[1]
-    name: str = Field(min_length=1)
+def _quantity(value: Any, unit: str, least: float, most: float, example: str) -> float:
+    if isinstance(value, str):
+        try:
+            found = parse(value, unit)
+        except BenchkitError as error:
+            raise PydanticCustomError(
+                "quantity",
+                "{expected}",
+                {"found": value, "expected": f'{error.expected.split(", such as")[0]}, such as "{example}"'},
+            ) from None
+        if least <= found <= most:
+            return found
+    raise PydanticCustomError(
+        "quantity",
+        "{expected}",
+        {"found": value, "expected": f'{least:g} to {most:g} {unit}, written like "{example}"'},
+    )
 
 
-class _Instrument(_Table):
-    address: str
-    profile: str
-    serial: str = ""
-    calibration_due: datetime.date | None = None
-    accuracy: list[dict[str, Any]] = []
+Mains = Annotated[float, PlainValidator(lambda value: _quantity(value, "Hz", _LEAST_MAINS_HZ, _MOST_MAINS_HZ, "50 Hz"))]
+Resistance = Annotated[float, PlainValidator(lambda value: _quantity(value, "ohm", 1e3, 1e15, "10 Mohm"))]
+Filled = Annotated[Text, Field(min_length=1)]
+
+
+class _Head(Part):
+    format: Format
+    name: Filled
+    mains: Mains | None = None
+    visa: Text = ""
+
+
+class _Instrument(Part):
+    address: Filled
+    profile: Filled
+    serial: Text = ""
+    calibration_due: Date | None = None
+    line: LinePart | None = None
+    accuracy: tuple[dict[str, Any], ...] = ()
 
 
 class _Meter(_Instrument):
-    profile: str = "scpi-meter"
-    input_resistance: str = ""
+    profile: Filled = "scpi-meter"
+    input_resistance: Resistance | None = None
 
 
 class _Supply(_Instrument):
-    profile: str = "scpi-supply"
+    profile: Filled = "scpi-supply"
 
 
-class _File(_Table):
+class _File(Part):
     bench: _Head
     meter: _Meter | None = None
     supply: _Supply | None = None
 
 
-def load_bench(path: str | Path) -> Bench:
+def load_bench(path: str | Path, *, visa: str = "") -> Bench:
     """Read and check a bench file.
+
+    Parameters
+    ----------
+    path : str or Path
+    visa : str
+        A VISA library to use instead of the file's.
 
     Raises
     ------
@@ -160,14 +219,14 @@ def load_bench(path: str | Path) -> Bench:
     """
     path = Path(path)
     try:
-        text = path.read_text(encoding="utf-8")
+        text = path.read_text(encoding="utf-8-sig")
     except (OSError, UnicodeDecodeError) as error:
         reason = error.strerror if isinstance(error, OSError) else "it is no UTF-8 text"
         raise FileError(str(path), "", f"it can't be read ({reason})", "a bench file", "Check the path") from None
-    return parse_bench(text, str(path))
+    return parse_bench(text, str(path), visa=visa)
 
 
-def parse_bench(text: str, file_name: str, *, today: datetime.date | None = None) -> Bench:
+def parse_bench(text: str, file_name: str, *, today: datetime.date | None = None, visa: str = "") -> Bench:
     """Check the text of a bench file.
 
     Parameters
@@ -178,27 +237,31 @@ def parse_bench(text: str, file_name: str, *, today: datetime.date | None = None
         For messages, and the place where profiles are looked for.
     today : date, optional
         What calibration dates are compared with.
+    visa : str
+        A VISA library to use instead of the file's.
 
     Raises
     ------
     FileError
         With the file, the key, what was found and what was expected.
     """
-    try:
-        file = _File.model_validate(tomllib.loads(text))
-    except tomllib.TOMLDecodeError as error:
-        raise FileError(file_name, "", f"it is no TOML ({error})", "a bench file", "Correct it") from None
-    except ValidationError as error:
-        first = error.errors()[0]
-        key = ".".join(str(part) for part in first["loc"])
-        raise FileError(file_name, key, f"found {first['input']!r}", first["msg"], "Correct it") from None
+    file = checked(_File, read_toml(text, file_name, "a bench file"), file_name)
     cautions: list[str] = []
     today = today or datetime.date.today()
+    head = file.bench.model_copy(update={"visa": visa}) if visa else file.bench
     meter = supply = None
     if file.meter is not None:
-        meter = _instrument("meter", file.meter, file_name, today, cautions)
+        meter = _instrument("meter", file.meter, file_name, head, today, cautions)
     if file.supply is not None:
-        supply = _instrument("supply", file.supply, file_name, today, cautions)
+        supply = _instrument("supply", file.supply, file_name, head, today, cautions)
+    if meter is not None and supply is not None and meter.address == supply.address:
+        raise FileError(
+            file_name,
+            "supply.address",
+            f"found {supply.address!r}, which is the meter's too",
+            "an address of its own for each instrument",
+            "Correct it",
+        )
     return Bench(
         name=file.bench.name,
         text=text,
@@ -210,47 +273,90 @@ def parse_bench(text: str, file_name: str, *, today: datetime.date | None = None
 
 
 def _instrument(
-    label: str, table: _Meter | _Supply, file_name: str, today: datetime.date, cautions: list[str]
+    label: str, table: _Meter | _Supply, file_name: str, head: _Head, today: datetime.date, cautions: list[str]
 ) -> BenchInstrument:
-    profile = profile_table(table.profile, Path(file_name).parent)
-    try:
-        (meter_profile if label == "meter" else supply_profile)(profile, f"the profile {table.profile}")
-        parse_address(table.address)
-    except FileError:
-        raise
-    except BenchkitError as error:
-        raise FileError(file_name, f"{label}.address", error.came, error.expected, error.next_step) from None
-    accuracy = STATED_DEFAULT
-    if table.accuracy:
-        try:
-            accuracy = accuracy_from_rows(f"the {label}", table.accuracy, f"the bench file {file_name}")
-        except BenchkitError as error:
-            raise FileError(file_name, f"{label}.accuracy", error.came, error.expected, error.next_step) from None
-    else:
-        cautions.append(f"The bench file states no accuracy for the {label}; taken as: {STATED_DEFAULT.name}.")
-    due = table.calibration_due
-    if due is None:
-        cautions.append(f"The bench file gives no calibration date for the {label}.")
-    elif due < today:
-        cautions.append(f"The calibration of the {label} was due on {due.isoformat()}.")
-    resistance_ohm = DEFAULT_INPUT_RESISTANCE_OHM
-    if isinstance(table, _Meter):
-        if table.input_resistance:
-            try:
-                resistance_ohm = parse(table.input_resistance, "ohm")
-            except BenchkitError as error:
-                raise FileError(file_name, "meter.input_resistance", error.came, error.expected) from None
-            if resistance_ohm <= 0:
-                raise FileError(
-                    file_name, "meter.input_resistance", f"found {table.input_resistance!r}", "more than 0 ohm"
-                )
-        else:
-            cautions.append("The bench file states no input resistance for the meter; taken as 10 Mohm.")
+    folder = Path(file_name).parent
+    if shipped(table.profile) is None and not (folder / table.profile).is_file():
+        names = shipped_names()
+        raise FileError(
+            file_name,
+            f"{label}.profile",
+            f"found {table.profile!r}, which is neither a profile that comes along nor a file beside this one",
+            one_of(names, near(table.profile, names)) + ", or a file",
+            "Correct it",
+        )
+    profile = profile_table(table.profile, folder)
+    where = f"the profile {table.profile}"
+    model = (meter_profile if label == "meter" else supply_profile)(profile, where)
+    if table.line is not None:
+        profile = _with(profile, "link", "line", table.line.model_dump(exclude_unset=True))
+    if head.mains is not None and label == "meter":
+        profile = _with(profile, "timing", "mains_hz", head.mains)
+    if isinstance(model, SupplyProfile):
+        cautions += model.cautions
+    library = head.visa or PURE_LIBRARY
+    _check_address(label, table, file_name, library)
     return BenchInstrument(
         address=table.address,
         profile=profile,
         serial=table.serial,
-        accuracy=accuracy,
-        calibration_due=due,
-        input_resistance_ohm=resistance_ohm,
+        accuracy=_accuracy(label, table, file_name, cautions),
+        calibration_due=_calibration(label, table.calibration_due, today, cautions),
+        input_resistance_ohm=_resistance(table, cautions),
+        library=library,
     )
+
+
+def _with(profile: Mapping[str, Any], part: str, key: str, value: Any) -> dict[str, Any]:
+    """Return a profile with one entry changed; a table is laid over the one that is there."""
+    inner = profile.get(part, {})
+    if not isinstance(inner, dict):
+        return dict(profile)
+    old = inner.get(key)
+    if isinstance(value, dict):
+        value = {**(old if isinstance(old, dict) else {}), **value}
+    return {**profile, part: {**inner, key: value}}
+
+
+def _check_address(label: str, table: _Instrument, file_name: str, library: str) -> None:
+    try:
+        address = parse_address(table.address, library)
+    except BenchkitError as error:
+        raise FileError(file_name, f"{label}.address", error.came, error.expected, error.next_step) from None
+    if table.line is not None and address.kind not in {"serial", "other"}:
+        raise FileError(
+            file_name,
+            f"{label}.line",
+            f"the address {table.address} is no serial port",
+            "a line only for a serial port, such as ASRL/dev/ttyUSB0::INSTR",
+            "Leave it out",
+        )
+
+
+def _accuracy(label: str, table: _Instrument, file_name: str, cautions: list[str]) -> Accuracy:
+    if not table.accuracy:
+        cautions.append(f"The bench file states no accuracy for the {label}; taken as: {STATED_DEFAULT.name}.")
+        return STATED_DEFAULT
+    try:
+        return accuracy_from_rows(f"the {label}", table.accuracy, f"the bench file {file_name}")
+    except BenchkitError as error:
+        raise FileError(file_name, f"{label}.accuracy", error.came, error.expected, error.next_step) from None
+
+
+def _calibration(
+    label: str, due: datetime.date | None, today: datetime.date, cautions: list[str]
+) -> datetime.date | None:
+    if due is None:
+        cautions.append(f"The bench file gives no calibration date for the {label}.")
+    elif due < today:
+        cautions.append(f"The calibration of the {label} was due on {due.isoformat()}.")
+    return due
+
+
+def _resistance(table: _Meter | _Supply, cautions: list[str]) -> float:
+    if not isinstance(table, _Meter):
+        return DEFAULT_INPUT_RESISTANCE_OHM
+    if table.input_resistance is None:
+        cautions.append("The bench file states no input resistance for the meter; taken as 10 Mohm.")
+        return DEFAULT_INPUT_RESISTANCE_OHM
+    return table.input_resistance

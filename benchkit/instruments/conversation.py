@@ -4,13 +4,20 @@ Rules
 -----
 * A link is open when the instrument has said its name (``*IDN?``), and not before.
 * After any failed question the link is *dirty*: an answer may still be on its way and would be taken for the next
-  one.  Before the next question everything that has come is thrown away, the name is asked for, and lines are read
-  until it comes.  Instruments answer in order, so that nothing old can come behind it.  If it doesn't come, the link
-  is closed and a new one opened; the name must be the same.
+  one.  Before the next question a *mark* is asked for (`benchkit.instruments.marks`), a number that no earlier answer
+  can hold, and all lines before it are thrown away.  Instruments answer in their order, so that nothing old can come
+  behind it.  The next question is then closed by a second mark, and its answer counts only when it is the one line
+  between the two: an answer that was lost is not replaced by one that came twice.
+* If the mark doesn't come, or the instrument has none, a new link is opened: what was said to the old connection can't
+  arrive at the new one.  On one and the same wire (serial, USB, VXI-11) it can; there the mark has to come on the new
+  link too if it ever came.  An instrument without any is in step there after silence as long as a whole time-out, and
+  its name: as sure as silence is, no more.
+* What this can't find: an answer that comes twice by itself on a link that never failed, the second time only after
+  the next question was sent.
 * Bytes that wait before a question was asked, or behind an answer, make the link dirty too.
-* Only questions are ever repeated, once.  A setting is never sent twice by itself: it is read back.
-* Waiting is done in slices; between them the deadline, a cancel and a closed peer are looked at.
-* Replies are bounded, and control characters never get further than a quoted message.
+* Only questions are ever repeated, once.  A setting is never sent twice by itself: it is read back.  The exception is
+  what `Conversation.tell_at_once` sends, "off", which may be said any number of times.
+* Opening happens in a thread that is left behind when it takes too long.
 """
 
 from __future__ import annotations
@@ -19,78 +26,31 @@ import threading
 import time
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager
-from dataclasses import dataclass, replace
-from typing import Protocol, TypeVar
+from dataclasses import replace
+from typing import TypeVar
 
 from benchkit.errors import InstrumentError
-from benchkit.instruments.address import SocketAddress
+from benchkit.instruments.address import Address
+from benchkit.instruments.lines import REPLY_LIMIT, Lines, load_library, opened
+from benchkit.instruments.marks import Marks, shows
+from benchkit.instruments.names import is_name, name_in
 from benchkit.instruments.numbers import visible
+from benchkit.instruments.settings import LinkSettings, SerialLine
 from benchkit.instruments.traffic import TrafficLog
-from benchkit.instruments.visa import VisaSocket
+from benchkit.instruments.transports import Transport, open_transport
+
+__all__ = ["IDENTIFY", "REPLY_LIMIT", "Conversation", "LinkSettings", "Opener", "SerialLine", "Transport"]
 
 T = TypeVar("T")
 
 IDENTIFY = "*IDN?"
-REPLY_LIMIT = 65536
-"""The longest reply that is taken, bytes."""
 
 _QUIET_S = 0.02
+_SHORT_SILENCE_S = 0.1
+_MARK_S = 1.0
+_MOST_LINES = 1000
 
-
-class Transport(Protocol):
-    """What a conversation needs of a link; `VisaSocket` is the one there is."""
-
-    def write(self, data: bytes) -> None:
-        """Send bytes."""
-
-    def read_slice(self) -> bytes:
-        """Wait for one slice at most and return what came, ended by the terminator if it came."""
-
-    def pending(self) -> bool:
-        """Tell whether unasked bytes wait."""
-
-    def peer_closed(self) -> bool:
-        """Tell whether the other side is gone."""
-
-    def drain(self, quiet_s: float) -> bytes:
-        """Throw waiting bytes away."""
-
-    def close(self) -> None:
-        """Close without raising."""
-
-
-@dataclass(frozen=True, kw_only=True)
-class LinkSettings:
-    """How to speak with one instrument.
-
-    Parameters
-    ----------
-    read_termination, write_termination : str
-        What ends a reply (one character) and a message.
-    timeout_s : float
-        For a plain question, s.
-    open_timeout_s : float
-        For opening and the first answer, s.
-    gap_s : float
-        The least time between two messages, s.
-    settle_s : float
-        Rest after opening, s.
-    """
-
-    read_termination: str = "\n"
-    write_termination: str = "\n"
-    timeout_s: float = 2.0
-    open_timeout_s: float = 3.0
-    gap_s: float = 0.0
-    settle_s: float = 0.0
-
-
-Opener = Callable[[SocketAddress, LinkSettings], Transport]
-
-
-def open_socket(address: SocketAddress, settings: LinkSettings) -> Transport:
-    """Open a raw socket over PyVISA."""
-    return VisaSocket(address, read_termination=settings.read_termination, open_timeout_s=settings.open_timeout_s)
+Opener = Callable[[Address, LinkSettings], Transport]
 
 
 class Conversation:
@@ -105,8 +65,8 @@ class Conversation:
     log : TrafficLog
     cancel : threading.Event
         When set, the running question ends within one slice.
-    opener : callable
-        Makes the transport.
+    opener : callable, optional
+        Makes the transport; without it `open_transport` does.
 
     Attributes
     ----------
@@ -123,12 +83,12 @@ class Conversation:
     def __init__(
         self,
         label: str,
-        address: SocketAddress,
+        address: Address,
         settings: LinkSettings,
         log: TrafficLog,
         cancel: threading.Event,
         *,
-        opener: Opener = open_socket,
+        opener: Opener | None = None,
     ) -> None:
         self.label = label
         self.address = address
@@ -139,25 +99,30 @@ class Conversation:
         self.repeats = True
         self._log = log
         self._cancel = cancel
-        self._opener = opener
-        self._transport: Transport | None = None
+        self._opener = open_transport if opener is None else opener
+        self._lines: Lines | None = None
         self._dirty = False
-        self._last_message_s = -1e9
-        self._terminator = settings.read_termination.encode("latin-1")
+        self._marks = Marks()
+        self._mark = -1
+        self._marked = False
+        self._mark_came: bool | None = None
+        self._unanswered = 0
+        self._hurried = False
 
     @property
     def dirty(self) -> bool:
         """True when the next question has to get back into step first."""
-        return self._dirty or self._transport is None
+        return self._dirty or self._lines is None
 
     @contextmanager
     def impatient(self, patience_s: float, *, repeats: bool) -> Iterator[None]:
         """Cap every wait for the time of a block."""
+        before = self.patience_s, self.repeats
         self.patience_s, self.repeats = patience_s, repeats
         try:
             yield
         finally:
-            self.patience_s, self.repeats = None, True
+            self.patience_s, self.repeats = before
 
     @property
     def cancelled(self) -> bool:
@@ -178,20 +143,16 @@ class Conversation:
             If it can't be opened, does not answer, or another instrument answers than before.
         """
         self.close()
-        patient = replace(self.settings, open_timeout_s=self._at_most(self.settings.open_timeout_s))
-        self._transport = self._opener(self.address, patient)
+        lines = self._lines = self._opened()
         self.openings += 1
-        self._dirty = False
+        self._dirty = self._marked = False
         try:
-            if first:
-                self._send(first, hurry=True)
-            if self.settings.settle_s:
-                time.sleep(self.settings.settle_s)
-                self._transport.drain(_QUIET_S)
-            name = self._first_name()
+            self._begin(lines, first)
+            name = self._first_name(lines)
         except InstrumentError:
             self.close()
             raise
+        self._unanswered = 0
         if self.idn and name != self.idn:
             self.close()
             raise InstrumentError(
@@ -230,154 +191,187 @@ class Conversation:
 
     def tell(self, message: str) -> None:
         """Send a setting; getting back into step first if need be.  It is never sent twice."""
-        self._in_step()
-        self._send(message)
+        self._send(self._in_step(), message)
 
     def tell_at_once(self, message: str) -> None:
-        """Send a message whatever state the link is in, without getting into step; open it if it is closed."""
-        if self._transport is None:
-            self.open(message)
-        else:
-            self._send(message, hurry=True)
+        """Send a message whatever state the link is in, without getting into step; over a new link if need be."""
+        if self._lines is not None:
+            try:
+                self._send(self._lines, message, hurry=True)
+            except InstrumentError as error:
+                self._log.note(self.label, f"opens a new link ({error.kind})")
+            else:
+                self._hurried = True
+                return
+        self.open(message)
 
     def close(self) -> None:
         """Close the link; the next question opens a new one."""
-        if self._transport is not None:
-            self._transport.close()
-            self._transport = None
+        if self._lines is not None:
+            self._lines.close()
+            self._lines = None
+
+    def _opened(self) -> Lines:
+        if self._opener is open_transport:
+            load_library(self.settings.library, self._who(), self._cancel)
+        limit_s = self._at_most(self.settings.open_timeout_s)
+        patient = replace(self.settings, open_timeout_s=limit_s)
+        transport = opened(lambda: self._opener(self.address, patient), self._who(), limit_s, self._cancel)
+        return Lines(transport, self.settings, self._log, self.label, self._who(), self._cancel)
+
+    def _begin(self, lines: Lines, first: str) -> None:
+        """Say what has to be said before the name; what is urgent both before and after it."""
+        if first:
+            lines.send(first, hurry=True)
+            self._hurried = True
+        if self.settings.settle_s:
+            lines.rest_for(self.settings.settle_s)
+            lines.drain(_QUIET_S)
+        for message in self.settings.prepare:
+            lines.send(message, hurry=bool(first))
+        if first and (self.settings.settle_s or self.settings.prepare):
+            lines.send(first, hurry=True)
+
+    def _first_name(self, lines: Lines) -> str:
+        """Ask for the name; once more if the first question was lost on opening."""
+        if not lines.fresh_when_reopened and not self._mark_comes(lines):
+            if self._mark_came:
+                raise InstrumentError(
+                    "timeout",
+                    f"{self._who()} did not answer {self.settings.sync} as it did before",
+                    "a number of our own choice",
+                    "Check the cable and the instrument",
+                )
+            lines.quiet(self._at_most(self.settings.timeout_s) if self._unanswered else _SHORT_SILENCE_S)
+        limit_s = self._at_most(self.settings.open_timeout_s)
+        try:
+            return self._answer(lines, IDENTIFY, self._as_name, min(1.0, limit_s))
+        except InstrumentError as error:
+            if error.kind != "timeout" and (lines.fresh_when_reopened or error.kind != "garbled"):
+                raise
+        lines.drain(_QUIET_S)
+        if self._mark_comes(lines):
+            return self._answer(lines, IDENTIFY, self._as_name, limit_s)
+        lines.send(IDENTIFY)
+        line = lines.find(IDENTIFY, is_name, limit_s)
+        lines.quiet(self._at_most(self.settings.timeout_s))
+        return self._as_name(line)
+
+    def _as_name(self, line: str) -> str:
+        return name_in(line, self._who())
 
     def _ask_once(self, message: str, parse: Callable[[str], T], timeout_s: float | None) -> T:
-        self._in_step()
+        lines = self._in_step()
+        limit_s = self._at_most(self.settings.timeout_s if timeout_s is None else timeout_s)
         try:
-            self._send(message)
-            reply = self._read_line(message, self._at_most(self.settings.timeout_s if timeout_s is None else timeout_s))
-            value = parse(reply)
+            value = self._answer(lines, message, parse, limit_s)
         except InstrumentError as error:
             self._dirty = True
+            self._unanswered += 1
             if error.kind == "link lost":
                 self.close()
             raise self._named(error, message) from None
-        assert self._transport is not None
-        if self._transport.pending():
-            self._dirty = True
-            raise InstrumentError(
-                "garbled",
-                f"{self._who()} sent more than one line as answer to {message}",
-                "one line",
-                "Check whether another program talks to it",
-                partial=reply.encode("latin-1"),
-            )
+        self._hurried = False
         return value
 
-    def _at_most(self, seconds: float) -> float:
-        return seconds if self.patience_s is None else min(seconds, self.patience_s)
+    def _answer(self, lines: Lines, message: str, parse: Callable[[str], T], limit_s: float) -> T:
+        """Ask, and take the one line that is the answer; when `_marked`, the one line between two marks."""
+        self._send(lines, message)
+        end_s = time.monotonic() + limit_s
+        reply = lines.read(message, limit_s)
+        for _ in range(_MOST_LINES):
+            if not shows(reply, self._mark):
+                break
+            if not self._marked:
+                raise InstrumentError("garbled", f"the reply was {visible(reply)}, left over", "the answer to this")
+            reply = lines.read(message, end_s - time.monotonic())
+        if self._marked:
+            question = self._ask_for_mark(lines)
+            if not shows(lines.read(question, self._at_most(self.settings.timeout_s)), self._mark):
+                raise self._too_much(message, reply)
+            self._marked = False
+        value = parse(reply)
+        if lines.pending():
+            raise self._too_much(message, reply)
+        return value
 
-    def _first_name(self) -> str:
-        """Ask for the name; once more if the first question was lost on opening."""
-        first = min(1.0, self._at_most(self.settings.open_timeout_s))
-        try:
-            return self._ask_name(first)
-        except InstrumentError as error:
-            if error.kind != "timeout":
-                raise
-        assert self._transport is not None
-        self._transport.drain(_QUIET_S)
-        return self._ask_name(self._at_most(self.settings.open_timeout_s))
-
-    def _ask_name(self, timeout_s: float) -> str:
-        self._send(IDENTIFY)
-        name = self._read_line(IDENTIFY, timeout_s).strip()
-        if not name or not name.isprintable():
-            raise InstrumentError(
-                "garbled", f"{self._who()} gave its name as {visible(name)}", "maker, model, serial and version"
-            )
-        return name
-
-    def _in_step(self) -> None:
-        """Get back into step if need be."""
-        if self._transport is None:
+    def _in_step(self) -> Lines:
+        """Return the link, in step; over a new one if it must be."""
+        if self._lines is None:
             self.open()
-            return
-        if not self._dirty and self._transport.pending():
-            self._dirty = True
-        if not self._dirty:
-            return
+        assert self._lines is not None
         try:
-            thrown = self._transport.drain(_QUIET_S)
-            if thrown:
-                self._log.note(self.label, "threw away", thrown)
-            self._send(IDENTIFY)
-            deadline = time.monotonic() + self._at_most(self.settings.timeout_s)
-            while (line := self._read_line(IDENTIFY, deadline - time.monotonic()).strip()) != self.idn:
-                self._log.note(self.label, "threw away", line.encode("latin-1"))
-            self._transport.drain(_QUIET_S)
-            self._dirty = False
+            if not self._dirty and not self._lines.pending():
+                return self._lines
+            self._dirty = True
+            self._find_step(self._lines)
         except InstrumentError as error:
             if self._cancel.is_set():
                 raise
             self._log.note(self.label, f"opens a new link ({error.kind})")
+            if not self._hurried and self._lines is not None:
+                self._lines.reset()
             self.open()
+        self._dirty = False
+        self._unanswered = 0
+        return self._lines
 
-    def _send(self, message: str, *, hurry: bool = False) -> None:
-        assert self._transport is not None
-        if not hurry:
-            self._look_for_cancel(message)
-            wait_s = self._last_message_s + self.settings.gap_s - time.monotonic()
-            if wait_s > 0:
-                time.sleep(wait_s)
-        data = (message + self.settings.write_termination).encode("ascii")
+    def _find_step(self, lines: Lines) -> None:
+        lines.drain(_QUIET_S)
+        if self._mark_comes(lines):
+            return
+        if lines.fresh_when_reopened or self._mark_came:
+            raise InstrumentError("timeout", f"{self._who()} is not in step")
+        lines.quiet(self._at_most(self.settings.timeout_s))
+        lines.send(IDENTIFY)
+        lines.find(IDENTIFY, lambda line: line.strip() == self.idn, self._at_most(self.settings.timeout_s))
+        if lines.quiet(_SHORT_SILENCE_S):
+            raise InstrumentError("garbled", f"{self._who()} said its name and more", "its name")
+
+    def _mark_comes(self, lines: Lines) -> bool:
+        """Ask for a mark and throw away the lines before it; False when the instrument has none or is silent."""
+        if not self.settings.sync or (lines.fresh_when_reopened and self._mark_came is False):
+            return False
+        tries, limit_s = (1, _MARK_S) if lines.fresh_when_reopened else (2, max(_MARK_S, self.settings.timeout_s))
+        for _ in range(tries):
+            question = self._ask_for_mark(lines)
+            try:
+                lines.find(question, lambda line: shows(line, self._mark), self._at_most(limit_s) / 2)
+            except InstrumentError as error:
+                if error.kind != "timeout":
+                    raise
+            else:
+                self._mark_came = self._marked = True
+                return True
+        self._mark_came = self._mark_came or False
+        return False
+
+    def _ask_for_mark(self, lines: Lines) -> str:
+        self._mark = self._marks.fresh()
+        question = self.settings.sync.replace("{n}", str(self._mark))
+        self._send(lines, question)
+        return question
+
+    def _send(self, lines: Lines, message: str, *, hurry: bool = False) -> None:
         try:
-            self._transport.write(data)
-        except InstrumentError:
+            lines.send(message, hurry=hurry)
+        except InstrumentError as error:
             self._dirty = True
-            self.close()
+            if error.kind != "refused":
+                self.close()
             raise
-        self._last_message_s = time.monotonic()
-        self._log.note(self.label, "sent", data)
 
-    def _read_line(self, message: str, timeout_s: float) -> str:
-        assert self._transport is not None
-        begin_s = time.monotonic()
-        data = b""
-        while True:
-            data += self._transport.read_slice()
-            took_s = time.monotonic() - begin_s
-            if data.endswith(self._terminator):
-                self._log.note(self.label, "got", data, took_s)
-                return data[: -len(self._terminator)].decode("latin-1")
-            if len(data) > REPLY_LIMIT:
-                raise InstrumentError(
-                    "garbled", f"{self._who()} sent {len(data)} bytes without an end", "one line", partial=data[:200]
-                )
-            if self._transport.peer_closed():
-                self._log.note(self.label, "closed the link", data, took_s)
-                had = f" after {visible(data)}" if data else ""
-                raise InstrumentError(
-                    "link lost",
-                    f"{self._who()} closed the connection{had} instead of answering {message}",
-                    "",
-                    "Check that it is switched on and that no other program uses it",
-                    partial=data,
-                )
-            self._look_for_cancel(message)
-            if took_s >= timeout_s:
-                self._log.note(self.label, "gave up", data, took_s)
-                raise self._too_late(message, timeout_s, data)
+    def _at_most(self, seconds: float) -> float:
+        return seconds if self.patience_s is None else min(seconds, self.patience_s)
 
-    def _too_late(self, message: str, timeout_s: float, data: bytes) -> InstrumentError:
-        came = f"only {visible(data)} came" if data else "nothing came"
+    def _too_much(self, message: str, reply: str) -> InstrumentError:
         return InstrumentError(
-            "timeout",
-            f"{self._who()} did not answer {message} within {max(timeout_s, 0.0):.1f} s; {came}",
-            f"a line that ends in {self.settings.read_termination!r}",
-            "Check that it is in remote control and that the profile fits it",
-            partial=data,
+            "garbled",
+            f"{self._who()} sent more than one line as answer to {message}",
+            "one line",
+            "Check whether another program talks to it",
+            partial=reply.encode("latin-1", "replace"),
         )
-
-    def _look_for_cancel(self, message: str) -> None:
-        if self._cancel.is_set():
-            self._dirty = True
-            raise InstrumentError("refused", f"{message} was given up because the output is being switched off")
 
     def _named(self, error: InstrumentError, message: str) -> InstrumentError:
         if error.kind != "garbled" or message in error.came:

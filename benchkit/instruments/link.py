@@ -20,7 +20,7 @@ from typing import Any, TypeVar
 
 from benchkit.errors import InstrumentError
 from benchkit.instruments.address import parse_address
-from benchkit.instruments.conversation import Conversation, LinkSettings, Opener, open_socket
+from benchkit.instruments.conversation import Conversation, LinkSettings, Opener
 from benchkit.instruments.traffic import TrafficLog
 
 T = TypeVar("T")
@@ -39,8 +39,8 @@ class Link:
         As in the bench file.
     settings : LinkSettings
     log : TrafficLog
-    opener : callable
-        Makes the transport.
+    opener : callable, optional
+        Makes the transport; without it the address's kind and the settings' library decide.
 
     Raises
     ------
@@ -55,7 +55,7 @@ class Link:
         settings: LinkSettings,
         log: TrafficLog,
         *,
-        opener: Opener = open_socket,
+        opener: Opener | None = None,
     ) -> None:
         self._condition = threading.Condition()
         self._waiting: deque[_Work] = deque()
@@ -63,7 +63,9 @@ class Link:
         self._cancel = threading.Event()
         self._running = ""
         self._stopping = False
-        self._conversation = Conversation(label, parse_address(address), settings, log, self._cancel, opener=opener)
+        self._conversation = Conversation(
+            label, parse_address(address, settings.library), settings, log, self._cancel, opener=opener
+        )
         self._thread = threading.Thread(target=self._own, name=f"owner of {label}", daemon=True)
         self._thread.start()
 

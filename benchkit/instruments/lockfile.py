@@ -12,6 +12,7 @@ from contextlib import suppress
 from pathlib import Path
 
 from benchkit.errors import InstrumentError
+from benchkit.instruments.address import plain_address
 from benchkit.journal.locking import try_lock
 
 
@@ -21,7 +22,7 @@ class ResourceLock:
     Parameters
     ----------
     address : str
-        As in the bench file; capitals make no difference.
+        As in the bench file; capitals, board 0 and the other names of a serial port make no difference.
 
     Raises
     ------
@@ -31,7 +32,7 @@ class ResourceLock:
 
     def __init__(self, address: str) -> None:
         folder = Path(tempfile.gettempdir()) / "benchkit-locks"
-        digest = hashlib.sha256(address.strip().upper().encode()).hexdigest()[:24]
+        digest = hashlib.sha256(plain_address(address).encode()).hexdigest()[:24]
         flags = os.O_RDWR | os.O_CREAT | getattr(os, "O_NOFOLLOW", 0) | getattr(os, "O_CLOEXEC", 0)
         try:
             if not folder.is_dir():

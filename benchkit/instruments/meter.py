@@ -1,15 +1,25 @@
-"""A meter: one reading at a time, on its own thread."""
+"""A meter: one reading at a time, on its own thread.
+
+Rules
+-----
+* A function is chosen anew for every reading, because somebody may have turned the meter's own switch; within one
+  reading of several samples it is chosen once, and again if the link had to be opened anew.
+* Where the meter can be asked for its function, that has to be the right one before a value is believed.
+* An overload is never a number, and ends a reading of several samples.
+"""
 
 from __future__ import annotations
 
 import math
+import time
 from concurrent.futures import Future
 from dataclasses import dataclass
 
 from benchkit.errors import InstrumentError
 from benchkit.instruments.conversation import Conversation
+from benchkit.instruments.dialect import Chosen, ask_series, fill
 from benchkit.instruments.link import Link
-from benchkit.instruments.numbers import parse_number
+from benchkit.instruments.numbers import visible
 from benchkit.instruments.profile import MeterProfile
 from benchkit.quantities import Overload
 
@@ -61,11 +71,14 @@ class Meter:
     def __init__(self, link: Link, profile: MeterProfile) -> None:
         self._link = link
         self._profile = profile
-        self._rules = profile.numbers.rules()
 
     def identify(self) -> Future[str]:
         """Open the link and return the meter's name."""
         return self._link.submit(lambda conversation: conversation.idn or conversation.open())
+
+    def expected_s(self, function: str, range: float | None = None, samples: int = 1) -> float:
+        """Return how long such a reading is likely to take, s: for a countdown, not a promise."""
+        return self._profile.expected_s(function, range, samples)
 
     def read(self, function: str, range: float | None = None, samples: int = 1) -> Future[RawReading]:
         """Take `samples` readings one after the other.
@@ -86,47 +99,43 @@ class Meter:
         """
         if not 1 <= samples <= MOST_SAMPLES:
             raise InstrumentError("unsupported", f"{samples} samples were asked for", f"1 to {MOST_SAMPLES}")
-        questions = self._profile.functions if range is None else self._profile.ranged
-        question = questions.get(function)
-        if question is None:
+        known = self._profile.functions if range is None else self._profile.ranged
+        series = known.get(function)
+        if series is None:
             how = "" if range is None else " on a stated range"
             raise InstrumentError(
                 "unsupported",
                 f"This meter's profile can't measure {function}{how}",
-                "one of " + ", ".join(questions),
+                "one of " + ", ".join(known) if known else "",
                 "Enter this reading by hand",
             )
         if range is not None:
             if not (math.isfinite(range) and range > 0):
                 raise InstrumentError("unsupported", f"The range {range!r} was asked for", "a number above zero")
-            question = question.replace("{range}", f"{range:.9g}")
-        timeout_s = self._profile.timing.timeout_s(function)
-        asked = question
-
-        def job(conversation: Conversation) -> RawReading:
-            return self._read(
-                conversation, question=asked, function=function, range=range, samples=samples, timeout_s=timeout_s
-            )
-
-        return self._link.submit(job)
+            series = fill(series, {"range": f"{range:.9g}"})
+        asked = series
+        return self._link.submit(lambda conversation: self._read(conversation, asked, function, range, samples))
 
     def close(self, wait_s: float = 1.0) -> None:
         """Close the link, waiting for that for at most `wait_s`."""
         self._link.close(wait_s)
 
     def _read(
-        self,
-        conversation: Conversation,
-        *,
-        question: str,
-        function: str,
-        range: float | None,
-        samples: int,
-        timeout_s: float,
+        self, conversation: Conversation, series: tuple[str, ...], function: str, range: float | None, samples: int
     ) -> RawReading:
+        rules = self._profile.rules(function)
+        timeout_s = self._profile.timing.timeout_s(function, ranged=range is not None)
         values: list[float] = []
+        chosen = Chosen()
         for _ in [None] * samples:
-            value = conversation.ask(question, lambda text: parse_number(text, self._rules), timeout_s=timeout_s)
+            value = ask_series(
+                conversation,
+                series,
+                rules.read,
+                timeout_s=timeout_s,
+                chosen=chosen,
+                after_choice=lambda: self._demand_function(conversation, function),
+            )
             if isinstance(value, Overload):
                 return RawReading(
                     value=None,
@@ -139,3 +148,19 @@ class Meter:
             values.append(value)
         mean = math.fsum(values) / len(values)
         return RawReading(value=mean, function=function, range=range, meter=conversation.idn, values=tuple(values))
+
+    def _demand_function(self, conversation: Conversation, function: str) -> None:
+        """Let the meter switch over, and look that it did where it can be asked."""
+        if self._profile.timing.switch_s:
+            time.sleep(self._profile.timing.switch_s)
+        if not self._profile.function_question:
+            return
+        wanted = self._profile.function_answers[function]
+        found = ask_series(conversation, self._profile.function_question, str.strip)
+        if found.strip('"').upper() != wanted.strip('"').upper():
+            raise InstrumentError(
+                "refused",
+                f"The meter stands on {visible(found)} although {function} was chosen",
+                repr(wanted),
+                "Look at the meter's own display",
+            )

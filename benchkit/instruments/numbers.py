@@ -49,8 +49,8 @@ def parse_number(text: str, rules: NumberRules) -> float | Overload:
         ``garbled`` if it isn't exactly one number or one of the overload words.
     """
     plain = text.strip(" \r")
-    word = plain.upper().lstrip("+-")
-    if word in rules.overload_words:
+    word = plain[1:] if plain[:1] in {"+", "-"} else plain
+    if word.isascii() and word.upper() in rules.overload_words:
         return Overload(positive=not plain.startswith("-"))
     match = _NUMBER.fullmatch(plain)
     if match is None or (match["unit"] is not None and match["unit"] not in rules.units):
@@ -75,7 +75,7 @@ def parse_numbers(text: str, count: int, rules: NumberRules) -> tuple[float, ...
     values: list[float] = []
     for part in parts:
         value = parse_number(part, rules)
-        if isinstance(value, Overload):
+        if isinstance(value, Overload) or "\r" in part:
             raise garbled(text, f"{count} numbers, none of them beyond the range")
         values.append(value)
     return tuple(values)
@@ -90,8 +90,8 @@ def parse_switches(text: str, count: int) -> tuple[bool, ...]:
         ``garbled`` otherwise.
     """
     known = {"1": True, "0": False, "ON": True, "OFF": False}
-    parts = [part.strip().upper() for part in text.strip(" \r").split(",")]
-    if len(parts) != count or any(part not in known for part in parts):
+    parts = [part.strip(" ").upper() for part in text.strip(" \r").split(",")]
+    if len(parts) != count or not text.isascii() or any(part not in known for part in parts):
         raise garbled(text, f"{count} output states, each 1 or 0")
     return tuple(known[part] for part in parts)
 
@@ -104,7 +104,7 @@ def parse_flags(text: str, count: int) -> tuple[int, ...]:
     InstrumentError
         ``garbled`` otherwise.
     """
-    parts = [part.strip() for part in text.strip(" \r").split(",")]
+    parts = [part.strip(" ") for part in text.strip(" \r").split(",")]
     if len(parts) != count or not all(re.fullmatch(r"\+?[0-9]{1,5}", part) for part in parts):
         raise garbled(text, f"{count} status registers")
     values = tuple(int(part) for part in parts)

@@ -1,7 +1,17 @@
 """Profiles: what an instrument calls things, so that a new dialect needs no code.
 
-A profile is a TOML file; the shipped ones stand in ``profiles/`` beside this module and use the standard SCPI forms.
-One beside the bench file may say ``based_on = "scpi-meter"`` and name only what differs.
+A profile is a TOML file; the shipped ones stand in ``profiles/`` beside this module.  One beside the bench file may say
+``based_on = "scpi-meter"`` and name only what differs.
+
+Rules
+-----
+* A command or question is one message, or a list of messages that are sent one after the other; the last of a list is
+  the question.
+* ``{output}`` stands for the name that ``[outputs]`` gives to an output.  What holds it is sent once for each output,
+  the positive rail's first, and answered by one value; what doesn't, is sent once and answered by two.
+* ``{value}`` stands for the number to be set; ``{volts}`` and ``{amps}`` for an output's voltage and limit, for a
+  supply that takes both in one message.
+* What an instrument hasn't is left out or "".  `SupplyProfile.cautions` says what that costs.
 """
 
 from __future__ import annotations
@@ -10,151 +20,96 @@ import importlib.resources
 import tomllib
 from collections.abc import Mapping
 from pathlib import Path
-from typing import Annotated, Any, Literal, TypeVar
+from typing import Any, Literal, Self, TypeVar
 
-from pydantic import BaseModel, ConfigDict, Field, StringConstraints, ValidationError
+from pydantic import model_validator
 
 from benchkit.errors import FileError
-from benchkit.instruments.conversation import LinkSettings
-from benchkit.instruments.numbers import NumberRules
+from benchkit.instruments.mistakes import checked, near, one_of, read_toml
+from benchkit.instruments.profile_parts import (
+    Format,
+    LinkPart,
+    NeededSeries,
+    NumbersPart,
+    Part,
+    Series,
+    Text,
+    TimingPart,
+    demand_ends,
+    mistake,
+)
+from benchkit.instruments.profile_supply import SupplyProfile
+from benchkit.instruments.replies import ReplyRules
 from benchkit.measure.readings import FUNCTIONS
 
-Message = Annotated[str, StringConstraints(pattern=r"^[\x20-\x7e]+$")]
-Termination = Annotated[str, StringConstraints(pattern=r"^[\x00-\x7f]{1,2}$")]
-Seconds = Annotated[float, Field(ge=0.0, le=600.0, allow_inf_nan=False)]
-Positive = Annotated[float, Field(gt=0.0, allow_inf_nan=False)]
+__all__ = [
+    "MeterProfile",
+    "SupplyProfile",
+    "meter_profile",
+    "profile_table",
+    "shipped",
+    "shipped_names",
+    "supply_profile",
+]
 
 P = TypeVar("P", "MeterProfile", "SupplyProfile")
 
-
-class _Part(BaseModel):
-    model_config = ConfigDict(extra="forbid", frozen=True, strict=False)
+KINDS = ("meter", "supply")
 
 
-class LinkPart(_Part):
-    """``[link]``: terminations and times, s."""
-
-    read_termination: Annotated[str, StringConstraints(pattern=r"^[\x00-\x7f]$")] = "\n"
-    write_termination: Termination = "\n"
-    timeout_s: Seconds = 2.0
-    open_timeout_s: Seconds = 3.0
-    gap_s: Annotated[float, Field(ge=0.0, le=1.0)] = 0.0
-    settle_s: Annotated[float, Field(ge=0.0, le=10.0)] = 0.0
-
-    def settings(self) -> LinkSettings:
-        """Return them as the link takes them."""
-        return LinkSettings(**self.model_dump())
-
-
-class NumbersPart(_Part):
-    """``[numbers]``: how overload is said, and units that may follow a number."""
-
-    overload_from: Positive = 9.0e37
-    overload_words: tuple[str, ...] = NumberRules.overload_words  # type: ignore[assignment]
-    units: tuple[str, ...] = ()
-
-    def rules(self) -> NumberRules:
-        """Return them as the parser takes them."""
-        return NumberRules(
-            overload_from=self.overload_from,
-            overload_words=frozenset(word.upper() for word in self.overload_words),
-            units=frozenset(self.units),
-        )
-
-
-class TimingPart(_Part):
-    """``[timing]``: how long one reading may take."""
-
-    mains_hz: Positive = 50.0
-    power_line_cycles: Positive = 10.0
-    autozero: bool = True
-    settling_s: Seconds = 0.5
-    ac_settling_s: Seconds = 7.0
-    autorange_s: Seconds = 1.0
-
-    def timeout_s(self, function: str) -> float:
-        """Return the time-out for one reading, s: twice the integration, settling, autorange and 1 s in reserve."""
-        integration_s = 2.0 * self.power_line_cycles / self.mains_hz * (2.0 if self.autozero else 1.0)
-        settling_s = self.ac_settling_s if function == "ac volts" else self.settling_s
-        return integration_s + settling_s + self.autorange_s + 1.0
-
-
-class MeterProfile(_Part):
+class MeterProfile(Part):
     """A meter's dialect.
 
-    ``[functions]`` holds a question for each function of `FUNCTIONS` that it has; ``[ranged]`` the same with
-    ``{range}`` in it, for a reading on a stated range.
+    ``[functions]`` holds a series for each function of `FUNCTIONS` that it has; ``[ranged]`` the same with ``{range}``
+    in it, for a reading on a stated range.  With ``function_question`` the meter is asked which function it stands on
+    before a reading is believed, and ``[function_answers]`` holds what it says for each.
     """
 
-    format: Literal[1]
+    format: Format
     kind: Literal["meter"]
-    title: str = ""
+    title: Text = ""
     link: LinkPart = LinkPart()
     numbers: NumbersPart = NumbersPart()
     timing: TimingPart = TimingPart()
-    functions: dict[str, Message]
-    ranged: dict[str, Message] = {}
+    functions: Mapping[str, NeededSeries]
+    ranged: Mapping[str, NeededSeries] = {}
+    function_question: Series = ()
+    function_answers: Mapping[str, Text] = {}
 
+    @model_validator(mode="after")
+    def _consistent(self) -> Self:
+        tables: dict[str, Mapping[str, Any]] = {
+            "functions": self.functions,
+            "ranged": self.ranged,
+            "function_answers": self.function_answers,
+            "timing.cycles": self.timing.cycles,
+            "timing.settling": self.timing.settling,
+        }
+        for name, table in tables.items():
+            for function in table:
+                if function not in FUNCTIONS:
+                    words = tuple(FUNCTIONS)
+                    raise mistake(f"{name}.{function}", function, one_of(words, near(function, words)))
+        for function, messages in self.ranged.items():
+            if not any("{range}" in message for message in messages):
+                raise mistake(f"ranged.{function}", messages[-1], "{range} in it")
+        for function, messages in self.functions.items():
+            if any("{range}" in message for message in messages):
+                raise mistake(f"functions.{function}", messages[-1], "no {range}; that belongs into [ranged]")
+        demand_ends(self.link, self.numbers)
+        if self.function_question:
+            for function in (*self.functions, *self.ranged):
+                if function not in self.function_answers:
+                    raise mistake(f"function_answers.{function}", "nothing", "the answer to function_question")
+        return self
 
-class SupplyCommands(_Part):
-    """``[commands]``: ``{value}`` stands for the number.  Several are joined into one message by `joiner`."""
+    def rules(self, function: str) -> ReplyRules:
+        """How a reading of `function` is written."""
+        return self.numbers.rules(FUNCTIONS[function])
 
-    positive_volts: Message
-    negative_volts: Message
-    limit: Message
-    on: Message
-    off: Message
-    joiner: Message = ";:"
-
-
-class SupplyQuestions(_Part):
-    """``[questions]``: each is answered by two values, the positive rail's first.
-
-    With ``joined`` the supply takes all questions of a sample in one message and joins its answers by semicolons, as
-    IEEE 488.2 has it; then a look at the supply is one question instead of six.
-    """
-
-    joined: bool = False
-    set_volts: Message
-    limits: Message
-    output: Message
-    volts: Message
-    amps: Message
-    in_limit: Message | Literal[""] = ""
-    error: Message | Literal[""] = ""
-
-
-class SupplyProfile(_Part):
-    """A supply's dialect, for two outputs: the positive rail and the negative one.
-
-    Parameters
-    ----------
-    negative_programmed_positive : bool
-        The second output is an output like the first, turned round: its magnitude is programmed and read.
-    in_limit_bits : int
-        The bits of the status register that say that an output is held by its current limit.
-    volts_tolerance_v, amps_tolerance_a : float
-        How far a setting that is read back may be from the one that was sent.
-    off_current_a : float
-        A current below it counts as none when "off" is confirmed.
-    settle_s : float
-        Rest between switching on and the first measurement, s.
-    """
-
-    format: Literal[1]
-    kind: Literal["supply"]
-    title: str = ""
-    link: LinkPart = LinkPart()
-    numbers: NumbersPart = NumbersPart()
-    commands: SupplyCommands
-    questions: SupplyQuestions
-    negative_programmed_positive: bool = True
-    in_limit_bits: Annotated[int, Field(ge=0, le=65535)] = 1
-    volts_tolerance_v: Positive = 0.02
-    amps_tolerance_a: Positive = 0.002
-    off_current_a: Positive = 0.02
-    settle_s: Annotated[float, Field(ge=0.0, le=5.0)] = 0.0
-    error_limit: Annotated[int, Field(ge=1, le=100)] = 20
+    def expected_s(self, function: str, range: float | None = None, samples: int = 1) -> float:
+        """Return how long such a reading is likely to take, s: for a countdown, not a promise."""
+        return self.timing.expected_s(function, ranged=range is not None, samples=samples)
 
 
 def shipped(name: str) -> dict[str, Any] | None:
@@ -187,23 +142,22 @@ def profile_table(name: str, folder: Path) -> dict[str, Any]:
     try:
         text = path.read_text("utf-8")
     except (OSError, UnicodeDecodeError, ValueError) as error:
+        reason = error.strerror if isinstance(error, OSError) else "it is no UTF-8 text"
         raise FileError(
             str(path),
             "",
-            f"this profile can't be read ({error})",
-            "one of " + ", ".join(shipped_names()) + ", or a file beside the bench file",
+            f"this profile can't be read ({reason})",
+            one_of(shipped_names(), near(name, shipped_names())) + ", or a file beside the bench file",
             "Correct the profile in the bench file",
         ) from None
-    try:
-        table = tomllib.loads(text)
-    except tomllib.TOMLDecodeError as error:
-        raise FileError(str(path), "", f"this is no TOML ({error})", "a profile", "Correct it") from None
+    table = read_toml(text, str(path), "a profile")
     base = table.pop("based_on", None)
     if base is None:
         return table
     below = shipped(base) if isinstance(base, str) else None
     if below is None:
-        raise FileError(str(path), "based_on", f"found {base!r}", "one of " + ", ".join(shipped_names()))
+        names = shipped_names()
+        raise FileError(str(path), "based_on", f"found {base!r}", one_of(names, near(str(base), names)))
     return _over(below, table)
 
 
@@ -215,14 +169,7 @@ def meter_profile(table: str | Mapping[str, Any], where: str = "the profile") ->
     FileError
         With the dotted key, what was found and what was expected.
     """
-    profile = _checked(MeterProfile, table, where)
-    for part, questions in (("functions", profile.functions), ("ranged", profile.ranged)):
-        for function, message in questions.items():
-            if function not in FUNCTIONS:
-                raise FileError(where, f"{part}.{function}", "there is no such function", ", ".join(FUNCTIONS))
-            if part == "ranged" and "{range}" not in message:
-                raise FileError(where, f"{part}.{function}", f"found {message!r}", "{range} in it")
-    return profile
+    return _checked(MeterProfile, "meter", table, where)
 
 
 def supply_profile(table: str | Mapping[str, Any], where: str = "the profile") -> SupplyProfile:
@@ -233,25 +180,26 @@ def supply_profile(table: str | Mapping[str, Any], where: str = "the profile") -
     FileError
         With the dotted key, what was found and what was expected.
     """
-    profile = _checked(SupplyProfile, table, where)
-    for key in ("positive_volts", "negative_volts", "limit"):
-        if "{value}" not in getattr(profile.commands, key):
-            raise FileError(where, f"commands.{key}", f"found {getattr(profile.commands, key)!r}", "{value} in it")
-    return profile
+    return _checked(SupplyProfile, "supply", table, where)
 
 
-def _checked(kind: type[P], table: str | Mapping[str, Any], where: str) -> P:
+def _checked(model: type[P], kind: str, table: str | Mapping[str, Any], where: str) -> P:
     if isinstance(table, str):
         found = shipped(table)
         if found is None:
-            raise FileError(where, "", f"there is no profile {table!r}", "one of " + ", ".join(shipped_names()))
+            names = shipped_names()
+            raise FileError(where, "", f"there is no profile {table!r}", one_of(names, near(table, names)))
         table = found
-    try:
-        return kind.model_validate(dict(table))
-    except ValidationError as error:
-        first = error.errors()[0]
-        key = ".".join(str(part) for part in first["loc"])
-        raise FileError(where, key, f"found {first['input']!r}", first["msg"], "Correct the profile") from None
+    other = table.get("kind")
+    if other in KINDS and other != kind:
+        raise FileError(
+            where,
+            "kind",
+            f"this is the profile of a {other}",
+            f"that of a {kind}",
+            "Name another profile in the bench file",
+        )
+    return checked(model, table, where, "Correct the profile")
 
 
 def _over(below: Mapping[str, Any], above: Mapping[str, Any]) -> dict[str, Any]:

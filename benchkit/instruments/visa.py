@@ -1,124 +1,59 @@
-"""The only module that imports PyVISA: one raw socket, and every way it fails turned into an `InstrumentError`.
+"""The only module that imports PyVISA: its libraries, and every exception of theirs turned into an `InstrumentError`.
 
 What is worked around here (pyvisa-py 0.8)
 ------------------------------------------
-* Opening a refused or unreachable port succeeds, and fails at the first write: an open link is never trusted before
-  the instrument has said its name (`benchkit.instruments.conversation`).
-* A timeout throws away what had arrived.  The session below PyVISA's resource returns it, so that slices are read
-  there: a slice ends at the terminator or after `SLICE_S`, and the caller has its own deadline.
-* A peer that has closed looks like silence.  A look at the socket tells them apart after each slice.
-* ``TCP_NODELAY`` can't be set as an attribute, and without it an "output off" behind another message waits some 40 ms.
-* A host that nobody knows leaves an open socket behind there: names are looked up before.
 * The exceptions are not only VISA's: plain OSError, RuntimeError, TypeError, ValueError, Exception come through.
   `boundary` is the one place where they are caught.
-* There is one resource manager a process; closing it would close every session, so that it is never closed.
+* There is one resource manager for each library in a process; closing one would close every session of it, so that it
+  is never closed.
+* An opening that fails leaves open sockets behind; they hang on the frames of the exception, where they are closed.
+* HiSLIP prints to the standard output, which belongs to others.
 """
 
 from __future__ import annotations
 
-import select
 import socket
 import threading
 from collections.abc import Iterator
 from contextlib import contextmanager, suppress
+from types import ModuleType
 from typing import Any
 
 from benchkit.errors import InstrumentError
-from benchkit.instruments.address import SocketAddress
-
-SLICE_S = 0.05
-"""How long one slice of waiting lasts, s: so long a cancelled query goes on at most."""
+from benchkit.instruments.settings import PURE_LIBRARY
 
 _manager_lock = threading.Lock()
-_manager: Any = None
+_managers: dict[str, Any] = {}
+
+_LEFT_OPEN = ("interface", "sock", "_sync", "_async")
 
 
-def resource_manager() -> Any:
-    """Return the process's one resource manager; importing PyVISA takes 0.2-0.5 s the first time."""
-    global _manager  # noqa: PLW0603
-    with _manager_lock:
-        if _manager is None:
-            import pyvisa
+def resource_manager(library: str = PURE_LIBRARY) -> Any:
+    """Return the process's one resource manager of a library; importing PyVISA takes 0.2-0.5 s the first time.
 
-            _manager = pyvisa.ResourceManager("@py")
-        return _manager
-
-
-class VisaSocket:
-    """One open raw socket.  Only its owner thread may touch it.
-
-    Parameters
-    ----------
-    address : SocketAddress
-        Where it is.
-    read_termination : str
-        The one character that ends a reply.
-    open_timeout_s : float
-        So long may the connection take, s.
+    Raises
+    ------
+    InstrumentError
+        ``unsupported`` if there is no such library.
     """
+    with _manager_lock:
+        if library not in _managers:
+            try:
+                import pyvisa
 
-    def __init__(self, address: SocketAddress, *, read_termination: str, open_timeout_s: float) -> None:
-        self._address = address
-        with boundary(address.text, "open"):
-            socket.getaddrinfo(address.host, address.port, socket.AF_INET)
-            manager = resource_manager()
-            self._resource: Any = manager.open_resource(
-                address.text,
-                open_timeout=int(open_timeout_s * 1000),
-                timeout=int(SLICE_S * 1000),
-                read_termination=read_termination,
-                write_termination="",
-            )
-            self._session: Any = manager.visalib.sessions[self._resource.session]
-            self._socket: socket.socket = self._session.interface
-            self._socket.setsockopt(socket.IPPROTO_TCP, socket.TCP_NODELAY, 1)
-            self._socket.setsockopt(socket.SOL_SOCKET, socket.SO_KEEPALIVE, 1)
+                _managers[library] = pyvisa.ResourceManager(library)
+            except Exception as error:
+                raise _no_library(library, error) from None
+            if library == PURE_LIBRARY:
+                _silence()
+        return _managers[library]
 
-    def write(self, data: bytes) -> None:
-        """Send bytes as they are."""
-        with boundary(self._address.text, "write"):
-            self._resource.write_raw(data)
 
-    def read_slice(self) -> bytes:
-        """Return what has come up to and with the terminator, or up to the end of the slice; may be empty."""
-        with boundary(self._address.text, "read"):
-            data, _status = self._session.read(4096)
-            return bytes(data)
+def constants() -> Any:
+    """Return PyVISA's constants."""
+    import pyvisa.constants
 
-    def pending(self) -> bool:
-        """Tell whether bytes wait that nobody has asked for; a closed peer counts as none."""
-        with boundary(self._address.text, "read"):
-            return bool(self._session._pending_buffer) or bool(self._peek())
-
-    def peer_closed(self) -> bool:
-        """Tell whether the other side has closed the connection."""
-        with boundary(self._address.text, "read"):
-            return self._peek() == b""
-
-    def drain(self, quiet_s: float) -> bytes:
-        """Throw away what has come, until nothing comes for `quiet_s`; return the first of it for the log."""
-        with boundary(self._address.text, "read"):
-            thrown = bytes(self._session._pending_buffer)
-            self._session._pending_buffer.clear()
-            for _ in range(1000):
-                ready, _, _ = select.select([self._socket], [], [], quiet_s)
-                if not ready:
-                    break
-                data = self._socket.recv(65536)
-                if not data:
-                    break
-                thrown += data[: max(0, 200 - len(thrown))]
-            return thrown
-
-    def close(self) -> None:
-        """Close; safe to call twice, never raises."""
-        with suppress(Exception):
-            self._resource.close()
-
-    def _peek(self) -> bytes | None:
-        """Return b"" when the peer has closed, None when nothing is there, else the first byte."""
-        ready, _, _ = select.select([self._socket], [], [], 0)
-        return self._socket.recv(1, socket.MSG_PEEK) if ready else None
+    return pyvisa.constants
 
 
 @contextmanager
@@ -129,12 +64,15 @@ def boundary(address: str, doing: str) -> Iterator[None]:
     except InstrumentError:
         raise
     except Exception as error:
+        if doing == "open":
+            _close_leftovers(error)
         raise translate(error, address, doing) from None
 
 
 def translate(error: Exception, address: str, doing: str) -> InstrumentError:
     """Return the `InstrumentError` for an exception that came out of PyVISA while opening, writing or reading."""
-    text = str(error) or type(error).__name__
+    text = _plain(error)
+    code = _visa_code(error)
     if isinstance(error, ConnectionRefusedError):
         return InstrumentError(
             "link lost",
@@ -142,39 +80,156 @@ def translate(error: Exception, address: str, doing: str) -> InstrumentError:
             "an instrument that listens there",
             "Check that it is switched on, its network socket is enabled, and the port is right",
         )
-    if isinstance(error, PermissionError):
-        return InstrumentError(
-            "bad address", f"The system does not let us use {address} ({text})", "", "Ask for the right to use it"
-        )
-    if isinstance(error, (ConnectionError, BrokenPipeError)):
-        return InstrumentError(
-            "link lost", f"The connection to {address} broke ({text})", "", "Check the cable and the instrument"
-        )
-    if isinstance(error, socket.gaierror):
+    if isinstance(error, socket.gaierror) or "Name or service not known" in text:
         return InstrumentError(
             "bad address",
             f"Nobody knows the host in {address}",
             "a host name or an IPv4 address",
             "Correct the bench file",
         )
+    if "exclusively lock" in text or code in {"error_resource_busy", "error_resource_locked"}:
+        return InstrumentError(
+            "refused", f"Another program is using {address} ({text})", "nobody else", "End that program first"
+        )
+    if isinstance(error, PermissionError) or "Permission denied" in text or "Access denied" in text:
+        return InstrumentError(
+            "bad address",
+            f"The system does not let us use {address} ({text})",
+            "the right to read and write it",
+            _RIGHTS,
+        )
+    if isinstance(error, ConnectionError):
+        return InstrumentError(
+            "link lost", f"The connection to {address} broke ({text})", "", "Check the cable and the instrument"
+        )
     if doing == "open":
-        if "could not connect" in text:
-            return InstrumentError(
-                "link lost", f"{address} did not take the connection ({text})", "", "Check the network and the address"
-            )
-        if isinstance(error, ImportError):
-            return InstrumentError(
-                "unsupported", f"PyVISA can't be used ({text})", "pyvisa and pyvisa-py", "Install benchkit again"
-            )
-        kind = "link lost" if isinstance(error, OSError) else "bad address"
-        return InstrumentError(kind, f"{address} can't be opened ({text})", "", "Check the address in the bench file")
-    if isinstance(error, (UnicodeError,)):
+        return _not_opened(error, text, code, address)
+    if code == "error_timeout":
+        return InstrumentError(
+            "timeout",
+            f"{address} did not take or give a message in time",
+            "an answer",
+            "Check that it is switched on and in remote control",
+        )
+    if isinstance(error, UnicodeError):
         return InstrumentError("garbled", f"{address} sent bytes that are no text ({text})", "ASCII text")
     if isinstance(error, NotImplementedError):
         return InstrumentError("unsupported", f"The link to {address} can't do this ({text})")
+    if isinstance(error, EOFError) or "dropped by server" in text:
+        return InstrumentError(
+            "link lost",
+            f"The instrument at {address} closed the connection",
+            "",
+            "Check that it is switched on and that no other program uses it",
+        )
     return InstrumentError(
         "link lost",
         f"The link to {address} failed: {type(error).__name__}: {text}",
         "",
         "Check the cable and the instrument",
     )
+
+
+_RIGHTS = (
+    "On Linux a serial port wants membership of the group that owns it (often dialout), and a USB instrument a udev "
+    "rule for its maker and model numbers; then plug it in again"
+)
+
+
+def _not_opened(error: Exception, text: str, code: str, address: str) -> InstrumentError:
+    if isinstance(error, FileNotFoundError) or "No such file or directory" in text:
+        return InstrumentError(
+            "bad address",
+            f"There is no {address}",
+            "an instrument that is plugged in",
+            "Check the cable, then the address in the bench file",
+        )
+    if "could not connect" in text or "creating link" in text or code in {"error_resource_not_found", "error_timeout"}:
+        return InstrumentError(
+            "link lost",
+            f"{address} did not take the connection ({text})",
+            "an instrument that answers there",
+            "Check that it is switched on, the network and the address",
+        )
+    if code == "error_invalid_resource_name":
+        return InstrumentError(
+            "bad address",
+            f"{address} is no address for this VISA library ({text})",
+            "an address as the library writes it",
+            "Correct the bench file",
+        )
+    if isinstance(error, ImportError) or "install" in text:
+        return InstrumentError(
+            "unsupported",
+            f"{address} needs something that is not installed ({text})",
+            "pyserial for serial lines, pyusb and libusb for USB",
+            "Install it beside benchkit, or use the instrument's network socket",
+        )
+    if "No device found" in text or "devices found" in text:
+        return InstrumentError(
+            "link lost",
+            f"{address} is not there ({text})",
+            "one USB instrument with these numbers",
+            "Check the cable, then the address in the bench file",
+        )
+    kind = "link lost" if isinstance(error, OSError) and not isinstance(error, ValueError) else "bad address"
+    return InstrumentError(kind, f"{address} can't be opened ({text})", "", "Check the address in the bench file")
+
+
+def _no_library(library: str, error: Exception) -> InstrumentError:
+    text = _plain(error)
+    if library == PURE_LIBRARY:
+        return InstrumentError(
+            "unsupported", f"PyVISA can't be used ({text})", "pyvisa and pyvisa-py", "Install benchkit again"
+        )
+    return InstrumentError(
+        "unsupported",
+        f"The VISA library {library!r} can't be used ({text})",
+        "the path of a VISA library, or one of PyVISA's backends like @py",
+        "Correct --visa or the bench file's visa",
+    )
+
+
+def _plain(error: Exception) -> str:
+    """Return what an exception says, on one line and fit for a screen."""
+    text = " ".join((str(error) or type(error).__name__).split())
+    return "".join(letter if " " <= letter <= "~" else ascii(letter)[1:-1] for letter in text)
+
+
+def _visa_code(error: Exception) -> str:
+    """Return the name of VISA's own error, or nothing."""
+    code = getattr(error, "error_code", None)
+    if code is None:
+        return ""
+    with suppress(ValueError, ImportError):
+        return str(constants().StatusCode(code).name)
+    return ""
+
+
+def _close_leftovers(error: Exception) -> None:
+    """Close the sockets that an opening which failed has left on the frames of its exception."""
+    seen: BaseException | None = error
+    while seen is not None:
+        trace = seen.__traceback__
+        while trace is not None:
+            owner = trace.tb_frame.f_locals.get("self")
+            if type(owner).__module__.startswith("pyvisa_py."):
+                for held in (owner, getattr(owner, "interface", None)):
+                    for name in _LEFT_OPEN:
+                        left = getattr(held, name, None)
+                        if isinstance(left, socket.socket):
+                            left.close()
+            trace = trace.tb_next
+        seen = seen.__cause__ or seen.__context__
+
+
+def _silence() -> None:
+    """Keep HiSLIP's remark about overlap off the standard output."""
+    with suppress(ImportError):
+        from pyvisa_py.protocols import hislip
+
+        _put(hislip, "print", lambda *parts, **options: None)
+
+
+def _put(module: ModuleType, name: str, value: object) -> None:
+    vars(module)[name] = value

@@ -1,7 +1,12 @@
-"""Start the keeper: ``python -m benchkit.keeper [--off-only] [--logs FOLDER]``; benchkit does this by itself."""
+"""Start the keeper or its stand-by; benchkit does this by itself.
+
+``python -m benchkit.keeper [--logs FOLDER] [--lifeline NUMBER]``, ``--off-only``, or
+``--stand-by [--lifeline NUMBER] [--keeper NUMBER]``.
+"""
 
 from __future__ import annotations
 
+import argparse
 import os
 import sys
 from pathlib import Path
@@ -16,23 +21,32 @@ def main() -> None:
     the time that it takes to get the bench ready, so that in this process numpy can't be found.
     """
     sys.modules["numpy"] = None  # type: ignore[assignment]
-    arguments = sys.argv[1:]
-    if arguments and arguments[0] == "--off-only":
+    parser = argparse.ArgumentParser("python -m benchkit.keeper", description="benchkit starts it by itself")
+    parser.add_argument("--logs", type=Path)
+    parser.add_argument("--lifeline", type=int)
+    parser.add_argument("--keeper", type=int)
+    parser.add_argument("--off-only", action="store_true")
+    parser.add_argument("--stand-by", action="store_true")
+    given = parser.parse_args()
+    source, sink = take_standard_streams()
+    status = 0
+    if given.off_only:
         from benchkit.keeper.off_only import switch_off
         from benchkit.keeper.protocol import decode, encode
 
-        source, sink = take_standard_streams()
         with os.fdopen(source, "rb") as pipe:
             result = switch_off(decode(pipe.readline()))
         os.write(sink, encode(result))
-        os._exit(0)
-    from benchkit.keeper.process import Keeper
+    elif given.stand_by:
+        from benchkit.keeper.stand_by import StandBy
 
-    log_dir = Path(arguments[1]) if len(arguments) == 2 and arguments[0] == "--logs" else None
-    if arguments and log_dir is None:
-        sys.exit("python -m benchkit.keeper [--off-only] [--logs FOLDER]; benchkit starts it by itself")
-    source, sink = take_standard_streams()
-    status = Keeper(source, sink, log_dir).run()
+        stand_by = StandBy(source, sink, given.lifeline, given.keeper)
+        stand_by.warm_up()
+        stand_by.run()
+    else:
+        from benchkit.keeper.process import Keeper
+
+        status = Keeper(source, sink, given.logs, given.lifeline).run()
     sys.stderr.flush()
     os._exit(status)
 

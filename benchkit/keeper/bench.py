@@ -37,8 +37,9 @@ class OwnedMeter:
         profile = meter_profile(table.get("profile", "scpi-meter"), "the meter's profile")
         self.serial = str(table.get("serial") or "")
         self.lock = ResourceLock(str(table["address"]))
+        settings = profile.link.settings(_library(table))
         try:
-            self.meter = Meter(Link("the meter", str(table["address"]), profile.link.settings(), log), profile)
+            self.meter = Meter(Link("the meter", str(table["address"]), settings, log), profile)
         except InstrumentError:
             self.lock.release()
             raise
@@ -65,8 +66,9 @@ class OwnedSupply:
         profile = supply_profile(table.get("profile", "scpi-supply"), "the supply's profile")
         self.serial = str(table.get("serial") or "")
         self.lock = ResourceLock(str(table["address"])) if locked else None
+        settings = profile.link.settings(_library(table))
         try:
-            self.supply = Supply(Link("the supply", str(table["address"]), profile.link.settings(), log), profile)
+            self.supply = Supply(Link("the supply", str(table["address"]), settings, log), profile)
         except InstrumentError:
             if self.lock is not None:
                 self.lock.release()
@@ -131,6 +133,11 @@ def open_bench(bench: Mapping[str, Any], log: TrafficLog) -> Opened:
         except Exception as error:
             opened.problems.append(error)
     return opened
+
+
+def _library(table: Mapping[str, Any]) -> str:
+    """Return the VISA library that a bench names for an instrument; "" is the usual one."""
+    return str(table.get("library") or "")
 
 
 def demand_serial(label: str, name: str, serial: str) -> None:

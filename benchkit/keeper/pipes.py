@@ -25,6 +25,22 @@ def take_standard_streams() -> tuple[int, int]:
     return source, sink
 
 
+def watch_pipe(descriptor: int, act: Callable[[bytes], None]) -> None:
+    """Call `act` with what comes through a pipe, and with b"" at its end, on a thread of its own."""
+
+    def read() -> None:
+        while True:
+            try:
+                data = os.read(descriptor, 4096)
+            except OSError:
+                data = b""
+            act(data)
+            if not data:
+                return
+
+    threading.Thread(target=read, name="reader of a pipe", daemon=True).start()
+
+
 class LineReader:
     """Reads messages on a thread of its own.
 

@@ -6,7 +6,8 @@ To the keeper
     ``{"beat": 12}``.
 
 From the keeper, unasked
-    ``{"hello": {...}}`` first of all; ``{"push": {...}}``: an event that the keeper wrote into the journal itself.
+    ``{"hello": {...}}`` first of all; ``{"push": {...}}``: an event that the keeper wrote into the journal itself;
+    ``{"step": 7, ...}``: how far the ramp has come that was asked for by request 7.
 
 Answers to ``append`` and pushes come from one thread in the order of the journal, so that everybody sees one order.
 An error crosses as its class's name and its parts, and comes out as the same class.
@@ -62,19 +63,29 @@ class WatchLines:
     ----------
     positive_a, negative_a : float or None
         Rail currents above which it switches off, A.
+    positive_v, negative_v : float or None
+        Rail voltages above which it switches off, V; magnitudes, both positive.
+    least_share : float or None
+        The share of the voltage that is set, 0 to 1, below which a rail has broken down.
     trip_on_limit : bool
         A rail held by its current limit switches off too.
     grace_s : float
-        For so long after the watch was set (charging capacitors) neither counts, s.
+        For so long after the watch was set (charging capacitors) only an output that went off counts, s.
     own_interval_s : float or None
         How often the keeper looks by itself, s; None: only when asked to by `sample` (simulated time).
+    age_limit_s : float or None
+        So old may the last good reading of the meter get, s; None while nothing depends on the meter.
     """
 
     positive_a: float | None = None
     negative_a: float | None = None
+    positive_v: float | None = None
+    negative_v: float | None = None
+    least_share: float | None = None
     trip_on_limit: bool = True
     grace_s: float = 0.0
     own_interval_s: float | None = None
+    age_limit_s: float | None = None
 
 
 @dataclass(frozen=True, kw_only=True)

@@ -18,8 +18,25 @@ STAND_BY_LIMIT_S = 10.0
 """So long may the stand-by take to switch off, s."""
 
 
-def spawn(arguments: list[str], log_dir: Path | None) -> subprocess.Popen[bytes]:
-    """Start a keeper's process in a group of its own, with the same benchkit as ours."""
+def spawn(arguments: list[str], log_dir: Path | None, lifeline: int | None = None) -> subprocess.Popen[bytes]:
+    """Start a keeper's process in a group of its own, with the same benchkit as ours.
+
+    Parameters
+    ----------
+    arguments : list of str
+        Behind ``python -m benchkit.keeper``.
+    log_dir : Path or None
+        For ``keeper.log``.
+    lifeline : int or None
+        A descriptor that it inherits and is told of.
+
+    Raises
+    ------
+    FileError
+        If the log can't be made.
+    """
+    if lifeline is not None:
+        arguments = [*arguments, "--lifeline", str(lifeline)]
     home = str(Path(benchkit.__file__).resolve().parent.parent)
     environment = dict(os.environ)
     environment["PYTHONPATH"] = os.pathsep.join(filter(None, [home, environment.get("PYTHONPATH", "")]))
@@ -41,6 +58,7 @@ def spawn(arguments: list[str], log_dir: Path | None) -> subprocess.Popen[bytes]
             stderr=errors,
             env=environment,
             **platform.own_group(),
+            **platform.inheriting(lifeline),
         )
     finally:
         if log_dir is not None:

@@ -10,10 +10,13 @@ from benchkit.keeper.protocol import WatchLines
 if TYPE_CHECKING:
     from benchkit.instruments.supply import Sample
 
+LEAST_SET_V = 2.0
+"""Rails set below this are not judged by `WatchLines.least_share`, V: lead drops would count (our own figure)."""
+
 
 @dataclass(frozen=True, kw_only=True)
 class Trip:
-    """Why the keeper switches off: in words, and the value and the line it crossed, A."""
+    """Why the keeper switches off: in words, and the value and the line it crossed, A or V."""
 
     reason: str
     what: str
@@ -36,10 +39,15 @@ def look(sample: Sample, lines: WatchLines, elapsed_s: float) -> Trip | None:
     Notes
     -----
     An output that went off by itself (the supply's own protection) takes the other one with it at once: one rail must
-    never stand alone.  Current and limit count from the end of the grace on.
+    never stand alone.  Current, limit and voltage count from the end of the grace on.
     """
     state = sample.state
-    for name, output in zip(("positive", "negative"), sample.outputs, strict=True):
+    for name, output, tripped in (
+        ("positive", sample.outputs[0], state.positive_tripped),
+        ("negative", sample.outputs[1], state.negative_tripped),
+    ):
+        if tripped:
+            return Trip(reason=f"the supply's own protection switched its {name} output off", what=f"{name} protection")
         if not output:
             return Trip(reason=f"the supply switched its {name} output off by itself", what=f"{name} output")
     if elapsed_s < lines.grace_s:
@@ -57,4 +65,29 @@ def look(sample: Sample, lines: WatchLines, elapsed_s: float) -> Trip | None:
         ):
             if held:
                 return Trip(reason=f"{name} is held by its current limit", what=name, value=amps, limit=state.limit_a)
+    return _volts(sample, lines)
+
+
+def _volts(sample: Sample, lines: WatchLines) -> Trip | None:
+    """Judge the rails' voltages."""
+    state = sample.state
+    for name, volts, line, set_v in (
+        ("rail+", state.positive_v, lines.positive_v, state.set_positive_v),
+        ("rail-", state.negative_v, lines.negative_v, state.set_negative_v),
+    ):
+        if volts is None:
+            continue
+        if line is not None and abs(volts) > line:
+            return Trip(
+                reason=f"{name} stands at {volts:.4g} V, beyond {line:.4g} V", what=name, value=volts, limit=line
+            )
+        if lines.least_share is not None and set_v is not None and abs(set_v) >= LEAST_SET_V:
+            least_v = lines.least_share * abs(set_v)
+            if abs(volts) < least_v:
+                return Trip(
+                    reason=f"{name} has broken down to {volts:.4g} V, below {least_v:.4g} V",
+                    what=name,
+                    value=volts,
+                    limit=least_v,
+                )
     return None

@@ -10,6 +10,7 @@ A range is chosen as an autoranging meter does: the smallest whose full scale ho
 
 from __future__ import annotations
 
+import difflib
 import math
 from collections.abc import Iterable, Mapping
 from dataclasses import dataclass, field
@@ -171,7 +172,9 @@ def accuracy_from_rows(name: str, rows: Iterable[Mapping[str, Any]], source: str
         where = f"Accuracy of {name}, row {position}"
         unknown = sorted(set(entry) - _ROW_KEYS, key=str)
         if unknown:
-            raise EntryError(f"{where} has {quoted(unknown[0])}", f"only {', '.join(sorted(_ROW_KEYS))}")
+            meant = difflib.get_close_matches(str(unknown[0]), sorted(_ROW_KEYS), 1)
+            perhaps = f"{meant[0]!r} perhaps; " if meant else ""
+            raise EntryError(f"{where} has {quoted(unknown[0])}", f"{perhaps}only {', '.join(sorted(_ROW_KEYS))}")
         function = entry.get("function")
         if not isinstance(function, str) or function not in FUNCTIONS:
             came = f"{where} has {quoted(function)} as function" if "function" in entry else f"{where} has no function"

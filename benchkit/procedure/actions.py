@@ -12,7 +12,7 @@ from benchkit.events import Event
 from benchkit.stage.conditions import Condition, Unpowered
 from benchkit.stage.observations import Conditions, Observation
 
-QuestionKind = Literal["tell", "confirm", "text", "hold", "probes", "decide", "trim", "by hand"]
+QuestionKind = Literal["tell", "confirm", "text", "hold", "probes", "decide", "trim", "by hand", "watch"]
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -23,7 +23,7 @@ class Choice:
     ----------
     value : str
         The word that comes back: ``done``, ``yes``, ``no``, ``again``, ``go on``, ``make safe``, ``probe``, ``take``,
-        ``end``.
+        ``end``, ``enough``, ``cancel``.
     label : str
         What the screen says.
     wants_reason : bool
@@ -47,7 +47,7 @@ class Question:
         ``tell`` (read, then done), ``confirm`` (yes or no), ``text`` (type something), ``hold`` (type yes),
         ``probes`` (place them, then done), ``decide`` (after a result that is no pass, or a reading that is odd),
         ``trim`` (turn the screw, then take), ``by hand`` (something that no instrument does: set the supply, switch
-        off).
+        off), ``watch`` (something goes on by itself and ends by itself; all but the first answer end it early).
     title, do, why, caution, expected, red, black : str
         The words of the step; empty where there is nothing to say.
     point : str
@@ -184,6 +184,32 @@ class Read(Action):
 
 
 @dataclass(frozen=True, kw_only=True)
+class Fall(Action):
+    """Watch a rail fall until it is low, or until it should have been.  Answer: ReadingTaken or ReadingMissed.
+
+    Parameters
+    ----------
+    question : Question
+        What stands on the screen meanwhile.
+    low_v : float
+        It is low when its magnitude is below this (V).
+    tau_s, slowest_tau_s : float or None
+        Time constant (s) of the design, and at the far ends of its tolerances; None where nobody knows.
+    help : str
+        What to do when it doesn't fall, in words.
+    """
+
+    question: Question
+    point: str
+    function: str
+    unit: str
+    low_v: float
+    tau_s: float | None
+    slowest_tau_s: float | None
+    help: str = ""
+
+
+@dataclass(frozen=True, kw_only=True)
 class SetSupply(Action):
     """Set both rails and the limit, ramping from where they are.  Answer: SupplySet or SupplyRefused.
 
@@ -199,6 +225,9 @@ class SetSupply(Action):
         How long the stage then has to come to rest before the supply is read back.
     trip_on_limit : bool
         A rail that stays in its limit longer than `grace_s` trips.
+    protection_v : tuple of float or None
+        Where the over-voltage protection of each rail goes, positive rail first, as magnitudes; None leaves the
+        choice to the supply's own rule.
     """
 
     positive_v: float
@@ -208,6 +237,7 @@ class SetSupply(Action):
     settle_s: float = 0.5
     trip_on_limit: bool = True
     grace_s: float = 0.5
+    protection_v: tuple[float, float] | None = None
 
 
 @dataclass(frozen=True, kw_only=True)

@@ -17,6 +17,12 @@ Kinds of step
 ``wait``         time passes under watch
 ``clip``         off, rails seen low at the unit, probes clipped to a point, and power again after a hold point
 ``off``          the supply off, confirmed
+``discharge``    after off: every rail, and rail to rail, watched down until it is low; a second look after a minute
+                 where much was stored
+``series lamp``  mains through a lamp in series, for a first look; nothing here switches it, nothing is trimmed on it
+
+A step that ``needs`` something falls away for a design that lacks it; so do, by themselves, steps that turn or check a
+trimmer that isn't there.
 """
 
 from __future__ import annotations
@@ -35,8 +41,12 @@ from benchkit.errors import BenchkitError, EntryError, FileError
 from benchkit.judge.rules import find_rule
 
 Kind = Literal[
-    "tell", "confirm", "text", "measure", "rule", "supply", "limit check", "hold", "trim", "wait", "clip", "off"
-]
+    "tell", "confirm", "text", "measure", "rule", "supply", "limit check", "hold", "trim", "wait", "clip", "off",
+    "discharge", "series lamp",
+]  # fmt: skip
+
+Need = Literal["a trimmer", "two rails", "one rail"]
+"""What a design has to have for a step to make sense."""
 
 Act = Literal["short the leads", "connect the unit", "trimmer to least"]
 """What a told step does to the bench, where the rest of the walk depends on it."""
@@ -45,8 +55,11 @@ MADE_SAFE = "made-safe"
 """The section that every way out goes through; it is always the last but for the verdict."""
 
 PLACEHOLDERS = frozenset(
-    {"turns", "less_bias_way", "more_bias_way", "limit", "rails", "target", "design", "arm", "discharge_time"}
-)
+    {
+        "turns", "less_bias_way", "more_bias_way", "limit", "rails", "target", "design", "arm", "discharge_time",
+        "both_rails", "Both_rails", "least_bias",
+    }
+)  # fmt: skip
 """The words in braces that a step's text may hold; each stands for a fact of the design or of the step."""
 
 _Name = Annotated[str, pydantic.StringConstraints(pattern=r"^[a-z0-9][a-z0-9-]*$", max_length=40)]
@@ -56,7 +69,7 @@ _Text = Annotated[str, pydantic.StringConstraints(strip_whitespace=True, min_len
 _SIDE = r"\.(upper|lower)"
 _PART = rf"(spreader\.transistor|(predriver|driver){_SIDE}|output{_SIDE}\.\d+)"
 _POINT = re.compile(
-    rf"rail[+-](\.current|\.drop|\.ac)?|output(\.ac)?|spread({_SIDE})?|feed{_SIDE}|(pre)?driver\.resistor({_SIDE})?"
+    rf"rails|rail[+-](\.current|\.drop|\.ac)?|output(\.ac)?|spread({_SIDE})?|feed{_SIDE}|(pre)?driver\.resistor({_SIDE})?"
     rf"|emitter\.(upper|lower|pair)\.\d+|stopper{_SIDE}\.\d+|{_PART}\.vbe|heatsink"
     rf"|ohm\.(rails|rail[+-]|output|(spreader|feed){_SIDE}|(emitter|stopper){_SIDE}\.\d+|(pre)?driver\.resistor({_SIDE})?"
     rf"|heatsink\.{_PART})|diode\.{_PART}"
@@ -96,6 +109,7 @@ class Step(_Strict):
     tolerance: str | None = None
     seconds: str | None = None
     act: Act | None = None
+    needs: Need | None = None
     when: Literal["cold", "warm"] | None = None
     settle: str | None = None
     allow: str | None = None
@@ -133,6 +147,7 @@ _WANTS: dict[str, tuple[str, ...]] = {
     "confirm": ("do",),
     "text": ("do",),
     "hold": ("do",),
+    "series lamp": ("do",),
 }
 
 _ONLY_FOR: dict[str, tuple[str, ...]] = {

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from dataclasses import replace
 
+from benchkit import quantities
 from benchkit.events import Judged, OutputOff, SupplyState
 from benchkit.procedure.items import Item
 from benchkit.procedure.state import State
@@ -14,6 +15,8 @@ def heard(state: State, supply: SupplyState | None) -> State:
     if supply is None:
         return state
     energised = {True: "on", False: "off", None: "unknown"}[supply.output_on]
+    if state.on_lamp:
+        energised = "unknown"  # whatever the supply says of itself, it isn't what feeds the unit
     rails = [abs(volts) for volts in (supply.positive_v, supply.negative_v) if volts is not None]
     return replace(
         state,
@@ -26,7 +29,8 @@ def heard(state: State, supply: SupplyState | None) -> State:
 
 def off_heard(state: State, event: OutputOff) -> State:
     """Take in what came of switching off."""
-    state = replace(state, unconfirmed=not event.confirmed, energised="off" if event.confirmed else "unknown")
+    off = event.confirmed and not state.on_lamp
+    state = replace(state, unconfirmed=not off, energised="off" if off else "unknown")
     return state if event.state is None else replace(state, supply=event.state)
 
 
@@ -37,15 +41,44 @@ def cut(state: State) -> State:
 
 def off_by_word(state: State) -> State:
     """Believe a person about a supply that only a person switches; of any other, nothing is known by that."""
-    by_hand = state.opened is not None and state.opened.supply == "manual"
-    return replace(state, unconfirmed=False, energised="off" if by_hand else "unknown", supply=None)
+    energised = "off" if switched_by_hand(state) else "unknown"
+    return replace(state, unconfirmed=False, on_lamp=False, energised=energised, supply=None)  # type: ignore[arg-type]
+
+
+def switched_by_hand(state: State) -> bool:
+    """Whether only a person switches what feeds the unit: a supply set by hand, or a series lamp."""
+    return state.on_lamp or (state.opened is not None and state.opened.supply == "manual")
+
+
+def lacks_protection(found: SupplyState) -> bool:
+    """Whether a supply that is on says nothing of an over-voltage protection of its own."""
+    return found.output_on is True and found.protection_positive_v is None
+
+
+UNPROTECTED = (
+    "CAUTION: this supply tells of no over-voltage protection of its own, so nothing holds the rails when the computer "
+    "does not."
+)
+"""Said of such a supply, on the screen and in the record."""
+
+
+def protection_text(found: SupplyState) -> str:
+    """Say where the supply's own over-voltage protection stands, "" where it tells of none."""
+    rails = [volts for volts in (found.protection_positive_v, found.protection_negative_v) if volts is not None]
+    if not rails:
+        return ""
+    return " and ".join(dict.fromkeys(quantities.show(volts, "V", 3) for volts in rails))
 
 
 def rails_problem(item: Item, found: SupplyState) -> str:
     """Say what is wrong with the rails after they were set, "" when nothing is (5 % and 0.2 V, common practice)."""
     if found.output_on is not True:
+        if found.tripped:
+            return f"{_tripped_rails(found)} was switched off by the supply's own protection."
         said = "that its output is off" if found.output_on is False else "nothing about its output"
         return f"The supply says {said}."
+    if found.tripped:
+        return f"{_tripped_rails(found)} was switched off by the supply's own protection."
     limiting = [
         rail for rail, in_limit in (("rail+", found.positive_in_limit), ("rail-", found.negative_in_limit)) if in_limit
     ]
@@ -62,17 +95,28 @@ def rails_problem(item: Item, found: SupplyState) -> str:
     return ""
 
 
-def rails_judged(item: Item, found: SupplyState) -> Judged:
+def _tripped_rails(found: SupplyState) -> str:
+    return " and ".join(
+        rail for rail, tripped in (("rail+", found.positive_tripped), ("rail-", found.negative_tripped)) if tripped
+    )
+
+
+def rails_judged(item: Item, found: SupplyState, *, by_hand: bool = False) -> Judged:
     """Judge whether the rails stand where they were set."""
     problem = rails_problem(item, found)
-    fine = "Both rails stand where they were set, none in its limit."
+    both = "Both rails stand where they were set, none in its limit"
+    fine = both if item.negative_v else "The rail stands where it was set, not in its limit"
+    fine += ", says the operator." if by_hand else "."
+    if not by_hand and not problem:
+        held = protection_text(found)
+        fine += f" Over-voltage protection at {held}." if held else f" {UNPROTECTED}"
     return Judged(
         item=item.id, subject="rails", verdict="fail" if problem else "pass", value=found.positive_v,
         unit="V", low=None, high=None, why=problem or fine,
     )  # fmt: skip
 
 
-def limit_judged(item: Item, found: SupplyState) -> Judged:
+def limit_judged(item: Item, found: SupplyState, *, by_hand: bool = False) -> Judged:
     """Judge whether both rails stand in their limit while the leads are shorted."""
     assert item.limits is not None
     assert item.limits.low is not None
@@ -84,6 +128,7 @@ def limit_judged(item: Item, found: SupplyState) -> Judged:
     if item.negative_v == 0.0:
         del currents["rail-"]
     why, verdict = f"Every rail stands in its limit, {item.limits}.", "pass"
+    why = f"{why.removesuffix('.')}, says the operator." if by_hand else why
     value = max((amps for amps, _ in currents.values() if amps is not None), default=None)
     for rail, (amps, limiting) in currents.items():
         if amps is None:

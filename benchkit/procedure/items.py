@@ -10,6 +10,7 @@ from benchkit.judge.limits import Limits
 from benchkit.stage.conditions import Condition, Unpowered
 from benchkit.stage.observations import Conditions
 from benchkit.stage.points import Point
+from benchkit.stage.stored import Stored
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -46,9 +47,13 @@ ItemKind = Literal[
     "trim",
     "wait",
     "off",
+    "discharge",
+    "lamp",
 ]
 
-JUDGED_KINDS = frozenset({"warm state", "confirm", "measure", "rule", "supply", "limit check", "trim"})
+JUDGED_KINDS = frozenset(
+    {"warm state", "confirm", "measure", "rule", "supply", "limit check", "trim", "discharge", "lamp"}
+)
 """Kinds of item that end in a result; a walk passes only when each of them has one."""
 
 NEVER_PASSED_OVER = frozenset({"ohm.rails", "ohm.rail+", "ohm.rail-", "offset before load"})
@@ -59,6 +64,9 @@ MOST_OFFSET_V = 0.05
 
 RAIL_LOW_V = 1.0
 """A rail below this (V) counts as low; common practice."""
+
+RAIL_POINTS = ("rail+", "rail-", "rails")
+"""Points that tell whether a unit without power holds a charge."""
 
 TRIMMED = "emitter.upper.1"
 """The reading that the model takes a trimmed stage's target from."""
@@ -97,6 +105,8 @@ class Item:
         For ``wait``.
     settle_s : float
         How long the reading has to come to rest after the probes are on, or the stage after its rails have moved.
+    falls : Stored or None
+        For ``discharge``: what the rails hold, and how fast they should fall.
     samples : int
     acceptance : "guarded", "simple" or "guarded rejection"
         How a reading is judged (JCGM 106): with a guard band inside the limits, without one, or with one outside.
@@ -139,6 +149,7 @@ class Item:
     ramp_s: float = 0.0
     seconds: float = 0.0
     settle_s: float = 0.0
+    falls: Stored | None = None
     samples: int = 1
     acceptance: Literal["guarded", "simple", "guarded rejection"] = "guarded"
     allow: float = 0.0

@@ -18,19 +18,17 @@ from typing import Final
 from benchkit.measure.readings import Reading
 from benchkit.procedure.actions import Target
 from benchkit.procedure.file import MADE_SAFE
-from benchkit.procedure.items import AnyCondition, Item, Joined, Plan, condition_key, conditions_of
+from benchkit.procedure.items import RAIL_POINTS, AnyCondition, Item, Joined, Plan, condition_key, conditions_of
 from benchkit.procedure.state import State
 from benchkit.stage.conditions import Condition, TrimmerPosition, Unpowered
 from benchkit.stage.observations import Conditions, Observation
 from benchkit.stage.points import Point
-
-HAZARDOUS_V: Final = 60.0
-"""Direct voltage (V) above which a part is treated as hazardous live (IEC 61010-1, IEC 62368-1)."""
+from benchkit.stage.stored import HAZARDOUS_V
 
 READABLE: Final = frozenset({"dc volts", "dc current", "ohms", "ohms 4-wire", "diode"})
 """Functions of a meter that an extra reading may need."""
 
-HELD: Final = frozenset({"rail+", "rail-", "rail+.drop", "rail-.drop"})
+HELD: Final = frozenset({*RAIL_POINTS, "rail+.drop", "rail-.drop"})
 """Points that the supply holds: they tell nothing of the unit."""
 
 OVERLOAD_UNCERTAINTY: Final = 1e-3
@@ -101,7 +99,7 @@ def rails_seen_low(plan: Plan, state: State) -> bool:
     looks = [
         (number, item)
         for number, item in enumerate(plan.items)
-        if item.section == MADE_SAFE and item.point is not None and item.point.name in ("rail+", "rail-")
+        if item.section == MADE_SAFE and item.point is not None and item.point.name in RAIL_POINTS
     ]
     for number, item in looks:
         result = state.result(item.id)

@@ -14,7 +14,9 @@ from __future__ import annotations
 
 import math
 from dataclasses import replace
+from typing import Final
 
+from benchkit import quantities
 from benchkit.errors import IllegalEvent
 from benchkit.events import (
     Decided,
@@ -32,10 +34,11 @@ from benchkit.judge.verdicts import judge_reading
 from benchkit.measure.readings import Reading
 from benchkit.measure.uncertainty import coverage_factor
 from benchkit.procedure import knowledge
-from benchkit.procedure.actions import Action, Narrow, Suspect, Write
+from benchkit.procedure.actions import Action, Narrow, Write
 from benchkit.procedure.file import MADE_SAFE
 from benchkit.procedure.items import Item
 from benchkit.procedure.moves import Moves, Step
+from benchkit.procedure.sizing import time_text
 from benchkit.procedure.state import State
 
 
@@ -75,6 +78,8 @@ class Modelling(Moves):
         if judged.verdict == "pass" and item.section == MADE_SAFE and state.energised == "on":
             why = "The supply itself says that its output is on: the reading can't be of a unit that is off."
             judged = replace(judged, verdict="fail", why=why)
+        if item.kind == "discharge":
+            judged = replace(judged, why=f"{judged.why} {fall_text(item, event)}".strip())
         state = replace(state, phase="judging", readings={**state.readings, item.id: event.reading})
         return state, (Write(item=item.id, event=judged),)
 
@@ -122,6 +127,8 @@ class Modelling(Moves):
             return self._next(state)
         if item.kind in ("supply", "limit check"):
             return self._make_safe(state, event.why, 4)
+        if item.kind == "lamp":
+            return self._make_safe(state, f"the operator said no at: {item.title}", 4)
         return self._decide(state, event)
 
     # -- what the model is asked, aside ------------------------------------------------------------------------
@@ -140,18 +147,11 @@ class Modelling(Moves):
         wrong = event.odd or (event.verdict == "fail" and explained)
         if explained and state.attempts[item.id] > 1 and (state.suspecting or state.suspicion is not None):
             wrong = True  # what was said of the earlier reading no longer holds
+        if item.kind == "supply" and event.verdict == "fail":
+            wrong = True  # a rail in its limit is asked about like a reading that failed
         if state.extra or (wrong and not self.way_out(state)):
-            state = replace(state, suspecting=state.count)
-            suspect = Suspect(
-                item=self.asked_at(state),
-                after=state.count,
-                known=known,
-                candidates=tuple(
-                    knowledge.target_of(*named) for named in knowledge.candidates(self.plan, replace(state, extra=""))
-                ),
-                names=knowledge.names_of_conditions(self.plan, state),
-            )
-            asked.append(suspect)
+            state, suspect = self._ask_suspects(state)
+            asked += suspect
         return state, tuple(asked)
 
     def _narrowed(self, state: State, event: Narrowed) -> Step:
@@ -224,3 +224,19 @@ def lies_outside(reading: Reading, limits: Limits) -> bool:
 
 def _subject(item: Item) -> str:
     return item.title if item.point is None else item.point.name
+
+
+def fall_text(item: Item, event: ReadingTaken) -> str:
+    """Say how a rail came down, and whether its bleed resistor explains it; "" where there was nothing to see."""
+    from_v, seconds = event.fell_from_v, event.fell_s
+    if from_v is None or seconds is None or event.reading.value is None:
+        return ""
+    text = f"It came down from {quantities.show(from_v, 'V', 3)} in {time_text(seconds)}"
+    held = item.falls
+    expected_s = None if held is None else held.fall_s(from_v, max(abs(event.reading.value), 1e-3))
+    text += "." if expected_s is None else f"; the bleed resistor alone takes {time_text(expected_s)} by the design."
+    return f"{text} {TOO_SLOWLY}" if event.fell_slowly else text
+
+
+TOO_SLOWLY: Final = "CAUTION: it falls too slowly. Is the bleed resistor open?"
+"""Said of a rail whose time constant, as read, is beyond what the design's tolerances explain."""

@@ -18,15 +18,18 @@ from benchkit.procedure.actions import (
     CheckWarm,
     Connect,
     Evaluate,
+    Fall,
     Predict,
     Read,
     SetSupply,
+    Suspect,
     SwitchOff,
     Trim,
     Wait,
     Write,
 )
 from benchkit.procedure.items import JUDGED_KINDS, Item, Joined, Plan, condition_key
+from benchkit.procedure.sizing import protection_v
 from benchkit.procedure.state import State
 
 Step = tuple[State, tuple[Action, ...]]
@@ -122,10 +125,14 @@ class Moves:
                 return replace(state, phase="judging"), (CheckWarm(item=item.id, conditions=item.warm),)
             case "tell" | "confirm" | "text" | "hold":
                 return replace(state, phase="asking"), (Ask(item=item.id, question=questions.question_for(item)),)
-            case "measure":
+            case "measure" | "discharge":
                 return self._enter_measure(state, item)
             case "rule":
                 return replace(state, phase="judging"), (Evaluate(item=item.id, rule=item.rule, number=item.number),)
+            case "lamp":
+                # From the moment that it is told, a person may have put mains on.
+                state = replace(state, phase="asking", energised="unknown", ever_on=True, on_lamp=True, supply=None)
+                return state, (Ask(item=item.id, question=questions.question_for(item)),)
             case "supply" | "limit check":
                 # From the moment that it is told to switch on, the output may be on.
                 state = replace(state, phase="setting", energised="unknown", ever_on=True)
@@ -137,6 +144,7 @@ class Moves:
                     ramp_s=item.ramp_s,
                     settle_s=item.settle_s,
                     trip_on_limit=item.kind == "supply",
+                    protection_v=_protection(state, item),
                 )
                 return state, (action,)
             case "trim":
@@ -160,6 +168,10 @@ class Moves:
                 words = f"{item.title}. {item.do} {item.caution}".strip()
                 wait = Wait(item=item.id, seconds=item.seconds, reason=words)
                 return replace(state, phase="waiting"), (wait,)
+            case "off" if state.on_lamp:
+                return replace(state, phase="by hand off", unconfirmed=True), (
+                    Ask(item=item.id, question=questions.lamp_off(item)),
+                )
             case "off":
                 reason = state.stopped or "a step of the procedure"
                 return replace(state, phase="switching off"), (SwitchOff(item=item.id, reason=reason),)
@@ -193,6 +205,22 @@ class Moves:
 
     def _read(self, state: State, item: Item) -> Step:
         assert item.point is not None
+        if item.kind == "discharge":
+            assert item.limits is not None
+            assert item.limits.high is not None
+            held = item.falls
+            fall = Fall(
+                item=item.id,
+                question=questions.falling(item),
+                point=item.point.name,
+                function=item.point.function,
+                unit=item.point.unit,
+                low_v=item.limits.high,
+                tau_s=None if held is None else held.tau_s,
+                slowest_tau_s=None if held is None else held.slowest_tau_s,
+                help=item.caution,
+            )
+            return replace(state, phase="reading"), (fall,)
         read = Read(
             item=item.id,
             point=item.point.name,
@@ -259,6 +287,22 @@ class Moves:
         """Put the question anew: there is more, or less, to choose from."""
         return self._decide(state, None if state.missing else state.result(self.host(state).id), state.missing)
 
+    def _ask_suspects(self, state: State) -> Step:
+        """Ask, aside, what would explain this unit's readings; nothing where none has been kept."""
+        known = knowledge.observations(self.plan, state)
+        if not known:
+            return state, ()
+        state = replace(state, suspecting=state.count)
+        named = knowledge.candidates(self.plan, replace(state, extra=""))
+        suspect = Suspect(
+            item=self.asked_at(state),
+            after=state.count,
+            known=known,
+            candidates=tuple(knowledge.target_of(*one) for one in named),
+            names=knowledge.names_of_conditions(self.plan, state),
+        )
+        return state, (suspect,)
+
     def _offers_on_the_way_out(self, state: State) -> bool:
         """An extra reading can be offered now that the unit has no power and its rails have been seen low."""
         if not (self.way_out(state) and state.stopped) or state.offers_left:
@@ -269,3 +313,12 @@ class Moves:
         item, offer = self.host(state), self.offer(state)
         question = questions.offering(item, None if offer is None else offer[0][1])
         return replace(state, phase="offering", extra=""), (Ask(item=item.id, question=question),)
+
+
+def _protection(state: State, item: Item) -> tuple[float, float]:
+    """Where the over-voltage protection goes: by the higher of where each rail is and where it goes."""
+    told = state.supply
+    now_v = (0.0, 0.0) if told is None or told.output_on is not True else (
+        abs(told.set_positive_v or 0.0), abs(told.set_negative_v or 0.0)
+    )  # fmt: skip
+    return protection_v(max(item.positive_v, now_v[0]), -max(-item.negative_v, now_v[1]))

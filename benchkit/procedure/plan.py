@@ -6,7 +6,8 @@ Rules
   ``PART.vbe`` for every transistor, ``ohm.spreader.ARM`` for the arm that holds the trimmer.  A point or a rule that
   this design doesn't have is left out.
 * A hold point stands before every item that raises a voltage or the limit.  Where the file has none, it is put in.
-* ``clip`` becomes: off, time to discharge, both rails seen low at the unit, clip, hold point, power as before.
+* ``clip`` becomes: off, every rail watched down at the unit, clip, hold point, power as before.
+* Steps that turn or check a trimmer fall away for a design without one; its target is only checked.
 * Rails, limit and trimmer are followed from item to item, so that each reading knows its condition.
 """
 
@@ -88,7 +89,7 @@ def _with_facts(items: tuple[Item, ...]) -> tuple[Item, ...]:
     told = list(items)
     for number, item in enumerate(items[1:], start=1):
         hold = told[number - 1]
-        if not item.raises or hold.kind != "hold":
+        if not item.raises or hold.kind != "hold" or item.kind == "lamp":
             continue
         rails, limit = rails_text(item.positive_v, item.negative_v), quantities.show(item.limit_a, "A")
         if rails not in hold.do or limit not in hold.do:
@@ -98,12 +99,13 @@ def _with_facts(items: tuple[Item, ...]) -> tuple[Item, ...]:
 
 def _require_checks(procedure: Procedure, design: Design, items: tuple[Item, ...]) -> None:
     """Refuse a procedure that powers a unit before limit, rails and trimmer have been checked."""
-    first = next((number for number, item in enumerate(items) if item.kind == "supply"), None)
+    first = next((number for number, item in enumerate(items) if item.kind in ("supply", "lamp")), None)
     if first is None:
         return
     before = items[:first]
     lacking = []
-    if not any(item.kind == "limit check" for item in before):
+    first_set = next((number for number, item in enumerate(items) if item.kind == "supply"), 0)
+    if first_set and not any(item.kind == "limit check" for item in items[:first_set]):
         lacking.append("a step of the kind 'limit check'")
     if not any(item.point is not None and item.point.name == "ohm.rails" for item in before):
         lacking.append("a reading of ohm.rails")

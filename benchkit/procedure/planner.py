@@ -15,30 +15,28 @@ from benchkit.procedure.file import PairText, Procedure, Section, Step
 from benchkit.procedure.items import (
     MOST_OFFSET_V,
     NEVER_PASSED_OVER,
-    RAIL_LOW_V,
     TRIMMED,
     AnyCondition,
     Item,
     ItemKind,
     Joined,
 )
+from benchkit.procedure.power_off import PowerOff
 from benchkit.procedure.sizing import (
     capacitors_settle_s,
     charging_s,
-    discharge_s,
-    discharge_text,
     rails_text,
     supply_limit_a,
-    time_text,
     with_room,
 )
+from benchkit.procedure.wording import fill, words_of
 from benchkit.stage.conditions import Condition, Unpowered
 from benchkit.stage.design import Design, target_drop_v
 from benchkit.stage.points import Point, points_of
 from benchkit.stage.reach import least_regulating_rails
 
 
-class Planner:
+class Planner(PowerOff):
     """Follows rails, limit, trimmer and warmth from step to step."""
 
     def __init__(self, procedure: Procedure, design: Design) -> None:
@@ -46,7 +44,7 @@ class Planner:
         self.design = design
         self.points = {point.name: point for point in points_of(design)}
         self.positive_v = self.negative_v = self.limit_a = 0.0
-        self.on = False
+        self.on = self.lamp = False
         self.trimmer: Literal["least", "target", "unknown"] = "unknown"
         self.share = 1.0
         self.lowest = with_room(design, least_regulating_rails(design))
@@ -67,7 +65,7 @@ class Planner:
         for section in self.procedure.sections:
             self.section = section
             first = True
-            for step in section.step:
+            for step in filter(self._makes_sense, section.step):
                 for item in self._step(step):
                     yield replace(item, resume=section.resume and first)
                     first = False
@@ -77,12 +75,12 @@ class Planner:
         match step.kind:
             case "tell" | "confirm" | "text" | "hold":
                 if step.act == "trimmer to least":
-                    self._need_trimmer(step)
                     self.trimmer = "least"
                 yield self._item(step, step.kind, act=step.act or "")
             case "measure":
                 yield from self._measure(step)
             case "rule":
+                self._not_on_lamp(step, "judges a rule")
                 if self._rule_fits(step):
                     may_go_on = step.override and step.rule not in NEVER_PASSED_OVER
                     number = self._number(step)
@@ -100,25 +98,38 @@ class Planner:
             case "off":
                 self._off()
                 yield self._item(step, "off")
+            case "discharge":
+                yield from self._discharge(step)
+            case "series lamp":
+                yield from self._series_lamp(step)
+
+    def _makes_sense(self, step: Step) -> bool:
+        """Whether a step means anything for this design."""
+        trims = step.kind == "trim" or step.act == "trimmer to least" or step.needs == "a trimmer"
+        if trims and self.design.spreader.trimmer is None:
+            return False
+        return step.needs != ("two rails" if self.design.single_supply else "one rail")
 
     def _item(self, step: Step, kind: ItemKind, suffix: str = "", **more: Any) -> Item:
-        words = self._words(more)
+        words = self.words(more)
         item = Item(
             id=f"{self.section.name}.{step.name}{suffix}",
             section=self.section.name,
             section_title=self.section.title,
             kind=kind,
-            title=_fill(step.title, words),
-            do=_fill(step.do, words),
-            why=_fill(step.why, words),
-            caution=_fill(step.caution, words),
-            expected=_fill(step.expected, words),
+            title=fill(step.title, words),
+            do=fill(step.do, words),
+            why=fill(step.why, words),
+            caution=fill(step.caution, words),
+            expected=fill(step.expected, words),
             may_go_on=step.override,
             powered=self.on,
         )
         return replace(item, **more)
 
     def _measure(self, step: Step) -> Iterator[Item]:
+        if not isinstance(step.limits, PairText):
+            self._not_on_lamp(step, "judges readings by the model or the target")
         for name in step.points:
             for point in self._expand(name):
                 yield self._reading(step, point)
@@ -150,7 +161,7 @@ class Planner:
             step,
             "measure",
             f".{point.name}",
-            title=f"{_fill(step.title, self._words({}))}: {point.name}",
+            title=f"{fill(step.title, self.words({}))}: {point.name}",
             point=point,
             condition=condition,
             held_under=held_under,
@@ -205,6 +216,7 @@ class Planner:
         return capacitors_settle_s(self.design)
 
     def _supply(self, step: Step) -> Iterator[Item]:
+        self._not_on_lamp(step, "sets a supply")
         positive_v, negative_v = self._rails(step)
         limit_a = self._limit(step, positive_v, negative_v)
         if self.on and (positive_v, negative_v) == (self.positive_v, self.negative_v) and limit_a == self.limit_a:
@@ -246,6 +258,7 @@ class Planner:
         )
 
     def _limit_check(self, step: Step) -> Iterator[Item]:
+        self._not_on_lamp(step, "tries the limit")
         if self.on:
             raise self._refuse(step, "tries the limit while the unit has power")
         positive_v, negative_v = self._rails(step)
@@ -261,7 +274,7 @@ class Planner:
         )
 
     def _trim(self, step: Step) -> Iterator[Item]:
-        self._need_trimmer(step)
+        self._not_on_lamp(step, "trims")
         if not self.on:
             raise self._refuse(step, "trims while the supply is off")
         share = quantities.parse(step.share or "100 %", "%") / 100.0
@@ -278,52 +291,12 @@ class Planner:
                 )
         self.trimmer, self.share = "target", share
 
-    def _clip(self, step: Step) -> Iterator[Item]:
-        back = (self.positive_v, self.negative_v, self.limit_a)
-        was_on = self.on
-        points = tuple(point for name in step.points for point in self._expand(name))
-        if len(points) != 1:
-            raise self._refuse(step, f"clips the probes to {len(points)} points of {self.design.name}, not to one")
-        (point,) = points
-        if was_on:
-            self._off()
-            yield self._item(
-                step, "off", ".off", title="Power off for the clips", do="The supply is switched off and read back."
-            )
-            seconds = discharge_s(self.design, back[0])
-            yield self._item(
-                step,
-                "wait",
-                ".discharge",
-                title="Let the rails fall",
-                do=f"Hands off. Expected time to {RAIL_LOW_V:g} V: {time_text(seconds)}.",
-                seconds=max(5.0, min(300.0, 30.0 if seconds is None else 1.2 * seconds)),
-            )
-            for name in (name for name in ("rail+", "rail-") if name in self.points):
-                yield self._item(
-                    step,
-                    "measure",
-                    f".{name}",
-                    title=f"Rail seen low at the unit: {name}",
-                    do="One tip on the rail at the unit's own capacitors, the other on 0 V.",
-                    why="Nobody touches the circuit before both rails have been seen low.",
-                    point=self.points[name],
-                    limits=Limits(-RAIL_LOW_V, RAIL_LOW_V, None, "V", "common practice"),
-                    may_go_on=False,
-                )
-        yield self._item(step, "tell", ".clip", point=point)
-        if was_on:
-            self.ready_hold = False
-            yield from self._power(step, ".again", *back, ramp_s=3.0)
-
-    def _off(self) -> None:
-        self.on = False
-
     def _expand(self, name: str) -> tuple[Point, ...]:
         trimmer = self.design.spreader.trimmer
         if "ARM" in name:
-            arm = "lower" if trimmer is None or trimmer.arm == "between" else trimmer.arm
-            name = name.replace("ARM", arm)
+            if trimmer is None:
+                return ()
+            name = name.replace("ARM", "lower" if trimmer.arm == "between" else trimmer.arm)
         if "N" not in name and "PART" not in name:
             return (self.points[name],) if name in self.points else ()
         pattern = re.escape(name).replace("PART", r"[a-z.0-9]+").replace("N", r"\d+")
@@ -375,7 +348,7 @@ class Planner:
     def _limit(self, step: Step, positive_v: float, negative_v: float) -> float:
         full = self.design.rails
         if step.limit == "for least bias":
-            return supply_limit_a(self.design, full.positive_v, full.negative_v, share=0.0)
+            return self.least_bias_limit_a()
         if step.limit == "for the target":
             return supply_limit_a(self.design, positive_v, negative_v, share=1.0)
         limit_a = quantities.parse(step.limit or "", "A")
@@ -391,43 +364,18 @@ class Planner:
         source = "the target of the design" if share == 1.0 else f"{share:.0%} of the target"
         return Limits(nominal_v * (1 - width), nominal_v * (1 + width), nominal_v, "V", source)
 
-    def _need_trimmer(self, step: Step) -> None:
-        if self.design.spreader.trimmer is None:
-            raise self._refuse(step, f"turns a trimmer, and {self.design.name} has none")
+    def least_bias_limit_a(self) -> float:
+        """Limit (A) of the first power-on; without a trimmer the full bias flows from the first moment."""
+        full = self.design.rails
+        share = 1.0 if self.design.spreader.trimmer is None else 0.0
+        return supply_limit_a(self.design, full.positive_v, full.negative_v, share=share)
+
+    def words(self, given: Mapping[str, Any]) -> dict[str, str]:
+        """What the words in braces stand for, at this place of the plan."""
+        positive_v = float(given.get("positive_v", self.positive_v or self.lowest[0]))
+        negative_v = float(given.get("negative_v", self.negative_v or self.lowest[1]))
+        limit_a = float(given.get("limit_a", self.limit_a)) or self.least_bias_limit_a()
+        return words_of(self.design, positive_v, negative_v, limit_a)
 
     def _refuse(self, step: Step, came: str, expected: str = "") -> FileError:
         return FileError(self.procedure.file, f"section {self.section.name}, step {step.name}", came, expected)
-
-    def _words(self, given: Mapping[str, Any]) -> dict[str, str]:
-        trimmer = self.design.spreader.trimmer
-        positive_v = float(given.get("positive_v", self.positive_v or self.lowest[0]))
-        negative_v = float(given.get("negative_v", self.negative_v or self.lowest[1]))
-        full = self.design.rails
-        limit_a = float(given.get("limit_a", self.limit_a)) or supply_limit_a(
-            self.design, full.positive_v, full.negative_v, share=0.0
-        )
-        target_v = target_drop_v(self.design)
-        words = {
-            "design": self.design.name,
-            "limit": quantities.show(limit_a, "A"),
-            "rails": rails_text(positive_v, negative_v),
-            "target": f"{quantities.show(target_v, 'V')} ± {self.design.target.tolerance:.0%}",
-            "discharge_time": discharge_text(self.design),
-            "turns": "",
-            "arm": "",
-            "more_bias_way": "",
-            "less_bias_way": "",
-        }
-        if trimmer is not None:
-            ways = ("clockwise", "anticlockwise")
-            words["turns"] = f"{trimmer.turns:g}"
-            words["arm"] = "lower and upper" if trimmer.arm == "between" else trimmer.arm
-            words["more_bias_way"] = trimmer.raises_bias
-            words["less_bias_way"] = ways[1 - ways.index(trimmer.raises_bias)]
-        return words
-
-
-def _fill(text: str, words: dict[str, str]) -> str:
-    for word, value in words.items():
-        text = text.replace("{" + word + "}", value)
-    return text

@@ -8,7 +8,7 @@ from benchkit import quantities
 from benchkit.events import Judged, NarrowedLimits, PointLimits
 from benchkit.judge.limits import Limits
 from benchkit.procedure.actions import Choice, Question
-from benchkit.procedure.items import Item
+from benchkit.procedure.items import RAIL_POINTS, Item
 from benchkit.stage.points import Point
 
 DONE = Choice(value="done", label="Done")
@@ -19,8 +19,13 @@ GO_ON = Choice(value="go on", label="Note a reason and go on", wants_reason=True
 ON = Choice(value="go on", label="Go on")
 LEAVE = Choice(value="go on", label="Leave it, go on with making safe")
 STOP = Choice(value="make safe", label="Make safe and stop")
+WATCH = Choice(value="done", label="Go on watching")
+ENOUGH = Choice(value="enough", label="Take it as it reads now")
 TAKE = Choice(value="take", label="Take this reading")
 END = Choice(value="end", label="It can't be reached")
+
+
+BY_HAND_ALWAYS: Final = "Nothing switches this unit off by itself, and nothing here can."
 
 
 def question_for(item: Item) -> Question:
@@ -30,15 +35,16 @@ def question_for(item: Item) -> Question:
         "confirm": (YES, NO, STOP),
         "text": (DONE, STOP),
         "hold": (YES, STOP),
+        "lamp": (YES, NO, STOP),
     }[item.kind]
     point = item.point
     return Question(
         item=item.id,
-        kind=item.kind,  # type: ignore[arg-type]
+        kind="confirm" if item.kind == "lamp" else item.kind,  # type: ignore[arg-type]
         title=item.title,
         do=item.do,
         why=item.why,
-        caution=item.caution,
+        caution=f"{item.caution} {BY_HAND_ALWAYS}".strip() if item.kind == "lamp" else item.caution,
         expected=item.expected,
         point="" if point is None else point.name,
         red="" if point is None else point.red,
@@ -57,11 +63,29 @@ def placing(item: Item, limits: Limits) -> Question:
         do=item.do,
         why=item.why,
         caution=item.caution,
-        expected=expected_text(limits),
+        expected="; ".join(text for text in (expected_text(limits), item.expected) if text),
         point=item.point.name,
         red=item.point.red,
         black=item.point.black,
         choices=(DONE, STOP),
+    )
+
+
+def falling(item: Item) -> Question:
+    """What stands on the screen while a rail is watched down."""
+    assert item.point is not None
+    assert item.limits is not None
+    return Question(
+        item=item.id,
+        kind="watch",
+        title=item.title,
+        do="Keep the probes where they are, hands off the circuit: the rail is watched down.",
+        caution=item.caution,
+        expected="; ".join(text for text in (expected_text(item.limits), item.expected) if text),
+        point=item.point.name,
+        red=item.point.red,
+        black=item.point.black,
+        choices=(WATCH, ENOUGH),
     )
 
 
@@ -107,8 +131,8 @@ def deciding(item: Item, result: Judged | None, problem: str, *, way_out: bool, 
     caution = "" if odd or item.may_go_on or way_out else "There is no way past this result but a better one."
     if odd:
         caution = "Inside the design's limits, so no failure: see what the other readings say."
-    if way_out and item.point is not None and item.point.name in ("rail+", "rail-"):
-        caution = "Hands off until both rails have been seen low. Going on ends the walk here: take the unit as live."
+    if way_out and item.point is not None and item.point.name in RAIL_POINTS:
+        caution = "Hands off until every rail has been seen low. Going on ends the walk here: take the unit as live."
     return Question(
         item=item.id,
         kind="decide",
@@ -153,7 +177,33 @@ def by_hand_off(item: Item, how: str) -> Question:
         title="Output state unknown: switch it off by hand",
         do=f"{how} Switch the supply off by hand at its own switch, and pull its plug from the unit.",
         why="Nothing that benchkit knows says that the output is off.",
-        caution="Treat the unit as live until both rails have been seen low.",
+        caution="Treat the unit as live until its rails have been seen low.",
+        choices=(DONE,),
+    )
+
+
+def supply_off(item: Item) -> Question:
+    """Ask a person to switch off a supply that only a person switches."""
+    return Question(
+        item=item.id,
+        kind="by hand",
+        title="Switch the supply off by hand",
+        do=f"{item.title}: switch the output off at the supply itself, look that it shows no output, then say so.",
+        why="benchkit has no hand on this supply: that it is off stands in the record as said by you.",
+        caution="Treat the unit as live until its rails have been seen low.",
+        choices=(DONE,),
+    )
+
+
+def lamp_off(item: Item) -> Question:
+    """Ask a person to take mains off a unit on the series lamp."""
+    return Question(
+        item=item.id,
+        kind="by hand",
+        title="Switch the mains off by hand, and pull the plug",
+        do="Switch off at the series lamp, and pull the unit's mains plug. Then say that it is done.",
+        why="benchkit has no hand on the series lamp, and can't see whether it is off.",
+        caution="Treat the unit as live until its rails have been seen low.",
         choices=(DONE,),
     )
 

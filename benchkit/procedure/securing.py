@@ -24,9 +24,12 @@ from benchkit.events import (
 )
 from benchkit.procedure import questions
 from benchkit.procedure.actions import Action, Ask, Connect, SwitchOff
-from benchkit.procedure.hearing import cut, heard, off_by_word, off_heard
+from benchkit.procedure.hearing import cut, heard, off_by_word, off_heard, switched_by_hand
 from benchkit.procedure.moves import Moves, Step
 from benchkit.procedure.state import State
+
+NOTHING_BROKEN: Final = "none"
+"""What stands in place of the names when a rehearsal's unit ends with every part whole."""
 
 RUNNERS: Final = frozenset({"the screen", "the keeper"})
 """Who runs a walk, as `ContactLost` calls them: when one of them goes, nothing is wrong with unit or bench."""
@@ -34,8 +37,17 @@ RUNNERS: Final = frozenset({"the screen", "the keeper"})
 RUNNER_GONE: Final = ("contact with the screen was lost", "the screen closed the bench", "an error of the session")
 """How the reasons begin with which the supply is switched off when whoever ran the walk has gone."""
 
+MAKING_SURE: Final = "to make sure that it is off"
+"""How the reason begins with which a supply that is known to be off is switched off once more: the place is kept."""
+
 NOT_CONFIRMED: Final = "the supply did not confirm that its output is off"
 """Why a walk goes no further with a supply that doesn't obey."""
+
+STILL_OFF: Final = "The supply is off, and was read back as off once more. The walk stays where it is."
+
+OFF_ASKED: Final = "The supply is off already, and is told so once more. The walk stays where it is."
+
+OFF_AS_SAID: Final = "You said that it is off; nothing here can switch it. The walk stays where it is."
 
 AFTER_TRIP: Final = "Discharge, and find the cause: no second try at a higher limit."
 
@@ -46,11 +58,17 @@ class Securing(Moves):
     # -- what may come at any time -----------------------------------------------------------------------------
 
     def _stop_asked(self, state: State, event: StopAsked) -> Step:
+        if state.energised == "off" and event.reason.startswith(MAKING_SURE):
+            note = OFF_AS_SAID if switched_by_hand(state) else OFF_ASKED
+            return replace(state, note=note), self._open_actions(state)
         return self._make_safe(state, event.reason, 4)
 
     def _tripped(self, state: State, event: Tripped) -> Step:
-        after, actions = self._make_safe(heard(state, event.state), f"tripped: {event.reason}", 4)
-        return replace(after, note=f"Tripped: {event.reason}. {AFTER_TRIP}"), actions
+        state = heard(state, event.state)
+        ask = not state.stopped and not self.way_out(state)
+        after, actions = self._make_safe(state, f"tripped: {event.reason}", 4)
+        after, asked = self._ask_suspects(after) if ask else (after, ())
+        return replace(after, note=f"Tripped: {event.reason}. {AFTER_TRIP}"), (*actions, *asked)
 
     def _contact_lost(self, state: State, event: ContactLost) -> Step:
         if event.who in RUNNERS:
@@ -58,7 +76,10 @@ class Securing(Moves):
         return self._make_safe(state, f"contact with {event.who} was lost: {event.problem}", 3)
 
     def _output_went_off(self, state: State, event: OutputOff) -> Step:
+        sure = state.energised == "off" and event.confirmed and event.reason.startswith(MAKING_SURE)
         state = off_heard(state, event)
+        if sure:
+            return replace(state, note=STILL_OFF), self._open_actions(state)
         if self.way_out(state) or state.phase == "closing":
             return replace(state, note=event.how), self._open_actions(state)
         if event.reason.startswith(RUNNER_GONE):
@@ -70,6 +91,8 @@ class Securing(Moves):
         return self._close(state)[1] if state.phase == "closing" else ()
 
     def _noted(self, state: State, event: Noted) -> Step:
+        if event.broken is not None:
+            state = replace(state, broken="; ".join(event.broken) or NOTHING_BROKEN)
         return state, self._open_actions(state)
 
     def _resumed(self, state: State, event: Resumed) -> Step:
@@ -106,6 +129,10 @@ class Securing(Moves):
 
     def _secure_found(self, state: State, event: BenchFound) -> Step:
         state = heard(replace(state, meter=event.meter, supply_name=event.supply), event.supply_state)
+        if state.on_lamp:
+            return replace(state, unconfirmed=True), (
+                Ask(item=self.item(state).id, question=questions.lamp_off(self.item(state))),
+            )
         return state, (SwitchOff(item=self.item(state).id, reason="the walk goes on after it was cut off"),)
 
     def _secure_missing(self, state: State, event: BenchMissing) -> Step:
@@ -137,8 +164,8 @@ class Securing(Moves):
         return self._go_back(off_by_word(state))
 
     def _switched_here(self, state: State) -> bool:
-        """Whether benchkit itself switches the supply, so that an off that it can't confirm means trouble."""
-        return state.opened is not None and state.opened.supply == "scpi"
+        """Whether benchkit itself switches what feeds the unit, so that an off that it can't confirm means trouble."""
+        return not switched_by_hand(state)
 
     def _go_back(self, state: State) -> Step:
         if self.item(state).kind == "connect":

@@ -10,6 +10,7 @@ import math
 from benchkit import quantities
 from benchkit.procedure.items import RAIL_LOW_V
 from benchkit.stage.design import Design, target_drop_v
+from benchkit.stage.stored import stored
 
 TYPICAL_VBE_V = 0.7
 """Used only to size current limits, never to judge; common practice."""
@@ -32,12 +33,17 @@ def supply_limit_a(design: Design, positive_v: float, negative_v: float, *, shar
 
 def discharge_s(design: Design, from_v: float, to_v: float = RAIL_LOW_V) -> float | None:
     """Time (s) for a rail to fall through the bleed resistor, t = R·C·ln(V0/V); None without a bleed resistor."""
-    capacitance_f = (design.rails.reservoir_f or 0.0) + (design.rails.local_capacitors_f or 0.0)
-    if not capacitance_f or from_v <= to_v:
-        return 0.0
-    if design.rails.bleed is None:
-        return None
-    return design.rails.bleed.value * capacitance_f * math.log(from_v / to_v)
+    return stored(design, from_v, -from_v).fall_s(from_v, to_v)
+
+
+def protection_v(positive_v: float, negative_v: float) -> tuple[float, float]:
+    """Where the supply's over-voltage protection goes for these rails (V), as magnitudes, positive rail first.
+
+    110 % of each rail and 1 V, our own figure: room for a regulator's overshoot, and still far below what the next
+    higher rating of a capacitor is for.  An output that isn't used is held like the other.
+    """
+    wide = tuple(1.1 * abs(volts) + 1.0 for volts in (positive_v, negative_v or positive_v))
+    return wide[0], wide[1]
 
 
 def _feed_a(design: Design, span_v: float) -> float:
@@ -80,23 +86,47 @@ def capacitors_settle_s(design: Design) -> float:
     return min(120.0, 8.0 * design.rails.bleed.value * capacitance_f(design))
 
 
-def discharge_text(design: Design) -> str:
+def discharge_text(design: Design, positive_v: float | None = None, negative_v: float | None = None) -> str:
     """What the rails' capacitors hold and how they let go of it, in words: energy, time, and a resistor for it.
 
-    E = C·V²/2 and t = R·C·ln(V0/V), first-moment power V0²/R; each rail to 0 V.
+    At the design's full rails unless others are given (V); the laws and our own figures stand in
+    `benchkit.stage.stored`.
     """
-    volts = max(design.rails.positive_v, -design.rails.negative_v)
-    farads = capacitance_f(design)
-    if not farads:
+    rails = design.rails
+    held = stored(
+        design,
+        rails.positive_v if positive_v is None else positive_v,
+        rails.negative_v if negative_v is None else negative_v,
+    )
+    if not held.farad:
         return "at once (the design names no capacitors on the rails)"
-    joules = 0.5 * farads * volts**2
-    held = f"each rail holds {joules:.2g} J" if joules >= 0.1 else f"each rail holds {1000.0 * joules:.2g} mJ"
-    seconds = discharge_s(design, volts)
-    alone = "no bleed resistor is named" if seconds is None else f"{time_text(seconds)} through the bleed resistor"
-    ohms = 1000.0
-    by_hand = time_text(ohms * farads * math.log(volts / RAIL_LOW_V))
-    by_hand = by_hand if by_hand == "at once" else f"in {by_hand}"
-    return f"{alone}; {held}; a 1 kohm resistor for {volts**2 / ohms:.2g} W empties it {by_hand}"
+    highest_v = max(held.positive_v, -held.negative_v)
+    seconds = held.fall_s(highest_v, RAIL_LOW_V)
+    alone = "no bleed resistor is named"
+    if seconds is not None and held.bleed_peak_w is not None:
+        alone = f"{time_text(seconds)} through the bleed resistor, which takes {held.bleed_peak_w:.2g} W at first"
+    single = held.negative_v == 0.0
+    where = "the rail holds" if single else "both rails together hold"
+    span = "" if single else f", {quantities.show(held.span_v, 'V', 3)} from rail to rail"
+    return f"{alone}; {where} {_energy_text(held.joule)}{span}; {helper_text(design, held.positive_v, held.negative_v)}"
+
+
+def helper_text(design: Design, positive_v: float, negative_v: float) -> str:
+    """Say which resistor a hand takes, what it has to stand, and how long it needs for the higher rail."""
+    held = stored(design, positive_v, negative_v)
+    helper = held.helper
+    if helper is None:
+        return "nothing is stored"
+    seconds = held.helped_s(max(positive_v, -negative_v), RAIL_LOW_V)
+    time = "at once" if seconds < 0.5 else f"in {time_text(seconds)}"
+    return (
+        f"a resistor of {quantities.show(helper.ohm, 'ohm', 2)} rated {helper.rating_w:g} W or more (it takes "
+        f"{helper.peak_w:.2g} W in the first moment at {quantities.show(helper.volts, 'V', 3)}) empties a rail {time}"
+    )
+
+
+def _energy_text(joule: float) -> str:
+    return f"{joule:.2g} J" if joule >= 0.1 else f"{1000.0 * joule:.2g} mJ"
 
 
 def with_room(design: Design, least: tuple[float, float]) -> tuple[float, float]:

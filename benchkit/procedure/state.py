@@ -95,6 +95,12 @@ class State:
         else had stopped it; such a walk can go on.
     stop_status : int
         The exit status that the stop leads to; 0 while nothing has stopped the walk.
+    on_lamp : bool
+        The unit is fed through a series lamp, which nothing but a hand switches.
+    unprotected : bool
+        The supply says of no over-voltage protection of its own.
+    broken : str
+        At the end of a rehearsal: which parts of the simulated unit have failed, in words.
     ever_on : bool
         The supply has been on in this walk, or nobody knows.
     unconfirmed : bool
@@ -135,6 +141,9 @@ class State:
     stopped_at: str = ""
     cut_at: int | None = None
     stop_status: int = 0
+    on_lamp: bool = False
+    unprotected: bool = False
+    broken: str = ""
     ever_on: bool = False
     unconfirmed: bool = False
     closed: Closed | None = None

@@ -40,8 +40,16 @@ from benchkit.events import (
 )
 from benchkit.procedure import questions
 from benchkit.procedure.actions import Action, Ask, Write
-from benchkit.procedure.hearing import heard, limit_judged, off_by_word, off_heard, rails_judged
-from benchkit.procedure.items import JUDGED_KINDS, Plan
+from benchkit.procedure.hearing import (
+    heard,
+    lacks_protection,
+    limit_judged,
+    off_by_word,
+    off_heard,
+    rails_judged,
+    switched_by_hand,
+)
+from benchkit.procedure.items import JUDGED_KINDS, RAIL_POINTS, Plan
 from benchkit.procedure.modelling import Modelling
 from benchkit.procedure.moves import Step
 from benchkit.procedure.securing import NOT_CONFIRMED, Securing, demand
@@ -109,8 +117,8 @@ class Walk(Securing, Modelling):
 
     def _answered(self, state: State, event: Answered) -> Step:
         item = self.item(state)
-        demand(event, *(("yes", "no") if item.kind in ("confirm", "hold") else ("done",)))
-        if item.kind == "confirm":
+        demand(event, *(("yes", "no") if item.kind in ("confirm", "hold", "lamp") else ("done",)))
+        if item.kind in ("confirm", "lamp"):
             verdict = "pass" if event.choice == "yes" else "fail"
             judged = Judged(
                 item=item.id, subject=item.title, verdict="pass" if verdict == "pass" else "fail", value=None, unit="",
@@ -143,7 +151,7 @@ class Walk(Securing, Modelling):
             if not event.reason.strip():
                 raise IllegalEvent(f"{item.id} was passed over without a reason", "a reason in words")
             state = replace(state, overrides={**state.overrides, item.id: event.reason})
-            if self.way_out(state) and item.point is not None and item.point.name in ("rail+", "rail-"):
+            if self.way_out(state) and item.point is not None and item.point.name in RAIL_POINTS:
                 return self._close(replace(state, index=len(self.plan), note=STILL_LIVE))
             return self._next(state)
         if self.way_out(state):
@@ -159,7 +167,10 @@ class Walk(Securing, Modelling):
         item = self.item(state)
         state = heard(state, event.state)
         judge = limit_judged if item.kind == "limit check" else rails_judged
-        judged = judge(item, event.state)
+        by_hand = switched_by_hand(state)
+        judged = judge(item, event.state, by_hand=by_hand)
+        if item.kind == "supply" and not by_hand:
+            state = replace(state, unprotected=lacks_protection(event.state))
         return replace(state, phase="judging"), (Write(item=item.id, event=judged),)
 
     def _supply_refused(self, state: State, event: SupplyRefused) -> Step:
@@ -173,8 +184,9 @@ class Walk(Securing, Modelling):
         if event.confirmed:
             return self._next(state)
         item = self.item(state)
-        ask = Ask(item=item.id, question=questions.by_hand_off(item, event.how))
-        return replace(state, phase="by hand off"), (ask,)
+        by_hand = switched_by_hand(state)
+        question = questions.supply_off(item) if by_hand else questions.by_hand_off(item, event.how)
+        return replace(state, phase="by hand off"), (Ask(item=item.id, question=question),)
 
     def _off_by_hand(self, state: State, event: Answered) -> Step:
         demand(event, "done")

@@ -137,6 +137,8 @@ class Summary:
         In their order; the last one says most.
     narrowings : tuple of Narrowed
         In their order.
+    cautions : tuple of str
+        What had to be said of the bench: an overdue calibration, a supply without protection of its own.
     highest_v : tuple of float or None
         The largest magnitudes, V, of the positive and the negative rail that the supply was set to or measured at.
     ending : Ending
@@ -161,6 +163,7 @@ class Summary:
     closed: Closed | None
     suspicions: tuple[Suspicion, ...] = ()
     narrowings: tuple[Narrowed, ...] = ()
+    cautions: tuple[str, ...] = ()
 
     @property
     def verdict(self) -> Verdict | None:

@@ -35,6 +35,8 @@ from benchkit.events import (
 )
 from benchkit.measure.readings import Reading
 from benchkit.procedure.file import Procedure, parse_procedure
+from benchkit.procedure.hearing import UNPROTECTED
+from benchkit.procedure.modelling import TOO_SLOWLY
 from benchkit.record.facts import Ending, Incident, Result, Suspicion
 
 _NAME = re.compile(r"[a-z0-9][a-z0-9-]*")
@@ -57,12 +59,16 @@ class Gathering:
     ever_on: bool = False
     may_be_on: bool = False
     off: OutputOff | None = None
+    said_off: bool = False
+    cautions: list[str] = field(default_factory=list)
     closed: Closed | None = None
     where: str = ""
 
     def __post_init__(self) -> None:
         self.sections, self._titles = _titles(self.opened)
         self._conditions: dict[str, str] = {}
+        self._by_hand = self.opened.supply == "manual"
+        self.cautions += self.opened.cautions
 
     def take(self, seq: int, at: str, event: Event) -> None:
         """Add one event."""
@@ -81,6 +87,9 @@ class Gathering:
                 self._add(seq, at, item, event.point, missed=event.problem)
             case Judged():
                 self._judge(seq, at, event)
+                for said in (UNPROTECTED, TOO_SLOWLY):
+                    if said in event.why and (caution := said.removeprefix("CAUTION: ")) not in self.cautions:
+                        self.cautions.append(caution)
             case Narrowed():
                 self.narrowings.append(event)
             case Suspected():
@@ -89,14 +98,17 @@ class Gathering:
                 self._decide(seq, at, event)
             case Answered():
                 self.answers.append((self.where, event))
+                if self.off is not None and not self.off.confirmed and self._by_hand and event.choice == "done":
+                    self.said_off, self.may_be_on = True, False
                 if event.choice == "no":
                     self._incident(seq, at, "answered no" + (f": {event.text}" if event.text else ""))
             case SupplySet():
                 self._look_at(event.state)
             case OutputOff():
                 self.off = event
+                self.said_off = False
                 self.may_be_on = not event.confirmed
-                if not event.confirmed:
+                if not event.confirmed and not self._by_hand:
                     self._incident(seq, at, f"the supply did not confirm that its output is off ({event.how})")
             case Resumed():
                 self.results = [replace(result, from_before=True) for result in self.results]
@@ -227,8 +239,13 @@ def _disturbance(event: Event) -> str:
     return event.name
 
 
-def ending_of(ever_on: bool, may_be_on: bool, off: OutputOff | None) -> Ending:
-    """Say what the record shows of the supply at its end."""
+def ending_of(ever_on: bool, may_be_on: bool, off: OutputOff | None, *, by_hand: bool = False) -> Ending:
+    """Say what the record shows of the supply at its end; of one that only a person switches, what that person said."""
+    if by_hand:
+        if not may_be_on:
+            words = "Off, as said by the operator; benchkit had no hand on it." if ever_on or off else NEVER_ON
+            return Ending(state="off" if ever_on or off else "never on", words=words)
+        return Ending(state="unknown", words="In the operator's hands, and nobody said that it is off: look at it.")
     if off is not None and not off.confirmed:
         return Ending(
             state="unknown",
@@ -243,4 +260,7 @@ def ending_of(ever_on: bool, may_be_on: bool, off: OutputOff | None) -> Ending:
         return Ending(state="off", words=f"Off, and confirmed: {off.how}.")
     if ever_on:
         return Ending(state="off", words="Off, as the supply said when it was last asked.")
-    return Ending(state="never on", words="Never switched on during this walk.")
+    return Ending(state="never on", words=NEVER_ON)
+
+
+NEVER_ON = "Never switched on during this walk."

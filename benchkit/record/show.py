@@ -12,7 +12,7 @@ import textwrap
 from collections.abc import Iterable, Iterator
 from typing import Any
 
-from benchkit.events import Answered, to_payload
+from benchkit.events import Answered, Noted, to_payload
 from benchkit.measure.readings import Reading
 from benchkit.procedure import suspect_words
 from benchkit.quantities import Overload, show
@@ -108,6 +108,13 @@ def verdict_words(summary: Summary) -> str:
 
 def _first_things(summary: Summary) -> Iterator[str]:
     yield from _wrapped(f"Supply at the end: {clean(summary.ending.words)}", "- ")
+    if summary.opened.supply == "manual":
+        yield "- The supply was set and switched by hand: what it showed is what the operator said, and nothing else."
+    for caution in summary.cautions:
+        yield from _wrapped(f"CAUTION: {clean(caution)}", "- ")
+    for note in summary.notes:
+        if note.broken:
+            yield from _wrapped(f"Burnt in the simulated unit: {clean('; '.join(note.broken))}", "- ")
     if summary.highest_v is not None:
         positive, negative = summary.highest_v
         yield from _wrapped(
@@ -292,8 +299,9 @@ def as_json(summary: Summary) -> dict[str, Any]:
             for incident in summary.incidents
         ],
         "suspicions": [_suspicion_json(suspicion) for suspicion in summary.suspicions],
+        "cautions": list(summary.cautions),
         "verdict_why": closed.why if closed is not None else "",
-        "notes": [{"text": note.text, "figures": dict(note.figures)} for note in summary.notes],
+        "notes": [_note_json(note) for note in summary.notes],
         "deference": DEFERENCE,
     }
 
@@ -325,6 +333,11 @@ def _result_json(result: Result) -> dict[str, Any]:
         "replaced": result.replaced,
         "overridden": result.overridden,
     }
+
+
+def _note_json(note: Noted) -> dict[str, Any]:
+    plain: dict[str, Any] = {"text": note.text, "figures": dict(note.figures)}
+    return plain if note.broken is None else plain | {"broken": list(note.broken)}
 
 
 def _suspicion_json(suspicion: Suspicion) -> dict[str, Any]:

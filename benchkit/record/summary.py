@@ -60,8 +60,11 @@ def summarise(record: Record) -> Summary:
         incidents=tuple(gathered.incidents),
         notes=tuple(gathered.notes),
         highest_v=gathered.highest,
-        ending=ending_of(gathered.ever_on, gathered.may_be_on, gathered.off),
+        ending=ending_of(
+            gathered.ever_on, gathered.may_be_on, gathered.off, by_hand=gathered.opened.supply == "manual"
+        ),
         closed=gathered.closed,
         suspicions=tuple(gathered.suspicions),
         narrowings=tuple(gathered.narrowings),
+        cautions=tuple(gathered.cautions),
     )

@@ -69,6 +69,7 @@ class RehearsalBench:
         meter_seed, supply_seed = noise.integers(0, 2**63, 2)
         self.meter = Meter(self.table, np.random.default_rng(int(meter_seed)))
         self.supply = Supply(self.table, np.random.default_rng(int(supply_seed)))
+        self.table.minder = self.supply
         self.follow = follow
         self._wall_s = time.monotonic()
 
@@ -86,7 +87,7 @@ class RehearsalBench:
         return {
             "sim_s": table.sim_s,
             "output_on": [channel.on for channel in table.channels],
-            "rails_v": [table.rails.volts[0], -table.rails.volts[1]],
+            "rails_v": [table.unfed_v()[0], -table.unfed_v()[1]],
             "highest_rail_v": [table.rails.highest_v[0], -table.rails.highest_v[1]],
             "energy_j": table.energy_j,
             "drops_v": {name: float(value[0]) for name, value in solved.points.items() if name.startswith("emitter.")},
@@ -97,6 +98,10 @@ class RehearsalBench:
             "temperatures_c": unit.warmth.temperatures_c(),
             "highest_heatsink_c": unit.warmth.highest_sink_c,
             "broken": list(unit.broken),
+            "burnt_parts": len(unit.burnt),
+            "burnt": [str(burnt) for burnt in unit.burnt],
+            "overloaded": dict(unit.strain.overloaded),
+            "words": burnt_words(unit),
             "plant": "" if unit.plant is None else str(unit.plant),
             "unsolved": unit.unsolved,
             "connected": table.connected,
@@ -117,6 +122,19 @@ class RehearsalBench:
         if handler is None:
             raise EntryError(f"The hands were told to do {name!r}", f"one of {', '.join(SIDE_REQUESTS)}")
         return handler(self, request)
+
+
+def burnt_words(unit: SimulatedUnit) -> str:
+    """Say what has happened to the simulated unit, for the end of a rehearsal."""
+    words = "The simulated unit at the end of the walk."
+    if unit.burnt:
+        words += f" Burnt on the way: {'; '.join(str(burnt) for burnt in unit.burnt)}."
+    else:
+        words += " No part of it was burnt."
+    over = [part for part in unit.strain.overloaded if part not in unit.broken]
+    if over:
+        words += f" Overloaded, but not burnt: {', '.join(sorted(over))}."
+    return words
 
 
 def _probe(bench: RehearsalBench, request: Mapping[str, Any]) -> None:

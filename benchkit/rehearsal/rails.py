@@ -7,8 +7,8 @@ delivers its limit while the rail is below its set voltage, exactly what the uni
 while the rail is above it: a supply of this kind can't sink.
 
 Time constants reach from microseconds (a short across 100 uF) to minutes (10 mF and a bleeder), so steps are chosen by
-voltage, not by time: a share of what is left to go, halved where the unit's current turns out to have changed too
-much on the way (Heun's rule against Euler's).
+voltage, not by time: a share of what is left to go, or all of it where the unit's balance says that the rail gets
+there, halved where the unit's current turns out to have changed too much on the way (Heun's rule against Euler's).
 
 The end of it is the unit's balance with supply and limit, the same solution that predictions use.  A rail that comes
 close to it waits there for the other one (a shorted rail is there in microseconds, the other one takes its time); when
@@ -31,6 +31,7 @@ _NEAR_SHARE = 0.001
 _STALLED_SHARE = 0.01
 _RISING_SHARE = 0.34
 _FALLING_SHARE = 0.2
+_LITTLE_SHARE = 0.3
 _LEAST_STEP_V = 0.02
 _TOLERANCE = 0.15
 _HALVINGS = 8
@@ -78,6 +79,7 @@ class Rails:
     _delivered: Pair = (0.0, 0.0)
     _rates: Pair | None = None
     _goal: Pair = (0.0, 0.0)
+    _goal_a: Pair = (0.0, 0.0)
     _steps: int = 0
     _struggles: int = 0
     _channels: tuple[Channel, Channel] = field(default=(Channel(), Channel()))
@@ -114,6 +116,7 @@ class Rails:
         """Find out where disturbed rails are heading; return whether they are settled there already."""
         if not self.settled and self._rates is None:
             self._goal = self._find_goal(load)
+            self._goal_a = load.drawn(self._goal)
             self._rates = self._find_rates(load.drawn(self.volts), self.volts)
             self._at_rest()
         return self.settled
@@ -128,11 +131,15 @@ class Rails:
         halvings = 0
         while True:
             there = self._moved(start, rates, seconds)
-            new_rates = self._find_rates(load.drawn(there), there)
-            wrong = [abs(new_rates[rail] - rates[rail]) * seconds / 2.0 for rail in (0, 1)]
+            drawn = load.drawn(there)
+            new_rates = self._find_rates(drawn, there)
+            # At its set voltage a rail stops; what counts for the way there is how fast it came in.
+            ended = [self._coming_in(rail, rates[rail], new_rates[rail], drawn[rail]) for rail in (0, 1)]
+            wrong = [abs(ended[rail] - rates[rail]) * seconds / 2.0 for rail in (0, 1)]
             allowed = [_TOLERANCE * max(abs(there[rail] - start[rail]), _LEAST_STEP_V) for rail in (0, 1)]
             arrived = [abs(there[rail] - self._target(rail)) < 1e-9 for rail in (0, 1)]
-            if halvings == _HALVINGS or all(arrived[rail] or wrong[rail] <= allowed[rail] for rail in (0, 1)):
+            easy = [arrived[rail] and rates[rail] <= 0.0 for rail in (0, 1)]
+            if halvings == _HALVINGS or all(easy[rail] or wrong[rail] <= allowed[rail] for rail in (0, 1)):
                 break
             halvings += 1
             seconds /= 2.0
@@ -180,6 +187,17 @@ class Rails:
         self._delivered = (delivered[0], delivered[1])
         return rates[0], rates[1]
 
+    def _coming_in(self, rail: int, rate: float, new_rate: float, drawn_a: float) -> float:
+        """The rate at a step's end, just below the set voltage where a rising rail has come to stop."""
+        if rate <= 0.0 or new_rate != 0.0:
+            return new_rate
+        return (self._channels[rail].limit_a - drawn_a) / self.capacitance_f
+
+    def _gets_there(self, rail: int) -> bool:
+        """Whether a rail reaches its set voltage, with a current to spare that makes its way a straight line."""
+        limit_a = self._channels[rail].limit_a
+        return abs(self._goal[rail] - self._target(rail)) <= _NEAR_V and self._goal_a[rail] <= _LITTLE_SHARE * limit_a
+
     def _time_s(self, rail: int, volts: float, rate: float) -> float:
         """How long the rail may move at `rate` before the unit has to be asked again."""
         if rate == 0.0:
@@ -187,7 +205,8 @@ class Rails:
         target = self._target(rail)
         gap = target - volts
         if rate > 0.0:
-            most_v = min(max(_RISING_SHARE * gap, 0.02 * target, _LEAST_STEP_V), max(gap, 1e-6))
+            share = 1.0 if self._gets_there(rail) else _RISING_SHARE
+            most_v = min(max(share * gap, 0.02 * target, _LEAST_STEP_V), max(gap, 1e-6))
         else:
             most_v = max(_FALLING_SHARE * volts, _LEAST_STEP_V)
         return most_v / abs(rate)

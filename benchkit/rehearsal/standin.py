@@ -10,6 +10,7 @@ screw the other way and measures again.  When a rail is still up, it waits.
 from __future__ import annotations
 
 import asyncio
+import itertools
 import math
 from collections import Counter
 from collections.abc import Callable
@@ -162,6 +163,10 @@ class StandIn:
         wanted = math.log(live.target / max(live.value, 1e-6))
         if abs(here) > 1.3 * self._turns or len(moves) > 200:
             return Reply(choice="end", text="The screw is at its end and the target is not reached.")
+        if wanted < 0.0 and _at_least_end(moves, live.value):
+            if live.low <= live.value <= live.high:
+                return Reply(choice="take")
+            return Reply(choice="end", text="The screw is at its least-bias end and the reading is still above.")
         step = math.copysign(0.25, wanted)
         if moves:
             turned, before = moves[-1]
@@ -174,3 +179,16 @@ class StandIn:
             step = math.copysign(0.004, step)
         moves.append((step, live.value))
         return Reply(choice="turn", turns=step)
+
+
+_SAME_SHARE = 0.03
+_SAME_MOVES = 3
+
+
+def _at_least_end(moves: list[tuple[float, float]], value: float) -> bool:
+    """Whether the screw has been turned for less bias again and again, and the reading hardly followed."""
+    last = moves[-_SAME_MOVES:]
+    if len(last) < _SAME_MOVES or any(turns >= 0.0 for turns, _ in last):
+        return False
+    readings = [before for _, before in last] + [value]
+    return all(abs(after - before) <= _SAME_SHARE * abs(before) for before, after in itertools.pairwise(readings))

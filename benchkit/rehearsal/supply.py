@@ -4,19 +4,26 @@ Channel 1 is the positive rail, channel 2 the negative one; both are programmed 
 is stiff up to its current limit and then a constant current (`benchkit.rehearsal.rails`); while the limit holds it,
 bit 0 of its questionable condition is set.  Every setting of one message takes effect together, because no simulated
 time passes inside a message.
+
+Each channel protects what hangs on it (`benchkit.rehearsal.protection`): the over-voltage level is compared with the
+voltage at the terminals, the over-current protection with the limit.  A channel that has tripped stays off until it is
+cleared; to switch it on before that is a conflict of settings, and nothing of that unit of the message happens.
 """
 
 from __future__ import annotations
 
+import math
 from collections.abc import Callable
 from dataclasses import dataclass
 from typing import Final, Protocol
 
 import numpy as np
 
-from benchkit.rehearsal.scpi import Arguments, Instrument, nr3
+from benchkit.rehearsal.protection import MOST_DELAY_S, Protection
+from benchkit.rehearsal.scpi import Arguments, Instrument, ScpiError, nr3
 
 MOST_VOLTS: Final = 100.0
+MOST_LEVEL_V: Final = 110.0
 MOST_AMPS: Final = 10.0
 
 SET_VOLTS: Final = (0.0005, 0.005)
@@ -92,6 +99,7 @@ class Supply(Instrument):
             gain, offset = rng.uniform(-0.8, 0.8, 2)
             return float(gain * half_widths[0]), float(offset * half_widths[1])
 
+        self._protections = {number: Protection(MOST_LEVEL_V) for number in (1, 2)}
         self._channels = {
             number: _Channel(
                 0.0, _RESET_LIMIT_A, False, drawn(SET_VOLTS), drawn(SET_AMPS), drawn(READ_VOLTS), drawn(READ_AMPS)
@@ -109,9 +117,20 @@ class Supply(Instrument):
         self.on("MEASure[:SCALar]:VOLTage[:DC]?", self._each(self._measure_volts))
         self.on("MEASure[:SCALar]:CURRent[:DC]?", self._each(self._measure_amps))
         self.on("STATus:QUEStionable:CONDition?", self._each(self._condition))
+        guard = self._protections
+        self.on("[SOURce]:VOLTage:PROTection[:LEVel]", self._set_level)
+        self.on("[SOURce]:VOLTage:PROTection[:LEVel]?", self._each(lambda _, number: nr3(guard[number].level_v)))
+        self.on("[SOURce]:VOLTage:PROTection:TRIPped?", self._tripped("over-voltage"))
+        self.on("[SOURce]:CURRent:PROTection:STATe", self._set_current_protection)
+        self.on("[SOURce]:CURRent:PROTection:STATe?", self._each(lambda _, number: str(int(guard[number].current_on))))
+        self.on("[SOURce]:CURRent:PROTection:DELay", self._set_delay)
+        self.on("[SOURce]:CURRent:PROTection:DELay?", self._each(lambda _, number: nr3(guard[number].delay_s)))
+        self.on("[SOURce]:CURRent:PROTection:TRIPped?", self._tripped("over-current"))
+        self.on("OUTPut:PROTection:CLEar", self._clear_protection)
 
     def reset(self) -> None:
-        """Go to output off, 0 V, 0.1 A on both channels."""
+        """Go to output off, 0 V, 0.1 A on both channels, nothing tripped and no protection below its most."""
+        self._protections.update({number: Protection(MOST_LEVEL_V) for number in self._protections})
         for number, channel in self._channels.items():
             channel.volts, channel.limit_a, channel.on = 0.0, _RESET_LIMIT_A, False
             self._apply(number)
@@ -121,6 +140,53 @@ class Supply(Instrument):
         volts = channel.volts * (1.0 + channel.set_volts[0]) + channel.set_volts[1] if channel.volts > 0.0 else 0.0
         limit_a = channel.limit_a * (1.0 + channel.set_amps[0]) + channel.set_amps[1] if channel.limit_a > 0.0 else 0.0
         self._powered.program(number, max(volts, 0.0), max(limit_a, 0.0), channel.on)
+        self._look(number, 0.0)
+
+    def patience_s(self) -> float:
+        """Return how long (s) the outputs may go unseen before a protection acts."""
+        waits = [self._protections[number].patience_s() for number, channel in self._channels.items() if channel.on]
+        return min(waits, default=math.inf)
+
+    def mind(self, seconds: float) -> None:
+        """Let the protections look at the terminals after some time."""
+        for number in self._channels:
+            self._look(number, seconds)
+
+    def _look(self, number: int, seconds: float) -> None:
+        channel, protection = self._channels[number], self._protections[number]
+        if not channel.on:
+            protection.held_s = 0.0
+            return
+        if protection.level_v >= MOST_LEVEL_V and not protection.current_on:
+            return  # nothing that the supply can deliver reaches it
+        now = self._powered.terminals(number)
+        if protection.look(now.volts, now.in_limit, seconds):
+            channel.on = False
+            self._apply(number)
+
+    def _set_level(self, arguments: Arguments) -> None:
+        level_v = arguments.number("V", 0.0, MOST_LEVEL_V)
+        for number in _only_channels(arguments):
+            self._protections[number].level_v = round(level_v / VOLT_STEP) * VOLT_STEP
+            self._look(number, 0.0)
+
+    def _set_current_protection(self, arguments: Arguments) -> None:
+        on = arguments.boolean()
+        for number in _only_channels(arguments):
+            self._protections[number].current_on = on
+            self._protections[number].held_s = 0.0
+
+    def _set_delay(self, arguments: Arguments) -> None:
+        delay_s = arguments.number("S", 0.0, MOST_DELAY_S)
+        for number in _only_channels(arguments):
+            self._protections[number].delay_s = delay_s
+
+    def _tripped(self, what: str) -> Callable[[Arguments], str]:
+        return self._each(lambda _, number: str(int(self._protections[number].tripped == what)))
+
+    def _clear_protection(self, arguments: Arguments) -> None:
+        for number in _only_channels(arguments):
+            self._protections[number].clear()
 
     def _set_volts(self, arguments: Arguments) -> None:
         volts = arguments.number("V", 0.0, MOST_VOLTS)
@@ -136,7 +202,10 @@ class Supply(Instrument):
 
     def _switch(self, arguments: Arguments) -> None:
         on = arguments.boolean()
-        for number in _only_channels(arguments):
+        numbers = _only_channels(arguments)
+        if on and any(self._protections[number].tripped for number in numbers):
+            raise ScpiError(-221)
+        for number in numbers:
             self._channels[number].on = on
             self._apply(number)
 

@@ -11,8 +11,15 @@ the asker can tolerate; a new one starts from the last.
 
 What breaks
 -----------
-A junction hotter than its rating by `JUNCTION_MARGIN_K` fuses collector to emitter; an emitter resistor that has
-averaged `RESISTOR_MARGIN` times its rated power over `RESISTOR_LAG_S` opens.  What broke stays broken.
+`benchkit.rehearsal.strain` says what gives way: a junction becomes a collector-emitter short, a resistor opens, the
+trimmer's track opens under its wiper.  What broke stays broken, and operating points are those of what is left.
+
+How the servo wakes up
+----------------------
+Where the design says ``settles_after``, the output comes to its rest as d.c. feedback does: off by `WAKING_SHARE` of
+the rails when these reach ``works_from``, and by a thousandth of that when ``settles_after`` has passed.  The
+spreader's bypass is left out: the feed charges it within milliseconds (10 uF at 8 mA to 2.2 V: 2.8 ms), less than
+anything here shows.
 """
 
 from __future__ import annotations
@@ -25,24 +32,27 @@ from typing import Final
 import numpy as np
 
 from benchkit.rehearsal.rails import Pair
+from benchkit.rehearsal.ratings import TRIMMER, resistor_powers_w
+from benchkit.rehearsal.strain import Burnt, Strain
 from benchkit.rehearsal.warmth import Warmth
 from benchkit.stage.conditions import Condition, Unpowered
-from benchkit.stage.design import Design, Rating
+from benchkit.stage.design import Design
 from benchkit.stage.draws import Parameters, draw, seeds
-from benchkit.stage.faults import OPEN_FACTOR, SHORT_OHM, Fault
+from benchkit.stage.faults import OPEN_FACTOR, OPEN_OHM, SHORT_OHM, Fault
 from benchkit.stage.operate import Loading, Solved, solve_units
-from benchkit.stage.points import transistors_of
 from benchkit.stage.unpowered import DIODE_RANGE, OHMS_RANGES, MeterRange, solve_unpowered
 
-JUNCTION_MARGIN_K: Final = 25.0
-JUNCTION_C: Final = 150.0
-RESISTOR_MARGIN: Final = 4.0
-RESISTOR_LAG_S: Final = 4.0
 FINE_K: Final = 0.001
-COARSE_K: Final = 0.02
+COARSE_K: Final = 0.05
 HEATING_K: Final = 0.05
+WAKING_SHARE: Final = 0.02
+WAKING_MOST_V: Final = 0.5
+SETTLED_SHARE: Final = 1e-3
 
+_ASLEEP_V = 1.0
+_WAKING_STEP_V = 2e-4
 _NO_LIMIT: Final = 0.0
+_NOTHING_LEFT = ("short", "open", "collector-emitter short", "missing", "wiper open")
 
 
 @dataclass(frozen=True)
@@ -51,6 +61,7 @@ class _Key:
     limit_a: float
     travel: float
     breakages: int
+    waking_v: float
 
 
 class SimulatedUnit:
@@ -72,14 +83,21 @@ class SimulatedUnit:
         self.parameters: Parameters = draw(design, 1, rng)
         self.travel = float(rng.uniform(0.1, 0.9)) if design.spreader.trimmer is not None else 0.0
         self.warmth = Warmth(design)
-        self.broken: tuple[str, ...] = ()
+        self.strain = Strain(design, _spared(plant))
+        self.burnt: tuple[Burnt, ...] = ()
+        self.lived_s = 0.0
         self.unsolved = 0
         self.highest_quiescent_a = 0.0
-        self._parts = transistors_of(design)
+        self._fault = plant
+        self._awake_s: float | None = None
         self._last: dict[_Key, tuple[Solved, dict[str, float]]] = {}
         self._newest: Solved | None = None
         self._unpowered: dict[tuple[object, ...], float] = {}
-        self._resistor_w = dict.fromkeys(self._emitters(), 0.0)
+
+    @property
+    def broken(self) -> tuple[str, ...]:
+        """Names of the parts that have given way, in order."""
+        return tuple(burnt.part for burnt in self.burnt)
 
     def turn(self, turns: float) -> float:
         """Turn the screw, positive for more bias, up to its ends; return the travel from the least-bias end."""
@@ -128,7 +146,18 @@ class SimulatedUnit:
         return self._newest
 
     def _key(self, volts: Pair, limit_a: float | None) -> _Key:
-        return _Key(volts, _NO_LIMIT if limit_a is None else limit_a, self.travel, len(self.broken))
+        limit = _NO_LIMIT if limit_a is None else limit_a
+        return _Key(volts, limit, self._electrical_travel(), len(self.burnt), self._waking_v())
+
+    def _electrical_travel(self) -> float:
+        """Where the wiper counts as being: far beyond its end when it is open, so that its arm is open too."""
+        trimmer = self.design.spreader.trimmer
+        if trimmer is None or trimmer.arm == "between" or TRIMMER not in self.broken:
+            return self.travel
+        most_ohm = 1.0 if trimmer.arm == "upper" else 0.0
+        if trimmer.wiring == "tied":
+            return most_ohm
+        return OPEN_FACTOR if trimmer.arm == "upper" else -OPEN_FACTOR
 
     def _solve(
         self, key: _Key, temperatures: dict[str, float], start: Solved | None, loading: Loading = "none"
@@ -138,13 +167,15 @@ class SimulatedUnit:
             positive_v=positive_v,
             negative_v=-negative_v,
             limit_a=None if key.limit_a == _NO_LIMIT else key.limit_a,
-            trimmer=key.travel,
         )
+        parameters = self.parameters
+        if key.waking_v:
+            parameters = parameters | {"output.offset": parameters["output.offset"] + key.waking_v}
         return solve_units(
             self.design,
-            self.parameters,
+            parameters,
             condition,
-            self.plant,
+            self._fault,
             temperatures_c=temperatures,
             position=key.travel,
             start=start,
@@ -173,44 +204,70 @@ class SimulatedUnit:
 
     def heat(self, solved: Solved, seconds: float) -> None:
         """Let the operating point heat the unit for some time, and break what can't stand it."""
+        self.lived_s += seconds
+        self._wake(solved)
+        if not bool(solved.converged[0]):
+            return  # nobody knows its powers
         self.highest_quiescent_a = max(self.highest_quiescent_a, self.quiescent_a(solved))
-        self.warmth.step(powers_w(solved), seconds)
-        self._strain_junctions()
-        self._strain_resistors(solved, seconds)
+        powers = powers_w(solved)
+        self.warmth.step(powers, seconds)
+        resistors_w = resistor_powers_w(self.design, solved)
+        for burnt in self.strain.step(self.warmth.temperatures_c(), powers, resistors_w, seconds, self.lived_s):
+            self._break(burnt)
 
     def heat_off(self, seconds: float) -> None:
         """Let the unit cool for some time without any power."""
+        self.lived_s += seconds
+        self._awake_s = None
         self.warmth.cool(seconds)
+        nothing = dict.fromkeys(self.warmth.parts, 0.0)
+        self.strain.step(self.warmth.temperatures_c(), nothing, {}, seconds, self.lived_s)
 
     def longest_step_s(self, solved: Solved) -> float:
-        """Return how long the operating point may stand for while the temperatures move."""
-        return self.warmth.longest_step_s(powers_w(solved))
+        """Return how long the operating point may stand for while the temperatures move and the servo wakes up."""
+        longest_s = self.warmth.longest_step_s(powers_w(solved))
+        if self._waking_v() and self._awake_s is not None:
+            longest_s = min(longest_s, 0.1 * (self.design.feed.settles_after_s or 0.0))
+        return self.stands_s(solved, longest_s)
 
-    def _strain_junctions(self) -> None:
+    def stands_s(self, solved: Solved, most_s: float) -> float:
+        """Return how long (s) every part stands the operating point, at most `most_s`."""
+        if not bool(solved.converged[0]):
+            return most_s
         temperatures = self.warmth.temperatures_c()
-        for part in self._parts:
-            rating = self._rating(part.name, part.role)
-            most_c = JUNCTION_C if rating is None or rating.junction_c is None else rating.junction_c
-            if temperatures[part.name] > most_c + JUNCTION_MARGIN_K and part.name not in self.broken:
-                self.parameters[f"{part.name}.ce"] = np.asarray(SHORT_OHM)
-                self.broken += (part.name,)
+        return self.strain.stands_s(temperatures, powers_w(solved), resistor_powers_w(self.design, solved), most_s)
 
-    def _strain_resistors(self, solved: Solved, seconds: float) -> None:
-        for name, before_w in self._resistor_w.items():
-            rating = self._rating(name, "emitter")
-            if rating is None or rating.power_w is None or name in self.broken:
-                continue
-            power_w = abs(_first(solved, name) * float(solved.solution.current(name)[0]))
-            average_w = before_w + (power_w - before_w) * -math.expm1(-seconds / RESISTOR_LAG_S)
-            self._resistor_w[name] = average_w
-            if average_w > RESISTOR_MARGIN * rating.power_w:
-                self.parameters[name] = self.parameters[name] * OPEN_FACTOR
-                self.broken += (name,)
+    def _break(self, burnt: Burnt) -> None:
+        part = burnt.part
+        if burnt.fault == "collector-emitter short":
+            if self._fault == Fault(part, "leaky"):
+                self._fault = None  # a short leaks no more
+            self.parameters[f"{part}.ce"] = np.asarray(SHORT_OHM)
+        elif burnt.fault == "open":
+            self.parameters[part] = self.parameters[part] * OPEN_FACTOR
+        elif self.design.spreader.trimmer is not None and self.design.spreader.trimmer.arm == "between":
+            self.parameters[f"{part}.wiper"] = np.asarray(OPEN_OHM)
+        self.burnt += (burnt,)
 
-    def _rating(self, name: str, role: str) -> Rating | None:
-        ratings = self.design.ratings
-        side = ".".join(name.split(".")[:2])
-        return ratings.get(name) or ratings.get(side) or ratings.get(role)
+    def _wake(self, solved: Solved) -> None:
+        """Note when the rails reach the voltage from which the servo regulates."""
+        lowest_v = _first(solved, "rail+")
+        if "rail-" in solved.points:
+            lowest_v = min(lowest_v, -_first(solved, "rail-"))
+        if lowest_v < (self.design.feed.works_from_v or _ASLEEP_V):
+            self._awake_s = None
+        elif self._awake_s is None:
+            self._awake_s = self.lived_s
+
+    def _waking_v(self) -> float:
+        """How far the servo still holds the output from its rest (V)."""
+        settles_s = self.design.feed.settles_after_s
+        if not settles_s or self._awake_s is None:
+            return 0.0
+        rails = self.design.rails
+        whole_v = min(WAKING_SHARE * (rails.positive_v - rails.negative_v), WAKING_MOST_V)
+        left_v = whole_v * SETTLED_SHARE ** ((self.lived_s - self._awake_s) / settles_s)
+        return float(_WAKING_STEP_V * round(left_v / _WAKING_STEP_V))
 
     def _emitters(self) -> tuple[str, ...]:
         pairs = range(1, self.design.output.pairs + 1)
@@ -230,7 +287,7 @@ class SimulatedUnit:
         float
             Infinite for an overload.
         """
-        key = point, full_scale, self.travel, len(self.broken), round(self.warmth.temperatures_c()["heatsink"], 1)
+        key = point, full_scale, self.travel, len(self.burnt), round(self.warmth.temperatures_c()["heatsink"], 1)
         if key not in self._unpowered:
             self._unpowered[key] = self._read_unpowered(point, full_scale)
         return self._unpowered[key]
@@ -247,7 +304,12 @@ class SimulatedUnit:
             ranges = ([row for row in OHMS_RANGES if row.full_scale >= full_scale] or list(OHMS_RANGES[-1:]))[:1]
         for test in ranges:
             read = solve_unpowered(
-                self.design, self.parameters, condition, self.plant, position=self.travel, on_range=test
+                self.design,
+                self.parameters,
+                condition,
+                self._fault,
+                position=self._electrical_travel(),
+                on_range=test,
             )
             value = float(read.values[0])
             if bool(read.converged[0]) and math.isfinite(value):
@@ -268,3 +330,8 @@ def powers_w(solved: Solved) -> dict[str, float]:
 def _first(solved: Solved, point: str) -> float:
     """The unit's reading; 0 for a point of the rail that a single-supply stage hasn't."""
     return float(solved.points[point][0]) if point in solved.points else 0.0
+
+
+def _spared(plant: Fault | None) -> frozenset[str]:
+    """A part that a planted fault leaves nothing of that could be overloaded."""
+    return frozenset({plant.part}) if plant is not None and plant.fault in _NOTHING_LEFT else frozenset()

@@ -29,6 +29,11 @@ class Warmth:
         self._x = np.zeros(len(self._nodes.names))
         self.highest_sink_c = self._ambient_c
 
+    @property
+    def parts(self) -> tuple[str, ...]:
+        """Names of what can be heated."""
+        return self._nodes.parts
+
     def temperatures_c(self) -> dict[str, float]:
         """Return the junctions (degC) by part name, and ``heatsink``."""
         celsius = np.minimum(self._ambient_c + self._nodes.shows @ self._x, HOTTEST_C)

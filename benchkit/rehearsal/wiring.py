@@ -10,6 +10,8 @@ What the meter finds
   voltage divided by the test current: a number, and a wrong one.
 * Across rail capacitors ohms counts up, from the moment when the clips went on.
 * Clips in the air read hum and noise on volts, and overload on ohms.
+* Reservoirs that have been discharged come back a little (`benchkit.rehearsal.absorption`): a rail that was seen low is
+  looked at twice.
 * The meter's 10 Mohm loads the circuit: the ratio of loaded to bare voltage is found where the clips are, and found
   again when the operating point there has changed by more than `RATIO_HOLDS`.
 """
@@ -17,9 +19,10 @@ What the meter finds
 from __future__ import annotations
 
 import math
-from typing import Final
+from typing import Final, Protocol
 
 from benchkit.errors import EntryError
+from benchkit.rehearsal.absorption import Absorption
 from benchkit.rehearsal.meter import Sensed
 from benchkit.rehearsal.rails import STRAY_F, Channel, Pair, Rails
 from benchkit.rehearsal.supply import Terminals
@@ -38,6 +41,21 @@ LIVE_V: Final = 0.05
 _METER_TIME_S = 0.3
 _KNEES_IN_LIMIT = 3.0 * 0.010
 _NO_RAILS: Final = (Channel(), Channel())
+_LEAST_STEP_S = 1e-4
+_FALLEN_V = 0.3
+_FALLEN_SHARE = 0.05
+
+
+class Minder(Protocol):
+    """What watches the leads while time passes: the supply's own protection."""
+
+    def patience_s(self) -> float:
+        """Return how long (s) things may stay as they are before the minder acts."""
+        ...
+
+    def mind(self, seconds: float) -> None:
+        """Look at the leads after some time, and act."""
+        ...
 
 
 class Table:
@@ -52,7 +70,12 @@ class Table:
         self.unit = unit
         rails = unit.design.rails
         self._capacitance_f = (rails.reservoir_f or 0.0) + (rails.local_capacitors_f or 0.0)
+        bleed_ohm = math.inf if rails.bleed is None else rails.bleed.value
+        self._absorbed = tuple(
+            Absorption(rails.reservoir_f or 0.0, rails.local_capacitors_f or 0.0, bleed_ohm) for _ in (0, 1)
+        )
         self.rails = Rails(max(self._capacitance_f, STRAY_F))
+        self.minder: Minder | None = None
         self.sim_s = 0.0
         self.energy_j = 0.0
         self.connected = False
@@ -126,7 +149,7 @@ class Table:
             below = self.rails.volts[rail] < setting.volts - _KNEES_IN_LIMIT * setting.limit_a
             return Terminals(self.rails.volts[rail], amps, below and amps >= setting.limit_a > 0.0)
         if not setting.on:
-            return Terminals(self.rails.volts[rail], 0.0, False)
+            return Terminals(self._unfed_v(rail), 0.0, False)
         volts, amps = self._settled_rail(self.now(COARSE_K), rail)
         return Terminals(volts, amps, volts < setting.volts - _KNEES_IN_LIMIT * setting.limit_a)
 
@@ -167,28 +190,52 @@ class Table:
         left_s = seconds
         self.rails.go_on()
         while left_s > 1e-12:
+            most_s = left_s if self.minder is None else min(left_s, max(self.minder.patience_s(), _LEAST_STEP_S))
             if self._asleep():
-                self.unit.heat_off(left_s)
-                step_s = left_s
+                self.unit.heat_off(most_s)
+                for absorbed in self._absorbed:
+                    absorbed.rest(most_s)
+                step_s = most_s
             elif self._settled():
-                step_s = self._settled_step(left_s)
+                step_s = self._settled_step(most_s)
             else:
-                step_s = self.rails.step(self.unit, left_s)
-                if step_s > 0.0:
-                    self._account(step_s, self.rails.volts, self.rails.delivered)
-                    # Found at the step's end or close to it: good enough for heat.
-                    self._heat(self.unit.latest or self.now(HEATING_K), step_s)
+                step_s = self._moving_step(most_s)
             left_s -= step_s
             self.sim_s += step_s
+            if self.minder is not None:
+                self.minder.mind(step_s)
 
     def _settled_step(self, left_s: float) -> float:
         solved = self.now(HEATING_K)
-        step_s = min(left_s, self.unit.longest_step_s(solved))
         volts_0, amps_0 = self._settled_rail(solved, 0)
         volts_1, amps_1 = self._settled_rail(solved, 1)
+        if self._fell((volts_0, volts_1)):
+            self._disturb()  # it has come to draw more than the limit: what the capacitors hold goes in first
+            return 0.0
+        step_s = min(left_s, self.unit.longest_step_s(solved))
         self.rails.follow((volts_0, volts_1))
         self._account(step_s, (volts_0, volts_1), (amps_0, amps_1))
         self._heat(solved, step_s)
+        return step_s
+
+    def _fell(self, volts: Pair) -> bool:
+        """Whether settled rails are about to fall further than they may without their charge being counted."""
+        before = self.rails.volts
+        return any(
+            before[rail] - volts[rail] > max(_FALLEN_V, _FALLEN_SHARE * before[rail]) and self._channels[rail].on
+            for rail in (0, 1)
+        )
+
+    def _moving_step(self, left_s: float) -> float:
+        latest = self.unit.latest
+        most_s = left_s if latest is None else self.unit.stands_s(latest, left_s)
+        step_s = self.rails.step(self.unit, most_s)
+        if step_s > 0.0:
+            self._account(step_s, self.rails.volts, self.rails.delivered)
+            # Known at the step's beginning and at its end: what a fast discharge puts in lies between the two.
+            after = self.unit.latest or self.now(HEATING_K)
+            self._heat(latest or after, 0.5 * step_s)
+            self._heat(after, 0.5 * step_s)
         return step_s
 
     def _heat(self, solved: Solved, seconds: float) -> None:
@@ -201,12 +248,22 @@ class Table:
         return self.rails.settled or self.rails.begin(self.unit)
 
     def _account(self, seconds: float, volts: Pair, amps: Pair) -> None:
+        for absorbed, rail_v in zip(self._absorbed, volts, strict=True):
+            absorbed.follow(rail_v, seconds)
         if self.connected and not self.shorted:
             self.energy_j += seconds * sum(volts[rail] * amps[rail] for rail in (0, 1) if self._channels[rail].on)
 
     def _asleep(self) -> bool:
         """Whether nothing powers the unit and its rails are empty."""
         return self.rails.settled and max(self.rails.volts) <= 0.0 and not self._powered()
+
+    def _unfed_v(self, rail: int) -> float:
+        """The magnitude at a rail that nothing feeds: of its capacitors, and of what they give back (V)."""
+        return max(self.rails.volts[rail], self._absorbed[rail].back_v)
+
+    def unfed_v(self) -> Pair:
+        """Return the magnitudes at both rails' capacitors (V)."""
+        return self._unfed_v(0), self._unfed_v(1)
 
     def _powered(self) -> bool:
         on = any(channel.on and channel.volts > 0.0 and channel.limit_a > 0.0 for channel in self._channels)
@@ -256,6 +313,8 @@ class Table:
     def _nodes(self, point: Point) -> tuple[str, str] | None:
         if point.name.endswith(".drop") and point.name.startswith("rail"):
             return None  # nothing stands in the fuses' place on this bench
+        if point.name == "rails":
+            return "rail+", "rail-"
         return build(self.unit.design).between.get(point.name.removesuffix(".ac"))
 
     def _sense_current(self, point: Point, function: str) -> Sensed:
@@ -265,13 +324,22 @@ class Table:
         return Sensed(self.terminals(1 if point.name.startswith("rail+") else 2).amps)
 
     def _volts(self, point: Point, nodes: tuple[str, str]) -> float:
+        bare_v = self._bare_v(nodes)
+        if self._asleep() or point.name not in self.now().points:
+            return bare_v
+        return bare_v * self._loading(point.name, bare_v)
+
+    def _bare_v(self, nodes: tuple[str, str]) -> float:
+        """The voltage between two nodes without a meter there."""
         if self._asleep():
-            return 0.0
-        solved = self.now()
-        bare_v = float(solved.solution.between(*nodes)[0])
-        if point.name in solved.points:
-            return bare_v * self._loading(point.name, bare_v)
-        return bare_v
+            return self._left_v(nodes[0]) - self._left_v(nodes[1])
+        return float(self.now().solution.between(*nodes)[0])
+
+    def _left_v(self, node: str) -> float:
+        """What a node of a unit without power stands at: a rail at what its reservoir gave back, all else at 0 V."""
+        if node == "rail+":
+            return self._absorbed[0].back_v
+        return -self._absorbed[1].back_v if node == "rail-" else 0.0
 
     def _loading(self, name: str, bare_v: float) -> float:
         kept = self._ratio
@@ -293,8 +361,8 @@ class Table:
             capacitance_f = self._capacitance_f * (0.5 if name == "ohm.rails" else 1.0)
             if capacitance_f > 0.0:
                 value *= -math.expm1(-(self.since_probe_s + _METER_TIME_S) / (value * capacitance_f))
-        if max(self.rails.volts) > LIVE_V or self._powered():
-            volts = float(self.now().solution.between(*nodes)[0])
+        if max(self.unfed_v()) > LIVE_V or self._powered():
+            volts = self._bare_v(nodes)
             value += volts if diode else volts / 0.001
             if diode and abs(value) > 1.2:
                 return math.copysign(math.inf, value)

@@ -143,6 +143,7 @@ class View:
     `remaining_s` where it can be counted down. `kept` is how many lines of the record are on the disk. `narrowing`
     says that limits of this unit are being worked out, for which nobody has to wait. `aim` and `suspects` are None
     where there is nothing to say. `why` says what kept the verdict from being better.
+    `broken` names, at the end of a rehearsal, the parts of the simulated unit that have failed, or says that none has.
     """
 
     kind: Literal["walk", "rehearsal"]
@@ -174,6 +175,7 @@ class View:
     aim: AimView | None = None
     suspects: SuspectsView | None = None
     why: str = ""
+    broken: str = ""
 
 
 @dataclass(frozen=True, kw_only=True)

@@ -5,6 +5,8 @@ from __future__ import annotations
 from collections.abc import Callable
 from typing import Any, Protocol
 
+from benchkit.events import Noted
+from benchkit.session.job import figures_of
 from benchkit.session.threads import in_thread
 
 
@@ -92,3 +94,13 @@ class Hands:
 
     async def _do(self, call: Callable[[], Any]) -> Any:
         return await in_thread(call, "benchkit-hands")
+
+
+def end_note(truth: dict[str, Any]) -> Noted:
+    """Put what really became of a rehearsal's unit into a note: words, figures, parts that have failed."""
+    burnt = truth.get("burnt")
+    return Noted(
+        text=str(truth.get("words") or "The simulated unit at the end of the walk."),
+        figures=figures_of(truth),
+        broken=None if burnt is None else tuple(str(part) for part in burnt),
+    )

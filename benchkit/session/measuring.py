@@ -19,6 +19,7 @@ from benchkit.procedure.questions import END, STOP
 from benchkit.quantities import Overload
 from benchkit.session.front import LiveView
 from benchkit.session.job import Stopped
+from benchkit.session.patience import patiently
 
 if TYPE_CHECKING:
     from benchkit.session.run import Session
@@ -40,7 +41,8 @@ async def read(session: Session, action: Read) -> Event:
             reading = await _by_hand(session, action.point, action.function, action.unit)
         else:
             await _settle(session, action)
-            reading = await _by_meter(session, action.point, action.function, action.unit, action.samples)
+            taking = by_meter(session, action.point, action.function, action.unit, action.samples)
+            reading = await patiently(session, action, taking)
     except (InstrumentError, EntryError) as error:
         return ReadingMissed(item=action.item, point=action.point, problem=str(error))
     await session.sample()
@@ -59,7 +61,13 @@ async def _settle(session: Session, action: Read) -> None:
         left_s -= slice_s
 
 
-async def _by_meter(session: Session, point: str, function: str, unit: str, samples: int) -> Reading:
+async def by_meter(session: Session, point: str, function: str, unit: str, samples: int) -> Reading:
+    """Take one reading from the meter.
+
+    Raises
+    ------
+    InstrumentError, EntryError
+    """
     raw = await asyncio.wrap_future(session.keeper.read(function, samples=samples))
     if raw.overload:
         return _overload(point, function, unit, raw.meter, negative=raw.negative)
@@ -107,12 +115,19 @@ async def _by_hand(session: Session, point: str, function: str, unit: str) -> Re
         black="" if item.point is None else item.point.black,
         choices=(Choice(value="done", label="Take it"), STOP),
     )
-    _, reading = await session.ask_entry(question, lambda text: _typed(text, point, function, unit, accuracy))
+    _, reading = await session.ask_entry(question, lambda text: typed_reading(text, point, function, unit, accuracy))
     assert isinstance(reading, Reading)
     return reading
 
 
-def _typed(text: str, point: str, function: str, unit: str, accuracy: Accuracy) -> Reading:
+def typed_reading(text: str, point: str, function: str, unit: str, accuracy: Accuracy) -> Reading:
+    """Make a reading of what somebody typed.
+
+    Raises
+    ------
+    EntryError
+        When it is no quantity, or came without its unit.
+    """
     if re.fullmatch(r"[-+]?[\d.,]+(e[-+]?\d+)?", text.strip(), re.IGNORECASE):
         raise EntryError(f"{text.strip()} came without a unit", f"the unit too, such as {_example(unit)}")
     value = quantities.parse_reading(text, unit)
@@ -146,7 +161,7 @@ async def trim(session: Session, action: Trim) -> Event:
     try:
         while True:
             try:
-                reading = await _by_meter(session, action.point, action.function, action.unit, 1)
+                reading = await by_meter(session, action.point, action.function, action.unit, 1)
             except (InstrumentError, EntryError) as error:
                 return ReadingMissed(item=action.item, point=action.point, problem=str(error))
             _live(session, action, reading, trend)
@@ -162,7 +177,7 @@ async def trim(session: Session, action: Trim) -> Event:
             asking, refused = None, ""
             match reply.choice:
                 case "take":
-                    final = await _by_meter(session, action.point, action.function, action.unit, samples)
+                    final = await by_meter(session, action.point, action.function, action.unit, samples)
                     return ReadingTaken(item=action.item, reading=final)
                 case "end":
                     return TrimEnded(item=action.item, problem=reply.text.strip() or "The screw is at its end.")
@@ -210,7 +225,7 @@ async def _trim_by_hand(session: Session, action: Trim) -> Event:
     accuracy = session.job.accuracy
 
     def parse(text: str) -> Reading:
-        return _typed(text, action.point, action.function, action.unit, accuracy)
+        return typed_reading(text, action.point, action.function, action.unit, accuracy)
 
     while True:
         reply, reading = await session.ask_entry(question, parse)

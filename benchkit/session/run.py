@@ -30,33 +30,22 @@ from benchkit.events import (
     OutputOff,
     StopAsked,
     SupplyState,
-    Waited,
 )
 from benchkit.keeper.client import KeeperClient
 from benchkit.keeper.protocol import KeeperDied, Push
 from benchkit.procedure.actions import (
     Action,
-    Ask,
-    CheckWarm,
-    Connect,
-    Evaluate,
-    Predict,
     Question,
-    Read,
-    SetSupply,
-    SwitchOff,
-    Trim,
-    Wait,
     Write,
 )
+from benchkit.procedure.securing import MAKING_SURE
 from benchkit.procedure.state import Phase, State
-from benchkit.session import asking, ending, measuring, powering, predictions
+from benchkit.session import acting, asking, ending, powering
 from benchkit.session.aside import Aside
 from benchkit.session.clock import Clock
 from benchkit.session.front import Front, Reply
-from benchkit.session.hands import Hands
-from benchkit.session.job import Job, Stopped, figures_of
-from benchkit.session.threads import in_thread
+from benchkit.session.hands import Hands, end_note
+from benchkit.session.job import Job, Stopped
 from benchkit.session.views import Headings, Moment, Painter
 
 HEARTBEAT_S = 0.2
@@ -77,10 +66,11 @@ class Session:
         self.state = State()
         self.moment = Moment()
         self.seq = 0
-        self.pushed: deque[Push | KeeperDied | _Asked] = deque()
+        self.pushed: deque[Push | KeeperDied | _Asked | Noted] = deque()
         self._woken = asyncio.Event()
         self._loop = asyncio.get_running_loop()
         self._truth_noted = False
+        self._death_told = False
         self._off_asked = False
         self._moved_on = False
         self.watch_since = 0.0
@@ -104,8 +94,18 @@ class Session:
         with contextlib.suppress(RuntimeError):
             self._loop.call_soon_threadsafe(self._take_push, push)
 
+    def note(self, noted: Noted) -> None:
+        """Keep and show something that changes nothing; any thread may call."""
+        with contextlib.suppress(RuntimeError):
+            self._loop.call_soon_threadsafe(self._take_push, noted)
+
     def off_now(self, reason: str = "the operator asked for it") -> None:
-        """Switch off at once, whatever is being done; any thread may call, and it returns at once."""
+        """Switch off at once, whatever is being done; any thread may call, and it returns at once.
+
+        A supply that is known to be off is only made sure of, and the walk keeps its place.
+        """
+        if self.state.energised == "off" and self.state.phase != "setting":
+            reason = f"{MAKING_SURE}: {reason}"
         if not self.job.manual_supply:
             self.keeper.off(reason)
         if not self._off_asked:
@@ -133,10 +133,13 @@ class Session:
         pulse = asyncio.create_task(self._pulse())
         try:
             self.keeper.arm()
+            powering.stay_awake(self)
             return await self._run(first)
         except BaseException as error:
             if not self.job.manual_supply:
                 await ending.secure(self, f"an error of the session: {type(error).__name__}")
+            if isinstance(error, InstrumentError) and not self.keeper.alive and not self._death_told:
+                raise await ending.keeper_died(self, self._death(error)) from None
             raise
         finally:
             pulse.cancel()
@@ -205,6 +208,7 @@ class Session:
 
     async def _keep(self, event: Event) -> tuple[Action, ...]:
         """Have an event written and handle it; () when the chain had moved on."""
+        self._moved_on = False
         try:
             after, actions = self.job.walk.handle(self.state, event, self.clock.now())
         except IllegalEvent as error:
@@ -254,15 +258,20 @@ class Session:
         while self.pushed:
             push = self.pushed.popleft()
             if isinstance(push, KeeperDied):
+                self._death_told = True
                 raise await ending.keeper_died(self, push)
-            if isinstance(push, _Asked):
+            if isinstance(push, (_Asked, Noted)):
                 if self.state.phase in ("unopened", "closed"):
                     continue
-                got = await self._keep(StopAsked(reason=push.reason))
-                if not got and self.state.stopped == "":
-                    self.pushed.append(push)  # the chain had moved on: what moved it comes first
+                got = await self._keep(push if isinstance(push, Noted) else StopAsked(reason=push.reason))
+                if self._moved_on:
+                    self.pushed.append(push)  # what moved the chain on comes first
                     await asyncio.sleep(0.01)
                     continue
+                if isinstance(push, Noted):
+                    self.moment.message = push.text
+                elif not self.state.stopped:
+                    self._off_asked = False  # the walk kept its place, because the supply was off anyway
                 fresh = got or fresh
                 continue
             if push.seq is None:
@@ -279,7 +288,12 @@ class Session:
             fresh = actions or fresh
         return fresh
 
-    def _take_push(self, push: Push | KeeperDied | _Asked) -> None:
+    def _death(self, error: InstrumentError) -> KeeperDied:
+        """Return the news that the keeper has died, which a request that failed by that may have outrun."""
+        told = [push for push in self.pushed if isinstance(push, KeeperDied)]
+        return told[0] if told else KeeperDied(problem=error.came)
+
+    def _take_push(self, push: Push | KeeperDied | _Asked | Noted) -> None:
         self.pushed.append(push)
         self._woken.set()
 
@@ -295,36 +309,7 @@ class Session:
 
     async def _perform(self, action: Action) -> Event | None:
         self._last_actions = (action,)
-        match action:
-            case Connect():
-                return await asking.connect(self)
-            case Ask():
-                return await asking.ask(self, action)
-            case Predict():
-                self.busy("The model works out what this unit should read.")
-                design, units, seed = self.job.design, self.job.units, self.job.seed
-                return await in_thread(lambda: predictions.predict(design, action, units, seed), "benchkit-model")
-            case CheckWarm():
-                self.busy("The model works out whether this design comes to rest when it warms up.")
-                design, seed = self.job.design, self.job.seed
-                return await in_thread(lambda: predictions.check_warm(design, action, seed), "benchkit-model")
-            case Evaluate():
-                design, walk, state = self.job.design, self.job.walk, self.state
-                return await in_thread(lambda: predictions.evaluate_rule(design, walk, state, action), "benchkit-model")
-            case Read():
-                return await measuring.read(self, action)
-            case Trim():
-                return await measuring.trim(self, action)
-            case SetSupply():
-                return await powering.set_supply(self, action)
-            case SwitchOff():
-                return await powering.switch_off(self, action)
-            case Wait():
-                await asking.wait(self, action)
-                return Waited(item=action.item, seconds=action.seconds)
-            case Write():
-                return await self._write(action)
-        raise BenchkitError(f"There is no way to carry out {type(action).__name__}")
+        return await acting.perform(self, action)
 
     async def sample(self) -> None:
         """Take a sample of the watch where the keeper doesn't do so by itself, and show it."""
@@ -336,17 +321,16 @@ class Session:
             return  # a supply that is lost while it is watched is the keeper's to tell; it switches off too
         self.note_supply(state)
 
-    async def supply_set(self, positive_v: float, negative_v: float, limit_a: float) -> SupplyState:
-        """Set the supply with its output on, unless something has come that the walk has yet to handle.
+    def expect_on(self) -> None:
+        """Get ready to switch on, unless something has come that the walk has yet to handle.
 
         Raises
         ------
         InstrumentError
         """
-        if self.pushed:
+        if any(not isinstance(push, Noted) for push in self.pushed):
             raise InstrumentError("refused", "Off or a trip came before the supply was set", "nothing after that")
         self.last_off = None
-        return await asyncio.wrap_future(self.keeper.supply_set(positive_v, negative_v, limit_a, True))
 
     def note_supply(self, state: SupplyState) -> None:
         """Show a newer state of the supply than the record has."""
@@ -357,16 +341,15 @@ class Session:
         """Put a question that wants something typed, until it can be used."""
         return await asking.put_entry(self, question, parse)
 
-    async def _write(self, action: Write) -> Event | None:
+    async def last_look(self, action: Write) -> Event | None:
+        """Return what is to be written; before the last line comes what the model and a rehearsal's unit still say."""
         if isinstance(action.event, Closed) and self.state.suspecting:
             self.busy("The model still works out what would explain the readings.")
             await self._aside.settled(SUSPECTS_S)
             await asyncio.sleep(0.05)  # an answer that is there by now makes the walk close anew
         if isinstance(action.event, Closed) and self.hands.simulated and not self._truth_noted:
             self._truth_noted = True
-            truth = await self.hands.truth()
-            figures = figures_of(truth)
-            return Noted(text="The simulated unit at the end of the walk.", figures=figures)
+            return end_note(await self.hands.truth())
         return action.event
 
     # -- showing -----------------------------------------------------------------------------------------------

@@ -96,6 +96,8 @@ class Runner:
         session = self.session
         if session is None:
             return ""
+        if session.state.on_lamp:
+            return "The unit is on the series lamp, and nothing here switches it: SWITCH IT OFF BY HAND, pull its plug."
         if session.job.manual_supply:
             if session.state.energised == "off" or not session.state.ever_on:
                 return ""

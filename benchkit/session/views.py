@@ -8,6 +8,7 @@ from benchkit import quantities
 from benchkit.events import Judged, SupplyState
 from benchkit.judge.verdicts import worst
 from benchkit.procedure import knowledge, suspect_words
+from benchkit.procedure.hearing import protection_text, switched_by_hand
 from benchkit.procedure.items import Item, Plan, condition_key
 from benchkit.procedure.state import State
 from benchkit.procedure.walk import Walk
@@ -118,6 +119,7 @@ class Painter:
             aim=self._aim,
             suspects=self._suspects,
             why="" if state.closed is None else state.closed.why,
+            broken=state.broken,
         )
 
     def _result(self, state: State, judged: Judged) -> ResultView:
@@ -216,14 +218,43 @@ def _remark(suspects: SuspectsView | None, host: Item) -> str:
     return suspects.heading if suspects.working or suspects.accuses else ""
 
 
-def supply_words(energised: Energised, supply: SupplyState | None, *, by_hand: bool) -> str:
-    """Say what is known of the supply, never more than that."""
+NO_HAND = "nothing switches it off by itself"
+"""Said all the time of what only a person switches."""
+
+
+def supply_words(
+    energised: Energised,
+    supply: SupplyState | None,
+    *,
+    by_hand: bool,
+    on_lamp: bool = False,
+    unprotected: bool = False,
+) -> str:
+    """Say what is known of the supply, never more than that.
+
+    Parameters
+    ----------
+    energised : {"off", "on", "unknown"}
+    supply : SupplyState or None
+        The newest that was heard of it.
+    by_hand : bool
+        Only a person switches what feeds the unit.
+    on_lamp : bool
+        And that is a series lamp.
+    unprotected : bool
+        It tells of no over-voltage protection of its own.
+    """
+    if on_lamp:
+        return f"MAINS THROUGH THE SERIES LAMP: {NO_HAND}, pull the plug by hand"
     if energised == "unknown" and not by_hand:
         return "SUPPLY: OUTPUT STATE UNKNOWN - treat the unit as live"
+    tripped = "  TRIPPED by its own protection" if supply is not None and supply.tripped else ""
     if energised == "off":
-        rest = "nothing here can switch it" if by_hand else "read back as off"
-        return f"SUPPLY OFF ({rest})"
-    parts = ["SUPPLY IN YOUR HANDS, nothing here switches it off" if by_hand else "SUPPLY ON"]
+        rest = f"as you said; {NO_HAND}" if by_hand else "read back as off"
+        return f"SUPPLY OFF ({rest}){tripped}"
+    parts = [f"SUPPLY IN YOUR HANDS: {NO_HAND}" if by_hand else "SUPPLY ON"]
+    if by_hand and supply is not None:
+        parts.append("you said:")
     if supply is not None:
         for volts, amps in ((supply.positive_v, supply.positive_a), (supply.negative_v, supply.negative_a)):
             if volts is not None:
@@ -234,7 +265,12 @@ def supply_words(energised: Energised, supply: SupplyState | None, *, by_hand: b
             parts.append(f"limit {quantities.show(supply.limit_a, 'A', 3)}")
         if supply.in_limit:
             parts.append("IN LIMIT")
-    return "  ".join(parts)
+        protection = protection_text(supply)
+        if protection:
+            parts.append(f"protection {protection}")
+    if unprotected:
+        parts.append("NO OVER-VOLTAGE PROTECTION")
+    return "  ".join(parts) + tripped
 
 
 def _sections(plan: Plan, state: State) -> tuple[SectionView, ...]:
@@ -265,12 +301,14 @@ def _number(value: float | None, unit: str) -> str:
 
 
 def _supply(state: State, supply: SupplyState | None) -> SupplyView:
-    by_hand = state.opened is not None and state.opened.supply == "manual"
+    by_hand = switched_by_hand(state)
     if state.phase == "setting" and supply is not None and supply is not state.supply and supply.output_on is not None:
         state = replace(state, energised="on" if supply.output_on else "off")  # read back while it is being set
     return SupplyView(
         energised=state.energised,
-        words=supply_words(state.energised, supply, by_hand=by_hand),
+        words=supply_words(
+            state.energised, supply, by_hand=by_hand, on_lamp=state.on_lamp, unprotected=state.unprotected
+        ),
         by_hand=by_hand,
         state=supply,
     )

@@ -7,8 +7,10 @@ Unpowered points fix the polarity too, because a meter's test current sees junct
 chosen so that junctions beside the part are reverse biased where that is possible (red at the more positive end of the
 working stage keeps collector-base junctions off; at the base-emitter arm red goes to the *emitter*).
 
-A single-supply stage has no points of a negative rail: ``rail-`` and all that begins with it, ``ohm.rail-``. Its
-``ohm.rails`` goes from the rail to 0 V, like ``ohm.rail+``, because 0 V is the other end of the stage.
+``rails`` is the voltage from rail to rail, for seeing it fall after off; the model has nothing to say about it.
+
+A single-supply stage has neither it nor points of a negative rail: ``rail-`` and all that begins with it,
+``ohm.rail-``. Its ``ohm.rails`` goes from the rail to 0 V, like ``ohm.rail+``: 0 V is the other end of the stage.
 """
 
 from __future__ import annotations
@@ -41,7 +43,7 @@ class Point:
     powered : bool
         Whether the reading is taken with the unit powered.
     modelled : bool
-        Whether there are expected values for it (none for a.c. readings).
+        Whether there are expected values for it (none for a.c. readings and from rail to rail).
     """
 
     name: str
@@ -249,6 +251,11 @@ def _alternating(design: Design) -> Iterator[Point]:
             continue
         yield Point(
             name=name, unit="V", function="ac volts", red=red, black="0 V", powered=True, modelled=False
+        )  # fmt: skip
+    if not design.single_supply:
+        yield Point(
+            name="rails", unit="V", function="dc volts", red="positive rail", black="negative rail", powered=True,
+            modelled=False,
         )  # fmt: skip
 
 

@@ -48,6 +48,9 @@ FLASH_S: Final = 0.7
 CLOSE_WITHIN_S: Final = 3.0
 """How long leaving waits for the session to switch off and close its record (s)."""
 
+CLOSE_WHEN_OFF_S: Final = 1.0
+"""The same while the supply is known to be off and the walk keeps its place (s)."""
+
 CLOSE_WHEN_TOLD_S: Final = 1.0
 """The same when told to go from outside: well inside the hard exit (s)."""
 
@@ -237,6 +240,10 @@ class BenchApp(App[int]):
         """Leave after the end of the walk, with its exit status."""
         self._run(self._leave("", self._status_of_end()))
 
+    @property
+    def _walk_stopped(self) -> bool:
+        return self._view is not None and bool(self._view.stopped)
+
     def _status_of_end(self) -> int:
         if self._ending is not None:
             return self._ending.exit_status
@@ -331,6 +338,8 @@ class BenchApp(App[int]):
             self.call_off(reason)
         task = self._walk_task
         if task is not None and not task.done():
+            if self.supply is not None and self.supply.energised == "off" and not self._walk_stopped:
+                within_s = min(CLOSE_WHEN_OFF_S, CLOSE_WITHIN_S)  # nothing is closed: the walk keeps its place
             _, waiting = await asyncio.wait({task}, timeout=CLOSE_WITHIN_S if within_s is None else within_s)
             if waiting:
                 task.cancel()

@@ -104,6 +104,7 @@ def walk(
     unit: str,
     operator: str,
     resume_path: Path | None,
+    visa: str = "",
 ) -> int:
     """Walk on a real unit, or go on with one; returns the exit status."""
     from benchkit.procedure.file import load_procedure
@@ -121,13 +122,13 @@ def walk(
         text = opened.bench_text
         if bench_path is not None:
             text = _text_of(bench_path)
-        parts = _bench_parts(text, str(bench_path or resume_path)) if text else _by_hand()
+        parts = _bench_parts(text, str(bench_path or resume_path), visa) if text else _by_hand()
     else:
         if not design:
             raise EntryError("No design was named", "the design file of this unit", "Name it with --design")
         loaded = load_design(shipped.find_design(design))
         steps = load_procedure(shipped.find_procedure(procedure))
-        parts = _bench_parts(_text_of(bench_path), str(bench_path)) if bench_path is not None else _by_hand()
+        parts = _bench_parts(_text_of(bench_path), str(bench_path), visa) if bench_path is not None else _by_hand()
     setting = Setting(
         kind="walk",
         design=loaded,
@@ -145,10 +146,10 @@ def walk(
 STAND_IN = "stand-in"
 
 
-def _bench_parts(text: str, name: str) -> dict[str, Any]:
+def _bench_parts(text: str, name: str, visa: str = "") -> dict[str, Any]:
     from benchkit.instruments.bench import parse_bench
 
-    bench = parse_bench(text, name)
+    bench = parse_bench(text, name, visa=visa)
     return {
         "setup": bench.setup,
         "bench_text": bench.text,
@@ -276,13 +277,16 @@ def _say_end(runner: Runner) -> None:
 
 
 def _stop_on_signals(loop: asyncio.AbstractEventLoop, runner: Runner) -> None:
-    """Ctrl+C and a polite end of the process mean: off, made safe, closed.  A second time means at once."""
+    """Ctrl+C and a polite end of the process mean: off, made safe, closed.  A second time means at once.
+
+    While the supply is known to be off they mean leaving: the walk keeps its place.
+    """
     told = False
 
     def stop(number: int, _frame: object) -> None:
         nonlocal told
-        if told or runner.session is None:
-            raise KeyboardInterrupt
+        if told or runner.session is None or runner.session.state.energised == "off":
+            raise KeyboardInterrupt  # with the supply off there is nothing to stop: the walk can be gone on with later
         told = True
         loop.call_soon_threadsafe(runner.off_now, f"the operator pressed stop (signal {number})")
 

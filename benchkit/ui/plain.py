@@ -19,6 +19,7 @@ import click
 
 from benchkit.procedure.actions import Question
 from benchkit.session.front import AimView, Reply, SuspectsView, View
+from benchkit.ui.widgets.summary_words import broken_words
 
 WIDTH = 78
 
@@ -44,6 +45,8 @@ class PlainFront:
         self._source = source or sys.stdin
         self._told: dict[str, str] = {}
         self._busy = ""
+        self._watched = 0.0
+        self._broken = ""
         self._supply = ""
         self._section = ""
         self._message = ""
@@ -73,15 +76,33 @@ class PlainFront:
         self._suspects = view.suspects
         if view.aim is not None and view.aim.unit_text and self._asked == view.item:
             self._tell_aim(view.aim)
-        if view.busy and view.busy != self._busy:
-            self._print(f"  ... {view.busy}")
-        self._busy = view.busy
+        self._tell_progress(view)
         if view.supply.energised != self._supply:
             self._supply = view.supply.energised
             self._print(f"  {view.supply.words}")
+        if view.broken != self._broken:
+            self._broken = view.broken
+            self._print(f"  {broken_words(view.broken)}")
         if view.message and view.message != self._message:
             self._message = view.message
             self._print(f"  ! {view.message}")
+
+    def _tell_progress(self, view: View) -> None:
+        """Say what is being waited for; a reading that is being watched again whenever it has moved by a third."""
+        live = view.live
+        key = view.busy
+        if live is not None and view.busy:
+            size = abs(live.value) if live.value is not None else math.inf
+            moved = not 2.0 / 3.0 < (size or 1e-9) / (self._watched or 1e-9) < 1.5
+            if view.busy == self._busy and not moved:
+                return
+            self._watched = size
+            left = "" if view.remaining_s is None else f" About {view.remaining_s:.0f} s left."
+            self._print(f"  ... {live.point} {live.text}. {view.busy}{left}")
+        elif view.busy and view.busy != self._busy:
+            left = "" if view.remaining_s is None else f" About {view.remaining_s:.0f} s left."
+            self._print(f"  ... {view.busy}{left}")
+        self._busy = key
 
     def _tell_suspects(self, suspects: SuspectsView) -> None:
         self._print("")

@@ -21,7 +21,7 @@ OffLine.flash {{ text-style: reverse bold; }}
 
 .walk-head {{ height: 1; padding: 0 1; background: {PANEL}; }}
 .walk-trail {{ height: 1; padding: 0 1; margin-bottom: 1; }}
-.walk-message {{ height: 1; padding: 0 1; color: {CARE}; }}
+.walk-message {{ height: auto; max-height: 2; padding: 0 1; color: {CARE}; }}
 .walk-pages {{ height: 1fr; }}
 Page {{ height: 1fr; width: 1fr; }}
 
@@ -65,6 +65,11 @@ Input:focus {{ background-tint: {STRONG} 6%; }}
 .trim-turns {{ height: 1; padding: 0 1; }}
 .walking .trim-turns {{ display: none; }}
 
+.watch-stands {{ height: auto; max-height: 2; padding: 0 1; margin: 1 0; }}
+.watch-figures {{ height: 5; margin: 0 2; }}
+.watch-reading {{ width: 1fr; }}
+.tight Outcome .outcome-gauge, .tight Outcome .outcome-why {{ display: none; }}
+
 .empty {{ display: none; }}
 
 .summary-verdict {{ height: auto; padding: 0 1; margin-bottom: 1; }}
@@ -93,6 +98,8 @@ LeaveScreen {{ background: {GROUND}; align: center middle; }}
 .roomy .start-title {{ margin-top: 2; margin-bottom: 2; }}
 .roomy #trim .card {{ max-height: 7; }}
 .roomy #trim .card-details {{ display: block; }}
+.roomy .walk-message {{ max-height: 3; }}
+.roomy .watch-figures {{ height: 11; }}
 .roomy .trim-figures {{ layout: vertical; height: 1fr; }}
 .roomy .trim-reading {{ width: 1fr; margin-bottom: 1; }}
 .roomy .trim-turns {{ margin-top: 1; }}
@@ -116,6 +123,7 @@ LeaveScreen {{ background: {GROUND}; align: center middle; }}
 .small .trim-where {{ margin: 0; padding: 0; }}
 .small .trim-gauge {{ margin: 0; }}
 .small .trim-trend {{ display: none; }}
+.small .watch-stands, .small .watch-figures {{ margin: 0; padding: 0; }}
 .small .trim-turns {{ display: none; }}
 .small .summary-verdict {{ margin: 0; padding: 0; }}
 .small .start-body {{ padding: 0 1; }}

@@ -15,7 +15,35 @@ from typing import Self
 Reply = bytes | None
 
 
-class ScpiServer:
+class Scpi:
+    """What every instrument here answers, whatever the link."""
+
+    def __init__(self, name: str) -> None:
+        self.name = name
+        self.enabled = 0
+
+    def answer(self, message: str) -> str | None:
+        """Return the reply to one unit of a message; None when there is none."""
+        if message == "*IDN?":
+            return self.name
+        if message == "SYST:ERR?":
+            return '+0,"No error"'
+        if message == "*ESE?":
+            return str(self.enabled)
+        if message == "*OPC?":
+            return "1"
+        if re.fullmatch(r"\*ESE [0-9]{1,3}", message):
+            self.enabled = int(message[5:])
+        return None
+
+    def reply(self, message: str) -> str | None:
+        """Return the reply to a whole message, its units' answers joined by semicolons."""
+        answers = [self.answer(part.strip().removeprefix(":")) for part in message.split(";")]
+        spoken = [answer for answer in answers if answer is not None]
+        return ";".join(spoken) if spoken else None
+
+
+class ScpiServer(Scpi):
     """One instrument on one port; each connection has its own thread.
 
     ``answers`` maps a message to a function that returns the bytes to send, or None for silence.  ``faults`` is looked
@@ -23,7 +51,7 @@ class ScpiServer:
     """
 
     def __init__(self, name: str, *, port: int = 0) -> None:
-        self.name = name
+        Scpi.__init__(self, name)
         self.heard: list[tuple[float, str]] = []
         self.fault: Callable[[socket.socket, str], bool] | None = None
         self.connections = 0
@@ -41,14 +69,6 @@ class ScpiServer:
     def messages(self) -> list[str]:
         with self.lock:
             return [message for _, message in self.heard]
-
-    def answer(self, message: str) -> str | None:
-        """Return the reply to one unit of a message; None when there is none."""
-        if message == "*IDN?":
-            return self.name
-        if message == "SYST:ERR?":
-            return '+0,"No error"'
-        return None
 
     def drop_connections(self, *, reset: bool = False) -> None:
         with self.lock:
@@ -106,26 +126,28 @@ class ScpiServer:
                     if self.fault is not None and self.fault(connection, message):
                         continue
                     with self.lock:
-                        replies = [self.answer(part.removeprefix(":")) for part in message.split(";")]
-                    spoken = [reply for reply in replies if reply is not None]
-                    if spoken:
-                        connection.sendall((";".join(spoken) + "\n").encode("latin-1"))
+                        reply = self.reply(message)
+                    if reply is not None:
+                        connection.sendall((reply + "\n").encode("latin-1"))
                 except OSError:
                     return
 
 
-class TestSupply(ScpiServer):
-    """Two outputs into two resistors."""
+class TwoOutputs(Scpi):
+    """Two outputs into two resistors, with protection; no link yet."""
 
-    __test__ = False
-
-    def __init__(self, *, load_ohm: float = 1000.0, port: int = 0) -> None:
+    def __init__(self, name: str, load_ohm: float) -> None:
+        Scpi.__init__(self, name)
+        self.state_lock = threading.RLock()
         self.volts = {1: 0.0, 2: 0.0}
         self.limit = {1: 0.1, 2: 0.1}
         self.on = {1: False, 2: False}
+        self.over_volts = {1: 1000.0, 2: 1000.0}
+        self.over_current_trips = {1: False, 2: False}
+        self.over_volts_tripped = {1: False, 2: False}
+        self.over_current_tripped = {1: False, 2: False}
         self.load_ohm = load_ohm
         self.on_at: list[tuple[float, bool]] = []
-        super().__init__("Own,Test Supply,S-1,1.0", port=port)
 
     @property
     def is_on(self) -> bool:
@@ -133,7 +155,7 @@ class TestSupply(ScpiServer):
 
     def off_time(self) -> float:
         """When both outputs last went off, on the monotonic clock."""
-        with self.lock:
+        with self.state_lock:
             return next(at for at, on in reversed(self.on_at) if not on)
 
     def wait_off(self, timeout_s: float) -> bool:
@@ -150,7 +172,28 @@ class TestSupply(ScpiServer):
         amps = self.volts[channel] / self.load_ohm
         return (self.limit[channel], True) if amps > self.limit[channel] else (amps, False)
 
+    def _protect(self) -> None:
+        """Take an output off that is beyond its protection, as a supply does by itself."""
+        for channel in (1, 2):
+            if not self.on[channel]:
+                continue
+            amps, limited = self._amps(channel)
+            if amps * self.load_ohm > self.over_volts[channel]:
+                self.over_volts_tripped[channel] = True
+            if limited and self.over_current_trips[channel]:
+                self.over_current_tripped[channel] = True
+            if self.over_volts_tripped[channel] or self.over_current_tripped[channel]:
+                self.on[channel] = False
+                self.on_at.append((time.monotonic(), self.is_on))
+
     def answer(self, message: str) -> str | None:
+        with self.state_lock:
+            self._protect()
+            reply = self._answer(message)
+            self._protect()
+            return reply
+
+    def _answer(self, message: str) -> str | None:
         match = re.fullmatch(r"(.+?)(?: (ON|OFF|[-+.0-9eE]+))?,?\s*\(@([12])(?:,([12]))?\)", message)
         if match is None:
             return super().answer(message)
@@ -163,7 +206,8 @@ class TestSupply(ScpiServer):
         match header:
             case "OUTP":
                 for channel in channels:
-                    self.on[channel] = value == "ON"
+                    tripped = self.over_volts_tripped[channel] or self.over_current_tripped[channel]
+                    self.on[channel] = value == "ON" and not tripped
                 self.on_at.append((time.monotonic(), self.is_on))
             case "VOLT":
                 for channel in channels:
@@ -171,6 +215,23 @@ class TestSupply(ScpiServer):
             case "CURR":
                 for channel in channels:
                     self.limit[channel] = float(value)
+            case "VOLT:PROT" | "VOLT:PROT:LEV":
+                for channel in channels:
+                    self.over_volts[channel] = float(value)
+            case "CURR:PROT:STAT":
+                for channel in channels:
+                    self.over_current_trips[channel] = value in {"ON", "1"}
+            case "OUTP:PROT:CLE":
+                for channel in channels:
+                    self.over_volts_tripped[channel] = self.over_current_tripped[channel] = False
+            case "VOLT:PROT?" | "VOLT:PROT:LEV?":
+                return each(lambda c: f"{self.over_volts[c]:.4f}")
+            case "CURR:PROT:STAT?":
+                return each(lambda c: str(int(self.over_current_trips[c])))
+            case "VOLT:PROT:TRIP?":
+                return each(lambda c: str(int(self.over_volts_tripped[c])))
+            case "CURR:PROT:TRIP?":
+                return each(lambda c: str(int(self.over_current_tripped[c])))
             case "OUTP?":
                 return each(lambda c: str(int(self.on[c])))
             case "VOLT?":
@@ -186,6 +247,16 @@ class TestSupply(ScpiServer):
             case _:
                 return None
         return None
+
+
+class TestSupply(TwoOutputs, ScpiServer):
+    """Two outputs behind a socket."""
+
+    __test__ = False
+
+    def __init__(self, *, load_ohm: float = 1000.0, port: int = 0) -> None:
+        TwoOutputs.__init__(self, "Own,Test Supply,S-1,1.0", load_ohm)
+        ScpiServer.__init__(self, "Own,Test Supply,S-1,1.0", port=port)
 
 
 class TestMeter(ScpiServer):

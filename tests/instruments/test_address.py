@@ -1,54 +1,94 @@
-"""Addresses: sockets are taken, other kinds recognised, mistakes refused."""
+"""Addresses: each kind is recognised, mistakes are refused with what was expected."""
 
 from __future__ import annotations
+
+from pathlib import Path
 
 import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
 from benchkit.errors import InstrumentError
-from benchkit.instruments.address import parse_address
+from benchkit.instruments.address import Address, parse_address, plain_address
 
 
 @pytest.mark.parametrize(
-    ("text", "host", "port"),
+    ("text", "kind", "host", "port", "device"),
     [
-        ("TCPIP::127.0.0.1::5025::SOCKET", "127.0.0.1", 5025),
-        (" tcpip0::meter.local::1::socket ", "meter.local", 1),
-        ("TCPIP2::h::65535::SOCKET", "h", 65535),
+        ("TCPIP::127.0.0.1::5025::SOCKET", "socket", "127.0.0.1", 5025, ""),
+        (" tcpip0::meter.local::1::socket ", "socket", "meter.local", 1, ""),
+        ("TCPIP2::h::65535::SOCKET", "socket", "h", 65535, ""),
+        ("TCPIP::10.0.0.1::INSTR", "vxi-11", "10.0.0.1", None, ""),
+        ("TCPIP::10.0.0.1::inst0::INSTR", "vxi-11", "10.0.0.1", None, "inst0"),
+        ("TCPIP::10.0.0.1,1024::inst0::INSTR", "vxi-11", "10.0.0.1", 1024, "inst0"),
+        ("TCPIP::10.0.0.1::gpib0,5::INSTR", "vxi-11", "10.0.0.1", None, "gpib0,5"),
+        ("TCPIP::10.0.0.1::hislip0::INSTR", "hislip", "10.0.0.1", None, "hislip0"),
+        ("TCPIP::10.0.0.1::HiSLIP0,4881::INSTR", "hislip", "10.0.0.1", 4881, "HiSLIP0"),
+        ("ASRL/dev/ttyUSB0::INSTR", "serial", "", None, "/dev/ttyUSB0"),
+        ("ASRLCOM3::INSTR", "serial", "", None, "COM3"),
+        ("asrl3::instr", "serial", "", None, "3"),
+        ("USB0::0x1234::0x5678::S1::INSTR", "usb", "", None, ""),
+        ("USB::4660::22136::SN 7/1::0::INSTR", "usb", "", None, ""),
     ],
 )
-def test_sockets(text: str, host: str, port: int) -> None:
+def test_each_kind(text: str, kind: str, host: str, port: int | None, device: str) -> None:
     address = parse_address(text)
-    assert (address.host, address.port, address.text) == (host, port, text.strip())
+    assert (address.kind, address.host, address.port, address.device) == (kind, host, port, device)
+    assert address.text == text.strip()
 
 
 @pytest.mark.parametrize(
-    ("text", "kind"),
+    ("text", "kind", "said"),
     [
-        ("TCPIP::h::0::SOCKET", "bad address"),
-        ("TCPIP::h::65536::SOCKET", "bad address"),
-        ("TCPIP::::5025::SOCKET", "unsupported"),
-        ("192.168.1.20:5025", "bad address"),
-        ("", "bad address"),
-        ("TCPIP::a b::5025::SOCKET", "bad address"),
-        ("TCPIP::10.0.0.1::inst0::INSTR", "unsupported"),
-        ("ASRL/dev/ttyUSB0::INSTR", "unsupported"),
-        ("USB0::0x1234::0x5678::S1::INSTR", "unsupported"),
-        ("GPIB0::22::INSTR", "unsupported"),
+        ("TCPIP::h::0::SOCKET", "bad address", "port 0"),
+        ("TCPIP::h::65536::SOCKET", "bad address", "65535"),
+        ("TCPIP::h::hislip0,70000::INSTR", "bad address", "port 70000"),
+        ("TCPIP::h,0::inst0::INSTR", "bad address", "port 0"),
+        ("TCPIP::::5025::SOCKET", "bad address", "SOCKET"),
+        ("TCPIP::fe80::1::5025::SOCKET", "bad address", "IPv6"),
+        ("TCPIP::[::1]::5025::SOCKET", "bad address", "IPv6"),
+        ("192.168.1.20:5025", "bad address", "an address like"),
+        ("", "bad address", "an address like"),
+        ("TCPIP::a b::5025::SOCKET", "bad address", "an address like"),
+        ("ASRL::INSTR", "bad address", "ASRL/dev/ttyUSB0"),
+        ("GPIB0::22::INSTR", "unsupported", "--visa"),
+        ("USB0::0x1234::0x5678::S1::RAW", "unsupported", "--visa"),
+        ("PXI0::3-18::INSTR", "unsupported", "--visa"),
     ],
 )
-def test_others_say_what_is_wrong(text: str, kind: str) -> None:
+def test_others_say_what_is_wrong(text: str, kind: str, said: str) -> None:
     with pytest.raises(InstrumentError) as caught:
         parse_address(text)
     assert caught.value.kind == kind
     assert repr(text) in caught.value.message
+    assert said in caught.value.message
 
 
-@given(text=st.text(max_size=40))
-def test_any_text_is_an_address_or_refused(text: str) -> None:
+@pytest.mark.parametrize("text", ["GPIB0::22::INSTR", "PXI0::3-18::INSTR", "my meter", "TCPIP::fe80::1::5025::SOCKET"])
+def test_another_librarys_addresses_are_taken_as_they_are(text: str) -> None:
+    assert parse_address(text, "bench.yaml@sim") == Address(text, "other")
+
+
+def test_no_library_takes_an_empty_address() -> None:
+    with pytest.raises(InstrumentError):
+        parse_address("  ", "@ivi")
+
+
+@given(text=st.text(max_size=40), library=st.sampled_from(["@py", "@ivi"]))
+def test_any_text_is_an_address_or_refused(text: str, library: str) -> None:
+    said = ""
+    port: int | None = 1
     try:
-        port = parse_address(text).port
-    except InstrumentError:
-        port = 1
-    assert 1 <= port <= 65535
+        port = parse_address(text, library).port
+    except InstrumentError as error:
+        said = error.message
+    assert said.isprintable()
+    assert port is None or 1 <= port <= 65535
+
+
+def test_spellings_of_one_address(tmp_path: Path) -> None:
+    assert plain_address("tcpip0::Meter::5025::socket ") == plain_address("TCPIP::meter::5025::SOCKET")
+    assert plain_address("TCPIP1::meter::5025::SOCKET") != plain_address("TCPIP::meter::5025::SOCKET")
+    (tmp_path / "tty").touch()
+    (tmp_path / "by-id").symlink_to(tmp_path / "tty")
+    assert plain_address(f"ASRL{tmp_path}/by-id::INSTR") == plain_address(f"asrl{tmp_path}/tty::INSTR")

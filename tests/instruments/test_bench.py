@@ -3,13 +3,15 @@
 from __future__ import annotations
 
 import datetime
+import json
 import re
 from pathlib import Path
 
 import pytest
 
 from benchkit.errors import FileError
-from benchkit.instruments.bench import load_bench, parse_bench
+from benchkit.instruments.bench import link_settings, load_bench, parse_bench
+from benchkit.instruments.profile import meter_profile
 from benchkit.measure.accuracy import STATED_DEFAULT
 
 TODAY = datetime.date(2031, 1, 1)
@@ -51,6 +53,8 @@ def test_a_good_one(tmp_path: Path) -> None:
     assert setup["meter"]["address"] == "TCPIP::192.168.1.20::5025::SOCKET"
     assert setup["meter"]["serial"] == "MY123"
     assert setup["supply"]["profile"]["kind"] == "supply"
+    assert setup["supply"]["library"] == "@py"
+    assert json.loads(json.dumps(setup)) == setup
 
 
 def test_cautions_say_what_is_assumed_or_overdue() -> None:
@@ -74,7 +78,7 @@ def test_a_bench_without_instruments_is_by_hand() -> None:
         ('serial = "MY123"', "serial = 123", "meter.serial"),
         ('serial = "MY123"', 'sreial = "MY123"', "meter.sreial"),
         ("TCPIP::192.168.1.20::5025::SOCKET", "192.168.1.20", "meter.address"),
-        ("TCPIP::192.168.1.21::5025::SOCKET", "USB0::1::2::3::INSTR", "supply.address"),
+        ("TCPIP::192.168.1.21::5025::SOCKET", "GPIB0::5::INSTR", "supply.address"),
         ('"1 Mohm"', '"1 V"', "meter.input_resistance"),
         ('"1 Mohm"', '"0 ohm"', "meter.input_resistance"),
         ("2031-05-01", '"soon"', "meter.calibration_due"),
@@ -98,6 +102,38 @@ def test_a_profile_of_ones_own_stands_beside_the_bench_file(tmp_path: Path) -> N
     functions = load_bench(path).setup["meter"]["profile"]["functions"]
     assert functions["dc volts"] == "VAL1?"
     assert functions["ohms"] == "MEAS:RES?"
+
+
+def test_mains_and_line_go_into_the_profile_and_the_profile_file_stays_as_it_is() -> None:
+    text = GOOD.replace('name = "bench 2"', 'name = "bench 2"\nmains = "60 Hz"\nvisa = "bench.yaml@sim"')
+    text = text.replace("TCPIP::192.168.1.20::5025::SOCKET", "ASRL3::INSTR").replace('"scpi-meter"', '"serial-meter"')
+    text = text.replace("[[meter.accuracy]]", "[meter.line]\nbaud = 2400\n\n[[meter.accuracy]]")
+    bench = parse_bench(text, "bench.toml", today=TODAY)
+    setup = bench.setup["meter"]
+    assert setup["library"] == bench.setup["supply"]["library"] == "bench.yaml@sim"
+    profile = meter_profile(setup["profile"])
+    assert profile.timing.mains_hz == 60.0
+    settings = link_settings(profile, setup)
+    assert (settings.line.baud, settings.line.stop_bits, settings.line.flow) == (2400, 2, "dtr/dsr")
+    assert (settings.library, settings.prepare, settings.sync) == ("bench.yaml@sim", ("SYST:REM",), "")
+    assert meter_profile("serial-meter").link.line.baud == 9600
+
+
+def test_another_library_takes_addresses_of_its_own_and_the_command_line_wins() -> None:
+    text = GOOD.replace("TCPIP::192.168.1.20::5025::SOCKET", "GPIB0::22::INSTR")
+    with pytest.raises(FileError, match=re.escape("meter.address")):
+        parse_bench(text, "bench.toml")
+    bench = parse_bench(text, "bench.toml", visa="/opt/maker/libvisa.so")
+    assert bench.setup["meter"]["library"] == "/opt/maker/libvisa.so"
+    named = text.replace('name = "bench 2"', 'name = "bench 2"\nvisa = "first@sim"')
+    assert parse_bench(named, "bench.toml", visa="second@sim").setup["meter"]["library"] == "second@sim"
+
+
+def test_a_supply_without_protection_is_a_caution(tmp_path: Path) -> None:
+    path = tmp_path / "bench.toml"
+    path.write_text('[bench]\nformat = 1\nname = "b"\n[supply]\naddress = "ASRL3::INSTR"\nprofile = "plain-supply"\n')
+    assert any("no over-voltage protection" in caution for caution in load_bench(path).cautions)
+    assert not any("protection" in caution for caution in parse_bench(GOOD, "bench.toml").cautions)
 
 
 def test_a_missing_file(tmp_path: Path) -> None:

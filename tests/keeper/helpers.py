@@ -2,16 +2,23 @@
 
 from __future__ import annotations
 
+import subprocess
+import sys
+import threading
 import time
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager, suppress
 from pathlib import Path
+
+import pytest
 
 from benchkit.errors import FileError
 from benchkit.events import Closed, Event
 from benchkit.journal import read
 from benchkit.keeper.client import KeeperClient, KeeperDied, Push
 from tests.instruments.server import TestMeter, TestSupply
+
+ROOT = Path(__file__).parents[2]
 
 
 class Shared:
@@ -76,6 +83,55 @@ def bench(tmp_path: Path) -> Iterator[Bench]:
         made.client.close()
         made.supply.close()
         made.meter.close()
+
+
+@contextmanager
+def beats(client: KeeperClient) -> Iterator[None]:
+    """Arm the keeper and beat, as an event loop does, for the time of a block."""
+    stop = threading.Event()
+
+    def beat() -> None:
+        while not stop.wait(0.1):
+            client.heartbeat()
+
+    client.heartbeat()
+    client.arm().result(5)
+    thread = threading.Thread(target=beat, daemon=True)
+    thread.start()
+    try:
+        yield
+    finally:
+        client.disarm().result(5)
+        stop.set()
+        thread.join()
+
+
+def keeper_with(monkeypatch: pytest.MonkeyPatch, change: str) -> None:
+    """Let the next keeper start with something in it changed."""
+
+    def spawn(arguments: list[str], log_dir: Path | None, lifeline: int | None = None) -> subprocess.Popen[bytes]:
+        line = [] if lifeline is None else ["--lifeline", str(lifeline)]
+        code = f"import sys\n{change}\nsys.argv[1:] = {[*arguments, *line]!r}\n"
+        code += "from benchkit.keeper.__main__ import main\nmain()"
+        return subprocess.Popen(
+            [sys.executable, "-c", code],
+            stdin=subprocess.PIPE,
+            stdout=subprocess.PIPE,
+            stderr=subprocess.DEVNULL,
+            cwd=ROOT,
+            start_new_session=True,
+            pass_fds=() if lifeline is None else (lifeline,),
+        )
+
+    monkeypatch.setattr("benchkit.keeper.client.spawn", spawn)
+
+
+def gone(pid: int) -> bool:
+    """True when a process that is not our child has ended."""
+    try:
+        return Path(f"/proc/{pid}/stat").read_text().rpartition(")")[2].split()[0] == "Z"
+    except (FileNotFoundError, ProcessLookupError):
+        return True
 
 
 def wait_until(true: Callable[[], bool], timeout_s: float = 5.0) -> None:

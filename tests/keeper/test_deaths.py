@@ -18,7 +18,7 @@ from benchkit.events import ContactLost, Noted, OutputOff
 from benchkit.journal import read, verify
 from benchkit.keeper.client import KeeperClient, KeeperDied, Push, WatchLines
 from tests.instruments.server import TestSupply
-from tests.keeper.helpers import Bench, bench, wait_until
+from tests.keeper.helpers import Bench, bench, gone, keeper_with, wait_until
 
 pytestmark = pytest.mark.skipif(sys.platform == "win32", reason="POSIX signals")
 
@@ -48,14 +48,6 @@ class Screen:
         self.process.wait()
         assert self.process.stdout is not None
         self.process.stdout.close()
-
-
-def gone(pid: int) -> bool:
-    """True when a process that is not our child has ended."""
-    try:
-        return Path(f"/proc/{pid}/stat").read_text().rpartition(")")[2].split()[0] == "Z"
-    except FileNotFoundError:
-        return True
 
 
 @pytest.fixture
@@ -153,13 +145,14 @@ def test_a_keeper_that_is_killed_is_noticed_and_a_stand_by_switches_off(tmp_path
         off = at.client.after_death().result(10)
         assert off.confirmed
         assert not at.supply.is_on
-        assert supply_off_within(at, began, 3.0)
+        assert supply_off_within(at, began, 1.5)  # the stand-by may have had no time to load anything
         wait_until(lambda: len(at.pushes) == 2)
         assert at.pushes[1] == Push(event=off, seq=None, problem="the keeper died")
         assert at.client.off("again").result(10).confirmed
-        # Another keeper goes on with the record.
+        # Another keeper goes on with the record, in which the stand-by has written what happened.
+        wait_until(lambda: at.kept() == ["noted", "contact lost", "output off"])
         other = KeeperClient.start(None, lambda push: None)
-        assert other.resume_journal(at.record).result(5).seq == 1
+        assert other.resume_journal(at.record).result(5).seq == 3
         other.close()
 
 
@@ -183,7 +176,7 @@ def test_a_keeper_that_freezes_is_ended_and_a_stand_by_switches_off(tmp_path: Pa
             assert time.monotonic() - began < 4
         assert off.result(10).confirmed
         assert not at.supply.is_on
-        assert supply_off_within(at, began, 5.0)
+        assert supply_off_within(at, began, 3.0)
 
 
 def test_a_stand_by_that_reaches_nothing_says_unknown(tmp_path: Path) -> None:
@@ -245,24 +238,6 @@ def test_a_full_disk_does_not_delay_off(tmp_path: Path) -> None:
         assert "could not be kept" in push.problem
         assert at.kept() == ["noted"]
         assert verify(at.record).line == 1
-
-
-def keeper_with(monkeypatch: pytest.MonkeyPatch, change: str) -> None:
-    """Let the next keeper start with something in it changed."""
-
-    def spawn(arguments: list[str], log_dir: Path | None) -> subprocess.Popen[bytes]:
-        code = f"import sys\n{change}\nsys.argv[1:] = {arguments!r}\n"
-        code += "from benchkit.keeper.__main__ import main\nmain()"
-        return subprocess.Popen(
-            [sys.executable, "-c", code],
-            stdin=subprocess.PIPE,
-            stdout=subprocess.PIPE,
-            stderr=subprocess.DEVNULL,
-            cwd=ROOT,
-            start_new_session=True,
-        )
-
-    monkeypatch.setattr("benchkit.keeper.client.spawn", spawn)
 
 
 def test_a_computer_that_slept_wakes_to_an_output_that_goes_off(

@@ -57,6 +57,16 @@ def test_hello_comes_before_any_instrument_library_is_loaded(alone: Bench) -> No
     assert alone.client.ready.result(5) == alone.client.pid
 
 
+def test_off_right_behind_a_connect_finds_the_supply(alone: Bench) -> None:
+    """Connecting waits until everything is loaded; off waits for that supply, not for nothing."""
+    alone.supply.on = {1: True, 2: True}
+    found = alone.client.connect(alone.setup)
+    off = alone.client.off("at once")
+    assert off.result(20).confirmed
+    assert not alone.supply.is_on
+    found.exception(20)
+
+
 def test_set_read_state_off(at: Bench) -> None:
     open_and_on(at)
     state = at.client.supply_state().result(5)

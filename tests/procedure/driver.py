@@ -49,6 +49,7 @@ from benchkit.procedure.actions import (
     CheckWarm,
     Connect,
     Evaluate,
+    Fall,
     Narrow,
     Predict,
     Read,
@@ -208,10 +209,8 @@ kind = "off"
 title = "Supply off"
 [[section.step]]
 name = "rails-low"
-kind = "measure"
+kind = "discharge"
 title = "Rails low"
-points = ["rail+", "rail-"]
-limits = { low = "-1 V", high = "1 V" }
 [[section.step]]
 name = "unplug"
 kind = "tell"
@@ -309,7 +308,7 @@ def good(walk: Walk, state: State, action: Action) -> Event:
                 item=action.item, condition=action.key, limits=limits_of(walk, action), units=9, solved=9, seed=1,
                 seconds=0.1,
             )  # fmt: skip
-        case Read() | Trim():
+        case Read() | Trim() | Fall():
             limits = walk.limits_for(state, item)
             assert limits is not None
             value = limits.nominal
@@ -356,7 +355,7 @@ def bad(walk: Walk, state: State, action: Action) -> list[Event]:
                 item=action.item, condition=action.key, limits=(), units=9, solved=9, seed=1, seconds=0.1
             )
             return [refused, nothing]
-        case Read():
+        case Read() | Fall():
             assert item.point is not None
             return [
                 reading(item, -1e9),

@@ -6,7 +6,7 @@ from dataclasses import replace
 import pytest
 
 from benchkit.errors import FileError
-from benchkit.procedure.file import parse_procedure
+from benchkit.procedure.file import load_procedure, parse_procedure
 from benchkit.procedure.items import NEVER_PASSED_OVER, RAIL_LOW_V, Item, Joined, Plan, condition_key
 from benchkit.procedure.plan import make_plan
 from benchkit.procedure.sizing import discharge_s, rails_text, supply_limit_a
@@ -295,13 +295,35 @@ def test_a_procedure_that_does_not_fit_the_design(steps: tuple[str, ...], words:
     assert words in str(caught.value)
 
 
-def test_a_trimmer_that_is_not_there_cannot_be_turned() -> None:
+def without_trimmer() -> Design:
     text = BREADBOARD.read_text(encoding="utf-8")
     start, end = text.index("[spreader.trimmer]"), text.index("[output]")
-    design = changed(BREADBOARD, (text[start:end], ""))
-    for step in (TRIM, 'name = "m"\nkind = "tell"\ntitle = "t"\ndo = "d"\nact = "trimmer to least"'):
-        with pytest.raises(FileError, match="has none"):
-            plan_of(POWER, step, design=design)
+    return changed(BREADBOARD, (text[start:end], ""))
+
+
+def test_without_a_trimmer_its_steps_fall_away() -> None:
+    least = 'name = "l"\nkind = "tell"\ntitle = "t"\ndo = "d"\nact = "trimmer to least"'
+    end = f'{MEASURE}points = ["ohm.spreader.ARM"]\nlimits = "the model"'
+    rest = 'name = "w"\nkind = "wait"\ntitle = "t"\nseconds = "1 s"\nneeds = "a trimmer"'
+    kept = 'name = "k"\nkind = "wait"\ntitle = "t"\nseconds = "1 s"'
+    plan = plan_of(least, end, TRIM.replace('"m"', '"q"'), rest, kept, design=without_trimmer())
+    assert [item.id for item in own(plan) if item.kind != "connect"] == ["s.k"]
+
+
+def test_a_design_without_a_trimmer_is_walked_and_its_target_only_checked() -> None:
+    plan = make_plan(load_procedure(SHIPPED), without_trimmer())
+    words = " ".join(f"{item.title} {item.do} {item.caution} {item.why}" for item in plan.items if item.kind != "rule")
+    assert not any(item.kind == "trim" or item.trimmer_end or item.act == "trimmer to least" for item in plan.items)
+    assert "rimmer" not in words.replace("No trimmer: the parts set the bias", "")
+    assert "screw" not in words.replace("screwdriver", "")
+    target = [
+        item for item in plan.items if item.limits is not None and item.limits.source == "the target of the design"
+    ]
+    assert [item.kind for item in target] == ["measure"]
+    first = next(item for item in plan.items if item.kind == "supply")
+    design = without_trimmer()
+    assert first.limit_a == pytest.approx(supply_limit_a(design, 10.0, -10.0, share=1.0))
+    assert first.limit_a > supply_limit_a(breadboard(), 10.0, -10.0, share=0.0)
 
 
 # -- supply ---------------------------------------------------------------------------------------------------------
@@ -355,9 +377,10 @@ def test_a_clip_takes_the_power_off_and_gives_it_back_after_a_yes() -> None:
     plan = small().plan
     start = next(number for number, item in enumerate(plan.items) if item.id == "bias.clip.off")
     kinds = [item.kind for item in plan.items[start : start + 7]]
-    assert kinds == ["off", "wait", "measure", "measure", "tell", "hold", "supply"]
-    low = plan.items[start + 2 : start + 4]
-    assert all(item.limits is not None and item.limits.high == RAIL_LOW_V for item in low)
+    assert kinds == ["off", "discharge", "discharge", "discharge", "tell", "hold", "supply"]
+    low = plan.items[start + 1 : start + 4]
+    highs = [item.limits.high for item in low if item.limits is not None]
+    assert highs == [RAIL_LOW_V, RAIL_LOW_V, 2 * RAIL_LOW_V]
     assert not any(item.may_go_on for item in low)
     assert plan.items[start + 6].positive_v == 10.0
     assert plan.items[start + 6].limit_a == pytest.approx(0.02)

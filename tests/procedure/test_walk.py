@@ -31,6 +31,7 @@ from benchkit.procedure.actions import (
     Action,
     Ask,
     Connect,
+    Fall,
     Predict,
     Read,
     SetSupply,
@@ -38,6 +39,7 @@ from benchkit.procedure.actions import (
     Trim,
     Write,
 )
+from benchkit.procedure.securing import MAKING_SURE, OFF_AS_SAID, OFF_ASKED, STILL_OFF
 from benchkit.procedure.state import PHASES, State
 from benchkit.procedure.table import TABLE, table_text
 from benchkit.procedure.walk import Walk
@@ -206,7 +208,7 @@ def test_every_phase_has_a_way_to_made_safe(
             assert (after.phase, after.index) == (state.phase, state.index)
         else:
             assert after.index == walk.plan.made_safe
-            assert kinds(actions) == ["SwitchOff"]
+            assert kinds([action for action in actions if not action.aside]) == ["SwitchOff"]
 
 
 def test_nothing_is_energised_on_the_way_out(graph: tuple[dict[Node, State], dict[Node, set[Node]]]) -> None:
@@ -445,6 +447,8 @@ GOOD = SupplyState(output_on=True, positive_v=10.0, negative_v=-10.0, positive_a
         ({"positive_v": 9.2}, "rail+ was set to 10 V and stands at 9.2 V"),
         ({"negative_v": 10.0}, "rail- was set to -10 V and stands at 10 V"),
         ({"negative_v": None}, "no voltage for rail-"),
+        ({"positive_tripped": True}, "rail+ was switched off by the supply's own protection"),
+        ({"output_on": False, "positive_tripped": True, "negative_tripped": True}, "rail+ and rail- was switched off"),
     ],
 )
 def test_rails_that_are_not_as_set_end_the_walk(changes: dict[str, object], why: str) -> None:
@@ -455,7 +459,7 @@ def test_rails_that_are_not_as_set_end_the_walk(changes: dict[str, object], why:
     assert drive.open.event.verdict == "fail"
     assert why in drive.open.event.why
     drive.well()
-    assert kinds(drive.actions) == ["SwitchOff"]
+    assert kinds(drive.actions) == ["SwitchOff", "Suspect"]
 
 
 def test_rails_as_set_pass() -> None:
@@ -519,7 +523,7 @@ def test_a_person_is_believed_about_a_supply_that_only_a_person_switches() -> No
 
 def high_rail(drive: Drive, rail: str) -> None:
     drive.until(f"made-safe.rails-low.{rail}")
-    while not isinstance(drive.open, Read):
+    while not isinstance(drive.open, Fall):
         drive.well()
     drive.tell(reading(drive.walk.item(drive.state), 12.0))
     drive.well()
@@ -530,7 +534,7 @@ def test_nobody_is_told_to_touch_a_unit_whose_rails_were_not_seen_low(rail: str)
     drive = begun(small())
     high_rail(drive, rail)
     assert isinstance(drive.open, Ask)
-    assert "until both rails have been seen low" in drive.open.question.caution
+    assert "until every rail has been seen low" in drive.open.question.caution
     assert [choice.value for choice in drive.open.question.choices] == ["again", "go on"]
     drive.tell(Decided(item=drive.walk.item(drive.state).id, choice="go on", reason="the meter is broken"))
     assert "Treat the unit as live" in drive.state.note
@@ -747,3 +751,134 @@ def test_but_not_one_that_was_stopped_before(why: Event) -> None:
     drive.tell(Resumed(operator="Ida"))
     assert drive.state.stopped
     assert drive.to_end().exit_status in (3, 4)
+
+
+# -- off once more, protection --------------------------------------------------------------------------------------
+
+
+SURE = OutputOff(reason=f"{MAKING_SURE}: the operator asked for it", confirmed=True, how="read back", state=OFF)
+
+
+@pytest.mark.parametrize(
+    "item", ["look.parts", "cold.rails.ohm.rails", "limit.connect", "power.ready", "bias.clip.rail-"]
+)
+def test_making_sure_that_it_is_off_keeps_the_place(item: str) -> None:
+    drive = begun(small()).until(item)
+    before, was_open = drive.state, drive.open
+    assert before.energised == "off"
+    assert drive.tell(SURE) == ()
+    assert (drive.state.phase, drive.state.index, drive.state.stopped) == (before.phase, before.index, "")
+    assert drive.open is was_open
+    assert drive.state.note == STILL_OFF
+    assert drive.to_end().exit_status == 0
+
+
+@pytest.mark.parametrize("item", ["power.full", "bias.soak", "power.current.rail+.current"])
+def test_it_ends_a_walk_whose_supply_was_on_or_being_set(item: str) -> None:
+    drive = begun(small()).until(item)
+    assert drive.state.energised != "off"
+    drive.tell(SURE)
+    assert drive.state.stopped
+    assert drive.walk.way_out(drive.state)
+
+
+def test_it_ends_a_walk_whose_supply_does_not_say_so() -> None:
+    drive = begun(small()).until("cold.rails.ohm.rails")
+    drive.tell(replace(SURE, confirmed=False, how="no answer"))
+    assert drive.state.stopped
+    assert drive.state.energised == "unknown"
+
+
+@pytest.mark.parametrize(("supply", "note"), [("scpi", OFF_ASKED), ("manual", OFF_AS_SAID)])
+def test_asking_for_off_while_it_is_off_keeps_the_place(supply: str, note: str) -> None:
+    drive = Drive(small())
+    drive.tell(replace(OPENED, supply=supply))  # type: ignore[arg-type]
+    drive.until("cold.rails.ohm.rails")
+    before = drive.state
+    assert drive.tell(StopAsked(reason=f"{MAKING_SURE}: the operator asked for it")) == ()
+    assert (drive.state.phase, drive.state.index, drive.state.stopped) == (before.phase, before.index, "")
+    assert drive.state.note == note
+    drive.until("power.full")
+    drive.tell(StopAsked(reason=f"{MAKING_SURE}: the operator asked for it"))
+    assert drive.state.stopped, "by then it is on"
+
+
+def test_off_for_any_other_reason_still_ends_it() -> None:
+    for event in (StopAsked(), replace(SURE, reason="the operator asked for it")):
+        drive = begun(small()).until("cold.rails.ohm.rails")
+        drive.tell(event)
+        assert drive.state.stopped
+
+
+def test_the_protection_stands_a_tenth_and_a_volt_above_the_rails() -> None:
+    drive = begun(small())
+    drive.to_end()
+    found = [action for action in drive.asked if isinstance(action, SetSupply)]
+    assert {action.item for action in found} > {"power.on", "power.full"}
+    for action in found:
+        assert action.protection_v is not None
+        for volts, rail in zip(action.protection_v, (action.positive_v, action.negative_v), strict=True):
+            assert volts == pytest.approx(1.1 * abs(rail) + 1.0)
+
+
+def test_on_the_way_down_the_protection_stays_above_where_the_rails_are() -> None:
+    plan = small().plan
+    down = replace(item_of(small(), "power.full"), positive_v=5.0, negative_v=-5.0)
+    items = tuple(down if item.id == "power.full" else item for item in plan.items)
+    drive = begun(Walk(replace(plan, items=items))).until("power.full")
+    on = replace(GOOD, set_positive_v=10.0, set_negative_v=-10.0)
+    state, actions = drive.walk._enter(replace(drive.state, supply=on), drive.state.index)
+    (action,) = actions
+    assert isinstance(action, SetSupply)
+    assert action.protection_v == pytest.approx((12.0, 12.0))
+    assert state.phase == "setting"
+
+
+@pytest.mark.parametrize(
+    ("protection", "words", "unprotected"),
+    [((None, None), "CAUTION: this supply tells of no", True), ((12.0, 12.0), "protection at 12.0 V.", False)],
+)
+def test_a_supply_without_protection_is_a_caution(
+    protection: tuple[float | None, float | None], words: str, unprotected: bool
+) -> None:
+    drive = begun(small()).until("power.full")
+    told = replace(GOOD, protection_positive_v=protection[0], protection_negative_v=protection[1])
+    drive.tell(SupplySet(item="power.full", state=told))
+    assert isinstance(drive.open, Write)
+    assert isinstance(drive.open.event, Judged)
+    assert drive.open.event.verdict == "pass"
+    assert words in drive.open.event.why
+    assert drive.state.unprotected == unprotected
+
+
+def test_what_an_operator_says_of_a_supply_is_said_to_be_his() -> None:
+    manual = replace(OPENED, supply="manual")
+    drive = Drive(small())
+    drive.tell(manual)
+    drive.until("power.full")
+    drive.tell(SupplySet(item="power.full", state=GOOD))
+    assert isinstance(drive.open, Write)
+    assert isinstance(drive.open.event, Judged)
+    assert drive.open.event.why == "Both rails stand where they were set, none in its limit, says the operator."
+    assert not drive.state.unprotected
+
+
+def test_a_manual_supply_is_asked_off_without_alarm() -> None:
+    drive = Drive(small())
+    drive.tell(replace(OPENED, supply="manual"))
+    drive.until("limit.check.off")
+    drive.tell(OutputOff(reason="r", confirmed=False, how="benchkit has no hand on this supply."))
+    assert isinstance(drive.open, Ask)
+    assert drive.open.question.title == "Switch the supply off by hand"
+    drive.tell(Answered(item="limit.check.off", choice="done"))
+    assert drive.state.energised == "off"
+    assert not drive.state.stopped
+
+
+def test_what_broke_in_a_rehearsal_is_kept() -> None:
+    for broken, words in (((), "none"), (("output.upper.1: collector-emitter short", "emitter.upper.1: open"), "; ")):
+        drive = begun(small()).until("look.parts")
+        drive.tell(Noted(text="The simulated unit at the end.", broken=broken))
+        assert words in drive.state.broken
+    drive.tell(Noted(text="a remark"))
+    assert drive.state.broken, "another remark says nothing of it"

@@ -7,7 +7,7 @@ import pytest
 from hypothesis import HealthCheck, given, settings
 from hypothesis import strategies as st
 
-from benchkit.events import Event, OutputOff, Resumed, StopAsked, Tripped
+from benchkit.events import Event, Noted, OutputOff, Resumed, StopAsked, Tripped
 from benchkit.record.show import DEFERENCE, as_json, as_text, clean
 from benchkit.record.summary import Summary, load_summary
 from tests.record.walks import (
@@ -242,3 +242,18 @@ def test_a_program_gets_them_too(tmp_path: Path) -> None:
     assert suspicion["unseen"] == ["driver.upper: leaky"]
     assert suspicion["line"] == 11
     assert found["verdict_why"] == WHY
+
+
+def test_what_an_operator_said_burnt_parts_and_cautions_come_first(tmp_path: Path) -> None:
+    events = good_events()
+    events[0] = opened(supply="manual", cautions=("the meter's calibration was due 2031-01-01",))
+    events[-1] = Noted(text="At the end.", broken=("emitter.upper.1: open",))
+    summary = load_summary(write(tmp_path / "w.jsonl", closed(events)))
+    text = as_text(summary)
+    first = text[text.index("What to know first") : text.index("No power yet")]
+    assert "set and switched by hand: what it showed is what the operator said" in " ".join(first.split())
+    assert "CAUTION: the meter's calibration was due 2031-01-01" in first
+    assert "Burnt in the simulated unit: emitter.upper.1: open" in first
+    plain = as_json(summary)
+    assert plain["cautions"] == ["the meter's calibration was due 2031-01-01"]
+    assert plain["notes"] == [{"text": "At the end.", "figures": {}, "broken": ["emitter.upper.1: open"]}]

@@ -17,6 +17,7 @@ from benchkit.events import (
     SupplyState,
     Tripped,
 )
+from benchkit.procedure.hearing import UNPROTECTED
 from benchkit.record.summary import Summary, load_summary
 from tests.record.walks import ON, closed, good_events, judged, opened, overridden_events, reading, write
 
@@ -175,3 +176,42 @@ def test_what_holds_no_first_line_is_refused(tmp_path: Path) -> None:
     path.write_text("hello\n")
     with pytest.raises(RecordError, match="Line 1"):
         load_summary(path)
+
+
+# -- supplies that only a person switches, cautions, burnt parts ----------------------------------------------------
+
+
+def by_hand_events(*, said: bool) -> list[Event]:
+    events = good_events()
+    events[0] = opened(supply="manual")
+    events[9] = OutputOff(reason="end", confirmed=False, how="benchkit has no hand on this supply.")
+    if said:
+        events.insert(10, Answered(item="made-safe.off", choice="done"))
+    return events
+
+
+def test_a_supply_by_hand_is_off_only_as_said(tmp_path: Path) -> None:
+    ending = gather(tmp_path, by_hand_events(said=True)).ending
+    assert ending.state == "off"
+    assert ending.words == "Off, as said by the operator; benchkit had no hand on it."
+
+
+def test_nor_is_it_off_when_nobody_said_so(tmp_path: Path) -> None:
+    summary = gather(tmp_path, by_hand_events(said=False))
+    assert summary.ending.state == "unknown"
+    assert "nobody said that it is off" in summary.ending.words
+    assert not summary.incidents, "a hand that switches is no fault of the bench"
+
+
+def test_cautions_of_the_bench_and_of_its_supply_are_gathered(tmp_path: Path) -> None:
+    events = good_events()
+    events[0] = opened(cautions=("the meter's calibration was due 2031-01-01",))
+    why = f"Both rails stand where they were set, none in its limit. {UNPROTECTED}"
+    for _ in range(2):
+        events.insert(6, judged("first-power.up", "rails", "pass", 12.0, why=why))
+    assert gather(tmp_path, events).cautions == (
+        "the meter's calibration was due 2031-01-01",
+        UNPROTECTED.removeprefix("CAUTION: "),
+    )
+    (tmp_path / "before").mkdir()
+    assert gather(tmp_path / "before", good_events()).cautions == (), "records of before say nothing of protection"

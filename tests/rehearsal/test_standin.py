@@ -9,7 +9,7 @@ import numpy as np
 from benchkit.procedure.actions import Choice, Question
 from benchkit.rehearsal import standin
 from benchkit.rehearsal.standin import StandIn
-from benchkit.session.front import Reply, SuspectsView, View
+from benchkit.session.front import LiveView, Reply, SuspectsView, View
 from tests.ui.scripted import DECIDE, ODD_QUESTION, PROBES, SUSPECTED, SUSPECTING, VIEW, WORKING
 
 
@@ -93,3 +93,42 @@ def test_it_gives_the_model_time_before_it_places_the_probes() -> None:
         assert (await asking).choice == "done"
 
     asyncio.run(script())
+
+
+TRIM = replace(DECIDE, kind="trim", item="bias.quarter", title="Bias to a quarter of the target")
+
+
+def trimming(values: list[float], low: float, high: float) -> list[Reply]:
+    """What it does when the meter shows these values, one after each answer."""
+    one = stand_in()
+    replies: list[Reply] = []
+
+    async def script() -> None:
+        for value in values:
+            live = LiveView(
+                point="emitter.upper.1", unit="V", value=value, text="", low=low, high=high, target=(low + high) / 2.0,
+                age_s=0.0, inside=low <= value <= high,
+            )  # fmt: skip
+            one.show(replace(VIEW, live=live))
+            replies.append(await one.ask(TRIM))
+
+    asyncio.run(script())
+    return replies
+
+
+def test_at_the_end_of_the_screw_it_takes_what_is_inside() -> None:
+    # The reading only drifts: the screw is at its least-bias end.
+    replies = trimming([0.00779, 0.00778, 0.00777, 0.00776], 0.002, 0.008)
+    assert [reply.choice for reply in replies] == ["turn", "turn", "turn", "take"]
+    assert all(reply.turns < 0.0 for reply in replies[:3])
+
+
+def test_at_the_end_of_the_screw_it_gives_up_what_is_above() -> None:
+    replies = trimming([0.0098, 0.0097, 0.0097, 0.0097], 0.002, 0.008)
+    assert replies[-1].choice == "end"
+    assert "least-bias end" in replies[-1].text
+
+
+def test_a_screw_that_answers_is_turned_on() -> None:
+    replies = trimming([0.012, 0.011, 0.0098, 0.0088, 0.0051], 0.002, 0.008)
+    assert [reply.choice for reply in replies] == ["turn", "turn", "turn", "turn", "take"]

@@ -5,7 +5,8 @@ from __future__ import annotations
 import numpy as np
 import pytest
 
-from benchkit.rehearsal.unit import COARSE_K, JUNCTION_MARGIN_K, SimulatedUnit, powers_w
+from benchkit.rehearsal.strain import JUNCTION_MARGIN_K
+from benchkit.rehearsal.unit import COARSE_K, SimulatedUnit, powers_w
 from benchkit.stage.conditions import Condition
 from benchkit.stage.design import Design, parse_design
 from benchkit.stage.draws import draw, seeds
@@ -94,7 +95,9 @@ def test_too_hot_a_junction_fuses_and_stays_fused() -> None:
         seconds += step_s
     assert seconds > 0.5
     assert unit.broken[0].startswith("output.")
-    assert unit.warmth.temperatures_c()[unit.broken[0]] > 60.0 + JUNCTION_MARGIN_K
+    assert unit.strain.hot_spots_c(unit.warmth.temperatures_c())[unit.broken[0]] > 60.0 + JUNCTION_MARGIN_K
+    assert unit.burnt[0].fault == "collector-emitter short"
+    assert unit.burnt[0].at_s == pytest.approx(seconds)
     unit.set_travel(0.0)
     after = unit.operate(RAILS, 0.1)
     # Collector to emitter is a short now: the output hangs at a rail, or a rail at the output.
@@ -115,6 +118,69 @@ def test_an_overloaded_emitter_resistor_opens() -> None:
     assert unit.broken
     assert set(unit.broken) <= {"emitter.upper.1", "emitter.lower.1"}
     assert unit.unpowered(f"ohm.{unit.broken[0]}", None) > 1e3
+
+
+@pytest.mark.parametrize(
+    ("arm", "wiring", "reads"),
+    [("lower", "series", np.inf), ("lower", "tied", 1060.0), ("upper", "series", np.inf), ("upper", "tied", 2500.0)],
+)
+def test_a_burnt_track_opens_its_wiper(arm: str, wiring: str, reads: float) -> None:
+    text = TERN.replace('arm = "lower"', f'arm = "{arm}"').replace('wiring = "series"', f'wiring = "{wiring}"')
+    design = parse_design(text)
+    unit = SimulatedUnit(design, 1)
+    unit.set_travel(0.5)
+    before = unit.unpowered(f"ohm.spreader.{arm}", None)
+    for burnt in unit.strain.step(unit.warmth.temperatures_c(), dict.fromkeys(unit.warmth.parts, 0.0),
+                                  {"spreader.trimmer": 20.0}, 5.0, 1.0):  # fmt: skip
+        unit._break(burnt)
+    assert unit.broken == ("spreader.trimmer",)
+    after = unit.unpowered(f"ohm.spreader.{arm}", None)
+    if np.isinf(reads):
+        # The arm is open, and the meter finds what lies beside it: junctions, or nothing.
+        assert after > 1.3 * before
+    else:
+        assert after == pytest.approx(reads, rel=0.12)  # track 10 %, resistors 1 %
+    solved = unit.operate(RAILS, 0.1)
+    assert bool(solved.converged[0])
+
+
+def test_a_leaky_device_that_burns_is_a_short(tern: Design) -> None:
+    unit = SimulatedUnit(tern, 1, Fault("output.upper.1", "leaky"))
+    hot = dict.fromkeys(unit.warmth.parts, 0.0) | {"output.upper.1": 5000.0}
+    for burnt in unit.strain.step(unit.warmth.temperatures_c(), hot, {}, 0.2, 1.0):
+        unit._break(burnt)
+    assert unit.broken == ("output.upper.1",)
+    solved = unit.operate(RAILS, 0.1)
+    assert abs(solved.solution.between("rail+", "output.upper.1.e")[0]) < 0.05
+
+
+def test_a_healthy_unit_at_its_target_overloads_nothing(tern: Design) -> None:
+    unit = SimulatedUnit(tern, 1)
+    unit.set_travel(0.45)
+    for _ in range(400):
+        solved = unit.operate((35.0, 35.0), None, within_k=COARSE_K)
+        unit.heat(solved, unit.longest_step_s(solved))
+    assert unit.burnt == ()
+    assert unit.strain.overloaded == {}
+
+
+def test_the_servo_wakes_up_as_the_design_says(tern: Design) -> None:
+    settles_s = tern.feed.settles_after_s
+    assert settles_s == 3.0
+    unit = SimulatedUnit(tern, 1)
+    rest_v = unit.operate(RAILS, None).points["output"][0]
+    unit.heat(unit.operate((5.0, 5.0), None), 1.0)
+    off_v = []
+    for _ in range(7):
+        solved = unit.operate(RAILS, None)
+        unit.heat(solved, 0.5)
+        off_v.append(float(unit.operate(RAILS, None).points["output"][0] - rest_v))
+    assert off_v[0] == pytest.approx(0.5, rel=0.05)
+    assert off_v == sorted(off_v, reverse=True)
+    assert abs(off_v[-1]) < 1e-3, "three seconds after the rails were there"
+    unit.heat_off(1.0)
+    unit.heat(unit.operate(RAILS, None), 0.01)
+    assert float(unit.operate(RAILS, None).points["output"][0] - rest_v) > 0.4, "and again after every time off"
 
 
 def test_unpowered_resistances(tern: Design) -> None:

@@ -4,16 +4,18 @@ from __future__ import annotations
 
 import itertools
 import math
+from dataclasses import replace
 
 import pytest
 
 from benchkit.errors import EntryError
 from benchkit.rehearsal.bench import RehearsalBench
 from benchkit.rehearsal.meter import OVERLOAD
+from benchkit.rehearsal.strain import Burnt
 from benchkit.stage.conditions import Condition
-from benchkit.stage.design import Design
+from benchkit.stage.design import Design, parse_design
 from benchkit.stage.expected import expected, expected_unpowered
-from tests.rehearsal.helpers import meter, power_up, supply, tell
+from tests.rehearsal.helpers import TERN, meter, power_up, supply, tell
 
 
 def test_a_healthy_unit_reads_what_was_predicted_at_least_bias(tern: Design) -> None:
@@ -22,7 +24,7 @@ def test_a_healthy_unit_reads_what_was_predicted_at_least_bias(tern: Design) -> 
     outside = total = 0
     for seed in range(2):
         bench = RehearsalBench(tern, seed)
-        power_up(bench, 15.0, 0.08, settle_s=0.3)
+        power_up(bench, 15.0, 0.08, settle_s=4.0)  # the servo needs three
         for point in limits.points:
             if point.point in ("heatsink", "rail+.drop", "rail-.drop"):
                 continue
@@ -235,3 +237,102 @@ def test_time_does_not_go_backwards(bench: RehearsalBench, seconds: float) -> No
 def test_the_clips_only_go_where_there_is_a_point(bench: RehearsalBench) -> None:
     with pytest.raises(EntryError, match="no test point"):
         bench.table.probe("emitter.upper.9")
+
+
+BIG = TERN.replace('local_capacitors = "100 uF"', 'local_capacitors = "100 uF"\nreservoir = "22 mF"')
+
+
+def test_the_limit_does_not_contain_what_the_capacitors_hold() -> None:
+    """The same slip of the screw, the same limit: with 22 mF on each rail (13 J) there is more to burn with."""
+    hottest = []
+    for text in (TERN, BIG):
+        bench = RehearsalBench(parse_design(text), 1)
+        power_up(bench, 35.0, 0.2, travel=0.3, settle_s=20.0)
+        assert bench.table.rails.volts == pytest.approx((35.0, 35.0), abs=0.1)
+        before_j = bench.truth()["energy_j"]
+        bench.table.set_travel(1.0)
+        spots = []
+        for _ in range(40):
+            bench.table.advance(0.02)
+            spots.append(max(bench.unit.strain.hot_spots_c(bench.unit.warmth.temperatures_c()).values()))
+        hottest.append(max(spots))
+        # The supply itself delivered no more than its limit.
+        assert bench.truth()["energy_j"] - before_j <= 0.8 * 2 * 0.2 * 35.0 * 1.02
+    assert hottest[1] > hottest[0] + 12.0
+
+
+def test_capacitors_beat_the_limit_when_a_device_shorts() -> None:
+    """A device that shorts at full rails: its emitter resistor takes what the reservoir holds, whatever the limit."""
+    peaks = []
+    for text in (TERN, BIG):
+        bench = RehearsalBench(parse_design(text), 1)
+        power_up(bench, 35.0, 0.1, settle_s=30.0)
+        shorted = Burnt("output.upper.1", "collector-emitter short", "a slip", 0.0)
+        bench.unit._break(shorted)
+        bench.unit._break(replace(shorted, part="output.lower.1"))
+        bench.table._disturb()
+        bench.table.advance(0.05)
+        peaks.append(max(bench.unit.strain._average_w))
+    # Two rails, 22 mF at 35 V: 27 J, of which an emitter resistor takes 0.22 ohm of twice (0.22 + 0.05) ohm, averaged
+    # over its time constant of 4 s (arithmetic: 2.8 W).
+    assert peaks[1] == pytest.approx(22.1e-3 * 35.0**2 * 0.22 / 0.54 / 4.0, rel=0.15)
+    assert peaks[0] < 0.1 * peaks[1]
+
+
+def test_a_second_look_finds_what_came_back() -> None:
+    bench = RehearsalBench(parse_design(BIG), 1)
+    power_up(bench, 35.0, 0.5, settle_s=300.0)
+    tell(bench, "OUTP OFF,(@1,2)")
+    while max(bench.table.rails.volts) > 0.0:
+        bench.table.advance(1.0)
+    first = meter(bench, "rail+")
+    assert abs(first) < 0.05
+    bench.table.advance(60.0)
+    assert 0.1 < meter(bench, "rail+") < 1.5
+    assert -1.5 < meter(bench, "rail-") < -0.1
+    assert meter(bench, "output") == pytest.approx(0.0, abs=1e-3)
+    assert 0.2 < meter(bench, "ohm.rails") < 3.0  # volts from rail to rail
+    assert bench.truth()["rails_v"][0] > 0.1
+    # Ohms over a voltage: that voltage over the test current of 1 mA comes on top.
+    assert meter(bench, "ohm.rail+", "MEAS:RES?") > 0.9 * bench.truth()["rails_v"][0] / 0.001
+    small = RehearsalBench(parse_design(TERN), 1)
+    power_up(small, 35.0, 0.5, settle_s=300.0)
+    tell(small, "OUTP OFF,(@1,2)")
+    small.table.advance(65.0)
+    assert meter(small, "rail+") == pytest.approx(0.0, abs=1e-3)
+
+
+def test_over_current_protection_ends_a_short(tern: Design) -> None:
+    bench = RehearsalBench(tern, 1, "output.upper.1: collector to heatsink")
+    tell(bench, "CURR:PROT:DEL 0.5,(@1,2);:CURR:PROT:STAT ON,(@1,2)")
+    power_up(bench, 15.0, 0.05, settle_s=0.3)
+    assert bench.supply.handle("OUTP? (@1,2);:CURR:PROT:TRIP? (@1,2)") == "1,1;0,0"
+    bench.table.advance(0.4)
+    assert bench.supply.handle("OUTP? (@1,2);:CURR:PROT:TRIP? (@1,2)") == "0,1;1,0"
+    assert bench.table.channels[0].on is False
+
+
+def test_over_voltage_protection_knows_the_capacitors(bench: RehearsalBench) -> None:
+    power_up(bench, 20.0, 0.1)
+    tell(bench, "OUTP OFF,(@1,2)")
+    tell(bench, "VOLT:PROT 12,(@1,2)", "VOLT 5,(@1,2)")
+    assert bench.supply.handle("VOLT:PROT:TRIP? (@1,2)") == "0,0", "an output that is off has nothing to trip"
+    tell(bench, "OUTP ON,(@1,2)")
+    assert bench.supply.handle("VOLT:PROT:TRIP? (@1,2);:OUTP? (@1,2)") == "1,1;0,0"
+
+
+def test_a_burnt_unit_says_so(tern: Design) -> None:
+    bench = RehearsalBench(tern, 1, "driver.resistor: short")
+    assert "No part of it was burnt" in bench.truth()["words"]
+    power_up(bench, 35.0, 5.0, travel=0.5, settle_s=5.0)
+    truth = bench.truth()
+    assert truth["burnt_parts"] >= 1
+    assert {part.partition(".")[0] for part in truth["broken"]} <= {"driver", "output", "stopper", "emitter"}
+    assert truth["burnt"][0] in truth["words"]
+    before = truth["broken"]
+    tell(bench, "OUTP OFF,(@1,2)")
+    bench.table.set_travel(0.0)
+    bench.table.advance(60.0)
+    power_up(bench, 15.0, 0.08)
+    assert bench.truth()["broken"] == before, "what burnt stays burnt"
+    assert str(bench.supply.handle("STAT:QUES:COND? (@1,2)")) != "0,0"

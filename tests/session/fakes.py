@@ -38,6 +38,7 @@ from tests.stage.designs import breadboard
 
 GOOD_VALUES = {
     "ohm.spreader.lower": 0.5, "ohm.rails": 0.5, "output": 0.0, "emitter.upper.1": 0.047, "rail+": 0.0, "rail-": 0.0,
+    "rails": 0.0,
 }  # fmt: skip
 
 
@@ -93,6 +94,10 @@ class FakeKeeper:
         self.on = False
         self.positive_v = self.negative_v = self.limit_a = 0.0
         self.sets: list[tuple[float, float, float]] = []
+        self.protections: list[tuple[tuple[float, float] | None, bool]] = []
+        self.ramps: list[tuple[float, float, float, WatchLines | None]] = []
+        self.minded: list[float | None] = []
+        self.caution = ""
         self.log: list[str] = []
         self.values = dict(GOOD_VALUES)
         self.offs: list[str] = []
@@ -150,13 +155,47 @@ class FakeKeeper:
     def supply_state(self) -> Future[SupplyState]:
         return done(self.fail.get("state") or self.state())
 
-    def supply_set(self, positive_v: float, negative_v: float, limit_a: float, output_on: bool) -> Future[SupplyState]:
+    def supply_set(
+        self,
+        positive_v: float,
+        negative_v: float,
+        limit_a: float,
+        output_on: bool,
+        protection_v: tuple[float, float] | None = None,
+        *,
+        over_current: bool = True,
+    ) -> Future[SupplyState]:
         if "set" in self.fail:
             return done(self.fail["set"])
         self.log.append("set")
+        self.protections.append((protection_v, over_current))
         self.sets.append((positive_v, negative_v, limit_a))
         self.positive_v, self.negative_v, self.limit_a, self.on = positive_v, negative_v, limit_a, output_on
         return done(self.state())
+
+    def supply_ramp(
+        self,
+        positive_v: float,
+        negative_v: float,
+        limit_a: float,
+        ramp_s: float,
+        protection_v: tuple[float, float] | None = None,
+        lines: WatchLines | None = None,
+        on_step: Callable[[float, SupplyState], None] | None = None,
+        *,
+        over_current: bool = True,
+    ) -> Future[SupplyState]:
+        self.ramps.append((positive_v, negative_v, ramp_s, lines))
+        if on_step is not None:
+            on_step(0.5, self.state())
+        return self.supply_set(positive_v, negative_v, limit_a, True, protection_v, over_current=over_current)
+
+    def mind_meter(self, age_limit_s: float | None) -> Future[None]:
+        self.minded.append(age_limit_s)
+        return done(None)
+
+    def stay_awake(self) -> Future[str]:
+        return done(self.caution)
 
     def watch(self, lines: WatchLines | None) -> Future[None]:
         self.log.append("watch" if lines is not None else "no watch")

@@ -4,7 +4,7 @@ import asyncio
 
 import pytest
 
-from benchkit.session.hands import Hands
+from benchkit.session.hands import Hands, end_note
 from tests.session.fakes import FakeBench
 
 
@@ -54,3 +54,12 @@ def test_the_rest_goes_through() -> None:
 
     asyncio.run(whole())
     assert (bench.point, bench.turned, bench.seconds) == ("output", -0.25, 2.0)
+
+
+def test_the_note_at_the_end_names_what_burnt() -> None:
+    note = end_note({"burnt": ["emitter.upper.1: open"], "words": "Burnt: emitter.upper.1.", "energy_j": 2.0})
+    assert note.broken == ("emitter.upper.1: open",)
+    assert note.text == "Burnt: emitter.upper.1."
+    assert note.figures == {"energy_j": 2.0}
+    assert end_note({"burnt": []}).broken == ()
+    assert end_note({}).broken is None, "a bench that says nothing of it"

@@ -312,6 +312,26 @@ def test_a_keeper_that_dies(confirmed: bool, words: str) -> None:
     assert "--resume" in str(caught.value)
 
 
+@pytest.mark.parametrize("told", [True, False])
+def test_a_request_that_outruns_the_news_of_the_keepers_death_says_the_same(told: bool) -> None:
+    """The reading fails before anybody says why; the person hears of the keeper and of the supply all the same."""
+    run = Run()
+
+    def before(event: Event) -> None:
+        if event.name == "reading taken":
+            run.keeper.alive = False
+            if told:
+                run.session.pushed.append(KeeperDied(problem="killed"))
+            raise InstrumentError("link lost", "The keeper of the instruments has gone")
+
+    run.keeper.before_append = before
+    with pytest.raises(InstrumentError, match="keeper of the instruments has ended") as caught:
+        run.go()
+    assert ("killed" in str(caught.value)) == told
+    assert "read it back as off" in str(caught.value)
+    assert "--resume" in str(caught.value)
+
+
 def test_whatever_goes_wrong_the_supply_is_asked_to_switch_off() -> None:
     run = Run()
 
@@ -529,7 +549,7 @@ def test_off_by_hand_is_a_stop_without_a_keeper() -> None:
 
     run.front.answer = press
     assert run.go().exit_status == 4
-    assert any("switch it off by hand" in question.title for question in run.front.questions)
+    assert any("Switch the supply off by hand" in question.title for question in run.front.questions)
 
 
 # -- going on -------------------------------------------------------------------------------------------------------

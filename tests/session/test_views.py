@@ -5,7 +5,7 @@ from typing import Any
 
 import pytest
 
-from benchkit.events import Decided, Resumed, SupplyState, Suspected, Tripped
+from benchkit.events import Decided, Noted, Resumed, SupplyState, Suspected, Tripped
 from benchkit.procedure.actions import Narrow, Read, Suspect
 from benchkit.procedure.state import State
 from benchkit.session.front import View
@@ -19,9 +19,25 @@ ON = SupplyState(output_on=True, positive_v=10.0, negative_v=-10.0, positive_a=0
     ("energised", "supply", "by_hand", "words"),
     [
         ("off", None, False, "SUPPLY OFF (read back as off)"),
-        ("off", None, True, "SUPPLY OFF (nothing here can switch it)"),
+        ("off", None, True, "SUPPLY OFF (as you said; nothing switches it off by itself)"),
+        (
+            "off", replace(ON, positive_tripped=True), False,
+            "SUPPLY OFF (read back as off)  TRIPPED by its own protection",
+        ),
         ("unknown", ON, False, "SUPPLY: OUTPUT STATE UNKNOWN - treat the unit as live"),
-        ("unknown", None, True, "SUPPLY IN YOUR HANDS, nothing here switches it off"),
+        ("unknown", None, True, "SUPPLY IN YOUR HANDS: nothing switches it off by itself"),
+        (
+            "on", replace(ON, limit_a=None), True,
+            "SUPPLY IN YOUR HANDS: nothing switches it off by itself  you said:  10.00 V 12.4 mA  -10.00 V 12.1 mA",
+        ),
+        (
+            "on", replace(ON, protection_positive_v=12.0, protection_negative_v=12.0), False,
+            "SUPPLY ON  10.00 V 12.4 mA  -10.00 V 12.1 mA  limit 45.0 mA  protection 12.0 V",
+        ),
+        (
+            "on", replace(ON, protection_positive_v=39.5, protection_negative_v=34.0, limit_a=None), False,
+            "SUPPLY ON  10.00 V 12.4 mA  -10.00 V 12.1 mA  protection 39.5 V and 34.0 V",
+        ),
         ("on", ON, False, "SUPPLY ON  10.00 V 12.4 mA  -10.00 V 12.1 mA  limit 45.0 mA"),
         ("on", replace(ON, negative_in_limit=True, limit_a=None), False, None),
         ("on", None, False, "SUPPLY ON"),
@@ -126,7 +142,7 @@ def test_a_supply_by_hand_is_shown_as_such_all_the_time() -> None:
     drive.tell(replace(OPENED, supply="manual"))
     found = view(drive).supply
     assert found.by_hand
-    assert found.words == "SUPPLY IN YOUR HANDS, nothing here switches it off"
+    assert found.words == "SUPPLY IN YOUR HANDS: nothing switches it off by itself"
 
 
 def test_before_anything_is_opened_there_is_a_picture_too() -> None:
@@ -240,3 +256,23 @@ def test_why_a_verdict_is_no_better_is_shown_at_the_end() -> None:
     drive.tell(suspected(asked(drive, Suspect), "output.upper.1: open"))
     drive.to_end()
     assert "output.upper.1: open" in view(drive).why
+
+
+def test_no_protection_and_the_lamp_are_said_all_the_time() -> None:
+    words = supply_words("on", ON, by_hand=False, unprotected=True)
+    assert words.endswith("limit 45.0 mA  NO OVER-VOLTAGE PROTECTION")
+    for energised in ("on", "off", "unknown"):
+        lamp = supply_words(energised, ON, by_hand=True, on_lamp=True)
+        assert lamp == "MAINS THROUGH THE SERIES LAMP: nothing switches it off by itself, pull the plug by hand"
+    drive = begun(small())
+    drive.state = replace(drive.state, on_lamp=True)
+    found = view(drive).supply
+    assert found.by_hand
+    assert "SERIES LAMP" in found.words
+
+
+def test_what_broke_is_in_the_picture() -> None:
+    drive = begun(small())
+    assert view(drive).broken == ""
+    drive.tell(Noted(text="t", broken=("emitter.upper.1: open",)))
+    assert view(drive).broken == "emitter.upper.1: open"

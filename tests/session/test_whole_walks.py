@@ -171,7 +171,7 @@ def test_a_killed_rehearsal_keeps_its_record_and_goes_on(tmp_path: Path) -> None
     process = rehearse(tmp_path, seed=5)
     assert process.stdout is not None
     for raw in process.stdout:
-        if b"Both rails up together" in raw:
+        if b"Both rails up from 0 V" in raw:
             break
     time.sleep(0.5)
     killed = time.monotonic()

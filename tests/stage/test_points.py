@@ -34,6 +34,7 @@ TERN_POWERED = [
     "output.ac",
     "rail+.ac",
     "rail-.ac",
+    "rails",
 ]
 TERN_UNPOWERED = [
     "ohm.rails",

@@ -257,6 +257,28 @@ def live(value: float, seconds: float = 60.0, age_s: float = 0.1) -> LiveView:
     )
 
 
+FALL = Question(
+    item="rails-low",
+    kind="watch",
+    title="Seen low at the unit: rail+",
+    do="Keep the probes where they are, hands off the circuit: the rail is watched down.",
+    caution="Never a short. If it doesn't fall: a resistor of 1.0 kohm rated 5 W or more.",
+    expected="-1.000 V to 1.000 V (common practice); falls from 35.0 V in 78 s",
+    point="rail+",
+    red="positive rail",
+    black="0 V",
+    choices=(Choice(value="done", label="Go on watching"), Choice(value="enough", label="Take it as it reads now")),
+)
+FALL_VIEW = replace(
+    VIEW,
+    supply=OFF,
+    live=LiveView(
+        point="rail+", unit="V", value=12.34, text="12.34 V", low=-1.0, high=1.0, target=0.0, age_s=0.0, inside=False
+    ),
+    busy="Falling to 1.0 V.",
+    busy_share=0.29,
+    remaining_s=55.0,
+)
 TRIM_VIEW = replace(VIEW, sections=sections(5, ("pass",) * 5), supply=ON, live=live(0.01931), results=(PASSED,))
 END_VIEW = replace(
     VIEW,

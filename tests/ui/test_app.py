@@ -18,10 +18,12 @@ from textual.widgets import Input
 from benchkit.errors import InstrumentError
 from benchkit.events import Closed
 from benchkit.procedure.actions import Choice, Question
+from benchkit.session.falling import TOO_SLOW_WORDS
 from benchkit.session.front import Front, Reply, SupplyView
 from benchkit.ui import look
 from benchkit.ui.app import BenchApp
 from benchkit.ui.entry import Identity
+from benchkit.ui.pages.step import StepPage
 from benchkit.ui.screens.leave import LeaveScreen
 from benchkit.ui.screens.start import StartScreen
 from benchkit.ui.screens.walk import WalkScreen
@@ -37,6 +39,7 @@ QUESTIONS = (
     scripted.HOLD,
     scripted.DECIDE,
     scripted.TRIM,
+    scripted.FALL,
 )
 LIVE = replace(scripted.TRIM_VIEW, results=scripted.END_VIEW.results)
 
@@ -123,6 +126,7 @@ def test_a_whole_walk_of_every_kind_of_question() -> None:
                 (("y", "enter", "e", "s", "enter"), Reply(choice="yes", text="yes")),
                 (("g", *"lead", "enter"), Reply(choice="go on", text="lead")),
                 (("right",), Reply(choice="turn", turns=0.02)),
+                (("e",), Reply(choice="enough")),
             ]
             for number, (keys, expected) in enumerate(answers):
                 await until(lambda: app._pending is not None and len(bench.replies) == number)  # noqa: B023
@@ -166,6 +170,8 @@ SCENES = (
     (scripted.TRIM, scripted.TRIM_VIEW),
     (scripted.TRIM, replace(scripted.TRIM_VIEW, live=scripted.live(-0.5))),
     (scripted.BY_HAND_READING, replace(scripted.VIEW, supply=scripted.UNKNOWN)),
+    (scripted.FALL, scripted.FALL_VIEW),
+    (scripted.FALL, replace(scripted.FALL_VIEW, live=None, busy="Reading.", busy_share=None, remaining_s=None)),
 )
 
 
@@ -241,6 +247,8 @@ def test_a_question_that_is_refused_keeps_what_was_typed() -> None:
 
 def test_a_cancelled_question_goes_away_and_its_keys_do_nothing() -> None:
     async def test() -> None:
+        looked = asyncio.Event()
+
         async def script(front: Front, bench: Bench) -> Closed:
             front.show(scripted.VIEW)
             asked = asyncio.ensure_future(front.ask(scripted.CONFIRM))
@@ -248,7 +256,7 @@ def test_a_cancelled_question_goes_away_and_its_keys_do_nothing() -> None:
             asked.cancel()
             await asyncio.wait({asked})
             front.show(replace(scripted.VIEW, busy="Switching off."))
-            await asyncio.sleep(0.5)
+            await looked.wait()
             bench.replies.append(await front.ask(scripted.TEXT))
             return scripted.closed()
 
@@ -259,6 +267,7 @@ def test_a_cancelled_question_goes_away_and_its_keys_do_nothing() -> None:
             assert not shows(app, "protective earth")
             await pilot.press("y")
             assert bench.replies == []
+            looked.set()
             await until(lambda: shows(app, "How warm"))
             await pilot.press("9", "enter")
             await until(lambda: bench.replies == [Reply(choice="done", text="9")])
@@ -685,5 +694,82 @@ def test_the_end_says_why_it_is_undecided_and_who_is_suspected() -> None:
         async with running(script, size=(120, 40)) as (app, _, _):
             await until(lambda: shows(app, "is undecided. Every reading passed"))
             assert shows(app, "83 % emitter.upper.1 open")
+
+    run(test)
+
+
+# --- watched by itself, tight sheets, the end ----------------------------------------------------------------------
+
+
+def test_a_rail_that_falls_is_shown_with_the_time_that_is_left() -> None:
+    async def test() -> None:
+        async with running(asking(scripted.FALL, view=scripted.FALL_VIEW)) as (app, pilot, bench):
+            await until(lambda: shows(app, "55 s left"))
+            for words in (
+                "Falling to 1.0 V.",
+                "29 %",
+                "hands off the circuit",
+                "positive rail",
+                "rail+",
+                "Never a short",
+            ):
+                assert shows(app, words), words
+            assert not shows(app, "Go on watching"), "it goes on by itself"
+            await pilot.press("enter")
+            assert bench.replies == [], "no slip of a key takes it"
+            assert bench.front is not None
+            slow = replace(scripted.FALL_VIEW, busy=TOO_SLOW_WORDS, busy_share=None, remaining_s=None)
+            bench.front.show(slow)
+            await until(lambda: shows(app, "It falls too slowly: bleed resistor open?"))
+            await pilot.press("e")
+            await until(lambda: bench.replies == [Reply(choice="enough")])
+
+    run(test)
+
+
+def test_a_long_step_takes_the_room_of_the_last_results_drawing() -> None:
+    async def test() -> None:
+        long = replace(scripted.PROBES, caution="Take care of this and of that. " * 9)
+        async with running(asking(long, scripted.CONFIRM)) as (app, pilot, _bench):
+            page = app.screen.query_one("#step", StepPage)
+            await until(lambda: page.has_class("tight"))
+            await pilot.pause(0.3)
+            for words in (long.red, long.black, long.expected, "2.412 V", "● PASS"):
+                assert shows(app, words), words
+            assert not app.screen.query_one("#step .outcome-gauge").display
+            await pilot.press("enter")
+            await until(lambda: not page.has_class("tight"))
+            await until(lambda: shows(app, "2.310 V"))
+
+    run(test)
+
+
+@pytest.mark.parametrize("size", [(80, 24), (120, 40)])
+def test_a_failure_names_its_point_and_a_message_is_whole(size: tuple[int, int]) -> None:
+    async def test() -> None:
+        failed = replace(scripted.FAILED, title="Emitter resistor drops with a long title: emitter.upper.1")
+        words = "Tripped: rail+ in its limit of 45 mA. Discharge, and find the cause: no second try at a higher limit."
+        view = replace(scripted.VIEW, results=(failed,), message=words, item=failed.item)
+        async with running(asking(scripted.DECIDE, view=view), size=size) as (app, _pilot, _bench):
+            await until(lambda: shows(app, "emitter.upper.1"))
+            (row,) = [row for row in drawn(app) if "this reading" in row]
+            assert "emitter.upper.1" in row
+            assert failed.value_text in row
+            assert shows(app, "no second try at a higher limit.")
+
+    run(test)
+
+
+def test_the_end_of_a_rehearsal_names_what_burnt() -> None:
+    async def test() -> None:
+        view = replace(scripted.END_VIEW, kind="rehearsal", broken="output.upper.1: collector-emitter short")
+
+        async def script(front: Front, bench: Bench) -> Closed:
+            front.show(view)
+            await asyncio.sleep(30)
+            return scripted.closed()
+
+        async with running(script, size=(80, 34)) as (app, _pilot, _bench):
+            await until(lambda: shows(app, "BURNT in the simulated unit: output.upper.1: collector-emitter short."))
 
     run(test)

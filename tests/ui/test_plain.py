@@ -296,3 +296,27 @@ def test_this_units_limits_stand_under_the_designs_whenever_they_come() -> None:
 
     text, _ = play(script)
     assert text.count("This unit: 80.00 uV to 140.0 uV.") == 1
+
+
+def test_a_falling_rail_is_told_as_it_falls_and_what_burnt_at_the_end() -> None:
+    async def script(front: PlainFront, terminal: Terminal, offs: list[str]) -> None:
+        for value in (35.0, 34.0, 33.0, 20.0, 19.0, 9.0, 8.9):
+            live = replace(scripted.FALL_VIEW.live, value=value, text=f"{value:.2f} V")  # type: ignore[type-var]
+            front.show(replace(scripted.FALL_VIEW, live=live, remaining_s=value))
+        front.show(replace(VIEW, busy="The meter reads output.ac (ac volts).", remaining_s=7.0))
+        front.show(replace(VIEW, busy="The meter reads output.ac (ac volts).", remaining_s=6.0))
+        for _ in range(2):
+            front.show(replace(VIEW, broken="emitter.upper.1: open"))
+
+    text, _ = play(script)
+    assert text.count("... rail+") == 3, "each time that it has fallen by a third"
+    assert "... rail+ 20.00 V. Falling to 1.0 V. About 20 s left." in text
+    assert text.count("output.ac (ac volts). About 7 s left.") == 1
+    assert "6 s left" not in text
+    assert text.count("BURNT in the simulated unit: emitter.upper.1: open.") == 1
+
+
+def test_watching_goes_on_by_itself_and_can_be_ended() -> None:
+    reply, text = answer(scripted.FALL, "enough", view=scripted.FALL_VIEW)
+    assert reply == Reply(choice="enough")
+    assert "Take it as it reads now" in text

@@ -12,7 +12,10 @@ from benchkit.ui.widgets.words import Words
 
 
 class StepPage(Page):
-    """Sheet, last result, answer."""
+    """Sheet, last result, answer.
+
+    A sheet that is longer than its room takes that of the last result's drawing first.
+    """
 
     def __init__(self, guard_s: float, **more: Any) -> None:
         super().__init__(guard_s, **more)
@@ -28,6 +31,15 @@ class StepPage(Page):
         """Show the walk."""
         super().say(view)
         self._outcome.say(view.results)
+
+    def mark_overflow(self) -> None:
+        """Give the sheet the room that it needs, then say what still doesn't fit."""
+        wanted, room = self.card.rows_wanted, self.card.size.height
+        if self.has_class("tight"):
+            self.set_class(wanted + self._outcome.drawing_rows > room, "tight")
+        else:
+            self.set_class(self.card.max_scroll_y > 0, "tight")
+        super().mark_overflow()
 
 
 class HoldPage(Page):

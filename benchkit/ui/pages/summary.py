@@ -11,10 +11,10 @@ from textual.containers import VerticalScroll
 from benchkit.procedure.actions import Choice, Question
 from benchkit.record.show import DEFERENCE
 from benchkit.session.front import View
-from benchkit.ui.look import INK, QUIET, STRONG, VERDICT_COLOURS, safe
+from benchkit.ui.look import CARE, INK, QUIET, STRONG, VERDICT_COLOURS, safe
 from benchkit.ui.pages.base import Page
 from benchkit.ui.widgets.outcome import result_line, verdict_strip
-from benchkit.ui.widgets.summary_words import closing_sentence, still_open
+from benchkit.ui.widgets.summary_words import NOTHING_BROKEN, broken_words, closing_sentence, still_open
 from benchkit.ui.widgets.suspects_text import suspects_drawn
 from benchkit.ui.widgets.trail_words import count_by_verdict
 from benchkit.ui.widgets.words import Words
@@ -63,6 +63,10 @@ class SummaryPage(Page):
         lines.append(Text(""))
         lines.append(Text(f"{safe(view.design)}, unit {safe(view.unit)}, by {safe(view.operator)}", style=INK))
         lines.append(Text(f"The record holds {view.kept} lines: {safe(view.record)}", style=INK))
+        if view.broken:
+            lines.append(
+                Text(broken_words(view.broken), style=f"bold {CARE}" if view.broken != NOTHING_BROKEN else INK)
+            )
         if view.kind == "rehearsal":
             lines.append(Text("A rehearsal on a simulated unit: it says nothing about a real one.", style=INK))
         lines.append(Text(""))

@@ -16,12 +16,13 @@ from benchkit.ui.pages.base import Page
 from benchkit.ui.pages.step import DecidePage, HoldPage, StepPage
 from benchkit.ui.pages.summary import LEAVE, SummaryPage
 from benchkit.ui.pages.trim import TrimPage
+from benchkit.ui.pages.watch import WatchPage
 from benchkit.ui.screens.base import TURN_OVER, BenchScreen
 from benchkit.ui.widgets.answer import Answer
 from benchkit.ui.widgets.trail_words import Role, trail
 from benchkit.ui.widgets.words import Words
 
-PAGE_FOR: Final[dict[str, str]] = {"hold": "hold", "decide": "decide", "trim": "trim"}
+PAGE_FOR: Final[dict[str, str]] = {"hold": "hold", "decide": "decide", "trim": "trim", "watch": "watch"}
 """Page of a kind of question; every other kind has the step page."""
 
 _ROLE_STYLES: Final[dict[Role, str]] = {
@@ -47,6 +48,7 @@ class WalkScreen(BenchScreen):
             "hold": HoldPage(guard_s, id="hold"),
             "decide": DecidePage(guard_s, id="decide"),
             "trim": TrimPage(guard_s, id="trim"),
+            "watch": WatchPage(guard_s, id="watch"),
             "summary": SummaryPage(guard_s, id="summary"),
         }
         self._switcher = ContentSwitcher(*self._pages.values(), initial="step", classes="walk-pages")

@@ -161,7 +161,7 @@ class Answer(Vertical):
         shown = question.choices
         if types:
             shown = tuple(choice for choice in question.choices if not _typed(question, choice))
-        usual = question.kind != "confirm"
+        usual = question.kind not in ("confirm", "watch")
         self._choices.offer(shown, stacked=stacked, arrows=arrows and usual and not _ends(shown), usual=usual)
         self._choices.display = bool(shown)
         self._focus()

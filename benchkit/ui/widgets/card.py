@@ -1,4 +1,4 @@
-"""What to do now, where the probes go, what to expect and why, and what to beware of."""
+"""What to do now, where the probes go, what to expect, what to beware of, and why."""
 
 from __future__ import annotations
 
@@ -64,6 +64,12 @@ class Card(VerticalScroll):
         yield self._suspects
         yield self._details
 
+    @property
+    def rows_wanted(self) -> int:
+        """Rows that all of it takes."""
+        shown = (child for child in self.children if child.display)
+        return max((child.virtual_region_with_margin.bottom for child in shown), default=0)
+
     def put(self, question: Question) -> None:
         """Show a question."""
         self._question, self._aim = question, None
@@ -90,8 +96,6 @@ class Card(VerticalScroll):
 
     def _draw_details(self, question: Question) -> None:
         rows: list[tuple[str, str, Text]] = []
-        if question.caution:
-            rows.append((f"{UP} care", f"bold {CARE}", Text(safe(question.caution), style=CARE)))
         if question.red:
             rows.append(("red probe", f"bold {RED_LEAD}", Text(safe(question.red), style=f"bold {INK}")))
         if question.black:
@@ -101,6 +105,8 @@ class Card(VerticalScroll):
             rows.append((DESIGN if unit else "expect", QUIET, Text(safe(question.expected), style=INK)))
         if unit:
             rows.append((THIS_UNIT, f"bold {INK}", Text(safe(unit), style=f"bold {INK}")))
+        if question.caution:
+            rows.append((f"{UP} care", f"bold {CARE}", Text(safe(question.caution), style=CARE)))
         if question.why:
             rows.append(("because", QUIET, Text(safe(question.why), style=QUIET)))
         table = Table.grid(padding=(0, 2, 0, 0))

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from typing import Any
+from typing import Any, Final
 
 from rich.table import Table
 from rich.text import Text
@@ -13,6 +13,9 @@ from benchkit.session.front import ResultView
 from benchkit.ui.look import INK, QUIET, STRONG, VERDICT_COLOURS, VERDICT_ORDER, VERDICT_SHAPES, VERDICT_WORDS, safe
 from benchkit.ui.widgets.gauge import Gauge, Gauged
 from benchkit.ui.widgets.words import Words
+
+GAUGE_ROWS: Final = 3
+"""Rows of a gauge: mark, scale, figures."""
 
 
 def verdict_strip(verdict: Verdict | None) -> Text:
@@ -34,14 +37,31 @@ def result_line(result: ResultView) -> Text:
     colour = VERDICT_COLOURS[result.verdict]
     text = Text(no_wrap=True, overflow="crop")
     text.append(f"{VERDICT_SHAPES[result.verdict]} {VERDICT_WORDS[result.verdict]:<10}", style=f"bold {colour}")
-    text.append(safe(result.title), style=INK)
+    point, rest = pointed(safe(result.title))
+    text.append(point or rest, style=INK)
     text.append(f"  {safe(result.value_text)}", style=f"bold {STRONG}")
     limits = limits_words(result)
     if limits:
         text.append(f"  ({limits})", style=QUIET)
+    if point:
+        text.append(f"  {rest}", style=QUIET)
     for mark in marks_of(result):
         text.append(f"  {mark}", style=QUIET)
     return text
+
+
+def pointed(title: str) -> tuple[str, str]:
+    """Return the test point at the end of a title, and the rest of it; where a line is cut, the point stands first.
+
+    Examples
+    --------
+    >>> pointed("Emitter resistors: ohm.emitter.upper.1")
+    ('ohm.emitter.upper.1', 'Emitter resistors')
+    >>> pointed("Look the board over")
+    ('', 'Look the board over')
+    """
+    rest, found, point = title.rpartition(": ")
+    return (point, rest) if found and " " not in point else ("", title)
 
 
 def limits_words(result: ResultView) -> str:
@@ -97,6 +117,13 @@ class Outcome(Vertical):
         yield self._why
         yield self._earlier
 
+    @property
+    def drawing_rows(self) -> int:
+        """Rows that drawing and words of the newest result take where they are shown (at most two of words)."""
+        gauge = 0 if self._gauge.has_class("empty") else GAUGE_ROWS
+        words = len(str(self._why.render())) if not self._why.has_class("empty") else 0
+        return gauge + min(2, -(-words // max(1, self.size.width - 2)))
+
     def say(self, results: tuple[ResultView, ...], *, heading: str = "before this") -> None:
         """Show the newest of `results`, and the few before it."""
         self.display = bool(results)
@@ -108,12 +135,15 @@ class Outcome(Vertical):
         row.add_column(justify="right", no_wrap=True, overflow="crop")
         words = Text(no_wrap=True, overflow="crop")
         words.append(f" {heading}: ", style=QUIET)
+        point, rest = pointed(safe(result.title))
+        if point:
+            words.append(f"{point}  ", style=f"bold {INK}")
         words.append(safe(result.value_text), style=f"bold {STRONG}")
-        words.append(f"  {safe(result.title)}", style=INK)
+        words.append(f"  {rest}", style=INK)
         row.add_row(words, verdict_strip(result.verdict))
         self._head.say_drawn((result, heading), row)
         self._gauge.say(gauged(result))
-        self._gauge.display = result.low is not None or result.high is not None
+        self._gauge.set_class(result.low is None and result.high is None, "empty")
         why = Text(safe(result.why), style=INK)
         for mark in marks_of(result)[1 if result.odd else 0 :]:
             why.append(f"  {mark}", style=QUIET)

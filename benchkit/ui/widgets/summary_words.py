@@ -4,7 +4,11 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 
+from benchkit.procedure.securing import NOTHING_BROKEN
 from benchkit.session.front import ResultView, View
+from benchkit.ui.look import safe
+
+__all__ = ["NOTHING_BROKEN", "broken_words", "closing_sentence", "still_open"]
 
 
 def closing_sentence(view: View) -> str:
@@ -25,3 +29,16 @@ def still_open(results: Sequence[ResultView]) -> tuple[ResultView, ...]:
     """Return the results that did not pass, each item's newest only, in their order."""
     newest = {result.item: result for result in results}
     return tuple(result for result in newest.values() if result.verdict != "pass")
+
+
+def broken_words(broken: str) -> str:
+    """Return what became of a rehearsal's unit, from the names of the parts that have failed, or that none has.
+
+    Examples
+    --------
+    >>> broken_words("none")
+    'No part of the simulated unit was burnt.'
+    """
+    if broken == NOTHING_BROKEN:
+        return "No part of the simulated unit was burnt."
+    return f"BURNT in the simulated unit: {safe(broken)}."

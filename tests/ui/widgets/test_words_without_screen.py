@@ -11,8 +11,8 @@ from benchkit.session.front import Reply
 from benchkit.ui.widgets.answer_keys import keyed, typed_reply
 from benchkit.ui.widgets.card import progress_words, time_words
 from benchkit.ui.widgets.off_line import how_to_switch_off
-from benchkit.ui.widgets.outcome import limits_words, marks_of, verdict_strip
-from benchkit.ui.widgets.summary_words import closing_sentence, still_open
+from benchkit.ui.widgets.outcome import limits_words, marks_of, pointed, result_line, verdict_strip
+from benchkit.ui.widgets.summary_words import NOTHING_BROKEN, broken_words, closing_sentence, still_open
 from benchkit.ui.widgets.trail_words import count_by_verdict, trail
 from benchkit.ui.widgets.trim_words import TURNS, in_step, where
 from tests.ui.scripted import (
@@ -181,3 +181,25 @@ def test_what_is_still_open_counts_only_the_newest_of_each_item() -> None:
 )
 def test_a_reading_keeps_the_unit_of_its_target(value: float, target: float, text: str) -> None:
     assert in_step(value, target, "V") == text
+
+
+@pytest.mark.parametrize(
+    ("title", "point", "rest"),
+    [
+        ("Emitter drops: emitter.upper.1", "emitter.upper.1", "Emitter drops"),
+        ("Seen low at the unit: rail to rail", "", "Seen low at the unit: rail to rail"),
+        ("Rail to rail, and each rail to 0 V: ohm.rails", "ohm.rails", "Rail to rail, and each rail to 0 V"),
+        ("Look the board over", "", "Look the board over"),
+        ("", "", ""),
+    ],
+)
+def test_the_point_of_a_title_stands_first(title: str, point: str, rest: str) -> None:
+    assert pointed(title) == (point, rest)
+    line = result_line(replace(FAILED, title=title)).plain
+    assert point in line
+    assert line.index(point) <= line.index(FAILED.value_text)
+
+
+def test_what_broke_in_words() -> None:
+    assert broken_words(NOTHING_BROKEN) == "No part of the simulated unit was burnt."
+    assert broken_words("a: open; b: short") == "BURNT in the simulated unit: a: open; b: short."
