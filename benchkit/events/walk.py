@@ -95,7 +95,8 @@ class Judged(Event):
     """The verdict on a reading or a named rule.
 
     ``unit_low`` and ``unit_high`` are this unit's narrowed limits, where there were any; the verdict never comes from
-    them.  ``odd`` is true for a reading that lies outside them.
+    them.  ``odd`` is true for a reading that lies outside them.  ``rare`` is true for one that did not pass and lies
+    so near to the model's limits that a good unit may well read it; see `benchkit.judge.rare`.
     """
 
     name: ClassVar[str] = "judged"
@@ -112,6 +113,7 @@ class Judged(Event):
     unit_low: float | None = None
     unit_high: float | None = None
     odd: bool = False
+    rare: bool = False
 
 
 @dataclass(frozen=True, kw_only=True)

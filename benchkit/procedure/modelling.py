@@ -4,6 +4,8 @@ Rules
 -----
 * A verdict comes from the design's limits, or from the named rule.  A reading inside those and outside this unit's
   narrowed limits is *odd*: no failure by itself, but it is said, it stands in the record, and the suspects are asked.
+* A reading just outside the model's limits is *rare* and undecided; all readings together decide
+  (`benchkit.judge.rare`).
 * The model is asked aside: after each reading for the narrowed limits of those to come, and for suspects after a
   reading that failed or is odd, or a rule that failed.  Nothing waits for either.
 * Up to three extra readings are offered there, one after the other, from what the model calls most telling.  They are
@@ -30,6 +32,7 @@ from benchkit.events import (
     TrimEnded,
 )
 from benchkit.judge.limits import Limits
+from benchkit.judge.rare import is_rare
 from benchkit.judge.verdicts import judge_reading
 from benchkit.measure.readings import Reading
 from benchkit.measure.uncertainty import coverage_factor
@@ -85,10 +88,13 @@ class Modelling(Moves):
 
     def _verdict(self, item: Item, reading: Reading, limits: Limits) -> Judged:
         judgement = judge_reading(reading, limits, acceptance=item.acceptance)
+        of_model = item.limits is None and item.condition is not None
+        rare = of_model and judgement.verdict != "pass" and is_rare(reading, limits)
+        why = f"{judgement.why} It is so near that a good unit may read it." if rare else judgement.why
         return Judged(
-            item=item.id, subject=reading.point, verdict=judgement.verdict, value=reading.value, unit=reading.unit,
-            low=limits.low, high=limits.high, uncertainty=reading.standard_uncertainty,
-            probability=judgement.conformance_probability, why=judgement.why,
+            item=item.id, subject=reading.point, verdict="undecided" if rare else judgement.verdict,
+            value=reading.value, unit=reading.unit, low=limits.low, high=limits.high,
+            uncertainty=reading.standard_uncertainty, probability=judgement.conformance_probability, why=why, rare=rare,
         )  # fmt: skip
 
     def _reading_missed(self, state: State, event: ReadingMissed) -> Step:
@@ -144,7 +150,7 @@ class Modelling(Moves):
             if near or later:
                 asked.append(Narrow(item=item.id, after=state.count, known=known, near=near, later=later))
         explained = item.kind in ("measure", "rule", "trim")
-        wrong = event.odd or (event.verdict == "fail" and explained)
+        wrong = event.odd or event.rare or (event.verdict == "fail" and explained)
         if explained and state.attempts[item.id] > 1 and (state.suspecting or state.suspicion is not None):
             wrong = True  # what was said of the earlier reading no longer holds
         if item.kind == "supply" and event.verdict == "fail":

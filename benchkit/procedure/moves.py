@@ -10,6 +10,7 @@ from typing import Final
 
 from benchkit.events import Closed, Judged
 from benchkit.judge.limits import Limits
+from benchkit.judge.rare import MOST_RARE
 from benchkit.judge.verdicts import worst
 from benchkit.procedure import knowledge, questions
 from benchkit.procedure.actions import (
@@ -234,12 +235,22 @@ class Moves:
     def _next(self, state: State) -> Step:
         if state.stopped and not state.ever_on and self.item(state).kind == "off":
             return self._close(replace(state, index=len(self.plan)))
-        return self._enter(state, state.index + 1)
+        asked: tuple[Action, ...] = ()
+        if state.index + 1 == self.plan.made_safe and not state.stopped and any(one.rare for one in state.results):
+            state, asked = self._ask_suspects(state)  # all readings there are decide about the rare ones
+        after, actions = self._enter(state, state.index + 1)
+        return after, (*actions, *asked)
 
     def _close(self, state: State) -> Step:
         state = replace(state, phase="closing", extra="")
-        verdict = worst([result.verdict for result in state.results])
+        rare = self._rare_in_a_good_unit(state)
+        verdict = worst(["pass" if result in rare else result.verdict for result in state.results])
         why = ""
+        if verdict == "pass" and rare:
+            names = " and ".join(result.subject for result in rare)
+            why = (
+                f"{names} read just outside the limits of 99.73 % of good units; all readings together fit a good one."
+            )
         if verdict == "pass" and any(self._is_open(state, item) for item in self.plan.items):
             verdict, why = "undecided", "A reading that was asked for is missing."
         if state.stopped and verdict == "pass":
@@ -253,6 +264,14 @@ class Moves:
         status = state.stop_status or (0 if verdict == "pass" else 1)
         closed = Closed(count=state.count, verdict=verdict, stopped=state.stopped, exit_status=status, why=why)
         return state, (Write(item="", event=closed),)
+
+    def _rare_in_a_good_unit(self, state: State) -> tuple[Judged, ...]:
+        """The rare readings, when all readings together fit a good unit and there are few enough; else none."""
+        rare = tuple(result for result in state.results if result.rare)
+        suspicion = state.suspicion
+        if suspicion is None or state.suspecting or not suspicion.explained or self.suspects_a_fault(state):
+            return ()
+        return rare if len(rare) <= MOST_RARE else ()
 
     def _is_open(self, state: State, item: Item) -> bool:
         """An item that wants a result and has none, or only one from before that was passed over since."""

@@ -115,14 +115,16 @@ def deciding(item: Item, result: Judged | None, problem: str, *, way_out: bool, 
     last: the numbers and places of the others stay when it comes.
     """
     odd = result is not None and result.verdict == "pass"
+    rare = result is not None and result.rare
     if result is not None:
         said = {"fail": "failed", "undecided": "is undecided", "pass": "is odd for this unit"}[result.verdict]
+        said = "lies just outside the limits of good units" if rare else said
         what = f"{item.title} {said}."
         why = result.why
     else:
         what, why = f"{item.title}: there is no result.", problem
-    choices = [ON, AGAIN] if odd else [AGAIN]
-    if not odd and (item.may_go_on or way_out):
+    choices = [ON, AGAIN] if odd else [AGAIN, ON] if rare else [AGAIN]
+    if not (odd or rare) and (item.may_go_on or way_out):
         choices.append(GO_ON)
     if not way_out:
         choices.append(STOP)
@@ -131,6 +133,8 @@ def deciding(item: Item, result: Judged | None, problem: str, *, way_out: bool, 
     caution = "" if odd or item.may_go_on or way_out else "There is no way past this result but a better one."
     if odd:
         caution = "Inside the design's limits, so no failure: see what the other readings say."
+    if rare:
+        caution = "Rare, but no failure: measure again, then see what all readings together say."
     if way_out and item.point is not None and item.point.name in RAIL_POINTS:
         caution = "Hands off until every rail has been seen low. Going on ends the walk here: take the unit as live."
     return Question(

@@ -143,8 +143,13 @@ class Walk(Securing, Modelling):
             return self._probe(state)
         if event.choice == "again":
             return self._enter(replace(state, probes=""), state.index)
-        if event.choice == "go on" and not state.missing and result is not None and result.verdict == "pass":
-            return self._next(state)  # odd, but passed: there is nothing to pass over
+        if (
+            event.choice == "go on"
+            and not state.missing
+            and result is not None
+            and (result.verdict == "pass" or result.rare)
+        ):
+            return self._next(state)  # odd, or rare: there is no failure to pass over
         if event.choice == "go on":
             if not (item.may_go_on or self.way_out(state)):
                 raise IllegalEvent(f"{item.id} can't be passed over", "again, or make safe")

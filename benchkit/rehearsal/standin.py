@@ -96,6 +96,7 @@ class StandIn:
             case "hold":
                 return Reply(choice="yes", text="yes")
             case "confirm":
+                await self._wait_while(lambda view: view.suspects is not None and view.suspects.working)
                 return Reply(choice="yes")
             case "trim":
                 return self._trim(question)

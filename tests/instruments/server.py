@@ -158,6 +158,11 @@ class TwoOutputs(Scpi):
         with self.state_lock:
             return next(at for at, on in reversed(self.on_at) if not on)
 
+    def off_after(self, began: float) -> float:
+        """When both outputs first went off after a time, on the monotonic clock."""
+        with self.state_lock:
+            return next(at for at, on in self.on_at if at > began and not on)
+
     def wait_off(self, timeout_s: float) -> bool:
         end = time.monotonic() + timeout_s
         while time.monotonic() < end:

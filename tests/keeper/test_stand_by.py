@@ -14,30 +14,9 @@ from benchkit.events import Noted
 from benchkit.journal import read
 from benchkit.keeper.client import KeeperDied
 from benchkit.keeper.lifeline import SILENCE_S
-from tests.keeper.helpers import Bench, bench, gone, wait_until
+from tests.keeper.helpers import Bench, bench, gone, stand_by_of, wait_until
 
 pytestmark = pytest.mark.skipif(sys.platform == "win32", reason="POSIX signals")
-
-
-def stand_by_of(at: Bench) -> int:
-    """Wait until it has loaded what it needs: then it answers a question within a moment, here by using no time."""
-    wait_until(lambda: at.client.stand_by_pid is not None, 10)
-    pid = at.client.stand_by_pid
-    assert pid is not None
-    wait_until(lambda: idle(pid), 20)
-    return pid
-
-
-def idle(pid: int) -> bool:
-    """Whether a process that has begun uses hardly any time."""
-
-    def used_ticks() -> int:
-        fields = Path(f"/proc/{pid}/stat").read_text().rpartition(")")[2].split()
-        return int(fields[11]) + int(fields[12])
-
-    before = used_ticks()
-    time.sleep(0.4)
-    return before > 10 and used_ticks() - before <= 1
 
 
 def rails_up(at: Bench) -> None:

@@ -62,6 +62,11 @@ class Terminal:
                 return
             self.output.extend(found)
 
+    def read_to_the_end(self) -> None:
+        """Wait until all that the ended process wrote has been read."""
+        self._thread.join(10.0)
+        assert not self._thread.is_alive()
+
     def lines(self) -> list[str]:
         return self.file.read_text(encoding="utf-8").splitlines() if self.file.exists() else []
 
@@ -154,7 +159,7 @@ def test_a_terminal_that_stops_reading_does_not_hold_up_a_signal(terminal: Termi
 def test_an_error_of_our_own_is_one_sentence_and_five(terminal: Terminal) -> None:
     terminal.wait_for("off an error of benchkit's own")
     assert terminal.process.wait(8.0) == 5
-    time.sleep(0.1)
+    terminal.read_to_the_end()
     assert b"Traceback" not in terminal.output
     assert b"ZeroDivisionError" in terminal.output
     [log] = terminal.logs.iterdir()
