@@ -22,7 +22,7 @@ from benchkit.instruments.bench import Bench, BenchInstrument, link_settings
 from benchkit.instruments.link import Link
 from benchkit.instruments.lockfile import ResourceLock
 from benchkit.instruments.meter import Meter, RawReading
-from benchkit.instruments.numbers import visible
+from benchkit.instruments.names import demand_serial
 from benchkit.instruments.open_circuit import OnNoticed, try_open_circuit
 from benchkit.instruments.profile import meter_profile, supply_profile
 from benchkit.instruments.supply import OffOutcome, Supply
@@ -206,7 +206,7 @@ def _check_meter(table: BenchInstrument, checked: Checked, found: MeterChecked, 
         meter = Meter(Link("the meter", table.address, settings, TrafficLog()), profile)
         try:
             found.name = _wait(meter.identify(), "the meter's name", settings.open_timeout_s, progress)
-            demand_serial("meter", found.name, table.serial)
+            demand_serial("the meter", found.name, table.serial)
             for function in profile.functions:
                 one = _read(meter, function, progress)
                 found.readings.append(one)
@@ -249,7 +249,7 @@ def _check_supply(
         supply = Supply(Link("the supply", table.address, settings, log), profile)
         try:
             found.name = _wait(supply.identify(), "the supply's name", settings.open_timeout_s, progress)
-            demand_serial("supply", found.name, table.serial)
+            demand_serial("the supply", found.name, table.serial)
             found.before = _wait(supply.sample(), "the supply's settings", _ANSWER_S, progress).state
             if found.before.output_on is not False:
                 says = "An output is on already" if profile.questions.output else "It does not say whether it is on"
@@ -272,18 +272,6 @@ def _check_supply(
             supply.close(_CLOSE_S)
     finally:
         lock.release()
-
-
-def demand_serial(label: str, name: str, serial: str) -> None:
-    """Refuse an instrument that is not the one whose serial number the bench file pins."""
-    fields = [part.strip() for part in name.split(",")]
-    if serial and (len(fields) < 3 or fields[2] != serial):
-        raise InstrumentError(
-            "refused",
-            f"The {label} calls itself {visible(name)}",
-            f"the serial number {serial!r} of the bench file",
-            "Connect that one, or correct the bench file",
-        )
 
 
 def _wait(future: Future[T], what: str, within_s: float, progress: Progress) -> T:

@@ -30,3 +30,24 @@ def name_in(line: str, who: str) -> str:
             "Check the address, the line's settings and whether another program talks to it",
         )
     return line.strip()
+
+
+def demand_serial(label: str, name: str, serial: str) -> None:
+    """Refuse an instrument that is not the one that the bench file names.
+
+    Raises
+    ------
+    InstrumentError
+        ``refused`` when the third field of its name is not the pinned serial number.
+    """
+    if not serial:
+        return
+    fields = [part.strip() for part in name.split(",")]
+    found = fields[2] if len(fields) > 2 else ""
+    if found != serial:
+        raise InstrumentError(
+            "refused",
+            f"{label[0].upper()}{label[1:]} names itself {visible(name)}",
+            f"the serial number {serial!r} of the bench file",
+            "Connect the right one, or correct the bench file if it was exchanged",
+        )

@@ -14,7 +14,7 @@ from benchkit.errors import InstrumentError
 from benchkit.instruments.link import Link
 from benchkit.instruments.lockfile import ResourceLock
 from benchkit.instruments.meter import Meter
-from benchkit.instruments.numbers import visible
+from benchkit.instruments.names import demand_serial
 from benchkit.instruments.profile import meter_profile, supply_profile
 from benchkit.instruments.supply import Supply
 from benchkit.instruments.traffic import TrafficLog
@@ -138,24 +138,3 @@ def open_bench(bench: Mapping[str, Any], log: TrafficLog) -> Opened:
 def _library(table: Mapping[str, Any]) -> str:
     """Return the VISA library that a bench names for an instrument; "" is the usual one."""
     return str(table.get("library") or "")
-
-
-def demand_serial(label: str, name: str, serial: str) -> None:
-    """Refuse an instrument that is not the one that the bench file names.
-
-    Raises
-    ------
-    InstrumentError
-        ``refused`` when the third field of its name is not the pinned serial number.
-    """
-    if not serial:
-        return
-    fields = [part.strip() for part in name.split(",")]
-    found = fields[2] if len(fields) > 2 else ""
-    if found != serial:
-        raise InstrumentError(
-            "refused",
-            f"{label[0].upper()}{label[1:]} names itself {visible(name)}",
-            f"the serial number {serial!r} of the bench file",
-            "Connect the right one, or correct the bench file if it was exchanged",
-        )
