@@ -20,6 +20,7 @@ from benchkit import quantities
 from benchkit.errors import FileError
 from benchkit.procedure.file import MADE_SAFE, Procedure
 from benchkit.procedure.items import (
+    RAIL_LOW_V,
     Item,
     Joined,
     Plan,
@@ -128,12 +129,36 @@ def _require_checks(procedure: Procedure, design: Design, items: tuple[Item, ...
             "a walk that was cut off would go on behind the checks of limit and trimmer",
             "resume = true in the section of the first of them, or before it",
         )
-    seen = {item.point.name for item in items if item.section == MADE_SAFE and item.point is not None}
+    _require_way_out(procedure, design, items)
+
+
+def _require_way_out(procedure: Procedure, design: Design, items: tuple[Item, ...]) -> None:
+    """Refuse a last section that gives power, or that lets rails pass which are not low: every stop leads there."""
+    last = [item for item in items if item.section == MADE_SAFE]
+    for item in last:
+        if item.raises or item.kind in ("supply", "limit check", "lamp", "trim"):
+            raise FileError(
+                procedure.file,
+                f"step {item.id}",
+                "gives power in the section that every stop leads to, whatever failed before",
+                f"section {MADE_SAFE} only switches off, waits and reads",
+                "Put it into a section before",
+            )
+    seen = {item.point.name for item in last if item.point is not None and _sees_low(item)}
     rails = {"rail+"} if design.single_supply else {"rail+", "rail-"}
     if not rails <= seen:
         raise FileError(
             procedure.file,
             f"section {MADE_SAFE}",
             "nobody sees the rails low at the end",
-            f"readings of {' and '.join(sorted(rails))}",
+            f"readings of {' and '.join(sorted(rails))}, by a step of the kind 'discharge' or with limits of at most "
+            f"{quantities.show(RAIL_LOW_V, 'V')} either way",
         )
+
+
+def _sees_low(item: Item) -> bool:
+    """Whether a reading passes only where a rail is low."""
+    limits = item.limits
+    if item.kind not in ("discharge", "measure") or limits is None or limits.low is None or limits.high is None:
+        return False
+    return -RAIL_LOW_V <= limits.low <= 0.0 <= limits.high <= RAIL_LOW_V

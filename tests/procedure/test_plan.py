@@ -469,3 +469,41 @@ def test_the_shipped_files_are_the_ones_tested() -> None:
     assert TERN.is_file()
     assert "made-safe" in SMALL
     assert item_of(small(), "power.on").positive_v == 2.5
+
+
+LIVE_END = """
+[[section.step]]
+name = "again"
+kind = "supply"
+title = "Up again"
+rails = "full"
+limit = "for least bias"
+do = "Up."
+"""
+
+
+def test_no_power_is_given_in_the_section_that_every_stop_leads_to() -> None:
+    with pytest.raises(FileError, match="gives power in the section that every stop leads to"):
+        make_plan(parse_procedure(SHIPPED.read_text(encoding="utf-8") + LIVE_END, "p.toml"), tern())
+
+
+@pytest.mark.parametrize(
+    "limits", ['{ low = "-1 kV", high = "1 kV" }', '{ low = "0 V", high = "1.1 V" }', '{ high = "1 V" }']
+)
+def test_rails_that_are_not_low_do_not_end_a_walk(limits: str) -> None:
+    text = SHIPPED.read_text(encoding="utf-8")
+    low = text[: text.index('kind = "discharge"')].rindex("[[section.step]]")
+    end = text.index("[[section.step]]", low + 1)
+    step = f"""[[section.step]]
+name = "rails"
+kind = "measure"
+title = "Rails"
+points = ["rail+", "rail-"]
+limits = {limits}
+do = "Read."
+
+"""
+    with pytest.raises(FileError, match="nobody sees the rails low at the end"):
+        make_plan(parse_procedure(text[:low] + step + text[end:], "p.toml"), tern())
+    good = step.replace(limits, '{ low = "-1 V", high = "1 V" }')
+    make_plan(parse_procedure(text[:low] + good + text[end:], "p.toml"), tern())
