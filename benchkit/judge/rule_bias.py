@@ -22,6 +22,7 @@ from benchkit.judge.rule_base import (
     resistance,
 )
 from benchkit.judge.rule_currents import emitter_points
+from benchkit.judge.rare import widened
 from benchkit.judge.verdicts import judge, judge_reading
 from benchkit.measure.readings import Reading
 from benchkit.measure.uncertainty import combine
@@ -41,8 +42,8 @@ JUNCTION_TEMPERATURE_DOUBT_K = 15.0
 def junction_drop(number: float, facts: RuleFacts) -> tuple[RuleResult, ...]:
     """Whether each transistor's base-emitter junction shows what a conducting one shows: one result a junction.
 
-    VBE (V) within the model's limits at its current where they are given, otherwise about `number` (0.35 V below to
-    0.2 V above). Usual number: 0.7 V. Source: the model; without it common practice.
+    VBE (V) within the model's limits at its current, widened by what is rare (`benchkit.judge.rare`), where they are
+    given, otherwise about `number` (0.35 V below to 0.2 V above). Usual number: 0.7 V. Source: the model; without it common practice.
     """
     rule = "junction drop"
     points = [point for point in facts.readings if point.endswith(".vbe")]
@@ -57,6 +58,8 @@ def junction_drop(number: float, facts: RuleFacts) -> tuple[RuleResult, ...]:
             limits = Limits(
                 number - JUNCTION_BELOW_V, number + JUNCTION_ABOVE_V, number, "V", "common practice for silicon"
             )
+        else:
+            limits = widened(limits)  # the reading itself has been judged; what is rare there is no failure here
         judged = judge_reading(facts.readings[point], limits, coverage=facts.coverage)
         advice = "A better meter, or more current" if by_model else "The model's limits at this junction's current"
         results.append(

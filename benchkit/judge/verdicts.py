@@ -23,7 +23,7 @@ from typing import Final, Literal
 from benchkit.judge.limits import Limits
 from benchkit.measure.readings import Reading
 from benchkit.measure.uncertainty import coverage_factor
-from benchkit.quantities import Overload, show
+from benchkit.quantities import Overload, show, show_within
 
 Verdict = Literal["pass", "fail", "undecided"]
 Acceptance = Literal["guarded", "simple", "guarded rejection"]
@@ -133,7 +133,7 @@ def judge(
     outside = (limits.low is not None and value < limits.low - away) or (
         limits.high is not None and value > limits.high + away
     )
-    shown = f"{show(value, limits.unit)} ± {show(expanded, limits.unit, 2)}"
+    shown = f"{show_within(value, limits.unit, expanded)} ± {show(expanded, limits.unit, 2)}"
     verdict: Verdict
     if acceptance != "guarded" and limits.width < 2.0 * expanded:
         verdict, why = "undecided", f"The meter's {shown} is wider than the limits, {limits}."
