@@ -8,6 +8,7 @@ from dataclasses import replace
 
 from benchkit.errors import ModelError
 from benchkit.judge.limits import Limits
+from benchkit.judge.rare import widened
 from benchkit.judge.rule_base import (
     Current,
     Resistance,
@@ -22,7 +23,6 @@ from benchkit.judge.rule_base import (
     resistance,
 )
 from benchkit.judge.rule_currents import emitter_points
-from benchkit.judge.rare import widened
 from benchkit.judge.verdicts import judge, judge_reading
 from benchkit.measure.readings import Reading
 from benchkit.measure.uncertainty import combine
@@ -43,7 +43,8 @@ def junction_drop(number: float, facts: RuleFacts) -> tuple[RuleResult, ...]:
     """Whether each transistor's base-emitter junction shows what a conducting one shows: one result a junction.
 
     VBE (V) within the model's limits at its current, widened by what is rare (`benchkit.judge.rare`), where they are
-    given, otherwise about `number` (0.35 V below to 0.2 V above). Usual number: 0.7 V. Source: the model; without it common practice.
+    given, otherwise about `number` (0.35 V below to 0.2 V above). Usual number: 0.7 V. Source: the model; without it
+    common practice.
     """
     rule = "junction drop"
     points = [point for point in facts.readings if point.endswith(".vbe")]
