@@ -11,6 +11,7 @@ import pytest
 
 from benchkit import __version__, cli
 from benchkit.errors import BenchkitError, EntryError, InstrumentError
+from benchkit.journal.locking import try_lock
 from tests.procedure.driver import SHIPPED, SMALL, begun, small
 from tests.record.walks import write
 from tests.stage.designs import BREADBOARD
@@ -225,11 +226,30 @@ def test_expect_for_people_and_for_programs(run: Run) -> None:
     assert full["points"] == found["points"]
 
 
+def test_a_rail_beyond_the_designs_is_said(run: Run) -> None:
+    arguments = ("expect", "tern-40", "--units", "60", "--positive", "99V")
+    words = "the positive rail of 99.00 V (the design's is 35.00 V) is beyond"
+    assert words in " ".join(run(*arguments)[1].split())
+    status, out, err = run(*arguments, "--json")
+    assert status == 0
+    assert words in err
+    assert json.loads(out)["conditions"]["positive_v"] == 99.0
+    assert "beyond what" not in run("expect", "tern-40", "--units", "60", "--positive", "15V")[1]
+
+
 @pytest.mark.parametrize("plant", ["nothing", "emitter.upper.9: open", "emitter.upper.1: tired", "emitter.upper.1"])
 def test_a_fault_that_cannot_be_planted(run: Run, plant: str, tmp_path: Path) -> None:
     status, _, err = run("rehearse", "--stand-in", "--plain", "--plant", plant, "--records", tmp_path)
     assert status == 2
-    assert one_sentence(err)
+    assert not one_sentence(err).endswith("came.")
+    assert any(words in err for words in ("Expected a part and a fault with a colon", "one of "))
+
+
+def test_a_part_that_is_none_is_answered_with_the_parts(run: Run, tmp_path: Path) -> None:
+    status, _, err = run("rehearse", "--stand-in", "--plain", "--plant", "frob.1: open", "--records", tmp_path)
+    assert status == 2
+    sentence = one_sentence(err)
+    assert all(part in sentence for part in ("spreader.trimmer", "emitter.upper.1", "driver.lower"))
     assert list(tmp_path.iterdir()) == []
 
 
@@ -318,6 +338,28 @@ def test_verify_has_statuses_of_its_own(run: Run, tmp_path: Path) -> None:
     assert str(len(drive.told)) in out
     path.write_bytes(whole.replace(b"Mara", b"Nara", 1))
     assert run("record", "verify", path)[0] == 2
+
+
+def test_one_record_that_cannot_be_read_keeps_none_from_being_verified(run: Run, tmp_path: Path) -> None:
+    drive = begun(small())
+    drive.to_end()
+    good = write(tmp_path / "a.jsonl", [event for event, _ in drive.told])
+    for order in ((good, tmp_path / "nope"), (tmp_path / "nope", good)):
+        status, out, err = run("record", "verify", *order)
+        assert status == 2
+        assert f"{good}: whole" in out
+        assert "nope" in one_sentence(err)
+
+
+@pytest.mark.parametrize("command", ["rehearse", "walk"])
+def test_a_record_in_use_is_refused_before_anything_is_said(run: Run, tmp_path: Path, command: str) -> None:
+    drive = begun(small()).until("power.full")
+    path = write(tmp_path / "a.jsonl", [event for event, _ in drive.told])
+    with path.open("rb") as held:
+        assert try_lock(held.fileno())
+        status, out, err = run(command, "--plain", "--resume", path)
+    assert (status, out) == (2, "")
+    assert "another process is writing this record" in one_sentence(err)
 
 
 @pytest.mark.parametrize("command", ["show", "table"])

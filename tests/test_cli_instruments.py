@@ -78,6 +78,10 @@ def test_from_nothing_to_a_bench_file_by_typing_what_is_printed(
     assert "Type yes to switch it on" in err
     assert "confirmed" in out
     assert "benchkit walk --design my-stage.toml --bench bench.toml" in out
+    # This meter says 0.012345 whatever it is asked.
+    said = " ".join(out.split())
+    assert "The meter reads 0.01235 ohm on ohms with nothing connected" in said
+    assert "All that was tried worked" not in said
     assert [on for _, on in supply.on_at if on] == [True]
     assert not supply.is_on
 
@@ -164,6 +168,29 @@ def test_identify_what_can_name_nothing_is_wrong_input(run: Run, word: str) -> N
     assert (status, out) == (2, "")
     assert err.startswith("benchkit: ")
     assert len(err.splitlines()) == 1
+
+
+def test_identify_one_that_answers_no_profile_is_instrument_trouble_and_says_what_came(
+    run: Run, meter: TestMeter, tmp_path: Path
+) -> None:
+    profile = tmp_path / "odd.toml"
+    profile.write_text('format = 1\nkind = "meter"\n[link]\ntimeout_s = 0.3\n[functions]\nohms = "*IDN?"\n')
+    status, out, _ = run("identify", meter.address, "--profile", profile)
+    assert status == 3
+    said = " ".join(out.split())
+    assert "Own,Test Meter,M-1,1.0" in said
+    # Which question, what came, what was expected.
+    assert (
+        f"ohms: The instrument at {meter.address} answered *IDN?: the reply was 'Own,Test Meter,M-1,1.0'; expected "
+        in said
+    )
+
+
+@pytest.mark.parametrize("word", ["TCPIP::foo", "TCPIP::no-such-host.invalid::5025::SOCKET"])
+def test_identify_speaks_of_the_address_and_of_no_bench_file(run: Run, word: str) -> None:
+    status, out, _ = run("identify", word, "--profile", "scpi-meter")
+    assert status == 3
+    assert "bench file" not in out
 
 
 def test_identify_with_a_profile_that_is_not_there(run: Run) -> None:

@@ -18,7 +18,10 @@ import pytest
 import benchkit
 from benchkit import cli, errors, shipped
 from benchkit.instruments.bench import parse_bench
-from benchkit.instruments.profile import meter_profile, profile_table, shipped_names
+from benchkit.instruments.profile import MeterProfile, SupplyProfile, meter_profile, profile_table, shipped_names
+from benchkit.instruments.profile_parts import LinePart, LinkPart, NumbersPart, Part, TimingPart
+from benchkit.instruments.profile_supply import Answers, Outputs, SupplyCommands, SupplyQuestions
+from benchkit.measure.readings import FUNCTIONS
 from benchkit.procedure import file as procedure_file
 from benchkit.record.show import DEFERENCE
 from benchkit.stage.design import parse_design
@@ -202,6 +205,18 @@ def test_what_comes_along_is_named() -> None:
 def test_every_profile_that_comes_along_is_named() -> None:
     for name in shipped_names():
         assert f"`{name}`" in README, name
+
+
+def test_every_key_of_a_profile_is_named() -> None:
+    section = README.partition("### Profiles")[2].partition("### Readings")[0]
+    table = "".join(line for line in section.splitlines() if line.startswith("|"))
+    parts: list[type[Part]] = [MeterProfile, SupplyProfile, LinkPart, LinePart, NumbersPart, TimingPart]
+    parts += [Outputs, SupplyCommands, SupplyQuestions, Answers]
+    keys = {key for part in parts for key in part.model_fields} | set(FUNCTIONS)
+    assert {key for key in keys if f"`{key}`" not in table and f"`[{key}]`" not in table and key != "line"} == set()
+    named = set(re.findall(r"`(\[?[a-z_]+(?:\.[a-z]+)?\]?)`", table))
+    others = {"meter", "supply", "based_on", "[link.line]"}
+    assert {name for name in named if name.strip("[]") not in keys and name not in others} == set()
 
 
 def test_every_kind_of_step_is_named() -> None:

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+import re
 from typing import Any
 
 import pytest
@@ -10,7 +11,8 @@ from hypothesis import given
 from hypothesis import strategies as st
 
 from benchkit.errors import EntryError
-from benchkit.quantities import Overload, Tolerance, parse, parse_reading, parse_tolerance, quoted, show
+from benchkit.quantities import Overload, Tolerance, parse, parse_reading, parse_tolerance, quoted, show, show_within
+from benchkit.quantities.units import wanted
 
 UNITS = ["V", "A", "ohm", "F", "degC", "K", "K/W", "J/K", "s", "W", "Hz", "%"]
 BOUNDS = {
@@ -138,7 +140,7 @@ def test_refusals_say_what_to_write_instead() -> None:
         parse("12,3 mV", "V")
     assert str(caught.value) == (
         '"12,3 mV" holds a comma, which can mean a decimal point or thousands. Expected a voltage, such as "12.3 mV" '
-        'or "0.0123". Write the number with a point and without separators.'
+        'or "0.0123 V". Write the number with a point and without separators.'
     )
 
 
@@ -301,3 +303,45 @@ def test_tolerance_reads_back(value: float, percent: float) -> None:
     found = parse_tolerance(f"{show(value, 'ohm', 17)} {show(percent, '%', 17)}", "ohm")
     assert found.value == value
     assert found.fraction == pytest.approx(percent / 100, rel=1e-15)
+
+
+@pytest.mark.parametrize("unit", UNITS)
+def test_the_examples_of_a_refusal_carry_their_unit_and_can_be_read(unit: str) -> None:
+    examples = re.findall('"([^"]+)"', wanted(unit))
+    assert examples
+    for example in examples:
+        assert not re.fullmatch(r"[-+0-9.eE]+", example), f"{example} leaves its unit out"
+        assert math.isfinite(parse(example, unit))
+
+
+@pytest.mark.parametrize(
+    ("value", "unit", "uncertainty", "shown"),
+    [
+        (610e-9, "V", 4e-6, "0.6 uV"),
+        (80e-9, "V", 4e-6, "0.1 uV"),
+        (2e-6, "V", 4.04e-6, "2.0 uV"),
+        (86e-6, "V", 400e-6, "90 uV"),
+        (-1e-9, "V", 4e-6, "0.0 uV"),
+        (-80e-9, "V", 4e-6, "-0.1 uV"),
+        (0.0, "V", 4e-6, "0.0 uV"),
+        (12.3456e-3, "V", 0.2e-3, "12.35 mV"),
+        (12.3456e-3, "V", 2e-3, "12.3 mV"),
+        (35.012, "V", 0.2, "35.01 V"),
+        (0.22, "ohm", 0.05, "0.220 ohm"),
+        (0.01, "ohm", 0.05, "0.010 ohm"),
+        (12.3456e-3, "V", None, "12.35 mV"),
+        (12.3456e-3, "V", 0.0, "12.35 mV"),
+        (None, "V", 1.0, "no number"),
+        (Overload(), "V", 1.0, "overload"),
+    ],
+)
+def test_no_digit_is_shown_below_the_uncertainty(
+    value: float | Overload | None, unit: str, uncertainty: float | None, shown: str
+) -> None:
+    assert show_within(value, unit, uncertainty) == shown
+
+
+@given(st.floats(-270.0, 9e3), st.floats(1e-9, 1e3), st.sampled_from(["V", "A", "ohm", "degC"]))
+def test_what_is_left_out_is_small_beside_the_uncertainty(value: float, uncertainty: float, unit: str) -> None:
+    text = show_within(value, unit, uncertainty, 17)
+    assert abs(parse(text, unit) - value) <= 0.05 * uncertainty * (1 + 1e-9) + 1e-11

@@ -68,7 +68,7 @@ def instruments_identify(
 
     ADDRESS is as VISA writes it; a host alone or a serial port will do. No output is switched, no voltage and no limit
     is set. A meter's function or a supply's selected output may change, and what an instrument doesn't understand may
-    make it beep.
+    make it beep. The exit status is 3 when one says no name, or answers no profile's questions.
     """
     from benchkit.instruments.identified import addresses_for, candidates
     from benchkit.instruments.identifying import identify
@@ -86,7 +86,7 @@ def instruments_identify(
         from benchkit.ui.instruments_text import identified_lines
 
         click.echo("\n".join(identified_lines(found, visa)))
-    return 0 if all(one["name"] for one in found) else 3
+    return 0 if all(one["fits"] for one in found) else 3
 
 
 @instruments.command(
@@ -137,7 +137,8 @@ def instruments_write(
         name=name, library=visa or "@py", meter=asked.get("meter"), supply=asked.get("supply")
     )
     starting_file.write_starting_file(path, starting, force=force)
-    click.echo("\n".join(written_lines(str(path), starting_file.still_to_fill_in(starting))))
+    known = [one.as_json() for one in asked.values()]
+    click.echo("\n".join(written_lines(str(path), starting_file.still_to_fill_in(starting), known)))
     return 0
 
 

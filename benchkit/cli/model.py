@@ -54,6 +54,10 @@ def expect(
 
         click.echo("\n".join(expect_lines(loaded, condition, found, loads_ohm)))
         return 0
+    from benchkit.ui.expect_text import beyond_the_design
+
+    if caution := beyond_the_design(loaded, condition):
+        click.echo(caution, err=True)
     if full:
         from benchkit.stage.more_expected import more_json
 

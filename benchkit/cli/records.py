@@ -23,16 +23,26 @@ def record() -> None:
 @click.argument("records", nargs=-1, required=True, type=click.Path(path_type=Path), metavar="RECORD...")
 @click.option("--json", "as_json", is_flag=True, help="For programs: one object a line.")
 def record_verify(records: tuple[Path, ...], as_json: bool) -> int:
-    """Check that records are whole: 0 whole and closed, 1 unfinished or torn at the end, 2 broken."""
+    """Check that records are whole: 0 whole and closed, 1 unfinished or torn at the end, 2 broken or unreadable."""
+    from benchkit.errors import RecordError
     from benchkit.record import verify
 
-    found = [verify.load(path) for path in records]
-    for one in found:
+    found = []
+    unreadable = 0
+    for path in records:
+        try:
+            one = verify.load(path)
+        except RecordError as error:
+            # The others are looked at all the same.
+            click.echo(f"benchkit: {error}", err=True)
+            unreadable = error.exit_status
+            continue
+        found.append(one)
         if as_json:
             print_json(one.as_json())
         else:
             click.echo(one.as_text())
-    return verify.worst(found)
+    return max(verify.worst(found), unreadable)
 
 
 @record.command(

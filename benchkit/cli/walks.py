@@ -40,6 +40,7 @@ def rehearse(**options: Any) -> int:
     """Rehearse a walk on a simulated unit, with simulated instruments that answer over real sockets."""
     from benchkit.ui import launch
 
+    _demand_free(options["resume_path"])
     return launch.rehearse(**options)
 
 
@@ -73,4 +74,27 @@ def walk(**options: Any) -> int:
     """Walk through a procedure on a real unit."""
     from benchkit.ui import launch
 
+    _demand_free(options["resume_path"])
     return launch.walk(**options)
+
+
+def _demand_free(record: Path | None) -> None:
+    """Refuse a record that another process is writing before anything is said or started for it.
+
+    Whoever goes on with it takes its lock for good later on; this look only spares a person a false start.
+    """
+    from benchkit.errors import RecordError
+    from benchkit.journal.locking import try_lock
+
+    if record is None:
+        return
+    try:
+        with record.open("rb") as file:
+            free = try_lock(file.fileno())
+    except OSError:
+        # What is wrong with it is said where it is read.
+        return
+    if not free:
+        raise RecordError(
+            str(record), "", "another process is writing this record", "nobody else", "Close the other benchkit first"
+        )

@@ -18,6 +18,7 @@ from __future__ import annotations
 
 import os
 import re
+from collections.abc import Callable
 from dataclasses import dataclass
 from typing import Literal
 
@@ -46,7 +47,9 @@ _USB = re.compile(
 )
 _IPV6 = re.compile(r"TCPIP[0-9]*::\[?[0-9a-f]*:[0-9a-f:.]*\]?(?:::\S*)?", re.IGNORECASE)
 _OTHER = re.compile(r"(GPIB|USB|PXI|VXI|VICP|PRLGX|FIREWIRE)[^:\s]*::\S.*", re.IGNORECASE)
-_BOARD_0 = re.compile(r"^(TCPIP|USB|GPIB)0(?=::)")
+_GPIB_BOARD_0 = re.compile(r"^GPIB0+(?=::)")
+_CLASSES = ("::INSTR", "::SOCKET", "::RAW", "::INTFC", "::BACKPLANE", "::MEMACC", "::SERVANT")
+_HISLIP_PORT = 4880
 
 
 @dataclass(frozen=True)
@@ -110,20 +113,34 @@ def parse_address(text: str, library: str = PURE_LIBRARY) -> Address:
             "bad address",
             f"The host in {text!r} is no name and no IPv4 address",
             "a host name or an IPv4 address; IPv6 can't be written there",
-            "Give the host a name, and name it in the bench file",
+            "Give the host a name, and put that into the address",
         )
-    raise InstrumentError(
-        "bad address", f"{text!r} is no address of an instrument", FORM, "Correct it in the bench file"
-    )
+    raise InstrumentError("bad address", f"{text!r} is no address of an instrument", FORM, "Correct the address")
 
 
-def plain_address(text: str) -> str:
-    """Return what two spellings of one address have in common: capitals, board 0, other names of a serial port."""
+def plain_address(text: str, number_of: Callable[[str], str] = str.upper) -> str:
+    """Return what all spellings of one address have in common.
+
+    Capitals, leading zeros, what VISA fills in when it is left out (``::INSTR``, ``::inst0``, HiSLIP's port, the USB
+    interface), other names of a serial port, and the board of a network or USB address, which isn't looked at when
+    such a link is opened, make no difference.
+
+    Parameters
+    ----------
+    text : str
+        The address.
+    number_of : callable, optional
+        What to write for a host, such as the number that it has; its name in capitals without it.
+    """
     wanted = text.strip()
-    serial = _SERIAL.fullmatch(wanted)
-    if serial is not None and os.path.isabs(serial["device"]):
-        return f"ASRL{os.path.realpath(serial['device'])}::INSTR"
-    return _BOARD_0.sub(r"\1", wanted.upper())
+    for whole in (wanted, f"{wanted}::INSTR"):
+        for kind, form in _FORMS:
+            if match := form.fullmatch(whole):
+                return _plain(kind, match, number_of).upper() if kind != "serial" else _plain_serial(match["device"])
+    other = wanted.upper()
+    if not other.endswith(_CLASSES):
+        other += "::INSTR"
+    return re.sub(r"(?<![0-9A-Z.])0+(?=[0-9])", "", _GPIB_BOARD_0.sub("GPIB", other))
 
 
 _FORMS: tuple[tuple[Kind, re.Pattern[str]], ...] = (
@@ -133,6 +150,33 @@ _FORMS: tuple[tuple[Kind, re.Pattern[str]], ...] = (
     ("serial", _SERIAL),
     ("usb", _USB),
 )
+
+
+def _plain(kind: Kind, match: re.Match[str], number_of: Callable[[str], str]) -> str:
+    """Return a network or USB address with all that VISA fills in."""
+    if kind == "usb":
+        _, maker, model, serial, *others = match[0].split("::")
+        interface = int(others[0]) if len(others) > 1 else 0
+        return f"USB::{_number(maker)}::{_number(model)}::{serial}::{interface}::INSTR"
+    host = number_of(match["host"])
+    port = int(match["port"] or 0)
+    if kind == "socket":
+        return f"TCPIP::{host}::{port}::SOCKET"
+    if kind == "hislip":
+        return f"TCPIP::{host}::{match['device']},{port or _HISLIP_PORT}::INSTR"
+    return f"TCPIP::{host}{f',{port}' if port else ''}::{match['device'] or 'inst0'}::INSTR"
+
+
+def _plain_serial(device: str) -> str:
+    """Return a serial port's address: the file that a path leads to, or a numbered port."""
+    if os.path.isabs(device):
+        return f"ASRL{os.path.realpath(device)}::INSTR"
+    digits = re.fullmatch(r"(?:COM)?([0-9]+)", device.upper())
+    return f"ASRL{int(digits[1]) if digits else device.upper()}::INSTR"
+
+
+def _number(text: str) -> int:
+    return int(text, 16) if text.lower().startswith("0x") else int(text)
 
 
 def _port(text: str, digits: str | None) -> int | None:

@@ -57,7 +57,7 @@ from benchkit.instruments.profile import (
 )
 from benchkit.instruments.profile_parts import Date, Format, LinePart, Part, Text
 from benchkit.instruments.settings import PURE_LIBRARY, LinkSettings
-from benchkit.measure.accuracy import STATED_DEFAULT, Accuracy, accuracy_from_rows
+from benchkit.measure.accuracy import STATED_DEFAULT, SUPPLY_READOUT, Accuracy, accuracy_from_rows
 from benchkit.quantities import parse
 
 DEFAULT_INPUT_RESISTANCE_OHM = 10e6
@@ -335,8 +335,9 @@ def _check_address(label: str, table: _Instrument, file_name: str, library: str)
 
 def _accuracy(label: str, table: _Instrument, file_name: str, cautions: list[str]) -> Accuracy:
     if not table.accuracy:
-        cautions.append(f"The bench file states no accuracy for the {label}; taken as: {STATED_DEFAULT.name}.")
-        return STATED_DEFAULT
+        assumed = STATED_DEFAULT if label == "meter" else SUPPLY_READOUT
+        cautions.append(f"The bench file states no accuracy for the {label}; taken as: {assumed.name}.")
+        return assumed
     try:
         return accuracy_from_rows(f"the {label}", table.accuracy, f"the bench file {file_name}")
     except BenchkitError as error:

@@ -10,8 +10,9 @@ Rules
 
 from __future__ import annotations
 
+import math
 import time
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from concurrent.futures import Future
 from dataclasses import asdict, dataclass, field
 from typing import Any, Protocol, TypeVar
@@ -28,11 +29,25 @@ from benchkit.instruments.profile import meter_profile, supply_profile
 from benchkit.instruments.supply import OffOutcome, Supply
 from benchkit.instruments.traffic import TrafficLog
 from benchkit.measure.readings import FUNCTIONS
+from benchkit.quantities import show
 
 T = TypeVar("T")
 
 NEEDED = ("dc volts", "ohms")
 """The functions that every walk needs; a meter that lacks another is a caution."""
+
+OPEN_LEADS = {
+    "dc volts": (0.0, 1.0),
+    "ac volts": (0.0, 10.0),
+    "dc current": (0.0, 1e-3),
+    "ohms": (1e6, math.inf),
+    "ohms 4-wire": (1e6, math.inf),
+    "diode": (1.0, math.inf),
+}
+"""Between what a meter may read with open leads, in the function's unit: wide bounds of our own."""
+
+_SAME = 3
+"""As many functions that read the very same number, not nought, are a doubt."""
 
 _ANSWER_S = 30.0
 _CLOSE_S = 1.0
@@ -217,10 +232,41 @@ def _check_meter(table: BenchInstrument, checked: Checked, found: MeterChecked, 
                         f"The meter gave no reading of {function}: enter such readings by hand, or leave the function "
                         "out of the profile."
                     )
+            checked.cautions += doubts(found.readings)
         finally:
             meter.close(_CLOSE_S)
     finally:
         lock.release()
+
+
+def doubts(readings: Sequence[FunctionChecked]) -> list[str]:
+    """Return what can't be so with nothing connected to the meter, or looks as if it never switched its function.
+
+    Parameters
+    ----------
+    readings : sequence of FunctionChecked
+        One of each function.
+    """
+    said = []
+    for one in readings:
+        least, most = OPEN_LEADS.get(one.function, (0.0, math.inf))
+        if one.value is not None and not least <= abs(one.value) <= most:
+            unit = FUNCTIONS[one.function]
+            expected = (
+                f"at most {show(most, unit, 2)}" if least == 0.0 else f"overload, or at least {show(least, unit, 2)}"
+            )
+            said.append(
+                f"The meter reads {show(one.value, unit)} on {one.function} with nothing connected."
+                f" Expected {expected}. Take off what is connected, and look whether the meter's own display agrees."
+            )
+    for value in dict.fromkeys(one.value for one in readings if one.value):
+        same = [one.function for one in readings if one.value == value]
+        if len(same) >= _SAME:
+            said.append(
+                f"The meter gave the same number, {value:.6g}, on {', '.join(same)}. Expected different ones. Look"
+                " whether its display switches over; if not, the profile doesn't fit it."
+            )
+    return said
 
 
 def _read(meter: Meter, function: str, progress: Progress) -> FunctionChecked:
@@ -268,6 +314,11 @@ def _check_supply(
                 state = found.powered
                 if profile.has_over_voltage and state is not None and state.protection_positive_v is None:
                     checked.cautions.append("The supply's over-voltage protection was set and could not be read back.")
+            if found.not_powered:
+                checked.cautions.append(
+                    "The supply was not switched on: nobody has seen yet that it comes on, and goes off when"
+                    " benchkit says so."
+                )
         finally:
             supply.close(_CLOSE_S)
     finally:

@@ -12,8 +12,13 @@ Rules
   arrive at the new one.  On one and the same wire (serial, USB, VXI-11) it can; there the mark has to come on the new
   link too if it ever came.  An instrument without any is in step there after silence as long as a whole time-out, and
   its name: as sure as silence is, no more.
-* What this can't find: an answer that comes twice by itself on a link that never failed, the second time only after
-  the next question was sent.
+* A question that is *closed* is followed by a mark of its own on a link that never failed, too: a copy of an earlier
+  answer that comes only after the question was sent shows by the line that it leaves before that mark, and would shift
+  all later answers.  A meter's readings are closed.  A look at the supply is not: marks write into the instrument at
+  each look, "off" must not wait for one, and looks are so far apart that what was left over is found before the next.
+* What this can't find: such a copy before an answer that isn't closed, until the line that is left over waits before a
+  question; in a closed one, a copy that comes when the true answer is lost, both within this question; and nothing is
+  closed for an instrument without marks.
 * Bytes that wait before a question was asked, or behind an answer, make the link dirty too.
 * Only questions are ever repeated, once.  A setting is never sent twice by itself: it is read back.  The exception is
   what `Conversation.tell_at_once` sends, "off", which may be said any number of times.
@@ -48,6 +53,7 @@ IDENTIFY = "*IDN?"
 _QUIET_S = 0.02
 _SHORT_SILENCE_S = 0.1
 _MARK_S = 1.0
+_MARK_TRIES = 2
 _MOST_LINES = 1000
 
 Opener = Callable[[Address, LinkSettings], Transport]
@@ -164,7 +170,20 @@ class Conversation:
         self.idn = name
         return name
 
-    def ask(self, message: str, parse: Callable[[str], T], *, timeout_s: float | None = None) -> T:
+    def learn_mark(self) -> None:
+        """Find out, once, whether the instrument answers marks; without an answer a new link is opened."""
+        for _ in range(_MARK_TRIES):
+            if not self.settings.sync or self._mark_came is not None:
+                return
+            if self._lines is None:
+                self.open()
+            self._dirty = True
+            self._in_step()
+        self._mark_came = self._mark_came or False
+
+    def ask(
+        self, message: str, parse: Callable[[str], T], *, timeout_s: float | None = None, closed: bool = False
+    ) -> T:
         """Send a question and return its parsed answer; after a failure get back into step and ask once more.
 
         Parameters
@@ -175,6 +194,8 @@ class Conversation:
             Turns the reply into a value or raises `InstrumentError`.
         timeout_s : float, optional
             For the reply; the settings' without it.
+        closed : bool
+            Take the answer only if that to a mark is the next line, where the instrument is known to have marks.
 
         Raises
         ------
@@ -182,12 +203,12 @@ class Conversation:
             Any kind; a cancelled question is ``refused``.
         """
         try:
-            return self._ask_once(message, parse, timeout_s)
+            return self._ask_once(message, parse, timeout_s, closed)
         except InstrumentError as error:
             if not self.repeats or self.cancelled or error.kind in {"refused", "unsupported", "bad address"}:
                 raise
             self._log.note(self.label, f"asks again ({error.kind})")
-            return self._ask_once(message, parse, timeout_s)
+            return self._ask_once(message, parse, timeout_s, closed)
 
     def tell(self, message: str) -> None:
         """Send a setting; getting back into step first if need be.  It is never sent twice."""
@@ -260,11 +281,11 @@ class Conversation:
     def _as_name(self, line: str) -> str:
         return name_in(line, self._who())
 
-    def _ask_once(self, message: str, parse: Callable[[str], T], timeout_s: float | None) -> T:
+    def _ask_once(self, message: str, parse: Callable[[str], T], timeout_s: float | None, closed: bool) -> T:
         lines = self._in_step()
         limit_s = self._at_most(self.settings.timeout_s if timeout_s is None else timeout_s)
         try:
-            value = self._answer(lines, message, parse, limit_s)
+            value = self._answer(lines, message, parse, limit_s, closed=closed)
         except InstrumentError as error:
             self._dirty = True
             self._unanswered += 1
@@ -274,8 +295,10 @@ class Conversation:
         self._hurried = False
         return value
 
-    def _answer(self, lines: Lines, message: str, parse: Callable[[str], T], limit_s: float) -> T:
-        """Ask, and take the one line that is the answer; when `_marked`, the one line between two marks."""
+    def _answer(
+        self, lines: Lines, message: str, parse: Callable[[str], T], limit_s: float, *, closed: bool = False
+    ) -> T:
+        """Ask, and take the one line that is the answer; when `_marked` or closed, the one line before a mark."""
         self._send(lines, message)
         end_s = time.monotonic() + limit_s
         reply = lines.read(message, limit_s)
@@ -285,7 +308,7 @@ class Conversation:
             if not self._marked:
                 raise InstrumentError("garbled", f"the reply was {visible(reply)}, left over", "the answer to this")
             reply = lines.read(message, end_s - time.monotonic())
-        if self._marked:
+        if self._marked or (closed and self._mark_came):
             question = self._ask_for_mark(lines)
             if not shows(lines.read(question, self._at_most(self.settings.timeout_s)), self._mark):
                 raise self._too_much(message, reply)

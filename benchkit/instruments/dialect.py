@@ -51,6 +51,7 @@ def ask_series(
     timeout_s: float | None = None,
     chosen: Chosen | None = None,
     after_choice: Callable[[], None] | None = None,
+    closed: bool = False,
 ) -> T:
     """Send a series and return the parsed answer to its last message.
 
@@ -67,6 +68,8 @@ def ask_series(
         What an earlier series of the same job has sent; messages that would only repeat it are left out.
     after_choice : callable, optional
         Run between the messages before the question and the question, when they were sent.
+    closed : bool
+        Close the question by a mark, see `Conversation.ask`.
 
     Raises
     ------
@@ -88,7 +91,7 @@ def ask_series(
             if after_choice is not None:
                 after_choice()
         openings = conversation.openings
-        value = conversation.ask(question, parse, timeout_s=timeout_s)
+        value = conversation.ask(question, parse, timeout_s=timeout_s, closed=closed)
         if not before or openings == conversation.openings:
             return value
     raise InstrumentError(

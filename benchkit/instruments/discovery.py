@@ -19,6 +19,7 @@ from __future__ import annotations
 import importlib
 import importlib.util
 import json
+import math
 import os
 import re
 import socket
@@ -189,7 +190,8 @@ def serial_ports(
         shown.append((not usb, device, one))
     findings.found = [one for _, _, one in sorted(shown, key=lambda item: item[:2])]
     if hidden:
-        findings.notes.append(f"{hidden} built-in serial port{'s' * (hidden > 1)} with nothing behind them not shown.")
+        ports_are = "port with nothing behind it is" if hidden == 1 else "ports with nothing behind them are"
+        findings.notes.append(f"{hidden} built-in serial {ports_are} not shown.")
     return findings
 
 
@@ -285,13 +287,20 @@ def _asked(library: str, words: list[str], kind: str, what: str, wait_s: float) 
         answer = json.loads(done.stdout.decode("utf-8", "replace").strip().splitlines()[-1])
         addresses, remarks = [str(one) for one in answer["found"]], [str(one) for one in answer["remarks"]]
     except subprocess.TimeoutExpired:
-        return Findings(notes=[f"Asking {name} took more than {wait_s:g} s and was given up."])
+        return Findings(notes=[f"Asking {name} took too long and was given up. {_more_time(wait_s)}"])
     except (OSError, ValueError, IndexError, KeyError, TypeError) as error:
         return Findings(notes=[f"Asking {name} failed ({type(error).__name__}: {error})."])
     return Findings(
         found=[Found(address=printable(one), kind=kind, what=what) for one in addresses],
         notes=[f"{name[0].upper()}{name[1:]}: {remark}" for remark in remarks],
     )
+
+
+def _more_time(wait_s: float) -> str:
+    most_s = 60.0
+    if wait_s >= most_s - 1.0:
+        return "An address can always be typed."
+    return f"--wait {min(most_s, max(10.0, math.ceil(2.0 * wait_s))):g} gives it more time."
 
 
 def _answers_at_socket(host: str) -> bool:

@@ -18,6 +18,10 @@ FIRST = ("scpi-supply", "scpi-meter")
 """The standard profiles: tried before all others."""
 
 
+NOT_ASKED = "not asked"
+"""What happened to a question after one before it had no answer."""
+
+
 @dataclass(frozen=True, kw_only=True)
 class Candidate:
     """One profile to try: its name as a bench file would have it, its kind and its table."""
@@ -37,7 +41,7 @@ class Fit:
     answered : tuple of str
         The functions of a meter; of a supply the look at its settings, outputs and readings.
     unanswered : tuple of (str, str)
-        The others, with what happened.
+        The others, with what happened: what was asked, what came, what was expected.
     """
 
     profile: str
@@ -75,6 +79,8 @@ class Identified:
         Its answer to ``*IDN?``; empty when it never said it.
     fits : tuple of Fit
         The profiles that it answered at least in part, the best first.
+    misses : tuple of Fit
+        The profiles with which it said its name and answered no question.
     tried : tuple of str
         The profiles that it was tried with.
     baud : int or None
@@ -87,6 +93,7 @@ class Identified:
     address: str
     name: str = ""
     fits: tuple[Fit, ...] = ()
+    misses: tuple[Fit, ...] = ()
     tried: tuple[str, ...] = ()
     baud: int | None = None
     problem: InstrumentError | None = None
@@ -111,6 +118,7 @@ class Identified:
             "serial": self.serial,
             "baud": self.baud,
             "fits": [fit.as_json() for fit in self.fits],
+            "misses": [fit.as_json() for fit in self.misses],
             "tried": list(self.tried),
             "problem": None if self.problem is None else str(self.problem),
             "problem_kind": None if self.problem is None else self.problem.kind,

@@ -22,7 +22,7 @@ from typing import TypeVar
 
 from benchkit.errors import EntryError, InstrumentError
 from benchkit.instruments.conversation import LinkSettings
-from benchkit.instruments.identified import Candidate, Fit, Identified, addresses_for, candidates
+from benchkit.instruments.identified import NOT_ASKED, Candidate, Fit, Identified, addresses_for, candidates
 from benchkit.instruments.link import Link
 from benchkit.instruments.lockfile import ResourceLock
 from benchkit.instruments.meter import Meter
@@ -44,6 +44,7 @@ class _Search:
     tried: list[str] = field(default_factory=list)
     silent: dict[LinkSettings, InstrumentError] = field(default_factory=dict)
     fits: list[Fit] = field(default_factory=list)
+    misses: list[Fit] = field(default_factory=list)
     name: str = ""
     baud: int | None = None
     problem: InstrumentError | None = None
@@ -104,6 +105,7 @@ def identify(
                 address=address,
                 name=search.name,
                 fits=tuple(fits),
+                misses=tuple(search.misses),
                 tried=tuple(search.tried),
                 baud=search.baud,
             )
@@ -144,8 +146,9 @@ def identify_as(
     if one.best is None:
         raise InstrumentError(
             "unsupported",
-            f"{one.name} at {one.address} answers no questions of a {kind}'s profile that was tried",
-            "one of " + ", ".join(candidate.name for candidate in tried),
+            f"{one.name} at {one.address} answers no questions of a {kind}'s profile that was tried"
+            + "".join(f". {miss.profile}: {miss.unanswered[0][1]}" for miss in one.misses),
+            "answers to the questions of " + " or ".join(candidate.name for candidate in tried),
             "Name a profile of your own with --profile, or look whether the addresses are the right way round",
         )
     return one
@@ -192,8 +195,7 @@ def _try_all(
                 if not search.name and error.kind not in {"timeout", "garbled"}:
                     return
                 continue
-            if fit.answered:
-                search.fits.append(fit)
+            (search.fits if fit.answered else search.misses).append(fit)
             if fit.complete:
                 return
             break
@@ -234,12 +236,18 @@ def _answer(future: Future[T], usual_s: float) -> T:
         ) from None
 
 
+def what_happened(error: InstrumentError) -> str:
+    """Return what became of a question: its message and what came stand in the error, with what was expected."""
+    came = error.came.rstrip(".")
+    return f"{came}; expected {error.expected}" if error.expected else came
+
+
 def _fit_of_supply(candidate: Candidate, supply: Supply) -> Fit:
     question = "settings, outputs and readings of both outputs"
     try:
         _answer(supply.sample(), _STUCK_S)
     except InstrumentError as error:
-        return Fit(profile=candidate.name, kind="supply", answered=(), unanswered=((question, error.came),))
+        return Fit(profile=candidate.name, kind="supply", answered=(), unanswered=((question, what_happened(error)),))
     return Fit(profile=candidate.name, kind="supply", answered=(question,))
 
 
@@ -253,10 +261,10 @@ def _fit_of_meter(candidate: Candidate, meter: Meter, say: Say) -> Fit:
             _answer(meter.read(function), 4.0 * meter.expected_s(function))
             answered.append(function)
         except InstrumentError as error:
-            unanswered.append((function, error.came))
+            unanswered.append((function, what_happened(error)))
             if not answered:
                 # Not even the first: it speaks otherwise, and each further question would take its whole time.
-                unanswered += [(one, "not asked") for one in functions[1:]]
+                unanswered += [(one, NOT_ASKED) for one in functions[1:]]
                 break
     return Fit(profile=candidate.name, kind="meter", answered=tuple(answered), unanswered=tuple(unanswered))
 

@@ -1,5 +1,8 @@
 """One benchkit an instrument: a lock file for each address, because VISA's own locks can't be relied on.
 
+The lock is named after what all spellings of an address have in common, with the host's number for its name: the name
+server is asked for it, but not waited for long.  A name that can't be resolved then stands for itself.  All numbers of
+this computer's own loopback are one, for a server may listen at all of them.
 The system takes the lock back when its holder dies, however it dies; the file itself stays and means nothing.
 """
 
@@ -7,13 +10,49 @@ from __future__ import annotations
 
 import hashlib
 import os
+import socket
 import tempfile
+import threading
 from contextlib import suppress
 from pathlib import Path
 
 from benchkit.errors import InstrumentError
 from benchkit.instruments.address import plain_address
 from benchkit.journal.locking import try_lock
+
+RESOLVE_S = 2.0
+"""So long is a name server waited for, s (our own figure)."""
+
+_LOOPBACK = "127.0.0.1"
+
+
+def host_number(host: str, limit_s: float = RESOLVE_S) -> str:
+    """Return the IPv4 number that a host is reached at, the lowest of several; its name in capitals if none is found.
+
+    Parameters
+    ----------
+    host : str
+        A name, or a number in any form.
+    limit_s : float
+        How long to wait for it; what comes later is left behind in a thread of its own.
+    """
+    with suppress(OSError):
+        return _one_loopback(socket.inet_ntoa(socket.inet_aton(host.rstrip("."))))
+    found: list[str] = []
+
+    def resolve() -> None:
+        with suppress(OSError, ValueError):
+            entries = socket.getaddrinfo(host, None, socket.AF_INET, socket.SOCK_STREAM)
+            found.append(min((str(entry[4][0]) for entry in entries), key=socket.inet_aton))
+
+    thread = threading.Thread(target=resolve, name=f"number of {host}", daemon=True)
+    thread.start()
+    thread.join(limit_s)
+    return _one_loopback(found[0]) if found else host.rstrip(".").upper()
+
+
+def _one_loopback(number: str) -> str:
+    return _LOOPBACK if number == "0.0.0.0" or number.startswith("127.") else number
 
 
 class ResourceLock:
@@ -22,7 +61,7 @@ class ResourceLock:
     Parameters
     ----------
     address : str
-        As in the bench file; capitals, board 0 and the other names of a serial port make no difference.
+        As in the bench file; another spelling of it makes no difference.
 
     Raises
     ------
@@ -32,7 +71,7 @@ class ResourceLock:
 
     def __init__(self, address: str) -> None:
         folder = Path(tempfile.gettempdir()) / "benchkit-locks"
-        digest = hashlib.sha256(plain_address(address).encode()).hexdigest()[:24]
+        digest = hashlib.sha256(plain_address(address, host_number).encode()).hexdigest()[:24]
         flags = os.O_RDWR | os.O_CREAT | getattr(os, "O_NOFOLLOW", 0) | getattr(os, "O_CLOEXEC", 0)
         try:
             if not folder.is_dir():

@@ -6,6 +6,8 @@ Rules
   reading of several samples it is chosen once, and again if the link had to be opened anew.
 * Where the meter can be asked for its function, that has to be the right one before a value is believed.
 * An overload is never a number, and ends a reading of several samples.
+* Each sample is closed by a mark, where the meter has one (`benchkit.instruments.conversation`): an answer that came
+  twice is not taken for the next, nor for all that follow.  If another line comes, the sample is taken once more.
 """
 
 from __future__ import annotations
@@ -74,7 +76,7 @@ class Meter:
 
     def identify(self) -> Future[str]:
         """Open the link and return the meter's name."""
-        return self._link.submit(lambda conversation: conversation.idn or conversation.open())
+        return self._link.submit(self._identify)
 
     def expected_s(self, function: str, range: float | None = None, samples: int = 1) -> float:
         """Return how long such a reading is likely to take, s: for a countdown, not a promise."""
@@ -120,11 +122,17 @@ class Meter:
         """Close the link, waiting for that for at most `wait_s`."""
         self._link.close(wait_s)
 
+    def _identify(self, conversation: Conversation) -> str:
+        name = conversation.idn or conversation.open()
+        conversation.learn_mark()
+        return name
+
     def _read(
         self, conversation: Conversation, series: tuple[str, ...], function: str, range: float | None, samples: int
     ) -> RawReading:
         rules = self._profile.rules(function)
         timeout_s = self._profile.timing.timeout_s(function, ranged=range is not None)
+        conversation.learn_mark()
         values: list[float] = []
         chosen = Chosen()
         for _ in [None] * samples:
@@ -135,6 +143,7 @@ class Meter:
                 timeout_s=timeout_s,
                 chosen=chosen,
                 after_choice=lambda: self._demand_function(conversation, function),
+                closed=True,
             )
             if isinstance(value, Overload):
                 return RawReading(
@@ -156,7 +165,7 @@ class Meter:
         if not self._profile.function_question:
             return
         wanted = self._profile.function_answers[function]
-        found = ask_series(conversation, self._profile.function_question, str.strip)
+        found = ask_series(conversation, self._profile.function_question, str.strip, closed=True)
         if found.strip('"').upper() != wanted.strip('"').upper():
             raise InstrumentError(
                 "refused",

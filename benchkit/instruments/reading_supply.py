@@ -9,7 +9,7 @@ from benchkit.events import SupplyState
 from benchkit.instruments.conversation import Conversation
 from benchkit.instruments.dialect import SupplyTalk, ask_series
 from benchkit.instruments.numbers import visible
-from benchkit.instruments.switching_off import Memory, state_of
+from benchkit.instruments.switching_off import Memory, flows, state_of
 
 _LOOK = (
     "output",
@@ -42,6 +42,8 @@ def read_sample(conversation: Conversation, talk: SupplyTalk, memory: Memory) ->
     held = seen["in_limit"] if "in_limit" in seen else _held(talk, state, outputs)
     state = replace(state, positive_in_limit=bool(held[0]), negative_in_limit=bool(held[1]))
     memory.state = state
+    if any(outputs) or flows(talk, state):
+        memory.seen_on = True
     return Sample(state=state, outputs=(bool(outputs[0]), bool(outputs[1])))
 
 

@@ -22,7 +22,16 @@ from benchkit.instruments.link import Link
 from benchkit.instruments.profile import SupplyProfile
 from benchkit.instruments.reading_supply import Sample, empty_error_queue, read_outputs, read_sample, read_trips
 from benchkit.instruments.setting import Setter, Wanted
-from benchkit.instruments.switching_off import OFF_TIMEOUT_S, UNKNOWN, Memory, OffOutcome, say_off, switch_off, words
+from benchkit.instruments.switching_off import (
+    OFF_TIMEOUT_S,
+    UNKNOWN,
+    Memory,
+    OffOutcome,
+    flows,
+    say_off,
+    switch_off,
+    words,
+)
 
 __all__ = ["OFF_TIMEOUT_S", "UNKNOWN", "WATCH_TIMEOUT_S", "OffOutcome", "Sample", "Supply", "usual_protection_v"]
 
@@ -51,6 +60,20 @@ class Supply:
         self._profile = profile
         self._talk = SupplyTalk(profile)
         self._memory = Memory()
+
+    @property
+    def off_confirmed(self) -> bool:
+        """Whether the last thing done was an "off" that was confirmed: also one that a failed setting brought about."""
+        return self._memory.off_confirmed
+
+    @property
+    def seen_on(self) -> bool:
+        """Whether it has said since the last confirmed "off" that an output is on or that current flows."""
+        return self._memory.seen_on
+
+    def looks_on(self, sample: Sample) -> bool:
+        """Whether a look shows an output that is on, or a current that flows."""
+        return any(sample.outputs) or flows(self._talk, sample.state)
 
     def identify(self) -> Future[str]:
         """Open the link, empty the supply's error queue of what was before, and return its name."""
@@ -166,7 +189,9 @@ class Supply:
         return (bounded[0], bounded[1])
 
     def _set(self, conversation: Conversation, wanted: Wanted) -> Sample:
+        self._memory.off_confirmed = False
         was_on = any(read_outputs(conversation, self._talk, self._memory))
+        self._memory.seen_on = self._memory.seen_on or was_on
         if wanted.on:
             self._refuse_tripped(conversation, was_on)
         setter = Setter(conversation, self._talk, self._memory)
@@ -228,5 +253,8 @@ class Supply:
     def _off(self, conversation: Conversation) -> OffOutcome:
         outcome = switch_off(conversation, self._talk, self._memory)
         self._memory.told = (False, False) if outcome.confirmed else None
+        self._memory.off_confirmed = outcome.confirmed
+        if outcome.confirmed:
+            self._memory.seen_on = False
         self._memory.told_openings = conversation.openings
         return outcome

@@ -31,6 +31,10 @@ UNKNOWN = "output state unknown: switch it off by hand"
 LOW_V = 2.0
 """Below it a rail counts as low, V (our own figure)."""
 
+_QUESTIONS = (("output", "amps", "volts"),)
+_ONE_BY_ONE = (("output",), ("amps",), ("volts",))
+"""What speaks against "off" is believed although the link fails at the next question."""
+
 _LINKS = 2
 _LOOKS = 3
 _BUDGET_S = 2.5
@@ -64,6 +68,10 @@ class Memory:
         Whether over-current protection is on, as far as known.
     over_current_openings : int
         Over which opening of the link that was.
+    seen_on : bool
+        Whether the supply has said since the last confirmed "off" that an output is on or that current flows.
+    off_confirmed : bool
+        Whether the last thing done was an "off" that was confirmed; no setting has been begun since.
     """
 
     state: SupplyState = field(default_factory=SupplyState)
@@ -71,6 +79,8 @@ class Memory:
     told_openings: int = -1
     over_current: bool | None = None
     over_current_openings: int = -1
+    seen_on: bool = False
+    off_confirmed: bool = False
 
 
 def switch_off(conversation: Conversation, talk: SupplyTalk, memory: Memory) -> OffOutcome:
@@ -97,9 +107,13 @@ def _within(conversation: Conversation, talk: SupplyTalk, memory: Memory, deadli
         try:
             say_off(conversation, talk)
             looks += 1
-            seen = talk.ask_all(conversation, ("output", "amps", "volts"))
-            state = memory.state = state_of(talk, seen, memory.state)
-            problem = _against(talk, seen)
+            for keys in _QUESTIONS if talk.profile.questions.joined else _ONE_BY_ONE:
+                seen = talk.ask_all(conversation, keys)
+                state = memory.state = state_of(talk, seen, memory.state)
+                problem = _against(talk, seen)
+                if problem:
+                    memory.seen_on = True
+                    break
             if not problem:
                 return _confirmed(conversation, talk, memory, deadline_s)
         except Exception as error:
@@ -149,6 +163,12 @@ def words(outputs: tuple[bool, bool]) -> str:
     """Return both outputs' states in words."""
     each = ["on" if output else "off" for output in outputs]
     return f"both {each[0]}" if outputs[0] == outputs[1] else f"positive {each[0]}, negative {each[1]}"
+
+
+def flows(talk: SupplyTalk, state: SupplyState) -> bool:
+    """Whether more current flows than an output that is off may show."""
+    amps = (abs(state.positive_a or 0.0), abs(state.negative_a or 0.0))
+    return max(amps) > talk.profile.off_current_a
 
 
 def _against(talk: SupplyTalk, seen: dict[str, Any]) -> str:

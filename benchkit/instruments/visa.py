@@ -12,6 +12,7 @@ What is worked around here (pyvisa-py 0.8)
 
 from __future__ import annotations
 
+import re
 import socket
 import threading
 from collections.abc import Iterator
@@ -84,8 +85,8 @@ def translate(error: Exception, address: str, doing: str) -> InstrumentError:
         return InstrumentError(
             "bad address",
             f"Nobody knows the host in {address}",
-            "a host name or an IPv4 address",
-            "Correct the bench file",
+            "a host name that the network knows, or an IPv4 address",
+            "Correct the host, or look whether this computer is on the network",
         )
     if "exclusively lock" in text or code in {"error_resource_busy", "error_resource_locked"}:
         return InstrumentError(
@@ -142,7 +143,7 @@ def _not_opened(error: Exception, text: str, code: str, address: str) -> Instrum
             "bad address",
             f"There is no {address}",
             "an instrument that is plugged in",
-            "Check the cable, then the address in the bench file",
+            "Check the cable, then the address",
         )
     if "could not connect" in text or "creating link" in text or code in {"error_resource_not_found", "error_timeout"}:
         return InstrumentError(
@@ -156,7 +157,7 @@ def _not_opened(error: Exception, text: str, code: str, address: str) -> Instrum
             "bad address",
             f"{address} is no address for this VISA library ({text})",
             "an address as the library writes it",
-            "Correct the bench file",
+            "Correct the address",
         )
     if isinstance(error, ImportError) or "install" in text:
         return InstrumentError(
@@ -170,10 +171,10 @@ def _not_opened(error: Exception, text: str, code: str, address: str) -> Instrum
             "link lost",
             f"{address} is not there ({text})",
             "one USB instrument with these numbers",
-            "Check the cable, then the address in the bench file",
+            "Check the cable, then the address",
         )
     kind = "link lost" if isinstance(error, OSError) and not isinstance(error, ValueError) else "bad address"
-    return InstrumentError(kind, f"{address} can't be opened ({text})", "", "Check the address in the bench file")
+    return InstrumentError(kind, f"{address} can't be opened ({text})", "", "Check the address")
 
 
 def _no_library(library: str, error: Exception) -> InstrumentError:
@@ -193,7 +194,19 @@ def _no_library(library: str, error: Exception) -> InstrumentError:
 def _plain(error: Exception) -> str:
     """Return what an exception says, on one line and fit for a screen."""
     text = " ".join((str(error) or type(error).__name__).split())
+    text = _VISA_NUMBER.sub(lambda match: _described(int(match[1])), _VISA_NAME.sub("", text))
     return "".join(letter if " " <= letter <= "~" else ascii(letter)[1:-1] for letter in text)
+
+
+_VISA_NAME = re.compile(r"VI_ERROR_\w+ \(-?[0-9]+\): ")
+_VISA_NUMBER = re.compile(r"(-107380[0-9]{4})\b")
+
+
+def _described(code: int) -> str:
+    """Return in words what VISA's number for an error means; the number where nobody knows."""
+    with suppress(ValueError, ImportError):
+        return str(constants().StatusCode(code).name).removeprefix("error_").replace("_", " ")
+    return str(code)
 
 
 def _visa_code(error: Exception) -> str:

@@ -8,6 +8,8 @@ Rules
   it is cut off again, the lines before it stay as they were, and the next `append` may try again.
 * A record that ends in a torn line is cut back to its last whole line on resuming; the torn text is handed to the
   caller, who has to report it.
+* A file that was removed, replaced, cut or added to by somebody else is no longer this record: nothing is appended to
+  it, and whoever asks is told.
 * A closed record takes no more lines.  A broken one takes none either.
 """
 
@@ -41,6 +43,7 @@ class Writer:
 
     def __init__(self, path: Path, descriptor: int, *, seq: int, digest: str, length: int, torn: str = "") -> None:
         self.path = path
+        self._whole_path = path.absolute()
         self.seq = seq
         self.torn = torn
         self._descriptor: int | None = descriptor
@@ -141,7 +144,8 @@ class Writer:
         Raises
         ------
         FileError
-            If the disk did not take it.  The journal is as it was before.
+            If the disk did not take it, or the file is no longer the one that was written.  The journal is as it was
+            before.
         RecordError
             If the journal is closed.
         BenchkitError
@@ -155,6 +159,7 @@ class Writer:
         if self._spoilt:
             raise FileError(str(self.path), "", self._spoilt, "", "Free the disk and resume the walk")
         line = make_line(self.seq + 1, at, monotonic_s, event_name, payload, prev=self._digest)
+        self._demand_untouched(descriptor)
         try:
             os.lseek(descriptor, self._length, os.SEEK_SET)
             disk.write_all(descriptor, line.raw)
@@ -187,6 +192,28 @@ class Writer:
         self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None
     ) -> None:
         self.close()
+
+    def _demand_untouched(self, descriptor: int) -> None:
+        """See that the file is still where and as it was left."""
+        own = os.fstat(descriptor)
+        try:
+            there = os.stat(self._whole_path)
+            same = (there.st_dev, there.st_ino) == (own.st_dev, own.st_ino)
+            damage = "" if same else "another file stands in its place"
+        except OSError as error:
+            damage = "it was removed" if own.st_nlink == 0 else f"it is not there any more ({error.strerror})"
+        if not damage and own.st_size < self._length:
+            damage = f"only {own.st_size} of its {self._length} bytes are left"
+        elif not damage and own.st_size > self._length:
+            damage = f"somebody else has added {own.st_size - self._length} bytes to it"
+        if damage:
+            raise FileError(
+                str(self.path),
+                "",
+                f"the record was lost or damaged while it was written: {damage}",
+                "the file as benchkit left it",
+                "Find out who has touched it, and begin a new walk",
+            )
 
     def _cut_back(self, descriptor: int) -> None:
         try:

@@ -69,7 +69,9 @@ class Calls:
         self._closing = False
         self._dead = False
         self._trouble = ""
-        self._standing_by = StandingBy(lifeline, process.pid, log_dir)
+        self._standing_by = StandingBy(
+            lifeline, process.pid, log_dir, lambda: not self._dead and process.poll() is None, self._note_trouble
+        )
         self._steps: dict[int, OnStep] = {}
         self._after_death: Future[OutputOff] | None = None
         self._outbox: SimpleQueue[bytes | None] = SimpleQueue()
@@ -102,6 +104,10 @@ class Calls:
                 self._oldest_beat_s = time.monotonic()
             number = self._beats
         self._outbox.put(encode({"do": "beat", "n": number}))
+
+    def _note_trouble(self, text: str) -> None:
+        """Let the keeper write a caution into the record, from where it comes to the screen like the keeper's own."""
+        self._ask("note", lambda wire: None, text=f"CAUTION: {text}")
 
     def _ask(self, what: str, parse: Callable[[Any], T], on_step: OnStep | None = None, **parts: Any) -> Future[T]:
         future: Future[T] = Future()

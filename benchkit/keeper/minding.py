@@ -22,6 +22,10 @@ SUPPLY_AGE_S = 2.5
 """So old may the last answer of a supply get that the keeper watches by itself, s (our own figure: a slow serial link
 needs a second for a look, and may have to do so twice)."""
 
+SETTING_S = 5.0
+"""So long may a setting take while the supply is watched, s (our own figure: many messages over a slow serial link, and
+no more): nobody sees meanwhile what the supply does."""
+
 FIRST_READING_S = 3.0
 """So much longer than its limit may the first reading of a meter take that a watch depends on, s."""
 
@@ -103,6 +107,7 @@ class Freshness:
     def __init__(self) -> None:
         self._supply_s = math.inf
         self._settings = 0
+        self._setting_s = math.inf
         self._meter_limit_s: float | None = None
         self._meter_s = 0.0
         self._longest_s = FIRST_READING_S
@@ -123,13 +128,16 @@ class Freshness:
         if self._supply_s < math.inf:
             self._supply_s = now_s
 
-    def setting_begun(self) -> None:
+    def setting_begun(self, now_s: float) -> None:
         """Note that the supply is being set: that is many messages, each with a time-out of its own."""
+        if not self._settings:
+            self._setting_s = now_s
         self._settings += 1
 
     def setting_done(self, now_s: float) -> None:
         """Note that it has been, or that this failed, which is somebody else's to deal with."""
         self._settings -= 1
+        self._setting_s = now_s
         self.supply_heard(now_s)
 
     def meter_from(self, now_s: float, limit_s: float | None) -> None:
@@ -159,7 +167,11 @@ class Freshness:
         A meter that was asked may take its own time, as the longest reading so far did, and the limit besides.  One
         that nobody asked is not to blame: then the age of its last reading may be `UNASKED_TIMES` the limit.
         """
-        if not self._settings and now_s - self._supply_s > SUPPLY_AGE_S:
+        if self._settings:
+            if self._supply_s < math.inf and now_s - self._setting_s > SETTING_S:
+                words = f"a setting has taken it {now_s - self._setting_s:.1f} s, and nobody watched meanwhile"
+                return Loss(who="the supply", problem=words)
+        elif now_s - self._supply_s > SUPPLY_AGE_S:
             age_s = now_s - self._supply_s
             return Loss(who="the supply", problem=f"it has not answered for {age_s:.1f} s while it was watched")
         if self._meter_limit_s is None:

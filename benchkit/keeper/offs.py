@@ -7,7 +7,9 @@ Rules
 * After an "off" nothing is switched on before the screen has shown that it knows of it (`known` reaches `count`).
 * What has been confirmed stays confirmed: when a later "off" can't be confirmed because the supply doesn't answer, and
   nothing has been switched on in between, the output is still off.  A supply that says that an output is on, or that
-  current flows, is believed.
+  current flows, is believed, whenever and to whomever it says so, and whatever becomes of its link after that.
+* The output may be on from before "on" is sent until an "off" is confirmed, a setting to "off" has been read back, or
+  a failed setting has ended in a confirmed "off".
 """
 
 from __future__ import annotations
@@ -32,12 +34,16 @@ class Offs:
         The last one that the screen knows of.
     reason : str
         Of the one that is under way, or of the last.
+    may_be_on : bool
+        Whether the output may be on, as far as the keeper has done anything about it.
     """
 
     def __init__(self) -> None:
         self.count = 0
         self.known = 0
         self.reason = ""
+        self.may_be_on = False
+        self._coming_on = 0
         self._deadline_s = math.inf
         self._requests: list[int] = []
         self._proof = ""
@@ -68,8 +74,25 @@ class Offs:
         return now_s > self._deadline_s
 
     def switching_on(self) -> None:
-        """Note that an output is about to be switched on: nothing is proved any more."""
+        """Note that an output is about to be switched on: nothing is proved any more.  `set_on_done` follows."""
         self._proof = ""
+        self.may_be_on = True
+        self._coming_on += 1
+
+    def set_on_done(self, *, off_confirmed: bool) -> None:
+        """Note that a setting to "on" is over; `off_confirmed`: it failed, and that ended in a confirmed "off"."""
+        self._coming_on -= 1
+        if off_confirmed and not self._coming_on:
+            self.may_be_on = False
+
+    def seen(self, *, on: bool) -> None:
+        """Note whether an output was seen on, or a current, since the last "off": that takes back what was proved."""
+        if on:
+            self._proof = ""
+
+    def set_off_done(self) -> None:
+        """Note that a setting to "off" was read back as off, without any current."""
+        self.may_be_on = self._coming_on > 0
 
     def finish(self, outcome: Mapping[str, Any]) -> tuple[dict[str, Any], list[int]] | None:
         """Close the one under way; None when there is none.
@@ -92,6 +115,7 @@ class Offs:
         payload = {"reason": self.reason, **outcome}
         if payload["confirmed"]:
             self._proof = str(payload["how"])
+            self.may_be_on = self._coming_on > 0
         elif self._proof and _silent(payload["state"]):
             payload["confirmed"] = True
             payload["how"] = (

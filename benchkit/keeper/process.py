@@ -47,7 +47,8 @@ from benchkit.keeper.lifeline import Lifeline
 from benchkit.keeper.minding import Screen
 from benchkit.keeper.offs import NO_SUPPLY, OFF_LIMIT_S, UNKNOWN
 from benchkit.keeper.pipes import LineReader
-from benchkit.keeper.switching import Switching, outcome_of
+from benchkit.keeper.switching import Switching
+from benchkit.keeper.wire import outcome_of
 
 TICK_S = 0.05
 
@@ -192,6 +193,15 @@ class Keeper(Switching):
     def _do_append(self, request: int, message: Mapping[str, Any]) -> None:
         self.journal.append(request, message["event"], message["payload"], int(message["after"]))
 
+    def _do_note(self, request: int, message: Mapping[str, Any]) -> None:
+        """Keep what the client has to say of what stands by, where a record is open."""
+        from benchkit.events import Noted, to_payload
+
+        if self.journal.keeps:
+            noted = Noted(text=str(message["text"]))
+            self.keep(noted.name, to_payload(noted))
+        self.ok(request, {})
+
     def _do_connect(self, request: int, message: Mapping[str, Any]) -> None:
         """Own what the bench names once everything is loaded; the loop goes on meanwhile."""
 
@@ -253,6 +263,7 @@ class Keeper(Switching):
         "open journal": _do_open,
         "resume journal": _do_resume,
         "append": _do_append,
+        "note": _do_note,
         "connect": _do_connect,
         "read": Switching.do_read,
         "set": Switching.do_set,
@@ -270,14 +281,19 @@ class Keeper(Switching):
     def _look_at_clock(self) -> None:
         now_s = time.monotonic()
         self._next_tick_s = now_s + TICK_S
-        self._lifeline.beat(now_s, output_on=self.expected_on)
+        may_be_on = self.offs.may_be_on and self.supply is not None
+        self._lifeline.beat(now_s, output_on=may_be_on)
         if not self._leaving:
-            loss = self._screen.look(now_s, output_on=self.expected_on)
+            loss = self._screen.look(now_s, output_on=may_be_on)
             if loss is not None and loss.leaving:
                 self._lose_screen(loss.problem)
             elif loss is not None:
                 self.lose(loss)
         self.look_after(now_s)
+
+    def tell_may_be_on(self) -> None:
+        """Say so on the lifeline."""
+        self._lifeline.beat(time.monotonic(), output_on=True)
 
     def off_finished(self) -> None:
         """Leave, if that was what the "off" was for."""

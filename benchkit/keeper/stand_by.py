@@ -11,8 +11,8 @@ has happened: the record's lock fell with the keeper.  Nobody's lock on the supp
 as long as the keeper lives, so that a screen and a keeper that are killed together leave nothing on.
 
 Messages, one JSON object a line: ``{"do": "know", "supply": {...}, "journal": "..."}``;
-``{"do": "off", "id": 3, "reason": "..."}``, answered by ``{"id": 3, "ok": {...}}`` with the fields of an ``output off``
-event.
+``{"do": "off", "id": 3, "reason": "..."}``, answered at once by ``{"heard": 3}`` and then by ``{"id": 3, "ok": {...}}``
+with the fields of an ``output off`` event.
 """
 
 from __future__ import annotations
@@ -68,9 +68,15 @@ class StandBy:
         self._has_lifeline = lifeline is not None
         self._client_gone = False
         self._last: tuple[float, dict[str, Any]] | None = None
-        LineReader(source, lambda message, _: self._inbox.put(("client", message)))
+        LineReader(source, self._receive)
         if lifeline is not None:
             watch_pipe(lifeline, lambda data: self._inbox.put(("lifeline", data)))
+
+    def _receive(self, message: dict[str, Any] | None, _read_s: float) -> None:
+        """Say at once that the client's word has been heard; runs on the reader's thread."""
+        if message is not None and message.get("do") == "off":
+            self._writer.send({"heard": message.get("id")})
+        self._inbox.put(("client", message))
 
     def warm_up(self) -> None:
         """Load what switching off needs; what comes meanwhile waits in the inbox."""

@@ -13,7 +13,7 @@ from __future__ import annotations
 
 import math
 import time
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
 from concurrent.futures import Future
 from dataclasses import replace
 from typing import TYPE_CHECKING, Any
@@ -24,6 +24,7 @@ from benchkit.keeper.minding import Freshness, Loss
 from benchkit.keeper.offs import NO_SUPPLY, OFF_LIMIT_S, UNKNOWN, Offs
 from benchkit.keeper.protocol import WatchLines
 from benchkit.keeper.ramp import Ramp
+from benchkit.keeper.wire import outcome_of, pair, set_v
 
 if TYPE_CHECKING:
     from benchkit.instruments.supply import OffOutcome, Sample
@@ -54,22 +55,26 @@ class Switching(Desk):
         supply = self._demand_free(output_on=output_on)
         if not output_on:
             self.expected_on = False
-        future = supply.supply.set(
-            float(message["positive_v"]),
-            float(message["negative_v"]),
-            float(message["limit_a"]),
-            output_on,
-            protection_v=_pair(message.get("protection_v")),
-            over_current=bool(message.get("over_current", True)),
-        )
-        if output_on:
-            self.offs.switching_on()
-        self.fresh.setting_begun()
+        volts = (float(message["positive_v"]), float(message["negative_v"]))
+        protection_v = pair(message.get("protection_v"))
+        over_current = bool(message.get("over_current", True))
+
+        def begin() -> Future[Sample]:
+            return supply.supply.set(
+                *volts, float(message["limit_a"]), output_on, protection_v=protection_v, over_current=over_current
+            )
+
+        future = self._switch_on(begin) if output_on else begin()
+        self.fresh.setting_begun(time.monotonic())
 
         def done(ready: Future[Sample]) -> None:
             self.fresh.setting_done(time.monotonic())
             if ready.exception() is None:
                 self.expected_on = output_on
+            if output_on:
+                self._switched_on(supply, ready)
+            elif ready.exception() is None and not supply.supply.looks_on(ready.result()):
+                self.offs.set_off_done()
             self.relay(request, ready, lambda sample: sample.state)
 
         self.when_done(future, done)
@@ -78,6 +83,21 @@ class Switching(Desk):
         """Read the supply; no watch is judged by it."""
         future = self.demand_supply().supply.sample()
         self.when_done(future, lambda done: self.relay(request, done, lambda sample: sample.state))
+
+    def _switch_on(self, begin: Callable[[], Future[Sample]]) -> Future[Sample]:
+        """Begin a setting to "on"; whoever minds this process hears of it before the supply does."""
+        self.tell_may_be_on()
+        future = begin()
+        self.offs.switching_on()
+        return future
+
+    def _switched_on(self, supply: OwnedSupply, ready: Future[Sample]) -> None:
+        """Note that it is over."""
+        self.offs.set_on_done(off_confirmed=ready.exception() is not None and supply.supply.off_confirmed)
+
+    def tell_may_be_on(self) -> None:
+        """Say that the output may be on from now on; called before "on" is sent."""
+        raise NotImplementedError
 
     # ---- ramps ---------------------------------------------------------------------------------------------------
 
@@ -91,7 +111,7 @@ class Switching(Desk):
             float(message["negative_v"]),
             float(message["limit_a"]),
             float(message["ramp_s"]),
-            _pair(message.get("protection_v")),
+            pair(message.get("protection_v")),
             over_current=bool(message.get("over_current", True)),
         )
         watch = None if lines is None else WatchLines(**lines)
@@ -110,12 +130,12 @@ class Switching(Desk):
                 )
                 return
             if sample.outputs[0]:
-                self._start_ramp(ramp, watch, _set_v(sample))
+                self._start_ramp(ramp, watch, set_v(sample))
                 return
-            self.offs.switching_on()
-            self.when_done(self._set_for(ramp, supply, (0.0, -0.0)), on)
+            self.when_done(self._switch_on(lambda: self._set_for(ramp, supply, (0.0, -0.0))), on)
 
         def on(ready: Future[Sample]) -> None:
+            self._switched_on(supply, ready)
             if ramp is not self._ramp:
                 return
             if (error := ready.exception()) is not None:
@@ -126,7 +146,7 @@ class Switching(Desk):
         self.when_done(supply.supply.sample(), found)
 
     def _start_ramp(self, ramp: Ramp, watch: WatchLines | None, from_v: tuple[float, float]) -> None:
-        self.expected_on = True
+        self.expected_on = self.offs.may_be_on = True
         if watch is not None:
             self._set_watch(watch)
         ramp.begin(from_v, time.monotonic())
@@ -135,7 +155,7 @@ class Switching(Desk):
         assert self.supply is not None
         ramp.busy = True
         future = self._set_for(ramp, self.supply, ramp.next_v())
-        self.fresh.setting_begun()
+        self.fresh.setting_begun(time.monotonic())
 
         def done(ready: Future[Sample]) -> None:
             self.fresh.setting_done(time.monotonic())
@@ -216,6 +236,7 @@ class Switching(Desk):
 
     def look_after(self, now_s: float) -> None:
         """Do what is due: give up an "off" that takes too long, take the ramp's next step, look at the supply."""
+        self._note_seen()
         if self.offs.late(now_s):
             self._finish_off(None)
         if self._ramp is not None and self._ramp.due(now_s):
@@ -318,6 +339,7 @@ class Switching(Desk):
             outcome = outcome_of(ready)
         elif self.supply is not None:
             outcome["how"] = f"{UNKNOWN} (no answer within {OFF_LIMIT_S:.0f} s)"
+        self._note_seen()
         finished = self.offs.finish(outcome)
         if finished is None:
             return
@@ -329,6 +351,11 @@ class Switching(Desk):
         for request in requests:
             self.ok(request, payload)
         self.off_finished()
+
+    def _note_seen(self) -> None:
+        """Let a supply that has said "on" since its last confirmed "off" take back what was proved."""
+        if self.supply is not None:
+            self.offs.seen(on=self.supply.supply.seen_on)
 
     def off_finished(self) -> None:
         """Do what waits for an "off" to be over."""
@@ -366,22 +393,3 @@ class Switching(Desk):
                 "Find out why it went off",
             )
         return supply
-
-
-def outcome_of(ready: Future[OffOutcome]) -> dict[str, Any]:
-    """Return the fields of an ``output off`` event that a done "off" gives, without its reason."""
-    error = ready.exception()
-    if error is not None:
-        return {"confirmed": False, "how": f"{UNKNOWN} ({error})", "state": None}
-    outcome = ready.result()
-    state = None if outcome.state is None else vars(outcome.state)
-    return {"confirmed": outcome.confirmed, "how": outcome.how, "state": state}
-
-
-def _pair(wanted: Any) -> tuple[float, float] | None:
-    return None if wanted is None else (float(wanted[0]), float(wanted[1]))
-
-
-def _set_v(sample: Sample) -> tuple[float, float]:
-    """Return where the rails are set, V."""
-    return (sample.state.set_positive_v or 0.0, sample.state.set_negative_v or 0.0)

@@ -289,5 +289,15 @@ HANDHELD: Final = Accuracy(
 STATED_DEFAULT: Final = HANDHELD
 """The accuracy used where neither the reading nor a bench file gives one; its name is shown with every result."""
 
+SUPPLY_READOUT: Final = Accuracy(
+    "a supply's own readout, 1 % + 5 mA",
+    {
+        "dc volts": (AccuracyRow(1000, 1.0, floor=0.05),),
+        "dc current": (AccuracyRow(100, 1.0, floor=0.005),),
+    },
+    "our assumption, no maker's figure: wide for a programmable bench supply that is not out of order",
+)
+"""What is assumed of a supply whose accuracy nobody stated."""
+
 FINEST_STEP: Final = 1e-6
 """The finest step (V, A, ohm) that is believed of a meter that nobody named, however many digits were written."""

@@ -50,6 +50,11 @@ def switched_by_hand(state: State) -> bool:
     return state.on_lamp or (state.opened is not None and state.opened.supply == "manual")
 
 
+def never_on_by_hand(state: State) -> bool:
+    """Whether only a person switches the supply, and this walk has not asked anybody yet to switch it on."""
+    return switched_by_hand(state) and not state.ever_on
+
+
 def lacks_protection(found: SupplyState) -> bool:
     """Whether a supply that is on says nothing of an over-voltage protection of its own."""
     return found.output_on is True and found.protection_positive_v is None

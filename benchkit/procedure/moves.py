@@ -29,7 +29,7 @@ from benchkit.procedure.actions import (
     Wait,
     Write,
 )
-from benchkit.procedure.items import JUDGED_KINDS, Item, Joined, Plan, condition_key
+from benchkit.procedure.items import JUDGED_KINDS, RAIL_POINTS, Item, Joined, Plan, condition_key
 from benchkit.procedure.sizing import protection_v
 from benchkit.procedure.state import State
 
@@ -233,13 +233,25 @@ class Moves:
         return replace(state, phase="reading"), (read,)
 
     def _next(self, state: State) -> Step:
-        if state.stopped and not state.ever_on and self.item(state).kind == "off":
+        if state.stopped and self.item(state).kind == "off" and not self._may_hold_charge(state):
             return self._close(replace(state, index=len(self.plan)))
         asked: tuple[Action, ...] = ()
         if state.index + 1 == self.plan.made_safe and not state.stopped and any(one.rare for one in state.results):
             state, asked = self._ask_suspects(state)  # all readings there are decide about the rare ones
         after, actions = self._enter(state, state.index + 1)
         return after, (*actions, *asked)
+
+    def _may_hold_charge(self, state: State) -> bool:
+        """Whether the rails have to be seen low: they had power, or a look at them came to no rail that is low."""
+        if state.ever_on:
+            return True
+        for item in self.plan.items[: self.plan.made_safe]:
+            if item.point is not None and item.point.name in RAIL_POINTS:
+                result = state.result(item.id)
+                low = result is not None and result.verdict == "pass" and item.id not in state.before
+                if not low and (result is not None or item.id in state.readings or item.id == state.stopped_at):
+                    return True
+        return False
 
     def _close(self, state: State) -> Step:
         state = replace(state, phase="closing", extra="")

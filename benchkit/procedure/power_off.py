@@ -18,12 +18,19 @@ from typing import Any
 from benchkit import quantities
 from benchkit.errors import FileError
 from benchkit.judge.limits import Limits
+from benchkit.procedure import questions
 from benchkit.procedure.file import Section, Step
 from benchkit.procedure.items import RAIL_LOW_V, RAIL_POINTS, Item, ItemKind
 from benchkit.procedure.sizing import discharge_text, helper_text, time_text
 from benchkit.stage.design import Design
 from benchkit.stage.points import Point
 from benchkit.stage.stored import SECOND_LOOK_S, Stored, stored
+
+MAINS = (
+    "Mains voltage inside: touch nothing, one hand away, somebody within call. The protective earth stays connected. "
+    "Know where the lamp's switch is before it goes on."
+)
+"""What is to be known before mains goes on through the lamp; common practice."""
 
 SEEN_LOW = "Nobody touches the circuit before every rail has been seen low."
 
@@ -100,7 +107,7 @@ class PowerOff:
         where = "One tip on either rail" if across else "One tip on the rail, the other on 0 V"
         more: dict[str, Any] = {}
         if clip or not step.do:
-            more["do"] = f"{where}, at the unit's own capacitors. Keep it there: the reading is watched down."
+            more["do"] = f"{where}, at the unit's own capacitors. Keep it there until the rail is low."
         if clip or not step.why:
             more["why"] = SEEN_LOW
         if clip or not step.caution:
@@ -111,7 +118,7 @@ class PowerOff:
             more.pop("caution", None)
         look = "Second look" if second else "Seen low at the unit"
         time = "at once" if seconds == 0.0 else f"in {time_text(seconds)}" if seconds is not None else ""
-        expected = f"falls from {quantities.show(from_v, 'V', 3)} {time}".rstrip() if not second else ""
+        expected = f"falls from at most {quantities.show(from_v, 'V', 3)} {time}".rstrip() if not second else ""
         return self._item(
             step,
             "discharge",
@@ -164,8 +171,9 @@ class PowerOff:
                 "hold",
                 ".hold",
                 title="Mains through the series lamp?",
-                do="The unit plugged in through the lamp, hands off. Power comes on by your own hand.",
-                why="Mains goes on only after a plain yes.",
+                do="Series lamp switched off, unit plugged in through it, hands off. Power comes on by your own hand.",
+                why="Behind this yes you switch mains on: from then on the unit's own wiring carries it.",
+                caution=f"{MAINS} {questions.BY_HAND_ALWAYS}",
             )
         self.on = self.lamp = True
         self.positive_v = self.negative_v = self.limit_a = 0.0

@@ -79,7 +79,7 @@ def falling(item: Item) -> Question:
         item=item.id,
         kind="watch",
         title=item.title,
-        do="Keep the probes where they are, hands off the circuit: the rail is watched down.",
+        do="Keep the probes where they are, hands off the circuit: the rail is watched until it is low.",
         caution=item.caution,
         expected="; ".join(text for text in (expected_text(item.limits), item.expected) if text),
         point=item.point.name,

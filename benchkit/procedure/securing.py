@@ -24,7 +24,7 @@ from benchkit.events import (
 )
 from benchkit.procedure import questions
 from benchkit.procedure.actions import Action, Ask, Connect, SwitchOff
-from benchkit.procedure.hearing import cut, heard, off_by_word, off_heard, switched_by_hand
+from benchkit.procedure.hearing import cut, heard, never_on_by_hand, off_by_word, off_heard, switched_by_hand
 from benchkit.procedure.moves import Moves, Step
 from benchkit.procedure.state import State
 
@@ -45,9 +45,23 @@ NOT_CONFIRMED: Final = "the supply did not confirm that its output is off"
 
 STILL_OFF: Final = "The supply is off, and was read back as off once more. The walk stays where it is."
 
+WAS_ON: Final = "The supply's output was on when it was found."
+
+NOT_SAID: Final = "The supply did not say whether its output is on."
+
+FOUND_ON: Final = (
+    "It was switched off, and read back as off. Rails may hold charge: see them low before a hand goes in."
+)
+"""Said of a supply that was on, or said nothing, when it was found."""
+
 OFF_ASKED: Final = "The supply is off already, and is told so once more. The walk stays where it is."
 
 OFF_AS_SAID: Final = "You said that it is off; nothing here can switch it. The walk stays where it is."
+
+NOT_ON_YET: Final = (
+    "Nothing here can switch your supply, and nobody was asked to switch it on yet: if it is on, switch it off by "
+    "hand. The walk stays where it is."
+)
 
 AFTER_TRIP: Final = "Discharge, and find the cause: no second try at a higher limit."
 
@@ -58,8 +72,9 @@ class Securing(Moves):
     # -- what may come at any time -----------------------------------------------------------------------------
 
     def _stop_asked(self, state: State, event: StopAsked) -> Step:
-        if state.energised == "off" and event.reason.startswith(MAKING_SURE):
-            note = OFF_AS_SAID if switched_by_hand(state) else OFF_ASKED
+        never_on = never_on_by_hand(state)
+        if (state.energised == "off" or never_on) and event.reason.startswith(MAKING_SURE):
+            note = NOT_ON_YET if never_on else OFF_AS_SAID if switched_by_hand(state) else OFF_ASKED
             return replace(state, note=note), self._open_actions(state)
         return self._make_safe(state, event.reason, 4)
 
@@ -116,9 +131,7 @@ class Securing(Moves):
     def _bench_found(self, state: State, event: BenchFound) -> Step:
         state = heard(replace(state, meter=event.meter, supply_name=event.supply), event.supply_state)
         if event.supply_state is not None and state.energised != "off":
-            note = "The supply's output was on when it was found."
-            if state.energised == "unknown":
-                note = "The supply did not say whether its output is on."
+            note = NOT_SAID if state.energised == "unknown" else WAS_ON
             return replace(state, phase="securing", ever_on=True, note=note), (
                 SwitchOff(item=self.item(state).id, reason=note),
             )
@@ -138,7 +151,9 @@ class Securing(Moves):
     def _secure_missing(self, state: State, event: BenchMissing) -> Step:
         question = questions.deciding(self.item(state), None, event.problem, way_out=False)
         question = replace(question, choices=(questions.AGAIN, questions.STOP))
-        return replace(state, note=event.problem), (Ask(item=self.item(state).id, question=question),)
+        return replace(state, note=event.problem, missing=event.problem), (
+            Ask(item=self.item(state).id, question=question),
+        )
 
     def _secure_decided(self, state: State, event: Decided) -> Step:
         if event.choice not in ("again", "make safe"):
@@ -152,7 +167,10 @@ class Securing(Moves):
         state = off_heard(state, event)
         if not event.confirmed:
             return state, (Ask(item=self.item(state).id, question=questions.by_hand_off(self.item(state), event.how)),)
-        return self._go_back(state)
+        after, actions = self._go_back(state)
+        if event.reason in (WAS_ON, NOT_SAID):
+            after = replace(after, note=f"CAUTION: {event.reason} {FOUND_ON}")
+        return after, actions
 
     def _secured_by_hand(self, state: State, event: Answered) -> Step:
         demand(event, "done")

@@ -14,7 +14,8 @@ Rules
   that was never taken leaves it undecided.
 * An extra reading is an item like any other, beside the plan's: while it is taken, it is *the* item.
 * What the model says of this unit comes aside (`benchkit.procedure.modelling`): it moves nothing and stops nothing.
-* Nobody is told to touch the unit on the way out before both of its rails have been seen low.
+* Nobody is told to touch the unit on the way out before both of its rails have been seen low; a unit that never had
+  power is looked at too, once a look at its rails has not found them low.
 """
 
 from __future__ import annotations
@@ -110,6 +111,9 @@ class Walk(Securing, Modelling):
         state = State()
         actions: tuple[Action, ...] = ()
         for event, now_s in events:
+            if isinstance(event, Closed) and state.stopped and not state.ever_on and self.way_out(state):
+                # Earlier versions closed here, without a look at rails that had been read as charged.
+                state = replace(state, phase="closing")
             state, actions = self.handle(state, event, now_s)
         return state, actions
 

@@ -21,7 +21,7 @@ at first use because a command's ``--help`` doesn't need them.
 from __future__ import annotations
 
 from benchkit.quantities.parsing import last_digit, parse, parse_reading, parse_tolerance
-from benchkit.quantities.showing import printable, quoted, show
+from benchkit.quantities.showing import printable, quoted, show, show_within
 from benchkit.quantities.units import SCPI_INFINITY, SCPI_NOT_A_NUMBER, Overload, Tolerance
 
 __all__ = [
@@ -36,4 +36,5 @@ __all__ = [
     "printable",
     "quoted",
     "show",
+    "show_within",
 ]

@@ -3,8 +3,11 @@
 from __future__ import annotations
 
 import math
+import re
 
 from benchkit.quantities.units import PLAIN, UNITS, Overload, quantity_type
+
+_FIXED = re.compile(r"[0-9]+(\.[0-9]+)?")
 
 
 def show(value: float | Overload | None, unit: str, digits: int = 4) -> str:
@@ -35,6 +38,45 @@ def show(value: float | Overload | None, unit: str, digits: int = 4) -> str:
     spec = UNITS.get(unit)
     shown = quantity_type("".join(p for p in spec.prefixes if unit != "ohm" or p != "m") if spec else "")
     return str(shown(value, unit).render(prec=digits - 1, strip_zeros=False))
+
+
+def show_within(value: float | Overload | None, unit: str, uncertainty: float | None, digits: int = 4) -> str:
+    """Write a quantity without digits that its uncertainty leaves no meaning.
+
+    Parameters
+    ----------
+    value, unit
+        As for `show`.
+    uncertainty : float or None
+        In `unit`; the second significant digit of it is the last place that is shown.  None, zero and what is not
+        finite leave the value as `show` writes it.
+    digits : int
+        Significant digits at most.
+
+    Returns
+    -------
+    str
+        Such as "12.3 mV"; a value below its uncertainty is written to the same prefix and place as that.
+
+    Examples
+    --------
+    >>> show_within(610e-9, "V", 4e-6)
+    '0.6 uV'
+    """
+    size = None if isinstance(value, Overload) or value is None or not math.isfinite(value) else abs(value)
+    if size is None or uncertainty is None or not math.isfinite(uncertainty) or uncertainty <= 0.0:
+        return show(value, unit, digits)
+    assert isinstance(value, (int, float))
+    if size >= uncertainty:
+        places = math.floor(math.log10(size)) - math.floor(math.log10(uncertainty))
+        return show(value, unit, min(digits, places + 2))
+    number, _, rest = show(uncertainty, unit, 2).partition(" ")
+    if not _FIXED.fullmatch(number):
+        return show(value, unit, 1)
+    place = 10.0 ** (math.floor(math.log10(uncertainty)) - 1)
+    per_prefix = 10.0 ** round(math.log10(float(number) / uncertainty))
+    text = f"{round(value / place) * place * per_prefix:.{len(number.partition('.')[2])}f}"
+    return f"{text.lstrip('-') if float(text) == 0.0 else text} {rest}"
 
 
 def quoted(text: object, longest: int = 40) -> str:

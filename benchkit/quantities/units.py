@@ -77,11 +77,11 @@ UNITS: dict[str, Unit] = {
 }
 
 EXAMPLES = {
-    "V": '"12.3 mV" or "0.0123"',
-    "A": '"50 mA" or "0.05"',
-    "ohm": '"4k7", "0R22", "4.7 kohm" or "4700"',
+    "V": '"12.3 mV" or "0.0123 V"',
+    "A": '"50 mA" or "0.05 A"',
+    "ohm": '"4k7", "0R22" or "4.7 kohm"',
     "F": '"100 uF" or "4n7"',
-    "degC": '"25 degC" or "25"',
+    "degC": '"25 degC"',
     "K": '"40 K"',
     "K/W": '"1.2 K/W"',
     "J/K": '"400 J/K"',

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import re
-from collections.abc import Iterable, Mapping
+from collections.abc import Mapping
 from dataclasses import dataclass, field, replace
 
 from benchkit.errors import BenchkitError
@@ -37,6 +37,7 @@ from benchkit.measure.readings import Reading
 from benchkit.procedure.file import Procedure, parse_procedure
 from benchkit.procedure.hearing import UNPROTECTED
 from benchkit.procedure.modelling import TOO_SLOWLY
+from benchkit.quantities import show
 from benchkit.record.facts import Ending, Incident, Result, Suspicion
 
 _NAME = re.compile(r"[a-z0-9][a-z0-9-]*")
@@ -61,13 +62,16 @@ class Gathering:
     off: OutputOff | None = None
     said_off: bool = False
     cautions: list[str] = field(default_factory=list)
+    lamp_on_at: str = ""
+    lamp_off_at: str = ""
     closed: Closed | None = None
     where: str = ""
 
     def __post_init__(self) -> None:
-        self.sections, self._titles = _titles(self.opened)
+        self.sections, self._titles, self._kinds = _titles(self.opened)
         self._conditions: dict[str, str] = {}
         self._by_hand = self.opened.supply == "manual"
+        self._lamp_asked_after_resume = False
         self.cautions += self.opened.cautions
 
     def take(self, seq: int, at: str, event: Event) -> None:
@@ -78,6 +82,7 @@ class Gathering:
         match event:
             case BenchFound():
                 self.meter, self.supply = event.meter, event.supply
+                self._found(seq, at, event.supply_state)
                 self._look_at(event.supply_state)
             case Predicted():
                 self._conditions.update(dict.fromkeys((limits.point for limits in event.limits), event.condition))
@@ -97,6 +102,7 @@ class Gathering:
             case Decided():
                 self._decide(seq, at, event)
             case Answered():
+                self._lamp(at, event)
                 self.answers.append((self.where, event))
                 if self.off is not None and not self.off.confirmed and self._by_hand and event.choice == "done":
                     self.said_off, self.may_be_on = True, False
@@ -111,6 +117,7 @@ class Gathering:
                 if not event.confirmed and not self._by_hand:
                     self._incident(seq, at, f"the supply did not confirm that its output is off ({event.how})")
             case Resumed():
+                self._lamp_asked_after_resume = bool(self.lamp_on_at and not self.lamp_off_at)
                 self.results = [replace(result, from_before=True) for result in self.results]
                 torn = "; the last line before it was torn and is lost" if event.torn else ""
                 self._incident(seq, at, f"resumed by {event.operator}{torn}")
@@ -189,6 +196,26 @@ class Gathering:
         elif self.off is None or self.off.confirmed:
             self.may_be_on = False
 
+    def _found(self, seq: int, at: str, state: SupplyState | None) -> None:
+        """Note a supply that was on, or said nothing of it, when it was found."""
+        if state is None or state.output_on is False:
+            return
+        said = "its output ON" if state.output_on else "nothing to say whether its output is on"
+        rails = [show(volts, "V", 3) for volts in (state.positive_v, state.negative_v) if volts is not None]
+        at_rails = f" ({' and '.join(rails)})" if rails else ""
+        self._incident(seq, at, f"the supply was found with {said}{at_rails}, and was told to go off")
+
+    def _lamp(self, at: str, event: Answered) -> None:
+        """Follow the mains through a series lamp: it may be on from the yes before it, and goes off by word alone."""
+        section, step = _parts(event.item)
+        kind = self._kinds.get((section, step), "")
+        if kind == "series lamp" and event.choice == "yes":
+            if not self.lamp_on_at or self.lamp_off_at:
+                self.lamp_on_at, self.lamp_off_at = at, ""
+        elif self.lamp_on_at and event.choice == "done" and (kind == "off" or self._lamp_asked_after_resume):
+            self.lamp_off_at = at
+        self._lamp_asked_after_resume = False
+
     def _incident(self, seq: int, at: str, what: str) -> None:
         self.incidents.append(Incident(seq=seq, at=at, where=self.where, what=what))
 
@@ -210,16 +237,25 @@ def _parts(item: str) -> tuple[str, str]:
     return (names[0] if names else "", names[1] if len(names) > 1 else "")
 
 
-def _titles(opened: WalkOpened) -> tuple[dict[str, str], Mapping[tuple[str, str], str]]:
-    """Return the sections' titles by name, in order, and the steps' titles by section and step."""
+_ByStep = Mapping[tuple[str, str], str]
+
+
+def _titles(opened: WalkOpened) -> tuple[dict[str, str], _ByStep, _ByStep]:
+    """Return the sections' titles by name, in order, and the steps' titles and kinds by section and step."""
     try:
         procedure: Procedure = parse_procedure(opened.procedure_text, opened.procedure_name)
     except BenchkitError:
-        return {}, {}
-    steps: Iterable[tuple[tuple[str, str], str]] = (
-        ((section.name, step.name), step.title) for section in procedure.sections for step in section.step
+        return {}, {}, {}
+    steps = {(section.name, step.name): step for section in procedure.sections for step in section.step}
+    kinds: dict[tuple[str, str], str] = {names: step.kind for names, step in steps.items()}
+    for (names, kind), after in zip(list(kinds.items()), list(kinds.values())[1:], strict=False):
+        if (kind, after) == ("hold", "series lamp"):
+            kinds[names] = after  # the yes that mains goes on behind
+    return (
+        {section.name: section.title for section in procedure.sections},
+        {names: step.title for names, step in steps.items()},
+        kinds,
     )
-    return {section.name: section.title for section in procedure.sections}, dict(steps)
 
 
 def _disturbance(event: Event) -> str:
@@ -261,6 +297,22 @@ def ending_of(ever_on: bool, may_be_on: bool, off: OutputOff | None, *, by_hand:
     if ever_on:
         return Ending(state="off", words="Off, as the supply said when it was last asked.")
     return Ending(state="never on", words=NEVER_ON)
+
+
+def with_lamp(supply: Ending, on_at: str, off_at: str, *, by_hand: bool) -> Ending:
+    """Say what the record shows of mains through a series lamp, and of the supply where that was another one."""
+    if not on_at:
+        return supply
+    lamp = f"Mains through the series lamp from {on_at}"
+    if off_at:
+        lamp += f"; off at {off_at}, as said by the operator: benchkit had no hand on it."
+    else:
+        lamp += ", and nobody said that it is off: take the unit as live until its plug is seen pulled."
+    state = "off" if off_at else "unknown"
+    if supply.state == "never on" or by_hand:
+        return Ending(state=state, words=lamp)
+    worst = state if supply.state == "off" else supply.state
+    return Ending(state=worst, words=f"{lamp} The bench's supply: {supply.words}")
 
 
 NEVER_ON = "Never switched on during this walk."

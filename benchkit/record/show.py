@@ -15,7 +15,7 @@ from typing import Any
 from benchkit.events import Answered, Noted, to_payload
 from benchkit.measure.readings import Reading
 from benchkit.procedure import suspect_words
-from benchkit.quantities import Overload, show
+from benchkit.quantities import Overload, show, show_within
 from benchkit.record.summary import Result, Summary, Suspicion
 
 DEFERENCE = (
@@ -239,7 +239,7 @@ def _row(result: Result, name: str) -> tuple[str, ...]:
     )
     return (
         name,
-        "no reading" if result.missed else _quantity(_measured(result), unit),
+        "no reading" if result.missed else _quantity(_measured(result), unit, uncertainty=_uncertainty(result)),
         _quantity(judged.low, unit) if judged is not None else "",
         _quantity(judged.high, unit) if judged is not None else "",
         _unit_limits(result),
@@ -262,11 +262,11 @@ def _uncertainty(result: Result) -> float | None:
     return reading.standard_uncertainty if reading is not None else None
 
 
-def _quantity(value: float | Overload | None, unit: str, digits: int = 4) -> str:
+def _quantity(value: float | Overload | None, unit: str, digits: int = 4, uncertainty: float | None = None) -> str:
     if value is None:
         return "-"
     try:
-        return show(value, unit, digits)
+        return show_within(value, unit, uncertainty, digits)
     except ValueError:  # a rule's number may have a unit of its own, or none
         return f"{value:.{digits}g} {unit}".strip() if isinstance(value, float) else "overload"
 

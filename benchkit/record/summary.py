@@ -21,7 +21,7 @@ from benchkit.events import (
     WalkOpened,
 )
 from benchkit.record.facts import Ending, Incident, Result, Summary, Suspicion
-from benchkit.record.gathering import Gathering, ending_of
+from benchkit.record.gathering import Gathering, ending_of, with_lamp
 from benchkit.record.verify import Record, load
 
 __all__ = ["Ending", "Incident", "Result", "Summary", "Suspicion", "load_summary", "summarise"]
@@ -45,6 +45,7 @@ def summarise(record: Record) -> Summary:
             str(record.path), "", record.message, "a record that benchkit has written", "Choose another file"
         )
     gathered = Gathering(opened=record.kept[0].event)
+    by_hand = gathered.opened.supply == "manual"
     for kept in record.kept:
         gathered.take(kept.seq, kept.at, kept.event)
     return Summary(
@@ -60,8 +61,11 @@ def summarise(record: Record) -> Summary:
         incidents=tuple(gathered.incidents),
         notes=tuple(gathered.notes),
         highest_v=gathered.highest,
-        ending=ending_of(
-            gathered.ever_on, gathered.may_be_on, gathered.off, by_hand=gathered.opened.supply == "manual"
+        ending=with_lamp(
+            ending_of(gathered.ever_on, gathered.may_be_on, gathered.off, by_hand=by_hand),
+            gathered.lamp_on_at,
+            gathered.lamp_off_at,
+            by_hand=by_hand and not gathered.ever_on,
         ),
         closed=gathered.closed,
         suspicions=tuple(gathered.suspicions),

@@ -19,6 +19,9 @@ FIRST_LOOK_S = 0.2
 LOOK_S = 1.0
 """How often the supply is looked at while a question stands (s)."""
 
+FOUND_ON = "CAUTION: the supply's output was ON when benchkit found it; it was told to go off."
+"""Stays in sight; whether the supply obeyed is shown by what is read back of it."""
+
 
 async def connect(session: Session) -> Event:
     """Find the instruments of the bench."""
@@ -29,6 +32,8 @@ async def connect(session: Session) -> Event:
         state = None
         if not session.job.manual_supply:
             state = await asyncio.wrap_future(session.keeper.supply_state())
+            if state.output_on:
+                session.show_moment(message=FOUND_ON)
     except InstrumentError as error:
         return BenchMissing(problem=str(error))
     return BenchFound(

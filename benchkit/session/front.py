@@ -56,12 +56,33 @@ class ResultView:
 
 @dataclass(frozen=True, kw_only=True)
 class SupplyView:
-    """What is known of the supply, in words that are never more certain than the knowledge."""
+    """What is known of the supply, in words that are never more certain than the knowledge.
+
+    Parameters
+    ----------
+    energised : {"off", "on", "unknown"}
+    words : str
+    by_hand : bool
+        Only a person switches what feeds the unit.
+    state : SupplyState or None
+    label : str
+        The state in two or three words, where those for `energised` would say too much or too little; "" where not.
+    hint : str
+        How it is switched off, where neither a key nor a hand with F9 after it is the answer; "" where one is.
+    calm : bool
+        Nobody knows whether it is on, and nothing is wrong: it is being set, or has not been asked yet.
+    never_on : bool
+        Only a person switches it, and this walk has not asked anybody yet to switch it on.
+    """
 
     energised: Energised
     words: str
     by_hand: bool
     state: SupplyState | None
+    label: str = ""
+    hint: str = ""
+    calm: bool = False
+    never_on: bool = False
 
 
 @dataclass(frozen=True, kw_only=True)

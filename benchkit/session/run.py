@@ -38,6 +38,7 @@ from benchkit.procedure.actions import (
     Question,
     Write,
 )
+from benchkit.procedure.hearing import never_on_by_hand
 from benchkit.procedure.securing import MAKING_SURE
 from benchkit.procedure.state import Phase, State
 from benchkit.session import acting, asking, ending, powering
@@ -104,7 +105,7 @@ class Session:
 
         A supply that is known to be off is only made sure of, and the walk keeps its place.
         """
-        if self.state.energised == "off" and self.state.phase != "setting":
+        if self.nothing_to_switch_off:
             reason = f"{MAKING_SURE}: {reason}"
         if not self.job.manual_supply:
             self.keeper.off(reason)
@@ -112,6 +113,12 @@ class Session:
             self._off_asked = True
             with contextlib.suppress(RuntimeError):
                 self._loop.call_soon_threadsafe(self._take_push, _Asked(reason))
+
+    @property
+    def nothing_to_switch_off(self) -> bool:
+        """Whether the supply is known to be off, or is a person's and was never asked to be on in this walk."""
+        off = self.state.energised == "off" and self.state.phase != "setting"
+        return off or never_on_by_hand(self.state)
 
     def heartbeat(self) -> None:
         """Tell the keeper that the event loop turns."""
@@ -283,6 +290,8 @@ class Session:
                 continue
             if isinstance(push.event, OutputOff):
                 self.last_off = push.event
+            if isinstance(push.event, Noted):
+                self.moment.message = push.event.text
             self.state, actions = self.job.walk.handle(self.state, push.event, self.clock.now())
             self.seq = push.seq
             fresh = actions or fresh

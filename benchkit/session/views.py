@@ -2,27 +2,25 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 
 from benchkit import quantities
 from benchkit.events import Judged, SupplyState
 from benchkit.judge.verdicts import worst
 from benchkit.procedure import knowledge, suspect_words
-from benchkit.procedure.hearing import protection_text, switched_by_hand
 from benchkit.procedure.items import Item, Plan, condition_key
 from benchkit.procedure.state import State
 from benchkit.procedure.walk import Walk
 from benchkit.session.front import (
     AimView,
-    Energised,
     LiveView,
     ResultView,
     SectionView,
-    SupplyView,
     SuspectsView,
     SuspectView,
     View,
 )
+from benchkit.session.supply_view import supply_view
 
 OVERLOAD = "The meter reads overload"
 """How a verdict on an overload begins; such a result has no number."""
@@ -105,12 +103,12 @@ class Painter:
             item_number=min(state.index + 1, len(self._walk.plan)),
             item_count=len(self._walk.plan),
             results=self._results,
-            supply=_supply(state, moment.supply or state.supply),
+            supply=supply_view(state, item, moment.supply or state.supply, way_out=self._walk.way_out(state)),
             live=moment.live,
             busy=moment.busy,
             busy_share=moment.busy_share,
             remaining_s=moment.remaining_s,
-            message=moment.message or state.note or _remark(self._suspects, self._walk.host(state)),
+            message=_message(state, moment.message) or _remark(self._suspects, self._walk.host(state)),
             kept=state.count,
             verdict=None if state.closed is None else state.closed.verdict,
             stopped=state.stopped,
@@ -211,66 +209,22 @@ def _next_step(walk: Walk, state: State) -> str:
     return ""
 
 
+def _message(state: State, message: str) -> str:
+    """Join what there is to say in a sentence or two; why a walk is on its way out is said as long as it is."""
+    stop = ""
+    if state.stopped and state.closed is None:
+        stop = f"STOPPED: {state.stopped.rstrip('.')}. On the way out now."
+    told = state.stopped[:1].upper() + state.stopped[1:]
+    note = "" if state.note.rstrip(".") == state.stopped.rstrip(".") else state.note
+    note = note.removeprefix(f"{told}. ") if stop else note
+    return " ".join(dict.fromkeys(words for words in (stop, note, message) if words))
+
+
 def _remark(suspects: SuspectsView | None, host: Item) -> str:
     """Say in one line what was asked about an earlier item: its answer may come when the walk has gone on."""
     if suspects is None or suspects.item == host.id:
         return ""
     return suspects.heading if suspects.working or suspects.accuses else ""
-
-
-NO_HAND = "nothing switches it off by itself"
-"""Said all the time of what only a person switches."""
-
-
-def supply_words(
-    energised: Energised,
-    supply: SupplyState | None,
-    *,
-    by_hand: bool,
-    on_lamp: bool = False,
-    unprotected: bool = False,
-) -> str:
-    """Say what is known of the supply, never more than that.
-
-    Parameters
-    ----------
-    energised : {"off", "on", "unknown"}
-    supply : SupplyState or None
-        The newest that was heard of it.
-    by_hand : bool
-        Only a person switches what feeds the unit.
-    on_lamp : bool
-        And that is a series lamp.
-    unprotected : bool
-        It tells of no over-voltage protection of its own.
-    """
-    if on_lamp:
-        return f"MAINS THROUGH THE SERIES LAMP: {NO_HAND}, pull the plug by hand"
-    if energised == "unknown" and not by_hand:
-        return "SUPPLY: OUTPUT STATE UNKNOWN - treat the unit as live"
-    tripped = "  TRIPPED by its own protection" if supply is not None and supply.tripped else ""
-    if energised == "off":
-        rest = f"as you said; {NO_HAND}" if by_hand else "read back as off"
-        return f"SUPPLY OFF ({rest}){tripped}"
-    parts = [f"SUPPLY IN YOUR HANDS: {NO_HAND}" if by_hand else "SUPPLY ON"]
-    if by_hand and supply is not None:
-        parts.append("you said:")
-    if supply is not None:
-        for volts, amps in ((supply.positive_v, supply.positive_a), (supply.negative_v, supply.negative_a)):
-            if volts is not None:
-                parts.append(
-                    quantities.show(volts, "V") + ("" if amps is None else f" {quantities.show(amps, 'A', 3)}")
-                )
-        if supply.limit_a is not None:
-            parts.append(f"limit {quantities.show(supply.limit_a, 'A', 3)}")
-        if supply.in_limit:
-            parts.append("IN LIMIT")
-        protection = protection_text(supply)
-        if protection:
-            parts.append(f"protection {protection}")
-    if unprotected:
-        parts.append("NO OVER-VOLTAGE PROTECTION")
-    return "  ".join(parts) + tripped
 
 
 def _sections(plan: Plan, state: State) -> tuple[SectionView, ...]:
@@ -298,17 +252,3 @@ def _number(value: float | None, unit: str) -> str:
     if value is None:
         return ""
     return quantities.show(value, unit, 5) if unit else f"{value:.3g}"
-
-
-def _supply(state: State, supply: SupplyState | None) -> SupplyView:
-    by_hand = switched_by_hand(state)
-    if state.phase == "setting" and supply is not None and supply is not state.supply and supply.output_on is not None:
-        state = replace(state, energised="on" if supply.output_on else "off")  # read back while it is being set
-    return SupplyView(
-        energised=state.energised,
-        words=supply_words(
-            state.energised, supply, by_hand=by_hand, on_lamp=state.on_lamp, unprotected=state.unprotected
-        ),
-        by_hand=by_hand,
-        state=supply,
-    )

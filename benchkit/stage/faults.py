@@ -242,7 +242,9 @@ def parse_fault(text: str, design: Design | None = None) -> Fault:
     part, colon, fault = (piece.strip() for piece in text.partition(":"))
     part, fault = part.lower(), " ".join(fault.lower().split())
     if not colon or not part or not fault:
-        raise EntryError(f'"{text}" came', 'a part and a fault, such as "emitter.upper.1: open"')
+        raise EntryError(
+            f'"{text}" is no planted fault', 'a part and a fault with a colon between, such as "emitter.upper.1: open"'
+        )
     known = tuple(dict.fromkeys(row.fault for row in FAULTS))
     if fault not in known:
         raise EntryError(f'"{fault}" is no fault', "one of " + ", ".join(known))
@@ -315,8 +317,8 @@ def _look_up(design: Design, fault: Fault) -> tuple[Part, FaultRow]:
         import difflib
 
         near = difflib.get_close_matches(fault.part, parts, 3)
-        hint = f", perhaps {' or '.join(near)}" if near else ""
-        raise EntryError(f'"{fault.part}" is no part of {design.name}', f"one of its parts{hint}")
+        hint = f"{' or '.join(near)} perhaps; " if near else ""
+        raise EntryError(f'"{fault.part}" is no part of {design.name}', f"{hint}one of {', '.join(parts)}")
     rows = {row.fault: row for row in _rows(part)}
     if fault.fault not in rows:
         raise EntryError(f'"{fault.fault}" is no fault of {fault.part}', "one of " + ", ".join(rows))

@@ -16,10 +16,8 @@ import contextlib
 import os
 import sys
 import tempfile
-import traceback
 from collections.abc import Callable, Coroutine
-from dataclasses import dataclass
-from datetime import UTC, datetime
+from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any, ClassVar, Final
 
@@ -33,7 +31,10 @@ from benchkit.events import Closed
 from benchkit.procedure.actions import Question
 from benchkit.session.front import Reply, SupplyView, View
 from benchkit.ui import look, platform
+from benchkit.ui.before import before_the_walk, left_before_the_walk
 from benchkit.ui.entry import Identity, Opening, Start
+from benchkit.ui.own_error import write_log
+from benchkit.ui.screen_front import ScreenFront
 from benchkit.ui.screens.base import BenchScreen
 from benchkit.ui.screens.leave import LeaveScreen
 from benchkit.ui.screens.start import StartScreen
@@ -54,6 +55,8 @@ CLOSE_WHEN_OFF_S: Final = 1.0
 CLOSE_WHEN_TOLD_S: Final = 1.0
 """The same when told to go from outside: well inside the hard exit (s)."""
 
+LEAVING: Final = "The walk ends here; it can be gone on with later."
+
 STOPPED: Final = 4
 OWN_ERROR: Final = 5
 
@@ -63,21 +66,6 @@ class _Pending:
     question: Question
     refused: str
     reply: asyncio.Future[Reply]
-
-
-class ScreenFront:
-    """What the session sees of the screens (`benchkit.session.front.Front`)."""
-
-    def __init__(self, app: BenchApp) -> None:
-        self._app = app
-
-    def show(self, view: View) -> None:
-        """Display a picture of the walk, at the next repaint."""
-        self._app.take_view(view)
-
-    async def ask(self, question: Question, refused: str = "") -> Reply:
-        """Put a question and wait for the reply; when cancelled, the question goes away."""
-        return await self._app.put_question(question, refused)
 
 
 class BenchApp(App[int]):
@@ -207,11 +195,16 @@ class BenchApp(App[int]):
         """What is known of the supply; None before the walk has begun."""
         return self._view.supply if self._view is not None else None
 
+    @property
+    def supply_shown(self) -> SupplyView:
+        """What the off line shows; before the walk has begun, that nobody has asked the supply yet."""
+        return self.supply or before_the_walk(self._opening, pressed=self.off_asked)
+
     def take_view(self, view: View) -> None:
         """Keep the newest picture; a change of the supply is shown without waiting for the next repaint."""
         earlier = self._view
         self._view = view
-        if view.supply.energised == "off":
+        if view.supply.energised == "off" or earlier is None:
             self.off_asked = False
         if earlier is None or earlier.supply != view.supply or view.exit_status is not None:
             self._paint()
@@ -221,7 +214,7 @@ class BenchApp(App[int]):
         pending = _Pending(question, refused, asyncio.get_running_loop().create_future())
         self._pending = pending
         self._paint()
-        if self._walk is not None:
+        if self._walk is not None and not self._leaving:  # whoever is leaving isn't asked any more
             self._walk.put(question, refused)
         try:
             return await pending.reply
@@ -241,6 +234,11 @@ class BenchApp(App[int]):
         self._run(self._leave("", self._status_of_end()))
 
     @property
+    def _keeps_place(self) -> bool:
+        """Whether the off key has nothing to switch off: the walk stays where it is."""
+        return self.supply is not None and (self.supply.energised == "off" or self.supply.never_on)
+
+    @property
     def _walk_stopped(self) -> bool:
         return self._view is not None and bool(self._view.stopped)
 
@@ -256,18 +254,25 @@ class BenchApp(App[int]):
             return
         if view is not None and view is not self._painted:
             earlier, self._painted = self._painted, view
-            walk.say(view)
+            self._say_view(walk)
             self._attend(earlier, view)
         walk.age()
         for screen in self.screen_stack:
             if isinstance(screen, BenchScreen):
                 screen.refresh_off_line()
 
+    def _say_view(self, walk: WalkScreen) -> None:
+        view = self._view
+        if view is not None:
+            walk.say(replace(view, message=LEAVING) if self._leaving and view.exit_status is None else view)
+
     def _attend(self, earlier: View | None, view: View) -> None:
         """Ring and flash when something did not pass or the supply changed its state."""
         fresh = view.results[len(earlier.results) if earlier is not None else 0 :]
-        changed = earlier is not None and earlier.supply.energised != view.supply.energised
-        if any(result.verdict != "pass" for result in fresh) or (changed and view.supply.energised == "unknown"):
+        before = None if earlier is None else (earlier.supply.energised, earlier.supply.calm)
+        changed = before is not None and before != (view.supply.energised, view.supply.calm)
+        alarming = changed and view.supply.energised == "unknown" and not view.supply.calm
+        if alarming or any(result.verdict != "pass" for result in fresh):
             self.bell()
         if changed:
             self._flash()
@@ -282,7 +287,7 @@ class BenchApp(App[int]):
 
     def call_off(self, reason: str) -> None:
         """Ask for off; never fails, never waits."""
-        self.off_asked = self._view is not None and self._view.supply.energised != "off"
+        self.off_asked = self._view is not None and not self._keeps_place
         with contextlib.suppress(Exception):
             self._off_now(reason)
 
@@ -294,7 +299,8 @@ class BenchApp(App[int]):
 
     def action_off_at_once(self) -> None:
         """Switch off at once."""
-        self.call_off("the operator asked for it")
+        self.call_off("the operator asked for off")
+        self.off_asked = self.off_asked or self._view is None
         for screen in self.screen_stack:
             if isinstance(screen, BenchScreen):
                 screen.refresh_off_line()
@@ -302,30 +308,25 @@ class BenchApp(App[int]):
 
     def action_off_by_space(self) -> None:
         """Switch off at once, when there is anything to switch off."""
-        if self.supply is not None and self.supply.energised != "off":
+        if self.supply is not None and not self._keeps_place:
             self.action_off_at_once()
 
     async def action_quit(self) -> None:
         """Leave; while the supply is on or may be, only after asking."""
         if self._leaving or isinstance(self.screen, LeaveScreen):
             return
-        supply = self.supply
-        if supply is None or supply.energised == "off":
+        if self.supply is None or self._keeps_place:
             self._begin_leaving()
-            return
-        words = "The supply is on." if supply.energised == "on" else "Nobody knows whether the supply is on."
-        words += (
-            " Nothing switches it off by itself: switch it off BY HAND before you leave."
-            if supply.by_hand
-            else " Leaving switches it off first."
-        )
-        self.push_screen(LeaveScreen(words + " The walk can be gone on with later."), self._on_leave)
+        else:
+            self.push_screen(LeaveScreen(self.supply), self._on_leave)
 
     def _on_leave(self, leave: bool | None) -> None:
         if leave:
             self._begin_leaving()
 
     def _begin_leaving(self) -> None:
+        if self._walk is None:
+            self.last_words = left_before_the_walk(self._opening)
         ended = self._ending is not None or (self._view is not None and self._view.exit_status is not None)
         self._run(self._leave("the operator left", self._status_of_end() if ended else STOPPED))
 
@@ -334,12 +335,17 @@ class BenchApp(App[int]):
         if self._leaving:
             return
         self._leaving = True
+        if self._walk is not None and self._pending is not None and self._walk.is_mounted:
+            self._walk.withdraw()
+            self._say_view(self._walk)
         if reason:
             self.call_off(reason)
         task = self._walk_task
         if task is not None and not task.done():
-            if self.supply is not None and self.supply.energised == "off" and not self._walk_stopped:
-                within_s = min(CLOSE_WHEN_OFF_S, CLOSE_WITHIN_S)  # nothing is closed: the walk keeps its place
+            if (self._keeps_place and not self._walk_stopped) or (self.supply is not None and self.supply.by_hand):
+                within_s = min(
+                    CLOSE_WHEN_OFF_S, CLOSE_WITHIN_S
+                )  # nothing is closed: the walk keeps its place, or only a person could end it
             _, waiting = await asyncio.wait({task}, timeout=CLOSE_WITHIN_S if within_s is None else within_s)
             if waiting:
                 task.cancel()
@@ -394,18 +400,6 @@ _THEME: Final = Theme(
     panel=look.PANEL,
     dark=True,
 )
-
-
-def write_log(directory: Path, error: BaseException) -> str:
-    """Write the traceback of `error` into a file in `directory`; return a sentence that says where, or why not."""
-    name = f"benchkit-error-{datetime.now(UTC):%Y%m%dT%H%M%S}-{os.getpid()}.log"
-    try:
-        directory.mkdir(parents=True, exist_ok=True)
-        path = directory / name
-        path.write_text("".join(traceback.format_exception(error)), encoding="utf-8")
-    except OSError as problem:
-        return f" The details could not be written ({problem.strerror or problem})."
-    return f" The details are in {path}."
 
 
 def run_app(

@@ -47,7 +47,7 @@ def expect_lines(
     loads_ohm : sequence of float
         For the bias block.
     """
-    lines = [*_cold_target(design, condition), *table_lines(found)]
+    lines = [*_beyond_rails(design, condition), *_cold_target(design, condition), *table_lines(found)]
     if condition.trimmer == "target" and design.spreader.trimmer is not None:
         lines += _wrapped(
             "That is with the trimmer exactly at the target; a real trim may be anywhere within the target's"
@@ -57,6 +57,30 @@ def expect_lines(
     lines += ["", *_block("Trimmer", lambda: trimmer_lines(design, trimmer_report(design)))]
     lines += ["", *_block(_COST, lambda: bias_lines(bias_report(design, condition, loads_ohm)))]
     return lines
+
+
+def beyond_the_design(design: Design, condition: Condition) -> str:
+    """Return what to know when a rail is higher than the design's; empty when none is."""
+    rails = design.rails
+    beyond = [
+        f"{name} rail of {show(volts, 'V')} (the design's is {show(own_v, 'V')})"
+        for name, volts, own_v in (
+            ("positive", condition.positive_v, rails.positive_v),
+            ("negative", condition.negative_v, rails.negative_v),
+        )
+        if abs(volts) > abs(own_v) * (1.0 + 1e-9)
+    ]
+    if not beyond:
+        return ""
+    return (
+        f"CAUTION: the {' and the '.join(beyond)} is beyond what this unit is made for. The figures are those of the"
+        " model, which burns nothing: a real unit may not stand it, and no walk goes there."
+    )
+
+
+def _beyond_rails(design: Design, condition: Condition) -> list[str]:
+    told = beyond_the_design(design, condition)
+    return [*_wrapped(told), ""] if told else []
 
 
 def _cold_target(design: Design, condition: Condition) -> list[str]:

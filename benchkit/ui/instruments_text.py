@@ -5,10 +5,12 @@ Everything is made of the same plain tables that ``--json`` prints, so that noth
 
 from __future__ import annotations
 
+import re
 import shlex
 import sys
+import textwrap
 from collections.abc import Mapping, Sequence
-from typing import Any, TextIO
+from typing import Any, Final, TextIO
 
 import click
 
@@ -16,11 +18,19 @@ from benchkit.quantities import show
 
 Table = Mapping[str, Any]
 
+COLUMNS: Final = 80
+"""No line of words is longer; what is to be typed keeps its line."""
+
+NOT_ASKED: Final = "not asked"
+"""What the tables say of a question that came after one without an answer."""
+
+_NUMBER_AND_UNIT: Final = re.compile(r"(?<![\w.])[-+]?[0-9][0-9.]* [A-Za-z%]+")
+
 TYPED = (
-    "TCPIP::192.168.1.20::5025::SOCKET    a network socket; the manual names the port, often 5025",
+    "TCPIP::192.168.1.20::5025::SOCKET    a network socket, often at port 5025",
     "TCPIP::192.168.1.20::inst0::INSTR    VXI-11",
     "TCPIP::192.168.1.20::hislip0::INSTR  HiSLIP",
-    "ASRL/dev/ttyUSB0::INSTR              a serial port; on Windows ASRL3::INSTR for COM3",
+    "ASRL/dev/ttyUSB0::INSTR              a serial port; Windows: ASRL3::INSTR",
     "USB0::0x1234::0x5678::SERIAL::INSTR  USB; vendor and product as lsusb has them",
 )
 """Addresses that can always be typed."""
@@ -32,17 +42,17 @@ def found_lines(findings: Table, *, network: bool) -> list[str]:
     lines: list[str] = []
     for one in found:
         lines.append(f"{one['address'] or '(no address)'}")
-        lines.append(f"    {one['what']}")
+        lines += _wrapped(f"    {one['what']}")
         if one["problem"]:
-            lines.append(f"    can't be used yet: {one['problem']}")
+            lines += _wrapped(f"    can't be used yet: {one['problem']}")
             lines += [f"      {line}" for line in one["cure"]]
     if not found:
         lines.append("Nothing was found.")
-    lines += [f"Note: {note}" for note in findings["notes"]]
+    lines += [line for note in findings["notes"] for line in _wrapped(f"Note: {note}")]
     lines.append("")
     ready = [one["address"] for one in found if one["address"] and not one["problem"]]
     if ready:
-        lines.append("Next, ask who answers there; leave out what is no instrument, because this sends to it:")
+        lines += ["Next, ask who answers there. This sends to it: leave out what is no instrument."]
         lines.append(f"  benchkit instruments identify {' '.join(map(_typed, ready))}")
     else:
         lines += ["An instrument need not be found to be used. Type its address, or the host alone:"]
@@ -73,14 +83,17 @@ def identified_lines(several: Sequence[Table], visa: str = "") -> list[str]:
             lines.append(f"Without a {lacking[0]} in it, a person {'reads' if lacking[0] == 'meter' else 'switches'}.")
     elif any(one["name"] for one in several):
         lines += [
-            "An instrument that answers no profile's questions needs a profile of its own: a file that says",
-            "what it calls things. See Profiles in the README, then name the file:",
+            *_wrapped(
+                "An instrument that answers no profile's questions needs a profile of its own: a file that says what it"
+                " calls things. See Profiles in the README, then name the file:",
+                " ",
+            ),
             "  benchkit instruments identify ADDRESS --profile my-meter.toml",
         ]
     elif any(one["problem_kind"] == "timeout" for one in several):
         lines += [
-            "For an instrument that stays silent, look at its own menu: remote control on, and its address and port.",
-            "On a serial line, try other speeds, and a lead that crosses the lines (null modem):",
+            "If one stays silent, look at its own menu: remote control, address, port.",
+            "On a serial line, try other speeds, and a lead that crosses (null modem):",
             "  benchkit instruments identify ADDRESS --baud 9600 --baud 19200 --baud 115200",
         ]
     else:
@@ -91,7 +104,7 @@ def identified_lines(several: Sequence[Table], visa: str = "") -> list[str]:
 def _identified(one: Table) -> list[str]:
     lines = [one["address"]]
     if not one["name"]:
-        return [*lines, f"    {one['problem']}"]
+        return [*lines, *_wrapped(f"    {one['problem']}")]
     lines.append(f"    {one['name']}")
     if one["baud"]:
         lines.append(f"    answers at {one['baud']} baud")
@@ -99,14 +112,29 @@ def _identified(one: Table) -> list[str]:
         if fit["complete"]:
             lines.append(f"    a {fit['kind']}: every question of the profile {fit['profile']} is answered")
             continue
-        asked = len(fit["answered"]) + len(fit["unanswered"])
-        missing = ", ".join(gap["question"] for gap in fit["unanswered"])
-        lines.append(
-            f"    the profile {fit['profile']}: {len(fit['answered'])} of {asked} questions answered, not {missing}"
-        )
-    if not one["fits"]:
-        lines.append(f"    answers no questions of a profile that was tried ({', '.join(one['tried'])})")
+        lines += _wrapped(f"    a {fit['kind']}, perhaps: {_part(fit)}")
+        lines += _gaps(fit)
+    if one["fits"]:
+        return lines
+    lines += _wrapped(f"    answers no questions of a profile that was tried ({', '.join(one['tried'])})")
+    for fit in one["misses"]:
+        lines += [f"    {fit['profile']}:", *_gaps(fit)]
     return lines
+
+
+def _part(fit: Table) -> str:
+    asked = len(fit["answered"]) + len(fit["unanswered"])
+    return f"{len(fit['answered'])} of {asked} questions of the profile {fit['profile']} are answered, not these:"
+
+
+def _gaps(fit: Table) -> list[str]:
+    """Return which questions had no answer, and what came instead."""
+    lines: list[str] = []
+    for gap in fit["unanswered"]:
+        if gap["what_happened"] != NOT_ASKED:
+            lines += _wrapped(f"      {gap['question']}: {gap['what_happened']}")
+    left = [gap["question"] for gap in fit["unanswered"] if gap["what_happened"] == NOT_ASKED]
+    return lines + (_wrapped(f"      not asked after that: {', '.join(left)}") if left else [])
 
 
 def checked_lines(checked: Table, path: str) -> list[str]:
@@ -118,14 +146,21 @@ def checked_lines(checked: Table, path: str) -> list[str]:
         lines += _supply(checked["supply"])
     for title, key in (("To know:", "cautions"), ("Trouble:", "problems")):
         if checked[key]:
-            lines += ["", title, *(f"  {text}" for text in checked[key])]
+            lines += ["", title, *(line for text in checked[key] for line in _wrapped(f"  - {text}"))]
     lines.append("")
     if checked["stopped"]:
         lines.append(f"Stopped early ({checked['stopped']}).")
     if checked["problems"]:
         lines.append("Not everything worked. Put the trouble right and check again.")
     elif not checked["stopped"]:
-        lines.append("All that was tried worked. Next:")
+        supply = checked["supply"]
+        if supply is not None and supply["not_powered"]:
+            lines.append("The supply was not switched on; what else was tried answered.")
+        elif checked["cautions"]:
+            lines.append("All that was tried answered.")
+        else:
+            lines.append("All that was tried worked.")
+        lines.append('First see to what stands under "To know". Then:' if checked["cautions"] else "Next:")
         lines.append(f"  benchkit walk --design my-stage.toml --bench {_typed(path)}")
     return lines
 
@@ -139,8 +174,10 @@ def _meter(meter: Table) -> list[str]:
             said = "overload"
         else:
             said = show(one["value"], one["unit"])
-        lines.append(f"  {one['function']:<12} {said:<16} {one['took_s']:.2f} s" if not one["problem"] else
-                     f"  {one['function']:<12} {said}")  # fmt: skip
+        if one["problem"]:
+            lines += _wrapped(f"  {one['function']:<12} {said}", " " * 15)
+        else:
+            lines.append(f"  {one['function']:<12} {said:<16} {one['took_s']:.2f} s")
     return lines
 
 
@@ -149,12 +186,12 @@ def _supply(supply: Table) -> list[str]:
     if supply["found"]:
         lines += ["  as found:", *_state(supply["found"])]
     if supply["not_powered"]:
-        lines.append(f"  Not switched on: {supply['not_powered'][:1].lower()}{supply['not_powered'][1:]}.")
+        lines += _wrapped(f"  Not switched on: {supply['not_powered'][:1].lower()}{supply['not_powered'][1:]}.")
     if supply["into_open_circuit"]:
         lines += ["  on, with nothing connected:", *_state(supply["into_open_circuit"])]
     if supply["off_confirmed"]:
-        lines.append(f"  Off again after {show(supply['on_s'], 's', 2)}, confirmed: {supply['off']}.")
-        lines.append("  It is left off, with the low voltage, limit and protection of this check in it.")
+        lines += _wrapped(f"  Off again after {show(supply['on_s'], 's', 2)}, confirmed: {supply['off']}.")
+        lines.append("  It is left off, with this check's low voltage, limit and protection in it.")
     elif supply["off_confirmed"] is not None:
         lines.append(f"  OFF IS NOT CONFIRMED: {supply['off']}")
     return lines
@@ -176,7 +213,7 @@ def _state(state: Table) -> list[str]:
             parts.append("in its current limit")
         if state.get(f"{rail}_tripped"):
             parts.append("tripped by its own protection")
-        lines.append(f"    {rail}: {', '.join(parts)}")
+        lines += _wrapped(f"    {rail}: {', '.join(parts)}", " " * 6)
     if "limit_a" in state:
         lines.append(f"    current limit {show(state['limit_a'], 'A')}; output {_output(state)}")
     return lines
@@ -197,11 +234,24 @@ def before_power(name: str, volts: float, amps: float, most_s: float) -> list[st
     ]
 
 
-def written_lines(path: str, lacking: Sequence[str]) -> list[str]:
-    """Return what is left to do in a bench file that has just been written."""
+def written_lines(path: str, lacking: Sequence[str], asked: Sequence[Table] = ()) -> list[str]:
+    """Return what is left to do in a bench file that has just been written.
+
+    Parameters
+    ----------
+    path : str
+    lacking : sequence of str
+        What only papers know.
+    asked : sequence of mapping
+        What is known of the instruments in it, as ``--json`` prints it.
+    """
     lines = [f"Written: {path}"]
+    for fit in (one["fits"][0] for one in asked):
+        if not fit["complete"]:
+            lines += [*_wrapped(f"Of the {fit['kind']}, {_part(fit)}"), *_gaps(fit)]
     if lacking:
-        lines += ["Still to be filled in, from papers that benchkit can't read:", *(f"  {text}" for text in lacking)]
+        lines.append("Still to be filled in, from papers that benchkit can't read:")
+        lines += [line for text in lacking for line in _wrapped(f"  {text}")]
     return [
         *lines,
         "Next, with nothing connected to meter and supply:",
@@ -263,6 +313,24 @@ def asked_yes(lines: Sequence[str]) -> bool:
     answer = sys.stdin.readline().strip().lower()
     click.echo("", err=True)
     return answer == "yes"
+
+
+def _wrapped(text: str, below: str = "") -> list[str]:
+    """Break a text between words at `COLUMNS`: never inside a word, a number, or between a number and its unit.
+
+    It goes on under `below`, or two columns further in than it began.
+    """
+    begin = text[: len(text) - len(text.lstrip(" "))]
+    words = _NUMBER_AND_UNIT.sub(lambda match: match[0].replace(" ", "\0"), text.removeprefix(begin))
+    broken = textwrap.wrap(
+        words,
+        COLUMNS,
+        initial_indent=begin,
+        subsequent_indent=below or begin + "  ",
+        break_long_words=False,
+        break_on_hyphens=False,
+    )
+    return [line.replace("\0", " ") for line in broken]
 
 
 def _typed(text: str) -> str:

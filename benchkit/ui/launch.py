@@ -4,7 +4,9 @@ from __future__ import annotations
 
 import asyncio
 import getpass
+import os
 import secrets
+import shlex
 import signal
 import sys
 from collections.abc import Awaitable, Callable
@@ -274,6 +276,20 @@ def _say_end(runner: Runner) -> None:
         click.echo(words)
     if runner.record is not None and runner.record.exists():
         click.echo(f"record: {runner.record}")
+        if runner.session is not None and runner.session.state.closed is None:
+            click.echo(f"Go on with: {resume_command(runner.setting.kind, runner.record)}")
+
+
+def resume_command(kind: str, record: Path) -> str:
+    """Return the command with which a walk that has not come to its end is gone on with.
+
+    Examples
+    --------
+    >>> resume_command("rehearsal", Path("records/my unit.jsonl"))
+    "benchkit rehearse --resume 'records/my unit.jsonl'"
+    """
+    words = ("benchkit", "rehearse" if kind == "rehearsal" else "walk", "--resume", str(record))
+    return " ".join(words) if os.name != "posix" else shlex.join(words)
 
 
 def _stop_on_signals(loop: asyncio.AbstractEventLoop, runner: Runner) -> None:
@@ -285,7 +301,7 @@ def _stop_on_signals(loop: asyncio.AbstractEventLoop, runner: Runner) -> None:
 
     def stop(number: int, _frame: object) -> None:
         nonlocal told
-        if told or runner.session is None or runner.session.state.energised == "off":
+        if told or runner.session is None or runner.session.nothing_to_switch_off:
             raise KeyboardInterrupt  # with the supply off there is nothing to stop: the walk can be gone on with later
         told = True
         loop.call_soon_threadsafe(runner.off_now, f"the operator pressed stop (signal {number})")

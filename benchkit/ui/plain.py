@@ -1,8 +1,8 @@
 """Plain mode: the same walk in lines of text, for any terminal, a screen reader or a pipe.
 
-Each question is numbered answers and a prompt.  The word ``off`` and Enter, or Ctrl+C, switch the supply off at any
-moment, whether anything is asked or not.  So does the end of the input; after that nothing can be asked any more, and
-the walk is left where it is.
+Each question is numbered answers, each with a letter too, and a prompt.  The word ``off`` and Enter, or Ctrl+C, switch
+the supply off at any moment, whether anything is asked or not.  So does the end of the input; after that nothing can
+be asked any more, and the walk is left where it is.
 """
 
 from __future__ import annotations
@@ -19,6 +19,7 @@ import click
 
 from benchkit.procedure.actions import Question
 from benchkit.session.front import AimView, Reply, SuspectsView, View
+from benchkit.ui.widgets.answer_keys import keyed, keys_in_words
 from benchkit.ui.widgets.summary_words import broken_words
 
 WIDTH = 78
@@ -77,8 +78,8 @@ class PlainFront:
         if view.aim is not None and view.aim.unit_text and self._asked == view.item:
             self._tell_aim(view.aim)
         self._tell_progress(view)
-        if view.supply.energised != self._supply:
-            self._supply = view.supply.energised
+        if (state := f"{view.supply.energised} {view.supply.label}") != self._supply:
+            self._supply = state
             self._print(f"  {view.supply.words}")
         if view.broken != self._broken:
             self._broken = view.broken
@@ -151,7 +152,7 @@ class PlainFront:
                 return reply
             by_hand = self._view is not None and self._view.supply.by_hand
             off = "off to stop (the supply is yours to switch)" if by_hand else "off to switch the supply off"
-            self._print(f"  ! That is no answer here. Take one of those above, or type {off}.")
+            self._print(f"  ! That is no answer here: {_wanted(question)}, or {off}.")
 
     def _forget_typed_ahead(self) -> None:
         """At a terminal, drop what was typed before the question stood there: it can't be an answer to it."""
@@ -185,9 +186,11 @@ class PlainFront:
         if question.kind in ("by hand", "text"):
             for choice in question.choices[1:]:
                 self._print(f"    or the words {choice.value}: {choice.label}")
-        for number, choice in enumerate(() if question.kind in ("by hand", "text") else question.choices, start=1):
+        offered = () if question.kind in ("by hand", "text") else keyed(question.choices)
+        for number, (letter, choice) in enumerate(offered, start=1):
             reason = " (with the reason behind it)" if choice.wants_reason else ""
-            self._print(f"    {number} {choice.label}{reason}")
+            key = "" if question.kind == "hold" and choice.value == "yes" else f" ({letter.upper()})"
+            self._print(f"    {number} {choice.label}{key}{reason}")
         if question.kind == "trim" and view is not None and view.kind == "rehearsal":
             self._print("    + or - and turns, such as +0.25, turns the simulated screw towards more or less bias")
             if view.live is not None:
@@ -197,7 +200,7 @@ class PlainFront:
         live = self._view.live if self._view is not None and question.kind == "trim" else None
         now = f" now {live.text}" if live is not None else ""
         if question.kind == "hold":
-            return "  type yes, or 2 to make safe> "
+            return "  type yes, or 2 or M to make safe> "
         return f" {now}> "
 
     def _reply(self, question: Question, text: str) -> Reply | None:
@@ -227,6 +230,11 @@ class PlainFront:
             if question.kind == "hold" and chosen.value == "yes":
                 return None
             return Reply(choice=chosen.value, text=rest.strip())
+        for letter, choice in () if question.kind in ("by hand", "text") else keyed(question.choices):
+            if first.lower() == letter and (not rest.strip() or choice.wants_reason):
+                if question.kind == "hold" and choice.value == "yes":
+                    return None
+                return Reply(choice=choice.value, text=rest.strip())
         return None
 
     def _listen(self) -> None:
@@ -264,6 +272,16 @@ class PlainFront:
 
 def _is_off(line: str) -> bool:
     return line.strip().lower() == "off"
+
+
+def _wanted(question: Question) -> str:
+    """Say what is taken for an answer to `question`."""
+    if question.kind in ("by hand", "text"):
+        return "type what is asked for, or the words above"
+    if question.kind == "hold":
+        others = [choice for choice in keyed(question.choices) if choice[1].value != "yes"]
+        return "type yes in full" + "".join(f", {letter.upper()} to {choice.label}" for letter, choice in others)
+    return f"type the number or its letter ({keys_in_words(question.choices)})"
 
 
 def _is_number_of(word: str, question: Question) -> bool:

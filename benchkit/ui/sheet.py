@@ -17,6 +17,7 @@ OffLine Words {{ height: 1; width: 1fr; }}
 OffLine .off-second {{ height: auto; max-height: 2; }}
 OffLine.supply-on {{ background: {SUPPLY_COLOURS["on"]}; color: #000000; text-style: bold; }}
 OffLine.supply-unknown {{ background: {SUPPLY_COLOURS["unknown"]}; color: #000000; text-style: bold; }}
+OffLine.supply-calm {{ color: {CARE}; text-style: bold; }}
 OffLine.flash {{ text-style: reverse bold; }}
 
 .walk-head {{ height: 1; padding: 0 1; background: {PANEL}; }}

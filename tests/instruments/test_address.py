@@ -88,7 +88,46 @@ def test_any_text_is_an_address_or_refused(text: str, library: str) -> None:
 
 def test_spellings_of_one_address(tmp_path: Path) -> None:
     assert plain_address("tcpip0::Meter::5025::socket ") == plain_address("TCPIP::meter::5025::SOCKET")
-    assert plain_address("TCPIP1::meter::5025::SOCKET") != plain_address("TCPIP::meter::5025::SOCKET")
     (tmp_path / "tty").touch()
     (tmp_path / "by-id").symlink_to(tmp_path / "tty")
     assert plain_address(f"ASRL{tmp_path}/by-id::INSTR") == plain_address(f"asrl{tmp_path}/tty::INSTR")
+
+
+@pytest.mark.parametrize(
+    "spellings",
+    [
+        ("TCPIP::h::7500::SOCKET", "tcpip0::H::07500::socket", "TCPIP3::h::7500::SOCKET"),
+        ("TCPIP::h::INSTR", "TCPIP::h", "TCPIP0::h::inst0::INSTR", "TCPIP::h::INST0", "tcpip::h::inst0::instr"),
+        ("TCPIP::h,1024::INSTR", "TCPIP::h,01024::inst0::INSTR", "TCPIP::h,1024"),
+        ("TCPIP::h::hislip0::INSTR", "TCPIP::h::HiSLIP0,4880::INSTR", "TCPIP::h::hislip0"),
+        ("ASRL/dev/ttyNone::INSTR", "asrl/dev/../dev/ttyNone", "ASRL/dev//ttyNone::instr"),
+        ("ASRL3::INSTR", "ASRLCOM3", "asrlcom03::INSTR", "ASRL3"),
+        ("USB::0x1234::0x5678::S1::INSTR", "usb0::4660::0X5678::S1::0::INSTR", "USB0::0x1234::22136::s1"),
+        ("GPIB::5::INSTR", "gpib0::05::INSTR", "GPIB0::5"),
+    ],
+)
+def test_each_spelling_is_one_address(spellings: tuple[str, ...]) -> None:
+    assert {plain_address(spelling) for spelling in spellings} == {plain_address(spellings[0])}
+
+
+def test_different_addresses_stay_different() -> None:
+    different = (
+        "TCPIP::h::7500::SOCKET", "TCPIP::h::7501::SOCKET", "TCPIP::g::7500::SOCKET", "TCPIP::h::INSTR",
+        "TCPIP::h::inst1::INSTR", "TCPIP::h::gpib0,5::INSTR", "TCPIP::h,1024::INSTR", "TCPIP::h::hislip0::INSTR",
+        "TCPIP::h::hislip0,4881::INSTR", "TCPIP::h::hislip1::INSTR", "ASRL3::INSTR", "ASRL4::INSTR",
+        "ASRL/dev/ttyNone3::INSTR", "USB::0x1234::0x5678::S1::INSTR", "USB::0x1234::0x5678::S1::1::INSTR",
+        "USB::0x1234::0x5678::S01::INSTR", "GPIB0::5::INSTR", "GPIB1::5::INSTR", "GPIB0::50::INSTR",
+    )  # fmt: skip
+    assert len({plain_address(text) for text in different}) == len(different)
+
+
+def test_the_host_is_named_by_its_number() -> None:
+    numbers = {"bench": "192.0.2.7"}
+    for form in ("TCPIP::{}::7500::SOCKET", "TCPIP::{},1024::INSTR", "TCPIP::{}::hislip0::INSTR"):
+        named = plain_address(form.format("bench"), lambda host: numbers.get(host, host))
+        assert named == plain_address(form.format("192.0.2.7"))
+
+
+@given(text=st.text(max_size=40))
+def test_any_text_has_a_plain_form(text: str) -> None:
+    assert plain_address(text) == plain_address(f" {text} ")

@@ -12,7 +12,7 @@ import pytest
 from benchkit.errors import FileError
 from benchkit.instruments.bench import link_settings, load_bench, parse_bench
 from benchkit.instruments.profile import meter_profile
-from benchkit.measure.accuracy import STATED_DEFAULT
+from benchkit.measure.accuracy import STATED_DEFAULT, SUPPLY_READOUT
 
 TODAY = datetime.date(2031, 1, 1)
 
@@ -48,7 +48,7 @@ def test_a_good_one(tmp_path: Path) -> None:
     assert bench.meter is not None
     assert bench.meter.input_resistance_ohm == 1e6
     assert bench.accuracy.standard_uncertainty("dc volts", 0.5) == pytest.approx((0.5e-4 + 1e-5) / 3**0.5)
-    assert bench.supply_accuracy is STATED_DEFAULT
+    assert bench.supply_accuracy is SUPPLY_READOUT
     setup = bench.setup
     assert setup["meter"]["address"] == "TCPIP::192.168.1.20::5025::SOCKET"
     assert setup["meter"]["serial"] == "MY123"
@@ -139,3 +139,15 @@ def test_a_supply_without_protection_is_a_caution(tmp_path: Path) -> None:
 def test_a_missing_file(tmp_path: Path) -> None:
     with pytest.raises(FileError, match="can't be read"):
         load_bench(tmp_path / "none.toml")
+
+
+def test_a_supply_without_stated_accuracy_is_not_taken_for_a_meter() -> None:
+    text = (
+        '[bench]\nformat = 1\nname = "b"\n'
+        '[supply]\naddress = "TCPIP::192.0.2.1::5025::SOCKET"\nprofile = "scpi-supply"\n'
+    )
+    bench = parse_bench(text, "bench.toml")
+    assert bench.supply_accuracy is SUPPLY_READOUT
+    assert bench.supply_accuracy.row("dc current", 0.1).half_width(0.1) == pytest.approx(0.006)
+    (caution,) = [one for one in bench.cautions if "accuracy" in one]
+    assert caution == "The bench file states no accuracy for the supply; taken as: a supply's own readout, 1 % + 5 mA."

@@ -19,7 +19,7 @@ import pytest
 from benchkit.events import SupplyState
 from benchkit.instruments import open_circuit
 from benchkit.instruments.bench import parse_bench
-from benchkit.instruments.checking import Checked, SupplyChecked, check_bench
+from benchkit.instruments.checking import Checked, FunctionChecked, SupplyChecked, check_bench, doubts
 from benchkit.instruments.open_circuit import judge_open_circuit
 from tests.instruments.personalities import Host, Line, PlainSupply, SelectSupply, TwoRails
 from tests.instruments.server import TestMeter, TestSupply
@@ -85,6 +85,36 @@ def test_all_works_and_the_supply_was_on_for_a_moment_only(at: At) -> None:
     assert (at.supply.volts, at.supply.limit) == ({1: 1.0, 2: 1.0}, {1: 0.01, 2: 0.01})
 
 
+def test_readings_that_open_leads_cannot_give_are_cautions(at: At) -> None:
+    checked = at.check()
+    said = " ".join(checked.cautions)
+    assert "on ohms with nothing connected. Expected overload, or at least 1.0 Mohm." in said
+    assert "The meter gave the same number, 0.012345, on dc volts, " in said
+    assert "was not switched on" not in said
+
+
+@pytest.mark.parametrize(
+    ("readings", "words"),
+    [
+        ({"ohms": None, "dc volts": 0.002, "dc current": 1e-9, "diode": None, "temperature": 23.0}, ()),
+        ({"ohms": 2e7, "diode": 2.6}, ()),
+        ({"dc volts": 0.0, "ac volts": 0.0, "dc current": 0.0}, ()),
+        ({"ohms": 0.01}, ("0.01000 ohm on ohms",)),
+        ({"dc volts": -12.0}, ("-12.00 V on dc volts",)),
+        ({"diode": 0.6}, ("600.0 mV on diode",)),
+        ({"temperature": 0.5, "dc volts": 0.5, "ac volts": 0.5}, ("0.5, on temperature, dc volts, ac volts",)),
+    ],
+)
+def test_what_is_doubted(readings: dict[str, float | None], words: tuple[str, ...]) -> None:
+    read = [
+        FunctionChecked(function=function, took_s=0.1, value=value, overload=value is None)
+        for function, value in readings.items()
+    ]
+    said = doubts(read)
+    assert len(said) == len(words)
+    assert all(word in one for one, word in zip(said, words, strict=True))
+
+
 def test_limit_and_volts_are_in_the_supply_before_it_is_on(at: At) -> None:
     at.check()
     messages = at.supply.messages()
@@ -109,6 +139,7 @@ def test_without_a_yes_nothing_is_set(at: At) -> None:
     assert checked.exit_status == 0
     assert checked.supply is not None
     assert checked.supply.not_powered == "Nobody said yes"
+    assert any("The supply was not switched on" in caution for caution in checked.cautions)
     assert (at.supply.on_at, at.supply.volts) == ([], {1: 0.0, 2: 0.0})
 
 

@@ -41,7 +41,12 @@ def test_usb_ports_come_first_and_ports_with_nothing_behind_them_are_hidden(tmp_
     findings = discovery.serial_ports([*EMPTY, BUILT_IN, USB_PORT], by_id=tmp_path, allowed=everybody)
     assert [one.address for one in findings.found] == ["ASRL/dev/ttyUSB0::INSTR", "ASRL/dev/ttyS0::INSTR"]
     assert findings.found[0].what == "FT232R USB UART (USB 0403:6001)"
-    assert findings.notes == ["31 built-in serial ports with nothing behind them not shown."]
+    assert findings.notes == ["31 built-in serial ports with nothing behind them are not shown."]
+
+
+def test_one_hidden_port_is_one(tmp_path: Path) -> None:
+    findings = discovery.serial_ports([EMPTY[0]], by_id=tmp_path, allowed=everybody)
+    assert findings.notes == ["1 built-in serial port with nothing behind it is not shown."]
 
 
 def test_a_port_is_called_by_its_lasting_name(tmp_path: Path) -> None:
@@ -211,7 +216,9 @@ def test_a_library_that_is_not_there_is_a_note() -> None:
 
 def test_a_library_that_hangs_is_given_up() -> None:
     findings = discovery.library_list("@py", 0.0)
-    assert findings.notes == ["Asking the VISA library @py took more than 0 s and was given up."]
+    assert findings.notes == [
+        "Asking the VISA library @py took too long and was given up. --wait 10 gives it more time."
+    ]
 
 
 def test_the_socket_of_a_host_that_answers_at_the_usual_port_comes_first() -> None:

@@ -23,8 +23,25 @@ from tests.instruments.fault_bench import (
     Vxi11Server,
     Wait,
 )
+from tests.instruments.fault_bench.__main__ import arguments
 from tests.instruments.fault_bench.acts import bytewise, halves
 from tests.instruments.fault_bench.server import TcpServer
+
+
+@pytest.mark.parametrize(
+    "given", [[], ["socket"], ["pigeon", "meter"], ["socket", "lamp"], ["socket", "meter", "long"]]
+)
+def test_as_a_program_it_says_how_to_call_it(given: list[str], capsys: pytest.CaptureFixture[str]) -> None:
+    with pytest.raises(SystemExit) as caught:
+        arguments(given)
+    assert caught.value.code == 2
+    assert "usage: python -m tests.instruments.fault_bench" in capsys.readouterr().err
+
+
+def test_as_a_program_it_takes_a_link_an_instrument_and_seconds() -> None:
+    assert arguments(["vxi-11", "meter", "1.5"]) == ("vxi-11", "meter", 1.5)
+    assert arguments(["socket", "supply"]) == ("socket", "supply", 0.0)
+
 
 QUESTION = "MEAS:VOLT:DC? 17"
 ANSWER = "+1.70000000E+01"

@@ -198,7 +198,11 @@ def test_a_meter_that_lacks_functions_is_said_to_lack_them(tmp_path: Path) -> No
         assert found.best is not None
         assert not found.best.complete
         assert [name for name, _ in found.best.unanswered] == ["temperature"]
-        assert found.as_json()["fits"][0]["unanswered"][0]["question"] == "temperature"
+        (gap,) = found.as_json()["fits"][0]["unanswered"]
+        assert gap["question"] == "temperature"
+        # What was asked, what came, what was expected.
+        assert "did not answer MEAS:TEMP" in gap["what_happened"]
+        assert "; expected " in gap["what_happened"]
 
 
 def test_a_name_alone_fits_no_profile(tmp_path: Path) -> None:
@@ -207,6 +211,11 @@ def test_a_name_alone_fits_no_profile(tmp_path: Path) -> None:
         assert found.name == "Own,Mute,0,1.0"
         assert found.serial == ""
         assert found.fits == ()
+        assert [miss.profile.rpartition("-")[2] for miss in found.misses] == ["supply.toml", "meter.toml"]
+        supply, meter = found.as_json()["misses"]
+        assert "did not answer OUTP" in supply["unanswered"][0]["what_happened"]
+        assert "did not answer MEAS:VOLT:DC?" in meter["unanswered"][0]["what_happened"]
+        assert meter["unanswered"][1]["what_happened"] == "not asked"
         # Without an answer to its first question a meter's other functions are not asked.
         assert not any(message.startswith("MEAS:DIOD") for message in server.messages())
 
@@ -259,6 +268,9 @@ def test_a_supply_is_not_taken_for_a_meter(tmp_path: Path) -> None:
     ):
         identify_as("meter", server.address, (quick(tmp_path),))
     assert caught.value.kind == "unsupported"
+    # The question that had no answer, and what came.
+    assert "did not answer MEAS:VOLT:DC?" in str(caught.value)
+    assert "quick-scpi-meter.toml: " in str(caught.value)
 
 
 def test_a_profile_of_the_other_kind_is_refused_before_anything_is_asked() -> None:

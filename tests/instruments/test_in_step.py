@@ -8,7 +8,7 @@ from __future__ import annotations
 from collections import deque
 
 import pytest
-from hypothesis import given, settings
+from hypothesis import example, given, settings
 from hypothesis import strategies as st
 
 from benchkit.errors import InstrumentError
@@ -27,11 +27,11 @@ AT_ONCE = st.builds(Fate, late_s=LATE, copies=st.integers(0, 3), cancel=st.boole
 ANY = st.builds(Fate, late_s=LATE, copies=st.integers(0, 3), gap_s=LATE, cancel=st.booleans())
 
 
-def echo(talk: Conversation, peer: Peer, number: int) -> float | Overload | None:
+def echo(talk: Conversation, peer: Peer, number: int, *, closed: bool = False) -> float | Overload | None:
     """Ask for a number; None when it failed."""
     peer.cancel.clear()
     try:
-        return talk.ask(f"ECHO? {number}", lambda text: parse_number(text, RULES))
+        return talk.ask(f"ECHO? {number}", lambda text: parse_number(text, RULES), closed=closed)
     except InstrumentError as error:
         kind = error.kind
     assert kind in {"timeout", "garbled", "refused"}
@@ -105,6 +105,38 @@ def test_what_came_twice_between_two_marks_is_not_left_for_the_next_question(
             peer.fates.clear()
             peer.clock.now_s += pause_s
             assert echo(talk, peer, 2 * number + 1) == 2.0 * number + 1
+        assert peer.openings == 1
+
+
+ONCE = st.just(Fate())
+
+
+@pytest.mark.parametrize("shared_wire", [False, True], ids=["socket", "one wire"])
+@example(fates=[Fate(), Fate(), Fate(copies=2, gap_s=0.01), *[Fate(late_s=0.02)] * 8], pauses=[0.0] * 6)
+@given(fates=st.lists(ONCE | DOUBLED, max_size=30), pauses=st.lists(st.just(0.0) | BRIEF, min_size=6, max_size=12))
+@settings(max_examples=80, deadline=None)
+def test_a_closed_question_takes_no_copy_on_a_link_that_never_failed(
+    shared_wire: bool, fates: list[Fate], pauses: list[float]
+) -> None:
+    peer = Peer(shared_wire=shared_wire)
+    with simulated(peer, TALK) as talk:
+        talk.learn_mark()
+        peer.fates = deque(fates)
+        for number, pause_s in enumerate(pauses):
+            assert echo(talk, peer, number, closed=True) in {None, float(number)}
+            peer.clock.now_s += pause_s
+
+
+def test_a_closed_question_costs_one_mark() -> None:
+    peer = Peer()
+    with simulated(peer, TALK) as talk:
+        talk.learn_mark()
+        assert echo(talk, peer, 1, closed=True) == 1.0
+        peer.told.clear()
+        talk.learn_mark()
+        for number in (2, 3):
+            assert echo(talk, peer, number, closed=True) == float(number)
+        assert [message.split()[0] for message in peer.told] == ["ECHO?", "*ESE", "ECHO?", "*ESE"]
         assert peer.openings == 1
 
 

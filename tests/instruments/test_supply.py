@@ -215,6 +215,26 @@ def test_off_in_the_middle_of_a_late_reply_is_sent_at_once(at: At) -> None:
     assert not at.server.is_on
 
 
+def test_what_was_answered_counts_although_the_link_fails_at_the_next_question(at: At) -> None:
+    at.supply.set(5.0, -5.0, 0.05, True).result(5)
+    assert at.supply.seen_on
+    assert at.supply.off().result(5).confirmed
+    assert not at.supply.seen_on
+    at.server.on.update({1: True, 2: True})
+    answered: list[str] = []
+
+    def fault(connection: socket.socket, message: str) -> bool:
+        if "OUTP OFF" in message or answered:
+            return True
+        answered.append(message)
+        return False
+
+    at.server.fault = fault
+    assert not at.supply.off().result(10).confirmed
+    assert answered == ["OUTP? (@1,2)"]
+    assert at.supply.seen_on
+
+
 def test_joined_questions_are_one_message_and_give_the_same_state(at: At) -> None:
     joined = At(joined=True)
     try:

@@ -8,6 +8,7 @@ import signal
 import subprocess
 import sys
 import time
+from collections.abc import Callable
 from pathlib import Path
 
 import pytest
@@ -113,6 +114,64 @@ def test_a_payload_that_is_not_plain_leaves_the_file_alone(tmp_path: Path) -> No
             writer.append("noted", {"x": float("nan")}, 0.0, AT)
         assert writer.seq == 0
         assert (tmp_path / "a.jsonl").read_bytes() == b""
+
+
+def _remove_folder(path: Path) -> None:
+    path.unlink()
+    path.parent.rmdir()
+
+
+def _replace(path: Path) -> None:
+    whole = path.read_bytes()
+    path.unlink()
+    path.write_bytes(whole)
+
+
+def _move(path: Path) -> None:
+    path.rename(path.with_name("elsewhere.jsonl"))
+
+
+def _add(path: Path) -> None:
+    with path.open("ab") as file:
+        file.write(b'{"x":1}\n')
+
+
+@pytest.mark.skipif(sys.platform == "win32", reason="an open file can't be removed there")
+@pytest.mark.parametrize(
+    ("damage", "words"),
+    [
+        (lambda path: os.truncate(path, 0), "only 0 of its"),
+        (lambda path: os.truncate(path, 100), "only 100 of its"),
+        (_add, "somebody else has added 8 bytes"),
+        (lambda path: path.unlink(), "it was removed"),
+        (_remove_folder, "it was removed"),
+        (_move, "it is not there any more"),
+        (_replace, "another file stands in its place"),
+    ],
+)
+def test_a_record_that_somebody_has_touched_takes_nothing_more(
+    tmp_path: Path, damage: Callable[[Path], None], words: str
+) -> None:
+    (tmp_path / "records").mkdir()
+    path = tmp_path / "records" / "a.jsonl"
+    with Writer.create(path) as writer:
+        writer.append("walk opened", {}, 0.0, AT)
+        writer.append("noted", {}, 0.0, AT)
+        damage(path)
+        after = path.read_bytes() if path.exists() else None
+        for _ in range(2):
+            with pytest.raises(FileError, match="lost or damaged while it was written") as caught:
+                writer.append("closed", {"count": 2}, 0.0, AT)
+            assert words in str(caught.value)
+        assert (path.read_bytes() if path.exists() else None) == after
+
+
+def test_a_record_of_which_a_copy_is_linked_goes_on(tmp_path: Path) -> None:
+    path = tmp_path / "a.jsonl"
+    with Writer.create(path) as writer:
+        writer.append("walk opened", {}, 0.0, AT)
+        os.link(path, tmp_path / "backup.jsonl")
+        assert writer.append("noted", {}, 0.0, AT).seq == 2
 
 
 FULL_DISK = """

@@ -174,6 +174,14 @@ def _full_disk(patient: Patient) -> None:
     os.kill(patient.pid, signal.SIGUSR2)
 
 
+def _cut_record(patient: Patient) -> None:
+    """Take the record's last line away, then take the reading, which has to be kept."""
+    (record,) = patient.folder.glob("*.jsonl")
+    whole = record.read_bytes()
+    os.truncate(record, whole.rstrip(b"\n").rfind(b"\n") + 1)
+    os.kill(patient.pid, signal.SIGUSR2)
+
+
 def _unplug(patient: Patient) -> None:
     patient.meter.close()
 
@@ -232,6 +240,7 @@ WAYS: dict[str, Way] = {
         _signal(signal.SIGUSR1), 1.0, ("output off",), OFF, ("an error of its own (ZeroDivisionError)",)
     ),
     "full disk": Way(_full_disk, 1.0, (), OFF, ("could not be kept (", "Free the disk")),
+    "record cut short": Way(_cut_record, 1.0, (), OFF, ("the record was lost or damaged while it was written",)),
     "meter unplugged": Way(_unplug, 1.0, LOST),
     "meter mute": Way(_mute, 1.5, LOST),
     "keeper killed": Way(_kill_keeper, 1.0, LOST, OFF, ("The keeper of the instruments has ended", "A second keeper")),

@@ -6,6 +6,7 @@ import pytest
 
 from benchkit.keeper.minding import (
     FIRST_READING_S,
+    SETTING_S,
     STANDSTILL_S,
     SUPPLY_AGE_S,
     UNASKED_TIMES,
@@ -118,14 +119,27 @@ def test_a_supply_that_is_watched_has_to_answer() -> None:
 
 
 def test_a_supply_that_is_being_set_has_its_time() -> None:
-    """A slow one takes seconds for the many messages of a setting; none of them is waited for without an end."""
+    """A slow one takes seconds for the many messages of a setting, in which nobody watches: not more than a few."""
     fresh = Freshness()
     fresh.supply_from(10.0)
-    fresh.setting_begun()
-    assert fresh.overdue(20.0) is None
+    fresh.setting_begun(11.0)
+    fresh.setting_begun(12.0)
+    assert fresh.overdue(11.0 + SETTING_S) is None
+    lost = fresh.overdue(11.1 + SETTING_S)
+    assert lost is not None
+    assert (lost.who, "a setting has taken it 5.1 s" in lost.problem) == ("the supply", True)
+    fresh.setting_done(15.0)
+    assert fresh.overdue(15.0 + SETTING_S) is None, "each setting has its own time"
+    assert fresh.overdue(15.1 + SETTING_S) is not None
     fresh.setting_done(20.0)
     assert fresh.overdue(20.0 + SUPPLY_AGE_S) is None
     assert fresh.overdue(20.1 + SUPPLY_AGE_S) is not None
+
+
+def test_a_setting_of_a_supply_that_is_not_watched_has_the_time_that_it_takes() -> None:
+    fresh = Freshness()
+    fresh.setting_begun(0.0)
+    assert fresh.overdue(1e9) is None
 
 
 def reading(fresh: Freshness, at_s: float, took_s: float, *, good: bool = True, samples: int = 1) -> None:

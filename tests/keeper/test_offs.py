@@ -72,5 +72,38 @@ def test_what_was_switched_on_since_is_unknown_again() -> None:
     assert not do(offs, SILENT)["confirmed"]
 
 
+def test_an_output_that_was_seen_on_takes_back_what_was_confirmed() -> None:
+    offs = Offs()
+    do(offs, YES)
+    offs.seen(on=False)
+    assert offs.settled
+    offs.seen(on=True)
+    assert not offs.settled
+    assert do(offs, SILENT) == {"reason": "because", **SILENT}
+
+
+def test_it_may_be_on_until_off_is_confirmed_or_a_failed_setting_ended_in_that() -> None:
+    offs = Offs()
+    assert not offs.may_be_on
+    offs.switching_on()
+    offs.switching_on()
+    assert offs.may_be_on
+    offs.set_on_done(off_confirmed=True)
+    assert offs.may_be_on, "the other one is still under way"
+    offs.set_on_done(off_confirmed=False)
+    assert offs.may_be_on
+    do(offs, SILENT)
+    assert offs.may_be_on
+    do(offs, YES)
+    assert not offs.may_be_on
+    offs.switching_on()
+    offs.set_on_done(off_confirmed=True)
+    assert not offs.may_be_on
+    offs.switching_on()
+    offs.set_on_done(off_confirmed=False)
+    offs.set_off_done()
+    assert not offs.may_be_on
+
+
 def test_nothing_is_confirmed_from_nothing() -> None:
     assert not do(Offs(), SILENT)["confirmed"]

@@ -4,15 +4,17 @@ from __future__ import annotations
 
 import os
 import signal
+import socket
 import sys
 import time
 from pathlib import Path
 
 import pytest
 
+from benchkit.errors import InstrumentError
 from benchkit.events import Noted
 from benchkit.journal import read
-from benchkit.keeper.client import KeeperDied
+from benchkit.keeper.client import KeeperDied, Push
 from benchkit.keeper.lifeline import SILENCE_S
 from tests.keeper.helpers import Bench, bench, gone, stand_by_of, wait_until
 
@@ -70,6 +72,45 @@ def test_a_keeper_that_is_frozen_together_with_its_client(tmp_path: Path) -> Non
         at.wait_for(KeeperDied, 2.0)
 
 
+@pytest.mark.parametrize("way", ["set", "ramp"])
+def test_a_keeper_that_is_frozen_with_its_client_right_behind_switching_on(tmp_path: Path, way: str) -> None:
+    """Nothing has been read back yet, and the output is on already."""
+    with bench(tmp_path) as at:
+        at.connect()
+        at.client.open_journal(at.record, Noted(text="begin")).result(5)
+        stand_by_of(at)
+
+        def freeze(connection: socket.socket, message: str) -> bool:
+            if "OUTP ON" in message:
+                os.kill(at.client.pid, signal.SIGSTOP)
+            return False
+
+        at.supply.fault = freeze
+        if way == "set":
+            at.client.supply_set(5.0, -5.0, 0.05, True)
+        else:
+            at.client.supply_ramp(5.0, -5.0, 0.05, 1.0)
+        wait_until(lambda: at.supply.is_on)
+        began = time.monotonic()
+        assert at.supply.wait_off(6.0)
+        assert at.supply.off_time() - began < SILENCE_S + 1.5
+        wait_until(lambda: at.kept() == ["noted", "contact lost", "output off"])
+
+
+def test_a_switching_on_that_failed_and_ended_off_is_no_reason_to_end_a_frozen_keeper(tmp_path: Path) -> None:
+    with bench(tmp_path) as at:
+        at.connect()
+        stand_by_of(at)
+        at.supply.fault = lambda connection, message: message.startswith("VOLT 5")
+        with pytest.raises(InstrumentError):
+            at.client.supply_set(5.0, -5.0, 0.05, True).result(10)
+        time.sleep(0.2)
+        os.kill(at.client.pid, signal.SIGSTOP)
+        time.sleep(SILENCE_S + 0.5)
+        assert not gone(at.client.pid)
+        os.kill(at.client.pid, signal.SIGCONT)
+
+
 def test_a_frozen_keeper_whose_output_is_off_is_left_alone(tmp_path: Path) -> None:
     with bench(tmp_path) as at:
         at.connect()
@@ -111,10 +152,49 @@ def test_a_torn_line_is_told_of(tmp_path: Path) -> None:
 
 
 def test_a_stand_by_that_was_killed_itself_is_replaced(tmp_path: Path) -> None:
+    """The new one hears of the keeper's death by itself: nobody asks it to do anything."""
     with bench(tmp_path) as at:
         rails_up(at)
-        os.kill(stand_by_of(at), signal.SIGKILL)
-        time.sleep(0.1)
+        first = stand_by_of(at)
+        os.kill(first, signal.SIGKILL)
+        wait_until(lambda: at.client.stand_by_pid not in (None, first), 3.0)
+        second = stand_by_of(at)
+        assert at.supply.is_on
+        at.client._closing = True  # as if the screen had gone too: it asks for nothing
         os.kill(at.client.pid, signal.SIGKILL)
-        assert at.client.after_death().result(15).confirmed
-        assert not at.supply.is_on
+        assert at.supply.wait_off(3.0)
+        wait_until(lambda: at.kept() == ["noted", "contact lost", "output off"])
+        assert at.client.stand_by_pid == second
+
+
+def test_a_stand_by_that_can_not_be_replaced_is_told_of(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    def fails(*given: object) -> None:
+        raise OSError("planted")
+
+    with bench(tmp_path) as at:
+        rails_up(at)
+        first = stand_by_of(at)
+        monkeypatch.setattr("benchkit.keeper.standing_by.spawn", fails)
+        os.kill(first, signal.SIGKILL)
+        at.wait_for(Noted)
+        (push,) = at.pushes
+        assert isinstance(push, Push)
+        assert isinstance(push.event, Noted)
+        assert push.seq == 2
+        assert push.event.text.startswith("CAUTION: What stands by for the keeper of the instruments has ended")
+        assert at.kept() == ["noted", "noted"]
+        assert at.supply.is_on
+
+
+def test_a_frozen_stand_by_is_replaced_when_it_is_needed(tmp_path: Path) -> None:
+    with bench(tmp_path) as at:
+        rails_up(at)
+        first = stand_by_of(at)
+        os.kill(first, signal.SIGSTOP)
+        began = time.monotonic()
+        os.kill(at.client.pid, signal.SIGKILL)
+        assert at.supply.wait_off(8.0)
+        assert at.supply.off_time() - began < 5.0
+        assert at.client.after_death().result(10).confirmed
+        wait_until(lambda: at.kept() == ["noted", "contact lost", "output off"])
+        assert gone(first)

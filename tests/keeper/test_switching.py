@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import re
+import socket
 import time
 from collections.abc import Iterator
 from pathlib import Path
@@ -12,6 +13,7 @@ import pytest
 from benchkit.errors import InstrumentError
 from benchkit.events import ContactLost, Noted, OutputOff, SupplyState, Tripped
 from benchkit.keeper.client import WatchLines
+from benchkit.keeper.minding import SETTING_S, SUPPLY_AGE_S
 from tests.keeper.helpers import Bench, Shared, beats, bench, wait_until
 
 WATCH = WatchLines(positive_a=0.02, negative_a=0.02, own_interval_s=0.05)
@@ -283,3 +285,72 @@ def test_a_confirmed_off_stays_confirmed_when_the_supply_goes_silent(tmp_path: P
         off = at.client.close()
         assert off is not None
         assert off.confirmed
+
+
+def comes_on_by_itself(at: Bench) -> None:
+    at.connect()
+    at.client.supply_set(5.0, -5.0, 0.05, True).result(5)
+    assert at.client.off("pressed").result(5).confirmed
+    at.supply.on.update({1: True, 2: True})
+
+
+@pytest.mark.parametrize("who", ["asked", "watch"])
+def test_a_supply_that_was_seen_on_since_is_unknown_when_it_goes_silent(tmp_path: Path, who: str) -> None:
+    with bench(tmp_path) as at:
+        comes_on_by_itself(at)
+        if who == "asked":
+            assert at.client.supply_state().result(5).output_on
+        else:
+            at.client.sample(0.0).result(5)
+        at.supply.close()
+        again = at.client.off("and once more").result(10)
+        assert not again.confirmed
+        assert "output state unknown: switch it off by hand" in again.how
+
+
+@pytest.mark.parametrize("said", ["outputs", "current"])
+def test_a_supply_that_says_on_and_then_loses_its_link_is_unknown(tmp_path: Path, said: str) -> None:
+    """It ignores "off", answers one look, and says nothing from then on."""
+    with bench(tmp_path) as at:
+        comes_on_by_itself(at)
+        looks: list[str] = []
+
+        def fault(connection: socket.socket, message: str) -> bool:
+            if "OUTP OFF" in message or looks:
+                return True
+            looks.append(message)
+            if said == "current":
+                connection.sendall(b"0,0;+3.0E-01,+3.0E-01;5.0,5.0\n")
+            return said == "current"
+
+        at.supply.fault = fault
+        again = at.client.off("and once more").result(10)
+        assert looks
+        assert looks[0].startswith("OUTP?")
+        assert at.supply.is_on
+        assert not again.confirmed
+        assert "output state unknown: switch it off by hand" in again.how
+
+
+# -- settings under watch --------------------------------------------------------------------------------------------
+
+
+def test_a_step_that_takes_too_long_is_no_hiding_place(at: Bench) -> None:
+    """Each answer comes just inside its time-out: the watch would see nothing for ten seconds and more."""
+    future = at.client.supply_ramp(20.0, -20.0, 0.05, 3.0, None, WATCH)
+    wait_until(lambda: max((positive for positive, _ in volts_sent(at)), default=0.0) > 3.0)
+
+    def late(connection: socket.socket, message: str) -> bool:
+        time.sleep(0.9 if at.supply.is_on else 0.0)
+        return False
+
+    at.supply.fault = late
+    began = time.monotonic()
+    assert at.supply.wait_off(15.0)
+    assert at.supply.off_time() - began < 2 * SETTING_S + SUPPLY_AGE_S, "the step it began in, then one whole one"
+    with pytest.raises(InstrumentError):
+        future.result(15)
+    at.wait_for(OutputOff, 10)
+    lost = at.events()[0]
+    assert isinstance(lost, ContactLost)
+    assert lost.who == "the supply"

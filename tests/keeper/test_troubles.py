@@ -85,6 +85,21 @@ def test_a_disk_that_is_full_from_the_beginning(tmp_path: Path, monkeypatch: pyt
         assert at.client.open_journal(at.record, Noted(text="begin")).result(5).seq == 1
 
 
+def test_a_record_that_is_taken_away_is_said_in_words_and_nothing_of_it_is_kept(tmp_path: Path) -> None:
+    with bench(tmp_path) as at:
+        rails_up(at)
+        at.record.unlink()
+        with pytest.raises(FileError) as caught:
+            at.client.append(Noted(text="into nowhere"), 1).result(5)
+        assert "the record was lost or damaged while it was written: it was removed" in str(caught.value)
+        assert at.client.off("the record is lost").result(5).confirmed
+        at.wait_for(OutputOff)
+        (push,) = at.pushes
+        assert isinstance(push, Push)
+        assert push.seq is None
+        assert "lost or damaged" in push.problem
+
+
 def test_a_log_that_can_not_grow_stops_nobody(tmp_path: Path) -> None:
     with bench(tmp_path) as at:
         at.connect()

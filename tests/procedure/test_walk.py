@@ -39,7 +39,7 @@ from benchkit.procedure.actions import (
     Trim,
     Write,
 )
-from benchkit.procedure.securing import MAKING_SURE, OFF_AS_SAID, OFF_ASKED, STILL_OFF
+from benchkit.procedure.securing import MAKING_SURE, NOT_ON_YET, OFF_AS_SAID, OFF_ASKED, STILL_OFF
 from benchkit.procedure.state import PHASES, State
 from benchkit.procedure.table import TABLE, table_text
 from benchkit.procedure.walk import Walk
@@ -789,11 +789,18 @@ def test_it_ends_a_walk_whose_supply_does_not_say_so() -> None:
     assert drive.state.energised == "unknown"
 
 
-@pytest.mark.parametrize(("supply", "note"), [("scpi", OFF_ASKED), ("manual", OFF_AS_SAID)])
-def test_asking_for_off_while_it_is_off_keeps_the_place(supply: str, note: str) -> None:
+@pytest.mark.parametrize(
+    ("supply", "at", "note"),
+    [
+        ("scpi", "cold.rails.ohm.rails", OFF_ASKED),
+        ("manual", "cold.rails.ohm.rails", NOT_ON_YET),
+        ("manual", "limit.connect", OFF_AS_SAID),
+    ],
+)
+def test_asking_for_off_while_it_is_off_keeps_the_place(supply: str, at: str, note: str) -> None:
     drive = Drive(small())
     drive.tell(replace(OPENED, supply=supply))  # type: ignore[arg-type]
-    drive.until("cold.rails.ohm.rails")
+    drive.until(at)
     before = drive.state
     assert drive.tell(StopAsked(reason=f"{MAKING_SURE}: the operator asked for it")) == ()
     assert (drive.state.phase, drive.state.index, drive.state.stopped) == (before.phase, before.index, "")

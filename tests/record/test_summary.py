@@ -1,5 +1,6 @@
 from __future__ import annotations
 
+from dataclasses import replace
 from pathlib import Path
 
 import pytest
@@ -7,6 +8,7 @@ import pytest
 from benchkit.errors import RecordError
 from benchkit.events import (
     Answered,
+    BenchFound,
     ContactLost,
     Event,
     OutputOff,
@@ -18,8 +20,20 @@ from benchkit.events import (
     Tripped,
 )
 from benchkit.procedure.hearing import UNPROTECTED
+from benchkit.record.show import as_text
 from benchkit.record.summary import Summary, load_summary
-from tests.record.walks import ON, closed, good_events, judged, opened, overridden_events, reading, write
+from tests.record.walks import (
+    ON,
+    PROCEDURE,
+    closed,
+    good_events,
+    judged,
+    opened,
+    overridden_events,
+    reading,
+    sha,
+    write,
+)
 
 
 def gather(tmp_path: Path, events: list[Event]) -> Summary:
@@ -215,3 +229,70 @@ def test_cautions_of_the_bench_and_of_its_supply_are_gathered(tmp_path: Path) ->
     )
     (tmp_path / "before").mkdir()
     assert gather(tmp_path / "before", good_events()).cautions == (), "records of before say nothing of protection"
+
+
+# -- mains through a lamp -------------------------------------------------------------------------------------------
+
+LAMP = PROCEDURE.replace(
+    'kind = "supply"\ntitle = "Rails up"\nrails = "lowest"\nlimit = "50 mA"',
+    'kind = "series lamp"\ntitle = "Mains on"\ndo = "Is it dark?"',
+)
+ON_LAMP: list[Event] = [
+    opened(procedure_text=LAMP, procedure_sha256=sha(LAMP), supply="manual"),
+    Answered(item="first-power.up.hold", choice="yes", text="yes"),
+    Answered(item="first-power.up", choice="yes"),
+]
+
+
+@pytest.mark.parametrize(
+    ("more", "state", "words"),
+    [
+        ([], "unknown", "nobody said that it is off"),
+        ([Answered(item="first-power.output.output", choice="done")], "unknown", "nobody said that it is off"),
+        ([Answered(item="made-safe.off", choice="done")], "off", "off at 2031-04-05T06:07:11.000000Z, as said by"),
+        (
+            [Resumed(operator="Jo"), Answered(item="first-power.output.output", choice="done")],
+            "off",
+            "off at 2031-04-05T06:07:12.000000Z, as said by",
+        ),
+    ],
+)
+def test_mains_through_a_lamp_is_never_called_never_on(
+    tmp_path: Path, more: list[Event], state: str, words: str
+) -> None:
+    ending = gather(tmp_path, [*ON_LAMP, *more]).ending
+    assert ending.state == state
+    assert ending.words.startswith("Mains through the series lamp from 2031-04-05T06:07:09.000000Z")
+    assert words in ending.words
+
+
+def test_a_lamp_that_was_never_said_yes_to_was_never_on(tmp_path: Path) -> None:
+    assert gather(tmp_path, ON_LAMP[:1]).ending.state == "never on"
+
+
+def test_a_hold_written_before_the_lamp_counts_as_its_own(tmp_path: Path) -> None:
+    hold = '[[section.step]]\nname = "ready"\nkind = "hold"\ntitle = "Ready?"\ndo = "Ready?"\n\n'
+    at = LAMP.index('[[section.step]]\nname = "up"')
+    text = LAMP[:at] + hold + LAMP[at:]
+    first = opened(procedure_text=text, procedure_sha256=sha(text), supply="manual")
+    summary = gather(tmp_path, [first, Answered(item="first-power.ready", choice="yes", text="yes")])
+    assert summary.ending.state == "unknown"
+
+
+def test_the_bench_supply_of_a_walk_on_the_lamp_is_told_of_too(tmp_path: Path) -> None:
+    events = [opened(procedure_text=LAMP, procedure_sha256=sha(LAMP)), good_events()[5], *ON_LAMP[1:]]
+    ending = gather(tmp_path, [*events, Answered(item="made-safe.off", choice="done")]).ending
+    assert ending.state == "on"
+    assert "Mains through the series lamp" in ending.words
+    assert "The bench's supply: No line says" in ending.words
+
+
+@pytest.mark.parametrize(("output_on", "said"), [(True, "its output ON (12 V"), (None, "nothing to say")])
+def test_a_supply_that_was_found_on_is_something_to_know(tmp_path: Path, output_on: bool | None, said: str) -> None:
+    events = good_events()
+    events[1] = BenchFound(meter="m", supply="s", supply_state=replace(ON, output_on=output_on))
+    events.insert(2, OutputOff(reason="it was on", confirmed=True, how="OUTP? read 0,0"))
+    summary = gather(tmp_path, events)
+    assert said.partition(" (")[0] in summary.incidents[0].what
+    assert "told to go off" in summary.incidents[0].what
+    assert "the supply was found with" in " ".join(as_text(summary).split())

@@ -594,3 +594,14 @@ def test_the_fake_front_answers_every_kind() -> None:
     assert all(
         well(question).choice in {choice.value for choice in question.choices} for question in run.front.questions
     )
+
+
+@pytest.mark.parametrize("on_at_first", [False, True])
+def test_a_supply_that_was_found_on_is_told_of_as_long_as_the_walk_goes_on(on_at_first: bool) -> None:
+    run = Run()
+    run.keeper.on = on_at_first
+    run.go()
+    told = [view for view in run.front.views if "output was ON when benchkit found it" in view.message]
+    assert bool(told) == on_at_first
+    if on_at_first:
+        assert {"look.parts", "bias.soak"} <= {view.item for view in told}

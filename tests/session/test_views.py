@@ -9,7 +9,8 @@ from benchkit.events import Decided, Noted, Resumed, SupplyState, Suspected, Tri
 from benchkit.procedure.actions import Narrow, Read, Suspect
 from benchkit.procedure.state import State
 from benchkit.session.front import View
-from benchkit.session.views import Headings, Moment, Painter, supply_words
+from benchkit.session.supply_view import supply_words
+from benchkit.session.views import Headings, Moment, Painter
 from tests.procedure.driver import OPENED, Drive, begun, judged, narrowed, reading, small, suspected
 
 ON = SupplyState(output_on=True, positive_v=10.0, negative_v=-10.0, positive_a=0.0124, negative_a=0.0121, limit_a=0.045)
@@ -70,7 +71,8 @@ def test_one_painter_keeps_up_with_every_event() -> None:
 
 def test_nothing_is_said_to_be_off_before_it_was_read_back() -> None:
     drive = begun(small())
-    assert "UNKNOWN" in view(drive).supply.words
+    assert "it may be" in view(drive).supply.words
+    assert "OFF" not in view(drive).supply.words + view(drive).supply.label
     drive.well()
     assert "read back as off" in view(drive).supply.words
 
@@ -129,11 +131,17 @@ def test_a_newer_sample_goes_before_the_record() -> None:
     assert view(drive).supply.state is drive.state.supply
 
 
-def test_a_message_goes_before_the_note() -> None:
+def test_why_a_walk_is_on_its_way_out_is_said_first_and_as_long_as_it_is() -> None:
     drive = begun(small()).until("bias.soak")
-    drive.tell(Tripped(reason="rail+ in its limit"))
-    assert "no second try" in view(drive).message
     assert view(drive, Moment(message="now this")).message == "now this"
+    drive.tell(Tripped(reason="rail+ in its limit"))
+    assert view(drive, Moment(message="now this")).message == (
+        "STOPPED: tripped: rail+ in its limit. On the way out now. "
+        "Discharge, and find the cause: no second try at a higher limit. now this"
+    )
+    drive.well()
+    assert drive.state.closed is None
+    assert view(drive).message.startswith("STOPPED: tripped: rail+ in its limit.")
     assert view(drive).stopped == "tripped: rail+ in its limit"
 
 

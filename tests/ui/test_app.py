@@ -20,6 +20,7 @@ from benchkit.events import Closed
 from benchkit.procedure.actions import Choice, Question
 from benchkit.session.falling import TOO_SLOW_WORDS
 from benchkit.session.front import Front, Reply, SupplyView
+from benchkit.session.supply_view import PULL_THE_PLUG
 from benchkit.ui import look
 from benchkit.ui.app import BenchApp
 from benchkit.ui.entry import Identity
@@ -123,7 +124,7 @@ def test_a_whole_walk_of_every_kind_of_question() -> None:
                 (("n",), Reply(choice="no")),
                 ((*"23.5", "enter"), Reply(choice="done", text="23.5")),
                 ((*"1.1", "space", *"mV", "enter"), Reply(choice="done", text="1.1 mV")),
-                (("y", "enter", "e", "s", "enter"), Reply(choice="yes", text="yes")),
+                (("y", "enter", *"yes", "enter"), Reply(choice="yes", text="yes")),
                 (("g", *"lead", "enter"), Reply(choice="go on", text="lead")),
                 (("right",), Reply(choice="turn", turns=0.02)),
                 (("e",), Reply(choice="enough")),
@@ -311,7 +312,7 @@ def test_f9_switches_off_whatever_has_the_focus() -> None:
             for number, _ in enumerate(QUESTIONS):
                 await until(lambda: app._pending is not None and len(bench.replies) == number)  # noqa: B023
                 await pilot.press("f9")
-                assert bench.offs == ["the operator asked for it"] * (number + 1)
+                assert bench.offs == ["the operator asked for off"] * (number + 1)
                 assert shows(app, "OFF HAS BEEN ASKED FOR")
                 assert len(bench.replies) == number
                 app.answered(Reply(choice="done"))
@@ -333,6 +334,14 @@ def test_f9_works_while_a_reason_is_typed_and_before_leaving_and_at_the_start() 
         async with running(asking(scripted.DECIDE), identity=None) as (app, pilot, bench):
             await pilot.press("4", "f9")
             assert len(bench.offs) == 1
+            assert shows(app, "F9 SWITCHED NOTHING")
+            assert not shows(app, "OFF HAS BEEN ASKED FOR")
+            await pilot.press("enter", "R", "enter")
+            await until(
+                lambda: bench.front is not None and isinstance(app.screen, WalkScreen) and app.supply is not None
+            )
+            await pilot.pause()
+            assert not shows(app, "F9 SWITCHED NOTHING")
 
     run(test)
 
@@ -771,5 +780,170 @@ def test_the_end_of_a_rehearsal_names_what_burnt() -> None:
 
         async with running(script, size=(80, 34)) as (app, _pilot, _bench):
             await until(lambda: shows(app, "BURNT in the simulated unit: output.upper.1: collector-emitter short."))
+
+    run(test)
+
+
+# --- what is said of the supply ------------------------------------------------------------------------------------
+
+HAND_ON = replace(scripted.BY_HAND, label="SUPPLY ON, YOU SAID")
+HAND_NEVER = replace(
+    scripted.BY_HAND, energised="unknown", label="SUPPLY IN YOUR HANDS", hint="off BY HAND", calm=True, never_on=True
+)
+MAINS_ON = replace(scripted.BY_HAND, energised="unknown", label="MAINS ON (you said)", hint=PULL_THE_PLUG)
+
+
+def test_before_the_walk_nobody_claims_that_the_supply_is_off(capsys: pytest.CaptureFixture[str]) -> None:
+    async def test() -> None:
+        async with running(asking(scripted.PROBES), identity=None) as (app, pilot, bench):
+            await pilot.pause()
+            assert shows(app, "SUPPLY NOT ASKED YET")
+            assert not shows(app, "SUPPLY OFF")
+            assert not shows(app, "nothing has been switched on")
+            await pilot.press("ctrl+q")
+            await until(lambda: app.return_value is not None)
+            assert app.last_words == "The rehearsal was not begun."
+            assert bench.front is None
+
+    run(test)
+
+
+@pytest.mark.parametrize(
+    ("supply", "words"),
+    [
+        (HAND_ON, "F9 SWITCHES NOTHING HERE: switch it off by hand, now."),
+        (MAINS_ON, "F9 SWITCHES NOTHING HERE: pull the mains plug, now."),
+        (HAND_NEVER, ""),
+    ],
+)
+def test_off_is_not_said_to_be_asked_for_where_nothing_can_be_asked(supply: SupplyView, words: str) -> None:
+    async def test() -> None:
+        async with running(asking(scripted.CONFIRM, view=replace(scripted.VIEW, supply=supply))) as (app, pilot, bench):
+            await until(lambda: shows(app, supply.label))
+            assert not shows(app, "SUPPLY UNKNOWN")
+            await pilot.press("f9")
+            await pilot.pause()
+            assert bench.offs == ["the operator asked for off"]
+            assert not shows(app, "OFF HAS BEEN ASKED FOR")
+            assert shows(app, words) if words else not shows(app, "F9 SWITCHES NOTHING")
+
+    run(test)
+
+
+def test_a_hand_supply_that_was_never_on_is_left_like_one_that_is_off() -> None:
+    async def test() -> None:
+        view = replace(scripted.VIEW, supply=HAND_NEVER)
+        async with running(asking(scripted.CONFIRM, view=view)) as (app, pilot, bench):
+            await pilot.press("space")
+            assert bench.offs == []
+            await pilot.press("ctrl+q")
+            await until(lambda: app.return_value is not None)
+            assert bench.offs == ["the operator left"]
+
+    run(test)
+
+
+@pytest.mark.parametrize(
+    ("supply", "known"), [(HAND_ON, "switch it off BY HAND before"), (MAINS_ON, "PULL THE PLUG before")]
+)
+def test_leaving_does_not_offer_to_switch_off_what_it_cannot(supply: SupplyView, known: str) -> None:
+    async def test() -> None:
+        async with running(asking(scripted.CONFIRM, view=replace(scripted.VIEW, supply=supply))) as (app, pilot, _):
+            await pilot.press("ctrl+q")
+            await until(lambda: isinstance(app.screen, LeaveScreen))
+            await pilot.pause()
+            assert shows(app, known)
+            assert not shows(app, "switch off and leave")
+            assert not shows(app, "Leaving switches it off")
+
+    run(test)
+
+
+def test_whoever_leaves_is_asked_nothing_more_and_told_that_the_walk_ends_here(monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setattr("benchkit.ui.app.CLOSE_WITHIN_S", 3.0)
+    monkeypatch.setattr("benchkit.ui.app.CLOSE_WHEN_OFF_S", 3.0)
+
+    async def test() -> None:
+        seen = asyncio.Event()
+
+        async def script(front: Front, bench: Bench) -> Closed:
+            front.show(scripted.VIEW)
+            asked = asyncio.ensure_future(front.ask(scripted.PROBES))
+            await bench.off_asked.wait()
+            asked.cancel()
+            await asyncio.wait({asked})
+            front.show(replace(scripted.VIEW, message="The walk stays where it is.", kept=58))
+            asked = asyncio.ensure_future(front.ask(scripted.TEXT))
+            await seen.wait()
+            asked.cancel()
+            return scripted.closed(4)
+
+        async with running(script) as (app, pilot, bench):
+            await until(lambda: shows(app, "Clip the meter across"))
+            await pilot.press("ctrl+c")
+            await bench.off_asked.wait()
+            await until(lambda: shows(app, "58 lines kept"))
+            await asyncio.sleep(0.3)
+            assert shows(app, "The walk ends here")
+            assert not shows(app, "stays where it is")
+            assert not shows(app, scripted.TEXT.do)
+            seen.set()
+            await until(lambda: app.return_value is not None)
+
+    run(test)
+
+
+def test_a_result_from_before_a_stop_is_called_that() -> None:
+    async def script(front: Front, bench: Bench) -> Closed:
+        front.show(scripted.VIEW)
+        bench.replies.append(await front.ask(scripted.CONFIRM))
+        front.show(replace(scripted.VIEW, stopped="the operator asked for off"))
+        bench.replies.append(await front.ask(scripted.CONFIRM))
+        results = (*scripted.VIEW.results, scripted.FAILED)
+        front.show(replace(scripted.VIEW, stopped="the operator asked for off", results=results))
+        bench.replies.append(await front.ask(scripted.CONFIRM))
+        return scripted.closed()
+
+    async def test() -> None:
+        async with running(script) as (app, _, bench):
+            for number, heading in enumerate(("before this", "before the stop", "before this")):
+                await until(lambda: app._pending is not None and len(bench.replies) == number)  # noqa: B023
+                await until(lambda: shows(app, f"{heading}: "))  # noqa: B023
+                app.answered(Reply(choice="yes"))
+
+    run(test)
+
+
+def test_one_line_is_one_line() -> None:
+    async def test() -> None:
+        async with running(asking(scripted.PROBES, view=replace(scripted.VIEW, kept=1))) as (app, _, _bench):
+            await until(lambda: shows(app, "1 line kept"))
+
+    run(test)
+
+
+def test_between_two_turns_of_the_screw_the_instruction_stays() -> None:
+    gap, seen = asyncio.Event(), asyncio.Event()
+
+    async def script(front: Front, bench: Bench) -> Closed:
+        front.show(scripted.TRIM_VIEW)
+        bench.replies.append(await front.ask(scripted.TRIM))
+        front.show(replace(scripted.TRIM_VIEW, kept=58))
+        gap.set()
+        await seen.wait()
+        return scripted.closed()
+
+    async def test() -> None:
+        async with running(script) as (app, pilot, bench):
+            instruction = " ".join(scripted.TRIM.do.split()[:4])
+            await until(lambda: app._pending is not None and shows(app, instruction))
+            assert shows(app, "MORE bias: right 1/50 turn") == (scripted.TRIM_VIEW.kind == "rehearsal")
+            await pilot.press("right")
+            await gap.wait()
+            await until(lambda: shows(app, "58 lines kept"))
+            assert bench.replies == [Reply(choice="turn", turns=0.02)]
+            assert shows(app, instruction)
+            assert not shows(app, "One moment")
+            seen.set()
 
     run(test)

@@ -44,6 +44,7 @@ def test_pass_and_fail_differ_without_red_and_green() -> None:
         ("5 μV", "5 µV"),
         ("±15 V … 20 °C", "±15 V ... 20 °C"),
         ("Müller", "Müller"),
+        ("5 €", "5 EUR"),
         ("ok ✓", "ok ?"),
         ("10\u00a0mV", "10 mV"),
     ],

@@ -100,6 +100,12 @@ def answer(question: Question, *lines: str, view: object = None, refused: str = 
     [
         (CONFIRM, "1", Reply(choice="yes")),
         (CONFIRM, "no", Reply(choice="no")),
+        (CONFIRM, "y", Reply(choice="yes")),
+        (CONFIRM, "N", Reply(choice="no")),
+        (HOLD, "m", Reply(choice="make safe")),
+        (DECIDE, "a", Reply(choice="again")),
+        (DECIDE, "g a known spot", Reply(choice="go on", text="a known spot")),
+        (TRIM, "T", Reply(choice="take")),
         (PROBES, "", Reply(choice="done")),
         (PROBES, "2", Reply(choice="make safe")),
         (HOLD, "yes", Reply(choice="yes", text="yes")),
@@ -138,10 +144,18 @@ def test_what_is_no_answer_is_asked_for_again(question: Question, lines: list[st
     assert text.count("! That is no answer here") == len(lines) - 1
 
 
+def test_a_wrong_answer_is_told_which_keys_there_are() -> None:
+    _, text = answer(CONFIRM, "x", "y")
+    assert "type the number or its letter (Y or N)" in text
+    assert "1 yes, both (Y)" in text
+    _, text = answer(HOLD, "y", "yes")
+    assert "type yes in full, M to make safe" in text
+
+
 def test_a_question_says_everything() -> None:
     _, text = answer(PROBES, "1")
     for words in (PROBES.title, "Red: the end of emitter.upper.1", "Black: output", "Expected: 0.00 mV", "Why:",
-                  "CAUTION: Clip on with the power off", "(3 of 7)", "1 done", "2 I can't: make safe"):  # fmt: skip
+                  "CAUTION: Clip on with the power", "(3 of 7)", "1 done (D)", "2 I can't: make safe (M)"):  # fmt: skip
         assert words in " ".join(text.split()), words
     asked = text[text.index(PROBES.title) :]
     assert max(len(line) for line in asked.splitlines()) <= plain.WIDTH
@@ -277,7 +291,7 @@ def test_an_extra_reading_is_taken_up_in_lines(line: str) -> None:
 def test_an_odd_reading_needs_no_reason_to_go_on() -> None:
     reply, text = answer(ODD_QUESTION, "1")
     assert reply == Reply(choice="go on")
-    assert "1 Go on\n" in text
+    assert "1 Go on (G)\n" in text
 
 
 def test_this_units_limits_stand_under_the_designs_whenever_they_come() -> None:

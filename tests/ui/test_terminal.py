@@ -108,7 +108,7 @@ def terminal(tmp_path: Path, request: pytest.FixtureRequest) -> Iterator[Termina
 def test_the_off_key_works_while_somebody_types_and_while_being_asked(terminal: Terminal) -> None:
     terminal.send(b"1.")
     sent = terminal.send(F9)
-    assert terminal.wait_for("off the operator asked for it") - sent < 0.5
+    assert terminal.wait_for("off the operator asked for off") - sent < 0.5
     terminal.send(b"5 mV\r")
     terminal.wait_for("reply done 1.5 mV")
 
@@ -119,7 +119,7 @@ def test_the_sleep_signal_and_the_stop_key_leave_the_screen_awake(terminal: Term
     terminal.send(b"\x1a")
     time.sleep(0.3)
     sent = terminal.send(b" ")
-    assert terminal.wait_for("off the operator asked for it") - sent < 0.5
+    assert terminal.wait_for("off the operator asked for off") - sent < 0.5
     assert terminal.process.poll() is None
 
 

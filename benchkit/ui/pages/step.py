@@ -20,6 +20,7 @@ class StepPage(Page):
     def __init__(self, guard_s: float, **more: Any) -> None:
         super().__init__(guard_s, **more)
         self._outcome = Outcome(classes="outcome")
+        self._at_stop: tuple[ResultView, ...] | None = None
 
     def compose(self) -> Any:
         """Lay out from what to do, over what came of the last, to the answer."""
@@ -30,7 +31,12 @@ class StepPage(Page):
     def say(self, view: View) -> None:
         """Show the walk."""
         super().say(view)
-        self._outcome.say(view.results)
+        if not view.stopped:
+            self._at_stop = view.results
+        elif self._at_stop is None:
+            self._at_stop = view.results  # gone on with after a stop: what is here is from before it
+        old = bool(view.stopped) and view.results == self._at_stop
+        self._outcome.say(view.results, heading="before the stop" if old else "before this")
 
     def mark_overflow(self) -> None:
         """Give the sheet the room that it needs, then say what still doesn't fit."""

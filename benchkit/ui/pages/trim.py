@@ -19,7 +19,7 @@ from benchkit.ui.widgets.answer import Answer
 from benchkit.ui.widgets.digits import BigReading
 from benchkit.ui.widgets.gauge import Gauge, Gauged
 from benchkit.ui.widgets.trend import Trend
-from benchkit.ui.widgets.trim_words import STALE_AFTER_S, TURNS, figure, in_step, where
+from benchkit.ui.widgets.trim_words import STALE_AFTER_S, TURN_KEYS, TURNS, figure, in_step, where
 from benchkit.ui.widgets.words import Words
 
 
@@ -56,10 +56,11 @@ class TrimPage(Page):
 
     def say(self, view: View) -> None:
         """Show the newest reading."""
-        super().say(view)
+        if self.question is not None or view.live is None or view.busy:
+            super().say(view)  # between two turns of the screw the instruction stays where it is
         self._rehearsal = view.kind == "rehearsal"
         self.set_class(not self._rehearsal, "walking")
-        self._turns.say(Text("screw: left/right 1/50 turn, up/down 1/4 turn, page keys a whole turn", style=QUIET))
+        self._turns.say(Text(TURN_KEYS, style=QUIET))
         if view.live is not None and view.live is not self._live:
             self._live = view.live
             self._received_s = self._clock()

@@ -78,4 +78,4 @@ class BenchScreen(Screen[Any]):
 
     def refresh_off_line(self) -> None:
         """Show what is known of the supply."""
-        self.off_line.say(self.bench.supply, typing=isinstance(self.focused, Input), asked=self.bench.off_asked)
+        self.off_line.say(self.bench.supply_shown, typing=isinstance(self.focused, Input), asked=self.bench.off_asked)

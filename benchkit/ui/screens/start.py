@@ -25,8 +25,8 @@ class StartScreen(BenchScreen):
     def __init__(self, opening: Opening, **more: Any) -> None:
         super().__init__(**more)
         self._opening = opening
-        self._unit = Input(opening.unit, id="unit", compact=True, select_on_focus=False, disabled=opening.resumed)
-        self._operator = Input(opening.operator, id="operator", compact=True, select_on_focus=False)
+        self._unit = Input(opening.unit, id="unit", compact=True, select_on_focus=True, disabled=opening.resumed)
+        self._operator = Input(opening.operator, id="operator", compact=True, select_on_focus=True)
         self._hint = Words(classes="start-hint")
         self._begun = False
         self._body = VerticalScroll(classes="start-body", can_focus=False)

@@ -138,7 +138,8 @@ class WalkScreen(BenchScreen):
             (f"  {safe(view.operator)}", QUIET),
         )
         right = Text.assemble(
-            ("rehearsal  " if view.kind == "rehearsal" else "", f"bold {CARE}"), (f"{view.kept} lines kept", QUIET)
+            ("rehearsal  " if view.kind == "rehearsal" else "", f"bold {CARE}"),
+            (f"{view.kept} {'line' if view.kept == 1 else 'lines'} kept", QUIET),
         )
         row.add_row(left, right)
         self._head.say_drawn((left.plain, right.plain), row)

@@ -15,11 +15,15 @@ from textual.widgets import Input
 from benchkit.procedure.actions import Choice, Question
 from benchkit.session.front import Reply
 from benchkit.ui.look import CARE, INK, QUIET, STRONG, safe
-from benchkit.ui.widgets.answer_keys import keyed, typed_reply
+from benchkit.ui.widgets.answer_keys import keyed, keys_in_words, typed_reply
 from benchkit.ui.widgets.words import Words
 
 GUARD_S = 0.3
 """Keys pressed this soon after a question came up were meant for something else."""
+
+
+TOO_SOON = "Not taken: the question had only just come up. Read it, then press the key again."
+"""Said of an answer that came too soon to be meant for the question."""
 
 
 class Choices(Words, can_focus=True):
@@ -32,6 +36,13 @@ class Choices(Words, can_focus=True):
             super().__init__()
             self.choice = choice
 
+    class Refused(Message):
+        """Posted when a key was pressed that takes none of the choices."""
+
+        def __init__(self, words: str) -> None:
+            super().__init__()
+            self.words = words
+
     def __init__(self, **more: Any) -> None:
         super().__init__(**more)
         self._choices: tuple[tuple[str, Choice], ...] = ()
@@ -39,6 +50,7 @@ class Choices(Words, can_focus=True):
         self._stacked = False
         self._arrows = True
         self._usual = True
+        self._drawn_for = 0
 
     def offer(
         self,
@@ -60,12 +72,18 @@ class Choices(Words, can_focus=True):
         self._arrows = arrows
         self._draw()
 
+    @property
+    def keys(self) -> str:
+        """The keys that answer, in words."""
+        keys = keys_in_words([choice for _, choice in self._choices])
+        return f"{keys}, or Enter" if self._usual else keys
+
     def on_key(self, event: events.Key) -> None:
         """Take or move."""
         if not self._choices:
             return
         if event.key == "enter" and not self._usual:
-            self.app.bell()
+            self.post_message(self.Refused(f"Enter answers nothing here: {self.keys}."))
         elif event.key == "enter":
             self.post_message(self.Taken(self._choices[self._marked][1]))
         elif self._arrows and event.key in (("left", "right", "up", "down") if self._stacked else ("left", "right")):
@@ -77,6 +95,8 @@ class Choices(Words, can_focus=True):
                 choice for letter, choice in self._choices if event.character and event.character.lower() == letter
             ]
             if not found:
+                if event.is_printable and event.character and event.character.strip():
+                    self.post_message(self.Refused(f"{safe(event.character)} answers nothing here: {self.keys}."))
                 return
             self.post_message(self.Taken(found[0]))
         event.stop()
@@ -89,16 +109,28 @@ class Choices(Words, can_focus=True):
 
     def _draw(self) -> None:
         text = Text()
+        width, filled = self.size.width, 0
         for number, (letter, choice) in enumerate(self._choices):
-            if number:
-                text.append("\n" if self._stacked else "   ")
             marked = self._usual and number == self._marked and self.has_focus
             key = "Enter" if marked else letter.upper()
-            text.append(f" {key} ", style=f"bold reverse {CARE}" if marked else f"bold {CARE}")
-            text.append(f" {safe(choice.label)}", style=f"bold {STRONG}" if marked else INK)
+            one = Text()
+            one.append(f" {key} ", style=f"bold reverse {CARE}" if marked else f"bold {CARE}")
+            one.append(f" {safe(choice.label)}", style=f"bold {STRONG}" if marked else INK)
             if marked and not self._stacked and letter != "enter":
-                text.append(f" ({letter.upper()})", style=QUIET)
+                one.append(f" ({letter.upper()})", style=QUIET)
+            if number:
+                fits = not width or filled + 3 + one.cell_len <= width
+                text.append("   " if fits and not self._stacked else "\n")
+                filled = filled + 3 if fits else 0
+            filled += one.cell_len
+            text.append_text(one)
+        self._drawn_for = width
         self.say(text)
+
+    def on_resize(self) -> None:
+        """Break the line between two choices, never inside one."""
+        if self.size.width != self._drawn_for:
+            self._draw()
 
 
 def _ends(choices: tuple[Choice, ...]) -> bool:
@@ -205,8 +237,18 @@ class Answer(Vertical):
     def on_choices_taken(self, message: Choices.Taken) -> None:
         """Answer, or ask why first."""
         message.stop()
-        if self._question is not None and not self._too_soon():
+        if self._question is None:
+            return
+        if self._too_soon():
+            self._complain(TOO_SOON)
+        else:
             self._take(message.choice)
+
+    def on_choices_refused(self, message: Choices.Refused) -> None:
+        """Say which keys answer."""
+        message.stop()
+        if self._question is not None and not self._too_soon():
+            self._complain(message.words)
 
     def _take(self, choice: Choice) -> None:
         if choice.wants_reason:
@@ -225,18 +267,21 @@ class Answer(Vertical):
         """Answer with what was typed."""
         message.stop()
         question = self._question
-        if question is None or self._too_soon():
+        if question is None:
+            return
+        if self._too_soon():
+            self._complain(TOO_SOON)
             return
         text = message.value.strip()
         if self._reason_for is not None:
             if text:
                 self._give(Reply(choice=self._reason_for.value, text=text))
             else:
-                self._complain("A reason is needed; Esc goes back.")
+                self._complain("A reason is needed; Esc goes back.", message.value)
             return
         reply = typed_reply(question, text)
         if isinstance(reply, str):
-            self._complain(reply)
+            self._complain(reply, message.value)
         elif isinstance(reply, Choice):
             self._take(reply)
         else:
@@ -249,7 +294,13 @@ class Answer(Vertical):
             self._half_typed = self._reason_for = None
             self.put(self._question)
 
-    def _complain(self, words: str) -> None:
+    def _complain(self, words: str, typed: str = "") -> None:
+        """Say why an answer was not taken; what was `typed` stays to be seen, and the next typing replaces it."""
+        if typed and self._entry.value == typed:
+            self._entry.select_all()
+        elif typed and self._entry.value.startswith(typed):  # typed on meanwhile
+            self._entry.value = self._entry.value.removeprefix(typed)
+            self._entry.cursor_position = len(self._entry.value)
         self._hint.display = True
         self._hint.set_class(True, "refused")
         self._hint.say(words)
@@ -283,8 +334,9 @@ def _hint(question: Question, refused: str, types: bool) -> Text:
     if not types:
         return Text("")
     label = safe(question.choices[0].label) if question.choices else "done"
+    enter = "Enter" if label.casefold() == "enter" else f"Enter ({label})"
     if question.point:
-        return Text(f"Type what the meter shows, with its unit, then Enter ({label}).{more}")
+        return Text(f"Type what the meter shows, with its unit, then {enter}.{more}")
     if question.kind == "by hand":
-        return Text(f"Type what is asked for, or nothing, then Enter ({label}).{more}")
-    return Text(f"Type, then Enter ({label}).{more}")
+        return Text(f"Type what is asked for, or nothing, then {enter}.{more}")
+    return Text(f"Type, then {enter}.{more}")

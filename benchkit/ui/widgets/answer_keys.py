@@ -26,6 +26,18 @@ def keyed(choices: Sequence[Choice]) -> tuple[tuple[str, Choice], ...]:
     return tuple(taken)
 
 
+def keys_in_words(choices: Sequence[Choice]) -> str:
+    """Return the keys of `choices` for a sentence.
+
+    Examples
+    --------
+    >>> keys_in_words([Choice(value="yes", label="Yes"), Choice(value="no", label="No")])
+    'Y or N'
+    """
+    letters = [letter.upper() for letter, _ in keyed(choices)]
+    return " or ".join(part for part in (", ".join(letters[:-1]), letters[-1] if letters else "") if part)
+
+
 def typed_reply(question: Question, text: str) -> Reply | Choice | str:
     """Return the reply that `text` means, the choice that it names where that wants a reason too, or why it means none.
 

@@ -21,6 +21,9 @@ TURNS: Final[dict[str, float]] = {
 }
 """Turns of the screw that a key stands for in a rehearsal; positive for more bias."""
 
+TURN_KEYS: Final = "MORE bias: right 1/50 turn, up 1/4, page up 1; less: left, down, page down"
+"""The same in words, in one line of 78 cells."""
+
 
 def where(live: LiveView) -> Literal["inside", "below", "above", "nowhere"]:
     """Return on which side of the limits a reading lies; whether it is inside is the session's word."""

@@ -6,14 +6,28 @@ reading of the meter takes so long.
 
 from __future__ import annotations
 
+import argparse
 import sys
 
 from tests.instruments.fault_bench import KINDS, FaultMeter, FaultSupply, Say, Wait
 
 
+def arguments(given: list[str] | None = None) -> tuple[str, str, float]:
+    """Return link, instrument and seconds; wrong ones end the program with its usage and status 2."""
+    parser = argparse.ArgumentParser(
+        prog="python -m tests.instruments.fault_bench",
+        description="An instrument on a loopback link, to try benchkit's commands for instruments with. "
+        "It prints its address, and stays until its standard input ends (Ctrl+D).",
+    )
+    parser.add_argument("kind", choices=sorted(KINDS), help="the link")
+    parser.add_argument("what", choices=["meter", "supply"])
+    parser.add_argument("seconds", type=float, nargs="?", default=0.0, help="how long a reading of d.c. volts takes")
+    found = parser.parse_args(given)
+    return found.kind, found.what, found.seconds
+
+
 def main() -> int:
-    kind, what = sys.argv[1:3]
-    seconds = float(sys.argv[3]) if len(sys.argv) > 3 else 0.0
+    kind, what, seconds = arguments(sys.argv[1:])
     instrument = FaultMeter() if what == "meter" else FaultSupply()
     if seconds:
         instrument.fails_always("MEAS:VOLT:DC?", Wait(seconds), Say(b"+1.0E+00\n"))
