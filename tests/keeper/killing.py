@@ -244,7 +244,7 @@ WAYS: dict[str, Way] = {
     "meter unplugged": Way(_unplug, 1.0, LOST),
     "meter mute": Way(_mute, 1.5, LOST),
     "keeper killed": Way(_kill_keeper, 1.0, LOST, OFF, ("The keeper of the instruments has ended", "A second keeper")),
-    "keeper frozen": Way(_freeze_keeper, 3.0, LOST, OFF, ("had not answered for 1.5 s",)),
+    "keeper frozen": Way(_freeze_keeper, 3.0, LOST, OFF, ("The keeper of the instruments has ended",)),
     "keeper and walk killed": Way(_kill_both, 1.0, LOST),
 }
 

@@ -47,7 +47,7 @@ class Terminal:
             start_new_session=True,
             env=clean | {"TERM": "xterm-256color", "COLORTERM": ""} | environment,
         )
-        os.close(slave)
+        self.held = slave
         self._thread = threading.Thread(target=self._read, daemon=True)
         self._thread.start()
 
@@ -63,9 +63,12 @@ class Terminal:
             self.output.extend(found)
 
     def read_to_the_end(self) -> None:
-        """Wait until all that the ended process wrote has been read."""
-        self._thread.join(10.0)
-        assert not self._thread.is_alive()
+        """Wait until all that the ended process wrote has been read; our own end of the line keeps it from being lost."""
+        deadline = time.monotonic() + 10.0
+        length = -1
+        while length != len(self.output) and time.monotonic() < deadline:
+            length = len(self.output)
+            time.sleep(0.5)
 
     def lines(self) -> list[str]:
         return self.file.read_text(encoding="utf-8").splitlines() if self.file.exists() else []
@@ -90,6 +93,7 @@ class Terminal:
             self.process.kill()
         self.process.wait(10)
         self.reading.set()
+        os.close(self.held)
         if self.master >= 0:
             os.close(self.master)
 
