@@ -63,7 +63,7 @@ class Terminal:
             self.output.extend(found)
 
     def read_to_the_end(self) -> None:
-        """Wait until all that the ended process wrote has been read; our own end of the line keeps it from being lost."""
+        """Wait until all that the ended process wrote has been read; our end of the line keeps it from being lost."""
         deadline = time.monotonic() + 10.0
         length = -1
         while length != len(self.output) and time.monotonic() < deadline:
