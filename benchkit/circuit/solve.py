@@ -101,6 +101,7 @@ class Compiled:
         start: Mapping[str, Value] | Solution | None = None,
         initial: Mapping[str, Value] | None = None,
         effort: Effort = "full",
+        kin: Index | None = None,
     ) -> Solution:
         """Find every unit's operating point.
 
@@ -119,6 +120,9 @@ class Compiled:
         effort : "start", "borrow" or "full"
             What is done for units that are hard: Newton's method from their start and no more; from their start, from
             rest and from other units' solutions; or the whole recipe, which can be slow.
+        kin : array of int, shape (units,), optional
+            Groups, numbered from 0: units start from solutions of their own group only, so that no group's solutions
+            hang on which others are solved with it. Without, all are one group.
 
         Returns
         -------
@@ -139,7 +143,7 @@ class Compiled:
         residual = np.empty(units)
         x = np.empty((plan.size, units))
         if guess is None and units >= _PILOT_FROM:
-            guess = self._pilot(plan, given, rest)
+            guess = self._pilot(plan, given, rest) if kin is None else self._pilots(plan, given, rest, kin)
         for low in range(0, units, CHUNK_UNITS):
             part = slice(low, min(low + CHUNK_UNITS, units))
             batch, cold = _batch(plan, given, part, part.stop - low), _Cold(plan, _parts(rest, part))
@@ -148,7 +152,7 @@ class Compiled:
             )
             x[:, part], converged[part] = outcome.x, outcome.done
             iterations[part], residual[part] = outcome.iterations, outcome.residual_a
-        self._borrow(plan, given, solver, x, converged, iterations, residual, _TURNS[effort])
+        self._borrow(plan, given, solver, x, converged, iterations, residual, _TURNS[effort], kin)
         failed = np.flatnonzero(~converged & (effort == "full"))
         for low in range(0, len(failed), CHUNK_UNITS):
             some = failed[low : low + CHUNK_UNITS]
@@ -160,35 +164,34 @@ class Compiled:
 
     def _borrow(
         self, plan: Plan, given: Mapping[str, Array], solver: LinearSolver, x: Array, converged: Mask,
-        iterations: Iterations, residual: Array, turns: int,
+        iterations: Iterations, residual: Array, turns: int, kin: Index | None,
     ) -> None:  # fmt: skip
         """Let units that failed start from the solutions of others, many of them at once; what succeeds is kept.
 
         Units with different faults stand in different states, and one of those is often near; so may a neighbour be,
         when units of a kind stand beside each other.
         """
-        solved, failed = np.flatnonzero(converged), np.flatnonzero(~converged)
-        if not len(solved) or not len(failed):
+        failed = np.flatnonzero(~converged)
+        if not turns or not len(failed):
             return
-        step = -(-len(solved) // _LENDERS)
+        group = np.zeros(len(converged), np.intp) if kin is None else kin
+        solved = {k: np.flatnonzero(converged & (group == k)) for k in np.unique(group[failed]).tolist()}
+        failed = failed[[len(solved[k]) > 0 for k in group[failed].tolist()]]
         for turn in range(turns):
-            # each turn, the nearest units of the rest and some from everywhere
-            everywhere = solved[turn * step // turns :: step]
             for low in range(0, len(failed), _BORROWERS):
                 some = failed[low : low + _BORROWERS]
-                nearest = [np.argsort(np.abs(solved - unit), kind="stable") for unit in some]
-                near = np.array([solved[order[turn::turns][:_NEIGHBOURS]] for order in nearest])
-                lenders = np.concatenate([np.tile(everywhere, (len(some), 1)), near], axis=1)
-                many = lenders.shape[1]
-                batch = _batch(plan, given, np.repeat(some, many), len(some) * many)
+                lent = [_lenders(solved[int(group[unit])], int(unit), turn, turns) for unit in some]
+                whose = np.repeat(np.arange(len(some)), [len(one) for one in lent])
+                batch = _batch(plan, given, some[whose], len(whose))
                 with np.errstate(all="ignore"):
-                    outcome = iterate(batch, solver, x[:, lenders.ravel()], most=_LENT_ITERATIONS)
-                iterations[some] += outcome.iterations.reshape(len(some), many).max(axis=1)
-                found = outcome.done.reshape(len(some), many)
-                first = np.arange(len(some)) * many + found.argmax(axis=1)
-                good = found.any(axis=1)
-                x[:, some[good]] = outcome.x[:, first[good]]
-                residual[some[good]] = outcome.residual_a[first[good]]
+                    outcome = iterate(batch, solver, x[:, np.concatenate(lent)], most=_LENT_ITERATIONS)
+                spent = np.zeros(len(some), np.int64)
+                np.maximum.at(spent, whose, outcome.iterations)
+                iterations[some] += spent
+                done = np.flatnonzero(outcome.done)
+                good, first = np.unique(whose[done], return_index=True)
+                x[:, some[good]] = outcome.x[:, done[first]]
+                residual[some[good]] = outcome.residual_a[done[first]]
                 converged[some[good]] = True
             failed = failed[~converged[failed]]
             if not len(failed):
@@ -256,6 +259,41 @@ class Compiled:
         cold = _Cold(plan, {key: np.array([np.median(v)]) for key, v in rest.items()})
         outcome = first_attempts(batch, LinearSolver(plan.structure), None, cold)
         return _Guess(outcome.x, batch.knees_by_name(outcome.x)) if outcome.done[0] else None
+
+    def _pilots(self, plan: Plan, values: Mapping[str, Array], rest: Mapping[str, Array], kin: Index) -> _Guess | None:
+        """Solve a unit of median values for each group that is large enough, for the group to start from."""
+        sizes = np.bincount(kin)
+        large = np.flatnonzero(sizes >= _PILOT_FROM)
+        if not len(large):
+            return None
+
+        def middles(arrays: Mapping[str, Array]) -> dict[str, Array]:
+            return {
+                key: array if len(array) == 1 else np.array([np.median(array[kin == k]) for k in large])
+                for key, array in arrays.items()
+            }
+
+        batch, cold = Batch(plan, middles(values), len(large)), _Cold(plan, middles(rest))
+        outcome = first_attempts(batch, LinearSolver(plan.structure), None, cold)
+        x = np.full((plan.size, len(sizes)), np.nan)  # from which nothing comes: then the cold start has its turn
+        x[:, large] = np.where(outcome.done, outcome.x, np.nan)
+        knees = {}
+        for name, rows in batch.knees_by_name(outcome.x).items():
+            knees[name] = tuple(_spread(row, large, len(sizes))[kin] for row in rows)
+        return _Guess(x[:, kin], knees)
+
+
+def _spread(row: Array, where: Index, many: int) -> Array:
+    result = np.full(many, np.nan)
+    result[where] = row
+    return result
+
+
+def _lenders(solved: Index, unit: int, turn: int, turns: int) -> Index:
+    """Whose solutions a unit tries: each turn some from everywhere, and the nearest units of the rest."""
+    step = -(-len(solved) // _LENDERS)
+    nearest = solved[np.argsort(np.abs(solved - unit), kind="stable")]
+    return np.concatenate([solved[turn * step // turns :: step], nearest[turn::turns][:_NEIGHBOURS]])
 
 
 def _parts(arrays: Mapping[str, Array], part: slice | Index) -> dict[str, Array]:

@@ -23,6 +23,7 @@ import io
 import re
 from collections.abc import Callable, Iterator, Mapping
 from dataclasses import dataclass
+from functools import lru_cache
 from pathlib import Path
 from typing import Final, Literal, TypeVar
 
@@ -36,7 +37,8 @@ from benchkit.stage.design import Design
 from benchkit.stage.points import Point, find_point
 
 COLUMNS: Final = ("point", "value", "unit")
-OPTIONAL: Final = ("positive", "negative", "limit", "trimmer", "when", "ambient", "uncertainty")
+STATED: Final = ("positive", "negative", "limit", "trimmer", "when", "ambient")
+OPTIONAL: Final = (*STATED, "uncertainty")
 MOST_LINES: Final = 10_000
 LEAST_SENTINEL: Final = 1e30
 """From here on a bare number is what an instrument sends for "overload" or "no number", whatever the unit."""
@@ -111,8 +113,9 @@ def parse_entries(
         For the first thing that is wrong.
     """
     entries = []
+    known: Known = {}
     for line, cells in _lines(text, file_name):
-        entries.append(_Row(line, cells, file_name).entry(design, accuracy, assumed))
+        entries.append(_Row(line, cells, file_name, known).entry(design, accuracy, assumed))
         if len(entries) > MOST_LINES:
             raise FileError(file_name, f"line {line}", f"more than {MOST_LINES} readings", "the readings of one unit")
     if not entries:
@@ -166,6 +169,16 @@ def _header(names: list[str], line: int, file_name: str) -> list[str]:
     return names
 
 
+@lru_cache(maxsize=4096)
+def _parsed(text: str, unit: str) -> float:
+    """Read a quantity; conditions, units and uncertainties are the same on many lines."""
+    return parse(text, unit)
+
+
+Known = dict[tuple[str, ...], Condition | Unpowered]
+"""Conditions that were met before in a file, by their cells (and the point, where that is part of it)."""
+
+
 @dataclass(frozen=True)
 class _Row:
     """One line's cells, with a place to complain from."""
@@ -173,6 +186,7 @@ class _Row:
     line: int
     cells: Mapping[str, str]
     file_name: str
+    known: Known
 
     def entry(self, design: Design, accuracy: Accuracy, assumed: bool) -> Entry:
         point = self._do("point", lambda: find_point(design, self._cell("point", required=True)))
@@ -203,6 +217,12 @@ class _Row:
         return Entry(self.line, point, reading, condition)
 
     def _condition(self, design: Design, point: Point) -> Condition | Unpowered:
+        key = ("" if point.powered else point.name, *(self._cell(column) for column in STATED))
+        if key not in self.known:
+            self.known[key] = self._new_condition(design, point)
+        return self.known[key]
+
+    def _new_condition(self, design: Design, point: Point) -> Condition | Unpowered:
         trimmer = self._do("trimmer", lambda: parse_trimmer(self._cell("trimmer") or "unknown"))
         ambient = self._optional("ambient", "degC")
         if not point.powered:
@@ -244,7 +264,7 @@ class _Row:
         """Read a value or an uncertainty; a bare number is in the unit column's unit."""
         if self._cell("unit"):
             # The unit must be one of the point's kind, also where the value carries its own.
-            self._do("unit", lambda: parse(f"1 {self._cell('unit')}", point.unit))
+            self._do("unit", lambda: _parsed(f"1 {self._cell('unit')}", point.unit))
         return parse_reading(self._with_unit(column, point), point.unit)
 
     def _with_unit(self, column: str, point: Point) -> str:
@@ -256,7 +276,7 @@ class _Row:
 
     def _optional(self, column: str, unit: str) -> float | None:
         text = self._cell(column)
-        return self._do(column, lambda: parse(text, unit)) if text else None
+        return self._do(column, lambda: _parsed(text, unit)) if text else None
 
     def _cell(self, column: str, required: bool = False) -> str:
         text = self.cells.get(column, "")

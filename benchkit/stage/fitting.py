@@ -52,14 +52,17 @@ class Data:
         Values; infinite for overloads.
     u : array
         Standard uncertainties.
+    rails_v : array of shape (units, entries of the layout, 2), optional
+        Where rails are held at their readings; see `UnitModel.at`.
     """
 
     y: Matrix
     u: Matrix
+    rails_v: Matrix | None = None
 
     def take(self, index: Index) -> Data:
         """Return some of the units."""
-        return Data(self.y[index], self.u[index])
+        return Data(self.y[index], self.u[index], None if self.rails_v is None else self.rails_v[index])
 
 
 @dataclass
@@ -153,6 +156,7 @@ def fit(
     joint: Joint,
     effort: Effort = "start",
     most_steps: int = MOST_STEPS,
+    kin: Index | None = None,
 ) -> Fit:
     """Find the best z of every unit from where it stands.
 
@@ -166,6 +170,8 @@ def fit(
         Where to start and the readings there; the solutions in ``joint`` are taken over and altered.
     effort : "start" or "borrow"
         What the solver does for units that are hard; a step that it can't solve is halved.
+    kin : array of int of shape (units,), optional
+        Groups within which units may start from each other's solutions.
     """
     most = model.most
     z = z.copy()
@@ -179,7 +185,8 @@ def fit(
         if not len(live):
             break
         here = Joint(f[live], slope[live], doubt[live], good[live], straight_at[:, live], ())
-        aim, promised, _ = step_from(data.take(live), z[:, live], here, most)
+        some = data.take(live)
+        aim, promised, _ = step_from(some, z[:, live], here, most)
         aim = np.clip(aim, -FARTHEST, FARTHEST)
         going = (cost[live] - promised > ENOUGH) & (share[live] > 0.02)
         live, aim = live[going], aim[:, going]
@@ -187,8 +194,9 @@ def fit(
             break
         trial = z[:, live] + share[live] * (aim - z[:, live])
         start = Joint(f, slope, doubt, good, straight_at, solutions).take(live)
-        found = model.at(trial, [faults[k] for k in live.tolist()], start, effort)
-        now = cost_of(data.take(live), trial, found, most)
+        some, group = data.take(live), None if kin is None else kin[live]
+        found = model.at(trial, [faults[k] for k in live.tolist()], start, effort, some.rails_v, group)
+        now = cost_of(some, trial, found, most)
         better = now < cost[live]
         won = live[better]
         taken = np.flatnonzero(better)

@@ -6,6 +6,9 @@ the rail at the voltage that was read, the current must be the limit. So, where 
 setting, every hypothesis is solved with that rail held at the reading, and has to explain the current: the one that was
 read, or else the limit, which a supply keeps within a percent or so (common practice). Both rails must have been read:
 one that nobody looked at may stand against its own limit.
+
+The changed condition says which rails are held; at what voltage is data of each unit. So units whose rails fell in the
+same pattern, each to voltages of its own, still are read alike and are worked out together.
 """
 
 from __future__ import annotations
@@ -13,6 +16,7 @@ from __future__ import annotations
 import math
 from collections.abc import Sequence
 from dataclasses import dataclass, fields, replace
+from typing import NamedTuple
 
 from benchkit.stage.conditions import Condition
 from benchkit.stage.observations import Conditions, Observation
@@ -29,27 +33,37 @@ LEAST_HELD_V = 1e-3
 
 @dataclass(frozen=True, kw_only=True)
 class Held(Condition):
-    """A condition whose rails stand at other voltages than they were set to.
+    """A condition with rails that don't stand at the voltages that they were set to, but at each unit's own.
 
     Parameters
     ----------
-    held_v : (float, float)
-        Positive and negative rail (V).
+    held : (bool, bool)
+        Whether the positive and the negative rail are held.
     """
 
-    held_v: tuple[float, float] = (0.0, 0.0)
+    held: tuple[bool, bool] = (False, False)
 
 
-def held_at_readings(observations: Sequence[Observation]) -> tuple[list[Observation], dict[Conditions, Conditions]]:
-    """Take rails that have fallen at their readings.
+class Taken(NamedTuple):
+    """Readings with fallen rails taken as they were read.
 
-    Returns
-    -------
+    Attributes
+    ----------
     observations : list of Observation
         With changed conditions where a rail was held, and the limit as a reading where no current was read.
     original : dict
         Changed conditions to those that were stated.
+    rails_v : dict
+        Changed conditions to the voltages of positive and negative rail; not a number where a rail is not held.
     """
+
+    observations: list[Observation]
+    original: dict[Conditions, Conditions]
+    rails_v: dict[Conditions, tuple[float, float]]
+
+
+def held_at_readings(observations: Sequence[Observation]) -> Taken:
+    """Take rails that have fallen at their readings."""
     fallen: dict[Conditions, dict[str, float]] = {}
     for one in observations:
         first = one.conditions[0]
@@ -66,7 +80,7 @@ def held_at_readings(observations: Sequence[Observation]) -> tuple[list[Observat
         if all((conditions, rail) in seen for rail in _rails_of(conditions))
     }
     if not fallen:
-        return list(observations), {}
+        return Taken(list(observations), {}, {})
     changed = {conditions: _held(conditions, rails) for conditions, rails in fallen.items()}
     result = [
         replace(one, conditions=changed[one.conditions]) if one.conditions in changed else one for one in observations
@@ -85,7 +99,11 @@ def held_at_readings(observations: Sequence[Observation]) -> tuple[list[Observat
                         standard_uncertainty=LIMIT_SHARE * limit_a,
                     )
                 )  # fmt: skip
-    return result, {new: old for old, new in changed.items()}
+    rails_v = {
+        changed[conditions]: (rails.get("rail+", math.nan), -rails.get("rail-", math.nan))
+        for conditions, rails in fallen.items()
+    }
+    return Taken(result, {new: old for old, new in changed.items()}, rails_v)
 
 
 def _rails_of(conditions: Conditions) -> tuple[str, ...]:
@@ -95,13 +113,12 @@ def _rails_of(conditions: Conditions) -> tuple[str, ...]:
 
 
 def _held(conditions: Conditions, rails: dict[str, float]) -> Conditions:
-    """The same conditions with some rails at other voltages and a limit that is out of the way."""
+    """The same conditions with some rails held and a limit that is out of the way."""
     result = []
     for one in conditions:
         assert isinstance(one, Condition)
         assert one.limit_a is not None
         stated = {field.name: getattr(one, field.name) for field in fields(one)}
         stated["limit_a"] = FREE_FACTOR * one.limit_a
-        negative_v = -rails["rail-"] if "rail-" in rails else one.negative_v
-        result.append(Held(**stated, held_v=(rails.get("rail+", one.positive_v), negative_v)))
+        result.append(Held(**stated, held=("rail+" in rails, "rail-" in rails)))
     return tuple(result)

@@ -4,6 +4,12 @@ A `Library` holds, for one layout, each hypothesis's nominal unit and a few draw
 It is made once and serves every unit that is read in the same way. A unit's readings start each hypothesis from the
 member that comes nearest; hypotheses that are hopeless even to first order are not pursued, unless nothing else
 explains the readings.
+
+Where rails are held at their readings (`benchkit.stage.forcing`), every unit's hypotheses stand at rails of its own: a
+`Library` for such units is solved for all of them in one batch, and each has rows of its own there.
+
+What is said of a unit doesn't hang on which others are worked out beside it: nothing here passes from one set of
+readings to another, and the solver lends solutions within one set only.
 """
 
 from __future__ import annotations
@@ -18,7 +24,7 @@ from benchkit.stage.design import Design
 from benchkit.stage.draws import Array
 from benchkit.stage.faults import HEALTHY, faults_of, prior_of
 from benchkit.stage.fitting import Data, Fit, fit, step_from
-from benchkit.stage.readouts import Index, Mask
+from benchkit.stage.readouts import Index, Mask, Matrix
 from benchkit.stage.unit_model import Joint, Layout, UnitModel
 
 DRAWN = 1
@@ -29,39 +35,70 @@ LIBRARY_SEED = 20261
 class Library:
     """Every hypothesis's nominal unit and a few drawn ones, solved for one layout.
 
+    Parameters
+    ----------
+    design : Design
+    layout : Layout
+    rails_v : array of shape (sets, entries of the layout, 2), optional
+        For sets of readings with held rails: where they are held in each set (`UnitModel.at`).
+
     Attributes
     ----------
     faults : tuple of Fault
         `HEALTHY` and all faults of the design.
     log_prior : array of shape (hypotheses,)
     z : array of shape (coordinates, members * hypotheses)
-        Member after member; the first one nominal.
+        Member after member; the first one nominal. With held rails the same again for every set.
+    whose : array of int
+        Number of each one's hypothesis.
     joint : Joint
         Their readings.
     """
 
-    def __init__(self, design: Design, layout: Layout) -> None:
+    def __init__(self, design: Design, layout: Layout, rails_v: Matrix | None = None) -> None:
         self.model = UnitModel(design, layout)
         self.wider: dict[object, UnitModel] = {}
         self.faults = (HEALTHY, *faults_of(design))
         priors = np.array([1.0, *(prior_of(design, fault) for fault in self.faults[1:])])
         priors[1:] /= 1.0 - priors[1:]
         self.log_prior = np.log(priors / priors.sum())
-        many = len(self.faults)
-        drawn_units = DRAWN
-        count = len(self.model.coordinates)
-        centre = np.zeros((count, many))
-        first = self.model.at(centre, self.faults)
-        rng = np.random.default_rng(LIBRARY_SEED)
-        drawn = np.repeat(rng.standard_normal((count, drawn_units)), many, axis=1)
+        many, sets = len(self.faults), 1 if rails_v is None else len(rails_v)
+        count, members = len(self.model.coordinates), DRAWN + 1
+        self._each = 0 if rails_v is None else many * members
+        """How many rows further the next set's begin."""
+        z = np.zeros((count, members, many))
+        z[:, 1:] = np.random.default_rng(LIBRARY_SEED).standard_normal((count, DRAWN))[:, :, None]
+        self.z = np.tile(z.reshape(count, -1), sets)
+        self.whose = np.tile(np.arange(many), members * sets)
+        which_set = np.repeat(np.arange(sets), many * members)
+        member = np.tile(np.repeat(np.arange(members), many), sets)
+        nominal, drawn = np.flatnonzero(member == 0), np.flatnonzero(member > 0)
+
+        def solved(rows: Index, start: Joint | None) -> Joint:
+            own_v, kin = None if rails_v is None else rails_v[which_set[rows]], which_set[rows]
+            faults = [self.faults[k] for k in self.whose[rows]]
+            return self.model.at(self.z[:, rows], faults, start, rails_v=own_v, kin=kin)
+
+        first = solved(nominal, None)
         again = np.flatnonzero(~first.good)
-        z = np.concatenate([drawn, centre[:, again]], axis=1)
-        whose = np.concatenate([np.tile(np.arange(many), drawn_units), again])
-        rest = self.model.at(z, [self.faults[k] for k in whose], first.take(whose))
-        self.z = np.concatenate([centre, drawn], axis=1)
-        nominal = _replaced(first, again, rest.take(np.arange(drawn_units * many, len(whose))))
-        self.joint = joined(nominal, rest.take(np.arange(drawn_units * many)))
-        self.whose = np.tile(np.arange(many), drawn_units + 1)
+        # the nominal unit of each drawn one's set and hypothesis
+        near = (which_set * many + self.whose)[drawn]
+        rest = solved(np.concatenate([drawn, nominal[again]]), first.take(np.concatenate([near, again])))
+        first = _replaced(first, again, rest.take(np.arange(len(drawn), len(drawn) + len(again))))
+        order = np.argsort(np.concatenate([nominal, drawn]))
+        self.joint = joined(first, rest.take(np.arange(len(drawn)))).take(order)
+
+    def rows(self, number: int) -> slice:
+        """Where the hypotheses of a set of readings stand."""
+        low = number * self._each
+        return slice(low, low + (self._each or len(self.whose)))
+
+    def view(self, number: int) -> tuple[Array, Joint]:
+        """Give the hypotheses of a set of readings, z and readings, the solutions left out."""
+        part, joint = self.rows(number), self.joint
+        return self.z[:, part], Joint(
+            joint.f[part], joint.slope[part], joint.doubt[part], joint.good[part], joint.straight_at[:, part], ()
+        )
 
 
 @lru_cache(maxsize=8)
@@ -201,23 +238,26 @@ def _first_order(lib: Library, data: Data) -> tuple[Index, Array, Array]:
     Returns
     -------
     starts : array of int of shape (sets, members, hypotheses)
-        Members, the one first from which the unit would have the least far to go for the least that is left then.
+        Rows of the library, the one first from which the unit would have the least far to go for the least that is
+        left then.
     promised, evidence : arrays of shape (sets, hypotheses)
         Cost and log evidence that the first one of them promises.
     """
     sets, many = len(data.y), len(lib.faults)
-    members = len(lib.whose) // many
+    members = lib.rows(0).stop // many
     starts = np.empty((sets, members, many), np.intp)
     promised, evidence = np.empty((sets, many)), np.empty((sets, many))
     for number in range(sets):
+        z, joint = lib.view(number)
         one = data.take(np.full(many * members, number))
-        aim, cost, log_determinant = step_from(one, lib.z, lib.joint, lib.model.most)
-        away = ((np.clip(aim, -6.0, 6.0) - lib.z) ** 2).sum(axis=0)
-        score = np.where(lib.joint.good, cost + away, np.inf).reshape(members, many)
-        starts[number] = score.argsort(axis=0, kind="stable") * many + np.arange(many)
-        first = starts[number, 0]
-        promised[number] = np.where(lib.joint.good[first], cost[first], np.inf)
+        aim, cost, log_determinant = step_from(one, z, joint, lib.model.most)
+        away = ((np.clip(aim, -6.0, 6.0) - z) ** 2).sum(axis=0)
+        score = np.where(joint.good, cost + away, np.inf).reshape(members, many)
+        order = score.argsort(axis=0, kind="stable") * many + np.arange(many)
+        first = order[0]
+        promised[number] = np.where(joint.good[first], cost[first], np.inf)
         evidence[number] = -0.5 * (promised[number] + log_determinant[first])
+        starts[number] = lib.rows(number).start + order
     return starts, promised, evidence
 
 
@@ -225,5 +265,5 @@ def _fit(lib: Library, data: Data, start: Index, pursue: Mask, effort: Effort = 
     which_set, which = np.nonzero(pursue)
     index = start[which_set, which]
     faults = [lib.faults[k] for k in which]
-    found = fit(lib.model, data.take(which_set), faults, lib.z[:, index], lib.joint.take(index), effort)
+    found = fit(lib.model, data.take(which_set), faults, lib.z[:, index], lib.joint.take(index), effort, kin=which_set)
     return found, which_set, which

@@ -80,6 +80,8 @@ class Run:
         """What the rails are set to: that decides whether and where a servo regulates."""
         self.effort: Effort = "full"
         """What the solver does for units that are hard."""
+        self.kin: Index | None = None
+        """Groups within which the solver may start one unit from another's solution; None for one group."""
 
     def variant(self, find: bool = False, meters: bool = False) -> Variant:
         """Form of the netlist for this condition."""
@@ -162,7 +164,8 @@ class Run:
         if isinstance(start, Solution) and start.units == 1 and self.units > 1:
             first = self.lifted(start, np.zeros(self.units, dtype=np.intp))
         chosen = {key: value for key, value in values.items() if key in circuit.keys}
-        return circuit.solve(chosen, self.units, first, dict.fromkeys(inner, rest_v), effort=self.effort)
+        initial = dict.fromkeys(inner, rest_v)
+        return circuit.solve(chosen, self.units, first, initial, effort=self.effort, kin=self.kin)
 
     def lifted(self, pilots: Solution, whose: Index) -> dict[str, Array]:
         """Start of every unit from one of some solved ones, moved to where its own output will be.
@@ -234,6 +237,7 @@ class Run:
         own_c = ambient_c[which] if ambient_c.size > 1 else ambient_c
         part = Run(self.design, few, self.condition, faults, len(which), (rails[0], rails[1]), own_c)
         part.effort = self.effort
+        part.kin = None if self.kin is None else self.kin[which]
         if self.set_v[0] is not self.positive_v:
             part.set_v = self.set_v
         return part

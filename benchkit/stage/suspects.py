@@ -33,7 +33,7 @@ from benchkit.stage.conditions import Condition, Unpowered
 from benchkit.stage.design import Design, target_drop_v
 from benchkit.stage.faults import HEALTHY, faults_of, prior_of
 from benchkit.stage.fitting import Data
-from benchkit.stage.forcing import held_at_readings
+from benchkit.stage.forcing import Taken, held_at_readings
 from benchkit.stage.hypotheses import Library, library
 from benchkit.stage.observations import Conditions, Observation
 from benchkit.stage.points import points_of
@@ -45,6 +45,9 @@ from benchkit.stage.unit_model import layout_of, own
 __all__ = [
     "Evidence", "Observation", "Probe", "Suspect", "Suspicion", "default_candidates", "suspect", "suspect_many",
 ]  # fmt: skip
+
+HELD_TOGETHER = 32
+"""So many units with held rails are worked out as one batch: each has its own solutions of every hypothesis."""
 
 
 def suspect(
@@ -85,26 +88,43 @@ def suspect_many(
     found: list[Suspicion | None] = [None] * len(sets)
     groups: dict[tuple[tuple[Conditions, str], ...], list[int]] = {}
     held = [held_at_readings([*observations, *at_target(design, observations)]) for observations in sets]
-    for number, (observations, _) in enumerate(held):
-        keys = dict.fromkeys((one.conditions, one.point) for one in observations)
+    for number, one in enumerate(held):
+        keys = dict.fromkeys((reading.conditions, reading.point) for reading in one.observations)
         groups.setdefault(tuple(keys), []).append(number)
-    for readings, members in groups.items():
-        began = time.perf_counter()
-        original = held[members[0]][1]
-        stated = [(original.get(conditions, conditions), point) for conditions, point in readings]
-        if not readings:
-            answers = [_priors_only(design)] * len(members)
-        else:
-            wanted = tuple(candidates) or default_candidates(design, stated)
-            told = tuple(pair for pair in wanted if pair not in stated)
-            # conditions with rails held at one unit's readings will not come again
-            lib = Library(design, layout_of(readings)) if original else library(design, layout_of(readings))
-            data, shown = _data(lib, [held[number][0] for number in members])
-            answers = Report(lib, data, told, original, shown).suspicions()
-        each = (time.perf_counter() - began) / len(members)
-        for number, answer in zip(members, answers, strict=True):
-            found[number] = replace(answer, seconds=each)
+    for readings, everyone in groups.items():
+        # what is held is solved for each unit: a part of them at a time
+        most = HELD_TOGETHER if held[everyone[0]].original else len(everyone)
+        for low in range(0, len(everyone), most):
+            members = everyone[low : low + most]
+            began = time.perf_counter()
+            answers = _group(design, readings, [held[number] for number in members], tuple(candidates))
+            each = (time.perf_counter() - began) / len(members)
+            for number, answer in zip(members, answers, strict=True):
+                found[number] = replace(answer, seconds=each)
     return [one for one in found if one is not None]
+
+
+def _group(
+    design: Design,
+    readings: tuple[tuple[Conditions, str], ...],
+    sets: Sequence[Taken],
+    candidates: tuple[tuple[Conditions, str], ...],
+) -> list[Suspicion]:
+    """Answer for units that were read alike."""
+    if not readings:
+        return [_priors_only(design)] * len(sets)
+    original, layout = sets[0].original, layout_of(readings)
+    stated = [(original.get(conditions, conditions), point) for conditions, point in readings]
+    wanted = candidates or default_candidates(design, stated)
+    told = tuple(pair for pair in wanted if pair not in stated)
+    rails_v = None
+    if original:
+        nothing = (math.nan, math.nan)
+        rails_v = np.array([[one.rails_v.get(conditions, nothing) for conditions, _ in layout] for one in sets])
+    # rails that were held at some units' readings will not come again
+    lib = library(design, layout) if rails_v is None else Library(design, layout, rails_v)
+    data, shown = _data(lib, [one.observations for one in sets])
+    return Report(lib, replace(data, rails_v=rails_v), told, original, shown).suspicions()
 
 
 def at_target(design: Design, observations: Sequence[Observation]) -> list[Observation]:

@@ -27,8 +27,9 @@ from benchkit.stage.draws import Array
 from benchkit.stage.faults import Fault
 from benchkit.stage.latent import Coordinates
 from benchkit.stage.observations import Conditions
-from benchkit.stage.readouts import STRAIGHT, Index, Linear, Mask, Matrix, Powered, UnpoweredPoints
+from benchkit.stage.readouts import Index, Linear, Mask, Matrix, Powered
 from benchkit.stage.topologies import Variant, build
+from benchkit.stage.unpowered_readouts import STRAIGHT, UnpoweredPoints
 
 Layout = tuple[tuple[Conditions, tuple[str, ...]], ...]
 POSITION = "spreader.trimmer.position"
@@ -133,7 +134,15 @@ class UnitModel:
             most.append(first.most if isinstance(first, UnpoweredPoints) else np.full(len(points), np.inf))
         self.most = np.concatenate(most)
 
-    def at(self, z: Array, faults: Sequence[Fault], start: Joint | None = None, effort: Effort = "borrow") -> Joint:
+    def at(
+        self,
+        z: Array,
+        faults: Sequence[Fault],
+        start: Joint | None = None,
+        effort: Effort = "borrow",
+        rails_v: Matrix | None = None,
+        kin: Index | None = None,
+    ) -> Joint:
         """Readings of units at z, of shape (coordinates, units), each with its fault.
 
         Parameters
@@ -142,20 +151,28 @@ class UnitModel:
             Earlier readings of the same units, to start from.
         effort : "start", "borrow" or "full"
             What the solver does for units that are hard.
+        rails_v : array of shape (units, entries of the layout, 2), optional
+            Positive and negative rail of each unit (V) under conditions that hold them; not a number elsewhere. Entries
+            that were added to a layout may be missing.
+        kin : array of int of shape (units,), optional
+            Groups within which units may start from each other's solutions; without, all are one.
         """
         f, slopes, doubts, solutions = [], [], [], []
         good = np.ones(z.shape[1], np.bool_)
         column = 0
         kept = iter(() if start is None else start.solutions)
-        for block in self._blocks:
+        for number, block in enumerate(self._blocks):
+            held_v = None if rails_v is None or number >= rails_v.shape[1] else rails_v[:, number]
             ends: list[Linear] = []
             for readout in block.readouts:
                 before = next(kept, None)
                 if isinstance(readout, UnpoweredPoints) and start is not None:
                     known = start.slope[:, column : column + len(readout.points)]
-                    ends.append(readout.near(z, faults, before, effort, known, start.straight_at))
+                    ends.append(readout.near(z, faults, before, effort, known, start.straight_at, kin))
+                elif isinstance(readout, UnpoweredPoints):
+                    ends.append(readout.at(z, faults, before, effort, kin))
                 else:
-                    ends.append(readout.at(z, faults, before, effort))
+                    ends.append(readout.at(z, faults, before, effort, held_v, kin))
                 solutions.append(ends[-1].solution)
                 good &= ends[-1].good
             column += len(block.readouts[0].points)

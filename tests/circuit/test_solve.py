@@ -1,10 +1,12 @@
 import pickle
+from typing import Any
 
 import numpy as np
 import pytest
 
 from benchkit.circuit import solve as solve_module
 from benchkit.circuit.netlist import Netlist
+from benchkit.circuit.newton import Outcome, first_attempts
 from benchkit.circuit.solve import Compiled, compile_netlist
 from benchkit.errors import ModelError
 from tests.circuit.circuits import Values, follower, spread, transistors, values_of
@@ -357,3 +359,45 @@ def test_a_transistor_without_resistances_has_no_internal_nodes() -> None:
     assert [name for name in plain.plan.names if "\x00" in name] == []
     mixed = compiled.solve({"feed.amps": 1e-3, "r": 1e6, "q.IS": 1e-14, "q.RB": np.array([0.0, 100.0])}, 2)
     assert mixed.plan.nodes == 2
+
+
+def _few(values: Values, which: slice) -> Values:
+    return {key: value[which] if np.size(value) > 1 else value for key, value in values.items()}
+
+
+def test_groups_are_solved_as_each_alone(double: tuple[Netlist, Compiled]) -> None:
+    """From a pilot of their own where a group is large, with several groups and a small one in a batch."""
+    netlist, circuit = double
+    values = spread(values_of(netlist), 77, 4)
+    parts = (slice(0, 35), slice(35, 42), slice(42, 77))
+    kin = np.repeat(np.arange(3), [35, 7, 35])
+    together = circuit.solve(values, 77, effort="borrow", kin=kin)
+    assert together.converged.all()
+    for part in parts:
+        alone = circuit.solve(_few(values, part), part.stop - part.start, effort="borrow")
+        np.testing.assert_allclose(together.x[:, part], alone.x, rtol=1e-7, atol=1e-9)
+        np.testing.assert_array_equal(together.iterations[part], alone.iterations)
+
+
+def test_a_solution_is_lent_within_its_group_only(
+    double: tuple[Netlist, Compiled], monkeypatch: pytest.MonkeyPatch
+) -> None:
+    netlist, circuit = double
+    values = spread(values_of(netlist), 12, 4)
+    solved = circuit.solve(values, 12)
+    kin = np.repeat(np.arange(3), 4)
+    lost = np.array([1, 4, 5, 6, 7, 9, 10])  # one of the first group, all of the second, two of the third
+    attempts = first_attempts
+
+    def some_fail(*arguments: Any) -> Outcome:
+        outcome = attempts(*arguments)
+        outcome.done[lost] = False
+        outcome.x[:, lost] = np.nan
+        return outcome
+
+    monkeypatch.setattr(solve_module, "first_attempts", some_fail)
+    found = circuit.solve(values, 12, effort="borrow", kin=kin)
+    np.testing.assert_array_equal(np.flatnonzero(~found.converged), [4, 5, 6, 7])
+    own = found.converged
+    np.testing.assert_allclose(found.x[:, own], solved.x[:, own], rtol=1e-7, atol=1e-9)
+    assert circuit.solve(values, 12, effort="borrow").converged.all()

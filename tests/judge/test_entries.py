@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from pathlib import Path
 
 import pytest
@@ -14,6 +15,7 @@ from benchkit.measure.accuracy import BENCH_METER, HANDHELD
 from benchkit.stage.conditions import Condition, Unpowered
 from tests.judge.designs import tern
 
+TERN_AT_15 = Condition(positive_v=15.0, negative_v=-15.0, trimmer="least", when="cold")
 HEADER = "point,value,unit,positive,negative,limit,trimmer,when,ambient,uncertainty"
 
 
@@ -69,6 +71,20 @@ def test_overload(text: str) -> None:
     assert entry.reading.overload
     assert entry.reading.value is None
     assert isinstance(entry.condition, Unpowered)
+
+
+def test_lines_of_the_same_cells_have_the_same_condition_and_others_their_own() -> None:
+    lines = (
+        "rail+,15,V,15 V,-15 V,50 mA,least,cold,,", "output,1,mV,15 V,-15 V,50 mA,least,cold,,",
+        "output,1,mV,15 V,-15 V,60 mA,least,cold,,", "ohm.rails,1,kohm,15 V,-15 V,50 mA,least,cold,,",
+        "ohm.output,1,kohm,15 V,-15 V,50 mA,least,cold,,", "rail+,15,V,15 V,-15 V,50 mA,least,cold,,",
+    )  # fmt: skip
+    found = [entry.condition for entry in _entries("\n".join((HEADER, *lines)))]
+    assert found[0] == found[1] == found[5] == replace(TERN_AT_15, limit_a=0.05)
+    assert found[2] == replace(TERN_AT_15, limit_a=0.06)
+    assert found[3:5] == [Unpowered(point=point, trimmer="least") for point in ("ohm.rails", "ohm.output")]
+    with pytest.raises(FileError, match="line 4, limit"):
+        _entries("\n".join((HEADER, *lines[:2], lines[2].replace("60 mA", "60 mV"))))
 
 
 def test_columns_in_any_order_with_spaces_quotes_and_a_mark_at_the_start() -> None:

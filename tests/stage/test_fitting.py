@@ -13,7 +13,7 @@ from benchkit.stage.conditions import Condition
 from benchkit.stage.draws import Array
 from benchkit.stage.faults import HEALTHY, Fault
 from benchkit.stage.fitting import ENOUGH, FARTHEST, Data, cost_of, fit, log_evidence, residual, step_from
-from benchkit.stage.readouts import Matrix
+from benchkit.stage.readouts import Index, Matrix
 from benchkit.stage.unit_model import Joint, UnitModel, layout_of
 from tests.stage.designs import breadboard
 from tests.stage.unit_readings import POINTS, fault_of
@@ -28,7 +28,15 @@ class Toy:
         self.law, self.most = law, np.array(most)
         self.asked = 0
 
-    def at(self, z: Array, faults: Sequence[Fault], start: Joint | None = None, effort: str = "") -> Joint:
+    def at(
+        self,
+        z: Array,
+        faults: Sequence[Fault],
+        start: Joint | None = None,
+        effort: str = "",
+        rails_v: Matrix | None = None,
+        kin: Index | None = None,
+    ) -> Joint:
         assert len(faults) == z.shape[1]
         self.asked += 1
         f, slope = self.law(z)

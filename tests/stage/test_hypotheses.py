@@ -2,12 +2,15 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 
 from benchkit.stage.conditions import Condition, Unpowered
 from benchkit.stage.faults import HEALTHY, faults_of
 from benchkit.stage.fitting import Data
+from benchkit.stage.forcing import Held
 from benchkit.stage.hypotheses import Library, fit_hypotheses, joined, library
 from benchkit.stage.observations import Conditions
 from benchkit.stage.unit_model import layout_of
@@ -75,6 +78,29 @@ def test_unpowered_readings_are_joined_point_after_point() -> None:
     np.testing.assert_allclose(again.f, lib.joint.f[index], rtol=1e-7)
     np.testing.assert_array_equal(both.take(np.array([2])).f, other.f)
     assert max(int(solution.iterations.max()) for solution in again.solutions) <= 3
+
+
+def test_units_with_held_rails_have_rows_of_their_own() -> None:
+    """Solved as one batch, each as in a library for it alone; the rails are where they are held."""
+    limited = Held(**vars(replace(COLD, limit_a=5.0)), held=(True, True))
+    layout = layout_of([((limited,), point) for point in ("rail+", "rail-", "spread", "rail+.current")])
+    rails_v = np.array([[[1.9, -0.7]], [[1.3, -6.0]]])
+    both = Library(breadboard(), layout, rails_v)
+    many = len(both.faults)
+    assert len(both.whose) == both.z.shape[1] == len(both.joint.good) == sum(s.units for s in both.joint.solutions)
+    assert both.rows(0).stop == both.rows(1).start
+    assert both.rows(1).stop == len(both.whose)
+    for number in range(2):
+        alone = Library(breadboard(), layout, rails_v[[number]])
+        z, joint = both.view(number)
+        np.testing.assert_array_equal(z, alone.z)
+        np.testing.assert_array_equal(joint.good, alone.joint.good)
+        assert joint.good.mean() > 0.95
+        np.testing.assert_allclose(joint.f, alone.joint.f, rtol=1e-6, atol=1e-9)
+        # but for a hypothesis or two that is a short, and takes the limit's current even so
+        stand = np.isclose(joint.f[:many, :2], rails_v[number], rtol=0.01).all(axis=1)
+        assert stand[0]
+        assert stand.mean() > 0.9
 
 
 def test_the_planted_hypothesis_wins_or_is_as_good(lib: Library) -> None:

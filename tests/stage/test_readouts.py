@@ -7,16 +7,16 @@ from dataclasses import replace
 import numpy as np
 import pytest
 
-from benchkit.stage.conditions import Condition, Unpowered
+from benchkit.stage.conditions import Condition
 from benchkit.stage.design import Design
 from benchkit.stage.draws import Array
 from benchkit.stage.faults import HEALTHY, Fault
+from benchkit.stage.forcing import Held
 from benchkit.stage.latent import AMBIENT, RAIL_SHARE, STATED_AMBIENT_K, UNSTATED_AMBIENT_K, Coordinates
 from benchkit.stage.operate import solve_units
-from benchkit.stage.readouts import Linear, Powered, UnpoweredPoints
-from benchkit.stage.unpowered import OVER_RANGE, nominal_range, solve_unpowered
+from benchkit.stage.readouts import Powered
 from tests.stage.designs import breadboard, tern
-from tests.stage.unit_readings import fault_of
+from tests.stage.unit_readings import check_slopes, drawn_z, fault_of
 
 RAILS = ("rail+ 0", "rail- 0")
 COLD = Condition(positive_v=15.0, negative_v=-15.0, limit_a=0.5, trimmer="least", ambient_c=25.0)
@@ -29,16 +29,10 @@ FAULTS = (
     "healthy", "spreader.lower: short", "driver.upper: leaky", "stopper.upper.1: ten times high",
     "output.lower.1: base-emitter short", "emitter.upper.1: open", "spreader.upper: ten times low",
 )  # fmt: skip
-OHMS = ("ohm.rails", "ohm.spreader.lower", "ohm.emitter.upper.1", "diode.output.upper.1")
 
 
 def _faults(design: Design, names: tuple[str, ...] = FAULTS) -> list[Fault]:
     return [fault_of(name, design) for name in names]
-
-
-def _drawn(coordinates: Coordinates, units: int, seed: int = 3) -> Array:
-    z = np.random.default_rng(seed).standard_normal((len(coordinates), units))
-    return z.reshape(len(coordinates), units)
 
 
 def _forward(
@@ -65,7 +59,7 @@ def test_readings_are_those_of_the_forward_model(condition: Condition) -> None:
     design = tern()
     coordinates = Coordinates(design, RAILS)
     faults = _faults(design, FAULTS if condition is COLD else FAULTS[:4])
-    z = _drawn(coordinates, len(faults))
+    z = drawn_z(coordinates, len(faults))
     found = Powered(design, coordinates, condition, POINTS, "", RAILS).at(z, faults, effort="full")
     assert found.good.all()
     expected = _forward(design, condition, coordinates, z, faults)
@@ -79,7 +73,7 @@ def test_the_voltmeter_is_in_the_reading() -> None:
     condition = Condition(positive_v=10.0, negative_v=-10.0, limit_a=0.5, trimmer="least", ambient_c=25.0)
     coordinates = Coordinates(design, RAILS)
     faults = _faults(design, ("emitter.upper.1: open", "output.lower.1: missing", "spreader.transistor: open"))
-    z = _drawn(coordinates, len(faults), 8)
+    z = drawn_z(coordinates, len(faults), 8)
     points = ("emitter.upper.1", "output.lower.1.vbe", "spread", "output")
     found = Powered(design, coordinates, condition, points, "", RAILS).at(z, faults, effort="full")
     assert found.good.all()
@@ -92,16 +86,6 @@ def test_the_voltmeter_is_in_the_reading() -> None:
         np.testing.assert_allclose(found.f[:, column], expected[point], rtol=1e-3, atol=2e-6, err_msg=point)
 
 
-def _check_slopes(found: Linear, up: Linear, down: Linear, number: int, step: float, tolerance: float) -> None:
-    """Compare the slope by one coordinate, to a share of the largest slope that the reading has by any."""
-    assert up.good.all()
-    assert down.good.all()
-    largest = np.abs(found.slope).max(axis=2)
-    off = np.abs((up.f - down.f) / (2.0 * step) - found.slope[:, :, number])
-    worst = np.unravel_index((off / (tolerance * largest + 1e-6)).argmax(), off.shape)
-    assert (off <= tolerance * largest + 1e-6).all(), (number, worst, found.slope[worst][number], off[worst])
-
-
 @pytest.mark.parametrize("condition", [COLD, replace(WARM, trimmer="least")], ids=["cold", "warm"])
 def test_slopes_are_differences_of_full_solves(condition: Condition) -> None:
     """Warm with the loop from temperature to power and back closed."""
@@ -110,7 +94,7 @@ def test_slopes_are_differences_of_full_solves(condition: Condition) -> None:
     faults = _faults(design, FAULTS if condition is COLD else FAULTS[:4])
     points = POINTS if condition is COLD else (*POINTS, "heatsink")
     readout = Powered(design, coordinates, condition, points, "", RAILS)
-    z = 0.5 * _drawn(coordinates, len(faults), 5)
+    z = 0.5 * drawn_z(coordinates, len(faults), 5)
     found = readout.at(z, faults, effort="full")
     assert found.good.all()
     step = 0.02
@@ -121,7 +105,7 @@ def test_slopes_are_differences_of_full_solves(condition: Condition) -> None:
         moved[number] += step
         up = readout.at(moved, faults, found.solution, "full")
         moved[number] -= 2.0 * step
-        _check_slopes(found, up, readout.at(moved, faults, found.solution, "full"), number, step, 5e-3)
+        check_slopes(found, up, readout.at(moved, faults, found.solution, "full"), number, step, 5e-3)
 
 
 def test_closing_the_thermal_loop_matters() -> None:
@@ -148,67 +132,31 @@ def test_a_start_gives_the_same_readings() -> None:
     coordinates = Coordinates(design, RAILS)
     faults = _faults(design, ("healthy", "spreader.lower: short", "emitter.upper.1: open"))
     readout = Powered(design, coordinates, condition, ("spread", "output", "emitter.upper.1"), "", RAILS)
-    z = _drawn(coordinates, len(faults))
+    z = drawn_z(coordinates, len(faults))
     first = readout.at(z, faults)
     again = readout.at(z, faults, readout.at(0.5 * z, faults).solution)
     np.testing.assert_allclose(again.f, first.f, rtol=1e-7, atol=1e-8)
     np.testing.assert_allclose(again.slope, first.slope, rtol=1e-4, atol=1e-6)
 
 
-@pytest.fixture(scope="module")
-def cold_points() -> tuple[UnpoweredPoints, Coordinates, list[Fault]]:
-    design = tern()
-    coordinates = Coordinates(design)
-    names = (*FAULTS[:2], "emitter.upper.1: open", "output.upper.1: base-emitter short", "spreader.lower: open")
-    return UnpoweredPoints(design, coordinates, "least", 25.0, OHMS), coordinates, _faults(design, names)
-
-
-def test_unpowered_readings_are_those_of_the_forward_model(
-    cold_points: tuple[UnpoweredPoints, Coordinates, list[Fault]],
-) -> None:
-    readout, coordinates, faults = cold_points
-    design = readout.design
-    z = _drawn(coordinates, len(faults), 6)
-    found = readout.at(z, faults, effort="full")
+def test_each_unit_has_the_rails_that_it_is_held_at() -> None:
+    """As if they had been set so, in a stage without a servo; what is not held stands at its setting."""
+    design = breadboard()
+    condition = Condition(positive_v=10.0, negative_v=-10.0, limit_a=25.0, trimmer="least", ambient_c=25.0)
+    coordinates = Coordinates(design, RAILS)
+    points = ("rail+", "rail-", "rail+.current", "output", "spread", "emitter.upper.1")
+    names = ("healthy", "spreader.lower: short", "output.lower.1: missing", "emitter.upper.1: open")
+    faults = _faults(design, (*names, "output.upper.1: leaky"))
+    z = drawn_z(coordinates, len(faults))
+    rails_v = np.array([(1.9, -0.7), (1.3, -6.0), (0.002, -10.0), (4.0, np.nan), (np.nan, -3.0)])
+    readout = Powered(design, coordinates, Held(**vars(condition), held=(True, True)), points, "", RAILS)
+    found = readout.at(z, faults, effort="full", rails_v=rails_v)
     assert found.good.all()
-    room_c = 25.0 + STATED_AMBIENT_K * coordinates.row(z, AMBIENT)
-    for column, point in enumerate(OHMS):
-        condition = Unpowered(point=point, trimmer="least", ambient_c=25.0)
-        expected = solve_unpowered(design, coordinates.parameters(z), condition, faults, room_c=room_c).values
-        over = found.f[:, column] > readout.most[column]
-        assert over.tolist() == np.isinf(expected).tolist(), point
-        np.testing.assert_allclose(found.f[~over, column], expected[~over], rtol=1e-6, err_msg=point)
-        assert readout.most[column] == OVER_RANGE * nominal_range(design, point, "least").full_scale
-    assert (found.f > readout.most).any()
-
-
-def test_unpowered_slopes_are_differences_of_full_solves(
-    cold_points: tuple[UnpoweredPoints, Coordinates, list[Fault]],
-) -> None:
-    readout, coordinates, faults = cold_points
-    z = 0.5 * _drawn(coordinates, len(faults), 9)
-    found = readout.at(z, faults, effort="full")
-    step = 0.02
-    for name in ("spreader.lower", "emitter.upper.1", "output.upper.1.IS", AMBIENT):
-        number = coordinates.index[name]
-        moved = z.copy()
-        moved[number] += step
-        up = readout.at(moved, faults, found.solution, "full")
-        moved[number] -= 2.0 * step
-        _check_slopes(found, up, readout.at(moved, faults, found.solution, "full"), number, step, 1e-2)
-
-
-def test_slopes_that_are_known_are_kept_near_and_renewed_far_away(
-    cold_points: tuple[UnpoweredPoints, Coordinates, list[Fault]],
-) -> None:
-    readout, coordinates, faults = cold_points
-    z = np.zeros((len(coordinates), len(faults)))
-    known = readout.at(z, faults)
-    marked = np.full_like(known.slope, 7.0)
-    moved = z.copy()
-    moved[0, 0] += 3.0
-    found = readout.near(moved, faults, known.solution, "borrow", marked, z)
-    assert (found.slope[1:] == 7.0).all()
-    fresh = readout.at(moved, faults)
-    np.testing.assert_allclose(found.slope[0], fresh.slope[0], rtol=1e-4, atol=1e-4)
-    np.testing.assert_allclose(found.f, fresh.f, rtol=1e-7, atol=1e-9)
+    for unit, fault in enumerate(faults):
+        plus_v, minus_v = np.where(np.isnan(rails_v[unit]), (10.0, -10.0), rails_v[unit]).tolist()
+        own = Powered(
+            design, coordinates, replace(condition, positive_v=plus_v, negative_v=minus_v), points, "", RAILS
+        ).at(z[:, [unit]], [fault], effort="full")
+        np.testing.assert_allclose(found.f[unit], own.f[0], rtol=1e-5, atol=1e-8, err_msg=str(fault))
+        np.testing.assert_allclose(found.slope[unit], own.slope[0], rtol=1e-3, atol=1e-5, err_msg=str(fault))
+    assert np.ptp(found.f[:, 0]) > 5.0

@@ -1,4 +1,4 @@
-"""What fitted hypotheses have to say: information, what is alike, what stays unseen, evidence and probes."""
+"""What fitted hypotheses have to say: what is alike, what stays unseen, evidence and probes."""
 
 from __future__ import annotations
 
@@ -6,16 +6,14 @@ import math
 
 import numpy as np
 import pytest
-from scipy.integrate import quad
-from scipy.stats import norm
 
 from benchkit.stage.conditions import Condition, Unpowered
 from benchkit.stage.draws import Array
 from benchkit.stage.fitting import Data
-from benchkit.stage.hypotheses import Library, library
+from benchkit.stage.hypotheses import library
 from benchkit.stage.observations import Conditions, Observation
 from benchkit.stage.suspects import suspect
-from benchkit.stage.telling import BAYES_FACTOR, Report, information_bits, wider
+from benchkit.stage.telling import BAYES_FACTOR, Report
 from benchkit.stage.unit_model import layout_of
 from tests.stage.designs import breadboard
 from tests.stage.unit_readings import POINTS, fault_of, first_group, observed, powered
@@ -23,52 +21,6 @@ from tests.stage.unit_readings import POINTS, fault_of, first_group, observed, p
 COLD = Condition(positive_v=4.0, negative_v=-4.0, limit_a=0.1, trimmer="least", ambient_c=25.0)
 NAMES = tuple(point for point in POINTS if point != "driver.resistor")
 PLANTED = ("healthy", "spreader.lower: open", "output.upper.1: missing", "emitter.upper.1: ten times high")
-
-
-# -- information ------------------------------------------------------------------------------------------------------
-
-
-def _by_integration(p: list[float], mean: list[float], sd: list[float]) -> float:
-    """Mutual information in bits, straight from its definition."""
-
-    def integrand(x: float) -> float:
-        densities = [float(norm.pdf(x, m, s)) for m, s in zip(mean, sd, strict=True)]
-        mixture = sum(a * d for a, d in zip(p, densities, strict=True))
-        return sum(a * d * math.log2(d / mixture) for a, d in zip(p, densities, strict=True) if a * d > 0.0)
-
-    low = min(m - 9.0 * s for m, s in zip(mean, sd, strict=True))
-    high = max(m + 9.0 * s for m, s in zip(mean, sd, strict=True))
-    return float(quad(integrand, low, high, points=mean, limit=200)[0])
-
-
-@pytest.mark.parametrize(
-    ("p", "mean", "sd"),
-    [
-        ([0.5, 0.5], [0.0, 1.0], [1.0, 1.0]),
-        ([0.5, 0.5], [0.0, 3.0], [1.0, 1.0]),
-        ([0.9, 0.1], [0.0, 2.0], [1.0, 0.7]),
-        ([0.2, 0.3, 0.5], [0.0, 1.5, 4.0], [0.5, 1.0, 2.0]),
-        ([0.5, 0.5], [0.0, 1.0], [0.1, 1.0]),
-        ([0.5, 0.5], [0.0, 1.0], [1.0, 0.01]),
-        ([0.3, 0.3, 0.4], [0.0, 0.5, 2.0], [0.01, 1.0, 0.01]),
-    ],
-)
-def test_information_against_integration(p: list[float], mean: list[float], sd: list[float]) -> None:
-    found = information_bits(np.array(p), np.array(mean)[:, None], np.array(sd)[:, None])
-    assert float(found[0]) == pytest.approx(_by_integration(p, mean, sd), abs=0.01 if min(sd) > 0.05 else 0.06)
-
-
-def test_information_at_its_ends() -> None:
-    """Two equal hypotheses: far apart one bit, the same nothing; certainty leaves nothing to learn."""
-    half = np.array([0.5, 0.5])
-    mean, sd = np.array([[0.0, 1.0, -2.0], [1.0, 1.0, 2.0]]), np.array([[1e-4, 0.3, 1e-3], [2e-4, 0.3, 1e-3]])
-    np.testing.assert_allclose(information_bits(half, mean, sd), [1.0, 0.0, 1.0], atol=1e-6)
-    np.testing.assert_allclose(information_bits(np.array([1.0, 0.0]), mean, sd), 0.0, atol=1e-9)
-    four = information_bits(np.full(4, 0.25), np.arange(4.0)[:, None], np.full((4, 1), 1e-3))
-    np.testing.assert_allclose(four, [2.0], atol=1e-9)
-
-
-# -- reports ----------------------------------------------------------------------------------------------------------
 
 
 @pytest.fixture(scope="module")
@@ -202,12 +154,3 @@ def test_probes_are_of_the_candidates_and_worth_something(report: Report) -> Non
         assert (probe.conditions, probe.point) in report.candidates
         assert 0.0 < probe.gain_bits <= math.log2(len(report.lib.faults))
         assert " would read " in probe.why
-
-
-def test_a_wider_model_begins_with_what_was_read(report: Report) -> None:
-    lib: Library = report.lib
-    model = wider(lib, report.candidates)
-    assert wider(lib, report.candidates) is model
-    assert model.readings[: len(lib.model.readings)] == lib.model.readings
-    assert model.coordinates.names[: len(lib.model.coordinates)] == lib.model.coordinates.names
-    assert set(model.readings) == {*lib.model.readings, *report.candidates}

@@ -9,6 +9,7 @@ import pytest
 
 from benchkit.stage.conditions import Condition, Unpowered
 from benchkit.stage.faults import HEALTHY
+from benchkit.stage.forcing import Held
 from benchkit.stage.observations import Conditions
 from benchkit.stage.unit_model import DRIFT_SHARE, POSITION, Joint, UnitModel, answers, layout_of
 from tests.stage.designs import breadboard, tern
@@ -162,3 +163,19 @@ def test_what_the_model_answers() -> None:
     assert answers(tern(), replace(COLD, fuse_ohm=10.0), "rail+.drop")
     assert not answers(tern(), COLD, "output.ac")
     assert answers(tern(), Unpowered(point="ohm.rails"), "ohm.rails")
+
+
+def test_held_rails_belong_to_their_entry_of_the_layout() -> None:
+    """Units stand at rails of their own where a condition holds them, and at the settings under another one."""
+    held = Held(**vars(COLD), held=(True, False))
+    one = UnitModel(breadboard(), layout_of([((COLD,), "rail+"), ((held,), "rail+"), ((held,), "rail-")]))
+    rails_v = np.full((2, 2, 2), np.nan)
+    rails_v[:, 1, 0] = (1.5, 2.5)
+    z = np.zeros((len(one.coordinates), 2))
+    found = one.at(z, [HEALTHY, HEALTHY], rails_v=rails_v)
+    assert found.good.all()
+    np.testing.assert_allclose(found.f, [[4.0, 1.5, -4.0], [4.0, 2.5, -4.0]], rtol=1e-3)
+    # entries that were added to the layout have no held rails
+    added = UnitModel(breadboard(), layout_of([((held,), "rail+"), ((COLD,), "rail+")]))
+    found = added.at(z, [HEALTHY, HEALTHY], rails_v=rails_v[:, 1:])
+    np.testing.assert_allclose(found.f, [[1.5, 4.0], [2.5, 4.0]], rtol=1e-3)

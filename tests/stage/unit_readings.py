@@ -8,10 +8,12 @@ import numpy as np
 
 from benchkit.stage.conditions import Condition, TrimmerPosition, Unpowered
 from benchkit.stage.design import Design
-from benchkit.stage.draws import draw, seeds
+from benchkit.stage.draws import Array, draw, seeds
 from benchkit.stage.faults import HEALTHY, Fault, parse_fault
+from benchkit.stage.latent import Coordinates
 from benchkit.stage.observations import Observation
 from benchkit.stage.operate import solve_units
+from benchkit.stage.readouts import Linear
 from benchkit.stage.suspicion import Suspicion
 from benchkit.stage.unpowered import solve_unpowered
 
@@ -74,3 +76,18 @@ def first_group(said: Suspicion) -> set[Fault]:
 
 def probability_of(said: Suspicion, fault: Fault) -> float:
     return next(one.probability for one in said.suspects if one.fault == fault)
+
+
+def drawn_z(coordinates: Coordinates, units: int, seed: int = 3) -> Array:
+    """Units drawn in the space of coordinates, shape (coordinates, units)."""
+    return np.asarray(np.random.default_rng(seed).standard_normal((len(coordinates), units)))
+
+
+def check_slopes(found: Linear, up: Linear, down: Linear, number: int, step: float, tolerance: float) -> None:
+    """Compare the slope by one coordinate, to a share of the largest slope that the reading has by any."""
+    assert up.good.all()
+    assert down.good.all()
+    largest = np.abs(found.slope).max(axis=2)
+    off = np.abs((up.f - down.f) / (2.0 * step) - found.slope[:, :, number])
+    worst = np.unravel_index((off / (tolerance * largest + 1e-6)).argmax(), off.shape)
+    assert (off <= tolerance * largest + 1e-6).all(), (number, worst, found.slope[worst][number], off[worst])
