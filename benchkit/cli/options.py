@@ -56,6 +56,21 @@ def records_option(function: Callable[..., Any]) -> Callable[..., Any]:
                         show_default=True, metavar="DIR", help="Folder for the record.")(function)  # fmt: skip
 
 
+def channels_option(function: Callable[..., Any]) -> Callable[..., Any]:
+    """Add ``--channels``."""
+    said = "Channels of one unit, one walk and one record each: how many, or their names."
+    return click.option("--channels", default="", metavar="N|NAMES", help=said)(function)
+
+
+def hands_options(function: Callable[..., Any]) -> Callable[..., Any]:
+    """Add ``--no-hands-free`` and ``--no-bell``."""
+    free = click.option("--no-hands-free", "hands_free", is_flag=True, flag_value=False, default=True,
+                        help="No reading is taken without a key.")  # fmt: skip
+    bell = click.option("--no-bell", "bell", is_flag=True, flag_value=False, default=True,
+                        help="No bell when a reading was taken by itself.")  # fmt: skip
+    return free(bell(function))
+
+
 def visa_option(function: Callable[..., Any]) -> Callable[..., Any]:
     """Add ``--visa``."""
     said = "Another VISA library: a path, or what PyVISA takes, such as bench.yaml@sim."

@@ -7,7 +7,16 @@ from typing import Any
 
 import click
 
-from benchkit.cli.options import Command, design_option, examples, procedure_option, records_option, visa_option
+from benchkit.cli.options import (
+    Command,
+    channels_option,
+    design_option,
+    examples,
+    hands_options,
+    procedure_option,
+    records_option,
+    visa_option,
+)
 
 
 @click.command(
@@ -15,6 +24,7 @@ from benchkit.cli.options import Command, design_option, examples, procedure_opt
     epilog=examples(
         "benchkit rehearse",
         'benchkit rehearse --plain --stand-in --seed 7 --plant "emitter.upper.1: open"',
+        "benchkit rehearse --channels L,R",
     ),
 )
 @design_option
@@ -33,6 +43,8 @@ from benchkit.cli.options import Command, design_option, examples, procedure_opt
 @click.option("--wrong-end", is_flag=True, help="The stand-in turns the trimmer to the wrong end first.")
 @click.option("--units", type=click.IntRange(min=50), default=None, metavar="N", help="Units drawn for the limits.")
 @click.option("--unit", default="", metavar="SERIAL", help="Serial number for the record.")
+@channels_option
+@hands_options
 @click.option("--operator", default="", metavar="NAME", help="Who stands at the bench.")
 @click.option("--resume", "resume_path", type=click.Path(path_type=Path), default=None, metavar="RECORD",
               help="Go on with a rehearsal that was cut off.")  # fmt: skip
@@ -48,6 +60,7 @@ def rehearse(**options: Any) -> int:
     cls=Command,
     epilog=examples(
         "benchkit walk --design my-stage.toml --bench bench.toml",
+        "benchkit walk --design my-stage.toml --bench bench.toml --channels 2",
         "benchkit walk --resume records/T40-0017-a6ef3863-20260131T101500Z.jsonl",
     ),
 )
@@ -67,6 +80,8 @@ def rehearse(**options: Any) -> int:
 )
 @click.option("--units", type=click.IntRange(min=50), default=None, metavar="N", help="Units drawn for the limits.")
 @click.option("--unit", default="", metavar="SERIAL", help="Serial number of the unit.")
+@channels_option
+@hands_options
 @click.option("--operator", default="", metavar="NAME", help="Who stands at the bench.")
 @click.option("--resume", "resume_path", type=click.Path(path_type=Path), default=None, metavar="RECORD",
               help="Go on with a walk that was cut off.")  # fmt: skip

@@ -34,6 +34,7 @@ class WalkOpened(Event):
     supply: Literal["scpi", "manual"] = "scpi"
     meter: Literal["scpi", "manual"] = "scpi"
     cautions: tuple[str, ...] = ()
+    channel: str = ""
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -69,7 +70,7 @@ class ReadingTaken(Event):
     """One reading, by an instrument or typed in.
 
     A rail that was watched down says from where it fell (V), how long that took (s), and whether that was slower than
-    the design explains.
+    the design explains.  ``how`` says what took it: ``by key``, or by itself and why; "" where there was no choice.
     """
 
     name: ClassVar[str] = "reading taken"
@@ -78,6 +79,7 @@ class ReadingTaken(Event):
     fell_from_v: float | None = None
     fell_s: float | None = None
     fell_slowly: bool = False
+    how: str = ""
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -118,11 +120,14 @@ class Judged(Event):
 
 @dataclass(frozen=True, kw_only=True)
 class Decided(Event):
-    """What the operator chose after a failed, undecided, missing or odd result."""
+    """What the operator chose after a failed, undecided, missing or odd result.
+
+    ``trim again`` goes back to the trim that set what was read here.
+    """
 
     name: ClassVar[str] = "decided"
     item: str
-    choice: Literal["again", "go on", "make safe", "probe"]
+    choice: Literal["again", "go on", "make safe", "probe", "trim again"]
     reason: str = ""
 
 
@@ -146,11 +151,46 @@ class SupplyRefused(Event):
 
 @dataclass(frozen=True, kw_only=True)
 class Waited(Event):
-    """A dwell is over."""
+    """A dwell is over.
+
+    Parameters
+    ----------
+    item : str
+    seconds : float
+        How long it was.
+    settled : bool or None
+        Whether what was watched has come to rest; None where nothing was.
+    point, unit : str
+        What was watched; "" where nothing was.
+    final, low, high : float or None
+        Where it was predicted to come to rest, with the 95 % interval.
+    trend : tuple of (s, value)
+        How it went, thinned out; the first moment of the dwell is 0.
+    """
 
     name: ClassVar[str] = "waited"
     item: str
     seconds: float
+    settled: bool | None = None
+    point: str = ""
+    unit: str = ""
+    final: float | None = None
+    low: float | None = None
+    high: float | None = None
+    trend: tuple[tuple[float, float], ...] = ()
+
+
+@dataclass(frozen=True, kw_only=True)
+class PartsReplaced(Event):
+    """Which parts of the unit were replaced, as the operator named them; "" when none was.
+
+    ``semiconductors`` is true when a transistor or a diode is among them.
+    """
+
+    name: ClassVar[str] = "parts replaced"
+    item: str
+    parts: str
+    semiconductors: bool
 
 
 @dataclass(frozen=True, kw_only=True)

@@ -12,7 +12,9 @@ from benchkit.events import Event
 from benchkit.stage.conditions import Condition, Unpowered
 from benchkit.stage.observations import Conditions, Observation
 
-QuestionKind = Literal["tell", "confirm", "text", "hold", "probes", "decide", "trim", "by hand", "watch"]
+QuestionKind = Literal[
+    "tell", "confirm", "text", "hold", "probes", "decide", "trim", "by hand", "watch", "parts", "choose"
+]
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -23,16 +25,19 @@ class Choice:
     ----------
     value : str
         The word that comes back: ``done``, ``yes``, ``no``, ``again``, ``go on``, ``make safe``, ``probe``, ``take``,
-        ``end``, ``enough``, ``cancel``.
+        ``end``, ``enough``, ``cancel``, ``trim again``, ``semiconductors``, ``other parts``.
     label : str
         What the screen says.
     wants_reason : bool
         The operator has to say why.
+    wanted : str
+        What is to be typed, where that is no reason; "" where it is one.
     """
 
     value: str
     label: str
     wants_reason: bool = False
+    wanted: str = ""
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -47,7 +52,9 @@ class Question:
         ``tell`` (read, then done), ``confirm`` (yes or no), ``text`` (type something), ``hold`` (type yes),
         ``probes`` (place them, then done), ``decide`` (after a result that is no pass, or a reading that is odd),
         ``trim`` (turn the screw, then take), ``by hand`` (something that no instrument does: set the supply, switch
-        off), ``watch`` (something goes on by itself and ends by itself; all but the first answer end it early).
+        off), ``watch`` (something goes on by itself and ends by itself; all but the first answer end it early),
+        ``parts`` (which parts were replaced: ``no``, ``semiconductors`` or ``other parts``, with their names),
+        ``choose`` (whether a section that may be left out is done: ``no`` or ``yes``).
     title, do, why, caution, expected, red, black : str
         The words of the step; empty where there is nothing to say.
     point : str
@@ -174,13 +181,18 @@ class Suspect(Action):
 
 @dataclass(frozen=True, kw_only=True)
 class Read(Action):
-    """Take one reading.  Answer: ReadingTaken or ReadingMissed."""
+    """Take one reading.  Answer: ReadingTaken or ReadingMissed.
+
+    ``low`` and ``high`` are its limits, as far as they are known; whether it is taken does not depend on them.
+    """
 
     point: str
     function: str
     unit: str
     samples: int = 1
     settle_s: float = 0.0
+    low: float | None = None
+    high: float | None = None
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -249,15 +261,55 @@ class SwitchOff(Action):
 
 @dataclass(frozen=True, kw_only=True)
 class Wait(Action):
-    """Let time pass under watch.  Answer: Waited."""
+    """Let time pass under watch.  Answer: Waited.
+
+    Parameters
+    ----------
+    seconds : float
+        How long; at most so long where it ends once the reading has settled.
+    reason : str
+        The words for the screen.
+    point, function, unit : str
+        What is read meanwhile; "" where nothing is.
+    target, low, high : float or None
+        Where it should come to rest.
+    until_settled : bool
+        It ends once the reading has settled, but not before `least_s` (s).
+    drift_limit : float
+        A reading that moves faster than this (in its unit, per second) has not settled.
+    """
 
     seconds: float
     reason: str
+    point: str = ""
+    function: str = ""
+    unit: str = ""
+    target: float | None = None
+    low: float | None = None
+    high: float | None = None
+    until_settled: bool = False
+    least_s: float = 0.0
+    drift_limit: float = 0.0
 
 
 @dataclass(frozen=True, kw_only=True)
 class Trim(Action):
-    """Show the reading live while the screw is turned.  Answer: ReadingTaken or TrimEnded."""
+    """Show the reading live while the screw is turned.  Answer: ReadingTaken or TrimEnded.
+
+    Parameters
+    ----------
+    question : Question
+    point, function, unit : str
+        What is read.
+    target, low, high : float
+        Where it should come to.
+    samples : int
+        Readings that are averaged when it is taken.
+    share : float
+        Share of the design's target that is set.
+    condition : Condition or None
+        Where it happens, for the model's slope; the trimmer at the target.
+    """
 
     question: Question
     point: str
@@ -266,6 +318,9 @@ class Trim(Action):
     target: float
     low: float
     high: float
+    samples: int = 1
+    share: float = 1.0
+    condition: Condition | None = None
 
 
 @dataclass(frozen=True, kw_only=True)

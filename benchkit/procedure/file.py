@@ -14,7 +14,8 @@ Kinds of step
 ``limit check``  the limit tried into a short; the supply is off again afterwards
 ``hold``         a hold point: nobody passes without typing yes
 ``trim``         the trimmer turned until a drop is at a share of the target
-``wait``         time passes under watch
+``wait``         time passes under watch: a stated time, or until the reading that is clipped has come to rest
+``parts replaced``  which parts were replaced, asked for: sections that are there for that follow, or fall away
 ``clip``         off, rails seen low at the unit, probes clipped to a point, and power again after a hold point
 ``off``          the supply off, confirmed
 ``discharge``    after off: every rail, and rail to rail, watched down until it is low; a second look after a minute
@@ -23,12 +24,20 @@ Kinds of step
 
 A step that ``needs`` something falls away for a design that lacks it; so do, by themselves, steps that turn or check a
 trimmer that isn't there.
+
+Sections that may be left out
+-----------------------------
+``only_if``      done only when parts, or semiconductors, were replaced; or only when no semiconductor was
+``optional``     done only when the operator says so; the words of the question stand behind it
+Both end with the supply as it was at their beginning, so that what follows is the same either way.  What they proved
+counts for nothing in what follows, and the trimmer is anywhere after one that turned it.
+
+``as`` marks a section's readings as those that the unit was found with, or left with.
 """
 
 from __future__ import annotations
 
 import hashlib
-import re
 import tomllib
 from dataclasses import dataclass
 from pathlib import Path
@@ -36,45 +45,39 @@ from typing import Annotated, Any, Literal
 
 import pydantic
 
-from benchkit import quantities
-from benchkit.errors import BenchkitError, EntryError, FileError
-from benchkit.judge.rules import find_rule
+from benchkit.errors import BenchkitError, FileError
+from benchkit.procedure.file_words import (
+    check_placeholders,
+    check_point,
+    check_quantities,
+    check_rule,
+    time_s,
+)
 
 Kind = Literal[
     "tell", "confirm", "text", "measure", "rule", "supply", "limit check", "hold", "trim", "wait", "clip", "off",
-    "discharge", "series lamp",
+    "discharge", "series lamp", "parts replaced",
 ]  # fmt: skip
 
 Need = Literal["a trimmer", "two rails", "one rail"]
 """What a design has to have for a step to make sense."""
 
-Act = Literal["short the leads", "connect the unit", "trimmer to least"]
+Act = Literal[
+    "short the leads", "connect the unit", "trimmer to least", "connect the dummy load", "take the dummy load off",
+    "drive the stage", "drive at a third of full power", "stop driving",
+]  # fmt: skip
 """What a told step does to the bench, where the rest of the walk depends on it."""
+
+OnlyIf = Literal["parts replaced", "semiconductors replaced", "no semiconductors replaced"]
+"""What a section may depend on."""
+
 
 MADE_SAFE = "made-safe"
 """The section that every way out goes through; it is always the last but for the verdict."""
 
-PLACEHOLDERS = frozenset(
-    {
-        "turns", "less_bias_way", "more_bias_way", "limit", "rails", "target", "design", "arm", "discharge_time",
-        "both_rails", "Both_rails", "least_bias",
-    }
-)  # fmt: skip
-"""The words in braces that a step's text may hold; each stands for a fact of the design or of the step."""
 
 _Name = Annotated[str, pydantic.StringConstraints(pattern=r"^[a-z0-9][a-z0-9-]*$", max_length=40)]
 _Text = Annotated[str, pydantic.StringConstraints(strip_whitespace=True, min_length=1)]
-
-
-_SIDE = r"\.(upper|lower)"
-_PART = rf"(spreader\.transistor|(predriver|driver){_SIDE}|output{_SIDE}\.\d+)"
-_POINT = re.compile(
-    rf"rails|rail[+-](\.current|\.drop|\.ac)?|output(\.ac)?|spread({_SIDE})?|feed{_SIDE}|(pre)?driver\.resistor({_SIDE})?"
-    rf"|emitter\.(upper|lower|pair)\.\d+|stopper{_SIDE}\.\d+|{_PART}\.vbe|heatsink"
-    rf"|ohm\.(rails|rail[+-]|output|(spreader|feed){_SIDE}|(emitter|stopper){_SIDE}\.\d+|(pre)?driver\.resistor({_SIDE})?"
-    rf"|heatsink\.{_PART})|diode\.{_PART}"
-)
-"""Names of test points that some design has; a step may name one that this design lacks, but not one that none has."""
 
 
 class _Strict(pydantic.BaseModel):
@@ -116,6 +119,12 @@ class Step(_Strict):
     acceptance: Literal["guarded", "simple", "guarded rejection"] = "guarded"
     samples: int = pydantic.Field(default=1, ge=1, le=100)
     override: bool = True
+    until: Literal["settled"] | None = None
+    drift: str | None = None
+    at_least: str | None = None
+    state: Literal["driven"] | None = None
+    resistor: str | None = None
+    trim_again: _Name | None = None
 
     @pydantic.model_validator(mode="after")
     def _fits_its_kind(self) -> Step:
@@ -126,12 +135,15 @@ class Step(_Strict):
         for key, kinds in _ONLY_FOR.items():
             if key in self.model_fields_set and self.kind not in kinds:
                 raise ValueError(f"{key!r} belongs to steps of the kind {' or '.join(kinds)}, not {self.kind!r}")
+        watches = self.drift is not None or self.at_least is not None or (self.kind == "wait" and bool(self.points))
+        if self.until is None and watches:
+            raise ValueError("'drift', 'at_least' and 'points' belong to a wait with until = \"settled\"")
         for text in (self.title, self.do, self.why, self.caution, self.expected):
-            _check_placeholders(text)
+            check_placeholders(text)
         for name in self.points:
-            _check_point(name)
+            check_point(name)
         if self.rule is not None:
-            _check_rule(self.rule)
+            check_rule(self.rule)
         return self
 
 
@@ -148,10 +160,11 @@ _WANTS: dict[str, tuple[str, ...]] = {
     "text": ("do",),
     "hold": ("do",),
     "series lamp": ("do",),
+    "parts replaced": ("do",),
 }
 
 _ONLY_FOR: dict[str, tuple[str, ...]] = {
-    "points": ("measure", "trim", "clip"),
+    "points": ("measure", "trim", "clip", "wait"),
     "limits": ("measure",),
     "rule": ("rule",),
     "number": ("rule",),
@@ -161,7 +174,13 @@ _ONLY_FOR: dict[str, tuple[str, ...]] = {
     "share": ("trim",),
     "tolerance": ("trim",),
     "seconds": ("wait",),
-    "act": ("tell",),
+    "act": ("tell", "clip"),
+    "until": ("wait",),
+    "drift": ("wait",),
+    "at_least": ("wait",),
+    "state": ("measure",),
+    "resistor": ("measure", "trim"),
+    "trim_again": ("measure",),
     "samples": ("measure", "trim"),
     "settle": ("measure",),
     "acceptance": ("measure",),
@@ -175,16 +194,30 @@ class Section(_Strict):
     name: _Name
     title: _Text
     resume: bool = False
+    only_if: OnlyIf | None = None
+    optional: str = ""
+    as_: Literal["found", "left"] | None = pydantic.Field(default=None, alias="as")
     step: tuple[Step, ...] = pydantic.Field(min_length=1)
 
 
 class Head(_Strict):
-    """Who the procedure is."""
+    """Who the procedure is.
+
+    ``unknown_trimmer`` lets it give power with the trimmer wherever it was found: only behind checks for shorts, from
+    the lowest rails on, with a limit that the target needs and no more.
+    """
 
     format: Literal[1]
     name: _Text
     purpose: _Text
     cautions: tuple[str, ...] = ()
+    target_time: str | None = None
+    unknown_trimmer: bool = False
+
+    @property
+    def target_time_s(self) -> float | None:
+        """How long a channel should take (s); None where the file doesn't say."""
+        return None if self.target_time is None else time_s(self.target_time)
 
 
 class _Document(_Strict):
@@ -208,6 +241,13 @@ class _Document(_Strict):
             )
         if self.section[-1].step[0].kind != "off":
             raise ValueError(f"the section {MADE_SAFE!r} has to begin with a step of the kind 'off'")
+        for section in self.section:
+            apart = section.only_if is not None or section.optional
+            if section.only_if is not None and section.optional:
+                raise ValueError(f"the section {section.name!r} has only_if and optional: one of them")
+            if apart and (section.name == MADE_SAFE or section.resume):
+                raise ValueError(f"the section {section.name!r} can't be left out: the walk has to be able to go there")
+            check_placeholders(section.optional)
         if not any(section.resume for section in self.section):
             raise ValueError("no section has resume = true: a walk that was cut off would not know where to go on")
         return self
@@ -268,67 +308,15 @@ def parse_procedure(text: str, file: str) -> Procedure:
         sha256=hashlib.sha256(text.encode()).hexdigest(),
         file=file,
     )
+    if document.procedure.target_time is not None:
+        try:
+            time_s(document.procedure.target_time)
+        except BenchkitError as error:
+            raise FileError(file, "procedure target_time", error.came, error.expected) from None
     for section in procedure.sections:
         for step in section.step:
-            _check_quantities(file, section, step)
+            check_quantities(file, section, step)
     return procedure
-
-
-def _check_quantities(file: str, section: Section, step: Step) -> None:
-    checks: list[tuple[str, str | None, str]] = [("seconds", step.seconds, "s"), ("ramp", step.ramp, "s")]
-    if step.rails is not None and step.rails not in ("lowest", "full") and not step.rails.rstrip().endswith("%"):
-        checks.append(("rails", step.rails, "V"))
-    if step.settle is not None and step.settle != "the capacitors":
-        checks.append(("settle", step.settle, "s"))
-    if step.limit is not None and step.limit not in ("for least bias", "for the target"):
-        checks.append(("limit", step.limit, "A"))
-    for key in ("share", "tolerance"):
-        checks.append((key, getattr(step, key), "%"))
-    if step.rails is not None and step.rails.rstrip().endswith("%"):
-        checks.append(("rails", step.rails, "%"))
-    for key, value, unit in checks:
-        if value is None:
-            continue
-        where = f"section {section.name}, step {step.name}, {key}"
-        try:
-            number = quantities.parse(value, unit)
-        except BenchkitError as error:
-            raise FileError(file, where, error.came, error.expected) from None
-        least, most = _RANGES.get((key, unit), (0.0, None))
-        if number <= least or (most is not None and number > most):
-            expected = f"more than {least:g} {unit}" + ("" if most is None else f", at most {most:g} {unit}")
-            raise FileError(file, where, f"found {value!r}", expected)
-
-
-_RANGES: dict[tuple[str, str], tuple[float, float | None]] = {
-    ("share", "%"): (0.0, 100.0),
-    ("tolerance", "%"): (0.0, 100.0),
-    ("rails", "%"): (0.0, 100.0),
-}
-"""What a quantity has to be above and may reach at most; all others are above zero."""
-
-
-def _check_point(name: str) -> None:
-    plain = name.replace("ARM", "lower").replace("PART", "output.upper.1").replace("N", "1")
-    if not _POINT.fullmatch(plain):
-        raise ValueError(f"{name!r} is no test point; the names stand in the list of test points")
-
-
-def _check_rule(name: str) -> None:
-    try:
-        find_rule(name)
-    except EntryError as error:
-        raise ValueError(f"{error.came}; expected {error.expected}") from None
-
-
-def _check_placeholders(text: str) -> None:
-    rest = text
-    while "{" in rest:
-        _, _, rest = rest.partition("{")
-        word, closed, rest = rest.partition("}")
-        if not closed or word not in PLACEHOLDERS:
-            known = ", ".join(sorted(PLACEHOLDERS))
-            raise ValueError(f"the text holds {{{word}}}; the words in braces that are known are {known}")
 
 
 def _key(raw: dict[str, Any], location: tuple[int | str, ...]) -> str:

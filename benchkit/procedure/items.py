@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from dataclasses import dataclass, field
 from typing import Literal
 
@@ -49,6 +50,8 @@ ItemKind = Literal[
     "off",
     "discharge",
     "lamp",
+    "parts",
+    "choose",
 ]
 
 JUDGED_KINDS = frozenset(
@@ -70,6 +73,20 @@ RAIL_POINTS = ("rail+", "rail-", "rails")
 
 TRIMMED = "emitter.upper.1"
 """The reading that the model takes a trimmed stage's target from."""
+
+TELLS_TARGET = frozenset({TRIMMED, "emitter.lower.1", "emitter.pair.1"})
+"""Points whose reading says where a trim has brought the target; after a trim by any other the trimmer is anywhere."""
+
+DRIVE_SHARES: Mapping[str, float] = {
+    "drive the stage": 1.0 / 30.0,
+    "drive at a third of full power": 1.0 / 3.0,
+    "stop driving": 0.0,
+}
+"""Acts that drive the stage, each with its share of full power.
+
+At a thirtieth the mean current is well above the idle current of usual designs (our own figure); a third is common
+practice for a power soak.
+"""
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -93,6 +110,9 @@ class Item:
     held_under : Condition, Unpowered, Joined or None
         What the reading is taken under where its limits are stated: the trimmed drop, which tells how the unit was
         trimmed.
+    told_under : Condition, Unpowered, Joined or None
+        What the model takes the reading to be made under where that is laxer than `condition`: a stage whose reading
+        has come to rest is still on its way to warm, with its trimmer wherever that was turned to.
     warm : tuple of Condition
         For ``warm state``: under these the design has to come to rest.
     rule : str
@@ -102,7 +122,10 @@ class Item:
     positive_v, negative_v, limit_a, ramp_s : float
         For ``supply`` and ``limit check``.
     seconds : float
-        For ``wait``.
+        For ``wait``: how long, or how long at most.
+    until_settled : bool
+        For ``wait``: it ends once the reading of `point` has come to rest, after `least_s` (s) at the earliest, with a
+        drift below `drift_limit` (in the point's unit, per second).
     settle_s : float
         How long the reading has to come to rest after the probes are on, or the stage after its rails have moved.
     falls : Stored or None
@@ -124,6 +147,21 @@ class Item:
         A walk that was cut off while or after the unit had power goes on here.
     host : str
         For an extra reading: the plan's item that it is to explain.
+    share : float
+        For ``trim``: share of the design's target.
+    slope_under : Condition or None
+        For ``trim``: where it happens, for the model's slope; the trimmer is at the target there.
+    back : str
+        For ``measure``: the trim to which one may go back from here; "" for none.
+    driven : bool
+        The reading is taken with the stage driven: the model knows nothing of it.
+    only_if : str
+        The section is done only if: "parts replaced", "semiconductors replaced", "no semiconductors replaced"; "" for
+        always.
+    optional : bool
+        The section is done only when the operator has chosen it.
+    marked : str
+        The section's readings are those that the unit was "found" with, or "left" with; "" for neither.
     """
 
     id: str
@@ -139,6 +177,7 @@ class Item:
     condition: AnyCondition | None = None
     limits: Limits | None = None
     held_under: AnyCondition | None = None
+    told_under: AnyCondition | None = None
     warm: tuple[Condition, ...] = ()
     rule: str = ""
     number: float | None = None
@@ -148,6 +187,9 @@ class Item:
     limit_a: float = 0.0
     ramp_s: float = 0.0
     seconds: float = 0.0
+    until_settled: bool = False
+    least_s: float = 0.0
+    drift_limit: float = 0.0
     settle_s: float = 0.0
     falls: Stored | None = None
     samples: int = 1
@@ -159,6 +201,13 @@ class Item:
     raises: bool = False
     resume: bool = False
     host: str = ""
+    share: float = 1.0
+    slope_under: Condition | None = None
+    back: str = ""
+    driven: bool = False
+    only_if: str = ""
+    optional: bool = False
+    marked: Literal["", "found", "left"] = ""
 
 
 @dataclass(frozen=True, kw_only=True)

@@ -3,6 +3,8 @@
 Rules
 -----
 * Readings from before a resume don't count: trimmer and warmth may have changed since.
+* A reading with the trimmer wherever it was found counts until the screw is turned; a resistor or a junction that was
+  measured by itself goes on counting.
 * Of a point that was read more than once under the same conditions the latest reading counts, and it is not narrowed
   again: what has been read is known.
 * Nobody is sent to a live board for an extra reading where more than `HAZARDOUS_V` lies from rail to rail; there only
@@ -39,15 +41,37 @@ Named = tuple[AnyCondition, Point]
 
 def model_condition(item: Item) -> AnyCondition | None:
     """What the model takes an item's reading to be made under; None where it has nothing to do with it."""
-    return item.condition or item.held_under
+    return item.told_under or item.condition or item.held_under
 
 
 def readings_kept(plan: Plan, state: State) -> Iterator[tuple[Item, AnyCondition, Reading]]:
     """Yield every kept reading that the model can use."""
+    turned = _turned(plan, state)
+    places = {item.id: number for number, item in enumerate(plan.items)}
     for item in (*plan.items, *state.extras):
         reading, condition = state.readings.get(item.id), model_condition(item)
-        if item.kind == "measure" and reading is not None and condition is not None and item.id not in state.before:
-            yield item, condition, reading
+        if item.kind != "measure" or reading is None or condition is None or item.id in state.before:
+            continue
+        place = places.get(item.id, places.get(item.host, turned))
+        if place < turned and _tells_of_a_position(condition, reading.point):
+            continue
+        yield item, condition, reading
+
+
+def _turned(plan: Plan, state: State) -> int:
+    """Return the number of the item at which the trimmer was turned last; 0 while it stands as it was found."""
+    done = (
+        number
+        for number, item in enumerate(plan.items[: state.index + 1])
+        if (item.kind == "trim" or item.act == "trimmer to least") and not state.leaves_out(item)
+    )
+    return max(done, default=0)
+
+
+def _tells_of_a_position(condition: AnyCondition, point: str) -> bool:
+    """Whether a reading is one of a trimmer that nobody knew the position of."""
+    by_itself = point.startswith(("ohm.emitter.", "ohm.heatsink.", "diode."))
+    return not by_itself and any(one.trimmer == "unknown" for one in conditions_of(condition))
 
 
 def observations(plan: Plan, state: State) -> tuple[Observation, ...]:
@@ -79,12 +103,13 @@ def still_to_come(plan: Plan, state: State) -> tuple[tuple[Target, ...], tuple[T
     near: dict[tuple[str, str], Target] = {}
     later: dict[tuple[str, str], Target] = {}
     for item in plan.items[state.index :]:
-        if item.kind != "measure" or item.point is None or item.condition is None:
+        if item.kind != "measure" or item.point is None or item.condition is None or state.leaves_out(item):
             continue
-        key = condition_key(item.condition), item.point.name
+        under = item.told_under or item.condition
+        key = condition_key(under), item.point.name
         if key in read or key in near:
             continue
-        target = target_of(item.condition, item.point)
+        target = target_of(under, item.point)
         (near if item.section == section else later).setdefault(key, target)
     return tuple(near.values()), tuple(later.values())
 
@@ -140,7 +165,7 @@ def powered(plan: Plan, state: State) -> tuple[Named, ...]:
 
 def unpowered(plan: Plan, state: State) -> tuple[Named, ...]:
     """Return the unpowered points that have not been read with the trimmer where it is."""
-    trimmer = trimmer_now(plan, _came_to(plan, state))
+    trimmer = trimmer_now(plan, _came_to(plan, state), state)
     points = _unread(plan, state, Unpowered(point="ohm.rails", trimmer=trimmer))
     return tuple((Unpowered(point=point.name, trimmer=trimmer), point) for point in points if not point.powered)
 
@@ -183,9 +208,11 @@ def _around(plan: Plan, index: int) -> Iterator[int]:
         yield number
 
 
-def trimmer_now(plan: Plan, index: int) -> TrimmerPosition:
+def trimmer_now(plan: Plan, index: int, state: State | None = None) -> TrimmerPosition:
     """Return where the trimmer is, as far as the plan knows; a trimmed one is anywhere."""
     for item in reversed(plan.items[: index + 1]):
+        if state is not None and state.leaves_out(item):
+            continue
         if item.kind == "trim":
             return "unknown"
         if item.act == "trimmer to least":

@@ -119,6 +119,7 @@ class Modelling(Moves):
             state,
             results=results,
             before=state.before - {item.id},
+            outdated=state.outdated - {item.id},
             attempts={**state.attempts, item.id: state.attempts.get(item.id, 0) + 1},
             overrides={name: reason for name, reason in state.overrides.items() if name != item.id},
         )
@@ -153,6 +154,8 @@ class Modelling(Moves):
         wrong = event.odd or event.rare or (event.verdict == "fail" and explained)
         if explained and state.attempts[item.id] > 1 and (state.suspecting or state.suspicion is not None):
             wrong = True  # what was said of the earlier reading no longer holds
+        if self.may_trim_again(state, item, event):
+            wrong = False  # a bias that has moved is trimmed again before anything is suspected
         if item.kind == "supply" and event.verdict == "fail":
             wrong = True  # a rail in its limit is asked about like a reading that failed
         if state.extra or (wrong and not self.way_out(state)):

@@ -8,10 +8,8 @@ from __future__ import annotations
 from dataclasses import dataclass, replace
 from typing import Final
 
-from benchkit.events import Closed, Judged
+from benchkit.events import Judged
 from benchkit.judge.limits import Limits
-from benchkit.judge.rare import MOST_RARE
-from benchkit.judge.verdicts import worst
 from benchkit.procedure import knowledge, questions
 from benchkit.procedure.actions import (
     Action,
@@ -29,17 +27,18 @@ from benchkit.procedure.actions import (
     Wait,
     Write,
 )
-from benchkit.procedure.items import JUDGED_KINDS, RAIL_POINTS, Item, Joined, Plan, condition_key
+from benchkit.procedure.closing import closed_event, suspects_a_fault
+from benchkit.procedure.items import RAIL_POINTS, Item, Joined, Plan, condition_key
 from benchkit.procedure.sizing import protection_v
 from benchkit.procedure.state import State
 
 Step = tuple[State, tuple[Action, ...]]
 
-HEALTHY: Final = "healthy"
-"""The hypothesis that nothing is wrong, as the record calls it."""
-
 MOST_EXTRAS: Final = 3
 """Extra readings that are offered at one item."""
+
+MOST_TRIMS_AGAIN: Final = 3
+"""How often a walk goes back to a trim from one and the same check; our own figure."""
 
 LEAST_GAIN_BITS: Final = 0.02
 """A reading that is expected to tell less than this is not worth the way."""
@@ -74,7 +73,7 @@ class Moves:
         design = self.limits_for(state, item)
         if design is None or item.condition is None or item.point is None or item.limits is not None:
             return None
-        found = state.narrowed.get(condition_key(item.condition), {}).get(item.point.name)
+        found = state.narrowed.get(condition_key(item.told_under or item.condition), {}).get(item.point.name)
         return None if found is None else questions.unit_limits(found, design, item.allow)
 
     def offer(self, state: State) -> tuple[knowledge.Named, str] | None:
@@ -97,10 +96,14 @@ class Moves:
                 return found, probe.why
         return None
 
+    def may_trim_again(self, state: State, item: Item, result: Judged | None) -> bool:
+        """Whether the walk may go back from an item to the trim that set what was read there."""
+        wrong = result is not None and result.verdict != "pass" and not result.rare
+        return bool(item.back) and wrong and state.trims.get(item.id, 0) < MOST_TRIMS_AGAIN
+
     def suspects_a_fault(self, state: State) -> bool:
         """Whether the last answer about suspects puts something before healthy."""
-        suspicion = state.suspicion
-        return suspicion is not None and bool(suspicion.suspects) and suspicion.suspects[0].fault != HEALTHY
+        return suspects_a_fault(state)
 
     def asked_at(self, state: State) -> str:
         """The item that suspects are asked about: the present one; on the way out, the one that led there."""
@@ -113,6 +116,7 @@ class Moves:
     # -- entering items ----------------------------------------------------------------------------------------
 
     def _enter(self, state: State, index: int) -> Step:
+        index = self._done_from(state, index)
         state = replace(state, index=index, note="", missing="", extra="")
         if index >= len(self.plan):
             return self._close(state)
@@ -124,7 +128,7 @@ class Moves:
                 return replace(state, phase="connecting"), (Connect(item=item.id),)
             case "warm state":
                 return replace(state, phase="judging"), (CheckWarm(item=item.id, conditions=item.warm),)
-            case "tell" | "confirm" | "text" | "hold":
+            case "tell" | "confirm" | "text" | "hold" | "parts" | "choose":
                 return replace(state, phase="asking"), (Ask(item=item.id, question=questions.question_for(item)),)
             case "measure" | "discharge":
                 return self._enter_measure(state, item)
@@ -163,12 +167,13 @@ class Moves:
                     target=item.limits.nominal,
                     low=item.limits.low,
                     high=item.limits.high,
+                    samples=item.samples,
+                    share=item.share,
+                    condition=item.slope_under,
                 )
                 return replace(state, phase="trimming"), (trim,)
             case "wait":
-                words = f"{item.title}. {item.do} {item.caution}".strip()
-                wait = Wait(item=item.id, seconds=item.seconds, reason=words)
-                return replace(state, phase="waiting"), (wait,)
+                return replace(state, phase="waiting"), (_waiting(item),)
             case "off" if state.on_lamp:
                 return replace(state, phase="by hand off", unconfirmed=True), (
                     Ask(item=item.id, question=questions.lamp_off(item)),
@@ -176,6 +181,12 @@ class Moves:
             case "off":
                 reason = state.stopped or "a step of the procedure"
                 return replace(state, phase="switching off"), (SwitchOff(item=item.id, reason=reason),)
+
+    def _done_from(self, state: State, index: int) -> int:
+        """Return the first item from `index` on that is not left out."""
+        while index < len(self.plan) and state.leaves_out(self.plan.items[index]):
+            index += 1
+        return index
 
     def _enter_measure(self, state: State, item: Item) -> Step:
         assert item.point is not None
@@ -222,6 +233,7 @@ class Moves:
                 help=item.caution,
             )
             return replace(state, phase="reading"), (fall,)
+        limits = self.limits_for(state, item)
         read = Read(
             item=item.id,
             point=item.point.name,
@@ -229,6 +241,8 @@ class Moves:
             unit=item.point.unit,
             samples=item.samples,
             settle_s=item.settle_s,
+            low=None if limits is None else limits.low,
+            high=None if limits is None else limits.high,
         )
         return replace(state, phase="reading"), (read,)
 
@@ -236,9 +250,17 @@ class Moves:
         if state.stopped and self.item(state).kind == "off" and not self._may_hold_charge(state):
             return self._close(replace(state, index=len(self.plan)))
         asked: tuple[Action, ...] = ()
-        if state.index + 1 == self.plan.made_safe and not state.stopped and any(one.rare for one in state.results):
+        following = next(
+            (
+                number
+                for number in range(state.index + 1, len(self.plan))
+                if not state.leaves_out(self.plan.items[number])
+            ),
+            len(self.plan),
+        )
+        if following == self.plan.made_safe and not state.stopped and any(one.rare for one in state.results):
             state, asked = self._ask_suspects(state)  # all readings there are decide about the rare ones
-        after, actions = self._enter(state, state.index + 1)
+        after, actions = self._enter(state, following)
         return after, (*actions, *asked)
 
     def _may_hold_charge(self, state: State) -> bool:
@@ -255,41 +277,8 @@ class Moves:
 
     def _close(self, state: State) -> Step:
         state = replace(state, phase="closing", extra="")
-        rare = self._rare_in_a_good_unit(state)
-        verdict = worst(["pass" if result in rare else result.verdict for result in state.results])
-        why = ""
-        if verdict == "pass" and rare:
-            names = " and ".join(result.subject for result in rare)
-            why = (
-                f"{names} read just outside the limits of 99.73 % of good units; all readings together fit a good one."
-            )
-        if verdict == "pass" and any(self._is_open(state, item) for item in self.plan.items):
-            verdict, why = "undecided", "A reading that was asked for is missing."
-        if state.stopped and verdict == "pass":
-            verdict = "undecided"
-        if verdict == "pass" and state.suspecting:
-            verdict, why = "undecided", "The model had not said yet what would explain a reading that was odd."
-        if verdict == "pass" and self.suspects_a_fault(state):
-            assert state.suspicion is not None
-            first = state.suspicion.suspects[0].fault
-            verdict, why = "undecided", f"Every reading passed, but together they fit {first} better than a good unit."
-        status = state.stop_status or (0 if verdict == "pass" else 1)
-        closed = Closed(count=state.count, verdict=verdict, stopped=state.stopped, exit_status=status, why=why)
+        closed = closed_event(self.plan, state)
         return state, (Write(item="", event=closed),)
-
-    def _rare_in_a_good_unit(self, state: State) -> tuple[Judged, ...]:
-        """The rare readings, when all readings together fit a good unit and there are few enough; else none."""
-        rare = tuple(result for result in state.results if result.rare)
-        suspicion = state.suspicion
-        if suspicion is None or state.suspecting or not suspicion.explained or self.suspects_a_fault(state):
-            return ()
-        return rare if len(rare) <= MOST_RARE else ()
-
-    def _is_open(self, state: State, item: Item) -> bool:
-        """An item that wants a result and has none, or only one from before that was passed over since."""
-        if item.kind not in JUDGED_KINDS:
-            return False
-        return state.result(item.id) is None or (item.id in state.before and item.id in state.overrides)
 
     def _make_safe(self, state: State, reason: str, status: int) -> Step:
         if not state.stopped:
@@ -309,8 +298,9 @@ class Moves:
         """Let the operator choose what to do about the plan's item; `problem` is why it has no result."""
         item, offer = self.host(state), self.offer(state)
         question = questions.deciding(
-            item, result, problem, way_out=self.way_out(state), offer=None if offer is None else offer[0][1]
-        )
+            item, result, problem, way_out=self.way_out(state), offer=None if offer is None else offer[0][1],
+            trim_again=self.may_trim_again(state, item, result),
+        )  # fmt: skip
         state = replace(state, phase="deciding", note=problem, missing="" if result is not None else problem)
         return state, (Ask(item=item.id, question=question),)
 
@@ -344,6 +334,20 @@ class Moves:
         item, offer = self.host(state), self.offer(state)
         question = questions.offering(item, None if offer is None else offer[0][1])
         return replace(state, phase="offering", extra=""), (Ask(item=item.id, question=question),)
+
+
+def _waiting(item: Item) -> Wait:
+    words = f"{item.title}. {item.do} {item.caution}".strip()
+    wait = Wait(item=item.id, seconds=item.seconds, reason=words)
+    if not item.until_settled:
+        return wait
+    assert item.point is not None
+    assert item.limits is not None
+    return replace(
+        wait, point=item.point.name, function=item.point.function, unit=item.point.unit, target=item.limits.nominal,
+        low=item.limits.low, high=item.limits.high, until_settled=True, least_s=item.least_s,
+        drift_limit=item.drift_limit,
+    )  # fmt: skip
 
 
 def _protection(state: State, item: Item) -> tuple[float, float]:

@@ -11,35 +11,33 @@ from typing import Any, Literal
 from benchkit import quantities
 from benchkit.errors import EntryError, FileError
 from benchkit.judge.limits import Limits
+from benchkit.procedure.bias_items import BiasItems
 from benchkit.procedure.file import PairText, Procedure, Section, Step
 from benchkit.procedure.items import (
     MOST_OFFSET_V,
     NEVER_PASSED_OVER,
-    TRIMMED,
     AnyCondition,
     Item,
     ItemKind,
     Joined,
 )
-from benchkit.procedure.power_off import PowerOff
 from benchkit.procedure.sizing import (
     capacitors_settle_s,
-    charging_s,
-    rails_text,
-    supply_limit_a,
     with_room,
 )
+from benchkit.procedure.supply_items import SupplyItems
 from benchkit.procedure.wording import fill, words_of
 from benchkit.stage.conditions import Condition, Unpowered
-from benchkit.stage.design import Design, target_drop_v
+from benchkit.stage.design import Design
 from benchkit.stage.points import Point, points_of
 from benchkit.stage.reach import least_regulating_rails
 
 
-class Planner(PowerOff):
+class Planner(SupplyItems, BiasItems):
     """Follows rails, limit, trimmer and warmth from step to step."""
 
     def __init__(self, procedure: Procedure, design: Design) -> None:
+        super().__init__()
         self.procedure = procedure
         self.design = design
         self.points = {point.name: point for point in points_of(design)}
@@ -65,11 +63,51 @@ class Planner(PowerOff):
         for section in self.procedure.sections:
             self.section = section
             first = True
-            for step in filter(self._makes_sense, section.step):
-                for item in self._step(step):
-                    yield replace(item, resume=section.resume and first)
-                    first = False
-                    self.ready_hold = item.kind == "hold"
+            for item in self._section(section):
+                yield replace(
+                    item,
+                    resume=section.resume and first,
+                    only_if=section.only_if or "",
+                    optional=bool(section.optional),
+                    marked=section.as_ or "",
+                )
+                first = False
+                self.ready_hold = item.kind == "hold"
+
+    def _section(self, section: Section) -> Iterator[Item]:
+        steps = tuple(filter(self._makes_sense, section.step))
+        self.apart = section.only_if is not None or bool(section.optional)
+        if not self.apart:
+            for step in steps:
+                yield from self._step(step)
+            return
+        if not steps:
+            return
+        supply, trimmer, watched, self.ready_hold = self.supply_now, self.trimmer, self.watched, False
+        if section.optional:
+            yield Item(
+                id=f"{section.name}.choose",
+                section=section.name,
+                section_title=section.title,
+                kind="choose",
+                title=section.title,
+                do=fill(section.optional, self.words({})),
+                why="It can be left out: the record then says that it was.",
+                powered=self.on,
+            )
+        for step in steps:
+            yield from self._step(step)
+        if self.supply_now != supply:
+            raise self._refuse(
+                steps[-1],
+                "leaves the supply otherwise than it was before the section, which may be left out",
+                "the same rails and the same limit, or off",
+            )
+        self.ready_hold = False
+        if self.trimmer != trimmer:
+            self.trimmer = "unknown"
+        if self.watched != watched:
+            self.watched = None
 
     def _step(self, step: Step) -> Iterator[Item]:
         match step.kind:
@@ -92,7 +130,13 @@ class Planner(PowerOff):
             case "trim":
                 yield from self._trim(step)
             case "wait":
-                yield self._item(step, "wait", seconds=quantities.parse(step.seconds or "", "s"))
+                yield self._wait(step)
+            case "parts replaced":
+                if self.on:
+                    raise self._refuse(
+                        step, "asks for parts that were replaced while the supply is on", "off before it"
+                    )
+                yield self._item(step, "parts")
             case "clip":
                 yield from self._clip(step)
             case "off":
@@ -143,16 +187,18 @@ class Planner(PowerOff):
             raise self._refuse(step, f"judges {point.name} by limits of its own", "the model's limits, as they are")
         if isinstance(step.limits, PairText):
             limits = self._stated(step, step.limits, point)
+        elif step.state == "driven":
+            raise self._refuse(step, "judges a driven stage by the model or the target", "stated limits")
         elif step.limits == "the target":
-            limits = self._target_limits(1.0, None)
-            if self.on and self.trimmer == "target" and point.name == TRIMMED:
+            limits = self._target(step, point, share=1.0, when=step.when)
+            if self.on and self.trimmer == "target" and point.name == self.trimmed:
                 held_under = self._powered_condition(step)
         elif point.powered:
             if not self.on:
                 raise self._refuse(step, f"reads {point.name} against the model while the supply is off")
             condition = self._powered_condition(step)
-            if self.trimmer == "target" and point.name == TRIMMED:
-                held_under, condition, limits = condition, None, self._target_limits(self.share, None)
+            if self.trimmer == "target" and point.name == self.trimmed:
+                held_under, condition, limits = condition, None, self._target(step, point, share=self.share)
         else:
             if self.on:
                 raise self._refuse(step, f"reads {point.name} while the supply is on")
@@ -165,12 +211,15 @@ class Planner(PowerOff):
             point=point,
             condition=condition,
             held_under=held_under,
+            told_under=self._told_under() if self.soaked and (condition or held_under) and point.powered else None,
             limits=limits,
             samples=step.samples,
             settle_s=self._settle_s(step),
             acceptance=step.acceptance,
             allow=self._allow(step, point),
             trimmer_end=trimmer_end,
+            driven=step.state == "driven",
+            back=self._back(step),
             may_go_on=step.override and not trimmer_end and point.name not in NEVER_PASSED_OVER,
         )
 
@@ -195,18 +244,27 @@ class Planner(PowerOff):
 
     def _powered_condition(self, step: Step) -> Joined | Condition:
         cold = Condition(
-            positive_v=self.positive_v, negative_v=self.negative_v, limit_a=self.limit_a, trimmer=self.trimmer
-        )
+            positive_v=self.positive_v, negative_v=self.negative_v, limit_a=self.limit_a, trimmer=self.trimmer,
+            fuse_ohm=self._fuse_ohm(step),
+        )  # fmt: skip
         if self.trimmer == "target":
             around = self.design.target.tolerance
             shares = (self.share, self.share * (1.0 - around), self.share * (1.0 + around))
             when = step.when or "warm"
             trimmed = tuple(replace(cold, target_share=share, when=when) for share in shares)
+            if step.when is None and self.soaked:
+                as_cold = tuple(replace(one, when="cold") for one in trimmed[1:])
+                return Joined(conditions=(*trimmed, *as_cold), words=f"±{around:.0%}, cold to warm")
             return Joined(conditions=trimmed, words=f"±{around:.0%}, {when}")
         warm = replace(cold, when="warm")
         if step.when is not None:
             return warm if step.when == "warm" else cold
         return Joined(conditions=(cold, warm), words="cold to warm")
+
+    def _told_under(self) -> Joined:
+        """What the model takes a reading to be made under once the stage's reading has come to rest."""
+        cold = Condition(positive_v=self.positive_v, negative_v=self.negative_v, limit_a=self.limit_a)
+        return Joined(conditions=(cold, replace(cold, when="warm")), words="cold to warm")
 
     def _settle_s(self, step: Step) -> float:
         if step.settle is None:
@@ -214,82 +272,6 @@ class Planner(PowerOff):
         if step.settle != "the capacitors":
             return quantities.parse(step.settle, "s")
         return capacitors_settle_s(self.design)
-
-    def _supply(self, step: Step) -> Iterator[Item]:
-        self._not_on_lamp(step, "sets a supply")
-        positive_v, negative_v = self._rails(step)
-        limit_a = self._limit(step, positive_v, negative_v)
-        if self.on and (positive_v, negative_v) == (self.positive_v, self.negative_v) and limit_a == self.limit_a:
-            return
-        if self.on and positive_v < self.positive_v == self.lowest[0]:
-            return  # on the way up: the lowest rails at which this stage regulates are above this step already
-        yield from self._power(step, "", positive_v, negative_v, limit_a, quantities.parse(step.ramp or "1 s", "s"))
-
-    def _power(
-        self, step: Step, suffix: str, positive_v: float, negative_v: float, limit_a: float, ramp_s: float
-    ) -> Iterator[Item]:
-        raises = not self.on or positive_v > self.positive_v or negative_v < self.negative_v or limit_a > self.limit_a
-        words = {"positive_v": positive_v, "negative_v": negative_v, "limit_a": limit_a}
-        if raises and not self.ready_hold:
-            rails = rails_text(positive_v, negative_v)
-            title = f"Power on again, {rails}?" if suffix else f"Go to {rails}?"
-            if self.on and (positive_v, negative_v) == (self.positive_v, self.negative_v):
-                title = f"Raise the limit to {quantities.show(limit_a, 'A')}?"
-            yield self._item(
-                step,
-                "hold",
-                f"{suffix}.hold",
-                title=title,
-                do=f"Rails {rails}, limit {quantities.show(limit_a, 'A')}. Hands off the circuit; watch the current.",
-                why="Voltage and limit rise only after a plain yes.",
-            )
-        rise_v = positive_v - (self.positive_v if self.on else 0.0)
-        self.positive_v, self.negative_v, self.limit_a, self.on = positive_v, negative_v, limit_a, True
-        yield self._item(
-            step,
-            "supply",
-            f"{suffix}.power" if suffix else "",
-            ramp_s=max(ramp_s, charging_s(self.design, rise_v, limit_a)),
-            settle_s=max(0.5, self.design.feed.settles_after_s or 0.0),
-            raises=raises,
-            **({"title": f"Rails at {rails_text(positive_v, negative_v)} again"} if suffix else {}),
-            may_go_on=False,
-            **words,
-        )
-
-    def _limit_check(self, step: Step) -> Iterator[Item]:
-        self._not_on_lamp(step, "tries the limit")
-        if self.on:
-            raise self._refuse(step, "tries the limit while the unit has power")
-        positive_v, negative_v = self._rails(step)
-        limit_a = self._limit(step, *self.lowest)
-        words: dict[str, Any] = {"positive_v": positive_v, "negative_v": negative_v, "limit_a": limit_a}
-        yield self._item(
-            step, "hold", ".hold", title="Try the limit?", why="Current flows into the short from here.", **words
-        )
-        limits = Limits(0.9 * limit_a, 1.1 * limit_a, limit_a, "A", "the limit that was set, ±10 % (common practice)")
-        yield self._item(step, "limit check", "", limits=limits, raises=True, may_go_on=False, powered=True, **words)
-        yield self._item(
-            step, "off", ".off", title="Supply off again", do="The supply is switched off before the unit is connected."
-        )
-
-    def _trim(self, step: Step) -> Iterator[Item]:
-        self._not_on_lamp(step, "trims")
-        if not self.on:
-            raise self._refuse(step, "trims while the supply is off")
-        share = quantities.parse(step.share or "100 %", "%") / 100.0
-        tolerance = None if step.tolerance is None else quantities.parse(step.tolerance, "%") / 100.0
-        for name in step.points:
-            for point in self._expand(name):
-                yield self._item(
-                    step,
-                    "trim",
-                    f".{point.name}",
-                    point=point,
-                    limits=self._target_limits(share, tolerance),
-                    samples=step.samples,
-                )
-        self.trimmer, self.share = "target", share
 
     def _expand(self, name: str) -> tuple[Point, ...]:
         trimmer = self.design.spreader.trimmer
@@ -327,48 +309,6 @@ class Planner(PowerOff):
         if not (math.isfinite(number) and number > 0.0):
             raise self._refuse(step, f"has the number {step.number!r}", "a number above zero, such as 10, 1 % or 50 mV")
         return number
-
-    def _rails(self, step: Step) -> tuple[float, float]:
-        rails = self.design.rails
-        text = (step.rails or "").strip()
-        if text == "lowest":
-            return self.lowest
-        if text == "full":
-            return rails.positive_v, rails.negative_v
-        if text.endswith("%"):
-            share = quantities.parse(text, "%") / 100.0
-            return share * rails.positive_v, share * rails.negative_v
-        volts = quantities.parse(text, "V")
-        most_v = min(rails.positive_v, -rails.negative_v or rails.positive_v)
-        if volts > most_v:
-            full = rails_text(rails.positive_v, rails.negative_v)
-            raise self._refuse(step, f"sets the rails to {text}", f"no more than the design's {full}")
-        return volts, -volts if rails.negative_v else 0.0
-
-    def _limit(self, step: Step, positive_v: float, negative_v: float) -> float:
-        full = self.design.rails
-        if step.limit == "for least bias":
-            return self.least_bias_limit_a()
-        if step.limit == "for the target":
-            return supply_limit_a(self.design, positive_v, negative_v, share=1.0)
-        limit_a = quantities.parse(step.limit or "", "A")
-        most_a = 2.0 * supply_limit_a(self.design, full.positive_v, full.negative_v, share=1.0)
-        if limit_a > most_a:
-            most = quantities.show(most_a, "A", 3)
-            raise self._refuse(step, f"sets a limit of {step.limit}", f"{most} or less, twice what the target needs")
-        return limit_a
-
-    def _target_limits(self, share: float, tolerance: float | None) -> Limits:
-        nominal_v = share * target_drop_v(self.design)
-        width = self.design.target.tolerance if tolerance is None else tolerance
-        source = "the target of the design" if share == 1.0 else f"{share:.0%} of the target"
-        return Limits(nominal_v * (1 - width), nominal_v * (1 + width), nominal_v, "V", source)
-
-    def least_bias_limit_a(self) -> float:
-        """Limit (A) of the first power-on; without a trimmer the full bias flows from the first moment."""
-        full = self.design.rails
-        share = 1.0 if self.design.spreader.trimmer is None else 0.0
-        return supply_limit_a(self.design, full.positive_v, full.negative_v, share=share)
 
     def words(self, given: Mapping[str, Any]) -> dict[str, str]:
         """What the words in braces stand for, at this place of the plan."""

@@ -47,6 +47,7 @@ class PowerOff:
     on: bool
     lamp: bool
     ready_hold: bool
+    watched: Point | None = None
 
     @abstractmethod
     def _item(self, step: Step, kind: ItemKind, suffix: str = "", **more: Any) -> Item: ...
@@ -153,7 +154,8 @@ class PowerOff:
                 why=f"Then the rails fall: {discharge_text(self.design, back[0], back[1])}.",
             )
             yield from self._rails_down(step, stored(self.design, back[0], back[1]), may_go_on=False, clip=True)
-        yield self._item(step, "tell", ".clip", point=point)
+        yield self._item(step, "tell", ".clip", point=point, act=step.act or "")
+        self.watched = point
         if was_on:
             self.ready_hold = False
             yield from self._power(step, ".again", *back, ramp_s=3.0)

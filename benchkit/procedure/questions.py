@@ -21,6 +21,22 @@ LEAVE = Choice(value="go on", label="Leave it, go on with making safe")
 STOP = Choice(value="make safe", label="Make safe and stop")
 WATCH = Choice(value="done", label="Go on watching")
 ENOUGH = Choice(value="enough", label="Take it as it reads now")
+TRIM_AGAIN = Choice(value="trim again", label="Trim again")
+PASS_OVER = Choice(value="no", label="Pass over it")
+DO_IT = Choice(value="yes", label="Do it")
+NOTHING_REPLACED = Choice(value="no", label="Nothing was replaced")
+SEMICONDUCTORS = Choice(
+    value="semiconductors",
+    label="Transistors or diodes, named next",
+    wants_reason=True,
+    wanted="all the parts that were replaced",
+)
+OTHER_PARTS = Choice(
+    value="other parts",
+    label="Other parts only, named next",
+    wants_reason=True,
+    wanted="all the parts that were replaced",
+)
 TAKE = Choice(value="take", label="Take this reading")
 END = Choice(value="end", label="It can't be reached")
 
@@ -36,6 +52,8 @@ def question_for(item: Item) -> Question:
         "text": (DONE, STOP),
         "hold": (YES, STOP),
         "lamp": (YES, NO, STOP),
+        "parts": (NOTHING_REPLACED, SEMICONDUCTORS, OTHER_PARTS, STOP),
+        "choose": (PASS_OVER, DO_IT, STOP),
     }[item.kind]
     point = item.point
     return Question(
@@ -108,11 +126,20 @@ def trimming(item: Item) -> Question:
     )
 
 
-def deciding(item: Item, result: Judged | None, problem: str, *, way_out: bool, offer: Point | None = None) -> Question:
+def deciding(
+    item: Item,
+    result: Judged | None,
+    problem: str,
+    *,
+    way_out: bool,
+    offer: Point | None = None,
+    trim_again: bool = False,
+) -> Question:
     """What to do after a result that is no pass, an odd reading, or no result at all.
 
     `offer` is a test point that would tell more; it is one answer more, the
-    last: the numbers and places of the others stay when it comes.
+    last: the numbers and places of the others stay when it comes.  With `trim_again` the usual answer is to go back
+    to the trim.
     """
     odd = result is not None and result.verdict == "pass"
     rare = result is not None and result.rare
@@ -124,6 +151,8 @@ def deciding(item: Item, result: Judged | None, problem: str, *, way_out: bool, 
     else:
         what, why = f"{item.title}: there is no result.", problem
     choices = [ON, AGAIN] if odd else [AGAIN, ON] if rare else [AGAIN]
+    if trim_again:
+        choices.insert(0, TRIM_AGAIN)
     if not (odd or rare) and (item.may_go_on or way_out):
         choices.append(GO_ON)
     if not way_out:

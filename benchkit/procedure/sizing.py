@@ -31,6 +31,33 @@ def supply_limit_a(design: Design, positive_v: float, negative_v: float, *, shar
     return math.ceil((1.5 * sum(draws) + 0.01) / 0.005 - 1e-9) * 0.005
 
 
+LOAD_OHM = 8.0
+"""The dummy load that drive and limits are worked out for."""
+
+HEADROOM_V = 3.0
+"""Between a rail and the highest output of a driven stage; our own figure, of the size of two junctions and a feed."""
+
+
+def drive_peak_v(design: Design, share: float) -> float:
+    """Peak (V) at the output that makes `share` of full power in the dummy load; it judges nothing."""
+    rails = design.rails
+    rest_v = design.rest_v(rails.positive_v, rails.negative_v)
+    swing_v = min(rails.positive_v - rest_v, rest_v - rails.negative_v)
+    path_ohm = LOAD_OHM + design.output.emitter_resistor.value / design.output.pairs
+    return math.sqrt(share) * max(swing_v - HEADROOM_V, 0.0) * LOAD_OHM / path_ohm
+
+
+def drive_limit_a(design: Design, share: float) -> float:
+    """Current limit per rail (A) for a stage that is driven to a share of full power into the dummy load.
+
+    What the target needs, and a tenth more than the peak of the sine: a supply without large capacitors behind it has
+    to give the peaks too.  Rounded up to 5 mA.
+    """
+    full = design.rails
+    idle_a = supply_limit_a(design, full.positive_v, full.negative_v, share=1.0)
+    return math.ceil((idle_a + 1.1 * drive_peak_v(design, share) / LOAD_OHM) / 0.005 - 1e-9) * 0.005
+
+
 def discharge_s(design: Design, from_v: float, to_v: float = RAIL_LOW_V) -> float | None:
     """Time (s) for a rail to fall through the bleed resistor, t = R·C·ln(V0/V); None without a bleed resistor."""
     return stored(design, from_v, -from_v).fall_s(from_v, to_v)

@@ -66,7 +66,17 @@ class State:
     overrides : mapping
         Item's id to the reason with which a result was passed over.
     before : frozenset of str
-        Items whose results are from before the walk was resumed.
+        Items whose results are from before the walk was resumed, or before parts were replaced.
+    outdated : frozenset of str
+        Those of them that were read before parts were replaced: they tell of another unit than the present one.
+    parts : str
+        Which parts were replaced, in the operator's words; "" for none.
+    semiconductors : bool
+        Whether semiconductors are among them.
+    chosen : frozenset of str
+        Sections that may be left out and that the operator wants done.
+    trims : mapping
+        Item's id to how often the walk went back from it to a trim.
     extras : tuple of Item
         Extra readings that were offered and taken up, in their order; they are items like the plan's.
     extra : str
@@ -78,7 +88,7 @@ class State:
     offers_left : bool
         On the way out, the operator took no more extra readings.
     resumed_at : int
-        The line at which the walk was last resumed; what the model was asked before that lapses.
+        The line at which the walk was last resumed, or parts were replaced; what the model was asked before lapses.
     probes : str
         The test point on which the probes are, "" when not known.
     energised : {"off", "on", "unknown"}
@@ -127,6 +137,11 @@ class State:
     attempts: Mapping[str, int] = field(default_factory=dict)
     overrides: Mapping[str, str] = field(default_factory=dict)
     before: frozenset[str] = frozenset()
+    outdated: frozenset[str] = frozenset()
+    parts: str = ""
+    semiconductors: bool = False
+    chosen: frozenset[str] = frozenset()
+    trims: Mapping[str, int] = field(default_factory=dict)
     extras: tuple[Item, ...] = ()
     extra: str = ""
     suspecting: int = 0
@@ -153,3 +168,16 @@ class State:
     def result(self, item: str) -> Judged | None:
         """The standing result of an item."""
         return next((result for result in self.results if result.item == item), None)
+
+    def leaves_out(self, item: Item) -> bool:
+        """Whether an item belongs to a section that is not done as things stand; the question itself is always put."""
+        if item.optional:
+            return item.kind != "choose" and item.section not in self.chosen
+        match item.only_if:
+            case "parts replaced":
+                return not self.parts
+            case "semiconductors replaced":
+                return not self.semiconductors
+            case "no semiconductors replaced":
+                return self.semiconductors
+        return False

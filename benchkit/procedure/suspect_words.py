@@ -10,7 +10,7 @@ from typing import Final
 
 from benchkit import quantities
 from benchkit.events import ProbeNamed, Suspected, SuspectEvidence, SuspectNamed
-from benchkit.procedure.moves import HEALTHY
+from benchkit.procedure.closing import HEALTHY
 
 SHOWN: Final = 3
 """Suspects that are shown at a time."""

@@ -22,6 +22,7 @@ from benchkit.events import (
     Narrowed,
     Noted,
     OutputOff,
+    PartsReplaced,
     Predicted,
     PredictionRefused,
     ReadingMissed,
@@ -52,7 +53,7 @@ _ALWAYS: Final[Mapping[type[Event], str]] = {
 _OWN: Final[Mapping[Phase, Mapping[type[Event], str]]] = {
     "unopened": {WalkOpened: "_opened"},
     "connecting": {BenchFound: "_bench_found", BenchMissing: "_bench_missing"},
-    "asking": {Answered: "_answered"},
+    "asking": {Answered: "_answered", PartsReplaced: "_parts_replaced"},
     "predicting": {Predicted: "_predicted", PredictionRefused: "_prediction_refused"},
     "placing": {Answered: "_placed"},
     "reading": {ReadingTaken: "_reading_taken", ReadingMissed: "_reading_missed"},

@@ -14,6 +14,9 @@ Rules
   that was never taken leaves it undecided.
 * An extra reading is an item like any other, beside the plan's: while it is taken, it is *the* item.
 * What the model says of this unit comes aside (`benchkit.procedure.modelling`): it moves nothing and stops nothing.
+* A section that may be left out (`benchkit.procedure.file`) is passed by as a whole, and nothing in it is missed.
+* Once parts have been replaced, what was read before tells of another unit: the model doesn't count it, and what the
+  unit was *found* with no longer makes the verdict.
 * Nobody is told to touch the unit on the way out before both of its rails have been seen low; a unit that never had
   power is looked at too, once a look at its rails has not found them low.
 """
@@ -34,6 +37,7 @@ from benchkit.events import (
     Narrowed,
     Noted,
     OutputOff,
+    PartsReplaced,
     SupplyRefused,
     SupplySet,
     Suspected,
@@ -54,6 +58,7 @@ from benchkit.procedure.items import JUDGED_KINDS, RAIL_POINTS, Plan
 from benchkit.procedure.modelling import Modelling
 from benchkit.procedure.moves import Step
 from benchkit.procedure.securing import NOT_CONFIRMED, Securing, demand
+from benchkit.procedure.sizing import time_text
 from benchkit.procedure.state import State
 from benchkit.procedure.table import TABLE
 
@@ -121,7 +126,12 @@ class Walk(Securing, Modelling):
 
     def _answered(self, state: State, event: Answered) -> Step:
         item = self.item(state)
-        demand(event, *(("yes", "no") if item.kind in ("confirm", "hold", "lamp") else ("done",)))
+        demand(event, *(("yes", "no") if item.kind in ("confirm", "hold", "lamp", "choose") else ("done",)))
+        if item.kind == "parts":
+            raise IllegalEvent(f"{item.id} was answered {event.choice!r}", "which parts were replaced")
+        if item.kind == "choose":
+            others = state.chosen - {item.section}
+            return self._next(replace(state, chosen=others | {item.section} if event.choice == "yes" else others))
         if item.kind in ("confirm", "lamp"):
             verdict = "pass" if event.choice == "yes" else "fail"
             judged = Judged(
@@ -133,6 +143,30 @@ class Walk(Securing, Modelling):
             return self._make_safe(state, f"the operator said no at: {item.title}", 4)
         if item.kind == "tell":
             state = replace(state, probes="" if item.point is None else item.point.name)
+        return self._next(state)
+
+    def _parts_replaced(self, state: State, event: PartsReplaced) -> Step:
+        """Go on with another unit than the one that was read before, where parts were replaced."""
+        item = self.item(state)
+        if item.kind != "parts":
+            raise IllegalEvent(f"{item.id} was told which parts were replaced", "its own answer")
+        if bool(event.parts.strip()) < event.semiconductors:
+            raise IllegalEvent("Semiconductors were replaced that nobody named", "the parts that were replaced")
+        if not event.parts.strip():
+            return self._next(state)
+        read = frozenset(state.readings) | {result.item for result in state.results}
+        state = replace(
+            state,
+            parts="; ".join(part for part in (state.parts, event.parts.strip()) if part),
+            semiconductors=state.semiconductors or event.semiconductors,
+            before=state.before | read,
+            outdated=state.outdated | read,
+            narrowed={},
+            suspicion=None,
+            suspecting=0,
+            resumed_at=state.count,
+            probes="",
+        )
         return self._next(state)
 
     def _placed(self, state: State, event: Answered) -> Step:
@@ -147,6 +181,8 @@ class Walk(Securing, Modelling):
             return self._probe(state)
         if event.choice == "again":
             return self._enter(replace(state, probes=""), state.index)
+        if event.choice == "trim again":
+            return self._trim_again(state)
         if (
             event.choice == "go on"
             and not state.missing
@@ -170,6 +206,20 @@ class Walk(Securing, Modelling):
         said = "there was no result" if result is None else f"the result was {result.verdict}"
         return self._make_safe(state, f"the operator stopped at {item.title}: {said}", 4 if result is None else 1)
 
+    def _trim_again(self, state: State) -> Step:
+        """Go back to the trim; what was read since is no longer how the unit stands."""
+        item = self.item(state)
+        if state.missing or not self.may_trim_again(state, item, state.result(item.id)):
+            raise IllegalEvent(f"{item.id} doesn't lead back to a trim now", "one of the answers that are offered")
+        back = next(number for number, one in enumerate(self.plan.items) if one.id == item.back)
+        passed = {one.id for one in self.plan.items[back : state.index + 1]}
+        state = replace(
+            state,
+            trims={**state.trims, item.id: state.trims.get(item.id, 0) + 1},
+            readings={name: reading for name, reading in state.readings.items() if name not in passed},
+        )
+        return self._enter(state, back)
+
     # -- supply and time ---------------------------------------------------------------------------------------
 
     def _supply_set(self, state: State, event: SupplySet) -> Step:
@@ -186,7 +236,10 @@ class Walk(Securing, Modelling):
         return self._make_safe(state, event.problem, 3)
 
     def _waited(self, state: State, event: Waited) -> Step:
-        return self._next(state)
+        after, actions = self._next(state)
+        if event.settled is False and after.phase != "closing":
+            after = replace(after, note=f"{event.point} had not come to rest after {time_text(event.seconds)}.")
+        return after, actions
 
     def _off(self, state: State, event: OutputOff) -> Step:
         state = off_heard(state, event)

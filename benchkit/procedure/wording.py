@@ -2,10 +2,12 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Mapping
 
 from benchkit import quantities
-from benchkit.procedure.sizing import discharge_text, rails_text
+from benchkit.procedure.items import DRIVE_SHARES
+from benchkit.procedure.sizing import LOAD_OHM, discharge_text, drive_peak_v, rails_text
 from benchkit.stage.design import Design, target_drop_v
 
 
@@ -27,6 +29,11 @@ def words_of(design: Design, positive_v: float, negative_v: float, limit_a: floa
         "more_bias_way": "",
         "less_bias_way": "",
     }
+    words["load"] = quantities.show(LOAD_OHM, "ohm", 2)
+    for word, act in (("drive", "drive the stage"), ("third", "drive at a third of full power")):
+        rms_v = drive_peak_v(design, DRIVE_SHARES[act]) / math.sqrt(2.0)
+        words[word] = quantities.show(rms_v, "V", 2)
+        words[f"{word}_power"] = quantities.show(rms_v**2 / LOAD_OHM, "W", 2)
     if trimmer is not None:
         ways = ("clockwise", "anticlockwise")
         words["least_bias"] = "Trimmer at its least-bias end"

@@ -10,10 +10,20 @@ verify
     Whether a record is whole: the chain of its lines, and what they say.
 summary
     The facts of one walk, gathered from its events.
-show
-    Those facts as plain text.
+show, show_json
+    Those facts as plain text, and for a program.
 table
     Readings as rows, for a spreadsheet or a program.
+times
+    How long each channel took.
+pairing, change_table
+    Readings side by side, before and after: what changed, and whether the meters can tell.
+comparing
+    Two records side by side.
+earlier
+    The last record of the same unit and channel.
+at_the_end
+    The few lines that stand at the end of a walk.
 folder
     Which records a folder holds.
 """

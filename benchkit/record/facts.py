@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import Literal
 
 from benchkit.events import (
     Answered,
@@ -10,12 +11,17 @@ from benchkit.events import (
     Judged,
     Narrowed,
     Noted,
+    PartsReplaced,
     Suspected,
     Verdict,
+    Waited,
     WalkOpened,
 )
 from benchkit.measure.readings import Reading
 from benchkit.record.verify import Record
+
+Part = Literal["", "found", "left"]
+"""What a section's readings are, where the procedure says so: how the unit was found, how it is left."""
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -43,6 +49,14 @@ class Result:
     from_before, replaced : bool
     overridden : str or None
         The reason, when somebody went on in spite of it (may be empty).
+    how : str
+        What took the reading, where there was a choice: a key, or benchkit by itself, and why.
+    part : str
+        ``found`` or ``left`` for a section that the procedure marks so, else "".
+    driven : bool
+        The stage was driven while it was read.
+    rails_v : tuple of float or None
+        What the supply was last set to, V; None without power, or where the record doesn't say.
     """
 
     seq: int
@@ -59,11 +73,27 @@ class Result:
     from_before: bool = False
     replaced: bool = False
     overridden: str | None = None
+    how: str = ""
+    part: Part = ""
+    driven: bool = False
+    rails_v: tuple[float, float] | None = None
+
+    @property
+    def extra(self) -> bool:
+        """True for a reading that was taken for the suspects' sake, besides the plan."""
+        return self.step.startswith("extra-")
 
     @property
     def verdict(self) -> Verdict | None:
         """The verdict that was given, if one was."""
         return self.judged.verdict if self.judged is not None else None
+
+    @property
+    def standard_uncertainty(self) -> float | None:
+        """What the verdict counted with, else the meter's; None where nothing is known."""
+        if self.judged is not None and self.judged.uncertainty is not None:
+            return self.judged.uncertainty
+        return self.reading.standard_uncertainty if self.reading is not None else None
 
     @property
     def odd(self) -> bool:
@@ -94,6 +124,14 @@ class Incident:
     at: str
     where: str
     what: str
+
+
+@dataclass(frozen=True, kw_only=True)
+class Took:
+    """How long the channel took, and what the procedure allows for it (s); None where it allows nothing."""
+
+    seconds: float
+    target_s: float | None = None
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -139,6 +177,14 @@ class Summary:
         In their order.
     cautions : tuple of str
         What had to be said of the bench: an overdue calibration, a supply without protection of its own.
+    replaced : tuple of PartsReplaced
+        What the operator said about parts that were replaced, in the order in which it was said.
+    took : Took or None
+        Time of this channel, where the walk noted it.
+    left_out : tuple of str
+        Titles of the sections that the operator chose to leave out.
+    soaks : tuple of (title of the step, Waited)
+        Dwells during which a reading was watched coming to rest.
     highest_v : tuple of float or None
         The largest magnitudes, V, of the positive and the negative rail that the supply was set to or measured at.
     ending : Ending
@@ -164,6 +210,10 @@ class Summary:
     suspicions: tuple[Suspicion, ...] = ()
     narrowings: tuple[Narrowed, ...] = ()
     cautions: tuple[str, ...] = ()
+    replaced: tuple[PartsReplaced, ...] = ()
+    took: Took | None = None
+    left_out: tuple[str, ...] = ()
+    soaks: tuple[tuple[str, Waited], ...] = ()
 
     @property
     def verdict(self) -> Verdict | None:

@@ -13,8 +13,8 @@ from typing import Any
 
 from benchkit.errors import BenchkitError, FileError
 from benchkit.record.names import SUFFIX
-from benchkit.record.show import clean, verdict_words
 from benchkit.record.summary import Summary, load_summary
+from benchkit.record.words import clean, verdict_words
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -40,6 +40,7 @@ class Entry:
             "word": self.summary.record.word,
             "problem": "" if self.summary.record.status == 0 else self.summary.record.message,
             "unit": opened.unit,
+            "channel": opened.channel,
             "operator": opened.operator,
             "design": opened.design_name,
             "procedure": opened.procedure_name,
@@ -53,7 +54,8 @@ class Entry:
         if self.summary is None:
             return f"{self.path.name}  no record: {clean(self.problem)}"
         opened = self.summary.opened
-        parts = (self.path.name, opened.unit, opened.design_name, opened.procedure_name, verdict_words(self.summary))
+        unit = f"{opened.unit}, channel {opened.channel}" if opened.channel else opened.unit
+        parts = (self.path.name, unit, opened.design_name, opened.procedure_name, verdict_words(self.summary))
         kind = "  (rehearsal)" if opened.kind == "rehearsal" else ""
         return "  ".join(clean(part) for part in parts) + kind
 

@@ -19,6 +19,7 @@ from benchkit.events import (
     Narrowed,
     Noted,
     OutputOff,
+    PartsReplaced,
     Predicted,
     PredictionRefused,
     ReadingMissed,
@@ -31,6 +32,7 @@ from benchkit.events import (
     Suspected,
     TrimEnded,
     Tripped,
+    Waited,
     WalkOpened,
 )
 from benchkit.measure.readings import Reading
@@ -38,7 +40,7 @@ from benchkit.procedure.file import Procedure, parse_procedure
 from benchkit.procedure.hearing import UNPROTECTED
 from benchkit.procedure.modelling import TOO_SLOWLY
 from benchkit.quantities import show
-from benchkit.record.facts import Ending, Incident, Result, Suspicion
+from benchkit.record.facts import Ending, Incident, Part, Result, Suspicion, Took
 
 _NAME = re.compile(r"[a-z0-9][a-z0-9-]*")
 
@@ -54,6 +56,9 @@ class Gathering:
     answers: list[tuple[str, Answered]] = field(default_factory=list)
     incidents: list[Incident] = field(default_factory=list)
     notes: list[Noted] = field(default_factory=list)
+    replaced: list[PartsReplaced] = field(default_factory=list)
+    took: Took | None = None
+    soaks: list[tuple[str, Waited]] = field(default_factory=list)
     suspicions: list[Suspicion] = field(default_factory=list)
     narrowings: list[Narrowed] = field(default_factory=list)
     highest: tuple[float, float] | None = None
@@ -64,11 +69,16 @@ class Gathering:
     cautions: list[str] = field(default_factory=list)
     lamp_on_at: str = ""
     lamp_off_at: str = ""
+    left_out: list[str] = field(default_factory=list)
     closed: Closed | None = None
     where: str = ""
 
     def __post_init__(self) -> None:
-        self.sections, self._titles, self._kinds = _titles(self.opened)
+        procedure = _procedure(self.opened)
+        self.sections, self._titles, self._kinds = _titles(procedure)
+        self._parts, self._driven = _marks(procedure)
+        self._optional = {one.name for one in (procedure.sections if procedure else ()) if one.optional}
+        self._rails: tuple[float, float] | None = None
         self._conditions: dict[str, str] = {}
         self._by_hand = self.opened.supply == "manual"
         self._lamp_asked_after_resume = False
@@ -87,7 +97,7 @@ class Gathering:
             case Predicted():
                 self._conditions.update(dict.fromkeys((limits.point for limits in event.limits), event.condition))
             case ReadingTaken():
-                self._add(seq, at, item, event.reading.point, reading=event.reading)
+                self._add(seq, at, item, event.reading.point, reading=event.reading, how=event.how)
             case ReadingMissed():
                 self._add(seq, at, item, event.point, missed=event.problem)
             case Judged():
@@ -106,11 +116,16 @@ class Gathering:
                 self.answers.append((self.where, event))
                 if self.off is not None and not self.off.confirmed and self._by_hand and event.choice == "done":
                     self.said_off, self.may_be_on = True, False
-                if event.choice == "no":
+                if self._whether(item):
+                    if event.choice == "no":
+                        self.left_out.append(self.sections.get(_parts(item)[0], item))
+                elif event.choice == "no":
                     self._incident(seq, at, "answered no" + (f": {event.text}" if event.text else ""))
             case SupplySet():
                 self._look_at(event.state)
+                self._rails = _rails_of(event.state)
             case OutputOff():
+                self._rails = None
                 self.off = event
                 self.said_off = False
                 self.may_be_on = not event.confirmed
@@ -123,6 +138,12 @@ class Gathering:
                 self._incident(seq, at, f"resumed by {event.operator}{torn}")
             case Noted():
                 self.notes.append(event)
+                self.took = _took(event) or self.took
+            case Waited():
+                if event.settled is not None:
+                    self.soaks.append((self.where, event))
+            case PartsReplaced():
+                self.replaced.append(event)
             case Closed():
                 self.closed = event
             case Tripped() | ContactLost() | StopAsked() | SupplyRefused() | BenchMissing() | TrimEnded():
@@ -131,7 +152,15 @@ class Gathering:
                 self._incident(seq, at, f"no limits from the model for {event.condition}: {event.problem}")
 
     def _add(
-        self, seq: int, at: str, item: str, subject: str, *, reading: Reading | None = None, missed: str = ""
+        self,
+        seq: int,
+        at: str,
+        item: str,
+        subject: str,
+        *,
+        reading: Reading | None = None,
+        missed: str = "",
+        how: str = "",
     ) -> None:
         self._replace_earlier(item, subject)
         section, step = _parts(item)
@@ -146,7 +175,11 @@ class Gathering:
                 subject=subject,
                 reading=reading,
                 missed=missed,
+                how=how,
                 condition=self._conditions.get(subject, ""),
+                part=self._parts.get(section, ""),
+                driven=(section, step) in self._driven,
+                rails_v=self._rails,
             )
         )
 
@@ -216,6 +249,11 @@ class Gathering:
             self.lamp_off_at = at
         self._lamp_asked_after_resume = False
 
+    def _whether(self, item: str) -> bool:
+        """Whether an item only asks if a section is to be done."""
+        section, _, step = item.partition(".")
+        return step == WHETHER and section in self._optional
+
     def _incident(self, seq: int, at: str, what: str) -> None:
         self.incidents.append(Incident(seq=seq, at=at, where=self.where, what=what))
 
@@ -223,6 +261,8 @@ class Gathering:
         section, step = _parts(item)
         if step.startswith("extra-"):
             return f"Extra reading {step.removeprefix('extra-')}"
+        if self._whether(item):
+            return f"Whether it is done: {self.sections.get(section, section)}"
         if step == "warm-state":
             return "The design comes to rest warm"
         return self._titles.get((section, step), item)
@@ -240,11 +280,17 @@ def _parts(item: str) -> tuple[str, str]:
 _ByStep = Mapping[tuple[str, str], str]
 
 
-def _titles(opened: WalkOpened) -> tuple[dict[str, str], _ByStep, _ByStep]:
-    """Return the sections' titles by name, in order, and the steps' titles and kinds by section and step."""
+def _procedure(opened: WalkOpened) -> Procedure | None:
+    """Return the record's procedure; None where this version can't read it."""
     try:
-        procedure: Procedure = parse_procedure(opened.procedure_text, opened.procedure_name)
+        return parse_procedure(opened.procedure_text, opened.procedure_name)
     except BenchkitError:
+        return None
+
+
+def _titles(procedure: Procedure | None) -> tuple[dict[str, str], _ByStep, _ByStep]:
+    """Return the sections' titles by name, in order, and the steps' titles and kinds by section and step."""
+    if procedure is None:
         return {}, {}, {}
     steps = {(section.name, step.name): step for section in procedure.sections for step in section.step}
     kinds: dict[tuple[str, str], str] = {names: step.kind for names, step in steps.items()}
@@ -256,6 +302,40 @@ def _titles(opened: WalkOpened) -> tuple[dict[str, str], _ByStep, _ByStep]:
         {names: step.title for names, step in steps.items()},
         kinds,
     )
+
+
+def _marks(procedure: Procedure | None) -> tuple[dict[str, Part], frozenset[tuple[str, str]]]:
+    """Return which sections are marked as found or as left, and which steps are read with the stage driven."""
+    sections = () if procedure is None else procedure.sections
+    parts: dict[str, Part] = {section.name: section.as_ for section in sections if section.as_ is not None}
+    driven = ((section.name, step.name) for section in sections for step in section.step if step.state == "driven")
+    return parts, frozenset(driven)
+
+
+def _took(event: Noted) -> Took | None:
+    """Return the time of the channel from the note about it; None of any other note."""
+    seconds = event.figures.get("seconds")
+    if seconds is None or not event.text.startswith(TIME_NOTE):
+        return None
+    return Took(seconds=seconds, target_s=event.figures.get("target_seconds"))
+
+
+def _rails_of(state: SupplyState) -> tuple[float, float] | None:
+    """Return what the rails were set to, or measure where the supply doesn't say what it is set to; V."""
+    if state.output_on is False:
+        return None
+    pairs = ((state.set_positive_v, state.positive_v), (state.set_negative_v, state.negative_v))
+    rails = [first if first is not None else second for first, second in pairs]
+    if rails[0] is None:
+        return None
+    return rails[0], rails[1] or 0.0
+
+
+WHETHER = "choose"
+"""The step of a section that may be left out, at which that is asked."""
+
+TIME_NOTE = "This channel took"
+"""How the note begins that says how long a channel took."""
 
 
 def _disturbance(event: Event) -> str:

@@ -1,4 +1,4 @@
-"""The file name of a record, made from the unit's serial number.
+"""The file name of a record, made from the unit's serial number and the name of the channel.
 
 Rules
 -----
@@ -9,6 +9,8 @@ Rules
   system doesn't tell them apart), so eight digits of the SHA-256 of the serial number follow it.  The same serial
   number has the same beginning always.
 * Then the start of the walk in UTC, so that a folder lists a unit's walks in their order.
+* Where the walk is of one channel among several, its readable name comes last, as ``ch-L``; a name that had to be
+  changed for it gets four digits of its SHA-256 behind it.  What the channel is really called stands in the record.
 * A name is at most ``LONGEST`` characters, far below what any file system in use allows.
 """
 
@@ -28,7 +30,10 @@ SUFFIX = ".jsonl"
 READABLE = 40
 """The most characters that the readable part has."""
 
-LONGEST = READABLE + len("-01234567-20260131T235959Z-999") + len(SUFFIX)
+READABLE_CHANNEL = 12
+"""The most characters that the readable part of a channel's name has."""
+
+LONGEST = READABLE + len("-01234567-20260131T235959Z-ch-") + READABLE_CHANNEL + len("-0123-999") + len(SUFFIX)
 """The most characters that a whole name has."""
 
 _MOST_IN_ONE_SECOND = 999
@@ -63,8 +68,27 @@ def unit_prefix(serial: str) -> str:
     return f"{slug(serial)}-{digest}"
 
 
-def record_name(serial: str, begun: datetime) -> str:
-    """Return the file name of a walk on the unit `serial` that began at `begun`.
+def channel_part(channel: str) -> str:
+    """Return what the name of a record has for its channel; "" for the only channel of a unit.
+
+    Examples
+    --------
+    >>> channel_part("L")
+    '-ch-L'
+    >>> channel_part("../rear")
+    '-ch-rear-6510'
+    """
+    channel = channel.strip()
+    if not channel:
+        return ""
+    readable = slug(channel)[:READABLE_CHANNEL].strip("-")
+    if readable != channel:
+        readable += "-" + hashlib.sha256(channel.encode("utf-8", "surrogatepass")).hexdigest()[:4]
+    return f"-ch-{readable}"
+
+
+def record_name(serial: str, begun: datetime, channel: str = "") -> str:
+    """Return the file name of a walk on the unit `serial`, or on one channel of it, that began at `begun`.
 
     Raises
     ------
@@ -73,10 +97,10 @@ def record_name(serial: str, begun: datetime) -> str:
     """
     if begun.tzinfo is None:
         raise ValueError("the start of a walk needs a time zone")
-    return f"{unit_prefix(serial)}-{begun.astimezone(UTC):%Y%m%dT%H%M%SZ}{SUFFIX}"
+    return f"{unit_prefix(serial)}-{begun.astimezone(UTC):%Y%m%dT%H%M%SZ}{channel_part(channel)}{SUFFIX}"
 
 
-def free_path(folder: Path, serial: str, begun: datetime) -> Path:
+def free_path(folder: Path, serial: str, begun: datetime, channel: str = "") -> Path:
     """Return a path in `folder` for a new record that is not taken yet.
 
     The folder need not exist.  Whoever creates the file has to do so exclusively; this only picks the name.
@@ -86,7 +110,7 @@ def free_path(folder: Path, serial: str, begun: datetime) -> Path:
     FileError
         If the folder holds 999 records of this unit from this very second.
     """
-    first = folder / record_name(serial, begun)
+    first = folder / record_name(serial, begun, channel)
     if not first.exists():
         return first
     for number in range(2, _MOST_IN_ONE_SECOND + 1):

@@ -8,6 +8,7 @@ Rules
 * Everything before a resume is *from before*: trimmer and warmth may have changed since.
 * An odd reading passed: it is none that counts against the unit, and still one to know of.
 * What the supply is at the end is never said with more certainty than the record has.
+* As found and as left are the sections that the procedure marks so.
 * Which section an item belongs to is read from the item's name: the names of the section and of the step are its first
   two words.  Titles come from the procedure that the record holds; where it can't be read, the names stand for them.
 """
@@ -20,11 +21,11 @@ from benchkit.errors import RecordError
 from benchkit.events import (
     WalkOpened,
 )
-from benchkit.record.facts import Ending, Incident, Result, Summary, Suspicion
+from benchkit.record.facts import Ending, Incident, Result, Summary, Suspicion, Took
 from benchkit.record.gathering import Gathering, ending_of, with_lamp
 from benchkit.record.verify import Record, load
 
-__all__ = ["Ending", "Incident", "Result", "Summary", "Suspicion", "load_summary", "summarise"]
+__all__ = ["Ending", "Incident", "Result", "Summary", "Suspicion", "Took", "load_summary", "summarise"]
 
 
 def load_summary(path: str | Path) -> Summary:
@@ -71,4 +72,8 @@ def summarise(record: Record) -> Summary:
         suspicions=tuple(gathered.suspicions),
         narrowings=tuple(gathered.narrowings),
         cautions=tuple(gathered.cautions),
+        replaced=tuple(gathered.replaced),
+        took=gathered.took,
+        left_out=tuple(gathered.left_out),
+        soaks=tuple(gathered.soaks),
     )

@@ -7,6 +7,8 @@ Rules
 * A reading that was measured again later is in the table too, with ``replaced`` true.
 * ``low`` and ``high`` are the design's limits, ``unit_low`` and ``unit_high`` this unit's inside them; ``suspects`` is
   the last answer about suspects in the whole walk, the same in each of its rows.
+* ``part`` is ``found`` or ``left`` where the procedure marks a section so; ``driven`` is true for a reading that was
+  taken while the stage had a signal.
 * A text that a spreadsheet would take for a formula (it begins with ``= + - @``, a tab or a carriage return) gets an
   apostrophe in front.
 """
@@ -59,6 +61,10 @@ COLUMNS = (
     "unit_high",
     "odd",
     "suspects",
+    "channel",
+    "part",
+    "driven",
+    "how",
 )
 
 _FORMULA = ("=", "+", "-", "@", "\t", "\r")
@@ -107,6 +113,10 @@ def rows(summary: Summary) -> Iterator[dict[str, Any]]:
             "unit_high": judged.unit_high if judged is not None else None,
             "odd": result.odd,
             "suspects": suspects,
+            "channel": opened.channel,
+            "part": result.part,
+            "driven": result.driven,
+            "how": result.how,
         }
 
 
@@ -121,7 +131,7 @@ def _suspects(summary: Summary) -> str:
 
 
 def frame(summaries: Iterable[Summary]) -> pd.DataFrame:
-    """Return the readings of several records as one data frame, columns `COLUMNS`, shape (readings, 33).
+    """Return the readings of several records as one data frame, columns `COLUMNS`, shape (readings, 37).
 
     Numbers are floats with NaN where there is none; ``at`` is a time with its zone.
     """
@@ -138,8 +148,8 @@ def csv_text(summaries: Iterable[Summary]) -> str:
     """Return the readings as CSV: a line of names, a comma between, line feeds, a full stop as decimal sign."""
     table = frame(summaries)
     for name in COLUMNS:
-        if name not in (*_NUMBERS, "at", "line", "overload", "samples", "from_before", "replaced", "odd"):
-            table[name] = table[name].map(_no_formula)
+        if name not in (*_NUMBERS, "at", "line", "overload", "samples", "from_before", "replaced", "odd", "driven"):
+            table[name] = table[name].map(no_formula)
     table["at"] = table["at"].dt.strftime("%Y-%m-%dT%H:%M:%S.%fZ")
     text = io.StringIO()
     table.to_csv(text, index=False, lineterminator="\n")
@@ -173,5 +183,6 @@ def json_lines(summaries: Iterable[Summary]) -> Iterator[str]:
             yield json.dumps(row, ensure_ascii=False, allow_nan=False)
 
 
-def _no_formula(value: object) -> object:
+def no_formula(value: object) -> object:
+    """Return a value with an apostrophe in front where a spreadsheet would take it for a formula."""
     return f"'{value}" if isinstance(value, str) and value.startswith(_FORMULA) else value

@@ -19,20 +19,23 @@ import math
 import sys
 import threading
 import time
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Mapping, Sequence
 from typing import Any, Final
 
 import numpy as np
 
 from benchkit.errors import BenchkitError, EntryError
+from benchkit.rehearsal.as_found import found_travel
+from benchkit.rehearsal.driving import LOAD_OHM
 from benchkit.rehearsal.meter import Meter
+from benchkit.rehearsal.mishaps import Mishap, parse_mishap
 from benchkit.rehearsal.servers import LOOPBACK, serve
 from benchkit.rehearsal.supply import Supply
 from benchkit.rehearsal.unit import SimulatedUnit
 from benchkit.rehearsal.wiring import Table
 from benchkit.stage.design import Design, load_design, parse_design
 from benchkit.stage.draws import seeds
-from benchkit.stage.faults import parse_fault
+from benchkit.stage.points import parts_of
 
 LEAVE: Final = b"leave"
 """The line on standard input that ends a bench at once."""
@@ -51,7 +54,7 @@ class RehearsalBench:
     seed : int
         Its ``unit`` child draws the unit, its ``noise`` child the instruments' errors and noise.
     plant : str
-        ``"PART: FAULT"`` or empty.
+        What goes wrong, in the words of `benchkit.rehearsal.mishaps`, such as ``"PART: FAULT"``; or empty.
     follow : bool
         Whether simulated time follows the wall clock.
 
@@ -62,15 +65,19 @@ class RehearsalBench:
     """
 
     def __init__(self, design: Design, seed: int, plant: str = "", follow: bool = False) -> None:
-        fault = parse_fault(plant, design) if plant else None
-        self.unit = SimulatedUnit(design, seed, fault)
+        mishap = parse_mishap(plant, design) if plant else Mishap()
+        self.plant = "" if not plant else str(mishap)
+        self.unit = SimulatedUnit(design, seed, None if mishap.after_turns else mishap.fault)
         self.table = Table(self.unit)
+        if mishap.after_turns or mishap.trouble:
+            self.table.befall(mishap)
         noise = seeds("noise", seed)
         meter_seed, supply_seed = noise.integers(0, 2**63, 2)
         self.meter = Meter(self.table, np.random.default_rng(int(meter_seed)))
         self.supply = Supply(self.table, np.random.default_rng(int(supply_seed)))
         self.table.minder = self.supply
         self.follow = follow
+        self._seed = seed
         self._wall_s = time.monotonic()
 
     def catch_up(self) -> None:
@@ -79,6 +86,10 @@ class RehearsalBench:
             now_s = time.monotonic()
             passed_s, self._wall_s = now_s - self._wall_s, now_s
             self.table.advance(min(passed_s, LONGEST_CATCH_UP_S))
+
+    def found_travel(self) -> float:
+        """Return where the trimmer of this unit stands when it comes to a repair shop."""
+        return found_travel(self.unit.design, self.unit.parameters, self._seed)
 
     def truth(self) -> dict[str, Any]:
         """Return what is really so, for tests and for whoever judges a rehearsal afterwards."""
@@ -102,7 +113,10 @@ class RehearsalBench:
             "burnt": [str(burnt) for burnt in unit.burnt],
             "overloaded": dict(unit.strain.overloaded),
             "words": burnt_words(unit),
-            "plant": "" if unit.plant is None else str(unit.plant),
+            "plant": self.plant,
+            "faulty": list(unit.faulty),
+            "semiconductors": semiconductors(self.unit.design, unit.faulty),
+            "replaced": list(unit.repaired),
             "unsolved": unit.unsolved,
             "connected": table.connected,
             "shorted": table.shorted,
@@ -150,9 +164,39 @@ def _turn(bench: RehearsalBench, request: Mapping[str, Any]) -> float:
 
 def _trimmer_to(bench: RehearsalBench, request: Mapping[str, Any]) -> float:
     where = request.get("travel")
+    if where == "as found":
+        return bench.table.set_travel(bench.found_travel())
     if where in ("least", "most"):
         return bench.table.set_travel(0.0 if where == "least" else 1.0)
     return bench.table.set_travel(_number(request, "travel"))
+
+
+def _drive(bench: RehearsalBench, request: Mapping[str, Any]) -> None:
+    bench.table.drive(_number(request, "share"), _number({"load_ohm": LOAD_OHM, **request}, "load_ohm"))
+
+
+def _slip(bench: RehearsalBench, request: Mapping[str, Any]) -> None:
+    bench.table.slip(_number(request, "seconds"))
+
+
+def _fault(bench: RehearsalBench, request: Mapping[str, Any]) -> None:
+    what = request.get("what")
+    if not isinstance(what, str):
+        raise EntryError(f"{what!r} came as what goes wrong", 'words such as "spreader.trimmer: wiper open"')
+    mishap = parse_mishap(what, bench.unit.design)
+    bench.table.befall(mishap)
+    bench.plant = bench.plant or str(mishap)
+
+
+def _repair(bench: RehearsalBench, _: Mapping[str, Any]) -> dict[str, Any]:
+    parts = bench.table.repair()
+    return {"parts": list(parts), "semiconductors": semiconductors(bench.unit.design, parts)}
+
+
+def semiconductors(design: Design, parts: Sequence[str]) -> bool:
+    """Whether there is a transistor, or a feed made of some, among the parts."""
+    kinds = {part.name: part.kind for part in parts_of(design)}
+    return any(kinds[name] in ("transistor", "source", "servo") for name in parts)
 
 
 def _connect(bench: RehearsalBench, request: Mapping[str, Any]) -> None:
@@ -174,6 +218,10 @@ SIDE_REQUESTS: Final[Mapping[str, Callable[[RehearsalBench, Mapping[str, Any]], 
     "trimmer to": _trimmer_to,
     "connect": _connect,
     "short": _short,
+    "drive": _drive,
+    "slip": _slip,
+    "fault": _fault,
+    "repair": _repair,
     "advance": _advance,
     "truth": lambda bench, _: bench.truth(),
 }

@@ -18,6 +18,7 @@ from typing import IO, Any, Final, Literal
 from benchkit.errors import BenchkitError, EntryError, InstrumentError
 from benchkit.keeper.platform import own_group
 from benchkit.rehearsal.bench_file import bench_text
+from benchkit.rehearsal.driving import LOAD_OHM
 
 START_TIMEOUT_S: Final = 30.0
 STOP_TIMEOUT_S: Final = 5.0
@@ -60,8 +61,8 @@ class SideChannel:
         """Turn the trimmer's screw, positive for more bias; return the travel from the least-bias end, 0...1."""
         return float(self._ask({"do": "turn", "turns": turns}))
 
-    def trimmer_to(self, travel: Literal["least", "most"] | float) -> float:
-        """Put the trimmer at an end or at a travel from the least-bias end; return the travel."""
+    def trimmer_to(self, travel: Literal["least", "most", "as found"] | float) -> float:
+        """Put the trimmer at an end, at a travel from the least-bias end, or where a shop finds it; return that."""
         return float(self._ask({"do": "trimmer to", "travel": travel}))
 
     def connect(self, connected: bool) -> None:
@@ -71,6 +72,24 @@ class SideChannel:
     def short(self, shorted: bool) -> None:
         """Join the ends of the supply's leads, or open them."""
         self._ask({"do": "short", "shorted": shorted})
+
+    def drive(self, share: float, load_ohm: float = LOAD_OHM) -> None:
+        """Drive the stage to a share of full power into a dummy load; 0 ends it."""
+        self._ask({"do": "drive", "share": share, "load_ohm": load_ohm})
+
+    def slip(self, seconds: float) -> None:
+        """Let the clips slip off their point for some simulated seconds."""
+        self._ask({"do": "slip", "seconds": seconds})
+
+    def fault(self, what: str) -> None:
+        """Let something go wrong, in the words of `benchkit.rehearsal.mishaps`."""
+        self._ask({"do": "fault", "what": what})
+
+    def repair(self) -> dict[str, Any]:
+        """Put new parts in for what is faulty or burnt; return ``parts`` and whether there are ``semiconductors``."""
+        answer = self._ask({"do": "repair"})
+        assert isinstance(answer, dict)
+        return answer
 
     def advance(self, seconds: float) -> float:
         """Let simulated time (s) pass; return what the simulated clock then shows."""
@@ -170,7 +189,7 @@ def start_bench(
         Text of a design file.
     seed : int
     plant : str
-        ``"PART: FAULT"``; empty or None for a healthy unit.
+        What goes wrong, such as ``"PART: FAULT"``; empty or None for a healthy unit.
     clock : str
         ``manual``: simulated time passes only by `SideChannel.advance`; ``follow``: with the wall clock too.
     file_name : str

@@ -1,17 +1,16 @@
 """The stand-in: a simulated technician who answers, moves probes and turns the trimmer.
 
-It is careful and obedient, not clever: it does what the screen says, tries once more when a reading is no pass, notes a
-reason where a result stays undecided, and makes safe where one fails.  Before it places the
-probes it waits for narrowed limits that are being worked out, before it decides for the suspects; it takes the extra
-readings that are offered.  When the trimmer's end is wrong, it turns the
-screw the other way and measures again.  When a rail is still up, it waits.
+It is careful and obedient, not clever: it does what the screen says, trims again where that is offered, tries once
+more when another reading is no pass, notes a reason where a result stays undecided, and makes safe where one fails,
+unless that only tells how the unit came in.  How it turns the screw says `benchkit.rehearsal.turning`.  Before it
+places the probes it waits for narrowed limits that are being worked out, before it decides for the suspects; it takes
+the extra readings that are offered.  When the trimmer's end is wrong, it turns the screw the other way and measures
+again.  When a rail is still up, it waits.  Asked which parts were replaced, it looks into the unit for what is faulty.
 """
 
 from __future__ import annotations
 
 import asyncio
-import itertools
-import math
 from collections import Counter
 from collections.abc import Callable
 from typing import Any, Protocol
@@ -19,6 +18,7 @@ from typing import Any, Protocol
 import numpy as np
 
 from benchkit.procedure.actions import Question
+from benchkit.rehearsal.turning import Turning
 from benchkit.session.front import Reply, SuspectsView, View
 from benchkit.session.threads import in_thread
 
@@ -27,6 +27,16 @@ MOST_PATIENCE_S = 60.0
 
 MOST_WAITS = 20
 WAIT_S = 30.0
+
+SLIP_S = 4.0
+SLIPS_AFTER_MOVES = 2
+"""How long its probe is off the point when it slips, and after how many moves of the screw that comes."""
+
+BEFORE = ".before"
+"""The item that asks what was replaced before the walk ends so."""
+
+AS_FOUND = "found."
+"""Items that tell how a unit came in begin so: what is wrong there is noted, and the walk goes on."""
 
 
 class Screw(Protocol):
@@ -37,6 +47,12 @@ class Screw(Protocol):
 
     def advance(self, seconds: float) -> Any:
         """Let time pass."""
+
+    def slip(self, seconds: float) -> Any:
+        """Let the clips slip off for some seconds."""
+
+    def truth(self) -> Any:
+        """What is really so."""
 
 
 class StandIn:
@@ -54,6 +70,12 @@ class StandIn:
         Takes a line about what is being done; None for silence.
     wrong_end : bool
         It turns the trimmer to the wrong end when told to turn it to the least-bias end.
+    slips : int
+        So often does its probe slip while it turns the screw.
+    optional : bool
+        It does sections that may be passed over, such as a power soak.
+    replaced_before : (str, str), optional
+        What it answers when it is first asked which parts were replaced: the choice, and the parts.
     """
 
     def __init__(
@@ -64,6 +86,9 @@ class StandIn:
         rng: np.random.Generator,
         say: Callable[[str], None] | None = None,
         wrong_end: bool = False,
+        slips: int = 0,
+        optional: bool = False,
+        replaced_before: tuple[str, str] | None = None,
     ) -> None:
         self._hands = hands
         self._turns = turns
@@ -71,8 +96,10 @@ class StandIn:
         self._say = say or (lambda line: None)
         self._wrong_end = wrong_end
         self._tries: Counter[str] = Counter()
-        self._moves: dict[str, list[tuple[float, float]]] = {}
-        self._position: Counter[str] = Counter()
+        self._trims: dict[str, Turning] = {}
+        self._slips_left = slips
+        self._optional = optional
+        self._replaced_before = replaced_before
         self._view: View | None = None
         self._told = 0
         self._suspects: SuspectsView | None = None
@@ -99,7 +126,11 @@ class StandIn:
                 await self._wait_while(lambda view: view.suspects is not None and view.suspects.working)
                 return Reply(choice="yes")
             case "trim":
-                return self._trim(question)
+                return await self._trim(question)
+            case "parts":
+                return await self._parts(question)
+            case "choose":
+                return Reply(choice="yes" if self._optional else "no")
             case "decide":
                 return await self._decide(question)
             case "probes":
@@ -118,6 +149,9 @@ class StandIn:
 
     async def _decide(self, question: Question) -> Reply:
         choices = {choice.value: choice for choice in question.choices}
+        if "trim again" in choices:
+            self._trims.clear()
+            return Reply(choice="trim again")
         free = "go on" in choices and not choices["go on"].wants_reason
         if self._tries[question.item] or free or "again" not in choices:
             if "probe" in choices:
@@ -138,6 +172,8 @@ class StandIn:
             return Reply(choice="again")
         if "make safe" not in choices:
             return Reply(choice="go on", text="the stand-in has tried again and leaves it as it is")
+        if question.item.startswith(AS_FOUND) and "go on" in choices:
+            return Reply(choice="go on", text="as it was found; noted by the stand-in")
         verdict = next(
             (result.verdict for result in self._view.results if result.item == question.item), "fail"
         ) if self._view is not None else "fail"  # fmt: skip
@@ -152,44 +188,24 @@ class StandIn:
             await asyncio.sleep(0.02)
             left_s -= 0.02
 
-    def _trim(self, question: Question) -> Reply:
+    async def _trim(self, question: Question) -> Reply:
+        """Turn the screw by the advice on the screen."""
+        hand = self._trims.setdefault(question.item, Turning(self._turns, self._rng))
         live = self._view.live if self._view is not None else None
-        if live is None or live.value is None:
-            return Reply(choice="end", text="There is no reading.")
-        middle, half = (live.low + live.high) / 2.0, (live.high - live.low) / 2.0
-        if abs(live.value - middle) < 0.3 * half:
-            return Reply(choice="take")
-        moves = self._moves.setdefault(question.item, [])
-        here = sum(turns for turns, _ in moves)
-        wanted = math.log(live.target / max(live.value, 1e-6))
-        if abs(here) > 1.3 * self._turns or len(moves) > 200:
-            return Reply(choice="end", text="The screw is at its end and the target is not reached.")
-        if wanted < 0.0 and _at_least_end(moves, live.value):
-            if live.low <= live.value <= live.high:
-                return Reply(choice="take")
-            return Reply(choice="end", text="The screw is at its least-bias end and the reading is still above.")
-        step = math.copysign(0.25, wanted)
-        if moves:
-            turned, before = moves[-1]
-            slope = math.log(max(live.value, 1e-6) / max(before, 1e-6)) / turned
-            if slope > 0.05:
-                step = wanted / slope
-        most = 0.5 if live.value < 0.1 * live.target else 0.35
-        step = max(-most, min(most, step)) * (1.0 + 0.1 * float(self._rng.standard_normal()))
-        if abs(step) < 0.004:
-            step = math.copysign(0.004, step)
-        moves.append((step, live.value))
-        return Reply(choice="turn", turns=step)
+        if self._slips_left and len(hand.moves) >= SLIPS_AFTER_MOVES:
+            self._slips_left -= 1
+            self._say("          the probe slips")
+            await in_thread(lambda: self._hands.slip(SLIP_S))
+        return hand.reply(live)
 
-
-_SAME_SHARE = 0.03
-_SAME_MOVES = 3
-
-
-def _at_least_end(moves: list[tuple[float, float]], value: float) -> bool:
-    """Whether the screw has been turned for less bias again and again, and the reading hardly followed."""
-    last = moves[-_SAME_MOVES:]
-    if len(last) < _SAME_MOVES or any(turns >= 0.0 for turns, _ in last):
-        return False
-    readings = [before for _, before in last] + [value]
-    return all(abs(after - before) <= _SAME_SHARE * abs(before) for before, after in itertools.pairwise(readings))
+    async def _parts(self, question: Question) -> Reply:
+        """Name what has to be replaced: a technician goes by the suspects, the stand-in looks into the unit."""
+        if question.item.endswith(BEFORE):
+            kind, parts = self._replaced_before or ("no", "")
+            return Reply(choice=kind, text=parts)
+        truth = await in_thread(self._hands.truth)
+        broken = [str(part) for part in truth.get("faulty", ())]
+        if not broken:
+            return Reply(choice="no")
+        self._say(f"          replaced: {', '.join(broken)}")
+        return Reply(choice="semiconductors" if truth.get("semiconductors") else "other parts", text=", ".join(broken))

@@ -108,6 +108,22 @@ class Strain:
         self.overloaded: dict[str, float] = {}
         """Parts that were above their ratings, and the highest multiple of the rating (junctions: of their rise)."""
 
+    def spare(self, parts: frozenset[str]) -> None:
+        """Let nothing more happen to parts of which nothing is left."""
+        self._set(parts, False)
+
+    def renew(self, parts: frozenset[str]) -> None:
+        """Take parts as new: whole, and cold."""
+        self._set(parts, True)
+
+    def _set(self, parts: frozenset[str], whole: bool) -> None:
+        for row, name in enumerate(self._names):
+            if name in parts:
+                self._alive[row], self._quick_k[row], self._counted_k[row] = whole, 0.0, 0.0
+        for row, rating in enumerate(self._resistors):
+            if rating.part in parts:
+                self._whole[row], self._average_w[row] = whole, 0.0
+
     def hot_spots_c(self, temperatures_c: Mapping[str, float]) -> dict[str, float]:
         """Return the hottest place (degC) of every transistor, from warmth's temperatures."""
         return dict(zip(self._names, self._spots(self._base(temperatures_c)).tolist(), strict=True))

@@ -12,7 +12,13 @@ the asker can tolerate; a new one starts from the last.
 What breaks
 -----------
 `benchkit.rehearsal.strain` says what gives way: a junction becomes a collector-emitter short, a resistor opens, the
-trimmer's track opens under its wiper.  What broke stays broken, and operating points are those of what is left.
+trimmer's track opens under its wiper.  What broke stays broken, and operating points are those of what is left, until
+`SimulatedUnit.repair` puts new parts in, drawn like the first ones.
+
+What is done to it
+------------------
+It can be driven into a dummy load (`benchkit.rehearsal.driving`), and things can go wrong with it on the way
+(`benchkit.rehearsal.mishaps`).
 
 How the servo wakes up
 ----------------------
@@ -31,6 +37,9 @@ from typing import Final
 
 import numpy as np
 
+from benchkit.errors import EntryError
+from benchkit.rehearsal.beyond import Beyond
+from benchkit.rehearsal.mishaps import Mishap, covered
 from benchkit.rehearsal.rails import Pair
 from benchkit.rehearsal.ratings import TRIMMER, resistor_powers_w
 from benchkit.rehearsal.strain import Burnt, Strain
@@ -39,6 +48,7 @@ from benchkit.stage.conditions import Condition, Unpowered
 from benchkit.stage.design import Design
 from benchkit.stage.draws import Parameters, draw, seeds
 from benchkit.stage.faults import OPEN_FACTOR, OPEN_OHM, SHORT_OHM, Fault
+from benchkit.stage.heat import heat_nodes
 from benchkit.stage.operate import Loading, Solved, solve_units
 from benchkit.stage.unpowered import DIODE_RANGE, OHMS_RANGES, MeterRange, solve_unpowered
 
@@ -52,6 +62,8 @@ SETTLED_SHARE: Final = 1e-3
 _ASLEEP_V = 1.0
 _WAKING_STEP_V = 2e-4
 _NO_LIMIT: Final = 0.0
+HUM_V: Final = 0.0003
+"""What a quiet stage shows on a meter's a.c. range, leads and room included (our own figure; units differ by half)."""
 _NOTHING_LEFT = ("short", "open", "collector-emitter short", "missing", "wiper open")
 
 
@@ -60,7 +72,7 @@ class _Key:
     volts: Pair
     limit_a: float
     travel: float
-    breakages: int
+    changes: int
     waking_v: float
 
 
@@ -73,7 +85,7 @@ class SimulatedUnit:
     seed : int
         Its ``unit`` child draws the parts.
     plant : Fault or None
-        What is wrong with it.
+        What is wrong with it from the beginning.
     """
 
     def __init__(self, design: Design, seed: int, plant: Fault | None = None) -> None:
@@ -88,7 +100,12 @@ class SimulatedUnit:
         self.lived_s = 0.0
         self.unsolved = 0
         self.highest_quiescent_a = 0.0
+        self.beyond = Beyond(design.output.pairs)
+        self.repaired: tuple[str, ...] = ()
+        self.hum_v = HUM_V * float(rng.uniform(0.5, 1.5))
+        self._spares = rng.spawn(1)[0]
         self._fault = plant
+        self._changes = 0
         self._awake_s: float | None = None
         self._last: dict[_Key, tuple[Solved, dict[str, float]]] = {}
         self._newest: Solved | None = None
@@ -98,6 +115,14 @@ class SimulatedUnit:
     def broken(self) -> tuple[str, ...]:
         """Names of the parts that have given way, in order."""
         return tuple(burnt.part for burnt in self.burnt)
+
+    @property
+    def faulty(self) -> tuple[str, ...]:
+        """Parts that are not what they should be: the one that was planted, and what has given way."""
+        planted = [] if self._fault is None else [self._fault.part]
+        if self._fault is not None and self._fault.fault == "swapped":
+            planted.append("spreader.lower")
+        return tuple(dict.fromkeys((*planted, *self.broken)))
 
     def turn(self, turns: float) -> float:
         """Turn the screw, positive for more bias, up to its ends; return the travel from the least-bias end."""
@@ -147,7 +172,7 @@ class SimulatedUnit:
 
     def _key(self, volts: Pair, limit_a: float | None) -> _Key:
         limit = _NO_LIMIT if limit_a is None else limit_a
-        return _Key(volts, limit, self._electrical_travel(), len(self.burnt), self._waking_v())
+        return _Key(volts, limit, self._electrical_travel(), self._changes, self._waking_v())
 
     def _electrical_travel(self) -> float:
         """Where the wiper counts as being: far beyond its end when it is open, so that its arm is open too."""
@@ -192,14 +217,22 @@ class SimulatedUnit:
             return 1.0
         return _first(loaded, point) / bare_v
 
+    def sagged(self, volts: Pair, limit_a: float) -> Pair:
+        """Return where a supply set to `volts` (magnitudes) with a limit (A) holds the rails of a driven stage."""
+        if not self.beyond.drives:
+            return volts
+        solved = self.operate(volts, limit_a, within_k=COARSE_K)
+        return self.beyond.held_v(volts, max(_first(solved, f"{rail}.current") for rail in ("rail+", "rail-")), limit_a)
+
     def drawn(self, volts: Pair) -> Pair:
         """Return the currents (A) drawn from stiff rails at these magnitudes."""
         solved = self.operate(volts, None, within_k=COARSE_K)
-        return _first(solved, "rail+.current"), _first(solved, "rail-.current")
+        extra_a = self.beyond.extra_a(volts)
+        return _first(solved, "rail+.current") + extra_a, _first(solved, "rail-.current") + extra_a
 
     def balance(self, volts: Pair, limit_a: float) -> Pair:
         """Return the magnitudes (V) to which a supply with a limit brings the rails."""
-        solved = self.operate(volts, limit_a, within_k=COARSE_K)
+        solved = self.operate(self.sagged(volts, limit_a), limit_a, within_k=COARSE_K)
         return max(_first(solved, "rail+"), 0.0), max(-_first(solved, "rail-"), 0.0)
 
     def heat(self, solved: Solved, seconds: float) -> None:
@@ -209,9 +242,8 @@ class SimulatedUnit:
         if not bool(solved.converged[0]):
             return  # nobody knows its powers
         self.highest_quiescent_a = max(self.highest_quiescent_a, self.quiescent_a(solved))
-        powers = powers_w(solved)
+        powers, resistors_w = self._powers(solved), self._resistor_powers(solved)
         self.warmth.step(powers, seconds)
-        resistors_w = resistor_powers_w(self.design, solved)
         for burnt in self.strain.step(self.warmth.temperatures_c(), powers, resistors_w, seconds, self.lived_s):
             self._break(burnt)
 
@@ -225,7 +257,7 @@ class SimulatedUnit:
 
     def longest_step_s(self, solved: Solved) -> float:
         """Return how long the operating point may stand for while the temperatures move and the servo wakes up."""
-        longest_s = self.warmth.longest_step_s(powers_w(solved))
+        longest_s = self.warmth.longest_step_s(self._powers(solved))
         if self._waking_v() and self._awake_s is not None:
             longest_s = min(longest_s, 0.1 * (self.design.feed.settles_after_s or 0.0))
         return self.stands_s(solved, longest_s)
@@ -235,7 +267,19 @@ class SimulatedUnit:
         if not bool(solved.converged[0]):
             return most_s
         temperatures = self.warmth.temperatures_c()
-        return self.strain.stands_s(temperatures, powers_w(solved), resistor_powers_w(self.design, solved), most_s)
+        return self.strain.stands_s(temperatures, self._powers(solved), self._resistor_powers(solved), most_s)
+
+    def _powers(self, solved: Solved) -> dict[str, float]:
+        """What heats each transistor (W): its operating point, and what the stage is driven to or does by itself."""
+        powers = powers_w(solved)
+        extra_w = self.beyond.device_w(rails_of(solved))
+        return {name: watts + extra_w * name.startswith("output.") for name, watts in powers.items()}
+
+    def _resistor_powers(self, solved: Solved) -> dict[str, float]:
+        powers, volts = resistor_powers_w(self.design, solved), rails_of(solved)
+        for name in self.emitters:
+            powers[name] += self.beyond.resistor_w(volts, float(self.parameters[name].item()))
+        return powers
 
     def _break(self, burnt: Burnt) -> None:
         part = burnt.part
@@ -248,6 +292,47 @@ class SimulatedUnit:
         elif self.design.spreader.trimmer is not None and self.design.spreader.trimmer.arm == "between":
             self.parameters[f"{part}.wiper"] = np.asarray(OPEN_OHM)
         self.burnt += (burnt,)
+        self._changes += 1
+
+    def befall(self, mishap: Mishap) -> None:
+        """Let something go wrong now.
+
+        Raises
+        ------
+        EntryError
+            When another planted fault is still in the unit: it has room for one.
+        """
+        if mishap.fault is not None:
+            if self._fault not in (None, mishap.fault):
+                raise EntryError(f"{mishap.fault} is to come, and {self._fault} is there", "one fault at a time")
+            self._fault = mishap.fault
+            self.plant = self.plant or mishap.fault
+            self.strain.spare(_spared(mishap.fault))
+        elif mishap.trouble and mishap.trouble not in self.beyond.troubles:
+            self.beyond.troubles += (mishap.trouble,)
+            if mishap.trouble == "runaway":
+                self.warmth.spoil(covered(heat_nodes(self.design)))
+        self._changed()
+
+    def repair(self) -> tuple[str, ...]:
+        """Put new parts in for what is faulty or burnt, drawn like the first ones; return their names."""
+        broken = self.faulty
+        fresh = draw(self.design, 1, self._spares)
+        for part in broken:
+            for key in self.parameters:
+                if key == part or key.startswith(f"{part}."):
+                    self.parameters[key] = fresh[key]
+        self.strain.renew(frozenset(broken))
+        self.repaired += broken
+        self._fault, self.burnt, self.beyond.troubles = None, (), ()
+        self.warmth.spoil(heat_nodes(self.design))
+        self._changed()
+        return broken
+
+    def _changed(self) -> None:
+        self._changes += 1
+        self._last.clear()
+        self._unpowered.clear()
 
     def _wake(self, solved: Solved) -> None:
         """Note when the rails reach the voltage from which the servo regulates."""
@@ -269,7 +354,9 @@ class SimulatedUnit:
         left_v = whole_v * SETTLED_SHARE ** ((self.lived_s - self._awake_s) / settles_s)
         return float(_WAKING_STEP_V * round(left_v / _WAKING_STEP_V))
 
-    def _emitters(self) -> tuple[str, ...]:
+    @property
+    def emitters(self) -> tuple[str, ...]:
+        """Names of all emitter resistors."""
         pairs = range(1, self.design.output.pairs + 1)
         return tuple(f"emitter.{side}.{number}" for number in pairs for side in ("upper", "lower"))
 
@@ -287,7 +374,7 @@ class SimulatedUnit:
         float
             Infinite for an overload.
         """
-        key = point, full_scale, self.travel, len(self.burnt), round(self.warmth.temperatures_c()["heatsink"], 1)
+        key = point, full_scale, self.travel, self._changes, round(self.warmth.temperatures_c()["heatsink"], 1)
         if key not in self._unpowered:
             self._unpowered[key] = self._read_unpowered(point, full_scale)
         return self._unpowered[key]
@@ -318,7 +405,7 @@ class SimulatedUnit:
 
     def quiescent_a(self, solved: Solved) -> float:
         """Return the current (A) through the upper half's emitter resistors."""
-        upper = [name for name in self._emitters() if ".upper." in name]
+        upper = [name for name in self.emitters if ".upper." in name]
         return float(sum(solved.solution.current(name)[0] for name in upper))
 
 
@@ -330,6 +417,11 @@ def powers_w(solved: Solved) -> dict[str, float]:
 def _first(solved: Solved, point: str) -> float:
     """The unit's reading; 0 for a point of the rail that a single-supply stage hasn't."""
     return float(solved.points[point][0]) if point in solved.points else 0.0
+
+
+def rails_of(solved: Solved) -> Pair:
+    """Magnitudes of the rails (V)."""
+    return max(_first(solved, "rail+"), 0.0), max(-_first(solved, "rail-"), 0.0)
 
 
 def _spared(plant: Fault | None) -> frozenset[str]:

@@ -13,7 +13,7 @@ from typing import Final
 import numpy as np
 
 from benchkit.stage.design import Design
-from benchkit.stage.heat import heat_nodes
+from benchkit.stage.heat import HeatNodes, heat_nodes
 
 LARGEST_STEP_K: Final = 0.4
 LONGEST_STEP_S: Final = 10.0
@@ -61,6 +61,10 @@ class Warmth:
             if gap > LARGEST_STEP_K:
                 longest = min(longest, -lag_s * math.log1p(-LARGEST_STEP_K / gap))
         return longest
+
+    def spoil(self, nodes: HeatNodes) -> None:
+        """Go on with other nodes of the same names, from the temperatures that are: something has come loose."""
+        self._nodes = nodes
 
     def _goals(self, powers_w: Mapping[str, float]) -> np.ndarray[tuple[int, ...], np.dtype[np.float64]]:
         return self._nodes.goals(self._x, np.array([powers_w[part] for part in self._nodes.parts]))

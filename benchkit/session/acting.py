@@ -2,10 +2,12 @@
 
 from __future__ import annotations
 
+import asyncio
+import contextlib
 from typing import TYPE_CHECKING
 
 from benchkit.errors import BenchkitError
-from benchkit.events import Event, Waited
+from benchkit.events import Event
 from benchkit.procedure.actions import (
     Action,
     Ask,
@@ -21,7 +23,8 @@ from benchkit.procedure.actions import (
     Wait,
     Write,
 )
-from benchkit.session import asking, falling, measuring, powering, predictions
+from benchkit.session import asking, ending, falling, measuring, powering, predictions, soaking, trimming
+from benchkit.session.job import Stopped
 from benchkit.session.threads import in_thread
 
 if TYPE_CHECKING:
@@ -58,8 +61,7 @@ async def perform(session: Session, action: Action) -> Event | None:
         case Read():
             return await measuring.read(session, action)
         case Trim():
-            async with powering.minding_the_meter(session):
-                return await measuring.trim(session, action)
+            return await trimming.trim(session, action)
         case Fall():
             return await falling.watch(session, action)
         case SetSupply():
@@ -67,8 +69,17 @@ async def perform(session: Session, action: Action) -> Event | None:
         case SwitchOff():
             return await powering.switch_off(session, action)
         case Wait():
-            await asking.wait(session, action)
-            return Waited(item=action.item, seconds=action.seconds)
+            return await soaking.wait(session, action)
         case Write():
-            return await session.last_look(action)
+            return await ending.last_look(session, action)
     raise BenchkitError(f"There is no way to carry out {type(action).__name__}")
+
+
+async def lapse(task: asyncio.Task[Event | None] | None) -> None:
+    """Let an action go that nobody waits for any more, whatever came or would have come of it."""
+    if task is None:
+        return
+    if not task.done():
+        task.cancel()
+    with contextlib.suppress(asyncio.CancelledError, Stopped, BenchkitError):
+        await task

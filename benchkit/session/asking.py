@@ -1,4 +1,4 @@
-"""What a person is asked, and what is waited for: the bench, questions, entries, dwells."""
+"""What a person is asked: the bench, questions, entries."""
 
 from __future__ import annotations
 
@@ -7,8 +7,9 @@ from collections.abc import Callable
 from typing import TYPE_CHECKING, Any
 
 from benchkit.errors import BenchkitError, EntryError, InstrumentError
-from benchkit.events import Answered, BenchFound, BenchMissing, Decided, Event
-from benchkit.procedure.actions import Ask, Question, Wait
+from benchkit.events import Answered, BenchFound, BenchMissing, Decided, Event, PartsReplaced
+from benchkit.procedure.actions import Ask, Question
+from benchkit.session import capturing
 from benchkit.session.front import Reply
 from benchkit.session.job import Stopped, refusal
 
@@ -44,7 +45,11 @@ async def connect(session: Session) -> Event:
 async def ask(session: Session, action: Ask) -> Event:
     """Put an item's question; what the hands then do is done before the answer counts."""
     question = action.question
-    reply = await put(session, question)
+    session.placed_by_itself = ""
+    if capturing.possible(session, question):
+        reply = await capturing.put(session, question)
+    else:
+        reply = await put(session, question)
     item = session.job.walk.item(session.state)
     if question.kind == "decide":
         wanted = next(choice for choice in question.choices if choice.value == reply.choice).wants_reason
@@ -53,11 +58,17 @@ async def ask(session: Session, action: Ask) -> Event:
         return Decided(item=action.item, choice=reply.choice, reason=reply.text.strip())  # type: ignore[arg-type]
     if reply.choice == "make safe":
         raise Stopped(f"the operator chose it at: {question.title}")
+    if question.kind == "parts":
+        parts = "" if reply.choice == "no" else reply.text.strip()
+        if parts:
+            await session.hands.repair()
+        return PartsReplaced(item=action.item, parts=parts, semiconductors=reply.choice == "semiconductors")
     if item.act and reply.choice == "done":
         await session.hands.act(item.act)
     if question.point and question.kind in ("probes", "tell"):
         await session.hands.probe(question.point)
-        await session.clock.spend(1.0)
+        if not session.placed_by_itself:
+            await session.clock.spend(1.0)
     return Answered(item=action.item, choice=reply.choice, text=reply.text.strip())  # type: ignore[arg-type]
 
 
@@ -102,14 +113,3 @@ async def put_entry(session: Session, question: Question, parse: Callable[[str],
             return reply, parse(reply.text)
         except EntryError as error:
             refused = str(error)
-
-
-async def wait(session: Session, action: Wait) -> None:
-    """Let time pass under watch."""
-    left_s = action.seconds
-    while left_s > 0:
-        session.busy(action.reason, share=1.0 - left_s / action.seconds, remaining_s=left_s)
-        slice_s = min(1.0, left_s)
-        await session.clock.spend(slice_s)
-        left_s -= slice_s
-        await session.sample()

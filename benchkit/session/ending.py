@@ -1,4 +1,4 @@
-"""The ends that nobody wished for: an error of the session, and a keeper that has died."""
+"""How a walk ends: its last lines, and the ends that nobody wished for, an error of the session or a keeper's death."""
 
 from __future__ import annotations
 
@@ -9,8 +9,11 @@ from concurrent.futures import Future
 from typing import TYPE_CHECKING
 
 from benchkit.errors import BenchkitError, InstrumentError
-from benchkit.events import OutputOff
+from benchkit.events import Closed, Event, Noted, OutputOff
 from benchkit.keeper.protocol import KeeperDied, Push
+from benchkit.procedure.actions import Write
+from benchkit.session.creeping import left_words
+from benchkit.session.hands import end_note
 
 if TYPE_CHECKING:
     from benchkit.session.run import Session
@@ -19,6 +22,34 @@ OFF_S = 6.0
 """How long "off" may take altogether before the words are that nothing is known (s)."""
 
 RESUME_HINT = "Go on later with benchkit walk --resume and the record's name"
+
+
+def time_note(seconds: float, target_s: float | None) -> Noted | None:
+    """Say how long a channel took; None where its procedure has no time for that."""
+    if target_s is None:
+        return None
+    return Noted(
+        text=f"This channel took {left_words(seconds, exact=True)}; the target is {left_words(target_s)}.",
+        figures={"seconds": seconds, "target_seconds": target_s},
+    )
+
+
+async def last_look(session: Session, action: Write) -> Event | None:
+    """Return what is to be written; before the last line comes what the model and a rehearsal's unit still say."""
+    if not isinstance(action.event, Closed):
+        return action.event
+    if session.state.suspecting:
+        await session.suspects_settled()
+    noted = session.noted_at_the_end
+    if "time" not in noted:
+        noted.add("time")
+        told = time_note(session.elapsed_s, session.job.procedure.head.target_time_s)
+        if told is not None:
+            return told
+    if session.hands.simulated and "truth" not in noted:
+        noted.add("truth")
+        return end_note(await session.hands.truth())
+    return action.event
 
 
 async def secure(session: Session, reason: str) -> None:

@@ -10,6 +10,7 @@ from dataclasses import dataclass
 from typing import Literal, Protocol
 
 from benchkit.events import SupplyState, Verdict
+from benchkit.judge.advice import Mood
 from benchkit.procedure.actions import Question
 
 Energised = Literal["off", "on", "unknown"]
@@ -87,9 +88,42 @@ class SupplyView:
 
 @dataclass(frozen=True, kw_only=True)
 class LiveView:
-    """A reading that is being watched: value in `unit`, limits and target, age, and the last of its trend.
+    """A reading that is being watched: while the screw is turned, or while a soak comes to rest.
 
-    `trend` holds (seconds, value) pairs, oldest first, at most a few hundred.
+    Parameters
+    ----------
+    point, unit : str
+    value : float or None
+        In `unit`; None when there is none (overload, a probe that slipped).
+    text : str
+        The value, ready to show.
+    low, high, target : float
+        The limits that it has to end in, and what is aimed at.
+    age_s : float
+    inside : bool
+        The value lies inside the limits now.
+    trend : tuple of (float, float)
+        (seconds, value), oldest first, at most a few hundred.
+    mood : str
+        What is going on, for colour and shape; what it means in words stands in `advice`.
+    advice : str
+        One line, ready to show: "a quarter turn anticlockwise", "hold: it is still rising".
+    advised_turns : float or None
+        Turns of the screw that are advised, positive for more bias; None where nothing is to be turned.
+    rate_text : str
+        "rising 0.12 mV/min"; "" while it can't be told.
+    settles_text : str
+        "will rest at 20.4 mV ± 0.2 mV, in 1 min 40 s"; "" while it can't be told.
+    settled_share : float or None
+        How far a soak is, 0 to 1.
+    predicted : tuple of (float, float)
+        What is expected from now on, on the time axis of `trend`.
+    settles_low, settles_high : float or None
+        Where it will come to rest, 95 % interval.
+    capture : str
+        How far a reading without hands is: "at rest 1.2 s of 2.0 s", "probe not on the point"; "" where none is due.
+    captured : int
+        Grows by one with each value taken: the bell rings.
     """
 
     point: str
@@ -102,6 +136,17 @@ class LiveView:
     age_s: float
     inside: bool
     trend: tuple[tuple[float, float], ...] = ()
+    mood: Mood = "turn"
+    advice: str = ""
+    advised_turns: float | None = None
+    rate_text: str = ""
+    settles_text: str = ""
+    settled_share: float | None = None
+    predicted: tuple[tuple[float, float], ...] = ()
+    settles_low: float | None = None
+    settles_high: float | None = None
+    capture: str = ""
+    captured: int = 0
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -165,6 +210,8 @@ class View:
     says that limits of this unit are being worked out, for which nobody has to wait. `aim` and `suspects` are None
     where there is nothing to say. `why` says what kept the verdict from being better.
     `broken` names, at the end of a rehearsal, the parts of the simulated unit that have failed, or says that none has.
+    `elapsed_s` is the time since this channel was begun and `target_time_s` what the procedure allows for it; `channel`
+    names it, "" for the only one.  `next_probe` says where the probes go after the reading that is being taken.
     """
 
     kind: Literal["walk", "rehearsal"]
@@ -197,6 +244,10 @@ class View:
     suspects: SuspectsView | None = None
     why: str = ""
     broken: str = ""
+    elapsed_s: float | None = None
+    target_time_s: float | None = None
+    channel: str = ""
+    next_probe: str = ""
 
 
 @dataclass(frozen=True, kw_only=True)

@@ -6,6 +6,7 @@ from collections.abc import Callable
 from typing import Any, Protocol
 
 from benchkit.events import Noted
+from benchkit.procedure.items import DRIVE_SHARES
 from benchkit.session.job import figures_of
 from benchkit.session.threads import in_thread
 
@@ -27,6 +28,12 @@ class SimulatedHands(Protocol):
 
     def short(self, shorted: bool) -> Any:
         """Short the supply's leads or open the short."""
+
+    def drive(self, share: float) -> Any:
+        """Drive the stage to a share of full power into the dummy load; 0 ends it."""
+
+    def repair(self) -> Any:
+        """Put new parts in for what is faulty or burnt."""
 
     def advance(self, seconds: float) -> Any:
         """Let simulated time pass."""
@@ -56,7 +63,7 @@ class Hands:
         return self._simulated is not None
 
     async def act(self, act: str) -> None:
-        """Do what a told item says: short the leads, connect the unit, turn the trimmer to its least-bias end."""
+        """Do what a told item says: with the leads, the unit, its trimmer, the dummy load and the generator."""
         bench = self._simulated
         if bench is None:
             return
@@ -68,6 +75,16 @@ class Hands:
             await self._do(lambda: bench.connect(True))
         elif act == "trimmer to least" and not self._own_screwdriver:
             await self._do(lambda: bench.trimmer_to("least"))
+        elif act in DRIVE_SHARES:
+            await self._do(lambda: bench.drive(DRIVE_SHARES[act]))
+        elif act == "take the dummy load off":
+            await self._do(lambda: bench.drive(0.0))
+
+    async def repair(self) -> None:
+        """Put new parts in where some were said to be replaced; the simulated unit gets those that it needs."""
+        bench = self._simulated
+        if bench is not None:
+            await self._do(bench.repair)
 
     async def probe(self, point: str | None) -> None:
         """Put the probes on a test point."""

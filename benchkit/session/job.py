@@ -36,6 +36,10 @@ class Job:
     narrow_rarely : bool
         Limits are narrowed once for each section, after its first reading, for what is read under the condition that
         comes next, instead of after each reading: for whoever reads faster than the model thinks.
+    hands_free : bool
+        A reading that is at rest on its point is taken without a key.
+    bell : bool
+        Each value that was taken so is counted for the screen to ring a bell.
     """
 
     design: Design
@@ -48,6 +52,8 @@ class Job:
     units: int | None = None
     seed: int = 0
     narrow_rarely: bool = False
+    hands_free: bool = True
+    bell: bool = True
 
     @property
     def manual_meter(self) -> bool:
@@ -58,6 +64,13 @@ class Job:
     def manual_supply(self) -> bool:
         """A person sets the supply."""
         return self.setup.get("supply") is None
+
+
+class Asked:
+    """The operator's wish for off, in the queue of what has come."""
+
+    def __init__(self, reason: str) -> None:
+        self.reason = reason
 
 
 class Stopped(Exception):  # noqa: N818 (no error: the person chose it)
@@ -89,7 +102,9 @@ def refusal(question: Question, reply: Reply) -> str:
     if chosen is None:
         return f"{reply.choice!r} is no answer here. Answer {' or '.join(choices)}."
     if chosen.wants_reason and not reply.text.strip():
-        return "A reason in words is needed to go on."
+        return (
+            f"What is needed, in words: {chosen.wanted}." if chosen.wanted else "A reason in words is needed to go on."
+        )
     if question.kind == "hold" and reply.choice == "yes" and reply.text.strip().lower() != "yes":
         return "This is a hold point: type the word yes."
     return ""

@@ -1,52 +1,46 @@
-"""Readings: from the meter through the keeper, from the supply's own display, or typed in; and the live trim."""
+"""Readings: from the meter through the keeper, from the supply's own display, or typed in."""
 
 from __future__ import annotations
 
 import asyncio
 import re
-from collections import deque
-from dataclasses import replace
 from typing import TYPE_CHECKING
 
 from benchkit import quantities
-from benchkit.errors import BenchkitError, EntryError, InstrumentError
-from benchkit.events import Event, ReadingMissed, ReadingTaken, TrimEnded
+from benchkit.errors import EntryError, InstrumentError
+from benchkit.events import Event, ReadingMissed, ReadingTaken
 from benchkit.measure.accuracy import Accuracy
 from benchkit.measure.readings import Reading
 from benchkit.measure.uncertainty import make_reading
-from benchkit.procedure.actions import Choice, Question, Read, Trim
-from benchkit.procedure.questions import END, STOP
+from benchkit.procedure.actions import Choice, Question, Read
+from benchkit.procedure.questions import STOP
 from benchkit.quantities import Overload
-from benchkit.session.front import LiveView
-from benchkit.session.job import Stopped
 from benchkit.session.patience import patiently
 
 if TYPE_CHECKING:
     from benchkit.session.run import Session
 
-TRIM_INTERVAL_S = 0.25
-"""Between two live readings, at the wall clock."""
-
-TURN_S = 2.0
-"""Simulated seconds that a hand needs for a move of the screw."""
-
 
 async def read(session: Session, action: Read) -> Event:
     """Take one reading; a meter that gives none is told as such."""
     session.busy(f"Reading {action.point}.")
+    how, session.placed_by_itself = session.placed_by_itself, ""
     try:
         if action.function == "dc current":
             reading = await _rail_current(session, action)
         elif session.job.manual_meter:
             reading = await _by_hand(session, action.point, action.function, action.unit)
         else:
-            await _settle(session, action)
+            if not how:  # else it has been seen at rest already
+                await _settle(session, action)
             taking = by_meter(session, action.point, action.function, action.unit, action.samples)
             reading = await patiently(session, action, taking)
     except (InstrumentError, EntryError) as error:
         return ReadingMissed(item=action.item, point=action.point, problem=str(error))
     await session.sample()
-    return ReadingTaken(item=action.item, reading=reading)
+    if how:
+        session.rang()
+    return ReadingTaken(item=action.item, reading=reading, how=how)
 
 
 async def _settle(session: Session, action: Read) -> None:
@@ -76,6 +70,18 @@ async def by_meter(session: Session, point: str, function: str, unit: str, sampl
     )
 
 
+async def by_instrument(session: Session, point: str, function: str, unit: str, samples: int) -> Reading:
+    """Take one reading from what reads this function: a rail's current from the supply, all else by meter.
+
+    Raises
+    ------
+    InstrumentError, EntryError
+    """
+    if function == "dc current":
+        return await _supply_current(session, point)
+    return await by_meter(session, point, function, unit, samples)
+
+
 def _overload(point: str, function: str, unit: str, meter: str, *, negative: bool) -> Reading:
     return Reading(
         point=point,
@@ -92,13 +98,17 @@ def _overload(point: str, function: str, unit: str, meter: str, *, negative: boo
 async def _rail_current(session: Session, action: Read) -> Reading:
     if session.job.manual_supply:
         return await _by_hand(session, action.point, action.function, action.unit)
+    return await _supply_current(session, action.point)
+
+
+async def _supply_current(session: Session, point: str) -> Reading:
     state = await asyncio.wrap_future(session.keeper.supply_state())
     session.note_supply(state)
-    amps = state.positive_a if action.point.startswith("rail+") else state.negative_a
+    amps = state.positive_a if point.startswith("rail+") else state.negative_a
     if amps is None:
-        raise InstrumentError("garbled", f"The supply gave no current for {action.point}", "a number", "Read it again")
+        raise InstrumentError("garbled", f"The supply gave no current for {point}", "a number", "Read it again")
     return make_reading(
-        action.point, amps, "A", function="dc current", accuracy=session.job.supply_accuracy, meter="the supply"
+        point, amps, "A", function="dc current", accuracy=session.job.supply_accuracy, meter="the supply"
     )
 
 
@@ -144,98 +154,3 @@ def typed_reading(text: str, point: str, function: str, unit: str, accuracy: Acc
 
 def _example(unit: str) -> str:
     return {"V": "12.3 mV", "A": "21.5 mA", "ohm": "4k7 or 0R22", "degC": "31 degC"}.get(unit, "12.3 mV")
-
-
-# -- the live trim -------------------------------------------------------------------------------------------------
-
-
-async def trim(session: Session, action: Trim) -> Event:
-    """Show the reading while the screw is turned, until the person takes it or gives up."""
-    if session.job.manual_meter:
-        return await _trim_by_hand(session, action)
-    trend: deque[tuple[float, float]] = deque(maxlen=240)
-    refused = ""
-    asking = None
-    session.busy("")
-    samples = max(1, session.job.walk.item(session.state).samples)
-    try:
-        while True:
-            try:
-                reading = await by_meter(session, action.point, action.function, action.unit, 1)
-            except (InstrumentError, EntryError) as error:
-                return ReadingMissed(item=action.item, point=action.point, problem=str(error))
-            _live(session, action, reading, trend)
-            await session.sample()
-            if asking is None:
-                asking = asyncio.create_task(session.front.ask(action.question, refused))
-            await asyncio.wait({asking}, timeout=TRIM_INTERVAL_S)
-            if not session.clock.own_watch:
-                await session.clock.spend(TRIM_INTERVAL_S)
-            if not asking.done():
-                continue
-            reply = asking.result()
-            asking, refused = None, ""
-            match reply.choice:
-                case "take":
-                    final = await by_meter(session, action.point, action.function, action.unit, samples)
-                    return ReadingTaken(item=action.item, reading=final)
-                case "end":
-                    return TrimEnded(item=action.item, problem=reply.text.strip() or "The screw is at its end.")
-                case "make safe":
-                    raise Stopped(f"the operator chose it at: {action.question.title}")
-                case "turn" if session.hands.simulated:
-                    await session.hands.turn(reply.turns)
-                    await session.clock.spend(TURN_S)
-                case _:
-                    refused = f"{reply.choice!r} is no answer here. Take the reading, or say that it can't be reached."
-    finally:
-        if asking is not None:
-            asking.cancel()
-
-
-def _live(session: Session, action: Trim, reading: Reading, trend: deque[tuple[float, float]]) -> None:
-    value = reading.value
-    if value is not None:
-        trend.append((session.clock.now(), value))
-    session.show_moment(
-        busy="",
-        live=LiveView(
-            point=action.point,
-            unit=action.unit,
-            value=value,
-            text="overload" if value is None else quantities.show(value, action.unit, 4),
-            low=action.low,
-            high=action.high,
-            target=action.target,
-            age_s=0.0,
-            inside=value is not None and action.low <= value <= action.high,
-            trend=tuple(trend),
-        ),
-    )
-
-
-async def _trim_by_hand(session: Session, action: Trim) -> Event:
-    """Trim with a meter that a person reads: entries until one is inside the limits and taken."""
-    question = replace(
-        action.question,
-        kind="by hand",
-        do=f"{action.question.do} Type what the meter shows after each move, with its unit.",
-        choices=(Choice(value="take", label="Enter"), END, STOP),
-    )
-    accuracy = session.job.accuracy
-
-    def parse(text: str) -> Reading:
-        return typed_reading(text, action.point, action.function, action.unit, accuracy)
-
-    while True:
-        reply, reading = await session.ask_entry(question, parse)
-        if reply.choice == "end":
-            return TrimEnded(item=action.item, problem=reply.text.strip() or "The screw is at its end.")
-        if not isinstance(reading, Reading):
-            raise BenchkitError("A front end answered a trim with something that is no entry")
-        _live(session, action, reading, deque())
-        if reading.value is not None and action.low <= reading.value <= action.high:
-            return ReadingTaken(item=action.item, reading=reading)
-        way = "more" if reading.value is not None and reading.value < action.low else "less"
-        shown = "overload" if reading.value is None else quantities.show(reading.value, action.unit)
-        question = replace(question, expected=f"{shown}: {way} bias is needed. {action.question.expected}")

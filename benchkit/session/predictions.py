@@ -6,10 +6,15 @@ Everything here blocks for up to some seconds and touches nothing but its argume
 from __future__ import annotations
 
 import math
+from dataclasses import dataclass, replace
+from functools import lru_cache
 
+from benchkit import quantities
 from benchkit.errors import BenchkitError, ModelError
-from benchkit.events import Event, Judged, PointLimits, Predicted, PredictionRefused
+from benchkit.events import Event, Judged, PointLimits, Predicted, PredictionRefused, Tripped
+from benchkit.judge.answers import Answers, OfUnits
 from benchkit.judge.rules import RuleFacts, evaluate
+from benchkit.judge.screw import KNEE_V
 from benchkit.measure.readings import Reading
 from benchkit.procedure.actions import CheckWarm, Evaluate, Predict
 from benchkit.procedure.items import Item, Joined
@@ -74,6 +79,142 @@ def _open(value: float | None) -> float | None:
     return None if value is None or not math.isfinite(value) else value
 
 
+@dataclass(frozen=True, kw_only=True)
+class Screw:
+    """What the model says of a trimmer's screw, for the reading of one point.
+
+    Parameters
+    ----------
+    per_turn : float or None
+        Change of the reading for a turn towards more bias, at `full`; None where there is no model of it.
+    full : float
+        The reading at the design's target.
+    knee : float
+        Where the answer to the screw goes from exponential to linear; see `benchkit.judge.screw`.
+    settled_share : float
+        How much more a move does once all has come to rest than at once.
+    more_way : str
+    turns : float
+        From end to end.
+    standing : float
+        What is read there without any bias: of a rail, what the feeds and the spreader draw.
+    """
+
+    per_turn: float | None
+    full: float
+    knee: float
+    settled_share: float
+    more_way: str
+    turns: float
+    standing: float = 0.0
+
+
+@lru_cache(maxsize=64)
+def screw_of(
+    design: Design,
+    point: str,
+    target: float,
+    share: float,
+    fuse_ohm: float | None = None,
+    condition: Condition | None = None,
+) -> Screw:
+    """Say what a turn does to the reading of a point.
+
+    Parameters
+    ----------
+    design : Design
+    point : str
+        An emitter drop, a pair's drop, a rail's current or its drop over a resistor in the fuse's place.
+    target : float
+        What is aimed at there, which is `share` of the reading at the design's target.
+    share : float
+    fuse_ohm : float, optional
+    condition : Condition, optional
+        Under which it is read; without, a rail's standing current is left out of the account.
+    """
+    from benchkit.stage.trimmer_slope import slope
+
+    trimmer = design.spreader.trimmer
+    standing = 0.0 if condition is None else _standing(design, point, share, condition)
+    full = standing + (target - standing) / share
+    emitter_ohm = design.output.emitter_resistor.value
+    # A rail's reading for each volt of emitter drop: the current of all pairs, and over a resistor its drop.
+    rail = design.output.pairs / emitter_ohm * (fuse_ohm or 0.0 if point.endswith(".drop") else 1.0)
+    volts = 2.0 if ".pair." in point else rail if point.startswith("rail") else 1.0
+    if trimmer is None:
+        return Screw(
+            per_turn=None, full=full, knee=KNEE_V * volts, settled_share=1.0, more_way="clockwise", turns=0.0
+        )  # fmt: skip
+    per_turn, settled = None, 1.0
+    try:
+        found = slope(design)
+    except BenchkitError:
+        found = None
+    if found is not None:
+        per_turn = found.drop_v_per_turn * volts or None
+        if found.settled_drop_v_per_turn is not None and found.drop_v_per_turn > 0.0:
+            settled = found.settled_drop_v_per_turn / found.drop_v_per_turn
+    return Screw(
+        per_turn=per_turn,
+        full=full,
+        knee=KNEE_V * volts,
+        settled_share=settled,
+        more_way=trimmer.raises_bias,
+        turns=trimmer.turns,
+        standing=standing,
+    )
+
+
+def _standing(design: Design, point: str, share: float, condition: Condition) -> float:
+    """Return what the nominal unit's rail carries beside the quiescent current; 0 where that can't be told."""
+    from benchkit.stage.draws import nominal
+    from benchkit.stage.operate import solve_units
+    from benchkit.stage.trimmer import quiescent_a
+
+    if not point.startswith("rail") or design.spreader.trimmer is None:
+        return 0.0
+    ohm = 1.0 if point.endswith(".current") else condition.fuse_ohm or 0.0
+    try:
+        there = replace(condition, trimmer="target", target_share=share, limit_a=None)
+        solved = solve_units(design, nominal(design), there, loading="none")
+    except BenchkitError:
+        return 0.0
+    if point not in solved.points or not solved.converged[0]:
+        return 0.0
+    return max(float(solved.points[point][0]) - ohm * float(quiescent_a(design, solved)[0]), 0.0)
+
+
+def answers_of(design: Design, point: str, condition: Condition | None) -> Answers | None:
+    """Say what may be expected of healthy units when their screw is turned; None where there is no model of it."""
+    from benchkit.stage.trimmer_curves import curves
+
+    if condition is None:
+        return None
+    try:
+        found = curves(design, point, condition)
+        return OfUnits(found.turns, found.values)
+    except (BenchkitError, ValueError):
+        return None
+
+
+def time_constants(design: Design) -> tuple[float, ...]:
+    """Thermal time constants (s) of a design, the longest first; () where the model has none."""
+    from benchkit.stage.settling_times import lags_of
+
+    try:
+        return lags_of(design)
+    except BenchkitError:
+        return ()
+
+
+def runaway(point: str, unit: str, value: float | None, limit: float | None) -> Tripped:
+    """Make the trip of a reading that rises by itself, faster and faster."""
+    shown = "" if value is None else f": {quantities.show(value, unit, 3)}"
+    return Tripped(
+        reason=f"{point} rises by itself, faster and faster{shown}", what=point, value=value, limit=limit
+    )  # fmt: skip
+
+
 def check_warm(design: Design, action: CheckWarm, seed: int) -> Judged:
     """Judge whether a design comes to rest warm under the conditions of its plan.
 
@@ -136,6 +277,7 @@ def rule_facts(design: Design, walk: Walk, state: State, item: Item) -> RuleFact
     """Collect what a rule may know: readings of its own section, cold resistors, the model's limits there."""
     readings: dict[str, Reading] = {}
     cold: dict[str, Reading] = {}
+    driven: dict[str, Reading] = {}
     limits = {}
     rails: tuple[float, float] | None = None
     for other in walk.plan.items:
@@ -145,6 +287,8 @@ def rule_facts(design: Design, walk: Walk, state: State, item: Item) -> RuleFact
         if not other.point.powered:
             if other.point.name.startswith("ohm."):
                 cold[other.point.name.removeprefix("ohm.")] = reading
+        elif other.section == item.section and other.driven:
+            driven[other.point.name] = reading
         elif other.section == item.section:
             readings[other.point.name] = reading
             known = walk.limits_for(state, other)
@@ -157,6 +301,7 @@ def rule_facts(design: Design, walk: Walk, state: State, item: Item) -> RuleFact
         design=design,
         readings=readings,
         cold=cold,
+        driven=driven,
         limits=limits,
         positive_v=None if rails is None else rails[0],
         negative_v=None if rails is None else rails[1],

@@ -21,7 +21,7 @@ from collections.abc import Callable
 from dataclasses import replace
 from typing import Any
 
-from benchkit.errors import BenchkitError, IllegalEvent, InstrumentError
+from benchkit.errors import IllegalEvent, InstrumentError
 from benchkit.events import (
     Closed,
     Event,
@@ -30,23 +30,24 @@ from benchkit.events import (
     OutputOff,
     StopAsked,
     SupplyState,
+    Tripped,
 )
 from benchkit.keeper.client import KeeperClient
 from benchkit.keeper.protocol import KeeperDied, Push
 from benchkit.procedure.actions import (
     Action,
     Question,
-    Write,
 )
 from benchkit.procedure.hearing import never_on_by_hand
 from benchkit.procedure.securing import MAKING_SURE
 from benchkit.procedure.state import Phase, State
 from benchkit.session import acting, asking, ending, powering
+from benchkit.session.acting import lapse
 from benchkit.session.aside import Aside
 from benchkit.session.clock import Clock
 from benchkit.session.front import Front, Reply
-from benchkit.session.hands import Hands, end_note
-from benchkit.session.job import Job, Stopped
+from benchkit.session.hands import Hands
+from benchkit.session.job import Asked, Job, Stopped
 from benchkit.session.views import Headings, Moment, Painter
 
 HEARTBEAT_S = 0.2
@@ -67,15 +68,19 @@ class Session:
         self.state = State()
         self.moment = Moment()
         self.seq = 0
-        self.pushed: deque[Push | KeeperDied | _Asked | Noted] = deque()
+        self.pushed: deque[Push | KeeperDied | Asked | Noted | Tripped] = deque()
         self._woken = asyncio.Event()
         self._loop = asyncio.get_running_loop()
-        self._truth_noted = False
+        self.noted_at_the_end: set[str] = set()
         self._death_told = False
         self._off_asked = False
         self._moved_on = False
         self.watch_since = 0.0
         self.last_off: OutputOff | None = None
+        self.captured = 0
+        self.placed_by_itself = ""
+        self.rested: tuple[str, float] | None = None
+        self._began_s = clock.now()
         self._painter = Painter(
             job.walk,
             Headings(
@@ -83,6 +88,7 @@ class Session:
                 design=f"{job.design.name} {job.design.revision}",
                 procedure=job.procedure.head.name,
                 purpose=job.procedure.head.purpose,
+                target_time_s=job.procedure.head.target_time_s,
             ),
         )
         self._last_actions: tuple[Action, ...] = ()
@@ -112,7 +118,20 @@ class Session:
         if not self._off_asked:
             self._off_asked = True
             with contextlib.suppress(RuntimeError):
-                self._loop.call_soon_threadsafe(self._take_push, _Asked(reason))
+                self._loop.call_soon_threadsafe(self._take_push, Asked(reason))
+
+    def trip(self, event: Tripped) -> None:
+        """Switch off at once because of a reading, and have that written; on the event loop, and returns at once."""
+        if not self.job.manual_supply:
+            self.keeper.off(f"tripped: {event.reason}")
+        self._take_push(event)
+
+    def rang(self) -> None:
+        """Count a value that was taken without a key, for the bell."""
+        if self.job.bell:
+            self.captured += 1
+            if self.moment.live is not None:
+                self.show_moment(live=replace(self.moment.live, captured=self.captured))
 
     @property
     def nothing_to_switch_off(self) -> bool:
@@ -193,7 +212,7 @@ class Session:
                     self._woken.set()
                 fresh = self._ask_aside(fresh)
                 if fresh or not self._stands(before):
-                    await _lapse(running)
+                    await lapse(running)
                     running = None
                     newest = self.moment.supply if self.state.supply is heard else None
                     self.moment = Moment(message=self.moment.message, supply=newest)
@@ -201,7 +220,7 @@ class Session:
                 self.show()
         finally:
             self._aside.stop()
-            await _lapse(running)
+            await lapse(running)
         return self.state.closed
 
     async def _begin(self, first: Event) -> Action | None:
@@ -209,6 +228,7 @@ class Session:
             self.state, actions = self.job.walk.handle(self.state, first, self.clock.now())
             self.seq = self.state.count
         else:
+            self.noted_at_the_end.add("time")  # what came before the break counts too, and nobody knows how long it was
             actions = await self._keep(first)
         self.show()
         return actions[0] if actions else None
@@ -267,17 +287,17 @@ class Session:
             if isinstance(push, KeeperDied):
                 self._death_told = True
                 raise await ending.keeper_died(self, push)
-            if isinstance(push, (_Asked, Noted)):
+            if isinstance(push, (Asked, Noted, Tripped)):
                 if self.state.phase in ("unopened", "closed"):
                     continue
-                got = await self._keep(push if isinstance(push, Noted) else StopAsked(reason=push.reason))
+                got = await self._keep(StopAsked(reason=push.reason) if isinstance(push, Asked) else push)
                 if self._moved_on:
                     self.pushed.append(push)  # what moved the chain on comes first
                     await asyncio.sleep(0.01)
                     continue
                 if isinstance(push, Noted):
                     self.moment.message = push.text
-                elif not self.state.stopped:
+                elif isinstance(push, Asked) and not self.state.stopped:
                     self._off_asked = False  # the walk kept its place, because the supply was off anyway
                 fresh = got or fresh
                 continue
@@ -302,7 +322,7 @@ class Session:
         told = [push for push in self.pushed if isinstance(push, KeeperDied)]
         return told[0] if told else KeeperDied(problem=error.came)
 
-    def _take_push(self, push: Push | KeeperDied | _Asked | Noted) -> None:
+    def _take_push(self, push: Push | KeeperDied | Asked | Noted | Tripped) -> None:
         self.pushed.append(push)
         self._woken.set()
 
@@ -350,16 +370,11 @@ class Session:
         """Put a question that wants something typed, until it can be used."""
         return await asking.put_entry(self, question, parse)
 
-    async def last_look(self, action: Write) -> Event | None:
-        """Return what is to be written; before the last line comes what the model and a rehearsal's unit still say."""
-        if isinstance(action.event, Closed) and self.state.suspecting:
-            self.busy("The model still works out what would explain the readings.")
-            await self._aside.settled(SUSPECTS_S)
-            await asyncio.sleep(0.05)  # an answer that is there by now makes the walk close anew
-        if isinstance(action.event, Closed) and self.hands.simulated and not self._truth_noted:
-            self._truth_noted = True
-            return end_note(await self.hands.truth())
-        return action.event
+    async def suspects_settled(self) -> None:
+        """Give the model a while for suspects that are still being worked out."""
+        self.busy("The model still works out what would explain the readings.")
+        await self._aside.settled(SUSPECTS_S)
+        await asyncio.sleep(0.05)  # an answer that is there by now makes the walk close anew
 
     # -- showing -----------------------------------------------------------------------------------------------
 
@@ -368,29 +383,17 @@ class Session:
         self.moment = replace(self.moment, busy=words, busy_share=share, remaining_s=remaining_s)
         self.show()
 
+    @property
+    def elapsed_s(self) -> float:
+        """Time since this run of the walk began (s)."""
+        return self.clock.now() - self._began_s
+
     def show(self) -> None:
         """Give the front end a new picture."""
         self.moment.narrowing = self._aside.narrowing
-        self.front.show(self._painter.paint(self.state, self.moment))
+        self.front.show(self._painter.paint(self.state, self.moment, self.elapsed_s))
 
     def show_moment(self, **changes: Any) -> None:
         """Change what moves on the screen."""
         self.moment = replace(self.moment, **changes)
         self.show()
-
-
-class _Asked:
-    """The operator's wish for off, in the queue of what has come."""
-
-    def __init__(self, reason: str) -> None:
-        self.reason = reason
-
-
-async def _lapse(task: asyncio.Task[Event | None] | None) -> None:
-    """Let an action go that nobody waits for any more, whatever came or would have come of it."""
-    if task is None:
-        return
-    if not task.done():
-        task.cancel()
-    with contextlib.suppress(asyncio.CancelledError, Stopped, BenchkitError):
-        await task

@@ -53,8 +53,10 @@ class Setting:
     plant : str
         The fault planted in a rehearsal, "" without one.
     units : int or None
-    narrow_rarely : bool
+    narrow_rarely, hands_free, bell : bool
         See `benchkit.session.job.Job`.
+    channel : str
+        Which channel of the unit; "" for the only one.
     cautions : tuple of str
         What has to be said about this bench, such as a calibration that is overdue.
     """
@@ -74,6 +76,9 @@ class Setting:
     plant: str = ""
     units: int | None = None
     narrow_rarely: bool = False
+    hands_free: bool = True
+    bell: bool = True
+    channel: str = ""
     cautions: tuple[str, ...] = field(default=())
 
 
@@ -91,6 +96,19 @@ class Runner:
         if self.session is not None:
             self.session.off_now(reason)
 
+    @property
+    def known_off(self) -> bool:
+        """Whether what feeds the unit is confirmed off, said to be off, or was never on: only then one may go on."""
+        session = self.session
+        if session is None:
+            return self.last_off is None or self.last_off.confirmed
+        if session.state.on_lamp:
+            return False
+        if session.job.manual_supply:
+            return session.state.energised == "off" or not session.state.ever_on
+        off = self.last_off or session.last_off
+        return off.confirmed if off is not None else not session.state.ever_on
+
     def last_words(self) -> str:
         """Say what is known of the supply at the end; "" when this walk never had anything to do with it."""
         session = self.session
@@ -99,7 +117,7 @@ class Runner:
         if session.state.on_lamp:
             return "The unit is on the series lamp, and nothing here switches it: SWITCH IT OFF BY HAND, pull its plug."
         if session.job.manual_supply:
-            if session.state.energised == "off" or not session.state.ever_on:
+            if self.known_off:
                 return ""
             return "The supply is in your hands and may be on: SWITCH IT OFF BY HAND."
         off = self.last_off or session.last_off
@@ -118,7 +136,7 @@ class Runner:
         """
         setting = self.setting
         plan = await in_thread(lambda: make_plan(setting.procedure, setting.design))
-        self.record = free_path(setting.records, unit, datetime.datetime.now(datetime.UTC))
+        self.record = free_path(setting.records, unit, datetime.datetime.now(datetime.UTC), setting.channel)
         opened = WalkOpened(
             version=__version__,
             walk=uuid.uuid4().hex,
@@ -138,6 +156,7 @@ class Runner:
             supply="manual" if setting.setup.get("supply") is None else "scpi",
             meter="manual" if setting.setup.get("meter") is None else "scpi",
             cautions=setting.cautions,
+            channel=setting.channel,
         )
         return await self._run(Walk(plan), State(), opened, front, new=True)
 
@@ -169,6 +188,8 @@ class Runner:
             units=setting.units,
             seed=setting.seed,
             narrow_rarely=setting.narrow_rarely,
+            hands_free=setting.hands_free,
+            bell=setting.bell,
         )
         early: list[Any] = []
         session: Session | None = None

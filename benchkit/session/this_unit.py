@@ -14,7 +14,7 @@ from typing import TYPE_CHECKING
 from benchkit.errors import BenchkitError
 from benchkit.events import Narrowed, NarrowedLimits, ProbeNamed, Suspected, SuspectEvidence, SuspectNamed
 from benchkit.procedure.actions import Narrow, Suspect, Target
-from benchkit.procedure.moves import HEALTHY
+from benchkit.procedure.closing import HEALTHY
 from benchkit.stage.design import Design
 
 if TYPE_CHECKING:

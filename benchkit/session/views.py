@@ -62,6 +62,7 @@ class Headings:
     design: str
     procedure: str
     purpose: str
+    target_time_s: float | None = None
 
 
 class Painter:
@@ -76,16 +77,20 @@ class Painter:
         self._results: tuple[ResultView, ...] = ()
         self._aim: AimView | None = None
         self._suspects: SuspectsView | None = None
+        self._next_probe = ""
+        self._numbers = (1, len(walk.plan))
         self._drawn: dict[tuple[Judged, bool, str], ResultView] = {}
 
-    def paint(self, state: State, moment: Moment) -> View:
-        """Draw the whole picture of one moment."""
+    def paint(self, state: State, moment: Moment, elapsed_s: float | None = None) -> View:
+        """Draw the whole picture of one moment; `elapsed_s` is the time since this run of the walk began (s)."""
         if state is not self._state:
             self._state = state
             self._sections = _sections(self._walk.plan, state)
             self._results = tuple(self._result(state, judged) for judged in state.results)
             self._aim = _aim(self._walk, state)
             self._suspects = _suspects(self._walk, state)
+            self._next_probe = _next_probe(self._walk.plan, state)
+            self._numbers = _numbers(self._walk.plan, state)
         opened, item, headings = state.opened, self._walk.item(state), self._headings
         return View(
             kind="walk" if opened is None else opened.kind,
@@ -100,8 +105,8 @@ class Painter:
             section_title=item.section_title,
             item=item.id,
             item_title=item.title,
-            item_number=min(state.index + 1, len(self._walk.plan)),
-            item_count=len(self._walk.plan),
+            item_number=self._numbers[0],
+            item_count=self._numbers[1],
             results=self._results,
             supply=supply_view(state, item, moment.supply or state.supply, way_out=self._walk.way_out(state)),
             live=moment.live,
@@ -118,6 +123,10 @@ class Painter:
             suspects=self._suspects,
             why="" if state.closed is None else state.closed.why,
             broken=state.broken,
+            elapsed_s=elapsed_s,
+            target_time_s=headings.target_time_s,
+            channel="" if opened is None else opened.channel,
+            next_probe=self._next_probe,
         )
 
     def _result(self, state: State, judged: Judged) -> ResultView:
@@ -126,6 +135,28 @@ class Painter:
             extras = {item.id: item.title for item in state.extras}
             self._drawn[key] = _result(self._titles.get(judged.item) or extras.get(judged.item, judged.item), *key)
         return self._drawn[key]
+
+
+def _numbers(plan: Plan, state: State) -> tuple[int, int]:
+    """Count the items up to the present one, and all of them, without those that are left out."""
+    done = [number for number, item in enumerate(plan.items) if not state.leaves_out(item)]
+    return min(sum(number <= state.index for number in done) + (state.index >= len(plan)), len(done)), len(done)
+
+
+def _next_probe(plan: Plan, state: State) -> str:
+    """Say where the probes go after the reading that is being taken; "" where the next thing is another."""
+    item = plan.items[state.index] if state.index < len(plan) and not state.extra else None
+    if item is None or item.kind != "measure" or item.point is None or item.point.function == "dc current":
+        return ""
+    for other in plan.items[state.index + 1 :]:
+        if state.leaves_out(other):
+            continue
+        if other.kind != "measure" or other.point is None or other.powered != item.powered:
+            return ""
+        if other.point.function != "dc current" and other.point.name != item.point.name:
+            black = f", black on {other.point.black}" if other.point.black else ""
+            return f"{other.point.name}: red on {other.point.red}{black}"
+    return ""
 
 
 def _result(title: str, judged: Judged, from_before: bool, overridden: str) -> ResultView:
@@ -231,7 +262,8 @@ def _sections(plan: Plan, state: State) -> tuple[SectionView, ...]:
     found = {judged.item: judged.verdict for judged in state.results}
     numbers: dict[str, list[int]] = {}
     for number, item in enumerate(plan.items):
-        numbers.setdefault(item.section, []).append(number)
+        if not state.leaves_out(item):
+            numbers.setdefault(item.section, []).append(number)
     views = []
     for name, own in numbers.items():
         verdicts = [found[plan.items[number].id] for number in own if plan.items[number].id in found]

@@ -184,8 +184,9 @@ def warm_up(
     travel: Array | float | None = None,
     until_s: float | None = None,
     step_error_k: float = STEP_ERROR_K,
+    from_c: Array | None = None,
 ) -> WarmUp:
-    """Follow units from cold to rest.
+    """Follow units from cold, or from given temperatures, to rest.
 
     Parameters
     ----------
@@ -201,6 +202,8 @@ def warm_up(
         Where to end (s), instead of when everything is at rest.
     step_error_k : float
         Error (K) that one step may make.
+    from_c : array of shape (names, units), optional
+        Temperatures to start from (degC), such as a column of another curve's `celsius`, instead of the ambient one.
 
     Returns
     -------
@@ -210,7 +213,8 @@ def warm_up(
     trimmed = replace(condition, when=design.target.when if condition.trimmer == "target" else "cold")
     solved = solve_units(design, parameters, trimmed, position=travel, loading="none")
     stage = Electrothermal(design, parameters, condition, solved.position, units=solved.units)
-    return _Walk(design, condition, stage, step_error_k).to_rest(solved.position, until_s)
+    rise_k = None if from_c is None else np.asarray(np.linalg.solve(stage.nodes.shows, from_c - stage.ambient_c).T)
+    return _Walk(design, condition, stage, step_error_k).to_rest(solved.position, until_s, rise_k)
 
 
 @dataclass(frozen=True)
@@ -248,9 +252,9 @@ class _Walk:
         self.allowed_c = np.array([hottest_allowed_c(design, p.name, p.role) for p in transistors_of(design)])
         self.passed_s = np.full(units, np.nan)
 
-    def to_rest(self, travel: Array | None, until_s: float | None) -> WarmUp:
+    def to_rest(self, travel: Array | None, until_s: float | None, rise_k: Array | None = None) -> WarmUp:
         units, count = self.stage.units, len(self.nodes.names)
-        x, now_s, step_s = np.zeros((units, count)), 0.0, FIRST_STEP_S
+        x, now_s, step_s = np.zeros((units, count)) if rise_k is None else rise_k, 0.0, FIRST_STEP_S
         end_s = LAGS_TO_WAIT * float(self.nodes.lag_s.max()) * 4.0 if until_s is None else until_s
         point = self.stage.at(self._celsius(x))
         kept: list[_Moment] = []

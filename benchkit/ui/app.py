@@ -2,6 +2,9 @@
 
 Rules
 -----
+* *One key, one meaning.*  F9 switches off, always; Delete does too, unless an entry has the focus.  The space bar only
+  ever takes a reading: a foot that comes down twice must not end a walk, and a hand that is used to it as a way to
+  switch off must not take a reading instead.
 * *Off first.*  The off key, leaving, a signal, a terminal that has gone and an error of our own all ask for off before
   anything else, through the one callable `off_now`; it must be quick, callable from any thread and more than once.
 * The heartbeat comes from the event loop that also handles keys: when the loop hangs, it stops, and the keeper acts.
@@ -16,6 +19,7 @@ import contextlib
 import os
 import sys
 import tempfile
+import time
 from collections.abc import Callable, Coroutine
 from dataclasses import dataclass, replace
 from pathlib import Path
@@ -39,13 +43,20 @@ from benchkit.ui.screens.base import BenchScreen
 from benchkit.ui.screens.leave import LeaveScreen
 from benchkit.ui.screens.start import StartScreen
 from benchkit.ui.screens.walk import WalkScreen
+from benchkit.ui.series import NEXT
 from benchkit.ui.sheet import SHEET
 from benchkit.ui.widgets.answer import GUARD_S
 from benchkit.ui.widgets.scroll_bar import use_whole_cells
 
 HEARTBEAT_S: Final = 0.2
 PAINT_S: Final = 0.1
+LEAST_PAINT_S: Final = 0.08
+"""A new picture is painted at once, but not sooner than this after the last (s)."""
+
 FLASH_S: Final = 0.7
+HOLD_AFTER_CAPTURE_S: Final = 1.0
+"""Keys this soon after a reading was taken by itself answer nothing (s)."""
+
 CLOSE_WITHIN_S: Final = 3.0
 """How long leaving waits for the session to switch off and close its record (s)."""
 
@@ -87,6 +98,9 @@ class BenchApp(App[int]):
         Where an error of our own is written down; None: the directory for temporary files.
     guard_s : float
         Keys this soon after a question came up are not taken for its answer (s).
+    bell : bool
+        Ring when a reading was taken by itself.  What did not pass rings always, and so does a supply of which nobody
+        knows whether it is on.
     """
 
     CSS = SHEET
@@ -94,7 +108,8 @@ class BenchApp(App[int]):
     ENABLE_COMMAND_PALETTE = False
     BINDINGS: ClassVar[list[Any]] = [
         Binding("f9", "off_at_once", "off", show=False, priority=True),
-        Binding("space", "off_by_space", "off", show=False, priority=True),
+        Binding("delete", "off_by_delete", "off", show=False, priority=True),
+        Binding("space", "take_by_space", "take the reading", show=False, priority=True),
         Binding("ctrl+q", "quit", "leave", show=False, priority=True),
         Binding("ctrl+c", "quit", "leave", show=False, priority=True),
     ]
@@ -109,6 +124,7 @@ class BenchApp(App[int]):
         identity: Identity | None = None,
         log_dir: Path | None = None,
         guard_s: float = GUARD_S,
+        bell: bool = True,
     ) -> None:
         super().__init__(ansi_color=True if os.environ.get("NO_COLOR") is not None else None)
         use_whole_cells()
@@ -121,15 +137,20 @@ class BenchApp(App[int]):
         self._identity = identity
         self._log_dir = log_dir if log_dir is not None else Path(tempfile.gettempdir())
         self._guard_s = guard_s
+        self._bell = bell
+        self._captured = 0
         self._walk: WalkScreen | None = None
         self._walk_task: asyncio.Task[None] | None = None
         self._tasks: set[asyncio.Task[None]] = set()
         self._pending: _Pending | None = None
         self._view: View | None = None
         self._painted: View | None = None
+        self._painted_s = 0.0
+        self._paint_planned = False
         self._ending: Closed | None = None
         self._leaving = False
         self.off_asked = False
+        self.goes_on = False
         self.crash: BaseException | None = None
         self.last_words = ""
         self.leaver: platform.Leaver | None = None
@@ -204,10 +225,29 @@ class BenchApp(App[int]):
         """Keep the newest picture; a change of the supply is shown without waiting for the next repaint."""
         earlier = self._view
         self._view = view
+        self._hear(view)
         if view.supply.energised == "off" or earlier is None:
             self.off_asked = False
         if earlier is None or earlier.supply != view.supply or view.exit_status is not None:
             self._paint()
+        elif not self._paint_planned:
+            self._paint_planned = True
+            wait_s = self._painted_s + LEAST_PAINT_S - time.monotonic()
+            if wait_s > 0.0:
+                self.set_timer(wait_s, self._paint)
+            else:
+                self.call_later(self._paint)
+
+    def _hear(self, view: View) -> None:
+        """Ring when a reading was taken; what is pressed just then was meant for that reading."""
+        if view.live is None:
+            return
+        captured, self._captured = self._captured, view.live.captured
+        if view.live.captured > captured:
+            if self._bell:
+                self.bell()
+            if self._walk is not None:
+                self._walk.hold_keys(min(HOLD_AFTER_CAPTURE_S, 4.0 * self._guard_s))
 
     async def put_question(self, question: Question, refused: str) -> Reply:
         """Put a question on the screen and wait."""
@@ -229,8 +269,14 @@ class BenchApp(App[int]):
         if self._pending is not None and not self._pending.reply.done():
             self._pending.reply.set_result(reply)
 
-    def finish(self) -> None:
-        """Leave after the end of the walk, with its exit status."""
+    @property
+    def next_label(self) -> str:
+        """What may come after this walk, "" for nothing."""
+        return self._opening.next_label
+
+    def finish(self, choice: str = "") -> None:
+        """Leave after the end of the walk, with its exit status, to go on with the next one or for good."""
+        self.goes_on = choice == NEXT
         self._run(self._leave("", self._status_of_end()))
 
     @property
@@ -249,11 +295,12 @@ class BenchApp(App[int]):
         return status if status is not None else STOPPED
 
     def _paint(self) -> None:
+        self._paint_planned = False
         walk, view = self._walk, self._view
         if walk is None or not walk.is_mounted:
             return
         if view is not None and view is not self._painted:
-            earlier, self._painted = self._painted, view
+            earlier, self._painted, self._painted_s = self._painted, view, time.monotonic()
             self._say_view(walk)
             self._attend(earlier, view)
         walk.age()
@@ -292,8 +339,8 @@ class BenchApp(App[int]):
             self._off_now(reason)
 
     def check_action(self, action: str, parameters: tuple[object, ...]) -> bool | None:
-        """Leave the space bar to an entry that has the focus."""
-        if action == "off_by_space":
+        """Leave the keys that an entry has a use for to the entry that has the focus."""
+        if action in ("off_by_delete", "take_by_space"):
             return not isinstance(self.focused, Input)
         return True
 
@@ -306,10 +353,15 @@ class BenchApp(App[int]):
                 screen.refresh_off_line()
         self._flash()
 
-    def action_off_by_space(self) -> None:
+    def action_off_by_delete(self) -> None:
         """Switch off at once, when there is anything to switch off."""
         if self.supply is not None and not self._keeps_place:
             self.action_off_at_once()
+
+    def action_take_by_space(self) -> None:
+        """Take the reading that is asked for on the page."""
+        if isinstance(self.screen, WalkScreen):
+            self.screen.take_by_space()
 
     async def action_quit(self) -> None:
         """Leave; while the supply is on or may be, only after asking."""
@@ -410,13 +462,24 @@ def run_app(
     opening: Opening,
     identity: Identity | None = None,
     log_dir: Path | None = None,
+    bell: bool = True,
+    on_next: Callable[[], object] = lambda: None,
 ) -> int:
     """Run the screens until the person leaves, and return the exit status.
 
-    See `BenchApp` for the parameters.  Whatever ends the screens, `off_now` has been called unless the walk had come to
-    its own end.  What has to be said at the end goes to standard error as one line.
+    See `BenchApp` for the parameters; `on_next` is called when the person goes on with the next walk.  Whatever ends
+    the screens, `off_now` has been called unless the walk had come to its own end.  What has to be said at the end goes
+    to standard error as one line.
     """
-    app = BenchApp(start, off_now=off_now, heartbeat=heartbeat, opening=opening, identity=identity, log_dir=log_dir)
+    app = BenchApp(
+        start,
+        off_now=off_now,
+        heartbeat=heartbeat,
+        opening=opening,
+        identity=identity,
+        log_dir=log_dir,
+        bell=bell,
+    )
     leaver = platform.Leaver(off_now, app.leave_from_outside)
     app.leaver = leaver
     try:
@@ -426,6 +489,8 @@ def run_app(
         if app.return_value is None:
             with contextlib.suppress(Exception):
                 off_now("the screens have ended")
+    if app.goes_on and app.crash is None:
+        on_next()
     if app.last_words:
         with contextlib.suppress(OSError, ValueError):
             print(app.last_words, file=sys.stderr)

@@ -28,6 +28,12 @@ class Opening:
         What the two entries begin with.
     resumed : bool
         A walk that was cut off goes on: the unit's serial number can't be changed.
+    channel : str
+        Which channel of the unit; "" for the only one.
+    another_unit : bool
+        The unit after another one: only its serial number is asked for.
+    next_label : str
+        What may come after this walk, "" for nothing.
     """
 
     kind: Literal["walk", "rehearsal"]
@@ -40,6 +46,9 @@ class Opening:
     unit: str = ""
     operator: str = ""
     resumed: bool = False
+    channel: str = ""
+    another_unit: bool = False
+    next_label: str = ""
 
 
 @dataclass(frozen=True, kw_only=True)

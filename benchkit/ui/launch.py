@@ -2,29 +2,24 @@
 
 from __future__ import annotations
 
-import asyncio
-import getpass
-import os
 import secrets
-import shlex
-import signal
-import sys
-from collections.abc import Awaitable, Callable
-from contextlib import suppress
+from collections.abc import Iterator
+from contextlib import contextmanager
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
-import click
-
 from benchkit import shipped
-from benchkit.errors import BenchkitError, EntryError
-from benchkit.events import Closed
+from benchkit.errors import EntryError
+from benchkit.events import WalkOpened
 from benchkit.session.clock import SimulatedClock, WallClock
 from benchkit.session.front import Front
 from benchkit.session.hands import Hands
 from benchkit.session.start import Runner, Setting, design_and_procedure, opened_of
+from benchkit.ui.series import Turn, first_turn, parse_channels, resumed_turn
+from benchkit.ui.walking import STAND_IN, Ready, by_itself, login, with_person
 
 if TYPE_CHECKING:
+    from benchkit.procedure.file import Procedure
     from benchkit.rehearsal.bench_client import BenchProcess
     from benchkit.stage.design import Design
 
@@ -46,13 +41,18 @@ def rehearse(
     unit: str,
     operator: str,
     resume_path: Path | None,
+    channels: str = "",
+    hands_free: bool = True,
+    bell: bool = True,
 ) -> int:
-    """Rehearse; returns the exit status."""
-    from benchkit.procedure.file import load_procedure
-    from benchkit.rehearsal.bench_client import start_bench
-    from benchkit.stage.design import load_design
-    from benchkit.stage.faults import parse_fault
+    """Rehearse; returns the exit status.
 
+    Each channel has a stage of its own, and so a seed of its own: the first one's, and on from there.  A fault is
+    planted in the first walk.
+    """
+    from benchkit.rehearsal.mishaps import parse_mishap
+
+    names = parse_channels(channels)
     if resume_path is not None:
         opened = opened_of(resume_path)
         if opened.kind != "rehearsal":
@@ -60,38 +60,54 @@ def rehearse(
                 f"{resume_path} is the record of a real walk", "a rehearsal", "Go on with benchkit walk --resume"
             )
         loaded, steps = design_and_procedure(opened, resume_path)
-        seed, plant, unit = opened.seed, opened.plant, opened.unit
+        turn = resumed_turn(names, opened.unit, opened.channel)
+        first_seed, plant = opened.seed, opened.plant
         operator = operator or opened.operator
     else:
-        loaded = load_design(shipped.find_design(design))
-        steps = load_procedure(shipped.find_procedure(procedure))
-        seed = secrets.randbelow(2**31) if seed is None else seed
+        loaded, steps = _loaded(design, procedure)
+        turn = first_turn(names, unit)
+        first_seed = secrets.randbelow(2**31) if seed is None else seed
     if plant:
-        parse_fault(plant, loaded)
-    bench = start_bench(loaded.text, seed=seed, plant=plant, clock="manual" if stand_in else "follow")
-    try:
-        hands = Hands(bench.hands, own_screwdriver=stand_in)
-        clock = SimulatedClock(hands.advance, None if stand_in else PACE)
-        setting = Setting(
-            kind="rehearsal",
-            design=loaded,
-            procedure=steps,
-            hands=hands,
-            clock=clock,
-            records=records,
-            seed=seed,
-            plant=plant,
-            units=units,
-            narrow_rarely=stand_in,
-            **_bench_parts(bench.bench_text, "the rehearsal's bench"),
-        )
-        runner = Runner(setting)
-        unit = unit or f"rehearsal-{seed}"
-        if stand_in:
-            return _with_stand_in(runner, bench, loaded, seed, unit, wrong_end=wrong_end, resume=resume_path)
-        return _with_person(runner, unit, operator or _login(), plain=plain, resume=resume_path)
-    finally:
-        bench.stop()
+        parse_mishap(plant, loaded)
+
+    @contextmanager
+    def prepare(turn: Turn) -> Iterator[Ready]:
+        from benchkit.rehearsal.bench_client import start_bench
+
+        own_seed, planted = first_seed + turn.number, "" if turn.number else plant
+        bench = start_bench(loaded.text, seed=own_seed, plant=planted, clock="manual" if stand_in else "follow")
+        try:
+            if steps.head.unknown_trimmer:
+                bench.hands.trimmer_to("as found")
+            hands = Hands(bench.hands, own_screwdriver=stand_in)
+            setting = Setting(
+                kind="rehearsal",
+                design=loaded,
+                procedure=steps,
+                hands=hands,
+                clock=SimulatedClock(hands.advance, None if stand_in else PACE),
+                records=records,
+                seed=own_seed,
+                plant=planted,
+                units=units,
+                narrow_rarely=stand_in,
+                hands_free=hands_free,
+                bell=bell,
+                channel=turn.channel,
+                **_bench_parts(bench.bench_text, "the rehearsal's bench"),
+            )
+            yield Ready(
+                runner=Runner(setting),
+                unit=turn.unit or f"rehearsal-{own_seed}",
+                resume=None if turn.number else resume_path,
+                stand_in=lambda: _stand_in(bench, loaded, own_seed, wrong_end=wrong_end),
+            )
+        finally:
+            bench.stop()
+
+    if stand_in:
+        return by_itself(prepare, turn)
+    return with_person(prepare, turn, operator or login(), plain=plain, bell=bell)
 
 
 def walk(
@@ -107,45 +123,80 @@ def walk(
     operator: str,
     resume_path: Path | None,
     visa: str = "",
+    channels: str = "",
+    hands_free: bool = True,
+    bell: bool = True,
 ) -> int:
     """Walk on a real unit, or go on with one; returns the exit status."""
-    from benchkit.procedure.file import load_procedure
-    from benchkit.stage.design import load_design
-
+    names = parse_channels(channels)
     if resume_path is not None:
         opened = opened_of(resume_path)
         if opened.kind == "rehearsal":
             return rehearse(
                 design=design, procedure=procedure, records=records, plain=plain, stand_in=opened.operator == STAND_IN,
                 seed=None, plant="", wrong_end=False, units=units, unit="", operator=operator, resume_path=resume_path,
+                channels=channels, hands_free=hands_free, bell=bell,
             )  # fmt: skip
         loaded, steps = design_and_procedure(opened, resume_path)
-        seed, unit, operator = opened.seed, opened.unit, operator or opened.operator
-        text = opened.bench_text
-        if bench_path is not None:
-            text = _text_of(bench_path)
-        parts = _bench_parts(text, str(bench_path or resume_path), visa) if text else _by_hand()
+        turn = resumed_turn(names, opened.unit, opened.channel)
+        seed, operator = opened.seed, operator or opened.operator
+        parts = _parts_of(opened, bench_path, resume_path, visa)
     else:
         if not design:
             raise EntryError("No design was named", "the design file of this unit", "Name it with --design")
-        loaded = load_design(shipped.find_design(design))
-        steps = load_procedure(shipped.find_procedure(procedure))
+        loaded, steps = _loaded(design, procedure)
+        turn = first_turn(names, unit)
         parts = _bench_parts(_text_of(bench_path), str(bench_path), visa) if bench_path is not None else _by_hand()
-    setting = Setting(
-        kind="walk",
-        design=loaded,
-        procedure=steps,
-        hands=Hands(),
-        clock=WallClock(),
-        records=records,
-        seed=secrets.randbelow(2**31) if seed is None else seed,
-        units=units,
-        **parts,
+    own_seed = secrets.randbelow(2**31) if seed is None else seed
+
+    @contextmanager
+    def prepare(turn: Turn) -> Iterator[Ready]:
+        setting = Setting(
+            kind="walk",
+            design=loaded,
+            procedure=steps,
+            hands=Hands(),
+            clock=WallClock(),
+            records=records,
+            seed=own_seed,
+            units=units,
+            hands_free=hands_free,
+            bell=bell,
+            channel=turn.channel,
+            **parts,
+        )
+        yield Ready(runner=Runner(setting), unit=turn.unit, resume=None if turn.number else resume_path)
+
+    return with_person(prepare, turn, operator, plain=plain, bell=bell)
+
+
+def _loaded(design: str, procedure: str) -> tuple[Design, Procedure]:
+    from benchkit.procedure.file import load_procedure
+    from benchkit.stage.design import load_design
+
+    return load_design(shipped.find_design(design)), load_procedure(shipped.find_procedure(procedure))
+
+
+def _stand_in(bench: BenchProcess, design: Design, seed: int, *, wrong_end: bool) -> Front:
+    import click
+
+    from benchkit.rehearsal.standin import StandIn
+    from benchkit.stage.draws import seeds
+
+    trimmer = design.spreader.trimmer
+    return StandIn(
+        bench.hands,
+        turns=0.0 if trimmer is None else trimmer.turns,
+        rng=seeds("stand-in", seed),
+        say=click.echo,
+        wrong_end=wrong_end,
     )
-    return _with_person(Runner(setting), unit, operator, plain=plain, resume=resume_path)
 
 
-STAND_IN = "stand-in"
+def _parts_of(opened: WalkOpened, bench_path: Path | None, record: Path, visa: str) -> dict[str, Any]:
+    """Return the bench of a walk that is gone on with: the one that is named now, else that of the record."""
+    text = opened.bench_text if bench_path is None else _text_of(bench_path)
+    return _bench_parts(text, str(bench_path or record), visa) if text else _by_hand()
 
 
 def _bench_parts(text: str, name: str, visa: str = "") -> dict[str, Any]:
@@ -182,167 +233,3 @@ def _text_of(path: Path) -> str:
     except (OSError, UnicodeDecodeError) as error:
         reason = error.strerror if isinstance(error, OSError) else "it is no UTF-8 text"
         raise FileError(str(path), "", f"can't be read: {reason}", "a bench file") from None
-
-
-def _login() -> str:
-    try:
-        return getpass.getuser()
-    except (OSError, KeyError):
-        return ""
-
-
-def _with_stand_in(
-    runner: Runner, bench: BenchProcess, design: Design, seed: int, unit: str, *, wrong_end: bool, resume: Path | None
-) -> int:
-    from benchkit.rehearsal.standin import StandIn
-    from benchkit.stage.draws import seeds
-
-    trimmer = design.spreader.trimmer
-
-    async def run() -> Closed:
-        front = StandIn(
-            bench.hands,
-            turns=0.0 if trimmer is None else trimmer.turns,
-            rng=seeds("stand-in", seed),
-            say=click.echo,
-            wrong_end=wrong_end,
-        )
-        _stop_on_signals(asyncio.get_running_loop(), runner)
-        if resume is not None:
-            return await runner.resume(front, resume, STAND_IN)
-        return await runner.begin(front, unit, STAND_IN)
-
-    return _finish(runner, run)
-
-
-def _with_person(runner: Runner, unit: str, operator: str, *, plain: bool, resume: Path | None) -> int:
-    if plain or not (sys.stdin.isatty() and sys.stdout.isatty()):
-        return _in_lines(runner, unit, operator, resume)
-    return _on_screen(runner, unit, operator, resume)
-
-
-def _in_lines(runner: Runner, unit: str, operator: str, resume: Path | None) -> int:
-    from benchkit.record.show import DEFERENCE
-    from benchkit.ui.plain import PlainFront
-
-    setting = runner.setting
-    click.echo(f"benchkit: {setting.procedure.head.name}, {setting.design.name} {setting.design.revision}")
-    click.echo(DEFERENCE)
-    for caution in (*setting.procedure.head.cautions, *setting.cautions):
-        click.echo(f"CAUTION: {caution}")
-    if setting.kind == "rehearsal":
-        click.echo(f"This is a rehearsal: no real unit is touched. Seed {setting.seed}.")
-    while not unit.strip():
-        unit = click.prompt("Serial number of the unit")
-    while not operator.strip():
-        operator = click.prompt("Operator", default=_login() or None)
-
-    async def run() -> Closed:
-        front = PlainFront(runner.off_now)
-        _stop_on_signals(asyncio.get_running_loop(), runner)
-        if resume is not None:
-            return await runner.resume(front, resume, operator)
-        return await runner.begin(front, unit, operator)
-
-    return _finish(runner, run)
-
-
-def _finish(runner: Runner, run: Callable[[], Awaitable[Closed]]) -> int:
-    async def whole() -> Closed:
-        return await run()
-
-    try:
-        closed = asyncio.run(whole())
-    except BenchkitError as error:
-        click.echo(f"benchkit: {error}", err=True)
-        _say_end(runner)
-        return error.exit_status
-    except (click.Abort, KeyboardInterrupt):
-        click.echo("The walk was left before its end.")
-        _say_end(runner)
-        return 4
-    words = f"The walk is closed: {closed.verdict.upper()}."
-    if closed.stopped:
-        words += f" It was stopped: {closed.stopped.rstrip('.')}."
-    click.echo(words)
-    _say_end(runner)
-    return closed.exit_status
-
-
-def _say_end(runner: Runner) -> None:
-    """Last lines of every way out: what is known of the supply, and where the record is."""
-    words = runner.last_words()
-    if words:
-        click.echo(words)
-    if runner.record is not None and runner.record.exists():
-        click.echo(f"record: {runner.record}")
-        if runner.session is not None and runner.session.state.closed is None:
-            click.echo(f"Go on with: {resume_command(runner.setting.kind, runner.record)}")
-
-
-def resume_command(kind: str, record: Path) -> str:
-    """Return the command with which a walk that has not come to its end is gone on with.
-
-    Examples
-    --------
-    >>> resume_command("rehearsal", Path("records/my unit.jsonl"))
-    "benchkit rehearse --resume 'records/my unit.jsonl'"
-    """
-    words = ("benchkit", "rehearse" if kind == "rehearsal" else "walk", "--resume", str(record))
-    return " ".join(words) if os.name != "posix" else shlex.join(words)
-
-
-def _stop_on_signals(loop: asyncio.AbstractEventLoop, runner: Runner) -> None:
-    """Ctrl+C and a polite end of the process mean: off, made safe, closed.  A second time means at once.
-
-    While the supply is known to be off they mean leaving: the walk keeps its place.
-    """
-    told = False
-
-    def stop(number: int, _frame: object) -> None:
-        nonlocal told
-        if told or runner.session is None or runner.session.nothing_to_switch_off:
-            raise KeyboardInterrupt  # with the supply off there is nothing to stop: the walk can be gone on with later
-        told = True
-        loop.call_soon_threadsafe(runner.off_now, f"the operator pressed stop (signal {number})")
-
-    for name in ("SIGINT", "SIGTERM", "SIGHUP"):
-        number = getattr(signal, name, None)
-        if number is not None:
-            with suppress(ValueError):
-                signal.signal(number, stop)
-
-
-def _on_screen(runner: Runner, unit: str, operator: str, resume: Path | None) -> int:
-    from benchkit.ui.app import run_app
-    from benchkit.ui.entry import Identity, Opening
-
-    setting = runner.setting
-
-    async def start(front: Front, identity: Identity) -> Closed:
-        if resume is not None:
-            return await runner.resume(front, resume, identity.operator)
-        return await runner.begin(front, identity.unit, identity.operator)
-
-    def beat() -> None:
-        """Heartbeats are sent by the session, on this very loop, from the moment that there is something to mind."""
-
-    opening = Opening(
-        kind=setting.kind,
-        design=f"{setting.design.name} {setting.design.revision}",
-        procedure=setting.procedure.head.name,
-        purpose=setting.procedure.head.purpose,
-        meter=_named(setting.setup.get("meter")),
-        supply=_named(setting.setup.get("supply")),
-        record=str(resume or setting.records),
-        unit=unit,
-        operator=operator or _login(),
-        resumed=resume is not None,
-    )
-    status = run_app(start, off_now=runner.off_now, heartbeat=beat, opening=opening, log_dir=setting.records / "logs")
-    _say_end(runner)
-    return status
-
-
-def _named(table: Any) -> str:
-    return "by hand" if table is None else str(table.get("address", "by hand"))

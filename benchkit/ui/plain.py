@@ -12,13 +12,15 @@ import math
 import sys
 import textwrap
 import threading
+import time
 from collections.abc import Callable
 from typing import TextIO
 
 import click
 
 from benchkit.procedure.actions import Question
-from benchkit.session.front import AimView, Reply, SuspectsView, View
+from benchkit.session.front import AimView, LiveView, Reply, SuspectsView, View
+from benchkit.ui.live_text import LiveLines
 from benchkit.ui.widgets.answer_keys import keyed, keys_in_words
 from benchkit.ui.widgets.summary_words import broken_words
 
@@ -36,14 +38,35 @@ class PlainFront:
     off_now : callable
         Switches the supply off at once.
     out, source : text streams
+    bell : bool
+        Ring, at a terminal only, when a reading was taken by itself.
+    clock : callable
+        Tells the time (s): a watched reading gets at most one line a second.
     """
 
     def __init__(
-        self, off_now: Callable[[str], None], *, out: TextIO | None = None, source: TextIO | None = None
+        self,
+        off_now: Callable[[str], None],
+        *,
+        out: TextIO | None = None,
+        source: TextIO | None = None,
+        bell: bool = True,
+        clock: Callable[[], float] = time.monotonic,
     ) -> None:
         self._off_now = off_now
+        self._bell = bell
+        self._live_lines = LiveLines(clock)
+        self._asking: Question | None = None
         self._out = out or sys.stdout
         self._source = source or sys.stdin
+        self.anew()
+        self._lines: asyncio.Queue[str | None] = asyncio.Queue()
+        self._ended = False
+        self._loop = asyncio.get_running_loop()
+        threading.Thread(target=self._listen, name="benchkit-lines", daemon=True).start()
+
+    def anew(self) -> None:
+        """Forget what has been told: another walk begins, with the same lines coming in."""
         self._told: dict[str, str] = {}
         self._busy = ""
         self._watched = 0.0
@@ -55,17 +78,16 @@ class PlainFront:
         self._asked = ""
         self._suspects: SuspectsView | None = None
         self._view: View | None = None
-        self._lines: asyncio.Queue[str | None] = asyncio.Queue()
-        self._ended = False
-        self._loop = asyncio.get_running_loop()
-        threading.Thread(target=self._listen, name="benchkit-lines", daemon=True).start()
 
     def show(self, view: View) -> None:
         """Print what has changed."""
         self._view = view
+        if view.live is not None and self._live_lines.taken(view.live):
+            self._ring()
         if view.section_title != self._section:
             self._section = view.section_title
-            self._print(f"\n== {view.section_title} ==")
+            channel = f" (channel {view.channel})" if view.channel else ""
+            self._print(f"\n== {view.section_title}{channel} ==")
         for result in view.results:
             line = f"{result.value_text} {result.verdict} {result.why}"
             if self._told.get(result.item) != line:
@@ -92,7 +114,10 @@ class PlainFront:
         """Say what is being waited for; a reading that is being watched again whenever it has moved by a third."""
         live = view.live
         key = view.busy
-        if live is not None and view.busy:
+        watched = live is not None and (bool(live.settles_text) or live.settled_share is not None or not view.busy)
+        if live is not None and watched and (self._asking is not None or view.busy):
+            self._tell_live(view, live)
+        elif live is not None and view.busy:
             size = abs(live.value) if live.value is not None else math.inf
             moved = not 2.0 / 3.0 < (size or 1e-9) / (self._watched or 1e-9) < 1.5
             if view.busy == self._busy and not moved:
@@ -104,6 +129,21 @@ class PlainFront:
             left = "" if view.remaining_s is None else f" About {view.remaining_s:.0f} s left."
             self._print(f"  ... {view.busy}{left}")
         self._busy = key
+
+    def _tell_live(self, view: View, live: LiveView) -> None:
+        """Say how a reading that is trimmed, soaks or is to be taken stands, at most once a second."""
+        asking = self._asking
+        if asking is not None and asking.kind not in ("trim", "probes", "watch"):
+            return
+        placing = asking is not None and asking.kind == "probes"
+        line = self._live_lines.line(live, view.busy, view.remaining_s, placing=placing)
+        if line:
+            self._print(f"  ~ {line}")
+
+    def _ring(self) -> None:
+        if self._bell and self._out.isatty():
+            self._out.write("\a")
+            self._out.flush()
 
     def _tell_suspects(self, suspects: SuspectsView) -> None:
         self._print("")
@@ -136,6 +176,13 @@ class PlainFront:
             self._print(f"  ! {refused}")
         else:
             self._put(question)
+        self._asking = question
+        try:
+            return await self._line_for(question)
+        finally:
+            self._asking = None
+
+    async def _line_for(self, question: Question) -> Reply:
         while True:
             self._out.write(self._prompt(question))
             self._out.flush()
@@ -175,6 +222,8 @@ class PlainFront:
             self._wrapped(f"Red: {question.red}.", "  ")
         if question.black:
             self._wrapped(f"Black: {question.black}.", "  ")
+        if question.kind == "probes" and view is not None and view.next_probe:
+            self._wrapped(f"After this: {view.next_probe}.", "  ")
         if question.expected:
             self._wrapped(f"Expected: {question.expected}.", "  ")
         if view is not None and view.aim is not None and view.aim.point == question.point and view.aim.unit_text:

@@ -55,21 +55,32 @@ Input:focus {{ background-tint: {STRONG} 6%; }}
 .deciding {{ border-top: none; margin-bottom: 1; }}
 .deciding .outcome-why {{ max-height: 4; margin-top: 1; }}
 
-#trim .card {{ height: auto; max-height: 4; }}
+#trim .card {{ height: auto; max-height: 2; }}
 #trim .card-details {{ display: none; }}
+#trim Answer {{ border-top: none; }}
 #trim .card-do {{ margin-bottom: 0; }}
-.trim-where {{ height: 1; padding: 0 1; margin: 1 0; }}
-.trim-figures {{ layout: horizontal; height: 5; margin: 0 2; }}
-.trim-reading {{ width: 56; }}
-.trim-gauge {{ margin: 0 2; }}
-.trim-trend {{ height: 1fr; width: 1fr; }}
+.live-panel {{ height: 1fr; }}
+.live-mood {{ height: auto; max-height: 2; padding: 0 1; }}
+.live-figures {{ layout: horizontal; height: 7; margin: 0 1; }}
+.live-reading {{ width: 1fr; height: 100%; }}
+.live-ring {{ width: 15; height: 100%; margin: 0 1; }}
+.empty-ring {{ visibility: hidden; }}
+.live-facts {{ height: auto; max-height: 2; padding: 0 1; }}
+.live-trend {{ height: 1fr; margin: 0 1; }}
 .trim-turns {{ height: 1; padding: 0 1; }}
 .walking .trim-turns {{ display: none; }}
+.soak-stands {{ height: auto; max-height: 2; padding: 0 1; }}
 
 .watch-stands {{ height: auto; max-height: 2; padding: 0 1; margin: 1 0; }}
 .watch-figures {{ height: 5; margin: 0 2; }}
 .watch-reading {{ width: 1fr; }}
 .tight Outcome .outcome-gauge, .tight Outcome .outcome-why {{ display: none; }}
+
+.probe-strip {{ height: 6; padding: 0 1; border-top: solid {LINE}; }}
+.probe-reading {{ width: 48; height: 5; }}
+.probe-words {{ width: 1fr; height: auto; max-height: 5; }}
+.without-reading {{ height: 2; }}
+.probing Outcome .outcome-gauge, .probing Outcome .outcome-why {{ display: none; }}
 
 .empty {{ display: none; }}
 
@@ -97,13 +108,19 @@ LeaveScreen {{ background: {GROUND}; align: center middle; }}
 .roomy .outcome-earlier {{ display: block; }}
 .roomy .outcome-why {{ max-height: 4; }}
 .roomy .start-title {{ margin-top: 2; margin-bottom: 2; }}
-.roomy #trim .card {{ max-height: 7; }}
-.roomy #trim .card-details {{ display: block; }}
+.roomy #trim Answer {{ border-top: solid {LINE}; }}
+.roomy #trim .card {{ max-height: 4; }}
 .roomy .walk-message {{ max-height: 3; }}
 .roomy .watch-figures {{ height: 11; }}
-.roomy .trim-figures {{ layout: vertical; height: 1fr; }}
-.roomy .trim-reading {{ width: 1fr; margin-bottom: 1; }}
-.roomy .trim-turns {{ margin-top: 1; }}
+.roomy #trim .card-do {{ padding: 0 3; background: {GROUND}; }}
+.roomy .live-mood {{ padding: 1 2; max-height: 4; background: {PANEL}; }}
+.roomy .live-figures {{ height: 12; }}
+.roomy .live-ring {{ width: 25; margin: 0 2; }}
+.roomy .probe-strip {{ height: 8; }}
+.roomy .without-reading {{ height: 2; }}
+.roomy .probe-reading {{ width: 64; height: 7; }}
+.roomy .live-facts {{ margin: 1 0; }}
+.roomy .soak-stands {{ margin-bottom: 1; }}
 
 .small .walk-head, .small .walk-trail, .small .walk-message {{ display: none; }}
 .small OffLine .off-second {{ max-height: 1; }}
@@ -119,11 +136,14 @@ LeaveScreen {{ background: {GROUND}; align: center middle; }}
 .small .outcome-why {{ display: none; }}
 .small .deciding .outcome-why {{ display: block; max-height: 1; margin-top: 0; }}
 .small #trim .card {{ display: none; }}
-.small .trim-figures {{ margin: 0; }}
-.small .trim-reading {{ width: 1fr; }}
-.small .trim-where {{ margin: 0; padding: 0; }}
-.small .trim-gauge {{ margin: 0; }}
-.small .trim-trend {{ display: none; }}
+.small .live-mood {{ margin: 0; padding: 0; }}
+.small .live-figures {{ height: 5; margin: 0; }}
+.small .live-facts {{ padding: 0; }}
+.small .live-trend, .small .live-ring {{ display: none; }}
+.small .probe-strip {{ border-top: none; padding: 0; height: 5; }}
+.small .without-reading {{ height: 1; }}
+.small .probe-reading {{ width: 24; }}
+.small .soak-stands {{ height: 1; padding: 0; }}
 .small .watch-stands, .small .watch-figures {{ margin: 0; padding: 0; }}
 .small .trim-turns {{ display: none; }}
 .small .summary-verdict {{ margin: 0; padding: 0; }}

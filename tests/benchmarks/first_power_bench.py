@@ -13,7 +13,7 @@ from __future__ import annotations
 
 import asyncio
 import threading
-from collections.abc import Callable
+from collections.abc import Callable, Mapping
 from concurrent.futures import Future
 from dataclasses import dataclass, replace
 from functools import cache
@@ -42,6 +42,7 @@ from benchkit.shipped import find_procedure
 from benchkit.stage.design import Design
 from benchkit.stage.draws import seeds
 
+FIRST_POWER = "first-power-on"
 LIMITS_SEED = 77
 OVERLOAD = 9e37
 HEADERS = {"dc volts": "VOLT:DC", "ac volts": "VOLT:AC", "dc current": "CURR:DC", "ohms": "RES", "ohms 4-wire": "FRES",
@@ -68,7 +69,8 @@ class MemoryHands:
 
     def __getattr__(self, name: str) -> Callable[..., Any]:
         keys = {"probe": "point", "turn": "turns", "trimmer_to": "travel", "connect": "connected", "short": "shorted",
-                "advance": "seconds", "truth": ""}  # fmt: skip
+                "advance": "seconds", "truth": "", "drive": "share", "slip": "seconds", "fault": "what",
+                "repair": ""}  # fmt: skip
         if name not in keys:
             raise AttributeError(name)
 
@@ -247,6 +249,10 @@ class Outcome:
         The rails were at their full voltage at some time.
     noticed : str
         The first item that failed, or the trip, before that ("" for none).
+    bench : RehearsalBench or None
+        Where the unit still lies.
+    began_s : float
+        Its time when the walk began.
     """
 
     events: tuple[Event, ...]
@@ -254,18 +260,20 @@ class Outcome:
     truth: dict[str, Any]
     full: bool
     noticed: str
+    bench: RehearsalBench | None = None
+    began_s: float = 0.0
 
 
 @cache
-def procedure() -> Procedure:
-    """The shipped procedure for a first power-on."""
-    return load_procedure(find_procedure("first-power-on"))
+def procedure(name: str = FIRST_POWER) -> Procedure:
+    """A shipped procedure."""
+    return load_procedure(find_procedure(name))
 
 
 @cache
-def walk_of(design: Design) -> Walk:
+def walk_of(design: Design, name: str = FIRST_POWER) -> Walk:
     """The walk of a design; shared, because it holds no state."""
-    return Walk(make_plan(procedure(), design))
+    return Walk(make_plan(procedure(name), design))
 
 
 def share_the_model(*, narrowing: bool = True, suspects: bool = True) -> None:
@@ -312,32 +320,76 @@ def _no_suspects(design: Design, action: Any) -> Any:
 
 
 def walk_once(
-    design: Design, unit_seed: int, plant: str = "", *, wrong_end: bool = False, units: int | None = None
+    design: Design,
+    unit_seed: int,
+    plant: str = "",
+    *,
+    wrong_end: bool = False,
+    units: int | None = None,
+    name: str = FIRST_POWER,
+    limits_seed: int = LIMITS_SEED,
+    bench: RehearsalBench | None = None,
+    hand: Mapping[str, Any] | None = None,
 ) -> Outcome:
-    """Walk through a first power-on with one simulated unit and a stand-in."""
-    return asyncio.run(_walk_once(design, unit_seed, plant, wrong_end=wrong_end, units=units))
+    """Walk through a procedure with one simulated unit and a stand-in.
+
+    Parameters
+    ----------
+    design : Design
+    unit_seed : int
+    plant : str
+        What goes wrong, as `benchkit rehearse --plant` takes it.
+    wrong_end : bool
+        The stand-in turns the trimmer to the wrong end at first.
+    units : int or None
+        Units behind the limits; None for the model's own choice.
+    name : str
+        Of the procedure.
+    limits_seed : int
+        Of the limits.
+    bench : RehearsalBench, optional
+        A unit that lies on a bench already, from a walk before; otherwise one is made.
+    hand : mapping, optional
+        What else the stand-in is told.
+    """
+    if bench is None:
+        bench = RehearsalBench(design, unit_seed, plant)
+        if procedure(name).head.unknown_trimmer:
+            bench.table.set_travel(bench.found_travel())
+    return asyncio.run(_walk_once(design, unit_seed, bench, wrong_end, units, name, limits_seed, dict(hand or {})))
 
 
-async def _walk_once(design: Design, unit_seed: int, plant: str, *, wrong_end: bool, units: int | None) -> Outcome:
-    bench = RehearsalBench(design, unit_seed, plant)
+async def _walk_once(
+    design: Design,
+    unit_seed: int,
+    bench: RehearsalBench,
+    wrong_end: bool,
+    units: int | None,
+    name: str,
+    limits_seed: int,
+    hand: dict[str, Any],
+) -> Outcome:
+    began_s, steps, plant = bench.table.sim_s, procedure(name), bench.plant
     hands = MemoryHands(bench)
     text = bench_text(ADDRESS, ADDRESS.replace("::1::", "::2::"))
     file = parse_bench(text, "the campaign's bench")
     job = Job(
-        design=design, procedure=procedure(), walk=walk_of(design), record=Path("in memory"), setup=file.setup,
-        accuracy=file.accuracy, supply_accuracy=file.supply_accuracy, units=units, seed=LIMITS_SEED, narrow_rarely=True,
+        design=design, procedure=steps, walk=walk_of(design, name), record=Path("in memory"), setup=file.setup,
+        accuracy=file.accuracy, supply_accuracy=file.supply_accuracy, units=units, seed=limits_seed,
+        narrow_rarely=True,
     )  # fmt: skip
     opened = WalkOpened(
         version="", walk="", kind="rehearsal", unit=str(unit_seed), operator="stand-in", design_name=design.name,
-        design_text=design.text, design_sha256=design.sha256, procedure_name=procedure().head.name,
-        procedure_text=procedure().text, procedure_sha256=procedure().sha256, bench_text=text, bench_sha256="",
-        seed=LIMITS_SEED, plant=plant, supply="scpi", meter="scpi",
+        design_text=design.text, design_sha256=design.sha256, procedure_name=steps.head.name,
+        procedure_text=steps.text, procedure_sha256=steps.sha256, bench_text=text, bench_sha256="",
+        seed=limits_seed, plant=plant, supply="scpi", meter="scpi",
     )  # fmt: skip
     keeper = MemoryKeeper(hands, opened)
     trimmer = design.spreader.trimmer
     front = StandIn(
-        hands, turns=0.0 if trimmer is None else trimmer.turns, rng=seeds("stand-in", unit_seed), wrong_end=wrong_end
-    )
+        hands, turns=0.0 if trimmer is None else trimmer.turns, rng=seeds("stand-in", unit_seed), wrong_end=wrong_end,
+        **hand,
+    )  # fmt: skip
 
     async def advance(seconds: float) -> None:
         hands.advance(seconds)
@@ -360,7 +412,7 @@ async def _walk_once(design: Design, unit_seed: int, plant: str, *, wrong_end: b
     truth = bench.truth()
     if not full and max(abs(volts) for volts in truth["highest_rail_v"]) >= full_v:
         full = True
-    return Outcome(events=events, closed=closed, truth=truth, full=full, noticed=noticed)
+    return Outcome(events=events, closed=closed, truth=truth, full=full, noticed=noticed, bench=bench, began_s=began_s)
 
 
 __all__ = ["EntryError", "MemoryHands", "MemoryKeeper", "Outcome", "share_the_model", "walk_of", "walk_once"]

@@ -110,6 +110,12 @@ class Told:
     def connect(self, connected: bool) -> None:
         """The load is always there."""
 
+    def drive(self, share: float) -> None:
+        """Nobody drives anything."""
+
+    def repair(self) -> None:
+        """Nobody repairs anything."""
+
     def advance(self, seconds: float) -> None:
         """Time passes by itself."""
 

@@ -23,6 +23,7 @@ from benchkit.events import (
     NarrowedLimits,
     Noted,
     OutputOff,
+    PartsReplaced,
     PointLimits,
     Predicted,
     PredictionRefused,
@@ -301,6 +302,10 @@ def good(walk: Walk, state: State, action: Action) -> Event:
             if question.kind == "decide":
                 usual = {choice.value for choice in question.choices if not choice.wants_reason}
                 return Decided(item=action.item, choice="go on" if "go on" in usual else "again")
+            if question.kind == "parts":
+                return PartsReplaced(item=action.item, parts="", semiconductors=False)
+            if question.kind == "choose":
+                return Answered(item=action.item, choice="no")
             yes = question.kind in ("confirm", "hold")
             return Answered(item=action.item, choice="yes" if yes else "done")
         case Predict():
@@ -320,7 +325,8 @@ def good(walk: Walk, state: State, action: Action) -> Event:
         case SwitchOff():
             return OutputOff(reason=action.reason, confirmed=True, how="read back as off", state=OFF)
         case Wait():
-            return Waited(item=action.item, seconds=action.seconds)
+            settled = True if action.until_settled else None
+            return Waited(item=action.item, seconds=action.seconds, settled=settled, point=action.point)
         case Evaluate() | CheckWarm():
             return judged(action.item, "pass")
         case Write():
@@ -348,6 +354,13 @@ def bad(walk: Walk, state: State, action: Action) -> list[Event]:
                     Decided(item=action.item, choice=choice.value, reason="because")  # type: ignore[arg-type]
                     for choice in question.choices
                 ]
+            if question.kind == "parts":
+                return [
+                    PartsReplaced(item=action.item, parts="output.upper.1", semiconductors=True),
+                    PartsReplaced(item=action.item, parts="emitter.upper.1", semiconductors=False),
+                ]
+            if question.kind == "choose":
+                return [Answered(item=action.item, choice="yes")]
             return [Answered(item=action.item, choice="no")] if question.kind in ("confirm", "hold") else []
         case Predict():
             refused = PredictionRefused(item=action.item, condition=action.key, problem="unsolved")
@@ -375,6 +388,8 @@ def bad(walk: Walk, state: State, action: Action) -> list[Event]:
             ]  # fmt: skip
         case SwitchOff():
             return [OutputOff(reason=action.reason, confirmed=False, how="no answer")]
+        case Wait() if action.until_settled:
+            return [Waited(item=action.item, seconds=action.seconds, settled=False, point=action.point)]
         case Evaluate() | CheckWarm():
             return [judged(action.item, "fail"), judged(action.item, "undecided")]
     return []
@@ -479,6 +494,7 @@ def every_event(walk: Walk, state: State) -> list[Event]:
         SupplySet(item=item, state=supply),
         SupplyRefused(item=item, problem="p"),
         Waited(item=item, seconds=1.0),
+        PartsReplaced(item=item, parts="", semiconductors=False),
         TrimEnded(item=item, problem="p"),
         Tripped(reason="r"),
         ContactLost(who="w", problem="p"),

@@ -8,7 +8,8 @@ import pytest
 from hypothesis import given, settings
 
 from benchkit.errors import FileError
-from benchkit.procedure.file import _POINT, load_procedure, parse_procedure
+from benchkit.procedure.file import load_procedure, parse_procedure
+from benchkit.procedure.file_words import POINT
 from benchkit.stage.points import points_of
 from tests.procedure.driver import SHIPPED, SMALL
 from tests.stage.designs import breadboard, tern
@@ -88,7 +89,7 @@ def test_what_a_key_holds_is_no_formula() -> None:
 @pytest.mark.parametrize("design", [tern, breadboard])
 def test_every_point_of_a_design_can_be_named(design: object) -> None:
     for point in points_of(design()):  # type: ignore[operator]
-        assert _POINT.fullmatch(point.name), point.name
+        assert POINT.fullmatch(point.name), point.name
 
 
 def test_a_missing_file(tmp_path: Path) -> None:

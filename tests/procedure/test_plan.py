@@ -120,7 +120,7 @@ def test_a_hold_point_stands_before_whatever_raises(name: str) -> None:
         assert not raises or before.kind == "hold", item.id
         volts, limit_a = item.positive_v, item.limit_a
         seen += raises
-    assert seen == 8
+    assert seen == 8 + 3  # three of them only where the stage is driven: load on, room for the drive, load off
 
 
 @pytest.mark.parametrize("name", DESIGNS)
@@ -188,6 +188,9 @@ def test_the_warm_readings_are_warm_and_at_the_target() -> None:
             if item.point is not None and item.point.name == "emitter.upper.1":
                 assert item.limits is not None  # it was set to the target, which is what it is judged by
                 assert item.limits.nominal == pytest.approx(22e-3)
+                continue
+            if item.point is not None and item.point.name == "output.ac":
+                assert item.limits is not None  # the model says nothing of it
                 continue
             assert isinstance(item.condition, Joined)
             assert {one.when for one in item.condition.conditions} == {"warm"}
@@ -319,7 +322,7 @@ def test_a_design_without_a_trimmer_is_walked_and_its_target_only_checked() -> N
     target = [
         item for item in plan.items if item.limits is not None and item.limits.source == "the target of the design"
     ]
-    assert [item.kind for item in target] == ["measure"]
+    assert [item.kind for item in target] == ["wait", "measure"]
     first = next(item for item in plan.items if item.kind == "supply")
     design = without_trimmer()
     assert first.limit_a == pytest.approx(supply_limit_a(design, 10.0, -10.0, share=1.0))

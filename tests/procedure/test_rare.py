@@ -108,7 +108,7 @@ def test_otherwise_the_walk_ends_undecided(say: str) -> None:
 
 
 def test_more_than_a_few_are_too_many(monkeypatch: pytest.MonkeyPatch) -> None:
-    monkeypatch.setattr("benchkit.procedure.moves.MOST_RARE", 2)
+    monkeypatch.setattr("benchkit.procedure.closing.MOST_RARE", 2)
     drive = passed_over(END, SHORT, CURRENT)
     drive.tell(suspected(to_the_way_out(drive), "healthy"))
     assert closed(drive).verdict == "undecided"

@@ -169,7 +169,7 @@ class Walks(RuleBasedStateMachine):
             assert drive.state.extra == drive.state.extras[-1].id
             assert drive.walk.item(drive.state).powered <= drive.walk.host(drive.state).powered
 
-    @rule(number=st.integers(0, 22))
+    @rule(number=st.integers(0, 23))
     def says_what_is_not_taken(self, number: int) -> None:
         drive = self.drive
         event = every_event(drive.walk, drive.state)[number]

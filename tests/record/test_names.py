@@ -109,8 +109,28 @@ def test_a_full_second_is_refused(tmp_path: Path, monkeypatch: pytest.MonkeyPatc
 
 
 def test_the_longest_name_is_as_long_as_stated(tmp_path: Path) -> None:
-    longest = f"{names.unit_prefix('a' * 300)}-20310405T060708Z-999{names.SUFFIX}"
+    longest = names.record_name("a" * 300, WHEN, "b" * 300).replace(names.SUFFIX, f"-999{names.SUFFIX}")
     assert len(longest) == names.LONGEST
+
+
+@pytest.mark.parametrize("channel", [*NASTY, "L", "2", "left rear"])
+def test_no_channel_becomes_a_path(channel: str, tmp_path: Path) -> None:
+    path = names.free_path(tmp_path, "x", WHEN, channel)
+    check(path.name)
+    assert path.resolve().parent == tmp_path.resolve()
+    assert ("-ch-" in path.name) == bool(channel.strip())
+
+
+@given(st.text(max_size=100), st.text(max_size=100))
+def test_no_text_at_all_becomes_a_path_by_way_of_a_channel(serial: str, channel: str) -> None:
+    check(names.record_name(serial, WHEN, channel))
+
+
+def test_channels_keep_their_names_and_the_time_stays_before_them() -> None:
+    assert names.record_name("T40-0017", WHEN, "L") == "T40-0017-3a8381f9-20310405T060708Z-ch-L.jsonl"
+    assert names.record_name("T40-0017", WHEN, " 2 ") == "T40-0017-3a8381f9-20310405T060708Z-ch-2.jsonl"
+    alike = [names.channel_part(name) for name in ("a/b", "a.b", "a b", "a-b")]
+    assert len(set(alike)) == len(alike)
 
 
 def test_a_readable_part_stays_readable() -> None:

@@ -8,8 +8,10 @@ from hypothesis import HealthCheck, given, settings
 from hypothesis import strategies as st
 
 from benchkit.events import Event, Noted, OutputOff, Resumed, StopAsked, Tripped
-from benchkit.record.show import DEFERENCE, as_json, as_text, clean
+from benchkit.record.show import DEFERENCE, as_text
+from benchkit.record.show_json import as_json
 from benchkit.record.summary import Summary, load_summary
+from benchkit.record.words import clean
 from tests.record.walks import (
     closed,
     good_events,

@@ -3,14 +3,16 @@ from __future__ import annotations
 import csv
 import io
 import json
+from dataclasses import replace
 from pathlib import Path
 
 import pytest
 
 from benchkit.errors import FileError
+from benchkit.events import ReadingTaken
 from benchkit.record import table
 from benchkit.record.summary import load_summary
-from tests.record.walks import closed, good_events, opened, overridden_events, suspicious_events, write
+from tests.record.walks import closed, good_events, opened, overridden_events, repair_events, suspicious_events, write
 
 
 def read_back(text: str) -> list[dict[str, str]]:
@@ -82,8 +84,22 @@ def test_the_frame_has_numbers_as_numbers_and_times_with_a_zone(tmp_path: Path) 
     assert frame["value"].isna().tolist() == [True, False]
 
 
+def test_channel_part_and_what_took_a_reading_are_columns_at_the_end(tmp_path: Path) -> None:
+    assert table.COLUMNS[-4:] == ("channel", "part", "driven", "how")
+    events = repair_events(channel="L")
+    taken = events[9]
+    assert isinstance(taken, ReadingTaken)
+    events[9] = replace(taken, how="by itself: at rest for 2.0 s")
+    rows = read_back(table.csv_text([load_summary(write(tmp_path / "a.jsonl", events))]))
+    assert {row["channel"] for row in rows} == {"L"}
+    assert [row["part"] for row in rows] == ["found"] * 4 + ["left"] * 3
+    assert [row["driven"] for row in rows] == ["False", "False", "False", "True", "False", "False", "False"]
+    assert [row["how"] for row in rows if row["how"]] == ["by itself: at rest for 2.0 s"]
+
+
 def test_this_units_limits_oddness_and_the_last_suspects_are_columns_at_the_end(tmp_path: Path) -> None:
-    assert table.COLUMNS[-4:] == ("unit_low", "unit_high", "odd", "suspects")
+    first = table.COLUMNS.index("unit_low")
+    assert table.COLUMNS[first : first + 4] == ("unit_low", "unit_high", "odd", "suspects")
     found = [
         load_summary(write(tmp_path / "a.jsonl", closed(suspicious_events(), "undecided"))),
         load_summary(write(tmp_path / "b.jsonl", closed(good_events()))),

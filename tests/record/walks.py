@@ -19,6 +19,7 @@ from benchkit.events import (
     NarrowedLimits,
     Noted,
     OutputOff,
+    PartsReplaced,
     PointLimits,
     Predicted,
     ProbeNamed,
@@ -29,6 +30,7 @@ from benchkit.events import (
     SuspectEvidence,
     SuspectNamed,
     Verdict,
+    Waited,
     WalkOpened,
     to_payload,
 )
@@ -107,6 +109,109 @@ def opened(**changes: Any) -> WalkOpened:
         "bench_sha256": sha(""),
     }
     return WalkOpened(**{**values, **changes})
+
+
+REPAIR = """
+[procedure]
+format = 1
+name = "short repair"
+purpose = "for tests"
+
+[[section]]
+name = "found"
+title = "As found"
+resume = true
+as = "found"
+
+[[section.step]]
+name = "drops"
+kind = "measure"
+title = "Drops"
+points = ["emitter.upper.1"]
+limits = { low = "18 mV", high = "22 mV" }
+
+[[section.step]]
+name = "output"
+kind = "measure"
+title = "Offset"
+points = ["output"]
+limits = { low = "-50 mV", high = "50 mV" }
+
+[[section.step]]
+name = "driven"
+kind = "measure"
+title = "Rail currents, driven"
+points = ["rail+.current"]
+limits = { low = "0 A", high = "2 A" }
+state = "driven"
+
+[[section]]
+name = "soak"
+title = "Power soak"
+optional = "Was a power soak asked for?"
+
+[[section.step]]
+name = "look"
+kind = "confirm"
+title = "Look"
+do = "Is it quiet?"
+
+[[section]]
+name = "left"
+title = "As left"
+as = "left"
+
+[[section.step]]
+name = "drops"
+kind = "measure"
+title = "Drops"
+points = ["emitter.upper.1"]
+limits = { low = "18 mV", high = "22 mV" }
+
+[[section.step]]
+name = "output"
+kind = "measure"
+title = "Offset"
+points = ["output"]
+limits = { low = "-50 mV", high = "50 mV" }
+
+[[section]]
+name = "made-safe"
+title = "The way out"
+
+[[section.step]]
+name = "off"
+kind = "off"
+title = "Supply off"
+"""
+
+
+def repair_events(
+    *, found_v: float = 0.0312, left_v: float = 0.02005, walk: str = "w1", rails_v: float = 35.0, **changes: Any
+) -> list[Event]:
+    """A repair: drop and offset as found, one part replaced, a soak, drop and offset as left."""
+    on = SupplyState(output_on=True, set_positive_v=rails_v, set_negative_v=-rails_v)
+    limits: dict[str, Any] = {"low": 0.018, "high": 0.022}
+    return [
+        opened(**{"procedure_name": "short repair", "procedure_text": REPAIR, "procedure_sha256": sha(REPAIR),
+                  "walk": walk, **changes}),
+        SupplySet(item="found.power", state=on),
+        reading("found.drops.emitter.upper.1", "emitter.upper.1", found_v + 0.005),
+        reading("found.drops.emitter.upper.1", "emitter.upper.1", found_v),
+        judged("found.drops.emitter.upper.1", "emitter.upper.1", "fail", found_v, **limits),
+        reading("found.output.output", "output", 0.0031),
+        reading("found.driven.rail+.current", "rail+.current", 1.2, "dc current"),
+        PartsReplaced(item="found.parts", parts="R21", semiconductors=False),
+        Waited(item="left.soak", seconds=243.0, settled=True, point="emitter.upper.1", unit="V", final=0.0201,
+               low=0.02, high=0.0202),
+        reading("left.drops.emitter.upper.1", "emitter.upper.1", left_v),
+        judged("left.drops.emitter.upper.1", "emitter.upper.1", "pass", left_v, **limits),
+        reading("left.output.output", "output", 0.0033),
+        reading("left.extra-1.emitter.upper.1", "emitter.upper.1", 0.5),
+        OutputOff(reason="end of the walk", confirmed=True, how="OUTP? read 0,0"),
+        Noted(text="This channel took 3 min 12 s; the target is 5 min.",
+              figures={"seconds": 192.0, "target_seconds": 300.0}),
+    ]  # fmt: skip
 
 
 def reading(item: str, point: str, value: float | None, function: str = "dc volts") -> ReadingTaken:
@@ -216,10 +321,10 @@ def closed(events: Sequence[Event], verdict: Verdict = "pass", **more: Any) -> l
     return [*events, Closed(count=len(events), verdict=verdict, **{**status, **more})]
 
 
-def write(path: Path, events: Sequence[Event]) -> Path:
-    """Write a record, one event a second."""
+def write(path: Path, events: Sequence[Event], days: float = 0.0) -> Path:
+    """Write a record, one event a second, begun so many days after `START`."""
     with Writer.create(path) as writer:
         for number, event in enumerate(events):
-            at = (START + timedelta(seconds=number)).strftime("%Y-%m-%dT%H:%M:%S.%fZ")
+            at = (START + timedelta(days=days, seconds=number)).strftime("%Y-%m-%dT%H:%M:%S.%fZ")
             writer.append(event.name, to_payload(event), float(number), at)
     return path

@@ -16,12 +16,19 @@ from tests.ui.scripted import DECIDE, ODD_QUESTION, PROBES, SUSPECTED, SUSPECTIN
 class Hands:
     def __init__(self) -> None:
         self.moved: list[Any] = []
+        self.faulty: list[str] = []
 
     def trimmer_to(self, travel: Any) -> None:
         self.moved.append(travel)
 
     def advance(self, seconds: float) -> None:
         self.moved.append(seconds)
+
+    def slip(self, seconds: float) -> None:
+        self.moved.append(("slip", seconds))
+
+    def truth(self) -> dict[str, Any]:
+        return {"faulty": self.faulty, "semiconductors": any("output" in part for part in self.faulty)}
 
 
 def stand_in(said: list[str] | None = None) -> StandIn:
@@ -132,3 +139,62 @@ def test_at_the_end_of_the_screw_it_gives_up_what_is_above() -> None:
 def test_a_screw_that_answers_is_turned_on() -> None:
     replies = trimming([0.012, 0.011, 0.0098, 0.0088, 0.0051], 0.002, 0.008)
     assert [reply.choice for reply in replies] == ["turn", "turn", "turn", "turn", "take"]
+
+
+def test_it_trims_again_where_that_is_offered() -> None:
+    question = replace(DECIDE, choices=(Choice(value="trim again", label="Trim again"), *DECIDE.choices))
+    assert ask(stand_in(), question, question) == ["trim again", "trim again"]
+
+
+def test_what_a_unit_was_found_with_is_noted() -> None:
+    found = replace(
+        DECIDE,
+        item="found.drops.emitter.upper.1",
+        choices=(*DECIDE.choices, Choice(value="go on", label="", wants_reason=True)),
+    )
+    assert ask(stand_in(), found, found) == ["again", "go on"]
+
+
+PARTS = replace(
+    DECIDE,
+    kind="parts",
+    item="repair.replaced",
+    choices=tuple(Choice(value=v, label="") for v in ("no", "semiconductors")),
+)
+
+
+def test_it_says_what_it_has_replaced() -> None:
+    one = stand_in()
+    assert ask(one, PARTS, replace(PARTS, item="look.before")) == ["no", "no"]
+    one._hands.faulty = ["output.upper.1", "emitter.upper.1"]  # type: ignore[attr-defined]
+    reply = asyncio.run(one.ask(PARTS))
+    assert (reply.choice, reply.text) == ("semiconductors", "output.upper.1, emitter.upper.1")
+    one._hands.faulty = ["emitter.upper.1"]  # type: ignore[attr-defined]
+    assert ask(one, PARTS) == ["other parts"]
+    told = StandIn(Hands(), turns=10.0, rng=np.random.default_rng(1), replaced_before=("other parts", "feed.upper"))
+    reply = asyncio.run(told.ask(replace(PARTS, item="look.before")))
+    assert (reply.choice, reply.text) == ("other parts", "feed.upper")
+
+
+def test_it_passes_over_what_is_optional_unless_told_otherwise() -> None:
+    choose = replace(PARTS, kind="choose", choices=(Choice(value="no", label=""), Choice(value="yes", label="")))
+    assert ask(stand_in(), choose) == ["no"]
+    willing = StandIn(Hands(), turns=10.0, rng=np.random.default_rng(1), optional=True)
+    assert ask(willing, choose) == ["yes"]
+
+
+def test_its_probe_slips_as_often_as_it_was_told() -> None:
+    hands = Hands()
+    one = StandIn(hands, turns=12.0, rng=np.random.default_rng(1), slips=1)
+
+    async def script() -> None:
+        for number in range(6):
+            live = LiveView(
+                point="emitter.upper.1", unit="V", value=0.012, text="", low=0.018, high=0.022, target=0.02, age_s=0.0,
+                inside=False, trend=((10.0 * number, 0.012),), advice="a touch", advised_turns=0.1,
+            )  # fmt: skip
+            one.show(replace(VIEW, live=live))
+            await one.ask(TRIM)
+
+    asyncio.run(script())
+    assert hands.moved == [("slip", standin.SLIP_S)]

@@ -77,6 +77,12 @@ class FakeBench:
         self.acts.append(("short", on))
         self.shorted = on
 
+    def drive(self, share: float) -> None:
+        self.acts.append(("drive", share))
+
+    def repair(self) -> None:
+        self.acts.append(("repair", None))
+
     def advance(self, seconds: float) -> None:
         self.seconds += seconds
 

@@ -16,6 +16,7 @@ def test_real_hands_are_the_operators_own() -> None:
         await hands.probe("output")
         await hands.turn(1.0)
         await hands.advance(5.0)
+        await hands.repair()
         assert await hands.truth() == {}
 
     asyncio.run(whole())
@@ -27,6 +28,11 @@ def test_real_hands_are_the_operators_own() -> None:
         ("short the leads", [("connect", False), ("short", True)]),
         ("connect the unit", [("short", False), ("connect", True)]),
         ("trimmer to least", [("trimmer", "least")]),
+        ("connect the dummy load", []),
+        ("drive the stage", [("drive", pytest.approx(1.0 / 30.0))]),
+        ("drive at a third of full power", [("drive", pytest.approx(1.0 / 3.0))]),
+        ("stop driving", [("drive", 0.0)]),
+        ("take the dummy load off", [("drive", 0.0)]),
     ],
 )
 def test_acts_in_their_order(act: str, moves: list[tuple[str, object]]) -> None:
@@ -49,10 +55,12 @@ def test_the_rest_goes_through() -> None:
         assert hands.simulated
         await hands.probe("output")
         await hands.turn(-0.25)
+        await hands.repair()
         await hands.advance(2.0)
         assert (await hands.truth())["highest_rail_v"] == 10.0
 
     asyncio.run(whole())
+    assert bench.acts == [("repair", None)]
     assert (bench.point, bench.turned, bench.seconds) == ("output", -0.25, 2.0)
 
 

@@ -102,3 +102,50 @@ def test_a_walk_is_refused_until_somebody_with_a_reason_overrides(
         assert run.keeper.sets == [], "nothing was ever switched on"
         assert any(isinstance(event, OutputOff) for event in run.keeper.kept)
     assert small().plan.items[1].kind == "warm state"
+
+
+@pytest.mark.parametrize(
+    ("point", "share", "volts"),
+    [("emitter.upper.1", 1.0, 1.0), ("emitter.lower.1", 0.25, 1.0), ("emitter.pair.1", 1.0, 2.0)],
+)
+def test_what_a_turn_does_to_a_drop(point: str, share: float, volts: float) -> None:
+    from benchkit.session.predictions import screw_of
+    from benchkit.stage.design import target_drop_v
+    from benchkit.stage.trimmer_slope import slope
+
+    design = tern()
+    screw = screw_of(design, point, share * volts * target_drop_v(design), share)
+    assert screw.per_turn == pytest.approx(volts * slope(design).drop_v_per_turn)
+    assert screw.full == pytest.approx(volts * target_drop_v(design))
+    assert screw.knee == pytest.approx(volts * 0.03)
+    assert screw.settled_share > 1.0
+    assert (screw.more_way, screw.turns) == (design.spreader.trimmer.raises_bias, design.spreader.trimmer.turns)  # type: ignore[union-attr]
+
+
+def test_what_a_turn_does_to_a_rail() -> None:
+    from benchkit.session.predictions import screw_of
+    from benchkit.stage.trimmer_slope import slope
+
+    design = tern()
+    current = screw_of(design, "rail+.current", 0.11, 1.0)
+    assert current.per_turn == pytest.approx(slope(design).current_a_per_turn, rel=0.02)
+    drop = screw_of(design, "rail+.drop", 0.11, 1.0, 1.0)
+    assert drop.per_turn == pytest.approx(current.per_turn)
+    assert screw_of(design, "rail+.drop", 0.11, 1.0).per_turn is None
+
+
+def test_time_constants_are_the_longest_first() -> None:
+    from benchkit.session.predictions import time_constants
+
+    lags_s = time_constants(tern())
+    assert len(lags_s) >= 2
+    assert list(lags_s) == sorted(lags_s, reverse=True)
+    assert lags_s[-1] > 0.0
+
+
+def test_a_runaway_in_words() -> None:
+    from benchkit.session.predictions import runaway
+
+    tripped = runaway("emitter.upper.1", "V", 0.0312, 0.0242)
+    assert tripped.reason == "emitter.upper.1 rises by itself, faster and faster: 31.2 mV"
+    assert (tripped.what, tripped.value, tripped.limit) == ("emitter.upper.1", 0.0312, 0.0242)

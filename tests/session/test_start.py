@@ -1,11 +1,14 @@
 from __future__ import annotations
 
 from pathlib import Path
+from types import SimpleNamespace
+from typing import Any, cast
 
 import pytest
 
 from benchkit.errors import RecordError
-from benchkit.session.start import design_and_procedure, events_of, opened_of, replayed
+from benchkit.events import OutputOff
+from benchkit.session.start import Runner, design_and_procedure, events_of, opened_of, replayed
 from tests.procedure.driver import OPENED, begun, small
 from tests.record.walks import write
 from tests.stage.designs import TERN
@@ -76,3 +79,39 @@ def test_a_record_stands_alone(tmp_path: Path) -> None:
     assert (design.name, procedure.head.name) == ("Tern 40", "First power-on")
     with pytest.raises(RecordError, match=r"a\.jsonl, line 1"):
         design_and_procedure(OPENED, tmp_path / "a.jsonl")
+
+
+CONFIRMED = OutputOff(reason="end", confirmed=True, how="read back")
+UNCONFIRMED = OutputOff(reason="end", confirmed=False, how="no answer")
+
+
+@pytest.mark.parametrize(
+    ("last_off", "manual", "state", "known"),
+    [
+        (CONFIRMED, False, {"ever_on": True}, True),
+        (UNCONFIRMED, False, {"ever_on": True}, False),
+        (UNCONFIRMED, False, {"ever_on": False}, False),
+        (None, False, {"ever_on": True}, False),
+        (None, False, {"ever_on": False}, True),
+        (CONFIRMED, False, {"ever_on": True, "on_lamp": True}, False),
+        (None, True, {"ever_on": True, "energised": "on"}, False),
+        (None, True, {"ever_on": True, "energised": "off"}, True),
+        (None, True, {"ever_on": False, "energised": "unknown"}, True),
+        (None, None, {}, True),
+        (UNCONFIRMED, None, {}, False),
+    ],
+)
+def test_another_walk_may_begin_only_when_the_supply_is_known_to_be_off(
+    last_off: OutputOff | None, manual: bool | None, state: dict[str, Any], known: bool
+) -> None:
+    runner = Runner(cast("Any", None))
+    runner.last_off = last_off
+    if manual is not None:
+        parts = {"on_lamp": False, "energised": "on", **state}
+        session = SimpleNamespace(
+            state=SimpleNamespace(**parts), job=SimpleNamespace(manual_supply=manual), last_off=None
+        )
+        runner.session = cast("Any", session)
+        words = runner.last_words()
+        assert known == (not any(loud in words for loud in ("BY HAND", "UNKNOWN")))
+    assert runner.known_off == known

@@ -284,3 +284,26 @@ def test_what_broke_is_in_the_picture() -> None:
     assert view(drive).broken == ""
     drive.tell(Noted(text="t", broken=("emitter.upper.1: open",)))
     assert view(drive).broken == "emitter.upper.1: open"
+
+
+def test_where_the_probes_go_next_and_how_long_it_has_been() -> None:
+    drive = begun(small())
+    painter = Painter(drive.walk, replace(HEADINGS, target_time_s=300.0))
+    seen: dict[str, str] = {}
+    while drive.state.closed is None:
+        shown = painter.paint(drive.state, Moment(), 12.5)
+        assert (shown.elapsed_s, shown.target_time_s) == (12.5, 300.0)
+        seen[shown.item] = shown.next_probe
+        drive.well()
+    items = {item.id: item for item in drive.walk.plan.items}
+    told = {item: words for item, words in seen.items() if words}
+    assert told
+    for item, words in told.items():
+        assert items[item].kind == "measure"
+        following = next(
+            other for other in drive.walk.plan.items[list(items).index(item) + 1 :]
+            if other.point is not None and other.point.function != "dc current"
+        )  # fmt: skip
+        assert following.point is not None
+        assert words.startswith(f"{following.point.name}: red on {following.point.red}")
+    assert any(words == "" and items[item].kind == "measure" for item, words in seen.items())

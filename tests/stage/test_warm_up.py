@@ -188,3 +188,12 @@ def test_a_curve_that_is_flat_settles_at_once() -> None:
     )  # fmt: skip
     assert flat.settled_s() == 0.0
     assert "at once" in flat.told()
+
+
+def test_a_curve_goes_on_from_its_own_temperatures() -> None:
+    """Stopped on its way and taken up again, it is the same curve."""
+    condition = Condition(positive_v=35.0, negative_v=-35.0, trimmer=0.5)
+    whole, first = warm_up(tern(), condition, until_s=400.0), warm_up(tern(), condition, until_s=100.0)
+    second = warm_up(tern(), condition, until_s=300.0, from_c=first.celsius[:, :, -1])
+    times_s = np.linspace(0.0, 300.0, 20)
+    assert second.drop_at(times_s)[0] == pytest.approx(whole.drop_at(100.0 + times_s)[0], rel=2e-4)

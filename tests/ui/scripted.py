@@ -316,7 +316,9 @@ class Bench:
 Script = Callable[[Front, Bench], Awaitable[Closed]]
 
 
-def app_for(script: Script, bench: Bench, *, identity: Identity | None = None, guard_s: float = 0.0) -> BenchApp:
+def app_for(
+    script: Script, bench: Bench, *, identity: Identity | None = None, guard_s: float = 0.0, bell: bool = True
+) -> BenchApp:
     async def start(front: Front, identity: Identity) -> Closed:
         bench.front, bench.identity = front, identity
         return await script(front, bench)
@@ -328,6 +330,7 @@ def app_for(script: Script, bench: Bench, *, identity: Identity | None = None, g
         opening=OPENING,
         identity=identity,
         guard_s=guard_s,
+        bell=bell,
     )
 
 

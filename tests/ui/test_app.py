@@ -329,7 +329,7 @@ def test_f9_works_while_a_reason_is_typed_and_before_leaving_and_at_the_start() 
             assert len(bench.offs) == 1
             await pilot.press("ctrl+q")
             await until(lambda: isinstance(app.screen, LeaveScreen))
-            await pilot.press("f9", "space")
+            await pilot.press("f9", "delete", "space")
             assert len(bench.offs) == 3
         async with running(asking(scripted.DECIDE), identity=None) as (app, pilot, bench):
             await pilot.press("4", "f9")
@@ -346,22 +346,25 @@ def test_f9_works_while_a_reason_is_typed_and_before_leaving_and_at_the_start() 
     run(test)
 
 
-def test_the_space_bar_switches_off_unless_somebody_types() -> None:
+def test_delete_switches_off_unless_somebody_types_and_the_space_bar_never_does() -> None:
     async def test() -> None:
         on = replace(scripted.VIEW, supply=scripted.ON)
         async with running(asking(scripted.CONFIRM, view=on)) as (app, pilot, bench):
-            assert "space bar" in drawn(app)[-2]
+            assert "Delete" in drawn(app)[-2]
             await pilot.press("space")
+            assert bench.offs == []
+            await until(lambda: shows(app, "The space bar takes a reading"))
+            await pilot.press("delete")
             assert len(bench.offs) == 1
             assert bench.replies == []
         async with running(asking(scripted.TEXT, view=on)) as (app, pilot, bench):
             await pilot.pause(0.15)
-            assert "space bar" not in drawn(app)[-2]
-            await pilot.press("2", "space", "5", "enter")
+            assert "Delete" not in drawn(app)[-2]
+            await pilot.press("2", "space", "5", "delete", "enter")
             await until(lambda: bench.replies == [Reply(choice="done", text="2 5")])
             assert bench.offs == []
         async with running(asking(scripted.CONFIRM)) as (app, pilot, bench):
-            await pilot.press("space")
+            await pilot.press("delete")
             assert bench.offs == [], "there is nothing to switch off, and a slip must not end a walk"
 
     run(test)
@@ -533,9 +536,9 @@ def test_the_heart_beats_at_least_four_times_a_second_while_readings_pour_in() -
 def test_a_watched_reading_that_stops_coming_is_called_stale() -> None:
     async def test() -> None:
         async with running(asking(scripted.TRIM, view=scripted.TRIM_VIEW)) as (app, _, _bench):
-            assert shows(app, "INSIDE the limits")
-            await until(lambda: shows(app, "STALE") and shows(app, "no fresh reading: do not turn"), 4.0)
-            assert not shows(app, "INSIDE the limits")
+            assert shows(app, "├●┤ INSIDE")
+            await until(lambda: shows(app, "STALE") and shows(app, "NO FRESH READING do not turn"), 4.0)
+            assert not shows(app, "INSIDE")
 
     run(test)
 
@@ -834,7 +837,7 @@ def test_a_hand_supply_that_was_never_on_is_left_like_one_that_is_off() -> None:
     async def test() -> None:
         view = replace(scripted.VIEW, supply=HAND_NEVER)
         async with running(asking(scripted.CONFIRM, view=view)) as (app, pilot, bench):
-            await pilot.press("space")
+            await pilot.press("delete")
             assert bench.offs == []
             await pilot.press("ctrl+q")
             await until(lambda: app.return_value is not None)

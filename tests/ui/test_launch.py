@@ -6,7 +6,7 @@ from typing import Any, cast
 
 import pytest
 
-from benchkit.ui.launch import _say_end, resume_command
+from benchkit.ui.walking import _say_end, resume_command
 
 
 def test_the_command_that_goes_on_can_be_pasted() -> None:

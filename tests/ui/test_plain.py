@@ -14,6 +14,7 @@ from benchkit.session.front import Reply
 from benchkit.ui import plain
 from benchkit.ui.plain import PlainFront
 from tests.ui import scripted
+from tests.ui.live_views import LIVES, PROBING, SOAK_VIEW
 from tests.ui.scripted import (
     AIM,
     CONFIRM,
@@ -334,3 +335,59 @@ def test_watching_goes_on_by_itself_and_can_be_ended() -> None:
     reply, text = answer(scripted.FALL, "enough", view=scripted.FALL_VIEW)
     assert reply == Reply(choice="enough")
     assert "Take it as it reads now" in text
+
+
+# --- watched readings -----------------------------------------------------------------------------------------------
+
+
+class _Out(io.StringIO):
+    def __init__(self, tty: bool) -> None:
+        super().__init__()
+        self._tty = tty
+
+    def isatty(self) -> bool:
+        return self._tty
+
+
+@pytest.mark.parametrize(("tty", "bell", "rings"), [(True, True, 1), (True, False, 0), (False, True, 0)])
+def test_a_trim_in_lines_with_its_bell(tty: bool, bell: bool, rings: int) -> None:
+    out, terminal, seconds = _Out(tty), Terminal(tty=tty), [0.0]
+
+    async def whole() -> None:
+        front = PlainFront(lambda _: None, out=out, source=terminal, bell=bell, clock=lambda: seconds[0])  # type: ignore[arg-type]
+        view = replace(TRIM_VIEW, live=LIVES["turn"], channel="L")
+        front.show(view)
+        asked = asyncio.ensure_future(front.ask(TRIM))
+        await asyncio.sleep(0)
+        for name in ("turn", "turn", "inside", "gone"):
+            for tenth in range(10):
+                seconds[0] += 0.1
+                front.show(replace(view, live=replace(LIVES[name], captured=int(name == "gone" and tenth > 4))))
+        terminal.type("t")
+        assert await asked == Reply(choice="take")
+        front.show(replace(view, live=LIVES["overshot"]))
+        terminal.close()
+
+    asyncio.run(whole())
+    text = out.getvalue()
+    lines = [line for line in text.splitlines() if "  ~ " in line]
+    assert len(lines) == 3, lines
+    assert [word in line for word, line in zip(("TOO LOW", "INSIDE", "READING GONE"), lines, strict=True)] == [True] * 3
+    assert "a quarter turn anticlockwise; rising 0.12 mV/min; will rest at 17.10 mV" in lines[0]
+    assert text.count("\a") == rings
+    assert "(channel L)" in text
+
+
+def test_a_soak_in_lines_and_where_the_probes_go_next() -> None:
+    async def script(front: PlainFront, terminal: Terminal, offs: list[str]) -> None:
+        front.show(SOAK_VIEW)
+        front.show(replace(SOAK_VIEW, remaining_s=99.5))
+        front.show(replace(PROBING, live=None))
+        terminal.type("")
+        await front.ask(PROBES)
+
+    text, _ = play(script)
+    assert text.count("  ~ ") == 1
+    assert "hands off: it comes to rest" in text
+    assert "The stage soaks; about 100 s left" in text
+    assert "After this: emitter.lower.1." in text

@@ -18,6 +18,7 @@ pytestmark = pytest.mark.skipif(os.name != "posix", reason="needs a pseudo-termi
 
 ROOT = Path(__file__).parents[2]
 F9 = b"\x1b[20~"
+DELETE = b"\x1b[3~"
 COLOUR = re.compile(rb"\x1b\[[0-9;]*?(?:(?<=[\[;])(?:3[0-7]|4[0-7]|9[0-7]|10[0-7])(?=[;m])|(?<=[\[;])[34]8[;:])")
 
 
@@ -122,7 +123,7 @@ def test_the_sleep_signal_and_the_stop_key_leave_the_screen_awake(terminal: Term
     terminal.process.send_signal(signal.SIGTSTP)
     terminal.send(b"\x1a")
     time.sleep(0.3)
-    sent = terminal.send(b" ")
+    sent = terminal.send(DELETE)
     assert terminal.wait_for("off the operator asked for off") - sent < 0.5
     assert terminal.process.poll() is None
 

@@ -48,6 +48,9 @@ class Page(Vertical):
         else:
             self.card.aim(view.aim)
 
+    def age(self) -> None:
+        """Let a watched reading grow old in sight; called also while nothing new comes."""
+
     @property
     def sheet(self) -> VerticalScroll:
         """The part that may be longer than its room."""

@@ -8,23 +8,26 @@ from benchkit.procedure.actions import Question
 from benchkit.session.front import ResultView, View
 from benchkit.ui.pages.base import Page
 from benchkit.ui.widgets.outcome import Outcome
+from benchkit.ui.widgets.probe_strip import ProbeStrip
 from benchkit.ui.widgets.words import Words
 
 
 class StepPage(Page):
-    """Sheet, last result, answer.
+    """Sheet, what the probes read now and go to next, last result, answer.
 
-    A sheet that is longer than its room takes that of the last result's drawing first.
+    A sheet that is longer than its room takes that of the last result's drawing first; so does a reading of the moment.
     """
 
     def __init__(self, guard_s: float, **more: Any) -> None:
         super().__init__(guard_s, **more)
+        self._strip = ProbeStrip(classes="probe-strip")
         self._outcome = Outcome(classes="outcome")
         self._at_stop: tuple[ResultView, ...] | None = None
 
     def compose(self) -> Any:
         """Lay out from what to do, over what came of the last, to the answer."""
         yield self.card
+        yield self._strip
         yield self._outcome
         yield self.answer
 
@@ -35,8 +38,15 @@ class StepPage(Page):
             self._at_stop = view.results
         elif self._at_stop is None:
             self._at_stop = view.results  # gone on with after a stop: what is here is from before it
+        probing = self.question is not None and self.question.kind == "probes"
+        self._strip.say(view.live if probing else None, view.next_probe if probing else "")
+        self.set_class(probing and view.live is not None, "probing")
         old = bool(view.stopped) and view.results == self._at_stop
         self._outcome.say(view.results, heading="before the stop" if old else "before this")
+
+    def age(self) -> None:
+        """Let a reading of the moment grow old in sight."""
+        self._strip.age()
 
     def mark_overflow(self) -> None:
         """Give the sheet the room that it needs, then say what still doesn't fit."""

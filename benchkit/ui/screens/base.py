@@ -69,11 +69,11 @@ class BenchScreen(Screen[Any]):
         self.too_small.say(f"{width}x{height} is too small to work with: 40x12 at least, better 80x24.")
 
     def on_descendant_focus(self) -> None:
-        """An entry may have taken the space bar."""
+        """An entry may have taken keys."""
         self.refresh_off_line()
 
     def on_descendant_blur(self) -> None:
-        """The space bar may be free again."""
+        """Keys may be free again."""
         self.refresh_off_line()
 
     def refresh_off_line(self) -> None:

@@ -16,6 +16,8 @@ from benchkit.ui.look import CARE, INK, QUIET, STRONG, safe
 from benchkit.ui.screens.base import TURN_OVER, BenchScreen
 from benchkit.ui.widgets.words import Words
 
+OTHER = "  Tab: the other entry."
+
 
 class StartScreen(BenchScreen):
     """Two entries; Enter in the last one begins."""
@@ -26,7 +28,9 @@ class StartScreen(BenchScreen):
         super().__init__(**more)
         self._opening = opening
         self._unit = Input(opening.unit, id="unit", compact=True, select_on_focus=True, disabled=opening.resumed)
-        self._operator = Input(opening.operator, id="operator", compact=True, select_on_focus=True)
+        self._operator = Input(
+            opening.operator, id="operator", compact=True, select_on_focus=True, disabled=opening.another_unit
+        )
         self._hint = Words(classes="start-hint")
         self._begun = False
         self._body = VerticalScroll(classes="start-body", can_focus=False)
@@ -46,7 +50,8 @@ class StartScreen(BenchScreen):
 
     def on_mount(self) -> None:
         """Begin at the serial number."""
-        self._hint.say("Enter: next, then begin.  Ctrl+Q: leave.  Tab: the other entry.")
+        alone = self._opening.another_unit
+        self._hint.say(f"Enter: {'begin' if alone else 'next, then begin'}.  Ctrl+Q: leave.{'' if alone else OTHER}")
         (self._operator if self._unit.disabled else self._unit).focus()
 
     def action_turn_over(self, rows: int) -> None:
@@ -62,7 +67,7 @@ class StartScreen(BenchScreen):
             (self._unit, entry_problem("serial number", self._unit.value)),
             (self._operator, entry_problem("operator", self._operator.value)),
         )
-        if message.input is self._unit and not problems[0][1]:
+        if message.input is self._unit and not problems[0][1] and not self._operator.disabled:
             self._operator.focus()
             return
         for entry, problem in problems:
@@ -79,6 +84,8 @@ def _title(opening: Opening) -> Text:
     kind = "a rehearsal on a simulated unit" if opening.kind == "rehearsal" else "a walk on a real unit"
     if opening.resumed:
         kind += ", gone on with where it was cut off"
+    elif opening.another_unit:
+        kind += ": the next one, type or scan its number"
     return Text.assemble(("benchkit", f"bold {STRONG}"), (f"  {kind}", f"bold {CARE}"))
 
 
@@ -90,6 +97,7 @@ def _facts(opening: Opening) -> Table:
         ("procedure", opening.procedure),
         ("", opening.purpose),
         ("design", opening.design),
+        ("channel", opening.channel),
         ("meter", opening.meter),
         ("supply", opening.supply),
         ("record", opening.record),

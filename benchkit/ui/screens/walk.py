@@ -11,13 +11,15 @@ from textual.widgets import ContentSwitcher
 
 from benchkit.procedure.actions import Question
 from benchkit.session.front import View
+from benchkit.ui.layout import ROOMY
 from benchkit.ui.look import CARE, INK, LINE, QUIET, STRONG, VERDICT_COLOURS, safe
 from benchkit.ui.pages.base import Page
 from benchkit.ui.pages.step import DecidePage, HoldPage, StepPage
-from benchkit.ui.pages.summary import LEAVE, SummaryPage
+from benchkit.ui.pages.summary import SummaryPage
 from benchkit.ui.pages.trim import TrimPage
-from benchkit.ui.pages.watch import WatchPage
+from benchkit.ui.pages.watch import SoakPage, WatchPage, is_soak
 from benchkit.ui.screens.base import TURN_OVER, BenchScreen
+from benchkit.ui.series import end_question
 from benchkit.ui.widgets.answer import Answer
 from benchkit.ui.widgets.trail_words import Role, trail
 from benchkit.ui.widgets.words import Words
@@ -31,6 +33,25 @@ _ROLE_STYLES: Final[dict[Role, str]] = {
     "coming": QUIET,
     "line": LINE,
 }
+
+
+def channel_time(elapsed_s: float | None, target_s: float | None) -> str:
+    """Return how long this channel has taken, and what is allowed for it.
+
+    Examples
+    --------
+    >>> channel_time(192.4, 300.0)
+    '3:12 of 5:00  '
+    """
+    if elapsed_s is None:
+        return ""
+    allowed = f" of {_clock(target_s)}" if target_s is not None else ""
+    return f"{_clock(elapsed_s)}{allowed}  "
+
+
+def _clock(seconds: float) -> str:
+    whole = max(0, int(seconds))
+    return f"{whole // 60}:{whole % 60:02d}"
 
 
 class WalkScreen(BenchScreen):
@@ -49,6 +70,7 @@ class WalkScreen(BenchScreen):
             "decide": DecidePage(guard_s, id="decide"),
             "trim": TrimPage(guard_s, id="trim"),
             "watch": WatchPage(guard_s, id="watch"),
+            "soak": SoakPage(guard_s, id="soak"),
             "summary": SummaryPage(guard_s, id="summary"),
         }
         self._switcher = ContentSwitcher(*self._pages.values(), initial="step", classes="walk-pages")
@@ -68,7 +90,9 @@ class WalkScreen(BenchScreen):
 
     def put(self, question: Question, refused: str) -> None:
         """Put a question on its page."""
-        self._turn_to(PAGE_FOR.get(question.kind, "step"))
+        page = PAGE_FOR.get(question.kind, "step")
+        soak = page == "watch" and self._view is not None and is_soak(self._view)
+        self._turn_to("soak" if soak else page)
         self.page.put(question, refused)
         if self._view is not None:
             self.page.say(self._view)
@@ -84,21 +108,23 @@ class WalkScreen(BenchScreen):
         self._view = view
         if view.exit_status is not None and self.page.id != "summary":
             self._turn_to("summary")
-            self.page.put(LEAVE, "")
-        elif self.page.question is None and self.page.id not in ("step", "summary") and view.live is None:
-            self._turn_to("step")
+            self.page.put(end_question(self.bench.next_label), "")
+        elif self.page.question is None and self.page.id != "summary":
+            if is_soak(view):
+                self._turn_to("soak")
+            elif self.page.id != "step" and (view.live is None or self.page.id == "soak"):
+                self._turn_to("step")
         self._say_head(view)
         self._say_trail(view)
         self.page.say(view)
         self._message.say(view.message)
+        self._message.set_class(not view.message, "empty")
         self.refresh_off_line()
 
     def age(self) -> None:
         """Let a watched reading grow old in sight."""
-        page = self.page
-        page.mark_overflow()
-        if isinstance(page, TrimPage):
-            page.age()
+        self.page.mark_overflow()
+        self.page.age()
 
     def lay_out(self, width: int, height: int) -> None:
         """Choose the layout; the trail has another form where there is room."""
@@ -111,6 +137,16 @@ class WalkScreen(BenchScreen):
         if self._view is not None and self.is_mounted:
             self._say_trail(self._view)
 
+    def take_by_space(self) -> None:
+        """Take the reading that stands on the page, if one does."""
+        if self.arrangement != "tiny":  # nobody answers what can't be seen
+            self.page.answer.take_reading()
+
+    def hold_keys(self, seconds: float) -> None:
+        """A reading was taken by itself: what is pressed now was meant for it."""
+        for page in self._pages.values():
+            page.answer.hold(seconds)
+
     def action_turn_over(self, rows: int) -> None:
         """Move the sheet."""
         self.page.turn_over(rows)
@@ -119,7 +155,7 @@ class WalkScreen(BenchScreen):
         """Hand the answer on."""
         message.stop()
         if self.page.id == "summary":
-            self.bench.finish()
+            self.bench.finish(message.reply.choice)
         else:
             self.bench.answered(message.reply)
 
@@ -135,11 +171,17 @@ class WalkScreen(BenchScreen):
         left = Text.assemble(
             (safe(view.design), f"bold {STRONG}"),
             (f"  unit {safe(view.unit)}", INK),
+            (f"  channel {safe(view.channel)}" if view.channel else "", f"bold {INK}"),
             (f"  {safe(view.operator)}", QUIET),
         )
+        over = view.elapsed_s is not None and view.target_time_s is not None and view.elapsed_s > view.target_time_s
+        kept = f"{view.kept} {'line' if view.kept == 1 else 'lines'} kept"
+        if view.elapsed_s is not None and self.app.size.width < ROOMY[0]:
+            kept = f"{view.kept} kept"
         right = Text.assemble(
+            (channel_time(view.elapsed_s, view.target_time_s), f"bold {CARE}" if over else INK),
             ("rehearsal  " if view.kind == "rehearsal" else "", f"bold {CARE}"),
-            (f"{view.kept} {'line' if view.kept == 1 else 'lines'} kept", QUIET),
+            (kept, QUIET),
         )
         row.add_row(left, right)
         self._head.say_drawn((left.plain, right.plain), row)

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import time
 from collections.abc import Callable
-from typing import Any
+from typing import Any, Final
 
 from rich.text import Text
 from textual import events
@@ -24,6 +24,12 @@ GUARD_S = 0.3
 
 TOO_SOON = "Not taken: the question had only just come up. Read it, then press the key again."
 """Said of an answer that came too soon to be meant for the question."""
+
+
+SPACE_TAKES: Final = ("trim", "probes")
+"""Kinds of questions to which the space bar, and so a foot switch that types it, answers that the reading be taken."""
+
+NOTHING_TO_TAKE: Final = "The space bar takes a reading, and none is to be taken here."
 
 
 class Choices(Words, can_focus=True):
@@ -50,6 +56,7 @@ class Choices(Words, can_focus=True):
         self._stacked = False
         self._arrows = True
         self._usual = True
+        self._space = False
         self._drawn_for = 0
 
     def offer(
@@ -60,12 +67,14 @@ class Choices(Words, can_focus=True):
         marked: int = 0,
         arrows: bool = True,
         usual: bool = True,
+        space: bool = False,
     ) -> None:
         """Offer `choices`, one a row when `stacked`; without `arrows` these keys are left to others.
 
-        Without a `usual` one Enter takes none of them: a confirmation wants its own key.
+        Without a `usual` one Enter takes none of them: a confirmation wants its own key.  With `space` the space bar
+        takes the first.
         """
-        self._usual = usual
+        self._usual, self._space = usual, space
         self._choices = keyed(choices)
         self._marked = min(marked, max(0, len(choices) - 1))
         self._stacked = stacked
@@ -113,6 +122,8 @@ class Choices(Words, can_focus=True):
         for number, (letter, choice) in enumerate(self._choices):
             marked = self._usual and number == self._marked and self.has_focus
             key = "Enter" if marked else letter.upper()
+            if self._space and number == 0:
+                key += " or space"
             one = Text()
             one.append(f" {key} ", style=f"bold reverse {CARE}" if marked else f"bold {CARE}")
             one.append(f" {safe(choice.label)}", style=f"bold {STRONG}" if marked else INK)
@@ -156,6 +167,7 @@ class Answer(Vertical):
         self._reason_for: Choice | None = None
         self._half_typed: tuple[str, str, str] | None = None
         self._since = 0.0
+        self._held_until = 0.0
         self._hint = Words(classes="answer-hint")
         self._entry = Input(classes="answer-entry", compact=True, select_on_focus=False)
         self._choices = Choices(classes="answer-choices")
@@ -194,7 +206,9 @@ class Answer(Vertical):
         if types:
             shown = tuple(choice for choice in question.choices if not _typed(question, choice))
         usual = question.kind not in ("confirm", "watch")
-        self._choices.offer(shown, stacked=stacked, arrows=arrows and usual and not _ends(shown), usual=usual)
+        can_move = arrows and usual and not _ends(shown)
+        space = question.kind in SPACE_TAKES and bool(shown)
+        self._choices.offer(shown, stacked=stacked, arrows=can_move, usual=usual, space=space)
         self._choices.display = bool(shown)
         self._focus()
         if not refused:
@@ -232,7 +246,24 @@ class Answer(Vertical):
         (self._entry if self._entry.display else self._choices).focus(scroll_visible=False)
 
     def _too_soon(self) -> bool:
-        return self._clock() - self._since < self._guard_s
+        now = self._clock()
+        return now - self._since < self._guard_s or now < self._held_until
+
+    def hold(self, seconds: float) -> None:
+        """Take no key for an answer for a while."""
+        self._held_until = self._clock() + seconds
+
+    def take_reading(self) -> None:
+        """Take the reading that the question is about, as the space bar or a foot switch wants it."""
+        question = self._question
+        if question is None:
+            return
+        if question.kind not in SPACE_TAKES or not question.choices:
+            self._complain(NOTHING_TO_TAKE)
+        elif self._too_soon():
+            self._complain(TOO_SOON)
+        else:
+            self._take(question.choices[0])
 
     def on_choices_taken(self, message: Choices.Taken) -> None:
         """Answer, or ask why first."""

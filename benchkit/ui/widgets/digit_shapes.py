@@ -1,16 +1,40 @@
 """Figures that can be read from across a bench, built of full blocks alone.
 
-Each figure is three cells wide and five rows high; scaling repeats cells, so that strokes stay even in a terminal whose
-cells are about twice as high as wide.
+Each figure is three cells wide and five rows high: three strokes across (rows 1, 3 and 5) and two rows of stems between
+them.  A size repeats cells sideways, strokes by their thickness and stems by their length, so that strokes stay even in
+a terminal whose cells are about twice as high as wide.
 """
 
 from __future__ import annotations
 
+from dataclasses import dataclass
 from typing import Final
 
-ROWS: Final = 5
-SCALES: Final[tuple[tuple[int, int], ...]] = ((4, 2), (2, 1), (1, 1))
-"""Horizontal and vertical repetition, the largest first."""
+
+@dataclass(frozen=True)
+class FigureSize:
+    """How often cells are repeated sideways, and how many rows a stroke and a stem take."""
+
+    across: int
+    stroke: int
+    stem: int
+
+    @property
+    def rows(self) -> int:
+        """Rows of a figure."""
+        return 3 * self.stroke + 2 * self.stem
+
+
+SIZES: Final = (
+    FigureSize(5, 2, 3),
+    FigureSize(4, 2, 2),
+    FigureSize(3, 1, 2),
+    FigureSize(2, 1, 1),
+    FigureSize(1, 1, 1),
+)
+"""The largest first."""
+
+SMALLEST: Final = SIZES[-1]
 
 _SHAPES: Final[dict[str, tuple[str, str, str, str, str]]] = {
     "0": ("###", "# #", "# #", "# #", "###"),
@@ -26,6 +50,7 @@ _SHAPES: Final[dict[str, tuple[str, str, str, str, str]]] = {
     "-": ("   ", "   ", "###", "   ", "   "),
     "+": ("   ", " # ", "###", " # ", "   "),
     ".": (" ", " ", " ", " ", "#"),
+    "/": ("  #", "  #", " # ", "#  ", "#  "),
     " ": ("   ", "   ", "   ", "   ", "   "),
     "O": ("###", "# #", "# #", "# #", "###"),
     "L": ("#  ", "#  ", "#  ", "#  ", "###"),
@@ -44,25 +69,26 @@ def width_of(text: str, across: int) -> int:
     return across * (sum(len(_SHAPES[character][0]) for character in text) + len(text) - 1)
 
 
-def fit(text: str, width: int, height: int) -> tuple[int, int] | None:
-    """Return the largest scale (across, down) in which `text` fits, or None when none does."""
+def fit(text: str, width: int, height: int) -> FigureSize | None:
+    """Return the largest size in which `text` fits, or None when none does."""
     if not drawable(text):
         return None
-    for across, down in SCALES:
-        if width_of(text, across) <= width and ROWS * down <= height:
-            return across, down
+    for size in SIZES:
+        if width_of(text, size.across) <= width and size.rows <= height:
+            return size
     return None
 
 
-def big_rows(text: str, across: int = 1, down: int = 1, ink: str = "█") -> tuple[str, ...]:
+def big_rows(text: str, size: FigureSize = SMALLEST, ink: str = "█") -> tuple[str, ...]:
     r"""Return `text` drawn large, as rows of equal width.
 
     Parameters
     ----------
     text : str
         Figures, signs, point and space; see `drawable`.
-    across, down : int
-        How often each cell is repeated.
+    size : FigureSize
+    ink : str
+        What the strokes are made of.
 
     Raises
     ------
@@ -79,11 +105,12 @@ def big_rows(text: str, across: int = 1, down: int = 1, ink: str = "█") -> tup
           #
     """
     rows = []
-    for row in range(ROWS):
-        line = (" " * across).join(
-            "".join((ink if cell == "#" else " ") * across for cell in _SHAPES[character][row]) for character in text
+    for row, times in enumerate((size.stroke, size.stem, size.stroke, size.stem, size.stroke)):
+        line = (" " * size.across).join(
+            "".join((ink if cell == "#" else " ") * size.across for cell in _SHAPES[character][row])
+            for character in text
         )
-        rows.extend([line] * down)
+        rows.extend([line] * times)
     return tuple(rows)
 
 

@@ -15,7 +15,7 @@ from benchkit.ui.widgets.words import Words
 
 
 def how_to_switch_off(supply: SupplyView | None, typing: bool, narrow: bool = False, tiny: bool = False) -> str:
-    """Return the words for the off key; the space bar belongs to the entry while somebody types.
+    """Return the words for the off key; Delete belongs to the entry while somebody types.
 
     Examples
     --------
@@ -30,7 +30,7 @@ def how_to_switch_off(supply: SupplyView | None, typing: bool, narrow: bool = Fa
         return "F9: OFF"
     if typing:
         return "F9: OFF at once"
-    return "F9/space: OFF" if narrow else "F9 or space bar: OFF at once"
+    return "F9/Delete: OFF" if narrow else "F9 or Delete: OFF at once"
 
 
 def asked_words(supply: SupplyView) -> str:

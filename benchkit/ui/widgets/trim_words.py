@@ -3,10 +3,13 @@
 from __future__ import annotations
 
 import math
+from dataclasses import dataclass
 from typing import Final, Literal
 
+from benchkit.judge.advice import Mood
 from benchkit.quantities import show
 from benchkit.session.front import LiveView
+from benchkit.ui.widgets.ring_cells import Sense, amount_of, sense_of
 
 STALE_AFTER_S: Final = 1.5
 """A reading older than this is not to be trimmed by (s)."""
@@ -49,3 +52,107 @@ def in_step(value: float, target: float, unit: str) -> str:
 def figure(value: float, unit: str) -> str:
     """Return a limit as it is written under the gauge."""
     return show(value, unit, 4)
+
+
+def bare_figure(value: float, target: float, unit: str) -> str:
+    """Return a limit in the steps of its target, without the unit: it stands where the unit has been said."""
+    return in_step(value, target, unit).partition(" ")[0]
+
+
+# -- what is going on, in shape and word ----------------------------------------------------------------------------
+
+Tone = Literal["calm", "turn", "good", "alarm"]
+
+
+@dataclass(frozen=True, kw_only=True)
+class MoodLook:
+    """How a mood is told: a shape that is a small picture of it, a word, and a tone."""
+
+    shape: str
+    word: str
+    tone: Tone
+
+
+MOOD_LOOKS: Final[dict[Mood, MoodLook]] = {
+    "turn": MoodLook(shape="┌┐", word="TURN", tone="turn"),
+    "steady": MoodLook(shape="═●═", word="AT REST", tone="calm"),
+    "inside": MoodLook(shape="├●┤", word="INSIDE", tone="good"),
+    "overshot": MoodLook(shape="├┤●", word="OVERSHOT", tone="alarm"),
+    "wrong way": MoodLook(shape="●░├┤", word="WRONG WAY", tone="alarm"),
+    "no response": MoodLook(shape="───", word="NO RESPONSE", tone="alarm"),
+    "gone": MoodLook(shape="░ ░", word="READING GONE", tone="alarm"),
+    "folded back": MoodLook(shape="┌──┐", word="SUPPLY IN ITS LIMIT", tone="alarm"),
+    "running away": MoodLook(shape="▲▲▲", word="RUNNING AWAY", tone="alarm"),
+}
+"""A dot inside, beyond or away from the limits; a flat line; a curve cut flat; holes where the reading was."""
+
+STALE_LOOK: Final = MoodLook(shape="▒▒▒", word="NO FRESH READING", tone="alarm")
+MORE_LOOK: Final = MoodLook(shape="▲", word="TOO LOW", tone="turn")
+LESS_LOOK: Final = MoodLook(shape="▼", word="TOO HIGH", tone="turn")
+
+DO_NOT_TURN: Final = "do not turn"
+
+
+def mood_look(live: LiveView, stale: bool = False) -> MoodLook:
+    """Return how it is told what is going on; a turn that is due also says on which side the reading lies."""
+    if stale:
+        return STALE_LOOK
+    look = MOOD_LOOKS[live.mood]
+    if live.mood == "turn":
+        return {"below": MORE_LOOK, "above": LESS_LOOK, "inside": MOOD_LOOKS["inside"]}.get(where(live), look)
+    return look
+
+
+def advice_words(live: LiveView, stale: bool = False) -> str:
+    """Return the advice; where the session gives none, at least towards which end."""
+    if stale:
+        return DO_NOT_TURN
+    if live.advice:
+        return live.advice
+    return {"below": "MORE bias", "above": "LESS bias"}.get(where(live), "") if live.mood == "turn" else ""
+
+
+@dataclass(frozen=True, kw_only=True)
+class RingLook:
+    """What the ring beside the reading shows."""
+
+    share: float
+    sense: Sense
+    centre: str
+    tone: Literal["calm", "turn", "alarm"]
+
+
+def ring_look(live: LiveView, stale: bool = False) -> RingLook | None:
+    """Return the ring for a reading: how far to turn and which way, how far a soak is, or that something is wrong.
+
+    None where there is nothing to tell.
+    """
+    look = mood_look(live, stale)
+    if look.tone == "alarm" and (live.advised_turns is None or stale):
+        return RingLook(share=1.0, sense="clockwise", centre="STOP", tone="alarm")
+    sense = sense_of(live.advice)
+    if live.advised_turns is not None and live.advised_turns != 0.0 and sense is not None:
+        share = min(1.0, max(0.02, abs(live.advised_turns)))
+        return RingLook(share=share, sense=sense, centre=amount_of(live.advice, live.advised_turns), tone="turn")
+    if live.settled_share is not None:
+        share = min(1.0, max(0.0, live.settled_share))
+        return RingLook(share=share, sense="clockwise", centre=f"{share * 100:.0f} %", tone="calm")
+    return None
+
+
+def target_words(live: LiveView) -> str:
+    """Return target and limits in one line.
+
+    Examples
+    --------
+    >>> target_words(LiveView(point="p", unit="V", value=None, text="", low=0.018, high=0.022, target=0.02, age_s=0.0,
+    ...                       inside=False))
+    'target 20.00 mV, from 18.00 to 22.00'
+    """
+    low, high = (bare_figure(limit, live.target, live.unit) for limit in (live.low, live.high))
+    return f"target {in_step(live.target, live.target, live.unit)}, from {low} to {high}"
+
+
+def target_in_steps(live: LiveView) -> str:
+    """Return the widest reading that is to be expected, for figures that keep their place."""
+    return in_step(max(abs(live.target), abs(live.high)), live.target, live.unit)

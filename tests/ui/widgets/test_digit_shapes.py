@@ -6,16 +6,16 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
-from benchkit.ui.widgets.digit_shapes import ROWS, SCALES, big_rows, drawable, fit, split_reading, width_of
+from benchkit.ui.widgets.digit_shapes import SIZES, FigureSize, big_rows, drawable, fit, split_reading, width_of
 
 FIGURES = st.text("0123456789+-. OL", min_size=1, max_size=9)
 
 
-@given(FIGURES, st.sampled_from(SCALES))
-def test_rows_have_the_width_that_is_promised(text: str, scale: tuple[int, int]) -> None:
-    rows = big_rows(text, *scale)
-    assert len(rows) == ROWS * scale[1]
-    assert {len(row) for row in rows} == {width_of(text, scale[0])}
+@given(FIGURES, st.sampled_from(SIZES))
+def test_rows_have_the_width_that_is_promised(text: str, size: FigureSize) -> None:
+    rows = big_rows(text, size)
+    assert len(rows) == size.rows
+    assert {len(row) for row in rows} == {width_of(text, size.across)}
     assert set("".join(rows)) <= {"█", " "}
 
 
@@ -26,18 +26,23 @@ def test_no_two_figures_look_alike() -> None:
 
 @given(FIGURES, st.integers(1, 200), st.integers(1, 20))
 def test_what_fits_fits_and_the_next_larger_would_not(text: str, width: int, height: int) -> None:
-    scale = fit(text, width, height)
-    larger = SCALES if scale is None else SCALES[: SCALES.index(scale)]
-    if scale is not None:
-        assert width_of(text, scale[0]) <= width
-        assert ROWS * scale[1] <= height
-    for across, down in larger:
-        assert width_of(text, across) > width or ROWS * down > height
+    size = fit(text, width, height)
+    larger = SIZES if size is None else SIZES[: SIZES.index(size)]
+    if size is not None:
+        assert width_of(text, size.across) <= width
+        assert size.rows <= height
+    for other in larger:
+        assert width_of(text, other.across) > width or other.rows > height
 
 
-def test_a_reading_fits_where_the_layouts_put_it() -> None:
-    assert fit("-100.05", 52, 5) == (2, 1)
-    assert fit("-11.21", 36, 5) is not None
+@pytest.mark.parametrize(
+    ("text", "width", "height", "rows"),
+    [("19.31", 54, 7, 7), ("19.31", 88, 12, 12), ("-100.05", 54, 7, 5), ("-11.21", 36, 5, 5), ("19.31", 36, 5, 5)],
+)
+def test_a_reading_fits_where_the_layouts_put_it(text: str, width: int, height: int, rows: int) -> None:
+    size = fit(text, width, height)
+    assert size is not None
+    assert size.rows == rows
 
 
 @pytest.mark.parametrize(

@@ -1,20 +1,33 @@
 from __future__ import annotations
 
 from dataclasses import replace
+from typing import get_args
 
 import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
+from benchkit.judge.advice import Mood
 from benchkit.procedure.actions import Choice, Question
 from benchkit.session.front import Reply
+from benchkit.ui.look import SAFE
 from benchkit.ui.widgets.answer_keys import keyed, typed_reply
 from benchkit.ui.widgets.card import progress_words, time_words
 from benchkit.ui.widgets.off_line import how_to_switch_off
 from benchkit.ui.widgets.outcome import limits_words, marks_of, pointed, result_line, verdict_strip
 from benchkit.ui.widgets.summary_words import NOTHING_BROKEN, broken_words, closing_sentence, still_open
 from benchkit.ui.widgets.trail_words import count_by_verdict, trail
-from benchkit.ui.widgets.trim_words import TURNS, in_step, where
+from benchkit.ui.widgets.trim_words import (
+    MOOD_LOOKS,
+    STALE_LOOK,
+    TURNS,
+    advice_words,
+    in_step,
+    mood_look,
+    ring_look,
+    target_words,
+    where,
+)
 from tests.ui.scripted import (
     BY_HAND,
     BY_HAND_READING,
@@ -37,7 +50,7 @@ def test_every_choice_has_a_key_of_its_own(choices: list[Choice]) -> None:
     found = keyed(choices)
     assert [choice for _, choice in found] == choices
     assert len({letter for letter, _ in found}) == len(choices)
-    assert all(letter != " " for letter, _ in found), "the space bar belongs to the supply"
+    assert all(letter != " " for letter, _ in found), "the space bar takes readings"
 
 
 def test_usual_words_have_their_first_letters() -> None:
@@ -131,7 +144,7 @@ def test_progress() -> None:
 
 
 def test_the_off_words_follow_the_focus_and_the_supply() -> None:
-    assert how_to_switch_off(ON, typing=False) == "F9 or space bar: OFF at once"
+    assert how_to_switch_off(ON, typing=False) == "F9 or Delete: OFF at once"
     assert how_to_switch_off(ON, typing=True) == "F9: OFF at once"
     assert "BY HAND" in how_to_switch_off(BY_HAND, typing=False)
     assert len("▲▲ SUPPLY UNKNOWN " + how_to_switch_off(BY_HAND, typing=False, narrow=True)) <= 38
@@ -143,6 +156,45 @@ def test_where_a_watched_reading_lies() -> None:
     assert where(live(0.001)) == "below"
     assert where(live(0.03)) == "above"
     assert where(replace(live(0.03), value=None)) == "nowhere"
+
+
+MOODS = tuple(MOOD_LOOKS)
+
+
+def test_every_mood_has_its_own_shape_and_word() -> None:
+    looks = (*MOOD_LOOKS.values(), STALE_LOOK)
+    assert len({look.shape for look in looks}) == len({look.word for look in looks}) == len(looks)
+    assert all(c.isascii() or c in SAFE for look in looks for c in look.shape)
+    assert set(MOODS) == set(get_args(Mood))
+
+
+@pytest.mark.parametrize("mood", ["wrong way", "no response", "gone", "folded back", "running away"])
+def test_what_is_wrong_stops_the_hand(mood: Mood) -> None:
+    ring = ring_look(replace(live(0.019), mood=mood, advice="stop", advised_turns=None))
+    assert ring is not None
+    assert (ring.centre, ring.tone) == ("STOP", "alarm")
+
+
+def test_the_ring_shows_what_is_advised_or_how_far_it_is() -> None:
+    turn = replace(live(0.016), advice="a quarter turn anticlockwise", advised_turns=0.25)
+    ring = ring_look(turn)
+    assert ring is not None
+    assert (ring.share, ring.sense, ring.centre, ring.tone) == (0.25, "anticlockwise", "1/4", "turn")
+    stale = ring_look(turn, stale=True)
+    assert stale is not None
+    assert stale.centre == "STOP"
+    soak = ring_look(replace(live(0.02), mood="inside", settled_share=0.63))
+    assert soak is not None
+    assert (soak.centre, soak.tone) == ("63 %", "calm")
+    assert ring_look(replace(live(0.02), mood="inside")) is None
+
+
+def test_without_advice_the_side_is_said() -> None:
+    assert (mood_look(live(0.001)).word, advice_words(live(0.001))) == ("TOO LOW", "MORE bias")
+    assert (mood_look(live(0.03)).word, advice_words(live(0.03))) == ("TOO HIGH", "LESS bias")
+    assert (mood_look(live(0.02)).word, advice_words(live(0.02))) == ("INSIDE", "")
+    assert advice_words(live(0.02), stale=True) == "do not turn"
+    assert target_words(live(0.02)) == "target 20.00 mV, from 18.00 to 22.00"
 
 
 def test_opposite_keys_turn_the_screw_back() -> None:

@@ -1,0 +1,375 @@
+"""Advice for the hand on the screw: which way, about how much, and what it means when the reading does something else.
+
+Rules
+-----
+* Arithmetic is done on what follows the screw evenly (`benchkit.judge.screw.Scale`), not on the reading itself, so that
+  one figure, its change for each turn, serves the whole track.
+* That figure comes from the model first, and from this unit once it has answered a move.  Nobody tells the adviser how
+  far a hand has turned, unless in a rehearsal: it takes the advised turns for turned and trusts by half what it learns.
+* As long as this unit has not answered, no advice is more than half of what the model says; none is ever more than
+  `MOST_TURNS`.
+* A move is seen as such: the reading leaves a stretch in which it was calm and comes to another.  What creeps stays
+  calm, and is no answer.
+* "Steady" is only what is near the target, and what it comes to rest at too: within half of the tolerance, and clear of
+  the limits by what the meter leaves open.  Inside, but not near, the advice goes on.
+* When the reading does not follow where any healthy unit would (`benchkit.judge.silence`), the words say so.
+* A reading that falls away at once is a wiper that has opened or a probe that has slipped.  The supply's current tells
+  which, where it is known.
+"""
+
+from __future__ import annotations
+
+import math
+from typing import Final
+
+from benchkit import quantities
+from benchkit.judge.advice import Advice, Mood, Source
+from benchkit.judge.answers import Answers, OfSlope
+from benchkit.judge.screw import KNEE_V, Scale, amount_words, rounded_down, taken_for
+from benchkit.judge.silence import Silence
+from benchkit.judge.stillness import CALM_S, Stillness
+
+MOST_TURNS: Final = 2.0
+"""Never more in one go."""
+
+UNKNOWN_SHARE: Final = 0.5
+"""Of what the model says, as long as this unit has not answered a move."""
+
+BLIND_TURNS: Final = 0.25
+"""The first move where there is no model."""
+
+NEAR: Final = 0.5
+"""Within this share of the tolerance around the target nothing needs to be turned any more."""
+
+LEAST_NEAR: Final = 0.1
+"""The same for a meter that leaves nearly all of the tolerance open: nearer no hand has to come."""
+
+STANDING_SHARE: Final = 0.03
+"""How well it is known what a rail draws without bias, as a share of that: feeds have tolerances (our own figure)."""
+
+FELL_TO: Final = 0.35
+"""A reading that falls at once below this share of itself, without having been told to, has fallen away."""
+
+SEEN_NOISES: Final = 10.0
+"""A reading that is less than so many times its scatter can't be seen to fall away."""
+
+CURRENT_SHARE: Final = 0.05
+"""Below this share of the target the supply's current doesn't tell whether the bias has gone."""
+
+CURRENT_FELL_TO: Final = 0.9
+"""The supply's current has fallen with it when it is below this share of itself."""
+
+LEAST_LEARNT_TURNS: Final = 0.03
+
+
+class Adviser:
+    """Watches a reading while a screw is turned, and says what to turn.
+
+    Parameters
+    ----------
+    target, low, high : float
+        What the reading should be, and its limits.
+    slope : float or None
+        Change of the reading at `full` for a turn towards more bias, by the model, temperatures held; None without.
+    more_way : str
+        The way to turn for more bias: "clockwise" or "anticlockwise".
+    turns : float
+        From end to end of the screw.
+    noise : float
+        Standard deviation of a reading, or what the meter resolves.
+    knee : float
+        In the reading's unit; 0 for one that follows the screw evenly.
+    full : float, optional
+        The reading at which `slope` holds; by default `target`.
+    settled_share : float
+        How much more a move does once all has come to rest than at once.
+    calm_s : float
+        How long a stretch has to be; 0 where each reading was typed in by somebody who waited for it.
+    standing : float
+        What is read without any bias.
+    unit : str
+        Of the reading, for the words.
+    answers : Answers, optional
+        What may be expected of healthy units; without, what the slope says.
+    """
+
+    def __init__(
+        self,
+        target: float,
+        low: float,
+        high: float,
+        *,
+        slope: float | None,
+        more_way: str,
+        turns: float,
+        noise: float,
+        knee: float = KNEE_V,
+        full: float | None = None,
+        settled_share: float = 1.0,
+        calm_s: float = CALM_S,
+        standing: float = 0.0,
+        unit: str = "V",
+        answers: Answers | None = None,
+    ) -> None:
+        self._target, self._low, self._high = target, low, high
+        self._ways = (more_way, "clockwise" if more_way == "anticlockwise" else "anticlockwise")
+        self._track = turns
+        self._noise = max(noise, 1e-6 * abs(target))
+        floor = max(self._noise, 1e-4 * abs(target - standing), STANDING_SHARE * abs(standing))
+        self._scale = Scale(target=target, knee=knee, floor=floor, standing=standing)
+        self._unit, self._answers = unit, answers
+        self._guard = 0.0
+        self._settled_share = settled_share if 0.2 < settled_share < 5.0 else 1.0
+        self._stillness = Stillness(self._scale, (high - low) / 2.0, calm_s)
+        place = target if full is None else full
+        self._slope = None if slope is None or slope <= 0.0 else slope * self._scale.steepness(place)
+        self._source: Source = "nothing yet" if self._slope is None else "the model"
+        self._calm: tuple[float, float] | None = None  # time and value when it was last calm
+        self._told = 0.0
+        self._known: float | None = None  # turns that are known to have been made and not been answered yet
+        self._silence = Silence(turns, self._amount)
+        self._fault: Mood | None = None
+        self._fell: tuple[float, float] | None = None  # when it fell away, and to what
+        self._rail_a: float | None = None  # the supply's current when the reading was last calm
+        self._moved_s: float | None = None
+
+    def scatters(self, noise: float) -> None:
+        """Take note of how much readings of this point scatter, as soon as that is known."""
+        self._noise = max(noise, 1e-6 * abs(self._target))
+
+    def guards(self, distance: float) -> None:
+        """Take note of how far inside the limits a reading has to be for this meter to be sure of it."""
+        self._guard = distance
+
+    def near(self, value: float) -> bool:
+        """Whether a reading is so near the target that nothing needs to be turned."""
+        return -self._near(self._target - self._low) <= value - self._target <= self._near(self._high - self._target)
+
+    def _near(self, half: float) -> float:
+        return max(min(NEAR * half, half - self._guard), LEAST_NEAR * half)
+
+    @property
+    def slope_source(self) -> Source:
+        """What the amount of the advice rests on."""
+        return self._source
+
+    @property
+    def slope(self) -> float | None:
+        """Change of the reading at the target for a turn towards more bias, as it is known now."""
+        return None if self._slope is None else self._slope / self._scale.steepness(self._target)
+
+    def turned(self, turns: float) -> None:
+        """Take note of a move that somebody has made; only a rehearsal knows of one."""
+        if turns:
+            self._known = (self._known or 0.0) + turns
+            self._silence.turned(turns)
+            if self._calm is None:
+                self._calm = self._stillness.last
+            self._stillness.clear()
+
+    def add(
+        self,
+        t_s: float,
+        value: float | None,
+        *,
+        folded: bool = False,
+        rest: float | None = None,
+        running_away: bool = False,
+        rail: tuple[float, float] | None = None,
+        gone: str = "",
+    ) -> Advice:
+        """Take a reading and say what to do.
+
+        Parameters
+        ----------
+        t_s, value : float
+            None for an overload.
+        folded : bool
+            The supply is in its limit.
+        rest : float, optional
+            Where the reading will come to rest, where that is known well enough to aim by.
+        running_away : bool
+            The reading rises by itself, faster and faster.
+        rail : (float, float), optional
+            The supply's current, where it is known, behind the time at which it was read.
+        gone : str
+            Why the reading is not of the point, "" when it is.
+        """
+        if running_away:
+            return self._say("running away", "it rises by itself, faster and faster: off", None, calm=False)
+        if folded:
+            words = f"the supply is in its limit: {self._amount(-0.5)}. The reading says nothing meanwhile"
+            return self._say("folded back", words, -0.5, calm=False)
+        if gone and value is not None and self._fell is None and self._current_fell(t_s, value, rail):
+            self._fell = (t_s, value)
+        if value is None or (gone and self._fell is None):
+            self._stillness.clear()
+            self._calm = None
+            why = gone or "overload"
+            return self._say("gone", f"the reading is gone ({why}): put the probe back on the point", None, calm=False)
+        calm = self._stillness.add(t_s, value, self._noise)
+        if calm:
+            self._compare(t_s, value, rail)
+        if self._fell is not None:
+            if value < 1.5 * self._fell[1] + 6.0 * self._noise:
+                return self._fallen(rail, calm=calm)
+            self._fell = None
+        return self._judge(t_s, value, rest, calm=calm)
+
+    # -- seeing moves ------------------------------------------------------------------------------------------
+
+    def _still(self, value: float) -> float:
+        return self._stillness.limit(value, self._noise)
+
+    def _compare(self, t_s: float, value: float, rail: tuple[float, float] | None) -> None:
+        """Compare a calm stretch with the one before it."""
+        u = self._scale.even(value)
+        before, self._calm = self._calm, (t_s, value)
+        if before is None:
+            self._rail_a = None if rail is None else rail[1]
+            self._known = None
+            self._silence.answered()
+            return
+        moved = u - self._scale.even(before[1])
+        if abs(moved) <= 2.0 * self._still(min(value, before[1])) and self._known is None:
+            if self._fell is None and rail is not None:
+                self._rail_a = rail[1]
+            return
+        turned = self._known if self._known is not None else self._told
+        if self._fell_away(before[1], value, turned):
+            self._fell = (t_s, value)
+            if self._scale.over(before[1]) < CURRENT_SHARE * (self._target - self._scale.standing):
+                self._rail_a = None  # so little current of its own that the supply's says nothing
+            self._known = None
+            return
+        self._moved_s = t_s
+        self._answer(moved, turned, before[1], value)
+        self._known = None
+        self._rail_a = None if rail is None else rail[1]
+
+    def _fell_away(self, before: float, value: float, turned: float) -> bool:
+        standing = self._scale.standing
+        seen = max(SEEN_NOISES * self._noise, 3.0 * self._scale.floor if standing else 0.0)
+        if before - standing <= seen or value - standing > FELL_TO * (before - standing):
+            return False
+        if turned >= -LEAST_LEARNT_TURNS or self._slope is None:
+            return turned >= -LEAST_LEARNT_TURNS
+        return self._scale.even(value) - self._scale.even(before) < 3.0 * turned * self._slope
+
+    def _current_fell(self, t_s: float, value: float, rail: tuple[float, float] | None) -> bool:
+        """Whether the supply's current says that the bias is gone, and not only the probe."""
+        if self._calm is None or rail is None or self._rail_a is None or rail[0] <= self._calm[0]:
+            return False
+        least = CURRENT_SHARE * (self._target - self._scale.standing)
+        fell = rail[1] < CURRENT_FELL_TO * self._rail_a and self._scale.over(self._calm[1]) > least
+        return fell and self._fell_away(self._calm[1], value, 0.0)
+
+    def _fallen(self, rail: tuple[float, float] | None, *, calm: bool) -> Advice:
+        """Say what it means that the reading has fallen away."""
+        assert self._fell is not None
+        fell = "the reading fell at once to about least bias while turning"
+        if rail is None or self._rail_a is None or rail[0] <= self._fell[0] - self._stillness.calm_s:
+            words = f"{fell}: is the probe on the point? Then the wiper has opened"
+            return self._say("no response", words, None, calm=calm)
+        if rail[1] < CURRENT_FELL_TO * self._rail_a:
+            words = f"{fell}, and the supply's current with it: the wiper has opened"
+            return self._say("no response", words, None, calm=calm)
+        words = "the reading fell at once, the supply's current did not: the probe has slipped"
+        return self._say("gone", words, None, calm=calm)
+
+    def _answer(self, moved: float, turned: float, before: float, value: float) -> None:
+        """Learn from a move, and say whether it went the right way."""
+        goal = self._scale.even(self._target)
+        answered = abs(moved) > 2.0 * self._still(min(value, before))
+        if not answered:
+            return
+        self._fault = None
+        self._silence.answered()
+        wanted = goal - self._scale.even(before)
+        inside = self._low <= value <= self._high
+        was_inside = self._low <= before <= self._high
+        if moved * wanted < 0.0 and not inside and not was_inside:
+            self._fault = "wrong way"
+        elif (goal - self._scale.even(value)) * wanted < 0.0 and not inside:
+            self._fault = "overshot"
+        if moved * turned <= 0.0 or abs(turned) < LEAST_LEARNT_TURNS:
+            return
+        seen = moved / turned
+        if self._slope is not None:
+            seen = min(max(seen, 0.2 * self._slope), 5.0 * self._slope)
+            trust = 0.8 if self._known is not None else 0.5
+            seen = math.exp((1.0 - trust) * math.log(self._slope) + trust * math.log(seen))
+        self._slope, self._source = seen, "this unit"
+
+    # -- saying what to do -------------------------------------------------------------------------------------
+
+    def _judge(self, t_s: float, value: float, rest: float | None, *, calm: bool) -> Advice:
+        inside = self._low <= value <= self._high
+        aim = value if rest is None else rest
+        if inside:
+            self._fault = None
+            self._silence.hushed()
+        if inside and self.near(aim) and self.near(value):
+            self._told = 0.0
+            if calm:
+                return self._say("steady", "leave it: it is where it should be", None, calm=True)
+            return self._say("inside", "hands off: let it come to rest", None, calm=False)
+        if self._known is not None:
+            return self._say(self._fault or ("inside" if inside else "turn"), "let it come to rest", None, calm=calm)
+        if rest is not None and self.near(rest):
+            self._told = 0.0
+            self._silence.hushed()
+            way = "rising" if rest > value else "falling"
+            return self._say("inside" if inside else "turn", f"hold: it is still {way}", None, calm=calm)
+        turns = self._wanted(value, aim, by_rest=rest is not None)
+        if calm:
+            self._told = math.copysign(taken_for(abs(turns), self._track), turns)
+            self._silence.told(t_s, value)
+        words = self._amount(turns)
+        if inside:
+            return self._say("inside", self._inside(value, rest, words), turns, calm=calm)
+        answers = self._answers or (None if self._slope is None else OfSlope(self._scale, self._slope))
+        silent = self._silence.look(t_s, value, self._told, answers, self._noise)
+        if silent is not None:
+            return self._say("no response", silent[0], silent[1], calm=True)
+        if self._fault == "overshot":
+            return self._say("overshot", f"too far: {words}", turns, calm=calm)
+        if self._fault == "wrong way":
+            return self._say("wrong way", f"that was the wrong way: {words}", turns, calm=calm)
+        words += self._silence.hint(value, turns, self._answers, self._noise)
+        return self._say("turn", words, turns, calm=calm)
+
+    def _inside(self, value: float, rest: float | None, words: str) -> str:
+        """Say what is still to do inside the limits, away from the target."""
+        aim = value if rest is None else rest
+        if not self._low <= aim <= self._high:
+            return f"inside now, but still {'rising' if aim > value else 'falling'}: {words}"
+        off = quantities.show(abs(aim - self._target), self._unit, 2)
+        where = f"{off} {'above' if aim > self._target else 'below'} the target"
+        return f"inside, {where}: {words}" if rest is None else f"inside, and will rest {where}: {words}"
+
+    def _wanted(self, value: float, aim: float, *, by_rest: bool) -> float:
+        """Turns from here to the target, as far as they can be advised in one go."""
+        missing = self._scale.even(self._target) - self._scale.even(aim)
+        if self._slope is None:
+            return math.copysign(min(BLIND_TURNS, 0.25 * self._track), missing)
+        turns = missing / (self._slope * (self._settled_share if by_rest else 1.0))
+        if self._source == "the model":
+            turns *= UNKNOWN_SHARE
+        most = min(MOST_TURNS, 0.25 * self._track) if self._track else MOST_TURNS
+        # Rounded towards too little, because words are coarse: what is missing then is another small move.
+        turns = math.copysign(rounded_down(min(abs(turns), most), self._track), turns)
+        # On the way to a rest that is known, the reading of this moment never goes far over the limits.
+        top = self._scale.even(self._high + 0.5 * (self._high - self._target))
+        if by_rest and turns > 0.0:
+            turns = min(turns, max(top - self._scale.even(value), 0.0) / self._slope)
+        return turns
+
+    def _say(self, mood: Mood, words: str, turns: float | None, *, calm: bool) -> Advice:
+        return Advice(
+            mood=mood, words=words, turns=turns, slope_source=self._source, calm=calm, moved_s=self._moved_s
+        )  # fmt: skip
+
+    def _amount(self, turns: float) -> str:
+        way = self._ways[0] if turns > 0.0 else self._ways[1]
+        return f"{amount_words(abs(turns), self._track)} {way}"

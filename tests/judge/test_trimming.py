@@ -1,0 +1,289 @@
+"""A simulated screw: a junction and a resistor in series, with what can go wrong while it is turned."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Callable
+from dataclasses import dataclass, field
+from typing import Any
+
+import numpy as np
+import pytest
+
+from benchkit.judge.advice import Advice
+from benchkit.judge.screw import KNEE_V, Scale, taken_for
+from benchkit.judge.trimming import MOST_TURNS, Adviser
+
+TARGET_V, LOW_V, HIGH_V = 0.022, 0.0198, 0.0242
+SLOPE_V = 0.016
+NOISE_V = 2e-6
+STEP_S = 0.1
+SCALE = Scale(target=TARGET_V, knee=KNEE_V, floor=1e-9)
+
+
+def adviser(**changes: object) -> Adviser:
+    given: dict[str, object] = {"slope": SLOPE_V, "more_way": "anticlockwise", "turns": 12.0, "noise": NOISE_V}
+    return Adviser(TARGET_V, LOW_V, HIGH_V, **(given | changes))  # type: ignore[arg-type]
+
+
+@dataclass
+class Bench:
+    """A stage whose drop follows its screw; time passes in steps."""
+
+    value: float = 5e-5
+    stronger: float = 1.0
+    adviser: Adviser = field(default_factory=adviser)
+    rng: np.random.Generator = field(default_factory=lambda: np.random.default_rng(1))
+    t_s: float = 0.0
+    rail_a: float | None = None
+    seen: list[Advice] = field(default_factory=list)
+    broken: bool = False
+
+    def turn(self, turns: float, *, known: bool = False, seconds: float = 1.0) -> None:
+        if known:
+            self.adviser.turned(turns)
+        steps = max(1, round(seconds / STEP_S))
+        for _ in range(steps):
+            if not self.broken:
+                u = SCALE.even(self.value) + turns / steps * self.stronger * SLOPE_V * SCALE.steepness(TARGET_V)
+                self.value = SCALE.value_at(u)
+            self.read()
+
+    def read(self, value: float | None = -1.0, **more: Any) -> Advice:
+        self.t_s += STEP_S
+        shown = self.value + NOISE_V * self.rng.standard_normal() if value == -1.0 else value
+        rail = None if self.rail_a is None else (self.t_s, self.rail_a)
+        self.seen.append(self.adviser.add(self.t_s, shown, rail=rail, **more))
+        return self.seen[-1]
+
+    def look(self, seconds: float = 1.5, **more: Any) -> Advice:
+        for _ in range(round(seconds / STEP_S)):
+            last = self.read(**more)
+        return last
+
+
+# -- the way to the target ------------------------------------------------------------------------------------------
+
+
+@pytest.mark.parametrize("known", [False, True])
+@pytest.mark.parametrize("stronger", [0.4, 0.7, 1.0, 1.5, 2.2])
+def test_a_hand_that_follows_the_advice_arrives_without_much_overshoot(stronger: float, known: bool) -> None:
+    bench = Bench(stronger=stronger, rng=np.random.default_rng(int(10 * stronger)))
+    hand = np.random.default_rng(7)
+    highest = 0.0
+    for moves in range(14):  # noqa: B007
+        advice = bench.look()
+        highest = max(highest, bench.value)
+        if advice.mood == "steady":
+            break
+        assert advice.turns is not None, advice
+        assert abs(advice.turns) <= MOST_TURNS
+        told = advice.turns if known else math.copysign(taken_for(abs(advice.turns), 12.0), advice.turns)
+        bench.turn(told * (1.0 + 0.15 * hand.standard_normal()), known=known)
+    assert advice.mood == "steady"
+    assert LOW_V < bench.value < HIGH_V
+    assert highest < 1.15 * HIGH_V
+    assert moves <= 12
+    assert advice.slope_source == "this unit"
+
+
+def test_the_first_advice_is_half_of_the_model_and_its_words_name_way_and_amount() -> None:
+    bench = Bench(value=0.016)
+    advice = bench.look()
+    whole = (SCALE.even(TARGET_V) - SCALE.even(0.016)) / (SLOPE_V * SCALE.steepness(TARGET_V))
+    assert advice.turns is not None
+    assert 0.5 * 0.5 * whole < advice.turns <= 0.5 * whole
+    assert advice.words == "an eighth of a turn anticlockwise"
+    assert advice.slope_source == "the model"
+    above = Bench(value=0.03).look()
+    assert above.turns is not None
+    assert above.turns < 0.0
+    assert above.words.endswith(" clockwise")
+
+
+@pytest.mark.parametrize("known", [True, False])
+def test_it_learns_what_this_unit_does(known: bool) -> None:
+    bench = Bench(value=0.012, stronger=1.6)
+    advice = bench.look()
+    assert advice.turns is not None
+    bench.turn(advice.turns, known=known)
+    bench.look()
+    assert bench.adviser.slope_source == "this unit"
+    assert bench.adviser.slope is not None
+    assert 1.15 < bench.adviser.slope / SLOPE_V < 1.75
+
+
+def test_without_a_model_it_goes_by_quarter_turns_until_it_knows() -> None:
+    bench = Bench(value=0.012, adviser=adviser(slope=None))
+    advice = bench.look()
+    assert advice.turns == 0.25
+    assert advice.slope_source == "nothing yet"
+    bench.turn(0.25)
+    assert bench.look().slope_source == "this unit"
+
+
+def test_what_creeps_is_no_answer_to_the_screw() -> None:
+    bench = Bench(value=0.012)
+    for _ in range(600):
+        bench.value += 5e-6  # 50 uV a second: a stage that warms up
+        bench.read()
+    assert bench.adviser.slope_source == "the model"
+    assert all(advice.moved_s is None for advice in bench.seen)
+    assert {advice.mood for advice in bench.seen} == {"turn"}
+
+
+def test_the_predicted_rest_is_aimed_at() -> None:
+    bench = Bench(value=0.0215)
+    advice = bench.look(rest=0.027)
+    assert advice.mood == "inside"
+    assert advice.words.startswith("inside now, but still rising")
+    assert advice.turns is not None
+    assert advice.turns < 0.0
+    waiting = Bench(value=0.0185).look(rest=0.0218)
+    assert (waiting.mood, waiting.words, waiting.turns) == ("turn", "hold: it is still rising", None)
+    soon = Bench(value=0.0203).look(rest=0.0221)
+    assert (soon.mood, soon.words, soon.turns) == ("inside", "hold: it is still rising", None)
+    there = Bench(value=0.0212).look(rest=0.0221)
+    assert there.mood == "steady"
+
+
+# -- what goes wrong --------------------------------------------------------------------------------------------------
+
+
+def test_overshot() -> None:
+    bench = Bench(value=0.015)
+    bench.look()
+    bench.turn(1.1)
+    advice = bench.look()
+    assert advice.mood == "overshot"
+    assert advice.words.startswith("too far: ")
+    assert advice.words.endswith(" clockwise")
+
+
+def test_wrong_way() -> None:
+    bench = Bench(value=0.015)
+    bench.look()
+    bench.turn(-0.4)
+    advice = bench.look()
+    assert advice.mood == "wrong way"
+    assert advice.words.startswith("that was the wrong way: ")
+    bench.turn(0.5)
+    assert bench.look().mood == "turn"
+
+
+def test_no_response_is_told_and_ends_after_two_turns_more() -> None:
+    bench = Bench(value=0.012, broken=True)
+    moods: list[str] = []
+    turned = 0.0
+    for _ in range(30):
+        advice = bench.look()
+        moods.append(advice.mood)
+        if advice.turns is None:
+            break
+        turned += advice.turns
+        bench.turn(advice.turns, known=True)
+    assert moods[0] == "turn"
+    assert moods[1] == "no response"
+    assert "stop" in advice.words
+    assert "wiper open" in advice.words.lower()
+    assert turned < 2.0 + 2.0
+
+
+def test_nobody_knows_whether_a_real_hand_has_turned() -> None:
+    bench = Bench(value=0.012, broken=True)
+    assert bench.look(10.0).mood == "turn"
+    advice = bench.look(4.0)
+    assert advice.mood == "no response"
+    assert "If the screw was turned" in advice.words
+
+
+def test_a_move_that_the_meter_cannot_see_yet_is_no_silence() -> None:
+    """Far below the knee a turn moves the drop by microvolts, and this meter reads to 0.1 mV."""
+    bench = Bench(value=5e-5, adviser=adviser(noise=1e-4))
+    for _ in range(3):
+        advice = bench.look()
+        assert advice.mood == "turn", advice
+        bench.turn(0.3, known=True)
+
+
+@pytest.mark.parametrize(
+    ("rail_after", "mood", "words"),
+    [
+        (0.03, "no response", "the supply's current with it: the wiper has opened"),
+        (0.09, "gone", "the probe has slipped"),
+        (None, "no response", "is the probe on the point? Then the wiper has opened"),
+    ],
+)
+def test_a_reading_that_falls_away_while_turning(rail_after: float | None, mood: str, words: str) -> None:
+    bench = Bench(value=0.014, rail_a=None if rail_after is None else 0.09)
+    bench.look()
+    bench.turn(0.05)
+    bench.look()
+    bench.value, bench.broken, bench.rail_a = 6e-5, True, rail_after
+    advice = bench.look(2.0)
+    assert advice.mood == mood
+    assert words in advice.words
+    assert advice.turns is None
+    bench.value, bench.rail_a = 0.014, None if rail_after is None else 0.09
+    assert bench.look(2.0).mood == "turn"
+
+
+def test_a_reading_that_falls_away_far_below_the_target_is_not_told_by_the_current() -> None:
+    bench = Bench(value=1e-4, rail_a=0.020)
+    bench.look()
+    bench.adviser.turned(1.0)
+    bench.value, bench.broken = 5e-6, True
+    advice = bench.look()
+    assert advice.mood == "no response"
+    assert "Then the wiper has opened" in advice.words
+
+
+def test_a_move_before_the_reading_was_ever_calm_is_learnt_from_too() -> None:
+    bench = Bench(value=0.010)
+    bench.read()
+    bench.turn(0.3, known=True)
+    assert bench.look().mood == "turn"
+    assert bench.adviser.slope_source == "this unit"
+
+
+def test_a_wiper_that_opens_is_told_from_a_lead_in_the_air_by_the_current() -> None:
+    bench = Bench(value=0.014, rail_a=0.09)
+    bench.look()
+    bench.value, bench.rail_a = 1e-6, 0.03
+    advice = bench.look(1.0, gone="next to nothing")
+    assert "the wiper has opened" in advice.words
+
+
+@pytest.mark.parametrize(
+    ("do", "mood", "words"),
+    [
+        (lambda bench: bench.read(None), "gone", "overload"),
+        (lambda bench: bench.read(gone="it jumps"), "gone", "it jumps"),
+        (lambda bench: bench.read(folded=True), "folded back", "half a turn clockwise"),
+        (lambda bench: bench.read(running_away=True), "running away", "faster and faster"),
+    ],
+)
+def test_other_trouble_in_words(do: Callable[[Bench], Advice], mood: str, words: str) -> None:
+    bench = Bench(value=0.014)
+    bench.look()
+    advice = do(bench)
+    assert advice.mood == mood
+    assert words in advice.words
+
+
+def test_a_probe_that_slips_teaches_nothing() -> None:
+    bench = Bench(value=0.014)
+    bench.look()
+    for _ in range(10):
+        bench.read(None)
+    assert bench.look().mood == "turn"
+    assert bench.adviser.slope_source == "the model"
+
+
+def test_by_hand_every_entry_counts() -> None:
+    by_hand = adviser(calm_s=0.0, noise=3e-5)
+    first = by_hand.add(0.0, 0.010)
+    assert first.mood == "turn"
+    assert by_hand.add(20.0, 0.0145).slope_source == "this unit"
+    assert by_hand.add(40.0, 0.0300).mood == "overshot"
+    assert by_hand.add(60.0, 0.0221).mood == "steady"
