@@ -68,11 +68,19 @@ class OfUnits:
         place = math.log(max(value - math.copysign(NOISES * noise, turns), 1e-12))
         least = math.inf
         for logs in self._logs:
-            here = float(np.interp(place, logs, self._turns))
+            here = self._place(logs, place, turns)
             there = min(max(here + turns, 0.0), float(self._turns[-1]))
             before, after = (math.exp(float(np.interp(one, self._turns, logs))) for one in (here, there))
             least = min(least, abs(after - before))
         return least
+
+    def _place(self, logs: NDArray[np.float64], log: float, turns: float) -> float:
+        """Return where a unit reads so much: the first such place before a move up, the last one before a move down."""
+        after = int(np.searchsorted(logs, log, side="left" if turns > 0.0 else "right"))
+        if after in (0, len(logs)):
+            return float(self._turns[min(after, len(logs) - 1)])
+        share = (log - logs[after - 1]) / max(logs[after] - logs[after - 1], 1e-12)
+        return float(self._turns[after - 1] + share * (self._turns[after] - self._turns[after - 1]))
 
 
 class OfSlope:

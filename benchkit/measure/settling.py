@@ -16,7 +16,8 @@ Running away
 ------------
 A decay curves too, and a trend that turns from falling to rising both rises and bends upwards for a while. So trends
 whose slowest part *grows* are weighed against the others. A reading runs away when these have nearly all the weight,
-and slope and bend at the last reading are above zero by their 95 % intervals.
+the bend at the last reading is above zero by its 95 % interval, and so is the slope, by enough to leave `near` within
+one slowest time constant: a draught is none.
 """
 
 from __future__ import annotations
@@ -34,9 +35,10 @@ from benchkit.measure.trend import Trend
 Array = NDArray[np.float64]
 Verdict = Literal["too early", "moving", "settled", "running away"]
 
-MODEL_SHARE: Final = 0.14
+MODEL_SHARE: Final = 0.17
 """Standard deviation of the logarithm of the slowest real time constant against the design's: thermal capacities are
-known to some 30 %; our own figure. The quicker ones are left free around the design's."""
+known to some 30 %, and a rectangle of that half-width has this deviation; our own figure. The quicker ones are left
+free around the design's."""
 UNKNOWN_SHARE: Final = 0.5
 """The same where no design says anything."""
 FIRST_MOMENTS_S: Final = 1.0
@@ -154,17 +156,18 @@ def predict(
         x, y = t[-LEAST_READINGS:] - origin_s, np.asarray(values, np.float64)[kept][-LEAST_READINGS:]
     if not lags_s:
         lags_s, model_share = (_own_lag_s(x, y),), max(model_share, UNKNOWN_SHARE)
-    return _judged(Trend(x, y, tuple(lags_s), noise, model_share), origin_s, near, drift_limit)
+    trend = Trend(x, y, tuple(lags_s), noise, model_share)
+    return _judged(trend, origin_s, max(lags_s), near, drift_limit)
 
 
-def _judged(trend: Trend, origin_s: float, near: float, drift_limit: float) -> Settling:
+def _judged(trend: Trend, origin_s: float, slowest_s: float, near: float, drift_limit: float) -> Settling:
     now, rate, bend = trend.now()[0], trend.rate(), trend.bend()
     grows = trend.growing > 0.5
     made = Settling(
         verdict="moving", now=now, rate=rate[0], rate_low=rate[1], rate_high=rate[2], growing=trend.growing,
         last_s=origin_s + trend.last_x, _origin_s=origin_s, _curve=trend.curve(growing=grows),
     )  # fmt: skip
-    if trend.growing > GROWING_FOR_SURE and rate[1] > 0.0 and bend[1] > 0.0:
+    if trend.growing > GROWING_FOR_SURE and rate[1] * slowest_s > near and bend[1] > 0.0:
         return replace(made, verdict="running away")
     if grows:
         return made

@@ -27,7 +27,7 @@ from benchkit.session.front import LiveView, Reply
 REACTION_S: Final = 1.5
 SCATTER: Final = 0.15
 LEAST_TURNS: Final = 0.005
-OWN_TAKE_S: Final = 20.0
+OWN_TAKE_S: Final = 150.0
 GONE_S: Final = 40.0
 MOST_FOLDED: Final = 3
 MOST_ASKED: Final = 4000

@@ -4,8 +4,11 @@ Rules
 -----
 * The question stands all the time, and a key answers it at once, whatever is being read.
 * Taken by itself is only what comes after the probes have left where they were (seen off, or a step), lies inside the
-  limits and is at rest by `benchkit.measure.resting`.  What rests outside is never taken by itself, and told of.
+  limits by `SURE` standard uncertainties of the meter, and is at rest by `benchkit.measure.resting`.  What rests
+  elsewhere is never taken by itself, and told of.
 * Where the limits hold zero, or have no end, a lead in the air could pass for the reading: nothing is taken by itself.
+* A meter that gives no reading is asked again after `RETRY_S`, but no more than `MOST_FAILURES` times in a row: then
+  only a key takes this one.
 * Simulated hands move the probes when they are told to, so that there is nothing to wait for in a rehearsal.
 """
 
@@ -37,8 +40,11 @@ OF_VALUE: Final = 0.02
 """... and of the middle, however wide the limits are; the same for the distance from lowest to highest."""
 
 NOISE_SHARE: Final = 0.2
+SURE: Final = 3.0
 INTERVAL_S: Final = 0.1
 LOOK_S: Final = 1.0
+RETRY_S: Final = 1.0
+MOST_FAILURES: Final = 4
 BY_ITSELF: Final = f"by itself: at rest for {REST_S:.1f} s"
 
 
@@ -85,8 +91,10 @@ async def put(session: Session, question: Question) -> Reply:
             try:
                 taken = watch.take(reading.result())
             except (InstrumentError, EntryError) as error:
-                watch.give_up(str(error))
-                taken = False
+                watch.failed(str(error))
+                reading = None
+                await asyncio.wait({asking}, timeout=RETRY_S)
+                continue
             reading = None
             if taken:
                 session.placed_by_itself = BY_ITSELF
@@ -111,6 +119,7 @@ class _Placing:
         self._rest: Rest | None = None
         self._left = False
         self._trend: list[tuple[float, float]] = []
+        self._failures = 0
         self.mute = False
 
     @property
@@ -125,6 +134,7 @@ class _Placing:
     def take(self, reading: Reading) -> bool:
         """Look at a reading; whether it is to be taken now."""
         now_s, value = self._session.clock.now(), reading.value
+        self._failures = 0
         probe, rest = self._tools(reading)
         placed = probe.add(now_s, value)
         if placed in ("off", "moving"):
@@ -135,14 +145,18 @@ class _Placing:
         else:
             view = rest.add(now_s, value)
             self._trend = [*self._trend[-100:], (now_s, value)]
-        words, taken = self._said(placed, value, view)
+        words, taken = self._said(placed, value, view, SURE * (reading.standard_uncertainty or 0.0))
         self._show(reading, words)
         return taken
 
-    def give_up(self, problem: str) -> None:
-        """Read no more for this question: the meter doesn't answer."""
-        self.mute = True
-        self._session.show_moment(message=f"No reading by itself here: {problem}", live=None)
+    def failed(self, problem: str) -> None:
+        """Take note that the meter gave no reading; after too many in a row it is not asked any more."""
+        self._failures += 1
+        if self._rest is not None:
+            self._rest.clear()
+        self.mute = self._failures >= MOST_FAILURES
+        words = "no reading by itself here: the key takes it" if self.mute else "it is asked again; the key works too"
+        self._session.show_moment(message=f"The meter gave no reading ({problem}): {words}.", live=None)
 
     def _tools(self, reading: Reading) -> tuple[Probe, Rest]:
         if self._probe is None or self._rest is None:
@@ -159,7 +173,7 @@ class _Placing:
             )  # fmt: skip
         return self._probe, self._rest
 
-    def _said(self, placed: str, value: float | None, view: RestView | None) -> tuple[str, bool]:
+    def _said(self, placed: str, value: float | None, view: RestView | None, guard: float) -> tuple[str, bool]:
         """Say how far it is, and whether the value is taken."""
         if value is None or view is None or placed == "off":
             return "probe not on the point", False
@@ -174,6 +188,8 @@ class _Placing:
         if not self._low <= value <= self._high:
             shown = quantities.show(value, self._point.unit, 4)
             return f"steady at {shown}, outside the limits: space takes it", False
+        if min(value - self._low, self._high - value) < guard:
+            return "too near the limit for this meter: space takes it", False
         return f"at rest {REST_S:.1f} s of {REST_S:.1f} s", True
 
     def _show(self, reading: Reading, words: str) -> None:

@@ -77,13 +77,13 @@ class Trend:
         means = [(t_s, value) for t_s, value, _ in self._means]
         return tuple(point for point in (*means, *self._open, *self._single) if point[0] >= since_s)
 
-    def noise(self) -> float:
+    def noise(self, since_s: float = -math.inf) -> float:
         """Standard deviation of a single reading, from how three in a row differ from a straight line; 0 if unknown.
 
         Second differences of readings that are independent have six times their variance; the median of their sizes
-        is 0.6745 of their standard deviation, and a few steps of the screw don't move it.
+        is 0.6745 of their standard deviation.  Moves of the screw among few readings pass for noise: leave them out.
         """
-        values = [value for _, value in self._single]
+        values = [value for t_s, value in self._single if t_s > since_s]
         bends = [abs(values[n - 1] - 2.0 * values[n] + values[n + 1]) for n in range(1, len(values) - 1)]
         if len(bends) < LEAST_STEPS:
             return 0.0
@@ -143,6 +143,13 @@ class Creep:
         self._drift_limit = drift_limit
         self._since_s = since_s
         self._looked_s = -math.inf
+        self._noise = 0.0
+
+    @property
+    def noise(self) -> float:
+        """Standard deviation of a single reading, from undisturbed stretches alone; 0 as long as it is unknown."""
+        self._noise = self.trend.noise(self._since_s) or self._noise
+        return self._noise
 
     def add(self, t_s: float, value: float) -> None:
         """Take a reading in."""
@@ -165,7 +172,7 @@ class Creep:
             return None
         times_s, values = zip(*points, strict=True)
         self.settling = predict(
-            times_s, values, lags_s=self.lags_s, noise=self.trend.noise(), near=self._near,
+            times_s, values, lags_s=self.lags_s, noise=self.noise, near=self._near,
             drift_limit=self._drift_limit, since_s=self._since_s,
         )  # fmt: skip
         return self.settling

@@ -118,9 +118,11 @@ class _Live:
             window_s=REST_S, least=LEAST_READINGS, drift_limit=DRIFT_SHARE * self._tolerance,
             spread=SPREAD_SHARE * self._tolerance,
         )  # fmt: skip
-        # Where it had come to rest before the first move, and where it will after the last.
+        # A reading of the moment and where it comes to rest, before the first move or by a trend since; and where it
+        # will after the last move.
         rested = session.rested
         self._rested = rested[1] if rested is not None and rested[0] == action.point and self._warm else None
+        self._known = None if self._rested is None else (self._rested, self._rested)
         self._expected: float | None = None
         session.rested = None
         self._adviser: Adviser | None = None
@@ -236,17 +238,26 @@ class _Live:
             self._creep.add(now_s, value)
             if not advice.calm:
                 self._creep.disturbed(now_s)
-            if self._rested is not None and (
-                self._expected is None or not advice.calm or now_s - (advice.moved_s or -MOVE_S) < MOVE_S
-            ):
-                self._expected = self._rested + settled_share(self._screw, self._rested) * (value - self._rested)
+            if self._warm:
+                self._expect(now_s, value, advice)
         self._show(reading, advice, self._creep.told(now_s), rest, self._held_back(reading))
         # What takes longer comes after the digits, and is shown with the next ones.
-        adviser.scatters(max(self._creep.trend.noise(), probe.noise))
+        adviser.scatters(max(self._creep.noise, probe.noise))
         before = self._creep.settling
         if self._creep.look(now_s) is not before:
             self._away = self._away + 1 if self._creep.running_away and self._above(value) else 0
         return advice, rest
+
+    def _expect(self, now_s: float, value: float, advice: Advice) -> None:
+        """Work out where the reading will rest after a move, until its own trend tells."""
+        just_moved = not advice.calm or now_s - (advice.moved_s or -MOVE_S) < MOVE_S
+        if self._known is not None and (self._expected is None or just_moved):
+            before, rest = self._known
+            self._expected = rest + settled_share(self._screw, rest) * (value - before)
+        elif self._creep.rest is not None and not just_moved:
+            # What this unit has been seen to do counts for more than the model, for the moves to come too.
+            self._known = value, self._creep.rest
+            self._expected = self._creep.rest
 
     def _comes_to(self) -> float | None:
         """Where the reading will rest: by its own trend once that tells, else by what the model says of such moves."""

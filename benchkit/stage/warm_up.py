@@ -279,11 +279,14 @@ class _Walk:
                 self.gone |= moving
         self.runs_away_s = np.where(self.gone, np.fmin(self.passed_s, now_s), np.nan)
         shows = self.nodes.shows[:-1].T
+        times_s = np.array([moment.seconds for moment in kept])
+        drop_slope = np.stack([np.einsum("up,up->u", m.by_kelvin, m.rate @ shows) for m in kept], axis=-1)
+        if until_s is None:  # who has arrived is left where it is
+            drop_slope = np.where(times_s >= self.rest_s[:, None], 0.0, drop_slope)
         return WarmUp(
-            design=self.design, condition=self.condition, travel=travel,
-            times_s=np.array([moment.seconds for moment in kept]),
+            design=self.design, condition=self.condition, travel=travel, times_s=times_s,
             drop_v=np.stack([moment.drop_v for moment in kept], axis=-1),
-            drop_slope=np.stack([np.einsum("up,up->u", m.by_kelvin, m.rate @ shows) for m in kept], axis=-1),
+            drop_slope=drop_slope,
             celsius=np.stack([self._celsius(moment.x) for moment in kept], axis=-1),
             names=self.nodes.names, rest_s=self.rest_s, runs_away_s=self.runs_away_s,
         )  # fmt: skip

@@ -72,3 +72,14 @@ def test_amounts_in_words(turns: float, track: float, words: str) -> None:
 def test_words_are_taken_for_about_what_they_were_made_from(turns: float) -> None:
     assert 0.65 < taken_for(turns, 12.0) / turns < 1.55
     assert taken_for(turns, 0.75) == turns
+
+
+def test_what_stands_beside_the_bias_is_taken_off() -> None:
+    plain = Scale(target=0.097, knee=0.13, floor=1e-6)
+    rail = Scale(target=0.119, knee=0.13, floor=1e-6, standing=0.022)
+    for over in (1e-4, 0.01, 0.097, 0.2):
+        assert rail.even(0.022 + over) == pytest.approx(plain.even(over), abs=1e-12)
+        assert rail.steepness(0.022 + over) == pytest.approx(plain.steepness(over))
+        assert rail.value_at(rail.even(0.022 + over)) == pytest.approx(0.022 + over)
+    assert rail.even(0.010) == rail.even(0.022), "a unit whose feeds draw less"
+    assert Scale(target=0.119, knee=0.0, floor=1e-6, standing=0.022).value_at(0.05) == pytest.approx(0.072)

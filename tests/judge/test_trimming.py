@@ -11,6 +11,7 @@ import numpy as np
 import pytest
 
 from benchkit.judge.advice import Advice
+from benchkit.judge.answers import OfUnits
 from benchkit.judge.screw import KNEE_V, Scale, taken_for
 from benchkit.judge.trimming import MOST_TURNS, Adviser
 
@@ -32,6 +33,8 @@ class Bench:
 
     value: float = 5e-5
     stronger: float = 1.0
+    asleep: float = 0.0
+    scale: Scale = SCALE
     adviser: Adviser = field(default_factory=adviser)
     rng: np.random.Generator = field(default_factory=lambda: np.random.default_rng(1))
     t_s: float = 0.0
@@ -44,9 +47,11 @@ class Bench:
             self.adviser.turned(turns)
         steps = max(1, round(seconds / STEP_S))
         for _ in range(steps):
-            if not self.broken:
-                u = SCALE.even(self.value) + turns / steps * self.stronger * SLOPE_V * SCALE.steepness(TARGET_V)
-                self.value = SCALE.value_at(u)
+            self.asleep -= turns / steps if self.asleep > 0.0 else 0.0
+            if not self.broken and self.asleep <= 0.0:
+                scale = self.scale
+                u = scale.even(self.value) + turns / steps * self.stronger * SLOPE_V * SCALE.steepness(TARGET_V)
+                self.value = scale.value_at(u)
             self.read()
 
     def read(self, value: float | None = -1.0, **more: Any) -> Advice:
@@ -147,6 +152,51 @@ def test_the_predicted_rest_is_aimed_at() -> None:
     assert there.mood == "steady"
 
 
+@pytest.mark.parametrize(
+    ("value", "guard", "mood", "words"),
+    [
+        (0.0214, 0.0, "steady", "leave it"),
+        (0.0208, 0.0, "inside", "inside, 1.2 mV below the target: a touch anticlockwise"),
+        (0.0234, 0.0, "inside", "inside, 1.4 mV above the target: a touch clockwise"),
+        (0.0214, 0.0018, "inside", "inside, 600 uV below the target: a touch anticlockwise"),
+        (0.0219, 0.0100, "steady", "leave it"),  # the meter is too coarse to be nearer than this
+    ],
+)
+def test_advice_goes_on_until_it_is_near_and_clear_of_the_limits(
+    value: float, guard: float, mood: str, words: str
+) -> None:
+    bench = Bench(value=value)
+    bench.adviser.guards(guard)
+    advice = bench.look()
+    assert advice.mood == mood
+    assert advice.words.startswith(words)
+    assert (advice.turns is None) is (mood == "steady")
+
+
+STANDING_A, SPAN_A = 0.022, 0.097
+
+
+def test_what_else_hangs_on_a_rail_is_taken_off_before_turns_are_worked_out() -> None:
+    """The same stage, read as its rail's current: the advice has to be that of its drop."""
+    per_drop = SPAN_A / TARGET_V
+    for drop in (0.006, 0.016, 0.021, 0.030):
+        by_drop, by_current = adviser(), by_current_of_rail()
+        for n in range(20):
+            one = by_drop.add(0.1 * n, drop)
+            other = by_current.add(0.1 * n, STANDING_A + per_drop * drop)
+        assert other.mood == one.mood
+        assert other.turns == pytest.approx(one.turns, rel=1e-6) if one.turns else other.turns is None
+
+
+def by_current_of_rail() -> Adviser:
+    per_drop = SPAN_A / TARGET_V
+    return Adviser(
+        STANDING_A + SPAN_A, STANDING_A + 0.9 * SPAN_A, STANDING_A + 1.1 * SPAN_A, slope=SLOPE_V * per_drop,
+        more_way="anticlockwise", turns=12.0, noise=NOISE_V * per_drop, knee=KNEE_V * per_drop, standing=STANDING_A,
+        unit="A",
+    )  # fmt: skip
+
+
 # -- what goes wrong --------------------------------------------------------------------------------------------------
 
 
@@ -187,6 +237,47 @@ def test_no_response_is_told_and_ends_after_two_turns_more() -> None:
     assert "stop" in advice.words
     assert "wiper open" in advice.words.lower()
     assert turned < 2.0 + 2.0
+
+
+TURNS = np.linspace(0.0, 12.0, 121)
+
+
+def slow_units() -> OfUnits:
+    """Units whose drop sleeps for up to five turns and then wakes."""
+    curves = []
+    for asleep in (0.0, 2.0, 5.0):
+        u = SCALE.even(2e-6) + np.maximum(TURNS - asleep, 0.0) * SLOPE_V * SCALE.steepness(TARGET_V)
+        curves.append([SCALE.value_at(float(one)) for one in u])
+    return OfUnits(TURNS, np.array(curves).T)
+
+
+def moods_of_a_hand(bench: Bench) -> tuple[list[str], float]:
+    moods: list[str] = []
+    turned = 0.0
+    for _ in range(40):
+        advice = bench.look()
+        moods.append(advice.mood)
+        if advice.turns is None:
+            break
+        turned += advice.turns
+        bench.turn(advice.turns, known=True)
+    return moods, turned
+
+
+@pytest.mark.parametrize("asleep", [0.0, 3.0, 4.8])
+def test_a_healthy_unit_that_hardly_moves_for_some_turns_is_not_accused(asleep: float) -> None:
+    bench = Bench(value=2e-6, asleep=asleep, adviser=adviser(answers=slow_units()))
+    moods, _ = moods_of_a_hand(bench)
+    assert moods[-1] == "steady"
+    assert "no response" not in moods
+
+
+def test_a_wiper_that_is_open_from_the_beginning_is_found_later_but_is_found() -> None:
+    bench = Bench(value=2e-6, broken=True, adviser=adviser(answers=slow_units()))
+    moods, turned = moods_of_a_hand(bench)
+    assert moods[-2:] == ["no response", "no response"]
+    assert "stop" in bench.seen[-1].words
+    assert 5.0 < turned <= 12.0
 
 
 def test_nobody_knows_whether_a_real_hand_has_turned() -> None:

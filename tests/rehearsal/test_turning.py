@@ -42,7 +42,7 @@ def test_it_looks_before_it_turns_on() -> None:
 def test_it_keeps_its_hand_off_what_is_well_and_takes_it_when_nobody_does() -> None:
     one = hand()
     well = {"mood": "steady", "advice": "leave it", "advised_turns": None}
-    replies = [one.reply(live(0.020, at_s=10.0 + 0.25 * n, **well)) for n in range(100)]
+    replies = [one.reply(live(0.020, at_s=10.0 + 0.25 * n, **well)) for n in range(700)]
     held = replies.index(Reply(choice="take"))
     assert replies[:held] == [HOLD] * held
     assert 0.25 * held == pytest.approx(turning.OWN_TAKE_S, abs=1.0)

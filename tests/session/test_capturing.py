@@ -77,6 +77,7 @@ class Bench(Run):
     def ask(self, monkeypatch: pytest.MonkeyPatch, prepare: Callable[[Any], None] = lambda session: None) -> Any:
         """Put the question; then take the reading as the walk does."""
         monkeypatch.setattr(capturing, "INTERVAL_S", 0.0)
+        monkeypatch.setattr(capturing, "RETRY_S", 0.0)
 
         async def whole() -> tuple[Any, Any]:
             session = self.make()
@@ -124,10 +125,11 @@ def test_a_value_is_taken_when_the_probes_have_moved_and_it_rests(monkeypatch: p
     [
         (sequence((60, 0.0221)), LIMITS, "the probes have not moved yet"),
         (sequence((3, None), (60, 0.0300)), LIMITS, "outside the limits: space takes it"),
+        (sequence((3, None), (60, 0.025995)), LIMITS, "too near the limit for this meter"),
         (sequence((60, None)), LIMITS, "probe not on the point"),
         (sequence((3, None), (60, 0.001)), Limits(-0.05, 0.05, 0.0, "V", "the model"), "a lead in the air"),
     ],
-    ids=["not moved", "outside", "in the air", "zero inside"],
+    ids=["not moved", "outside", "at the limit", "in the air", "zero inside"],
 )
 def test_what_is_never_taken_by_itself(
     monkeypatch: pytest.MonkeyPatch, values: Values, limits: Limits, words: str
@@ -151,17 +153,27 @@ def test_a_point_that_reads_like_the_one_before_is_seen_to_be_another_by_the_way
 
 def test_a_meter_that_does_not_answer_leaves_it_to_the_key(monkeypatch: pytest.MonkeyPatch) -> None:
     trouble = InstrumentError("timeout", "The meter did not answer")
-    bench = Bench(sequence((1, trouble), (60, 0.0221)))
+    bench = Bench(sequence((60, trouble)))
 
     async def answer(question: Question, refused: str) -> Reply | None:
-        while not any("No reading by itself here" in view.message for view in bench.front.views):
+        while not any("no reading by itself here" in view.message for view in bench.front.views):
             await asyncio.sleep(0)
         return Reply(choice="done")
 
     bench.front.answer = answer
     answered, _ = bench.ask(monkeypatch)
     assert answered.text == ""
-    assert bench.reads == 2
+    assert bench.reads == capturing.MOST_FAILURES + 1  # the last one is for the key
+
+
+def test_a_meter_that_fails_now_and_then_is_asked_again(monkeypatch: pytest.MonkeyPatch) -> None:
+    trouble = InstrumentError("timeout", "The meter did not answer")
+    some = capturing.MOST_FAILURES - 1
+    bench = Bench(sequence((some, trouble), (8, 0.0002), (some, trouble), (3, None), (60, 0.0221)))
+    answered, taken = bench.ask(monkeypatch)
+    assert answered.text == "by itself: at rest for 2.0 s"
+    assert taken.reading.value == pytest.approx(0.0221, abs=1e-5)
+    assert any("asked again" in view.message for view in bench.front.views)
 
 
 @pytest.mark.parametrize(

@@ -123,3 +123,22 @@ def test_times_in_words(seconds: float, words: str) -> None:
 
 def test_a_long_time_to_the_second() -> None:
     assert left_words(815.0, exact=True) == "13 min 35 s"
+
+
+def test_moves_of_the_screw_among_few_readings_are_no_scatter() -> None:
+    """A quick hand: three readings, a move, three readings; each move bends the row twice."""
+    rng = np.random.default_rng(4)
+    creep = Creep("V", 0.0198, 0.0242, (60.0, 8.0), 2e-5, 0.0)
+    assert creep.noise == 0.0
+    t_s = 0.0
+    for value in (1e-3, 3e-3, 8e-3, 0.014, 0.02):
+        creep.disturbed(t_s)
+        for _ in range(3):
+            t_s += 0.25
+            creep.add(t_s, value + 2e-6 * rng.standard_normal())
+            assert creep.noise < 8e-6
+    assert creep.trend.noise() > 1e-3, "moves and readings together tell nothing"
+    for _ in range(8):
+        t_s += 0.25
+        creep.add(t_s, 0.02 + 2e-6 * rng.standard_normal())
+    assert 5e-7 < creep.noise < 8e-6

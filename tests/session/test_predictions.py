@@ -1,6 +1,7 @@
 from __future__ import annotations
 
 import math
+from dataclasses import replace
 from typing import Any
 
 import pytest
@@ -132,6 +133,38 @@ def test_what_a_turn_does_to_a_rail() -> None:
     drop = screw_of(design, "rail+.drop", 0.11, 1.0, 1.0)
     assert drop.per_turn == pytest.approx(current.per_turn)
     assert screw_of(design, "rail+.drop", 0.11, 1.0).per_turn is None
+
+
+def test_what_hangs_on_a_rail_beside_the_bias_is_known() -> None:
+    from benchkit.session.predictions import screw_of
+    from benchkit.stage.trimmer import at_target, full_rails, quiescent_a
+
+    design = tern()
+    unit, _ = at_target(design)
+    rail_a, bias_a = float(unit.points["rail+.current"][0]), float(quiescent_a(design, unit)[0])
+    warm = full_rails(design)
+    whole = screw_of(design, "rail+.current", rail_a, 1.0, None, warm)
+    assert whole.standing == pytest.approx(rail_a - bias_a, rel=1e-3)
+    assert 0.01 < whole.standing < 0.03
+    assert whole.full == pytest.approx(rail_a)
+    fuse = replace(warm, fuse_ohm=2.0)
+    drop = screw_of(design, "rail+.drop", 2.0 * rail_a, 1.0, 2.0, fuse)
+    assert drop.standing == pytest.approx(2.0 * whole.standing, rel=0.02)
+    half = screw_of(design, "rail+.current", whole.standing + 0.5 * bias_a, 0.5, None, warm)
+    assert half.full == pytest.approx(rail_a, rel=0.02)
+    assert screw_of(design, "emitter.upper.1", 0.022, 1.0, None, warm).standing == 0.0
+
+
+def test_what_may_be_expected_of_units_is_that_of_their_curves() -> None:
+    from benchkit.session.predictions import answers_of
+    from benchkit.stage.trimmer import full_rails
+
+    answers = answers_of(tern(), "emitter.upper.1", full_rails(tern()))
+    assert answers is not None
+    assert answers.least_change(0.02, 0.5, 1e-6) > 0.003
+    assert answers.least_change(5e-6, 0.5, 1e-6) < 1e-5
+    assert answers_of(tern(), "emitter.upper.1", None) is None
+    assert answers_of(tern(), "emitter.upper.9", full_rails(tern())) is None
 
 
 def test_time_constants_are_the_longest_first() -> None:

@@ -197,3 +197,17 @@ def test_a_curve_goes_on_from_its_own_temperatures() -> None:
     second = warm_up(tern(), condition, until_s=300.0, from_c=first.celsius[:, :, -1])
     times_s = np.linspace(0.0, 300.0, 20)
     assert second.drop_at(times_s)[0] == pytest.approx(whole.drop_at(100.0 + times_s)[0], rel=2e-4)
+
+
+def test_who_has_arrived_stays() -> None:
+    """Units that are at rest early don't move while others are still on their way, between the steps either."""
+    parameters = draw(breadboard(), 12, seeds("unit", 5))
+    condition = Condition(positive_v=10.0, negative_v=-10.0, trimmer="target")
+    rested = warm_up(breadboard(), condition, parameters)
+    moved = np.asarray(rested.travel) + np.geomspace(1e-5, 1e-1, 12)
+    again = warm_up(breadboard(), condition, parameters, travel=moved, from_c=rested.celsius[:, :, -1])
+    assert np.ptp(again.rest_s) > 100.0
+    dense_s = np.linspace(0.0, again.times_s[-1], 3000)
+    dense_v = again.drop_at(dense_s)
+    moved_v = [np.ptp(row[dense_s >= rest_s]) for row, rest_s in zip(dense_v, again.rest_s, strict=True)]
+    assert max(moved_v) < 1e-8
