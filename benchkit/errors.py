@@ -71,6 +71,10 @@ class FileError(BenchkitError):
         super().__init__(f"{where}: {came}", expected, next_step)
 
 
+class TakenError(FileError):
+    """A new file can't have this name, because there is one already; nothing was overwritten (exit status 2)."""
+
+
 class InstrumentError(BenchkitError):
     """An instrument did not do its part (exit status 3).
 

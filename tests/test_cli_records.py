@@ -75,11 +75,15 @@ def test_times(run: Run, two: tuple[Path, Path]) -> None:
 
 
 @pytest.mark.parametrize("command", ["rehearse", "walk"])
-def test_channels_that_are_none_are_refused_before_anything_is_started(run: Run, tmp_path: Path, command: str) -> None:
+@pytest.mark.parametrize("channels", ["L,L", "", "-1", "+2", "2.5", "٣", "../../x"])
+def test_channels_that_are_none_are_refused_before_anything_is_started(
+    run: Run, tmp_path: Path, command: str, channels: str
+) -> None:
     design = ("--design", "breadboard")
-    status, out, err = run(command, *design, "--plain", "--channels", "L,L", "--records", tmp_path / "r")
+    status, out, err = run(command, *design, "--plain", "--channels", channels, "--records", tmp_path / "r")
     assert (status, out) == (2, "")
-    assert "names one channel twice" in err
+    assert f'--channels got "{channels}"' in err
+    assert "a whole number from 1 to 8" in " ".join(err.split())
     assert not (tmp_path / "r").exists()
 
 
@@ -97,5 +101,5 @@ def test_the_switches_for_hands_and_bell_reach_the_walk(run: Run, monkeypatch: p
         assert run(name)[0] == 0
         assert run(name, "--no-bell", "--no-hands-free", "--channels", "2")[0] == 0
     assert [(one["bell"], one["hands_free"], one["channels"]) for one in given] == [
-        (True, True, ""), (False, False, "2"), (True, True, ""), (False, False, "2"),
+        (True, True, None), (False, False, "2"), (True, True, None), (False, False, "2"),
     ]  # fmt: skip

@@ -14,6 +14,7 @@ from benchkit.errors import (
     InstrumentError,
     ModelError,
     RecordError,
+    TakenError,
 )
 
 ALL = [
@@ -23,6 +24,7 @@ ALL = [
     InstrumentError("timeout", "came", "expected", "next", partial=b"+1.2"),
     ModelError("came", "expected", "next"),
     RecordError("a.jsonl", "line 3", "came", "expected", "next"),
+    TakenError("a.jsonl", "", "came", "expected", "next"),
     IllegalEvent("came", "expected", "next"),
 ]
 

@@ -58,8 +58,8 @@ def records_option(function: Callable[..., Any]) -> Callable[..., Any]:
 
 def channels_option(function: Callable[..., Any]) -> Callable[..., Any]:
     """Add ``--channels``."""
-    said = "Channels of one unit, one walk and one record each: how many, or their names."
-    return click.option("--channels", default="", metavar="N|NAMES", help=said)(function)
+    said = "Channels of one unit, a walk and a record each: how many (1 to 8), or their names (letters and digits)."
+    return click.option("--channels", default=None, metavar="N|NAMES", help=said)(function)
 
 
 def hands_options(function: Callable[..., Any]) -> Callable[..., Any]:

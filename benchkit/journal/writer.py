@@ -21,7 +21,7 @@ from pathlib import Path
 from types import TracebackType
 from typing import Any, Self
 
-from benchkit.errors import FileError, RecordError
+from benchkit.errors import FileError, RecordError, TakenError
 from benchkit.journal import disk, reader
 from benchkit.journal.line import FIRST_PREV, Line, make_line
 from benchkit.journal.locking import try_lock
@@ -58,14 +58,16 @@ class Writer:
 
         Raises
         ------
+        TakenError
+            If there is a file of that name already.
         FileError
-            If there is a file of that name already, or it can't be made.
+            If it can't be made.
         """
         path = Path(path)
         try:
             descriptor = os.open(path, _FLAGS | os.O_CREAT | os.O_EXCL, 0o644)
         except FileExistsError:
-            raise FileError(
+            raise TakenError(
                 str(path), "", "there is a file of this name already", "a new name", "Nothing was overwritten"
             ) from None
         except OSError as error:

@@ -15,6 +15,7 @@ Rules
 * When the reading does not follow where any healthy unit would (`benchkit.judge.silence`), the words say so.
 * A reading that falls away at once is a wiper that has opened or a probe that has slipped.  The supply's current tells
   which, where it is known.
+* More bias is advised only on a reading that is known to be of the point (`benchkit.judge.trust`).
 """
 
 from __future__ import annotations
@@ -25,9 +26,11 @@ from typing import Final
 from benchkit import quantities
 from benchkit.judge.advice import Advice, Mood, Source
 from benchkit.judge.answers import Answers, OfSlope
+from benchkit.judge.falls import LEAST_TURNS, Falls, fall_words
 from benchkit.judge.screw import KNEE_V, Scale, amount_words, rounded_down, taken_for
 from benchkit.judge.silence import Silence
 from benchkit.judge.stillness import CALM_S, Stillness
+from benchkit.judge.trust import MORE_BIAS, SLIPPED, SWAPPED, UNSTEADY, Kept, RailLine, Trust
 
 MOST_TURNS: Final = 2.0
 """Never more in one go."""
@@ -46,20 +49,6 @@ LEAST_NEAR: Final = 0.1
 
 STANDING_SHARE: Final = 0.03
 """How well it is known what a rail draws without bias, as a share of that: feeds have tolerances (our own figure)."""
-
-FELL_TO: Final = 0.35
-"""A reading that falls at once below this share of itself, without having been told to, has fallen away."""
-
-SEEN_NOISES: Final = 10.0
-"""A reading that is less than so many times its scatter can't be seen to fall away."""
-
-CURRENT_SHARE: Final = 0.05
-"""Below this share of the target the supply's current doesn't tell whether the bias has gone."""
-
-CURRENT_FELL_TO: Final = 0.9
-"""The supply's current has fallen with it when it is below this share of itself."""
-
-LEAST_LEARNT_TURNS: Final = 0.03
 
 
 class Adviser:
@@ -91,6 +80,10 @@ class Adviser:
         Of the reading, for the words.
     answers : Answers, optional
         What may be expected of healthy units; without, what the slope says.
+    line : RailLine, optional
+        What the supply's current should be at a reading.
+    by_supply : bool
+        The reading is the supply's own, with no probe.
     """
 
     def __init__(
@@ -110,6 +103,8 @@ class Adviser:
         standing: float = 0.0,
         unit: str = "V",
         answers: Answers | None = None,
+        line: RailLine | None = None,
+        by_supply: bool = False,
     ) -> None:
         self._target, self._low, self._high = target, low, high
         self._ways = (more_way, "clockwise" if more_way == "anticlockwise" else "anticlockwise")
@@ -128,6 +123,10 @@ class Adviser:
         self._told = 0.0
         self._known: float | None = None  # turns that are known to have been made and not been answered yet
         self._silence = Silence(turns, self._amount)
+        self._trust = Trust(self._scale, track=turns, typed=calm_s == 0.0, by_supply=by_supply, line=line)
+        self._resumed = False  # trusted again, and not compared yet with what was before
+        self._followed = False
+        self._falls = Falls(self._scale)
         self._fault: Mood | None = None
         self._fell: tuple[float, float] | None = None  # when it fell away, and to what
         self._rail_a: float | None = None  # the supply's current when the reading was last calm
@@ -158,9 +157,16 @@ class Adviser:
         """Change of the reading at the target for a turn towards more bias, as it is known now."""
         return None if self._slope is None else self._slope / self._scale.steepness(self._target)
 
+    def proven(self, value: float, rail_a: float | None) -> bool:
+        """Whether a reading is known to be of the point: it followed a turn, was off and on, or the current agrees."""
+        if self._followed or self._trust.was_off:
+            return True
+        return self._trust.agrees(value, self._noise, rail_a) is True
+
     def turned(self, turns: float) -> None:
         """Take note of a move that somebody has made; only a rehearsal knows of one."""
         if turns:
+            self._trust.moved()
             self._known = (self._known or 0.0) + turns
             self._silence.turned(turns)
             if self._calm is None:
@@ -200,21 +206,63 @@ class Adviser:
         if folded:
             words = f"the supply is in its limit: {self._amount(-0.5)}. The reading says nothing meanwhile"
             return self._say("folded back", words, -0.5, calm=False)
+        value = value if value is not None and math.isfinite(value) else None
         if gone and value is not None and self._fell is None and self._current_fell(t_s, value, rail):
             self._fell = (t_s, value)
-        if value is None or (gone and self._fell is None):
+        off = value is None or (bool(gone) and self._fell is None)
+        doubt = self._doubt(t_s, None if off else value, rail)
+        if value is None or off:
             self._stillness.clear()
-            self._calm = None
             why = gone or "overload"
             return self._say("gone", f"the reading is gone ({why}): put the probe back on the point", None, calm=False)
+        self._resumed |= self._trust.resumed
         calm = self._stillness.add(t_s, value, self._noise)
+        if self._fell is not None and value < 1.5 * self._fell[1] + 6.0 * self._noise and doubt != SWAPPED:
+            return self._fallen(rail, calm=calm)
+        if doubt:
+            return self._say("gone", doubt, None, calm=False)
+        if self._fell is not None:
+            if not self._is_back(t_s, value, rail, calm=calm):
+                return self._fallen(rail, calm=calm)
+            self._fell, self._resumed = None, True
+        if self._resumed and not calm:
+            return self._say("gone", UNSTEADY, None, calm=False)
+        fresh_a = rail[1] if rail is not None and rail[0] >= t_s - self._stillness.calm_s - 1e-9 else None
+        if calm and self._trust.contradicts(value, self._noise, self._kept, fresh_a):
+            return self._say("gone", SLIPPED, None, calm=False)
+        moved_s = self._moved_s
         if calm:
             self._compare(t_s, value, rail)
-        if self._fell is not None:
-            if value < 1.5 * self._fell[1] + 6.0 * self._noise:
+            if self._fell is not None:
                 return self._fallen(rail, calm=calm)
-            self._fell = None
-        return self._judge(t_s, value, rest, calm=calm)
+        if self._trust.resumed and self._moved_s != moved_s:
+            calm = False  # what comes is a new stretch, for whoever follows its trend
+        fallen = not calm and self._trust.has_fallen(value, self._noise, self._kept)
+        advice = self._judge(t_s, value, rest, calm=calm)
+        if (advice.turns or 0.0) > 0.0 and fallen:
+            return self._say(advice.mood, "let it come to rest", None, calm=False)
+        if (advice.turns or 0.0) > 0.0 and self._trust.shows_more_bias(value, fresh_a):
+            self._told = 0.0
+            return self._say("gone", MORE_BIAS, None, calm=False)
+        return advice
+
+    @property
+    def _kept(self) -> Kept | None:
+        return None if self._calm is None else Kept(value=self._calm[1], rail_a=self._rail_a)
+
+    def _doubt(self, t_s: float, value: float | None, rail: tuple[float, float] | None) -> str:
+        """Ask whether a reading is to be trusted."""
+        kept, turned = self._kept, self._known if self._known is not None else self._told
+        fell = value is not None and kept is not None and self._fell_away(kept.value, value, turned)
+        return self._trust.look(
+            t_s, value, noise=self._noise, slope=self._slope, turned=turned, kept=kept, fell=fell, rail=rail
+        )  # fmt: skip
+
+    def _is_back(self, t_s: float, value: float, rail: tuple[float, float] | None, *, calm: bool) -> bool:
+        """Whether a reading that had fallen away is of the point again."""
+        told = self._known if self._known is not None else self._told
+        speaks = self._trust.speaks_for(t_s, value, self._noise, self._slope, told, self._kept, rail)
+        return calm if speaks is None else speaks
 
     # -- seeing moves ------------------------------------------------------------------------------------------
 
@@ -225,20 +273,29 @@ class Adviser:
         """Compare a calm stretch with the one before it."""
         u = self._scale.even(value)
         before, self._calm = self._calm, (t_s, value)
+        resumed, self._resumed = self._resumed, False
         if before is None:
             self._rail_a = None if rail is None else rail[1]
             self._known = None
             self._silence.answered()
             return
         moved = u - self._scale.even(before[1])
-        if abs(moved) <= 2.0 * self._still(min(value, before[1])) and self._known is None:
+        far = abs(moved) > 2.0 * self._still(min(value, before[1]))
+        turned = self._known if self._known is not None else self._told
+        if resumed and not self._fell_away(before[1], value, turned):
+            # What it did in between nobody has seen: it teaches nothing.
+            self._moved_s = t_s if far else self._moved_s
+            self._known = None
+            self._silence.answered()
+            self._rail_a = None if rail is None else rail[1]
+            return
+        if not far and self._known is None:
             if self._fell is None and rail is not None:
                 self._rail_a = rail[1]
             return
-        turned = self._known if self._known is not None else self._told
         if self._fell_away(before[1], value, turned):
-            self._fell = (t_s, value)
-            if self._scale.over(before[1]) < CURRENT_SHARE * (self._target - self._scale.standing):
+            self._fell, self._calm = (t_s, value), before
+            if not self._falls.current_tells(before[1]):
                 self._rail_a = None  # so little current of its own that the supply's says nothing
             self._known = None
             return
@@ -248,34 +305,22 @@ class Adviser:
         self._rail_a = None if rail is None else rail[1]
 
     def _fell_away(self, before: float, value: float, turned: float) -> bool:
-        standing = self._scale.standing
-        seen = max(SEEN_NOISES * self._noise, 3.0 * self._scale.floor if standing else 0.0)
-        if before - standing <= seen or value - standing > FELL_TO * (before - standing):
-            return False
-        if turned >= -LEAST_LEARNT_TURNS or self._slope is None:
-            return turned >= -LEAST_LEARNT_TURNS
-        return self._scale.even(value) - self._scale.even(before) < 3.0 * turned * self._slope
+        return self._falls.away(before, value, turned, self._slope, self._noise)
 
     def _current_fell(self, t_s: float, value: float, rail: tuple[float, float] | None) -> bool:
         """Whether the supply's current says that the bias is gone, and not only the probe."""
         if self._calm is None or rail is None or self._rail_a is None or rail[0] <= self._calm[0]:
             return False
-        least = CURRENT_SHARE * (self._target - self._scale.standing)
-        fell = rail[1] < CURRENT_FELL_TO * self._rail_a and self._scale.over(self._calm[1]) > least
-        return fell and self._fell_away(self._calm[1], value, 0.0)
+        if not self._falls.with_current(self._calm[1], self._rail_a, rail[1]):
+            return False
+        return self._fell_away(self._calm[1], value, 0.0)
 
     def _fallen(self, rail: tuple[float, float] | None, *, calm: bool) -> Advice:
         """Say what it means that the reading has fallen away."""
         assert self._fell is not None
-        fell = "the reading fell at once to about least bias while turning"
-        if rail is None or self._rail_a is None or rail[0] <= self._fell[0] - self._stillness.calm_s:
-            words = f"{fell}: is the probe on the point? Then the wiper has opened"
-            return self._say("no response", words, None, calm=calm)
-        if rail[1] < CURRENT_FELL_TO * self._rail_a:
-            words = f"{fell}, and the supply's current with it: the wiper has opened"
-            return self._say("no response", words, None, calm=calm)
-        words = "the reading fell at once, the supply's current did not: the probe has slipped"
-        return self._say("gone", words, None, calm=calm)
+        known = rail is not None and rail[0] > self._fell[0] - self._stillness.calm_s
+        mood, words = fall_words(self._rail_a, rail[1] if known and rail is not None else None)
+        return self._say(mood, words, None, calm=calm)
 
     def _answer(self, moved: float, turned: float, before: float, value: float) -> None:
         """Learn from a move, and say whether it went the right way."""
@@ -292,8 +337,9 @@ class Adviser:
             self._fault = "wrong way"
         elif (goal - self._scale.even(value)) * wanted < 0.0 and not inside:
             self._fault = "overshot"
-        if moved * turned <= 0.0 or abs(turned) < LEAST_LEARNT_TURNS:
+        if moved * turned <= 0.0 or abs(turned) < LEAST_TURNS:
             return
+        self._followed = True
         seen = moved / turned
         if self._slope is not None:
             seen = min(max(seen, 0.2 * self._slope), 5.0 * self._slope)

@@ -18,7 +18,7 @@ from benchkit import quantities
 from benchkit.errors import EntryError, ModelError
 from benchkit.judge.limits import Limits
 from benchkit.procedure.file import Procedure, Step
-from benchkit.procedure.file_words import COLD_PRESET
+from benchkit.procedure.file_words import COLD_PRESET, MOST_DRIFT
 from benchkit.procedure.items import TELLS_TARGET, TRIMMED, Item
 from benchkit.procedure.power_off import PowerOff
 from benchkit.procedure.targets import drift_per_s, preset_share, target_limits, tells_target
@@ -100,6 +100,10 @@ class BiasItems(PowerOff):
             raise self._refuse(
                 step, f"lets {point.name} drift by {step.drift!r}: {error.came}", error.expected
             ) from None
+        if drift > MOST_DRIFT * abs(limits.nominal) / 60.0 * (1.0 + 1e-9):
+            raise self._refuse(
+                step, f"lets {point.name} drift by {step.drift!r}", f"at most {MOST_DRIFT:.0%} of the target a minute"
+            )
         self.soaked = True
         return self._item(
             step, "wait", seconds=seconds, point=point, limits=limits, until_settled=True, least_s=least_s,

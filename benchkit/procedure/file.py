@@ -27,10 +27,10 @@ trimmer that isn't there.
 
 Sections that may be left out
 -----------------------------
-``only_if``      done only when parts, or semiconductors, were replaced; or only when no semiconductor was
+``only_if``      done only when parts, or semiconductors, were replaced; or only when none were
 ``optional``     done only when the operator says so; the words of the question stand behind it
-Both end with the supply as it was at their beginning, so that what follows is the same either way.  What they proved
-counts for nothing in what follows, and the trimmer is anywhere after one that turned it.
+Both end with the supply as it was at their beginning, so that what follows is the same either way.  What has to hold
+before power holds on every path (`benchkit.procedure.paths`), and the trimmer is anywhere after one that turned it.
 
 ``as`` marks a section's readings as those that the unit was found with, or left with.
 """
@@ -44,6 +44,7 @@ from pathlib import Path
 from typing import Annotated, Any, Literal
 
 import pydantic
+import pydantic_core
 
 from benchkit.errors import BenchkitError, FileError
 from benchkit.procedure.file_words import (
@@ -68,7 +69,7 @@ Act = Literal[
 ]  # fmt: skip
 """What a told step does to the bench, where the rest of the walk depends on it."""
 
-OnlyIf = Literal["parts replaced", "semiconductors replaced", "no semiconductors replaced"]
+OnlyIf = Literal["parts replaced", "no parts replaced", "semiconductors replaced", "no semiconductors replaced"]
 """What a section may depend on."""
 
 
@@ -118,7 +119,7 @@ class Step(_Strict):
     allow: str | None = None
     acceptance: Literal["guarded", "simple", "guarded rejection"] = "guarded"
     samples: int = pydantic.Field(default=1, ge=1, le=100)
-    override: bool = True
+    override: pydantic.StrictBool = True
     until: Literal["settled"] | None = None
     drift: str | None = None
     at_least: str | None = None
@@ -138,6 +139,10 @@ class Step(_Strict):
         watches = self.drift is not None or self.at_least is not None or (self.kind == "wait" and bool(self.points))
         if self.until is None and watches:
             raise ValueError("'drift', 'at_least' and 'points' belong to a wait with until = \"settled\"")
+        if self.resistor is not None:
+            for name in self.points:
+                if name not in ("rail+.drop", "rail-.drop"):
+                    raise ValueError(f"'resistor' belongs to a rail's drop, not to {name}")
         for text in (self.title, self.do, self.why, self.caution, self.expected):
             check_placeholders(text)
         for name in self.points:
@@ -193,18 +198,25 @@ class Section(_Strict):
 
     name: _Name
     title: _Text
-    resume: bool = False
+    resume: pydantic.StrictBool = False
     only_if: OnlyIf | None = None
     optional: str = ""
     as_: Literal["found", "left"] | None = pydantic.Field(default=None, alias="as")
     step: tuple[Step, ...] = pydantic.Field(min_length=1)
+
+    @pydantic.model_validator(mode="after")
+    def _fits(self) -> Section:
+        if "optional" in self.model_fields_set and not self.optional.strip():
+            raise ValueError("'optional' is empty; it has to hold the question whether the section is done")
+        check_placeholders(self.optional)
+        return self
 
 
 class Head(_Strict):
     """Who the procedure is.
 
     ``unknown_trimmer`` lets it give power with the trimmer wherever it was found: only behind checks for shorts, from
-    the lowest rails on, with a limit that the target needs and no more.
+    the lowest rails on, with a limit that the target needs and no more; and never so behind replaced parts.
     """
 
     format: Literal[1]
@@ -212,7 +224,7 @@ class Head(_Strict):
     purpose: _Text
     cautions: tuple[str, ...] = ()
     target_time: str | None = None
-    unknown_trimmer: bool = False
+    unknown_trimmer: pydantic.StrictBool = False
 
     @property
     def target_time_s(self) -> float | None:
@@ -247,7 +259,14 @@ class _Document(_Strict):
                 raise ValueError(f"the section {section.name!r} has only_if and optional: one of them")
             if apart and (section.name == MADE_SAFE or section.resume):
                 raise ValueError(f"the section {section.name!r} can't be left out: the walk has to be able to go there")
-            check_placeholders(section.optional)
+        asked = False
+        for section in self.section:
+            if section.only_if is not None and not asked:
+                raise ValueError(
+                    f"the section {section.name!r} is done only if {section.only_if}; a section before it has to ask "
+                    "for that, in a step of the kind 'parts replaced'"
+                )
+            asked = asked or any(step.kind == "parts replaced" for step in section.step)
         if not any(section.resume for section in self.section):
             raise ValueError("no section has resume = true: a walk that was cut off would not know where to go on")
         return self
@@ -298,9 +317,8 @@ def parse_procedure(text: str, file: str) -> Procedure:
         document = _Document.model_validate(raw)
     except pydantic.ValidationError as error:
         first = error.errors()[0]
-        raise FileError(
-            file, _key(raw, first["loc"]), f"found {_short(first['input'])}", first["msg"].removeprefix("Value error, ")
-        ) from None
+        came, expected = _words(first)
+        raise FileError(file, _key(raw, first["loc"]), came, expected) from None
     procedure = Procedure(
         head=document.procedure,
         sections=document.section,
@@ -335,6 +353,22 @@ def _key(raw: dict[str, Any], location: tuple[int | str, ...]) -> str:
     return " ".join(parts)
 
 
+def _words(error: pydantic_core.ErrorDetails) -> tuple[str, str]:
+    """What came and what was expected, of an error; a table or list is never shown."""
+    value, said = error["input"], error["msg"].removeprefix("Value error, ")
+    if error["type"] == "missing":
+        return "it is missing", "a value for it"
+    if error["type"] == "extra_forbidden":
+        return f"found {_short(value)}", "no such key here"
+    if error["type"] == "value_error" and isinstance(value, dict | list):
+        return said, ""
+    return f"found {_short(value)}", said
+
+
 def _short(value: object) -> str:
+    if isinstance(value, dict):
+        return "a table"
+    if isinstance(value, list):
+        return "a list"
     text = repr(value)
-    return text if len(text) <= 80 else text[:77] + "..."
+    return text if len(text) <= 40 else text[:37] + "..."

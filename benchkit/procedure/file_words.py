@@ -23,6 +23,9 @@ PLACEHOLDERS = frozenset(
 COLD_PRESET = "the cold pre-set"
 """A trim's share: the drop that is to be set cold so that the target is met warm, as the model has it."""
 
+MOST_DRIFT = 0.20
+"""The most of the target that a settled reading may be let move in a minute; our own figure: ten times the usual."""
+
 _SIDE = r"\.(upper|lower)"
 _PART = rf"(spreader\.transistor|(predriver|driver){_SIDE}|output{_SIDE}\.\d+)"
 POINT = re.compile(
@@ -113,10 +116,15 @@ def check_quantity(file: str, where: str, key: str, value: str, unit: str) -> No
 
 _RANGES: dict[tuple[str, str], tuple[float, float | None]] = {
     ("share", "%"): (0.0, 100.0),
-    ("tolerance", "%"): (0.0, 100.0),
+    ("tolerance", "%"): (0.0, 60.0),
     ("rails", "%"): (0.0, 100.0),
+    ("drift", "%"): (0.0, 100.0 * MOST_DRIFT),
+    ("seconds", "s"): (0.0, 14400.0),
 }
-"""What a quantity has to be above and may reach at most; all others are above zero."""
+"""What a quantity has to be above and may reach at most; all others are above zero.
+
+A trim that may miss by more than 60 % sets nothing, and nobody stands by a wait of over four hours: our own figures.
+"""
 
 
 def check_point(name: str) -> None:

@@ -60,7 +60,10 @@ JUDGED_KINDS = frozenset(
 """Kinds of item that end in a result; a walk passes only when each of them has one."""
 
 NEVER_PASSED_OVER = frozenset({"ohm.rails", "ohm.rail+", "ohm.rail-", "offset before load"})
-"""Points and rules whose result nobody overrides, whatever the file says; nor a limit check or the trimmer's end."""
+"""Points and rules whose result nobody overrides, whatever the file says; nor a limit check or the trimmer's end.
+
+Where the trimmer may stand as it was found, the output's resistance is one of them too.
+"""
 
 MOST_OFFSET_V = 0.05
 """The most d.c. (V) at the output before a load is connected that a procedure may allow; common practice."""
@@ -143,6 +146,8 @@ class Item:
         The supply is on while this item runs.
     raises : bool
         It raises a voltage or the limit.
+    drive_limit : bool
+        For ``supply`` and ``limit check``: the limit is what a driven stage takes.
     resume : bool
         A walk that was cut off while or after the unit had power goes on here.
     host : str
@@ -156,8 +161,8 @@ class Item:
     driven : bool
         The reading is taken with the stage driven: the model knows nothing of it.
     only_if : str
-        The section is done only if: "parts replaced", "semiconductors replaced", "no semiconductors replaced"; "" for
-        always.
+        The section is done only if: "parts replaced", "no parts replaced", "semiconductors replaced", "no
+        semiconductors replaced"; "" for always.
     optional : bool
         The section is done only when the operator has chosen it.
     marked : str
@@ -199,6 +204,7 @@ class Item:
     trimmer_end: bool = False
     powered: bool = False
     raises: bool = False
+    drive_limit: bool = False
     resume: bool = False
     host: str = ""
     share: float = 1.0

@@ -8,8 +8,7 @@ Rules
 * A hold point stands before every item that raises a voltage or the limit.  Where the file has none, it is put in.
 * ``clip`` becomes: off, every rail watched down at the unit, clip, hold point, power as before.
 * Steps that turn or check a trimmer fall away for a design without one; its target is only checked.
-* Before the first power stand the checks that keep a unit alive.  What stands in a section that may be left out proves
-  nothing; where the trimmer is left as it was found, that section has to prove its end before it gives power.
+* Before the first power stand the checks that keep a unit alive, on every path (`benchkit.procedure.paths`).
 * Rails, limit and trimmer are followed from item to item, so that each reading knows its condition.
 """
 
@@ -27,8 +26,9 @@ from benchkit.procedure.items import (
     Joined,
     Plan,
 )
+from benchkit.procedure.paths import Paths
 from benchkit.procedure.planner import Planner
-from benchkit.procedure.sizing import rails_text, supply_limit_a
+from benchkit.procedure.sizing import rails_text
 from benchkit.stage.conditions import Condition, Unpowered
 from benchkit.stage.design import Design
 from benchkit.stage.points import points_of
@@ -46,7 +46,7 @@ def make_plan(procedure: Procedure, design: Design) -> Plan:
     """
     planner = Planner(procedure, design)
     items = _with_warm_state(design, _with_facts(tuple(planner.items())))
-    _require_checks(procedure, design, items, planner.lowest)
+    _require_checks(procedure, design, items, planner)
     made_safe = next(number for number, item in enumerate(items) if item.section == MADE_SAFE)
     resume = next(number for number, item in enumerate(items) if item.resume)
     return Plan(items=items, made_safe=made_safe, resume=resume, points=points_of(design))
@@ -103,37 +103,13 @@ def _with_facts(items: tuple[Item, ...]) -> tuple[Item, ...]:
     return tuple(told)
 
 
-def _require_checks(
-    procedure: Procedure, design: Design, items: tuple[Item, ...], lowest_v: tuple[float, float]
-) -> None:
-    """Refuse a procedure that powers a unit before limit, rails and trimmer have been checked."""
+def _require_checks(procedure: Procedure, design: Design, items: tuple[Item, ...], planner: Planner) -> None:
+    """Refuse a procedure that gives power before what has to hold for it, on any path through the plan."""
     first = next((number for number, item in enumerate(items) if item.kind in ("supply", "lamp")), None)
     if first is None:
         return
-    before = [item for item in items[:first] if not _may_be_left_out(item)]
-    lacking = []
-    first_set = next((number for number, item in enumerate(items) if item.kind == "supply"), 0)
-    if first_set and not any(item.kind == "limit check" and not _may_be_left_out(item) for item in items[:first_set]):
-        lacking.append("a step of the kind 'limit check'")
-    if not any(item.point is not None and item.point.name == "ohm.rails" for item in before):
-        lacking.append("a reading of ohm.rails")
-    as_found = procedure.head.unknown_trimmer and items[first].kind == "supply"
-    if as_found and not any(_never_without(item, "ohm.output") for item in before):
-        lacking.append("a reading of ohm.output that nobody passes without")
-    if design.spreader.trimmer is not None and not as_found and not any(item.trimmer_end for item in before):
-        lacking.append("a reading of ohm.spreader.ARM, which proves the trimmer's end")
-    if lacking:
-        raise FileError(
-            procedure.file,
-            f"section {items[first].section}",
-            "gives power before the unit is known to be safe for it",
-            f"{' and '.join(lacking)} before it",
-            "No procedure can leave these out",
-        )
-    if as_found:
-        _require_as_found(procedure, design, items, first, lowest_v)
-    checks = [number for number, item in enumerate(items[:first]) if item.kind == "limit check" or item.trimmer_end]
     resume = next(number for number, item in enumerate(items) if item.resume)
+    checks = [number for number, item in enumerate(items[:first]) if item.kind == "limit check" or item.trimmer_end]
     if checks and resume > min(checks):
         raise FileError(
             procedure.file,
@@ -141,45 +117,11 @@ def _require_checks(
             "a walk that was cut off would go on behind the checks of limit and trimmer",
             "resume = true in the section of the first of them, or before it",
         )
+    paths = Paths(
+        procedure, design, items, resume=resume, lowest_v=planner.lowest, least_a=planner.least_bias_limit_a()
+    )
+    paths.check()
     _require_way_out(procedure, design, items)
-
-
-def _require_as_found(
-    procedure: Procedure, design: Design, items: tuple[Item, ...], first: int, lowest_v: tuple[float, float]
-) -> None:
-    """Refuse to power a unit as it was found in any other way than from the lowest rails, with the target's limit."""
-    item = items[first]
-    most_a = supply_limit_a(design, item.positive_v, item.negative_v, share=1.0)
-    if item.positive_v > lowest_v[0] or item.limit_a > most_a:
-        raise FileError(
-            procedure.file,
-            f"step {item.id}",
-            "powers a unit whose trimmer stands as it was found, with "
-            f"{rails_text(item.positive_v, item.negative_v)} and a limit of {quantities.show(item.limit_a, 'A')}",
-            'rails = "lowest" and limit = "for the target", or less',
-        )
-    for section in dict.fromkeys(one.section for one in items if one.only_if == "semiconductors replaced"):
-        inside = [one for one in items if one.section == section]
-        power = next((number for number, one in enumerate(inside) if one.kind == "supply"), None)
-        if power is None or design.spreader.trimmer is None:
-            continue
-        if not any(one.trimmer_end for one in inside[:power]):
-            raise FileError(
-                procedure.file,
-                f"section {section}",
-                "gives power to new semiconductors with the trimmer anywhere",
-                "a reading of ohm.spreader.ARM before it, which proves the trimmer's end",
-                "No procedure can leave this out",
-            )
-
-
-def _may_be_left_out(item: Item) -> bool:
-    return bool(item.only_if) or item.optional
-
-
-def _never_without(item: Item, point: str) -> bool:
-    """Whether this reading of a point can't be passed over."""
-    return item.point is not None and item.point.name == point and not item.may_go_on
 
 
 def _require_way_out(procedure: Procedure, design: Design, items: tuple[Item, ...]) -> None:

@@ -48,6 +48,7 @@ class Planner(SupplyItems, BiasItems):
         self.lowest = with_room(design, least_regulating_rails(design))
         self.section: Section
         self.ready_hold = False
+        self.firm = NEVER_PASSED_OVER | ({"ohm.output"} if procedure.head.unknown_trimmer else set())
 
     def items(self) -> Iterator[Item]:
         """Yield the items in their order, the bench's first."""
@@ -183,7 +184,9 @@ class Planner(SupplyItems, BiasItems):
         condition: AnyCondition | None = None
         held_under: AnyCondition | None = None
         trimmer_end = self.trimmer == "least" and point.name in {one.name for one in self._expand("ohm.spreader.ARM")}
-        if (trimmer_end or point.name in NEVER_PASSED_OVER) and (step.limits != "the model" or step.allow is not None):
+        firm = trimmer_end or point.name in self.firm
+        widened = step.acceptance == "guarded rejection" and not trimmer_end
+        if firm and (step.limits != "the model" or step.allow is not None or widened):
             raise self._refuse(step, f"judges {point.name} by limits of its own", "the model's limits, as they are")
         if isinstance(step.limits, PairText):
             limits = self._stated(step, step.limits, point)
@@ -220,7 +223,7 @@ class Planner(SupplyItems, BiasItems):
             trimmer_end=trimmer_end,
             driven=step.state == "driven",
             back=self._back(step),
-            may_go_on=step.override and not trimmer_end and point.name not in NEVER_PASSED_OVER,
+            may_go_on=step.override and not firm,
         )
 
     def _stated(self, step: Step, pair: PairText, point: Point) -> Limits:

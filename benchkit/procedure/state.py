@@ -176,6 +176,8 @@ class State:
         match item.only_if:
             case "parts replaced":
                 return not self.parts
+            case "no parts replaced":
+                return bool(self.parts)
             case "semiconductors replaced":
                 return not self.semiconductors
             case "no semiconductors replaced":

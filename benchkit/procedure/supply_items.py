@@ -4,7 +4,7 @@ Rules
 -----
 * A hold point stands before every item that raises a voltage or the limit; where the file has none, it is put in.
 * Rails never go above the design's, a limit never above twice what the target needs; a driven stage has limits of its
-  own (`benchkit.procedure.sizing`).
+  own (`benchkit.procedure.sizing`), and only behind its dummy load (`benchkit.procedure.paths`).
 """
 
 from __future__ import annotations
@@ -30,6 +30,7 @@ class SupplyItems(PowerOff):
     """A part of the planner; what it stands on is the planner's."""
 
     lowest: tuple[float, float]
+    drive_limit: bool = False
 
     def _supply(self, step: Step) -> Iterator[Item]:
         self._not_on_lamp(step, "sets a supply")
@@ -39,6 +40,7 @@ class SupplyItems(PowerOff):
             return
         if self.on and positive_v < self.positive_v == self.lowest[0]:
             return  # on the way up: the lowest rails at which this stage regulates are above this step already
+        self.drive_limit = step.limit in DRIVE_LIMITS
         yield from self._power(step, "", positive_v, negative_v, limit_a, quantities.parse(step.ramp or "1 s", "s"))
 
     def _power(
@@ -68,6 +70,7 @@ class SupplyItems(PowerOff):
             ramp_s=max(ramp_s, charging_s(self.design, rise_v, limit_a)),
             settle_s=max(0.5, self.design.feed.settles_after_s or 0.0),
             raises=raises,
+            drive_limit=self.drive_limit,
             **({"title": f"Rails at {rails_text(positive_v, negative_v)} again"} if suffix else {}),
             may_go_on=False,
             **words,
@@ -78,13 +81,17 @@ class SupplyItems(PowerOff):
         if self.on:
             raise self._refuse(step, "tries the limit while the unit has power")
         positive_v, negative_v = self._rails(step)
-        limit_a = self._limit(step, *self.lowest)
+        full = self.design.rails
+        limit_a = self._limit(step, full.positive_v, full.negative_v)  # the highest that a walk sets without a load
         words: dict[str, Any] = {"positive_v": positive_v, "negative_v": negative_v, "limit_a": limit_a}
         yield self._item(
             step, "hold", ".hold", title="Try the limit?", why="Current flows into the short from here.", **words
         )
         limits = Limits(0.9 * limit_a, 1.1 * limit_a, limit_a, "A", "the limit that was set, ±10 % (common practice)")
-        yield self._item(step, "limit check", "", limits=limits, raises=True, may_go_on=False, powered=True, **words)
+        yield self._item(
+            step, "limit check", "", limits=limits, raises=True, drive_limit=step.limit in DRIVE_LIMITS,
+            may_go_on=False, powered=True, **words,
+        )  # fmt: skip
         yield self._item(
             step, "off", ".off", title="Supply off again", do="The supply is switched off before the unit is connected."
         )

@@ -6,8 +6,8 @@ Rules
 * A rail's current, and its drop over a resistor in the fuse position, are those of the nominal unit with its trimmer
   at the target, and at both ends of the target's tolerance.  They carry the feeds and whatever else hangs on the rail:
   such a reading is as good as those are known, and its limits leave that out.
-* A cold pre-set is the drop that the nominal unit shows cold with its trimmer where the warm target is met
-  (`benchkit.stage.trimmer.cold_to_warm`), never more than `MOST_PRESET` of the target.
+* A cold pre-set is the drop that the nominal unit shows with its trimmer where the warm target is met while only its
+  heat sink is still cold (`benchkit.stage.trimmer.sink_cold_v`), never more than `MOST_PRESET` of the target.
 """
 
 from __future__ import annotations
@@ -25,7 +25,7 @@ from benchkit.stage.design import Design, target_drop_v
 from benchkit.stage.draws import nominal
 from benchkit.stage.operate import solve_units
 from benchkit.stage.points import Point
-from benchkit.stage.trimmer import cold_to_warm
+from benchkit.stage.trimmer import sink_cold_v
 
 MOST_PRESET: Final = 1.25
 """The most that a cold pre-set may be, as a share of the target; our own figure: the limit leaves half more."""
@@ -94,13 +94,13 @@ def _nominal(design: Design, point: str, condition: Condition) -> float:
 @lru_cache(maxsize=32)
 def preset_share(design: Design) -> float:
     """Share of the target that is set cold so that the warm drop is the target; 1 where the model has no answer."""
+    if design.target.when == "cold":
+        return 1.0
     try:
-        moved = cold_to_warm(design)
+        share = sink_cold_v(design) / target_drop_v(design)
     except BenchkitError:
         return 1.0
-    if moved.held == "cold":
-        return 1.0
-    return min(MOST_PRESET, max(LEAST_PRESET, moved.cold_v.nominal / moved.warm_v.nominal))
+    return min(MOST_PRESET, max(LEAST_PRESET, share))
 
 
 def drift_per_s(text: str | None, point: Point, target: float) -> float:

@@ -12,7 +12,7 @@ from pathlib import Path
 from typing import Any
 
 from benchkit.errors import BenchkitError, FileError
-from benchkit.record.names import SUFFIX
+from benchkit.record.names import SUFFIX, in_order
 from benchkit.record.summary import Summary, load_summary
 from benchkit.record.words import clean, verdict_words
 
@@ -69,7 +69,9 @@ def entries(folder: Path) -> Iterator[Entry]:
         If the folder can't be read.
     """
     try:
-        paths = sorted(path for path in folder.iterdir() if path.name.endswith(SUFFIX))
+        paths = sorted(
+            (path for path in folder.iterdir() if path.name.endswith(SUFFIX)), key=lambda path: in_order(path.name)
+        )
     except OSError as error:
         raise FileError(
             str(folder), "", f"can't be read: {error.strerror}", "a folder with records", "Check the name"

@@ -11,12 +11,14 @@ Rules
 * Then the start of the walk in UTC, so that a folder lists a unit's walks in their order.
 * Where the walk is of one channel among several, its readable name comes last, as ``ch-L``; a name that had to be
   changed for it gets four digits of its SHA-256 behind it.  What the channel is really called stands in the record.
+* A walk that finds its name taken gets a further number, ``-2`` and on; who reached for it first doesn't matter.
 * A name is at most ``LONGEST`` characters, far below what any file system in use allows.
 """
 
 from __future__ import annotations
 
 import hashlib
+import os
 import re
 import unicodedata
 from datetime import UTC, datetime
@@ -37,6 +39,8 @@ LONGEST = READABLE + len("-01234567-20260131T235959Z-ch-") + READABLE_CHANNEL + 
 """The most characters that a whole name has."""
 
 _MOST_IN_ONE_SECOND = 999
+
+_NUMBERED = re.compile(r"(.*-\d{8}T\d{6}Z(?:-ch-[A-Za-z0-9-]+?)?)-(\d{1,3})" + re.escape(SUFFIX))
 
 
 def slug(serial: str) -> str:
@@ -100,10 +104,24 @@ def record_name(serial: str, begun: datetime, channel: str = "") -> str:
     return f"{unit_prefix(serial)}-{begun.astimezone(UTC):%Y%m%dT%H%M%SZ}{channel_part(channel)}{SUFFIX}"
 
 
+def in_order(name: str) -> tuple[str, int, str]:
+    """Return what file names are sorted by: a unit's walks by their start, those of one second by their number.
+
+    Examples
+    --------
+    >>> names = ["a-20260131T101500Z-10.jsonl", "a-20260131T101500Z-2.jsonl", "a-20260131T101500Z.jsonl"]
+    >>> sorted(names, key=in_order) == names[::-1]
+    True
+    """
+    numbered = _NUMBERED.fullmatch(name)
+    return (name.removesuffix(SUFFIX), 1, name) if numbered is None else (numbered[1], int(numbered[2]), name)
+
+
 def free_path(folder: Path, serial: str, begun: datetime, channel: str = "") -> Path:
     """Return a path in `folder` for a new record that is not taken yet.
 
-    The folder need not exist.  Whoever creates the file has to do so exclusively; this only picks the name.
+    The folder need not exist.  Whoever creates the file has to do so exclusively, and ask anew when somebody else was
+    quicker; this only picks the name.
 
     Raises
     ------
@@ -111,11 +129,11 @@ def free_path(folder: Path, serial: str, begun: datetime, channel: str = "") -> 
         If the folder holds 999 records of this unit from this very second.
     """
     first = folder / record_name(serial, begun, channel)
-    if not first.exists():
+    if not os.path.lexists(first):
         return first
     for number in range(2, _MOST_IN_ONE_SECOND + 1):
         path = first.with_name(f"{first.name.removesuffix(SUFFIX)}-{number}{SUFFIX}")
-        if not path.exists():
+        if not os.path.lexists(path):
             return path
     raise FileError(
         str(folder),

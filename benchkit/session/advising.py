@@ -8,6 +8,7 @@ from benchkit import quantities
 from benchkit.judge.advice import Advice
 from benchkit.judge.answers import Answers
 from benchkit.judge.trimming import Adviser
+from benchkit.judge.trust import RailLine
 from benchkit.measure.readings import Reading
 from benchkit.procedure.actions import Trim
 from benchkit.session.creeping import Creep, Told
@@ -37,7 +38,13 @@ def settled_share(screw: Screw, rested: float) -> float:
 
 
 def adviser_for(
-    action: Trim, screw: Screw, noise: float, answers: Answers | None, *, calm_s: float | None = None
+    action: Trim,
+    screw: Screw,
+    noise: float,
+    answers: Answers | None,
+    line: RailLine | None,
+    *,
+    calm_s: float | None = None,
 ) -> Adviser:
     """Make the adviser of a trim."""
     more = {} if calm_s is None else {"calm_s": calm_s}
@@ -53,6 +60,8 @@ def adviser_for(
         standing=screw.standing,
         unit=action.unit,
         answers=answers,
+        line=line,
+        by_supply=action.function == "dc current",
         **more,
     )  # fmt: skip
 

@@ -3,9 +3,9 @@
 Rules
 -----
 * The question stands all the time, and a key answers it at once, whatever is being read.
-* Taken by itself is only what comes after the probes have left where they were (seen off, or a step), lies inside the
-  limits by `SURE` standard uncertainties of the meter, and is at rest by `benchkit.measure.resting`.  What rests
-  elsewhere is never taken by itself, and told of.
+* Taken by itself is only what comes after the probes have left where they were (`benchkit.session.leaving`), lies
+  inside the limits by `SURE` standard uncertainties of the meter, and is at rest by `benchkit.measure.resting`.
+  What rests elsewhere is never taken by itself, and told of.
 * Where the limits hold zero, or have no end, a lead in the air could pass for the reading: nothing is taken by itself.
 * A meter that gives no reading is asked again after `RETRY_S`, but no more than `MOST_FAILURES` times in a row: then
   only a key takes this one.
@@ -25,6 +25,7 @@ from benchkit.procedure.actions import Question
 from benchkit.session import measuring
 from benchkit.session.front import LiveView, Reply
 from benchkit.session.job import refusal
+from benchkit.session.leaving import Leaving
 
 if TYPE_CHECKING:
     from benchkit.judge.limits import Limits
@@ -117,7 +118,7 @@ class _Placing:
         self._nominal = None if limits is None else limits.nominal
         self._probe: Probe | None = None
         self._rest: Rest | None = None
-        self._left = False
+        self._leaving: Leaving | None = None
         self._trend: list[tuple[float, float]] = []
         self._failures = 0
         self.mute = False
@@ -137,8 +138,8 @@ class _Placing:
         self._failures = 0
         probe, rest = self._tools(reading)
         placed = probe.add(now_s, value)
-        if placed in ("off", "moving"):
-            self._left = True
+        assert self._leaving is not None
+        self._leaving.add(now_s, value, hums=placed == "off")
         view: RestView | None = None
         if value is None or placed == "off":
             rest.clear()
@@ -161,6 +162,7 @@ class _Placing:
     def _tools(self, reading: Reading) -> tuple[Probe, Rest]:
         if self._probe is None or self._rest is None:
             noise = max(NOISE_SHARE * (reading.own_uncertainty or 0.0), 1e-12)
+            self._leaving = Leaving(self._low, self._high, noise)
             self._probe = Probe(noise=noise, low=self._low, high=self._high)
             size = max(abs(end) for end in (self._low, self._high, reading.value, noise) if end is not None)
             middle, half = size, size
@@ -179,7 +181,8 @@ class _Placing:
             return "probe not on the point", False
         if not self._sure:
             return "a lead in the air could read the same: space takes it", False
-        if not self._left:
+        assert self._leaving is not None
+        if not self._leaving.has_left(value if view.value is None else view.value):
             return "the probes have not moved yet", False
         assert self._low is not None
         assert self._high is not None

@@ -21,7 +21,12 @@ if TYPE_CHECKING:
 OFF_S = 6.0
 """How long "off" may take altogether before the words are that nothing is known (s)."""
 
-RESUME_HINT = "Go on later with benchkit walk --resume and the record's name"
+
+def resume_hint(session: Session) -> str:
+    """Say how a walk that was cut off is gone on with."""
+    opened = session.state.opened
+    command = "rehearse" if opened is not None and opened.kind == "rehearsal" else "walk"
+    return f"Go on later with benchkit {command} --resume and the record's name"
 
 
 def time_note(seconds: float, target_s: float | None) -> Noted | None:
@@ -74,7 +79,9 @@ async def secure(session: Session, reason: str) -> None:
 async def keeper_died(session: Session, push: KeeperDied) -> BenchkitError:
     """Say that the keeper has died, and what the one that stood by found of the supply."""
     if session.job.manual_supply:
-        return InstrumentError("link lost", f"The keeper of the record has ended: {push.problem}", "", RESUME_HINT)
+        return InstrumentError(
+            "link lost", f"The keeper of the record has ended: {push.problem}", "", resume_hint(session)
+        )
     off = session.last_off = await asyncio.wrap_future(session.keeper.after_death(session.job.setup))
     words = (
         "A second keeper switched the supply off and read it back as off."
@@ -82,5 +89,5 @@ async def keeper_died(session: Session, push: KeeperDied) -> BenchkitError:
         else "OUTPUT STATE UNKNOWN: switch the supply off by hand."
     )
     return InstrumentError(
-        "link lost", f"The keeper of the instruments has ended: {push.problem}. {words}", "", RESUME_HINT
+        "link lost", f"The keeper of the instruments has ended: {push.problem}. {words}", "", resume_hint(session)
     )

@@ -115,9 +115,11 @@ async def _supply_current(session: Session, point: str) -> Reading:
 async def _by_hand(session: Session, point: str, function: str, unit: str) -> Reading:
     accuracy = session.job.accuracy if function != "dc current" else session.job.supply_accuracy
     item = session.job.walk.item(session.state)
+    limits = session.job.walk.limits_for(session.state, item)
     question = Question(
         item=item.id,
         kind="by hand",
+        expected="" if limits is None else str(limits),
         title=f"Type what the meter shows for {point}",
         do=f"With its unit, such as {_example(unit)}; OL for overload. Meter on {function}.",
         point=point,
@@ -143,6 +145,8 @@ def typed_reading(text: str, point: str, function: str, unit: str, accuracy: Acc
     value = quantities.parse_reading(text, unit)
     if isinstance(value, Overload):
         return _overload(point, function, unit, f"by hand, {accuracy.name}", negative=not value.positive)
+    if function == "ohms 4-wire" and function not in accuracy.rows:
+        function = "ohms"  # whoever has no four-wire meter reads with two wires, as well as those can
     if function not in accuracy.rows:
         # Nothing is known of how well this meter does that: the reading is kept, and decides nothing.
         return Reading(

@@ -15,6 +15,7 @@ from benchkit.events import Event, Judged, PointLimits, Predicted, PredictionRef
 from benchkit.judge.answers import Answers, OfUnits
 from benchkit.judge.rules import RuleFacts, evaluate
 from benchkit.judge.screw import KNEE_V
+from benchkit.judge.trust import RailLine
 from benchkit.measure.readings import Reading
 from benchkit.procedure.actions import CheckWarm, Evaluate, Predict
 from benchkit.procedure.items import Item, Joined
@@ -182,6 +183,15 @@ def _standing(design: Design, point: str, share: float, condition: Condition) ->
     if point not in solved.points or not solved.converged[0]:
         return 0.0
     return max(float(solved.points[point][0]) - ohm * float(quiescent_a(design, solved)[0]), 0.0)
+
+
+def rail_line(design: Design, point: str, condition: Condition | None) -> RailLine | None:
+    """Say what the positive rail's current is at a reading of a drop; None where there is no model of it."""
+    if condition is None or point.startswith("rail"):
+        return None
+    standing_a = _standing(design, "rail+.current", condition.target_share, condition)
+    per_volt = design.output.pairs / design.output.emitter_resistor.value / (2.0 if ".pair." in point else 1.0)
+    return RailLine(standing_a=standing_a, per_unit=per_volt) if standing_a > 0.0 else None
 
 
 def answers_of(design: Design, point: str, condition: Condition | None) -> Answers | None:

@@ -304,7 +304,7 @@ class Session:
             if push.seq is None:
                 self.moment.message = f"{push.event.name} could not be kept: {push.problem}"
                 raise InstrumentError(
-                    "refused", self.moment.message, "a record that can be written", ending.RESUME_HINT
+                    "refused", self.moment.message, "a record that can be written", ending.resume_hint(self)
                 )
             if push.seq <= self.seq:
                 continue

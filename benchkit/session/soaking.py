@@ -11,6 +11,7 @@ Rules
 
 from __future__ import annotations
 
+import math
 from typing import TYPE_CHECKING, Final
 
 from benchkit import quantities
@@ -19,6 +20,7 @@ from benchkit.events import Event, Waited
 from benchkit.judge.advice import Mood
 from benchkit.measure.readings import Reading
 from benchkit.measure.resting import Probe
+from benchkit.measure.settling import Settling
 from benchkit.procedure.actions import Choice, Question, Wait
 from benchkit.procedure.questions import STOP
 from benchkit.session import measuring, powering, predictions
@@ -44,6 +46,9 @@ QUICK_LOOK_S: Final = 4.0
 
 ENTRY_S: Final = 30.0
 """Between two entries of a person who reads the meter (s)."""
+
+LEAST_LEFT_S: Final = 5.0
+"""A soak that has not settled says that so much is left at least (s)."""
 
 MOST_KEPT: Final = 60
 USUAL_DRIFT: Final = 0.02
@@ -155,9 +160,8 @@ class _Soak:
         if self._limits is None:
             self._limits = value - 0.1 * abs(value), value, value + 0.1 * abs(value)
         if self._creep is None:
-            low, target, high = self._limits
-            drift = self._action.drift_limit or USUAL_DRIFT * max(abs(target), 1e-9) / 60.0
-            self._creep = Creep(self._action.unit, low, high, self._lags_s, drift, self._started_s)
+            low, _, high = self._limits
+            self._creep = Creep(self._action.unit, low, high, self._lags_s, self._drift_limit, self._started_s)
         return self._creep
 
     # -- how far it is -----------------------------------------------------------------------------------------
@@ -183,7 +187,20 @@ class _Soak:
         settling = None if self._creep is None else self._creep.settling
         if settling is None or settling.left_s is None:
             return most_s
-        return min(max(settling.left_s, self._action.least_s - self._elapsed_s, 0.0), most_s)
+        left_s = max(settling.left_s, self._until_slow_s(settling))
+        if not self._settled:
+            left_s = max(left_s, LEAST_LEFT_S)  # near its rest, and not yet sure of it
+        return min(max(left_s, self._action.least_s - self._elapsed_s, 0.0), most_s)
+
+    @property
+    def _drift_limit(self) -> float:
+        target = 0.0 if self._limits is None else self._limits[1]
+        return self._action.drift_limit or USUAL_DRIFT * max(abs(target), 1e-9) / 60.0
+
+    def _until_slow_s(self, settling: Settling) -> float:
+        """Return how long the drift takes to fall to what is allowed, as the slowest time constant has it (s)."""
+        fast = abs(settling.rate) / self._drift_limit
+        return max(self._lags_s, default=0.0) * math.log(fast) if fast > 1.0 else 0.0
 
     def _waited(self, *, settled: bool | None) -> Waited:
         settling = None if self._creep is None else self._creep.settling
@@ -256,7 +273,20 @@ class _Soak:
         rest = None if self._creep is None else self._creep.rest
         if rest is not None and not low <= rest <= high:
             return "turn", "hands off: it will rest outside the limits, and is trimmed after this"
-        return ("inside" if low <= value <= high else "turn"), "hands off: it comes to rest"
+        return ("inside" if low <= value <= high else "turn"), f"hands off: {self._awaited()}"
+
+    def _awaited(self) -> str:
+        """Say what a soak waits for that has not settled."""
+        settling = None if self._creep is None else self._creep.settling
+        if settling is None or settling.left_s is None:
+            return "it comes to rest"
+        if settling.left_s > 0.0:
+            return "it is on its way to its rest"
+        per_minute = quantities.show(60.0 * abs(settling.rate), self._action.unit, 2)
+        if abs(settling.rate) > self._drift_limit:
+            allowed = quantities.show(60.0 * self._drift_limit, self._action.unit, 2)
+            return f"it still moves {per_minute} a minute, {allowed} is allowed"
+        return "near its rest, and not yet sure of it"
 
     # -- by hand -----------------------------------------------------------------------------------------------
 

@@ -13,7 +13,7 @@ from pathlib import Path
 from typing import Any, Literal
 
 from benchkit import __version__
-from benchkit.errors import BenchkitError, FileError, RecordError
+from benchkit.errors import BenchkitError, FileError, RecordError, TakenError
 from benchkit.events import Closed, Event, OutputOff, Resumed, WalkOpened, from_payload
 from benchkit.journal import reader
 from benchkit.keeper.client import KeeperClient
@@ -30,6 +30,9 @@ from benchkit.session.job import Job
 from benchkit.session.run import Session
 from benchkit.session.threads import in_thread
 from benchkit.stage.design import Design, parse_design
+
+MOST_TRIES = 100
+"""So many names are tried for a record before it is given up: each was free when it was looked at, and then was not."""
 
 
 @dataclass(kw_only=True)
@@ -136,7 +139,6 @@ class Runner:
         """
         setting = self.setting
         plan = await in_thread(lambda: make_plan(setting.procedure, setting.design))
-        self.record = free_path(setting.records, unit, datetime.datetime.now(datetime.UTC), setting.channel)
         opened = WalkOpened(
             version=__version__,
             walk=uuid.uuid4().hex,
@@ -158,7 +160,7 @@ class Runner:
             cautions=setting.cautions,
             channel=setting.channel,
         )
-        return await self._run(Walk(plan), State(), opened, front, new=True)
+        return await self._run(Walk(plan), State(), opened, front)
 
     async def resume(self, front: Front, path: Path, operator: str) -> Closed:
         """Go on with a walk that was cut off.
@@ -172,25 +174,11 @@ class Runner:
         walk = Walk(plan)
         self.record = path
         replayed(walk, path)  # what can't go on is refused before anything is started
-        return await self._run(walk, State(), Resumed(operator=operator), front, new=False)
+        return await self._run(walk, State(), Resumed(operator=operator), front)
 
-    async def _run(self, walk: Walk, state: State, first: Event, front: Front, *, new: bool) -> Closed:
-        setting, record = self.setting, self.record
-        assert record is not None
-        job = Job(
-            design=setting.design,
-            procedure=setting.procedure,
-            walk=walk,
-            record=record,
-            setup=setting.setup,
-            accuracy=setting.accuracy,
-            supply_accuracy=setting.supply_accuracy,
-            units=setting.units,
-            seed=setting.seed,
-            narrow_rarely=setting.narrow_rarely,
-            hands_free=setting.hands_free,
-            bell=setting.bell,
-        )
+    async def _run(self, walk: Walk, state: State, first: WalkOpened | Resumed, front: Front) -> Closed:
+        setting = self.setting
+        folder = setting.records if self.record is None else self.record.parent
         early: list[Any] = []
         session: Session | None = None
 
@@ -200,16 +188,33 @@ class Runner:
             else:
                 session.on_push(push)
 
-        keeper = await in_thread(lambda: KeeperClient.start(record.parent / "logs", take))
+        keeper = await in_thread(lambda: KeeperClient.start(folder / "logs", take))
         try:
-            if new:
-                await asyncio.wrap_future(keeper.open_journal(record, first))
+            if isinstance(first, WalkOpened):
+                now = datetime.datetime.now(datetime.UTC)
+                record = await begin_record(keeper, setting.records, first, now)
             else:
+                assert self.record is not None
+                record = self.record
                 head = await asyncio.wrap_future(keeper.resume_journal(record))
-                assert isinstance(first, Resumed)
                 first = Resumed(operator=first.operator, torn=head.torn or "")
                 # Only now nobody else can write a line any more: a keeper may have been switching off until just now.
                 state = replayed(walk, record)
+            self.record = record
+            job = Job(
+                design=setting.design,
+                procedure=setting.procedure,
+                walk=walk,
+                record=record,
+                setup=setting.setup,
+                accuracy=setting.accuracy,
+                supply_accuracy=setting.supply_accuracy,
+                units=setting.units,
+                seed=setting.seed,
+                narrow_rarely=setting.narrow_rarely,
+                hands_free=setting.hands_free,
+                bell=setting.bell,
+            )
             session = Session(job, keeper, front, setting.hands, setting.clock)
             session.state = state
             session.seq = state.count
@@ -219,6 +224,29 @@ class Runner:
             return await session.run(first)
         finally:
             self.last_off = await in_thread(keeper.close) or (session.last_off if session is not None else None)
+
+
+async def begin_record(keeper: KeeperClient, folder: Path, opened: WalkOpened, begun: datetime.datetime) -> Path:
+    """Begin the record of a walk under the first name that nobody has, and return its path.
+
+    Two walks on one unit may reach for a name in the same moment: the slower one takes a further number.
+
+    Raises
+    ------
+    BenchkitError
+        When it can't be written, or others were quicker `MOST_TRIES` times.
+    """
+    tries = 0
+    while True:
+        path = free_path(folder, opened.unit, begun, opened.channel)
+        try:
+            await asyncio.wrap_future(keeper.open_journal(path, opened))
+        except TakenError:
+            tries += 1
+            if tries == MOST_TRIES:
+                raise
+        else:
+            return path
 
 
 def events_of(path: Path) -> list[tuple[Event, float]]:

@@ -7,6 +7,8 @@ Rules
 * A reading is taken by itself when it is nearer to the target than half of the tolerance and clear of the limits by
   `SURE` standard uncertainties of the meter, when in a warm trim the same is true of what it will rest at, and when the
   probe is on the point and it has been at rest by `benchkit.measure.resting`.  A key takes it at any moment.
+* Nor is one taken by itself before it is known to be of the point: it has followed a turn, or the probe has been off
+  and on, or the supply's current agrees with it by the model.
 * What the screw does is seen in the reading alone; only in a rehearsal does somebody say how far it was turned.
 * A drop that rises by itself, faster and faster, trips: the supply goes off before anything is written.
 """
@@ -24,6 +26,7 @@ from benchkit.events import Event, ReadingMissed, ReadingTaken, TrimEnded
 from benchkit.judge.advice import Advice
 from benchkit.judge.answers import Answers
 from benchkit.judge.trimming import Adviser
+from benchkit.judge.trust import RailLine
 from benchkit.measure.readings import Reading
 from benchkit.measure.resting import Probe, Rest, RestView
 from benchkit.procedure.actions import Choice, Trim
@@ -89,11 +92,12 @@ async def trim(session: Session, action: Trim) -> Event | None:
     answers = await in_thread(
         lambda: predictions.answers_of(design, action.point, action.condition), "benchkit-model"
     )  # fmt: skip
+    line = await in_thread(lambda: predictions.rail_line(design, action.point, action.condition), "benchkit-model")
     by_hand = session.job.manual_meter if action.function != "dc current" else session.job.manual_supply
     if by_hand:
-        return await _by_hand(session, action, screw, answers)
+        return await _by_hand(session, action, screw, answers, line)
     lags_s = await in_thread(lambda: predictions.time_constants(design), "benchkit-model")
-    live = _Live(session, action, screw, lags_s, answers)
+    live = _Live(session, action, screw, lags_s, answers, line)
     if action.function == "dc current":
         return await live.run()
     async with powering.minding_the_meter(session):
@@ -104,11 +108,17 @@ class _Live:
     """One live trim with a meter."""
 
     def __init__(
-        self, session: Session, action: Trim, screw: Screw, lags_s: tuple[float, ...], answers: Answers | None
+        self,
+        session: Session,
+        action: Trim,
+        screw: Screw,
+        lags_s: tuple[float, ...],
+        answers: Answers | None,
+        line: RailLine | None,
     ) -> None:
         self._session, self._action = session, action
         self._tolerance = (action.high - action.low) / 2.0
-        self._screw, self._answers = screw, answers
+        self._screw, self._answers, self._line = screw, answers, line
         # A cold pre-set is right as it reads now, wherever the warming brings it.
         self._warm = action.condition is not None and action.condition.when == "warm"
         self._predicts = self._warm and bool(lags_s)
@@ -131,6 +141,7 @@ class _Live:
         self._asking: asyncio.Task[Reply] | None = None
         self._sampling: asyncio.Task[None] | None = None
         self._sampled_s = self._started_s
+        self._rail: tuple[float, float] | None = None  # when the supply was asked last, and its current
 
     async def run(self) -> Event | None:
         """Read, show and ask until something ends it."""
@@ -206,11 +217,19 @@ class _Live:
         """Look at the supply: in simulated time here and now, at a real bench beside the readings."""
         session, now_s = self._session, self._session.clock.now()
         if not session.clock.own_watch:
-            await session.sample()
             self._sampled_s = now_s
+            await self._ask_supply()
         elif now_s - self._sampled_s >= SAMPLE_S and (self._sampling is None or self._sampling.done()):
             self._sampled_s = now_s
-            self._sampling = asyncio.create_task(session.sample())
+            self._sampling = asyncio.create_task(self._ask_supply())
+
+    async def _ask_supply(self) -> None:
+        """Ask the supply, and note its current; one that only a person reads says nothing of this moment."""
+        session, asked_s, before = self._session, self._session.clock.now(), self._session.moment.supply
+        await session.sample()
+        supply = session.moment.supply
+        if supply is not None and supply is not before and not session.job.manual_supply:
+            self._rail = None if supply.positive_a is None else (asked_s, supply.positive_a)
 
     # -- one reading -------------------------------------------------------------------------------------------
 
@@ -227,7 +246,7 @@ class _Live:
             folded=folded,
             rest=self._comes_to(),
             running_away=self._away >= SURE_LOOKS,
-            rail=None if supply is None or supply.positive_a is None else (self._sampled_s, supply.positive_a),
+            rail=self._rail,
             gone="" if placed != "off" else "overload" if value is None else "it jumps like a lead in the air",
         )  # fmt: skip
         rest: RestView | None = None
@@ -272,7 +291,7 @@ class _Live:
             screw = self._screw
             if self._rested is not None:
                 screw = replace(screw, settled_share=settled_share(screw, self._rested))
-            self._adviser = adviser_for(self._action, screw, noise, self._answers)
+            self._adviser = adviser_for(self._action, screw, noise, self._answers, self._line)
             self._probe = Probe(noise=max(noise, 1e-9))
         return self._adviser, self._probe
 
@@ -293,6 +312,9 @@ class _Live:
             return "too near the limit for this meter: space takes it"
         if not self._adviser.near(value):
             return "not near the target yet"
+        rail, by_supply = self._rail, self._action.function == "dc current"
+        if not by_supply and not self._adviser.proven(value, None if rail is None else rail[1]):
+            return "it has not followed the screw yet, and no current speaks for it: space takes it"
         rest = self._comes_to()
         if rest is None and self._predicts:
             return "not known yet what it will rest at: space takes it"
@@ -324,7 +346,9 @@ class _Live:
         session.show_moment(busy="", live=live_view(session, self._action, reading, advice, told, self._creep, capture))
 
 
-async def _by_hand(session: Session, action: Trim, screw: Screw, answers: Answers | None) -> Event:
+async def _by_hand(
+    session: Session, action: Trim, screw: Screw, answers: Answers | None, line: RailLine | None
+) -> Event:
     """Trim with a meter that a person reads: entries until one is inside the limits and taken."""
     question = replace(
         action.question,
@@ -353,10 +377,15 @@ async def _by_hand(session: Session, action: Trim, screw: Screw, answers: Answer
             raise BenchkitError("A front end answered a trim with something that is no entry")
         reading, noise = typed
         if adviser is None:
-            adviser = adviser_for(action, screw, noise, answers, calm_s=0.0)
+            adviser = adviser_for(action, screw, noise, answers, line, calm_s=0.0)
         if session.hands.simulated and reply.turns:
             adviser.turned(reply.turns)
-        advice = adviser.add(session.clock.now(), reading.value)
+        rail = None
+        if not session.job.manual_supply:
+            await session.sample()
+            supply = session.moment.supply
+            rail = None if supply is None or supply.positive_a is None else (session.clock.now(), supply.positive_a)
+        advice = adviser.add(session.clock.now(), reading.value, rail=rail)
         session.show_moment(busy="", live=live_view(session, action, reading, advice, Told()))
         if reading.value is not None and action.low <= reading.value <= action.high:
             return ReadingTaken(item=action.item, reading=reading)

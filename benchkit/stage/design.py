@@ -235,6 +235,13 @@ class Design(_Table):
     def __eq__(self, other: object) -> bool:
         return isinstance(other, Design) and self._text == other._text and self._file == other._file
 
+    def with_thermal(self, words: str, **changes: float) -> Design:
+        """Return the same design with other thermal data; `words` keep the two apart where designs are remembered."""
+        other = self.model_copy(update={"thermal": self.thermal.model_copy(update=changes)})
+        other._file = f"{self._file}, {words}"
+        other._hash = hash((other._text, other._file))
+        return other
+
     def rest_v(self, positive_v: float, negative_v: float) -> float:
         """Rest voltage of the output (V) at the given rails (V)."""
         if self.output.rest.share is None:

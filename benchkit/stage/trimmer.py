@@ -27,6 +27,8 @@ from benchkit.stage.faults import Fault
 from benchkit.stage.operate import Solved, solve_units
 from benchkit.stage.runs import Mask, Run
 
+COOLED_K_PER_W = 1e-3
+"""Thermal resistance of a heat sink that stays at the ambient temperature (K/W)."""
 REPORT_UNITS = 400
 AUTHORITY_TRAVEL = (0.05, 0.95)
 """Part of the travel within which a target counts as reached with something to spare (common practice)."""
@@ -297,6 +299,29 @@ def cold_to_warm(design: Design, units: int = REPORT_UNITS, seed: int = 0) -> Co
         held=held,
         share_without=1.0 - drops.size / max(1, which.size),
     )
+
+
+def sink_cold_v(design: Design) -> float:
+    """Emitter drop (V) of the nominal unit while only its heat sink is cold, its trimmer where the target is met.
+
+    Drivers, spreader and junctions heat themselves within a minute of power, the heat sink takes many: this is what a
+    target for the warm stage reads in the first minutes.
+
+    Raises
+    ------
+    ModelError
+        As `at_target`; when the nominal unit has no such state.
+    """
+    _, travel = at_target(design)
+    cooled = design.with_thermal("its heat sink cold", heatsink_k_per_w=COOLED_K_PER_W)
+    unit = solve_units(cooled, nominal(cooled), full_rails(design, trimmer=travel, when="warm"), loading="none")
+    if not unit.converged[0]:
+        raise ModelError(
+            f"{design.name} has no state of rest beside a cold heat sink",
+            "one",
+            "Look at the thermal data of the design",
+        )
+    return float(drop_v(unit)[0])
 
 
 def span_of(value: float, values: Array) -> Span:

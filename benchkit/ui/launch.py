@@ -41,7 +41,7 @@ def rehearse(
     unit: str,
     operator: str,
     resume_path: Path | None,
-    channels: str = "",
+    channels: str | None = None,
     hands_free: bool = True,
     bell: bool = True,
 ) -> int:
@@ -123,7 +123,7 @@ def walk(
     operator: str,
     resume_path: Path | None,
     visa: str = "",
-    channels: str = "",
+    channels: str | None = None,
     hands_free: bool = True,
     bell: bool = True,
 ) -> int:

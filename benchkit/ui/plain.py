@@ -1,6 +1,7 @@
 """Plain mode: the same walk in lines of text, for any terminal, a screen reader or a pipe.
 
-Each question is numbered answers, each with a letter too, and a prompt.  The word ``off`` and Enter, or Ctrl+C, switch
+Each question is numbered answers, each with a letter too, and a prompt.  What an answer wants in words stands behind it
+or on the next line.  The word ``off`` and Enter, or Ctrl+C, switch
 the supply off at any moment, whether anything is asked or not.  So does the end of the input; after that nothing can
 be asked any more, and the walk is left where it is.
 """
@@ -18,7 +19,7 @@ from typing import TextIO
 
 import click
 
-from benchkit.procedure.actions import Question
+from benchkit.procedure.actions import Choice, Question
 from benchkit.session.front import AimView, LiveView, Reply, SuspectsView, View
 from benchkit.ui.live_text import LiveLines
 from benchkit.ui.widgets.answer_keys import keyed, keys_in_words
@@ -183,8 +184,10 @@ class PlainFront:
             self._asking = None
 
     async def _line_for(self, question: Question) -> Reply:
+        named: Choice | None = None
+        """The choice that was named in the line before, without the words that it wants."""
         while True:
-            self._out.write(self._prompt(question))
+            self._out.write(self._prompt(question) if named is None else _words_prompt(named))
             self._out.flush()
             line = await self._lines.get()
             if line is None:
@@ -194,7 +197,16 @@ class PlainFront:
             if _is_off(line):
                 self._off_now("the operator typed off")
                 continue
-            reply = self._reply(question, line.strip())
+            text, chosen, named = line.strip(), named, None
+            if chosen is not None and not text:
+                self._print("  Nothing was typed: the question stands again.")
+                continue
+            if chosen is not None and not _is_choice(text, question):
+                return Reply(choice=chosen.value, text=text)
+            reply = self._reply(question, text)
+            named = None if reply is None else _wanting_words(question, reply)
+            if named is not None:
+                continue
             if reply is not None:
                 return reply
             by_hand = self._view is not None and self._view.supply.by_hand
@@ -237,7 +249,7 @@ class PlainFront:
                 self._print(f"    or the words {choice.value}: {choice.label}")
         offered = () if question.kind in ("by hand", "text") else keyed(question.choices)
         for number, (letter, choice) in enumerate(offered, start=1):
-            reason = " (with the reason behind it)" if choice.wants_reason else ""
+            reason = " (the reason behind it or on the next line)" if choice.wants_reason and not choice.wanted else ""
             key = "" if question.kind == "hold" and choice.value == "yes" else f" ({letter.upper()})"
             self._print(f"    {number} {choice.label}{key}{reason}")
         if question.kind == "trim" and view is not None and view.kind == "rehearsal":
@@ -321,6 +333,26 @@ class PlainFront:
 
 def _is_off(line: str) -> bool:
     return line.strip().lower() == "off"
+
+
+def _wanting_words(question: Question, reply: Reply) -> Choice | None:
+    """Return the choice of `reply` when it still wants words; stopping never waits for any."""
+    if reply.text or reply.choice == "make safe":
+        return None
+    return next((choice for choice in question.choices if choice.value == reply.choice and choice.wants_reason), None)
+
+
+def _words_prompt(choice: Choice) -> str:
+    return f"  type {choice.wanted or 'the reason'}, or nothing to go back> "
+
+
+def _is_choice(text: str, question: Question) -> bool:
+    """Whether a line names a choice and nothing more: then it is that answer, and no words for the one before."""
+    word = text.lower()
+    return any(
+        word in (choice.value, letter, str(number))
+        for number, (letter, choice) in enumerate(keyed(question.choices), start=1)
+    )
 
 
 def _wanted(question: Question) -> str:

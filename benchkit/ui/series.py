@@ -6,14 +6,16 @@ number is asked for.
 
 from __future__ import annotations
 
+import unicodedata
 from dataclasses import dataclass, replace
+from string import digits
 from typing import Final
 
 from benchkit.errors import EntryError
 from benchkit.procedure.actions import Choice, Question
 from benchkit.quantities import quoted
 
-MOST_CHANNELS: Final = 24
+MOST_CHANNELS: Final = 8
 LONGEST_NAME: Final = 12
 
 NEXT: Final = "next"
@@ -22,11 +24,19 @@ NEXT: Final = "next"
 LEAVE: Final = "quit"
 """The choice that leaves."""
 
-_WANTED = f"a number of channels from 1 to {MOST_CHANNELS}, or their names with commas between, such as L,R"
+_WANTED = (
+    f"a whole number from 1 to {MOST_CHANNELS}, or names with commas between, such as L,R; "
+    f"a name has 1 to {LONGEST_NAME} letters and digits, first a letter"
+)
 
 
-def parse_channels(text: str) -> tuple[str, ...]:
+def parse_channels(text: str | None) -> tuple[str, ...]:
     """Return the names of a unit's channels; () for a unit that has but one, without a name.
+
+    Parameters
+    ----------
+    text : str or None
+        What was typed; None where nothing was said of channels.
 
     Raises
     ------
@@ -34,25 +44,29 @@ def parse_channels(text: str) -> tuple[str, ...]:
 
     Examples
     --------
-    >>> parse_channels("2"), parse_channels("L, R"), parse_channels("")
+    >>> parse_channels("2"), parse_channels("L, R"), parse_channels(None)
     (('1', '2'), ('L', 'R'), ())
     """
-    if not text.strip():
+    if text is None:
         return ()
     if text.strip().isascii() and text.strip().isdigit():
         count = int(text.strip()[:9])
         if not 1 <= count <= MOST_CHANNELS:
             raise EntryError(f"--channels got {quoted(text)}", _WANTED)
         return tuple(str(number) for number in range(1, count + 1))
-    names = tuple(name.strip() for name in text.split(","))
-    for name in names:
-        if not name or not name.isprintable() or len(name) > LONGEST_NAME:
-            raise EntryError(f"--channels got {quoted(text)}", f"{_WANTED}; a name has 1 to {LONGEST_NAME} characters")
+    names = tuple(unicodedata.normalize("NFC", name.strip()) for name in text.split(","))
+    if not all(_is_name(name) for name in names):
+        raise EntryError(f"--channels got {quoted(text)}", _WANTED)
     if len({name.casefold() for name in names}) < len(names):
         raise EntryError(f"--channels got {quoted(text)}, which names one channel twice", _WANTED)
     if len(names) > MOST_CHANNELS:
         raise EntryError(f"--channels got {len(names)} names", _WANTED)
     return names
+
+
+def _is_name(text: str) -> bool:
+    """Whether `text` can be a channel's name: the letters of any script, but only the digits 0 to 9."""
+    return 0 < len(text) <= LONGEST_NAME and text[0].isalpha() and all(c.isalpha() or c in digits for c in text)
 
 
 @dataclass(frozen=True, kw_only=True)

@@ -13,7 +13,7 @@ from pathlib import Path
 
 import pytest
 
-from benchkit.errors import BenchkitError, FileError, RecordError
+from benchkit.errors import BenchkitError, FileError, RecordError, TakenError
 from benchkit.journal import Writer, read, verify
 
 AT = "2031-04-05T06:07:08Z"
@@ -50,7 +50,7 @@ def test_append_flushes_to_the_disk_before_it_returns(tmp_path: Path, monkeypatc
 def test_an_existing_file_is_never_overwritten(tmp_path: Path) -> None:
     path = tmp_path / "a.jsonl"
     path.write_text("mine")
-    with pytest.raises(FileError, match="already"):
+    with pytest.raises(TakenError, match="already"):
         Writer.create(path)
     assert path.read_text() == "mine"
 

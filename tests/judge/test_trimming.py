@@ -14,6 +14,7 @@ from benchkit.judge.advice import Advice
 from benchkit.judge.answers import OfUnits
 from benchkit.judge.screw import KNEE_V, Scale, taken_for
 from benchkit.judge.trimming import MOST_TURNS, Adviser
+from benchkit.judge.trust import RailLine
 
 TARGET_V, LOW_V, HIGH_V = 0.022, 0.0198, 0.0242
 SLOPE_V = 0.016
@@ -367,6 +368,7 @@ def test_a_probe_that_slips_teaches_nothing() -> None:
     bench.look()
     for _ in range(10):
         bench.read(None)
+    assert bench.look(1.0).turns is None
     assert bench.look().mood == "turn"
     assert bench.adviser.slope_source == "the model"
 
@@ -378,3 +380,142 @@ def test_by_hand_every_entry_counts() -> None:
     assert by_hand.add(20.0, 0.0145).slope_source == "this unit"
     assert by_hand.add(40.0, 0.0300).mood == "overshot"
     assert by_hand.add(60.0, 0.0221).mood == "steady"
+
+
+# -- is it the point at all -------------------------------------------------------------------------------------------
+
+PER_V = 4.0
+LINE = RailLine(standing_a=0.02, per_unit=PER_V)
+
+
+def rail_at(drop_v: float) -> float:
+    return LINE.standing_a + PER_V * drop_v
+
+
+@pytest.mark.parametrize("before", [None, 0.015, 0.030])
+@pytest.mark.parametrize("overload", [0, 8])
+@pytest.mark.parametrize("known", [True, False])
+def test_swapped_probes_are_never_told_to_turn(before: float | None, overload: int, known: bool) -> None:
+    bench = Bench(rail_a=rail_at(before or 0.015) if known else None, adviser=adviser(line=LINE))
+    if before is not None:
+        bench.value = before
+        bench.look()
+    for _ in range(overload):
+        bench.read(None)
+    bench.value = -(before or 0.015)
+    for _ in range(60):
+        advice = bench.read()
+        assert advice.mood == "gone"
+        assert advice.turns is None
+    assert "swapped" in advice.words
+    bench.value = before or 0.015
+    assert bench.look(3.0).mood == "turn"
+
+
+@pytest.mark.parametrize("after", [0.0, 2e-4, 0.004, 0.011])
+@pytest.mark.parametrize("before", [0.016, 0.022, 0.030])
+@pytest.mark.parametrize("overload", [0, 10])
+@pytest.mark.parametrize("line", [LINE, None])
+def test_another_point_under_the_probe_is_no_reason_for_more(
+    before: float, after: float, overload: int, line: RailLine | None
+) -> None:
+    """The supply's current goes on as before: the bias did not fall."""
+    if line is None and not overload and after > 0.5 * before:
+        return  # a quick hand does as much, and nothing tells
+    bench = Bench(value=before, rail_a=rail_at(before), adviser=adviser(line=line))
+    bench.look(2.0)
+    for _ in range(overload):
+        bench.read(None)
+    bench.value = after
+    for _ in range(100):
+        advice = bench.read()
+        assert (advice.turns or 0.0) <= 0.0, advice
+    assert advice.mood == "gone"
+    bench.value = before
+    assert bench.look(3.0).mood == ("turn" if before != TARGET_V else "steady")
+
+
+def test_a_fall_that_the_current_has_too_is_believed_once_it_stands() -> None:
+    bench = Bench(value=0.021, rail_a=rail_at(0.021), adviser=adviser(line=LINE))
+    bench.look(2.0)
+    bench.value, bench.rail_a = 0.011, rail_at(0.011)
+    assert bench.look(1.3).turns is None
+    advice = bench.look(1.0)
+    assert advice.mood == "turn"
+    assert advice.turns is not None
+    assert advice.turns > 0.0
+    assert advice.slope_source == "the model"
+
+
+def test_a_first_reading_that_hides_the_bias_is_no_reason_for_more() -> None:
+    """A trimmer as found, and the probes on a point that reads next to nothing."""
+    bench = Bench(value=1e-4, rail_a=rail_at(0.020), adviser=adviser(line=LINE))
+    for _ in range(50):
+        bench.read()
+    assert bench.seen[-1].mood == "gone"
+    assert "more bias than this reading" in bench.seen[-1].words
+    assert not any((advice.turns or 0.0) > 0.0 for advice in bench.seen)
+    least = Bench(value=1e-4, rail_a=rail_at(1e-4), adviser=adviser(line=LINE)).look()
+    assert least.turns is not None
+    assert least.turns > 0.0
+
+
+@pytest.mark.parametrize("seed", range(6))
+@pytest.mark.parametrize("rail", [True, False])
+def test_a_lead_in_the_air_is_never_told_to_turn(seed: int, rail: bool) -> None:
+    rng = np.random.default_rng(seed)
+    bench = Bench(value=0.016, rail_a=rail_at(0.016) if rail else None, adviser=adviser(line=LINE), rng=rng)
+    bench.look(2.0)
+    for n in range(200):
+        advice = bench.read(None) if n % 20 == 19 else bench.read(float(0.0025 * rng.standard_normal()))
+        assert advice.turns is None, (n, advice)
+    bench.value = 0.016
+    assert bench.look(3.0).mood == "turn"
+
+
+def test_where_no_current_tells_the_probe_is_put_on_again() -> None:
+    bench = Bench(value=0.021)
+    bench.look(2.0)
+    bench.value = 0.012
+    advice = bench.look(3.0)
+    assert advice.turns is None
+    assert "put it on again" in advice.words
+    for _ in range(6):
+        bench.read(None)
+    assert bench.look(2.0).mood == "turn"
+
+
+def test_a_fallen_entry_is_typed_again_before_more_is_advised() -> None:
+    by_hand = adviser(calm_s=0.0, noise=3e-5)
+    assert by_hand.add(0.0, 0.018).mood == "turn"
+    fallen = by_hand.add(20.0, 0.0095)
+    assert fallen.mood == "gone"
+    assert fallen.turns is None
+    assert "type what they read" in fallen.words
+    again = by_hand.add(30.0, 0.0096)
+    assert again.turns is not None
+    assert again.turns > 0.0
+    assert by_hand.add(40.0, -0.0096).words.startswith("it reads negative")
+    assert by_hand.add(50.0, None).turns is None
+    assert by_hand.add(60.0, 0.0040).turns is None
+
+
+@pytest.mark.parametrize(
+    ("change", "expected"),
+    [
+        (lambda bench: None, False),
+        (lambda bench: setattr(bench, "rail_a", rail_at(0.022)), True),
+        (lambda bench: setattr(bench, "rail_a", rail_at(0.012)), False),
+        (lambda bench: [bench.read(None) for _ in range(6)], True),
+        (lambda bench: bench.read(None), False),
+        (lambda bench: bench.turn(0.1, known=True), True),
+        (lambda bench: bench.turn(0.1), False),  # nothing was advised, nobody knows of it
+    ],
+    ids=["nothing", "current", "other current", "off and on", "one overload", "a turn", "a move by itself"],
+)
+def test_what_proves_that_a_reading_is_of_the_point(change: Callable[[Bench], Any], expected: bool) -> None:
+    bench = Bench(value=0.0215, adviser=adviser(line=LINE))
+    bench.look(2.0)
+    change(bench)
+    bench.look(2.0)
+    assert bench.adviser.proven(bench.value, bench.rail_a) is expected

@@ -66,6 +66,22 @@ CASES = [
     (changed(OHMS, f'{OHMS[: -len(MODEL)]}limits = "what I like"'), "step 'rails' limits", "what I like"),
     (changed(OHMS, OHMS[: -len(MODEL)] + 'limits = { least = "1 ohm" }'), "step 'rails' limits", ""),
     (changed('title = "Rail to rail"', 'title = "t"\nsamples = 0'), "step 'rails' samples", "found 0"),
+    (changed('title = "Rail to rail"', 'title = "t"\noverride = "yes"'), "step 'rails' override", "found 'yes'"),
+    (changed('title = "Rail to rail"', 'title = "t"\noverride = 1'), "step 'rails' override", "boolean"),
+    (changed('title = "Rail to rail"', 'title = "t"\nresistor = "1 ohm"'), "step 'rails'", "a rail's drop"),
+    (changed("resume = true", 'resume = "true"'), "section 'cold' resume", "found 'true'"),
+    (changed("format = 1", "format = 1\nunknown_trimmer = 1"), "procedure unknown_trimmer", "found 1"),
+    (changed("format = 1", "format = 1\nunknown_trimmer = {}"), "procedure unknown_trimmer", "found a table"),
+    (changed('title = "Bias"', 'title = "B"\noptional = ""'), "section 'bias'", "'optional' is empty"),
+    (changed('title = "Made safe"', 'title = "M"\noptional = " "'), "section 'made-safe'", "'optional' is empty"),
+    (changed('title = "Made safe"', 'title = "M"\noptional = "M?"'), "made-safe", "can't be left out"),
+    (changed('title = "Bias"', 'title = "B"\nonly_if = "no parts replaced"'), "'bias'", "has to ask for that"),
+    (changed('seconds = "60 s"', 'seconds = "4.1 h"'), "section bias, step soak, seconds", "4.1 h"),
+    (changed('seconds = "60 s"', 'seconds = "14401 s"'), "section bias, step soak, seconds", "at most 14400 s"),
+    (changed('seconds = "60 s"', 'seconds = "60 s"\nuntil = {}'), "step 'soak' until", "found a table"),
+    (changed('seconds = "60 s"', 'seconds = "60 s"\nuntil = "settled"\ndrift = "21 %/min"'), "drift", "at most 20 %"),
+    (changed('share = "100 %"', 'share = "50 %"\ntolerance = "61 %"'), "step trim, tolerance", "at most 60 %"),
+    (changed('title = "Rail to rail"\n', ""), "step 'rails' title", "it is missing"),
 ]
 
 
@@ -78,6 +94,7 @@ def test_a_wrong_file_is_named_with_its_key(text: str, key: str, words: str) -> 
     assert key in str(error)
     assert words in str(error)
     assert "\n" not in str(error)
+    assert "': " not in str(error).replace(f"{key}: ", ""), "no table is printed"
     assert error.exit_status == 2
 
 

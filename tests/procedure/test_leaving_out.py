@@ -233,8 +233,8 @@ DEVICES = ("output.upper.1, output.lower.1", True)
     ("before", "now", "sections"),
     [
         (NOTHING, NOTHING, {"found"}),
-        (RESISTOR, NOTHING, {"found", "again"}),
-        (NOTHING, RESISTOR, {"found", "again"}),
+        (RESISTOR, NOTHING, {"again", "careful"}),
+        (NOTHING, RESISTOR, {"found", "again", "careful"}),
         (NOTHING, DEVICES, {"found", "again", "careful"}),
         (DEVICES, NOTHING, {"again", "careful"}),
     ],
@@ -251,8 +251,9 @@ def test_what_was_replaced_decides_which_sections_are_walked(
     assert drive.walk.replay(drive.told) == (drive.state, ())
 
 
-def test_with_new_semiconductors_the_trimmer_is_at_its_end_before_there_is_power() -> None:
-    drive = walked(repair(), NOTHING, DEVICES)
+@pytest.mark.parametrize("parts", [DEVICES, RESISTOR, ("spreader.trimmer", False)])
+def test_with_new_parts_the_trimmer_is_at_its_end_before_there_is_power(parts: tuple[str, bool]) -> None:
+    drive = walked(repair(), NOTHING, parts)
     order = [result.item for result in drive.state.results]
     end = next(number for number, name in enumerate(order) if name.startswith("careful.trimmer-end"))
     assert end < order.index("careful.on")

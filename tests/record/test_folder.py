@@ -37,6 +37,14 @@ def test_a_units_records_are_told_by_what_they_say(tmp_path: Path) -> None:
     assert entry.as_text().endswith("(rehearsal)")
 
 
+def test_a_units_walks_come_in_their_order_even_those_of_one_second(tmp_path: Path) -> None:
+    stem = "T40-0017-3a8381f9-20310405T060708Z"
+    expected = [f"{stem}{end}.jsonl" for end in ("", "-2", "-10")]
+    for name in expected[::-1]:
+        write(tmp_path / name, good_events())
+    assert [entry.path.name for entry in entries(tmp_path)] == expected
+
+
 def test_a_missing_folder_is_refused_with_a_sentence(tmp_path: Path) -> None:
     with pytest.raises(FileError, match=r"nowhere.*can't be read"):
         list(entries(tmp_path / "nowhere"))

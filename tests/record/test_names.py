@@ -100,6 +100,24 @@ def test_a_taken_name_is_not_offered_again(tmp_path: Path) -> None:
     assert taken[1] == taken[0].replace(".jsonl", "-2.jsonl")
 
 
+def test_a_link_that_leads_nowhere_is_a_taken_name(tmp_path: Path) -> None:
+    first = names.free_path(tmp_path, "x", WHEN)
+    first.symlink_to(tmp_path / "gone")
+    assert names.free_path(tmp_path, "x", WHEN).name == first.name.replace(".jsonl", "-2.jsonl")
+
+
+@pytest.mark.parametrize("channel", ["", "L", "2", "../rear", "6510"])
+def test_walks_of_one_second_sort_by_their_number(tmp_path: Path, channel: str) -> None:
+    taken = []
+    for _ in range(11):
+        taken.append(names.free_path(tmp_path, "x", WHEN, channel))
+        taken[-1].write_bytes(b"")
+    later = names.record_name("x", WHEN + timedelta(seconds=1), channel)
+    assert sorted([later, *(path.name for path in taken[::-1])], key=names.in_order) == [
+        *(path.name for path in taken), later,
+    ]  # fmt: skip
+
+
 def test_a_full_second_is_refused(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
     monkeypatch.setattr(names, "_MOST_IN_ONE_SECOND", 2)
     for _ in range(2):

@@ -106,7 +106,7 @@ def sequence(*parts: tuple[int, float | Exception | None]) -> Values:
 
 
 def test_a_value_is_taken_when_the_probes_have_moved_and_it_rests(monkeypatch: pytest.MonkeyPatch) -> None:
-    bench = Bench(sequence((8, 0.0002), (3, None), (60, 0.0221)))
+    bench = Bench(sequence((8, 0.0002), (6, None), (60, 0.0221)))
     answered, taken = bench.ask(monkeypatch)
     assert answered == Answered(item=ITEM.id, choice="done", text="by itself: at rest for 2.0 s")
     assert isinstance(taken, ReadingTaken)
@@ -124,10 +124,10 @@ def test_a_value_is_taken_when_the_probes_have_moved_and_it_rests(monkeypatch: p
     ("values", "limits", "words"),
     [
         (sequence((60, 0.0221)), LIMITS, "the probes have not moved yet"),
-        (sequence((3, None), (60, 0.0300)), LIMITS, "outside the limits: space takes it"),
-        (sequence((3, None), (60, 0.025995)), LIMITS, "too near the limit for this meter"),
+        (sequence((6, None), (60, 0.0300)), LIMITS, "outside the limits: space takes it"),
+        (sequence((6, None), (60, 0.025995)), LIMITS, "too near the limit for this meter"),
         (sequence((60, None)), LIMITS, "probe not on the point"),
-        (sequence((3, None), (60, 0.001)), Limits(-0.05, 0.05, 0.0, "V", "the model"), "a lead in the air"),
+        (sequence((6, None), (60, 0.001)), Limits(-0.05, 0.05, 0.0, "V", "the model"), "a lead in the air"),
     ],
     ids=["not moved", "outside", "at the limit", "in the air", "zero inside"],
 )
@@ -145,7 +145,7 @@ def test_what_is_never_taken_by_itself(
 def test_a_point_that_reads_like_the_one_before_is_seen_to_be_another_by_the_way_there(
     monkeypatch: pytest.MonkeyPatch,
 ) -> None:
-    bench = Bench(sequence((10, 0.0221), (4, 1e-6), (60, 0.0220)))
+    bench = Bench(sequence((10, 0.0221), (6, 1e-6), (60, 0.0220)))
     answered, _ = bench.ask(monkeypatch)
     assert answered.text
     assert bench.reads > 30
@@ -169,7 +169,7 @@ def test_a_meter_that_does_not_answer_leaves_it_to_the_key(monkeypatch: pytest.M
 def test_a_meter_that_fails_now_and_then_is_asked_again(monkeypatch: pytest.MonkeyPatch) -> None:
     trouble = InstrumentError("timeout", "The meter did not answer")
     some = capturing.MOST_FAILURES - 1
-    bench = Bench(sequence((some, trouble), (8, 0.0002), (some, trouble), (3, None), (60, 0.0221)))
+    bench = Bench(sequence((some, trouble), (8, 0.0002), (some, trouble), (6, None), (60, 0.0221)))
     answered, taken = bench.ask(monkeypatch)
     assert answered.text == "by itself: at rest for 2.0 s"
     assert taken.reading.value == pytest.approx(0.0221, abs=1e-5)

@@ -1,13 +1,19 @@
 from __future__ import annotations
 
+import asyncio
+import datetime
 from pathlib import Path
 from types import SimpleNamespace
 from typing import Any, cast
 
 import pytest
 
-from benchkit.errors import RecordError
+from benchkit.errors import FileError, RecordError
 from benchkit.events import OutputOff
+from benchkit.keeper.client import KeeperClient
+from benchkit.procedure.state import State
+from benchkit.record.names import in_order
+from benchkit.session import start
 from benchkit.session.start import Runner, design_and_procedure, events_of, opened_of, replayed
 from tests.procedure.driver import OPENED, begun, small
 from tests.record.walks import write
@@ -65,6 +71,65 @@ def test_something_else_is_no_beginning(tmp_path: Path) -> None:
     (tmp_path / "empty.jsonl").write_bytes(b"")
     with pytest.raises(RecordError):
         opened_of(tmp_path / "empty.jsonl")
+
+
+NOW = datetime.datetime(2031, 4, 5, 6, 7, 8, tzinfo=datetime.UTC)
+
+
+# -- two walks that reach for one name ------------------------------------------------------------------------------
+
+
+def test_a_name_that_somebody_else_took_meanwhile_gets_a_further_number(tmp_path: Path) -> None:
+    folder = tmp_path / "r"
+    folder.mkdir()
+
+    async def both() -> list[Path]:
+        keepers = [KeeperClient.start(None, lambda push: None) for _ in range(2)]
+        try:
+            return list(await asyncio.gather(*(start.begin_record(keeper, folder, OPENED, NOW) for keeper in keepers)))
+        finally:
+            for keeper in keepers:
+                await asyncio.to_thread(keeper.close)
+
+    first, second = sorted(asyncio.run(both()), key=lambda path: in_order(path.name))
+    assert second.name == first.name.replace(".jsonl", "-2.jsonl")
+    assert opened_of(first) == opened_of(second) == OPENED
+
+
+def test_who_gets_no_name_names_nobody_elses_record(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    others = tmp_path / "of-somebody-else.jsonl"
+    others.write_bytes(b"theirs")
+    asked: list[Path] = []
+
+    def taken(*_names: object) -> Path:
+        asked.append(others)
+        return others
+
+    monkeypatch.setattr(start, "free_path", taken)
+    monkeypatch.setattr(start, "MOST_TRIES", 3)
+    setting = SimpleNamespace(records=tmp_path)
+    runner = Runner(cast("Any", setting))
+    with pytest.raises(FileError, match="a file of this name already"):
+        asyncio.run(runner._run(small(), State(), OPENED, cast("Any", None)))
+    assert len(asked) == 3
+    assert (runner.record, runner.session) == (None, None)
+    assert others.read_bytes() == b"theirs"
+
+
+def test_a_folder_that_takes_no_record_is_not_tried_again(tmp_path: Path) -> None:
+    asked: list[Path] = []
+
+    async def refuse(path: Path) -> None:
+        asked.append(path)
+        raise FileError(str(path), "", "it can't be written: No space left on device", "")
+
+    class Full:
+        def open_journal(self, path: Path, _opened: object) -> Any:
+            return asyncio.run_coroutine_threadsafe(refuse(path), asyncio.get_running_loop())
+
+    with pytest.raises(FileError, match="No space left"):
+        asyncio.run(start.begin_record(cast("Any", Full()), tmp_path, OPENED, NOW))
+    assert len(asked) == 1
 
 
 def test_a_record_stands_alone(tmp_path: Path) -> None:

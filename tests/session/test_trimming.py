@@ -9,6 +9,7 @@ import pytest
 
 from benchkit.events import Event, ReadingTaken, SupplyState, TrimEnded, Tripped
 from benchkit.instruments.meter import RawReading
+from benchkit.judge.trust import RailLine
 from benchkit.procedure.actions import Question, Trim
 from benchkit.procedure.questions import END, STOP, TAKE
 from benchkit.session import advising, predictions, trimming
@@ -34,6 +35,14 @@ def no_model(monkeypatch: pytest.MonkeyPatch) -> None:
     monkeypatch.setattr(predictions, "screw_of", lambda *arguments: SCREW)
     monkeypatch.setattr(predictions, "time_constants", lambda design: (60.0, 8.0))
     monkeypatch.setattr(trimming, "INTERVAL_S", 0.02)
+    monkeypatch.setattr(predictions, "rail_line", lambda *arguments: None)
+
+
+@pytest.fixture
+def agreeing(monkeypatch: pytest.MonkeyPatch) -> None:
+    """The model's line goes through the supply's 12 mA at what these benches read."""
+    line = RailLine(standing_a=0.007, per_unit=0.005 / 0.0221)
+    monkeypatch.setattr(predictions, "rail_line", lambda *arguments: line)
 
 
 async def waits(question: Question, refused: str) -> Reply | None:
@@ -50,6 +59,7 @@ class Bench(Run):
         self.front = FakeFront(answer)
         self.action = replace(TRIM, **changes)
         self.keeper.read = self.read  # type: ignore[method-assign]
+        self.keeper.on = True
 
     def read(self, function: str, range: float | None = None, samples: int = 1) -> Any:
         shown = self.value(self.bench.seconds)
@@ -89,6 +99,7 @@ def _impatient(wait: Any) -> Any:
 # -- without a hand on the keyboard -----------------------------------------------------------------------------------
 
 
+@pytest.mark.usefixtures("agreeing")
 def test_a_reading_at_rest_in_the_middle_is_taken_by_itself() -> None:
     bench = Bench(lambda t_s: 0.0221, samples=4)
     event = bench.trim()
@@ -171,6 +182,7 @@ def test_a_meter_that_leaves_the_tolerance_open_takes_nothing_by_itself() -> Non
     assert "too near the limit for this meter: space takes it" in {live.capture for live in bench.lives}
 
 
+@pytest.mark.usefixtures("agreeing")
 def test_no_hands_free_and_no_bell() -> None:
     async def answer(question: Question, refused: str) -> Reply | None:
         while bench.bench.seconds < 6.0:
@@ -292,6 +304,7 @@ def test_a_move_settles_between_what_it_does_at_once_and_what_the_model_says(set
     assert 1.0 <= share <= settled
 
 
+@pytest.mark.usefixtures("agreeing")
 def test_a_cold_pre_set_is_right_as_it_reads_now() -> None:
     bench = Bench(lambda t_s: 0.0221, condition=replace(WARM, when="cold"))
     event = bench.trim(lambda session: setattr(session, "rested", (POINT, 0.010)))
@@ -386,3 +399,63 @@ def test_a_real_bench_reads_on_while_nobody_answers() -> None:
     bench.front.answer = answer
     bench.trim(prepare)
     assert len(bench.lives) >= 10
+
+
+# -- is it the point at all -------------------------------------------------------------------------------------------
+
+
+@pytest.mark.parametrize(
+    ("value", "by_itself"),
+    [
+        (lambda t_s: 0.0221, False),
+        (lambda t_s: None if t_s < 1.5 else 0.0221, True),
+        (lambda t_s: None if 2.0 <= t_s < 2.2 else 0.0221, False),
+    ],
+    ids=["it has only ever stood there", "the probe came", "one overload"],
+)
+def test_a_live_trim_takes_nothing_by_itself_before_it_knows_the_point(
+    value: Callable[[float], float | None], by_itself: bool
+) -> None:
+    bench = Bench(value, condition=replace(WARM, when="cold"))
+
+    async def answer(question: Question, refused: str) -> Reply | None:
+        while bench.bench.seconds < 10.0:
+            await asyncio.sleep(0.001)
+        return Reply(choice="take")
+
+    bench.front.answer = answer
+    event = bench.trim()
+    assert isinstance(event, ReadingTaken)
+    assert event.how.startswith("by itself" if by_itself else "by key")
+    said = any("no current speaks for it: space takes it" in live.capture for live in bench.lives)
+    assert said or by_itself
+
+
+def test_a_current_of_another_bias_speaks_for_nothing(monkeypatch: pytest.MonkeyPatch) -> None:
+    line = RailLine(standing_a=0.011, per_unit=0.005 / 0.0221)
+    monkeypatch.setattr(predictions, "rail_line", lambda *arguments: line)
+    bench = Bench(lambda t_s: 0.0221, condition=replace(WARM, when="cold"))
+
+    async def answer(question: Question, refused: str) -> Reply | None:
+        while bench.bench.seconds < 8.0:
+            await asyncio.sleep(0.001)
+        return Reply(choice="take")
+
+    bench.front.answer = answer
+    event = bench.trim()
+    assert isinstance(event, ReadingTaken)
+    assert event.how == "by key"
+
+
+def test_by_hand_a_fall_is_typed_again_and_a_negative_reading_is_no_advice() -> None:
+    typed = iter(["18.0 mV", "9.5 mV", "-9.5 mV", "9.6 mV", "22.1 mV"])
+
+    async def answer(question: Question, refused: str) -> Reply | None:
+        return Reply(choice="take", text=next(typed))
+
+    bench = Bench(lambda t_s: 0.0, answer, manual=True)
+    assert isinstance(bench.trim(), ReadingTaken)
+    said = [question.expected for question in bench.front.questions]
+    assert "type what they read" in said[2]
+    assert "negative" in said[3]
+    assert "anticlockwise" in said[4]

@@ -19,7 +19,7 @@ from benchkit.procedure.targets import target_limits
 from benchkit.rehearsal.bench import RehearsalBench
 from benchkit.rehearsal.bench_file import bench_text
 from benchkit.rehearsal.standin import StandIn
-from benchkit.session import soaking, trimming
+from benchkit.session import predictions, soaking, trimming
 from benchkit.session.clock import SimulatedClock
 from benchkit.session.front import LiveView, View
 from benchkit.session.hands import Hands
@@ -192,3 +192,19 @@ def test_a_trim_by_the_rails_current_arrives_though_the_feeds_hang_on_it(seed: i
     assert not {live.mood for live in front.pictures} & {"overshot", "wrong way", "no response", "gone"}
     moves = {live.advice for live in front.pictures if live.advised_turns}
     assert len(moves) <= 8
+
+
+@pytest.mark.parametrize("seed", [1, 2, 3])
+def test_the_models_line_of_the_supplys_current_holds_for_drawn_units(seed: int) -> None:
+    """What advice and hands-free readings lean on."""
+    table = Table(0.0, seed)
+    condition = table.trim().condition
+    line = predictions.rail_line(design(), POINT, condition)
+    assert line is not None
+    assert predictions.rail_line(design(), "rail+.current", condition) is None
+    for travel in (0.0, 0.3, 0.5, 0.55, 0.6, 0.65):
+        table.hands.trimmer_to(travel)
+        points = table.bench.table.now().points
+        drop_v, rail_a = float(points[POINT][0]), float(points["rail+.current"][0])
+        room_a = max(line.per_unit * drop_v / 3.0, 0.1 * line.standing_a, 0.05 * line.per_unit * table.target_v)
+        assert abs(rail_a - line.standing_a - line.per_unit * drop_v) <= room_a, (travel, drop_v, rail_a)

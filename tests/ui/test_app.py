@@ -18,6 +18,7 @@ from textual.widgets import Input
 from benchkit.errors import InstrumentError
 from benchkit.events import Closed
 from benchkit.procedure.actions import Choice, Question
+from benchkit.procedure.questions import NOTHING_REPLACED, OTHER_PARTS, STOP
 from benchkit.session.falling import TOO_SLOW_WORDS
 from benchkit.session.front import Front, Reply, SupplyView
 from benchkit.session.supply_view import PULL_THE_PLUG
@@ -298,6 +299,23 @@ def test_a_reason_is_asked_for_and_can_be_taken_back() -> None:
             await pilot.pause(0.2)
             await pilot.press("a")
             await until(lambda: bench.replies == [Reply(choice="again")])
+
+    run(test)
+
+
+def test_parts_are_asked_for_as_parts_and_not_as_a_reason() -> None:
+    async def test() -> None:
+        parts = Question(
+            item="p", kind="parts", title="Which?", do="", choices=(NOTHING_REPLACED, OTHER_PARTS, STOP)
+        )  # fmt: skip
+        async with running(asking(parts)) as (app, pilot, bench):
+            await until(lambda: app._pending is not None)
+            await pilot.press("o")
+            await until(lambda: shows(app, "named next: type all the parts that were replaced, Enter keeps it"))
+            await pilot.press("enter")
+            assert shows(app, "What is needed is all the parts that were replaced; Esc goes back.")
+            await pilot.press("R", "1", "enter")
+            await until(lambda: bench.replies == [Reply(choice="other parts", text="R1")])
 
     run(test)
 

@@ -10,6 +10,7 @@ import click
 import pytest
 
 from benchkit.procedure.actions import Question
+from benchkit.procedure.questions import NOTHING_REPLACED, OTHER_PARTS, SEMICONDUCTORS, STOP
 from benchkit.session.front import Reply
 from benchkit.ui import plain
 from benchkit.ui.plain import PlainFront
@@ -143,6 +144,56 @@ def test_what_is_no_answer_is_asked_for_again(question: Question, lines: list[st
     reply, text = answer(question, *lines)
     assert reply.choice in {choice.value for choice in question.choices}
     assert text.count("! That is no answer here") == len(lines) - 1
+
+
+PARTS = Question(
+    item="parts",
+    kind="parts",
+    title="Which parts were replaced?",
+    do="Name them.",
+    choices=(NOTHING_REPLACED, SEMICONDUCTORS, OTHER_PARTS, STOP),
+)
+
+
+@pytest.mark.parametrize(
+    ("question", "lines", "reply"),
+    [
+        (PARTS, ["o", "R12 and C3"], Reply(choice="other parts", text="R12 and C3")),
+        (PARTS, ["o R12 and C3"], Reply(choice="other parts", text="R12 and C3")),
+        (PARTS, ["3", "2 resistors, R12 and R13"], Reply(choice="other parts", text="2 resistors, R12 and R13")),
+        (PARTS, ["other parts", "n-type thermistor"], Reply(choice="other parts", text="n-type thermistor")),
+        (PARTS, ["S", "Q5"], Reply(choice="semiconductors", text="Q5")),
+        (PARTS, ["o", "", "n"], Reply(choice="no")),  # nothing goes back
+        (PARTS, ["o", "s", "Q5"], Reply(choice="semiconductors", text="Q5")),  # a changed mind
+        (PARTS, ["o", "o", "R12"], Reply(choice="other parts", text="R12")),
+        (PARTS, ["o", "m"], Reply(choice="make safe")),
+        (PARTS, ["o", "make safe"], Reply(choice="make safe")),
+        (PARTS, ["o", "4"], Reply(choice="make safe")),
+        (DECIDE, ["g", "a known spot"], Reply(choice="go on", text="a known spot")),
+        (DECIDE, ["2", "", "a"], Reply(choice="again")),
+    ],
+)
+def test_the_words_of_an_answer_may_stand_on_the_next_line(question: Question, lines: list[str], reply: Reply) -> None:
+    given, text = answer(question, *lines)
+    assert given == reply
+    assert "That is no answer here" not in text
+
+
+def test_it_is_said_what_is_to_be_typed_on_the_next_line() -> None:
+    _, text = answer(PARTS, "o", "", "o", "R12")
+    assert text.count("type all the parts that were replaced, or nothing to go back> ") == 2
+    assert "Nothing was typed: the question stands again." in text
+    assert "type the reason, or nothing to go back> " in answer(DECIDE, "g", "a known spot")[1]
+
+
+def test_off_is_off_where_the_words_are_wanted() -> None:
+    async def script(front: PlainFront, terminal: Terminal, offs: list[str]) -> None:
+        front.show(VIEW)
+        terminal.type("o", "off", "R12")
+        assert await front.ask(PARTS) == Reply(choice="other parts", text="R12")
+        assert offs == ["the operator typed off"]
+
+    play(script, tty=False)
 
 
 def test_a_wrong_answer_is_told_which_keys_there_are() -> None:

@@ -12,28 +12,65 @@ from benchkit.ui.widgets.answer_keys import keyed
 @pytest.mark.parametrize(
     ("text", "names"),
     [
-        ("", ()),
-        ("  ", ()),
+        (None, ()),
         ("1", ("1",)),
         ("3", ("1", "2", "3")),
         ("L", ("L",)),
         ("L,R", ("L", "R")),
-        (" left , right rear ", ("left", "right rear")),
-        ("1,2", ("1", "2")),
-        ("24", tuple(str(number) for number in range(1, 25))),
+        (" left , right2 ", ("left", "right2")),
+        (" 2 ", ("1", "2")),
+        ("8", tuple(str(number) for number in range(1, 9))),
+        ("Ho\u0308he", ("Höhe",)),
+        ("a" * 12, ("a" * 12,)),
     ],
 )
-def test_channels_are_a_number_or_names(text: str, names: tuple[str, ...]) -> None:
+def test_channels_are_a_number_or_names(text: str | None, names: tuple[str, ...]) -> None:
     assert parse_channels(text) == names
 
 
 @pytest.mark.parametrize(
-    "text", ["0", "25", "9" * 400, "L,,R", ",", "L,l", "a" * 13, "L\x1b,R", ",".join(map(str, range(25)))]
+    "text",
+    [
+        "",
+        "  ",
+        "0",
+        "9",
+        "-1",
+        "+2",
+        "2.5",
+        "2,5",
+        "1,2",
+        "1e0",
+        "0x2",
+        "٣",
+        "２",
+        "²",
+        "a²",
+        "L٣",
+        "9" * 400,
+        "L,,R",
+        ",",
+        "L,",
+        "L,l",
+        "a" * 13,
+        "L\x1b,R",
+        "right rear",
+        "../../x",
+        "L/R",
+        "-L",
+        "2L",
+        "L-2",
+        "L.R",
+        "\ud800",
+        ",".join("abcdefghi"),
+    ],
 )
 def test_other_channels_are_refused_with_what_is_wanted(text: str) -> None:
     with pytest.raises(EntryError, match="--channels got") as caught:
         parse_channels(text)
-    assert "such as L,R" in str(caught.value)
+    assert "a whole number from 1 to 8, or names with commas between, such as L,R" in str(caught.value)
+    assert "letters and digits, first a letter" in str(caught.value)
+    str(caught.value).encode("utf-8")
     assert len(str(caught.value)) < 300
 
 

@@ -170,8 +170,8 @@ class WalkScreen(BenchScreen):
         row.add_column(justify="right", no_wrap=True, overflow="crop")
         left = Text.assemble(
             (safe(view.design), f"bold {STRONG}"),
-            (f"  unit {safe(view.unit)}", INK),
             (f"  channel {safe(view.channel)}" if view.channel else "", f"bold {INK}"),
+            (f"  unit {safe(view.unit)}", INK),
             (f"  {safe(view.operator)}", QUIET),
         )
         over = view.elapsed_s is not None and view.target_time_s is not None and view.elapsed_s > view.target_time_s
@@ -179,6 +179,7 @@ class WalkScreen(BenchScreen):
         if view.elapsed_s is not None and self.app.size.width < ROOMY[0]:
             kept = f"{view.kept} kept"
         right = Text.assemble(
+            "  ",
             (channel_time(view.elapsed_s, view.target_time_s), f"bold {CARE}" if over else INK),
             ("rehearsal  " if view.kind == "rehearsal" else "", f"bold {CARE}"),
             (kept, QUIET),

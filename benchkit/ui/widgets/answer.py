@@ -289,7 +289,8 @@ class Answer(Vertical):
             self._choices.display = False
             self._hint.display = True
             self._hint.set_class(False, "refused")
-            self._hint.say(f"{choice.label}: why? Type the reason, Enter keeps it, Esc goes back.")
+            what = f"type {choice.wanted}" if choice.wanted else "why? Type the reason"
+            self._hint.say(f"{choice.label}: {what}, Enter keeps it, Esc goes back.")
             self._focus()
             return
         self._give(Reply(choice=choice.value))
@@ -308,7 +309,9 @@ class Answer(Vertical):
             if text:
                 self._give(Reply(choice=self._reason_for.value, text=text))
             else:
-                self._complain("A reason is needed; Esc goes back.", message.value)
+                wanted = self._reason_for.wanted
+                needed = f"What is needed is {wanted}" if wanted else "A reason is needed"
+                self._complain(f"{needed}; Esc goes back.", message.value)
             return
         reply = typed_reply(question, text)
         if isinstance(reply, str):

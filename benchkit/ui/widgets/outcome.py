@@ -94,7 +94,7 @@ def marks_of(result: ResultView) -> tuple[str, ...]:
     if result.odd:
         marks.append("odd for this unit")
     if result.from_before:
-        marks.append("from before the walk was cut off")
+        marks.append("from before the cut or the repair")
     if result.overridden:
         marks.append(f"went on although: {safe(result.overridden)}")
     return tuple(marks)

@@ -1,0 +1,75 @@
+"""A reading that falls away at once: a wiper that has opened, or a probe that has slipped."""
+
+from __future__ import annotations
+
+from typing import Final
+
+from benchkit.judge.advice import Mood
+from benchkit.judge.screw import Scale
+from benchkit.judge.trust import SLIPPED
+
+FELL_TO: Final = 0.35
+"""A reading that falls at once below this share of itself, without having been told to, has fallen away."""
+
+SEEN_NOISES: Final = 10.0
+"""A reading that is less than so many times its scatter can't be seen to fall away."""
+
+CURRENT_SHARE: Final = 0.05
+"""Below this share of the target the supply's current doesn't tell whether the bias has gone."""
+
+CURRENT_FELL_TO: Final = 0.9
+"""The supply's current has fallen with it when it is below this share of itself."""
+
+LEAST_TURNS: Final = 0.03
+"""Less than this is no move of a screw."""
+
+_FELL: Final = "the reading fell at once to about least bias while turning"
+
+
+class Falls:
+    """Tells a fall from a move.
+
+    Parameters
+    ----------
+    scale : Scale
+    """
+
+    def __init__(self, scale: Scale) -> None:
+        self._scale = scale
+
+    def away(self, before: float, value: float, turned: float, slope: float | None, noise: float) -> bool:
+        """Whether a reading has fallen away, by far more than a move of so many turns does.
+
+        Parameters
+        ----------
+        before, value : float
+        turned : float
+            Positive for more bias.
+        slope : float or None
+            Change of what follows the screw evenly, for each turn.
+        noise : float
+        """
+        scale = self._scale
+        seen = max(SEEN_NOISES * noise, 3.0 * scale.floor if scale.standing else 0.0)
+        if before - scale.standing <= seen or value - scale.standing > FELL_TO * (before - scale.standing):
+            return False
+        if turned >= -LEAST_TURNS or slope is None:
+            return turned >= -LEAST_TURNS
+        return scale.even(value) - scale.even(before) < 3.0 * turned * slope
+
+    def current_tells(self, before: float) -> bool:
+        """Whether there was so much bias that the supply's current tells when it goes."""
+        return self._scale.over(before) >= CURRENT_SHARE * (self._scale.target - self._scale.standing)
+
+    def with_current(self, before: float, before_a: float, now_a: float) -> bool:
+        """Whether the supply's current says that the bias has gone."""
+        return now_a < CURRENT_FELL_TO * before_a and self.current_tells(before)
+
+
+def fall_words(before_a: float | None, now_a: float | None) -> tuple[Mood, str]:
+    """Say what a fall means, by the supply's current before and since; None where that is not known."""
+    if now_a is None or before_a is None:
+        return "no response", f"{_FELL}: is the probe on the point? Then the wiper has opened"
+    if now_a < CURRENT_FELL_TO * before_a:
+        return "no response", f"{_FELL}, and the supply's current with it: the wiper has opened"
+    return "gone", SLIPPED
