@@ -217,6 +217,9 @@ class Adviser:
             return self._say("gone", f"the reading is gone ({why}): put the probe back on the point", None, calm=False)
         self._resumed |= self._trust.resumed
         calm = self._stillness.add(t_s, value, self._noise)
+        fresh_a = rail[1] if rail is not None and rail[0] >= t_s - self._stillness.calm_s - 1e-9 else None
+        if calm and self._trust.was_wrong(value, self._noise, fresh_a, self._kept):
+            self._calm, self._rail_a, self._fell, self._resumed, doubt = None, None, None, False, ""
         if self._fell is not None and value < 1.5 * self._fell[1] + 6.0 * self._noise and doubt != SWAPPED:
             return self._fallen(rail, calm=calm)
         if doubt:
@@ -227,7 +230,6 @@ class Adviser:
             self._fell, self._resumed = None, True
         if self._resumed and not calm:
             return self._say("gone", UNSTEADY, None, calm=False)
-        fresh_a = rail[1] if rail is not None and rail[0] >= t_s - self._stillness.calm_s - 1e-9 else None
         if calm and self._trust.contradicts(value, self._noise, self._kept, fresh_a):
             return self._say("gone", SLIPPED, None, calm=False)
         moved_s = self._moved_s

@@ -208,19 +208,35 @@ class Trust:
         """Whether the supply's current agrees with a reading; None where it can't tell."""
         if rail_a is None:
             return None
-        line, found = self._line, list[bool]()
-        if line is not None and line.per_unit > 0.0:
-            whole = line.per_unit * abs(self._scale.target)
-            if STANDING_KNOWN * line.standing_a <= AGREES_WITHIN * whole:
-                bias = line.per_unit * max(value, 0.0)
-                room = max(
-                    AGREES_WITHIN * bias, STANDING_KNOWN * line.standing_a, LEAST_KNOWN * whole,
-                    3.0 * noise * line.per_unit,
-                )  # fmt: skip
-                found.append(abs(rail_a - line.standing_a - bias) <= room)
+        by_line = self._by_line(value, noise, rail_a)
+        found = [] if by_line is None else [by_line]
         if kept is not None and kept.rail_a is not None:
             found += self._since_kept(value, rail_a, kept, kept.rail_a)
         return any(found) if found else None
+
+    def _by_line(self, value: float, noise: float, rail_a: float) -> bool | None:
+        """Hold the current against the model's line; None where the standing current hides the bias."""
+        line = self._line
+        if line is None:
+            return None
+        whole = line.per_unit * abs(self._scale.target)
+        if STANDING_KNOWN * line.standing_a > AGREES_WITHIN * whole:
+            return None
+        bias = line.per_unit * max(value, 0.0)
+        room = max(AGREES_WITHIN * bias, STANDING_KNOWN * line.standing_a, LEAST_KNOWN * whole)
+        return abs(rail_a - line.standing_a - bias) <= max(room, 3.0 * noise * line.per_unit)
+
+    def was_wrong(self, value: float, noise: float, rail_a: float | None, kept: Kept | None) -> bool:
+        """Whether it was the last trusted reading that was of another point, by the current: believe this one.
+
+        So it is when the first readings are still of the point before.
+        """
+        if kept is None or kept.rail_a is None or rail_a is None:
+            return False
+        if self._by_line(kept.value, noise, kept.rail_a) is not False or not self._by_line(value, noise, rail_a):
+            return False
+        self._doubted = False
+        return True
 
     def _since_kept(self, value: float, rail_a: float, kept: Kept, before_a: float) -> list[bool]:
         """Hold the current's change against the reading's."""

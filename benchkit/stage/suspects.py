@@ -35,6 +35,7 @@ from benchkit.stage.faults import HEALTHY, faults_of, prior_of
 from benchkit.stage.fitting import Data
 from benchkit.stage.forcing import Taken, held_at_readings
 from benchkit.stage.hypotheses import Library, library
+from benchkit.stage.latent import Coordinates
 from benchkit.stage.observations import Conditions, Observation
 from benchkit.stage.points import points_of
 from benchkit.stage.readouts import Matrix
@@ -48,6 +49,11 @@ __all__ = [
 
 HELD_TOGETHER = 32
 """So many units with held rails are worked out as one batch: each has its own solutions of every hypothesis."""
+MOST_NUMBERS = 1e7
+"""Slopes of a batch's readings, one for each hypothesis and coordinate, are kept to about so many numbers: units that
+are too many for it are worked out some at a time."""
+PURSUED_SHARE = 4
+"""Units without held rails pursue a part of the hypotheses, at most one in so many but for a few units."""
 
 
 def suspect(
@@ -93,7 +99,8 @@ def suspect_many(
         groups.setdefault(tuple(keys), []).append(number)
     for readings, everyone in groups.items():
         # what is held is solved for each unit: a part of them at a time
-        most = HELD_TOGETHER if held[everyone[0]].original else len(everyone)
+        fitting = _together(design, len(readings))
+        most = min(HELD_TOGETHER, fitting) if held[everyone[0]].original else PURSUED_SHARE * fitting
         for low in range(0, len(everyone), most):
             members = everyone[low : low + most]
             began = time.perf_counter()
@@ -102,6 +109,12 @@ def suspect_many(
             for number, answer in zip(members, answers, strict=True):
                 found[number] = replace(answer, seconds=each)
     return [one for one in found if one is not None]
+
+
+def _together(design: Design, readings: int) -> int:
+    """How many units with so many readings are worked out as one batch."""
+    each = (1 + len(faults_of(design))) * max(1, readings) * len(Coordinates(design, ()))
+    return max(1, int(MOST_NUMBERS / each))
 
 
 def _group(

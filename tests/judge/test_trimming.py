@@ -519,3 +519,15 @@ def test_what_proves_that_a_reading_is_of_the_point(change: Callable[[Bench], An
     change(bench)
     bench.look(2.0)
     assert bench.adviser.proven(bench.value, bench.rail_a) is expected
+
+
+@pytest.mark.parametrize("first", [0.0138, 0.030])
+def test_first_readings_of_the_point_before_are_forgotten_when_the_current_says_so(first: float) -> None:
+    """The offset stood there until the probe came; least bias is what the supply carries all the time."""
+    bench = Bench(value=first, rail_a=rail_at(2e-6), adviser=adviser(line=LINE))
+    bench.look(2.0)
+    bench.value = 2e-6
+    advice = bench.look(3.0)
+    assert advice.mood == "turn"
+    assert advice.turns is not None
+    assert advice.turns > 0.0
