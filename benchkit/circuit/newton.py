@@ -33,12 +33,20 @@ import numpy as np
 from numpy.typing import NDArray
 
 from benchkit.circuit.devices import Array, Mask
-from benchkit.circuit.elimination import Factors, Index, Order, Structure, choose_order, linear_residual, solve_dense
+from benchkit.circuit.elimination import (
+    LINEAR_TOLERANCE,
+    Factors,
+    Index,
+    Order,
+    Structure,
+    choose_order,
+    linear_residual,
+    solve_dense,
+)
 from benchkit.circuit.equations import Arguments, Batch, Linearised
 
 MOST_ITERATIONS = 40
 MOST_ORDERS = 6
-LINEAR_TOLERANCE = 1e-9
 CURRENT_TOLERANCE = 1e-7
 CURRENT_FLOOR_A = 10e-12
 CONDITION_TOLERANCE_V = 1e-9

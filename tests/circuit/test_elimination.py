@@ -1,6 +1,6 @@
 import numpy as np
 import pytest
-from hypothesis import given, settings
+from hypothesis import example, given, settings
 from hypothesis import strategies as st
 
 from benchkit.circuit.elimination import Factors, Structure, choose_order, linear_residual, solve_dense
@@ -23,6 +23,7 @@ def full(structure: Structure, values: np.ndarray, unit: int) -> np.ndarray:
 
 
 @given(size=st.integers(1, 14), seed=st.integers(0, 10**6))
+@example(size=11, seed=215)
 @settings(max_examples=60, deadline=None)
 def test_the_solver_satisfies_the_equations_of_every_unit(size: int, seed: int) -> None:
     structure, values, right = random_system(size, 40, seed)
