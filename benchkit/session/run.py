@@ -299,7 +299,7 @@ class Session:
                     self.moment.message = push.text
                 elif isinstance(push, Asked) and not self.state.stopped:
                     self._off_asked = False  # the walk kept its place, because the supply was off anyway
-                fresh = got or fresh
+                fresh = _newer(fresh, got)
                 continue
             if push.seq is None:
                 self.moment.message = f"{push.event.name} could not be kept: {push.problem}"
@@ -314,7 +314,7 @@ class Session:
                 self.moment.message = push.event.text
             self.state, actions = self.job.walk.handle(self.state, push.event, self.clock.now())
             self.seq = push.seq
-            fresh = actions or fresh
+            fresh = _newer(fresh, actions)
         return fresh
 
     def _death(self, error: InstrumentError) -> KeeperDied:
@@ -397,3 +397,10 @@ class Session:
         """Change what moves on the screen."""
         self.moment = replace(self.moment, **changes)
         self.show()
+
+
+def _newer(before: tuple[Action, ...], after: tuple[Action, ...]) -> tuple[Action, ...]:
+    """Join what two events ask for: of what is carried out the later, of what is asked aside both."""
+    if not after:
+        return before
+    return (*(action for action in before if action.aside), *after)

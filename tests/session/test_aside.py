@@ -17,7 +17,7 @@ from benchkit.session import this_unit
 from benchkit.session.aside import Aside
 from benchkit.session.front import Reply
 from tests.procedure.driver import narrowed, suspected
-from tests.session.fakes import Run, on, quick_predictions
+from tests.session.fakes import Run, hang_at, on, quick_predictions
 
 CURRENT = "power.current.rail+.current"
 OUTPUT = "power.output-first.output"
@@ -319,3 +319,15 @@ def test_hanging_questions_and_answers_do_not_mix(slow_suspects: Slow) -> None:
     assert closed.verdict == "pass"
     assert [len(action.known) for action in slow_suspects.asked] == [3, 3]
     assert run.names().count("suspected") == 1, "the first answer was superseded by the better reading"
+
+
+def test_after_a_trip_the_model_is_asked_although_the_supply_goes_off_in_the_same_breath() -> None:
+    """Trip and off come together; what the trip asks aside isn't lost to what the off asks for."""
+    run = Run()
+    run.front.answer = hang_at("bias.trim.emitter.upper.1", run.keeper.trip)
+    closed = run.go()
+    assert closed.stopped == "tripped: rail+ in its limit"
+    names = run.names()
+    assert "suspected" in names[names.index("tripped") :]
+    assert not run.session.state.suspecting
+    assert not any(view.suspects is not None and view.suspects.working for view in run.front.views[-1:])
