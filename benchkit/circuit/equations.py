@@ -170,9 +170,12 @@ class Batch(Saturating):
         self.junctions = devices.junctions_at_temperature(parameters)
         self.critical_e = devices.critical_voltage(self.junctions.is_a, self.junctions.inv_nf_vt)
         self.critical_c = devices.critical_voltage(self.junctions.is_a, self.junctions.inv_nr_vt)
-        self.fixed = np.zeros((plan.structure.slots, units))
-        for slot, resistor, value in plan.fixed_terms:
-            self.fixed[slot] += value if resistor < 0 else value * self.conductance[resistor]
+        if units == 1:
+            self.fixed = plan.always[:, None] + plan.by_resistor @ self.conductance
+        else:
+            self.fixed = np.zeros((plan.structure.slots, units))
+            for slot, resistor, value in plan.fixed_terms:
+                self.fixed[slot] += value if resistor < 0 else value * self.conductance[resistor]
 
     def take(self, index: Index | Mask | slice) -> Batch:
         """Return the batch of some of the units."""
@@ -297,13 +300,16 @@ class Batch(Saturating):
 
     def matrix(self, linearised: Linearised, shunt: Array | None) -> Array:
         """Return the derivatives' slots, shape (slots, units); ``shunt`` [S] per unit from each node."""
-        values = self.fixed.copy()
-        slots, slopes = list(values), list(linearised.slopes)
-        for slot, which, minus in self.plan.slope_terms:
-            if minus:
-                slots[slot] -= slopes[which]
-            else:
-                slots[slot] += slopes[which]
+        if self.units == 1:
+            values = self.fixed + self.plan.into_slots @ linearised.slopes
+        else:
+            values = self.fixed.copy()
+            slots, slopes = list(values), list(linearised.slopes)
+            for slot, which, minus in self.plan.slope_terms:
+                if minus:
+                    slots[slot] -= slopes[which]
+                else:
+                    slots[slot] += slopes[which]
         if shunt is not None:
             values[self.plan.diagonal] += shunt
         return values

@@ -148,6 +148,26 @@ class Plan:
         self.fixed_terms = [(slot[i, j], which, value) for i, j, which, value in inside]
         self.slope_terms = [(slot[i, j], which, minus) for i, j, which, minus in moving]
         self.diagonal: Index = np.array([slot[n, n] for n in range(self.nodes)], dtype=np.intp)
+        self._lay_out_matrices()
+
+    def _lay_out_matrices(self) -> None:
+        """Write the same lists as matrices, by which one unit alone is served quicker than term by term."""
+        self.into_rows = np.zeros((self.size, self.branches))
+        for row, branch, minus in self.current_terms:
+            self.into_rows[row, branch] += -1.0 if minus else 1.0
+        self.touches_rows = np.zeros((self.size, self.branches))
+        for row, branch, _ in self.current_terms:
+            self.touches_rows[row, branch] += 1.0
+        self.into_slots = np.zeros((self.structure.slots, self.slopes))
+        for slot, which, minus in self.slope_terms:
+            self.into_slots[slot, which] += -1.0 if minus else 1.0
+        self.always = np.zeros(self.structure.slots)
+        self.by_resistor = np.zeros((self.structure.slots, len(self.ra)))
+        for slot, resistor, value in self.fixed_terms:
+            if resistor < 0:
+                self.always[slot] += value
+            else:
+                self.by_resistor[slot, resistor] += value
 
     def _flow(self, branch: int, a: int, b: int) -> None:
         if a < self.size:
@@ -196,13 +216,16 @@ class Plan:
         """
         if magnitudes:
             currents = np.abs(currents)
-        result = np.zeros((self.size, currents.shape[1]))
-        rows, branches = list(result), list(currents)
-        for row, branch, minus in self.current_terms:
-            if minus and not magnitudes:
-                rows[row] -= branches[branch]
-            else:
-                rows[row] += branches[branch]
+        if currents.shape[1] == 1:
+            result = (self.touches_rows if magnitudes else self.into_rows) @ currents
+        else:
+            result = np.zeros((self.size, currents.shape[1]))
+            rows, branches = list(result), list(currents)
+            for row, branch, minus in self.current_terms:
+                if minus and not magnitudes:
+                    rows[row] -= branches[branch]
+                else:
+                    rows[row] += branches[branch]
         if magnitudes:
             x, volts = np.abs(x), np.abs(volts)
         result[: self.nodes] += NODE_GMIN_S * x[: self.nodes]

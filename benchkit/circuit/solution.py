@@ -193,6 +193,36 @@ class Solution:
         vce = polarity * self.between(e.collector, e.emitter)
         return Operating(g.ic, g.ib, g.ic + g.ib, vbe, vce, vce * g.ic + vbe * g.ib)
 
+    def powers_w(self) -> dict[str, Array]:
+        """What heats each transistor [W], by name, shape (units,); those of `transistor`, worked out together."""
+        plan, names = self.plan, [t.name for t in self.plan.transistors]
+        if not names:
+            return {}
+
+        def stack(key: str) -> Array:
+            rows = [self.values[f"{name}.{key}"] for name in names]
+            wide = max(map(len, rows))
+            return np.array([row if len(row) == wide else np.broadcast_to(row, wide) for row in rows])
+
+        def across(upper: list[str], lower: list[str]) -> Array:
+            rows = [[plan.index[name] for name in column] for column in (upper, lower)]
+            return np.asarray(polarity * (full[rows[0]] - full[rows[1]]))
+
+        parameters = {key: stack(key) for key in TRANSISTOR_DEFAULTS}
+        polarity = parameters["polarity"]
+        full = np.concatenate([self.x, np.zeros((1, self.units))])
+        base = full[plan.tb]
+        with np.errstate(all="ignore"):
+            g = devices.gummel_poon(
+                polarity * (base - full[plan.te]),
+                polarity * (base - full[plan.tc]),
+                devices.junctions_at_temperature(parameters),
+            )
+        bases, emitters = [t.base for t in plan.transistors], [t.emitter for t in plan.transistors]
+        collectors = [t.collector for t in plan.transistors]
+        powers = across(collectors, emitters) * g.ic + across(bases, emitters) * g.ib
+        return dict(zip(names, powers, strict=True))
+
     def _element(self, name: str) -> Element:
         try:
             return self.netlist.elements[name]

@@ -12,6 +12,7 @@ Rules
 from __future__ import annotations
 
 import difflib
+import math
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any, Literal
@@ -92,6 +93,12 @@ class Compiled:
                 self.keys.update({f"{element.name}.{k}": v for k, v in TRANSISTOR_DEFAULTS.items()})
             else:
                 self.keys.update(dict.fromkeys(element.name + key for key in _KEYS[type(element)]))
+        self._defaults = {key: None if v is None else np.array([v]) for key, v in self.keys.items()}
+        for default in self._defaults.values():
+            if default is not None:
+                default.flags.writeable = False  # every solution of this circuit holds the same ones
+        self._supplies = [e.name for e in self.netlist.elements.values() if isinstance(e, Supply)]
+        self._transistors = [e.name for e in self.netlist.elements.values() if isinstance(e, Transistor)]
         self._plans: dict[Signature, Plan] = {}
 
     def solve(
@@ -206,20 +213,21 @@ class Compiled:
                 near = difflib.get_close_matches(key, self.keys, 1)
                 raise ModelError(f"the circuit has no value {key!r}", near[0] if near else "a name of its elements")
             array = np.asarray(value, dtype=np.float64).reshape(-1)
-            if len(array) not in (1, units):
-                raise ModelError(f"{key} has {len(array)} values", f"one, or one for each of the {units} units")
-            if np.isnan(array).any():
+            many = len(array)
+            if many not in (1, units):
+                raise ModelError(f"{key} has {many} values", f"one, or one for each of the {units} units")
+            if math.isnan(array.item()) if many == 1 else np.isnan(array).any():
                 raise ModelError(f"{key} is not a number in {int(np.isnan(array).sum())} units", "a number")
             result[key] = array
-        for element in self.netlist.elements.values():
-            limit = result.get(f"{element.name}.limit_a")
-            if isinstance(element, Supply) and limit is not None and not (limit > 0.0).all():
-                raise ModelError(f"{element.name}.limit_a is {float(limit.min())!r} A", "a current above 0 A")
-        for key, default in self.keys.items():
+        for name in self._supplies:
+            limit = result.get(f"{name}.limit_a")
+            if limit is not None and not (limit > 0.0).all():
+                raise ModelError(f"{name}.limit_a is {float(limit.min())!r} A", "a current above 0 A")
+        for key, default in self._defaults.items():
             if key not in result:
                 if default is None:
                     raise ModelError(f"the circuit's value {key!r} is missing", "a value for every element")
-                result[key] = np.array([default])
+                result[key] = default
         return result
 
     def _plan(self, values: Mapping[str, Array]) -> Plan:
@@ -227,7 +235,7 @@ class Compiled:
             collector, base, emitter = (bool((values[f"{name}.{key}"] > 0.0).any()) for key in ("RC", "RB", "RE"))
             return collector, base, emitter
 
-        signature = tuple(made(e.name) for e in self.netlist.elements.values() if isinstance(e, Transistor))
+        signature = tuple(made(name) for name in self._transistors)
         if signature not in self._plans:
             self._plans[signature] = Plan(self.netlist, signature)
         return self._plans[signature]

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
-from typing import Literal
+from typing import Literal, NoReturn
 
 from benchkit.errors import EntryError
 from benchkit.quantities import parse, show
@@ -52,10 +52,12 @@ class Condition:
     fuse_ohm: float | None = None
 
     def __post_init__(self) -> None:
-        _require(0.0 <= self.positive_v <= 1000.0, "positive", show(self.positive_v, "V"), "0 V to 1 kV")
-        _require(-1000.0 <= self.negative_v <= 0.0, "negative", show(self.negative_v, "V"), "-1 kV to 0 V")
-        if self.limit_a is not None:
-            _require(0.0 < self.limit_a < math.inf, "limit", show(self.limit_a, "A"), "a current above zero")
+        if not 0.0 <= self.positive_v <= 1000.0:
+            _refuse("positive", show(self.positive_v, "V"), "0 V to 1 kV")
+        if not -1000.0 <= self.negative_v <= 0.0:
+            _refuse("negative", show(self.negative_v, "V"), "-1 kV to 0 V")
+        if self.limit_a is not None and not 0.0 < self.limit_a < math.inf:
+            _refuse("limit", show(self.limit_a, "A"), "a current above zero")
         _check_trimmer(self.trimmer)
         _require(
             0.0 < self.target_share <= 10.0, "target share", f"{self.target_share:g}", "a number above 0, at most 10"
@@ -122,4 +124,8 @@ def _check_trimmer(trimmer: object) -> None:
 
 def _require(good: bool, name: str, came: str, expected: str) -> None:
     if not good:
-        raise EntryError(f"{name}: {came} came", expected)
+        _refuse(name, came, expected)
+
+
+def _refuse(name: str, came: str, expected: str) -> NoReturn:
+    raise EntryError(f"{name}: {came} came", expected)

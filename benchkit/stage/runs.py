@@ -278,8 +278,9 @@ class Run:
     def _powers_w(self, solution: Solution) -> dict[str, Array]:
         # A unit without a solution may stand at voltages that no number holds; its powers are shown as too hot.
         with np.errstate(all="ignore"):
-            powers_w = {part.name: solution.transistor(part.name).power_w for part in self.transistors}
-        return {name: np.nan_to_num(power, nan=1e6, posinf=1e6, neginf=1e6) for name, power in powers_w.items()}
+            found = solution.powers_w()
+        rows = np.nan_to_num(np.array([found[part.name] for part in self.transistors]), nan=1e6, posinf=1e6, neginf=1e6)
+        return dict(zip((part.name for part in self.transistors), rows, strict=True))
 
     def _state(self, solution: Solution, temperature: dict[str, Array], converged: Mask, travel: Array) -> State:
         return State(

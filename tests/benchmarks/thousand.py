@@ -2,8 +2,9 @@
 
 Run as ``python -m tests.benchmarks.thousand [--units 1000] [--seed 1] [--part 1/1] [--sockets 0] [--json FILE]``.
 
-Units are drawn in turn over the procedures and over the designs that a flawless unit can pass with (the others are
-named, with the reason: `tests.benchmarks.first_power_harm.why_not`).  One in `FAULTY_ONE_IN` has a fault of its
+Units are drawn in turn over the procedures and over all designs.  Some designs no flawless unit can pass with, in one
+procedure or in all: an open wiper that raises the bias, say, which the first power-on refuses.  Their units are walked
+too, and counted apart (`tests.benchmarks.first_power_harm.why_not`).  One in `FAULTY_ONE_IN` has a fault of its
 design's table, each row as likely as the next.  All go through the walk in memory and in lock step
 (`tests.benchmarks.first_power_bench` says what that shares and leaves out).
 
@@ -88,6 +89,8 @@ class Told:
     Parameters
     ----------
     drawn : Drawn
+    refused : str
+        Why no unit of its design can pass this procedure ("": one can).
     verdict, stopped, noticed : str
         Of the last walk; where the first one noticed something.
     burnt : list of str
@@ -117,6 +120,7 @@ class Told:
     """
 
     drawn: Drawn
+    refused: str = ""
     verdict: str = ""
     stopped: str = ""
     noticed: str = ""
@@ -153,8 +157,8 @@ class Told:
 
     @property
     def wrong_fail(self) -> bool:
-        """A healthy unit that was stopped or failed."""
-        return not self.drawn.plant and (bool(self.stopped) or self.verdict == "fail")
+        """A healthy unit that was stopped or failed, and whose design can pass."""
+        return not self.drawn.plant and not self.refused and (bool(self.stopped) or self.verdict == "fail")
 
 
 def drawn(count: int, seed: int, known: dict[str, Design], which: int = 1, parts: int = 1) -> Iterator[Drawn]:
@@ -177,7 +181,7 @@ def drawn(count: int, seed: int, known: dict[str, Design], which: int = 1, parts
 def walk_through(one: Drawn, design: Design, harm: Harm | None = None, **more: Any) -> Told:
     """Send a unit through its procedure, repair it where that is what a shop does, and look again an hour later."""
     began_s = time.monotonic()
-    told = Told(drawn=one)
+    told = Told(drawn=one, refused=why_not(design, one.procedure))
     outcome = walk_once(
         design,
         one.seed,
@@ -269,7 +273,7 @@ def table(found: list[Told]) -> str:
         lines.append(f"{name:24s}{cells[0]:>9s}" + "".join(f"{one:>17s}" for one in cells[1:]))
 
     def healthy(column: list[Told]) -> list[Told]:
-        return [told for told in column if not told.drawn.plant]
+        return [told for told in column if not told.drawn.plant and not told.refused]
 
     def asked(column: list[Told]) -> list[Told]:
         return [told for told in column if told.place is not None]
@@ -291,7 +295,14 @@ def table(found: list[Told]) -> str:
     count("harmless fault passed", lambda told: told.passed and told.faulty and not told.wrong_pass)
     row("wrong fails", lambda column: f"{sum(told.wrong_fail for told in column)} of {len(healthy(column))}")
     count(
-        "  healthy, undecided", lambda told: not told.drawn.plant and told.verdict == "undecided" and not told.stopped
+        "  healthy, undecided",
+        lambda told: not told.drawn.plant and not told.refused and told.verdict == "undecided" and not told.stopped,
+    )
+    row(
+        "of refused designs",
+        lambda column: "{} of {}".format(
+            sum(not told.passed for told in column if told.refused), sum(bool(told.refused) for told in column)
+        ),
     )
     row("suspects asked, faulty", lambda column: len(asked(column)))
     count("  planted fault first", lambda told: told.place == 1)
@@ -338,6 +349,7 @@ def line(told: Told) -> str:
     marks = [name for name, so in (("WRONG PASS", told.wrong_pass), ("WRONG FAIL", told.wrong_fail)) if so]
     marks += [f"burnt {', '.join(told.burnt)}"] if told.burnt else []
     marks += ["repaired"] if told.repaired else []
+    marks += [f"refused design: {told.refused}"] if told.refused else []
     later = "" if told.off_share is None else f", {told.off_share:+.1%} an hour later"
     place = "" if told.place is None else f", suspect {told.place or 'not named'}"
     stopped = f" (stopped: {told.stopped[:60]})" if told.stopped else ""
@@ -371,13 +383,12 @@ def main() -> None:
     if arguments.join:
         print(table([read_row(row) for path in arguments.join for row in path.read_text("utf-8").splitlines()]))
         return
-    known = {}
-    for name, design in designs().items():
-        reason = why_not(design)
-        if reason:
-            print(f"left out: {name}: {reason}, which no unit of it can help")
-        else:
-            known[name] = design
+    known = designs()
+    for name, design in known.items():
+        for procedure in PROCEDURES:
+            reason = why_not(design, procedure)
+            if reason:
+                print(f"refused by {procedure}: {name}: {reason}")
     share_the_model(narrowing=not arguments.quick, suspects=not arguments.quick)
     # The same numbers are put into words again and again for pictures that nobody looks at.
     quantities.show = functools.lru_cache(maxsize=1 << 16)(quantities.show)
