@@ -10,7 +10,7 @@ import math
 from collections.abc import Callable
 from dataclasses import dataclass
 
-from benchkit.keeper.protocol import HEARTBEAT_LIMIT_S
+from benchkit.keeper.protocol import HEARTBEAT_LIMIT_S, IDLE_HEARTBEAT_LIMIT_S
 
 SLEEP_JUMP_S = 1.0
 """A suspension longer than this is one, s."""
@@ -63,6 +63,7 @@ class Screen:
         self._slept_s = slept_s()
         self._beat_s = now_s
         self._looked_s = now_s
+        self._was_on = True
 
     def beat(self, now_s: float) -> None:
         """Note a heartbeat, at the time at which it was read."""
@@ -82,8 +83,12 @@ class Screen:
         now_s : float
             The steady clock, s.
         output_on : bool
-            Whether the supply should be on: then a suspension or a standstill counts, armed or not.
+            Whether the supply should be on: then a suspension or a standstill counts, armed or not, and heartbeats may
+            not be late.  Who has it switched on is there: heartbeats count from then.
         """
+        if output_on and not self._was_on:
+            self._beat_s = max(self._beat_s, now_s)
+        self._was_on = output_on
         stood_s, self._looked_s = now_s - self._looked_s, now_s
         if self._first_parent is not None and self._parent() != self._first_parent:
             return Loss(who="the screen", problem="its process is gone", leaving=True)
@@ -96,7 +101,8 @@ class Screen:
         if output_on and stood_s > STANDSTILL_S:
             self._beat_s = now_s
             return Loss(who="the keeper", problem=f"the keeper stood still for {stood_s:.1f} s and watched nothing")
-        if self.armed and now_s - self._beat_s > HEARTBEAT_LIMIT_S:
+        limit_s = HEARTBEAT_LIMIT_S if output_on else IDLE_HEARTBEAT_LIMIT_S
+        if self.armed and now_s - self._beat_s > limit_s:
             return Loss(who="the screen", problem=f"no heartbeat for {now_s - self._beat_s:.1f} s", leaving=True)
         return None
 

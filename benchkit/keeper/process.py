@@ -10,8 +10,9 @@ What switches the supply off
 ----------------------------
 * the screen asks for it (``off``);
 * the end of the screen's pipe, a parent that is gone, a signal, ``close``;
-* no heartbeat for `HEARTBEAT_LIMIT_S` once armed.  A heartbeat counts from when it was *read*, by a thread that does
-  nothing else, so that a keeper that was busy doesn't blame the screen;
+* no heartbeat for `HEARTBEAT_LIMIT_S` once armed, `IDLE_HEARTBEAT_LIMIT_S` while the supply is known to be off.  A
+  heartbeat counts from when it was *read*, by a thread that does nothing else, so that a keeper that was busy doesn't
+  blame the screen;
 * a watch that trips, a supply that can't be reached or is silent while it is watched, a meter that is silent while a
   watch depends on it;
 * a computer that was suspended, or a loop that stood still, with the output on;

@@ -27,7 +27,10 @@ if TYPE_CHECKING:
     from benchkit.events import Event
 
 HEARTBEAT_LIMIT_S = 1.0
-"""So long may the armed keeper be without a heartbeat, s."""
+"""So long may the armed keeper be without a heartbeat while the supply may be on, s."""
+
+IDLE_HEARTBEAT_LIMIT_S = 15.0
+"""So long while the supply is known to be off: then a machine that has far too much to do is only slow, s."""
 
 
 @dataclass(frozen=True, kw_only=True)

@@ -14,7 +14,7 @@ from benchkit.keeper.minding import (
     Loss,
     Screen,
 )
-from benchkit.keeper.protocol import HEARTBEAT_LIMIT_S
+from benchkit.keeper.protocol import HEARTBEAT_LIMIT_S, IDLE_HEARTBEAT_LIMIT_S
 
 
 class Computer:
@@ -39,13 +39,33 @@ def test_all_is_well() -> None:
 
 def test_heartbeats_count_only_once_armed() -> None:
     computer = Computer()
-    assert computer.look(50.0) is None
+    on = computer.screen.look
+    assert on(50.0, output_on=False) is None
     computer.screen.arm(50.0, on=True)
-    assert computer.look(50.0 + HEARTBEAT_LIMIT_S) is None
-    lost = computer.look(50.1 + HEARTBEAT_LIMIT_S)
+    assert on(50.0, output_on=True) is None
+    assert on(50.0 + HEARTBEAT_LIMIT_S, output_on=True) is None
+    lost = on(50.1 + HEARTBEAT_LIMIT_S, output_on=True)
     assert lost == Loss(who="the screen", problem="no heartbeat for 1.1 s", leaving=True)
     computer.screen.arm(60.0, on=False)
     assert computer.look(90.0) is None
+
+
+def test_while_the_supply_is_off_heartbeats_may_be_late_for_longer() -> None:
+    computer = Computer()
+    computer.screen.arm(0.0, on=True)
+    assert computer.look(IDLE_HEARTBEAT_LIMIT_S) is None
+    lost = computer.look(0.1 + IDLE_HEARTBEAT_LIMIT_S)
+    assert lost == Loss(who="the screen", problem="no heartbeat for 15.1 s", leaving=True)
+
+
+def test_who_has_it_switched_on_is_there() -> None:
+    """The last heartbeat may be old when the supply goes on: that was asked for, and counts as one."""
+    computer = Computer()
+    computer.screen.arm(0.0, on=True)
+    assert computer.look(5.0) is None
+    assert computer.look(5.1, output_on=True) is None
+    assert computer.look(5.1 + HEARTBEAT_LIMIT_S, output_on=True) is None
+    assert computer.look(5.2 + HEARTBEAT_LIMIT_S, output_on=True) is not None
 
 
 def test_a_parent_that_is_gone() -> None:

@@ -7,6 +7,7 @@ import time
 import numpy as np
 import pytest
 
+from benchkit.measure.saturating import fit_saturating
 from benchkit.measure.settling import Settling, predict
 from tests.benchmarks.settling_study import BAD_HEAT, healthy, planted
 
@@ -41,9 +42,13 @@ def test_known_curves_are_promised_right(slow: float, fast: float, lag_s: float)
 
 
 def test_a_single_exponential_would_have_lied() -> None:
-    """Four minutes into a warm-up that rises and then falls: the readings have hardly turned yet."""
-    times_s = np.arange(1.0, 90.0)
-    found = _look(times_s, _curve(times_s, 0.0200, 3e-3, -13e-3))
+    """A warm-up that rises and then falls: the readings have not turned yet."""
+    times_s = np.arange(1.0, 105.0)
+    values = _curve(times_s, 0.0200, 3e-3, -13e-3)
+    assert values[-1] > values[:-10].max()
+    alone = fit_saturating(times_s - 1.0, values - values[0], (0.01, 0.03))
+    assert values[0] + alone.b1 - 10.0 * alone.u_b1 > 0.0200
+    found = _look(times_s, values)
     assert found.final is not None
     assert found.low is not None
     assert found.verdict == "moving"
