@@ -2,11 +2,12 @@
 
 from __future__ import annotations
 
+from collections import deque
 from typing import Final
 
 from benchkit.judge.advice import Mood
 from benchkit.judge.screw import Scale
-from benchkit.judge.trust import SLIPPED
+from benchkit.judge.trust import CURRENT_FELL_TO, SLIPPED
 
 FELL_TO: Final = 0.35
 """A reading that falls at once below this share of itself, without having been told to, has fallen away."""
@@ -17,11 +18,14 @@ SEEN_NOISES: Final = 10.0
 CURRENT_SHARE: Final = 0.05
 """Below this share of the target the supply's current doesn't tell whether the bias has gone."""
 
-CURRENT_FELL_TO: Final = 0.9
-"""The supply's current has fallen with it when it is below this share of itself."""
-
 LEAST_TURNS: Final = 0.03
 """Less than this is no move of a screw."""
+
+PEAK_S: Final = 0.6
+"""So far back a trusted reading counts as the one that a fall came from (s)."""
+
+PEAK_SHARE: Final = 1.5
+"""What was above this share of the target was no bias on its way up."""
 
 _FELL: Final = "the reading fell at once to about least bias while turning"
 
@@ -36,6 +40,19 @@ class Falls:
 
     def __init__(self, scale: Scale) -> None:
         self._scale = scale
+        self._trusted: deque[tuple[float, float]] = deque()
+
+    def trusted(self, t_s: float, value: float) -> None:
+        """Take note of a reading that is known to be of the point, calm or not."""
+        self._trusted.append((t_s, value))
+        while self._trusted[0][0] < t_s - PEAK_S:
+            self._trusted.popleft()
+
+    @property
+    def peak(self) -> tuple[float, float] | None:
+        """Where the last trusted readings had got to, with the time: a wiper may open on the way up."""
+        peak = max(self._trusted, key=lambda one: one[1], default=None)
+        return None if peak is None or peak[1] > PEAK_SHARE * self._scale.target else peak
 
     def away(self, before: float, value: float, turned: float, slope: float | None, noise: float) -> bool:
         """Whether a reading has fallen away, by far more than a move of so many turns does.

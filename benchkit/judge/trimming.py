@@ -7,7 +7,7 @@ Rules
 * That figure comes from the model first, and from this unit once it has answered a move.  Nobody tells the adviser how
   far a hand has turned, unless in a rehearsal: it takes the advised turns for turned and trusts by half what it learns.
 * As long as this unit has not answered, no advice is more than half of what the model says; none is ever more than
-  `MOST_TURNS`.
+  `benchkit.judge.turning.MOST_TURNS`.
 * A move is seen as such: the reading leaves a stretch in which it was calm and comes to another.  What creeps stays
   calm, and is no answer.
 * "Steady" is only what is near the target, and what it comes to rest at too: within half of the tolerance, and clear of
@@ -23,29 +23,14 @@ from __future__ import annotations
 import math
 from typing import Final
 
-from benchkit import quantities
 from benchkit.judge.advice import Advice, Mood, Source
 from benchkit.judge.answers import Answers, OfSlope
 from benchkit.judge.falls import LEAST_TURNS, Falls, fall_words
-from benchkit.judge.screw import KNEE_V, Scale, amount_words, rounded_down, taken_for
+from benchkit.judge.screw import KNEE_V, Scale, taken_for
 from benchkit.judge.silence import Silence
 from benchkit.judge.stillness import CALM_S, Stillness
-from benchkit.judge.trust import MORE_BIAS, SLIPPED, SWAPPED, UNSTEADY, Kept, RailLine, Trust
-
-MOST_TURNS: Final = 2.0
-"""Never more in one go."""
-
-UNKNOWN_SHARE: Final = 0.5
-"""Of what the model says, as long as this unit has not answered a move."""
-
-BLIND_TURNS: Final = 0.25
-"""The first move where there is no model."""
-
-NEAR: Final = 0.5
-"""Within this share of the tolerance around the target nothing needs to be turned any more."""
-
-LEAST_NEAR: Final = 0.1
-"""The same for a meter that leaves nearly all of the tolerance open: nearer no hand has to come."""
+from benchkit.judge.trust import AGAIN, MORE_BIAS, ROSE, SLIPPED, SWAPPED, UNSTEADY, Kept, RailLine, Trust
+from benchkit.judge.turning import Turning, near
 
 STANDING_SHARE: Final = 0.03
 """How well it is known what a rail draws without bias, as a share of that: feeds have tolerances (our own figure)."""
@@ -107,14 +92,15 @@ class Adviser:
         by_supply: bool = False,
     ) -> None:
         self._target, self._low, self._high = target, low, high
-        self._ways = (more_way, "clockwise" if more_way == "anticlockwise" else "anticlockwise")
         self._track = turns
         self._noise = max(noise, 1e-6 * abs(target))
         floor = max(self._noise, 1e-4 * abs(target - standing), STANDING_SHARE * abs(standing))
         self._scale = Scale(target=target, knee=knee, floor=floor, standing=standing)
-        self._unit, self._answers = unit, answers
+        self._turning = Turning(
+            self._scale, low, high, more_way=more_way, track=turns, settled_share=settled_share, unit=unit
+        )  # fmt: skip
+        self._answers = answers
         self._guard = 0.0
-        self._settled_share = settled_share if 0.2 < settled_share < 5.0 else 1.0
         self._stillness = Stillness(self._scale, (high - low) / 2.0, calm_s)
         place = target if full is None else full
         self._slope = None if slope is None or slope <= 0.0 else slope * self._scale.steepness(place)
@@ -122,7 +108,7 @@ class Adviser:
         self._calm: tuple[float, float] | None = None  # time and value when it was last calm
         self._told = 0.0
         self._known: float | None = None  # turns that are known to have been made and not been answered yet
-        self._silence = Silence(turns, self._amount)
+        self._silence = Silence(turns, self._turning.amount)
         self._trust = Trust(self._scale, track=turns, typed=calm_s == 0.0, by_supply=by_supply, line=line)
         self._resumed = False  # trusted again, and not compared yet with what was before
         self._followed = False
@@ -142,10 +128,8 @@ class Adviser:
 
     def near(self, value: float) -> bool:
         """Whether a reading is so near the target that nothing needs to be turned."""
-        return -self._near(self._target - self._low) <= value - self._target <= self._near(self._high - self._target)
-
-    def _near(self, half: float) -> float:
-        return max(min(NEAR * half, half - self._guard), LEAST_NEAR * half)
+        below, above = (near(half, self._guard) for half in (self._target - self._low, self._high - self._target))
+        return -below <= value - self._target <= above
 
     @property
     def slope_source(self) -> Source:
@@ -204,7 +188,7 @@ class Adviser:
         if running_away:
             return self._say("running away", "it rises by itself, faster and faster: off", None, calm=False)
         if folded:
-            words = f"the supply is in its limit: {self._amount(-0.5)}. The reading says nothing meanwhile"
+            words = f"the supply is in its limit: {self._turning.amount(-0.5)}. The reading says nothing meanwhile"
             return self._say("folded back", words, -0.5, calm=False)
         value = value if value is not None and math.isfinite(value) else None
         if gone and value is not None and self._fell is None and self._current_fell(t_s, value, rail):
@@ -216,6 +200,8 @@ class Adviser:
             why = gone or "overload"
             return self._say("gone", f"the reading is gone ({why}): put the probe back on the point", None, calm=False)
         self._resumed |= self._trust.resumed
+        if (self._trust.resumed or doubt in (ROSE, AGAIN)) and self._fell is None:
+            self._look_back(t_s, value, rail)
         calm = self._stillness.add(t_s, value, self._noise)
         fresh_a = rail[1] if rail is not None and rail[0] >= t_s - self._stillness.calm_s - 1e-9 else None
         if calm and self._trust.was_wrong(value, self._noise, fresh_a, self._kept):
@@ -240,6 +226,7 @@ class Adviser:
         if self._trust.resumed and self._moved_s != moved_s:
             calm = False  # what comes is a new stretch, for whoever follows its trend
         fallen = not calm and self._trust.has_fallen(value, self._noise, self._kept)
+        self._falls.trusted(t_s, value)
         advice = self._judge(t_s, value, rest, calm=calm)
         if (advice.turns or 0.0) > 0.0 and fallen:
             return self._say(advice.mood, "let it come to rest", None, calm=False)
@@ -309,6 +296,18 @@ class Adviser:
     def _fell_away(self, before: float, value: float, turned: float) -> bool:
         return self._falls.away(before, value, turned, self._slope, self._noise)
 
+    def _look_back(self, t_s: float, value: float, rail: tuple[float, float] | None) -> None:
+        """See whether a reading that stands again has fallen from one that was still on its way up, never calm."""
+        peak, turned = self._falls.peak, self._known if self._known is not None else self._told
+        if peak is None or not self._fell_away(peak[1], value, turned):
+            return
+        if self._calm is not None and self._fell_away(self._calm[1], value, turned):
+            return  # it is seen when the two are compared
+        fresh_a = rail[1] if rail is not None and rail[0] > peak[0] else None
+        self._fell, self._calm = (t_s, value), peak
+        self._rail_a = self._trust.current_before(peak[1], value, self._noise, fresh_a)
+        self._known = None
+
     def _current_fell(self, t_s: float, value: float, rail: tuple[float, float] | None) -> bool:
         """Whether the supply's current says that the bias is gone, and not only the probe."""
         if self._calm is None or rail is None or self._rail_a is None or rail[0] <= self._calm[0]:
@@ -369,55 +368,28 @@ class Adviser:
             self._silence.hushed()
             way = "rising" if rest > value else "falling"
             return self._say("inside" if inside else "turn", f"hold: it is still {way}", None, calm=calm)
-        turns = self._wanted(value, aim, by_rest=rest is not None)
+        by_rest, by_model = rest is not None, self._source == "the model"
+        turns = self._turning.wanted(value, aim, self._slope, by_model=by_model, by_rest=by_rest)
         if calm:
             self._told = math.copysign(taken_for(abs(turns), self._track), turns)
             self._silence.told(t_s, value)
-        words = self._amount(turns)
+        words = self._turning.amount(turns)
         if inside:
-            return self._say("inside", self._inside(value, rest, words), turns, calm=calm)
+            return self._say("inside", self._turning.inside(value, rest, words), turns, calm=calm)
         answers = self._answers or (None if self._slope is None else OfSlope(self._scale, self._slope))
         silent = self._silence.look(t_s, value, self._told, answers, self._noise)
         if silent is not None:
             return self._say("no response", silent[0], silent[1], calm=True)
         if self._fault == "overshot":
-            return self._say("overshot", f"too far: {words}", turns, calm=calm)
+            slack = self._turning.slack(t_s) if turns < 0.0 else ""
+            return self._say("overshot", f"too far: {words}{slack}", turns, calm=calm)
         if self._fault == "wrong way":
             return self._say("wrong way", f"that was the wrong way: {words}", turns, calm=calm)
+        words += self._turning.of_how_many(turns, aim, self._slope, by_rest=by_rest)
         words += self._silence.hint(value, turns, self._answers, self._noise)
         return self._say("turn", words, turns, calm=calm)
-
-    def _inside(self, value: float, rest: float | None, words: str) -> str:
-        """Say what is still to do inside the limits, away from the target."""
-        aim = value if rest is None else rest
-        if not self._low <= aim <= self._high:
-            return f"inside now, but still {'rising' if aim > value else 'falling'}: {words}"
-        off = quantities.show(abs(aim - self._target), self._unit, 2)
-        where = f"{off} {'above' if aim > self._target else 'below'} the target"
-        return f"inside, {where}: {words}" if rest is None else f"inside, and will rest {where}: {words}"
-
-    def _wanted(self, value: float, aim: float, *, by_rest: bool) -> float:
-        """Turns from here to the target, as far as they can be advised in one go."""
-        missing = self._scale.even(self._target) - self._scale.even(aim)
-        if self._slope is None:
-            return math.copysign(min(BLIND_TURNS, 0.25 * self._track), missing)
-        turns = missing / (self._slope * (self._settled_share if by_rest else 1.0))
-        if self._source == "the model":
-            turns *= UNKNOWN_SHARE
-        most = min(MOST_TURNS, 0.25 * self._track) if self._track else MOST_TURNS
-        # Rounded towards too little, because words are coarse: what is missing then is another small move.
-        turns = math.copysign(rounded_down(min(abs(turns), most), self._track), turns)
-        # On the way to a rest that is known, the reading of this moment never goes far over the limits.
-        top = self._scale.even(self._high + 0.5 * (self._high - self._target))
-        if by_rest and turns > 0.0:
-            turns = min(turns, max(top - self._scale.even(value), 0.0) / self._slope)
-        return turns
 
     def _say(self, mood: Mood, words: str, turns: float | None, *, calm: bool) -> Advice:
         return Advice(
             mood=mood, words=words, turns=turns, slope_source=self._source, calm=calm, moved_s=self._moved_s
         )  # fmt: skip
-
-    def _amount(self, turns: float) -> str:
-        way = self._ways[0] if turns > 0.0 else self._ways[1]
-        return f"{amount_words(abs(turns), self._track)} {way}"

@@ -56,6 +56,9 @@ current, or of this share of the target's; feeds have tolerances (our own figure
 CURRENT_KNOWN: Final = 0.02
 """Of two currents of the same unit."""
 
+CURRENT_FELL_TO: Final = 0.9
+"""The supply's current has fallen with a reading when it is below this share of itself."""
+
 MORE_BIAS_SHARE: Final = 0.4
 MORE_BIAS_OWN: Final = 0.6
 MORE_STANDING: Final = 0.15
@@ -74,7 +77,10 @@ AGAIN: Final = "the reading is another than before: take the probe off the point
 TYPE_AGAIN: Final = (
     "it has fallen, and no advised turn explains it: look at the probes, then type what they read. No turns"
 )
-MORE_BIAS: Final = "the supply's current shows more bias than this reading: is the probe on the point? No turns"
+MORE_BIAS: Final = (
+    "the supply's current shows more bias than this reading: is the probe on the point, does the stage oscillate? "
+    "No turns"
+)
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -225,6 +231,22 @@ class Trust:
         bias = line.per_unit * max(value, 0.0)
         room = max(AGREES_WITHIN * bias, STANDING_KNOWN * line.standing_a, LEAST_KNOWN * whole)
         return abs(rail_a - line.standing_a - bias) <= max(room, 3.0 * noise * line.per_unit)
+
+    def current_before(self, before: float, value: float, noise: float, rail_a: float | None) -> float | None:
+        """Return what the current was at a reading from which another has fallen, by the line.
+
+        None where the current of now speaks neither for the one reading alone nor for the other.
+        """
+        line = self._line
+        if line is None or rail_a is None:
+            return None
+        match self._by_line(before, noise, rail_a), self._by_line(value, noise, rail_a):
+            case True, False:
+                return rail_a  # it stands
+            case False, True:
+                before_a = line.standing_a + line.per_unit * before
+                return before_a if rail_a < CURRENT_FELL_TO * before_a else None
+        return None
 
     def was_wrong(self, value: float, noise: float, rail_a: float | None, kept: Kept | None) -> bool:
         """Whether it was the last trusted reading that was of another point, by the current: believe this one.

@@ -95,8 +95,9 @@ def heading_words(suspected: Suspected) -> str:
     readings = f"{suspected.readings} reading" + ("" if suspected.readings == 1 else "s")
     if not suspected.explained:
         return (
-            f"No single fault explains the {readings} well: look for more than one, or for a probe in the wrong place. "
-            f"Least bad: {fault_words(first.fault)}."
+            f"Nothing that the model knows explains the {readings}, neither a single fault nor none: look for more "
+            f"than one fault, or for a probe in the wrong place. It comes nearest with {fault_words(first.fault)}, "
+            "which does not fit either."
         )
     if first.fault == HEALTHY:
         return (

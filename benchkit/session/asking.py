@@ -10,7 +10,7 @@ from benchkit.errors import BenchkitError, EntryError, InstrumentError
 from benchkit.events import Answered, BenchFound, BenchMissing, Decided, Event, PartsReplaced
 from benchkit.procedure.actions import Ask, Question
 from benchkit.session import capturing
-from benchkit.session.front import Reply
+from benchkit.session.front import READ_BY_HAND, Reply
 from benchkit.session.job import Stopped, refusal
 
 if TYPE_CHECKING:
@@ -38,7 +38,7 @@ async def connect(session: Session) -> Event:
     except InstrumentError as error:
         return BenchMissing(problem=str(error))
     return BenchFound(
-        meter=found.get("meter") or "read by hand", supply=found.get("supply") or "set by hand", supply_state=state
+        meter=found.get("meter") or READ_BY_HAND, supply=found.get("supply") or "set by hand", supply_state=state
     )
 
 

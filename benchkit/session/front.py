@@ -7,11 +7,14 @@ a time.  A front end only displays and returns a `Reply`; it decides nothing.
 from __future__ import annotations
 
 from dataclasses import dataclass
-from typing import Literal, Protocol
+from typing import Final, Literal, Protocol
 
 from benchkit.events import SupplyState, Verdict
 from benchkit.judge.advice import Mood
 from benchkit.procedure.actions import Question
+
+READ_BY_HAND: Final = "read by hand"
+"""The name of the meter where a person is it."""
 
 Energised = Literal["off", "on", "unknown"]
 
@@ -163,7 +166,10 @@ class AimView:
 
 @dataclass(frozen=True, kw_only=True)
 class SuspectView:
-    """One suspect: name, share of the probability (0 to 1, and in words), what else fits, what speaks for it."""
+    """One suspect: name, share of the probability (0 to 1, and in words), what else fits, what speaks for it.
+
+    `share_text` is "" where nothing explains the readings: a share among bad explanations is no probability.
+    """
 
     title: str
     share: float

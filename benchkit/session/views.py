@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 
 from benchkit import quantities
@@ -163,7 +164,7 @@ def _result(title: str, judged: Judged, from_before: bool, overridden: str) -> R
     return ResultView(
         item=judged.item,
         title=title,
-        value_text="overload" if OVERLOAD in judged.why else _number(judged.value, judged.unit),
+        value_text="overload" if OVERLOAD in judged.why else _value_text(judged),
         low_text=_number(judged.low, judged.unit),
         high_text=_number(judged.high, judged.unit),
         verdict=judged.verdict,
@@ -209,7 +210,7 @@ def _suspects(walk: Walk, state: State) -> SuspectsView | None:
             SuspectView(
                 title=suspect_words.fault_words(one.fault),
                 share=one.probability,
-                share_text=suspect_words.chance_words(one.probability),
+                share_text=suspect_words.chance_words(one.probability) if suspicion.explained else "",
                 alike=suspect_words.alike_words(one, suspicion.suspects),
                 evidence=suspect_words.evidence_for(one),
             )
@@ -278,6 +279,15 @@ def _sections(plan: Plan, state: State) -> tuple[SectionView, ...]:
             )
         )
     return tuple(views)
+
+
+def _value_text(judged: Judged) -> str:
+    """Write a value with no more places than its uncertainty, and a thousandth of its limits' distance, have."""
+    if judged.value is None or not judged.unit:
+        return _number(judged.value, judged.unit)
+    span = 0.0 if judged.low is None or judged.high is None else judged.high - judged.low
+    coarse = max(judged.uncertainty or 0.0, span / 100.0 if math.isfinite(span) else 0.0)
+    return quantities.show_within(judged.value, judged.unit, coarse, 5)
 
 
 def _number(value: float | None, unit: str) -> str:

@@ -17,46 +17,36 @@ from __future__ import annotations
 import asyncio
 import contextlib
 import os
-import sys
 import tempfile
-import time
 from collections.abc import Callable, Coroutine
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 from pathlib import Path
 from typing import Any, ClassVar, Final
 
 from textual.app import App
 from textual.binding import Binding
-from textual.theme import Theme
 from textual.widgets import Input
 
 from benchkit.errors import BenchkitError
 from benchkit.events import Closed
 from benchkit.procedure.actions import Question
 from benchkit.session.front import Reply, SupplyView, View
-from benchkit.ui import look, platform
+from benchkit.ui import platform
 from benchkit.ui.before import before_the_walk, left_before_the_walk
 from benchkit.ui.entry import Identity, Opening, Start
 from benchkit.ui.own_error import write_log
+from benchkit.ui.painting import Painter
 from benchkit.ui.screen_front import ScreenFront
-from benchkit.ui.screens.base import BenchScreen
 from benchkit.ui.screens.leave import LeaveScreen
 from benchkit.ui.screens.start import StartScreen
 from benchkit.ui.screens.walk import WalkScreen
 from benchkit.ui.series import NEXT
-from benchkit.ui.sheet import SHEET
+from benchkit.ui.sheet import SHEET, THEME
 from benchkit.ui.widgets.answer import GUARD_S
 from benchkit.ui.widgets.scroll_bar import use_whole_cells
 
 HEARTBEAT_S: Final = 0.2
 PAINT_S: Final = 0.1
-LEAST_PAINT_S: Final = 0.08
-"""A new picture is painted at once, but not sooner than this after the last (s)."""
-
-FLASH_S: Final = 0.7
-HOLD_AFTER_CAPTURE_S: Final = 1.0
-"""Keys this soon after a reading was taken by itself answer nothing (s)."""
-
 CLOSE_WITHIN_S: Final = 3.0
 """How long leaving waits for the session to switch off and close its record (s)."""
 
@@ -66,7 +56,8 @@ CLOSE_WHEN_OFF_S: Final = 1.0
 CLOSE_WHEN_TOLD_S: Final = 1.0
 """The same when told to go from outside: well inside the hard exit (s)."""
 
-LEAVING: Final = "The walk ends here; it can be gone on with later."
+WATCHED: Final = ("trim", "probes", "watch")
+"""Kinds of questions beside which a reading of the moment may be shown."""
 
 STOPPED: Final = 4
 OWN_ERROR: Final = 5
@@ -128,8 +119,8 @@ class BenchApp(App[int]):
     ) -> None:
         super().__init__(ansi_color=True if os.environ.get("NO_COLOR") is not None else None)
         use_whole_cells()
-        self.register_theme(_THEME)
-        self.theme = _THEME.name
+        self.register_theme(THEME)
+        self.theme = THEME.name
         self._start = start
         self._off_now = off_now
         self._heartbeat = heartbeat
@@ -137,23 +128,18 @@ class BenchApp(App[int]):
         self._identity = identity
         self._log_dir = log_dir if log_dir is not None else Path(tempfile.gettempdir())
         self._guard_s = guard_s
-        self._bell = bell
-        self._captured = 0
-        self._walk: WalkScreen | None = None
+        self._painter = Painter(self, bell=bell, guard_s=guard_s)
+        self.walk: WalkScreen | None = None
         self._walk_task: asyncio.Task[None] | None = None
         self._tasks: set[asyncio.Task[None]] = set()
         self._pending: _Pending | None = None
-        self._view: View | None = None
-        self._painted: View | None = None
-        self._painted_s = 0.0
-        self._paint_planned = False
         self._ending: Closed | None = None
-        self._leaving = False
         self.off_asked = False
         self.goes_on = False
         self.crash: BaseException | None = None
         self.last_words = ""
         self.leaver: platform.Leaver | None = None
+        self.before_watching: Callable[[], object] = lambda: None
 
     # --- life ---------------------------------------------------------------------------------------------------
 
@@ -161,7 +147,7 @@ class BenchApp(App[int]):
         """Start the clocks and the first screen."""
         platform.ignore_stop_key()
         self.set_interval(HEARTBEAT_S, self._beat)
-        self.set_interval(PAINT_S, self._paint)
+        self.set_interval(PAINT_S, self._painter.paint)
         if self._identity is not None:
             self.begin(self._identity)
         else:
@@ -176,8 +162,8 @@ class BenchApp(App[int]):
         """Begin the walk."""
         if self._walk_task is not None:
             return
-        self._walk = WalkScreen(self._guard_s)
-        self._run(self._begin(self._walk, identity))
+        self.walk = WalkScreen(self._guard_s)
+        self._run(self._begin(self.walk, identity))
 
     async def _begin(self, screen: WalkScreen, identity: Identity) -> None:
         if isinstance(self.screen, StartScreen):
@@ -221,48 +207,32 @@ class BenchApp(App[int]):
         """What the off line shows; before the walk has begun, that nobody has asked the supply yet."""
         return self.supply or before_the_walk(self._opening, pressed=self.off_asked)
 
-    def take_view(self, view: View) -> None:
-        """Keep the newest picture; a change of the supply is shown without waiting for the next repaint."""
-        earlier = self._view
-        self._view = view
-        self._hear(view)
-        if view.supply.energised == "off" or earlier is None:
-            self.off_asked = False
-        if earlier is None or earlier.supply != view.supply or view.exit_status is not None:
-            self._paint()
-        elif not self._paint_planned:
-            self._paint_planned = True
-            wait_s = self._painted_s + LEAST_PAINT_S - time.monotonic()
-            if wait_s > 0.0:
-                self.set_timer(wait_s, self._paint)
-            else:
-                self.call_later(self._paint)
+    @property
+    def _view(self) -> View | None:
+        return self._painter.view
 
-    def _hear(self, view: View) -> None:
-        """Ring when a reading was taken; what is pressed just then was meant for that reading."""
-        if view.live is None:
-            return
-        captured, self._captured = self._captured, view.live.captured
-        if view.live.captured > captured:
-            if self._bell:
-                self.bell()
-            if self._walk is not None:
-                self._walk.hold_keys(min(HOLD_AFTER_CAPTURE_S, 4.0 * self._guard_s))
+    def take_view(self, view: View) -> None:
+        """Keep the newest picture, and have it painted."""
+        if view.supply.energised == "off" or self._view is None:
+            self.off_asked = False
+        self._painter.take(view)
 
     async def put_question(self, question: Question, refused: str) -> Reply:
         """Put a question on the screen and wait."""
         pending = _Pending(question, refused, asyncio.get_running_loop().create_future())
         self._pending = pending
-        self._paint()
-        if self._walk is not None and not self._leaving:  # whoever is leaving isn't asked any more
-            self._walk.put(question, refused)
+        self._painter.paint()
+        if question.kind in WATCHED:
+            self.before_watching()
+        if self.walk is not None and not self._painter.leaving:  # whoever is leaving isn't asked any more
+            self.walk.put(question, refused)
         try:
             return await pending.reply
         finally:
             if self._pending is pending:
                 self._pending = None
-                if self._walk is not None and self.is_running:
-                    self._walk.withdraw()
+                if self.walk is not None and self.is_running:
+                    self.walk.withdraw()
 
     def answered(self, reply: Reply) -> None:
         """Hand an answer to the session."""
@@ -294,42 +264,6 @@ class BenchApp(App[int]):
         status = self._view.exit_status if self._view is not None else None
         return status if status is not None else STOPPED
 
-    def _paint(self) -> None:
-        self._paint_planned = False
-        walk, view = self._walk, self._view
-        if walk is None or not walk.is_mounted:
-            return
-        if view is not None and view is not self._painted:
-            earlier, self._painted, self._painted_s = self._painted, view, time.monotonic()
-            self._say_view(walk)
-            self._attend(earlier, view)
-        walk.age()
-        for screen in self.screen_stack:
-            if isinstance(screen, BenchScreen):
-                screen.refresh_off_line()
-
-    def _say_view(self, walk: WalkScreen) -> None:
-        view = self._view
-        if view is not None:
-            walk.say(replace(view, message=LEAVING) if self._leaving and view.exit_status is None else view)
-
-    def _attend(self, earlier: View | None, view: View) -> None:
-        """Ring and flash when something did not pass or the supply changed its state."""
-        fresh = view.results[len(earlier.results) if earlier is not None else 0 :]
-        before = None if earlier is None else (earlier.supply.energised, earlier.supply.calm)
-        changed = before is not None and before != (view.supply.energised, view.supply.calm)
-        alarming = changed and view.supply.energised == "unknown" and not view.supply.calm
-        if alarming or any(result.verdict != "pass" for result in fresh):
-            self.bell()
-        if changed:
-            self._flash()
-
-    def _flash(self) -> None:
-        screen = self.screen
-        if isinstance(screen, BenchScreen):
-            screen.off_line.add_class("flash")
-            self.set_timer(FLASH_S, lambda: screen.off_line.remove_class("flash"))
-
     # --- off and out --------------------------------------------------------------------------------------------
 
     def call_off(self, reason: str) -> None:
@@ -348,10 +282,8 @@ class BenchApp(App[int]):
         """Switch off at once."""
         self.call_off("the operator asked for off")
         self.off_asked = self.off_asked or self._view is None
-        for screen in self.screen_stack:
-            if isinstance(screen, BenchScreen):
-                screen.refresh_off_line()
-        self._flash()
+        self._painter.refresh_off_lines()
+        self._painter.flash()
 
     def action_off_by_delete(self) -> None:
         """Switch off at once, when there is anything to switch off."""
@@ -365,7 +297,7 @@ class BenchApp(App[int]):
 
     async def action_quit(self) -> None:
         """Leave; while the supply is on or may be, only after asking."""
-        if self._leaving or isinstance(self.screen, LeaveScreen):
+        if self._painter.leaving or isinstance(self.screen, LeaveScreen):
             return
         if self.supply is None or self._keeps_place:
             self._begin_leaving()
@@ -377,19 +309,19 @@ class BenchApp(App[int]):
             self._begin_leaving()
 
     def _begin_leaving(self) -> None:
-        if self._walk is None:
+        if self.walk is None:
             self.last_words = left_before_the_walk(self._opening)
         ended = self._ending is not None or (self._view is not None and self._view.exit_status is not None)
         self._run(self._leave("the operator left", self._status_of_end() if ended else STOPPED))
 
     async def _leave(self, reason: str, status: int, within_s: float | None = None) -> None:
         """Off first, then give the session a moment to close its record, then go."""
-        if self._leaving:
+        if self._painter.leaving:
             return
-        self._leaving = True
-        if self._walk is not None and self._pending is not None and self._walk.is_mounted:
-            self._walk.withdraw()
-            self._say_view(self._walk)
+        self._painter.leaving = True
+        if self.walk is not None and self._pending is not None and self.walk.is_mounted:
+            self.walk.withdraw()
+            self._painter.say(self.walk)
         if reason:
             self.call_off(reason)
         task = self._walk_task
@@ -441,57 +373,3 @@ class BenchApp(App[int]):
         if self.crash is not None:
             return OWN_ERROR
         return self.return_value if self.return_value is not None else STOPPED
-
-
-_THEME: Final = Theme(
-    name="bench",
-    primary=look.PASS,
-    foreground=look.INK,
-    background=look.GROUND,
-    surface=look.PANEL,
-    panel=look.PANEL,
-    dark=True,
-)
-
-
-def run_app(
-    start: Start,
-    *,
-    off_now: Callable[[str], object],
-    heartbeat: Callable[[], object],
-    opening: Opening,
-    identity: Identity | None = None,
-    log_dir: Path | None = None,
-    bell: bool = True,
-    on_next: Callable[[], object] = lambda: None,
-) -> int:
-    """Run the screens until the person leaves, and return the exit status.
-
-    See `BenchApp` for the parameters; `on_next` is called when the person goes on with the next walk.  Whatever ends
-    the screens, `off_now` has been called unless the walk had come to its own end.  What has to be said at the end goes
-    to standard error as one line.
-    """
-    app = BenchApp(
-        start,
-        off_now=off_now,
-        heartbeat=heartbeat,
-        opening=opening,
-        identity=identity,
-        log_dir=log_dir,
-        bell=bell,
-    )
-    leaver = platform.Leaver(off_now, app.leave_from_outside)
-    app.leaver = leaver
-    try:
-        with leaver.installed():
-            app.run(mouse=False)
-    finally:
-        if app.return_value is None:
-            with contextlib.suppress(Exception):
-                off_now("the screens have ended")
-    if app.goes_on and app.crash is None:
-        on_next()
-    if app.last_words:
-        with contextlib.suppress(OSError, ValueError):
-            print(app.last_words, file=sys.stderr)
-    return app.exit_status()

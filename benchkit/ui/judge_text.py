@@ -76,13 +76,15 @@ def suspect_lines(suspects: Sequence[Suspect], explained: bool = True) -> list[s
     lines = ["What would explain these readings, if one part is at fault at most:"]
     if not explained:
         lines = _wrapped(
-            "No single fault of the table explains these readings well: look for more than one fault, a probe in the"
-            " wrong place, or a condition that was not as stated. The least bad explanations:",
+            "Nothing that the model knows explains these readings, neither a single fault nor none: look for more than"
+            " one fault, a probe in the wrong place, or a condition that was not as stated. What comes nearest, and"
+            " does not fit either:",
             "  ",
         )
     shown = [one for one in suspects[:_SHOWN_SUSPECTS] if one.probability >= _LEAST_SHOWN] or list(suspects[:1])
     for one in shown:
-        lines += _wrapped(f"  {_share(one.probability):>6s}  {_name(one.fault)}", " " * 10)
+        share = _share(one.probability) if explained else ""  # among bad explanations a share is no probability
+        lines += _wrapped(f"  {share:>6s}  {_name(one.fault)}", " " * 10)
         if one.alike:
             names = ", ".join(_name(other) for other in one.alike)
             lines += _wrapped(f"{'':10s}these readings can't tell it from: {names}", " " * 12)

@@ -7,7 +7,7 @@ from collections.abc import Callable
 from typing import Final
 
 from benchkit.session.front import LiveView
-from benchkit.ui.widgets.trim_words import advice_words, mood_look
+from benchkit.ui.widgets.trim_words import advice_words, mood_look, plain_reading
 
 LEAST_S: Final = 1.0
 """Between two lines (s)."""
@@ -81,7 +81,8 @@ def live_line(live: LiveView, busy: str = "", remaining_s: float | None = None, 
     'emitter.upper.1 16.00 mV, TOO LOW: a quarter turn anticlockwise; rising 0.12 mV/min'
     """
     mood, advice = _mood_and_advice(live, placing)
-    head = f"{live.point} {live.text}, {mood}" if mood else f"{live.point} {live.text}"
+    reading = plain_reading(live)
+    head = f"{live.point} {reading}, {mood}" if mood else f"{live.point} {reading}"
     left = "" if remaining_s is None else f"about {remaining_s:.0f} s left"
     parts = [f"{head}: {advice}" if advice else head, live.rate_text, live.settles_text, live.capture]
     parts += [part for part in (busy.rstrip("."), left) if part]

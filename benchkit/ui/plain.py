@@ -24,6 +24,7 @@ from benchkit.session.front import AimView, LiveView, Reply, SuspectsView, View
 from benchkit.ui.live_text import LiveLines
 from benchkit.ui.widgets.answer_keys import keyed, keys_in_words
 from benchkit.ui.widgets.summary_words import broken_words
+from benchkit.ui.widgets.trim_words import plain_reading
 
 WIDTH = 78
 
@@ -94,7 +95,7 @@ class PlainFront:
             if self._told.get(result.item) != line:
                 self._told[result.item] = line
                 value = f" {result.value_text}" if result.value_text else ""
-                self._print(f"  [{result.verdict.upper()}] {result.title}{value}. {result.why}")
+                self._wrapped(f"[{result.verdict.upper()}] {result.title}{value}. {result.why}", "  ")
         if view.suspects is not None and view.suspects != self._suspects:
             self._tell_suspects(view.suspects)
         self._suspects = view.suspects
@@ -103,13 +104,13 @@ class PlainFront:
         self._tell_progress(view)
         if (state := f"{view.supply.energised} {view.supply.label}") != self._supply:
             self._supply = state
-            self._print(f"  {view.supply.words}")
+            self._wrapped(view.supply.words, "  ")
         if view.broken != self._broken:
             self._broken = view.broken
             self._print(f"  {broken_words(view.broken)}")
         if view.message and view.message != self._message:
             self._message = view.message
-            self._print(f"  ! {view.message}")
+            self._wrapped(f"! {view.message}", "  ")
 
     def _tell_progress(self, view: View) -> None:
         """Say what is being waited for; a reading that is being watched again whenever it has moved by a third."""
@@ -150,7 +151,7 @@ class PlainFront:
         self._print("")
         self._wrapped(suspects.heading, "  ")
         for suspect in suspects.suspects:
-            self._wrapped(f"{suspect.share_text}  {suspect.title}", "    ")
+            self._wrapped(f"{suspect.share_text}  {suspect.title}".strip(), "    ")
             for line in (suspect.alike, *suspect.evidence):
                 self._wrapped(line, "        ")
         self._wrapped(suspects.unseen, "  ")
@@ -255,11 +256,11 @@ class PlainFront:
         if question.kind == "trim" and view is not None and view.kind == "rehearsal":
             self._print("    + or - and turns, such as +0.25, turns the simulated screw towards more or less bias")
             if view.live is not None:
-                self._print(f"    now {view.live.text}")
+                self._print(f"    now {plain_reading(view.live)}")
 
     def _prompt(self, question: Question) -> str:
         live = self._view.live if self._view is not None and question.kind == "trim" else None
-        now = f" now {live.text}" if live is not None else ""
+        now = f" now {plain_reading(live)}" if live is not None else ""
         if question.kind == "hold":
             return "  type yes, or 2 or M to make safe> "
         return f" {now}> "

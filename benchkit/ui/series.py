@@ -145,8 +145,13 @@ def end_question(next_label: str) -> Question:
     leave = Choice(value=LEAVE, label="leave benchkit")
     if not next_label:
         choices: tuple[Choice, ...] = (leave,)
+        do = "Enter leaves benchkit."
     else:
         following = Choice(value=NEXT, label=next_label)
         # With a channel left the usual answer is to go on with it.
-        choices = (following, leave) if "channel" in next_label else (leave, following)
-    return Question(item="", kind="tell", title="Finished", do="", choices=choices)
+        goes_on = "channel" in next_label
+        choices = (following, leave) if goes_on else (leave, following)
+        do = f"Enter goes on with the {next_label}; Q leaves benchkit."
+        if not goes_on:
+            do = f"Enter leaves benchkit; N goes on with the {next_label}."
+    return Question(item="", kind="tell", title="Finished", do=do, choices=choices)

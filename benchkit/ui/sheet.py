@@ -4,7 +4,13 @@ from __future__ import annotations
 
 from typing import Final
 
-from benchkit.ui.look import CARE, FAIL, GROUND, INK, LINE, PANEL, QUIET, STRONG, SUPPLY_COLOURS
+from textual.theme import Theme
+
+from benchkit.ui.look import CARE, FAIL, GROUND, INK, LINE, PANEL, PASS, QUIET, STRONG, SUPPLY_COLOURS
+
+THEME: Final = Theme(
+    name="bench", primary=PASS, foreground=INK, background=GROUND, surface=PANEL, panel=PANEL, dark=True
+)  # fmt: skip
 
 SHEET: Final = f"""
 Screen {{ background: {GROUND}; color: {INK}; layout: vertical; overflow: hidden; }}
@@ -86,6 +92,8 @@ Input:focus {{ background-tint: {STRONG} 6%; }}
 
 .summary-verdict {{ height: auto; padding: 0 1; margin-bottom: 1; }}
 .summary-scroll {{ height: 1fr; padding: 0 1; }}
+.summary-enter {{ height: 1; padding: 0 1; }}
+.small .summary-enter {{ display: none; }}
 .summary-body {{ height: auto; }}
 
 .start-body {{ height: 1fr; padding: 1 2 0 2; }}

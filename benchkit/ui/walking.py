@@ -128,8 +128,8 @@ def _on_screens(prepare: Prepare, turn: Turn, operator: str, *, bell: bool) -> i
 
 def _on_screen(ready: Ready, turn: Turn, who: Any, *, bell: bool) -> tuple[int, Any, bool]:
     """Show one walk; return its exit status, who walked, and whether the person goes on with the next one."""
-    from benchkit.ui.app import run_app
     from benchkit.ui.entry import Identity, Opening
+    from benchkit.ui.running import run_app
 
     setting, runner = ready.runner.setting, ready.runner
     took: list[Identity] = []

@@ -1,18 +1,21 @@
-"""How soon a reading and a key show on the trim page, and what that costs.
+"""How soon a reading and a key show on the trim page, what holds them up, and what that costs.
 
-Usage: ``python -m tests.benchmarks.screen_speed [SECONDS]`` (POSIX only).  The app runs on a pseudo-terminal of its own
-over a scripted session that shows ten readings a second.  A small terminal of ours follows what it paints: a reading
-counts as shown when all rows of its figures stand there.  Printed, for two sizes:
+Usage: ``python -m tests.benchmarks.screen_speed [SECONDS]`` (POSIX only).  The app (`screen_speed_app`) runs on a
+pseudo-terminal of its own over a scripted session that shows ten readings a second, and turns to another page and back
+every five seconds.  A small terminal of ours follows what it paints: a reading counts as shown when all rows of its
+figures stand there.  Keys are pressed all the while, in every phase between two readings.  Printed, for two sizes, by
+itself and while the model works aside:
 
 * from the session's ``show`` to the figures on the terminal (the session's own part, from the instrument's reply to
   ``show``, is not in it);
-* from a key to the reply in the session, and from F9 to the words that off has been asked for;
+* from a key to the reply in the session, and from F9 to the words that off has been asked for; keys without an answer;
+* the longest time that the event loop was held up, how much of it the process had no processor or no lock, and where
+  the loop's thread was then; the longest stop of the garbage collector;
 * processor time of the app's process as a share of one core, start and end left out; bytes a second.
 """
 
 from __future__ import annotations
 
-import asyncio
 import codecs
 import contextlib
 import math
@@ -23,97 +26,25 @@ import subprocess
 import sys
 import tempfile
 import time
-from dataclasses import dataclass, field, replace
+from dataclasses import dataclass, field
 from pathlib import Path
 
-from benchkit.events import Closed
-from benchkit.session.front import Front, LiveView
 from benchkit.ui.widgets.digit_shapes import big_rows, fit, split_reading
 from benchkit.ui.widgets.trim_words import in_step
-from tests.ui import scripted
-from tests.ui.live_views import TRIM_VIEW, trimming
+from tests.benchmarks.screen_speed_app import INTERVAL_S
 
 SIZES = ((80, 24, 61, 7), (120, 40, 89, 12))
 """Columns and rows of the terminal, and the room that the figures have there."""
 
-INTERVAL_S = 0.1
-KEY_EVERY_S = 0.73
+KEY_EVERY_S = 0.237
+TURNED_S = 0.3
+"""So long after the page has turned a key may find no question."""
+
 F9 = b"\x1b[20~"
 RIGHT = b"\x1b[C"
 SEQUENCE = re.compile(
     r"\x1b\[([?<>=]?)([0-9;]*)[ -/]*([@-~])|\x1b[PX^_\]].*?(?:\x1b\\|\x07)|\x1b[()][0-9A-B]|\x1b[=>78]", re.DOTALL
 )
-
-
-# --- the app ---------------------------------------------------------------------------------------------------------
-
-
-def value_of(number: int) -> float:
-    """The reading with this number (V); ninety-seven in a row differ in their figures."""
-    return 0.018 + 4e-5 * (7 * number % 97)
-
-
-def live_of(number: int, base: LiveView) -> LiveView:
-    """A picture whose trend has moved on by one reading."""
-    value = value_of(number)
-    step = number * INTERVAL_S
-    end = base.trend[-1][0]
-    trend = (*((at - end + step, old) for at, old in base.trend[-240:-1]), (step, value))
-    ahead = tuple((at - end + step, old) for at, old in base.predicted)
-    return replace(base, value=value, text=in_step(value, base.target, base.unit), trend=trend, predicted=ahead)
-
-
-def app_side(file: Path, seconds: float) -> int:
-    """Run the app; everything that happened goes to `file`, with times of the system's one clock."""
-    import resource
-
-    from benchkit.ui.app import run_app
-    from benchkit.ui.entry import Identity
-
-    notes: list[str] = []
-
-    def note(words: str) -> None:
-        notes.append(f"{time.monotonic():.6f} {words}")
-
-    def used_s() -> float:
-        used = resource.getrusage(resource.RUSAGE_SELF)
-        return used.ru_utime + used.ru_stime
-
-    async def start(front: Front, identity: Identity) -> Closed:
-        base = trimming(0.0193)
-        front.show(replace(TRIM_VIEW, kind="rehearsal", live=live_of(0, base)))
-        asked = asyncio.ensure_future(front.ask(scripted.TRIM))
-        await asyncio.sleep(1.0)
-        began, used = time.monotonic(), used_s()
-        note("began")
-        number = 0
-        while time.monotonic() - began < seconds:
-            number += 1
-            live = live_of(number, base)
-            note(f"shown {number} {live.value!r}")
-            front.show(replace(TRIM_VIEW, kind="rehearsal", live=live, elapsed_s=number * INTERVAL_S))
-            left_s = began + number * INTERVAL_S - time.monotonic()
-            done, _ = await asyncio.wait({asked}, timeout=max(0.001, left_s))
-            if done:
-                note("reply")
-                asked = asyncio.ensure_future(front.ask(scripted.TRIM))
-                await asyncio.sleep(max(0.0, began + number * INTERVAL_S - time.monotonic()))
-        note(f"used {(used_s() - used) / (time.monotonic() - began)!r}")
-        asked.cancel()
-        front.show(replace(TRIM_VIEW, supply=scripted.OFF, live=None, exit_status=0, verdict="pass"))
-        asyncio.get_running_loop().call_later(0.5, os.kill, os.getpid(), 15)
-        return scripted.closed()
-
-    run_app(
-        start,
-        off_now=lambda _reason: note("off"),
-        heartbeat=lambda: None,
-        opening=scripted.OPENING,
-        identity=scripted.WHO,
-        log_dir=file.parent,
-    )
-    file.write_text("\n".join(notes), encoding="utf-8")
-    return 0
 
 
 # --- the terminal ----------------------------------------------------------------------------------------------------
@@ -184,12 +115,17 @@ class Measured:
     painted: list[float] = field(default_factory=list)
     answered: list[float] = field(default_factory=list)
     off: list[float] = field(default_factory=list)
+    lost: int = 0
     unseen: int = 0
+    worst_at: float = 0.0
+    late: list[tuple[float, float, str]] = field(default_factory=list)
+    collected: list[tuple[float, str]] = field(default_factory=list)
+    answers: int = 0
     share: float = 0.0
     bytes_per_s: float = 0.0
 
 
-def measure(columns: int, rows: int, room: tuple[int, int], seconds: float) -> Measured:
+def measure(columns: int, rows: int, room: tuple[int, int], seconds: float, aside: str) -> Measured:
     """Run the app on a terminal of this size."""
     import fcntl
     import pty
@@ -202,7 +138,7 @@ def measure(columns: int, rows: int, room: tuple[int, int], seconds: float) -> M
     with tempfile.TemporaryDirectory() as folder:
         file = Path(folder) / "notes"
         process = subprocess.Popen(
-            [sys.executable, "-m", "tests.benchmarks.screen_speed", "--app", str(file), str(seconds)],
+            [sys.executable, "-m", "tests.benchmarks.screen_speed_app", str(file), str(seconds), aside],
             stdin=slave,
             stdout=slave,
             stderr=slave,
@@ -233,9 +169,9 @@ def _follow(master: int, process: subprocess.Popen[bytes]) -> tuple[list[tuple[f
                 chunks.append((now, os.read(master, 65536)))
         if now >= due:
             due += KEY_EVERY_S
-            name, sequence = ("off", F9) if len(keys) % 4 == 3 else ("key", RIGHT)
+            name, sequence = ("off", F9) if len(keys) % 4 == 3 else ("reply", RIGHT)
+            keys.append((time.monotonic(), name))  # before it is written: an answer may come before the write returns
             os.write(master, sequence)
-            keys.append((time.monotonic(), name))
     return chunks, keys
 
 
@@ -265,12 +201,24 @@ def _reckon(
                 break
     if not found.painted:
         print("\n".join("".join(row) for row in screen.cells))
-    replies = [at for at, words in told if words[0] == "reply"]
-    offs = [at for at, words in told if words[0] == "off"]
-    for pressed, name in keys:
-        after = [at for at in (offs if name == "off" else replies) if at >= pressed]
-        if after and began < pressed < ended - 0.5:
-            (found.off if name == "off" else found.answered).append(after[0] - pressed)
+    times = {name: [at for at, words in told if words[0] == name] for name in ("reply", "off", "turned")}
+    for name, delays in (("off", found.off), ("reply", found.answered)):
+        pressed = [at for at, key in keys if key == name]
+        for number, at in enumerate(pressed):
+            if not began < at < ended - 0.5 or any(-TURNED_S < at - turned < TURNED_S for turned in times["turned"]):
+                continue
+            until = pressed[number + 1] if number + 1 < len(pressed) else math.inf
+            answers = [answer for answer in times[name] if at <= answer < until]
+            if answers:
+                delays.append(answers[0] - at)
+            else:
+                found.lost += 1
+    for at, words in told:
+        if words[0] == "late" and at <= ended:
+            found.late.append((float(words[1]), float(words[2]), " ".join(words[3:])))
+        elif words[0] == "collected":
+            found.collected.append((float(words[1]), words[2]))
+    found.answers = sum(words[0] == "model" for _, words in told)
     return found
 
 
@@ -293,19 +241,30 @@ def words(delays: list[float]) -> str:
     )
 
 
+def tell(found: Measured) -> None:
+    """Print one run."""
+    print(f"  from show to the figures:  {words(found.painted)}; overtaken by a newer one: {found.unseen}")
+    print(f"  from a key to its reply:   {words(found.answered)}")
+    print(f"  from F9 to off:            {words(found.off)}; keys without an answer: {found.lost}")
+    for late_s, starved_s, where in sorted(found.late, reverse=True)[:3]:
+        print(f"  held up for {late_s * 1e3:4.0f} ms ({starved_s * 1e3:4.0f} ms of it starved): {where}")
+    if found.collected:
+        longest_s, which = max(found.collected)
+        print(f"  garbage collector: {len(found.collected)} stops, most {longest_s * 1e3:.0f} ms, generation {which}")
+    print(f"  processor: {found.share * 100:.1f} % of one core; {found.bytes_per_s / 1e3:.1f} kB/s to the terminal")
+
+
 def main() -> int:
     """Measure and print."""
-    if sys.argv[1:2] == ["--app"]:
-        return app_side(Path(sys.argv[2]), float(sys.argv[3]))
     seconds = float(sys.argv[1]) if len(sys.argv) > 1 else 20.0
-    print(f"{seconds:.0f} s at {1 / INTERVAL_S:.0f} readings a second; load of this computer {os.getloadavg()[0]:.1f}")
-    for columns, rows, width, height in SIZES:
-        found = measure(columns, rows, (width, height), seconds)
-        print(f"{columns}x{rows}")
-        print(f"  from show to the figures:  {words(found.painted)}; overtaken by a newer one: {found.unseen}")
-        print(f"  from a key to its reply:   {words(found.answered)}")
-        print(f"  from F9 to off:            {words(found.off)}")
-        print(f"  processor: {found.share * 100:.1f} % of one core; {found.bytes_per_s / 1e3:.1f} kB/s to the terminal")
+    print(f"{seconds:.0f} s at {1 / INTERVAL_S:.0f} readings a second")
+    for aside in ("alone", "aside"):
+        for columns, rows, width, height in SIZES:
+            before = os.getloadavg()[0]
+            found = measure(columns, rows, (width, height), seconds, aside)
+            with_model = f", with the model at work aside ({found.answers} answers)" if aside == "aside" else ""
+            print(f"{columns}x{rows}{with_model}; load of this computer {before:.1f} to {os.getloadavg()[0]:.1f}")
+            tell(found)
     return 0
 
 

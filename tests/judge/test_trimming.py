@@ -13,8 +13,9 @@ import pytest
 from benchkit.judge.advice import Advice
 from benchkit.judge.answers import OfUnits
 from benchkit.judge.screw import KNEE_V, Scale, taken_for
-from benchkit.judge.trimming import MOST_TURNS, Adviser
+from benchkit.judge.trimming import Adviser
 from benchkit.judge.trust import RailLine
+from benchkit.judge.turning import MOST_TURNS, SLACK
 
 TARGET_V, LOW_V, HIGH_V = 0.022, 0.0198, 0.0242
 SLOPE_V = 0.016
@@ -208,7 +209,7 @@ def test_overshot() -> None:
     advice = bench.look()
     assert advice.mood == "overshot"
     assert advice.words.startswith("too far: ")
-    assert advice.words.endswith(" clockwise")
+    assert advice.words.removesuffix(SLACK).endswith(" clockwise")
 
 
 def test_wrong_way() -> None:

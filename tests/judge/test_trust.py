@@ -39,6 +39,24 @@ def test_whether_the_current_agrees(
 
 
 @pytest.mark.parametrize(
+    ("line", "rail_a", "expected"),
+    [
+        (LINE, 0.0203, 0.084),
+        (LINE, 0.084, 0.084),  # the bias is still there
+        (LINE, 0.010, None),  # that is neither
+        (LINE, None, None),
+        (FEEDS, 0.5, None),
+        (None, 0.02, None),
+    ],
+)
+def test_what_the_current_was_before_a_fall(
+    line: RailLine | None, rail_a: float | None, expected: float | None
+) -> None:
+    found = Trust(SCALE, track=12.0, line=line).current_before(0.016, 3e-5, NOISE_V, rail_a)
+    assert found == (None if expected is None else pytest.approx(expected))
+
+
+@pytest.mark.parametrize(
     ("value", "rail_a", "expected"),
     [(0.0, 0.05, False), (0.0, 0.07, True), (0.022, 0.15, False), (0.022, 0.20, True), (0.0, None, False)],
 )

@@ -34,8 +34,8 @@ from benchkit.session.clock import WallClock
 from benchkit.session.front import Front, Reply, View
 from benchkit.session.hands import Hands
 from benchkit.session.start import Runner, Setting
-from benchkit.ui.app import run_app
 from benchkit.ui.entry import Identity, Opening
+from benchkit.ui.running import run_app
 from tests.instruments.server import TestMeter, TestSupply
 from tests.procedure.driver import SMALL, judged, limits_of, small, suspected
 from tests.session.fakes import GOOD_VALUES, well

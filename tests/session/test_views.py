@@ -118,7 +118,7 @@ def test_an_override_is_shown_with_its_reason() -> None:
 def test_numbers_come_as_text_and_as_numbers() -> None:
     drive = begun(small()).until("power.current.rail+.current")
     result = next(one for one in view(drive).results if one.item == "power.output-first.output")
-    assert (result.value_text, result.low_text, result.high_text) == ("500.00 mV", "-10.000 V", "10.000 V")
+    assert (result.value_text, result.low_text, result.high_text) == ("500 mV", "-10.000 V", "10.000 V")
     assert (result.value, result.low, result.high) == (0.5, -10.0, 10.0)
     confirmed = view(drive).results[1]
     assert (confirmed.value_text, confirmed.value) == ("", None)

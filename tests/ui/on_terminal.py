@@ -13,8 +13,8 @@ from pathlib import Path
 
 from benchkit.events import Closed
 from benchkit.session.front import Front
-from benchkit.ui.app import run_app
 from benchkit.ui.entry import Identity
+from benchkit.ui.running import run_app
 from tests.ui import scripted
 
 FILE, HOW = Path(sys.argv[1]), sys.argv[2]

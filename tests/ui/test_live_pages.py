@@ -136,7 +136,7 @@ def test_the_bell_rings_once_for_each_value_taken_by_itself() -> None:
             bench.front.show(replace(PROBING, live=replace(PROBING.live, captured=0)))
             bench.front.show(replace(PROBING, live=replace(PROBING.live, captured=1)))
             assert bells == [3], "the next channel counts anew"
-            app._bell = False
+            app._painter._bell = False
             bench.front.show(replace(PROBING, live=replace(PROBING.live, captured=2)))
             assert bells == [3], "nobody wants to hear it"
 

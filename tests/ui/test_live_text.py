@@ -7,7 +7,7 @@ import pytest
 
 from benchkit.session.front import LiveView
 from benchkit.ui.live_text import LiveLines, live_line
-from benchkit.ui.widgets.trim_words import MOOD_LOOKS
+from benchkit.ui.widgets.trim_words import MOOD_LOOKS, plain_reading
 from tests.ui.live_views import LIVES, PROBING, SOAK_VIEW
 
 
@@ -23,7 +23,7 @@ class Clock:
 def test_a_line_says_all_that_the_screen_says(name: str) -> None:
     live = LIVES[name]
     line = live_line(live)
-    assert line.startswith(f"{live.point} {live.text}, ")
+    assert line.startswith(f"{live.point} {plain_reading(live)}, ")
     for words in (live.advice, live.rate_text, live.settles_text, live.capture):
         assert words in line
     assert ("TOO LOW" if name == "turn" else MOOD_LOOKS[live.mood].word) in line

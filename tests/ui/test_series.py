@@ -111,4 +111,6 @@ def test_a_walk_that_is_gone_on_with_is_followed_by_the_channels_behind_it() -> 
 def test_n_goes_on_and_q_leaves(label: str, usual: str, keys: dict[str, str]) -> None:
     question = end_question(label)
     assert question.choices[0].value == usual
+    assert question.do.startswith("Enter leaves benchkit" if usual == LEAVE else f"Enter goes on with the {label}")
+    assert (not label) == (";" not in question.do)
     assert {letter: choice.value for letter, choice in keyed(question.choices)} == keys

@@ -194,7 +194,7 @@ def test_on_screens_a_channel_begins_at_once_and_a_unit_asks_for_its_number(
             more["on_next"]()
         return closed.exit_status
 
-    monkeypatch.setattr("benchkit.ui.app.run_app", run_app)
+    monkeypatch.setattr("benchkit.ui.running.run_app", run_app)
     turn = first_turn(("L", "R"), "")
     assert walking._on_screens(walks.prepare, turn, "Mara", bell=False) == 1
     assert walks.walked == [("A-17", "L", "Mara"), ("A-17", "R", "Mara"), ("A-18", "L", "Mara")]

@@ -29,10 +29,12 @@ class Page(Vertical):
         self.card = Card(classes="card")
         self.answer = Answer(classes="answer", guard_s=guard_s)
         self.question: Question | None = None
+        self.by_hand = False
 
     def put(self, question: Question, refused: str) -> None:
         """Put a question."""
         self.question = question
+        self.answer.by_hand = self.by_hand
         self.card.put(question)
         self.answer.put(question, refused)
 

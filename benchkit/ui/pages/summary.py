@@ -33,6 +33,7 @@ class SummaryPage(Page):
         super().__init__(guard_s, **more)
         self._verdict = Words(classes="summary-verdict")
         self._body = Words(classes="summary-body")
+        self._enter = Words(classes="summary-enter")
         self._scroll = VerticalScroll(self._body, classes="summary-scroll", can_focus=False)
         self._view: View | None = None
         self._looked = False
@@ -42,12 +43,14 @@ class SummaryPage(Page):
         """Lay out verdict, body, answer."""
         yield self._verdict
         yield self._scroll
+        yield self._enter
         yield self.answer
 
     def put(self, question: Question, refused: str) -> None:
         """Put the last question of all: leave, or what comes next."""
         self.question = question
         self.answer.put(question, refused)
+        self._enter.say(Text(question.do, style=INK))
 
     def say(self, view: View) -> None:
         """Show how the walk ended."""

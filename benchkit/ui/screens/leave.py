@@ -12,7 +12,7 @@ from benchkit.procedure.actions import Choice
 from benchkit.session.front import SupplyView
 from benchkit.session.supply_view import PULL_THE_PLUG
 from benchkit.ui.screens.base import BenchScreen
-from benchkit.ui.widgets.answer import Choices
+from benchkit.ui.widgets.choices import Choices
 from benchkit.ui.widgets.words import Words
 
 STAY = Choice(value="no", label="stay here")

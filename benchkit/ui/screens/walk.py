@@ -6,11 +6,12 @@ from typing import Any, ClassVar, Final
 
 from rich.table import Table
 from rich.text import Text
+from textual import events
 from textual.binding import BindingType
 from textual.widgets import ContentSwitcher
 
 from benchkit.procedure.actions import Question
-from benchkit.session.front import View
+from benchkit.session.front import READ_BY_HAND, View
 from benchkit.ui.layout import ROOMY
 from benchkit.ui.look import CARE, INK, LINE, QUIET, STRONG, VERDICT_COLOURS, safe
 from benchkit.ui.pages.base import Page
@@ -21,6 +22,7 @@ from benchkit.ui.pages.watch import SoakPage, WatchPage, is_soak
 from benchkit.ui.screens.base import TURN_OVER, BenchScreen
 from benchkit.ui.series import end_question
 from benchkit.ui.widgets.answer import Answer
+from benchkit.ui.widgets.message_line import MessageLine
 from benchkit.ui.widgets.trail_words import Role, trail
 from benchkit.ui.widgets.words import Words
 
@@ -63,7 +65,7 @@ class WalkScreen(BenchScreen):
         super().__init__(**more)
         self._head = Words(classes="walk-head")
         self._trail = Words(classes="walk-trail")
-        self._message = Words(classes="walk-message")
+        self._message = MessageLine(classes="walk-message")
         self._pages: dict[str, Page] = {
             "step": StepPage(guard_s, id="step"),
             "hold": HoldPage(guard_s, id="hold"),
@@ -93,6 +95,7 @@ class WalkScreen(BenchScreen):
         page = PAGE_FOR.get(question.kind, "step")
         soak = page == "watch" and self._view is not None and is_soak(self._view)
         self._turn_to("soak" if soak else page)
+        self.page.by_hand = self._view is not None and self._view.meter == READ_BY_HAND
         self.page.put(question, refused)
         if self._view is not None:
             self.page.say(self._view)
@@ -117,14 +120,16 @@ class WalkScreen(BenchScreen):
         self._say_head(view)
         self._say_trail(view)
         self.page.say(view)
-        self._message.say(view.message)
-        self._message.set_class(not view.message, "empty")
+        self._say_message()
         self.refresh_off_line()
 
     def age(self) -> None:
         """Let a watched reading grow old in sight."""
         self.page.mark_overflow()
         self.page.age()
+        self._say_message()
+        if self.focused is None and self.arrangement != "tiny":
+            self.page.answer.take_focus()  # whatever took it away: a question that stands has the keys
 
     def lay_out(self, width: int, height: int) -> None:
         """Choose the layout; the trail has another form where there is room."""
@@ -151,6 +156,11 @@ class WalkScreen(BenchScreen):
         """Move the sheet."""
         self.page.turn_over(rows)
 
+    def on_key(self, event: events.Key) -> None:
+        """Take what is typed between two questions, where it belongs to the second."""
+        if self.page.answer.type_ahead(event):
+            event.stop()
+
     def on_answer_given(self, message: Answer.Given) -> None:
         """Hand the answer on."""
         message.stop()
@@ -163,6 +173,14 @@ class WalkScreen(BenchScreen):
         if self._switcher.current != page:
             self.page.withdraw()
             self._switcher.current = page
+
+    def _say_message(self) -> None:
+        """Show the message; beside a plot it has one row, and comes part by part."""
+        if self._view is None:
+            return
+        roomy = self.arrangement == "roomy"
+        most = 3 if roomy else 1 if self.page.id in ("trim", "soak") else 2
+        self._message.put(self._view.message, self.app.size.width - 2, most)
 
     def _say_head(self, view: View) -> None:
         row = Table.grid(expand=True)

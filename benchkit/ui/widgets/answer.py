@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import time
 from collections.abc import Callable
-from typing import Any, Final
+from typing import Any, Final, Self
 
 from rich.text import Text
 from textual import events
@@ -14,8 +14,9 @@ from textual.widgets import Input
 
 from benchkit.procedure.actions import Choice, Question
 from benchkit.session.front import Reply
-from benchkit.ui.look import CARE, INK, QUIET, STRONG, safe
-from benchkit.ui.widgets.answer_keys import keyed, keys_in_words, typed_reply
+from benchkit.ui.look import safe
+from benchkit.ui.widgets.answer_keys import typed_reply
+from benchkit.ui.widgets.choices import Choices, keeps_keys
 from benchkit.ui.widgets.words import Words
 
 GUARD_S = 0.3
@@ -29,124 +30,24 @@ TOO_SOON = "Not taken: the question had only just come up. Read it, then press t
 SPACE_TAKES: Final = ("trim", "probes")
 """Kinds of questions to which the space bar, and so a foot switch that types it, answers that the reading be taken."""
 
+BEGINS_ENTRY: Final = "0123456789+-.oO"
+"""With what the reading of a meter begins, overload (OL) too; no choice of a question about probes has these keys."""
+BY_HAND_HINT: Final = "Probes on? Type what the meter shows, with its unit; or Enter first."
+
 NOTHING_TO_TAKE: Final = "The space bar takes a reading, and none is to be taken here."
-
-
-class Choices(Words, can_focus=True):
-    """The choices of a question: Enter takes the marked one, a letter takes its own, arrows move the mark."""
-
-    class Taken(Message):
-        """Posted when a choice was taken."""
-
-        def __init__(self, choice: Choice) -> None:
-            super().__init__()
-            self.choice = choice
-
-    class Refused(Message):
-        """Posted when a key was pressed that takes none of the choices."""
-
-        def __init__(self, words: str) -> None:
-            super().__init__()
-            self.words = words
-
-    def __init__(self, **more: Any) -> None:
-        super().__init__(**more)
-        self._choices: tuple[tuple[str, Choice], ...] = ()
-        self._marked = 0
-        self._stacked = False
-        self._arrows = True
-        self._usual = True
-        self._space = False
-        self._drawn_for = 0
-
-    def offer(
-        self,
-        choices: tuple[Choice, ...],
-        *,
-        stacked: bool = False,
-        marked: int = 0,
-        arrows: bool = True,
-        usual: bool = True,
-        space: bool = False,
-    ) -> None:
-        """Offer `choices`, one a row when `stacked`; without `arrows` these keys are left to others.
-
-        Without a `usual` one Enter takes none of them: a confirmation wants its own key.  With `space` the space bar
-        takes the first.
-        """
-        self._usual, self._space = usual, space
-        self._choices = keyed(choices)
-        self._marked = min(marked, max(0, len(choices) - 1))
-        self._stacked = stacked
-        self._arrows = arrows
-        self._draw()
-
-    @property
-    def keys(self) -> str:
-        """The keys that answer, in words."""
-        keys = keys_in_words([choice for _, choice in self._choices])
-        return f"{keys}, or Enter" if self._usual else keys
-
-    def on_key(self, event: events.Key) -> None:
-        """Take or move."""
-        if not self._choices:
-            return
-        if event.key == "enter" and not self._usual:
-            self.post_message(self.Refused(f"Enter answers nothing here: {self.keys}."))
-        elif event.key == "enter":
-            self.post_message(self.Taken(self._choices[self._marked][1]))
-        elif self._arrows and event.key in (("left", "right", "up", "down") if self._stacked else ("left", "right")):
-            step = 1 if event.key in ("right", "down") else -1
-            self._marked = (self._marked + step) % len(self._choices)
-            self._draw()
-        else:
-            found = [
-                choice for letter, choice in self._choices if event.character and event.character.lower() == letter
-            ]
-            if not found:
-                if event.is_printable and event.character and event.character.strip():
-                    self.post_message(self.Refused(f"{safe(event.character)} answers nothing here: {self.keys}."))
-                return
-            self.post_message(self.Taken(found[0]))
-        event.stop()
-        event.prevent_default()
-
-    def watch_has_focus(self, _has_focus: bool) -> None:
-        """Show the mark, or that Enter goes elsewhere."""
-        super().watch_has_focus(_has_focus)
-        self._draw()
-
-    def _draw(self) -> None:
-        text = Text()
-        width, filled = self.size.width, 0
-        for number, (letter, choice) in enumerate(self._choices):
-            marked = self._usual and number == self._marked and self.has_focus
-            key = "Enter" if marked else letter.upper()
-            if self._space and number == 0:
-                key += " or space"
-            one = Text()
-            one.append(f" {key} ", style=f"bold reverse {CARE}" if marked else f"bold {CARE}")
-            one.append(f" {safe(choice.label)}", style=f"bold {STRONG}" if marked else INK)
-            if marked and not self._stacked and letter != "enter":
-                one.append(f" ({letter.upper()})", style=QUIET)
-            if number:
-                fits = not width or filled + 3 + one.cell_len <= width
-                text.append("   " if fits and not self._stacked else "\n")
-                filled = filled + 3 if fits else 0
-            filled += one.cell_len
-            text.append_text(one)
-        self._drawn_for = width
-        self.say(text)
-
-    def on_resize(self) -> None:
-        """Break the line between two choices, never inside one."""
-        if self.size.width != self._drawn_for:
-            self._draw()
 
 
 def _ends(choices: tuple[Choice, ...]) -> bool:
     """Whether one of them ends the walk: then no arrow may bring Enter onto it."""
     return any(choice.value == "make safe" for choice in choices)
+
+
+class Entry(Input):
+    """Where something is typed."""
+
+    def blur(self) -> Self:
+        """Give the keys away, unless this is shown."""
+        return self if keeps_keys(self) else super().blur()
 
 
 class Answer(Vertical):
@@ -169,8 +70,12 @@ class Answer(Vertical):
         self._since = 0.0
         self._held_until = 0.0
         self._hint = Words(classes="answer-hint")
-        self._entry = Input(classes="answer-entry", compact=True, select_on_focus=False)
+        self._entry = Entry(classes="answer-entry", compact=True, select_on_focus=False)
         self._choices = Choices(classes="answer-choices")
+        self._choices.typed_ahead = self.type_ahead
+        self._ahead: tuple[str, str] | None = None
+        self.by_hand = False
+        """A person reads the meter: a figure typed where probes are to be placed begins the entry that follows."""
 
     def compose(self) -> Any:
         """Lay out the three parts."""
@@ -198,9 +103,12 @@ class Answer(Vertical):
         types = wants_entry(question)
         if not again or question.kind == "hold":
             self._entry.value = ""
-        self._hint.say(_hint(question, refused, types))
+        hint = _hint(question, refused, types)
+        if not hint.plain and self._begins_entry(question):
+            hint = Text(BY_HAND_HINT)
+        self._hint.say(hint)
         self._hint.set_class(bool(refused), "refused")
-        self._hint.display = bool(_hint(question, refused, types).plain)
+        self._hint.display = bool(hint.plain)
         self._entry.display = types
         shown = question.choices
         if types:
@@ -213,6 +121,37 @@ class Answer(Vertical):
         self._focus()
         if not refused:
             self._go_on_typing(question)
+            self._take_typed_ahead(question)
+
+    def _take_typed_ahead(self, question: Question) -> None:
+        """Put what was typed before its entry stood there into it."""
+        open("/tmp/ahead.log","a").write(repr((self._ahead, question.kind, question.point, question.item, self.parent.id))+"\n")
+        point, text = self._ahead or ("", "")
+        self._ahead = None
+        if text and question.kind == "by hand" and question.point == point:
+            self._entry.value = text
+            self._entry.cursor_position = len(text)
+
+    def type_ahead(self, key: events.Key) -> bool:
+        """Take a key that begins an entry, or that belongs to one which has been begun and does not stand there yet."""
+        character = key.character if key.is_printable else None
+        if self._question is None:
+            if self._ahead is None:
+                return False
+            self._ahead = (self._ahead[0], _typed_on(self._ahead[1], key.key, character))
+            return True
+        question = self._question
+        if not self._begins_entry(question) or character is None or character not in BEGINS_ENTRY:
+            return False
+        if self._too_soon():
+            self._complain(TOO_SOON)
+        else:
+            self._give(Reply(choice=question.choices[0].value))
+            self._ahead = (question.point, character)
+        return True
+
+    def _begins_entry(self, question: Question) -> bool:
+        return self.by_hand and question.kind == "probes" and bool(question.point) and bool(question.choices)
 
     def _keep_half_typed(self) -> None:
         if self._question is not None and self._reason_for is not None:
@@ -257,6 +196,8 @@ class Answer(Vertical):
         """Take the reading that the question is about, as the space bar or a foot switch wants it."""
         question = self._question
         if question is None:
+            if self._ahead is not None:
+                self._ahead = (self._ahead[0], f"{self._ahead[1]} ")
             return
         if question.kind not in SPACE_TAKES or not question.choices:
             self._complain(NOTHING_TO_TAKE)
@@ -345,6 +286,13 @@ class Answer(Vertical):
         self._half_typed = None
         self.withdraw()
         self.post_message(self.Given(reply))
+
+
+def _typed_on(text: str, key: str, character: str | None) -> str:
+    """Return a half typed text after another key."""
+    if key == "backspace":
+        return text[:-1]
+    return text if character is None else text + character
 
 
 def wants_entry(question: Question) -> bool:

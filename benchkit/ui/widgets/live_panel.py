@@ -16,6 +16,7 @@ from benchkit.ui.widgets.digits import BigReading
 from benchkit.ui.widgets.ring import Ring
 from benchkit.ui.widgets.trend import Trend
 from benchkit.ui.widgets.trim_words import (
+    SHORT_WORDS,
     STALE_AFTER_S,
     Tone,
     advice_words,
@@ -34,7 +35,7 @@ TONE_STYLES: Final[dict[Tone, str]] = {
     "alarm": f"bold reverse {FAIL}",
 }
 NARROW: Final = 70
-"""Below so many columns the word of a calm mood makes room for the advice."""
+"""Below so many columns the word of a mood makes room for the advice, but for the side and for an alarm."""
 
 
 class LivePanel(Vertical):
@@ -88,7 +89,8 @@ class LivePanel(Vertical):
     def _say_mood(self, live: LiveView, stale: bool) -> None:
         look, advice = mood_look(live, stale), advice_words(live, stale)
         narrow = self.app.size.width < NARROW
-        word = "" if narrow and advice and look.tone != "alarm" else f" {look.word}"
+        word = SHORT_WORDS.get(look.word, look.word if look.tone == "alarm" else "") if narrow and advice else look.word
+        word = f" {word}" if word else ""
         style = f"bold {STRONG}" if look.tone != "alarm" else f"bold {FAIL}"
         text = Text.assemble((f" {look.shape}{word} ", TONE_STYLES[look.tone]), (f"  {safe(advice)}", style))
         self._mood.say(text)

@@ -12,7 +12,7 @@ from textual.containers import Horizontal
 from benchkit.session.front import LiveView
 from benchkit.ui.look import FAIL, INK, PASS, QUIET, STRONG, safe
 from benchkit.ui.widgets.digits import BigReading
-from benchkit.ui.widgets.trim_words import MOOD_LOOKS, STALE_AFTER_S
+from benchkit.ui.widgets.trim_words import MOOD_LOOKS, STALE_AFTER_S, plain_reading
 from benchkit.ui.widgets.words import Words
 
 
@@ -53,7 +53,7 @@ class ProbeStrip(Horizontal):
         if live is not None:
             age_s = live.age_s + self._clock() - self._received_s
             stale = age_s > STALE_AFTER_S
-            self._reading.say(safe(live.text), "", stale)
+            self._reading.say(safe(plain_reading(live)), "", stale)
             if stale:
                 text.append(f"▒▒▒ no fresh reading for {age_s:.0f} s\n", style=f"bold {FAIL}")
             else:

@@ -46,11 +46,8 @@ def share_bar(share: float, width: int = BAR) -> str:
 
 
 def _suspect(suspect: SuspectView, evidence: int) -> list[Text | Padding]:
-    title = Text.assemble(
-        (f"{share_bar(suspect.share)}  ", INK),
-        (f"{suspect.share_text}  ", INK),
-        (safe(suspect.title), f"bold {STRONG}"),
-    )
+    share = f"{share_bar(suspect.share)}  {suspect.share_text}  " if suspect.share_text else " " * INDENT
+    title = Text.assemble((share, INK), (safe(suspect.title), f"bold {STRONG}"))
     if suspect.alike:
         title.append(f", {safe(suspect.alike)}", style=QUIET)
     below = [Padding(Text(safe(line), style=INK), (0, 0, 0, INDENT)) for line in suspect.evidence[:evidence]]

@@ -35,6 +35,9 @@ LEAST_FILLED: Final = 0.5
 REACHES: Final = (MARGIN, 1.0, 2.0, 4.0, 8.0)
 """What is shown beyond a limit, in distances between the limits."""
 
+FEW_ROWS: Final = 4
+"""So many rows hold both limits, the target between them, and one row more on the side to which the readings reach."""
+
 THIRDS: Final = "°·."
 """Dots in the upper, middle and lower third of a cell."""
 
@@ -148,8 +151,17 @@ def _heights(rows: int, trace: Trace, past_s: float) -> _Heights:
     values += [value for _, value in trace.expected if math.isfinite(value)]
     values += [value for value in (trace.rest_low, trace.rest_high) if value is not None]
     most = max(0.0, (rows - 1) / 2.0 - 1.0)
-    below = _reach(max((trace.low - value for value in values), default=0.0) / span, most - MARGIN)
-    above = _reach(max((value - trace.high for value in values), default=0.0) / span, most - below)
+    under = max((trace.low - value for value in values), default=0.0) / span
+    over = max((value - trace.high for value in values), default=0.0) / span
+    if rows == FEW_ROWS:
+        room = span / 2.0
+        return _Heights(
+            bottom=trace.low - (room if under > over else 0.0),
+            top=trace.high + (0.0 if under > over else room),
+            rows=rows,
+        )
+    below = _reach(under, most - MARGIN)
+    above = _reach(over, most - below)
     return _Heights(bottom=trace.low - below * span, top=trace.high + above * span, rows=rows)
 
 

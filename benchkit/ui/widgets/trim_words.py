@@ -7,7 +7,7 @@ from dataclasses import dataclass
 from typing import Final, Literal
 
 from benchkit.judge.advice import Mood
-from benchkit.quantities import show
+from benchkit.quantities import show, show_within
 from benchkit.session.front import LiveView
 from benchkit.ui.widgets.ring_cells import Sense, amount_of, sense_of
 
@@ -47,6 +47,21 @@ def in_step(value: float, target: float, unit: str) -> str:
     factor, prefix = next(((f, p) for f, p in prefixes if size >= f * (1.0 - 1e-9)), prefixes[-1])
     decimals = max(0, 3 - math.floor(math.log10(size / factor)))
     return f"{value / factor:.{decimals}f} {prefix}{unit}"
+
+
+def plain_reading(live: LiveView) -> str:
+    """Return a reading with no more places than a thousandth of the distance between its limits has.
+
+    Examples
+    --------
+    >>> plain_reading(LiveView(point="p", unit="V", value=-410e-9, text="-410.00 nV", low=0.0, high=0.0012,
+    ...                        target=0.0006, age_s=0.0, inside=False))
+    '0 uV'
+    """
+    span = live.high - live.low
+    if live.value is None or not math.isfinite(span) or span <= 0.0:
+        return live.text
+    return show_within(live.value, live.unit, span / 100.0)
 
 
 def figure(value: float, unit: str) -> str:
@@ -89,17 +104,23 @@ MOOD_LOOKS: Final[dict[Mood, MoodLook]] = {
 STALE_LOOK: Final = MoodLook(shape="▒▒▒", word="NO FRESH READING", tone="alarm")
 MORE_LOOK: Final = MoodLook(shape="▲", word="TOO LOW", tone="turn")
 LESS_LOOK: Final = MoodLook(shape="▼", word="TOO HIGH", tone="turn")
+OVER_LOOK: Final = MoodLook(shape="├┤●", word="OVERSHOT, TOO HIGH", tone="alarm")
+UNDER_LOOK: Final = MoodLook(shape="●├┤", word="OVERSHOT, TOO LOW", tone="alarm")
+SHORT_WORDS: Final = {"TOO LOW": "LOW", "TOO HIGH": "HIGH"}
+"""Where there is no room for more."""
 
 DO_NOT_TURN: Final = "do not turn"
 
 
 def mood_look(live: LiveView, stale: bool = False) -> MoodLook:
-    """Return how it is told what is going on; a turn that is due also says on which side the reading lies."""
+    """Return how it is told what is going on; what has a side also says on which the reading lies."""
     if stale:
         return STALE_LOOK
     look = MOOD_LOOKS[live.mood]
     if live.mood == "turn":
         return {"below": MORE_LOOK, "above": LESS_LOOK, "inside": MOOD_LOOKS["inside"]}.get(where(live), look)
+    if live.mood == "overshot":
+        return {"below": UNDER_LOOK, "above": OVER_LOOK}.get(where(live), look)
     return look
 
 

@@ -26,7 +26,7 @@ class Words(Static):
         if key == self._shown:
             return False
         self._shown = key
-        self.update(look.safe(words) if isinstance(words, str) else words)
+        self._change(look.safe(words) if isinstance(words, str) else words)
         return True
 
     def say_drawn(self, key: object, drawn: RenderableType) -> bool:
@@ -34,8 +34,19 @@ class Words(Static):
         if key == self._shown:
             return False
         self._shown = key
-        self.update(drawn)
+        self._change(drawn)
         return True
+
+    def _change(self, drawn: RenderableType) -> None:
+        """Show something new; the screen is laid out anew only when it takes another number of rows."""
+        width = self.content_size.width
+        if not self.is_mounted or not self.display or not width:
+            self.update(drawn)
+            return
+        before = self.get_content_height(self.container_size, self.app.size, width)
+        self.update(drawn, layout=False)
+        if self.get_content_height(self.container_size, self.app.size, width) != before:
+            self.refresh(layout=True)
 
     def with_words(self, drawn: RenderableType) -> Words:
         """Return itself showing `drawn`, for use while composing."""

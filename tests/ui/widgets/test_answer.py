@@ -6,13 +6,15 @@ import asyncio
 from collections.abc import Awaitable, Callable
 
 import pytest
+from textual import events
 from textual.app import App, ComposeResult
 from textual.widgets import Input
 
 from benchkit.procedure.actions import Choice, Question
 from benchkit.session.front import Reply
-from benchkit.ui.widgets.answer import TOO_SOON, Answer, Choices
+from benchkit.ui.widgets.answer import BY_HAND_HINT, TOO_SOON, Answer
 from benchkit.ui.widgets.answer_keys import keys_in_words
+from benchkit.ui.widgets.choices import Choices
 from benchkit.ui.widgets.words import Words
 from tests.ui.scripted import BY_HAND_READING, CONFIRM, DECIDE, HOLD
 
@@ -31,6 +33,9 @@ class Foot(App[None]):
 
     def on_answer_given(self, message: Answer.Given) -> None:
         self.replies.append(message.reply)
+
+    def on_key(self, event: events.Key) -> None:
+        self.answer.type_ahead(event)
 
     @property
     def hint(self) -> str:
@@ -142,5 +147,75 @@ def test_a_button_called_enter_is_not_named_twice() -> None:
         )
         await press()
         assert app.hint == "Type, then Enter."
+
+    on_foot(test)
+
+
+PLACE = Question(
+    item="upper",
+    kind="probes",
+    title="Upper emitter drop",
+    do="Clip on.",
+    point="emitter.upper.1",
+    choices=(Choice(value="done", label="done"), Choice(value="make safe", label="make safe", wants_reason=True)),
+)
+
+
+def test_a_figure_typed_while_probes_are_placed_begins_the_entry_that_follows() -> None:
+    async def test(app: Foot, press: Callable[..., Awaitable[None]]) -> None:
+        app.answer.by_hand = True
+        app.answer.put(PLACE)
+        await press()
+        assert app.hint == BY_HAND_HINT
+        await press("1")
+        assert app.replies == [Reply(choice="done")]
+        await press("2", ".", "9", "backspace", "3", "m", "V")  # before the entry is there
+        app.answer.put(BY_HAND_READING)
+        await press()
+        assert app.entry == "12.3mV"
+        await press("enter")
+        assert app.replies[1:] == [Reply(choice="done", text="12.3mV")]
+
+    on_foot(test)
+
+
+@pytest.mark.parametrize(("by_hand", "key"), [(False, "1"), (True, "x")])
+def test_no_other_key_and_no_meter_of_its_own_begins_an_entry(by_hand: bool, key: str) -> None:
+    async def test(app: Foot, press: Callable[..., Awaitable[None]]) -> None:
+        app.answer.by_hand = by_hand
+        app.answer.put(PLACE)
+        await press(key)
+        assert app.replies == []
+        assert "answers nothing here" in app.hint
+
+    on_foot(test)
+
+
+def test_what_was_typed_ahead_goes_into_no_other_entry() -> None:
+    async def test(app: Foot, press: Callable[..., Awaitable[None]]) -> None:
+        app.answer.by_hand = True
+        app.answer.put(PLACE)
+        await press("1")
+        app.answer.put(HOLD)
+        app.answer.put(BY_HAND_READING)
+        await press()
+        assert app.entry == ""
+
+    on_foot(test)
+
+
+def test_a_late_word_of_having_been_hidden_takes_no_keys_from_the_next_question() -> None:
+    async def test(app: Foot, press: Callable[..., Awaitable[None]]) -> None:
+        for question in (CONFIRM, BY_HAND_READING, CONFIRM):
+            app.answer.withdraw()
+            app.answer.put(question)
+            await press()
+            focused = app.focused
+            assert isinstance(focused, Input if question is BY_HAND_READING else Choices)
+            focused.blur()  # what the toolkit does when it hears of it
+            assert app.focused is focused
+        app.answer.withdraw()
+        await press()
+        assert app.focused is None
 
     on_foot(test)

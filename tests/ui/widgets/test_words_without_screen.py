@@ -16,6 +16,7 @@ from benchkit.ui.widgets.card import progress_words, time_words
 from benchkit.ui.widgets.off_line import how_to_switch_off
 from benchkit.ui.widgets.outcome import limits_words, marks_of, pointed, result_line, verdict_strip
 from benchkit.ui.widgets.summary_words import NOTHING_BROKEN, broken_words, closing_sentence, still_open
+from benchkit.ui.widgets.suspects_text import suspects_drawn
 from benchkit.ui.widgets.trail_words import count_by_verdict, trail
 from benchkit.ui.widgets.trim_words import (
     MOOD_LOOKS,
@@ -24,6 +25,7 @@ from benchkit.ui.widgets.trim_words import (
     advice_words,
     in_step,
     mood_look,
+    plain_reading,
     ring_look,
     target_words,
     where,
@@ -38,6 +40,7 @@ from tests.ui.scripted import (
     ON,
     ONE_SIDED,
     PASSED,
+    SUSPECTED,
     TEXT,
     VIEW,
     live,
@@ -193,6 +196,8 @@ def test_without_advice_the_side_is_said() -> None:
     assert (mood_look(live(0.001)).word, advice_words(live(0.001))) == ("TOO LOW", "MORE bias")
     assert (mood_look(live(0.03)).word, advice_words(live(0.03))) == ("TOO HIGH", "LESS bias")
     assert (mood_look(live(0.02)).word, advice_words(live(0.02))) == ("INSIDE", "")
+    assert mood_look(replace(live(0.03), mood="overshot")).word == "OVERSHOT, TOO HIGH"
+    assert mood_look(replace(live(0.001), mood="overshot")).word == "OVERSHOT, TOO LOW"
     assert advice_words(live(0.02), stale=True) == "do not turn"
     assert target_words(live(0.02)) == "target 20.00 mV, from 18.00 to 22.00"
 
@@ -255,3 +260,18 @@ def test_the_point_of_a_title_stands_first(title: str, point: str, rest: str) ->
 def test_what_broke_in_words() -> None:
     assert broken_words(NOTHING_BROKEN) == "No part of the simulated unit was burnt."
     assert broken_words("a: open; b: short") == "BURNT in the simulated unit: a: open; b: short."
+
+
+@pytest.mark.parametrize(
+    ("value", "high", "shown"),
+    [(-410e-9, 0.0012, "0 uV"), (0.00123456, 0.004, "1.235 mV"), (0.5, 20.0, "500 mV"), (12.3456, 20.0, "12.35 V")],
+)
+def test_a_reading_has_no_more_places_than_a_thousandth_of_its_limits(value: float, high: float, shown: str) -> None:
+    assert plain_reading(replace(live(0.02), value=value, low=0.0, high=high)) == shown
+
+
+def test_a_share_is_drawn_only_where_something_explains_the_readings() -> None:
+    told = SUSPECTED.suspects[0]
+    for text, bar in (("83 %", True), ("", False)):
+        title = suspects_drawn(replace(SUSPECTED, suspects=(replace(told, share_text=text),))).renderables[1]
+        assert (("█" in str(title)), ("83 %" in str(title))) == (bar, bar)
