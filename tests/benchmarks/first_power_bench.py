@@ -6,7 +6,8 @@ without a process, links, a journal on a disk, and heartbeats.  The instruments 
 message, only by a call instead of over a socket.
 
 What a campaign shares between walks of one design: the plan, the limits of each condition and the ensembles behind
-narrowed limits, all drawn from a seed of the campaign's own.  Units come from other seeds.
+narrowed limits, all drawn from a seed of the campaign's own.  Units come from other seeds.  Questions about suspects
+that the next reading supersedes at once aren't worked out: a person takes seconds for what takes no time here.
 """
 
 from __future__ import annotations
@@ -34,6 +35,7 @@ from benchkit.rehearsal.bench import RehearsalBench
 from benchkit.rehearsal.bench_file import bench_text
 from benchkit.rehearsal.standin import StandIn
 from benchkit.session import predictions, this_unit
+from benchkit.session.aside import Aside
 from benchkit.session.clock import SimulatedClock
 from benchkit.session.hands import Hands
 from benchkit.session.job import Job
@@ -276,6 +278,23 @@ def walk_of(design: Design, name: str = FIRST_POWER) -> Walk:
     return Walk(make_plan(procedure(name), design))
 
 
+BREATH_S = 0.15
+"""So long nothing is asked about suspects: in memory the next reading is there at once, and asks anew."""
+
+
+async def _find_suspects_later(aside: Aside) -> None:
+    """Ask for suspects once no newer question has come for a moment."""
+    while aside._suspect is not None:
+        wanted = None
+        while wanted is not aside._suspect:
+            wanted = aside._suspect
+            await asyncio.sleep(BREATH_S)
+        await _FIND_SUSPECTS(aside)
+
+
+_FIND_SUSPECTS = Aside._find_suspects
+
+
 def share_the_model(*, narrowing: bool = True, suspects: bool = True) -> None:
     """Let all walks of a design have their limits from one piece of work; switch off what is asked aside."""
     predict, check_warm, narrower = predictions.predict, predictions.check_warm, this_unit.Narrower
@@ -296,6 +315,7 @@ def share_the_model(*, narrowing: bool = True, suspects: bool = True) -> None:
 
     predictions.predict = shared_predict
     predictions.check_warm = shared_warm
+    Aside._find_suspects = _find_suspects_later  # type: ignore[method-assign, assignment]
     this_unit.Narrower = cache(narrower)  # type: ignore[misc, assignment]
     if not narrowing:
         this_unit.Narrower = _NoNarrower  # type: ignore[misc, assignment]

@@ -399,7 +399,9 @@ def main() -> None:
     parser.add_argument("--part", default="1/1", help="such as 2/3: every third design from the second on")
     parser.add_argument("--sockets", type=int, default=0, help="so many go over sockets too")
     parser.add_argument("--harm", type=Path, help="where the table of harmful faults is kept between runs")
-    parser.add_argument("--json", type=Path, help="what became of each unit, one a line; parts are joined with --join")
+    parser.add_argument(
+        "--json", type=Path, help="what became of each unit, one a line: units that stand there aren't walked again"
+    )
     parser.add_argument("--join", type=Path, nargs="+", help="print the table of such files, and do nothing else")
     parser.add_argument("--only", choices=PROCEDURES, help="units of one procedure only")
     parser.add_argument("--healthy", action="store_true", help="no faults")
@@ -421,11 +423,18 @@ def main() -> None:
     harm = Harm(arguments.harm)
     which, parts = (int(word) for word in arguments.part.split("/"))
     found: list[Told] = []
+    if arguments.json and arguments.json.exists():
+        found = [read_row(row) for row in arguments.json.read_text("utf-8").splitlines()]
+    there = {told.drawn.number for told in found}
     began_s, cpu_s = time.monotonic(), time.process_time()
     for one in drawn(arguments.units, arguments.seed, known, which, parts):
         if time.monotonic() - began_s > 60.0 * arguments.minutes:
             break
-        if (arguments.only and one.procedure != arguments.only) or (arguments.healthy and one.plant):
+        if (
+            one.number in there
+            or (arguments.only and one.procedure != arguments.only)
+            or (arguments.healthy and one.plant)
+        ):
             continue
         told = walk_through(one, known[one.design], harm)
         found.append(told)
