@@ -20,7 +20,7 @@ from benchkit.ui.screens.walk import WalkScreen
 if TYPE_CHECKING:
     from benchkit.ui.app import BenchApp
 
-LEAST_PAINT_S: Final = 0.05
+LEAST_PAINT_S: Final = 0.08
 """From one picture to the next at least (s)."""
 
 FLASH_S: Final = 0.7

@@ -95,6 +95,7 @@ class Terminal:
         self.process.wait(10)
         self.reading.set()
         os.close(self.held)
+        self._thread.join(10)  # it would read from the next terminal of the same number
         if self.master >= 0:
             os.close(self.master)
 

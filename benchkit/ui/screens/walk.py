@@ -145,7 +145,8 @@ class WalkScreen(BenchScreen):
     def take_by_space(self) -> None:
         """Take the reading that stands on the page, if one does."""
         if self.arrangement != "tiny":  # nobody answers what can't be seen
-            self.page.answer.take_reading()
+            # In its turn behind the keys before it, which wait at whoever has them.
+            (self.focused or self).call_later(self.page.answer.take_reading)
 
     def hold_keys(self, seconds: float) -> None:
         """A reading was taken by itself: what is pressed now was meant for it."""

@@ -125,7 +125,6 @@ class Answer(Vertical):
 
     def _take_typed_ahead(self, question: Question) -> None:
         """Put what was typed before its entry stood there into it."""
-        open("/tmp/ahead.log","a").write(repr((self._ahead, question.kind, question.point, question.item, self.parent.id))+"\n")
         point, text = self._ahead or ("", "")
         self._ahead = None
         if text and question.kind == "by hand" and question.point == point:
@@ -139,6 +138,7 @@ class Answer(Vertical):
             if self._ahead is None:
                 return False
             self._ahead = (self._ahead[0], _typed_on(self._ahead[1], key.key, character))
+            self._echo()
             return True
         question = self._question
         if not self._begins_entry(question) or character is None or character not in BEGINS_ENTRY:
@@ -148,7 +148,17 @@ class Answer(Vertical):
         else:
             self._give(Reply(choice=question.choices[0].value))
             self._ahead = (question.point, character)
+            self._echo()
         return True
+
+    def _echo(self) -> None:
+        """Show what has been typed for an entry that does not stand there yet."""
+        if self._ahead is not None:
+            self.display = True
+            self._entry.display = self._choices.display = False
+            self._hint.display = True
+            self._hint.set_class(False, "refused")
+            self._hint.say(f"Typed so far: {safe(self._ahead[1])}")
 
     def _begins_entry(self, question: Question) -> bool:
         return self.by_hand and question.kind == "probes" and bool(question.point) and bool(question.choices)
@@ -175,6 +185,7 @@ class Answer(Vertical):
         self._reason_for = None
         self._entry.value = ""
         self.display = False
+        self._echo()
 
     def take_focus(self) -> None:
         """Let the keys come here, if there is anything to answer."""
