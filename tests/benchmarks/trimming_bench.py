@@ -485,6 +485,8 @@ class Watcher(StandIn):
         if question.kind == "decide" and safe and self._hand.onset is not None:
             self.tale.given_up_wall_s = time.monotonic()
             return Reply(choice="make safe")
+        if question.kind == "decide" and self._deed.do in ("unplug", "mute") and self._over:
+            return Reply(choice="go on", text="the meter is gone")  # asked again it would be silent again
         if question.kind == "trim" and self._clock.own_watch:
             return await self._turn_by_hand(question)
         if question.kind == "trim" and self._no_use():
@@ -591,7 +593,8 @@ async def _walk(design: Design, seed: int, deed: Deed, hand: Hand, text: str, fo
     if runner.record is not None:
         ticks = front.ticks
         for line in read(runner.record).lines:
-            sim_s = next((sim for wall, sim in reversed(ticks) if wall <= line.monotonic_s), 0.0)
+            wall_s, sim_s = next((tick for tick in reversed(ticks) if tick[0] <= line.monotonic_s), (0.0, 0.0))
+            sim_s += line.monotonic_s - wall_s if deed.live else 0.0
             event = from_payload(line.event, line.payload)
             tale.events.append(Kept(wall_s=line.monotonic_s, sim_s=sim_s, event=event))
     taken = [
