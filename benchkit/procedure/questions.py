@@ -14,6 +14,13 @@ from benchkit.stage.points import Point
 DONE = Choice(value="done", label="Done")
 YES = Choice(value="yes", label="Yes")
 NO = Choice(value="no", label="No")
+WIPER_OPENED: Final = "wiper has opened"
+"""What the adviser says of such a trim (`benchkit.judge.falls`)."""
+
+BACK_TO_LEAST: Final = (
+    "Before it is tried again: trimmer back to its least-bias end. A wiper that closes again throws the bias up."
+)
+
 AGAIN = Choice(value="again", label="Again")
 GO_ON = Choice(value="go on", label="Note a reason and go on", wants_reason=True)
 ON = Choice(value="go on", label="Go on")
@@ -151,15 +158,20 @@ def deciding(
     else:
         what, why = f"{item.title}: there is no result.", problem
     choices = [ON, AGAIN] if odd else [AGAIN, ON] if rare else [AGAIN]
+    opened = result is not None and item.kind == "trim" and WIPER_OPENED in result.why
+    if opened:
+        choices = [STOP, AGAIN]
     if trim_again:
         choices.insert(0, TRIM_AGAIN)
-    if not (odd or rare) and (item.may_go_on or way_out):
+    if not (odd or rare or opened) and (item.may_go_on or way_out):
         choices.append(GO_ON)
-    if not way_out:
+    if not way_out and not opened:
         choices.append(STOP)
     if offer is not None:
         choices.append(probing(offer))
     caution = "" if odd or item.may_go_on or way_out else "There is no way past this result but a better one."
+    if opened:
+        caution = BACK_TO_LEAST
     if odd:
         caution = "Inside the design's limits, so no failure: see what the other readings say."
     if rare:

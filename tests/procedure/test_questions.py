@@ -1,8 +1,11 @@
 from __future__ import annotations
 
+from dataclasses import replace
+
 import pytest
 
 from benchkit.events import PointLimits
+from benchkit.judge.falls import fall_words
 from benchkit.judge.limits import Limits
 from benchkit.procedure import questions
 from benchkit.procedure.items import Item
@@ -63,6 +66,18 @@ def test_what_can_be_decided(item: str, way_out: bool, choices: list[str]) -> No
     assert question.title.endswith("failed.")
     assert all(choice.wants_reason == (choice.value == "go on") for choice in question.choices)
     assert ("no way past" in question.caution) == ("go on" not in choices)
+
+
+@pytest.mark.parametrize("now_a", [None, 0.02])
+def test_after_an_opened_wiper_the_usual_answer_is_to_make_safe(now_a: float | None) -> None:
+    """What the adviser says there is known here."""
+    _, why = fall_words(0.1, now_a)
+    item = item_of(small(), "bias.trim.emitter.upper.1")
+    question = questions.deciding(item, replace(judged(item.id, "fail"), why=why), "", way_out=False)
+    assert [choice.value for choice in question.choices] == ["make safe", "again"]
+    assert "least-bias end" in question.caution
+    other = questions.deciding(item, replace(judged(item.id, "fail"), why="too high"), "", way_out=False)
+    assert other.choices[0].value == "again"
 
 
 def test_no_result_is_said_as_such() -> None:
