@@ -122,12 +122,12 @@ class Judged(Event):
 class Decided(Event):
     """What the operator chose after a failed, undecided, missing or odd result.
 
-    ``trim again`` goes back to the trim that set what was read here.
+    ``trim again`` goes back to the trim that set what was read here, ``read again`` to the readings that a rule judged.
     """
 
     name: ClassVar[str] = "decided"
     item: str
-    choice: Literal["again", "go on", "make safe", "probe", "trim again"]
+    choice: Literal["again", "go on", "make safe", "probe", "trim again", "read again"]
     reason: str = ""
 
 

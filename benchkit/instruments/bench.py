@@ -28,6 +28,9 @@ TOML, with these tables; ``[meter]`` or ``[supply]`` may be absent, and then a p
     address = "TCPIP::192.168.1.21::5025::SOCKET"
     profile = "scpi-supply"
 
+A table without an address says how well a person's own meter, or the display of a supply that is set by hand, reads:
+only its accuracy, calibration and input resistance are stated.
+
 There is one meter, and one supply with two outputs; two supplies with one output each are not taken.
 """
 
@@ -62,6 +65,9 @@ from benchkit.quantities import parse
 
 DEFAULT_INPUT_RESISTANCE_OHM = 10e6
 """What is assumed of a meter that doesn't state it; common practice for meters of all prices."""
+
+_OF_A_LINK = ("profile", "serial", "line")
+"""Keys that mean something only beside an address."""
 
 _LEAST_MAINS_HZ, _MOST_MAINS_HZ = 40.0, 440.0
 
@@ -115,6 +121,8 @@ class Bench:
         None where a person reads or switches.
     cautions : tuple of str
         What a careful person would object to: calibration overdue, accuracy assumed, no protection in the supply.
+    own_accuracy, own_supply_accuracy : Accuracy or None
+        Of a meter that a person reads and of a supply that a person sets, where the file states it.
     """
 
     name: str
@@ -123,16 +131,18 @@ class Bench:
     meter: BenchInstrument | None
     supply: BenchInstrument | None
     cautions: tuple[str, ...]
+    own_accuracy: Accuracy | None = None
+    own_supply_accuracy: Accuracy | None = None
 
     @property
     def accuracy(self) -> Accuracy:
         """The meter's specification, or the stated default."""
-        return STATED_DEFAULT if self.meter is None else self.meter.accuracy
+        return (self.own_accuracy or STATED_DEFAULT) if self.meter is None else self.meter.accuracy
 
     @property
     def supply_accuracy(self) -> Accuracy:
         """The specification of the supply's own readings, or the stated default."""
-        return STATED_DEFAULT if self.supply is None else self.supply.accuracy
+        return (self.own_supply_accuracy or STATED_DEFAULT) if self.supply is None else self.supply.accuracy
 
     @property
     def setup(self) -> dict[str, Any]:
@@ -180,7 +190,7 @@ class _Head(Part):
 
 
 class _Instrument(Part):
-    address: Filled
+    address: Text = ""
     profile: Filled
     serial: Text = ""
     calibration_due: Date | None = None
@@ -250,10 +260,14 @@ def parse_bench(text: str, file_name: str, *, today: datetime.date | None = None
     today = today or datetime.date.today()
     head = file.bench.model_copy(update={"visa": visa}) if visa else file.bench
     meter = supply = None
-    if file.meter is not None:
-        meter = _instrument("meter", file.meter, file_name, head, today, cautions)
-    if file.supply is not None:
-        supply = _instrument("supply", file.supply, file_name, head, today, cautions)
+    own: dict[str, Accuracy] = {}
+    for label, table in (("meter", file.meter), ("supply", file.supply)):
+        if table is not None and "address" not in table.model_fields_set:
+            own[label] = _by_hand(label, table, file_name, today, cautions)
+        elif isinstance(table, _Meter):
+            meter = _instrument(label, table, file_name, head, today, cautions)
+        elif table is not None:
+            supply = _instrument(label, table, file_name, head, today, cautions)
     if meter is not None and supply is not None and meter.address == supply.address:
         raise FileError(
             file_name,
@@ -269,7 +283,28 @@ def parse_bench(text: str, file_name: str, *, today: datetime.date | None = None
         meter=meter,
         supply=supply,
         cautions=tuple(cautions),
+        own_accuracy=own.get("meter"),
+        own_supply_accuracy=own.get("supply"),
     )
+
+
+def _by_hand(
+    label: str, table: _Meter | _Supply, file_name: str, today: datetime.date, cautions: list[str]
+) -> Accuracy:
+    """Return the accuracy of what a person reads; what only a link needs is a mistake there."""
+    needless = sorted(table.model_fields_set & set(_OF_A_LINK))
+    if needless or not table.accuracy:
+        beside = f", and {needless[0]} stands there" if needless else ""
+        expected = f"an address; only for a {label} that a person reads accuracy alone, without {', '.join(_OF_A_LINK)}"
+        raise FileError(file_name, f"{label}.address", f"this key is missing{beside}", expected, "Correct it")
+    _calibration(label, table.calibration_due, today, cautions)
+    stated = _accuracy(label, table, file_name, cautions)
+    assumed = STATED_DEFAULT if label == "meter" else SUPPLY_READOUT
+    missing = [function for function in assumed.rows if function not in stated.rows]
+    if missing:
+        unsaid = ", ".join(missing)
+        cautions.append(f"The bench file states no accuracy of the {label} for {unsaid}; taken as: {assumed.name}.")
+    return Accuracy(stated.name, {**assumed.rows, **stated.rows}, stated.source)
 
 
 def _instrument(

@@ -55,6 +55,10 @@ class Silence:
         self._noticed: float | None = None
         self.knows_turns = False
 
+    def watches_turns(self) -> None:
+        """Take note that whoever turns will say so: what nobody has said was not turned."""
+        self.knows_turns = True
+
     def told(self, t_s: float, value: float) -> None:
         """Take note that advice stands since now, unless some does already."""
         if self._since is None:

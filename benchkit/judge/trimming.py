@@ -147,6 +147,10 @@ class Adviser:
             return True
         return self._trust.agrees(value, self._noise, rail_a) is True
 
+    def hears_of_turns(self) -> None:
+        """Take note that every move will be told, as in a rehearsal."""
+        self._silence.watches_turns()
+
     def turned(self, turns: float) -> None:
         """Take note of a move that somebody has made; only a rehearsal knows of one."""
         if turns:

@@ -46,6 +46,20 @@ def near(half: float, guard: float) -> float:
     return max(min(NEAR * half, half - guard), LEAST_NEAR * half)
 
 
+def coarse_turns(turns: float) -> str:
+    """Say how many turns there are to go, as coarsely as it is known.
+
+    Examples
+    --------
+    >>> coarse_turns(3.4), coarse_turns(7.2), coarse_turns(12.0), coarse_turns(23.0)
+    ('3 to 5', '5 to 10', '10 to 20', 'more than 20')
+    """
+    for low, high in ((2, 3), (3, 5), (5, 10), (10, 20)):
+        if turns < high:
+            return f"{low} to {high}"
+    return "more than 20"
+
+
 class Turning:
     """Amounts of turns on one scale.
 
@@ -111,7 +125,9 @@ class Turning:
         whole = abs(self.missing(aim, slope, by_rest=by_rest))
         if self._track:
             whole = min(whole, self._track)
-        return f", of about {whole:.0f} in all" if whole > SEVERAL * self.most and whole >= 2.5 else ""
+        if whole <= SEVERAL * self.most or whole < 2.5:
+            return ""
+        return f"; {coarse_turns(whole)} turns to go from here"
 
     def slack(self, t_s: float) -> str:
         """Say once how a screw's slack is taken up."""
@@ -120,11 +136,11 @@ class Turning:
         return SLACK if t_s == self._slack_s or t_s - self._slack_s < SLACK_S else ""
 
     def inside(self, value: float, rest: float | None, words: str) -> str:
-        """Say what is still to do inside the limits, away from the target."""
+        """Say what is still to do inside the limits, away from the target; that it is inside the mood says."""
         aim = value if rest is None else rest
         if not self._low <= aim <= self._high:
-            return f"inside now, but still {'rising' if aim > value else 'falling'}: {words}"
+            return f"but still {'rising' if aim > value else 'falling'}: {words}"
         target = self._scale.target
         off = quantities.show(abs(aim - target), self._unit, 2)
-        where = f"{off} {'above' if aim > target else 'below'} the target"
-        return f"inside, {where}: {words}" if rest is None else f"inside, and will rest {where}: {words}"
+        side = "above" if aim > target else "below"
+        return f"{off} {side} the target: {words}" if rest is None else f"will rest {off} {side}: {words}"

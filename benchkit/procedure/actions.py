@@ -25,7 +25,7 @@ class Choice:
     ----------
     value : str
         The word that comes back: ``done``, ``yes``, ``no``, ``again``, ``go on``, ``make safe``, ``probe``, ``take``,
-        ``end``, ``enough``, ``cancel``, ``trim again``, ``semiconductors``, ``other parts``.
+        ``end``, ``enough``, ``cancel``, ``trim again``, ``read again``, ``semiconductors``, ``other parts``.
     label : str
         What the screen says.
     wants_reason : bool

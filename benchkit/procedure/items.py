@@ -158,6 +158,8 @@ class Item:
         For ``trim``: where it happens, for the model's slope; the trimmer is at the target there.
     back : str
         For ``measure``: the trim to which one may go back from here; "" for none.
+    retake : tuple of str
+        For ``rule``: those of the readings just before it that it judges, and that may be read again.
     driven : bool
         The reading is taken with the stage driven: the model knows nothing of it.
     only_if : str
@@ -210,6 +212,7 @@ class Item:
     share: float = 1.0
     slope_under: Condition | None = None
     back: str = ""
+    retake: tuple[str, ...] = ()
     driven: bool = False
     only_if: str = ""
     optional: bool = False

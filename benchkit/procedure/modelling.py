@@ -36,7 +36,7 @@ from benchkit.judge.rare import is_rare
 from benchkit.judge.verdicts import judge_reading
 from benchkit.measure.readings import Reading
 from benchkit.measure.uncertainty import coverage_factor
-from benchkit.procedure import knowledge
+from benchkit.procedure import knowledge, questions
 from benchkit.procedure.actions import Action, Narrow, Write
 from benchkit.procedure.file import MADE_SAFE
 from benchkit.procedure.items import Item
@@ -90,7 +90,10 @@ class Modelling(Moves):
         judgement = judge_reading(reading, limits, acceptance=item.acceptance)
         of_model = item.limits is None and item.condition is not None
         rare = of_model and judgement.verdict != "pass" and is_rare(reading, limits)
-        why = f"{judgement.why} It is so near that a good unit may read it." if rare else judgement.why
+        why = judgement.why
+        if rare:
+            inside = reading.value is not None and limits.hold(reading.value)
+            why += f" {questions.INSIDE_WHY if inside else 'It is so near that a good unit may read it.'}"
         return Judged(
             item=item.id, subject=reading.point, verdict="undecided" if rare else judgement.verdict,
             value=reading.value, unit=reading.unit, low=limits.low, high=limits.high,

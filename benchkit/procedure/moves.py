@@ -123,6 +123,8 @@ class Moves:
         if self._offers_on_the_way_out(state):
             return self._offer_again(state)
         item = self.plan.items[index]
+        if item.kind not in ("measure", "rule"):
+            state = replace(state, keeping=frozenset())
         match item.kind:
             case "connect":
                 return replace(state, phase="connecting"), (Connect(item=item.id),)
@@ -183,8 +185,9 @@ class Moves:
                 return replace(state, phase="switching off"), (SwitchOff(item=item.id, reason=reason),)
 
     def _done_from(self, state: State, index: int) -> int:
-        """Return the first item from `index` on that is not left out."""
-        while index < len(self.plan) and state.leaves_out(self.plan.items[index]):
+        """Return the first item from `index` on that is neither left out nor a reading that stands."""
+        items = self.plan.items
+        while index < len(items) and (items[index].id in state.keeping or state.leaves_out(items[index])):
             index += 1
         return index
 
@@ -301,6 +304,12 @@ class Moves:
             item, result, problem, way_out=self.way_out(state), offer=None if offer is None else offer[0][1],
             trim_again=self.may_trim_again(state, item, result),
         )  # fmt: skip
+        if result is not None and result.rare and _inside(result):
+            question = questions.open_by_the_meter(question, item)
+        if item.retake:  # the same readings would give the same verdict
+            others = tuple(choice for choice in question.choices if choice != questions.AGAIN)
+            points = tuple(one.point for one in self.plan.items if one.id in item.retake and one.point is not None)
+            question = replace(question, choices=(questions.reading_again(points), *others))
         state = replace(state, phase="deciding", note=problem, missing="" if result is not None else problem)
         return state, (Ask(item=item.id, question=question),)
 
@@ -334,6 +343,11 @@ class Moves:
         item, offer = self.host(state), self.offer(state)
         question = questions.offering(item, None if offer is None else offer[0][1])
         return replace(state, phase="offering", extra=""), (Ask(item=item.id, question=question),)
+
+
+def _inside(result: Judged) -> bool:
+    """Whether the value itself lies inside the limits, its uncertainty left aside."""
+    return result.value is not None and Limits(result.low, result.high, None, result.unit, "").hold(result.value)
 
 
 def _waiting(item: Item) -> Wait:

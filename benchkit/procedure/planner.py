@@ -11,6 +11,7 @@ from typing import Any, Literal
 from benchkit import quantities
 from benchkit.errors import EntryError, FileError
 from benchkit.judge.limits import Limits
+from benchkit.judge.rules import find_rule
 from benchkit.procedure.bias_items import BiasItems
 from benchkit.procedure.file import PairText, Procedure, Section, Step
 from benchkit.procedure.items import (
@@ -63,6 +64,7 @@ class Planner(SupplyItems, BiasItems):
         )
         for section in self.procedure.sections:
             self.section = section
+            self.run: list[Item] = []
             first = True
             for item in self._section(section):
                 yield replace(
@@ -73,6 +75,7 @@ class Planner(SupplyItems, BiasItems):
                     marked=section.as_ or "",
                 )
                 first = False
+                self.run = [*self.run, item] if item.kind == "measure" else self.run if item.kind == "rule" else []
                 self.ready_hold = item.kind == "hold"
 
     def _section(self, section: Section) -> Iterator[Item]:
@@ -122,8 +125,10 @@ class Planner(SupplyItems, BiasItems):
                 self._not_on_lamp(step, "judges a rule")
                 if self._rule_fits(step):
                     may_go_on = step.override and step.rule not in NEVER_PASSED_OVER
-                    number = self._number(step)
-                    yield self._item(step, "rule", rule=step.rule or "", number=number, may_go_on=may_go_on)
+                    number, retake = self._number(step), self._retake(step.rule or "")
+                    yield self._item(
+                        step, "rule", rule=step.rule or "", number=number, may_go_on=may_go_on, retake=retake
+                    )
             case "supply":
                 yield from self._supply(step)
             case "limit check":
@@ -294,6 +299,19 @@ class Planner(SupplyItems, BiasItems):
             return self.design.spreader.trimmer is not None
         return True
 
+    def _retake(self, rule: str) -> tuple[str, ...]:
+        """Find those of the readings just before a rule that it judges; nothing has moved since.
+
+        Not the one that the clips were on while another was read: they would go back there under power.
+        """
+        needs = find_rule(rule).needs(self.design)
+        clipped = "" if self.watched is None else self.watched.name
+        read = [(item, item.point) for item in self.run if item.point is not None]
+        moved = any(point.name != clipped and point.function != "dc current" for _, point in read)
+        if moved:
+            read = [(item, point) for item, point in read if point.name != clipped]
+        return tuple(item.id for item, point in read if point.name in needs and not item.driven)
+
     def _number(self, step: Step) -> float | None:
         if step.number is None:
             return None
@@ -314,10 +332,11 @@ class Planner(SupplyItems, BiasItems):
         return number
 
     def words(self, given: Mapping[str, Any]) -> dict[str, str]:
-        """What the words in braces stand for, at this place of the plan."""
+        """What the words in braces stand for at this place of the plan; without power the limit is the checked one."""
         positive_v = float(given.get("positive_v", self.positive_v or self.lowest[0]))
         negative_v = float(given.get("negative_v", self.negative_v or self.lowest[1]))
-        limit_a = float(given.get("limit_a", self.limit_a)) or self.least_bias_limit_a()
+        now_a = self.limit_a if self.on else 0.0
+        limit_a = float(given.get("limit_a", now_a)) or self.checked_a or self.least_bias_limit_a()
         return words_of(self.design, positive_v, negative_v, limit_a)
 
     def _refuse(self, step: Step, came: str, expected: str = "") -> FileError:

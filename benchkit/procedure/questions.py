@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from typing import Final
 
 from benchkit import quantities
@@ -189,6 +190,28 @@ def deciding(
         red="" if item.point is None else item.point.red,
         black="" if item.point is None else item.point.black,
         choices=tuple(choices),
+    )
+
+
+def reading_again(points: tuple[Point, ...]) -> Choice:
+    """The answer that takes anew what a rule judged."""
+    names = " and ".join(point.name for point in points) if len(points) <= 2 else f"its {len(points)} points"
+    return Choice(value="read again", label=f"Read {names} again")
+
+
+INSIDE_WHY: Final = "The value itself lies inside: what leaves it open is the meter's accuracy."
+"""Said of a reading inside its limits whose uncertainty reaches over them."""
+
+
+def open_by_the_meter(question: Question, item: Item) -> Question:
+    """Return what to do after a reading that lies inside its limits, and is undecided for its uncertainty alone."""
+    return replace(
+        question,
+        title=f"{item.title} is undecided.",
+        caution=(
+            "No failure: the same meter will leave it open again. A finer one decides, or its own accuracy in a bench "
+            "file; else all readings together do."
+        ),
     )
 
 

@@ -121,6 +121,8 @@ class State:
         Why the item that is being decided has no result, "" when it has one.
     note : str
         A sentence for the screen about the last thing that happened.
+    keeping : frozenset of str
+        Readings that stand while others beside them are taken again for a rule: items that are passed by.
     """
 
     phase: Phase = "unopened"
@@ -164,6 +166,7 @@ class State:
     closed: Closed | None = None
     missing: str = ""
     note: str = ""
+    keeping: frozenset[str] = frozenset()
 
     def result(self, item: str) -> Judged | None:
         """The standing result of an item."""

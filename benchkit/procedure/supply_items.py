@@ -31,6 +31,7 @@ class SupplyItems(PowerOff):
 
     lowest: tuple[float, float]
     drive_limit: bool = False
+    checked_a: float = 0.0
 
     def _supply(self, step: Step) -> Iterator[Item]:
         self._not_on_lamp(step, "sets a supply")
@@ -83,6 +84,7 @@ class SupplyItems(PowerOff):
         positive_v, negative_v = self._rails(step)
         full = self.design.rails
         limit_a = self._limit(step, full.positive_v, full.negative_v)  # the highest that a walk sets without a load
+        self.checked_a = limit_a
         words: dict[str, Any] = {"positive_v": positive_v, "negative_v": negative_v, "limit_a": limit_a}
         yield self._item(
             step, "hold", ".hold", title="Try the limit?", why="Current flows into the short from here.", **words

@@ -108,16 +108,26 @@ def heading_words(suspected: Suspected) -> str:
 
 
 def unseen_words(suspected: Suspected, names: int = 0) -> str:
-    """Say how many faults could not have shown, with the first few of their names; "" when nothing is to be said."""
+    """Say how many faults could not have shown, with the first few of their names; "" when nothing is to be said.
+
+    Those that the lines of the suspects name already, as suspects or as alike to one, are not named again.
+    """
     if suspected.problem or not suspected.suspects:
         return ""
     if not suspected.unseen_count:
         return "Each fault that the model knows would have shown; faults that it doesn't know may still be there."
-    which = ", ".join(fault_words(fault) for fault in suspected.unseen[:names])
-    more = "" if suspected.unseen_count <= names else ", and more"
+    said = {fault for one in shown_suspects(suspected) for fault in (one.fault, *one.alike)}
+    unseen = [fault for fault in suspected.unseen if fault not in said]
+    count = suspected.unseen_count - (len(suspected.unseen) - len(unseen))
+    if not count:
+        return (
+            "Each fault that isn't named here would have shown; faults that the model doesn't know may still be there."
+        )
+    which = ", ".join(fault_words(fault) for fault in unseen[:names])
+    more = "" if count <= names else ", and more"
     listed = f": {which}{more}" if which else ""
-    one = suspected.unseen_count == 1
-    return f"{suspected.unseen_count} fault{'' if one else 's'} could not have shown yet{listed}."
+    others = "" if count == suspected.unseen_count else "more " if count > 1 else "other "
+    return f"{count} {others}fault{'' if count == 1 else 's'} could not have shown yet{listed}."
 
 
 def probe_words(probe: ProbeNamed, *, now: bool) -> str:

@@ -183,6 +183,8 @@ class Walk(Securing, Modelling):
             return self._enter(replace(state, probes=""), state.index)
         if event.choice == "trim again":
             return self._trim_again(state)
+        if event.choice == "read again":
+            return self._read_again(state)
         if (
             event.choice == "go on"
             and not state.missing
@@ -211,14 +213,24 @@ class Walk(Securing, Modelling):
         item = self.item(state)
         if state.missing or not self.may_trim_again(state, item, state.result(item.id)):
             raise IllegalEvent(f"{item.id} doesn't lead back to a trim now", "one of the answers that are offered")
-        back = next(number for number, one in enumerate(self.plan.items) if one.id == item.back)
-        passed = {one.id for one in self.plan.items[back : state.index + 1]}
-        state = replace(
-            state,
-            trims={**state.trims, item.id: state.trims.get(item.id, 0) + 1},
-            readings={name: reading for name, reading in state.readings.items() if name not in passed},
-        )
-        return self._enter(state, back)
+        back = self._number_of(item.back)
+        trims = {**state.trims, item.id: state.trims.get(item.id, 0) + 1}
+        passed = frozenset(one.id for one in self.plan.items[back : state.index + 1])
+        return self._enter(replace(_without(state, passed), trims=trims, keeping=frozenset()), back)
+
+    def _read_again(self, state: State) -> Step:
+        """Go back to the readings that a rule judged; others that were taken meanwhile are kept."""
+        item = self.item(state)
+        if not item.retake:
+            raise IllegalEvent(f"{item.id} has no readings just before it", "one of the answers that are offered")
+        first = self._number_of(item.retake[0])
+        passed = self.plan.items[first : state.index]
+        others = frozenset(one.id for one in passed if one.kind == "measure" and one.id not in item.retake)
+        state = replace(_without(state, frozenset(item.retake)), keeping=others)
+        return self._enter(state, first)
+
+    def _number_of(self, name: str) -> int:
+        return next(number for number, one in enumerate(self.plan.items) if one.id == name)
 
     # -- supply and time ---------------------------------------------------------------------------------------
 
@@ -264,3 +276,8 @@ class Walk(Securing, Modelling):
         if event.count != lines_before:
             raise IllegalEvent(f"The last line counts {event.count} lines before it", f"{lines_before}")
         return replace(state, phase="closed", closed=event), ()
+
+
+def _without(state: State, passed: frozenset[str]) -> State:
+    """Drop the readings of some items."""
+    return replace(state, readings={item: reading for item, reading in state.readings.items() if item not in passed})

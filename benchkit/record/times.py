@@ -46,7 +46,7 @@ def row(summary: Summary) -> dict[str, Any]:
         "begun": summary.begun,
         "verdict": summary.verdict if summary.record.status == 0 else None,
         "stopped": closed.stopped if closed is not None else "",
-        "seconds": None if took is None else took.seconds,
+        "seconds": None if took is None else round(took.seconds, 3),
         "target_seconds": None if took is None else took.target_s,
     }
 

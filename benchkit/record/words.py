@@ -2,8 +2,10 @@
 
 from __future__ import annotations
 
+import re
 import textwrap
 from collections.abc import Iterator
+from typing import Final
 
 from benchkit.events import Waited
 from benchkit.quantities import Overload, show_within
@@ -26,11 +28,26 @@ def heading(text: str) -> Iterator[str]:
     yield "-" * len(text)
 
 
+_KEPT: Final = "\u00a0"
+_BEFORE_UNIT: Final = re.compile(r"(?<=\d) (?=%|(?:[fpnumkM]?(?:V|A|ohm|W|F|J|Hz|s)|degC|K|min|h)\b)")
+
+
 def wrapped(text: str, bullet: str = "") -> Iterator[str]:
-    """Yield prose in lines, the first with a bullet."""
-    yield from textwrap.wrap(
-        text, WIDTH, initial_indent=bullet, subsequent_indent=" " * len(bullet), break_on_hyphens=False
+    """Yield prose in lines, the first with a bullet; a number stays with its unit.
+
+    Examples
+    --------
+    >>> list(wrapped(f"{'a' * (WIDTH - 4)} 1.0 % of it")) == ["a" * (WIDTH - 4), "1.0 % of it"]
+    True
+    """
+    lines = textwrap.wrap(
+        _BEFORE_UNIT.sub(_KEPT, text),
+        WIDTH,
+        initial_indent=bullet,
+        subsequent_indent=" " * len(bullet),
+        break_on_hyphens=False,
     )
+    yield from (line.replace(_KEPT, " ") for line in lines)
 
 
 def quantity(value: float | Overload | None, unit: str, digits: int = 4, uncertainty: float | None = None) -> str:

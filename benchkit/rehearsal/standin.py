@@ -153,7 +153,8 @@ class StandIn:
             self._trims.clear()
             return Reply(choice="trim again")
         free = "go on" in choices and not choices["go on"].wants_reason
-        if self._tries[question.item] or free or "again" not in choices:
+        again = "read again" if "read again" in choices else "again"
+        if self._tries[question.item] or free or again not in choices:
             if "probe" in choices:
                 self._say(f"          {choices['probe'].label}")
                 return Reply(choice="probe")
@@ -165,11 +166,11 @@ class StandIn:
         tries = self._tries[question.item]
         if question.point in ("rail+", "rail-") and tries <= MOST_WAITS:
             await in_thread(lambda: self._hands.advance(WAIT_S))
-            return Reply(choice="again")
+            return Reply(choice=again)
         if tries == 1:
             if question.point.startswith("ohm.spreader"):
                 await self._turn_to("least")
-            return Reply(choice="again")
+            return Reply(choice=again)
         if "make safe" not in choices:
             return Reply(choice="go on", text="the stand-in has tried again and leaves it as it is")
         if question.item.startswith(AS_FOUND) and "go on" in choices:

@@ -116,15 +116,23 @@ async def _by_hand(session: Session, point: str, function: str, unit: str) -> Re
     accuracy = session.job.accuracy if function != "dc current" else session.job.supply_accuracy
     item = session.job.walk.item(session.state)
     limits = session.job.walk.limits_for(session.state, item)
+    of_supply = function == "dc current"
+    shows = "the supply's own display shows" if of_supply else "the meter shows"
+    how = "Read the supply's own display: no meter goes into the rail." if of_supply else f"Meter on {function}."
+    placed = None if of_supply else item.point
+    told = session.state.supply
+    before_a = None if told is None else told.positive_a if point.startswith("rail+") else told.negative_a
+    if of_supply and before_a is not None:
+        how += f" When its rails were set it showed {quantities.show(before_a, 'A', 3)}."
     question = Question(
         item=item.id,
         kind="by hand",
         expected="" if limits is None else str(limits),
-        title=f"Type what the meter shows for {point}",
-        do=f"With its unit, such as {_example(unit)}; OL for overload. Meter on {function}.",
+        title=f"Type what {shows} for {point}",
+        do=f"With its unit, such as {_example(unit)}{'' if of_supply else '; OL for overload'}. {how}",
         point=point,
-        red="" if item.point is None else item.point.red,
-        black="" if item.point is None else item.point.black,
+        red="" if placed is None else placed.red,
+        black="" if placed is None else placed.black,
         choices=(Choice(value="done", label="Take it"), STOP),
     )
     _, reading = await session.ask_entry(question, lambda text: typed_reading(text, point, function, unit, accuracy))

@@ -16,6 +16,7 @@ from benchkit.events import Event, Noted, OutputOff, SupplyRefused, SupplySet, S
 from benchkit.keeper.protocol import WatchLines
 from benchkit.procedure.actions import Choice, Question, SetSupply, SwitchOff
 from benchkit.procedure.questions import STOP
+from benchkit.procedure.sizing import rails_text
 
 if TYPE_CHECKING:
     from benchkit.session.run import Session
@@ -193,12 +194,17 @@ async def _set_by_hand(session: Session, action: SetSupply) -> Event:
     limit = quantities.show(action.limit_a, "A")
     item = session.job.walk.item(session.state)
     example = "5.00 V 21 mA" if one else "5.00 V 21 mA -5.00 V 20 mA"
+    how = f"Output off, limit {limit}, {_protection_words(action)}then up from 0 V to {rails}"
+    now = session.state.supply
+    if now is not None and now.output_on and now.positive_v is not None:  # said on, and no off since
+        before = rails_text(now.positive_v, now.negative_v or 0.0)
+        how = f"The output stays on. Limit {limit}, {_protection_words(action)}then from {before} to {rails}"
     question = Question(
         item=action.item,
         kind="by hand",
         title=f"Set the supply by hand: {rails}, limit {limit}",
         do=(
-            f"Output off, limit {limit}, {_protection_words(action)}then up from 0 V to {rails}, eyes on the current. "
+            f"{how}, eyes on the current. "
             f"Then type what it shows, volts and amperes of each rail ({example}); add the word limit if a rail "
             "stands in it."
         ),

@@ -7,6 +7,9 @@ Rules
 * A reading that rises by itself, faster and faster, trips: the supply goes off before anything is written.
 * A probe that slips, or a meter that gives no reading once, is told of and waited through.
 * With a meter that a person reads, entries are asked for between rests, and the person may say that it is at rest.
+  Too few come for a prediction: the soak ends too when the last four, over a minute and a half or more, move less
+  than the drift limit, and at that pace within the slowest time constant by less than a quarter of the limits'
+  half-width (our own figures; a reading that turns round slowly may pass for one at rest, and is read once more).
 """
 
 from __future__ import annotations
@@ -46,6 +49,12 @@ QUICK_LOOK_S: Final = 4.0
 
 ENTRY_S: Final = 30.0
 """Between two entries of a person who reads the meter (s)."""
+
+ENTRIES: Final = 4
+"""So many entries in a row show whether a reading is at rest."""
+
+LEAST_ENTRIES_S: Final = 90.0
+"""And so long they have to lie apart, the first from the last (s)."""
 
 LEAST_LEFT_S: Final = 5.0
 """A soak that has not settled says that so much is left at least (s)."""
@@ -100,6 +109,7 @@ class _Soak:
         self._away = 0
         self._trouble = ""
         self._last: Reading | None = None
+        self._entries: list[tuple[float, float]] = []
 
     async def by_instrument(self) -> Event | None:
         """Read now and then until the reading has settled, or the most is over."""
@@ -173,7 +183,7 @@ class _Soak:
     @property
     def _settled(self) -> bool:
         settling = None if self._creep is None else self._creep.settling
-        return settling is not None and settling.verdict == "settled"
+        return (settling is not None and settling.verdict == "settled") or self._still_moving == ""
 
     @property
     def _over(self) -> bool:
@@ -298,13 +308,15 @@ class _Soak:
         def parse(text: str) -> Reading:
             return measuring.typed_reading(text, action.point, action.function, action.unit, accuracy)
 
+        session.show_moment(live=None)  # nothing is read between entries: a figure that stands there would be stale
         await _pass(session, action.reason, min(action.least_s, action.seconds))
         said = ""
+        shows = "the supply's own display" if action.function == "dc current" else "the meter"
         while not self._over:
             question = Question(
                 item=action.item,
                 kind="by hand",
-                title=f"Type what the meter shows for {action.point}",
+                title=f"Type what {shows} shows for {action.point}",
                 do=f"{action.reason} It is asked for again after {left_words(ENTRY_S)} until it has come to rest.",
                 expected=said,
                 point=action.point,
@@ -318,12 +330,38 @@ class _Soak:
                 creep = self._followed(reading.value)
                 creep.add(now_s, reading.value)
                 creep.look(now_s)
-                self._show(reading)
+                self._entries = [*self._entries, (now_s, reading.value)][-ENTRIES:]
                 told = creep.told(now_s)
-                said = ", ".join(words for words in (told.rate_text, told.settles_text) if words)
+                why = "" if self._settled else f"not yet at rest: {self._still_moving or self._awaited()}"
+                said = ", ".join(words for words in (told.rate_text, told.settles_text, why) if words)
             if not self._over:
                 await _pass(session, action.reason, min(ENTRY_S, max(action.seconds - self._elapsed_s, 0.0)))
         return self._waited(settled=self._settled)
+
+    @property
+    def _still_moving(self) -> str | None:
+        """Why the last entries of a person are no rest; "" when they are one, None where nobody enters any."""
+        if not self._entries or self._limits is None:
+            return None
+        if len(self._entries) < ENTRIES:
+            return f"{len(self._entries)} of at least {ENTRIES} entries"
+        span_s = self._entries[-1][0] - self._entries[0][0]
+        if span_s < LEAST_ENTRIES_S - 1e-9:
+            return (
+                f"the last {ENTRIES} entries lie {left_words(span_s)} apart, {left_words(LEAST_ENTRIES_S)} are needed"
+            )
+        values = [value for _, value in self._entries]
+        rate = (max(values) - min(values)) / span_s
+        unit = self._action.unit
+        if rate >= self._drift_limit:
+            allowed = quantities.show(60.0 * self._drift_limit, unit, 2)
+            return f"it still moves {quantities.show(60.0 * rate, unit, 2)} a minute, {allowed} is allowed"
+        low, _, high = self._limits
+        ahead, near = rate * max(self._lags_s, default=0.0), 0.25 * (high - low) / 2.0
+        if ahead > near:
+            left, allowed = quantities.show(ahead, unit, 2), quantities.show(near, unit, 2)
+            return f"at this pace up to {left} may be left, {allowed} is allowed"
+        return ""
 
 
 def _text(reading: Reading | None, unit: str) -> str:

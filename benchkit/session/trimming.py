@@ -74,6 +74,9 @@ SURE: Final = 3.0
 SURE_LOOKS: Final = 2
 """So many predictions in a row have to say that it runs away."""
 
+AFTER_A_MOVE: Final = (
+    "Type what the meter shows after each move, with its unit; let it come to rest for some seconds first."
+)
 BY_KEY: Final = "by key"
 BY_ITSELF: Final = f"by itself, at rest for {REST_S:.1f} s"
 
@@ -292,6 +295,8 @@ class _Live:
             if self._rested is not None:
                 screw = replace(screw, settled_share=settled_share(screw, self._rested))
             self._adviser = adviser_for(self._action, screw, noise, self._answers, self._line)
+            if self._session.hands.simulated:
+                self._adviser.hears_of_turns()
             self._probe = Probe(noise=max(noise, 1e-9))
         return self._adviser, self._probe
 
@@ -353,10 +358,7 @@ async def _by_hand(
     question = replace(
         action.question,
         kind="by hand",
-        do=(
-            f"{action.question.do} Type what the meter shows after each move, with its unit; let it come to rest for "
-            "some seconds first."
-        ),
+        do=f"{action.question.do} {AFTER_A_MOVE}",
         choices=(Choice(value="take", label="Enter"), END, STOP),
     )
     accuracy = session.job.accuracy
@@ -390,4 +392,4 @@ async def _by_hand(
         if reading.value is not None and action.low <= reading.value <= action.high:
             return ReadingTaken(item=action.item, reading=reading)
         shown = "overload" if reading.value is None else quantities.show(reading.value, action.unit)
-        question = replace(question, expected=f"{shown}: {advice.words}. {action.question.expected}")
+        question = replace(question, do=f"{shown}: {advice.words}. {AFTER_A_MOVE}")

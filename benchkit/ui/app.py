@@ -100,7 +100,6 @@ class BenchApp(App[int]):
     BINDINGS: ClassVar[list[Any]] = [
         Binding("f9", "off_at_once", "off", show=False, priority=True),
         Binding("delete", "off_by_delete", "off", show=False, priority=True),
-        Binding("space", "take_by_space", "take the reading", show=False, priority=True),
         Binding("ctrl+q", "quit", "leave", show=False, priority=True),
         Binding("ctrl+c", "quit", "leave", show=False, priority=True),
     ]
@@ -170,6 +169,8 @@ class BenchApp(App[int]):
             await self.switch_screen(screen)
         else:
             await self.push_screen(screen)
+        if self._view is None:
+            screen.get_ready(self._opening.channel)
         self._walk_task = asyncio.create_task(self._walk_through(identity), name="walk")
 
     async def _walk_through(self, identity: Identity) -> None:
@@ -274,7 +275,7 @@ class BenchApp(App[int]):
 
     def check_action(self, action: str, parameters: tuple[object, ...]) -> bool | None:
         """Leave the keys that an entry has a use for to the entry that has the focus."""
-        if action in ("off_by_delete", "take_by_space"):
+        if action == "off_by_delete":
             return not isinstance(self.focused, Input)
         return True
 
@@ -289,11 +290,6 @@ class BenchApp(App[int]):
         """Switch off at once, when there is anything to switch off."""
         if self.supply is not None and not self._keeps_place:
             self.action_off_at_once()
-
-    def action_take_by_space(self) -> None:
-        """Take the reading that is asked for on the page."""
-        if isinstance(self.screen, WalkScreen):
-            self.screen.take_by_space()
 
     async def action_quit(self) -> None:
         """Leave; while the supply is on or may be, only after asking."""

@@ -38,7 +38,6 @@ Card {{ height: 1fr; padding: 0 1; }}
 .card-details {{ height: auto; padding: 0 1; max-width: 100; }}
 .card-suspects {{ height: auto; padding: 0 1; margin-bottom: 1; max-width: 100; }}
 .explained .card-do {{ display: none; }}
-.explained .outcome-why {{ display: none; }}
 
 Outcome {{ height: auto; padding: 0 1; border-top: solid {LINE}; }}
 .outcome-head {{ height: 1; }}
@@ -60,6 +59,7 @@ Input:focus {{ background-tint: {STRONG} 6%; }}
 #hold {{ border-bottom: double {CARE}; }}
 .deciding {{ border-top: none; margin-bottom: 1; }}
 .deciding .outcome-why {{ max-height: 4; margin-top: 1; }}
+.explained .outcome-why {{ max-height: 2; margin-top: 0; }}
 
 #trim .card {{ height: auto; max-height: 2; }}
 #trim .card-details {{ display: none; }}
@@ -110,7 +110,6 @@ LeaveScreen {{ background: {GROUND}; align: center middle; }}
 .leave-box {{ width: 90%; max-width: 66; height: auto; margin: 1 0; padding: 0 2; border: double {CARE}; }}
 .leave-words {{ height: auto; margin-bottom: 1; }}
 
-.roomy .explained .outcome-why {{ display: block; }}
 .roomy .card-do {{ padding: 1 3; margin-bottom: 1; max-width: 100; background: {PANEL}; }}
 .roomy .walk-trail {{ height: auto; max-height: 3; margin: 1 0; }}
 .roomy .outcome-earlier {{ display: block; }}

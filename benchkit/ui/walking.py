@@ -124,6 +124,7 @@ def _on_screens(prepare: Prepare, turn: Turn, operator: str, *, bell: bool) -> i
             click.echo(NOT_OFF, err=True)
             return worst
         turn = turn.after(who.unit)
+        click.echo(f"Getting ready for {f'channel {turn.channel}' if turn.channel else 'the next unit'}.")
 
 
 def _on_screen(ready: Ready, turn: Turn, who: Any, *, bell: bool) -> tuple[int, Any, bool]:

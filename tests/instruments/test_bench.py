@@ -70,6 +70,20 @@ def test_a_bench_without_instruments_is_by_hand() -> None:
     assert bench.accuracy is bench.supply_accuracy is STATED_DEFAULT
 
 
+def test_a_meter_that_a_person_reads_has_an_accuracy_and_no_address() -> None:
+    rows = '[[meter.accuracy]]\nfunction = "ohms 4-wire"\nrange = "100 ohm"\npercent_of_reading = 0.01\n'
+    text = f'[bench]\nformat = 1\nname = "hand"\n[meter]\ncalibration_due = 2030-05-01\n{rows}'
+    bench = parse_bench(text, "bench.toml", today=TODAY)
+    assert bench.setup == {"meter": None, "supply": None}
+    assert bench.accuracy.standard_uncertainty("ohms 4-wire", 4.66) == pytest.approx(4.66e-4 / 3**0.5)
+    assert bench.accuracy.rows["dc volts"] == STATED_DEFAULT.rows["dc volts"]
+    assert [caution for caution in bench.cautions if "dc volts" in caution]
+    assert [caution for caution in bench.cautions if "2030-05-01" in caution]
+    for table in ("[meter]", '[meter]\nprofile = "scpi-meter"\n' + rows):
+        with pytest.raises(FileError, match=re.escape("meter.address: this key is missing")):
+            parse_bench(f'[bench]\nformat = 1\nname = "hand"\n{table}', "bench.toml")
+
+
 @pytest.mark.parametrize(
     ("old", "new", "key"),
     [

@@ -79,3 +79,13 @@ def test_of_a_real_hand_nobody_knows_and_the_words_carry_the_number() -> None:
     assert said is not None
     assert "If the screw was turned clockwise" in said[0]
     assert one.look(PATIENCE_S - 1.0, 1e-5, 2.0, From(2.0), NOISE_V) is None
+
+
+def test_where_every_turn_is_told_nobody_is_asked_whether_the_screw_was_turned() -> None:
+    asked, told = silence(), silence()
+    told.watches_turns()
+    late_s = PATIENCE_S + 1.0
+    assert asked.look(late_s, 1e-5, 5.0, From(4.0), NOISE_V) is not None
+    assert told.look(late_s, 1e-5, 5.0, From(4.0), NOISE_V) is None
+    told.turned(5.0)
+    assert told.look(late_s, 1e-5, 5.0, From(4.0), NOISE_V) is not None

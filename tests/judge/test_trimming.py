@@ -143,7 +143,7 @@ def test_the_predicted_rest_is_aimed_at() -> None:
     bench = Bench(value=0.0215)
     advice = bench.look(rest=0.027)
     assert advice.mood == "inside"
-    assert advice.words.startswith("inside now, but still rising")
+    assert advice.words.startswith("but still rising")
     assert advice.turns is not None
     assert advice.turns < 0.0
     waiting = Bench(value=0.0185).look(rest=0.0218)
@@ -158,9 +158,9 @@ def test_the_predicted_rest_is_aimed_at() -> None:
     ("value", "guard", "mood", "words"),
     [
         (0.0214, 0.0, "steady", "leave it"),
-        (0.0208, 0.0, "inside", "inside, 1.2 mV below the target: a touch anticlockwise"),
-        (0.0234, 0.0, "inside", "inside, 1.4 mV above the target: a touch clockwise"),
-        (0.0214, 0.0018, "inside", "inside, 600 uV below the target: a touch anticlockwise"),
+        (0.0208, 0.0, "inside", "1.2 mV below the target: a touch anticlockwise"),
+        (0.0234, 0.0, "inside", "1.4 mV above the target: a touch clockwise"),
+        (0.0214, 0.0018, "inside", "600 uV below the target: a touch anticlockwise"),
         (0.0219, 0.0100, "steady", "leave it"),  # the meter is too coarse to be nearer than this
     ],
 )

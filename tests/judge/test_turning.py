@@ -18,9 +18,9 @@ def turning(track: float = 25.0) -> Turning:
 @pytest.mark.parametrize(
     ("slope", "track", "words"),
     [
-        (0.002, 25.0, ", of about 9 in all"),
+        (0.002, 25.0, "; 5 to 10 turns to go from here"),
         (0.0065, 25.0, ""),  # a little more than one move
-        (0.0005, 25.0, ", of about 25 in all"),  # never more than the track
+        (0.0005, 25.0, "; more than 20 turns to go from here"),  # never more than the track
         (0.002, 1.0, ""),  # a screw that is turned by degrees
         (None, 25.0, ""),
     ],

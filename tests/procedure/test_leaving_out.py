@@ -7,17 +7,18 @@ from typing import Any
 
 import pytest
 
+from benchkit import quantities
 from benchkit.errors import IllegalEvent
 from benchkit.events import Answered, Decided, PartsReplaced, Waited
 from benchkit.procedure import knowledge
 from benchkit.procedure.actions import Ask, Narrow, Read, Suspect, Trim, Wait
 from benchkit.procedure.file import load_procedure, parse_procedure
-from benchkit.procedure.items import condition_key
+from benchkit.procedure.items import Plan, condition_key
 from benchkit.procedure.moves import MOST_TRIMS_AGAIN
 from benchkit.procedure.plan import make_plan
 from benchkit.procedure.walk import Walk
 from benchkit.shipped import find_procedure
-from tests.procedure.driver import SMALL, Drive, begun, good, item_of, narrowed, reading, suspected
+from tests.procedure.driver import SMALL, Drive, begun, good, item_of, judged, narrowed, reading, suspected
 from tests.stage.designs import breadboard
 
 AGAIN = """
@@ -66,8 +67,13 @@ def small_again() -> Walk:
 
 
 @cache
+def shipped_as(name: str) -> Plan:
+    return make_plan(load_procedure(find_procedure(name)), breadboard())
+
+
+@cache
 def repair() -> Walk:
-    return Walk(make_plan(load_procedure(find_procedure("re-bias")), breadboard()))
+    return Walk(shipped_as("re-bias"))
 
 
 TARGET = "bias.target.emitter.upper.1"
@@ -359,3 +365,51 @@ def test_narrowed_limits_are_asked_and_kept_under_what_the_model_is_told() -> No
     while drive.state.phase == "predicting":
         drive.well()
     assert repair().unit_limits_for(drive.state, item_of(repair(), "left.spread.spread")) is not None
+
+
+def retaken(plan: Plan, item: str) -> list[str]:
+    points = {one.id: one.point for one in plan.items}
+    rule = next(one for one in plan.items if one.id == item)
+    return [point.name for name in rule.retake if (point := points[name]) is not None]
+
+
+def test_what_a_rule_judged_can_be_read_again() -> None:
+    plan = shipped_as("production-trim")
+    assert retaken(plan, "warm.hum-rule") == ["output.ac"]
+    assert retaken(plan, "warm.symmetry-rule") == ["emitter.lower.1"], "the clips were on the upper one"
+    assert retaken(plan, "power.offset-rule") == ["output"]
+
+    drive = begun(Walk(plan)).until("warm.hum-rule")
+    drive.tell(judged("warm.hum-rule", "fail"))
+    assert choices(drive)[0] == "read again"
+    assert "again" not in choices(drive), "the same readings would be judged the same"
+    drive.tell(Decided(item="warm.hum-rule", choice="read again"))
+    quiet = drive.walk.item(drive.state).id
+    assert quiet == "warm.quiet.output.ac"
+    assert quiet not in drive.state.readings
+    assert drive.until("driven.choose").state.result("warm.hum-rule").verdict == "pass"  # type: ignore[union-attr]
+    assert drive.walk.replay(drive.told)[0] == drive.state
+
+
+def test_what_was_read_between_is_kept() -> None:
+    plan = shipped_as("first-power-on")
+    rule = "low-rails.stiffness-rule"
+    assert retaken(plan, rule) == ["spread.upper", "spread.lower"]
+    drive = begun(Walk(plan)).until(rule)
+    before = dict(drive.state.readings)
+    drive.tell(judged(rule, "undecided"))
+    drive.tell(Decided(item=rule, choice="read again"))
+    dropped = {f"low-rails.spread.{point}" for point in retaken(plan, rule)}
+    assert before.keys() - drive.state.readings.keys() == dropped
+    asked = len(drive.asked)
+    drive.until(rule)
+    reads = [action.point for action in drive.asked[asked:] if isinstance(action, Read)]
+    assert reads == ["spread.upper", "spread.lower"]
+    assert drive.until("low-rails.fail-safe-rule").state.result(rule).verdict == "pass"  # type: ignore[union-attr]
+
+
+def test_before_power_the_limit_is_the_one_that_was_checked() -> None:
+    plan = shipped_as("re-bias")
+    checked = next(item for item in plan.items if item.kind == "limit check")
+    ready = next(item for item in plan.items if item.id == "found.ready")
+    assert f"Limit {quantities.show(checked.limit_a, 'A')} checked" in ready.do

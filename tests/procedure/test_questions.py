@@ -4,12 +4,13 @@ from dataclasses import replace
 
 import pytest
 
-from benchkit.events import PointLimits
+from benchkit.events import Judged, PointLimits
 from benchkit.judge.falls import fall_words
 from benchkit.judge.limits import Limits
 from benchkit.procedure import questions
+from benchkit.procedure.actions import Ask, Read, Write
 from benchkit.procedure.items import Item
-from tests.procedure.driver import item_of, judged, shipped, small
+from tests.procedure.driver import begun, item_of, judged, reading, shipped, small
 
 
 def values(item: Item) -> list[str]:
@@ -104,3 +105,25 @@ def test_every_word_in_braces_is_filled_in(name: str) -> None:
         for text in (item.title, item.do, item.why, item.caution, item.expected):
             assert "{" not in text, item.id
             assert "  " not in text, item.id
+
+
+def test_a_value_inside_that_the_meter_leaves_open_is_not_said_to_be_just_outside() -> None:
+    walk = small()
+    drive = begun(walk)
+    while not isinstance(drive.open, Read) or item_of(walk, drive.open.item).condition is None:
+        drive.well()
+    item = item_of(walk, drive.open.item)
+    limits = walk.limits_for(drive.state, item)
+    assert limits is not None
+    assert limits.low is not None
+    assert limits.high is not None
+    drive.tell(reading(item, (limits.low + limits.high) / 2.0, u=limits.width))
+    (write,) = drive.actions
+    assert isinstance(write, Write)
+    assert isinstance(write.event, Judged)
+    assert (write.event.verdict, write.event.rare) == ("undecided", True)
+    assert questions.INSIDE_WHY in write.event.why
+    drive.tell(write.event)
+    assert isinstance(drive.open, Ask)
+    assert "outside" not in drive.open.question.title
+    assert "measure again" not in drive.open.question.caution

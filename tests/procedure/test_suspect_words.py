@@ -62,6 +62,14 @@ def test_one_alone_is_said_of_one() -> None:
     )
 
 
+def test_a_fault_that_is_named_is_not_said_to_be_unseen_as_well() -> None:
+    good = replace(GOOD, alike=("spreader.transistor: leaky",))
+    one = replace(ANSWER, suspects=(good,), unseen_count=1, unseen=("spreader.transistor: leaky",))
+    assert words.unseen_words(one, 3).startswith("Each fault that isn't named here would have shown")
+    two = replace(one, unseen_count=2, unseen=("spreader.transistor: leaky", "a: open"))
+    assert words.unseen_words(two, 3) == "1 other fault could not have shown yet: a open."
+
+
 def test_without_an_answer_only_that_is_said() -> None:
     none = Suspected(item="i", after=3, problem="no solution")
     assert words.heading_words(none) == "The model has no answer about suspects: no solution"

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
@@ -13,6 +14,7 @@ from benchkit.events import Answered
 from benchkit.record import at_the_end, times
 from benchkit.record.comparing import as_found_as_left, compare
 from benchkit.record.earlier import last_before
+from benchkit.record.facts import Took
 from benchkit.record.names import record_name
 from benchkit.record.show import as_text
 from benchkit.record.show_json import as_json
@@ -246,6 +248,12 @@ def test_the_end_of_a_walk_without_a_record_says_nothing(tmp_path: Path) -> None
 
 
 # -- times ----------------------------------------------------------------------------------------------------------
+
+
+def test_times_have_no_digits_that_nobody_measured(tmp_path: Path) -> None:
+    one = summary(tmp_path, "a.jsonl")
+    one = replace(one, took=Took(seconds=397.95000000000357, target_s=300.0))
+    assert times.row(one)["seconds"] == 397.95
 
 
 def test_times_are_one_row_a_record(tmp_path: Path) -> None:

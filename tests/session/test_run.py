@@ -522,6 +522,15 @@ def test_a_walk_by_hand() -> None:
     assert not any(event.confirmed for event in offs)
     cautions = " ".join(question.caution for question in run.front.questions)
     assert "Nothing switches this supply off but your hand" in cautions
+    asked = [question for question in run.front.questions if question.kind == "by hand"]
+    rails = [question for question in asked if question.title.startswith("Set the supply")]
+    assert {question.do.split(". ")[0].split(",")[0] for question in rails} == {"Output off", "The output stays on"}
+    currents = [question for question in asked if question.point.endswith(".current")]
+    assert currents
+    for question in currents:
+        assert "the supply's own display" in question.title
+        assert "Meter" not in question.do
+        assert not question.red
     replayed(run)
 
 

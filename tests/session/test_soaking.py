@@ -155,7 +155,8 @@ def test_by_hand_it_ends_by_itself_when_it_has_settled() -> None:
 
     _, event = soak(SOAK, lambda t_s: 0.0, manual=True, front=FakeFront(answer))
     assert waited(event).settled
-    assert 8 <= len(typed) <= 14
+    assert len(typed) == 4
+    assert "3 of at least 4 entries" in typed[3]
 
 
 @pytest.mark.parametrize("many", [3, 60, 61, 500])
@@ -164,3 +165,16 @@ def test_a_kept_trend_is_short_and_has_both_ends(many: int) -> None:
     kept = soaking.thinned(points)
     assert len(kept) == min(many, 60)
     assert (kept[0], kept[-1]) == (points[0], points[-1])
+
+
+def test_by_hand_it_says_why_it_is_not_at_rest_and_leaves_no_stale_figure() -> None:
+    typed: list[str] = []
+
+    async def answer(question: Question, refused: str) -> Reply | None:
+        typed.append(question.expected)
+        return Reply(choice="done", text=f"{21.5 + 0.8 * len(typed):.2f} mV")
+
+    run, event = soak(SOAK, lambda t_s: 0.0, manual=True, front=FakeFront(answer))
+    assert not waited(event).settled
+    assert any("it still moves 1.6 mV a minute" in words for words in typed)
+    assert run.session.moment.live is None

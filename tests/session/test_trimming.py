@@ -141,9 +141,9 @@ def test_nothing_is_taken_by_itself_while(value: Callable[[float], float | None]
     ("value", "rested", "words"),
     [
         (lambda t_s: 0.0198, None, "2.2 mV below the target: "),
-        (lambda t_s: 0.0206, None, "inside, "),
+        (lambda t_s: 0.0206, None, "1.4 mV below the target: "),
         (lambda t_s: 0.0199 + 1e-6 * t_s, 0.0154, "hold: it is still rising"),
-        (lambda t_s: 0.0221, 0.0195, "inside, and will rest 1"),
+        (lambda t_s: 0.0221, 0.0195, "will rest 1"),
     ],
     ids=["at the limit", "inside", "rises to the target", "will rest elsewhere"],
 )
@@ -362,7 +362,7 @@ def test_by_hand_the_words_come_after_each_entry() -> None:
     event = bench.trim()
     assert isinstance(event, ReadingTaken)
     assert event.reading.value == pytest.approx(0.0221)
-    said = [question.expected for question in bench.front.questions]
+    said = [question.do for question in bench.front.questions]
     assert "anticlockwise" in said[1]
     assert "too far" in said[3]
     assert bench.front.questions[0].kind == "by hand"
@@ -455,7 +455,7 @@ def test_by_hand_a_fall_is_typed_again_and_a_negative_reading_is_no_advice() -> 
 
     bench = Bench(lambda t_s: 0.0, answer, manual=True)
     assert isinstance(bench.trim(), ReadingTaken)
-    said = [question.expected for question in bench.front.questions]
+    said = [question.do for question in bench.front.questions]
     assert "type what they read" in said[2]
     assert "negative" in said[3]
     assert "anticlockwise" in said[4]

@@ -20,7 +20,7 @@ from benchkit.events import Closed
 from benchkit.procedure.actions import Choice, Question
 from benchkit.procedure.questions import NOTHING_REPLACED, OTHER_PARTS, STOP
 from benchkit.session.falling import TOO_SLOW_WORDS
-from benchkit.session.front import Front, Reply, SupplyView
+from benchkit.session.front import READ_BY_HAND, Front, Reply, SupplyView
 from benchkit.session.supply_view import PULL_THE_PLUG
 from benchkit.ui import look
 from benchkit.ui.app import BenchApp
@@ -113,6 +113,46 @@ def test_the_start_takes_who_and_what_and_begins() -> None:
             await until(lambda: bench.front is not None)
             assert bench.identity == Identity(unit="0042", operator="R. Holm")
             await until(lambda: isinstance(app.screen, WalkScreen) and shows(app, "Clip the meter across"))
+
+    run(test)
+
+
+def test_before_the_first_picture_the_page_says_what_is_being_done() -> None:
+    async def test() -> None:
+        async def script(front: Front, bench: Bench) -> Closed:
+            await bench.off_asked.wait()
+            return scripted.closed()
+
+        async with running(script) as (app, _, bench):
+            await until(lambda: shows(app, "Getting ready"))
+            assert shows(app, "the record is opened and the instruments are reached")
+            bench.off_asked.set()
+
+    run(test)
+
+
+def test_what_was_typed_ahead_and_cut_off_by_a_hold_is_said_and_never_sent() -> None:
+    async def test() -> None:
+        view = replace(scripted.VIEW, meter=READ_BY_HAND)
+        script = asking(scripted.PROBES, scripted.HOLD, scripted.BY_HAND_READING, view=view)
+        async with running(script) as (app, pilot, bench):
+            await pilot.press("1")
+            assert app.walk is not None
+            await until(lambda: app.walk is not None and app.walk.page.id == "hold")
+            await pilot.press(*"yes", "enter")
+            await until(lambda: shows(app, "Read the drop across"))
+            assert app.walk.page.answer.query_one(Input).value == ""
+            assert len(bench.replies) == 2
+
+    run(test)
+
+
+def test_why_a_reading_did_not_pass_stands_beside_the_suspects() -> None:
+    async def test() -> None:
+        view = replace(FAILED_VIEW, suspects=scripted.SUSPECTED)
+        async with running(asking(scripted.SUSPECTING, view=view)) as (app, _, _bench):
+            await until(lambda: shows(app, "83 %"))
+            assert shows(app, "Too high by 7.2 mV.")
 
     run(test)
 

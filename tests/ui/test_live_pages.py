@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import asyncio
 import contextlib
 from collections.abc import AsyncIterator
 from dataclasses import replace
@@ -18,7 +19,7 @@ from benchkit.ui.app import BenchApp
 from benchkit.ui.screens.walk import channel_time
 from benchkit.ui.widgets.digits import BigReading, changed_columns
 from benchkit.ui.widgets.trend import Trend
-from benchkit.ui.widgets.trim_words import MOOD_LOOKS
+from benchkit.ui.widgets.trim_words import MOOD_LOOKS, TURN_KEYS
 from tests.ui import live_views, scripted
 from tests.ui.live_views import LIVES, PROBING, SCENES, SOAK_VIEW, TRIM_VIEW, trimming
 from tests.ui.scripted import WHO, Bench, Script, app_for, asking
@@ -212,9 +213,43 @@ def test_figures_keep_their_place() -> None:
     run(test)
 
 
+def test_keys_that_turn_while_a_turn_is_carried_out_are_kept_and_said() -> None:
+    async def test() -> None:
+        go_on = asyncio.Event()
+
+        async def script(front: Front, bench: Bench) -> Closed:
+            front.show(scripted.TRIM_VIEW)
+            bench.replies.append(await front.ask(scripted.TRIM))
+            await go_on.wait()
+            for question in (scripted.TRIM, scripted.TRIM, scripted.CONFIRM, scripted.TRIM):
+                bench.replies.append(await front.ask(question))
+            return scripted.closed()
+
+        async with running(script) as (app, pilot, bench, _):
+            await pilot.press("pageup", "pageup")
+            await until(lambda: len(bench.replies) == 1)
+            await pilot.pause(0.2)  # nobody has the keys now
+            await pilot.press("pageup", "down")
+            await until(lambda: shows(app, "Still turning: 1.75 turns for MORE bias to come."))
+            go_on.set()
+            await until(lambda: len(bench.replies) == 2)
+            assert [reply.turns for reply in bench.replies] == [1.0, 1.75]
+            await until(lambda: shows(app, TURN_KEYS))
+            app.walk.page.take_key("pageup")  # type: ignore[union-attr]
+            app.walk.page.take_key("pageup")  # type: ignore[union-attr]
+            await until(lambda: len(bench.replies) == 3)
+            await until(lambda: app.walk is not None and app.walk.page.id == "step")
+            await pilot.press("y")
+            await until(lambda: len(bench.replies) == 4)
+            await pilot.pause(0.3)
+            assert len(bench.replies) == 4, "what was still to be turned belonged to the trim before"
+
+    run(test)
+
+
 @pytest.mark.parametrize(
     ("elapsed_s", "target_s", "words"),
-    [(None, 300.0, ""), (0.0, None, "0:00  "), (59.9, 300.0, "0:59 of 5:00  "), (3723.0, 60.0, "62:03 of 1:00  ")],
+    [(None, 300.0, ""), (0.0, None, "0:00  "), (59.9, 300.0, "1:00 of 5:00  "), (3723.0, 60.0, "62:03 of 1:00  ")],
 )
 def test_the_time_of_a_channel(elapsed_s: float | None, target_s: float | None, words: str) -> None:
     assert channel_time(elapsed_s, target_s) == words

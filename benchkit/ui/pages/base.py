@@ -43,6 +43,14 @@ class Page(Vertical):
         self.question = None
         self.answer.withdraw()
 
+    def take_key(self, key: str) -> bool:
+        """Take a key that means something on this page, whoever has the keys; returns whether it does."""
+        return False
+
+    def turn_away(self) -> None:
+        """Make way for another page."""
+        self.withdraw()
+
     def say(self, view: View) -> None:
         """Show a picture of the walk."""
         if self.question is None:

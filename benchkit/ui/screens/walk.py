@@ -22,6 +22,7 @@ from benchkit.ui.pages.watch import SoakPage, WatchPage, is_soak
 from benchkit.ui.screens.base import TURN_OVER, BenchScreen
 from benchkit.ui.series import end_question
 from benchkit.ui.widgets.answer import Answer
+from benchkit.ui.widgets.cut import Cut
 from benchkit.ui.widgets.message_line import MessageLine
 from benchkit.ui.widgets.trail_words import Role, trail
 from benchkit.ui.widgets.words import Words
@@ -52,7 +53,7 @@ def channel_time(elapsed_s: float | None, target_s: float | None) -> str:
 
 
 def _clock(seconds: float) -> str:
-    whole = max(0, int(seconds))
+    whole = max(0, round(seconds))  # as at the end and in the record
     return f"{whole // 60}:{whole % 60:02d}"
 
 
@@ -89,6 +90,11 @@ class WalkScreen(BenchScreen):
     def page(self) -> Page:
         """The page of the moment."""
         return self._pages[self._switcher.current or "step"]
+
+    def get_ready(self, channel: str) -> None:
+        """Say what is being done before there is anything of the walk to show."""
+        about = f" for channel {safe(channel)}" if channel else ""
+        self.page.card.wait(f"Getting ready{about}: the record is opened and the instruments are reached.", None, None)
 
     def put(self, question: Question, refused: str) -> None:
         """Put a question on its page."""
@@ -132,7 +138,7 @@ class WalkScreen(BenchScreen):
             self.page.answer.take_focus()  # whatever took it away: a question that stands has the keys
 
     def lay_out(self, width: int, height: int) -> None:
-        """Choose the layout; the trail has another form where there is room."""
+        """Choose the layout; head and trail have another form where there is room."""
         before = self.arrangement
         super().lay_out(width, height)
         if self.arrangement == "tiny":
@@ -140,13 +146,8 @@ class WalkScreen(BenchScreen):
         elif before == "tiny":
             self.page.answer.take_focus()
         if self._view is not None and self.is_mounted:
+            self._say_head(self._view)
             self._say_trail(self._view)
-
-    def take_by_space(self) -> None:
-        """Take the reading that stands on the page, if one does."""
-        if self.arrangement != "tiny":  # nobody answers what can't be seen
-            # In its turn behind the keys before it, which wait at whoever has them.
-            (self.focused or self).call_later(self.page.answer.take_reading)
 
     def hold_keys(self, seconds: float) -> None:
         """A reading was taken by itself: what is pressed now was meant for it."""
@@ -158,9 +159,12 @@ class WalkScreen(BenchScreen):
         self.page.turn_over(rows)
 
     def on_key(self, event: events.Key) -> None:
-        """Take what is typed between two questions, where it belongs to the second."""
-        if self.page.answer.type_ahead(event):
+        """Take the space bar, and what is typed between two questions, where it belongs to the second."""
+        if self.arrangement != "tiny" and self.page.answer.type_ahead(event):  # nobody answers what can't be seen
             event.stop()
+        elif self.arrangement != "tiny" and self.page.take_key(event.key):
+            event.stop()
+            event.prevent_default()
 
     def on_answer_given(self, message: Answer.Given) -> None:
         """Hand the answer on."""
@@ -172,8 +176,10 @@ class WalkScreen(BenchScreen):
 
     def _turn_to(self, page: str) -> None:
         if self._switcher.current != page:
-            self.page.withdraw()
+            lost = self.page.answer.make_way()
+            self.page.turn_away()
             self._switcher.current = page
+            self.page.answer.stray = lost
 
     def _say_message(self) -> None:
         """Show the message; beside a plot it has one row, and comes part by part."""
@@ -203,8 +209,8 @@ class WalkScreen(BenchScreen):
             ("rehearsal  " if view.kind == "rehearsal" else "", f"bold {CARE}"),
             (kept, QUIET),
         )
-        row.add_row(left, right)
-        self._head.say_drawn((left.plain, right.plain), row)
+        row.add_row(Cut(left), right)
+        self._head.say_drawn((left.plain, right.plain, self.app.size.width), row)
 
     def _say_trail(self, view: View) -> None:
         width = max(20, self.app.size.width - 2)

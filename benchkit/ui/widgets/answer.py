@@ -15,7 +15,7 @@ from textual.widgets import Input
 from benchkit.procedure.actions import Choice, Question
 from benchkit.session.front import Reply
 from benchkit.ui.look import safe
-from benchkit.ui.widgets.answer_keys import typed_reply
+from benchkit.ui.widgets.answer_keys import ENTER, typed_on, typed_reply
 from benchkit.ui.widgets.choices import Choices, keeps_keys
 from benchkit.ui.widgets.words import Words
 
@@ -72,8 +72,10 @@ class Answer(Vertical):
         self._hint = Words(classes="answer-hint")
         self._entry = Entry(classes="answer-entry", compact=True, select_on_focus=False)
         self._choices = Choices(classes="answer-choices")
-        self._choices.typed_ahead = self.type_ahead
+        self._choices.typed_ahead = lambda key: self.type_ahead(key, passed_by_entry=False)
         self._ahead: tuple[str, str] | None = None
+        self.stray = ""  # typed while nothing was asked for
+        self._coming = False  # the entry has been called for, and does not have the keys yet
         self.by_hand = False
         """A person reads the meter: a figure typed where probes are to be placed begins the entry that follows."""
 
@@ -119,28 +121,70 @@ class Answer(Vertical):
         self._choices.offer(shown, stacked=stacked, arrows=can_move, usual=usual, space=space)
         self._choices.display = bool(shown)
         self._focus()
+        stray, self.stray = self.stray, ""
         if not refused:
             self._go_on_typing(question)
-            self._take_typed_ahead(question)
-
-    def _take_typed_ahead(self, question: Question) -> None:
-        """Put what was typed before its entry stood there into it."""
-        point, text = self._ahead or ("", "")
+            stray = self._take_typed_ahead(question) or stray
         self._ahead = None
-        if text and question.kind == "by hand" and question.point == point:
-            self._entry.value = text
-            self._entry.cursor_position = len(text)
+        if stray.strip():
+            lost = f'"{safe(stray.strip())}" was typed before this stood here, and is not taken. {hint.plain}'
+            self._complain(lost.strip())
 
-    def type_ahead(self, key: events.Key) -> bool:
-        """Take a key that begins an entry, or that belongs to one which has been begun and does not stand there yet."""
+    def _take_typed_ahead(self, question: Question) -> str:
+        """Put what was typed before its entry stood there into it, and its Enter; return what belongs nowhere."""
+        point, text = self._ahead or ("", "")
+        if question.kind != "by hand" or question.point != point:
+            return text
+        typed, ended, _ = text.partition(ENTER)
+        if typed:
+            self._entry.value = typed
+            self._entry.cursor_position = len(typed)
+        if typed.strip() and ended:
+            self._submit(typed)
+        return ""
+
+    def make_way(self) -> str:
+        """Forget what was typed ahead, and return what is still to be said not to have been taken."""
+        lost, self.stray = (self._ahead or ("", ""))[1].partition(ENTER)[0] or self.stray, ""
+        self._ahead = None
+        return lost
+
+    def _late(self, key: events.Key, character: str | None, passed_by_entry: bool) -> bool:
+        """Take a key that was on its way to elsewhere when the entry came: it belongs into the entry."""
+        elsewhere = self._choices.has_focus and not self._coming
+        if not self._entry.display or elsewhere or self._reason_for is not None:
+            return False
+        if passed_by_entry and character is None:
+            return False  # the entry has had it
+        if key.key == "enter":
+            if not self._too_soon() or self._entry.value.strip():
+                self._submit(self._entry.value)
+        elif key.key == "backspace":
+            self._entry.action_delete_left()
+        elif character is not None:
+            self._entry.insert_text_at_cursor(character)
+        else:
+            return False
+        return True
+
+    def type_ahead(self, key: events.Key, *, passed_by_entry: bool = True) -> bool:
+        """Take a key that begins an entry, or that belongs to one which has been begun and does not stand there yet.
+
+        A key that is no character may have `passed_by_entry` on its way here.
+        """
         character = key.character if key.is_printable else None
         if self._question is None:
             if self._ahead is None:
-                return False
-            self._ahead = (self._ahead[0], _typed_on(self._ahead[1], key.key, character))
+                return self._note_stray(character)
+            self._ahead = (self._ahead[0], typed_on(self._ahead[1], key.key, character))
             self._echo()
             return True
         question = self._question
+        if question.kind == "by hand" and self._late(key, character, passed_by_entry):
+            return True
+        if key.key == "space":
+            self.take_reading()
+            return True
         if not self._begins_entry(question) or character is None or character not in BEGINS_ENTRY:
             return False
         if self._too_soon():
@@ -151,6 +195,13 @@ class Answer(Vertical):
             self._echo()
         return True
 
+    def _note_stray(self, character: str | None) -> bool:
+        """Keep a figure that is typed while nothing is asked for in mind, to say that it was not taken."""
+        if not self.by_hand or character is None or not (self.stray or character in BEGINS_ENTRY):
+            return False
+        self.stray += character
+        return True
+
     def _echo(self) -> None:
         """Show what has been typed for an entry that does not stand there yet."""
         if self._ahead is not None:
@@ -158,7 +209,8 @@ class Answer(Vertical):
             self._entry.display = self._choices.display = False
             self._hint.display = True
             self._hint.set_class(False, "refused")
-            self._hint.say(f"Typed so far: {safe(self._ahead[1])}")
+            typed = self._ahead[1].partition(ENTER)[0]
+            self._hint.say(f"Typed so far: {safe(typed)}" if typed else "One moment: what is typed now is kept.")
 
     def _begins_entry(self, question: Question) -> bool:
         return self.by_hand and question.kind == "probes" and bool(question.point) and bool(question.choices)
@@ -192,7 +244,12 @@ class Answer(Vertical):
         if self._question is not None:
             self._focus()
 
+    def on_descendant_focus(self, _message: events.DescendantFocus) -> None:
+        """Take note that the entry has the keys."""
+        self._coming = self._coming and not self._entry.has_focus
+
     def _focus(self) -> None:
+        self._coming = bool(self._entry.display) and not self._entry.has_focus
         (self._entry if self._entry.display else self._choices).focus(scroll_visible=False)
 
     def _too_soon(self) -> bool:
@@ -207,8 +264,6 @@ class Answer(Vertical):
         """Take the reading that the question is about, as the space bar or a foot switch wants it."""
         question = self._question
         if question is None:
-            if self._ahead is not None:
-                self._ahead = (self._ahead[0], f"{self._ahead[1]} ")
             return
         if question.kind not in SPACE_TAKES or not question.choices:
             self._complain(NOTHING_TO_TAKE)
@@ -245,29 +300,39 @@ class Answer(Vertical):
             self._hint.say(f"{choice.label}: {what}, Enter keeps it, Esc goes back.")
             self._focus()
             return
+        question = self._question
         self._give(Reply(choice=choice.value))
+        if question is not None and self._begins_entry(question) and choice == question.choices[0]:
+            self._ahead = (question.point, "")
+            self._echo()
 
     def on_input_submitted(self, message: Input.Submitted) -> None:
         """Answer with what was typed."""
         message.stop()
-        question = self._question
-        if question is None:
+        if self._question is None:
             return
         if self._too_soon():
             self._complain(TOO_SOON)
+        else:
+            self._submit(message.value)
+
+    def _submit(self, value: str) -> None:
+        """Answer with what was typed."""
+        question = self._question
+        if question is None:
             return
-        text = message.value.strip()
+        text = value.strip()
         if self._reason_for is not None:
             if text:
                 self._give(Reply(choice=self._reason_for.value, text=text))
             else:
                 wanted = self._reason_for.wanted
                 needed = f"What is needed is {wanted}" if wanted else "A reason is needed"
-                self._complain(f"{needed}; Esc goes back.", message.value)
+                self._complain(f"{needed}; Esc goes back.", value)
             return
         reply = typed_reply(question, text)
         if isinstance(reply, str):
-            self._complain(reply, message.value)
+            self._complain(reply, value)
         elif isinstance(reply, Choice):
             self._take(reply)
         else:
@@ -297,13 +362,6 @@ class Answer(Vertical):
         self._half_typed = None
         self.withdraw()
         self.post_message(self.Given(reply))
-
-
-def _typed_on(text: str, key: str, character: str | None) -> str:
-    """Return a half typed text after another key."""
-    if key == "backspace":
-        return text[:-1]
-    return text if character is None else text + character
 
 
 def wants_entry(question: Question) -> bool:

@@ -3,9 +3,28 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
+from typing import Final
 
 from benchkit.procedure.actions import Choice, Question
 from benchkit.session.front import Reply
+
+ENTER: Final = "\n"
+"""How Enter is kept of what is typed ahead; what comes after it belongs to nothing that is known yet."""
+
+
+def typed_on(text: str, key: str, character: str | None) -> str:
+    """Return a half typed text after another key.
+
+    Examples
+    --------
+    >>> typed_on("1.2", "3", "3"), typed_on("1.2", "backspace", None), typed_on("1.2", "enter", None) == "1.2" + ENTER
+    ('1.23', '1.', True)
+    """
+    if key == "backspace":
+        return text[:-1]
+    if key == "enter":
+        return text + ENTER
+    return text if character is None or ENTER in text else text + character
 
 
 def keyed(choices: Sequence[Choice]) -> tuple[tuple[str, Choice], ...]:
@@ -52,7 +71,8 @@ def typed_reply(question: Question, text: str) -> Reply | Choice | str:
                 return choice if choice.wants_reason else Reply(choice=choice.value, text=text)
         if not question.choices and word == "yes":
             return Reply(choice="yes", text=text)
-        return f'"{text}" was typed. Only the whole word yes passes this point.' if text else "Nothing was typed yet."
+        was = f'"{text}" was typed' if text else "Nothing was typed yet"
+        return f"{was}. Only the whole word yes, then Enter, passes this point."
     if not text and (question.kind != "by hand" or question.point):
         return "Nothing was typed yet."
     return Reply(choice=question.choices[0].value if question.choices else "done", text=text)

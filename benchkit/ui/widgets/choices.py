@@ -88,11 +88,11 @@ class Choices(Words, can_focus=True):
 
     def on_key(self, event: events.Key) -> None:
         """Take or move."""
-        if not self._choices:
-            return
         if self.typed_ahead(event):
             event.stop()
             event.prevent_default()
+            return
+        if not self._choices:
             return
         if event.key == "enter" and not self._usual:
             self.post_message(self.Refused(f"Enter answers nothing here: {self.keys}."))

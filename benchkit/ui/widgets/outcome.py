@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from typing import Any, Final
 
+from rich.console import Group
 from rich.table import Table
 from rich.text import Text
 from textual.containers import Vertical
@@ -11,6 +12,7 @@ from textual.containers import Vertical
 from benchkit.events import Verdict
 from benchkit.session.front import ResultView
 from benchkit.ui.look import INK, QUIET, STRONG, VERDICT_COLOURS, VERDICT_ORDER, VERDICT_SHAPES, VERDICT_WORDS, safe
+from benchkit.ui.widgets.cut import Cut
 from benchkit.ui.widgets.gauge import Gauge, Gauged
 from benchkit.ui.widgets.words import Words
 
@@ -133,14 +135,14 @@ class Outcome(Vertical):
         row = Table.grid(expand=True)
         row.add_column(ratio=1)
         row.add_column(justify="right", no_wrap=True, overflow="crop")
-        words = Text(no_wrap=True, overflow="crop")
+        words = Text()
         words.append(f" {heading}: ", style=QUIET)
         point, rest = pointed(safe(result.title))
         if point:
             words.append(f"{point}  ", style=f"bold {INK}")
         words.append(safe(result.value_text), style=f"bold {STRONG}")
         words.append(f"  {rest}", style=INK)
-        row.add_row(words, verdict_strip(result.verdict))
+        row.add_row(Cut(words), verdict_strip(result.verdict))
         self._head.say_drawn((result, heading), row)
         self._gauge.say(gauged(result))
         self._gauge.set_class(result.low is None and result.high is None, "empty")
@@ -149,8 +151,8 @@ class Outcome(Vertical):
             why.append(f"  {mark}", style=QUIET)
         self._why.say(why)
         self._why.set_class(not why.plain, "empty")
-        lines = [result_line(earlier) for earlier in reversed(results[-9:-1])]
-        self._earlier.say_drawn(tuple(results[-9:-1]), Text("\n").join(lines))
+        lines = [Cut(result_line(earlier)) for earlier in reversed(results[-9:-1])]
+        self._earlier.say_drawn(tuple(results[-9:-1]), Group(*lines))
 
 
 def gauged(result: ResultView) -> Gauged:

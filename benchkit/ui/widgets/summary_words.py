@@ -26,9 +26,10 @@ def closing_sentence(view: View) -> str:
 
 
 def still_open(results: Sequence[ResultView]) -> tuple[ResultView, ...]:
-    """Return the results that did not pass, each item's newest only, in their order."""
+    """Return the results that did not pass, each item's newest only: what failed first, and else in their order."""
     newest = {result.item: result for result in results}
-    return tuple(result for result in newest.values() if result.verdict != "pass")
+    still = (result for result in newest.values() if result.verdict != "pass")
+    return tuple(sorted(still, key=lambda result: result.verdict != "fail"))
 
 
 def broken_words(broken: str) -> str:

@@ -28,6 +28,17 @@ TURN_KEYS: Final = "MORE bias: right 1/50 turn, up 1/4, page up 1; less: left, d
 """The same in words, in one line of 78 cells."""
 
 
+def owed_words(turns: float) -> str:
+    """Say how far the screw of a rehearsal is still to be turned by keys that were pressed already.
+
+    Examples
+    --------
+    >>> owed_words(-1.02)
+    'Still turning: 1.02 turns for LESS bias to come.'
+    """
+    return f"Still turning: {abs(turns):.2f} turns for {'MORE' if turns > 0.0 else 'LESS'} bias to come."
+
+
 def where(live: LiveView) -> Literal["inside", "below", "above", "nowhere"]:
     """Return on which side of the limits a reading lies; whether it is inside is the session's word."""
     if live.inside:
@@ -106,7 +117,7 @@ MORE_LOOK: Final = MoodLook(shape="▲", word="TOO LOW", tone="turn")
 LESS_LOOK: Final = MoodLook(shape="▼", word="TOO HIGH", tone="turn")
 OVER_LOOK: Final = MoodLook(shape="├┤●", word="OVERSHOT, TOO HIGH", tone="alarm")
 UNDER_LOOK: Final = MoodLook(shape="●├┤", word="OVERSHOT, TOO LOW", tone="alarm")
-SHORT_WORDS: Final = {"TOO LOW": "LOW", "TOO HIGH": "HIGH"}
+SHORT_WORDS: Final = {"TOO LOW": "LOW", "TOO HIGH": "HIGH", "INSIDE": "IN"}
 """Where there is no room for more."""
 
 DO_NOT_TURN: Final = "do not turn"

@@ -179,6 +179,61 @@ def test_a_figure_typed_while_probes_are_placed_begins_the_entry_that_follows() 
     on_foot(test)
 
 
+@pytest.mark.parametrize(("first", "before"), [((), 1), ((), 4), ((), 8), (("enter",), 0), (("enter",), 5)])
+def test_a_burst_keeps_its_order_wherever_the_entry_comes(first: tuple[str, ...], before: int) -> None:
+    keys = ("0", "full_stop", "1", "5", "space", "u", "V", "enter")
+
+    async def test(app: Foot, press: Callable[..., Awaitable[None]]) -> None:
+        app.answer.by_hand = True
+        app.answer.put(PLACE)
+        await press(*first)
+        await press(*keys[:before])
+        assert app.replies == [Reply(choice="done")]
+        app.answer.put(BY_HAND_READING)
+        await press(*keys[before:])
+        assert app.replies[1:] == [Reply(choice="done", text="0.15 uV")]
+
+    on_foot(test)
+
+
+def test_keys_that_still_wait_at_the_choices_when_the_entry_comes_go_into_it() -> None:
+    async def test(app: Foot, press: Callable[..., Awaitable[None]]) -> None:
+        app.answer.by_hand = True
+        app.answer.put(PLACE)
+        await press("0")
+        choices = app.answer.query_one(Choices)
+        app.answer.put(BY_HAND_READING)
+        for key, character in ((".", "."), ("1", "1"), ("space", " "), ("V", "V"), ("enter", "\r")):
+            choices.post_message(events.Key(key, character))
+        await press()
+        assert app.replies[1:] == [Reply(choice="done", text="0.1 V")]
+
+    on_foot(test)
+
+
+def test_a_figure_typed_while_nothing_is_asked_is_said_not_to_be_taken() -> None:
+    async def test(app: Foot, press: Callable[..., Awaitable[None]]) -> None:
+        app.answer.by_hand = True
+        app.answer.withdraw()
+        for character in "1.5 mV":
+            assert app.answer.type_ahead(events.Key("space" if character == " " else character, character))
+        app.answer.put(PLACE)
+        await press()
+        assert app.hint == f'"1.5 mV" was typed before this stood here, and is not taken. {BY_HAND_HINT}'
+        assert app.replies == []
+
+    on_foot(test)
+
+
+def test_an_empty_yes_says_what_to_type() -> None:
+    async def test(app: Foot, press: Callable[..., Awaitable[None]]) -> None:
+        app.answer.put(HOLD)
+        await press("enter")
+        assert app.hint == "Nothing was typed yet. Only the whole word yes, then Enter, passes this point."
+
+    on_foot(test)
+
+
 @pytest.mark.parametrize(("by_hand", "key"), [(False, "1"), (True, "x")])
 def test_no_other_key_and_no_meter_of_its_own_begins_an_entry(by_hand: bool, key: str) -> None:
     async def test(app: Foot, press: Callable[..., Awaitable[None]]) -> None:

@@ -220,7 +220,7 @@ def test_the_end_says_what_it_means() -> None:
 
 def test_what_is_still_open_counts_only_the_newest_of_each_item() -> None:
     again = replace(FAILED, verdict="pass")
-    assert still_open((FAILED, NEAR)) == (FAILED, NEAR)
+    assert still_open((NEAR, FAILED)) == (FAILED, NEAR), "what failed stands first"
     assert still_open((FAILED, NEAR, again)) == (NEAR,)
     assert still_open(VIEW.results) == ()
 
