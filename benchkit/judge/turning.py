@@ -20,6 +20,13 @@ MOST_TURNS: Final = 2.0
 UNKNOWN_SHARE: Final = 0.5
 """Of what the model says, as long as this unit has not answered a move."""
 
+ONE_STEP: Final = 1.0
+"""So many turns at most go to the target in one step; more are too far for a hand and for a slope learned half (our own
+figure: two turns that became two and a half took a healthy unit into its current limit)."""
+
+FIRST_STEP: Final = 0.6
+"""The first step's share of more than that, down to `ONE_STEP`."""
+
 BLIND_TURNS: Final = 0.25
 """The first move where there is no model."""
 
@@ -58,6 +65,11 @@ def coarse_turns(turns: float) -> str:
         if turns < high:
             return f"{low} to {high}"
     return "more than 20"
+
+
+def _in_steps(turns: float) -> float:
+    """Return how much of so many turns is advised in one step."""
+    return turns if turns <= ONE_STEP else max(ONE_STEP, FIRST_STEP * turns)
 
 
 class Turning:
@@ -106,7 +118,7 @@ class Turning:
         if by_model:
             turns *= UNKNOWN_SHARE
         # Rounded towards too little, because words are coarse: what is missing then is another small move.
-        turns = math.copysign(rounded_down(min(abs(turns), self.most), self._track), turns)
+        turns = math.copysign(rounded_down(min(_in_steps(abs(turns)), self.most), self._track), turns)
         # On the way to a rest that is known, the reading of this moment never goes far over the limits.
         top = self._scale.even(self._high + 0.5 * (self._high - self._scale.target))
         if by_rest and turns > 0.0:

@@ -35,3 +35,14 @@ def test_where_many_turns_are_needed_the_words_say_how_many(slope: float | None,
 def test_slack_is_spoken_of_once() -> None:
     way = turning()
     assert [way.slack(at) for at in (5.0, 5.0 + SLACK_S / 2.0, 5.0 + SLACK_S, 500.0)] == [SLACK, SLACK, "", ""]
+
+
+@pytest.mark.parametrize(
+    ("missing", "most"),
+    [(0.5, 0.5), (1.0, 1.0), (1.5, 1.0), (2.5, 1.5), (3.0, 1.8), (10.0, MOST_TURNS)],
+)
+def test_what_is_more_than_a_turn_away_is_not_reached_in_one_step(missing: float, most: float) -> None:
+    """A hand turns a quarter more than it is told, and a slope is half learned."""
+    way = turning()
+    slope = way.missing(0.01, 1.0, by_rest=False) / missing
+    assert 0.5 * most < way.wanted(0.01, 0.01, slope, by_model=False, by_rest=False) <= most + 1e-9
