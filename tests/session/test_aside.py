@@ -305,6 +305,8 @@ def test_hanging_questions_and_answers_do_not_mix(slow_suspects: Slow) -> None:
 
     async def answer(question: Question, refused: str) -> Reply | None:
         if question.kind == "decide" and question.item == OUTPUT:
+            while not slow_suspects.asked:  # else the next question supersedes it before it has begun
+                await asyncio.sleep(0.005)
             run.keeper.values["output"] = 0.0
             return Reply(choice="again")
         if question.item == "bias.clip.clip":
