@@ -83,6 +83,17 @@ class Bench(Run):
         return [view.live for view in self.front.views if view.live is not None]
 
 
+def takes_after(bench: Bench, seconds: float) -> Answer:
+    """A hand that takes the reading when so much time (s) has passed."""
+
+    async def answer(question: Question, refused: str) -> Reply | None:
+        while bench.bench.seconds < seconds:
+            await asyncio.sleep(0.001)
+        return Reply(choice="take")
+
+    return answer
+
+
 @pytest.fixture(autouse=True)
 def quicker(monkeypatch: pytest.MonkeyPatch) -> None:
     """In simulated time nothing has to wait for a person who says nothing."""
@@ -154,12 +165,7 @@ def test_nothing_is_taken_by_itself_away_from_the_target(
     monkeypatch.setattr(predictions, "screw_of", lambda *arguments: screw)
     bench = Bench(value)
 
-    async def answer(question: Question, refused: str) -> Reply | None:
-        while bench.bench.seconds < 8.0:
-            await asyncio.sleep(0.001)
-        return Reply(choice="take")
-
-    bench.front.answer = answer
+    bench.front.answer = takes_after(bench, 8.0)
     event = bench.trim(lambda session: setattr(session, "rested", None if rested is None else (POINT, rested)))
     assert isinstance(event, ReadingTaken)
     assert event.how == "by key"
@@ -170,12 +176,7 @@ def test_a_meter_that_leaves_the_tolerance_open_takes_nothing_by_itself() -> Non
     bench = Bench(lambda t_s: 0.0221, low=0.02199, high=0.02201, target=0.022)
     bench.value = lambda t_s: 0.022
 
-    async def answer(question: Question, refused: str) -> Reply | None:
-        while bench.bench.seconds < 5.0:
-            await asyncio.sleep(0.001)
-        return Reply(choice="take")
-
-    bench.front.answer = answer
+    bench.front.answer = takes_after(bench, 5.0)
     event = bench.trim()
     assert isinstance(event, ReadingTaken)
     assert event.how == "by key"
@@ -418,12 +419,7 @@ def test_a_live_trim_takes_nothing_by_itself_before_it_knows_the_point(
 ) -> None:
     bench = Bench(value, condition=replace(WARM, when="cold"))
 
-    async def answer(question: Question, refused: str) -> Reply | None:
-        while bench.bench.seconds < 10.0:
-            await asyncio.sleep(0.001)
-        return Reply(choice="take")
-
-    bench.front.answer = answer
+    bench.front.answer = takes_after(bench, 10.0)
     event = bench.trim()
     assert isinstance(event, ReadingTaken)
     assert event.how.startswith("by itself" if by_itself else "by key")
@@ -436,12 +432,7 @@ def test_a_current_of_another_bias_speaks_for_nothing(monkeypatch: pytest.Monkey
     monkeypatch.setattr(predictions, "rail_line", lambda *arguments: line)
     bench = Bench(lambda t_s: 0.0221, condition=replace(WARM, when="cold"))
 
-    async def answer(question: Question, refused: str) -> Reply | None:
-        while bench.bench.seconds < 8.0:
-            await asyncio.sleep(0.001)
-        return Reply(choice="take")
-
-    bench.front.answer = answer
+    bench.front.answer = takes_after(bench, 8.0)
     event = bench.trim()
     assert isinstance(event, ReadingTaken)
     assert event.how == "by key"
