@@ -189,9 +189,9 @@ class Solution:
                 polarity * (base - full[self.plan.tc[k]]),
                 devices.junctions_at_temperature(parameters),
             )
-        vbe = polarity * self.between(e.base, e.emitter)
-        vce = polarity * self.between(e.collector, e.emitter)
-        return Operating(g.ic, g.ib, g.ic + g.ib, vbe, vce, vce * g.ic + vbe * g.ib)
+            vbe = polarity * self.between(e.base, e.emitter)
+            vce = polarity * self.between(e.collector, e.emitter)
+            return Operating(g.ic, g.ib, g.ic + g.ib, vbe, vce, vce * g.ic + vbe * g.ib)
 
     def powers_w(self) -> dict[str, Array]:
         """What heats each transistor [W], by name, shape (units,); those of `transistor`, worked out together."""

@@ -7,6 +7,9 @@ Rules
   measured by itself goes on counting.
 * Of a point that was read more than once under the same conditions the latest reading counts, and it is not narrowed
   again: what has been read is known.
+* A rail that tripped because its supply held it by the current limit is a reading too, of the limit: capacitors behind
+  it make the unit's own share of the current larger, never smaller.  What voltage the rail had fallen to on its way is
+  no reading: it was still moving.
 * Nobody is sent to a live board for an extra reading where more than `HAZARDOUS_V` lies from rail to rail; there only
   what the supply itself reads is offered, and the rest once the rails have been seen low.
 """
@@ -15,14 +18,17 @@ from __future__ import annotations
 
 import math
 from collections.abc import Iterator
+from dataclasses import replace
 from typing import Final
 
+from benchkit.events import SupplyState
 from benchkit.measure.readings import Reading
 from benchkit.procedure.actions import Target
 from benchkit.procedure.file import MADE_SAFE
 from benchkit.procedure.items import RAIL_POINTS, AnyCondition, Item, Joined, Plan, condition_key, conditions_of
 from benchkit.procedure.state import State
 from benchkit.stage.conditions import Condition, TrimmerPosition, Unpowered
+from benchkit.stage.forcing import LIMIT_SHARE
 from benchkit.stage.observations import Conditions, Observation
 from benchkit.stage.points import Point
 from benchkit.stage.stored import HAZARDOUS_V
@@ -86,14 +92,53 @@ def observations(plan: Plan, state: State) -> tuple[Observation, ...]:
         key = conditions_of(condition), reading.point
         found.pop(key, None)
         found[key] = Observation(conditions=key[0], point=reading.point, value=value, standard_uncertainty=uncertainty)
+    for _, one in at_the_trip(plan, state):
+        found.setdefault((one.conditions, one.point), one)
     return tuple(found.values())
+
+
+def at_the_trip(plan: Plan, state: State) -> tuple[tuple[AnyCondition, Observation], ...]:
+    """Return what a limit that ended the walk told of the unit: each rail that it held, and the limit itself."""
+    seen = None if state.tripped is None else state.tripped.state
+    if seen is None or seen.limit_a is None or seen.set_positive_v is None or state.on_lamp:
+        return ()
+    item = plan.items[_came_to(plan, state)]
+    if item.driven or item.drive_limit or item.optional:
+        return ()  # a driven stage: the model knows nothing of it
+    under = _as_tripped(plan, state, item, seen, seen.set_positive_v, seen.limit_a)
+    return tuple(
+        (
+            under,
+            Observation(
+                conditions=conditions_of(under), point=f"{rail}.current", value=seen.limit_a,
+                standard_uncertainty=LIMIT_SHARE * seen.limit_a,
+            ),
+        )
+        for rail, held in (("rail+", seen.positive_in_limit), ("rail-", seen.negative_in_limit))
+        if held
+    )  # fmt: skip
+
+
+def _as_tripped(
+    plan: Plan, state: State, item: Item, seen: SupplyState, positive_v: float, limit_a: float
+) -> AnyCondition:
+    """Return the rails as far up as they were set, cold on their way up and anything up to warm after it."""
+    cold = Condition(
+        positive_v=abs(positive_v),
+        negative_v=-abs(seen.set_negative_v or 0.0),
+        limit_a=limit_a,
+        trimmer=trimmer_now(plan, _came_to(plan, state), state),
+    )
+    if item.kind == "supply":
+        return cold
+    return Joined(conditions=(cold, replace(cold, when="warm")), words="cold to warm")
 
 
 def names_of_conditions(plan: Plan, state: State) -> tuple[tuple[Conditions, str], ...]:
     """Return how the record calls the conditions of the kept readings, an unpowered one by its own name."""
-    return tuple(
-        {conditions_of(condition): condition_key(condition) for _, condition, _ in readings_kept(plan, state)}.items()
-    )
+    conditions = [condition for _, condition, _ in readings_kept(plan, state)]
+    conditions += [condition for condition, _ in at_the_trip(plan, state)]
+    return tuple({conditions_of(condition): condition_key(condition) for condition in conditions}.items())
 
 
 def still_to_come(plan: Plan, state: State) -> tuple[tuple[Target, ...], tuple[Target, ...]]:

@@ -81,6 +81,8 @@ class Securing(Moves):
     def _tripped(self, state: State, event: Tripped) -> Step:
         state = heard(state, event.state)
         ask = not state.stopped and not self.way_out(state)
+        if ask:
+            state = replace(state, tripped=event)
         after, actions = self._make_safe(state, f"tripped: {event.reason}", 4)
         after, asked = self._ask_suspects(after) if ask else (after, ())
         return replace(after, note=f"Tripped: {event.reason}. {AFTER_TRIP}"), (*actions, *asked)
@@ -118,7 +120,7 @@ class Securing(Moves):
         index = min(state.index, len(self.plan) - 1)
         state = replace(
             state, phase="securing", index=index, before=before, probes="", energised="unknown", supply=None,
-            extra="", missing="", suspecting=0, narrowed={}, resumed_at=state.count,
+            extra="", missing="", suspecting=0, narrowed={}, resumed_at=state.count, tripped=None,
             note="Earlier readings are marked as from before.",
         )  # fmt: skip
         return state, (Connect(item=self.item(state).id),)

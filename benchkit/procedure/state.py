@@ -6,7 +6,7 @@ from collections.abc import Mapping
 from dataclasses import dataclass, field
 from typing import Literal
 
-from benchkit.events import Closed, Judged, NarrowedLimits, PointLimits, SupplyState, Suspected, WalkOpened
+from benchkit.events import Closed, Judged, NarrowedLimits, PointLimits, SupplyState, Suspected, Tripped, WalkOpened
 from benchkit.measure.readings import Reading
 from benchkit.procedure.items import Item
 
@@ -121,6 +121,8 @@ class State:
         Why the item that is being decided has no result, "" when it has one.
     note : str
         A sentence for the screen about the last thing that happened.
+    tripped : Tripped or None
+        The trip that ended the walk: what the supply showed then tells of the unit too.
     keeping : frozenset of str
         Readings that stand while others beside them are taken again for a rule: items that are passed by.
     """
@@ -166,6 +168,7 @@ class State:
     closed: Closed | None = None
     missing: str = ""
     note: str = ""
+    tripped: Tripped | None = None
     keeping: frozenset[str] = frozenset()
 
     def result(self, item: str) -> Judged | None:

@@ -30,6 +30,7 @@ class SupplyItems(PowerOff):
     """A part of the planner; what it stands on is the planner's."""
 
     lowest: tuple[float, float]
+    least_share: float
     drive_limit: bool = False
     checked_a: float = 0.0
 
@@ -131,7 +132,6 @@ class SupplyItems(PowerOff):
         return limit_a
 
     def least_bias_limit_a(self) -> float:
-        """Limit (A) of the first power-on; without a trimmer the full bias flows from the first moment."""
+        """Limit (A) of the first power-on: output pairs draw something at least bias; without a trimmer, all of it."""
         full = self.design.rails
-        share = 1.0 if self.design.spreader.trimmer is None else 0.0
-        return supply_limit_a(self.design, full.positive_v, full.negative_v, share=share)
+        return supply_limit_a(self.design, full.positive_v, full.negative_v, share=self.least_share)

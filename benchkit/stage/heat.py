@@ -152,5 +152,6 @@ def heat(design: Design, powers_w: Mapping[str, Array], ambient_c: Array | float
         driver and spreader = ambient + tracking * (rise of the sink) + theta_own * P.
     """
     nodes = heat_nodes(design)
-    rises_k = nodes.rest @ np.array([powers_w[part] for part in nodes.parts])
+    with np.errstate(over="ignore", invalid="ignore"):  # a unit without a solution has powers beyond all numbers
+        rises_k = nodes.rest @ np.array([powers_w[part] for part in nodes.parts])
     return Heat({name: np.asarray(ambient_c + rise) for name, rise in zip(nodes.names, rises_k, strict=True)})

@@ -21,7 +21,7 @@ import numpy as np
 
 from benchkit.errors import ModelError
 from benchkit.stage.conditions import Condition
-from benchkit.stage.design import Design
+from benchkit.stage.design import Design, target_drop_v
 from benchkit.stage.draws import Array, Parameters, draw, nominal, seeds, take
 from benchkit.stage.faults import Fault
 from benchkit.stage.operate import Solved, solve_units
@@ -152,6 +152,26 @@ def quiescent_a(design: Design, solved: Solved) -> Array:
     """Quiescent current (A) of all pairs together, shape (units,): what flows through the upper emitter resistors."""
     currents = [solved.solution.current(f"emitter.upper.{n}") for n in range(1, design.output.pairs + 1)]
     return np.asarray(np.sum(currents, axis=0))
+
+
+def least_share(design: Design) -> float:
+    """Share of the target drop that the nominal unit has at its least bias: full rails, cold; 1 without a trimmer.
+
+    Raises
+    ------
+    ModelError
+        When there is no solution.
+    """
+    if design.spreader.trimmer is None:
+        return 1.0
+    solved = solve_units(design, nominal(design), full_rails(design, trimmer="least", when="cold"), loading="none")
+    if not solved.converged[0]:
+        raise ModelError(
+            f"{design.name}: no operating point with the trimmer at least bias",
+            "a solution of the nominal unit",
+            "Check the spreader's resistors in the design file",
+        )
+    return max(0.0, float(drop_v(solved)[0])) / target_drop_v(design)
 
 
 @lru_cache(maxsize=32)

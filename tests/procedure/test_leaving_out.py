@@ -16,6 +16,7 @@ from benchkit.procedure.file import load_procedure, parse_procedure
 from benchkit.procedure.items import Plan, condition_key
 from benchkit.procedure.moves import MOST_TRIMS_AGAIN
 from benchkit.procedure.plan import make_plan
+from benchkit.procedure.sizing import supply_limit_a
 from benchkit.procedure.walk import Walk
 from benchkit.shipped import find_procedure
 from tests.procedure.driver import SMALL, Drive, begun, good, item_of, judged, narrowed, reading, suspected
@@ -265,7 +266,8 @@ def test_with_new_parts_the_trimmer_is_at_its_end_before_there_is_power(parts: t
     assert end < order.index("careful.on")
     assert drive.walk.plan.items[0].id == "bench"
     on = item_of(repair(), "careful.on")
-    assert on.limit_a < item_of(repair(), "found.on").limit_a
+    full = breadboard().rails
+    assert on.limit_a < supply_limit_a(breadboard(), full.positive_v, full.negative_v, share=1.0)
 
 
 def test_what_was_read_before_parts_were_replaced_tells_of_another_unit() -> None:

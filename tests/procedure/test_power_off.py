@@ -23,12 +23,15 @@ from benchkit.events import (
     SupplyState,
     Tripped,
 )
-from benchkit.procedure.actions import Ask, Fall, SetSupply, SwitchOff, Write
+from benchkit.procedure.actions import Ask, Fall, SetSupply, Suspect, SwitchOff, Trim, Write
 from benchkit.procedure.file import load_procedure, parse_procedure
 from benchkit.procedure.items import Item, Plan
+from benchkit.procedure.knowledge import at_the_trip as knowledge_of_trip
+from benchkit.procedure.knowledge import observations
 from benchkit.procedure.plan import make_plan
 from benchkit.procedure.sizing import discharge_text
 from benchkit.procedure.walk import Walk
+from benchkit.stage.conditions import Condition
 from benchkit.stage.design import Design
 from tests.procedure.driver import OFF, OPENED, SHIPPED, Drive, begun, kinds, reading, shipped, small
 from tests.procedure.test_plan import CHECKS, HEAD, plan_of
@@ -177,6 +180,55 @@ def test_suspects_are_asked_after_a_trip() -> None:
     assert drive.asides[asked].item == "bias.soak"
     drive.tell(Tripped(reason="again"))
     assert "Suspect" not in kinds(drive.actions), "once"
+
+
+def held(volts: float, limit_a: float = 0.04, *, negative: bool = False) -> Tripped:
+    """The supply holds the positive rail, or both, by its limit, on the way to `volts`."""
+    state = SupplyState(
+        output_on=True, positive_v=0.7 * volts, negative_v=-volts, positive_a=limit_a, negative_a=limit_a,
+        set_positive_v=volts, set_negative_v=-volts, limit_a=limit_a, positive_in_limit=True,
+        negative_in_limit=negative,
+    )  # fmt: skip
+    return Tripped(reason="rail+ is held by its current limit", what="rail+", state=state)
+
+
+def at_the_trip(drive: Drive, event: Tripped) -> list[tuple[Condition, str, float]]:
+    """What the suspects are told of the trip, beside the readings before it; its condition has a name too."""
+    before = {(one.conditions, one.point) for one in observations(drive.walk.plan, drive.state)}
+    drive.tell(event)
+    (suspect,) = [action for action in drive.actions if isinstance(action, Suspect)]
+    told = [one for one in suspect.known if (one.conditions, one.point) not in before]
+    assert {one.conditions for one in told} <= {conditions for conditions, _ in suspect.names}
+    conditions = [condition for one in told for condition in one.conditions if isinstance(condition, Condition)]
+    return [(condition, one.point, one.value) for one in told for condition in conditions[: len(one.conditions)]]
+
+
+def test_the_limit_that_a_rail_ran_into_is_a_reading_on_the_way_up() -> None:
+    drive = begun(small()).until("power.on")
+    while not isinstance(drive.open, SetSupply):
+        drive.well()
+    told = at_the_trip(drive, held(2.5, negative=True))
+    assert [(point, value) for _, point, value in told] == [("rail+.current", 0.04), ("rail-.current", 0.04)]
+    for condition, _, _ in told:
+        assert (condition.positive_v, condition.negative_v, condition.limit_a) == (2.5, -2.5, 0.04)
+        assert condition.when == "cold", "it had no time to warm"
+
+
+def test_in_a_trim_the_screw_may_be_anywhere() -> None:
+    drive = begun(small()).until(next(item.id for item in small().plan.items if item.kind == "trim"))
+    while not isinstance(drive.open, Trim):
+        drive.well()
+    told = at_the_trip(drive, held(10.0))
+    assert {(point, value) for _, point, value in told} == {("rail+.current", 0.04)}
+    assert {condition.trimmer for condition, _, _ in told} == {"unknown"}
+    drive.tell(Resumed(operator="o"))
+    assert not knowledge_of_trip(drive.walk.plan, drive.state), "from before a resume nothing counts"
+
+
+def test_a_trip_that_no_limit_made_is_no_reading() -> None:
+    drive = begun(small()).until("bias.soak")
+    seen = replace(held(10.0).state or OFF, positive_in_limit=False)
+    assert at_the_trip(drive, Tripped(reason="rail+ is above its line", state=seen)) == []
 
 
 def test_not_where_nothing_has_been_read() -> None:

@@ -11,7 +11,7 @@ from benchkit.errors import ModelError
 from benchkit.stage.design import Design, parse_design, target_drop_v
 from benchkit.stage.draws import nominal
 from benchkit.stage.operate import solve_units
-from benchkit.stage.trimmer import at_target, authority, cold_to_warm, drop_v, full_rails, open_wiper
+from benchkit.stage.trimmer import at_target, authority, cold_to_warm, drop_v, full_rails, least_share, open_wiper
 from benchkit.stage.trimmer_report import trimmer_report
 from tests.stage.catalogue import Wanted, text
 from tests.stage.designs import BREADBOARD, TERN, breadboard, changed, tern
@@ -144,3 +144,22 @@ def test_a_target_out_of_reach_is_told_with_its_travel() -> None:
     report = trimmer_report(design)
     assert report.cold_to_warm is None
     assert report.slope is None or math.isfinite(report.slope.drop_v_per_turn)
+
+
+@pytest.mark.parametrize(
+    "design",
+    [breadboard(), tern(), arms("between", "tied")],
+    ids=["breadboard", "tern-40", "between"],
+)
+def test_the_least_bias_is_what_is_left_at_the_end_of_the_travel(design: Design) -> None:
+    share = least_share(design)
+    assert 0.0 <= share < 0.5
+    at_least = solve_units(
+        design, nominal(design) | {"spreader.trimmer.position": np.asarray(0.0)},
+        full_rails(design, trimmer="unknown", when="cold"), loading="none",
+    )  # fmt: skip
+    assert share * target_drop_v(design) == pytest.approx(float(drop_v(at_least)[0]), rel=1e-9)
+
+
+def test_without_a_trimmer_all_of_the_bias_is_there_from_the_first_moment() -> None:
+    assert least_share(without_trimmer()) == 1.0
