@@ -62,10 +62,12 @@ def _value(value: float | None, unit: str) -> str:
 
 def alike_words(suspect: SuspectNamed, among: Sequence[SuspectNamed] = ()) -> str:
     """Name the faults that these readings can't tell from the suspect, with their chances where `among` has them."""
-    chances = {one.fault: f" ({chance_words(one.probability)})" for one in among}
+    known = {one.fault: one.probability for one in among}
     if not suspect.alike:
         return ""
-    return "or " + " or ".join(fault_words(fault) + chances.get(fault, "") for fault in suspect.alike)
+    ordered = sorted(suspect.alike, key=lambda fault: -known.get(fault, 0.0))
+    chances = {fault: f" ({chance_words(chance)})" for fault, chance in known.items()}
+    return "or " + " or ".join(fault_words(fault) + chances.get(fault, "") for fault in ordered)
 
 
 def evidence_for(suspect: SuspectNamed) -> tuple[str, ...]:

@@ -39,8 +39,10 @@ from benchkit.measure.readings import Reading
 from benchkit.procedure.file import Procedure, parse_procedure
 from benchkit.procedure.hearing import UNPROTECTED
 from benchkit.procedure.modelling import TOO_SLOWLY
+from benchkit.procedure.wording import fill, words_of
 from benchkit.quantities import show
 from benchkit.record.facts import Ending, Incident, Part, Result, Suspicion, Took
+from benchkit.stage.design import parse_design
 
 _NAME = re.compile(r"[a-z0-9][a-z0-9-]*")
 
@@ -75,7 +77,9 @@ class Gathering:
 
     def __post_init__(self) -> None:
         procedure = _procedure(self.opened)
-        self.sections, self._titles, self._kinds = _titles(procedure)
+        self.sections, titles, self._kinds = _titles(procedure)
+        words = _words(self.opened)
+        self._titles = {names: fill(title, words) for names, title in titles.items()}
         self._parts, self._driven = _marks(procedure)
         self._optional = {one.name for one in (procedure.sections if procedure else ()) if one.optional}
         self._rails: tuple[float, float] | None = None
@@ -286,6 +290,16 @@ def _procedure(opened: WalkOpened) -> Procedure | None:
         return parse_procedure(opened.procedure_text, opened.procedure_name)
     except BenchkitError:
         return None
+
+
+def _words(opened: WalkOpened) -> Mapping[str, str]:
+    """What words in braces stand for, those that hang on the place of the walk left as they are."""
+    try:
+        design = parse_design(opened.design_text, opened.design_name)
+    except BenchkitError:
+        return {}
+    words = words_of(design, design.rails.positive_v, design.rails.negative_v, 0.0)
+    return {word: meaning for word, meaning in words.items() if word not in ("limit", "rails")}
 
 
 def _titles(procedure: Procedure | None) -> tuple[dict[str, str], _ByStep, _ByStep]:

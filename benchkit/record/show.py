@@ -163,7 +163,12 @@ def _first_things(summary: Summary) -> Iterator[str]:
             "changed since.",
             "- ",
         )
-    if not against and not odd and not summary.incidents:
+    first = sum(result.replaced and (bool(result.missed) or result.verdict in ("fail", "undecided"))
+                for result in summary.results)  # fmt: skip
+    if first:
+        one = "1 reading did" if first == 1 else f"{first} readings did"
+        yield from wrapped(f"{one} not pass at first; taken again, they stand below with what came before.", "- ")
+    if not against and not odd and not summary.incidents and not first:
         yield "- Nothing failed, nothing was undecided, missed, overridden or interrupted."
 
 

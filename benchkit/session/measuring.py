@@ -118,18 +118,22 @@ async def _by_hand(session: Session, point: str, function: str, unit: str) -> Re
     limits = session.job.walk.limits_for(session.state, item)
     of_supply = function == "dc current"
     shows = "the supply's own display shows" if of_supply else "the meter shows"
-    how = "Read the supply's own display: no meter goes into the rail." if of_supply else f"Meter on {function}."
+    rail = "positive" if point.startswith("rail+") else "negative"
+    how = f"Meter on {function}."
+    if of_supply:
+        how = f"The current of the {rail} rail, from the supply's own display: no meter goes into the rail."
     placed = None if of_supply else item.point
     told = session.state.supply
     before_a = None if told is None else told.positive_a if point.startswith("rail+") else told.negative_a
     if of_supply and before_a is not None:
         how += f" When its rails were set it showed {quantities.show(before_a, 'A', 3)}."
+    example = f"With its unit, such as {_example(unit)}"
     question = Question(
         item=item.id,
         kind="by hand",
         expected="" if limits is None else str(limits),
         title=f"Type what {shows} for {point}",
-        do=f"With its unit, such as {_example(unit)}{'' if of_supply else '; OL for overload'}. {how}",
+        do=f"{how} {example}." if of_supply else f"{example}; OL for overload. {how}",
         point=point,
         red="" if placed is None else placed.red,
         black="" if placed is None else placed.black,

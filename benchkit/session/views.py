@@ -155,9 +155,22 @@ def _next_probe(plan: Plan, state: State) -> str:
         if other.kind != "measure" or other.point is None or other.powered != item.powered:
             return ""
         if other.point.function != "dc current" and other.point.name != item.point.name:
-            black = f", black on {other.point.black}" if other.point.black else ""
-            return f"{other.point.name}: red on {other.point.red}{black}"
+            return f"{other.point.name}: {_placed(other.point.red, other.point.black)}"
     return ""
+
+
+def _placed(red: str, black: str) -> str:
+    """Say where both probes go, the part that they share only once.
+
+    Examples
+    --------
+    >>> _placed("base of output.upper.1", "emitter of output.upper.1"), _placed("the output", "0 V")
+    ('red base, black emitter of output.upper.1', 'red on the output, black on 0 V')
+    """
+    if not black:
+        return f"red on {red}"
+    (one, of, part), (other, _, same) = red.rpartition(" of "), black.rpartition(" of ")
+    return f"red {one}, black {other} of {part}" if of and part == same else f"red on {red}, black on {black}"
 
 
 def _result(title: str, judged: Judged, from_before: bool, overridden: str) -> ResultView:

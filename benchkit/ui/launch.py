@@ -6,7 +6,7 @@ import secrets
 from collections.abc import Iterator
 from contextlib import contextmanager
 from pathlib import Path
-from typing import TYPE_CHECKING, Any
+from typing import TYPE_CHECKING, Any, Final
 
 from benchkit import shipped
 from benchkit.errors import EntryError
@@ -213,6 +213,12 @@ def _bench_parts(text: str, name: str, visa: str = "") -> dict[str, Any]:
     }
 
 
+ASSUMED: Final = (
+    "No accuracy of your meter is stated: taken as {accuracy}. What that can't tell stays undecided, resistors of a "
+    "fraction of an ohm first of all; a bench file with the meter's accuracy alone mends that."
+)
+
+
 def _by_hand() -> dict[str, Any]:
     from benchkit.measure.accuracy import HANDHELD
 
@@ -222,6 +228,7 @@ def _by_hand() -> dict[str, Any]:
         "bench_sha256": "",
         "accuracy": HANDHELD,
         "supply_accuracy": HANDHELD,
+        "cautions": (ASSUMED.format(accuracy=HANDHELD.name),),
     }
 
 

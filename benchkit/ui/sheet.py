@@ -29,6 +29,7 @@ OffLine.flash {{ text-style: reverse bold; }}
 .walk-head {{ height: 1; padding: 0 1; background: {PANEL}; }}
 .walk-trail {{ height: 1; padding: 0 1; margin-bottom: 1; }}
 .walk-message {{ height: auto; max-height: 2; padding: 0 1; color: {CARE}; }}
+.walk-message.tripped {{ color: {FAIL}; text-style: bold reverse; }}
 .walk-pages {{ height: 1fr; }}
 Page {{ height: 1fr; width: 1fr; }}
 

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
@@ -53,7 +54,9 @@ class SummaryPage(Page):
         self._enter.say(Text(question.do, style=INK))
 
     def say(self, view: View) -> None:
-        """Show how the walk ended."""
+        """Show how the walk ended; suspects of what passed in the end are no longer of use."""
+        if view.verdict == "pass" and view.suspects is not None:
+            view = replace(view, suspects=None)
         self._view = view
         if view.exit_status is not None and not self._looked:
             self._looked = True

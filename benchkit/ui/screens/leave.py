@@ -26,17 +26,17 @@ def leaving_question(supply: SupplyView) -> str:
     Examples
     --------
     >>> leaving_question(SupplyView(energised="on", words="", by_hand=False, state=None))
-    'The supply is on. Leaving switches it off first. The walk can be gone on with later.'
+    'The supply is on. Leaving switches it off first and ends the walk: only its way out is left to be gone on with.'
     """
-    later = "The walk can be gone on with later."
+    ends = "ends the walk: only its way out is left to be gone on with."
     if supply.hint == PULL_THE_PLUG:
         what = f"{supply.label.removesuffix(' (you said)').capitalize()} through the series lamp."
-        return f"{what} Nothing here switches it off: PULL THE PLUG before you leave. {later}"
+        return f"{what} Nothing here switches it off: PULL THE PLUG before you leave. Leaving {ends}"
     if supply.by_hand:
         known = "You said that the supply is on." if supply.energised == "on" else "The supply may be on."
-        return f"{known} Nothing here switches it off: switch it off BY HAND before you leave. {later}"
+        return f"{known} Nothing here switches it off: switch it off BY HAND before you leave. Leaving {ends}"
     known = "The supply is on." if supply.energised == "on" else "Nobody knows whether the supply is on."
-    return f"{known} Leaving switches it off first. {later}"
+    return f"{known} Leaving switches it off first and {ends}"
 
 
 class LeaveScreen(BenchScreen, ModalScreen[Any]):

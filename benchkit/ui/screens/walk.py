@@ -187,6 +187,7 @@ class WalkScreen(BenchScreen):
             return
         roomy = self.arrangement == "roomy"
         most = 3 if roomy else 1 if self.page.id in ("trim", "soak") else 2
+        self._message.set_class(self._view.message.startswith("STOPPED: tripped"), "tripped")
         self._message.put(self._view.message, self.app.size.width - 2, most)
 
     def _say_head(self, view: View) -> None:

@@ -1,9 +1,14 @@
-"""The choices of a question, by key."""
+"""The choices of a question, by key.
+
+A figure that is typed on where an entry stood a moment before must not end in a choice: its unit's letter would be one.
+So letters that follow a figure without a pause belong to the figure, up to Enter, and are said not to have been taken.
+"""
 
 from __future__ import annotations
 
+import time
 from collections.abc import Callable
-from typing import Any, Self
+from typing import Any, Final, Self
 
 from rich.text import Text
 from textual import events
@@ -14,6 +19,9 @@ from benchkit.procedure.actions import Choice
 from benchkit.ui.look import CARE, INK, QUIET, STRONG, safe
 from benchkit.ui.widgets.answer_keys import keyed, keys_in_words
 from benchkit.ui.widgets.words import Words
+
+PAUSE_S: Final = 1.5
+"""Keys nearer to one another than this are typed on (s)."""
 
 
 def keeps_keys(widget: Widget) -> bool:
@@ -51,6 +59,8 @@ class Choices(Words, can_focus=True):
         self._usual = True
         self._space = False
         self._drawn_for = 0
+        self._figure = ""
+        self._figure_s = 0.0
         self.typed_ahead: Callable[[events.Key], bool] = lambda _key: False
         """Takes a key that begins an entry, or belongs to one that is yet to come."""
 
@@ -94,6 +104,10 @@ class Choices(Words, can_focus=True):
             return
         if not self._choices:
             return
+        if self._belongs_to_figure(event):
+            event.stop()
+            event.prevent_default()
+            return
         if event.key == "enter" and not self._usual:
             self.post_message(self.Refused(f"Enter answers nothing here: {self.keys}."))
         elif event.key == "enter":
@@ -113,6 +127,24 @@ class Choices(Words, can_focus=True):
             self.post_message(self.Taken(found[0]))
         event.stop()
         event.prevent_default()
+
+    def _belongs_to_figure(self, event: events.Key) -> bool:
+        """Take the keys of a figure that nobody asked for, and say so; a pause or Enter ends it."""
+        now_s = time.monotonic()
+        typed_on = bool(self._figure) and now_s - self._figure_s < PAUSE_S
+        character = event.character if event.is_printable else None
+        figure = self._figure if typed_on else ""
+        self._figure = ""
+        if event.key == "enter":
+            if typed_on:
+                self.post_message(self.Refused(f'"{safe(figure)}" is not taken: {self.keys}.'))
+            return typed_on
+        starts = character is not None and character.isdigit() and character not in dict(self._choices)
+        if character is None or not (typed_on or starts):
+            return False
+        self._figure, self._figure_s = figure + character, now_s
+        self.post_message(self.Refused(f'"{safe(self._figure)}" answers nothing here: {self.keys}.'))
+        return True
 
     def watch_has_focus(self, _has_focus: bool) -> None:
         """Show the mark, or that Enter goes elsewhere."""

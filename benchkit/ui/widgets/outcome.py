@@ -138,9 +138,9 @@ class Outcome(Vertical):
         words = Text()
         words.append(f" {heading}: ", style=QUIET)
         point, rest = pointed(safe(result.title))
+        words.append(safe(result.value_text), style=f"bold {STRONG}")  # first: a narrow terminal cuts what comes last
         if point:
-            words.append(f"{point}  ", style=f"bold {INK}")
-        words.append(safe(result.value_text), style=f"bold {STRONG}")
+            words.append(f"  {point}", style=f"bold {INK}")
         words.append(f"  {rest}", style=INK)
         row.add_row(Cut(words), verdict_strip(result.verdict))
         self._head.say_drawn((result, heading), row)
