@@ -71,9 +71,6 @@ MOVE_S: Final = 3.0
 SURE: Final = 3.0
 """A reading that is taken by itself lies so many of the meter's standard uncertainties inside the limits."""
 
-NEAR_SHARE: Final = 0.5
-"""By hand, a reading within this share of the tolerance ends the trim even with a meter that can't tell for sure."""
-
 SURE_LOOKS: Final = 2
 """So many predictions in a row have to say that it runs away."""
 
@@ -392,7 +389,7 @@ async def _by_hand(
             rail = None if supply is None or supply.positive_a is None else (session.clock.now(), supply.positive_a)
         advice = adviser.add(session.clock.now(), reading.value, rail=rail)
         session.show_moment(busy="", live=live_view(session, action, reading, advice, Told()))
-        if _settles(reading, action):
+        if _settles(reading, action, adviser):
             return ReadingTaken(item=action.item, reading=reading)
         shown = "overload" if reading.value is None else quantities.show(reading.value, action.unit)
         inside = reading.value is not None and action.low <= reading.value <= action.high
@@ -400,12 +397,9 @@ async def _by_hand(
         question = replace(question, do=f"{shown}: {advice.words}.{edge} {AFTER_A_MOVE}")
 
 
-def _settles(reading: Reading, action: Trim) -> bool:
-    """Whether a typed reading ends the trim: clear of the limits, or as near the target as its meter can tell."""
+def _settles(reading: Reading, action: Trim, adviser: Adviser) -> bool:
+    """Whether a typed reading ends the trim: clear of the limits, or as near the target as it is led to."""
     value, unsure = reading.value, reading.standard_uncertainty
     if value is None or not action.low <= value <= action.high:
         return False
-    clear = min(value - action.low, action.high - value) >= SURE * (unsure or 0.0)
-    return clear or abs(value - action.target) <= NEAR_SHARE * min(
-        action.high - action.target, action.target - action.low
-    )
+    return adviser.near(value) or min(value - action.low, action.high - value) >= SURE * (unsure or 0.0)

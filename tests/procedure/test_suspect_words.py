@@ -102,3 +102,6 @@ def test_what_was_named_with_an_earlier_one_needs_no_line_of_its_own() -> None:
     answer = replace(ANSWER, suspects=(first, second, GOOD))
     assert words.shown_suspects(answer) == (first, GOOD)
     assert words.alike_words(first, answer.suspects) == "or b open (12 %) or c open"
+    likelier = replace(second, fault="c: open", probability=0.4)
+    answer = replace(ANSWER, suspects=(first, likelier, second, GOOD))
+    assert words.alike_words(first, answer.suspects) == "or c open (40 %) or b open (12 %)", "likeliest first"

@@ -7,21 +7,24 @@ import pytest
 from hypothesis import HealthCheck, given, settings
 from hypothesis import strategies as st
 
-from benchkit.events import Event, Noted, OutputOff, Resumed, StopAsked, Tripped
+from benchkit.events import Decided, Event, Noted, OutputOff, Resumed, StopAsked, Tripped
 from benchkit.record.show import DEFERENCE, as_text
 from benchkit.record.show_json import as_json
 from benchkit.record.summary import Summary, load_summary
 from benchkit.record.words import clean
 from tests.record.walks import (
+    PROCEDURE,
     closed,
     good_events,
     judged,
     opened,
     overridden_events,
     reading,
+    sha,
     suspicious_events,
     write,
 )
+from tests.stage.designs import TERN
 
 
 def gather(tmp_path: Path, events: list[Event]) -> Summary:
@@ -88,6 +91,36 @@ def test_the_safety_sentence_stands_on_every_form(tmp_path: Path) -> None:
     summary = gather(tmp_path, good_events()[:1])
     assert DEFERENCE in " ".join(as_text(summary).split())
     assert as_json(summary)["deference"] == DEFERENCE
+
+
+def test_what_failed_first_and_passed_when_it_was_taken_again_is_said(tmp_path: Path) -> None:
+    events = good_events()
+    item = "first-power.output.output"
+    again = [
+        reading(item, "output", 0.5),
+        judged(item, "output", "fail", 0.5, why="0.5 V is above the limit"),
+        Decided(item=item, choice="again"),
+    ]
+    events[7:7] = again
+    text = " ".join(as_text(gather(tmp_path, closed(events))).split())
+    assert "1 reading did not pass at first; taken again" in text
+    assert "Nothing failed" not in text
+
+
+@pytest.mark.parametrize(
+    ("design", "title"),
+    [(TERN.read_text("utf-8"), "Both rails up"), ("name = 1", "{Both_rails} up")],
+    ids=["a design", "one that can't be read"],
+)
+def test_a_title_is_said_as_the_screen_said_it(tmp_path: Path, design: str, title: str) -> None:
+    procedure = PROCEDURE.replace('title = "Rails up"', 'title = "{Both_rails} up"')
+    events = good_events()
+    events[0] = opened(
+        design_text=design, design_sha256=sha(design), procedure_text=procedure, procedure_sha256=sha(procedure)
+    )
+    item = "first-power.up"
+    events[7:7] = [judged(item, "rails", "fail", 11.0, why="A rail has not come up")]
+    assert f"FAIL: {title}, rails" in as_text(gather(tmp_path, closed(events, "fail")))
 
 
 def test_failures_and_overrides_come_before_the_readings(tmp_path: Path) -> None:

@@ -369,6 +369,43 @@ def test_by_hand_the_words_come_after_each_entry() -> None:
     assert bench.front.questions[0].kind == "by hand"
 
 
+@pytest.mark.parametrize(
+    ("typed", "taken_v"),
+    [
+        (("19.9 mV", "21.5 mV"), 0.0215),  # inside, but not by as much as this meter is unsure: the screw goes on
+        (("24.1 mV", "22.9 mV"), 0.0229),
+        (("23.0 mV",), 0.023),
+    ],
+)
+def test_by_hand_a_reading_at_the_very_limit_does_not_end_the_trim(typed: tuple[str, ...], taken_v: float) -> None:
+    entries = iter(typed)
+
+    async def answer(question: Question, refused: str) -> Reply | None:
+        return Reply(choice="take", text=next(entries))
+
+    bench = Bench(lambda t_s: 0.0, answer, manual=True)
+    event = bench.trim()
+    assert isinstance(event, ReadingTaken)
+    assert event.reading.value == pytest.approx(taken_v)
+    said = [question.do for question in bench.front.questions]
+    assert len(said) == len(typed)
+    for words in said[1:]:
+        assert "too near the limit for this meter" in words
+        assert "leave it" not in words
+
+
+def test_by_hand_a_meter_that_can_never_tell_still_ends_a_trim_near_the_target() -> None:
+    entries = iter(["21.5 mV", "22.0 mV"])
+
+    async def answer(question: Question, refused: str) -> Reply | None:
+        return Reply(choice="take", text=next(entries))
+
+    bench = Bench(lambda t_s: 0.0, answer, manual=True, low=0.0218, high=0.0224)
+    event = bench.trim()
+    assert isinstance(event, ReadingTaken)
+    assert event.reading.value == pytest.approx(0.022)
+
+
 def test_a_rails_current_is_trimmed_by_the_supply(monkeypatch: pytest.MonkeyPatch) -> None:
     monkeypatch.setattr(predictions, "screw_of", lambda *arguments: replace(SCREW, per_turn=0.07, full=0.1, knee=0.1))
     bench = Bench(

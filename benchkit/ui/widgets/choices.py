@@ -98,7 +98,7 @@ class Choices(Words, can_focus=True):
 
     def on_key(self, event: events.Key) -> None:
         """Take or move."""
-        if self.typed_ahead(event):
+        if not self._typing_figure and self.typed_ahead(event):
             event.stop()
             event.prevent_default()
             return
@@ -128,10 +128,13 @@ class Choices(Words, can_focus=True):
         event.stop()
         event.prevent_default()
 
+    @property
+    def _typing_figure(self) -> bool:
+        return bool(self._figure) and time.monotonic() - self._figure_s < PAUSE_S
+
     def _belongs_to_figure(self, event: events.Key) -> bool:
         """Take the keys of a figure that nobody asked for, and say so; a pause or Enter ends it."""
-        now_s = time.monotonic()
-        typed_on = bool(self._figure) and now_s - self._figure_s < PAUSE_S
+        typed_on = self._typing_figure
         character = event.character if event.is_printable else None
         figure = self._figure if typed_on else ""
         self._figure = ""
@@ -142,7 +145,7 @@ class Choices(Words, can_focus=True):
         starts = character is not None and character.isdigit() and character not in dict(self._choices)
         if character is None or not (typed_on or starts):
             return False
-        self._figure, self._figure_s = figure + character, now_s
+        self._figure, self._figure_s = figure + character, time.monotonic()
         self.post_message(self.Refused(f'"{safe(self._figure)}" answers nothing here: {self.keys}.'))
         return True
 

@@ -118,6 +118,32 @@ def test_a_wrong_key_is_told_which_are_right(question: Question, says: str) -> N
     on_foot(test)
 
 
+def test_a_figure_that_is_typed_into_a_choice_takes_none_of_them() -> None:
+    async def test(app: Foot, press: Callable[..., Awaitable[None]]) -> None:
+        app.answer.put(DECIDE)
+        await press(*"47.68", "space", *"mV")
+        assert app.replies == [], "the unit's m is no answer"
+        assert app.hint == '"47.68 mV" answers nothing here: A, G or M, or Enter.'
+        await press("enter")
+        assert app.replies == []
+        assert app.hint == '"47.68 mV" is not taken: A, G or M, or Enter.'
+        await press("m")
+        assert app.replies == [Reply(choice="make safe")]
+
+    on_foot(test)
+
+
+def test_after_a_pause_a_letter_is_an_answer_again(monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setattr("benchkit.ui.widgets.choices.PAUSE_S", 0.0)
+
+    async def test(app: Foot, press: Callable[..., Awaitable[None]]) -> None:
+        app.answer.put(DECIDE)
+        await press("4", "m")
+        assert app.replies == [Reply(choice="make safe")]
+
+    on_foot(test)
+
+
 def test_a_line_of_choices_breaks_between_two_of_them() -> None:
     choices = tuple(
         Choice(value=value, label=label)
