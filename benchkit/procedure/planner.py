@@ -32,7 +32,7 @@ from benchkit.stage.conditions import Condition, Unpowered
 from benchkit.stage.design import Design
 from benchkit.stage.points import Point, points_of
 from benchkit.stage.reach import least_regulating_rails
-from benchkit.stage.trimmer import least_share
+from benchkit.stage.trimmer import least_draw_a, least_share
 
 
 class Planner(SupplyItems, BiasItems):
@@ -49,6 +49,7 @@ class Planner(SupplyItems, BiasItems):
         self.share = 1.0
         self.lowest = with_room(design, least_regulating_rails(design))
         self.least_share = least_share(design)
+        self.least_draw_a = least_draw_a(design)
         self.section: Section
         self.ready_hold = False
         self.firm = NEVER_PASSED_OVER | ({"ohm.output"} if procedure.head.unknown_trimmer else set())

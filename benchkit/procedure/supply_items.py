@@ -9,6 +9,7 @@ Rules
 
 from __future__ import annotations
 
+import math
 from collections.abc import Iterator, Mapping
 from typing import Any
 
@@ -18,6 +19,9 @@ from benchkit.procedure.file import Step
 from benchkit.procedure.items import DRIVE_SHARES, Item
 from benchkit.procedure.power_off import PowerOff
 from benchkit.procedure.sizing import charging_s, drive_limit_a, rails_text, supply_limit_a
+
+LEAST_ROOM = 1.2
+"""The first limit leaves so much room above the largest draw among some drawn units (our own figure)."""
 
 DRIVE_LIMITS: Mapping[str, str] = {
     "for the drive": "drive the stage",
@@ -31,6 +35,7 @@ class SupplyItems(PowerOff):
 
     lowest: tuple[float, float]
     least_share: float
+    least_draw_a: float
     drive_limit: bool = False
     checked_a: float = 0.0
 
@@ -134,4 +139,5 @@ class SupplyItems(PowerOff):
     def least_bias_limit_a(self) -> float:
         """Limit (A) of the first power-on: output pairs draw something at least bias; without a trimmer, all of it."""
         full = self.design.rails
-        return supply_limit_a(self.design, full.positive_v, full.negative_v, share=self.least_share)
+        by_rule_a = supply_limit_a(self.design, full.positive_v, full.negative_v, share=self.least_share)
+        return max(by_rule_a, math.ceil(LEAST_ROOM * self.least_draw_a / 0.005 - 1e-9) * 0.005)

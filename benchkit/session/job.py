@@ -107,4 +107,12 @@ def refusal(question: Question, reply: Reply) -> str:
         )
     if question.kind == "hold" and reply.choice == "yes" and reply.text.strip().lower() != "yes":
         return "This is a hold point: type the word yes."
+    typed = reply.text.strip()
+    if only_done(question) and typed.lower() not in ("", "done", "off", "yes"):
+        return f'"{typed}" came, and nothing is typed here. Enter alone says that it is done.'
     return ""
+
+
+def only_done(question: Question) -> bool:
+    """Whether a person only says that something was done by hand, such as a supply switched off."""
+    return question.kind == "by hand" and not question.point and len(question.choices) == 1

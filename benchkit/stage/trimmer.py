@@ -154,6 +154,10 @@ def quiescent_a(design: Design, solved: Solved) -> Array:
     return np.asarray(np.sum(currents, axis=0))
 
 
+LEAST_UNITS = 200
+"""Units that are drawn to see what a stage may draw at least bias."""
+
+
 def least_share(design: Design) -> float:
     """Share of the target drop that the nominal unit has at its least bias: full rails, cold; 1 without a trimmer.
 
@@ -172,6 +176,23 @@ def least_share(design: Design) -> float:
             "Check the spreader's resistors in the design file",
         )
     return max(0.0, float(drop_v(solved)[0])) / target_drop_v(design)
+
+
+def least_draw_a(design: Design) -> float:
+    """Largest rail current (A) of some drawn units at least bias: full rails, cold or warm; 0 without a trimmer.
+
+    Units without a solution are left out; what a rail draws is no more exact here than the draws are many.
+    """
+    if design.spreader.trimmer is None:
+        return 0.0
+    drawn = draw(design, LEAST_UNITS, seeds("limits", 0))
+    most_a = 0.0
+    for when in ("cold", "warm"):
+        solved = solve_units(design, drawn, full_rails(design, trimmer="least", when=when), loading="none")
+        for rail in ("rail+.current", "rail-.current"):
+            if rail in solved.points and solved.converged.any():
+                most_a = max(most_a, float(np.abs(solved.points[rail][solved.converged]).max()))
+    return most_a
 
 
 @lru_cache(maxsize=32)

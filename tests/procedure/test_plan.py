@@ -11,8 +11,12 @@ from benchkit.procedure.items import NEVER_PASSED_OVER, RAIL_LOW_V, Item, Joined
 from benchkit.procedure.plan import make_plan
 from benchkit.procedure.sizing import discharge_s, rails_text, supply_limit_a
 from benchkit.stage.conditions import Condition, Unpowered
-from benchkit.stage.design import Design
+from benchkit.stage.design import Design, parse_design
+from benchkit.stage.draws import draw, seeds
+from benchkit.stage.operate import solve_units
+from benchkit.stage.trimmer import full_rails
 from tests.procedure.driver import SHIPPED, SMALL, item_of, shipped, small
+from tests.stage.catalogue import Wanted, text
 from tests.stage.designs import BREADBOARD, TERN, breadboard, changed, tern
 
 DESIGNS = ("tern-40", "breadboard")
@@ -180,6 +184,27 @@ def test_readings_know_their_condition(name: str) -> None:
                 assert condition.trimmer == trimmer
         else:
             assert item.limits is not None
+
+
+@pytest.mark.parametrize(("pairs", "full"), [(1, False), (3, True)])
+def test_the_first_limit_leaves_room_for_healthy_units_of_several_pairs(pairs: int, full: bool) -> None:
+    wanted = Wanted(
+        topology="double-emitter-follower",
+        feed="source servo",
+        trimmer="lower",
+        pairs=pairs,
+        stopper=True,
+        to_output=True,
+    )
+    design = parse_design(text(wanted), wanted.name)
+    plan = make_plan(load_procedure(SHIPPED), design)
+    limit_a = next(item.limit_a for item in plan.items if item.kind == "supply")
+    units = draw(design, 150, seeds("unit", 7))  # not the units that the limit was made from
+    for when in ("cold", "warm"):
+        solved = solve_units(design, units, full_rails(design, trimmer="least", when=when), loading="none")
+        assert solved.converged.all()
+        assert float(solved.points["rail+.current"].max()) < limit_a
+    assert limit_a < supply_limit_a(design, 30.0, -30.0, share=1.0)
 
 
 def test_the_warm_readings_are_warm_and_at_the_target() -> None:
@@ -416,9 +441,9 @@ def test_supply_limit_is_one_and_a_half_times_the_draw() -> None:
     design = tern()
     least = 8e-3 * 1.05 + 2 * 0.7 / 220 + 6e-3
     target = least + 22e-3 / 0.22
-    for share, draw in ((0.0, least), (1.0, target)):
+    for share, drawn_a in ((0.0, least), (1.0, target)):
         limit_a = supply_limit_a(design, 35.0, -35.0, share=share)
-        exact = 1.5 * draw + 0.01
+        exact = 1.5 * drawn_a + 0.01
         assert exact <= limit_a < exact + 0.005 + 1e-9
         assert math.isclose(limit_a / 0.005, round(limit_a / 0.005))
 

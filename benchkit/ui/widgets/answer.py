@@ -389,5 +389,8 @@ def _hint(question: Question, refused: str, types: bool) -> Text:
     if question.point:
         return Text(f"Type what the meter shows, with its unit, then {enter}.{more}")
     if question.kind == "by hand":
-        return Text(f"Type what is asked for, or nothing, then {enter}.{more}")
+        only = len(question.choices) == 1
+        return Text(
+            f"When it is done: {enter}, nothing typed." if only else f"Type what is asked for, then {enter}.{more}"
+        )
     return Text(f"Type, then {enter}.{more}")

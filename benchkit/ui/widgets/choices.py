@@ -1,14 +1,13 @@
 """The choices of a question, by key.
 
 A figure that is typed on where an entry stood a moment before must not end in a choice: its unit's letter would be one.
-So letters that follow a figure without a pause belong to the figure, up to Enter, and are said not to have been taken.
+So what follows a figure belongs to the figure, up to Enter or Esc, and is said not to have been taken.
 """
 
 from __future__ import annotations
 
-import time
 from collections.abc import Callable
-from typing import Any, Final, Self
+from typing import Any, Self
 
 from rich.text import Text
 from textual import events
@@ -19,9 +18,6 @@ from benchkit.procedure.actions import Choice
 from benchkit.ui.look import CARE, INK, QUIET, STRONG, safe
 from benchkit.ui.widgets.answer_keys import keyed, keys_in_words
 from benchkit.ui.widgets.words import Words
-
-PAUSE_S: Final = 1.5
-"""Keys nearer to one another than this are typed on (s)."""
 
 
 def keeps_keys(widget: Widget) -> bool:
@@ -60,7 +56,6 @@ class Choices(Words, can_focus=True):
         self._space = False
         self._drawn_for = 0
         self._figure = ""
-        self._figure_s = 0.0
         self.typed_ahead: Callable[[events.Key], bool] = lambda _key: False
         """Takes a key that begins an entry, or belongs to one that is yet to come."""
 
@@ -84,6 +79,7 @@ class Choices(Words, can_focus=True):
         takes the first.
         """
         self._usual, self._space = usual, space
+        self._figure = ""
         self._choices = keyed(choices)
         self._marked = min(marked, max(0, len(choices) - 1))
         self._stacked = stacked
@@ -98,7 +94,7 @@ class Choices(Words, can_focus=True):
 
     def on_key(self, event: events.Key) -> None:
         """Take or move."""
-        if not self._typing_figure and self.typed_ahead(event):
+        if not self._figure and self.typed_ahead(event):
             event.stop()
             event.prevent_default()
             return
@@ -128,25 +124,23 @@ class Choices(Words, can_focus=True):
         event.stop()
         event.prevent_default()
 
-    @property
-    def _typing_figure(self) -> bool:
-        return bool(self._figure) and time.monotonic() - self._figure_s < PAUSE_S
-
     def _belongs_to_figure(self, event: events.Key) -> bool:
-        """Take the keys of a figure that nobody asked for, and say so; a pause or Enter ends it."""
-        typed_on = self._typing_figure
+        """Take the keys of a figure that nobody asked for, up to Enter or Esc, and say that it is not taken."""
+        figure, self._figure = self._figure, ""
+        if figure and event.key in ("enter", "escape"):
+            self.post_message(self.Refused(f'"{safe(figure)}" is not taken: {self.keys}.'))
+            return True
         character = event.character if event.is_printable else None
-        figure = self._figure if typed_on else ""
-        self._figure = ""
-        if event.key == "enter":
-            if typed_on:
-                self.post_message(self.Refused(f'"{safe(figure)}" is not taken: {self.keys}.'))
-            return typed_on
         starts = character is not None and character.isdigit() and character not in dict(self._choices)
-        if character is None or not (typed_on or starts):
+        if not (figure or starts):
             return False
-        self._figure, self._figure_s = figure + character, time.monotonic()
-        self.post_message(self.Refused(f'"{safe(self._figure)}" answers nothing here: {self.keys}.'))
+        if character is None:
+            self._figure = figure[:-1] if event.key == "backspace" else figure
+            return event.key == "backspace"
+        self._figure = figure + character
+        self.post_message(
+            self.Refused(f'"{safe(self._figure)}" answers nothing here. Enter clears it; then {self.keys}.')
+        )
         return True
 
     def watch_has_focus(self, _has_focus: bool) -> None:

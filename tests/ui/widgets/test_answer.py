@@ -123,7 +123,7 @@ def test_a_figure_that_is_typed_into_a_choice_takes_none_of_them() -> None:
         app.answer.put(DECIDE)
         await press(*"47.68", "space", *"mV")
         assert app.replies == [], "the unit's m is no answer"
-        assert app.hint == '"47.68 mV" answers nothing here: A, G or M, or Enter.'
+        assert app.hint == '"47.68 mV" answers nothing here. Enter clears it; then A, G or M, or Enter.'
         await press("enter")
         assert app.replies == []
         assert app.hint == '"47.68 mV" is not taken: A, G or M, or Enter.'
@@ -133,12 +133,10 @@ def test_a_figure_that_is_typed_into_a_choice_takes_none_of_them() -> None:
     on_foot(test)
 
 
-def test_after_a_pause_a_letter_is_an_answer_again(monkeypatch: pytest.MonkeyPatch) -> None:
-    monkeypatch.setattr("benchkit.ui.widgets.choices.PAUSE_S", 0.0)
-
+def test_backspace_takes_a_figure_back() -> None:
     async def test(app: Foot, press: Callable[..., Awaitable[None]]) -> None:
         app.answer.put(DECIDE)
-        await press("4", "m")
+        await press("4", "backspace", "m")
         assert app.replies == [Reply(choice="make safe")]
 
     on_foot(test)
