@@ -193,8 +193,8 @@ def test_the_first_limit_leaves_room_for_healthy_units_of_several_pairs(pairs: i
         feed="source servo",
         trimmer="lower",
         pairs=pairs,
-        stopper=True,
-        to_output=True,
+        stopper=full,
+        to_output=full,
     )
     design = parse_design(text(wanted), wanted.name)
     plan = make_plan(load_procedure(SHIPPED), design)
