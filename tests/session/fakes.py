@@ -30,7 +30,7 @@ from benchkit.session import predictions, this_unit
 from benchkit.session.clock import SimulatedClock
 from benchkit.session.front import Reply, View
 from benchkit.session.hands import Hands
-from benchkit.session.job import Job
+from benchkit.session.job import Job, only_done
 from benchkit.session.run import Session
 from benchkit.stage.design import Design
 from tests.procedure.driver import OPENED, SMALL, judged, limits_of, small, suspected
@@ -277,7 +277,7 @@ def well(question: Question) -> Reply:
         case "decide":
             free = {choice.value for choice in question.choices if not choice.wants_reason}
             return Reply(choice="go on" if "go on" in free else "again")
-    return Reply(choice=question.choices[0].value, text="typed")
+    return Reply(choice=question.choices[0].value, text="" if only_done(question) else "typed")
 
 
 def on(item: str, *replies: Reply | None) -> Answer:

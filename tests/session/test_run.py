@@ -25,6 +25,7 @@ from benchkit.events import (
 from benchkit.keeper.protocol import KeeperDied, Push
 from benchkit.procedure.actions import Question
 from benchkit.session.front import Reply
+from benchkit.session.job import only_done
 from tests.procedure.driver import OPENED, small
 from tests.session.fakes import TROUBLE, FakeFront, Run, hang_at, on, quick_predictions, well
 
@@ -494,6 +495,8 @@ def by_hand(run: Run, typed: dict[str, list[str]]) -> None:
             if question.kind == "by hand":
                 return Reply(choice="take", text="47 mV")
             return None
+        if only_done(question):
+            return Reply(choice="done")
         text = next(left.get(question.item, iter(())), None)
         item = volts[question.item]
         if text is None and question.title.startswith("Set the supply"):
