@@ -83,6 +83,11 @@ class Falls:
         return now_a < CURRENT_FELL_TO * before_a and self.current_tells(before)
 
 
+def fell_first(before_a: float | None, now_a: float) -> bool:
+    """Whether the supply's current fell while the reading stands: it may show what the meter shows next."""
+    return before_a is not None and now_a < CURRENT_FELL_TO * before_a
+
+
 def fall_words(before_a: float | None, now_a: float | None) -> tuple[Mood, str]:
     """Say what a fall means, by the supply's current before and since; None where that is not known."""
     if now_a is None or before_a is None:

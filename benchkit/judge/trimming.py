@@ -25,7 +25,7 @@ from typing import Final
 
 from benchkit.judge.advice import Advice, Mood, Source
 from benchkit.judge.answers import Answers, OfSlope
-from benchkit.judge.falls import LEAST_TURNS, Falls, fall_words
+from benchkit.judge.falls import LEAST_TURNS, Falls, fall_words, fell_first
 from benchkit.judge.screw import KNEE_V, Scale, taken_for
 from benchkit.judge.silence import Silence
 from benchkit.judge.stillness import CALM_S, Stillness
@@ -283,7 +283,7 @@ class Adviser:
             self._rail_a = None if rail is None else rail[1]
             return
         if not far and self._known is None:
-            if self._fell is None and rail is not None:
+            if self._fell is None and rail is not None and not fell_first(self._rail_a, rail[1]):
                 self._rail_a = rail[1]
             return
         if self._fell_away(before[1], value, turned):

@@ -321,6 +321,20 @@ def test_a_reading_that_falls_away_while_turning(rail_after: float | None, mood:
     assert bench.look(2.0).mood == "turn"
 
 
+@pytest.mark.parametrize("early", [1, 2])
+def test_a_wiper_is_told_by_the_current_although_the_supply_answered_first(early: int) -> None:
+    """Meter and supply are asked side by side: the current may show it a reading or two before the meter does."""
+    bench = Bench(value=0.014, rail_a=0.09)
+    bench.look()
+    bench.rail_a = 0.03
+    for _ in range(early):
+        bench.read()
+    bench.value, bench.broken = 6e-5, True
+    advice = bench.look(2.0)
+    assert advice.mood == "no response"
+    assert "the supply's current with it: the wiper has opened" in advice.words
+
+
 def test_a_reading_that_falls_away_far_below_the_target_is_not_told_by_the_current() -> None:
     bench = Bench(value=1e-4, rail_a=0.020)
     bench.look()
