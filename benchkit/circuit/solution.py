@@ -183,7 +183,7 @@ class Solution:
         full = np.concatenate([self.x, np.zeros((1, self.units))])
         base = full[self.plan.tb[k]]
         polarity = parameters["polarity"]
-        with np.errstate(all="ignore"):
+        with np.errstate(all="ignore"):  # a unit without a solution may lie beyond all numbers
             g = devices.gummel_poon(
                 polarity * (base - full[self.plan.te[k]]),
                 polarity * (base - full[self.plan.tc[k]]),

@@ -280,10 +280,18 @@ class Trust:
         """
         if self._line is None or not self.has_fallen(value, noise, kept):
             return False
-        if self.agrees(value, noise, rail_a, kept) is not False:
+        if self.agrees(value, noise, rail_a, kept) is not False or self._fell_as_far(value, rail_a, kept):
             return False
         self._doubt()
         return True
+
+    def _fell_as_far(self, value: float, rail_a: float | None, kept: Kept | None) -> bool:
+        """Whether the current has fallen by what the reading has lost, or more: a wiper takes drivers' current too."""
+        if self._line is None or rail_a is None or kept is None or kept.rail_a is None:
+            return False
+        due_a = self._line.per_unit * (kept.value - value)
+        fell_a = kept.rail_a - rail_a
+        return due_a >= 3.0 * CURRENT_KNOWN * kept.rail_a and fell_a >= (1.0 - AGREES_WITHIN) * due_a
 
     def has_fallen(self, value: float, noise: float, kept: Kept | None) -> bool:
         """Whether a reading is below the target, and well below the last trusted one."""

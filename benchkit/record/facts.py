@@ -101,9 +101,14 @@ class Result:
         return self.judged is not None and self.judged.odd
 
     @property
+    def fell_short(self) -> bool:
+        """Whether it is a missed reading, or one that did not pass."""
+        return bool(self.missed) or self.verdict in ("fail", "undecided")
+
+    @property
     def counts_against(self) -> bool:
         """True for what still stands and is no pass."""
-        return not self.replaced and (bool(self.missed) or self.verdict in ("fail", "undecided"))
+        return not self.replaced and self.fell_short
 
 
 @dataclass(frozen=True, kw_only=True)

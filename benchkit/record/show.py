@@ -163,8 +163,7 @@ def _first_things(summary: Summary) -> Iterator[str]:
             "changed since.",
             "- ",
         )
-    first = sum(result.replaced and (bool(result.missed) or result.verdict in ("fail", "undecided"))
-                for result in summary.results)  # fmt: skip
+    first = sum(result.replaced and result.fell_short for result in summary.results)
     if first:
         one = "1 reading did" if first == 1 else f"{first} readings did"
         yield from wrapped(f"{one} not pass at first; taken again, they stand below with what came before.", "- ")

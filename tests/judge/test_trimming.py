@@ -335,6 +335,31 @@ def test_a_wiper_is_told_by_the_current_although_the_supply_answered_first(early
     assert "the supply's current with it: the wiper has opened" in advice.words
 
 
+def test_a_wiper_that_takes_the_drivers_current_away_too_has_opened() -> None:
+    """An open wiper collapses the spread further than the least bias does: the supply loses more than the drop says."""
+    line = RailLine(standing_a=0.02, per_unit=1.0 / 0.22)
+    bench = Bench(value=0.00285, adviser=adviser(line=line), rail_a=0.0359)
+    bench.look()
+    bench.turn(0.1)
+    bench.value, bench.broken, bench.rail_a = -6e-7, True, 0.0159
+    bench.look(5.0)
+    for advice in bench.seen[-25:]:
+        assert advice.mood == "no response", advice
+        assert "the supply's current with it: the wiper has opened" in advice.words
+
+
+def test_a_probe_that_slips_is_told_from_it_by_a_current_that_stays() -> None:
+    line = RailLine(standing_a=0.02, per_unit=1.0 / 0.22)
+    bench = Bench(value=0.00285, adviser=adviser(line=line), rail_a=0.0359)
+    bench.look()
+    bench.turn(0.1)
+    bench.value, bench.broken = -6e-7, True
+    bench.look(3.0)
+    said = {advice.words for advice in bench.seen[-20:]}
+    assert any("slipped" in words or "probe" in words for words in said)
+    assert not any("wiper has opened" in words for words in said)
+
+
 def test_a_reading_that_falls_away_far_below_the_target_is_not_told_by_the_current() -> None:
     bench = Bench(value=1e-4, rail_a=0.020)
     bench.look()
