@@ -22,6 +22,8 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from benchkit.circuit.stacks import each_its_own
+
 Array = NDArray[np.float64]
 Index = NDArray[np.intp]
 
@@ -198,16 +200,7 @@ def solve_dense(structure: Structure, values: Array, right: Array) -> Array:
     scale[~(scale > 0.0)] = 1.0
     matrix /= scale[:, :, None]
     vector = (right.T / scale)[:, :, None]
-    usable = np.isfinite(matrix).all(axis=(1, 2)) & np.isfinite(vector).all(axis=(1, 2))
-    result = np.full((units, structure.size), np.nan)
-    try:
-        result[usable] = _refined(matrix[usable], vector[usable])[:, :, 0]
-    except np.linalg.LinAlgError:
-        for unit in np.flatnonzero(usable):
-            try:
-                result[unit] = _refined(matrix[unit][None], vector[unit][None])[0, :, 0]
-            except np.linalg.LinAlgError:
-                continue
+    result = each_its_own(_refined, matrix, vector)[:, :, 0]
     return np.ascontiguousarray(result.T)
 
 

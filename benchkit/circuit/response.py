@@ -20,6 +20,7 @@ from benchkit.circuit.devices import Array
 from benchkit.circuit.elimination import Index
 from benchkit.circuit.equations import Batch
 from benchkit.circuit.solution import Solution
+from benchkit.circuit.stacks import each_its_own
 
 Matrix = NDArray[np.float64]
 
@@ -93,14 +94,5 @@ def _inverse(matrix: Matrix) -> Matrix:
     scale = np.abs(matrix).max(axis=2)
     scale[~(scale > 0.0)] = 1.0
     matrix = matrix / scale[:, :, None]
-    usable = np.isfinite(matrix).all(axis=(1, 2))
-    result = np.full(matrix.shape, np.nan)
-    try:
-        result[usable] = np.linalg.inv(matrix[usable])
-    except np.linalg.LinAlgError:
-        for unit in np.flatnonzero(usable):
-            try:
-                result[unit] = np.linalg.inv(matrix[unit])
-            except np.linalg.LinAlgError:
-                continue
+    result = each_its_own(np.linalg.inv, matrix)
     return np.asarray(result / scale[:, None, :])

@@ -18,6 +18,7 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import NDArray
 
+from benchkit.circuit.stacks import each_its_own
 from benchkit.stage.design import BOLTZMANN_J_PER_K, CHARGE_C, ZERO_CELSIUS_K
 from benchkit.stage.draws import Array
 from benchkit.stage.heat import HeatNodes
@@ -75,7 +76,8 @@ def sum_gain(nodes: HeatNodes, powers: Matrix) -> Array:
     result = np.full(len(powers), np.nan)
     usable = np.isfinite(powers).all(axis=(1, 2))
     inner = np.eye(len(nodes.parts)) - nodes.own()[:, None] * powers[usable]
-    follow = np.linalg.solve(inner, np.broadcast_to(nodes.seen()[:, None], (int(usable.sum()), len(nodes.parts), 1)))
+    seen = np.broadcast_to(nodes.seen()[:, None], (int(usable.sum()), len(nodes.parts), 1))
+    follow = each_its_own(np.linalg.solve, inner, seen)
     per_kelvin = (powers[usable] @ follow)[:, :, 0]
     result[usable] = per_kelvin @ nodes.per_watt[-1]
     return result

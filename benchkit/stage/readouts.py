@@ -25,6 +25,7 @@ from numpy.typing import NDArray
 from benchkit.circuit.response import Response
 from benchkit.circuit.solution import Solution
 from benchkit.circuit.solve import Effort
+from benchkit.circuit.stacks import each_its_own
 from benchkit.stage.conditions import Condition, TrimmerPosition
 from benchkit.stage.design import Design
 from benchkit.stage.draws import Array
@@ -260,13 +261,11 @@ class Powered:
         balance = heat(self.design, powers, run.ambient_c).temperatures_c
         names = (*self._names, "heatsink")
         hot = np.array([balance[name] for name in names]).reshape(len(names), many, units)
-        change = np.moveaxis(hot[:, :-1] - hot[:, -1:], 2, 0) / STEP
+        with np.errstate(all="ignore"):  # a unit on an edge has slopes beyond every number, and is none at the end
+            change = np.moveaxis(hot[:, :-1] - hot[:, -1:], 2, 0) / STEP
         by_z, by_t = change[:, :-1, :count], change[:, :-1, count:]
         loop = np.eye(len(self._names)) - by_t
-        try:
-            temperature = np.linalg.solve(loop, by_z)
-        except np.linalg.LinAlgError:
-            temperature = np.full(by_z.shape, np.nan)
+        temperature = each_its_own(np.linalg.solve, loop, by_z)
         result = slope[:, :, :count] + slope[:, :, count:] @ temperature
         if "heatsink" in self.points:
             row = self.points.index("heatsink")

@@ -105,6 +105,12 @@ class Report:
                 f"{lib.model.design.name}: no hypothesis has a solution under these conditions", "an operating point",
                 "Check rails, limit and trimmer of the readings",
             )  # fmt: skip
+        if not self.solved[:, 0].all():
+            raise ModelError(
+                f"{lib.model.design.name}: a healthy unit has no solution under these conditions, so that no fault can be"
+                " weighed against it", "an operating point of a healthy unit",
+                "Check rails, limit and trimmer of the readings",
+            )  # fmt: skip
         self.fitted = fit_hypotheses(lib, data)
         self.probability = np.exp(self.fitted.log_posterior)
         self.probability[~self.solved] = 0.0
@@ -143,7 +149,8 @@ class Report:
             )
         log_posterior = self.fitted.log_posterior[number] - self.lib.log_prior
         # against a unit that can't be healthy, nothing can be said about what healthy would be told from
-        refuted = (log_posterior[0] - log_posterior > WELL_REFUTED) & (probability[0] > LEAST_COMPARED)
+        with np.errstate(invalid="ignore"):  # neither has a solution
+            refuted = (log_posterior[0] - log_posterior > WELL_REFUTED) & (probability[0] > LEAST_COMPARED)
         unseen = tuple(
             faults[k]
             for k in range(1, len(faults))

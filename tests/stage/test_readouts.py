@@ -10,11 +10,12 @@ import pytest
 from benchkit.stage.conditions import Condition
 from benchkit.stage.design import Design
 from benchkit.stage.draws import Array
-from benchkit.stage.faults import HEALTHY, Fault
+from benchkit.stage.faults import HEALTHY, Fault, faults_of
 from benchkit.stage.forcing import Held
 from benchkit.stage.latent import AMBIENT, RAIL_SHARE, STATED_AMBIENT_K, UNSTATED_AMBIENT_K, Coordinates
 from benchkit.stage.operate import solve_units
 from benchkit.stage.readouts import Powered
+from tests.stage.catalogue import few
 from tests.stage.designs import breadboard, tern
 from tests.stage.unit_readings import check_slopes, drawn_z, fault_of
 
@@ -160,3 +161,18 @@ def test_each_unit_has_the_rails_that_it_is_held_at() -> None:
         np.testing.assert_allclose(found.f[unit], own.f[0], rtol=1e-5, atol=1e-8, err_msg=str(fault))
         np.testing.assert_allclose(found.slope[unit], own.slope[0], rtol=1e-3, atol=1e-5, err_msg=str(fault))
     assert np.ptp(found.f[:, 0]) > 5.0
+
+
+@pytest.mark.parametrize("rails_v", [7.0, 9.0, 16.0])
+def test_a_hypothesis_on_an_edge_takes_no_other_with_it(rails_v: float) -> None:
+    """Among all faults some unit's warm balance has a singular matrix at these rails."""
+    design = few()["double source servo lower tied 2 stopper"]
+    condition = Condition(positive_v=rails_v, negative_v=-rails_v, limit_a=0.06, trimmer="least", when="warm")
+    coordinates = Coordinates(design, RAILS)
+    readout = Powered(design, coordinates, condition, ("output", "rail+.current"), "", RAILS)
+    faults = [HEALTHY, *faults_of(design)]
+    found = readout.at(np.zeros((len(coordinates), len(faults))), faults)
+    alone = readout.at(np.zeros((len(coordinates), 1)), [HEALTHY])
+    assert found.good[0]
+    assert found.f[0] == pytest.approx(alone.f[0], rel=1e-6)
+    assert found.good.mean() > 0.9
