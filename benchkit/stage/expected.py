@@ -1,7 +1,8 @@
 """Expected values: what a healthy unit reads under a condition, and the limits that hold 99.73 % of healthy units.
 
 An ensemble of units is drawn from the design's tolerances (`benchkit.stage.draws`) and solved under the condition
-(`benchkit.stage.operate`, `benchkit.stage.unpowered`). The limits are its quantiles (`benchkit.stage.quantiles`).
+(`benchkit.stage.operate`, `benchkit.stage.unpowered`). The limits are its quantiles (`benchkit.stage.quantiles`). Where
+the output rests at a share of its rails, its limits allow for what a supply's setting may be off.
 
 Units that did not converge have no reading. More than 0.1 % of them, and there are no limits either: `ModelError`. With
 the trimmer at "target", units whose trimmer can't reach it are not at the target; they are left out and counted.
@@ -11,6 +12,7 @@ from __future__ import annotations
 
 import math
 import time
+import zlib
 from collections.abc import Sequence
 from dataclasses import asdict, dataclass
 from functools import lru_cache
@@ -23,6 +25,7 @@ from benchkit.stage.conditions import Condition, TrimmerPosition, Unpowered
 from benchkit.stage.design import Design
 from benchkit.stage.draws import Array, Parameters, draw, nominal, seeds
 from benchkit.stage.electrothermal import is_stable
+from benchkit.stage.latent import RAIL_SHARE
 from benchkit.stage.operate import Solved, solve_units
 from benchkit.stage.points import find_point, points_of
 from benchkit.stage.quantiles import LEAST_UNITS, interval
@@ -162,6 +165,8 @@ def ensemble(design: Design, condition: Condition, units: int = DEFAULT_UNITS, s
         )
     parameters = draw(design, units, seeds("limits", seed))
     parameters = {key: value.reshape(-1) if units == 1 else value for key, value in parameters.items()}
+    if design.output.rest.share is not None:
+        parameters["output.offset"] = parameters["output.offset"] + _rest_moves_v(design, condition, units, seed)
     drawn = solve_units(design, parameters, condition, start=unit)
     failed = int(np.count_nonzero(~drawn.converged))
     if failed > MOST_UNSOLVED * units:
@@ -175,6 +180,17 @@ def ensemble(design: Design, condition: Condition, units: int = DEFAULT_UNITS, s
             " the design file",
         )
     return Ensemble(nominal=unit, drawn=drawn, parameters=parameters, good=good)
+
+
+def _rest_moves_v(design: Design, condition: Condition, units: int, seed: int) -> Array:
+    """How far the output rests from where it is said to, because the rails stand off their setting (V).
+
+    Nothing else of a stage follows its rails so closely that a supply's own error shows.
+    """
+    share = design.output.rest.share or 0.0
+    rng = np.random.default_rng([seed, zlib.crc32(b"rest")])
+    positive, negative = RAIL_SHARE * rng.standard_normal((2, units))
+    return np.asarray(share * condition.positive_v * positive + (1.0 - share) * condition.negative_v * negative)
 
 
 def expected(

@@ -18,7 +18,9 @@ from benchkit.stage.expected import (
     share_inside,
     solve_units,
 )
+from benchkit.stage.latent import RAIL_SHARE
 from benchkit.stage.points import points_of
+from tests.stage.catalogue import few
 from tests.stage.designs import TERN, breadboard, changed, tern
 
 LEAST = Condition(positive_v=15.0, negative_v=-15.0, limit_a=0.05, trimmer="least")
@@ -55,6 +57,19 @@ def test_fresh_healthy_units_lie_inside(design: Design) -> None:
     for limits in found.points:
         if limits.high > limits.low:
             assert 0.99 < share_inside(limits, fresh.points[limits.point]) < 1.0, limits.point
+
+
+def test_an_output_that_rests_at_half_the_rail_may_follow_the_supplys_error() -> None:
+    design = few()["double resistor servo upper tied 1 stopper one supply"]
+    condition = Condition(positive_v=60.0, negative_v=0.0, trimmer="unknown")
+    found = expected(design, condition, units=3000, seed=11)
+    rng = np.random.default_rng(8)
+    rails_v = 60.0 * (1.0 + RAIL_SHARE * rng.standard_normal(3000)), np.zeros(3000)
+    fresh = solve_units(design, draw(design, 3000, seeds("unit", 11)), condition, rails_v=rails_v)
+    for point in ("output", "spread", "rail+.current"):
+        assert 0.99 < share_inside(found[point], fresh.points[point]) < 1.0, point
+    assert found["rail+"].held
+    assert found["output"].high - found["output"].low < 0.02 * 60.0
 
 
 def test_a_trimmed_drop_is_held_by_its_resistor() -> None:
