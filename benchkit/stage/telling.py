@@ -107,7 +107,7 @@ class Report:
             )  # fmt: skip
         if not self.solved[:, 0].all():
             raise ModelError(
-                f"{lib.model.design.name}: a healthy unit has no solution under these conditions, and no fault can be weighed"
+                f"{lib.model.design.name}: a healthy unit has no solution under these conditions, so nothing can be weighed"
                 " against it", "an operating point of a healthy unit",
                 "Check rails, limit and trimmer of the readings",
             )  # fmt: skip
