@@ -4,7 +4,8 @@ Rules
 -----
 * The worst standing result makes the verdict.  Rare readings count as passed when all readings together fit a good unit
   and there are few of them (`benchkit.judge.rare`).
-* What a unit was found with before parts were replaced counts no more; what was left out was never asked for.
+* What a unit was found with before parts were replaced counts no more, nor what it was found with under power before
+  it came into its limit; what was left out was never asked for.
 * A reading that was asked for and is missing, a stop, or a fault that fits better than a good unit leaves a walk
   undecided that would have passed.
 """
@@ -26,6 +27,7 @@ HEALTHY: Final = "healthy"
 def closed_event(plan: Plan, state: State) -> Closed:
     """Return the last line of a walk that has come to its end."""
     found = {item.id for item in plan.items if item.marked == "found"} & state.outdated
+    found |= {item.id for item in plan.items if item.limited_to and state.limited}
     counted = [result for result in state.results if result.item not in found]
     rare = _rare_in_a_good_unit(state, counted)
     verdict = worst(["pass" if result in rare else result.verdict for result in counted])

@@ -27,12 +27,18 @@ trimmer that isn't there.
 
 Sections that may be left out
 -----------------------------
-``only_if``      done only when parts, or semiconductors, were replaced; or only when none were
+``only_if``      done only when parts, or semiconductors, were replaced; or only when none were; or only ``from least
+                 bias``: when parts were replaced, or a unit as it was found came into its limit
 ``optional``     done only when the operator says so; the words of the question stand behind it
 Both end with the supply as it was at their beginning, so that what follows is the same either way.  What has to hold
 before power holds on every path (`benchkit.procedure.paths`), and the trimmer is anywhere after one that turned it.
 
 ``as`` marks a section's readings as those that the unit was found with, or left with.
+
+``at_limit`` names the section's own step of the kind ``off`` to which a rail leads that comes into its current limit,
+or that the supply's own protection has switched off: a trimmer that was left too far up does that.  The walk then goes
+on from there instead of ending, what is left of the section before that step falls away, and the next power is a first
+power again.  A step whose ``act`` clears the protection is done only where one has tripped.
 """
 
 from __future__ import annotations
@@ -65,11 +71,13 @@ Need = Literal["a trimmer", "two rails", "one rail"]
 
 Act = Literal[
     "short the leads", "connect the unit", "trimmer to least", "connect the dummy load", "take the dummy load off",
-    "drive the stage", "drive at a third of full power", "stop driving",
+    "drive the stage", "drive at a third of full power", "stop driving", "clear the protection",
 ]  # fmt: skip
 """What a told step does to the bench, where the rest of the walk depends on it."""
 
-OnlyIf = Literal["parts replaced", "no parts replaced", "semiconductors replaced", "no semiconductors replaced"]
+OnlyIf = Literal[
+    "parts replaced", "no parts replaced", "semiconductors replaced", "no semiconductors replaced", "from least bias",
+]  # fmt: skip
 """What a section may depend on."""
 
 
@@ -201,6 +209,7 @@ class Section(_Strict):
     resume: pydantic.StrictBool = False
     only_if: OnlyIf | None = None
     optional: str = ""
+    at_limit: _Name | None = None
     as_: Literal["found", "left"] | None = pydantic.Field(default=None, alias="as")
     step: tuple[Step, ...] = pydantic.Field(min_length=1)
 
@@ -209,6 +218,10 @@ class Section(_Strict):
         if "optional" in self.model_fields_set and not self.optional.strip():
             raise ValueError("'optional' is empty; it has to hold the question whether the section is done")
         check_placeholders(self.optional)
+        if self.at_limit is not None and not any(
+            step.name == self.at_limit and step.kind == "off" for step in self.step
+        ):
+            raise ValueError(f"at_limit is {self.at_limit!r}; it has to name a step of the kind 'off' in its section")
         return self
 
 

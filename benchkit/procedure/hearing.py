@@ -5,7 +5,7 @@ from __future__ import annotations
 from dataclasses import replace
 
 from benchkit import quantities
-from benchkit.events import Judged, OutputOff, SupplyState
+from benchkit.events import Judged, OutputOff, SupplyState, Tripped
 from benchkit.procedure.items import Item
 from benchkit.procedure.state import State
 
@@ -53,6 +53,16 @@ def switched_by_hand(state: State) -> bool:
 def never_on_by_hand(state: State) -> bool:
     """Whether only a person switches the supply, and this walk has not asked anybody yet to switch it on."""
     return switched_by_hand(state) and not state.ever_on
+
+
+def at_a_limit(event: Tripped) -> bool:
+    """Whether a trip means that the unit drew more than the supply was to give it."""
+    return drew_its_limit(event.state) and event.what.startswith(("rail", "positive protection", "negative protection"))
+
+
+def drew_its_limit(seen: SupplyState | None) -> bool:
+    """Whether a supply holds a rail by its limit, or has switched one off by its own protection."""
+    return seen is not None and bool(seen.positive_in_limit or seen.negative_in_limit or seen.tripped)
 
 
 def lacks_protection(found: SupplyState) -> bool:

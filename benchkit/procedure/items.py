@@ -80,6 +80,9 @@ TRIMMED = "emitter.upper.1"
 TELLS_TARGET = frozenset({TRIMMED, "emitter.lower.1", "emitter.pair.1"})
 """Points whose reading says where a trim has brought the target; after a trim by any other the trimmer is anywhere."""
 
+CLEARS_PROTECTION = "clear the protection"
+"""The act that a person does at a supply whose own protection has tripped."""
+
 DRIVE_SHARES: Mapping[str, float] = {
     "drive the stage": 1.0 / 30.0,
     "drive at a third of full power": 1.0 / 3.0,
@@ -140,6 +143,7 @@ class Item:
         How much the model's limits are widened on either side, in the point's unit.
     act : str
         What a told item does to the bench: "short the leads", "connect the unit", "trimmer to least", or "".
+        "clear the protection" is done only where the supply says that one has tripped.
     trimmer_end : bool
         This reading checks that the trimmer is at its least-bias end.
     powered : bool
@@ -164,7 +168,9 @@ class Item:
         The reading is taken with the stage driven: the model knows nothing of it.
     only_if : str
         The section is done only if: "parts replaced", "no parts replaced", "semiconductors replaced", "no
-        semiconductors replaced"; "" for always.
+        semiconductors replaced", "from least bias"; "" for always.
+    limited_to : str
+        The item of the kind ``off`` to which a rail in its limit leads; "" where that ends the walk.
     optional : bool
         The section is done only when the operator has chosen it.
     marked : str
@@ -215,6 +221,7 @@ class Item:
     retake: tuple[str, ...] = ()
     driven: bool = False
     only_if: str = ""
+    limited_to: str = ""
     optional: bool = False
     marked: Literal["", "found", "left"] = ""
 

@@ -7,8 +7,9 @@ Rules
   measured by itself goes on counting.
 * Of a point that was read more than once under the same conditions the latest reading counts, and it is not narrowed
   again: what has been read is known.
-* A rail that tripped because its supply held it by the current limit is a reading too, of the limit: capacitors behind
-  it make the unit's own share of the current larger, never smaller.  What voltage the rail had fallen to on its way is
+* A rail that tripped because its supply held it by the current limit is a reading too, of the limit: at rest the
+  capacitors behind it make the unit's own share of the current larger, never smaller; on its way up they take a share
+  for themselves.  What voltage the rail had fallen to on its way is
   no reading: it was still moving.
 * Nobody is sent to a live board for an extra reading where more than `HAZARDOUS_V` lies from rail to rail; there only
   what the supply itself reads is offered, and the rest once the rails have been seen low.
@@ -26,6 +27,7 @@ from benchkit.measure.readings import Reading
 from benchkit.procedure.actions import Target
 from benchkit.procedure.file import MADE_SAFE
 from benchkit.procedure.items import RAIL_POINTS, AnyCondition, Item, Joined, Plan, condition_key, conditions_of
+from benchkit.procedure.sizing import CHARGING_SHARE
 from benchkit.procedure.state import State
 from benchkit.stage.conditions import Condition, TrimmerPosition, Unpowered
 from benchkit.stage.forcing import LIMIT_SHARE
@@ -68,7 +70,7 @@ def _turned(plan: Plan, state: State) -> int:
     """Return the number of the item at which the trimmer was turned last; 0 while it stands as it was found."""
     done = (
         number
-        for number, item in enumerate(plan.items[: state.index + 1])
+        for number, item in enumerate(plan.items[: _came_to(plan, state) + 1])
         if (item.kind == "trim" or item.act == "trimmer to least") and not state.leaves_out(item)
     )
     return max(done, default=0)
@@ -98,20 +100,25 @@ def observations(plan: Plan, state: State) -> tuple[Observation, ...]:
 
 
 def at_the_trip(plan: Plan, state: State) -> tuple[tuple[AnyCondition, Observation], ...]:
-    """Return what a limit that ended the walk told of the unit: each rail that it held, and the limit itself."""
+    """Return what a limit that was reached told of the unit: each rail that it held, and the limit itself."""
     seen = None if state.tripped is None else state.tripped.state
     if seen is None or seen.limit_a is None or seen.set_positive_v is None or state.on_lamp:
         return ()
-    item = plan.items[_came_to(plan, state)]
+    place = _place_of(plan, state.tripped_at)
+    item = plan.items[place]
+    if place < _turned(plan, state):
+        return ()
     if item.driven or item.drive_limit or item.optional:
         return ()  # a driven stage: the model knows nothing of it
-    under = _as_tripped(plan, state, item, seen, seen.set_positive_v, seen.limit_a)
+    # On the way up a part of the current charges the unit's capacitors.
+    share = math.hypot(LIMIT_SHARE, CHARGING_SHARE / math.sqrt(3.0)) if item.kind == "supply" else LIMIT_SHARE
+    under = _as_tripped(plan, place, state, seen, seen.set_positive_v, seen.limit_a)
     return tuple(
         (
             under,
             Observation(
                 conditions=conditions_of(under), point=f"{rail}.current", value=seen.limit_a,
-                standard_uncertainty=LIMIT_SHARE * seen.limit_a,
+                standard_uncertainty=share * seen.limit_a, event=True,
             ),
         )
         for rail, held in (("rail+", seen.positive_in_limit), ("rail-", seen.negative_in_limit))
@@ -120,16 +127,16 @@ def at_the_trip(plan: Plan, state: State) -> tuple[tuple[AnyCondition, Observati
 
 
 def _as_tripped(
-    plan: Plan, state: State, item: Item, seen: SupplyState, positive_v: float, limit_a: float
+    plan: Plan, place: int, state: State, seen: SupplyState, positive_v: float, limit_a: float
 ) -> AnyCondition:
     """Return the rails as far up as they were set, cold on their way up and anything up to warm after it."""
     cold = Condition(
         positive_v=abs(positive_v),
         negative_v=-abs(seen.set_negative_v or 0.0),
         limit_a=limit_a,
-        trimmer=trimmer_now(plan, _came_to(plan, state), state),
+        trimmer=trimmer_now(plan, place, state),
     )
-    if item.kind == "supply":
+    if plan.items[place].kind == "supply":
         return cold
     return Joined(conditions=(cold, replace(cold, when="warm")), words="cold to warm")
 
@@ -217,7 +224,11 @@ def unpowered(plan: Plan, state: State) -> tuple[Named, ...]:
 
 def _came_to(plan: Plan, state: State) -> int:
     """Return how far the walk came: on the way out, the item that led there."""
-    return next((number for number, item in enumerate(plan.items) if item.id == state.stopped_at), state.index)
+    return _place_of(plan, state.stopped_at, state.index)
+
+
+def _place_of(plan: Plan, name: str, default: int = 0) -> int:
+    return next((number for number, item in enumerate(plan.items) if item.id == name), default)
 
 
 def _unread(plan: Plan, state: State, condition: AnyCondition) -> tuple[Point, ...]:

@@ -39,6 +39,7 @@ from benchkit.measure.uncertainty import coverage_factor
 from benchkit.procedure import knowledge, questions
 from benchkit.procedure.actions import Action, Narrow, Write
 from benchkit.procedure.file import MADE_SAFE
+from benchkit.procedure.hearing import drew_its_limit
 from benchkit.procedure.items import Item
 from benchkit.procedure.moves import Moves, Step
 from benchkit.procedure.sizing import time_text
@@ -136,7 +137,8 @@ class Modelling(Moves):
         if event.verdict == "pass" and not event.odd:
             return self._next(state)
         if item.kind in ("supply", "limit check"):
-            return self._make_safe(state, event.why, 4)
+            limited = self._from_least_bias(state, event.why.rstrip(".")) if drew_its_limit(state.supply) else None
+            return limited or self._make_safe(state, event.why, 4)
         if item.kind == "lamp":
             return self._make_safe(state, f"the operator said no at: {item.title}", 4)
         return self._decide(state, event)

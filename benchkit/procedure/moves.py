@@ -34,6 +34,8 @@ from benchkit.procedure.state import State
 
 Step = tuple[State, tuple[Action, ...]]
 
+LEFT_TOO_HIGH: Final = "The bias was left too high, or a part is gone: the walk goes on from least bias."
+
 MOST_EXTRAS: Final = 3
 """Extra readings that are offered at one item."""
 
@@ -181,7 +183,8 @@ class Moves:
                     Ask(item=item.id, question=questions.lamp_off(item)),
                 )
             case "off":
-                reason = state.stopped or "a step of the procedure"
+                at_limit = any(one.limited_to == item.id for one in self.plan.items)
+                reason = state.stopped or (tripped_reason(state) if at_limit else "") or "a step of the procedure"
                 return replace(state, phase="switching off"), (SwitchOff(item=item.id, reason=reason),)
 
     def _done_from(self, state: State, index: int) -> int:
@@ -248,6 +251,18 @@ class Moves:
             high=None if limits is None else limits.high,
         )
         return replace(state, phase="reading"), (read,)
+
+    def _from_least_bias(self, state: State, reason: str) -> Step | None:
+        """Go on from least bias where a unit as it was found came into its limit; None where that ends the walk."""
+        item = self.host(state)
+        if not item.limited_to or state.limited:
+            return None
+        state, asked = self._ask_suspects(replace(state, limited=reason, probes=""))
+        after, actions = self._enter(state, self._number_of(item.limited_to))
+        return replace(after, note=f"{reason[:1].upper()}{reason[1:]}. {LEFT_TOO_HIGH}"), (*actions, *asked)
+
+    def _number_of(self, name: str) -> int:
+        return next(number for number, one in enumerate(self.plan.items) if one.id == name)
 
     def _next(self, state: State) -> Step:
         if state.stopped and self.item(state).kind == "off" and not self._may_hold_charge(state):
@@ -343,6 +358,11 @@ class Moves:
         item, offer = self.host(state), self.offer(state)
         question = questions.offering(item, None if offer is None else offer[0][1])
         return replace(state, phase="offering", extra=""), (Ask(item=item.id, question=question),)
+
+
+def tripped_reason(state: State) -> str:
+    """Return the reason with which the supply was switched off at a limit that did not end the walk; "" without one."""
+    return f"tripped: {state.limited}" if state.limited else ""
 
 
 def _inside(result: Judged) -> bool:

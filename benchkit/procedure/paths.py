@@ -11,6 +11,7 @@ Rules
   replaced the next power is a first power again, and of these only the check of the limit still stands.
 * A procedure with ``unknown_trimmer`` may begin with the trimmer as it was found, with the output read by resistance
   as well.  Its first power, and any behind replaced parts, has the lowest rails and no more than the target needs.
+* Where a rail in its limit doesn't end the walk, the next power is a first power again, with the trimmer proven.
 * While the trimmer is anywhere, no limit is above what the target needs.
 * A dummy load goes on and comes off without power, and on only behind the offset, proven at rails as high as those
   that the load will see.  Only a loaded stage is driven, or has a limit for it.  Nothing is trimmed, and nothing leads
@@ -43,6 +44,7 @@ class Known:
     """What is known on a path: of the unit, of the supply's limit, and of what hangs on the output."""
 
     parts: bool = False
+    limited: bool = False
     semiconductors: bool = False
     checked_a: float = 0.0
     rails: bool = False
@@ -126,8 +128,10 @@ class Paths:
                 continue
             for after, left_out in self._after(node):
                 reach(after, (node, left_out))
-            # A walk that was cut off knows which parts were replaced, and nothing else.
-            again = (self._resume, Known(parts=known.parts, semiconductors=known.semiconductors))
+            # A walk that was cut off knows which parts were replaced, that a limit was reached, and nothing else.
+            again = (
+                self._resume, Known(parts=known.parts, semiconductors=known.semiconductors, limited=known.limited)
+            )  # fmt: skip
             if again not in known_cuts:
                 known_cuts.add(again)
                 cut.append((again, node))
@@ -138,6 +142,8 @@ class Paths:
         """Return where a path goes on, each with the section that is left out on the way; "" for none."""
         number, known = node
         item = self._items[number]
+        if item.limited_to and known.limited:
+            return [((number + 1, known), item.section)]
         if _left_out(item, known):
             return [((self._behind_section(number), known), item.section)]
         if item.kind == "choose":
@@ -150,6 +156,9 @@ class Paths:
                     node, item, f"leads back to {item.back} while a dummy load is on", "the load taken off before it"
                 )
             follows += [(self._number[item.back], one) for one in found]
+        if item.limited_to and found[0].powered:
+            off = self._number[item.limited_to]
+            follows += [(off, replace(one, limited=True, trimmer="anywhere", powered=False)) for one in found]
         return [(one, "") for one in follows]
 
     def _left(self, node: Node, item: Item, known: Known) -> Node:
@@ -254,7 +263,8 @@ class Paths:
             lacking.append("a reading of ohm.rails")
         if as_found and not known.output and not on_lamp:
             lacking.append("a reading of ohm.output, which nobody passes without")
-        may_be_anywhere = as_found and not on_lamp and not known.parts and known.trimmer == "anywhere"
+        untouched = not known.parts and not known.limited and known.trimmer == "anywhere"
+        may_be_anywhere = as_found and not on_lamp and untouched
         if self._has_trimmer and known.trimmer != "proven" and not may_be_anywhere:
             lacking.append("a reading of ohm.spreader.ARM, which proves the trimmer's end")
         if lacking:
@@ -267,7 +277,7 @@ class Paths:
             )
         if on_lamp:
             return
-        if as_found or known.parts:
+        if as_found or known.parts or known.limited:
             self._gently(node, item)
         if known.checked_a < (1.0 - CHECKED_WITHIN) * item.limit_a:
             raise self._refuse(
@@ -370,4 +380,6 @@ def _left_out(item: Item, known: Known) -> bool:
             return not known.semiconductors
         case "no semiconductors replaced":
             return known.semiconductors
+        case "from least bias":
+            return not (known.parts or known.limited)
     return False

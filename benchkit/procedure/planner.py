@@ -69,9 +69,12 @@ class Planner(SupplyItems, BiasItems):
             self.section = section
             self.run: list[Item] = []
             first = True
+            limited_to = "" if section.at_limit is None else f"{section.name}.{section.at_limit}"
             for item in self._section(section):
+                limited_to = "" if item.id == limited_to else limited_to
                 yield replace(
                     item,
+                    limited_to=limited_to,
                     resume=section.resume and first,
                     only_if=section.only_if or "",
                     optional=bool(section.optional),

@@ -24,8 +24,16 @@ from benchkit.events import (
 )
 from benchkit.procedure import questions
 from benchkit.procedure.actions import Action, Ask, Connect, SwitchOff
-from benchkit.procedure.hearing import cut, heard, never_on_by_hand, off_by_word, off_heard, switched_by_hand
-from benchkit.procedure.moves import Moves, Step
+from benchkit.procedure.hearing import (
+    at_a_limit,
+    cut,
+    heard,
+    never_on_by_hand,
+    off_by_word,
+    off_heard,
+    switched_by_hand,
+)
+from benchkit.procedure.moves import Moves, Step, tripped_reason
 from benchkit.procedure.state import State
 
 NOTHING_BROKEN: Final = "none"
@@ -82,7 +90,11 @@ class Securing(Moves):
         state = heard(state, event.state)
         ask = not state.stopped and not self.way_out(state)
         if ask:
-            state = replace(state, tripped=event)
+            state = replace(state, tripped=event, tripped_at=self.host(state).id)
+        if ask and at_a_limit(event):
+            limited = self._from_least_bias(state, event.reason)
+            if limited is not None:
+                return limited
         after, actions = self._make_safe(state, f"tripped: {event.reason}", 4)
         after, asked = self._ask_suspects(after) if ask else (after, ())
         return replace(after, note=f"Tripped: {event.reason}. {AFTER_TRIP}"), (*actions, *asked)
@@ -93,7 +105,8 @@ class Securing(Moves):
         return self._make_safe(state, f"contact with {event.who} was lost: {event.problem}", 3)
 
     def _output_went_off(self, state: State, event: OutputOff) -> Step:
-        sure = state.energised == "off" and event.confirmed and event.reason.startswith(MAKING_SURE)
+        again = event.reason.startswith(MAKING_SURE) or event.reason == tripped_reason(state)
+        sure = state.energised == "off" and event.confirmed and again
         state = off_heard(state, event)
         if sure:
             return replace(state, note=STILL_OFF), self._open_actions(state)

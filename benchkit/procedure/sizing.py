@@ -6,6 +6,7 @@ Nothing here judges a reading: these numbers size the supply's limit, the ramps 
 from __future__ import annotations
 
 import math
+from typing import Final
 
 from benchkit import quantities
 from benchkit.procedure.items import RAIL_LOW_V
@@ -99,9 +100,13 @@ def capacitance_f(design: Design) -> float:
     return (design.rails.reservoir_f or 0.0) + (design.rails.local_capacitors_f or 0.0)
 
 
+CHARGING_SHARE: Final = 0.15
+"""So much of a limit goes into the rails' capacitors on the way up; our own figure."""
+
+
 def charging_s(design: Design, rise_v: float, limit_a: float) -> float:
-    """Time (s) for the rails to rise by `rise_v` (V) with 15 % of the limit going into the capacitors."""
-    return capacitance_f(design) * max(rise_v, 0.0) / (0.15 * limit_a)
+    """Time (s) for the rails to rise by `rise_v` (V) with `CHARGING_SHARE` of the limit going into the capacitors."""
+    return capacitance_f(design) * max(rise_v, 0.0) / (CHARGING_SHARE * limit_a)
 
 
 def capacitors_settle_s(design: Design) -> float:

@@ -8,7 +8,7 @@ from typing import Literal
 
 from benchkit.events import Closed, Judged, NarrowedLimits, PointLimits, SupplyState, Suspected, Tripped, WalkOpened
 from benchkit.measure.readings import Reading
-from benchkit.procedure.items import Item
+from benchkit.procedure.items import CLEARS_PROTECTION, Item
 
 Phase = Literal[
     "unopened",
@@ -73,6 +73,9 @@ class State:
         Which parts were replaced, in the operator's words; "" for none.
     semiconductors : bool
         Whether semiconductors are among them.
+    limited : str
+        Why the power that the unit had as it was found ended at its limit, where the walk goes on from least bias; ""
+        when it did not.
     chosen : frozenset of str
         Sections that may be left out and that the operator wants done.
     trims : mapping
@@ -144,6 +147,7 @@ class State:
     outdated: frozenset[str] = frozenset()
     parts: str = ""
     semiconductors: bool = False
+    limited: str = ""
     chosen: frozenset[str] = frozenset()
     trims: Mapping[str, int] = field(default_factory=dict)
     extras: tuple[Item, ...] = ()
@@ -169,6 +173,7 @@ class State:
     missing: str = ""
     note: str = ""
     tripped: Tripped | None = None
+    tripped_at: str = ""
     keeping: frozenset[str] = frozenset()
 
     def result(self, item: str) -> Judged | None:
@@ -177,6 +182,10 @@ class State:
 
     def leaves_out(self, item: Item) -> bool:
         """Whether an item belongs to a section that is not done as things stand; the question itself is always put."""
+        if item.limited_to and self.limited:
+            return True
+        if item.act == CLEARS_PROTECTION and not (self.supply is not None and self.supply.tripped):
+            return True
         if item.optional:
             return item.kind != "choose" and item.section not in self.chosen
         match item.only_if:
@@ -188,4 +197,6 @@ class State:
                 return not self.semiconductors
             case "no semiconductors replaced":
                 return self.semiconductors
+            case "from least bias":
+                return not (self.parts or self.limited)
         return False

@@ -229,9 +229,6 @@ class Walk(Securing, Modelling):
         state = replace(_without(state, frozenset(item.retake)), keeping=others)
         return self._enter(state, first)
 
-    def _number_of(self, name: str) -> int:
-        return next(number for number, one in enumerate(self.plan.items) if one.id == name)
-
     # -- supply and time ---------------------------------------------------------------------------------------
 
     def _supply_set(self, state: State, event: SupplySet) -> Step:

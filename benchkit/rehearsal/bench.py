@@ -193,6 +193,10 @@ def _repair(bench: RehearsalBench, _: Mapping[str, Any]) -> dict[str, Any]:
     return {"parts": list(parts), "semiconductors": semiconductors(bench.unit.design, parts)}
 
 
+def _clear_protection(bench: RehearsalBench, _: Mapping[str, Any]) -> None:
+    bench.supply.clear_protection()
+
+
 def semiconductors(design: Design, parts: Sequence[str]) -> bool:
     """Whether there is a transistor, or a feed made of some, among the parts."""
     kinds = {part.name: part.kind for part in parts_of(design)}
@@ -222,6 +226,7 @@ SIDE_REQUESTS: Final[Mapping[str, Callable[[RehearsalBench, Mapping[str, Any]], 
     "slip": _slip,
     "fault": _fault,
     "repair": _repair,
+    "clear protection": _clear_protection,
     "advance": _advance,
     "truth": lambda bench, _: bench.truth(),
 }

@@ -91,6 +91,10 @@ class SideChannel:
         assert isinstance(answer, dict)
         return answer
 
+    def clear_protection(self) -> None:
+        """Clear the supply's tripped protection at its own keys."""
+        self._ask({"do": "clear protection"})
+
     def advance(self, seconds: float) -> float:
         """Let simulated time (s) pass; return what the simulated clock then shows."""
         return float(self._ask({"do": "advance", "seconds": seconds}, ADVANCE_TIMEOUT_S))

@@ -204,6 +204,7 @@ class StandIn:
         if question.item.endswith(BEFORE):
             kind, parts = self._replaced_before or ("no", "")
             return Reply(choice=kind, text=parts)
+        await self._wait_while(lambda view: view.suspects is not None and view.suspects.working)
         truth = await in_thread(self._hands.truth)
         broken = [str(part) for part in truth.get("faulty", ())]
         if not broken:

@@ -184,6 +184,11 @@ class Supply(Instrument):
     def _tripped(self, what: str) -> Callable[[Arguments], str]:
         return self._each(lambda _, number: str(int(self._protections[number].tripped == what)))
 
+    def clear_protection(self) -> None:
+        """Forget what has tripped, as at the supply's own keys."""
+        for protection in self._protections.values():
+            protection.clear()
+
     def _clear_protection(self, arguments: Arguments) -> None:
         for number in _only_channels(arguments):
             self._protections[number].clear()

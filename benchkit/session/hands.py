@@ -6,7 +6,7 @@ from collections.abc import Callable
 from typing import Any, Protocol
 
 from benchkit.events import Noted
-from benchkit.procedure.items import DRIVE_SHARES
+from benchkit.procedure.items import CLEARS_PROTECTION, DRIVE_SHARES
 from benchkit.session.job import figures_of
 from benchkit.session.threads import in_thread
 
@@ -34,6 +34,9 @@ class SimulatedHands(Protocol):
 
     def repair(self) -> Any:
         """Put new parts in for what is faulty or burnt."""
+
+    def clear_protection(self) -> Any:
+        """Clear the supply's tripped protection at its own keys."""
 
     def advance(self, seconds: float) -> Any:
         """Let simulated time pass."""
@@ -77,6 +80,8 @@ class Hands:
             await self._do(lambda: bench.trimmer_to("least"))
         elif act in DRIVE_SHARES:
             await self._do(lambda: bench.drive(DRIVE_SHARES[act]))
+        elif act == CLEARS_PROTECTION:
+            await self._do(bench.clear_protection)
         elif act == "take the dummy load off":
             await self._do(lambda: bench.drive(0.0))
 

@@ -10,6 +10,9 @@ falls. The evidence is Laplace's approximation at the best z,
 
 so that no ensemble limits how finely readings are weighed: thirty of them at 0.03 % are taken at their worth.
 
+A rail that came into its current limit is an event too: near the limit a reading bends from steep to flat, and the
+determinant of either side would be wrong for the other.
+
 A reading beyond the meter's range says only that f lies beyond it: it has no part in J while f does. It is an event and
 no number, so that it has no density and no part in the determinant of R either.
 """
@@ -25,7 +28,7 @@ from benchkit.circuit.solution import Solution
 from benchkit.circuit.solve import Effort
 from benchkit.stage.draws import Array
 from benchkit.stage.faults import Fault
-from benchkit.stage.readouts import Index, Matrix
+from benchkit.stage.readouts import Index, Mask, Matrix
 from benchkit.stage.unit_model import Joint, UnitModel
 
 MOST_STEPS = 12
@@ -54,15 +57,21 @@ class Data:
         Standard uncertainties.
     rails_v : array of shape (units, entries of the layout, 2), optional
         Where rails are held at their readings; see `UnitModel.at`.
+    event : array of bool of shape (units, readings), optional
+        What is an event and no number, so that it has no part in the determinant.
     """
 
     y: Matrix
     u: Matrix
     rails_v: Matrix | None = None
+    event: Mask | None = None
 
     def take(self, index: Index) -> Data:
         """Return some of the units."""
-        return Data(self.y[index], self.u[index], None if self.rails_v is None else self.rails_v[index])
+        return Data(
+            self.y[index], self.u[index], None if self.rails_v is None else self.rails_v[index],
+            None if self.event is None else self.event[index],
+        )  # fmt: skip
 
 
 @dataclass
@@ -133,12 +142,18 @@ def step_from(data: Data, z: Array, joint: Joint, most: Array) -> tuple[Array, A
     gram = scaled @ np.swapaxes(scaled, 1, 2)
     gram[:, range(gram.shape[1]), range(gram.shape[1])] += 1.0
     aim = (left + np.einsum("urk,ku->ur", joint.slope, z)) / u
-    lower = np.linalg.cholesky(gram)
     solved = np.linalg.solve(gram, aim[:, :, None])[:, :, 0]
     moved = np.einsum("urk,ur->ku", scaled, solved)
-    log_determinant = 2.0 * np.log(np.diagonal(lower, axis1=1, axis2=2)).sum(axis=1) + 2.0 * (
-        np.log(u) * np.isfinite(data.y)
-    ).sum(axis=1)
+    number = np.isfinite(data.y)
+    if data.event is not None:
+        number &= ~data.event
+        gram[data.event] = 0.0
+        np.swapaxes(gram, 1, 2)[data.event] = 0.0
+        gram[:, range(gram.shape[1]), range(gram.shape[1])] += data.event
+    lower = np.linalg.cholesky(gram)
+    log_determinant = 2.0 * np.log(np.diagonal(lower, axis1=1, axis2=2)).sum(axis=1) + 2.0 * (np.log(u) * number).sum(
+        axis=1
+    )
     return moved, (aim * solved).sum(axis=1), log_determinant
 
 

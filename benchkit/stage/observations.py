@@ -26,9 +26,13 @@ class Observation:
         In the point's unit; infinite for an overload.
     standard_uncertainty : float
         Of the reading, in the point's unit.
+    event : bool
+        Something that happened and no number that was measured, such as a rail that came into its limit: it is
+        explained or not, but how sharply says nothing for or against a hypothesis.
     """
 
     conditions: Conditions
     point: str
     value: float
     standard_uncertainty: float
+    event: bool = False

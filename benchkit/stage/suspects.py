@@ -206,6 +206,7 @@ def _data(lib: Library, sets: Sequence[Sequence[Observation]]) -> tuple[Data, Ma
     """
     shape = (len(sets), len(lib.model.readings))
     y, u, shown = np.empty(shape), np.empty(shape), np.empty(shape)
+    event = np.zeros(shape, np.bool_)
     column = {reading: number for number, reading in enumerate(lib.model.readings)}
     for row, observations in enumerate(sets):
         values: dict[int, list[Observation]] = {}
@@ -219,4 +220,5 @@ def _data(lib: Library, sets: Sequence[Sequence[Observation]]) -> tuple[Data, Ma
                 # A meter that went on to a higher range by itself: on the range of the model this is an overload.
                 y[row, number] = np.inf
             u[row, number] = max(several[-1].standard_uncertainty, 1e-12)
-    return Data(y, u), shown
+            event[row, number] = several[-1].event
+    return Data(y, u, event=event if event.any() else None), shown

@@ -107,8 +107,8 @@ class Report:
             )  # fmt: skip
         if not self.solved[:, 0].all():
             raise ModelError(
-                f"{lib.model.design.name}: a healthy unit has no solution under these conditions, so nothing can be weighed"
-                " against it", "an operating point of a healthy unit",
+                f"{lib.model.design.name}: a healthy unit has no solution under these conditions, so nothing can be"
+                " weighed against it", "an operating point of a healthy unit",
                 "Check rails, limit and trimmer of the readings",
             )  # fmt: skip
         self.fitted = fit_hypotheses(lib, data)

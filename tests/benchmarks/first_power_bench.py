@@ -72,7 +72,7 @@ class MemoryHands:
     def __getattr__(self, name: str) -> Callable[..., Any]:
         keys = {"probe": "point", "turn": "turns", "trimmer_to": "travel", "connect": "connected", "short": "shorted",
                 "advance": "seconds", "truth": "", "drive": "share", "slip": "seconds", "fault": "what",
-                "repair": ""}  # fmt: skip
+                "repair": "", "clear_protection": ""}  # fmt: skip
         if name not in keys:
             raise AttributeError(name)
 

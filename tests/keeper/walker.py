@@ -116,6 +116,9 @@ class Told:
     def repair(self) -> None:
         """Nobody repairs anything."""
 
+    def clear_protection(self) -> None:
+        """Nothing trips."""
+
     def advance(self, seconds: float) -> None:
         """Time passes by itself."""
 

@@ -101,4 +101,5 @@ def test_following_the_clock_lets_time_pass(tern: Design, monkeypatch: pytest.Mo
 def test_every_request_is_known_by_name() -> None:
     assert set(SIDE_REQUESTS) == {
         "probe", "turn", "trimmer to", "connect", "short", "drive", "slip", "fault", "repair", "advance", "truth",
+        "clear protection",
     }  # fmt: skip

@@ -83,6 +83,9 @@ class FakeBench:
     def repair(self) -> None:
         self.acts.append(("repair", None))
 
+    def clear_protection(self) -> None:
+        self.acts.append(("clear protection", None))
+
     def advance(self, seconds: float) -> None:
         self.seconds += seconds
 

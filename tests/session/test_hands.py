@@ -33,6 +33,7 @@ def test_real_hands_are_the_operators_own() -> None:
         ("drive at a third of full power", [("drive", pytest.approx(1.0 / 3.0))]),
         ("stop driving", [("drive", 0.0)]),
         ("take the dummy load off", [("drive", 0.0)]),
+        ("clear the protection", [("clear protection", None)]),
     ],
 )
 def test_acts_in_their_order(act: str, moves: list[tuple[str, object]]) -> None:
