@@ -133,6 +133,8 @@ class Moves:
             case "warm state":
                 return replace(state, phase="judging"), (CheckWarm(item=item.id, conditions=item.warm),)
             case "tell" | "confirm" | "text" | "hold" | "parts" | "choose":
+                if item.kind == "parts" and state.limited:
+                    state = replace(state, note=_limited_words(state))
                 return replace(state, phase="asking"), (Ask(item=item.id, question=questions.question_for(item)),)
             case "measure" | "discharge":
                 return self._enter_measure(state, item)
@@ -259,7 +261,7 @@ class Moves:
             return None
         state, asked = self._ask_suspects(replace(state, limited=reason, probes=""))
         after, actions = self._enter(state, self._number_of(item.limited_to))
-        return replace(after, note=f"{reason[:1].upper()}{reason[1:]}. {LEFT_TOO_HIGH}"), (*actions, *asked)
+        return replace(after, note=_limited_words(state)), (*actions, *asked)
 
     def _number_of(self, name: str) -> int:
         return next(number for number, one in enumerate(self.plan.items) if one.id == name)
@@ -358,6 +360,10 @@ class Moves:
         item, offer = self.host(state), self.offer(state)
         question = questions.offering(item, None if offer is None else offer[0][1])
         return replace(state, phase="offering", extra=""), (Ask(item=item.id, question=question),)
+
+
+def _limited_words(state: State) -> str:
+    return f"As it was found, {state.limited}. {LEFT_TOO_HIGH}"
 
 
 def tripped_reason(state: State) -> str:

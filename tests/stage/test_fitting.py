@@ -97,6 +97,25 @@ def test_one_step_of_a_linear_model_arrives() -> None:
     )
 
 
+def test_an_event_pulls_and_has_no_part_in_the_determinant() -> None:
+    rng = np.random.default_rng(9)
+    at, slope = rng.normal(0.0, 2.0, 3), rng.normal(0.0, 1.0, (3, 5))
+    toy = Toy(_linear(at, slope), [np.inf] * 3)
+    y, u = rng.normal(0.0, 2.0, (1, 3)), np.full((1, 3), 0.5)
+    z = rng.normal(0.0, 1.0, (5, 1))
+    data = Data(y, u, event=np.array([[False, True, False]]))
+    aim, promised, log_determinant = step_from(data, z, toy.at(z, [HEALTHY]), toy.most)
+    plain_aim, plain_promised, _ = step_from(Data(y, u), z, toy.at(z, [HEALTHY]), toy.most)
+    np.testing.assert_allclose(aim, plain_aim)
+    np.testing.assert_allclose(promised, plain_promised)
+    two = slope[[0, 2]]
+    expected = np.linalg.slogdet(two @ two.T + 0.25 * np.eye(2))[1]
+    assert float(log_determinant[0]) == pytest.approx(expected, rel=1e-4)
+    taken = data.take(np.array([0, 0]))
+    assert taken.event is not None
+    assert taken.event.tolist() == [[False, True, False]] * 2
+
+
 def _bent(z: Array) -> tuple[Matrix, Matrix]:
     """One reading, exp(2 z0) + z1: bends enough that full steps overshoot."""
     f = np.exp(2.0 * z[0]) + z[1]

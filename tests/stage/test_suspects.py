@@ -281,3 +281,21 @@ def test_what_was_read_is_not_probed_again(small: Case) -> None:
 def test_a_point_that_is_not_the_design_s(small: Case) -> None:
     with pytest.raises((BenchkitError, KeyError)):
         suspect(small.design, [observed(small.condition, "driver.resistor", 1.0)])
+
+
+def test_a_bias_that_was_left_too_far_up_is_no_fault() -> None:
+    """Both rails in their limit at the lowest rails, trimmer anywhere: the upper third of its travel does that."""
+    cold = Condition(positive_v=9.0, negative_v=-9.0, limit_a=0.195, trimmer="unknown")
+    nothing = Unpowered(point="ohm.output", trimmer="unknown")
+    said = suspect(
+        tern(),
+        [
+            Observation(conditions=(nothing,), point="ohm.output", value=9461.0, standard_uncertainty=1.0),
+            *(
+                Observation(conditions=(cold,), point=point, value=0.195, standard_uncertainty=0.017, event=True)
+                for point in ("rail+.current", "rail-.current")
+            ),
+        ],
+    )
+    assert said.suspects[0].fault == HEALTHY
+    assert said.suspects[0].probability > 0.9
