@@ -27,6 +27,15 @@ PEAK_S: Final = 0.6
 PEAK_SHARE: Final = 1.5
 """What was above this share of the target was no bias on its way up."""
 
+START_SHARE: Final = 1.2
+"""A reading that falls at once to no more than so many times where the trim began is back there (our own figure)."""
+
+ROSE_TO: Final = 1.5
+"""It has to have come so far above that before."""
+
+NEAR_LEAST: Final = 0.15
+"""Only a trim that began below this share of the target began at about least bias (our own figure)."""
+
 _FELL: Final = "the reading fell at once to about least bias while turning"
 
 
@@ -41,9 +50,11 @@ class Falls:
     def __init__(self, scale: Scale) -> None:
         self._scale = scale
         self._trusted: deque[tuple[float, float]] = deque()
+        self._start: float | None = None
 
     def trusted(self, t_s: float, value: float) -> None:
         """Take note of a reading that is known to be of the point, calm or not."""
+        self._start = value if self._start is None else self._start
         self._trusted.append((t_s, value))
         while self._trusted[0][0] < t_s - PEAK_S:
             self._trusted.popleft()
@@ -73,6 +84,20 @@ class Falls:
         if turned >= -LEAST_TURNS or slope is None:
             return turned >= -LEAST_TURNS
         return scale.even(value) - scale.even(before) < 3.0 * turned * slope
+
+    def to_the_start(self, before: float, value: float, turned: float, noise: float) -> bool:
+        """Whether a reading fell at once to where the trim began, at about least bias, and not to nothing.
+
+        There a wiper that opens leaves half of what there was, too much for `away`. Only for a fall that is known to
+        have been at once: a hand that turns all the way back does the same more slowly.
+        """
+        scale, start = self._scale, self._start
+        if start is None or turned < -LEAST_TURNS or before - value <= SEEN_NOISES * noise:
+            return False
+        least = scale.over(start)
+        if not 0.0 < least < NEAR_LEAST * (scale.target - scale.standing):
+            return False
+        return scale.over(before) >= ROSE_TO * least and least / START_SHARE <= scale.over(value) <= START_SHARE * least
 
     def current_tells(self, before: float) -> bool:
         """Whether there was so much bias that the supply's current tells when it goes."""

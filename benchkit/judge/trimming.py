@@ -303,7 +303,8 @@ class Adviser:
     def _look_back(self, t_s: float, value: float, rail: tuple[float, float] | None) -> None:
         """See whether a reading that stands again has fallen from one that was still on its way up, never calm."""
         peak, turned = self._falls.peak, self._known if self._known is not None else self._told
-        if peak is None or not self._fell_away(peak[1], value, turned):
+        back = peak is not None and self._falls.to_the_start(peak[1], value, turned, self._noise)
+        if peak is None or not (back or self._fell_away(peak[1], value, turned)):
             return
         if self._calm is not None and self._fell_away(self._calm[1], value, turned):
             return  # it is seen when the two are compared

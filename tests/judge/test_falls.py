@@ -85,3 +85,38 @@ def test_a_wiper_that_opens_while_the_bias_is_on_its_way_up(
     bench.value, bench.broken = before_v, False
     bench.rail_a = None if line is None else rail_at(before_v)
     assert bench.look(4.0).mood == "turn", "it is trimmed on once it is back"
+
+
+@pytest.mark.parametrize(
+    ("began", "before", "value", "turned", "there"),
+    [
+        (0.0010, 0.0021, 0.00097, 0.5, True),  # half of it is gone, and it is where it began
+        (0.0010, 0.0021, 0.00110, 0.0, True),  # warmer meanwhile
+        (0.0010, 0.0021, 0.0015, 0.5, False),  # not all the way back
+        (0.0010, 0.0021, 0.00001, 0.5, False),  # to nothing: a probe in the air
+        (0.0010, 0.0012, 0.00097, 0.5, False),  # it had hardly come from there
+        (0.0010, 0.0021, 0.00097, -0.5, False),  # turned back
+        (0.0080, 0.0160, 0.0080, 0.5, False),  # a trim that began with bias
+    ],
+)
+def test_a_fall_to_where_the_trim_began(
+    began: float, before: float, value: float, turned: float, *, there: bool
+) -> None:
+    falls = Falls(Scale(target=0.022, knee=KNEE_V, floor=2e-6))
+    assert not falls.to_the_start(before, value, turned, 2e-6), "nobody knows yet where it began"
+    falls.trusted(0.0, began)
+    falls.trusted(0.1, before)
+    assert falls.to_the_start(before, value, turned, 2e-6) is there
+
+
+def test_a_wiper_that_opens_next_to_least_bias_leaves_half_of_what_there_was() -> None:
+    bench = Bench(value=0.001, rail_a=None, adviser=adviser(line=None))
+    bench.look(0.3)
+    while bench.value < 0.0021:
+        bench.turn(0.02, seconds=0.1)
+    bench.value, bench.broken = 0.00097, True
+    since = len(bench.seen)
+    advice = bench.look(6.0)
+    assert advice.mood == "no response", advice
+    assert "least bias" in advice.words
+    assert not any((one.turns or 0.0) > 0.0 for one in bench.seen[since:])
