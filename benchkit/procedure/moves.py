@@ -34,7 +34,7 @@ from benchkit.procedure.state import State
 
 Step = tuple[State, tuple[Action, ...]]
 
-LEFT_TOO_HIGH: Final = "The bias was left too high, or a part is gone: the walk goes on from least bias."
+LEFT_TOO_HIGH: Final = "its bias was left too high, or a part is gone. The walk goes on from least bias."
 
 MOST_EXTRAS: Final = 3
 """Extra readings that are offered at one item."""
@@ -363,7 +363,7 @@ class Moves:
 
 
 def _limited_words(state: State) -> str:
-    return f"As it was found, {state.limited}. {LEFT_TOO_HIGH}"
+    return f"As found, {state.limited}: {LEFT_TOO_HIGH}"
 
 
 def tripped_reason(state: State) -> str:

@@ -114,7 +114,7 @@ class Painter:
             busy=moment.busy,
             busy_share=moment.busy_share,
             remaining_s=moment.remaining_s,
-            message=_message(state, moment.message) or _remark(self._suspects, self._walk.host(state)),
+            message=_message(state, moment.message, _remark(self._suspects, self._walk.host(state))),
             kept=state.count,
             verdict=None if state.closed is None else state.closed.verdict,
             stopped=state.stopped,
@@ -254,7 +254,7 @@ def _next_step(walk: Walk, state: State) -> str:
     return ""
 
 
-def _message(state: State, message: str) -> str:
+def _message(state: State, message: str, remark: str) -> str:
     """Join what there is to say in a sentence or two; why a walk is on its way out is said as long as it is."""
     stop = ""
     if state.stopped and state.closed is None:
@@ -262,14 +262,19 @@ def _message(state: State, message: str) -> str:
     told = state.stopped[:1].upper() + state.stopped[1:]
     note = "" if state.note.rstrip(".") == state.stopped.rstrip(".") else state.note
     note = note.removeprefix(f"{told}. ") if stop else note
-    return " ".join(dict.fromkeys(words for words in (stop, note, message) if words))
+    said = " ".join(dict.fromkeys(words for words in (stop, note, message) if words))
+    return f"{said} {remark}".strip() if state.limited and not state.stopped else said or remark
 
 
 def _remark(suspects: SuspectsView | None, host: Item) -> str:
-    """Say in one line what was asked about an earlier item: its answer may come when the walk has gone on."""
+    """Say in one line what was asked about an earlier item: its answer may come when the walk has gone on.
+
+    That nothing is suspected is said where it counts: at the question which parts were replaced.
+    """
     if suspects is None or suspects.item == host.id:
         return ""
-    return suspects.heading if suspects.working or suspects.accuses else ""
+    wanted = suspects.working or suspects.accuses or host.kind == "parts"
+    return suspects.heading if wanted else ""
 
 
 def _sections(plan: Plan, state: State) -> tuple[SectionView, ...]:
