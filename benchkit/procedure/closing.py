@@ -26,8 +26,7 @@ HEALTHY: Final = "healthy"
 
 def closed_event(plan: Plan, state: State) -> Closed:
     """Return the last line of a walk that has come to its end."""
-    found = {item.id for item in plan.items if item.marked == "found"} & state.outdated
-    found |= {item.id for item in plan.items if item.limited_to and state.limited}
+    found = _found_and_gone(plan, state)
     counted = [result for result in state.results if result.item not in found]
     rare = _rare_in_a_good_unit(state, counted)
     verdict = worst(["pass" if result in rare else result.verdict for result in counted])
@@ -47,6 +46,18 @@ def closed_event(plan: Plan, state: State) -> Closed:
         verdict, why = "undecided", f"Every reading passed, but together they fit {first} better than a good unit."
     status = state.stop_status or (0 if verdict == "pass" else 1)
     return Closed(count=state.count, verdict=verdict, stopped=state.stopped, exit_status=status, why=why)
+
+
+def _found_and_gone(plan: Plan, state: State) -> set[str]:
+    """Items that tell how the unit was found, and no longer how it is; the extra readings at them too."""
+    hosts = {item.id: item for item in plan.items}
+    own = [(item, item) for item in plan.items]
+    extra = [(item, hosts[item.host]) for item in state.extras if item.host in hosts]
+    return {
+        item.id
+        for item, host in (*own, *extra)
+        if (host.marked == "found" and item.id in state.outdated) or (host.limited_to and state.limited)
+    }
 
 
 def suspects_a_fault(state: State) -> bool:

@@ -300,6 +300,32 @@ def test_a_failure_that_was_found_counts_until_it_is_repaired(parts: tuple[str, 
     assert (drive.state.suspicion is None) == bool(parts[0])
 
 
+@pytest.mark.parametrize(("parts", "verdict"), [(NOTHING, "fail"), (RESISTOR, "pass")])
+def test_an_extra_reading_that_was_found_counts_no_longer_than_its_item(parts: tuple[str, bool], verdict: str) -> None:
+    name = "found.drops.emitter.lower.1"
+    drive = begun(repair()).until(name)
+    while not isinstance(drive.open, Read):
+        drive.well()
+    drive.tell(reading(item_of(repair(), name), 1e6))
+    drive.well()
+    asked = drive.newest(Suspect)
+    assert isinstance(asked, Suspect)
+    drive.tell(suspected(asked, "emitter.lower.1: open", probes=["output.upper.1.vbe"]))
+    drive.tell(Decided(item=name, choice="probe"))
+    while not isinstance(drive.open, Read):
+        drive.well()
+    drive.tell(reading(drive.walk.item(drive.state), -1e9))
+    drive.well()
+    assert [result.verdict for result in drive.state.results[-2:]] == ["fail", "fail"]
+    asked = drive.newest(Suspect)
+    assert isinstance(asked, Suspect)
+    drive.tell(suspected(asked, "healthy"))
+    drive.tell(Decided(item=name, choice="go on", reason="found so"))
+    drive.until("repair.replaced")
+    drive.tell(PartsReplaced(item="repair.replaced", parts=parts[0], semiconductors=parts[1]))
+    assert drive.to_end().verdict == verdict
+
+
 @pytest.mark.parametrize(
     ("event", "said"),
     [
