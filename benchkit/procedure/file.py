@@ -218,11 +218,20 @@ class Section(_Strict):
         if "optional" in self.model_fields_set and not self.optional.strip():
             raise ValueError("'optional' is empty; it has to hold the question whether the section is done")
         check_placeholders(self.optional)
-        if self.at_limit is not None and not any(
-            step.name == self.at_limit and step.kind == "off" for step in self.step
-        ):
-            raise ValueError(f"at_limit is {self.at_limit!r}; it has to name a step of the kind 'off' in its section")
+        if self.at_limit is not None:
+            self._leads_to_off(self.at_limit)
         return self
+
+    def _leads_to_off(self, name: str) -> None:
+        place = next((n for n, step in enumerate(self.step) if step.name == name and step.kind == "off"), None)
+        if place is None:
+            raise ValueError(f"at_limit is {name!r}; it has to name a step of the kind 'off' in its section")
+        if not any(step.kind == "supply" for step in self.step[:place]):
+            raise ValueError(f"at_limit is {name!r}, with no step of the kind 'supply' before it in its section")
+        if not any(step.kind == "discharge" for step in self.step[place:]):
+            raise ValueError(
+                f"at_limit is {name!r}, with no step of the kind 'discharge' behind it in its section: hands go in next"
+            )
 
 
 class Head(_Strict):

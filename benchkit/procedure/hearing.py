@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import replace
+from typing import Final
 
 from benchkit import quantities
 from benchkit.events import Judged, OutputOff, SupplyState, Tripped
@@ -56,13 +57,48 @@ def never_on_by_hand(state: State) -> bool:
 
 
 def at_a_limit(event: Tripped) -> bool:
-    """Whether a trip means that the unit drew more than the supply was to give it."""
-    return drew_its_limit(event.state) and event.what.startswith(("rail", "positive protection", "negative protection"))
+    """Whether a trip means that the unit drew more than the supply was to give it.
+
+    A protection that has switched an output off doesn't say why.  It is taken for one of the current only where the
+    rails are below its voltage, and another rail stands at the limit.
+    """
+    seen = event.state
+    if seen is None or seen.limit_a is None:
+        return False
+    if event.what in ("rail+", "rail-"):
+        held = seen.positive_in_limit if event.what == "rail+" else seen.negative_in_limit
+        return held and event.limit == seen.limit_a
+    if event.what not in ("positive protection", "negative protection"):
+        return False
+    pairs = (
+        (seen.positive_v, seen.protection_positive_v), (seen.negative_v, seen.protection_negative_v)
+    )  # fmt: skip
+    below = all(volts is not None and (level is None or abs(volts) < 0.97 * level) for volts, level in pairs)
+    amps = max((abs(one) for one in (seen.positive_a, seen.negative_a) if one is not None), default=0.0)
+    return below and amps >= AT_LIMIT * seen.limit_a
+
+
+AT_LIMIT: Final = 0.9
+"""A rail that carries so much of its limit stands at it, though its supply may not say so; our own figure."""
 
 
 def drew_its_limit(seen: SupplyState | None) -> bool:
-    """Whether a supply holds a rail by its limit, or has switched one off by its own protection."""
-    return seen is not None and bool(seen.positive_in_limit or seen.negative_in_limit or seen.tripped)
+    """Whether a supply that has been set holds a rail by its limit."""
+    return seen is not None and not seen.tripped and (seen.positive_in_limit or seen.negative_in_limit)
+
+
+def limit_seen(state: State, item: Item, supply: SupplyState) -> State:
+    """Remember a limit that a supply came into as it was set, like one that has tripped."""
+    if item.kind != "supply" or not drew_its_limit(supply):
+        return state
+    seen = replace(
+        supply, limit_a=item.limit_a, set_positive_v=item.positive_v, set_negative_v=item.negative_v
+    )  # fmt: skip
+    rail = "rail+" if supply.positive_in_limit else "rail-"
+    event = Tripped(
+        reason=f"{rail} stands in its limit", what=rail, value=supply.positive_a, limit=item.limit_a, state=seen
+    )
+    return replace(state, tripped=event, tripped_at=item.id)
 
 
 def lacks_protection(found: SupplyState) -> bool:
@@ -98,7 +134,8 @@ def rails_problem(item: Item, found: SupplyState) -> str:
         rail for rail, in_limit in (("rail+", found.positive_in_limit), ("rail-", found.negative_in_limit)) if in_limit
     ]
     if limiting:
-        return f"{' and '.join(limiting)} stands in the current limit of {item.limit_a:.3g} A."
+        stand = "stands" if len(limiting) == 1 else "stand"
+        return f"{' and '.join(limiting)} {stand} in the current limit of {item.limit_a:.3g} A."
     for rail, wanted_v, found_v in (
         ("rail+", item.positive_v, found.positive_v),
         ("rail-", item.negative_v, found.negative_v),

@@ -34,7 +34,7 @@ from benchkit.procedure.state import State
 
 Step = tuple[State, tuple[Action, ...]]
 
-LEFT_TOO_HIGH: Final = "its bias was left too high, or a part is gone. The walk goes on from least bias."
+LEFT_TOO_HIGH: Final = "bias left too high, or a part gone. On from least bias."
 
 MOST_EXTRAS: Final = 3
 """Extra readings that are offered at one item."""
@@ -119,7 +119,8 @@ class Moves:
 
     def _enter(self, state: State, index: int) -> Step:
         index = self._done_from(state, index)
-        state = replace(state, index=index, note="", missing="", extra="")
+        note = _limited_words(state) if self._just_limited(state, index) else ""
+        state = replace(state, index=index, note=note, missing="", extra="")
         if index >= len(self.plan):
             return self._close(state)
         if self._offers_on_the_way_out(state):
@@ -133,8 +134,6 @@ class Moves:
             case "warm state":
                 return replace(state, phase="judging"), (CheckWarm(item=item.id, conditions=item.warm),)
             case "tell" | "confirm" | "text" | "hold" | "parts" | "choose":
-                if item.kind == "parts" and state.limited:
-                    state = replace(state, note=_limited_words(state))
                 return replace(state, phase="asking"), (Ask(item=item.id, question=questions.question_for(item)),)
             case "measure" | "discharge":
                 return self._enter_measure(state, item)
@@ -259,9 +258,20 @@ class Moves:
         item = self.host(state)
         if not item.limited_to or state.limited:
             return None
-        state, asked = self._ask_suspects(replace(state, limited=reason, probes=""))
+        state = replace(state, limited=reason, probes="")
+        asked: tuple[Action, ...] = ()
+        if state.suspecting != state.count:
+            state, asked = self._ask_suspects(state)
         after, actions = self._enter(state, self._number_of(item.limited_to))
-        return replace(after, note=_limited_words(state)), (*actions, *asked)
+        return after, (*actions, *asked)
+
+    def _just_limited(self, state: State, index: int) -> bool:
+        """Whether the walk is between a limit that was reached and the question which parts were replaced."""
+        if not state.limited or state.stopped:
+            return False
+        first = max(number for number, item in enumerate(self.plan.items) if item.limited_to) + 1
+        behind = self.plan.items[first:index]
+        return first <= index and not any(item.kind == "parts" for item in behind)
 
     def _number_of(self, name: str) -> int:
         return next(number for number, one in enumerate(self.plan.items) if one.id == name)

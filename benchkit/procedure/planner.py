@@ -338,9 +338,9 @@ class Planner(SupplyItems, BiasItems):
         return number
 
     def words(self, given: Mapping[str, Any]) -> dict[str, str]:
-        """What the words in braces stand for at this place of the plan; without power the limit is the checked one."""
-        positive_v = float(given.get("positive_v", self.positive_v or self.lowest[0]))
-        negative_v = float(given.get("negative_v", self.negative_v or self.lowest[1]))
+        """What the words in braces stand for at this place of the plan; without power, what power begins with."""
+        rails = (self.positive_v, self.negative_v) if self.on else self.lowest
+        positive_v, negative_v = float(given.get("positive_v", rails[0])), float(given.get("negative_v", rails[1]))
         now_a = self.limit_a if self.on else 0.0
         limit_a = float(given.get("limit_a", now_a)) or self.checked_a or self.least_bias_limit_a()
         return words_of(self.design, positive_v, negative_v, limit_a)

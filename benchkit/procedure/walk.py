@@ -49,6 +49,7 @@ from benchkit.procedure.hearing import (
     heard,
     lacks_protection,
     limit_judged,
+    limit_seen,
     off_by_word,
     off_heard,
     rails_judged,
@@ -234,6 +235,7 @@ class Walk(Securing, Modelling):
     def _supply_set(self, state: State, event: SupplySet) -> Step:
         item = self.item(state)
         state = heard(state, event.state)
+        state = limit_seen(state, item, event.state)
         judge = limit_judged if item.kind == "limit check" else rails_judged
         by_hand = switched_by_hand(state)
         judged = judge(item, event.state, by_hand=by_hand)

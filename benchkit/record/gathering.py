@@ -113,6 +113,10 @@ class Gathering:
                 self.narrowings.append(event)
             case Suspected():
                 self.suspicions.append(Suspicion(seq=seq, at=at, where=self._title(item), answer=event))
+                # a trip names no item; what is asked because of it does
+                self.incidents = [
+                    replace(one, where=self._title(item)) if one.seq == event.after else one for one in self.incidents
+                ]
             case Decided():
                 self._decide(seq, at, event)
             case Answered():

@@ -84,7 +84,8 @@ def settle(
 
 def _moved(at: Array, lack: Array, slope: Array) -> Array:
     """Temperatures after a step of each unit."""
-    stable = np.linalg.det(slope) > LEAST_DETERMINANT
+    with np.errstate(over="ignore"):  # beyond every number is stable too
+        stable = np.linalg.det(slope) > LEAST_DETERMINANT
     matrix = np.where(stable[:, None, None], slope, np.eye(len(at)))
     step = np.linalg.solve(matrix, lack.T[:, :, None])[:, :, 0].T
     longest = np.abs(step).max(axis=0)

@@ -74,10 +74,10 @@ class Library:
         member = np.tile(np.repeat(np.arange(members), many), sets)
         nominal, drawn = np.flatnonzero(member == 0), np.flatnonzero(member > 0)
 
-        def solved(rows: Index, start: Joint | None) -> Joint:
+        def solved(rows: Index, start: Joint | None, effort: Effort = "borrow") -> Joint:
             own_v, kin = None if rails_v is None else rails_v[which_set[rows]], which_set[rows]
             faults = [self.faults[k] for k in self.whose[rows]]
-            return self.model.at(self.z[:, rows], faults, start, rails_v=own_v, kin=kin)
+            return self.model.at(self.z[:, rows], faults, start, effort, rails_v=own_v, kin=kin)
 
         first = solved(nominal, None)
         again = np.flatnonzero(~first.good)
@@ -85,6 +85,9 @@ class Library:
         near = (which_set * many + self.whose)[drawn]
         rest = solved(np.concatenate([drawn, nominal[again]]), first.take(np.concatenate([near, again])))
         first = _replaced(first, again, rest.take(np.arange(len(drawn), len(drawn) + len(again))))
+        left = np.flatnonzero(~first.good)
+        if len(left):  # a hypothesis without a unit is no hypothesis: the whole recipe for those few
+            first = _replaced(first, left, solved(nominal[left], None, "full"))
         order = np.argsort(np.concatenate([nominal, drawn]))
         self.joint = joined(first, rest.take(np.arange(len(drawn)))).take(order)
 

@@ -19,9 +19,10 @@ from benchkit.events import (
     Tripped,
 )
 from benchkit.procedure import knowledge
-from benchkit.procedure.actions import Read, SetSupply, Suspect, SwitchOff
+from benchkit.procedure.actions import Read, SetSupply, Suspect, SwitchOff, Write
 from benchkit.procedure.file import load_procedure, parse_procedure
 from benchkit.procedure.plan import make_plan
+from benchkit.procedure.sizing import rails_text
 from benchkit.procedure.walk import Walk
 from benchkit.shipped import find_procedure
 from benchkit.stage.forcing import LIMIT_SHARE
@@ -70,7 +71,10 @@ def test_a_rail_in_its_limit_leads_to_off_and_on_from_least_bias() -> None:
     assert actions[0].reason == f"tripped: {HELD}"
     assert not drive.state.stopped
     drive.tell(off())
+    drive.until("found.rails-low.rails")
+    assert HELD in drive.state.note
     drive.until("repair.replaced")
+    assert HELD in drive.state.note
     assert "least bias" in drive.state.note
     assert all(f"found.rails-low.{rail}" in kept(drive) for rail in ("rail+", "rail-", "rails")), "seen low first"
     drive.well()
@@ -140,8 +144,26 @@ def test_later_sections_end_at_their_limit() -> None:
             reason="rail+ stands at 12 V, beyond 11 V", what="rail+", value=12.0, limit=11.0,
             state=SupplyState(output_on=True, positive_v=12.0, negative_v=-9.0),
         ),
+        Tripped(
+            reason="rail+ stands at 12 V, beyond 11 V", what="rail+", value=12.0, limit=11.0,
+            state=SupplyState(output_on=True, positive_v=12.0, negative_v=-9.0, limit_a=0.2, negative_in_limit=True),
+        ),
+        Tripped(
+            reason="its own protection", what="positive protection",
+            state=SupplyState(
+                output_on=None, positive_v=11.2, negative_v=-9.0, positive_a=0.0, negative_a=0.199, limit_a=0.2,
+                positive_tripped=True, protection_positive_v=10.9, protection_negative_v=10.9,
+            ),
+        ),
+        Tripped(
+            reason="its own protection", what="positive protection",
+            state=SupplyState(
+                output_on=None, positive_v=9.0, negative_v=-9.0, positive_a=0.0, negative_a=0.02, limit_a=0.2,
+                positive_tripped=True, protection_positive_v=10.9, protection_negative_v=10.9,
+            ),
+        ),
     ],
-    ids=["runaway", "by itself", "too high"],
+    ids=["runaway", "by itself", "too high", "too high beside a limit", "over-voltage", "with little current"],
 )  # fmt: skip
 def test_any_other_trip_ends_the_walk(event: Tripped) -> None:
     drive = begun(repair()).until(AT_DROPS)
@@ -154,9 +176,12 @@ def test_a_protection_that_tripped_is_cleared_by_a_person(*, tripped_itself: boo
     drive = begun(repair()).until(AT_DROPS)
     supply = drive.state.supply
     assert supply is not None
-    gone = replace(supply, output_on=None, positive_tripped=tripped_itself, positive_in_limit=not tripped_itself)
+    gone = replace(
+        supply, output_on=None, positive_tripped=tripped_itself, positive_in_limit=not tripped_itself, positive_a=0.0,
+        negative_a=supply.limit_a, protection_positive_v=1.1 * (supply.positive_v or 0.0),
+    )  # fmt: skip
     what = "positive protection" if tripped_itself else "rail+"
-    drive.tell(Tripped(reason="off by its own protection", what=what, state=gone))
+    drive.tell(Tripped(reason="off by its own protection", what=what, limit=supply.limit_a, state=gone))
     drive.tell(off("tripped: off by its own protection", state=replace(OFF, positive_tripped=tripped_itself)))
     drive.until("careful.on")
     assert ("careful.clear" in kept(drive)) is tripped_itself
@@ -169,7 +194,9 @@ def test_a_supply_set_by_hand_that_stands_in_its_limit_leads_there_too() -> None
     drive.until("found.on")
     assert isinstance(drive.open, SetSupply)
     drive.tell(SupplySet(item="found.on", state=replace(supply_state(drive.open), positive_in_limit=True)))
-    drive.well()
+    actions = drive.tell(drive.open.event) if isinstance(drive.open, Write) else ()
+    assert sum(isinstance(action, Suspect) for action in actions) == 1
+    assert any(one.event for one in asked(drive).known), "the limit that was typed is a reading too"
     assert drive.walk.item(drive.state).id == "found.off"
     assert drive.state.limited
     drive.tell(OutputOff(reason="x", confirmed=False, how="benchkit has no hand on this supply.", state=None))
@@ -260,15 +287,33 @@ def test_a_replay_ends_where_the_walk_was() -> None:
     [
         ('at_limit = "off"', 'at_limit = "on"', "has to name a step of the kind 'off'"),
         ('at_limit = "off"', 'at_limit = "nowhere"', "has to name a step of the kind 'off'"),
+        ('at_limit = "off"', 'at_limit = "first"', "no step of the kind 'supply' before it"),
         ('only_if = "from least bias"', 'only_if = "parts replaced"', "proves the trimmer's end"),
         ('only_if = "from least bias"', 'only_if = "no parts replaced"', "after parts have been replaced"),
     ],
 )
 def test_a_procedure_without_the_way_from_least_bias_is_refused(old: str, new: str, said: str) -> None:
     assert TEXT.count(old) == 1
+    ready = '[[section.step]]\nname = "ready"\n'
+    off_first = f'[[section.step]]\nname = "first"\nkind = "off"\ntitle = "Off"\n\n{ready}'
+    procedure = TEXT.replace(ready, off_first, 1).replace(old, new)
     with pytest.raises(FileError) as caught:
-        make_plan(parse_procedure(TEXT.replace(old, new), "own.toml"), breadboard())
+        make_plan(parse_procedure(procedure, "own.toml"), breadboard())
     assert said in str(caught.value)
+
+
+def test_hands_go_in_only_behind_rails_that_were_seen_low() -> None:
+    low = TEXT.index('[[section.step]]\nname = "rails-low"')
+    repair_at = TEXT.index("# ---", low)
+    with pytest.raises(FileError, match="no step of the kind 'discharge' behind it"):
+        parse_procedure(TEXT[:low] + TEXT[repair_at:], "own.toml")
+
+
+def test_without_power_the_words_are_those_that_power_begins_with() -> None:
+    plan = make_plan(load_procedure(find_procedure("re-bias")), breadboard())
+    ready = next(item for item in plan.items if item.id == "careful.ready")
+    on = next(item for item in plan.items if item.id == "careful.on")
+    assert rails_text(on.positive_v, on.negative_v) in ready.do
 
 
 def test_without_such_a_way_it_ends_as_before() -> None:

@@ -443,7 +443,7 @@ GOOD = SupplyState(output_on=True, positive_v=10.0, negative_v=-10.0, positive_a
         ({"output_on": False}, "its output is off"),
         ({"output_on": None}, "nothing about its output"),
         ({"positive_in_limit": True}, "rail+ stands in the current limit"),
-        ({"positive_in_limit": True, "negative_in_limit": True}, "rail+ and rail- stands"),
+        ({"positive_in_limit": True, "negative_in_limit": True}, "rail+ and rail- stand in"),
         ({"positive_v": 9.2}, "rail+ was set to 10 V and stands at 9.2 V"),
         ({"negative_v": 10.0}, "rail- was set to -10 V and stands at 10 V"),
         ({"negative_v": None}, "no voltage for rail-"),
