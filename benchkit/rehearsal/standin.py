@@ -102,6 +102,7 @@ class StandIn:
         self._replaced_before = replaced_before
         self._view: View | None = None
         self._told = 0
+        self._message = ""
         self._suspects: SuspectsView | None = None
 
     def show(self, view: View) -> None:
@@ -111,6 +112,9 @@ class StandIn:
         if suspects is not None and not suspects.working and suspects != self._suspects:
             self._suspects = suspects
             self._say(f"          {suspects.heading}")
+        if view.message and view.message != self._message:
+            self._say(f"!         {view.message}")
+        self._message = view.message
         for result in view.results[self._told :] if len(view.results) > self._told else ():
             self._say(f"{result.verdict:9s} {result.title}  {result.value_text}")
         self._told = max(self._told, len(view.results))

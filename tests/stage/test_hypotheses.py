@@ -14,6 +14,7 @@ from benchkit.stage.forcing import Held
 from benchkit.stage.hypotheses import Library, fit_hypotheses, joined, library
 from benchkit.stage.observations import Conditions
 from benchkit.stage.unit_model import layout_of
+from tests.stage.catalogue import few
 from tests.stage.designs import breadboard
 from tests.stage.unit_readings import FLOOR, POINTS, SHARE, fault_of
 
@@ -152,3 +153,11 @@ def test_readings_that_nothing_explains_leave_finite_numbers(lib: Library) -> No
     found = fit_hypotheses(lib, Data(y, data.u))
     assert not np.isnan(found.log_posterior).any()
     assert (found.log_posterior.max(axis=1) == 0.0).all()
+
+
+def test_a_fault_that_is_hard_to_solve_is_a_hypothesis_too() -> None:
+    """With the spreader shorted, or without a feed, nothing conducts: quick ways find no state of such a stage."""
+    design = few()["double resistor servo upper tied 1 stopper one supply"]
+    condition = Condition(positive_v=60.0, negative_v=0.0, limit_a=0.18, trimmer="unknown")
+    lib = Library(design, layout_of([((condition,), "output")]))
+    assert lib.joint.good.reshape(-1, len(lib.faults)).any(axis=0).all()
