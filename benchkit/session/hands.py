@@ -85,10 +85,17 @@ class Hands:
         elif act == "take the dummy load off":
             await self._do(lambda: bench.drive(0.0))
 
-    async def repair(self) -> None:
-        """Put new parts in where some were said to be replaced; the simulated unit gets those that it needs."""
+    async def repair(self, named: str) -> None:
+        """Put new parts in where some were said to be replaced.
+
+        The simulated unit is well again once everything that is faulty has been named; whatever else was replaced
+        changes nothing.
+        """
         bench = self._simulated
-        if bench is not None:
+        if bench is None:
+            return
+        faulty = (await self._do(bench.truth)).get("faulty", ())
+        if all(part in named for part in faulty):
             await self._do(bench.repair)
 
     async def probe(self, point: str | None) -> None:

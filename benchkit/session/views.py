@@ -114,7 +114,9 @@ class Painter:
             busy=moment.busy,
             busy_share=moment.busy_share,
             remaining_s=moment.remaining_s,
-            message=_message(state, moment.message, _remark(self._suspects, self._walk.host(state))),
+            message=_message(
+                state, moment.message, _remark(self._suspects, self._walk.host(state), limited=bool(state.limited))
+            ),
             kept=state.count,
             verdict=None if state.closed is None else state.closed.verdict,
             stopped=state.stopped,
@@ -266,15 +268,17 @@ def _message(state: State, message: str, remark: str) -> str:
     return f"{said} {remark}".strip() if state.limited and not state.stopped else said or remark
 
 
-def _remark(suspects: SuspectsView | None, host: Item) -> str:
+def _remark(suspects: SuspectsView | None, host: Item, *, limited: bool) -> str:
     """Say in one line what was asked about an earlier item: its answer may come when the walk has gone on.
 
-    That nothing is suspected is said where it counts: at the question which parts were replaced.
+    After a limit that was reached it is said too, at the question about parts, that nothing is suspected.
     """
     if suspects is None or suspects.item == host.id:
         return ""
-    wanted = suspects.working or suspects.accuses or host.kind == "parts"
-    return suspects.heading if wanted else ""
+    asks = limited and host.kind == "parts"
+    if asks and not (suspects.working or suspects.accuses) and suspects.suspects:
+        return "A good unit does the same with its trimmer far up; a fault may still hide behind that."
+    return suspects.heading if suspects.working or suspects.accuses else ""
 
 
 def _sections(plan: Plan, state: State) -> tuple[SectionView, ...]:

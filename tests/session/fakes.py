@@ -60,6 +60,7 @@ class FakeBench:
         self.acts: list[tuple[str, Any]] = []
         self.turned = 0.0
         self.seconds = 0.0
+        self.faulty: list[str] = []
 
     def probe(self, point: str | None) -> None:
         self.point = point
@@ -90,7 +91,7 @@ class FakeBench:
         self.seconds += seconds
 
     def truth(self) -> dict[str, Any]:
-        return {"highest_rail_v": 10.0, "plant": ""}
+        return {"highest_rail_v": 10.0, "plant": "", "faulty": self.faulty}
 
 
 class FakeKeeper:

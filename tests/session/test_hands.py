@@ -16,7 +16,7 @@ def test_real_hands_are_the_operators_own() -> None:
         await hands.probe("output")
         await hands.turn(1.0)
         await hands.advance(5.0)
-        await hands.repair()
+        await hands.repair("output.upper.1")
         assert await hands.truth() == {}
 
     asyncio.run(whole())
@@ -56,7 +56,7 @@ def test_the_rest_goes_through() -> None:
         assert hands.simulated
         await hands.probe("output")
         await hands.turn(-0.25)
-        await hands.repair()
+        await hands.repair("output.upper.1")
         await hands.advance(2.0)
         assert (await hands.truth())["highest_rail_v"] == 10.0
 
@@ -72,3 +72,14 @@ def test_the_note_at_the_end_names_what_burnt() -> None:
     assert note.figures == {"energy_j": 2.0}
     assert end_note({"burnt": []}).broken == ()
     assert end_note({}).broken is None, "a bench that says nothing of it"
+
+
+@pytest.mark.parametrize(
+    ("named", "well"),
+    [("output.upper.1", False), ("driver.resistor and output.upper.1", True), ("the usual ones", False)],
+)
+def test_only_what_was_named_is_replaced(named: str, *, well: bool) -> None:
+    bench = FakeBench()
+    bench.faulty = ["driver.resistor", "output.upper.1"]
+    asyncio.run(Hands(bench).repair(named))
+    assert (("repair", None) in bench.acts) is well
