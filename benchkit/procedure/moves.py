@@ -29,12 +29,11 @@ from benchkit.procedure.actions import (
 )
 from benchkit.procedure.closing import closed_event, suspects_a_fault
 from benchkit.procedure.items import RAIL_POINTS, Item, Joined, Plan, condition_key
+from benchkit.procedure.limited import just_limited, limited_words, off_reason
 from benchkit.procedure.sizing import protection_v
 from benchkit.procedure.state import State
 
 Step = tuple[State, tuple[Action, ...]]
-
-LEFT_TOO_HIGH: Final = "bias left too high, or a part gone. On from least bias."
 
 MOST_EXTRAS: Final = 3
 """Extra readings that are offered at one item."""
@@ -119,7 +118,7 @@ class Moves:
 
     def _enter(self, state: State, index: int) -> Step:
         index = self._done_from(state, index)
-        note = _limited_words(state) if self._just_limited(state, index) else ""
+        note = limited_words(state) if just_limited(self.plan, state, index) else ""
         state = replace(state, index=index, note=note, missing="", extra="")
         if index >= len(self.plan):
             return self._close(state)
@@ -184,8 +183,7 @@ class Moves:
                     Ask(item=item.id, question=questions.lamp_off(item)),
                 )
             case "off":
-                at_limit = any(one.limited_to == item.id for one in self.plan.items)
-                reason = state.stopped or (tripped_reason(state) if at_limit else "") or "a step of the procedure"
+                reason = off_reason(self.plan, state, item)
                 return replace(state, phase="switching off"), (SwitchOff(item=item.id, reason=reason),)
 
     def _done_from(self, state: State, index: int) -> int:
@@ -264,14 +262,6 @@ class Moves:
             state, asked = self._ask_suspects(state)
         after, actions = self._enter(state, self._number_of(item.limited_to))
         return after, (*actions, *asked)
-
-    def _just_limited(self, state: State, index: int) -> bool:
-        """Whether the walk is between a limit that was reached and the question which parts were replaced."""
-        if not state.limited or state.stopped:
-            return False
-        first = max(number for number, item in enumerate(self.plan.items) if item.limited_to) + 1
-        behind = self.plan.items[first:index]
-        return first <= index and not any(item.kind == "parts" for item in behind)
 
     def _number_of(self, name: str) -> int:
         return next(number for number, one in enumerate(self.plan.items) if one.id == name)
@@ -370,15 +360,6 @@ class Moves:
         item, offer = self.host(state), self.offer(state)
         question = questions.offering(item, None if offer is None else offer[0][1])
         return replace(state, phase="offering", extra=""), (Ask(item=item.id, question=question),)
-
-
-def _limited_words(state: State) -> str:
-    return f"As found, {state.limited}: {LEFT_TOO_HIGH}"
-
-
-def tripped_reason(state: State) -> str:
-    """Return the reason with which the supply was switched off at a limit that did not end the walk; "" without one."""
-    return f"tripped: {state.limited}" if state.limited else ""
 
 
 def _inside(result: Judged) -> bool:

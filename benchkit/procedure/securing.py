@@ -33,7 +33,8 @@ from benchkit.procedure.hearing import (
     off_heard,
     switched_by_hand,
 )
-from benchkit.procedure.moves import Moves, Step, tripped_reason
+from benchkit.procedure.limited import tripped_reason
+from benchkit.procedure.moves import Moves, Step
 from benchkit.procedure.state import State
 
 NOTHING_BROKEN: Final = "none"

@@ -281,14 +281,22 @@ def test_what_was_read_before_parts_were_replaced_tells_of_another_unit() -> Non
     assert drive.state.parts == "emitter.upper.1"
 
 
-@pytest.mark.parametrize(("parts", "verdict"), [(NOTHING, "fail"), (RESISTOR, "pass")])
-def test_a_failure_that_was_found_counts_until_it_is_repaired(parts: tuple[str, bool], verdict: str) -> None:
-    name = "found.drops.emitter.lower.1"
-    drive = begun(repair()).until(name)
+LOWER = "found.drops.emitter.lower.1"
+
+
+def failed_as_found() -> Drive:
+    """A walk with a drop that is far too high as found."""
+    drive = begun(repair()).until(LOWER)
     while not isinstance(drive.open, Read):
         drive.well()
-    drive.tell(reading(item_of(repair(), name), 1e6))
+    drive.tell(reading(item_of(repair(), LOWER), 1e6))
     drive.well()
+    return drive
+
+
+@pytest.mark.parametrize(("parts", "verdict"), [(NOTHING, "fail"), (RESISTOR, "pass")])
+def test_a_failure_that_was_found_counts_until_it_is_repaired(parts: tuple[str, bool], verdict: str) -> None:
+    drive, name = failed_as_found(), LOWER
     asked = drive.newest(Suspect)
     assert isinstance(asked, Suspect), "what was found wrong has suspects by itself"
     drive.tell(suspected(asked, "emitter.lower.1: open"))
@@ -302,12 +310,7 @@ def test_a_failure_that_was_found_counts_until_it_is_repaired(parts: tuple[str, 
 
 @pytest.mark.parametrize(("parts", "verdict"), [(NOTHING, "fail"), (RESISTOR, "pass")])
 def test_an_extra_reading_that_was_found_counts_no_longer_than_its_item(parts: tuple[str, bool], verdict: str) -> None:
-    name = "found.drops.emitter.lower.1"
-    drive = begun(repair()).until(name)
-    while not isinstance(drive.open, Read):
-        drive.well()
-    drive.tell(reading(item_of(repair(), name), 1e6))
-    drive.well()
+    drive, name = failed_as_found(), LOWER
     asked = drive.newest(Suspect)
     assert isinstance(asked, Suspect)
     drive.tell(suspected(asked, "emitter.lower.1: open", probes=["output.upper.1.vbe"]))
