@@ -56,6 +56,13 @@ def never_on_by_hand(state: State) -> bool:
     return switched_by_hand(state) and not state.ever_on
 
 
+AT_LIMIT: Final = 0.9
+"""A rail that carries so much of its limit stands at it, though its supply may not say so; our own figure."""
+
+BELOW: Final = 0.97
+"""A rail below so much of its over-voltage protection has not tripped it; our own figure."""
+
+
 def at_a_limit(event: Tripped) -> bool:
     """Whether a trip means that the unit drew more than the supply was to give it.
 
@@ -73,13 +80,9 @@ def at_a_limit(event: Tripped) -> bool:
     pairs = (
         (seen.positive_v, seen.protection_positive_v), (seen.negative_v, seen.protection_negative_v)
     )  # fmt: skip
-    below = all(volts is not None and (level is None or abs(volts) < 0.97 * level) for volts, level in pairs)
+    below = all(volts is not None and (level is None or abs(volts) < BELOW * level) for volts, level in pairs)
     amps = max((abs(one) for one in (seen.positive_a, seen.negative_a) if one is not None), default=0.0)
     return below and amps >= AT_LIMIT * seen.limit_a
-
-
-AT_LIMIT: Final = 0.9
-"""A rail that carries so much of its limit stands at it, though its supply may not say so; our own figure."""
 
 
 def drew_its_limit(seen: SupplyState | None) -> bool:

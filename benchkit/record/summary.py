@@ -21,8 +21,9 @@ from benchkit.errors import RecordError
 from benchkit.events import (
     WalkOpened,
 )
+from benchkit.record.ending import ending_of, with_lamp
 from benchkit.record.facts import Ending, Incident, Result, Summary, Suspicion, Took
-from benchkit.record.gathering import Gathering, ending_of, with_lamp
+from benchkit.record.gathering import Gathering
 from benchkit.record.verify import Record, load
 
 __all__ = ["Ending", "Incident", "Result", "Summary", "Suspicion", "Took", "load_summary", "summarise"]

@@ -61,7 +61,7 @@ async def ask(session: Session, action: Ask) -> Event:
     if question.kind == "parts":
         parts = "" if reply.choice == "no" else reply.text.strip()
         if parts:
-            await session.hands.repair(parts)
+            await session.hands.repair(f"{session.state.parts}; {parts}")
         return PartsReplaced(item=action.item, parts=parts, semiconductors=reply.choice == "semiconductors")
     if item.act and reply.choice == "done":
         await session.hands.act(item.act)

@@ -212,7 +212,7 @@ class Creep:
 def rate_words(per_s: float, unit: str, still: float) -> str:
     """Say how fast a reading moves: "rising 0.12 mV/min"; one that moves by less than a tenth of `still` rests."""
     if abs(per_s) < 0.1 * still:
-        return "at rest"
+        return "hardly moving"
     return f"{'rising' if per_s > 0.0 else 'falling'} {quantities.show(abs(60.0 * per_s), unit, 2)}/min"
 
 

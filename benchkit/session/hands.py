@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 from collections.abc import Callable
 from typing import Any, Protocol
 
@@ -86,7 +87,7 @@ class Hands:
             await self._do(lambda: bench.drive(0.0))
 
     async def repair(self, named: str) -> None:
-        """Put new parts in where some were said to be replaced.
+        """Put new parts in where some were said to be replaced, in this walk so far.
 
         The simulated unit is well again once everything that is faulty has been named; whatever else was replaced
         changes nothing.
@@ -95,7 +96,8 @@ class Hands:
         if bench is None:
             return
         faulty = (await self._do(bench.truth)).get("faulty", ())
-        if all(part in named for part in faulty):
+        words = set(re.findall(r"[a-z0-9]+(?:\.[a-z0-9]+)*", named.lower()))
+        if words.issuperset(faulty):
             await self._do(bench.repair)
 
     async def probe(self, point: str | None) -> None:

@@ -50,6 +50,9 @@ QUICK_LOOK_S: Final = 4.0
 ENTRY_S: Final = 30.0
 """Between two entries of a person who reads the meter (s)."""
 
+UNTIL_ENTRY: Final = "Until the next entry is asked for:"
+"""What runs down between two entries: not the soak, whose end nobody knows."""
+
 ENTRIES: Final = 4
 """So many entries in a row show whether a reading is at rest."""
 
@@ -309,7 +312,8 @@ class _Soak:
             return measuring.typed_reading(text, action.point, action.function, action.unit, accuracy)
 
         session.show_moment(live=None)  # nothing is read between entries: a figure that stands there would be stale
-        await _pass(session, action.reason, min(action.least_s, action.seconds))
+        between = f"{action.reason} {UNTIL_ENTRY}"
+        await _pass(session, between, min(action.least_s, action.seconds))
         said = ""
         shows = "the supply's own display" if action.function == "dc current" else "the meter"
         while not self._over:
@@ -335,7 +339,7 @@ class _Soak:
                 why = "" if self._settled else f"not yet at rest: {self._still_moving or self._awaited()}"
                 said = ", ".join(words for words in (told.rate_text, told.settles_text, why) if words)
             if not self._over:
-                await _pass(session, action.reason, min(ENTRY_S, max(action.seconds - self._elapsed_s, 0.0)))
+                await _pass(session, between, min(ENTRY_S, max(action.seconds - self._elapsed_s, 0.0)))
         return self._waited(settled=self._settled)
 
     @property

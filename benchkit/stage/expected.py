@@ -12,7 +12,6 @@ from __future__ import annotations
 
 import math
 import time
-import zlib
 from collections.abc import Sequence
 from dataclasses import asdict, dataclass
 from functools import lru_cache
@@ -25,7 +24,7 @@ from benchkit.stage.conditions import Condition, TrimmerPosition, Unpowered
 from benchkit.stage.design import Design
 from benchkit.stage.draws import Array, Parameters, draw, nominal, seeds
 from benchkit.stage.electrothermal import is_stable
-from benchkit.stage.latent import RAIL_SHARE
+from benchkit.stage.latent import rest_moves_v
 from benchkit.stage.operate import Solved, solve_units
 from benchkit.stage.points import find_point, points_of
 from benchkit.stage.quantiles import LEAST_UNITS, interval
@@ -166,7 +165,7 @@ def ensemble(design: Design, condition: Condition, units: int = DEFAULT_UNITS, s
     parameters = draw(design, units, seeds("limits", seed))
     parameters = {key: value.reshape(-1) if units == 1 else value for key, value in parameters.items()}
     if design.output.rest.share is not None:
-        parameters["output.offset"] = parameters["output.offset"] + _rest_moves_v(design, condition, units, seed)
+        parameters["output.offset"] = parameters["output.offset"] + rest_moves_v(design, condition, units, seed)
     drawn = solve_units(design, parameters, condition, start=unit)
     failed = int(np.count_nonzero(~drawn.converged))
     if failed > MOST_UNSOLVED * units:
@@ -180,17 +179,6 @@ def ensemble(design: Design, condition: Condition, units: int = DEFAULT_UNITS, s
             " the design file",
         )
     return Ensemble(nominal=unit, drawn=drawn, parameters=parameters, good=good)
-
-
-def _rest_moves_v(design: Design, condition: Condition, units: int, seed: int) -> Array:
-    """How far the output rests from where it is said to, because the rails stand off their setting (V).
-
-    Nothing else of a stage follows its rails so closely that a supply's own error shows.
-    """
-    share = design.output.rest.share or 0.0
-    rng = np.random.default_rng([seed, zlib.crc32(b"rest")])
-    positive, negative = RAIL_SHARE * rng.standard_normal((2, units))
-    return np.asarray(share * condition.positive_v * positive + (1.0 - share) * condition.negative_v * negative)
 
 
 def expected(

@@ -10,10 +10,12 @@ stands.
 
 from __future__ import annotations
 
+import zlib
 from statistics import NormalDist
 
 import numpy as np
 
+from benchkit.stage.conditions import Condition
 from benchkit.stage.design import Design
 from benchkit.stage.draws import NORMAL_95, Array, Parameters, spreads
 
@@ -23,6 +25,30 @@ RAIL_SHARE = 2e-3
 STATED_AMBIENT_K = 0.5
 UNSTATED_AMBIENT_K = 2.0
 """Standard deviation of the room's temperature from the stated one, and from the design's where nobody stated it."""
+
+
+def rest_moves_v(design: Design, condition: Condition, units: int, seed: int) -> Array:
+    """How far the output rests from where it is said to, because the rails stand off their setting.
+
+    Nothing else of a stage follows its rails so closely that a supply's own error shows.
+
+    Parameters
+    ----------
+    design : Design
+        Of an output that rests at a share of its rails.
+    condition : Condition
+    units, seed : int
+
+    Returns
+    -------
+    array of shape (units,)
+        Volts; normal, `RAIL_SHARE` of each rail by its share in the rest.
+    """
+    share = design.output.rest.share or 0.0
+    rng = np.random.default_rng([seed, zlib.crc32(b"rest")])
+    positive, negative = RAIL_SHARE * rng.standard_normal((2, units))
+    return np.asarray(share * condition.positive_v * positive + (1.0 - share) * condition.negative_v * negative)
+
 
 _GRID = np.linspace(-6.0, 6.0, 2401)
 _SHARE = np.array([NormalDist().cdf(z) for z in _GRID])

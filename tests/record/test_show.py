@@ -7,7 +7,7 @@ import pytest
 from hypothesis import HealthCheck, given, settings
 from hypothesis import strategies as st
 
-from benchkit.events import Decided, Event, Noted, OutputOff, Resumed, StopAsked, Tripped
+from benchkit.events import Decided, Event, Noted, OutputOff, Resumed, StopAsked, Suspected, Tripped
 from benchkit.record.show import DEFERENCE, as_text
 from benchkit.record.show_json import as_json
 from benchkit.record.summary import Summary, load_summary
@@ -146,6 +146,16 @@ def test_a_trip_says_why_where_and_that_the_supply_is_off(tmp_path: Path) -> Non
     assert "safety trip: positive rail drew 0.2 A, more than 0.1 A (at: Output at rest)" in " ".join(text.split())
     assert "Exit status  4" in text
     assert "Off, and confirmed" in text
+
+
+def test_a_trip_is_placed_where_it_was_asked_about(tmp_path: Path) -> None:
+    """It names no item itself, and what stands before it is an earlier one."""
+    before = good_events()[:9]
+    asked = Suspected(item="first-power.offset-rule", after=len(before) + 1)
+    events = [*before, Tripped(reason="rail+ is held by its current limit"), asked]
+    events.append(OutputOff(reason="trip", confirmed=True, how="OUTP? read 0,0"))
+    text = " ".join(as_text(gather(tmp_path, closed(events, "fail", stopped="x", exit_status=4))).split())
+    assert "safety trip: rail+ is held by its current limit (at: first-power.offset-rule)" in text
 
 
 def test_an_unconfirmed_off_is_the_first_thing_said(tmp_path: Path) -> None:

@@ -92,7 +92,7 @@ def test_a_prediction_is_not_made_anew_for_each_reading() -> None:
 
 
 @pytest.mark.parametrize(
-    ("per_s", "words"), [(2e-6, "rising 120 uV/min"), (-2e-5, "falling 1.2 mV/min"), (1e-8, "at rest")]
+    ("per_s", "words"), [(2e-6, "rising 120 uV/min"), (-2e-5, "falling 1.2 mV/min"), (1e-8, "hardly moving")]
 )
 def test_rates_in_words(per_s: float, words: str) -> None:
     assert rate_words(per_s, "V", 1e-6) == words

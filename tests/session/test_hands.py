@@ -76,7 +76,13 @@ def test_the_note_at_the_end_names_what_burnt() -> None:
 
 @pytest.mark.parametrize(
     ("named", "well"),
-    [("output.upper.1", False), ("driver.resistor and output.upper.1", True), ("the usual ones", False)],
+    [
+        ("output.upper.1", False),
+        ("driver.resistor and output.upper.1", True),
+        ("; Driver.resistor, output.upper.1.", True),
+        ("driver.resistor, output.upper.10", False),
+        ("the usual ones", False),
+    ],
 )
 def test_only_what_was_named_is_replaced(named: str, *, well: bool) -> None:
     bench = FakeBench()
