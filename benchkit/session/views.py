@@ -277,7 +277,7 @@ def _remark(suspects: SuspectsView | None, host: Item, *, limited: bool) -> str:
         return ""
     asks = limited and host.kind == "parts"
     if asks and not (suspects.working or suspects.accuses) and suspects.suspects:
-        return "A good unit does the same with its trimmer far up; a fault may still hide behind that."
+        return "No fault is likelier than a trimmer far up."
     return suspects.heading if suspects.working or suspects.accuses else ""
 
 
